@@ -1,0 +1,133 @@
+//! Infers the attachment mix from degree counts; the answer says which rung of the evidence ladder it stands on.
+
+use crate::model::{AttachmentMix, EntryDegrees, Estimate, Warning};
+
+/// A candidate attachment kernel.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum Model {
+    /// p = 0: every link end picks uniformly.
+    Uniform,
+    /// p = 1: every link end picks in proportion to degree.
+    Preferential,
+    /// 0 ≤ p ≤ 1.
+    Mix,
+}
+
+/// Which candidate the caller wants.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Default)]
+pub enum ModelChoice {
+    /// The candidate with the greatest AIC weight.
+    #[default]
+    Auto,
+    /// This one.
+    Only(Model),
+}
+
+/// The evidence a fit stands on.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum Rung {
+    /// Nothing was fitted: the caller gave the mix.
+    Given,
+    /// One snapshot, read as the stationary law of a network that always grew in proportion.
+    OneSnapshot,
+    /// Crossing flows between successive snapshots.
+    SuccessiveSnapshots,
+}
+
+/// What the caller asks of a fit.
+#[derive(Debug, Clone, PartialEq, Default)]
+pub struct FitRequest {
+    /// Candidate wanted.
+    pub choice: ModelChoice,
+    /// A mix to take as given instead of fitting it.
+    pub fixed_mix: Option<AttachmentMix>,
+    /// ℓ to take as given instead of reading it from the data.
+    pub links_per_arrival: Option<f64>,
+    /// Seed of the goodness-of-fit bootstrap.
+    pub seed: u64,
+}
+
+/// One candidate's record on the evidence.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct Candidate {
+    /// The kernel.
+    pub model: Model,
+    /// Its fitted preferential share.
+    pub preferential_share: f64,
+    /// Log-likelihood at the fit (composite for successive snapshots).
+    pub log_likelihood: f64,
+    /// Akaike's criterion, lower is better (composite form for successive snapshots).
+    pub aic: f64,
+    /// AIC weight among the candidates, adding up to one.
+    pub weight: f64,
+}
+
+/// How well the fitted law reproduces the counts.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct Goodness {
+    /// Largest distance between observed and fitted share of nodes with at least k links (Kolmogorov–Smirnov).
+    pub distance: f64,
+    /// Share of seeded bootstrap samples of the fitted law that lie at least as far from it.
+    pub p_value: f64,
+    /// Bootstrap samples drawn.
+    pub replicates: u32,
+    /// Largest |ln(observed/fitted)| over the tail points with at least 10 nodes observed.
+    pub worst_log_ratio: f64,
+}
+
+/// Observed and fitted tail size at one degree.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct TailPoint {
+    /// Degree k.
+    pub degree: u64,
+    /// Nodes with at least k links in the newest snapshot.
+    pub observed: u64,
+    /// The same by the fitted law.
+    pub fitted: f64,
+}
+
+/// A fitted attachment mix with its diagnostics.
+#[derive(Debug, Clone, PartialEq)]
+pub struct Fit {
+    /// The kernel chosen.
+    pub model: Model,
+    /// The evidence it stands on.
+    pub rung: Rung,
+    /// Preferential share p.
+    pub preferential_share: Estimate,
+    /// p one standard deviation below and above the estimate, kept within [0, 1]: the forecast's excursions.
+    pub share_excursion: (f64, f64),
+    /// ℓ, link ends landing on present nodes per arrival.
+    pub links_per_arrival: Estimate,
+    /// Arrivals a day over the newest period, when there are two snapshots or more.
+    pub arrivals_per_day: Option<Estimate>,
+    /// Entry degrees given, or read from the data.
+    pub entry: EntryDegrees,
+    /// Exponent of the degree law's tail, 1 + 1/β; none when p = 0 (the tail is geometric).
+    pub tail_exponent: Option<Estimate>,
+    /// Every candidate's record.
+    pub candidates: Vec<Candidate>,
+    /// How well the fitted law reproduces the counts; none when nothing was fitted.
+    pub goodness: Option<Goodness>,
+    /// Observed against fitted tail at log-spaced degrees.
+    pub tail: Vec<TailPoint>,
+    /// What the reader must know.
+    pub warnings: Vec<Warning>,
+}
+
+/// Why no fit can be given; each says what would make it possible.
+#[derive(Debug, Clone, PartialEq, thiserror::Error)]
+pub enum FitError {
+    /// The evidence does not tell the mix.
+    #[error("{detail}")]
+    NotIdentified {
+        /// What is missing and what would supply it.
+        detail: String,
+    },
+    /// An iteration reached its cap.
+    #[error("the fit did not converge: {detail}")]
+    NotConverged {
+        /// Which iteration, and where it stood.
+        detail: String,
+    },
+}

@@ -1,0 +1,63 @@
+//! Forecasts nodes, links, tail sizes and the largest degree at future dates, with intervals.
+
+use jiff::Timestamp;
+
+use crate::model::Interval;
+
+/// A forecast count: its expectation, median and central intervals.
+#[derive(Debug, Clone, PartialEq)]
+pub struct CountForecast {
+    /// The count at the last snapshot.
+    pub now: f64,
+    /// Expected value.
+    pub expected: f64,
+    /// Median.
+    pub median: f64,
+    /// Central intervals, ascending in level.
+    pub intervals: Vec<Interval>,
+}
+
+/// Forecast tail size S_j: hubs with at least `threshold` links.
+#[derive(Debug, Clone, PartialEq)]
+pub struct TailForecast {
+    /// Threshold j.
+    pub threshold: u64,
+    /// The tail size.
+    pub size: CountForecast,
+}
+
+/// The forecast at one date.
+#[derive(Debug, Clone, PartialEq)]
+pub struct DateForecast {
+    /// The date.
+    pub date: Timestamp,
+    /// Number of nodes N.
+    pub nodes: CountForecast,
+    /// Number of link ends K.
+    pub links: CountForecast,
+    /// Largest degree of any node; `expected` is the median's neighbour in the mean-field sense: the degree that one
+    /// node is expected to reach or pass.
+    pub largest_degree: CountForecast,
+    /// Tail sizes, one a threshold, ascending.
+    pub tail: Vec<TailForecast>,
+}
+
+/// Why no forecast can be given.
+#[derive(Debug, Clone, PartialEq, thiserror::Error)]
+pub enum ForecastError {
+    /// The request cannot be met by any network; says what would make it possible.
+    #[error("{detail}")]
+    Impossible {
+        /// What is impossible and what would make it possible.
+        detail: String,
+    },
+    /// A numerical method reached its cap before its tolerance.
+    #[error("the forecast did not converge: {detail}")]
+    NotConverged {
+        /// Which method, and where it stood.
+        detail: String,
+    },
+    /// The caller asked to stop.
+    #[error("the forecast was cancelled")]
+    Cancelled,
+}

@@ -1,0 +1,2 @@
+//! tailcast
+fn main() {}

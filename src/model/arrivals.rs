@@ -1,0 +1,146 @@
+//! The arrival plan: how many new nodes arrive, and when.
+
+use std::fmt;
+
+use super::DAYS_PER_YEAR;
+
+/// The largest arrival rate accepted, nodes a day: above it N would pass 2^64 within a lifetime of a plan.
+const MAX_PER_DAY: f64 = 1e15;
+/// The fastest growth accepted: a hundredfold a year.
+const MAX_GROWTH_PER_YEAR: f64 = 99.0;
+
+/// One stretch of an arrival plan: from `from_day` on, `per_day` arrivals a day at its start, growing (or shrinking)
+/// by the factor `1 + growth_per_year` a year, continuously compounded.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct ArrivalSegment {
+    /// Start, days since the plan's origin (the last snapshot).
+    pub from_day: f64,
+    /// Arrivals a day at the start of the segment.
+    pub per_day: f64,
+    /// Relative growth of the rate a year: 0.2 is 20 % more each year; above −1.
+    pub growth_per_year: f64,
+}
+
+impl ArrivalSegment {
+    /// Exponential growth rate of the arrival rate, 1/day.
+    pub fn log_growth(&self) -> f64 {
+        self.growth_per_year.ln_1p() / DAYS_PER_YEAR
+    }
+}
+
+/// A piecewise exponential arrival rate A(t), nodes a day; the last segment goes on for ever.
+///
+/// ```
+/// use tailcast::model::ArrivalPlan;
+/// let plan = ArrivalPlan::constant(40.0).unwrap();
+/// assert_eq!(plan.rate(12.0), 40.0);
+/// assert_eq!(plan.arrivals_between(0.0, 10.0), 400.0);
+/// ```
+#[derive(Debug, Clone, PartialEq)]
+pub struct ArrivalPlan {
+    segments: Vec<ArrivalSegment>,
+}
+
+/// What is wrong with an arrival plan, and in which segment.
+#[derive(Debug, Clone, PartialEq)]
+pub struct ArrivalFault {
+    /// Index of the offending segment; `None` for the whole plan.
+    pub index: Option<usize>,
+    /// The field at fault within the segment: `from`, `per_day` or `growth_per_year`.
+    pub field: &'static str,
+    /// What is wrong and how to mend it.
+    pub detail: String,
+}
+
+impl fmt::Display for ArrivalFault {
+    fn fmt(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
+        f.write_str(&self.detail)
+    }
+}
+
+impl ArrivalPlan {
+    /// The same rate for ever.
+    ///
+    /// # Errors
+    /// When the rate is negative, not finite or absurdly large.
+    pub fn constant(per_day: f64) -> Result<Self, Vec<ArrivalFault>> {
+        Self::from_segments(&[ArrivalSegment { from_day: 0.0, per_day, growth_per_year: 0.0 }])
+    }
+
+    /// A plan of segments in ascending `from_day`; the first must start at or before day 0.
+    ///
+    /// # Errors
+    /// Every fault of every segment.
+    pub fn from_segments(segments: &[ArrivalSegment]) -> Result<Self, Vec<ArrivalFault>> {
+        let mut faults = Vec::new();
+        if segments.is_empty() {
+            let detail = "the plan has no segment; give at least one".into();
+            faults.push(ArrivalFault { index: None, field: "segments", detail });
+        }
+        for (i, s) in segments.iter().enumerate() {
+            let mut fault = |field, detail| faults.push(ArrivalFault { index: Some(i), field, detail });
+            if !(s.per_day.is_finite() && (0.0..=MAX_PER_DAY).contains(&s.per_day)) {
+                fault("per_day", format!("arrivals per day must lie between 0 and {MAX_PER_DAY:e}, not {}", s.per_day));
+            }
+            if !(s.growth_per_year > -1.0 && s.growth_per_year <= MAX_GROWTH_PER_YEAR) {
+                let detail = format!(
+                    "growth per year must be above -1 and at most {MAX_GROWTH_PER_YEAR}, not {} (0.2 means 20 % a year)",
+                    s.growth_per_year
+                );
+                fault("growth_per_year", detail);
+            }
+            if !s.from_day.is_finite() {
+                fault("from", "the start of the segment is not a date".into());
+            } else if i == 0 && s.from_day > 0.0 {
+                fault("from", "the first segment must start at or before the last snapshot".into());
+            } else if i > 0 && s.from_day <= segments[i - 1].from_day {
+                fault(
+                    "from",
+                    "segments must be in ascending order of their start, each later than the one before".into(),
+                );
+            }
+        }
+        if faults.is_empty() { Ok(Self { segments: segments.to_vec() }) } else { Err(faults) }
+    }
+
+    /// The segments, ascending.
+    pub fn segments(&self) -> &[ArrivalSegment] {
+        &self.segments
+    }
+
+    /// Arrival rate A(t), nodes a day, `day` days after the origin.
+    pub fn rate(&self, day: f64) -> f64 {
+        let s = self.segment_at(day);
+        s.per_day * (s.log_growth() * (day - s.from_day)).exp()
+    }
+
+    /// Expected arrivals between two days, ∫A dt; zero when `to` is not after `from`.
+    pub fn arrivals_between(&self, from: f64, to: f64) -> f64 {
+        if to <= from {
+            return 0.0;
+        }
+        let mut total = 0.0;
+        let mut edges = vec![from];
+        edges.extend(self.segments.iter().map(|s| s.from_day).filter(|&d| d > from && d < to));
+        edges.push(to);
+        for pair in edges.windows(2) {
+            let (a, b) = (pair[0], pair[1]);
+            let growth = self.segment_at(a).log_growth() * (b - a);
+            // ∫ e^{γτ} dτ over the stretch = length · (e^x − 1)/x with x = γ·length
+            let stretch = if growth == 0.0 { 1.0 } else { growth.exp_m1() / growth };
+            total += self.rate(a) * (b - a) * stretch;
+        }
+        total
+    }
+
+    /// The same plan with every rate multiplied by `factor` (≥ 0).
+    pub fn scaled(&self, factor: f64) -> Self {
+        let segments = self.segments.iter().map(|s| ArrivalSegment { per_day: s.per_day * factor, ..*s }).collect();
+        Self { segments }
+    }
+
+    fn segment_at(&self, day: f64) -> &ArrivalSegment {
+        let after = self.segments.partition_point(|s| s.from_day <= day);
+        &self.segments[after.saturating_sub(1)]
+    }
+}

@@ -1,0 +1,154 @@
+//! The forces that move a network's degrees, as rates.
+
+use std::fmt;
+
+use super::{ArrivalPlan, DegreeKind, EntryDegrees};
+
+/// The largest rate accepted for links per arrival, links per node and day, departures and losses.
+const MAX_RATE: f64 = 1e9;
+
+/// The attachment mix: the share p of landing link ends that pick their node in proportion to its degree; the rest
+/// pick uniformly.
+///
+/// ```
+/// use tailcast::model::AttachmentMix;
+/// assert!(AttachmentMix::new(0.8).is_some());
+/// assert!(AttachmentMix::new(f64::NAN).is_none());
+/// ```
+#[derive(Debug, Clone, Copy, PartialEq, PartialOrd)]
+pub struct AttachmentMix(f64);
+
+impl AttachmentMix {
+    /// Every end picks uniformly.
+    pub const UNIFORM: Self = Self(0.0);
+    /// Every end picks in proportion to degree.
+    pub const PREFERENTIAL: Self = Self(1.0);
+
+    /// The mix with preferential share `share`; `None` unless it lies in [0, 1].
+    pub fn new(share: f64) -> Option<Self> {
+        (0.0..=1.0).contains(&share).then_some(Self(share))
+    }
+
+    /// The preferential share p, in [0, 1].
+    pub fn preferential_share(self) -> f64 {
+        self.0
+    }
+}
+
+/// Everything that drives the growth of a network's degrees from one date on.
+///
+/// Gain hazard of a node of degree k: `λ_k = L·[(1−p)/N + p·k/K]` with `L = ℓ·A + ι·N` (mixture form of the linear
+/// kernel: Pennock et al. 2002). Nodes depart with hazard δ and link ends are lost with hazard w.
+#[derive(Debug, Clone, PartialEq)]
+pub struct GrowthParameters {
+    /// What a degree counts.
+    pub kind: DegreeKind,
+    /// Attachment mix p.
+    pub mix: AttachmentMix,
+    /// Arrival rate A(t), nodes a day.
+    pub arrivals: ArrivalPlan,
+    /// Distribution of a newcomer's degree.
+    pub entry: EntryDegrees,
+    rates: Rates,
+}
+
+#[derive(Debug, Clone, Copy, PartialEq, Default)]
+struct Rates {
+    links_per_arrival: f64,
+    links_per_node_day: f64,
+    departures: f64,
+    link_losses: f64,
+}
+
+/// A rate that is negative, not finite or absurdly large.
+#[derive(Debug, Clone, PartialEq)]
+pub struct ParameterFault {
+    /// The rate's name, as callers write it.
+    pub field: &'static str,
+    /// The value given.
+    pub value: f64,
+}
+
+impl fmt::Display for ParameterFault {
+    fn fmt(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
+        write!(f, "{} must lie between 0 and {MAX_RATE:e}, not {}", self.field, self.value)
+    }
+}
+
+impl GrowthParameters {
+    /// Parameters of a network that only grows: `links_per_arrival` (ℓ) ends land on present nodes with each arrival.
+    ///
+    /// # Errors
+    /// When ℓ is negative, not finite or absurdly large.
+    pub fn new(
+        kind: DegreeKind,
+        mix: AttachmentMix,
+        arrivals: ArrivalPlan,
+        entry: EntryDegrees,
+        links_per_arrival: f64,
+    ) -> Result<Self, ParameterFault> {
+        let links_per_arrival = checked("links_per_arrival", links_per_arrival)?;
+        Ok(Self { kind, mix, arrivals, entry, rates: Rates { links_per_arrival, ..Rates::default() } })
+    }
+
+    /// Adds ι: link ends landing per present node and day, whoever arrives.
+    ///
+    /// # Errors
+    /// When the rate is negative, not finite or absurdly large.
+    pub fn with_links_per_node_day(mut self, rate: f64) -> Result<Self, ParameterFault> {
+        self.rates.links_per_node_day = checked("links_per_node_day", rate)?;
+        Ok(self)
+    }
+
+    /// Adds δ, the departure hazard of a node (1/day), and w, the loss hazard of a link end (1/day).
+    ///
+    /// # Errors
+    /// When a rate is negative, not finite or absurdly large.
+    pub fn with_losses(mut self, departures: f64, link_losses: f64) -> Result<Self, ParameterFault> {
+        self.rates.departures = checked("departures_per_node_day", departures)?;
+        self.rates.link_losses = checked("link_losses_per_link_day", link_losses)?;
+        Ok(self)
+    }
+
+    /// The same forces with another links-per-arrival.
+    ///
+    /// # Errors
+    /// When ℓ is negative, not finite or absurdly large.
+    pub fn with_links_per_arrival(mut self, links_per_arrival: f64) -> Result<Self, ParameterFault> {
+        self.rates.links_per_arrival = checked("links_per_arrival", links_per_arrival)?;
+        Ok(self)
+    }
+
+    /// ℓ, link ends landing on present nodes per arrival.
+    pub fn links_per_arrival(&self) -> f64 {
+        self.rates.links_per_arrival
+    }
+
+    /// ι, link ends landing per present node and day.
+    pub fn links_per_node_day(&self) -> f64 {
+        self.rates.links_per_node_day
+    }
+
+    /// δ, departure hazard of a node, 1/day.
+    pub fn departure_hazard(&self) -> f64 {
+        self.rates.departures
+    }
+
+    /// Hazard that one of a present node's link ends is lost, 1/day: w, and in the total convention also the
+    /// departure δ of the node at the other end.
+    pub fn end_loss_hazard(&self) -> f64 {
+        match self.kind {
+            DegreeKind::Received => self.rates.link_losses,
+            DegreeKind::Total => self.rates.link_losses + self.rates.departures,
+        }
+    }
+
+    /// Whether a node's degree can fall or a node can leave.
+    pub fn has_losses(&self) -> bool {
+        self.rates.departures > 0.0 || self.rates.link_losses > 0.0
+    }
+}
+
+fn checked(field: &'static str, value: f64) -> Result<f64, ParameterFault> {
+    if (0.0..=MAX_RATE).contains(&value) { Ok(value) } else { Err(ParameterFault { field, value }) }
+}
