@@ -1,0 +1,4 @@
+//! Tests of the numerical core; they need no server feature.
+
+mod law;
+mod reference;
