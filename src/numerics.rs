@@ -3,6 +3,7 @@
 //! Every tolerance and every iteration cap of the core stands in [`tolerances`].
 
 pub mod elementary;
+pub mod gamma;
 pub mod inversion;
 pub mod optimise;
 pub mod quadrature;

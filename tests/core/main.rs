@@ -2,3 +2,4 @@
 
 mod law;
 mod reference;
+mod stationary;
