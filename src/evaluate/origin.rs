@@ -98,6 +98,7 @@ fn stub_fit() -> Fit {
         share_excursion: (0.65, 0.75),
         links_per_arrival: Estimate::given(3.0),
         arrivals_per_day: None,
+        rate_excursion: Default::default(),
         entry: EntryDegrees::single(0),
         tail_exponent: None,
         candidates: vec![Candidate {
@@ -107,7 +108,13 @@ fn stub_fit() -> Fit {
             aic: 2.0,
             weight: 1.0,
         }],
-        goodness: Some(Goodness { distance: 0.1, p_value: 0.5, replicates: 100, worst_log_ratio: 0.1 }),
+        goodness: Some(Goodness {
+            distance: 0.1,
+            p_value: Some(0.5),
+            replicates: 100,
+            worst_log_ratio: 0.1,
+            dispersion: None,
+        }),
         tail: vec![TailPoint { degree: 1, observed: 1, fitted: 1.0 }],
         warnings: vec![],
     }
