@@ -60,7 +60,10 @@ pub(super) fn profile_share(
     let mut bounds = |fall: f64| {
         let mut side = |end: f64| {
             let direction = (end - at).signum();
-            let excess = |distance: f64| 2.0 * scale.interval * (top - value(at + direction * distance)) - fall;
+            // In square roots a parabola is straight, and the secant lands at once.
+            let excess = |distance: f64| {
+                (2.0 * scale.interval * (top - value(at + direction * distance))).max(0.0).sqrt() - fall.sqrt()
+            };
             at + direction * increasing_root(0.0, (end - at).abs(), tolerance, excess)
         };
         (if at > 0.0 { side(0.0) } else { 0.0 }, if at < 1.0 { side(1.0) } else { 1.0 })

@@ -7,6 +7,7 @@ use crate::model::{
     ArrivalPlan, AttachmentMix, DegreeCounts, DegreeKind, EntryDegrees, Evidence, GrowthParameters, Warning,
 };
 use crate::numerics::quadrature::PANEL;
+use crate::numerics::tolerances::Accuracy;
 
 /// The preferential share is found to this.
 const SHARE_TOLERANCE: f64 = 1e-5;
@@ -16,6 +17,10 @@ const SHARE_STEP: f64 = 2e-3;
 const THRESHOLD_GROWTH: f64 = std::f64::consts::SQRT_2;
 /// A threshold counts while at least this many nodes were past it at the period's end.
 const FEWEST_NODES: u64 = 5;
+/// Crossings a threshold that no growth need explain, nodes.
+const UNEXPLAINED: f64 = 0.5;
+/// Flows with less variance than this say nothing of dispersion.
+const LEAST_VARIANCE: f64 = 1.0;
 /// Each period weighs this much of the next newer one: the mix may move, and the forecast wants today's.
 const AGE_WEIGHT: f64 = 0.7;
 
@@ -76,7 +81,8 @@ pub(super) fn periods<'a>(
 /// Fits the preferential share by the composite Poisson likelihood of the crossing flows (Varin & Vidoni 2005).
 ///
 /// Formula: `Σ_periods w·Σ_j [D_j ln M_j(p) − M_j(p)]`, D_j the observed and M_j the expected number of nodes that came
-/// past threshold j (log-spaced). Its fall is scaled by information over score variance (Godambe 1960). In that variance
+/// past threshold j (log-spaced), both plus ½: half a node of unexplained crossings a threshold keeps one renamed or merged
+/// node, which no growth explains, from deciding the fit. Its fall is scaled by information over score variance (Godambe 1960). In that variance
 /// flows at different thresholds share nodes, and all compete for the known number of landed links.
 pub(super) fn fit_successive(periods: &[Period], request: &FitRequest) -> Result<SuccessiveFit, FitError> {
     let log_likelihood = |p: f64| {
@@ -84,9 +90,8 @@ pub(super) fn fit_successive(periods: &[Period], request: &FitRequest) -> Result
         for period in periods {
             let flows = period.flows(p)?;
             for (observed, expected) in period.observed(&flows).iter().zip(&flows) {
-                // A threshold that no node can reach at this p weighs only if nodes did reach it.
-                let log = if *observed > 0.0 { observed * expected.mean.ln() } else { 0.0 };
-                sum += period.weight * (log - expected.mean);
+                let (observed, expected) = ((observed + UNEXPLAINED).max(0.0), expected.mean + UNEXPLAINED);
+                sum += period.weight * (observed * expected.ln() - expected);
             }
         }
         Ok(sum)
@@ -98,19 +103,18 @@ pub(super) fn fit_successive(periods: &[Period], request: &FitRequest) -> Result
             let (low, high) = ((p - SHARE_STEP).max(0.0), (p + SHARE_STEP).min(1.0));
             let (below, here, above) = (period.flows(low)?, period.flows(p)?, period.flows(high)?);
             let slope: Vec<f64> = above.iter().zip(&below).map(|(a, b)| (a.mean - b.mean) / (high - low)).collect();
-            let weights: Vec<f64> =
-                slope.iter().zip(&here).map(|(s, m)| if m.mean > 0.0 { s / m.mean } else { 0.0 }).collect();
+            let weights: Vec<f64> = slope.iter().zip(&here).map(|(s, m)| s / (m.mean + UNEXPLAINED)).collect();
             let covariance = period.covariance(p)?;
             information += period.weight * slope.iter().zip(&weights).map(|(s, w)| s * w).sum::<f64>();
             variance += period.weight * period.weight * period.conditional_variance(&weights, &covariance);
             for (i, (observed, expected)) in period.observed(&here).iter().zip(&here).enumerate() {
-                if covariance[i][i] > 0.0 {
+                if covariance[i][i] >= LEAST_VARIANCE {
                     misfit += (observed - expected.mean).powi(2) / covariance[i][i];
                     terms += 1.0;
                 }
             }
         }
-        dispersion = misfit / terms;
+        dispersion = if terms > 0.0 { misfit / terms } else { 1.0 };
         // A misfit beyond sampling noise widens the interval in the same proportion, and never narrows it.
         let scale = information / (variance * dispersion.max(1.0));
         Ok(Scale { interval: scale, aic: scale })
@@ -173,7 +177,7 @@ impl<'a> Period<'a> {
     fn flows(&self, p: f64) -> Result<Vec<Flow>, FitError> {
         let course = self.course(p)?;
         let flow = |&threshold: &u64| {
-            let sum = tail_sum(&course, self.before, self.days, threshold)?;
+            let sum = tail_sum(&course, self.before, self.days, threshold, Accuracy::Working)?;
             Ok(Flow { mean: sum.mean - sum.certain, certain: sum.certain })
         };
         self.thresholds.iter().map(flow).collect()
@@ -249,10 +253,10 @@ impl<'a> Period<'a> {
 
 /// Probabilities that a node of `degree` stays and ends past each threshold; zero beyond the first negligible one.
 fn tails(law: &NodeLaw, degree: u64, thresholds: &[u64], survival: f64) -> Result<Vec<f64>, GrowthError> {
-    const NEGLIGIBLE: f64 = 1e-12;
+    const NEGLIGIBLE: f64 = 1e-9;
     let mut values = vec![0.0; thresholds.len()];
     for (value, &threshold) in values.iter_mut().zip(thresholds) {
-        *value = survival * law.tail(degree, threshold)?;
+        *value = survival * law.tail_within(degree, threshold, Accuracy::Working)?;
         if *value < NEGLIGIBLE {
             break;
         }

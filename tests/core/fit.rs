@@ -54,3 +54,50 @@ fn the_mix_of_independently_grown_graphs_is_recovered() {
     }
     println!("covered {covered} of {}", graphs.len());
 }
+
+#[test]
+fn real_networks_fit() {
+    for (file, column) in [("debian", 1), ("answers", 0)] {
+        let mut by_date: BTreeMap<String, Vec<(u64, u64)>> = BTreeMap::new();
+        let path = format!("../../examples/data/{file}/degree_counts.csv");
+        for row in rows(&path) {
+            by_date
+                .entry(row[column].clone())
+                .or_default()
+                .push((number(&row[column + 1]) as u64, number(&row[column + 2]) as u64));
+        }
+        let all: Vec<(String, Vec<(u64, u64)>)> = by_date.into_iter().collect();
+        let dated = |d: &str| if d.contains('T') { d.to_owned() } else { format!("{d}T00:00:00Z") };
+        for i in 0..all.len() {
+            let one = evidence(DegreeKind::Received, &[(&dated(&all[i].0), all[i].1.clone())]);
+            let f = fit(&one, &FitRequest::default()).unwrap();
+            println!(
+                "{file} {} one: {:?} {:?} {:?}",
+                all[i].0,
+                f.preferential_share,
+                f.goodness,
+                f.warnings.iter().map(|w| w.code).collect::<Vec<_>>()
+            );
+            if i > 0 {
+                let pair: Vec<(String, Vec<(u64, u64)>)> =
+                    all[i - 1..=i].iter().map(|(d, p)| (dated(d), p.clone())).collect();
+                let pair: Vec<(&str, Vec<(u64, u64)>)> = pair.iter().map(|(d, p)| (d.as_str(), p.clone())).collect();
+                let clock = std::time::Instant::now();
+                let f = fit(&evidence(DegreeKind::Received, &pair), &FitRequest::default()).unwrap();
+                println!(
+                    "{file} {} two: {:?} links {:?} {:?} {:?} {:?}",
+                    all[i].0,
+                    f.preferential_share,
+                    f.links_per_arrival.value,
+                    f.goodness,
+                    f.warnings.iter().map(|w| w.code).collect::<Vec<_>>(),
+                    clock.elapsed()
+                );
+                for t in f.tail {
+                    print!("{} {} {:.1} | ", t.degree, t.observed, t.fitted);
+                }
+                println!();
+            }
+        }
+    }
+}

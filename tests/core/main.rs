@@ -3,4 +3,5 @@
 mod fit;
 mod law;
 mod reference;
+mod scratch;
 mod stationary;
