@@ -93,6 +93,9 @@ pub struct Goodness {
     /// Mean squared misfit of the crossing flows over their variance, 1 when only chance is at work; successive snapshots
     /// only.
     pub dispersion: Option<f64>,
+    /// Typical relative error of the fitted flows, chance included (1.4826 times the median of |observed − fitted|/fitted);
+    /// successive snapshots only.
+    pub flow_error: Option<f64>,
 }
 
 /// Observed and fitted tail size at one degree.

@@ -91,12 +91,17 @@ pub fn answer(request: &OriginRequest, cancelled: &dyn Fn() -> bool) -> Result<O
     let scenario = scenario(request, &fit)?;
     let forecast = forecast(&request.evidence.latest().counts, &scenario, &request.plan, cancelled)?;
     let mut warnings = fit.warnings.clone();
+    let reason = if scenario.model_error > DEFAULT_MODEL_ERROR {
+        "as much as the fit itself misses the observed flows by"
+    } else {
+        "a stated default"
+    };
     let detail = format!(
-        "this network has no record of past forecasts, so intervals allow {:.0} % of each expected flow for model error, a \
-         stated default",
-        100.0 * DEFAULT_MODEL_ERROR
+        "this network has no record of past forecasts, so intervals allow {:.0} % of each expected flow for model error, \
+         {reason}",
+        100.0 * scenario.model_error
     );
-    warnings.push(Warning::new("default_model_error", detail));
+    warnings.push(Warning::new("model_error_assumed", detail));
     Ok(OriginAnswer { fit, forecast, warnings, cautions: CAUTIONS.to_vec() })
 }
 
@@ -133,5 +138,7 @@ fn scenario(request: &OriginRequest, fit: &Fit) -> Result<Scenario, OriginError>
         let with = |factor: f64| forces.clone().with_arrivals(arrivals.scaled(factor));
         excursions.push(Excursion { low: with(factor.recip()), high: with(factor) });
     }
-    Ok(Scenario { forces, excursions, model_error: DEFAULT_MODEL_ERROR })
+    // A fit that misses the very flows it was made from will miss the next ones by no less.
+    let flow_error = fit.goodness.and_then(|g| g.flow_error).unwrap_or(0.0);
+    Ok(Scenario { forces, excursions, model_error: flow_error.max(DEFAULT_MODEL_ERROR) })
 }

@@ -62,11 +62,12 @@ pub(super) fn goodness(tail: &[TailPoint], nodes: u64, seed: u64) -> Goodness {
         replicates: REPLICATES,
         worst_log_ratio: worst_log_ratio(tail),
         dispersion: None,
+        flow_error: None,
     }
 }
 
 /// Goodness of a fit by crossing flows: the tail predicted for the newest snapshot, and the flows' dispersion.
-pub(super) fn flow_goodness(tail: &[TailPoint], nodes: u64, dispersion: f64) -> Goodness {
+pub(super) fn flow_goodness(tail: &[TailPoint], nodes: u64, dispersion: f64, flow_error: f64) -> Goodness {
     let distance = distance(tail.iter().map(|p| (p.observed as f64, p.fitted)), nodes as f64);
     Goodness {
         distance,
@@ -74,6 +75,7 @@ pub(super) fn flow_goodness(tail: &[TailPoint], nodes: u64, dispersion: f64) -> 
         replicates: 0,
         worst_log_ratio: worst_log_ratio(tail),
         dispersion: Some(dispersion),
+        flow_error: Some(flow_error),
     }
 }
 

@@ -41,7 +41,7 @@ pub fn fit(evidence: &Evidence, request: &FitRequest) -> Result<Fit, FitError> {
         None if several => {
             let fit = fit_successive(&periods, request)?;
             let tail = newest_tail(&periods, fit.profile.share.value)?;
-            let goodness = flow_goodness(&tail, counts.nodes(), fit.dispersion);
+            let goodness = flow_goodness(&tail, counts.nodes(), fit.dispersion, fit.flow_error);
             (Rung::SuccessiveSnapshots, fit.profile, tail, Some(goodness))
         }
         None => {

@@ -10,7 +10,7 @@ use crate::numerics::quadrature::PANEL;
 use crate::numerics::tolerances::Accuracy;
 
 /// The preferential share is found to this.
-const SHARE_TOLERANCE: f64 = 1e-5;
+const SHARE_TOLERANCE: f64 = 1e-4;
 /// Half-width of difference quotients in p.
 const SHARE_STEP: f64 = 2e-3;
 /// Thresholds grow by this factor (about; they are whole numbers).
@@ -42,6 +42,8 @@ pub(super) struct SuccessiveFit {
     pub profile: Profile,
     /// Mean of (observed − fitted)²/variance over periods and thresholds.
     pub dispersion: f64,
+    /// Typical |observed − fitted|/fitted of the flows.
+    pub flow_error: f64,
 }
 
 /// Reads arrivals and landed links of each period off the totals; periods without growth are skipped with a warning.
@@ -96,9 +98,10 @@ pub(super) fn fit_successive(periods: &[Period], request: &FitRequest) -> Result
         }
         Ok(sum)
     };
-    let mut dispersion = f64::NAN;
+    let (mut dispersion, mut flow_error) = (1.0, 0.0);
     let scale_at = |p: f64| {
-        let (mut information, mut variance, mut misfit, mut terms) = (0.0, 0.0, 0.0, 0.0);
+        let (mut information, mut variance) = (0.0, 0.0);
+        let (mut misfits, mut errors) = (Vec::new(), Vec::new());
         for period in periods {
             let (low, high) = ((p - SHARE_STEP).max(0.0), (p + SHARE_STEP).min(1.0));
             let (below, here, above) = (period.flows(low)?, period.flows(p)?, period.flows(high)?);
@@ -109,18 +112,23 @@ pub(super) fn fit_successive(periods: &[Period], request: &FitRequest) -> Result
             variance += period.weight * period.weight * period.conditional_variance(&weights, &covariance);
             for (i, (observed, expected)) in period.observed(&here).iter().zip(&here).enumerate() {
                 if covariance[i][i] >= LEAST_VARIANCE {
-                    misfit += (observed - expected.mean).powi(2) / covariance[i][i];
-                    terms += 1.0;
+                    misfits.push((observed - expected.mean).powi(2) / covariance[i][i]);
+                    errors.push((observed / expected.mean - 1.0).abs());
                 }
             }
         }
-        dispersion = if terms > 0.0 { misfit / terms } else { 1.0 };
+        if !misfits.is_empty() {
+            dispersion = misfits.iter().sum::<f64>() / misfits.len() as f64;
+            // The median times 1.4826 is the standard deviation of a normal law, and one renamed hub does not move it.
+            errors.sort_by(f64::total_cmp);
+            flow_error = 1.4826 * errors[errors.len() / 2];
+        }
         // A misfit beyond sampling noise widens the interval in the same proportion, and never narrows it.
         let scale = information / (variance * dispersion.max(1.0));
         Ok(Scale { interval: scale, aic: scale })
     };
     let profile = profile_share(request.choice, SHARE_TOLERANCE, log_likelihood, scale_at)?;
-    Ok(SuccessiveFit { profile, dispersion })
+    Ok(SuccessiveFit { profile, dispersion, flow_error })
 }
 
 /// Expected nodes past a threshold, without those that were past it from the start and cannot fall back.

@@ -93,14 +93,19 @@ pub(super) fn normal_quantile(probability: f64) -> f64 {
     -std::f64::consts::SQRT_2 * statrs::function::erf::erfc_inv(2.0 * probability)
 }
 
-/// Smallest whole x in [low, high] at which the increasing `f` is at least zero, bracketed first in ln(1 + x).
+/// Smallest whole x in [low, high] at which the increasing `f` is at least zero: sought first in ln(1 + x), then settled to
+/// the unit, or to 10⁻⁵ relative where that is more.
 pub(super) fn first_whole(low: f64, high: f64, mut f: impl FnMut(f64) -> f64) -> f64 {
-    let log_root = increasing_root(low.ln_1p(), high.ln_1p(), 1e-4, |y| f(y.exp_m1()));
+    const LOG_SEARCH: f64 = 1e-4;
+    const SETTLED: f64 = 1e-5;
+    if f(low) >= 0.0 {
+        return low;
+    }
+    let log_root = increasing_root(low.ln_1p(), high.ln_1p(), LOG_SEARCH, |y| f(y.exp_m1()));
     let guess = log_root.exp_m1().round().clamp(low, high);
-    // The root is good to 10⁻⁴ relative: settle the last digits of small degrees exactly, leave large ones.
-    let slack = (guess * 1e-4).ceil();
-    let (mut below, mut reach) = ((guess - slack).max(low) - 1.0, (guess + slack).min(high));
-    while reach - below > (guess * 1e-4).max(1.0) {
+    let slack = (2.0 * LOG_SEARCH * guess).ceil();
+    let (mut below, mut reach) = ((guess - slack).max(low), (guess + slack).min(high));
+    while reach - below > (SETTLED * guess).max(1.0) {
         let middle = (0.5 * (below + reach)).floor();
         if f(middle) >= 0.0 { reach = middle } else { below = middle }
     }
