@@ -73,7 +73,7 @@ pub struct Candidate {
     pub preferential_share: f64,
     /// Log-likelihood at the fit (composite for successive snapshots).
     pub log_likelihood: f64,
-    /// Akaike's criterion, lower is better (composite form for successive snapshots).
+    /// Akaike's criterion, lower is better, on the likelihood scaled by how its score really scatters (quasi-AIC).
     pub aic: f64,
     /// AIC weight among the candidates, adding up to one.
     pub weight: f64,

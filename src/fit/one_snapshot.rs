@@ -1,6 +1,6 @@
 //! Rung 1: one snapshot, read as the stationary law of a network that always grew in proportion.
 
-use super::profile::{Profile, Scale, profile_share};
+use super::profile::{Profile, profile_share};
 use super::score_variance::information_over_variance;
 use super::stationary::StationaryLaw;
 use super::{FitError, FitRequest, Model, ModelChoice};
@@ -35,9 +35,6 @@ pub(super) fn fit_one_snapshot(
         let logs = law.log_pmf(counts.degrees());
         Ok(logs.iter().zip(counts.nodes_by_degree()).map(|(log, &nodes)| nodes as f64 * log).sum())
     };
-    let scale_at = |p: f64| {
-        let interval = information_over_variance(p, links_per_arrival, entry);
-        Ok(Scale { interval, aic: 1.0 })
-    };
+    let scale_at = |p: f64| Ok(information_over_variance(p, links_per_arrival, entry));
     profile_share(request.choice, SHARE_TOLERANCE, log_likelihood, scale_at)
 }

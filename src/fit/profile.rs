@@ -22,22 +22,17 @@ pub(super) struct Profile {
     pub candidates: Vec<Candidate>,
 }
 
-/// What a likelihood's fall must be divided by before it is read as χ²: 1 for independent observations.
-pub(super) struct Scale {
-    /// Information over score variance, J⁻¹H in one dimension (Godambe 1960).
-    pub interval: f64,
-    /// The same for comparing candidates by AIC (Varin & Vidoni 2005); 1 keeps the plain AIC.
-    pub aic: f64,
-}
-
 /// Maximises `log_likelihood(p)` over [0, 1] to `tolerance` and bounds p where `2·scale·(max − value)` reaches χ²₁.
+///
+/// `scale_at(p̂)` is information over score variance (Godambe 1960), 1 for independent observations. AIC compares likelihoods
+/// scaled the same way (quasi-AIC: Burnham & Anderson 2002, section 2.5).
 ///
 /// At a boundary the interval is one-sided and the excursion stops there.
 pub(super) fn profile_share(
     choice: ModelChoice,
     tolerance: f64,
     mut log_likelihood: impl FnMut(f64) -> Result<f64, FitError>,
-    scale_at: impl FnOnce(f64) -> Result<Scale, FitError>,
+    scale_at: impl FnOnce(f64) -> Result<f64, FitError>,
 ) -> Result<Profile, FitError> {
     let failure = Cell::new(None);
     let mut value = |p: f64| match log_likelihood(p) {
@@ -61,9 +56,8 @@ pub(super) fn profile_share(
         let mut side = |end: f64| {
             let direction = (end - at).signum();
             // In square roots a parabola is straight, and the secant lands at once.
-            let excess = |distance: f64| {
-                (2.0 * scale.interval * (top - value(at + direction * distance))).max(0.0).sqrt() - fall.sqrt()
-            };
+            let excess =
+                |distance: f64| (2.0 * scale * (top - value(at + direction * distance))).max(0.0).sqrt() - fall.sqrt();
             at + direction * increasing_root(0.0, (end - at).abs(), tolerance, excess)
         };
         (if at > 0.0 { side(0.0) } else { 0.0 }, if at < 1.0 { side(1.0) } else { 1.0 })
@@ -73,7 +67,7 @@ pub(super) fn profile_share(
     if let Some(error) = failure.take() {
         return Err(error);
     }
-    let candidates = weighed(&[ends[0], ends[1], (Model::Mix, at, top)], scale.aic);
+    let candidates = weighed(&[ends[0], ends[1], (Model::Mix, at, top)], scale);
     let interval = Interval { level: ESTIMATE_LEVEL, low, high };
     let (model, share, excursion) = match choice {
         ModelChoice::Only(Model::Uniform) => (Model::Uniform, Estimate::given(0.0), (0.0, 0.0)),
@@ -97,8 +91,7 @@ fn weighed(candidates: &[(Model, f64, f64)], scale: f64) -> Vec<Candidate> {
         .iter()
         .filter(|&&(_, _, log_likelihood)| log_likelihood.is_finite())
         .map(|&(model, preferential_share, log_likelihood)| {
-            let log_likelihood = scale * log_likelihood;
-            let aic = 2.0 * parameters(model) - 2.0 * log_likelihood;
+            let aic = 2.0 * parameters(model) - 2.0 * scale * log_likelihood;
             Candidate { model, preferential_share, log_likelihood, aic, weight: 0.0 }
         })
         .collect();

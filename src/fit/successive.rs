@@ -1,6 +1,6 @@
 //! Rung 2: successive snapshots, by the flow of nodes across thresholds.
 
-use super::profile::{Profile, Scale, profile_share};
+use super::profile::{Profile, profile_share};
 use super::{FitError, FitRequest};
 use crate::growth::{Course, GrowthError, NodeLaw, tail_sum};
 use crate::model::{
@@ -124,8 +124,7 @@ pub(super) fn fit_successive(periods: &[Period], request: &FitRequest) -> Result
             flow_error = 1.4826 * errors[errors.len() / 2];
         }
         // A misfit beyond sampling noise widens the interval in the same proportion, and never narrows it.
-        let scale = information / (variance * dispersion.max(1.0));
-        Ok(Scale { interval: scale, aic: scale })
+        Ok(information / (variance * dispersion.max(1.0)))
     };
     let profile = profile_share(request.choice, SHARE_TOLERANCE, log_likelihood, scale_at)?;
     Ok(SuccessiveFit { profile, dispersion, flow_error })
