@@ -219,16 +219,15 @@ impl<'a> Period<'a> {
         let survival = course.survival(self.days);
         let law = NodeLaw::between(&course, 0.0, self.days);
         for (degree, nodes) in self.before.iter() {
-            add(nodes as f64, &tails(&law, degree, &self.thresholds, survival)?);
+            add(nodes as f64, &tails(&law, &[(degree, 1.0)], &self.thresholds, survival)?);
         }
         // Newcomers are known in number, and their arrival times spread evenly.
         for (&x, &w) in PANEL.nodes.iter().zip(&PANEL.weights) {
             let arrival = x * self.days;
             let law = NodeLaw::between(&course, arrival, self.days);
-            for &(degree, share) in self.forces.entry.shares() {
-                let newcomers = w * self.days * self.arrivals_per_day * share;
-                add(newcomers, &tails(&law, degree, &self.thresholds, course.survival(self.days - arrival))?);
-            }
+            let newcomers = w * self.days * self.arrivals_per_day;
+            let entry = self.forces.entry.shares();
+            add(newcomers, &tails(&law, entry, &self.thresholds, course.survival(self.days - arrival))?);
         }
         for i in 0..size {
             for j in 0..i {
@@ -258,12 +257,12 @@ impl<'a> Period<'a> {
     }
 }
 
-/// Probabilities that a node of `degree` stays and ends past each threshold; zero beyond the first negligible one.
-fn tails(law: &NodeLaw, degree: u64, thresholds: &[u64], survival: f64) -> Result<Vec<f64>, GrowthError> {
+/// Probabilities that a node drawn from `starts` stays and ends past each threshold; zero beyond the first negligible one.
+fn tails(law: &NodeLaw, starts: &[(u64, f64)], thresholds: &[u64], survival: f64) -> Result<Vec<f64>, GrowthError> {
     const NEGLIGIBLE: f64 = 1e-9;
     let mut values = vec![0.0; thresholds.len()];
     for (value, &threshold) in values.iter_mut().zip(thresholds) {
-        *value = survival * law.tail_within(degree, threshold, Accuracy::Working)?;
+        *value = survival * law.mixture_tail(starts, threshold, Accuracy::Working)?;
         if *value < NEGLIGIBLE {
             break;
         }

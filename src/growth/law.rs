@@ -1,16 +1,15 @@
 //! The law of one node's degree: the exact distribution of where a node stands after some days.
 
-use num_complex::Complex64;
+mod gain;
+mod panel;
+
+use gain::GainLaw;
+use panel::{LawPanel, barycentric_weights};
 
 use super::mean_field::{Course, GrowthError};
-use crate::numerics::elementary::complex_ln_1p;
-use crate::numerics::inversion::{GeneratingFunction, InversionError, upper_tail};
+use crate::numerics::inversion::upper_tail;
 use crate::numerics::quadrature::{PANEL, PANEL_NODES};
 use crate::numerics::tolerances::Accuracy;
-
-/// A pole of the integrand within this many half-lengths of a panel is taken out and integrated in closed form; farther
-/// away 10 Gauss–Legendre nodes are good to ρ^{−20} with ρ = 2 + √3, that is 4·10⁻¹².
-const NEAR_POLE: f64 = 2.0;
 
 /// The law of a node's degree at day t given its degree at day s: a time-inhomogeneous linear birth, death and
 /// immigration process (Kendall 1948).
@@ -52,23 +51,6 @@ pub struct NodeLaw {
     shortfall: f64,
     losses: bool,
     panels: Vec<LawPanel>,
-}
-
-/// One panel of the immigration integral, at its Gauss–Legendre nodes.
-#[derive(Debug, Clone)]
-struct LawPanel {
-    /// C at the nodes.
-    spread: [f64; PANEL_NODES],
-    /// Weight × u·e^R at the nodes: immigrants and their expected offspring.
-    immigration: [f64; PANEL_NODES],
-    /// Weight × v·e^R at the nodes.
-    births: [f64; PANEL_NODES],
-    /// u/v at the nodes.
-    ratio: [f64; PANEL_NODES],
-    /// Barycentric weights of interpolation in C.
-    barycentric: [f64; PANEL_NODES],
-    /// C at the panel's start and end.
-    ends: (f64, f64),
 }
 
 impl NodeLaw {
@@ -128,16 +110,33 @@ impl NodeLaw {
     /// # Errors
     /// [`GrowthError::Inversion`] when the contour sums do not settle.
     pub fn tail_within(&self, degree: u64, threshold: u64, accuracy: Accuracy) -> Result<f64, GrowthError> {
-        if threshold == 0 || (!self.losses && degree >= threshold) {
+        self.mixture_tail(&[(degree, 1.0)], threshold, accuracy)
+    }
+
+    /// The same for a node whose degree at the start is drawn from `starts`: (degree, share) in ascending degree.
+    ///
+    /// # Numerical notes
+    /// One inversion whatever the number of starting degrees.
+    ///
+    /// # Errors
+    /// [`GrowthError::Inversion`] when the contour sums do not settle.
+    pub fn mixture_tail(&self, starts: &[(u64, f64)], threshold: u64, accuracy: Accuracy) -> Result<f64, GrowthError> {
+        if threshold == 0 {
             return Ok(1.0);
         }
-        let gain = threshold as f64 - degree as f64;
-        let still = self.mean_gain_from_uniform() == 0.0 && (degree == 0 || (self.spread == 0.0 && !self.losses));
-        if still {
-            return Ok(0.0);
+        let open = if self.losses { starts.len() } else { starts.partition_point(|&(degree, _)| degree < threshold) };
+        let certain: f64 = starts[open..].iter().map(|&(_, share)| share).sum();
+        let Some(&(reference, _)) = starts[..open].last() else { return Ok(certain) };
+        let still = self.spread == 0.0 && !self.losses;
+        if self.mean_gain_from_uniform() == 0.0 && (reference == 0 || still) {
+            return Ok(certain);
         }
-        let law = GainLaw { law: self, degree: degree as f64 };
-        upper_tail(&law, gain, accuracy).map_err(|error: InversionError| error.into())
+        let share: f64 = starts[..open].iter().map(|&(_, share)| share).sum();
+        let below = |&(degree, weight): &(u64, f64)| ((reference - degree) as f64, weight / share);
+        let below: Vec<(f64, f64)> = starts[..open].iter().rev().map(below).collect();
+        let law = GainLaw { law: self, reference: reference as f64, below: &below };
+        let gain = threshold as f64 - reference as f64;
+        Ok(certain + share * upper_tail(&law, gain, accuracy)?)
     }
 
     /// Expected degree at the end of a node of degree `degree` at the start.
@@ -159,118 +158,4 @@ impl NodeLaw {
     fn nodes(&self) -> impl Iterator<Item = (f64, f64)> + '_ {
         self.panels.iter().flat_map(|p| p.spread.iter().copied().zip(p.immigration.iter().copied()))
     }
-}
-
-impl LawPanel {
-    /// ∫ u·e^R·y/(1 + yC) over the panel and its first two derivatives in y, for real y above the pole −1/C. The
-    /// derivatives hold the interpolated u/v fixed: they only steer the search for the saddle point.
-    fn real_integral(&self, y: f64) -> [f64; 3] {
-        let mut sums = [0.0; 3];
-        let mut add = |weight: f64, spread: f64| {
-            let inverse = 1.0 / (1.0 + y * spread);
-            let density = weight * inverse * inverse;
-            sums[0] += weight * y * inverse;
-            sums[1] += density;
-            sums[2] -= 2.0 * density * spread * inverse;
-        };
-        let (middle, half) = (0.5 * (self.ends.0 + self.ends.1), 0.5 * (self.ends.0 - self.ends.1));
-        let near = (1.0 + y * middle).abs() < NEAR_POLE * half * y.abs();
-        let mut ratio = 0.0;
-        if near {
-            let (mut weighted, mut plain) = (0.0, 0.0);
-            for i in 0..PANEL_NODES {
-                let weight = self.barycentric[i] / (1.0 + y * self.spread[i]);
-                weighted += weight * self.ratio[i];
-                plain += weight;
-            }
-            ratio = weighted / plain;
-        }
-        for i in 0..PANEL_NODES {
-            add(self.immigration[i] - ratio * self.births[i], self.spread[i]);
-        }
-        if near {
-            for (spread, sign) in [(self.ends.0, ratio), (self.ends.1, -ratio)] {
-                let slope = spread / (1.0 + y * spread);
-                sums[0] += sign * (y * spread).ln_1p();
-                sums[1] += sign * slope;
-                sums[2] -= sign * slope * slope;
-            }
-        }
-        sums
-    }
-
-    /// ∫ u·e^R·y/(1 + yC) over the panel.
-    fn integral(&self, y: Complex64) -> Complex64 {
-        let inverse: [Complex64; PANEL_NODES] = std::array::from_fn(|i| (1.0 + y * self.spread[i]).inv());
-        let sum =
-            |weights: &[f64; PANEL_NODES]| -> Complex64 { inverse.iter().zip(weights).map(|(d, &w)| d * w).sum() };
-        let plain = y * sum(&self.immigration);
-        let (middle, half) = (0.5 * (self.ends.0 + self.ends.1), 0.5 * (self.ends.0 - self.ends.1));
-        if (1.0 + y * middle).norm() >= NEAR_POLE * half * y.norm() {
-            return plain;
-        }
-        // u/v interpolated at the pole C = −1/y, where 1/(C − C_i) is −y·inverse[i].
-        let weighted: [f64; PANEL_NODES] = std::array::from_fn(|i| self.barycentric[i] * self.ratio[i]);
-        let ratio = sum(&weighted) / sum(&self.barycentric);
-        let exact = complex_ln_1p(y * self.ends.0) - complex_ln_1p(y * self.ends.1);
-        plain + ratio * (exact - y * sum(&self.births))
-    }
-}
-
-/// The gain X − k of a node that starts at degree k.
-struct GainLaw<'a> {
-    law: &'a NodeLaw,
-    degree: f64,
-}
-
-impl GeneratingFunction for GainLaw<'_> {
-    fn log_at(&self, zeta: Complex64) -> Complex64 {
-        let y = -crate::numerics::elementary::complex_exp_m1(zeta);
-        let immigration: Complex64 = self.law.panels.iter().map(|panel| panel.integral(y)).sum();
-        if self.degree == 0.0 {
-            return -immigration;
-        }
-        let kept = if self.law.losses { complex_ln_1p(y * self.law.shortfall) - zeta } else { Complex64::ZERO };
-        self.degree * (kept - complex_ln_1p(y * self.law.spread)) - immigration
-    }
-
-    fn log_real(&self, zeta: f64) -> [f64; 3] {
-        let (y, slope) = (-zeta.exp_m1(), -zeta.exp());
-        // Derivatives in y of ln f and of the immigration integral, then the chain rule with y' = y'' = −e^ζ.
-        let [mut value, mut first, mut second] = [0.0; 3];
-        for panel in &self.law.panels {
-            let [integral, once, twice] = panel.real_integral(y);
-            (value, first, second) = (value - integral, first - once, second - twice);
-        }
-        let (c, d) = (self.law.spread, self.law.shortfall);
-        let c_inverse = c / (1.0 + y * c);
-        let mut shift = 0.0;
-        value -= self.degree * (y * c).ln_1p();
-        first -= self.degree * c_inverse;
-        second += self.degree * c_inverse * c_inverse;
-        if self.law.losses {
-            let d_inverse = d / (1.0 + y * d);
-            value += self.degree * ((y * d).ln_1p() - zeta);
-            first += self.degree * d_inverse;
-            second -= self.degree * d_inverse * d_inverse;
-            shift = self.degree;
-        }
-        [value, first * slope - shift, second * slope * slope + first * slope]
-    }
-
-    fn singularity(&self) -> f64 {
-        if self.law.spread > 0.0 { (1.0 / self.law.spread).ln_1p() } else { f64::INFINITY }
-    }
-}
-
-/// Weights of barycentric interpolation at `nodes`, scaled by their spread so that products neither over- nor underflow.
-fn barycentric_weights(nodes: &[f64; PANEL_NODES], scale: f64) -> [f64; PANEL_NODES] {
-    std::array::from_fn(|i| {
-        1.0 / nodes
-            .iter()
-            .enumerate()
-            .filter(|&(j, _)| j != i)
-            .map(|(_, &x)| 4.0 * (nodes[i] - x) / scale)
-            .product::<f64>()
-    })
 }

@@ -9,6 +9,9 @@ use crate::numerics::tolerances::{MESH_LOG_CHANGE, MESH_MAX_PANELS};
 /// Share of the horizon that the first panel takes when there is no link yet and L/K starts from infinity.
 const FIRST_PANEL_WITHOUT_LINKS: f64 = 1e-30;
 
+/// Link ends beyond this are nonsense: 2^64 nodes of degree 2^53 have 10³⁵.
+const MOST_LINK_ENDS: f64 = 1e40;
+
 /// Why growth cannot be computed.
 #[derive(Debug, Clone, PartialEq, thiserror::Error)]
 pub enum GrowthError {
@@ -28,6 +31,15 @@ pub enum GrowthError {
         reached: f64,
         /// Day asked for.
         horizon: f64,
+    },
+    /// The network would outgrow what can be counted.
+    #[error(
+        "by day {reached:.0} the network would have more than 2^64 nodes or 10^40 link ends; check growth_per_year and the \
+         rates, or ask for nearer dates"
+    )]
+    TooLarge {
+        /// Day reached.
+        reached: f64,
     },
     /// A tail probability could not be computed.
     #[error(transparent)]
@@ -103,14 +115,21 @@ impl Course {
             course.panels.push(panel);
             let end = (start + course.panel_length(&panel)).min(edge).min(horizon);
             if end >= horizon || end <= start {
-                return Ok(course);
+                let (nodes, link_ends) = course.advance(&panel, horizon - start);
+                return course.check_countable(horizon, nodes, link_ends).map(|()| course);
             }
             if course.panels.len() >= MESH_MAX_PANELS {
                 return Err(GrowthError::TooFast { reached: end, horizon });
             }
             (nodes, link_ends) = course.advance(&panel, end - start);
             start = end;
+            course.check_countable(start, nodes, link_ends)?;
         }
+    }
+
+    fn check_countable(&self, reached: f64, nodes: f64, link_ends: f64) -> Result<(), GrowthError> {
+        let countable = nodes < u64::MAX as f64 && link_ends < MOST_LINK_ENDS;
+        if countable { Ok(()) } else { Err(GrowthError::TooLarge { reached }) }
     }
 
     /// The forces behind the course.

@@ -86,22 +86,15 @@ fn newcomers_mean(
 ) -> Result<f64, GrowthError> {
     let parameters = course.parameters();
     let arrivals = parameters.arrivals.arrivals_between(0.0, day);
-    let largest_entry = parameters.entry.shares().last().map_or(0, |&(degree, _)| degree);
-    // The earliest and best-connected newcomer bounds all the others, as long as links are not lost.
-    let bound = arrivals * law.tail_within(largest_entry, threshold, accuracy)?;
+    let entry = parameters.entry.shares();
+    // The earliest newcomers bound the later ones, as long as links are not lost.
+    let bound = arrivals * law.mixture_tail(entry, threshold, accuracy)?;
     if arrivals == 0.0 || (!parameters.has_losses() && bound <= accuracy.negligible() * present + TAIL_ZERO) {
         return Ok(0.0);
     }
     let mut in_tail = |arrival: f64| -> Result<f64, GrowthError> {
         let law = NodeLaw::between(course, arrival, day);
-        let mut share = 0.0;
-        for &(degree, weight) in parameters.entry.shares().iter().rev() {
-            let probability = law.tail_within(degree, threshold, accuracy)?;
-            share += weight * probability;
-            if probability <= accuracy.negligible() * share {
-                break;
-            }
-        }
+        let share = law.mixture_tail(entry, threshold, accuracy)?;
         Ok(parameters.arrivals.rate(arrival) * course.survival(day - arrival) * share)
     };
     let mut mean = 0.0;

@@ -78,9 +78,12 @@ pub fn upper_tail(gf: &impl GeneratingFunction, g: f64, accuracy: Accuracy) -> R
         if saddle.height < UNDERFLOW {
             return Ok(0.0);
         }
-        let squeezed = g > 0.0 && g * gf.singularity() < SQUEEZED && saddle.height > SMALL_TAIL.ln();
-        if !squeezed {
-            return contour_integral(gf, g, &saddle, accuracy).map(|tail| tail.clamp(0.0, 1.0));
+        let small = saddle.height < SMALL_TAIL.ln();
+        if small || g <= 0.0 || g * gf.singularity() >= SQUEEZED {
+            match contour_integral(gf, g, &saddle, accuracy) {
+                Err(InversionError) if !small => {}
+                settled => return settled.map(|tail| tail.clamp(0.0, 1.0)),
+            }
         }
     }
     let saddle = find_saddle(gf, g, mean, variance, Side::Lower);

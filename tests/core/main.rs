@@ -2,6 +2,7 @@
 
 mod fit;
 mod forecast;
+mod hostile;
 mod law;
 mod networks;
 mod quantiles;

@@ -144,3 +144,19 @@ proptest! {
         }
     }
 }
+
+/// One inversion over a mixture of starting degrees is the weighted sum of one inversion each.
+#[test]
+fn a_mixture_of_starts_is_the_sum_of_its_parts() {
+    let course = Course::new(&young_network(), forces(0.7, 4.0), 2_000.0).unwrap();
+    let lossy = Course::new(&young_network(), forces(0.7, 4.0).with_losses(0.0, 1e-4).unwrap(), 2_000.0).unwrap();
+    let starts = [(0, 0.4), (1, 0.3), (2, 0.1), (7, 0.1), (40, 0.07), (300, 0.03)];
+    for course in [course, lossy] {
+        let law = NodeLaw::between(&course, 0.0, 2_000.0);
+        for threshold in [1, 3, 8, 41, 100, 299, 301, 900] {
+            let parts: f64 = starts.iter().map(|&(k, share)| share * law.tail(k, threshold).unwrap()).sum();
+            let whole = law.mixture_tail(&starts, threshold, Accuracy::Full).unwrap();
+            assert!(relative_error(whole, parts) < 1e-9, "{threshold}: {whole:e} {parts:e}");
+        }
+    }
+}

@@ -1,0 +1,105 @@
+//! Extreme but valid inputs: every answer is finite and ordered, or an error in words.
+
+use proptest::prelude::*;
+use tailcast::evaluate::{OriginRequest, answer};
+use tailcast::fit::FitRequest;
+use tailcast::forecast::CountForecast;
+use tailcast::model::{
+    ArrivalPlan, ArrivalSegment, AttachmentMix, DegreeCounts, DegreeKind, Evidence, ForecastPlan, Levels, MAX_DEGREE,
+    Snapshot, Thresholds,
+};
+
+fn degree() -> impl Strategy<Value = u64> {
+    prop_oneof![4 => 0u64..50, 2 => 0u64..100_000, 1 => Just(MAX_DEGREE), 1 => 0..MAX_DEGREE]
+}
+
+fn nodes() -> impl Strategy<Value = u64> {
+    prop_oneof![4 => 1u64..1_000, 1 => 1u64..1_000_000_000_000, 1 => Just(1u64 << 58)]
+}
+
+fn rate() -> impl Strategy<Value = f64> {
+    prop_oneof![4 => 0.1..100.0f64, 1 => Just(0.0), 1 => Just(1e-300), 1 => Just(1e9), 1 => 1e-6..1e6f64]
+}
+
+fn histogram() -> impl Strategy<Value = DegreeCounts> {
+    prop::collection::btree_map(degree(), nodes(), 1..12)
+        .prop_map(|map| DegreeCounts::from_pairs(&map.into_iter().collect::<Vec<_>>()).unwrap())
+}
+
+fn check(count: &CountForecast) -> Result<(), TestCaseError> {
+    prop_assert!(count.expected.is_finite() && count.expected >= 0.0, "{count:?}");
+    prop_assert!(count.median.is_finite() && count.median >= 0.0, "{count:?}");
+    for interval in &count.intervals {
+        prop_assert!(
+            interval.low.is_finite() && interval.high.is_finite() && interval.low <= interval.high,
+            "{count:?}"
+        );
+    }
+    Ok(())
+}
+
+proptest! {
+    #![proptest_config(ProptestConfig::with_cases(300))]
+    #[test]
+    fn extreme_inputs_get_finite_answers_or_words(
+        total in any::<bool>(),
+        histograms in prop::collection::vec(histogram(), 1..3),
+        fixed in prop::option::of(prop_oneof![Just(0.0), Just(1.0), 0.0..1.0f64, Just(1e-12), Just(1.0 - 1e-12)]),
+        arrivals in rate(),
+        growth in prop_oneof![3 => Just(0.0), 1 => -0.99..99.0f64],
+        links in prop::option::of(rate()),
+        per_node in prop_oneof![3 => Just(0.0), 1 => Just(1e-4), 1 => rate()],
+        losses in prop_oneof![3 => Just((0.0, 0.0)), 1 => (0.0..0.01f64, 0.0..0.01f64), 1 => (rate(), rate())],
+        threshold in 1..=MAX_DEGREE,
+        days in prop_oneof![3 => 1i64..2_000, 1 => Just(70_000i64)],
+    ) {
+        let kind = if total { DegreeKind::Total } else { DegreeKind::Received };
+        let start: jiff::Timestamp = "2026-01-01T00:00:00Z".parse().unwrap();
+        let after = |days: i64| start + jiff::SignedDuration::from_hours(24 * days);
+        let snapshots: Vec<Snapshot> = histograms
+            .into_iter()
+            .enumerate()
+            .map(|(i, counts)| Snapshot { as_of: after(i as i64 * 30), counts })
+            .collect();
+        let as_of = snapshots.last().unwrap().as_of;
+        let segment = ArrivalSegment { from_day: 0.0, per_day: arrivals, growth_per_year: growth };
+        let request = OriginRequest {
+            evidence: Evidence::new(kind, snapshots, None).unwrap(),
+            fit: FitRequest {
+                fixed_mix: fixed.and_then(AttachmentMix::new),
+                links_per_arrival: links,
+                departures_per_node_day: losses.0,
+                link_losses_per_link_day: losses.1,
+                ..FitRequest::default()
+            },
+            arrivals: Some(ArrivalPlan::from_segments(&[segment]).unwrap()),
+            links_per_node_day: per_node,
+            plan: ForecastPlan::new(
+                as_of,
+                Thresholds::new(&[1, 10, 1_000, threshold]).unwrap(),
+                &[as_of + jiff::SignedDuration::from_hours(24 * days)],
+                Levels::default(),
+            )
+            .unwrap(),
+        };
+        eprintln!("try {request:?}");
+        let clock = std::time::Instant::now();
+        let result = answer(&request, &|| false);
+        let took = clock.elapsed();
+        prop_assert!(took.as_secs_f64() < 3.0, "took {took:?}");
+        match result {
+            Ok(answer) => {
+                for at in &answer.forecast {
+                    check(&at.nodes)?;
+                    check(&at.links)?;
+                    for tail in &at.tail {
+                        check(&tail.size)?;
+                    }
+                    prop_assert!(at.largest_degree.median.is_finite());
+                }
+                prop_assert!(answer.fit.preferential_share.value.is_finite());
+            }
+            Err(error) => prop_assert!(!error.to_string().is_empty()),
+        }
+    }
+}
