@@ -1,5 +1,9 @@
 //! Infers the attachment mix from degree counts; the answer says which rung of the evidence ladder it stands on.
 
+mod stationary;
+
+pub use stationary::StationaryLaw;
+
 use crate::model::{AttachmentMix, EntryDegrees, Estimate, Warning};
 
 /// A candidate attachment kernel.

@@ -1,1 +1,11 @@
-//! numerics
+//! Generic numerical methods; knows nothing of networks.
+//!
+//! Every tolerance and every iteration cap of the core stands in [`tolerances`].
+
+pub mod elementary;
+pub mod gamma;
+pub mod inversion;
+pub mod optimise;
+pub mod quadrature;
+pub mod roots;
+pub mod tolerances;

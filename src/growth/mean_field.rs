@@ -1,0 +1,217 @@
+//! The network's totals over time: nodes N(t) and link ends K(t).
+
+use crate::model::{DegreeCounts, GrowthParameters};
+use crate::numerics::elementary::exp_m1_ratio;
+use crate::numerics::inversion::InversionError;
+use crate::numerics::quadrature::PANEL;
+use crate::numerics::tolerances::{MESH_LOG_CHANGE, MESH_MAX_PANELS};
+
+/// Share of the horizon that the first panel takes when there is no link yet and L/K starts from infinity.
+const FIRST_PANEL_WITHOUT_LINKS: f64 = 1e-30;
+
+/// Why growth cannot be computed.
+#[derive(Debug, Clone, PartialEq, thiserror::Error)]
+pub enum GrowthError {
+    /// Every landing end must pick in proportion to degree, and no node has a link.
+    #[error(
+        "no node has a link and the mix is purely preferential, so no node can ever gain one; give a preferential share \
+         below 1, entry degrees above 0, or a snapshot with links"
+    )]
+    NobodyStarts,
+    /// The rates are so fast that the time mesh would pass its cap.
+    #[error(
+        "the rates change the network too fast for the horizon: {MESH_MAX_PANELS} time steps reach day {reached:.3} of \
+         {horizon:.3}; check that rates are per day, or ask for nearer dates"
+    )]
+    TooFast {
+        /// Day reached.
+        reached: f64,
+        /// Day asked for.
+        horizon: f64,
+    },
+    /// A tail probability could not be computed.
+    #[error(transparent)]
+    Inversion(#[from] InversionError),
+}
+
+/// The mean-field course of a network: N(t), K(t) and the hazards they imply, from day 0 to a horizon.
+///
+/// Formula: `dN/dt = A − δN`, `dK/dt = L + ē·A − θK` with `L = ℓ·A + ι·N`; θ = w + δ for links received, w + 2δ for total
+/// degree, where a departing node takes its own ends and its partners' with it.
+///
+/// # Numerical notes
+/// Each panel of the mesh is solved in closed form from its start; only the term that couples ι to N under
+/// losses is a 10-point quadrature, exact to rounding because no exponent exceeds 0.7 on a panel.
+///
+/// ```
+/// use tailcast::growth::Course;
+/// use tailcast::model::*;
+/// let arrivals = ArrivalPlan::constant(10.0).unwrap();
+/// let entry = EntryDegrees::single(0);
+/// let forces = GrowthParameters::new(DegreeKind::Received, AttachmentMix::new(0.5).unwrap(), arrivals, entry, 3.0).unwrap();
+/// let counts = DegreeCounts::from_pairs(&[(0, 60), (5, 40)]).unwrap();
+/// let course = Course::new(&counts, forces, 30.0).unwrap();
+/// assert!((course.nodes(30.0) - 400.0).abs() < 1e-9);
+/// assert!((course.link_ends(30.0) - 1100.0).abs() < 1e-9);
+/// ```
+#[derive(Debug, Clone)]
+pub struct Course {
+    parameters: GrowthParameters,
+    panels: Vec<Panel>,
+    horizon: f64,
+}
+
+/// The state at a panel's start; within it the arrival rate is one exponential.
+#[derive(Debug, Clone, Copy)]
+struct Panel {
+    start: f64,
+    nodes: f64,
+    link_ends: f64,
+    arrival_rate: f64,
+    arrival_growth: f64,
+}
+
+/// Hazards of one node at a time: gain `uniform + preferential·k`, loss `end_loss·k`.
+#[derive(Debug, Clone, Copy)]
+pub(crate) struct Hazards {
+    /// u = (1−p)·L/N, 1/day.
+    pub uniform: f64,
+    /// v = p·L/K, 1/(link end · day).
+    pub preferential: f64,
+    /// u/v = (1−p)·K/(p·N); the kernel's additive constant c. Zero when p = 0, where it is not used.
+    pub ratio: f64,
+}
+
+impl Course {
+    /// The course of a network with `counts` at day 0 under `parameters`, up to day `horizon`.
+    ///
+    /// # Errors
+    /// [`GrowthError::NobodyStarts`] and [`GrowthError::TooFast`].
+    pub fn new(counts: &DegreeCounts, parameters: GrowthParameters, horizon: f64) -> Result<Self, GrowthError> {
+        let link_ends = counts.link_ends() as f64;
+        let lands = parameters.links_per_arrival() > 0.0 || parameters.links_per_node_day() > 0.0;
+        let purely_preferential = parameters.mix.preferential_share() == 1.0;
+        if purely_preferential && lands && link_ends == 0.0 && parameters.entry.mean() == 0.0 {
+            return Err(GrowthError::NobodyStarts);
+        }
+        let mut course = Self { parameters, panels: Vec::new(), horizon };
+        let (mut start, mut nodes, mut link_ends) = (0.0, counts.nodes() as f64, link_ends);
+        loop {
+            let arrival_rate = course.parameters.arrivals.rate(start);
+            let (arrival_growth, edge) = course.segment_after(start);
+            let panel = Panel { start, nodes, link_ends, arrival_rate, arrival_growth };
+            course.panels.push(panel);
+            let end = (start + course.panel_length(&panel)).min(edge).min(horizon);
+            if end >= horizon || end <= start {
+                return Ok(course);
+            }
+            if course.panels.len() >= MESH_MAX_PANELS {
+                return Err(GrowthError::TooFast { reached: end, horizon });
+            }
+            (nodes, link_ends) = course.advance(&panel, end - start);
+            start = end;
+        }
+    }
+
+    /// The forces behind the course.
+    pub fn parameters(&self) -> &GrowthParameters {
+        &self.parameters
+    }
+
+    /// The last day the course reaches.
+    pub fn horizon(&self) -> f64 {
+        self.horizon
+    }
+
+    /// Expected number of nodes N(t) at `day`.
+    pub fn nodes(&self, day: f64) -> f64 {
+        self.totals(day).0
+    }
+
+    /// Expected number of link ends K(t) at `day`.
+    pub fn link_ends(&self, day: f64) -> f64 {
+        self.totals(day).1
+    }
+
+    /// Share D = e^{−δ·days} of nodes still present after `days`.
+    pub fn survival(&self, days: f64) -> f64 {
+        (-self.parameters.departure_hazard() * days).exp()
+    }
+
+    pub(crate) fn hazards(&self, day: f64) -> Hazards {
+        let (nodes, link_ends) = self.totals(day);
+        let p = self.parameters.mix.preferential_share();
+        let arrivals = self.parameters.arrivals.rate(day);
+        let landing = self.parameters.links_per_arrival() * arrivals + self.parameters.links_per_node_day() * nodes;
+        Hazards {
+            uniform: (1.0 - p) * landing / nodes,
+            preferential: if p > 0.0 { p * landing / link_ends } else { 0.0 },
+            ratio: if p > 0.0 { (1.0 - p) * link_ends / (p * nodes) } else { 0.0 },
+        }
+    }
+
+    /// Edges of the mesh within [from, to], both included. Where the course starts without links, the first, vanishing
+    /// panel is left out: L/K is infinite at its start.
+    pub(crate) fn edges(&self, from: f64, to: f64) -> Vec<f64> {
+        let preferential = self.parameters.mix.preferential_share() > 0.0;
+        let singular = preferential && from == 0.0 && self.panels.first().is_some_and(|p| p.link_ends == 0.0);
+        let first = if singular { self.panels.get(1).map_or(from, |p| p.start) } else { from };
+        let mut edges = vec![first];
+        let inner = self.panels.partition_point(|p| p.start <= first);
+        edges.extend(self.panels[inner..].iter().map(|p| p.start).take_while(|&start| start < to));
+        edges.push(to);
+        edges
+    }
+
+    fn totals(&self, day: f64) -> (f64, f64) {
+        let after = self.panels.partition_point(|p| p.start <= day);
+        let panel = &self.panels[after.saturating_sub(1)];
+        self.advance(panel, day - panel.start)
+    }
+
+    fn advance(&self, panel: &Panel, days: f64) -> (f64, f64) {
+        let (delta, theta) = (self.parameters.departure_hazard(), self.degree_loss());
+        let per_arrival = self.parameters.links_per_arrival() + self.parameters.entry.mean();
+        let per_node_day = self.parameters.links_per_node_day();
+        let (rate, growth) = (panel.arrival_rate, panel.arrival_growth);
+        // ∫₀^τ e^{−h(τ−x)}·e^{γx} dx = e^{−hτ}·τ·φ((γ+h)τ), φ(x) = (eˣ−1)/x
+        let decayed = |hazard: f64, growth: f64, x: f64| (-hazard * x).exp() * x * exp_m1_ratio((growth + hazard) * x);
+        let nodes_after = |x: f64| panel.nodes * (-delta * x).exp() + rate * decayed(delta, growth, x);
+        let mut link_ends = panel.link_ends * (-theta * days).exp() + per_arrival * rate * decayed(theta, growth, days);
+        if per_node_day > 0.0 {
+            let coupled = |x: f64| (-theta * (days - x)).exp() * nodes_after(x);
+            link_ends += per_node_day * PANEL.integrate(0.0, days, coupled);
+        }
+        (nodes_after(days), link_ends)
+    }
+
+    /// θ: hazard at which link ends vanish from K, a departing node's own included.
+    fn degree_loss(&self) -> f64 {
+        self.parameters.end_loss_hazard() + self.parameters.departure_hazard()
+    }
+
+    /// Exponential growth of the arrival rate at `day`, and where the next segment starts.
+    fn segment_after(&self, day: f64) -> (f64, f64) {
+        let segments = self.parameters.arrivals.segments();
+        let next = segments.partition_point(|s| s.from_day <= day);
+        let growth = segments[next.saturating_sub(1)].log_growth();
+        (growth, segments.get(next).map_or(f64::INFINITY, |s| s.from_day))
+    }
+
+    fn panel_length(&self, panel: &Panel) -> f64 {
+        let per_arrival = self.parameters.links_per_arrival() + self.parameters.entry.mean();
+        let inflow = per_arrival * panel.arrival_rate + self.parameters.links_per_node_day() * panel.nodes;
+        if panel.link_ends == 0.0 && inflow > 0.0 && self.parameters.mix.preferential_share() > 0.0 {
+            return self.horizon * FIRST_PANEL_WITHOUT_LINKS;
+        }
+        let growth = panel.arrival_growth.abs();
+        let hazard = growth.max(self.degree_loss()).max(self.parameters.departure_hazard());
+        let by_hazard = MESH_LOG_CHANGE / hazard;
+        // ln N and ln K change by at most MESH_LOG_CHANGE while the inflow is at most e^0.7 − 1 of the stock.
+        let doubling = MESH_LOG_CHANGE.exp_m1();
+        let by_nodes = doubling * panel.nodes / panel.arrival_rate;
+        let by_links = if inflow > 0.0 { doubling * panel.link_ends / inflow } else { f64::INFINITY };
+        let by_links = if by_links > 0.0 { by_links } else { f64::INFINITY };
+        by_hazard.min(by_nodes).min(by_links).max(self.horizon * FIRST_PANEL_WITHOUT_LINKS)
+    }
+}

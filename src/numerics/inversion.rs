@@ -1,0 +1,197 @@
+//! Tail probabilities of a counting variable from its generating function, far tails included.
+
+use std::f64::consts::PI;
+
+use num_complex::Complex64;
+
+use super::elementary::complex_exp_m1;
+use super::tolerances::{
+    CONTOUR_AGREEMENT, CONTOUR_MAX_POINTS, CONTOUR_NEGLIGIBLE, SADDLE_CLOSENESS, SADDLE_MAX_STEPS,
+};
+
+/// The generating function of a whole-number variable G, on the logarithmic plane z = e^ζ.
+///
+/// It must be analytic off the real half-line ζ ≥ [`Self::singularity`], and shrink in modulus away from the real axis.
+pub trait GeneratingFunction {
+    /// ln E[e^{ζG}] on any continuous branch.
+    fn log_at(&self, zeta: Complex64) -> Complex64;
+    /// ln E[e^{ζG}] and its first and second derivative in ζ, for real ζ below the singularity.
+    fn log_real(&self, zeta: f64) -> [f64; 3];
+    /// The singularity nearest to 0 on the positive real axis, or infinity.
+    fn singularity(&self) -> f64;
+}
+
+/// Threshold × singularity below which the contour is squeezed: the threshold lies far inside the law's power-law edge.
+const SQUEEZED: f64 = 0.5;
+/// A tail above this keeps eight digits or more as one minus its complement.
+const SMALL_TAIL: f64 = 1e-8;
+
+/// The trapezoid sums did not settle before the cap on contour points.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, thiserror::Error)]
+#[error("a tail probability did not settle within {CONTOUR_MAX_POINTS} contour points")]
+pub struct InversionError;
+
+/// Which side of the pole at z = 1 the contour crosses the real axis.
+#[derive(Clone, Copy, PartialEq)]
+enum Side {
+    /// r > 1: the sum is P(G ≥ g).
+    Upper,
+    /// r < 1: the sum is P(G < g).
+    Lower,
+}
+
+/// Where a contour crosses the real axis, and the shape of the integrand there.
+struct Saddle {
+    zeta: f64,
+    /// Second derivative of the exponent: 1/width².
+    curvature: f64,
+    /// e^ζ − 1.
+    pole: f64,
+    /// ln E[e^{ζG}] − (g−1)ζ.
+    reference: f64,
+    /// ln of the integrand's modulus.
+    height: f64,
+}
+
+/// Computes P(G ≥ g) of the variable with generating function `gf`.
+///
+/// Formula: `P(G ≥ g) = (1/2πi) ∮ E[z^G] z^{−g}/(z−1) dz`, crossing the real axis at the saddle point between 1 and the
+/// singularity; crossing below 1 gives −P(G < g) (Abate & Whitt 1992; Bornemann 2011).
+///
+/// # Numerical notes
+/// In ζ = ln z the contour is the parabola with its focus on the nearest singularity, which opens along the cut, so that
+/// the integrand dies as fast for a law with a power-law edge as for a normal one (Weideman & Trefethen 2007). When it
+/// would leave the strip |Im ζ| ≤ π it is the circle instead. The trapezoid rule then converges geometrically; the step is
+/// halved until two sums agree to 10⁻⁶, which makes the finer one good to about 10⁻¹². The relative error of a small
+/// tail is that of `log_at` times its size; measured at most 10⁻¹⁰ down to 10⁻⁶⁰. Typically 50 to 150 evaluations.
+///
+/// # Errors
+/// [`InversionError`] when the sums do not settle.
+pub fn upper_tail(gf: &impl GeneratingFunction, g: f64) -> Result<f64, InversionError> {
+    let [_, mean, variance] = gf.log_real(0.0);
+    if g > mean {
+        let saddle = find_saddle(gf, g, mean, variance, Side::Upper);
+        // Far below the law's own scale the contour is squeezed between the pole and the singularity. A tail that is not
+        // small is then better had as 1 − P(G < g).
+        let squeezed = g > 0.0 && g * gf.singularity() < SQUEEZED && saddle.height > SMALL_TAIL.ln();
+        if !squeezed {
+            return contour_integral(gf, g, &saddle).map(|tail| tail.clamp(0.0, 1.0));
+        }
+    }
+    let saddle = find_saddle(gf, g, mean, variance, Side::Lower);
+    contour_integral(gf, g, &saddle).map(|below| (1.0 - below).clamp(0.0, 1.0))
+}
+
+/// Minimises the convex exponent ln E[e^{ζG}] − (g−1)ζ − ln|e^ζ − 1| on its side of 0 by bracketed Newton steps.
+fn find_saddle(gf: &impl GeneratingFunction, g: f64, mean: f64, variance: f64, side: Side) -> Saddle {
+    const LEFTMOST: f64 = -40.0; // e^{-40}: a circle so small that only the constant term is left
+    const RIGHTMOST: f64 = 700.0; // e^700 is near the largest double
+    let (mut low, mut high) = match side {
+        Side::Upper => (0.0, gf.singularity().min(RIGHTMOST)),
+        Side::Lower => (LEFTMOST, 0.0),
+    };
+    // Start at the saddle of a normal law with the same mean and variance.
+    let drift = (g - mean) / variance.max(f64::MIN_POSITIVE);
+    let root = (drift * drift + 4.0 / variance.max(f64::MIN_POSITIVE)).sqrt();
+    let mut zeta = 0.5 * if side == Side::Upper { drift + root } else { drift - root };
+    let mut curvature = 1.0;
+    for _ in 0..SADDLE_MAX_STEPS {
+        if !(zeta > low && zeta < high) {
+            zeta = 0.5 * (low + high);
+        }
+        let [_, slope, bending] = gf.log_real(zeta);
+        let half_sinh = (0.5 * zeta).sinh();
+        curvature = bending + 0.25 / (half_sinh * half_sinh);
+        let gradient = slope - (g - 1.0) + 1.0 / (-zeta).exp_m1();
+        if gradient < 0.0 {
+            low = zeta;
+        } else {
+            high = zeta;
+        }
+        let step = -gradient / curvature;
+        if step.abs() * curvature.sqrt() < SADDLE_CLOSENESS || high - low < 1e-14 * zeta.abs() {
+            break;
+        }
+        zeta += step;
+    }
+    let (reference, pole) = (gf.log_real(zeta)[0] - (g - 1.0) * zeta, zeta.exp_m1());
+    Saddle { zeta, curvature, pole, reference, height: reference - pole.abs().ln() }
+}
+
+/// The integral over the contour through `saddle`.
+fn contour_integral(gf: &impl GeneratingFunction, g: f64, saddle: &Saddle) -> Result<f64, InversionError> {
+    let bend = 0.25 / (gf.singularity() - saddle.zeta);
+    let mut parabola = Contour { gf, g, saddle, bend, evaluations: 0 };
+    match parabola.settle() {
+        Ok(integral) => Ok(integral),
+        Err(Unsettled::TooManyPoints) => Err(InversionError),
+        Err(Unsettled::LeavesStrip) => {
+            let mut circle = Contour { bend: 0.0, evaluations: 0, ..parabola };
+            circle.settle().map_err(|_| InversionError)
+        }
+    }
+}
+
+/// Half a contour: ζ(x) = ζ₀ + ix + bend·x², x from 0 to π; a circle when `bend` is 0.
+struct Contour<'a, G> {
+    gf: &'a G,
+    g: f64,
+    saddle: &'a Saddle,
+    bend: f64,
+    evaluations: usize,
+}
+
+enum Unsettled {
+    /// The integrand is still alive where the parabola would leave the strip |Im ζ| ≤ π.
+    LeavesStrip,
+    TooManyPoints,
+}
+
+impl<G: GeneratingFunction> Contour<'_, G> {
+    /// Halves the step until two trapezoid sums agree.
+    fn settle(&mut self) -> Result<f64, Unsettled> {
+        let width = 1.0 / self.saddle.curvature.sqrt();
+        let mut panels = (PI / (0.4 * width)).ceil().max(16.0);
+        let mut sum = self.sweep(panels, 0.0, 1.0)?;
+        let mut integral = sum / panels;
+        loop {
+            sum += self.sweep(2.0 * panels, 1.0, 2.0)?;
+            panels *= 2.0;
+            let finer = sum / panels;
+            if (finer - integral).abs() <= CONTOUR_AGREEMENT * finer.abs() {
+                return Ok(finer * self.saddle.height.exp());
+            }
+            integral = finer;
+        }
+    }
+
+    /// Sums the points x = first·h, (first + stride)·h, … up to π = panels·h, or until the integrand has died.
+    fn sweep(&mut self, panels: f64, first: f64, stride: f64) -> Result<f64, Unsettled> {
+        // On a parabola the modulus only falls; on a circle wait for a run of quiet points.
+        let enough_quiet = if self.bend > 0.0 { 2 } else { 8 };
+        let (mut sum, mut quiet, mut index) = (0.0, 0, first);
+        while index <= panels {
+            if self.evaluations >= CONTOUR_MAX_POINTS {
+                return Err(Unsettled::TooManyPoints);
+            }
+            let term = self.term(index * PI / panels);
+            sum += if index == 0.0 || index == panels { 0.5 * term.re } else { term.re };
+            let alive = term.norm_sqr() > CONTOUR_NEGLIGIBLE * CONTOUR_NEGLIGIBLE;
+            quiet = if alive { 0 } else { quiet + 1 };
+            if quiet >= enough_quiet {
+                return Ok(sum);
+            }
+            index += stride;
+        }
+        if self.bend > 0.0 { Err(Unsettled::LeavesStrip) } else { Ok(sum) }
+    }
+
+    /// The integrand at x, relative to its value at the saddle.
+    fn term(&mut self, x: f64) -> Complex64 {
+        self.evaluations += 1;
+        let zeta = Complex64::new(self.saddle.zeta + self.bend * x * x, x);
+        let exponent = self.gf.log_at(zeta) - (self.g - 1.0) * zeta - self.saddle.reference;
+        let tilt = Complex64::new(1.0, -2.0 * self.bend * x);
+        exponent.exp() * tilt * (self.saddle.pole / complex_exp_m1(zeta))
+    }
+}

@@ -1,0 +1,5 @@
+//! Tests of the numerical core; they need no server feature.
+
+mod law;
+mod reference;
+mod stationary;
