@@ -32,6 +32,7 @@ use crate::config::{HttpConfig, LimitsConfig};
 use crate::service::Service;
 
 pub use error::ApiError;
+pub use examples::forecast_request as example_request;
 pub use extract::read_json;
 pub use problem::Problem;
 pub use requests::{

@@ -1,5 +1,6 @@
 //! The program: its commands, and how the parts are put together for each.
 
+mod demo;
 mod offline;
 mod serve;
 
@@ -11,7 +12,7 @@ use std::process::ExitCode;
 use clap::{Parser, Subcommand, ValueEnum};
 use tokio::runtime::Runtime;
 
-use crate::config::Config;
+use crate::config::{Config, LogConfig};
 use crate::service::Service;
 use crate::{api, telemetry};
 
@@ -32,6 +33,12 @@ pub struct CommandLine {
 enum Command {
     /// Serve the HTTP API until stopped
     Serve,
+    /// Grow an invented network, forecast it through the API, show what came, go on serving
+    Demo {
+        /// Use a free port and a database that is thrown away, and stop after printing
+        #[arg(long)]
+        once: bool,
+    },
     /// Answer one forecast here and now: no server, no database
     Forecast {
         /// Request body, as for POST /v1/forecasts; - reads the standard input
@@ -99,6 +106,12 @@ fn dispatch(line: CommandLine) -> Result<(), Stop> {
         Command::Migrate => runtime()?
             .block_on(Service::migrate(&config.database))
             .map_err(|error| Stop::failed("migration", error)),
+        Command::Demo { once } => {
+            // The demo's own output is what counts; requests are not logged into it.
+            let quiet = LogConfig { filter: "warn".to_owned(), ..config.log.clone() };
+            telemetry::start_logs(&quiet).map_err(|error| Stop::failed("log.filter", error))?;
+            runtime()?.block_on(demo::show(config, once))
+        }
         Command::Serve => {
             telemetry::start_logs(&config.log).map_err(|error| Stop::failed("log.filter", error))?;
             serve::until_stopped(runtime()?, config)

@@ -1,5 +1,6 @@
 //! Logs and metrics of the process.
 
+use std::io::IsTerminal;
 use std::sync::OnceLock;
 use std::time::Duration;
 
@@ -23,7 +24,7 @@ static METRICS: OnceLock<Result<PrometheusHandle, String>> = OnceLock::new();
 /// When the filter cannot be read.
 pub fn start_logs(config: &LogConfig) -> Result<(), ParseError> {
     let filter = EnvFilter::builder().parse(&config.filter)?;
-    let builder = tracing_subscriber::fmt().with_env_filter(filter).with_writer(std::io::stderr);
+    let builder = tracing_subscriber::fmt().with_env_filter(filter).with_writer(std::io::stderr).with_ansi(std::io::stderr().is_terminal());
     let _already_started = match config.format {
         LogFormat::Text => builder.try_init(),
         LogFormat::Json => builder.json().flatten_event(true).try_init(),
@@ -52,7 +53,7 @@ fn install() -> Result<PrometheusHandle, BuildError> {
     let handle = PrometheusBuilder::new().set_buckets(&SECONDS_BUCKETS)?.install_recorder()?;
     describe_counter!("tailcast_http_requests_total", "Requests answered, by method, route and status");
     describe_histogram!("tailcast_http_request_seconds", Unit::Seconds, "Time from request to response");
-    describe_histogram!("tailcast_compute_seconds", Unit::Seconds, "Time on a worker, by kind of run");
+    describe_histogram!("tailcast_compute_seconds", Unit::Seconds, "Time on a worker");
     describe_histogram!("tailcast_compute_wait_seconds", Unit::Seconds, "Time spent waiting for a worker");
     describe_gauge!("tailcast_compute_busy", "Computations that run or wait");
     describe_gauge!("tailcast_build_info", "1, with the version as a label");

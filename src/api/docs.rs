@@ -58,7 +58,7 @@ pub fn pages() -> Router<AppState> {
     Router::new()
         .route("/", get(index))
         .merge(SwaggerUi::new("/docs").config(viewer))
-        .layer(middleware::from_fn(with_page_policy))
+        .route_layer(middleware::from_fn(with_page_policy))
 }
 
 /// The document's text, made once.

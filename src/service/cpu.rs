@@ -5,6 +5,7 @@ use std::sync::atomic::{AtomicBool, Ordering};
 use std::thread::available_parallelism;
 use std::time::{Duration, Instant};
 
+use metrics::{gauge, histogram};
 use tokio::sync::Semaphore;
 use tokio::task::spawn_blocking;
 use tokio::time::timeout_at;
@@ -25,6 +26,22 @@ pub struct CpuPool {
 
 /// Raises its flag when the caller stops waiting.
 struct CancelOnDrop(Arc<AtomicBool>);
+
+/// Counts as busy while it lives.
+struct Gauged;
+
+impl Gauged {
+    fn new() -> Self {
+        gauge!("tailcast_compute_busy").increment(1.0);
+        Self
+    }
+}
+
+impl Drop for Gauged {
+    fn drop(&mut self) {
+        gauge!("tailcast_compute_busy").decrement(1.0);
+    }
+}
 
 impl Drop for CancelOnDrop {
     fn drop(&mut self) {
@@ -57,23 +74,28 @@ impl CpuPool {
     ) -> Result<T, ServiceError> {
         let too_slow = || ServiceError::TooSlow { budget: self.budget };
         let place = self.places.clone().try_acquire_owned().map_err(|_| ServiceError::Busy)?;
-        let deadline = Instant::now() + self.budget;
+        let (asked, deadline) = (Instant::now(), Instant::now() + self.budget);
+        let busy = Gauged::new();
         let worker = match timeout_at(deadline.into(), self.workers.clone().acquire_owned()).await {
             Ok(Ok(worker)) => worker,
             Ok(Err(_)) => return Err(ServiceError::Busy),
             Err(_) => return Err(too_slow()),
         };
+        histogram!("tailcast_compute_wait_seconds").record(asked.elapsed());
         let given_up = Arc::new(AtomicBool::new(false));
         let guard = CancelOnDrop(given_up.clone());
         let stopping = self.stopping.clone();
         let span = Span::current();
         let task = spawn_blocking(move || {
             // Held until the work has really stopped, so that abandoned work still counts against the cores.
-            let _held = (place, worker);
+            let _held = (place, worker, busy);
+            let begun = Instant::now();
             let cancelled = || {
                 given_up.load(Ordering::Relaxed) || stopping.load(Ordering::Relaxed) || Instant::now() >= deadline
             };
-            span.in_scope(|| work(&cancelled))
+            let outcome = span.in_scope(|| work(&cancelled));
+            histogram!("tailcast_compute_seconds").record(begun.elapsed());
+            outcome
         });
         let outcome = timeout_at(deadline.into(), task).await;
         drop(guard);

@@ -7,6 +7,9 @@ use super::{At, Faults, advice_for, kind_of, quoted};
 /// Whole numbers written with a fraction or exponent are taken up to here, where they are still exact.
 const MAX_EXACT_FLOAT: f64 = 9_007_199_254_740_992.0; // 2^53
 
+/// The first whole number beyond 64 bits.
+const BEYOND_U64: f64 = 18_446_744_073_709_551_616.0; // 2^64
+
 /// A finite real number.
 pub fn real(raw: &RawValue, at: At<'_>, faults: &mut Faults) -> Option<f64> {
     let outcome = match raw.get().parse::<f64>() {
@@ -40,6 +43,8 @@ fn read_whole(raw: &RawValue) -> Result<u64, String> {
     whole_from_float(value).ok_or_else(|| {
         let why = if value < 0.0 {
             "is negative; counts, degrees and thresholds start at 0"
+        } else if value >= BEYOND_U64 {
+            "is above the largest allowed, 18446744073709551615 (2^64 - 1)"
         } else if value > MAX_EXACT_FLOAT {
             "is too large to be told exactly in this form; write it with digits alone"
         } else {
@@ -80,9 +85,9 @@ mod tests {
             ("1.5", "not a whole number"),
             ("-1", "negative"),
             ("-1e-9", "negative"),
-            ("1e400", "too large"),
+            ("1e400", "2^64 - 1"),
             ("18446744073709551616", "2^64 - 1"),
-            ("1.8446744073709551616e19", "digits alone"),
+            ("1e17", "digits alone"),
             ("\"NaN\"", "not a string"),
             ("\"5\"", "without quotes"),
             ("null", "leave the field out"),
