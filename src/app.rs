@@ -103,9 +103,9 @@ fn dispatch(line: CommandLine) -> Result<(), Stop> {
     match line.command {
         Command::Forecast { file, format } => offline::forecast(&config, &file, format),
         Command::Openapi => Ok(()),
-        Command::Migrate => runtime()?
-            .block_on(Service::migrate(&config.database))
-            .map_err(|error| Stop::failed("migration", error)),
+        Command::Migrate => {
+            runtime()?.block_on(Service::migrate(&config.database)).map_err(|error| Stop::failed("migration", error))
+        }
         Command::Demo { once } => {
             // The demo's own output is what counts; requests are not logged into it.
             let quiet = LogConfig { filter: "warn".to_owned(), ..config.log.clone() };

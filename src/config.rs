@@ -146,7 +146,10 @@ impl Config {
     /// # Errors
     /// An unreadable file, an unknown key or variable, a value of the wrong type or range.
     pub fn load(file: Option<&Path>) -> Result<Self, SettingsError> {
-        Self::from_sources(file, std::env::vars_os().filter_map(|(k, v)| Some((k.into_string().ok()?, v.into_string().ok()?))))
+        Self::from_sources(
+            file,
+            std::env::vars_os().filter_map(|(k, v)| Some((k.into_string().ok()?, v.into_string().ok()?))),
+        )
     }
 
     /// Reads the settings from a file and the given variables.

@@ -24,7 +24,10 @@ static METRICS: OnceLock<Result<PrometheusHandle, String>> = OnceLock::new();
 /// When the filter cannot be read.
 pub fn start_logs(config: &LogConfig) -> Result<(), ParseError> {
     let filter = EnvFilter::builder().parse(&config.filter)?;
-    let builder = tracing_subscriber::fmt().with_env_filter(filter).with_writer(std::io::stderr).with_ansi(std::io::stderr().is_terminal());
+    let builder = tracing_subscriber::fmt()
+        .with_env_filter(filter)
+        .with_writer(std::io::stderr)
+        .with_ansi(std::io::stderr().is_terminal());
     let _already_started = match config.format {
         LogFormat::Text => builder.try_init(),
         LogFormat::Json => builder.json().flatten_event(true).try_init(),

@@ -70,7 +70,8 @@ pub struct DocumentText(pub Arc<str>);
     (status = 200, description = "OpenAPI 3.1", body = Object, content_type = "application/json"),
 ))]
 async fn openapi_json(Extension(DocumentText(text)): Extension<DocumentText>) -> Response {
-    ([(header::CONTENT_TYPE, "application/json"), (header::CACHE_CONTROL, "no-cache")], text.to_string()).into_response()
+    ([(header::CONTENT_TYPE, "application/json"), (header::CACHE_CONTROL, "no-cache")], text.to_string())
+        .into_response()
 }
 
 async fn index() -> Html<&'static str> {

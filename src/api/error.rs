@@ -149,7 +149,9 @@ fn service_problem(error: ServiceError) -> Problem {
         }
         error @ ServiceError::StoreBusy(_) => {
             let detail = "The database is busy; try again shortly.";
-            Problem::new(S::SERVICE_UNAVAILABLE, "store_busy", detail).retry_after(BUSY_RETRY).because(error.to_string())
+            Problem::new(S::SERVICE_UNAVAILABLE, "store_busy", detail)
+                .retry_after(BUSY_RETRY)
+                .because(error.to_string())
         }
         error @ ServiceError::Store(_) => broken(error.to_string()),
         ServiceError::Broken(cause) => broken(cause),

@@ -80,7 +80,13 @@ fn request_id(headers: &HeaderMap) -> String {
 
 fn request_span(id: &str, method: &'static str, path: &str, headers: &HeaderMap) -> Span {
     let span = info_span!(
-        "request", id, method, path, status = field::Empty, trace_id = field::Empty, parent_id = field::Empty
+        "request",
+        id,
+        method,
+        path,
+        status = field::Empty,
+        trace_id = field::Empty,
+        parent_id = field::Empty
     );
     let traceparent = headers.get("traceparent").and_then(|value| value.to_str().ok());
     if let Some((trace_id, parent_id)) = traceparent.and_then(parse_traceparent) {

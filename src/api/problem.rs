@@ -86,7 +86,9 @@ impl Problem {
     /// The problem that stands for a bare status, answered by a layer that knows no problem documents.
     pub fn of_status(status: StatusCode) -> Self {
         let (code, detail) = match status {
-            StatusCode::NOT_FOUND => ("no_such_route", "Nothing is served under this path; /openapi.json lists what is."),
+            StatusCode::NOT_FOUND => {
+                ("no_such_route", "Nothing is served under this path; /openapi.json lists what is.")
+            }
             StatusCode::METHOD_NOT_ALLOWED => {
                 ("method_not_allowed", "This path does not take this method; Allow lists those it takes.")
             }

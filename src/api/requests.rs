@@ -13,12 +13,8 @@ pub use schema::{
 
 use super::decode::{At, Faults, Object, object, real, text, whole};
 use crate::config::LimitsConfig;
-use crate::model::{
-    ArrivalPlan, AttachmentMix, DegreeKind, EntryDegrees, GrowthParameters, ParameterFault,
-};
-use crate::service::{
-    FitInputs, FitRequest, ForecastInputs, Label, MAX_SEED, Model, ModelChoice, OriginRequest,
-};
+use crate::model::{ArrivalPlan, AttachmentMix, DegreeKind, EntryDegrees, GrowthParameters, ParameterFault};
+use crate::service::{FitInputs, FitRequest, ForecastInputs, Label, MAX_SEED, Model, ModelChoice, OriginRequest};
 
 /// Fields of a fit's body.
 pub const FIT_FIELDS: [&str; 8] =

@@ -131,7 +131,8 @@ fn is_unmodified(asked: &HeaderMap, entity_tag: &str, modified: Timestamp) -> bo
         return tags.any(|value| names_any(value, &[entity_tag.to_owned()], true));
     }
     let since = asked.get(header::IF_MODIFIED_SINCE).and_then(|value| value.to_str().ok());
-    let since = since.and_then(|text| httpdate::parse_http_date(text).ok()).and_then(|time| Timestamp::try_from(time).ok());
+    let since =
+        since.and_then(|text| httpdate::parse_http_date(text).ok()).and_then(|time| Timestamp::try_from(time).ok());
     since.is_some_and(|since| modified.as_second() <= since.as_second())
 }
 

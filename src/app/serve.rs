@@ -60,9 +60,8 @@ pub async fn start(config: Config) -> Result<Running, Stop> {
     let listener = TcpListener::bind(config.bind).await.map_err(|error| address_fault(config.bind, &error))?;
     let address = listener.local_addr().map_err(|error| Stop::failed("the listening address", error))?;
     let metrics = telemetry::start_metrics().map_err(|error| Stop::failed("metrics", error))?;
-    let service = Service::open(&config.database, &config.compute)
-        .await
-        .map_err(|error| Stop::failed("the database", error))?;
+    let service =
+        Service::open(&config.database, &config.compute).await.map_err(|error| Stop::failed("the database", error))?;
     let upkeep = tokio::spawn(telemetry::keep_metrics_small(metrics.clone()));
     let grace = config.http.shutdown_grace();
     let state = AppState { service: service.clone(), http: Arc::new(config.http), limits: config.limits, metrics };
@@ -108,7 +107,9 @@ pub async fn stop_signal() -> std::io::Result<()> {
 
 fn address_fault(address: SocketAddr, error: &std::io::Error) -> Stop {
     let advice = match error.kind() {
-        std::io::ErrorKind::AddrInUse => "something else listens there already; set bind or TAILCAST_BIND to another port",
+        std::io::ErrorKind::AddrInUse => {
+            "something else listens there already; set bind or TAILCAST_BIND to another port"
+        }
         std::io::ErrorKind::PermissionDenied => "this user may not listen there; ports from 1024 up are free to all",
         _ => "set bind or TAILCAST_BIND to an address of this machine",
     };

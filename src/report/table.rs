@@ -34,12 +34,9 @@ pub fn mix_in_words(fit: &FitReport) -> String {
     let share = fit.preferential_share;
     let percent = |value: f64| format!("{:.1} %", value * 100.0);
     let interval = match (share.low, share.high, share.level) {
-        (Some(low), Some(high), Some(level)) => format!(
-            " ({:.0} % interval {} to {})",
-            level.0 * 100.0,
-            percent(low.0),
-            percent(high.0)
-        ),
+        (Some(low), Some(high), Some(level)) => {
+            format!(" ({:.0} % interval {} to {})", level.0 * 100.0, percent(low.0), percent(high.0))
+        }
         _ => String::new(),
     };
     let mix = match fit.model {
@@ -114,5 +111,8 @@ pub fn align(cells: &[Vec<String>]) -> Vec<String> {
         let width = widths.get(i).copied().unwrap_or(0);
         if i == 0 { format!("{cell:<width$}") } else { format!("{cell:>width$}") }
     };
-    cells.iter().map(|row| row.iter().enumerate().map(pad).collect::<Vec<_>>().join("  ").trim_end().to_owned()).collect()
+    cells
+        .iter()
+        .map(|row| row.iter().enumerate().map(pad).collect::<Vec<_>>().join("  ").trim_end().to_owned())
+        .collect()
 }

@@ -5,7 +5,6 @@ use std::time::Duration;
 use serde::Serialize;
 use serde::de::DeserializeOwned;
 
-use super::{ENGINE, ServiceError};
 use super::answers::{
     AttachmentModel, CandidateAnswer, CountAnswer, DateAnswer, EstimateAnswer, EvidenceKind, FitAnswer, FitReport,
     ForecastAnswer, GoodnessAnswer, IntervalAnswer, TailAnswer, TailPointAnswer, WarningAnswer,
@@ -13,6 +12,7 @@ use super::answers::{
 use super::error::Unanswered;
 use super::inputs::{FitInputs, ForecastInputs, Label, sha256_hex};
 use super::numbers::{Count, Real, date_text};
+use super::{ENGINE, ServiceError};
 use crate::evaluate;
 use crate::fit::{Candidate, Fit, Goodness, Model, Rung, TailPoint};
 use crate::forecast::{CountForecast, DateForecast, TailForecast};

@@ -90,9 +90,8 @@ impl CpuPool {
             // Held until the work has really stopped, so that abandoned work still counts against the cores.
             let _held = (place, worker, busy);
             let begun = Instant::now();
-            let cancelled = || {
-                given_up.load(Ordering::Relaxed) || stopping.load(Ordering::Relaxed) || Instant::now() >= deadline
-            };
+            let cancelled =
+                || given_up.load(Ordering::Relaxed) || stopping.load(Ordering::Relaxed) || Instant::now() >= deadline;
             let outcome = span.in_scope(|| work(&cancelled));
             histogram!("tailcast_compute_seconds").record(begun.elapsed());
             outcome
@@ -135,9 +134,15 @@ mod tests {
     #[tokio::test]
     async fn work_beyond_the_queue_is_turned_away_and_the_rest_run_out_of_budget() {
         let pool = pool(1, 1, 1);
-        let running = tokio::spawn({ let pool = pool.clone(); async move { pool.run(until_cancelled).await } });
+        let running = tokio::spawn({
+            let pool = pool.clone();
+            async move { pool.run(until_cancelled).await }
+        });
         tokio::time::sleep(Duration::from_millis(50)).await;
-        let waiting = tokio::spawn({ let pool = pool.clone(); async move { pool.run(until_cancelled).await } });
+        let waiting = tokio::spawn({
+            let pool = pool.clone();
+            async move { pool.run(until_cancelled).await }
+        });
         tokio::time::sleep(Duration::from_millis(50)).await;
         assert!(matches!(pool.run(until_cancelled).await, Err(ServiceError::Busy)));
         assert!(matches!(running.await.unwrap(), Err(ServiceError::TooSlow { .. }) | Ok(())));

@@ -69,6 +69,9 @@ impl Store {
 
 fn pool(size: u32) -> SqlitePoolOptions {
     // No idle or age limit: a local file's connections do not go stale.
-    SqlitePoolOptions::new().max_connections(size).acquire_timeout(ACQUIRE_TIMEOUT).idle_timeout(None).max_lifetime(None)
+    SqlitePoolOptions::new()
+        .max_connections(size)
+        .acquire_timeout(ACQUIRE_TIMEOUT)
+        .idle_timeout(None)
+        .max_lifetime(None)
 }
-

@@ -35,7 +35,9 @@ pub fn whole(raw: &RawValue, at: At<'_>, most: u64, faults: &mut Faults) -> Opti
 fn read_whole(raw: &RawValue) -> Result<u64, String> {
     let text = raw.get();
     if text.bytes().all(|byte| byte.is_ascii_digit()) {
-        return text.parse().map_err(|_| format!("{} is above the largest allowed, {} (2^64 - 1)", quoted(raw), u64::MAX));
+        return text
+            .parse()
+            .map_err(|_| format!("{} is above the largest allowed, {} (2^64 - 1)", quoted(raw), u64::MAX));
     }
     let Ok(value) = text.parse::<f64>() else {
         return Err(format!("a whole number is wanted here, not {}{}", kind_of(raw), advice_for(raw)));

@@ -23,9 +23,8 @@ pub fn instant(raw: &RawValue, at: At<'_>, faults: &mut Faults) -> Option<Timest
         Ok(time) => Some(time),
         Err(error) => {
             let shown: String = text.chars().take(60).collect();
-            let detail = format!(
-                "{shown:?} is no time: {error}; write a date as 2026-12-01, or a time as 2026-12-01T08:30:00Z"
-            );
+            let detail =
+                format!("{shown:?} is no time: {error}; write a date as 2026-12-01, or a time as 2026-12-01T08:30:00Z");
             faults.add(&at, detail);
             None
         }
@@ -39,7 +38,8 @@ pub fn every(raw: &RawValue, at: At<'_>, faults: &mut Faults) -> Option<Span> {
     let span = text.starts_with('P').then(|| text.parse::<Span>().ok()).flatten().filter(|span| span.is_positive());
     if span.is_none() {
         let shown: String = text.chars().take(60).collect();
-        let detail = format!("{shown:?} is no ISO 8601 duration longer than nothing; write P1M for a month, P30D for 30 days");
+        let detail =
+            format!("{shown:?} is no ISO 8601 duration longer than nothing; write P1M for a month, P30D for 30 days");
         faults.add(&at, detail);
     }
     span

@@ -44,7 +44,8 @@ impl FromRequest<AppState> for JsonBody {
         if !is_json(request.headers()) {
             return Err(ApiError::UnsupportedMediaType);
         }
-        let announced = request.headers().get(header::CONTENT_LENGTH).and_then(|value| value.to_str().ok()?.parse().ok());
+        let announced =
+            request.headers().get(header::CONTENT_LENGTH).and_then(|value| value.to_str().ok()?.parse().ok());
         if announced.is_some_and(|length: u64| length > limit as u64) {
             return Err(ApiError::TooLarge { limit });
         }

@@ -74,7 +74,11 @@ fn accepted(headers: &HeaderMap) -> Option<ResultFormat> {
     }
     let quality = |format: ResultFormat| {
         // The most specific range that covers the form decides.
-        ranges.iter().filter(|range| range.covers(format)).max_by_key(|range| range.specificity()).map_or(0.0, |r| r.quality)
+        ranges
+            .iter()
+            .filter(|range| range.covers(format))
+            .max_by_key(|range| range.specificity())
+            .map_or(0.0, |r| r.quality)
     };
     let mut best: Option<(f32, ResultFormat)> = None;
     for format in ResultFormat::ALL {

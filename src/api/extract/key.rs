@@ -29,7 +29,8 @@ impl FromRequestParts<AppState> for IdempotencyKey {
         let mut values = parts.headers.get_all(NAME).iter();
         let (first, second) = (values.next(), values.next());
         let Some(value) = first else { return Ok(Self(None)) };
-        let usable = |text: &&str| (1..=MAX_CHARS).contains(&text.len()) && text.bytes().all(|byte| byte.is_ascii_graphic());
+        let usable =
+            |text: &&str| (1..=MAX_CHARS).contains(&text.len()) && text.bytes().all(|byte| byte.is_ascii_graphic());
         match value.to_str().ok().filter(usable) {
             Some(key) if second.is_none() => Ok(Self(Some(key.to_owned()))),
             _ => {

@@ -36,12 +36,7 @@ pub fn arrivals(body: &Object<'_>, latest: Option<Timestamp>, faults: &mut Fault
     plan.ok()
 }
 
-fn segments(
-    raw: &RawValue,
-    at: At<'_>,
-    latest: Option<Timestamp>,
-    faults: &mut Faults,
-) -> Option<Vec<ArrivalSegment>> {
+fn segments(raw: &RawValue, at: At<'_>, latest: Option<Timestamp>, faults: &mut Faults) -> Option<Vec<ArrivalSegment>> {
     let mut segments = Vec::new();
     let length = list(raw, at, faults, |index, item, faults| {
         let at = at.item(index);
@@ -184,14 +179,22 @@ mod tests {
 
     #[test]
     fn steps_follow_the_calendar_and_include_the_end() {
-        let dates = steps("2026-01-31T00:00:00Z".parse().unwrap(), "2026-04-30T00:00:00Z".parse().unwrap(), "P1M".parse().unwrap());
+        let dates = steps(
+            "2026-01-31T00:00:00Z".parse().unwrap(),
+            "2026-04-30T00:00:00Z".parse().unwrap(),
+            "P1M".parse().unwrap(),
+        );
         let dates: Vec<String> = dates.iter().map(|date| date.to_string()[..10].to_owned()).collect();
         assert_eq!(dates, ["2026-02-28", "2026-03-31", "2026-04-30"]);
     }
 
     #[test]
     fn a_tiny_step_does_not_run_for_ever() {
-        let dates = steps("2026-01-01T00:00:00Z".parse().unwrap(), "2200-01-01T00:00:00Z".parse().unwrap(), "PT1S".parse().unwrap());
+        let dates = steps(
+            "2026-01-01T00:00:00Z".parse().unwrap(),
+            "2200-01-01T00:00:00Z".parse().unwrap(),
+            "PT1S".parse().unwrap(),
+        );
         assert_eq!(dates.len(), 4_001);
     }
 }
