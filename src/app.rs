@@ -1,5 +1,6 @@
 //! The program: its commands, and how the parts are put together for each.
 
+mod check;
 mod demo;
 mod offline;
 mod serve;
@@ -47,6 +48,8 @@ enum Command {
         #[arg(long, value_enum, default_value_t = OutputFormat::Table)]
         format: OutputFormat,
     },
+    /// Ask the service at `bind` whether it is ready; ends with 0 when it is
+    Check,
     /// Print the OpenAPI document
     Openapi,
     /// Bring the database's tables up to date
@@ -103,6 +106,7 @@ fn dispatch(line: CommandLine) -> Result<(), Stop> {
     match line.command {
         Command::Forecast { file, format } => offline::forecast(&config, &file, format),
         Command::Openapi => Ok(()),
+        Command::Check => check::ready(config.bind),
         Command::Migrate => {
             runtime()?.block_on(Service::migrate(&config.database)).map_err(|error| Stop::failed("migration", error))
         }

@@ -7,6 +7,7 @@ use std::net::SocketAddr;
 
 use tokio::task::spawn_blocking;
 
+use super::check::local_client;
 use super::serve::{Running, start, stop_signal};
 use super::{Stop, print};
 use crate::api;
@@ -48,9 +49,7 @@ async fn tell(address: SocketAddr, once: bool) -> Result<(), Stop> {
 /// Asks for the forecast as any client would.
 fn forecast(address: SocketAddr, story: &Story) -> Result<ForecastRun, Stop> {
     let doing = "the demo's own call";
-    let settings = ureq::Agent::config_builder().proxy(None).http_status_as_error(false).build();
-    let agent = ureq::Agent::new_with_config(settings);
-    let mut response = agent
+    let mut response = local_client(None)
         .post(format!("http://{address}/v1/forecasts"))
         .send_json(&story.request)
         .map_err(|error| Stop::failed(doing, error))?;

@@ -5,7 +5,7 @@ use std::net::TcpListener;
 use serde_json::{Value, json};
 
 use crate::harness::{changed, forecast_body};
-use crate::process::{command, run};
+use crate::process::{command, run, serve};
 
 fn folder() -> tempfile::TempDir {
     tempfile::tempdir().unwrap()
@@ -121,6 +121,23 @@ fn a_taken_port_is_said_and_no_database_is_left() {
         assert!(message.contains("cannot listen on") && message.contains("TAILCAST_BIND"), "{message}");
     }
     assert!(!folder.path().join("tailcast.db").exists());
+}
+
+#[test]
+fn check_tells_whether_a_service_is_ready() {
+    let folder = folder();
+    let check = |bind: String| {
+        let mut check = command(folder.path());
+        check.arg("check").env("TAILCAST_BIND", bind);
+        run(check, "")
+    };
+    let served = serve(folder.path());
+    assert!(check(served.address.to_string()).status.success());
+    let address = served.address;
+    served.kill();
+    let output = check(address.to_string());
+    assert_eq!(output.status.code(), Some(1));
+    assert!(text(&output.stderr).contains("/readyz"), "{}", text(&output.stderr));
 }
 
 #[test]
