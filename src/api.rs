@@ -60,12 +60,12 @@ pub fn router(state: AppState) -> Router {
     let work = work.layer(middleware::from_fn_with_state(places, admit));
     let (around, _) = around_routes().split_for_parts();
     let document = docs::DocumentText(openapi_text().into());
-    work.merge(around)
-        .merge(docs::pages())
-        .layer(Extension(document))
-        .layer(CatchPanicLayer::new())
-        .layer(middleware::from_fn(observe::observe))
-        .with_state(state)
+    observed(work.merge(around).merge(docs::pages()).layer(Extension(document))).with_state(state)
+}
+
+/// Routes with the outermost layers: whatever happens inside, a response leaves, and an error leaves as a problem.
+fn observed<S: Clone + Send + Sync + 'static>(routes: Router<S>) -> Router<S> {
+    routes.layer(CatchPanicLayer::new()).layer(middleware::from_fn(observe::observe))
 }
 
 /// The OpenAPI document; needs no database and no configuration.
@@ -94,5 +94,31 @@ async fn admit(State(places): State<Arc<Semaphore>>, request: Request, next: Nex
     match places.try_acquire() {
         Ok(_place) => next.run(request).await,
         Err(_) => ApiError::Full.into_response(),
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use axum::routing::get;
+    use tokio::net::TcpListener;
+
+    use super::*;
+
+    async fn panics() -> &'static str {
+        std::panic::panic_any("a secret")
+    }
+
+    #[tokio::test]
+    async fn a_panic_leaves_as_a_problem_that_gives_nothing_away() {
+        let routes = Router::new().route("/", get(panics));
+        let listener = TcpListener::bind("127.0.0.1:0").await.unwrap();
+        let address = listener.local_addr().unwrap();
+        tokio::spawn(async move { axum::serve(listener, observed::<()>(routes)).await });
+        let client = reqwest::Client::builder().no_proxy().build().unwrap();
+        let response = client.get(format!("http://{address}/")).send().await.unwrap();
+        assert_eq!(response.status().as_u16(), 500);
+        assert_eq!(response.headers()["content-type"], "application/problem+json");
+        let text = response.text().await.unwrap();
+        assert!(text.contains("\"code\":\"internal\"") && !text.contains("secret"), "{text}");
     }
 }

@@ -24,3 +24,20 @@ pub fn fit_request() -> Value {
         "label": "Heronsgate followers"
     })
 }
+
+/// A problem with two faults.
+pub fn problem() -> Value {
+    json!({
+        "type": "about:blank",
+        "title": "Bad Request",
+        "status": 400,
+        "code": "invalid_request",
+        "detail": "The request was understood but parts of it are wrong; errors lists each with its place.",
+        "instance": "/v1/forecasts",
+        "request_id": "01a231cd-6fbd-74cb-ab23-3d82735b9d3d",
+        "errors": [
+            {"pointer": "/snapshots/0/degree_counts/3/1", "detail": "1.5 is not a whole number"},
+            {"pointer": "/thresholdz", "detail": "there is no field \"thresholdz\"; did you mean \"thresholds\"?"}
+        ]
+    })
+}

@@ -13,6 +13,7 @@ use super::decode::{Faults, Place};
 
 /// A problem document: what was wrong, where, and what to do.
 #[derive(Debug, Clone, PartialEq, Serialize, ToSchema)]
+#[schema(example = super::examples::problem)]
 pub struct Problem {
     /// Always about:blank: code tells problems apart.
     #[serde(rename = "type")]

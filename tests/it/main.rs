@@ -2,6 +2,7 @@
 
 #![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic)]
 
+mod any_json;
 mod architecture;
 mod bad_input;
 mod command_line;
