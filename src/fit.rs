@@ -1,9 +1,18 @@
 //! Infers the attachment mix from degree counts; the answer says which rung of the evidence ladder it stands on.
 
+mod diagnostics;
+mod entry;
+mod infer;
+mod one_snapshot;
+mod profile;
+mod score_variance;
 mod stationary;
+mod successive;
 
+pub use infer::fit;
 pub use stationary::StationaryLaw;
 
+use crate::growth::GrowthError;
 use crate::model::{AttachmentMix, EntryDegrees, Estimate, Warning};
 
 /// A candidate attachment kernel.
@@ -47,6 +56,10 @@ pub struct FitRequest {
     pub fixed_mix: Option<AttachmentMix>,
     /// ℓ to take as given instead of reading it from the data.
     pub links_per_arrival: Option<f64>,
+    /// δ, departure hazard of a node, 1/day, as given by the caller.
+    pub departures_per_node_day: f64,
+    /// w, loss hazard of a link end, 1/day, as given by the caller.
+    pub link_losses_per_link_day: f64,
     /// Seed of the goodness-of-fit bootstrap.
     pub seed: u64,
 }
@@ -60,7 +73,7 @@ pub struct Candidate {
     pub preferential_share: f64,
     /// Log-likelihood at the fit (composite for successive snapshots).
     pub log_likelihood: f64,
-    /// Akaike's criterion, lower is better (composite form for successive snapshots).
+    /// Akaike's criterion, lower is better, on the likelihood scaled by how its score really scatters (quasi-AIC).
     pub aic: f64,
     /// AIC weight among the candidates, adding up to one.
     pub weight: f64,
@@ -71,12 +84,18 @@ pub struct Candidate {
 pub struct Goodness {
     /// Largest distance between observed and fitted share of nodes with at least k links (Kolmogorov–Smirnov).
     pub distance: f64,
-    /// Share of seeded bootstrap samples of the fitted law that lie at least as far from it.
-    pub p_value: f64,
+    /// Share of seeded bootstrap samples of the fitted law that lie at least as far from it; one snapshot only.
+    pub p_value: Option<f64>,
     /// Bootstrap samples drawn.
     pub replicates: u32,
-    /// Largest |ln(observed/fitted)| over the tail points with at least 10 nodes observed.
+    /// ln(observed/fitted) of the tail point where it is largest in size, among those with at least 10 nodes observed.
     pub worst_log_ratio: f64,
+    /// Mean squared misfit of the crossing flows over their variance, 1 when only chance is at work; successive snapshots
+    /// only.
+    pub dispersion: Option<f64>,
+    /// Typical relative error of the fitted flows, chance included (1.4826 times the median of |observed − fitted|/fitted);
+    /// successive snapshots only.
+    pub flow_error: Option<f64>,
 }
 
 /// Observed and fitted tail size at one degree.
@@ -88,6 +107,15 @@ pub struct TailPoint {
     pub observed: u64,
     /// The same by the fitted law.
     pub fitted: f64,
+}
+
+/// Relative standard deviations of the rates read off the totals; 0 for what was given.
+#[derive(Debug, Clone, Copy, PartialEq, Default)]
+pub struct RateExcursion {
+    /// Of ℓ.
+    pub links_per_arrival: f64,
+    /// Of the arrival rate.
+    pub arrivals: f64,
 }
 
 /// A fitted attachment mix with its diagnostics.
@@ -105,6 +133,8 @@ pub struct Fit {
     pub links_per_arrival: Estimate,
     /// Arrivals a day over the newest period, when there are two snapshots or more.
     pub arrivals_per_day: Option<Estimate>,
+    /// How uncertain ℓ and the arrival rate are.
+    pub rate_excursion: RateExcursion,
     /// Entry degrees given, or read from the data.
     pub entry: EntryDegrees,
     /// Exponent of the degree law's tail, 1 + 1/β; none when p = 0 (the tail is geometric).
@@ -134,4 +164,7 @@ pub enum FitError {
         /// Which iteration, and where it stood.
         detail: String,
     },
+    /// Growth between two snapshots cannot be computed.
+    #[error(transparent)]
+    Growth(#[from] GrowthError),
 }

@@ -1,7 +1,15 @@
 //! Forecasts nodes, links, tail sizes and the largest degree at future dates, with intervals.
 
+mod counts;
+mod horizon;
+mod largest;
+
+pub use counts::CountLaw;
+pub use horizon::{Excursion, Scenario, forecast};
+
 use jiff::Timestamp;
 
+use crate::growth::GrowthError;
 use crate::model::Interval;
 
 /// A forecast count: its expectation, median and central intervals.
@@ -11,6 +19,17 @@ pub struct CountForecast {
     pub now: f64,
     /// Expected value.
     pub expected: f64,
+    /// Median.
+    pub median: f64,
+    /// Central intervals, ascending in level.
+    pub intervals: Vec<Interval>,
+}
+
+/// A forecast degree: its median and central intervals. A power-law tail may leave it without a finite expectation.
+#[derive(Debug, Clone, PartialEq)]
+pub struct DegreeForecast {
+    /// The degree at the last snapshot.
+    pub now: f64,
     /// Median.
     pub median: f64,
     /// Central intervals, ascending in level.
@@ -35,9 +54,8 @@ pub struct DateForecast {
     pub nodes: CountForecast,
     /// Number of link ends K.
     pub links: CountForecast,
-    /// Largest degree of any node; `expected` is the median's neighbour in the mean-field sense: the degree that one
-    /// node is expected to reach or pass.
-    pub largest_degree: CountForecast,
+    /// Largest degree of any node.
+    pub largest_degree: DegreeForecast,
     /// Tail sizes, one a threshold, ascending.
     pub tail: Vec<TailForecast>,
 }
@@ -51,12 +69,9 @@ pub enum ForecastError {
         /// What is impossible and what would make it possible.
         detail: String,
     },
-    /// A numerical method reached its cap before its tolerance.
-    #[error("the forecast did not converge: {detail}")]
-    NotConverged {
-        /// Which method, and where it stood.
-        detail: String,
-    },
+    /// Growth to a date cannot be computed.
+    #[error(transparent)]
+    Growth(#[from] GrowthError),
     /// The caller asked to stop.
     #[error("the forecast was cancelled")]
     Cancelled,

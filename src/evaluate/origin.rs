@@ -1,24 +1,36 @@
 //! One origin: fit the evidence up to a date, then forecast from it.
 
-use crate::fit::{Candidate, Fit, FitError, FitRequest, Goodness, Model, Rung, TailPoint};
-use crate::forecast::{CountForecast, DateForecast, ForecastError, TailForecast};
-use crate::model::{ArrivalPlan, EntryDegrees, Estimate, Evidence, ForecastPlan, Interval, Warning};
+use crate::fit::{Fit, FitError, FitRequest, fit};
+use crate::forecast::{DateForecast, Excursion, ForecastError, Scenario, forecast};
+use crate::model::{ArrivalPlan, AttachmentMix, Evidence, ForecastPlan, GrowthParameters, ParameterFault, Warning};
+
+/// Relative standard deviation of the flow past a threshold that parameters do not account for, while a network has no
+/// record of its own. A stated default: one-period forecasts of the two real networks in `examples/data` missed their
+/// flows by about this much.
+pub const DEFAULT_MODEL_ERROR: f64 = 0.15;
+
+/// What every reader of any forecast must keep in mind.
+pub const CAUTIONS: [&str; 4] = [
+    "A forecast assumes that growth goes on as the fitted mix and the given rates say; a launch, a policy change or a ranking \
+     change breaks it.",
+    "Intervals cover chance, the uncertainty of the estimates and a stated allowance for model error, not events without \
+     precedent in the data.",
+    "Far thresholds and far dates rest on the fewest nodes: plan with the interval, not with its middle.",
+    "Where a capacity failure could harm people, your own engineering practice and its safety margins come before this \
+     forecast.",
+];
 
 /// Everything one forecast needs.
 #[derive(Debug, Clone, PartialEq)]
 pub struct OriginRequest {
     /// What is known of the network.
     pub evidence: Evidence,
-    /// What is asked of the fit.
+    /// What is asked of the fit; its losses hold for the forecast too.
     pub fit: FitRequest,
     /// Arrivals from the last snapshot on; `None`: estimated from the snapshots.
     pub arrivals: Option<ArrivalPlan>,
-    /// ι, link ends landing per present node and day.
+    /// ι, link ends landing per present node and day from the last snapshot on.
     pub links_per_node_day: f64,
-    /// δ, departure hazard of a node, 1/day.
-    pub departures_per_node_day: f64,
-    /// w, loss hazard of a link end, 1/day.
-    pub link_losses_per_link_day: f64,
     /// Thresholds, dates and levels.
     pub plan: ForecastPlan,
 }
@@ -45,17 +57,25 @@ pub enum OriginError {
     /// The forecast failed.
     #[error(transparent)]
     Forecast(#[from] ForecastError),
+    /// No arrival rate is given, and one snapshot cannot show one.
+    #[error(
+        "no arrivals are given, and a single snapshot cannot show them; give arrivals.per_day or a second snapshot"
+    )]
+    ArrivalsRequired,
+    /// A rate is out of range.
+    #[error("{0}")]
+    Rate(ParameterFault),
 }
 
-/// Fits the evidence alone. `interval_level` is the level of the estimates' intervals.
+/// Fits the evidence alone.
 ///
 /// # Errors
 /// When the evidence does not tell the mix.
-pub fn fit_evidence(_evidence: &Evidence, _request: &FitRequest) -> Result<Fit, FitError> {
-    Ok(stub_fit())
+pub fn fit_evidence(evidence: &Evidence, request: &FitRequest) -> Result<Fit, FitError> {
+    fit(evidence, request)
 }
 
-/// Fits the evidence and forecasts from its newest snapshot; `cancelled` is asked between dates.
+/// Fits the evidence and forecasts from its newest snapshot; `cancelled` is asked between thresholds.
 ///
 /// # Errors
 /// When the evidence does not tell the mix, or nothing can be forecast from it.
@@ -63,52 +83,62 @@ pub fn answer(request: &OriginRequest, cancelled: &dyn Fn() -> bool) -> Result<O
     if cancelled() {
         return Err(ForecastError::Cancelled.into());
     }
-    let count = |now: f64| CountForecast {
-        now,
-        expected: now * 1.1,
-        median: now * 1.1,
-        intervals: request.plan.levels().iter().map(|&level| Interval { level, low: now, high: now * 1.2 }).collect(),
+    let estimable = request.evidence.snapshots().len() > 1;
+    if request.arrivals.is_none() && !estimable {
+        return Err(OriginError::ArrivalsRequired);
+    }
+    let fit = fit(&request.evidence, &request.fit)?;
+    let scenario = scenario(request, &fit)?;
+    let forecast = forecast(&request.evidence.latest().counts, &scenario, &request.plan, cancelled)?;
+    let mut warnings = fit.warnings.clone();
+    let reason = if scenario.model_error > DEFAULT_MODEL_ERROR {
+        "as much as the fit itself misses the observed flows by"
+    } else {
+        "a stated default"
     };
-    let counts = &request.evidence.latest().counts;
-    let forecast = request
-        .plan
-        .dates()
-        .iter()
-        .map(|&date| DateForecast {
-            date,
-            nodes: count(counts.nodes() as f64),
-            links: count(counts.link_ends() as f64),
-            largest_degree: count(counts.largest() as f64),
-            tail: request
-                .plan
-                .thresholds()
-                .iter()
-                .map(|&threshold| TailForecast { threshold, size: count(counts.tail_size(threshold) as f64) })
-                .collect(),
-        })
-        .collect();
-    Ok(OriginAnswer { fit: stub_fit(), forecast, warnings: vec![Warning::new("stub", "stub")], cautions: vec!["stub"] })
+    let detail = format!(
+        "this network has no record of past forecasts, so intervals allow {:.0} % of each expected flow for model error, \
+         {reason}",
+        100.0 * scenario.model_error
+    );
+    warnings.push(Warning::new("model_error_assumed", detail));
+    Ok(OriginAnswer { fit, forecast, warnings, cautions: CAUTIONS.to_vec() })
 }
 
-fn stub_fit() -> Fit {
-    Fit {
-        model: Model::Mix,
-        rung: Rung::OneSnapshot,
-        preferential_share: Estimate { value: 0.7, interval: Some(Interval { level: 0.9, low: 0.6, high: 0.8 }) },
-        share_excursion: (0.65, 0.75),
-        links_per_arrival: Estimate::given(3.0),
-        arrivals_per_day: None,
-        entry: EntryDegrees::single(0),
-        tail_exponent: None,
-        candidates: vec![Candidate {
-            model: Model::Mix,
-            preferential_share: 0.7,
-            log_likelihood: -1.0,
-            aic: 2.0,
-            weight: 1.0,
-        }],
-        goodness: Some(Goodness { distance: 0.1, p_value: 0.5, replicates: 100, worst_log_ratio: 0.1 }),
-        tail: vec![TailPoint { degree: 1, observed: 1, fitted: 1.0 }],
-        warnings: vec![],
+/// The forces that the fit and the request imply, and the directions in which the fit leaves them uncertain.
+fn scenario(request: &OriginRequest, fit: &Fit) -> Result<Scenario, OriginError> {
+    let estimated = fit.arrivals_per_day.and_then(|rate| ArrivalPlan::constant(rate.value).ok());
+    let given = request.arrivals.is_some();
+    let arrivals = request.arrivals.clone().or(estimated).ok_or(OriginError::ArrivalsRequired)?;
+    let mix = |share: f64| AttachmentMix::new(share).unwrap_or(AttachmentMix::UNIFORM);
+    let links = fit.links_per_arrival.value;
+    let forces = GrowthParameters::new(
+        request.evidence.kind(),
+        mix(fit.preferential_share.value),
+        arrivals.clone(),
+        fit.entry.clone(),
+        links,
+    )
+    .and_then(|forces| forces.with_links_per_node_day(request.links_per_node_day))
+    .and_then(|forces| forces.with_losses(request.fit.departures_per_node_day, request.fit.link_losses_per_link_day))
+    .map_err(OriginError::Rate)?;
+    let mut excursions = Vec::new();
+    let (low, high) = fit.share_excursion;
+    if high > low {
+        excursions.push(Excursion { low: forces.clone().with_mix(mix(low)), high: forces.clone().with_mix(mix(high)) });
     }
+    let spread = fit.rate_excursion;
+    if spread.links_per_arrival > 0.0 {
+        let factor = spread.links_per_arrival.exp();
+        let with = |links| forces.clone().with_links_per_arrival(links).map_err(OriginError::Rate);
+        excursions.push(Excursion { low: with(links / factor)?, high: with(links * factor)? });
+    }
+    if spread.arrivals > 0.0 && !given {
+        let factor = spread.arrivals.exp();
+        let with = |factor: f64| forces.clone().with_arrivals(arrivals.scaled(factor));
+        excursions.push(Excursion { low: with(factor.recip()), high: with(factor) });
+    }
+    // A fit that misses the very flows it was made from will miss the next ones by no less.
+    let flow_error = fit.goodness.and_then(|g| g.flow_error).unwrap_or(0.0);
+    Ok(Scenario { forces, excursions, model_error: flow_error.max(DEFAULT_MODEL_ERROR) })
 }

@@ -6,6 +6,7 @@ use super::mean_field::{Course, GrowthError};
 use crate::numerics::elementary::complex_ln_1p;
 use crate::numerics::inversion::{GeneratingFunction, InversionError, upper_tail};
 use crate::numerics::quadrature::{PANEL, PANEL_NODES};
+use crate::numerics::tolerances::Accuracy;
 
 /// A pole of the integrand within this many half-lengths of a panel is taken out and integrated in closed form; farther
 /// away 10 Gauss–Legendre nodes are good to ρ^{−20} with ρ = 2 + √3, that is 4·10⁻¹².
@@ -119,6 +120,14 @@ impl NodeLaw {
     /// # Errors
     /// [`GrowthError::Inversion`] when the contour sums do not settle.
     pub fn tail(&self, degree: u64, threshold: u64) -> Result<f64, GrowthError> {
+        self.tail_within(degree, threshold, Accuracy::Full)
+    }
+
+    /// [`Self::tail`] to a stated accuracy.
+    ///
+    /// # Errors
+    /// [`GrowthError::Inversion`] when the contour sums do not settle.
+    pub fn tail_within(&self, degree: u64, threshold: u64, accuracy: Accuracy) -> Result<f64, GrowthError> {
         if threshold == 0 || (!self.losses && degree >= threshold) {
             return Ok(1.0);
         }
@@ -128,7 +137,7 @@ impl NodeLaw {
             return Ok(0.0);
         }
         let law = GainLaw { law: self, degree: degree as f64 };
-        upper_tail(&law, gain).map_err(|error: InversionError| error.into())
+        upper_tail(&law, gain, accuracy).map_err(|error: InversionError| error.into())
     }
 
     /// Expected degree at the end of a node of degree `degree` at the start.

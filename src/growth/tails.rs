@@ -4,7 +4,7 @@ use super::law::NodeLaw;
 use super::mean_field::{Course, GrowthError};
 use crate::model::DegreeCounts;
 use crate::numerics::quadrature::integrate_adaptively;
-use crate::numerics::tolerances::{TAIL_NEGLIGIBLE, TAIL_ZERO};
+use crate::numerics::tolerances::{Accuracy, TAIL_ZERO};
 
 /// The tail size S_j at a date, as far as the growth law determines it: a Poisson-binomial count over the present nodes
 /// plus a Poisson count over newcomers.
@@ -27,14 +27,21 @@ pub struct TailSum {
 /// # Numerical notes
 /// Cost follows the distinct degrees that can matter: a node with more links is the likelier to reach the threshold
 /// (stochastic order of the linear birth–death process), so the sum runs down from the threshold and stops once all nodes
-/// below could add less than 10⁻¹³ of it. The newcomers' integral is adaptive to 10⁻⁹ of the whole.
+/// below could add less than a negligible share of it (10⁻¹³ at full accuracy). The newcomers' integral is adaptive to 10⁻⁹ of
+/// the whole.
 ///
 /// # Errors
 /// Those of [`NodeLaw::tail`].
-pub fn tail_sum(course: &Course, counts: &DegreeCounts, day: f64, threshold: u64) -> Result<TailSum, GrowthError> {
+pub fn tail_sum(
+    course: &Course,
+    counts: &DegreeCounts,
+    day: f64,
+    threshold: u64,
+    accuracy: Accuracy,
+) -> Result<TailSum, GrowthError> {
     let law = NodeLaw::between(course, 0.0, day);
-    let mut sum = present_sum(course, &law, counts, day, threshold)?;
-    let newcomers = newcomers_mean(course, &law, day, threshold, sum.mean)?;
+    let mut sum = present_sum(course, &law, counts, day, threshold, accuracy)?;
+    let newcomers = newcomers_mean(course, &law, day, threshold, accuracy, sum.mean)?;
     sum.mean += newcomers;
     sum.variance += newcomers;
     sum.log_none -= newcomers;
@@ -47,13 +54,14 @@ fn present_sum(
     counts: &DegreeCounts,
     day: f64,
     threshold: u64,
+    accuracy: Accuracy,
 ) -> Result<TailSum, GrowthError> {
     let survival = course.survival(day);
     let mut sum = TailSum::default();
     let mut below = counts.nodes();
     for (degree, nodes) in counts.iter().rev() {
-        let probability = survival * law.tail(degree, threshold)?;
-        if probability * below as f64 <= TAIL_NEGLIGIBLE * sum.mean + TAIL_ZERO {
+        let probability = survival * law.tail_within(degree, threshold, accuracy)?;
+        if probability * below as f64 <= accuracy.negligible() * sum.mean + TAIL_ZERO {
             break;
         }
         below -= nodes;
@@ -68,22 +76,29 @@ fn present_sum(
     Ok(sum)
 }
 
-fn newcomers_mean(course: &Course, law: &NodeLaw, day: f64, threshold: u64, present: f64) -> Result<f64, GrowthError> {
+fn newcomers_mean(
+    course: &Course,
+    law: &NodeLaw,
+    day: f64,
+    threshold: u64,
+    accuracy: Accuracy,
+    present: f64,
+) -> Result<f64, GrowthError> {
     let parameters = course.parameters();
     let arrivals = parameters.arrivals.arrivals_between(0.0, day);
     let largest_entry = parameters.entry.shares().last().map_or(0, |&(degree, _)| degree);
     // The earliest and best-connected newcomer bounds all the others, as long as links are not lost.
-    let bound = arrivals * law.tail(largest_entry, threshold)?;
-    if arrivals == 0.0 || (!parameters.has_losses() && bound <= TAIL_NEGLIGIBLE * present + TAIL_ZERO) {
+    let bound = arrivals * law.tail_within(largest_entry, threshold, accuracy)?;
+    if arrivals == 0.0 || (!parameters.has_losses() && bound <= accuracy.negligible() * present + TAIL_ZERO) {
         return Ok(0.0);
     }
     let mut in_tail = |arrival: f64| -> Result<f64, GrowthError> {
         let law = NodeLaw::between(course, arrival, day);
         let mut share = 0.0;
         for &(degree, weight) in parameters.entry.shares().iter().rev() {
-            let probability = law.tail(degree, threshold)?;
+            let probability = law.tail_within(degree, threshold, accuracy)?;
             share += weight * probability;
-            if probability <= TAIL_NEGLIGIBLE * share {
+            if probability <= accuracy.negligible() * share {
                 break;
             }
         }
@@ -91,7 +106,7 @@ fn newcomers_mean(course: &Course, law: &NodeLaw, day: f64, threshold: u64, pres
     };
     let mut mean = 0.0;
     for pair in course.edges(0.0, day).windows(2) {
-        mean += integrate_adaptively(pair[0], pair[1], present + mean, &mut in_tail)?;
+        mean += integrate_adaptively(pair[0], pair[1], present + mean, accuracy, &mut in_tail)?;
     }
     Ok(mean)
 }

@@ -110,6 +110,16 @@ impl GrowthParameters {
         Ok(self)
     }
 
+    /// The same forces with another mix.
+    pub fn with_mix(self, mix: AttachmentMix) -> Self {
+        Self { mix, ..self }
+    }
+
+    /// The same forces with other arrivals.
+    pub fn with_arrivals(self, arrivals: ArrivalPlan) -> Self {
+        Self { arrivals, ..self }
+    }
+
     /// The same forces with another links-per-arrival.
     ///
     /// # Errors

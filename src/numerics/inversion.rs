@@ -6,7 +6,7 @@ use num_complex::Complex64;
 
 use super::elementary::complex_exp_m1;
 use super::tolerances::{
-    CONTOUR_AGREEMENT, CONTOUR_MAX_POINTS, CONTOUR_NEGLIGIBLE, SADDLE_CLOSENESS, SADDLE_MAX_STEPS,
+    Accuracy, CONTOUR_AGREEMENT, CONTOUR_MAX_POINTS, CONTOUR_NEGLIGIBLE, SADDLE_CLOSENESS, SADDLE_MAX_STEPS,
 };
 
 /// The generating function of a whole-number variable G, on the logarithmic plane z = e^ζ.
@@ -23,6 +23,8 @@ pub trait GeneratingFunction {
 
 /// Threshold × singularity below which the contour is squeezed: the threshold lies far inside the law's power-law edge.
 const SQUEEZED: f64 = 0.5;
+/// ln of the least positive double, with room for the width of the integrand: below, a tail is zero in double precision.
+const UNDERFLOW: f64 = -760.0;
 /// A tail above this keeps eight digits or more as one minus its complement.
 const SMALL_TAIL: f64 = 1e-8;
 
@@ -67,19 +69,22 @@ struct Saddle {
 ///
 /// # Errors
 /// [`InversionError`] when the sums do not settle.
-pub fn upper_tail(gf: &impl GeneratingFunction, g: f64) -> Result<f64, InversionError> {
+pub fn upper_tail(gf: &impl GeneratingFunction, g: f64, accuracy: Accuracy) -> Result<f64, InversionError> {
     let [_, mean, variance] = gf.log_real(0.0);
     if g > mean {
         let saddle = find_saddle(gf, g, mean, variance, Side::Upper);
         // Far below the law's own scale the contour is squeezed between the pole and the singularity. A tail that is not
         // small is then better had as 1 − P(G < g).
+        if saddle.height < UNDERFLOW {
+            return Ok(0.0);
+        }
         let squeezed = g > 0.0 && g * gf.singularity() < SQUEEZED && saddle.height > SMALL_TAIL.ln();
         if !squeezed {
-            return contour_integral(gf, g, &saddle).map(|tail| tail.clamp(0.0, 1.0));
+            return contour_integral(gf, g, &saddle, accuracy).map(|tail| tail.clamp(0.0, 1.0));
         }
     }
     let saddle = find_saddle(gf, g, mean, variance, Side::Lower);
-    contour_integral(gf, g, &saddle).map(|below| (1.0 - below).clamp(0.0, 1.0))
+    contour_integral(gf, g, &saddle, accuracy).map(|below| (1.0 - below).clamp(0.0, 1.0))
 }
 
 /// Minimises the convex exponent ln E[e^{ζG}] − (g−1)ζ − ln|e^ζ − 1| on its side of 0 by bracketed Newton steps.
@@ -94,9 +99,13 @@ fn find_saddle(gf: &impl GeneratingFunction, g: f64, mean: f64, variance: f64, s
     let drift = (g - mean) / variance.max(f64::MIN_POSITIVE);
     let root = (drift * drift + 4.0 / variance.max(f64::MIN_POSITIVE)).sqrt();
     let mut zeta = 0.5 * if side == Side::Upper { drift + root } else { drift - root };
+    if mean > 0.0 {
+        zeta = zeta.min((1.0 + (g.abs() + 1.0) / mean).ln()); // a Poisson law's saddle: far below a normal law's for a rare gain
+    }
     let mut curvature = 1.0;
-    for _ in 0..SADDLE_MAX_STEPS {
-        if !(zeta > low && zeta < high) {
+    for step in 0..SADDLE_MAX_STEPS {
+        // Newton steps crawl where the exponent is itself exponential, so every fourth step halves the bracket.
+        if step % 4 == 3 || !(zeta > low && zeta < high) {
             zeta = 0.5 * (low + high);
         }
         let [_, slope, bending] = gf.log_real(zeta);
@@ -108,20 +117,27 @@ fn find_saddle(gf: &impl GeneratingFunction, g: f64, mean: f64, variance: f64, s
         } else {
             high = zeta;
         }
-        let step = -gradient / curvature;
-        if step.abs() * curvature.sqrt() < SADDLE_CLOSENESS || high - low < 1e-14 * zeta.abs() {
+        let newton = -gradient / curvature;
+        if newton.abs() * curvature.sqrt() < SADDLE_CLOSENESS || high - low < 1e-14 * zeta.abs() {
             break;
         }
-        zeta += step;
+        zeta += newton;
     }
     let (reference, pole) = (gf.log_real(zeta)[0] - (g - 1.0) * zeta, zeta.exp_m1());
     Saddle { zeta, curvature, pole, reference, height: reference - pole.abs().ln() }
 }
 
 /// The integral over the contour through `saddle`.
-fn contour_integral(gf: &impl GeneratingFunction, g: f64, saddle: &Saddle) -> Result<f64, InversionError> {
-    let bend = 0.25 / (gf.singularity() - saddle.zeta);
-    let mut parabola = Contour { gf, g, saddle, bend, evaluations: 0 };
+fn contour_integral(
+    gf: &impl GeneratingFunction,
+    g: f64,
+    saddle: &Saddle,
+    accuracy: Accuracy,
+) -> Result<f64, InversionError> {
+    let to_singularity = gf.singularity() - saddle.zeta;
+    // Near a weak singularity the exponent is flatter than the singularity is far.
+    let width = saddle.curvature.sqrt().recip().min(to_singularity);
+    let mut parabola = Contour { gf, g, saddle, width, bend: 0.25 / to_singularity, accuracy, evaluations: 0 };
     match parabola.settle() {
         Ok(integral) => Ok(integral),
         Err(Unsettled::TooManyPoints) => Err(InversionError),
@@ -137,7 +153,9 @@ struct Contour<'a, G> {
     gf: &'a G,
     g: f64,
     saddle: &'a Saddle,
+    width: f64,
     bend: f64,
+    accuracy: Accuracy,
     evaluations: usize,
 }
 
@@ -150,10 +168,12 @@ enum Unsettled {
 impl<G: GeneratingFunction> Contour<'_, G> {
     /// Halves the step until two trapezoid sums agree.
     fn settle(&mut self) -> Result<f64, Unsettled> {
-        let width = 1.0 / self.saddle.curvature.sqrt();
-        let mut panels = (PI / (0.4 * width)).ceil().max(16.0);
+        let mut panels = (PI / (self.accuracy.contour_step() * self.width)).ceil().max(16.0);
         let mut sum = self.sweep(panels, 0.0, 1.0)?;
         let mut integral = sum / panels;
+        if self.accuracy == Accuracy::Working {
+            return Ok(integral * self.saddle.height.exp());
+        }
         loop {
             sum += self.sweep(2.0 * panels, 1.0, 2.0)?;
             panels *= 2.0;

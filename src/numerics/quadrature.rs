@@ -4,7 +4,7 @@ use std::sync::LazyLock;
 
 use gauss_quad::GaussLegendre;
 
-use super::tolerances::{QUADRATURE_AGREEMENT, QUADRATURE_MAX_DEPTH};
+use super::tolerances::{Accuracy, QUADRATURE_MAX_DEPTH};
 
 /// Nodes of one panel.
 pub const PANEL_NODES: usize = 10;
@@ -63,15 +63,15 @@ fn lagrange(nodes: &[f64], j: usize, x: f64) -> f64 {
 /// Integrates `f` ≥ 0 over [a, b], halving panels until halves and whole agree.
 ///
 /// Formula: Gauss–Legendre with 10 nodes on each panel. A panel is accepted when its two halves add up to it within
-/// 10⁻⁹ of `scale` plus the integral so far, or at the depth cap, 2⁻³⁰ of [a, b].
+/// `accuracy` of `scale` plus the integral so far, or at the depth cap, 2⁻³⁰ of [a, b].
 ///
 /// # Numerical notes
 /// `scale` is a lower bound of the quantity that the integral is added to (0 when it stands alone); it spares the work
 /// on an integral that hardly matters.
 ///
 /// ```
-/// use tailcast::numerics::quadrature::integrate_adaptively;
-/// let area = integrate_adaptively(0.0, 1.0, 0.0, &mut |x: f64| Ok::<_, ()>((-200.0 * x).exp())).unwrap();
+/// use tailcast::numerics::{quadrature::integrate_adaptively, tolerances::Accuracy};
+/// let area = integrate_adaptively(0.0, 1.0, 0.0, Accuracy::Full, &mut |x: f64| Ok::<_, ()>((-200.0 * x).exp())).unwrap();
 /// assert!((area * 200.0 - 1.0).abs() < 1e-8);
 /// ```
 ///
@@ -81,6 +81,7 @@ pub fn integrate_adaptively<E>(
     a: f64,
     b: f64,
     scale: f64,
+    accuracy: Accuracy,
     f: &mut impl FnMut(f64) -> Result<f64, E>,
 ) -> Result<f64, E> {
     let whole = panel(a, b, f)?;
@@ -90,7 +91,7 @@ pub fn integrate_adaptively<E>(
         let middle = 0.5 * (a + b);
         let (left, right) = (panel(a, middle, f)?, panel(middle, b, f)?);
         let error = (left + right - whole).abs();
-        if error <= QUADRATURE_AGREEMENT * (scale + total + left + right) || depth >= QUADRATURE_MAX_DEPTH {
+        if error <= accuracy.quadrature() * (scale + total + left + right) || depth >= QUADRATURE_MAX_DEPTH {
             total += left + right;
         } else {
             pending.push((middle, b, right, depth + 1));

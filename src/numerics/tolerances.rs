@@ -3,6 +3,42 @@
 /// Two successive trapezoid sums of a contour integral must agree to this, relative. Each halving of the step squares
 /// the error, so the finer sum is then good to about the square: 10⁻¹².
 pub const CONTOUR_AGREEMENT: f64 = 1e-6;
+/// How exact a tail must be.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum Accuracy {
+    /// As the stated accuracy of the forecast: 10⁻⁸ relative and better.
+    Full,
+    /// About 10⁻⁵ relative, for what only steers a fit or measures an uncertainty.
+    Working,
+}
+
+impl Accuracy {
+    /// Degree classes are left out of a tail sum once all nodes below could add at most this share of it.
+    pub fn negligible(self) -> f64 {
+        match self {
+            Self::Full => 1e-13,
+            Self::Working => 1e-6,
+        }
+    }
+
+    /// Adaptive quadrature splits a panel until halves and whole agree to this share of the result.
+    pub fn quadrature(self) -> f64 {
+        match self {
+            Self::Full => 1e-9,
+            Self::Working => 1e-5,
+        }
+    }
+
+    /// First step of a contour sum over the width of its integrand. Its error is about e^{−2π/step}: 10⁻⁷ before the
+    /// halving that a full sum does, 5·10⁻⁶ for a working one, which is taken as it is.
+    pub fn contour_step(self) -> f64 {
+        match self {
+            Self::Full => 0.4,
+            Self::Working => 0.5,
+        }
+    }
+}
+
 /// Contour points whose integrand is below this share of the peak add nothing in double precision.
 pub const CONTOUR_NEGLIGIBLE: f64 = 1e-17;
 /// Most points on half a contour before inversion gives up; the hardest case met in the tests needs about 9,000.
@@ -15,8 +51,6 @@ pub const SADDLE_CLOSENESS: f64 = 1e-3;
 /// Steps of bracketing root finders and minimisers: bisection halves a double's exponent range within about 1,100.
 pub const BRACKET_MAX_STEPS: usize = 200;
 
-/// Adaptive quadrature splits a panel until halves and whole agree to this share of the result.
-pub const QUADRATURE_AGREEMENT: f64 = 1e-9;
 /// Deepest splitting of one panel: 2⁻³⁰ of its length.
 pub const QUADRATURE_MAX_DEPTH: usize = 30;
 
@@ -26,7 +60,5 @@ pub const MESH_LOG_CHANGE: f64 = 0.7;
 /// Most panels of the time mesh; more means rates per day far beyond any network's.
 pub const MESH_MAX_PANELS: usize = 20_000;
 
-/// Degree classes are left out of a tail sum once all nodes below could add at most this share of it.
-pub const TAIL_NEGLIGIBLE: f64 = 1e-13;
 /// A tail of this many expected nodes or fewer is zero for every purpose.
 pub const TAIL_ZERO: f64 = 1e-18;

@@ -1,0 +1,272 @@
+//! Rung 2: successive snapshots, by the flow of nodes across thresholds.
+
+use super::profile::{Profile, profile_share};
+use super::{FitError, FitRequest};
+use crate::growth::{Course, GrowthError, NodeLaw, tail_sum};
+use crate::model::{
+    ArrivalPlan, AttachmentMix, DegreeCounts, DegreeKind, EntryDegrees, Evidence, GrowthParameters, Warning,
+};
+use crate::numerics::quadrature::PANEL;
+use crate::numerics::tolerances::Accuracy;
+
+/// The preferential share is found to this.
+const SHARE_TOLERANCE: f64 = 1e-4;
+/// Half-width of difference quotients in p.
+const SHARE_STEP: f64 = 2e-3;
+/// Thresholds grow by this factor (about; they are whole numbers).
+const THRESHOLD_GROWTH: f64 = std::f64::consts::SQRT_2;
+/// A threshold counts while at least this many nodes were past it at the period's end.
+const FEWEST_NODES: u64 = 5;
+/// Crossings a threshold that no growth need explain, nodes.
+const UNEXPLAINED: f64 = 0.5;
+/// Flows with less variance than this say nothing of dispersion.
+const LEAST_VARIANCE: f64 = 1.0;
+/// Each period weighs this much of the next newer one: the mix may move, and the forecast wants today's.
+const AGE_WEIGHT: f64 = 0.7;
+
+/// What the totals of one period between two snapshots say, taken at constant rates.
+#[derive(Debug, Clone)]
+pub(super) struct Period<'a> {
+    before: &'a DegreeCounts,
+    after: &'a DegreeCounts,
+    pub days: f64,
+    pub arrivals_per_day: f64,
+    pub links_per_arrival: f64,
+    thresholds: Vec<u64>,
+    forces: GrowthParameters,
+    weight: f64,
+}
+
+/// A fit by crossing flows and how far its flows scatter about it.
+pub(super) struct SuccessiveFit {
+    pub profile: Profile,
+    /// Mean of (observed − fitted)²/variance over periods and thresholds.
+    pub dispersion: f64,
+    /// Typical |observed − fitted|/fitted of the flows.
+    pub flow_error: f64,
+}
+
+/// Reads arrivals and landed links of each period off the totals; periods without growth are skipped with a warning.
+///
+/// # Errors
+/// When no period has both arrivals and landed links.
+pub(super) fn periods<'a>(
+    evidence: &'a Evidence,
+    entry: &EntryDegrees,
+    request: &FitRequest,
+) -> Result<(Vec<Period<'a>>, Vec<Warning>), FitError> {
+    let (mut periods, mut warnings) = (Vec::new(), Vec::new());
+    for (before, after, days) in evidence.periods() {
+        match Period::read(evidence.kind(), &before.counts, &after.counts, days, entry, request) {
+            Some(period) => periods.push(period),
+            None => {
+                let detail = format!(
+                    "between {} and {} nodes and links did not both grow, so that period says nothing of the mix",
+                    before.as_of, after.as_of
+                );
+                warnings.push(Warning::new("period_without_growth", detail));
+            }
+        }
+    }
+    for (age, period) in periods.iter_mut().rev().enumerate() {
+        period.weight = AGE_WEIGHT.powi(age as i32);
+    }
+    if periods.is_empty() {
+        let detail = "between the snapshots nodes and links did not both grow, so their flows cannot tell the attachment \
+                      mix; give departures_per_node_day and link_losses_per_link_day if nodes leave or links are lost, a \
+                      single snapshot, or fixed.preferential_share";
+        return Err(FitError::NotIdentified { detail: detail.into() });
+    }
+    Ok((periods, warnings))
+}
+
+/// Fits the preferential share by the composite Poisson likelihood of the crossing flows (Varin & Vidoni 2005).
+///
+/// Formula: `Σ_periods w·Σ_j [D_j ln M_j(p) − M_j(p)]`, D_j the observed and M_j the expected number of nodes that came
+/// past threshold j (log-spaced), both plus ½: half a node of unexplained crossings a threshold keeps one renamed or merged
+/// node, which no growth explains, from deciding the fit. Its fall is scaled by information over score variance (Godambe 1960). In that variance
+/// flows at different thresholds share nodes, and all compete for the known number of landed links.
+pub(super) fn fit_successive(periods: &[Period], request: &FitRequest) -> Result<SuccessiveFit, FitError> {
+    let log_likelihood = |p: f64| {
+        let mut sum = 0.0;
+        for period in periods {
+            let flows = period.flows(p)?;
+            for (observed, expected) in period.observed(&flows).iter().zip(&flows) {
+                let (observed, expected) = ((observed + UNEXPLAINED).max(0.0), expected.mean + UNEXPLAINED);
+                sum += period.weight * (observed * expected.ln() - expected);
+            }
+        }
+        Ok(sum)
+    };
+    let (mut dispersion, mut flow_error) = (1.0, 0.0);
+    let scale_at = |p: f64| {
+        let (mut information, mut variance) = (0.0, 0.0);
+        let (mut misfits, mut errors) = (Vec::new(), Vec::new());
+        for period in periods {
+            let (low, high) = ((p - SHARE_STEP).max(0.0), (p + SHARE_STEP).min(1.0));
+            let (below, here, above) = (period.flows(low)?, period.flows(p)?, period.flows(high)?);
+            let slope: Vec<f64> = above.iter().zip(&below).map(|(a, b)| (a.mean - b.mean) / (high - low)).collect();
+            let weights: Vec<f64> = slope.iter().zip(&here).map(|(s, m)| s / (m.mean + UNEXPLAINED)).collect();
+            let covariance = period.covariance(p)?;
+            information += period.weight * slope.iter().zip(&weights).map(|(s, w)| s * w).sum::<f64>();
+            variance += period.weight * period.weight * period.conditional_variance(&weights, &covariance);
+            for (i, (observed, expected)) in period.observed(&here).iter().zip(&here).enumerate() {
+                if covariance[i][i] >= LEAST_VARIANCE {
+                    misfits.push((observed - expected.mean).powi(2) / covariance[i][i]);
+                    errors.push((observed / expected.mean - 1.0).abs());
+                }
+            }
+        }
+        if !misfits.is_empty() {
+            dispersion = misfits.iter().sum::<f64>() / misfits.len() as f64;
+            // The median times 1.4826 is the standard deviation of a normal law, and one renamed hub does not move it.
+            errors.sort_by(f64::total_cmp);
+            flow_error = 1.4826 * errors[errors.len() / 2];
+        }
+        // A misfit beyond sampling noise widens the interval in the same proportion, and never narrows it.
+        Ok(information / (variance * dispersion.max(1.0)))
+    };
+    let profile = profile_share(request.choice, SHARE_TOLERANCE, log_likelihood, scale_at)?;
+    Ok(SuccessiveFit { profile, dispersion, flow_error })
+}
+
+/// Expected nodes past a threshold, without those that were past it from the start and cannot fall back.
+#[derive(Clone, Copy)]
+struct Flow {
+    mean: f64,
+    certain: f64,
+}
+
+impl<'a> Period<'a> {
+    fn read(
+        kind: DegreeKind,
+        before: &'a DegreeCounts,
+        after: &'a DegreeCounts,
+        days: f64,
+        entry: &EntryDegrees,
+        request: &FitRequest,
+    ) -> Option<Self> {
+        let (departures, losses) = (request.departures_per_node_day, request.link_losses_per_link_day);
+        let plan = ArrivalPlan::constant(1.0).ok()?;
+        let forces = GrowthParameters::new(kind, AttachmentMix::UNIFORM, plan, entry.clone(), 0.0).ok()?;
+        let forces = forces.with_losses(departures, losses).ok()?;
+        // dN/dt = A − δN and dK/dt = (ℓ+ē)A − θK at constant rates, solved for A and ℓ from both ends.
+        let inflow = |start: f64, end: f64, hazard: f64| {
+            let decay = (-hazard * days).exp();
+            let elapsed = if hazard > 0.0 { -(-hazard * days).exp_m1() / hazard } else { days };
+            (end - start * decay) / elapsed
+        };
+        let theta = forces.end_loss_hazard() + departures;
+        let arrivals_per_day = inflow(before.nodes() as f64, after.nodes() as f64, departures);
+        let ends_per_day = inflow(before.link_ends() as f64, after.link_ends() as f64, theta);
+        let links_per_arrival = ends_per_day / arrivals_per_day - entry.mean();
+        if !(arrivals_per_day > 0.0 && links_per_arrival > 0.0) {
+            return None;
+        }
+        let arrivals = ArrivalPlan::constant(arrivals_per_day).ok()?;
+        let forces = forces.with_links_per_arrival(links_per_arrival).ok()?.with_arrivals(arrivals);
+        let mut thresholds = vec![entry.smallest() + 1];
+        while let Some(&last) = thresholds.last().filter(|&&last| after.tail_size(last) >= FEWEST_NODES) {
+            thresholds.push((last as f64 * THRESHOLD_GROWTH).ceil() as u64);
+        }
+        thresholds.pop();
+        if thresholds.is_empty() {
+            return None;
+        }
+        Some(Self { before, after, days, arrivals_per_day, links_per_arrival, thresholds, forces, weight: 1.0 })
+    }
+
+    fn course(&self, p: f64) -> Result<Course, GrowthError> {
+        let mix = AttachmentMix::new(p).unwrap_or(AttachmentMix::UNIFORM);
+        Course::new(self.before, self.forces.clone().with_mix(mix), self.days)
+    }
+
+    fn flows(&self, p: f64) -> Result<Vec<Flow>, FitError> {
+        let course = self.course(p)?;
+        let flow = |&threshold: &u64| {
+            let sum = tail_sum(&course, self.before, self.days, threshold, Accuracy::Working)?;
+            Ok(Flow { mean: sum.mean - sum.certain, certain: sum.certain })
+        };
+        self.thresholds.iter().map(flow).collect()
+    }
+
+    /// D_j: nodes past each threshold at the end that were not certain to be there.
+    fn observed(&self, flows: &[Flow]) -> Vec<f64> {
+        let past = |(&threshold, flow): (&u64, &Flow)| self.after.tail_size(threshold) as f64 - flow.certain;
+        self.thresholds.iter().zip(flows).map(past).collect()
+    }
+
+    /// Expected tail sizes at the period's end, with the observed ones: the picture of the fit.
+    pub fn fitted_tail(&self, p: f64) -> Result<Vec<(u64, u64, f64)>, FitError> {
+        let flows = self.flows(p)?;
+        let row =
+            |(&threshold, flow): (&u64, &Flow)| (threshold, self.after.tail_size(threshold), flow.mean + flow.certain);
+        Ok(self.thresholds.iter().zip(&flows).map(row).collect())
+    }
+
+    /// Covariance of the numbers past each threshold, nodes taken as independent given the totals.
+    fn covariance(&self, p: f64) -> Result<Vec<Vec<f64>>, FitError> {
+        let course = self.course(p)?;
+        let size = self.thresholds.len();
+        let mut covariance = vec![vec![0.0; size]; size];
+        let mut add = |weight: f64, tails: &[f64]| {
+            for i in 0..size {
+                for j in i..size {
+                    covariance[i][j] += weight * (tails[j] - tails[i] * tails[j]);
+                }
+            }
+        };
+        let survival = course.survival(self.days);
+        let law = NodeLaw::between(&course, 0.0, self.days);
+        for (degree, nodes) in self.before.iter() {
+            add(nodes as f64, &tails(&law, degree, &self.thresholds, survival)?);
+        }
+        // Newcomers are known in number, and their arrival times spread evenly.
+        for (&x, &w) in PANEL.nodes.iter().zip(&PANEL.weights) {
+            let arrival = x * self.days;
+            let law = NodeLaw::between(&course, arrival, self.days);
+            for &(degree, share) in self.forces.entry.shares() {
+                let newcomers = w * self.days * self.arrivals_per_day * share;
+                add(newcomers, &tails(&law, degree, &self.thresholds, course.survival(self.days - arrival))?);
+            }
+        }
+        for i in 0..size {
+            for j in 0..i {
+                covariance[i][j] = covariance[j][i];
+            }
+        }
+        Ok(covariance)
+    }
+
+    /// Variance of Σ w_j·D_j given the total number of landed links, to first order.
+    ///
+    /// The total is itself a sum over thresholds, Σ_j 1{k ≥ j}: here with each threshold standing for the degrees up to the
+    /// next.
+    fn conditional_variance(&self, weights: &[f64], covariance: &[Vec<f64>]) -> f64 {
+        let span: Vec<f64> = (0..self.thresholds.len())
+            .map(|i| {
+                let next = self.thresholds.get(i + 1).copied().unwrap_or(self.thresholds[i] + 1);
+                let previous = if i == 0 { self.thresholds[0] - 1 } else { self.thresholds[i - 1] };
+                0.5 * (next - previous) as f64
+            })
+            .collect();
+        let form = |a: &[f64], b: &[f64]| -> f64 {
+            covariance.iter().zip(a).map(|(row, x)| x * row.iter().zip(b).map(|(c, y)| c * y).sum::<f64>()).sum()
+        };
+        let shared = form(weights, &span);
+        form(weights, weights) - shared * shared / form(&span, &span)
+    }
+}
+
+/// Probabilities that a node of `degree` stays and ends past each threshold; zero beyond the first negligible one.
+fn tails(law: &NodeLaw, degree: u64, thresholds: &[u64], survival: f64) -> Result<Vec<f64>, GrowthError> {
+    const NEGLIGIBLE: f64 = 1e-9;
+    let mut values = vec![0.0; thresholds.len()];
+    for (value, &threshold) in values.iter_mut().zip(thresholds) {
+        *value = survival * law.tail_within(degree, threshold, Accuracy::Working)?;
+        if *value < NEGLIGIBLE {
+            break;
+        }
+    }
+    Ok(values)
+}

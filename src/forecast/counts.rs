@@ -1,0 +1,113 @@
+//! The law of a forecast count, given its mean and variance, and its quantiles.
+
+use statrs::function::beta::beta_reg;
+use statrs::function::gamma::gamma_ur;
+
+use crate::model::Interval;
+use crate::numerics::roots::increasing_root;
+
+/// Means above this take their quantiles from the continuous limit; a whole node then matters less than 10⁻⁵.
+const CONTINUOUS_ABOVE: f64 = 1e5;
+/// Variance within this of the mean, relative: Poisson.
+const POISSON_WITHIN: f64 = 1e-6;
+
+/// A count `floor + R`, R a whole number ≥ 0 with the given mean and variance: negative binomial when the variance exceeds
+/// the mean (a Poisson count whose rate is uncertain), Poisson when they agree, binomial below (present nodes that may or
+/// may not pass a threshold).
+///
+/// ```
+/// use tailcast::forecast::CountLaw;
+/// let poisson = CountLaw::new(0.0, 4.0, 4.0);
+/// assert_eq!((poisson.quantile(0.05), poisson.quantile(0.5), poisson.quantile(0.95)), (1.0, 4.0, 8.0));
+/// ```
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct CountLaw {
+    floor: f64,
+    mean: f64,
+    variance: f64,
+}
+
+impl CountLaw {
+    /// A law with the certain part `floor`, and mean and variance of the rest; negative rounding residue counts as zero.
+    pub fn new(floor: f64, mean: f64, variance: f64) -> Self {
+        Self { floor, mean: mean.max(0.0), variance: variance.max(0.0) }
+    }
+
+    /// Smallest count x with P(count ≤ x) ≥ `probability`, for a probability in (0, 1).
+    ///
+    /// # Numerical notes
+    /// Bisection on the distribution function (incomplete beta and gamma), exact to the unit against scipy for means to
+    /// 10⁵; above, the Wilson–Hilferty normal approximation of a gamma law, within 0.1 % of scipy's negative binomial
+    /// when the standard deviation is at most a third of the mean.
+    pub fn quantile(&self, probability: f64) -> f64 {
+        if self.mean == 0.0 || self.variance == 0.0 {
+            return self.floor + self.mean.round();
+        }
+        if self.mean > CONTINUOUS_ABOVE {
+            return self.floor + self.continuous_quantile(probability).round();
+        }
+        let (mut below, mut reach) = (-1.0, self.mean + 8.0 * self.variance.sqrt() + 8.0);
+        while self.distribution(reach) < probability {
+            (below, reach) = (reach, 2.0 * reach);
+        }
+        let mut reach = reach.ceil();
+        while reach - below > 1.0 {
+            let middle = (0.5 * (below + reach)).floor();
+            if self.distribution(middle) >= probability { reach = middle } else { below = middle }
+        }
+        self.floor + reach
+    }
+
+    /// Central intervals at `levels`.
+    pub fn intervals(&self, levels: &[f64]) -> Vec<Interval> {
+        let interval = |&level: &f64| Interval {
+            level,
+            low: self.quantile(0.5 - 0.5 * level),
+            high: self.quantile(0.5 + 0.5 * level),
+        };
+        levels.iter().map(interval).collect()
+    }
+
+    /// P(R ≤ x) for whole x ≥ 0.
+    fn distribution(&self, x: f64) -> f64 {
+        let ratio = self.variance / self.mean;
+        if (ratio - 1.0).abs() < POISSON_WITHIN {
+            gamma_ur(x + 1.0, self.mean)
+        } else if ratio > 1.0 {
+            beta_reg(self.mean / (ratio - 1.0), x + 1.0, 1.0 / ratio)
+        } else {
+            let trials = self.mean / (1.0 - ratio);
+            if x >= trials { 1.0 } else { beta_reg(trials - x, x + 1.0, ratio) }
+        }
+    }
+
+    fn continuous_quantile(&self, probability: f64) -> f64 {
+        let z = normal_quantile(probability);
+        let ninth = self.variance / (9.0 * self.mean * self.mean);
+        self.mean * (1.0 - ninth + z * ninth.sqrt()).max(0.0).powi(3)
+    }
+}
+
+/// Standard normal quantile.
+pub(super) fn normal_quantile(probability: f64) -> f64 {
+    -std::f64::consts::SQRT_2 * statrs::function::erf::erfc_inv(2.0 * probability)
+}
+
+/// Smallest whole x in [low, high] at which the increasing `f` is at least zero: sought first in ln(1 + x), then settled to
+/// the unit, or to 10⁻⁵ relative where that is more.
+pub(super) fn first_whole(low: f64, high: f64, mut f: impl FnMut(f64) -> f64) -> f64 {
+    const LOG_SEARCH: f64 = 1e-4;
+    const SETTLED: f64 = 1e-5;
+    if f(low) >= 0.0 {
+        return low;
+    }
+    let log_root = increasing_root(low.ln_1p(), high.ln_1p(), LOG_SEARCH, |y| f(y.exp_m1()));
+    let guess = log_root.exp_m1().round().clamp(low, high);
+    let slack = (2.0 * LOG_SEARCH * guess).ceil();
+    let (mut below, mut reach) = ((guess - slack).max(low), (guess + slack).min(high));
+    while reach - below > (SETTLED * guess).max(1.0) {
+        let middle = (0.5 * (below + reach)).floor();
+        if f(middle) >= 0.0 { reach = middle } else { below = middle }
+    }
+    reach
+}

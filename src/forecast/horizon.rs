@@ -1,0 +1,141 @@
+//! Forecasts at each date of a plan.
+
+use super::largest::{largest_degree, median_largest};
+use super::{CountForecast, CountLaw, DateForecast, ForecastError, TailForecast};
+use crate::growth::{Course, TailSum, tail_sum};
+use crate::model::{DegreeCounts, ForecastPlan, GrowthParameters};
+use crate::numerics::tolerances::Accuracy;
+
+/// The forces one standard deviation below and above their estimates in one direction of uncertainty; directions are
+/// independent of each other.
+#[derive(Debug, Clone, PartialEq)]
+pub struct Excursion {
+    /// Below.
+    pub low: GrowthParameters,
+    /// Above.
+    pub high: GrowthParameters,
+}
+
+/// What is believed of a network's growth from its last snapshot on.
+#[derive(Debug, Clone, PartialEq)]
+pub struct Scenario {
+    /// Best estimate of the forces.
+    pub forces: GrowthParameters,
+    /// Directions in which they are uncertain.
+    pub excursions: Vec<Excursion>,
+    /// Relative standard deviation of the flow past a threshold that no parameter accounts for.
+    pub model_error: f64,
+}
+
+/// Forecasts the network with `counts` today at every date of `plan`; `cancelled` is asked before each threshold.
+///
+/// Formula: the variance of a count is its sampling variance under the central forces, plus for each excursion the square
+/// of half the difference between its two ends' expectations (sigma points; exact for expectations that are quadratic in
+/// the parameter), plus (model error × expected flow)². Its law has that mean and variance ([`CountLaw`]).
+///
+/// Cost: (1 + 2 × excursions) expectations a date and threshold.
+///
+/// # Errors
+/// When growth cannot be computed, or on cancellation.
+pub fn forecast(
+    counts: &DegreeCounts,
+    scenario: &Scenario,
+    plan: &ForecastPlan,
+    cancelled: &dyn Fn() -> bool,
+) -> Result<Vec<DateForecast>, ForecastError> {
+    let horizon = plan.days().last().copied().unwrap_or(0.0);
+    let course = |forces: &GrowthParameters| Course::new(counts, forces.clone(), horizon);
+    let central = course(&scenario.forces)?;
+    let ends = scenario.excursions.iter().map(|e| Ok((course(&e.low)?, course(&e.high)?)));
+    let ends = ends.collect::<Result<Vec<_>, ForecastError>>()?;
+    let outlook = Outlook { counts, central, ends, model_error: scenario.model_error, plan, cancelled };
+    plan.dates().iter().zip(plan.days()).map(|(&date, &day)| outlook.at(date, day)).collect()
+}
+
+struct Outlook<'a> {
+    counts: &'a DegreeCounts,
+    central: Course,
+    ends: Vec<(Course, Course)>,
+    model_error: f64,
+    plan: &'a ForecastPlan,
+    cancelled: &'a dyn Fn() -> bool,
+}
+
+impl Outlook<'_> {
+    fn at(&self, date: jiff::Timestamp, day: f64) -> Result<DateForecast, ForecastError> {
+        let tail = self.plan.thresholds().iter().map(|&threshold| self.tail(day, threshold));
+        Ok(DateForecast {
+            date,
+            nodes: self.nodes(day),
+            links: self.link_ends(day),
+            tail: tail.collect::<Result<_, _>>()?,
+            largest_degree: self.largest(day)?,
+        })
+    }
+
+    fn tail(&self, day: f64, threshold: u64) -> Result<TailForecast, ForecastError> {
+        if (self.cancelled)() {
+            return Err(ForecastError::Cancelled);
+        }
+        let now = self.counts.tail_size(threshold) as f64;
+        let TailSum { certain, mean, variance, .. } =
+            tail_sum(&self.central, self.counts, day, threshold, Accuracy::Full)?;
+        let beyond = self
+            .excursion_variance(|course| Ok(tail_sum(course, self.counts, day, threshold, Accuracy::Working)?.mean))?;
+        // The flow is what the model can be wrong about: nodes past the threshold that were not, and the other way round.
+        let flow = (mean - certain).max((mean - now).abs());
+        let variance = variance + beyond + (self.model_error * flow).powi(2);
+        Ok(TailForecast { threshold, size: self.count(now, certain, mean, variance) })
+    }
+
+    fn nodes(&self, day: f64) -> CountForecast {
+        let now = self.counts.nodes() as f64;
+        let (survival, mean) = (self.central.survival(day), self.central.nodes(day));
+        let certain = if survival == 1.0 { now } else { 0.0 };
+        // Arrivals are Poisson; of the present nodes a binomial number stays.
+        let sampling = (mean - now * survival) + now * survival * (1.0 - survival);
+        let beyond = self.excursion_variance(|course| Ok(course.nodes(day))).unwrap_or(0.0);
+        self.count(now, certain, mean, sampling + beyond)
+    }
+
+    fn link_ends(&self, day: f64) -> CountForecast {
+        let now = self.counts.link_ends() as f64;
+        let forces = self.central.parameters();
+        let mean = self.central.link_ends(day);
+        let certain = if forces.has_losses() { 0.0 } else { now };
+        // Each arrival brings ℓ + ē ends at once, so their number scatters by that factor more than arrivals do; an end that
+        // may be lost or not is one more draw.
+        let per_arrival = (forces.links_per_arrival() + forces.entry.mean()).max(1.0);
+        let gained = (mean - now * (-forces.end_loss_hazard() * day).exp()).max(0.0);
+        let kept = (mean - gained).max(0.0);
+        let sampling = per_arrival * gained + kept * (1.0 - kept / now.max(1.0));
+        let beyond = self.excursion_variance(|course| Ok(course.link_ends(day))).unwrap_or(0.0);
+        self.count(now, certain, mean, sampling + beyond)
+    }
+
+    fn largest(&self, day: f64) -> Result<super::DegreeForecast, ForecastError> {
+        if (self.cancelled)() {
+            return Err(ForecastError::Cancelled);
+        }
+        let log_median = |course: &Course| Ok(median_largest(course, self.counts, day)?.ln_1p());
+        let gain = (log_median(&self.central)? - (self.counts.largest() as f64).ln_1p()).abs();
+        let variance = self.excursion_variance(log_median)? + (self.model_error * gain).powi(2);
+        largest_degree(&self.central, self.counts, day, self.plan.levels(), variance.sqrt())
+    }
+
+    fn excursion_variance(
+        &self,
+        mut value: impl FnMut(&Course) -> Result<f64, ForecastError>,
+    ) -> Result<f64, ForecastError> {
+        let mut variance = 0.0;
+        for (low, high) in &self.ends {
+            variance += (0.5 * (value(high)? - value(low)?)).powi(2);
+        }
+        Ok(variance)
+    }
+
+    fn count(&self, now: f64, certain: f64, mean: f64, variance: f64) -> CountForecast {
+        let law = CountLaw::new(certain, mean - certain, variance);
+        CountForecast { now, expected: mean, median: law.quantile(0.5), intervals: law.intervals(self.plan.levels()) }
+    }
+}

@@ -1,0 +1,146 @@
+//! Tail sizes: conservation, monotonicity, consistency over time, closed mean-field cases.
+
+use proptest::prelude::*;
+use tailcast::growth::{Course, GrowthError, NodeLaw, TailSum, tail_sum};
+use tailcast::model::{ArrivalPlan, AttachmentMix, DegreeCounts, DegreeKind, EntryDegrees, GrowthParameters};
+use tailcast::numerics::tolerances::Accuracy;
+
+use crate::networks::{counts, forces, total_forces, young_network};
+use crate::reference::relative_error;
+
+fn size(course: &Course, counts: &DegreeCounts, day: f64, threshold: u64) -> TailSum {
+    tail_sum(course, counts, day, threshold, Accuracy::Full).unwrap()
+}
+
+#[test]
+fn tail_sizes_add_up_to_nodes_and_link_ends() {
+    let start = young_network();
+    for forces in [forces(0.0, 3.0), forces(0.6, 3.0), forces(0.95, 0.7), total_forces(0.5, 2)] {
+        let course = Course::new(&start, forces, 1_500.0).unwrap();
+        assert!(relative_error(size(&course, &start, 1_500.0, 0).mean, course.nodes(1_500.0)) < 1e-9);
+        let mut ends = 0.0;
+        for threshold in 1.. {
+            let tail = size(&course, &start, 1_500.0, threshold).mean;
+            ends += tail;
+            if tail < 1e-9 {
+                break;
+            }
+        }
+        // Σ_{j≥1} S_j = Σ_k k·n_k.
+        assert!(relative_error(ends, course.link_ends(1_500.0)) < 1e-8, "{ends} {}", course.link_ends(1_500.0));
+    }
+}
+
+#[test]
+fn going_to_a_date_directly_or_by_a_stop_is_the_same() {
+    let start = young_network();
+    let course = Course::new(&start, forces(0.7, 4.0), 2_000.0).unwrap();
+    let (first, second) = (NodeLaw::between(&course, 0.0, 700.0), NodeLaw::between(&course, 700.0, 2_000.0));
+    let direct = NodeLaw::between(&course, 0.0, 2_000.0);
+    for (degree, threshold) in [(0, 3), (0, 12), (4, 9), (4, 40), (20, 30), (20, 90)] {
+        let mut by_stop = 0.0;
+        for at in degree..threshold {
+            let stop = first.tail(degree, at).unwrap() - first.tail(degree, at + 1).unwrap();
+            by_stop += stop * second.tail(at, threshold).unwrap();
+        }
+        by_stop += first.tail(degree, threshold).unwrap();
+        assert!(relative_error(by_stop, direct.tail(degree, threshold).unwrap()) < 1e-8);
+    }
+}
+
+/// Under uniform growth a node's expected degree rises by ℓ·ln(t/i), under preferential growth as a power of t/i
+/// (Barabási & Albert 1999: m·(t/i)^½; common practice for the logarithm, no source).
+#[test]
+fn expected_degrees_follow_the_published_laws() {
+    let start = counts(&[(4, 100)]);
+    let uniform = Course::new(&start, forces(0.0, 3.0), 900.0).unwrap();
+    let gained = NodeLaw::between(&uniform, 0.0, 900.0).mean(4) - 4.0;
+    assert!(relative_error(gained, 3.0 * 10f64.ln()) < 1e-12);
+    let preferential = Course::new(&start, total_forces(1.0, 2), 900.0).unwrap();
+    assert!(relative_error(NodeLaw::between(&preferential, 0.0, 900.0).mean(4), 4.0 * 10f64.sqrt()) < 1e-12);
+}
+
+/// In a network grown uniformly from the start, the share of nodes with more than m links beyond their own falls as a
+/// geometric law with ratio m/(m+1) (Krapivsky, Redner & Leyvraz 2000), here reached from one node by growth to 10⁷.
+#[test]
+fn growth_from_one_node_reaches_the_stationary_law() {
+    let start = counts(&[(2, 1)]);
+    for (share, law) in [(0.0, [1.0, 2.0 / 3.0, 4.0 / 9.0]), (1.0, [1.0, 0.5, 0.3])] {
+        let course = Course::new(&start, total_forces(share, 2), 1e7).unwrap();
+        for (extra, expected) in law.into_iter().enumerate() {
+            let tail = size(&course, &start, 1e7, 2 + extra as u64).mean / course.nodes(1e7);
+            assert!(relative_error(tail, expected) < 1e-5, "p={share} k={extra}: {tail} {expected}");
+        }
+    }
+}
+
+#[test]
+fn cost_and_answers_do_not_depend_on_scale() {
+    // The same network a million times over: every tail a million times as large.
+    let small = young_network();
+    let large = counts(&small.iter().map(|(k, n)| (k, n * 1_000_000)).collect::<Vec<_>>());
+    let plan = ArrivalPlan::constant(1e6).unwrap();
+    let course = Course::new(&small, forces(0.6, 3.0), 500.0).unwrap();
+    let scaled = Course::new(&large, forces(0.6, 3.0).with_arrivals(plan), 500.0).unwrap();
+    for threshold in [1, 10, 50, 200] {
+        let ratio = size(&scaled, &large, 500.0, threshold).mean / size(&course, &small, 500.0, threshold).mean;
+        assert!(relative_error(ratio, 1e6) < 1e-9);
+    }
+}
+
+#[test]
+fn nobody_starts_without_a_first_link() {
+    let start = counts(&[(0, 10)]);
+    assert_eq!(Course::new(&start, forces(1.0, 2.0), 10.0).unwrap_err(), GrowthError::NobodyStarts);
+    let course = Course::new(&start, forces(0.9, 2.0), 10.0).unwrap();
+    assert!(relative_error(size(&course, &start, 10.0, 0).mean, 20.0) < 1e-12);
+    assert!(size(&course, &start, 10.0, 1).mean > 1.0);
+}
+
+#[test]
+fn losses_balance_gains() {
+    // Uniform links per node and day against losses: each node's degree is Poisson with mean ι/w, whatever the start.
+    let start = counts(&[(3, 1_000)]);
+    let still = ArrivalPlan::constant(0.0).unwrap();
+    let forces =
+        GrowthParameters::new(DegreeKind::Received, AttachmentMix::UNIFORM, still, EntryDegrees::single(0), 0.0)
+            .unwrap()
+            .with_links_per_node_day(0.5)
+            .unwrap()
+            .with_losses(0.0, 0.1)
+            .unwrap();
+    let course = Course::new(&start, forces, 1_000.0).unwrap();
+    assert!(relative_error(course.link_ends(1_000.0), 5_000.0) < 1e-9);
+    let law = NodeLaw::between(&course, 0.0, 1_000.0);
+    let poisson_none = (-5f64).exp();
+    assert!(relative_error(law.tail(3, 1).unwrap(), 1.0 - poisson_none) < 1e-10);
+    assert!(relative_error(law.variance(3), 5.0) < 1e-9);
+}
+
+proptest! {
+    #![proptest_config(ProptestConfig::with_cases(64))]
+    #[test]
+    fn tails_fall_with_the_threshold_and_rise_with_time_and_degree(
+        share in 0.0..=1.0f64,
+        links in 0.01..20.0f64,
+        nodes in 1u64..1_000_000,
+        degree in 1u64..1_000_000,
+        days in 0.01..5_000.0f64,
+    ) {
+        let start = counts(&[(0, nodes), (degree, 1 + nodes / 100)]);
+        let course = Course::new(&start, forces(share, links), days).unwrap();
+        let law = NodeLaw::between(&course, 0.0, days);
+        let sooner = NodeLaw::between(&course, 0.0, days / 2.0);
+        let mut before = 1.0;
+        for threshold in [1, 2, 5, degree, degree + 1, degree + 10, 2 * degree, 10 * degree] {
+            let tail = law.tail(degree, threshold).unwrap();
+            prop_assert!((0.0..=1.0).contains(&tail));
+            if threshold > degree {
+                prop_assert!(tail <= before * (1.0 + 1e-9));
+                before = tail;
+            }
+            prop_assert!(sooner.tail(degree, threshold).unwrap() <= tail * (1.0 + 1e-8) + 1e-15);
+            prop_assert!(law.tail(degree - 1, threshold).unwrap() <= tail * (1.0 + 1e-8) + 1e-15);
+        }
+    }
+}
