@@ -15,9 +15,9 @@ pub use crate::evaluate::OriginRequest;
 pub use crate::fit::{FitRequest, Model, ModelChoice};
 pub use crate::store::{KeyClaim, RunFilter, RunKind, RunSummary, StoredRun};
 pub use answers::{
-    AttachmentModel, CandidateAnswer, CountAnswer, DateAnswer, EstimateAnswer, EvidenceKind, FitAnswer, FitReport,
-    FitRun, ForecastAnswer, ForecastRun, GoodnessAnswer, IntervalAnswer, LimitAnswer, TailAnswer, TailPointAnswer,
-    WarningAnswer,
+    AttachmentModel, CandidateAnswer, CountAnswer, DateAnswer, DegreeAnswer, EstimateAnswer, EvidenceKind, FitAnswer,
+    FitReport, FitRun, ForecastAnswer, ForecastRun, GoodnessAnswer, IntervalAnswer, LimitAnswer, TailAnswer,
+    TailPointAnswer, WarningAnswer,
 };
 pub use compute::{Question, answer_at_once};
 pub use cpu::CpuPool;

@@ -17,8 +17,18 @@ use crate::model::{ArrivalPlan, AttachmentMix, DegreeKind, EntryDegrees, GrowthP
 use crate::service::{FitInputs, FitRequest, ForecastInputs, Label, MAX_SEED, Model, ModelChoice, OriginRequest};
 
 /// Fields of a fit's body.
-pub const FIT_FIELDS: [&str; 8] =
-    ["degree_kind", "snapshots", "entry_degrees", "links_per_arrival", "model", "fixed", "seed", "label"];
+pub const FIT_FIELDS: [&str; 10] = [
+    "degree_kind",
+    "snapshots",
+    "entry_degrees",
+    "links_per_arrival",
+    "departures_per_node_day",
+    "link_losses_per_link_day",
+    "model",
+    "fixed",
+    "seed",
+    "label",
+];
 
 /// Fields of a forecast's body.
 pub const FORECAST_FIELDS: [&str; 16] = [
@@ -60,18 +70,8 @@ pub fn read_forecast(raw: &RawValue, limits: &LimitsConfig, faults: &mut Faults)
     let label = label(&body, faults);
     let arrivals = outlook::arrivals(&body, evidence.latest, faults);
     let plan = outlook::plan(&body, evidence.latest, limits, faults);
-    let [links_per_node_day, departures_per_node_day, link_losses_per_link_day] =
-        ["links_per_node_day", "departures_per_node_day", "link_losses_per_link_day"]
-            .map(|name| rate(&body, name, faults).unwrap_or(0.0));
-    let request = OriginRequest {
-        evidence: evidence.whole?,
-        fit: fit?,
-        arrivals,
-        links_per_node_day,
-        departures_per_node_day,
-        link_losses_per_link_day,
-        plan: plan?,
-    };
+    let links_per_node_day = rate(&body, "links_per_node_day", faults).unwrap_or(0.0);
+    let request = OriginRequest { evidence: evidence.whole?, fit: fit?, arrivals, links_per_node_day, plan: plan? };
     Some(ForecastInputs { label, request })
 }
 
@@ -91,7 +91,16 @@ fn fit_request(body: &Object<'_>, faults: &mut Faults) -> Option<FitRequest> {
         None => Some(DEFAULT_SEED),
     };
     let links_per_arrival = rate(body, "links_per_arrival", faults);
-    Some(FitRequest { choice: choice?, fixed_mix, links_per_arrival, seed: seed? })
+    let [departures_per_node_day, link_losses_per_link_day] =
+        ["departures_per_node_day", "link_losses_per_link_day"].map(|name| rate(body, name, faults).unwrap_or(0.0));
+    Some(FitRequest {
+        choice: choice?,
+        fixed_mix,
+        links_per_arrival,
+        departures_per_node_day,
+        link_losses_per_link_day,
+        seed: seed?,
+    })
 }
 
 fn model_choice(name: &str, faults: &mut Faults) -> Option<ModelChoice> {

@@ -3,7 +3,7 @@
 use super::csv::percent;
 use super::text::{figure, wrap};
 use crate::service::{
-    AttachmentModel, CountAnswer, EvidenceKind, FitReport, ForecastAnswer, IntervalAnswer, TailAnswer,
+    AttachmentModel, CountAnswer, DegreeAnswer, EvidenceKind, FitReport, ForecastAnswer, IntervalAnswer, TailAnswer,
 };
 
 /// Widest line.
@@ -65,7 +65,7 @@ fn rows(answer: &ForecastAnswer) -> Vec<String> {
             date = "";
         }
         cells.push(count_row(date, "all nodes", &at.nodes, &shown));
-        cells.push(count_row("", "largest degree", &at.largest_degree, &shown));
+        cells.push(degree_row("largest degree", &at.largest_degree, &shown));
     }
     align(&cells)
 }
@@ -85,16 +85,23 @@ fn header(answer: &ForecastAnswer, shown: &[usize]) -> Vec<String> {
 
 fn tail_row(date: &str, tail: &TailAnswer, shown: &[usize]) -> Vec<String> {
     let name = figure(tail.threshold as f64);
-    row(date, &name, [tail.now.0, tail.expected.0, tail.median.0], &tail.intervals, shown)
+    let figures = [tail.now.0, tail.expected.0, tail.median.0].map(figure);
+    row(date, &name, figures, &tail.intervals, shown)
 }
 
 fn count_row(date: &str, name: &str, count: &CountAnswer, shown: &[usize]) -> Vec<String> {
-    row(date, name, [count.now.0, count.expected.0, count.median.0], &count.intervals, shown)
+    let figures = [count.now.0, count.expected.0, count.median.0].map(figure);
+    row(date, name, figures, &count.intervals, shown)
 }
 
-fn row(date: &str, name: &str, figures: [f64; 3], intervals: &[IntervalAnswer], shown: &[usize]) -> Vec<String> {
+fn degree_row(name: &str, degree: &DegreeAnswer, shown: &[usize]) -> Vec<String> {
+    let figures = [figure(degree.now.0), "-".to_owned(), figure(degree.median.0)];
+    row("", name, figures, &degree.intervals, shown)
+}
+
+fn row(date: &str, name: &str, figures: [String; 3], intervals: &[IntervalAnswer], shown: &[usize]) -> Vec<String> {
     let mut cells = vec![date.to_owned(), name.to_owned()];
-    cells.extend(figures.map(figure));
+    cells.extend(figures);
     let interval = |i: &IntervalAnswer| format!("{} to {}", figure(i.low.0), figure(i.high.0));
     cells.extend(shown.iter().map(|&i| intervals.get(i).map(interval).unwrap_or_default()));
     cells

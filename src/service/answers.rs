@@ -165,12 +165,17 @@ pub struct CandidateAnswer {
 pub struct GoodnessAnswer {
     /// Largest distance between observed and fitted share of nodes with at least so many links (Kolmogorov–Smirnov).
     pub distance: Real,
-    /// Share of samples drawn from the fitted law that lie at least as far from it.
-    pub p_value: Real,
+    /// Share of samples drawn from the fitted law that lie at least as far from it; null with two snapshots or more.
+    pub p_value: Option<Real>,
     /// Samples drawn.
     pub replicates: u32,
-    /// Largest absolute logarithm of observed over fitted tail size.
+    /// Logarithm of observed over fitted tail size where it is farthest from 0.
     pub worst_log_ratio: Real,
+    /// Mean squared misfit of the flows past each degree over their variance, 1 when only chance is at work; null with
+    /// one snapshot.
+    pub dispersion: Option<Real>,
+    /// Typical relative error of the fitted flows, chance included; null with one snapshot.
+    pub flow_error: Option<Real>,
 }
 
 /// The forecast at one date.
@@ -184,7 +189,7 @@ pub struct DateAnswer {
     /// Link ends.
     pub links: CountAnswer,
     /// Largest degree of any node.
-    pub largest_degree: CountAnswer,
+    pub largest_degree: DegreeAnswer,
     /// Tail sizes, thresholds ascending.
     pub tail: Vec<TailAnswer>,
 }
@@ -196,6 +201,17 @@ pub struct CountAnswer {
     pub now: Count,
     /// Expected count.
     pub expected: Real,
+    /// As likely to be exceeded as not.
+    pub median: Real,
+    /// Central intervals, levels ascending.
+    pub intervals: Vec<IntervalAnswer>,
+}
+
+/// A forecast degree. It has no expected value: the tail may be so heavy that there is none.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize, ToSchema)]
+pub struct DegreeAnswer {
+    /// The degree in the newest snapshot.
+    pub now: Count,
     /// As likely to be exceeded as not.
     pub median: Real,
     /// Central intervals, levels ascending.

@@ -6,16 +6,15 @@ use serde::Serialize;
 use serde::de::DeserializeOwned;
 
 use super::answers::{
-    AttachmentModel, CandidateAnswer, CountAnswer, DateAnswer, EstimateAnswer, EvidenceKind, FitAnswer, FitReport,
-    ForecastAnswer, GoodnessAnswer, IntervalAnswer, TailAnswer, TailPointAnswer, WarningAnswer,
+    AttachmentModel, CandidateAnswer, CountAnswer, DateAnswer, DegreeAnswer, EstimateAnswer, EvidenceKind, FitAnswer,
+    FitReport, ForecastAnswer, GoodnessAnswer, IntervalAnswer, TailAnswer, TailPointAnswer, WarningAnswer,
 };
-use super::error::Unanswered;
 use super::inputs::{FitInputs, ForecastInputs, Label, sha256_hex};
 use super::numbers::{Count, Real, date_text};
 use super::{ENGINE, ServiceError};
-use crate::evaluate;
+use crate::evaluate::{self, OriginError};
 use crate::fit::{Candidate, Fit, Goodness, Model, Rung, TailPoint};
-use crate::forecast::{CountForecast, DateForecast, TailForecast};
+use crate::forecast::{CountForecast, DateForecast, DegreeForecast, TailForecast};
 use crate::model::{Estimate, Interval, Warning};
 use crate::store::RunKind;
 
@@ -49,7 +48,7 @@ pub trait Question: Send + 'static {
     ///
     /// # Errors
     /// When the inputs have no answer.
-    fn answer(&self, inputs_digest: String, cancelled: &dyn Fn() -> bool) -> Result<Self::Answer, Unanswered>;
+    fn answer(&self, inputs_digest: String, cancelled: &dyn Fn() -> bool) -> Result<Self::Answer, OriginError>;
 }
 
 /// Answers a question here and now, keeping nothing.
@@ -59,7 +58,7 @@ pub trait Question: Send + 'static {
 pub fn answer_at_once<Q: Question>(question: &Q) -> Result<Q::Answer, ServiceError> {
     let canonical = question.canonical().map_err(|error| ServiceError::Broken(error.to_string()))?;
     let answer = question.answer(inputs_digest(&canonical), &|| false);
-    answer.map_err(|failure| ServiceError::from_unanswered(failure, Duration::ZERO))
+    answer.map_err(|failure| ServiceError::from_core(failure, Duration::ZERO))
 }
 
 /// Digest of canonical inputs as answers write it.
@@ -83,10 +82,7 @@ impl Question for ForecastInputs {
         Self::canonical(self)
     }
 
-    fn answer(&self, inputs_digest: String, cancelled: &dyn Fn() -> bool) -> Result<ForecastAnswer, Unanswered> {
-        if self.request.arrivals.is_none() && self.request.evidence.snapshots().len() == 1 {
-            return Err(Unanswered::ArrivalsRequired);
-        }
+    fn answer(&self, inputs_digest: String, cancelled: &dyn Fn() -> bool) -> Result<ForecastAnswer, OriginError> {
         let found = evaluate::answer(&self.request, cancelled)?;
         Ok(ForecastAnswer {
             label: self.label.as_ref().map(|label| label.as_str().to_owned()),
@@ -118,7 +114,7 @@ impl Question for FitInputs {
         Self::canonical(self)
     }
 
-    fn answer(&self, inputs_digest: String, _cancelled: &dyn Fn() -> bool) -> Result<FitAnswer, Unanswered> {
+    fn answer(&self, inputs_digest: String, _cancelled: &dyn Fn() -> bool) -> Result<FitAnswer, OriginError> {
         let fit = evaluate::fit_evidence(&self.evidence, &self.fit)?;
         Ok(FitAnswer {
             label: self.label.as_ref().map(|label| label.as_str().to_owned()),
@@ -190,9 +186,11 @@ impl From<&Goodness> for GoodnessAnswer {
     fn from(goodness: &Goodness) -> Self {
         Self {
             distance: Real(goodness.distance),
-            p_value: Real(goodness.p_value),
+            p_value: goodness.p_value.map(Real),
             replicates: goodness.replicates,
             worst_log_ratio: Real(goodness.worst_log_ratio),
+            dispersion: goodness.dispersion.map(Real),
+            flow_error: goodness.flow_error.map(Real),
         }
     }
 }
@@ -223,6 +221,12 @@ impl From<&CountForecast> for CountAnswer {
             median: Real(count.median),
             intervals: intervals(&count.intervals),
         }
+    }
+}
+
+impl From<&DegreeForecast> for DegreeAnswer {
+    fn from(degree: &DegreeForecast) -> Self {
+        Self { now: Count(degree.now), median: Real(degree.median), intervals: intervals(&degree.intervals) }
     }
 }
 

@@ -5,6 +5,7 @@ use std::time::Duration;
 use crate::evaluate::OriginError;
 use crate::fit::FitError;
 use crate::forecast::ForecastError;
+use crate::growth::GrowthError;
 use crate::store::StoreError;
 
 /// Why a use case has no answer.
@@ -54,23 +55,6 @@ pub enum ServiceError {
     Broken(String),
 }
 
-/// Why a computation has no answer.
-#[derive(Debug, Clone, PartialEq, thiserror::Error)]
-pub enum Unanswered {
-    /// The core said so.
-    #[error(transparent)]
-    Core(#[from] OriginError),
-    /// One snapshot and no arrivals.
-    #[error("one snapshot does not tell how many nodes arrive a day")]
-    ArrivalsRequired,
-}
-
-impl From<FitError> for Unanswered {
-    fn from(error: FitError) -> Self {
-        Self::Core(error.into())
-    }
-}
-
 impl From<StoreError> for ServiceError {
     fn from(error: StoreError) -> Self {
         match error {
@@ -81,17 +65,21 @@ impl From<StoreError> for ServiceError {
 }
 
 impl ServiceError {
-    /// The computation's failure; `budget` is what it had when it was cancelled.
-    pub fn from_unanswered(unanswered: Unanswered, budget: Duration) -> Self {
-        match unanswered {
-            Unanswered::ArrivalsRequired => Self::ArrivalsRequired,
-            Unanswered::Core(OriginError::Fit(FitError::NotIdentified { detail })) => Self::NotIdentified(detail),
-            Unanswered::Core(OriginError::Forecast(ForecastError::Impossible { detail })) => Self::Impossible(detail),
-            Unanswered::Core(OriginError::Forecast(ForecastError::Cancelled)) => Self::TooSlow { budget },
-            Unanswered::Core(
-                error @ (OriginError::Fit(FitError::NotConverged { .. })
-                | OriginError::Forecast(ForecastError::NotConverged { .. })),
-            ) => Self::NotConverged(error.to_string()),
+    /// The core's failure; `budget` is what it had when it was cancelled.
+    pub fn from_core(error: OriginError, budget: Duration) -> Self {
+        match error {
+            OriginError::ArrivalsRequired => Self::ArrivalsRequired,
+            OriginError::Rate(fault) => Self::Impossible(fault.to_string()),
+            OriginError::Fit(FitError::NotIdentified { detail }) => Self::NotIdentified(detail),
+            OriginError::Fit(FitError::NotConverged { detail }) => Self::NotConverged(detail),
+            OriginError::Forecast(ForecastError::Impossible { detail }) => Self::Impossible(detail),
+            OriginError::Forecast(ForecastError::Cancelled) => Self::TooSlow { budget },
+            OriginError::Fit(FitError::Growth(growth)) | OriginError::Forecast(ForecastError::Growth(growth)) => {
+                match growth {
+                    GrowthError::NobodyStarts | GrowthError::TooFast { .. } => Self::Impossible(growth.to_string()),
+                    GrowthError::Inversion(_) => Self::NotConverged(growth.to_string()),
+                }
+            }
         }
     }
 }

@@ -8,6 +8,7 @@ use uuid::Uuid;
 use super::compute::{Question, inputs_digest};
 use super::inputs::sha256_hex;
 use super::{ENGINE, KeyClaim, RunFilter, RunKind, RunSummary, Service, ServiceError, StoredRun};
+use crate::evaluate::OriginError;
 use crate::store::{Inserted, NewRun};
 
 /// A run's document: its head in front of its answer.
@@ -94,14 +95,14 @@ impl Service {
 
 /// Why a computation gave no run to keep.
 enum Failure {
-    Unanswered(super::error::Unanswered),
+    Unanswered(OriginError),
     Unwritable(serde_json::Error),
 }
 
 impl Failure {
     fn into_service_error(self, budget: std::time::Duration) -> ServiceError {
         match self {
-            Self::Unanswered(unanswered) => ServiceError::from_unanswered(unanswered, budget),
+            Self::Unanswered(unanswered) => ServiceError::from_core(unanswered, budget),
             Self::Unwritable(error) => ServiceError::Broken(format!("the answer cannot be written: {error}")),
         }
     }

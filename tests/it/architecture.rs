@@ -14,8 +14,8 @@ const ARROWS: [(&str, &[&str]); 13] = [
     ("config", &[]),
     ("telemetry", &["config"]),
     ("store", &["config", "model"]),
-    // fit and forecast: the words of evaluate's requests, answers and errors.
-    ("service", &["config", "evaluate", "fit", "forecast", "model", "store"]),
+    // fit, forecast and growth: the words of evaluate's requests, answers and errors.
+    ("service", &["config", "evaluate", "fit", "forecast", "growth", "model", "store"]),
     ("report", &["service"]),
     ("api", &["config", "model", "report", "service"]),
     // growth: the demo grows its network with the simulator, so that what comes true is known.
