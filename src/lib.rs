@@ -10,3 +10,18 @@ pub mod forecast;
 pub mod growth;
 pub mod model;
 pub mod numerics;
+
+#[cfg(feature = "server")]
+pub mod api;
+#[cfg(feature = "server")]
+pub mod app;
+#[cfg(feature = "server")]
+pub mod config;
+#[cfg(feature = "server")]
+pub mod report;
+#[cfg(feature = "server")]
+pub mod service;
+#[cfg(feature = "server")]
+pub mod store;
+#[cfg(feature = "server")]
+pub mod telemetry;

@@ -1,0 +1,20 @@
+# Build: needs nothing from the network but the crates of Cargo.lock.
+FROM rust:1.95-slim-bookworm AS build
+WORKDIR /src
+COPY . .
+RUN cargo build --release --locked --bin tailcast
+
+# Run: the binary, a user of its own, a folder for the database.
+FROM debian:bookworm-slim
+RUN useradd --system --uid 10001 --create-home --home-dir /var/lib/tailcast tailcast
+COPY --from=build /src/target/release/tailcast /usr/local/bin/tailcast
+USER tailcast
+WORKDIR /var/lib/tailcast
+VOLUME /var/lib/tailcast
+# Inside a container loopback is reachable from nowhere. Publish the port to the host's loopback, or put a gateway with
+# access control in front: docker run -p 127.0.0.1:8080:8080 …
+ENV TAILCAST_BIND=0.0.0.0:8080
+EXPOSE 8080
+HEALTHCHECK --interval=10s --timeout=5s --start-period=5s CMD ["tailcast", "check"]
+ENTRYPOINT ["tailcast"]
+CMD ["serve"]

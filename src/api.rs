@@ -1,0 +1,124 @@
+//! HTTP: routes, extractors, one error table, request and answer forms.
+//!
+//! A handler takes apart a request, makes one service call and puts together a response; everything that can go wrong
+//! is an [`ApiError`], which the outermost layer answers as a problem document.
+
+mod decode;
+mod docs;
+mod error;
+mod examples;
+mod extract;
+mod fits;
+mod forecasts;
+mod observe;
+mod probes;
+mod problem;
+mod requests;
+mod runs;
+
+use std::sync::Arc;
+
+use axum::extract::{Request, State};
+use axum::middleware::{self, Next};
+use axum::response::{IntoResponse, Response};
+use axum::{Extension, Router};
+use metrics_exporter_prometheus::PrometheusHandle;
+use tokio::sync::Semaphore;
+use tower_http::catch_panic::CatchPanicLayer;
+use utoipa::openapi::OpenApi;
+use utoipa_axum::router::OpenApiRouter;
+
+use crate::config::{HttpConfig, LimitsConfig};
+use crate::service::Service;
+
+pub use error::ApiError;
+pub use examples::forecast_request as example_request;
+pub use extract::read_json;
+pub use problem::Problem;
+pub use requests::{
+    ArrivalsBody, DegreeKindName, FIT_FIELDS, FORECAST_FIELDS, FitRequestBody, FixedBody, ForecastRequestBody,
+    HorizonBody, ModelName, SegmentBody, SnapshotBody, read_fit, read_forecast,
+};
+
+/// What handlers share.
+#[derive(Clone)]
+pub struct AppState {
+    /// The use cases.
+    pub service: Service,
+    /// Limits of the HTTP side.
+    pub http: Arc<HttpConfig>,
+    /// Limits of one request's content.
+    pub limits: LimitsConfig,
+    /// The process's metrics.
+    pub metrics: PrometheusHandle,
+}
+
+/// Every route with every layer around it.
+pub fn router(state: AppState) -> Router {
+    let places = Arc::new(Semaphore::new(state.http.max_in_flight.min(Semaphore::MAX_PERMITS)));
+    let (work, _) = work_routes().split_for_parts();
+    let work = work.layer(middleware::from_fn_with_state(places, admit));
+    let (around, _) = around_routes().split_for_parts();
+    let document = docs::DocumentText(openapi_text().into());
+    observed(work.merge(around).merge(docs::pages()).layer(Extension(document))).with_state(state)
+}
+
+/// Routes with the outermost layers: whatever happens inside, a response leaves, and an error leaves as a problem.
+fn observed<S: Clone + Send + Sync + 'static>(routes: Router<S>) -> Router<S> {
+    routes.layer(CatchPanicLayer::new()).layer(middleware::from_fn(observe::observe))
+}
+
+/// The OpenAPI document; needs no database and no configuration.
+pub fn openapi() -> OpenApi {
+    OpenApiRouter::with_openapi(docs::preamble()).merge(work_routes()).merge(around_routes()).into_openapi()
+}
+
+/// The OpenAPI document as it is served and committed.
+pub fn openapi_text() -> String {
+    // It is made of constants; a test reads it back.
+    openapi().to_pretty_json().map(|text| text + "\n").unwrap_or_default()
+}
+
+/// Routes that do the service's work, and count against `http.max_in_flight`.
+fn work_routes() -> OpenApiRouter<AppState> {
+    OpenApiRouter::new().merge(forecasts::routes()).merge(fits::routes())
+}
+
+/// Routes that must answer however busy the others are.
+fn around_routes() -> OpenApiRouter<AppState> {
+    OpenApiRouter::new().merge(probes::routes()).merge(docs::routes())
+}
+
+/// Turns a request away at once when all places are taken.
+async fn admit(State(places): State<Arc<Semaphore>>, request: Request, next: Next) -> Response {
+    match places.try_acquire() {
+        Ok(_place) => next.run(request).await,
+        Err(_) => ApiError::Full.into_response(),
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use axum::routing::get;
+    use tokio::net::TcpListener;
+
+    use super::*;
+
+    async fn panics() -> &'static str {
+        std::panic::panic_any("a secret")
+    }
+
+    #[tokio::test]
+    async fn a_panic_leaves_as_a_problem_that_gives_nothing_away() {
+        let routes = Router::new().route("/", get(panics));
+        let listener = TcpListener::bind("127.0.0.1:0").await.unwrap();
+        let address = listener.local_addr().unwrap();
+        tokio::spawn(async move { axum::serve(listener, observed::<()>(routes)).await });
+        let client = reqwest::Client::builder().no_proxy().build().unwrap();
+        let response = client.get(format!("http://{address}/")).send().await.unwrap();
+        assert_eq!(response.status().as_u16(), 500);
+        assert_eq!(response.headers()["content-type"], "application/problem+json");
+        let text = response.text().await.unwrap();
+        assert!(text.contains("\"code\":\"internal\"") && !text.contains("secret"), "{text}");
+    }
+}

@@ -1,0 +1,52 @@
+//! Reading JSON so that every fault is found and each has its place.
+//!
+//! A body is first cut into raw values, which checks its grammar; each value is then read by what it must be. What is
+//! wrong goes to [`Faults`] with an RFC 6901 pointer, and reading goes on. Numbers are judged by their text, so that
+//! 1e400 is refused where it stands instead of ending the parse.
+
+mod counts;
+mod faults;
+mod number;
+mod object;
+mod time;
+
+pub use counts::degree_counts;
+pub use faults::{At, Fault, Faults, Place};
+pub use number::{real, whole};
+pub use object::{Object, list, object, text, unknown_name};
+pub use time::{every, instant};
+
+use serde_json::value::RawValue;
+
+/// Longest piece of a refused value that is quoted back.
+const QUOTED_CHARS: usize = 40;
+
+/// What a raw value is, as JSON names it.
+fn kind_of(raw: &RawValue) -> &'static str {
+    match raw.get().as_bytes().first() {
+        Some(b'{') => "an object",
+        Some(b'[') => "an array",
+        Some(b'"') => "a string",
+        Some(b't' | b'f') => "a boolean",
+        Some(b'n') => "null",
+        _ => "a number",
+    }
+}
+
+/// A raw value as it is quoted in a message: at most a few characters of it.
+fn quoted(raw: &RawValue) -> String {
+    let text = raw.get();
+    match text.char_indices().nth(QUOTED_CHARS) {
+        Some((end, _)) => format!("{}…", &text[..end]),
+        None => text.to_owned(),
+    }
+}
+
+/// What to do about a value of the wrong kind.
+fn advice_for(raw: &RawValue) -> &'static str {
+    match raw.get().as_bytes().first() {
+        Some(b'n') => "; leave the field out when there is nothing to say",
+        Some(b'"') => "; write it without quotes",
+        _ => "",
+    }
+}

@@ -1,0 +1,171 @@
+//! The one table of errors: the status and code each is answered with, and what to do about it.
+
+use std::time::Duration;
+
+use axum::http::StatusCode;
+use axum::response::{IntoResponse, Response};
+
+use super::decode::{At, Fault, Faults, Place};
+use super::problem::Problem;
+use crate::service::ServiceError;
+
+/// After how long to try again when all places are taken.
+const BUSY_RETRY: Duration = Duration::from_secs(1);
+
+/// Everything a request can end in other than its answer.
+#[derive(Debug)]
+pub enum ApiError {
+    /// The body is not JSON.
+    MalformedJson(String),
+    /// The content of the request is wrong.
+    Invalid(Faults),
+    /// The body's media type is not JSON.
+    UnsupportedMediaType,
+    /// The body is larger than configured.
+    TooLarge {
+        /// The largest body, bytes.
+        limit: usize,
+    },
+    /// The body did not arrive in time.
+    BodyTooSlow {
+        /// The time it had.
+        limit: Duration,
+    },
+    /// The body broke off.
+    BodyBroken,
+    /// None of the forms that the client takes is one we have.
+    NotAcceptable,
+    /// As many requests as configured are being served.
+    Full,
+    /// A use case failed.
+    Service(ServiceError),
+    /// An invariant of this layer does not hold.
+    Broken(String),
+}
+
+impl From<ServiceError> for ApiError {
+    fn from(error: ServiceError) -> Self {
+        Self::Service(error)
+    }
+}
+
+impl ApiError {
+    /// A single fault.
+    pub fn fault(place: Place, detail: impl Into<String>) -> Self {
+        let mut faults = Faults::default();
+        faults.push(Fault { place, detail: detail.into() });
+        Self::Invalid(faults)
+    }
+
+    /// The error as a problem document: the table.
+    pub fn into_problem(self) -> Problem {
+        use StatusCode as S;
+        match self {
+            Self::MalformedJson(why) => Problem::new(S::BAD_REQUEST, "malformed_json", why),
+            Self::Invalid(faults) => {
+                let detail = "The request was understood but parts of it are wrong; errors lists each with its place.";
+                Problem::new(S::BAD_REQUEST, "invalid_request", detail).with_faults(faults)
+            }
+            Self::UnsupportedMediaType => {
+                let detail = "The body must be JSON; send it with the header Content-Type: application/json.";
+                Problem::new(S::UNSUPPORTED_MEDIA_TYPE, "unsupported_media_type", detail)
+            }
+            Self::TooLarge { limit } => {
+                let detail = format!(
+                    "The body is larger than {limit} bytes. A degree with its number of nodes takes one pair however \
+                     many nodes there are: send counts per degree, not a list of nodes; or raise \
+                     http.body_limit_bytes."
+                );
+                Problem::new(S::PAYLOAD_TOO_LARGE, "body_too_large", detail)
+            }
+            Self::BodyTooSlow { limit } => {
+                let detail = format!("The body did not arrive within {} s; send it again.", limit.as_secs());
+                Problem::new(S::REQUEST_TIMEOUT, "body_too_slow", detail)
+            }
+            Self::BodyBroken => {
+                let detail = "The body broke off before its announced end; send it again.";
+                Problem::new(S::BAD_REQUEST, "body_broken_off", detail)
+            }
+            Self::NotAcceptable => {
+                let detail = "Results are offered as application/json and text/csv; name one in Accept, or add \
+                              ?format=json or ?format=csv.";
+                Problem::new(S::NOT_ACCEPTABLE, "not_acceptable", detail)
+            }
+            Self::Full => {
+                let detail = "As many requests as this service takes at once are being served; try again shortly.";
+                Problem::new(S::SERVICE_UNAVAILABLE, "overloaded", detail).retry_after(BUSY_RETRY)
+            }
+            Self::Service(error) => service_problem(error),
+            Self::Broken(cause) => broken(cause),
+        }
+    }
+}
+
+fn service_problem(error: ServiceError) -> Problem {
+    use StatusCode as S;
+    match error {
+        ServiceError::NotFound => {
+            let detail = "There is no such run: it was never made, or was deleted.";
+            Problem::new(S::NOT_FOUND, "not_found", detail)
+        }
+        ServiceError::KeyTaken => {
+            let detail = "This Idempotency-Key came before with another body; use a new key for a new request.";
+            Problem::new(S::CONFLICT, "idempotency_key_reused", detail)
+        }
+        ServiceError::TagMismatch => {
+            let detail = "The run is not the one that If-Match names; read it again and use its ETag.";
+            Problem::new(S::PRECONDITION_FAILED, "precondition_failed", detail)
+        }
+        ServiceError::Busy => {
+            let detail = "Every worker is taken and the queue is full; try again shortly.";
+            Problem::new(S::SERVICE_UNAVAILABLE, "overloaded", detail).retry_after(BUSY_RETRY)
+        }
+        ServiceError::TooSlow { budget } => {
+            let detail = format!(
+                "The answer was not ready within {} s. Try again later, ask for fewer dates and thresholds, or raise \
+                 compute.budget_seconds.",
+                budget.as_secs()
+            );
+            Problem::new(S::SERVICE_UNAVAILABLE, "too_slow", detail).retry_after(budget.max(BUSY_RETRY))
+        }
+        ServiceError::ArrivalsRequired => {
+            let detail = "One snapshot does not tell how many nodes arrive; give arrivals, or a second snapshot.";
+            let mut faults = Faults::default();
+            faults.add(&At::ROOT.field("arrivals"), "needed with one snapshot, as in {\"per_day\": 42.0}");
+            Problem::new(S::UNPROCESSABLE_ENTITY, "arrivals_required", detail).with_faults(faults)
+        }
+        ServiceError::NotIdentified(why) => Problem::new(S::UNPROCESSABLE_ENTITY, "not_identified", why),
+        ServiceError::Impossible(why) => Problem::new(S::UNPROCESSABLE_ENTITY, "impossible", why),
+        ServiceError::NotConverged(why) => {
+            let detail = format!(
+                "{why}. Check the counts for outliers, name a simpler model (uniform or preferential), or give the mix \
+                 in fixed."
+            );
+            Problem::new(S::UNPROCESSABLE_ENTITY, "not_converged", detail)
+        }
+        ServiceError::TablesOutdated => {
+            let detail = "The database's tables are not those of this version; run the migrate command.";
+            Problem::new(S::SERVICE_UNAVAILABLE, "not_ready", detail).retry_after(BUSY_RETRY)
+        }
+        error @ ServiceError::StoreBusy(_) => {
+            let detail = "The database is busy; try again shortly.";
+            Problem::new(S::SERVICE_UNAVAILABLE, "store_busy", detail)
+                .retry_after(BUSY_RETRY)
+                .because(error.to_string())
+        }
+        error @ ServiceError::Store(_) => broken(error.to_string()),
+        ServiceError::Broken(cause) => broken(cause),
+    }
+}
+
+/// A fault of ours: the cause goes to the log, the client gets the request id and nothing else.
+fn broken(cause: String) -> Problem {
+    let detail = "Something broke on our side; the log has the cause under this request id.";
+    Problem::new(StatusCode::INTERNAL_SERVER_ERROR, "internal", detail).because(cause)
+}
+
+impl IntoResponse for ApiError {
+    fn into_response(self) -> Response {
+        self.into_problem().into_response()
+    }
+}

@@ -1,0 +1,111 @@
+//! A JSON body.
+
+use axum::body::{Bytes, to_bytes};
+use axum::extract::{FromRequest, Request};
+use axum::http::{HeaderMap, header};
+use serde_json::value::RawValue;
+use tokio::task::spawn_blocking;
+use tokio::time::timeout;
+
+use crate::api::decode::Faults;
+use crate::api::{ApiError, AppState};
+
+/// Bodies above this many bytes are read off the async runtime: below, handing over costs more than reading.
+const OFFLOAD_BYTES: usize = 64 * 1024;
+
+/// A body announced as JSON, complete and within the size limit, not yet read.
+#[derive(Debug, Clone)]
+pub struct JsonBody(Bytes);
+
+impl JsonBody {
+    /// The bytes as they came.
+    pub fn bytes(&self) -> &[u8] {
+        &self.0
+    }
+
+    /// Reads the body with `read`, which notes every fault.
+    pub async fn read<T: Send + 'static>(
+        self,
+        read: impl FnOnce(&RawValue, &mut Faults) -> Option<T> + Send + 'static,
+    ) -> Result<T, ApiError> {
+        if self.0.len() <= OFFLOAD_BYTES {
+            return read_json(&self.0, read);
+        }
+        let reading = spawn_blocking(move || read_json(&self.0, read)).await;
+        reading.unwrap_or_else(|error| Err(ApiError::Broken(format!("reading a body stopped short: {error}"))))
+    }
+}
+
+impl FromRequest<AppState> for JsonBody {
+    type Rejection = ApiError;
+
+    async fn from_request(request: Request, state: &AppState) -> Result<Self, ApiError> {
+        let (limit, time) = (state.http.body_limit_bytes, state.http.body_timeout());
+        if !is_json(request.headers()) {
+            return Err(ApiError::UnsupportedMediaType);
+        }
+        let announced =
+            request.headers().get(header::CONTENT_LENGTH).and_then(|value| value.to_str().ok()?.parse().ok());
+        if announced.is_some_and(|length: u64| length > limit as u64) {
+            return Err(ApiError::TooLarge { limit });
+        }
+        match timeout(time, to_bytes(request.into_body(), limit)).await {
+            Ok(Ok(bytes)) => Ok(Self(bytes)),
+            Ok(Err(error)) if is_length_limit(&error) => Err(ApiError::TooLarge { limit }),
+            Ok(Err(_)) => Err(ApiError::BodyBroken),
+            Err(_) => Err(ApiError::BodyTooSlow { limit: time }),
+        }
+    }
+}
+
+/// Reads JSON text with `read`; the outcome is what it gives, unless it noted a fault.
+pub fn read_json<T>(bytes: &[u8], read: impl FnOnce(&RawValue, &mut Faults) -> Option<T>) -> Result<T, ApiError> {
+    let malformed = |why: String| Err(ApiError::MalformedJson(why));
+    // JSON text from some editors starts with a byte order mark; RFC 8259 lets a reader pass over it.
+    let bytes = bytes.strip_prefix(b"\xef\xbb\xbf").unwrap_or(bytes);
+    let Ok(text) = std::str::from_utf8(bytes) else {
+        return malformed("The body is not UTF-8; JSON is.".into());
+    };
+    if text.trim().is_empty() {
+        return malformed("The body is empty; a JSON object is wanted.".into());
+    }
+    let raw = match serde_json::from_str::<&RawValue>(text) {
+        Ok(raw) => raw,
+        Err(error) if error.is_eof() => return malformed(format!("The body breaks off before its end: {error}.")),
+        Err(error) => return malformed(format!("The body is not JSON: {error}.")),
+    };
+    let mut faults = Faults::default();
+    match read(raw, &mut faults) {
+        Some(value) if faults.is_empty() => Ok(value),
+        None if faults.is_empty() => Err(ApiError::Broken("a body was refused without a fault".into())),
+        _ => Err(ApiError::Invalid(faults)),
+    }
+}
+
+/// `application/json` or another JSON format's media type, in UTF-8.
+fn is_json(headers: &HeaderMap) -> bool {
+    let Some(Ok(value)) = headers.get(header::CONTENT_TYPE).map(|value| value.to_str()) else { return false };
+    let mut parts = value.split(';').map(str::trim);
+    let essence = parts.next().unwrap_or_default().to_ascii_lowercase();
+    let json = essence == "application/json" || (essence.starts_with("application/") && essence.ends_with("+json"));
+    let utf8 = parts.all(|parameter| match parameter.split_once('=') {
+        Some((name, value)) if name.eq_ignore_ascii_case("charset") => {
+            let value = value.trim_matches('"');
+            value.eq_ignore_ascii_case("utf-8") || value.eq_ignore_ascii_case("us-ascii")
+        }
+        _ => true,
+    });
+    json && utf8
+}
+
+fn is_length_limit(error: &axum::Error) -> bool {
+    let mut cause: Option<&(dyn std::error::Error + 'static)> = Some(error);
+    while let Some(inner) = cause {
+        // The limiting body's own error; its type is in a crate we do not depend on.
+        if inner.to_string() == "length limit exceeded" {
+            return true;
+        }
+        cause = inner.source();
+    }
+    false
+}

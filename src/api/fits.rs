@@ -1,0 +1,173 @@
+//! `/v1/fits`
+
+use axum::extract::{Path, State};
+use axum::http::{HeaderMap, StatusCode};
+use axum::response::Response;
+use utoipa_axum::router::OpenApiRouter;
+use utoipa_axum::routes;
+
+use super::extract::{IdempotencyKey, JsonBody, Listing, ResultFormat, run_id};
+use super::problem::Problem;
+use super::requests::{FitRequestBody, read_fit};
+use super::runs::{self, RunPage};
+use super::{ApiError, AppState, examples};
+use crate::report;
+use crate::service::{FitRun, RunKind};
+
+const PATH: &str = "/v1/fits";
+
+/// The routes of this resource.
+pub fn routes() -> OpenApiRouter<AppState> {
+    OpenApiRouter::new().routes(routes!(list_fits, create_fit)).routes(routes!(get_fit, delete_fit))
+}
+
+/// Fit the attachment mix
+///
+/// Fits the degree counts without forecasting from them, keeps the run, answers with it and its diagnostics.
+#[utoipa::path(
+    post,
+    path = "/v1/fits",
+    tag = "fits",
+    params(
+        ("format" = Option<String>, Query, description = "json or csv; goes before Accept"),
+        ("Idempotency-Key" = Option<String>, Header,
+            description = "Requests with the same key and body are one and the same: the run is made once."),
+    ),
+    request_body(content = FitRequestBody, content_type = "application/json", example = examples::fit_request),
+    responses(
+        (status = 201, description = "The run, kept", headers(
+            ("Location" = String, description = "Where the run is kept"),
+            ("ETag" = String, description = "Strong validator of this form of the run"),
+            ("Last-Modified" = String, description = "When the run was made"),
+        ), content(
+            (FitRun = "application/json"),
+            (String = "text/csv"),
+        )),
+        (status = 400, description = "Not JSON, or parts of it are wrong", body = Problem,
+            content_type = "application/problem+json"),
+        (status = 406, description = "No acceptable form", body = Problem, content_type = "application/problem+json"),
+        (status = 408, description = "The body came too slowly", body = Problem, content_type = "application/problem+json"),
+        (status = 409, description = "The key came before with another body", body = Problem,
+            content_type = "application/problem+json"),
+        (status = 413, description = "The body is too large", body = Problem, content_type = "application/problem+json"),
+        (status = 415, description = "The body is not announced as JSON", body = Problem,
+            content_type = "application/problem+json"),
+        (status = 422, description = "Well formed, but no fit follows from it; the detail says what would help",
+            body = Problem, content_type = "application/problem+json"),
+        (status = 500, description = "A fault of ours", body = Problem, content_type = "application/problem+json"),
+        (status = 503, description = "Too busy or too slow; Retry-After says when to try again", body = Problem,
+            content_type = "application/problem+json"),
+    )
+)]
+async fn create_fit(
+    State(state): State<AppState>,
+    format: ResultFormat,
+    key: IdempotencyKey,
+    body: JsonBody,
+) -> Result<Response, ApiError> {
+    let claim = key.claim(&body);
+    let limits = state.limits;
+    let inputs = body.read(move |raw, faults| read_fit(raw, &limits, faults)).await?;
+    let run = state.service.create(inputs, claim).await?;
+    runs::created(PATH, run, format, csv)
+}
+
+/// Read a fit
+///
+/// The run, byte for byte as it was first answered.
+#[utoipa::path(
+    get,
+    path = "/v1/fits/{id}",
+    tag = "fits",
+    params(
+        ("id" = String, Path, description = "Id of the run"),
+        ("format" = Option<String>, Query, description = "json or csv; goes before Accept"),
+        ("If-None-Match" = Option<String>, Header, description = "Answer 304 when the run still has this ETag"),
+    ),
+    responses(
+        (status = 200, description = "The run", headers(
+            ("ETag" = String, description = "Strong validator of this form of the run"),
+            ("Last-Modified" = String, description = "When the run was made"),
+            ("Cache-Control" = String, description = "private, no-cache: keep it, but ask before each use"),
+        ), content(
+            (FitRun = "application/json"),
+            (String = "text/csv"),
+        )),
+        (status = 304, description = "The client has it already"),
+        (status = 400, description = "A parameter is wrong", body = Problem, content_type = "application/problem+json"),
+        (status = 404, description = "No such run", body = Problem, content_type = "application/problem+json"),
+        (status = 406, description = "No acceptable form", body = Problem, content_type = "application/problem+json"),
+        (status = 500, description = "A fault of ours", body = Problem, content_type = "application/problem+json"),
+        (status = 503, description = "Too busy", body = Problem, content_type = "application/problem+json"),
+    )
+)]
+async fn get_fit(
+    State(state): State<AppState>,
+    Path(id): Path<String>,
+    format: ResultFormat,
+    headers: HeaderMap,
+) -> Result<Response, ApiError> {
+    let run = state.service.run(RunKind::Fit, run_id(&id)?).await?;
+    runs::found(run, format, &headers, csv)
+}
+
+/// List fits
+///
+/// Newest first; the Link header leads to the next page.
+#[utoipa::path(
+    get,
+    path = "/v1/fits",
+    tag = "fits",
+    params(
+        ("network" = Option<String>, Query, description = "Only runs of this tracked network"),
+        ("label" = Option<String>, Query, description = "Only runs with this label"),
+        ("limit" = Option<u32>, Query, description = "At most this many, up to 200; 50 when left out", minimum = 1, maximum = 200),
+        ("cursor" = Option<String>, Query, description = "Where to go on, from the Link of the page before"),
+    ),
+    responses(
+        (status = 200, description = "A page of runs", body = RunPage, headers(
+            ("Link" = String, description = "Address of the next page, rel=\"next\"; absent on the last page"),
+        )),
+        (status = 400, description = "A parameter is wrong", body = Problem, content_type = "application/problem+json"),
+        (status = 500, description = "A fault of ours", body = Problem, content_type = "application/problem+json"),
+        (status = 503, description = "Too busy", body = Problem, content_type = "application/problem+json"),
+    )
+)]
+async fn list_fits(State(state): State<AppState>, listing: Listing) -> Result<Response, ApiError> {
+    let (found, more) = state.service.list(RunKind::Fit, listing.filter.clone()).await?;
+    runs::page(PATH, &listing, found, more)
+}
+
+/// Delete a fit
+///
+/// The run goes, and with it the idempotency keys that led to it.
+#[utoipa::path(
+    delete,
+    path = "/v1/fits/{id}",
+    tag = "fits",
+    params(
+        ("id" = String, Path, description = "Id of the run"),
+        ("If-Match" = Option<String>, Header, description = "Delete only when the run has this ETag"),
+    ),
+    responses(
+        (status = 204, description = "It is gone"),
+        (status = 404, description = "No such run", body = Problem, content_type = "application/problem+json"),
+        (status = 412, description = "The run has another ETag", body = Problem, content_type = "application/problem+json"),
+        (status = 500, description = "A fault of ours", body = Problem, content_type = "application/problem+json"),
+        (status = 503, description = "Too busy", body = Problem, content_type = "application/problem+json"),
+    )
+)]
+async fn delete_fit(
+    State(state): State<AppState>,
+    Path(id): Path<String>,
+    headers: HeaderMap,
+) -> Result<StatusCode, ApiError> {
+    let matches = |tag: &str| runs::if_match_holds(&headers, tag);
+    state.service.delete(RunKind::Fit, run_id(&id)?, matches).await?;
+    Ok(StatusCode::NO_CONTENT)
+}
+
+fn csv(document: &str) -> Result<String, ApiError> {
+    let run: FitRun = serde_json::from_str(document).map_err(|error| ApiError::Broken(error.to_string()))?;
+    report::fit_csv(&run.answer).map_err(|error| ApiError::Broken(error.to_string()))
+}

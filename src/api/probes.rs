@@ -1,0 +1,54 @@
+//! Health, readiness, metrics.
+
+use axum::extract::State;
+use axum::http::{HeaderValue, header};
+use axum::response::{IntoResponse, Response};
+use utoipa_axum::router::OpenApiRouter;
+use utoipa_axum::routes;
+
+use super::problem::Problem;
+use super::{ApiError, AppState};
+
+/// The routes of this resource.
+pub fn routes() -> OpenApiRouter<AppState> {
+    OpenApiRouter::new().routes(routes!(livez)).routes(routes!(readyz)).routes(routes!(metrics))
+}
+
+/// Is the process alive?
+#[utoipa::path(get, path = "/livez", tag = "operation", responses(
+    (status = 200, description = "It is", body = String, content_type = "text/plain"),
+))]
+async fn livez() -> Response {
+    plain("alive\n")
+}
+
+/// Can it serve requests?
+///
+/// The database answers and its tables are those of this version.
+#[utoipa::path(get, path = "/readyz", tag = "operation", responses(
+    (status = 200, description = "It can", body = String, content_type = "text/plain"),
+    (status = 500, description = "The database fails", body = Problem, content_type = "application/problem+json"),
+    (status = 503, description = "Not now", body = Problem, content_type = "application/problem+json"),
+))]
+async fn readyz(State(state): State<AppState>) -> Result<Response, ApiError> {
+    state.service.check_ready().await?;
+    Ok(plain("ready\n"))
+}
+
+/// Metrics
+///
+/// Prometheus text exposition.
+#[utoipa::path(get, path = "/metrics", tag = "operation", responses(
+    (status = 200, description = "The metrics", body = String, content_type = "text/plain; version=0.0.4"),
+))]
+async fn metrics(State(state): State<AppState>) -> Response {
+    let mut response = plain("");
+    *response.body_mut() = state.metrics.render().into();
+    let kind = HeaderValue::from_static("text/plain; version=0.0.4; charset=utf-8");
+    response.headers_mut().insert(header::CONTENT_TYPE, kind);
+    response
+}
+
+fn plain(text: &'static str) -> Response {
+    ([(header::CACHE_CONTROL, "no-store")], text).into_response()
+}

@@ -1,0 +1,207 @@
+//! Request bodies as they are documented, and as our own client writes them. Reading is done by hand, for the sake of
+//! every fault's place; a test holds the two lists of fields against each other.
+
+use serde::Serialize;
+use utoipa::ToSchema;
+
+/// What a forecast is made from and what is asked of it. Unknown fields are refused. Give either `dates` or `horizon`.
+#[derive(Debug, Clone, PartialEq, Serialize, ToSchema)]
+#[serde(deny_unknown_fields)]
+pub struct ForecastRequestBody {
+    /// What a degree counts.
+    pub degree_kind: DegreeKindName,
+    /// Degree counts at one date or several, oldest first.
+    #[schema(min_items = 1, max_items = 1000)]
+    pub snapshots: Vec<SnapshotBody>,
+    /// Arrivals from the newest snapshot on. Needed with one snapshot; estimated when left out with two or more.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false)]
+    pub arrivals: Option<ArrivalsBody>,
+    /// Link ends that land on nodes already present with each arrival; read from the data when left out.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, minimum = 0, maximum = 1e9)]
+    pub links_per_arrival: Option<f64>,
+    /// Link ends that land per present node and day, whoever arrives.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, minimum = 0, maximum = 1e9, default = 0.0)]
+    pub links_per_node_day: Option<f64>,
+    /// `[degree, share]` pairs: the degrees newcomers arrive with; the shares add up to 1. Read from the data when
+    /// left out.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, value_type = Vec<Vec<f64>>, min_items = 1)]
+    pub entry_degrees: Option<Vec<(u64, f64)>>,
+    /// Hazard that a node departs, per day.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, minimum = 0, maximum = 1e9, default = 0.0)]
+    pub departures_per_node_day: Option<f64>,
+    /// Hazard that a link is lost, per day.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, minimum = 0, maximum = 1e9, default = 0.0)]
+    pub link_losses_per_link_day: Option<f64>,
+    /// A hub is a node with at least this many links; one answer for each.
+    #[schema(min_items = 1, max_items = 1000, value_type = Vec<u64>)]
+    pub thresholds: Vec<u64>,
+    /// Dates to forecast, each after the newest snapshot: RFC 3339, or a bare date for 00:00 UTC.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, min_items = 1, max_items = 4000)]
+    pub dates: Option<Vec<String>>,
+    /// Evenly spread dates in place of `dates`.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false)]
+    pub horizon: Option<HorizonBody>,
+    /// Which candidate to use.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false)]
+    pub model: Option<ModelName>,
+    /// A mix to take as given instead of fitting one.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false)]
+    pub fixed: Option<FixedBody>,
+    /// Levels of the intervals, each strictly between 0 and 1; 0.5 and 0.9 when left out.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, min_items = 1, max_items = 20)]
+    pub levels: Option<Vec<f64>>,
+    /// Seed of everything random; 1 when left out.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, maximum = 9007199254740991u64)]
+    pub seed: Option<u64>,
+    /// A name for the run, to list it by.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, max_length = 200)]
+    pub label: Option<String>,
+}
+
+/// What a fit is made from. Unknown fields are refused.
+#[derive(Debug, Clone, PartialEq, Serialize, ToSchema)]
+#[serde(deny_unknown_fields)]
+pub struct FitRequestBody {
+    /// What a degree counts.
+    pub degree_kind: DegreeKindName,
+    /// Degree counts at one date or several, oldest first.
+    #[schema(min_items = 1, max_items = 1000)]
+    pub snapshots: Vec<SnapshotBody>,
+    /// Link ends that land on nodes already present with each arrival; read from the data when left out.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, minimum = 0, maximum = 1e9)]
+    pub links_per_arrival: Option<f64>,
+    /// `[degree, share]` pairs: the degrees newcomers arrive with; the shares add up to 1. Read from the data when
+    /// left out.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, value_type = Vec<Vec<f64>>, min_items = 1)]
+    pub entry_degrees: Option<Vec<(u64, f64)>>,
+    /// Hazard that a node departs, per day.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, minimum = 0, maximum = 1e9, default = 0.0)]
+    pub departures_per_node_day: Option<f64>,
+    /// Hazard that a link is lost, per day.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, minimum = 0, maximum = 1e9, default = 0.0)]
+    pub link_losses_per_link_day: Option<f64>,
+    /// Which candidate to use.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false)]
+    pub model: Option<ModelName>,
+    /// A mix to take as given instead of fitting one.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false)]
+    pub fixed: Option<FixedBody>,
+    /// Seed of everything random; 1 when left out.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, maximum = 9007199254740991u64)]
+    pub seed: Option<u64>,
+    /// A name for the run, to list it by.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, max_length = 200)]
+    pub label: Option<String>,
+}
+
+/// What a degree counts.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, ToSchema)]
+#[serde(rename_all = "snake_case")]
+pub enum DegreeKindName {
+    /// Links received.
+    Received,
+    /// All links of an undirected network.
+    Total,
+}
+
+/// Degree counts at a date.
+#[derive(Debug, Clone, PartialEq, Eq, Serialize, ToSchema)]
+#[serde(deny_unknown_fields)]
+pub struct SnapshotBody {
+    /// The date the counts hold for: RFC 3339, or a bare date for 00:00 UTC.
+    #[schema(examples("2026-06-01"))]
+    pub as_of: String,
+    /// `[degree, nodes]` pairs in any order, no degree twice: so many nodes have exactly so many links.
+    #[schema(value_type = Vec<Vec<u64>>, min_items = 1, examples(json!([[0, 5400], [1, 2210], [2, 990], [40, 3]])))]
+    pub degree_counts: Vec<(u64, u64)>,
+}
+
+/// How many nodes arrive: `per_day` (and `growth_per_year`), or `segments`.
+#[derive(Debug, Clone, PartialEq, Default, Serialize, ToSchema)]
+#[serde(deny_unknown_fields)]
+pub struct ArrivalsBody {
+    /// Nodes a day at the newest snapshot.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, minimum = 0)]
+    pub per_day: Option<f64>,
+    /// Relative growth of the rate a year: 0.2 is 20 % more each year.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, exclusive_minimum = -1, maximum = 99)]
+    pub growth_per_year: Option<f64>,
+    /// Stretches with rates of their own, ascending; the first starts at or before the newest snapshot.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, min_items = 1)]
+    pub segments: Option<Vec<SegmentBody>>,
+}
+
+/// One stretch of an arrival plan; the last goes on for ever.
+#[derive(Debug, Clone, PartialEq, Serialize, ToSchema)]
+#[serde(deny_unknown_fields)]
+pub struct SegmentBody {
+    /// Its start: RFC 3339, or a bare date for 00:00 UTC.
+    #[schema(examples("2026-06-01"))]
+    pub from: String,
+    /// Nodes a day at its start.
+    #[schema(minimum = 0)]
+    pub per_day: f64,
+    /// Relative growth of the rate a year.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, exclusive_minimum = -1, maximum = 99)]
+    pub growth_per_year: Option<f64>,
+}
+
+/// Evenly spread dates: one step after the newest snapshot, two steps, and so on.
+#[derive(Debug, Clone, PartialEq, Eq, Serialize, ToSchema)]
+#[serde(deny_unknown_fields)]
+pub struct HorizonBody {
+    /// No date comes after this one: RFC 3339, or a bare date for 00:00 UTC.
+    #[schema(examples("2027-12-01"))]
+    pub until: String,
+    /// The step, an ISO 8601 duration; months and years go by the calendar.
+    #[schema(examples("P1M"))]
+    pub every: String,
+}
+
+/// A candidate for how landing links pick their node.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, ToSchema)]
+#[serde(rename_all = "snake_case")]
+pub enum ModelName {
+    /// The one that the evidence favours.
+    Auto,
+    /// Every node alike.
+    Uniform,
+    /// In proportion to degree.
+    Preferential,
+    /// A share of each.
+    Mix,
+}
+
+/// What to take as given.
+#[derive(Debug, Clone, PartialEq, Serialize, ToSchema)]
+#[serde(deny_unknown_fields)]
+pub struct FixedBody {
+    /// Share of landing links that pick their node in proportion to its degree.
+    #[schema(minimum = 0, maximum = 1)]
+    pub preferential_share: f64,
+}

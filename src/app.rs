@@ -1,0 +1,137 @@
+//! The program: its commands, and how the parts are put together for each.
+
+mod check;
+mod demo;
+mod offline;
+mod serve;
+
+use std::fmt;
+use std::io::Write;
+use std::path::PathBuf;
+use std::process::ExitCode;
+
+use clap::{Parser, Subcommand, ValueEnum};
+use tokio::runtime::Runtime;
+
+use crate::config::{Config, LogConfig};
+use crate::service::Service;
+use crate::{api, telemetry};
+
+pub use serve::{Running, start};
+
+/// Forecasts how many hubs a growing network will have, and how sure that is.
+#[derive(Debug, Parser)]
+#[command(name = "tailcast", version, max_term_width = 100)]
+pub struct CommandLine {
+    /// Settings to put over the defaults (TOML); TAILCAST_* variables go over both
+    #[arg(long, global = true, value_name = "FILE")]
+    config: Option<PathBuf>,
+    #[command(subcommand)]
+    command: Command,
+}
+
+#[derive(Debug, Subcommand)]
+enum Command {
+    /// Serve the HTTP API until stopped
+    Serve,
+    /// Grow an invented network, forecast it through the API, show what came, go on serving
+    Demo {
+        /// Use a free port and a database that is thrown away, and stop after printing
+        #[arg(long)]
+        once: bool,
+    },
+    /// Answer one forecast here and now: no server, no database
+    Forecast {
+        /// Request body, as for POST /v1/forecasts; - reads the standard input
+        file: PathBuf,
+        /// Form of the answer
+        #[arg(long, value_enum, default_value_t = OutputFormat::Table)]
+        format: OutputFormat,
+    },
+    /// Ask the service at `bind` whether it is ready; ends with 0 when it is
+    Check,
+    /// Print the OpenAPI document
+    Openapi,
+    /// Bring the database's tables up to date
+    Migrate,
+}
+
+/// Form of an answer on the standard output.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, ValueEnum)]
+pub enum OutputFormat {
+    /// For people
+    Table,
+    /// As the HTTP API answers, without id and time
+    Json,
+    /// One row a date and threshold (RFC 4180)
+    Csv,
+}
+
+/// Why a command ended without doing its work.
+#[derive(Debug)]
+pub enum Stop {
+    /// The command failed.
+    Failed(String),
+    /// The request is at fault; it is told in full already.
+    Refused(String),
+}
+
+/// Exit code for a request that is at fault.
+const REFUSED: u8 = 2;
+
+impl Stop {
+    /// A failure while doing something.
+    fn failed(doing: &str, error: impl fmt::Display) -> Self {
+        Self::Failed(format!("{doing}: {error}"))
+    }
+}
+
+/// Runs a command; what went wrong is told on the standard error stream.
+pub fn run(line: CommandLine) -> ExitCode {
+    let (message, code) = match dispatch(line) {
+        Ok(()) => return ExitCode::SUCCESS,
+        Err(Stop::Failed(message)) => (format!("tailcast: {message}\n"), ExitCode::FAILURE),
+        Err(Stop::Refused(message)) => (message, ExitCode::from(REFUSED)),
+    };
+    // Nothing is left to tell it to when the standard error stream is gone.
+    let _ = std::io::stderr().write_all(message.as_bytes());
+    code
+}
+
+fn dispatch(line: CommandLine) -> Result<(), Stop> {
+    if let Command::Openapi = line.command {
+        return print(&api::openapi_text());
+    }
+    let config = Config::load(line.config.as_deref()).map_err(|error| Stop::failed("settings", error))?;
+    match line.command {
+        Command::Forecast { file, format } => offline::forecast(&config, &file, format),
+        Command::Openapi => Ok(()),
+        Command::Check => check::ready(config.bind),
+        Command::Migrate => {
+            runtime()?.block_on(Service::migrate(&config.database)).map_err(|error| Stop::failed("migration", error))
+        }
+        Command::Demo { once } => {
+            // The demo's own output is what counts; requests are not logged into it.
+            let quiet = LogConfig { filter: "warn".to_owned(), ..config.log.clone() };
+            telemetry::start_logs(&quiet).map_err(|error| Stop::failed("log.filter", error))?;
+            runtime()?.block_on(demo::show(config, once))
+        }
+        Command::Serve => {
+            telemetry::start_logs(&config.log).map_err(|error| Stop::failed("log.filter", error))?;
+            serve::until_stopped(runtime()?, config)
+        }
+    }
+}
+
+fn runtime() -> Result<Runtime, Stop> {
+    Runtime::new().map_err(|error| Stop::failed("the async runtime", error))
+}
+
+/// Writes to the standard output; a reader that has read enough is no failure.
+fn print(text: &str) -> Result<(), Stop> {
+    let mut out = std::io::stdout().lock();
+    match out.write_all(text.as_bytes()).and_then(|()| out.flush()) {
+        Err(error) if error.kind() != std::io::ErrorKind::BrokenPipe => Err(Stop::failed("standard output", error)),
+        _ => Ok(()),
+    }
+}

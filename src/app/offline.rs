@@ -1,0 +1,52 @@
+//! `forecast`: the same request body and the same answer as over HTTP, with no server and no database.
+
+use std::fmt::Write as _;
+use std::io::Read;
+use std::path::Path;
+
+use super::{OutputFormat, Stop, print};
+use crate::api::{self, ApiError, Problem};
+use crate::config::Config;
+use crate::{report, service};
+
+/// Answers the request in `file`.
+pub fn forecast(config: &Config, file: &Path, format: OutputFormat) -> Result<(), Stop> {
+    let bytes = read(file)?;
+    let refused = |error: ApiError| Stop::Refused(in_words(&error.into_problem()));
+    let inputs =
+        api::read_json(&bytes, |raw, faults| api::read_forecast(raw, &config.limits, faults)).map_err(refused)?;
+    let answer = service::answer_at_once(&inputs).map_err(|error| refused(error.into()))?;
+    let text = match format {
+        OutputFormat::Table => report::forecast_table(&answer),
+        OutputFormat::Csv => report::forecast_csv(&answer).map_err(|error| Stop::failed("writing CSV", error))?,
+        OutputFormat::Json => {
+            serde_json::to_string_pretty(&answer).map_err(|error| Stop::failed("writing JSON", error))? + "\n"
+        }
+    };
+    print(&text)
+}
+
+fn read(file: &Path) -> Result<Vec<u8>, Stop> {
+    let mut bytes = Vec::new();
+    let outcome = if file == Path::new("-") {
+        std::io::stdin().lock().read_to_end(&mut bytes)
+    } else {
+        std::fs::File::open(file).and_then(|mut file| file.read_to_end(&mut bytes))
+    };
+    outcome.map_err(|error| Stop::failed(&file.display().to_string(), error))?;
+    Ok(bytes)
+}
+
+/// A problem as lines for a terminal.
+fn in_words(problem: &Problem) -> String {
+    let mut text = format!("{}: {}\n", problem.code(), problem.detail());
+    for (place, detail) in problem.faults() {
+        let place = if place.is_empty() { "(the whole body)" } else { place };
+        // Writing to a String cannot fail.
+        let _ = writeln!(text, "  {place}: {detail}");
+    }
+    if let Some(cause) = problem.cause() {
+        let _ = writeln!(text, "  cause: {cause}");
+    }
+    text
+}

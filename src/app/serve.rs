@@ -1,0 +1,117 @@
+//! `serve`: listen, answer, stop in good order.
+
+use std::net::SocketAddr;
+use std::sync::Arc;
+use std::time::Duration;
+
+use tokio::net::TcpListener;
+use tokio::runtime::Runtime;
+use tokio::sync::watch;
+use tokio::task::JoinHandle;
+use tokio::time::timeout;
+
+use super::Stop;
+use crate::api::{AppState, router};
+use crate::config::Config;
+use crate::service::Service;
+use crate::telemetry;
+
+/// How long cancelled work gets to notice before the process ends.
+const LAST_STEP: Duration = Duration::from_secs(1);
+
+/// A service that is being served.
+#[derive(Debug)]
+pub struct Running {
+    address: SocketAddr,
+    service: Service,
+    stop: watch::Sender<bool>,
+    server: JoinHandle<std::io::Result<()>>,
+    upkeep: JoinHandle<()>,
+    grace: Duration,
+}
+
+impl Running {
+    /// Where it listens.
+    pub fn address(&self) -> SocketAddr {
+        self.address
+    }
+
+    /// Stops listening, finishes what was accepted, within the configured grace, and closes the database.
+    pub async fn stop(self) {
+        let Self { service, stop, server, upkeep, grace, .. } = self;
+        // Nobody listening means the server is gone already.
+        let _ = stop.send(true);
+        if timeout(grace, server).await.is_err() {
+            tracing::warn!(grace_seconds = grace.as_secs(), "some requests were not finished in time");
+        }
+        upkeep.abort();
+        service.cancel_all();
+        service.close().await;
+        tracing::info!("stopped");
+    }
+}
+
+/// Opens the database, listens and serves in the background.
+///
+/// # Errors
+/// When the database cannot be opened or the address is taken.
+pub async fn start(config: Config) -> Result<Running, Stop> {
+    // Listening first: when the port is taken, no database file is made.
+    let listener = TcpListener::bind(config.bind).await.map_err(|error| address_fault(config.bind, &error))?;
+    let address = listener.local_addr().map_err(|error| Stop::failed("the listening address", error))?;
+    let metrics = telemetry::start_metrics().map_err(|error| Stop::failed("metrics", error))?;
+    let service =
+        Service::open(&config.database, &config.compute).await.map_err(|error| Stop::failed("the database", error))?;
+    let upkeep = tokio::spawn(telemetry::keep_metrics_small(metrics.clone()));
+    let grace = config.http.shutdown_grace();
+    let state = AppState { service: service.clone(), http: Arc::new(config.http), limits: config.limits, metrics };
+    let (stop, mut stopped) = watch::channel(false);
+    let until = async move {
+        // An error means that the sender is gone, which is a stop as well.
+        let _ = stopped.wait_for(|&stop| stop).await;
+    };
+    let server = tokio::spawn(async move { axum::serve(listener, router(state)).with_graceful_shutdown(until).await });
+    tracing::info!(%address, "serving");
+    if !address.ip().is_loopback() {
+        tracing::warn!("reachable from other machines, and there is no access control: put a gateway in front");
+    }
+    Ok(Running { address, service, stop, server, upkeep, grace })
+}
+
+/// Serves until SIGINT or SIGTERM.
+pub fn until_stopped(runtime: Runtime, config: Config) -> Result<(), Stop> {
+    let outcome = runtime.block_on(async {
+        let running = start(config).await?;
+        stop_signal().await.map_err(|error| Stop::failed("stop signals", error))?;
+        running.stop().await;
+        Ok(())
+    });
+    runtime.shutdown_timeout(LAST_STEP);
+    outcome
+}
+
+/// Returns when the process is asked to stop.
+pub async fn stop_signal() -> std::io::Result<()> {
+    #[cfg(unix)]
+    {
+        use tokio::signal::unix::{SignalKind, signal};
+        let mut terminate = signal(SignalKind::terminate())?;
+        tokio::select! {
+            outcome = tokio::signal::ctrl_c() => outcome,
+            _ = terminate.recv() => Ok(()),
+        }
+    }
+    #[cfg(not(unix))]
+    tokio::signal::ctrl_c().await
+}
+
+fn address_fault(address: SocketAddr, error: &std::io::Error) -> Stop {
+    let advice = match error.kind() {
+        std::io::ErrorKind::AddrInUse => {
+            "something else listens there already; set bind or TAILCAST_BIND to another port"
+        }
+        std::io::ErrorKind::PermissionDenied => "this user may not listen there; ports from 1024 up are free to all",
+        _ => "set bind or TAILCAST_BIND to an address of this machine",
+    };
+    Stop::Failed(format!("cannot listen on {address}: {error}; {advice}"))
+}

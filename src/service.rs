@@ -1,0 +1,79 @@
+//! Use cases: check, compute off the runtime within a time budget, keep the run, answer with what was kept.
+
+mod answers;
+mod compute;
+mod cpu;
+mod error;
+mod inputs;
+mod numbers;
+mod runs;
+
+use crate::config::{ComputeConfig, DatabaseConfig};
+use crate::store::{Store, StoreError};
+
+pub use crate::evaluate::OriginRequest;
+pub use crate::fit::{FitRequest, Model, ModelChoice};
+pub use crate::store::{KeyClaim, RunFilter, RunKind, RunSummary, StoredRun};
+pub use answers::{
+    AttachmentModel, CandidateAnswer, CountAnswer, DateAnswer, DegreeAnswer, EstimateAnswer, EvidenceKind, FitAnswer,
+    FitReport, FitRun, ForecastAnswer, ForecastRun, GoodnessAnswer, IntervalAnswer, LimitAnswer, TailAnswer,
+    TailPointAnswer, WarningAnswer,
+};
+pub use compute::{Question, answer_at_once};
+pub use cpu::CpuPool;
+pub use error::ServiceError;
+pub use inputs::{FitInputs, ForecastInputs, Label, LabelFault, MAX_SEED, sha256_hex};
+pub use numbers::{Count, Real, date_text};
+
+/// The name and version every run carries.
+pub const ENGINE: &str = concat!(env!("CARGO_PKG_NAME"), " ", env!("CARGO_PKG_VERSION"));
+
+/// The use cases over one database.
+#[derive(Debug, Clone)]
+pub struct Service {
+    store: Store,
+    cpu: CpuPool,
+}
+
+impl Service {
+    /// Opens the database, brings its tables up to date if so configured, and sizes the worker pool.
+    ///
+    /// # Errors
+    /// When the database cannot be opened or migrated.
+    pub async fn open(database: &DatabaseConfig, compute: &ComputeConfig) -> Result<Self, StoreError> {
+        let store = Store::connect(database).await?;
+        if database.migrate_on_start {
+            store.migrate().await?;
+        }
+        Ok(Self { store, cpu: CpuPool::new(compute) })
+    }
+
+    /// Brings the database's tables up to date and closes it.
+    ///
+    /// # Errors
+    /// When the database cannot be opened or migrated.
+    pub async fn migrate(database: &DatabaseConfig) -> Result<(), StoreError> {
+        let store = Store::connect(database).await?;
+        let outcome = store.migrate().await;
+        store.close().await;
+        outcome
+    }
+
+    /// Whether requests can be served: the database answers and its tables are current.
+    ///
+    /// # Errors
+    /// When it does not answer or its tables are not current.
+    pub async fn check_ready(&self) -> Result<(), ServiceError> {
+        if self.store.is_current().await? { Ok(()) } else { Err(ServiceError::TablesOutdated) }
+    }
+
+    /// Tells running computations to stop at their next step.
+    pub fn cancel_all(&self) {
+        self.cpu.stop();
+    }
+
+    /// Closes the database.
+    pub async fn close(&self) {
+        self.store.close().await;
+    }
+}

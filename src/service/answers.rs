@@ -1,0 +1,270 @@
+//! Answers as they are kept and sent: their field names are a promise to callers.
+
+use serde::{Deserialize, Serialize};
+use utoipa::ToSchema;
+use uuid::Uuid;
+
+use super::numbers::{Count, Real};
+
+/// A kept forecast.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize, ToSchema)]
+pub struct ForecastRun {
+    /// Id of the run.
+    pub id: Uuid,
+    /// When it was answered, RFC 3339.
+    #[schema(format = DateTime)]
+    pub created_at: String,
+    /// Tracked network it belongs to; null for a forecast from inline counts.
+    pub network: Option<String>,
+    /// The forecast.
+    #[serde(flatten)]
+    pub answer: ForecastAnswer,
+}
+
+/// A forecast and the fit it stands on.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize, ToSchema)]
+pub struct ForecastAnswer {
+    /// The caller's name for the run.
+    pub label: Option<String>,
+    /// Engine and version that computed it.
+    #[schema(examples("tailcast 0.1.0"))]
+    pub engine: String,
+    /// Seed of everything random in it.
+    pub seed: u64,
+    /// Digest of the validated inputs in canonical form, seed and label left out. The same digest, seed and engine
+    /// give the same fit and forecast, byte for byte.
+    #[schema(examples("sha-256:9f86d081884c7d659a2feaa0c55ad015a3bf4f1b2b0b822cd15d6c15b0f00a08"))]
+    pub inputs_digest: String,
+    /// The fitted attachment mix.
+    pub fit: FitReport,
+    /// One entry a date, in ascending order.
+    pub forecast: Vec<DateAnswer>,
+    /// Capacity limits asked about; none can be asked about yet.
+    pub limits: Vec<LimitAnswer>,
+    /// What was seen in these inputs that the reader must know before acting.
+    pub warnings: Vec<WarningAnswer>,
+    /// What holds for every forecast.
+    pub cautions: Vec<String>,
+}
+
+/// A kept fit.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize, ToSchema)]
+pub struct FitRun {
+    /// Id of the run.
+    pub id: Uuid,
+    /// When it was answered, RFC 3339.
+    #[schema(format = DateTime)]
+    pub created_at: String,
+    /// Tracked network it belongs to; null for a fit of inline counts.
+    pub network: Option<String>,
+    /// The fit.
+    #[serde(flatten)]
+    pub answer: FitAnswer,
+}
+
+/// A fit with its diagnostics.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize, ToSchema)]
+pub struct FitAnswer {
+    /// The caller's name for the run.
+    pub label: Option<String>,
+    /// Engine and version that computed it.
+    #[schema(examples("tailcast 0.1.0"))]
+    pub engine: String,
+    /// Seed of everything random in it.
+    pub seed: u64,
+    /// Digest of the validated inputs in canonical form, seed and label left out.
+    pub inputs_digest: String,
+    /// The fitted attachment mix.
+    pub fit: FitReport,
+    /// Observed against fitted tail of the newest snapshot.
+    pub tail: Vec<TailPointAnswer>,
+    /// What was seen in these inputs that the reader must know before acting.
+    pub warnings: Vec<WarningAnswer>,
+    /// What holds for every fit.
+    pub cautions: Vec<String>,
+}
+
+/// A fitted attachment mix.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize, ToSchema)]
+pub struct FitReport {
+    /// The candidate chosen.
+    pub model: AttachmentModel,
+    /// The evidence it stands on.
+    pub evidence: EvidenceKind,
+    /// Share of landing links that pick their node in proportion to its degree.
+    pub preferential_share: EstimateAnswer,
+    /// Link ends that land on present nodes with each arrival.
+    pub links_per_arrival: EstimateAnswer,
+    /// Arrivals a day over the newest period; null when there is one snapshot.
+    pub arrivals_per_day: Option<EstimateAnswer>,
+    /// Exponent of the degree law's tail; null when the tail falls faster than any power.
+    pub tail_exponent: Option<EstimateAnswer>,
+    /// `[degree, share]` pairs: the degrees newcomers arrive with.
+    #[schema(value_type = Vec<Vec<f64>>, examples(json!([[0, 0.9], [2, 0.1]])))]
+    pub entry_degrees: Vec<(u64, Real)>,
+    /// Every candidate's record on the evidence.
+    pub candidates: Vec<CandidateAnswer>,
+    /// How well the fitted law reproduces the counts; null when nothing was fitted.
+    pub goodness: Option<GoodnessAnswer>,
+}
+
+/// A candidate for how landing links pick their node.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, Deserialize, ToSchema)]
+#[serde(rename_all = "snake_case")]
+pub enum AttachmentModel {
+    /// Every node alike.
+    Uniform,
+    /// In proportion to degree.
+    Preferential,
+    /// A share of each.
+    Mix,
+}
+
+/// The evidence a fit stands on.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, Deserialize, ToSchema)]
+#[serde(rename_all = "snake_case")]
+pub enum EvidenceKind {
+    /// The caller gave the mix.
+    Given,
+    /// One snapshot, read as the outcome of steady growth from the start.
+    OneSnapshot,
+    /// How many nodes crossed each degree between successive snapshots.
+    SuccessiveSnapshots,
+}
+
+/// An estimate and its interval; low, high and level are null when it was given or the data cannot bound it.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize, ToSchema)]
+pub struct EstimateAnswer {
+    /// The estimate.
+    pub estimate: Real,
+    /// Lower end of its interval.
+    pub low: Option<Real>,
+    /// Upper end of its interval.
+    pub high: Option<Real>,
+    /// Coverage the interval aims at.
+    pub level: Option<Real>,
+}
+
+/// One candidate's record on the evidence.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize, ToSchema)]
+pub struct CandidateAnswer {
+    /// The candidate.
+    pub model: AttachmentModel,
+    /// Its preferential share.
+    pub preferential_share: Real,
+    /// Log-likelihood.
+    pub log_likelihood: Real,
+    /// Akaike's information criterion; lower is better.
+    pub aic: Real,
+    /// Weight among the candidates; the weights add up to one.
+    pub weight: Real,
+}
+
+/// How well the fitted law reproduces the counts.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize, ToSchema)]
+pub struct GoodnessAnswer {
+    /// Largest distance between observed and fitted share of nodes with at least so many links (Kolmogorov–Smirnov).
+    pub distance: Real,
+    /// Share of samples drawn from the fitted law that lie at least as far from it; null with two snapshots or more.
+    pub p_value: Option<Real>,
+    /// Samples drawn.
+    pub replicates: u32,
+    /// Logarithm of observed over fitted tail size where it is farthest from 0.
+    pub worst_log_ratio: Real,
+    /// Mean squared misfit of the flows past each degree over their variance, 1 when only chance is at work; null with
+    /// one snapshot.
+    pub dispersion: Option<Real>,
+    /// Typical relative error of the fitted flows, chance included; null with one snapshot.
+    pub flow_error: Option<Real>,
+}
+
+/// The forecast at one date.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize, ToSchema)]
+pub struct DateAnswer {
+    /// The date; RFC 3339 with the time of day when that is not 00:00 UTC.
+    #[schema(examples("2026-12-01"))]
+    pub date: String,
+    /// Nodes.
+    pub nodes: CountAnswer,
+    /// Link ends.
+    pub links: CountAnswer,
+    /// Largest degree of any node.
+    pub largest_degree: DegreeAnswer,
+    /// Tail sizes, thresholds ascending.
+    pub tail: Vec<TailAnswer>,
+}
+
+/// A forecast count.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize, ToSchema)]
+pub struct CountAnswer {
+    /// The count in the newest snapshot.
+    pub now: Count,
+    /// Expected count.
+    pub expected: Real,
+    /// As likely to be exceeded as not.
+    pub median: Real,
+    /// Central intervals, levels ascending.
+    pub intervals: Vec<IntervalAnswer>,
+}
+
+/// A forecast degree. It has no expected value: the tail may be so heavy that there is none.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize, ToSchema)]
+pub struct DegreeAnswer {
+    /// The degree in the newest snapshot.
+    pub now: Count,
+    /// As likely to be exceeded as not.
+    pub median: Real,
+    /// Central intervals, levels ascending.
+    pub intervals: Vec<IntervalAnswer>,
+}
+
+/// A forecast tail size: how many nodes have at least `threshold` links.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize, ToSchema)]
+pub struct TailAnswer {
+    /// The threshold.
+    pub threshold: u64,
+    /// Nodes at or above it in the newest snapshot.
+    pub now: Count,
+    /// Expected number.
+    pub expected: Real,
+    /// As likely to be exceeded as not.
+    pub median: Real,
+    /// Central intervals, levels ascending.
+    pub intervals: Vec<IntervalAnswer>,
+}
+
+/// A central interval.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize, ToSchema)]
+pub struct IntervalAnswer {
+    /// Coverage it aims at.
+    pub level: Real,
+    /// Lower end.
+    pub low: Real,
+    /// Upper end.
+    pub high: Real,
+}
+
+/// Observed and fitted tail size at one degree.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize, ToSchema)]
+pub struct TailPointAnswer {
+    /// The degree.
+    pub degree: u64,
+    /// Nodes with at least so many links in the newest snapshot.
+    pub observed: u64,
+    /// The same by the fitted law.
+    pub fitted: Real,
+}
+
+/// A capacity limit and how it fares.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize, ToSchema)]
+pub struct LimitAnswer {}
+
+/// Something the reader must know before acting.
+#[derive(Debug, Clone, PartialEq, Eq, Serialize, Deserialize, ToSchema)]
+pub struct WarningAnswer {
+    /// Stable name.
+    #[schema(examples("few_hubs"))]
+    pub code: String,
+    /// What was seen.
+    pub detail: String,
+}

@@ -1,0 +1,248 @@
+//! From validated inputs to an answer: the core's results in the answers' words. No I/O.
+
+use std::time::Duration;
+
+use serde::Serialize;
+use serde::de::DeserializeOwned;
+
+use super::answers::{
+    AttachmentModel, CandidateAnswer, CountAnswer, DateAnswer, DegreeAnswer, EstimateAnswer, EvidenceKind, FitAnswer,
+    FitReport, ForecastAnswer, GoodnessAnswer, IntervalAnswer, TailAnswer, TailPointAnswer, WarningAnswer,
+};
+use super::inputs::{FitInputs, ForecastInputs, Label, sha256_hex};
+use super::numbers::{Count, Real, date_text};
+use super::{ENGINE, ServiceError};
+use crate::evaluate::{self, OriginError};
+use crate::fit::{Candidate, Fit, Goodness, Model, Rung, TailPoint};
+use crate::forecast::{CountForecast, DateForecast, DegreeForecast, TailForecast};
+use crate::model::{Estimate, Interval, Warning};
+use crate::store::RunKind;
+
+/// What holds for every fit, said with each.
+const FIT_CAUTIONS: [&str; 2] = [
+    "A fit describes how links were attracted up to the newest snapshot; nothing obliges the network to go on that way.",
+    "Where a capacity failure could harm people, your own engineering practice and its safety margins come first; a fit \
+     is no substitute for them.",
+];
+
+/// Something that can be asked: validated inputs that lead to an answer of one kind.
+pub trait Question: Send + 'static {
+    /// Its answer.
+    type Answer: Serialize + DeserializeOwned + Send + 'static;
+    /// What its runs are kept as.
+    const KIND: RunKind;
+
+    /// The caller's name for the run.
+    fn label(&self) -> Option<&Label>;
+
+    /// Seed of everything random.
+    fn seed(&self) -> u64;
+
+    /// The inputs in canonical form.
+    ///
+    /// # Errors
+    /// When a number is not finite, which no validated input holds.
+    fn canonical(&self) -> Result<String, serde_json::Error>;
+
+    /// Computes the answer; `cancelled` is asked between steps.
+    ///
+    /// # Errors
+    /// When the inputs have no answer.
+    fn answer(&self, inputs_digest: String, cancelled: &dyn Fn() -> bool) -> Result<Self::Answer, OriginError>;
+}
+
+/// Answers a question here and now, keeping nothing.
+///
+/// # Errors
+/// When the inputs have no answer.
+pub fn answer_at_once<Q: Question>(question: &Q) -> Result<Q::Answer, ServiceError> {
+    let canonical = question.canonical().map_err(|error| ServiceError::Broken(error.to_string()))?;
+    let answer = question.answer(inputs_digest(&canonical), &|| false);
+    answer.map_err(|failure| ServiceError::from_core(failure, Duration::ZERO))
+}
+
+/// Digest of canonical inputs as answers write it.
+pub fn inputs_digest(canonical: &str) -> String {
+    format!("sha-256:{}", sha256_hex(canonical.as_bytes()))
+}
+
+impl Question for ForecastInputs {
+    type Answer = ForecastAnswer;
+    const KIND: RunKind = RunKind::Forecast;
+
+    fn label(&self) -> Option<&Label> {
+        self.label.as_ref()
+    }
+
+    fn seed(&self) -> u64 {
+        self.request.fit.seed
+    }
+
+    fn canonical(&self) -> Result<String, serde_json::Error> {
+        Self::canonical(self)
+    }
+
+    fn answer(&self, inputs_digest: String, cancelled: &dyn Fn() -> bool) -> Result<ForecastAnswer, OriginError> {
+        let found = evaluate::answer(&self.request, cancelled)?;
+        Ok(ForecastAnswer {
+            label: self.label.as_ref().map(|label| label.as_str().to_owned()),
+            engine: ENGINE.to_owned(),
+            seed: self.seed(),
+            inputs_digest,
+            fit: FitReport::from(&found.fit),
+            forecast: found.forecast.iter().map(DateAnswer::from).collect(),
+            limits: Vec::new(),
+            warnings: found.warnings.into_iter().map(WarningAnswer::from).collect(),
+            cautions: found.cautions.iter().map(ToString::to_string).collect(),
+        })
+    }
+}
+
+impl Question for FitInputs {
+    type Answer = FitAnswer;
+    const KIND: RunKind = RunKind::Fit;
+
+    fn label(&self) -> Option<&Label> {
+        self.label.as_ref()
+    }
+
+    fn seed(&self) -> u64 {
+        self.fit.seed
+    }
+
+    fn canonical(&self) -> Result<String, serde_json::Error> {
+        Self::canonical(self)
+    }
+
+    fn answer(&self, inputs_digest: String, _cancelled: &dyn Fn() -> bool) -> Result<FitAnswer, OriginError> {
+        let fit = evaluate::fit_evidence(&self.evidence, &self.fit)?;
+        Ok(FitAnswer {
+            label: self.label.as_ref().map(|label| label.as_str().to_owned()),
+            engine: ENGINE.to_owned(),
+            seed: self.seed(),
+            inputs_digest,
+            fit: FitReport::from(&fit),
+            tail: fit.tail.iter().map(TailPointAnswer::from).collect(),
+            warnings: fit.warnings.into_iter().map(WarningAnswer::from).collect(),
+            cautions: FIT_CAUTIONS.map(str::to_owned).to_vec(),
+        })
+    }
+}
+
+impl From<&Fit> for FitReport {
+    fn from(fit: &Fit) -> Self {
+        Self {
+            model: fit.model.into(),
+            evidence: match fit.rung {
+                Rung::Given => EvidenceKind::Given,
+                Rung::OneSnapshot => EvidenceKind::OneSnapshot,
+                Rung::SuccessiveSnapshots => EvidenceKind::SuccessiveSnapshots,
+            },
+            preferential_share: (&fit.preferential_share).into(),
+            links_per_arrival: (&fit.links_per_arrival).into(),
+            arrivals_per_day: fit.arrivals_per_day.as_ref().map(EstimateAnswer::from),
+            tail_exponent: fit.tail_exponent.as_ref().map(EstimateAnswer::from),
+            entry_degrees: fit.entry.shares().iter().map(|&(degree, share)| (degree, Real(share))).collect(),
+            candidates: fit.candidates.iter().map(CandidateAnswer::from).collect(),
+            goodness: fit.goodness.as_ref().map(GoodnessAnswer::from),
+        }
+    }
+}
+
+impl From<Model> for AttachmentModel {
+    fn from(model: Model) -> Self {
+        match model {
+            Model::Uniform => Self::Uniform,
+            Model::Preferential => Self::Preferential,
+            Model::Mix => Self::Mix,
+        }
+    }
+}
+
+impl From<&Estimate> for EstimateAnswer {
+    fn from(estimate: &Estimate) -> Self {
+        Self {
+            estimate: Real(estimate.value),
+            low: estimate.interval.map(|interval| Real(interval.low)),
+            high: estimate.interval.map(|interval| Real(interval.high)),
+            level: estimate.interval.map(|interval| Real(interval.level)),
+        }
+    }
+}
+
+impl From<&Candidate> for CandidateAnswer {
+    fn from(candidate: &Candidate) -> Self {
+        Self {
+            model: candidate.model.into(),
+            preferential_share: Real(candidate.preferential_share),
+            log_likelihood: Real(candidate.log_likelihood),
+            aic: Real(candidate.aic),
+            weight: Real(candidate.weight),
+        }
+    }
+}
+
+impl From<&Goodness> for GoodnessAnswer {
+    fn from(goodness: &Goodness) -> Self {
+        Self {
+            distance: Real(goodness.distance),
+            p_value: goodness.p_value.map(Real),
+            replicates: goodness.replicates,
+            worst_log_ratio: Real(goodness.worst_log_ratio),
+            dispersion: goodness.dispersion.map(Real),
+            flow_error: goodness.flow_error.map(Real),
+        }
+    }
+}
+
+impl From<&TailPoint> for TailPointAnswer {
+    fn from(point: &TailPoint) -> Self {
+        Self { degree: point.degree, observed: point.observed, fitted: Real(point.fitted) }
+    }
+}
+
+impl From<&DateForecast> for DateAnswer {
+    fn from(at: &DateForecast) -> Self {
+        Self {
+            date: date_text(at.date),
+            nodes: (&at.nodes).into(),
+            links: (&at.links).into(),
+            largest_degree: (&at.largest_degree).into(),
+            tail: at.tail.iter().map(TailAnswer::from).collect(),
+        }
+    }
+}
+
+impl From<&CountForecast> for CountAnswer {
+    fn from(count: &CountForecast) -> Self {
+        Self {
+            now: Count(count.now),
+            expected: Real(count.expected),
+            median: Real(count.median),
+            intervals: intervals(&count.intervals),
+        }
+    }
+}
+
+impl From<&DegreeForecast> for DegreeAnswer {
+    fn from(degree: &DegreeForecast) -> Self {
+        Self { now: Count(degree.now), median: Real(degree.median), intervals: intervals(&degree.intervals) }
+    }
+}
+
+impl From<&TailForecast> for TailAnswer {
+    fn from(tail: &TailForecast) -> Self {
+        let CountAnswer { now, expected, median, intervals } = (&tail.size).into();
+        Self { threshold: tail.threshold, now, expected, median, intervals }
+    }
+}
+
+impl From<Warning> for WarningAnswer {
+    fn from(warning: Warning) -> Self {
+        Self { code: warning.code.to_owned(), detail: warning.detail }
+    }
+}
+
+fn intervals(intervals: &[Interval]) -> Vec<IntervalAnswer> {
+    intervals.iter().map(|i| IntervalAnswer { level: Real(i.level), low: Real(i.low), high: Real(i.high) }).collect()
+}

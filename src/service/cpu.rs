@@ -1,0 +1,167 @@
+//! Computing off the async runtime: a fixed number of workers, a bounded queue, a time budget.
+
+use std::sync::Arc;
+use std::sync::atomic::{AtomicBool, Ordering};
+use std::thread::available_parallelism;
+use std::time::{Duration, Instant};
+
+use metrics::{gauge, histogram};
+use tokio::sync::Semaphore;
+use tokio::task::spawn_blocking;
+use tokio::time::timeout_at;
+use tracing::Span;
+
+use super::ServiceError;
+use crate::config::ComputeConfig;
+
+/// Workers for computations.
+#[derive(Debug, Clone)]
+pub struct CpuPool {
+    workers: Arc<Semaphore>,
+    /// Workers and queue together: who finds no place here is turned away at once.
+    places: Arc<Semaphore>,
+    budget: Duration,
+    stopping: Arc<AtomicBool>,
+}
+
+/// Raises its flag when the caller stops waiting.
+struct CancelOnDrop(Arc<AtomicBool>);
+
+/// Counts as busy while it lives.
+struct Gauged;
+
+impl Gauged {
+    fn new() -> Self {
+        gauge!("tailcast_compute_busy").increment(1.0);
+        Self
+    }
+}
+
+impl Drop for Gauged {
+    fn drop(&mut self) {
+        gauge!("tailcast_compute_busy").decrement(1.0);
+    }
+}
+
+impl Drop for CancelOnDrop {
+    fn drop(&mut self) {
+        self.0.store(true, Ordering::Relaxed);
+    }
+}
+
+impl CpuPool {
+    /// A pool as configured.
+    pub fn new(config: &ComputeConfig) -> Self {
+        let cores = available_parallelism().map_or(1, usize::from);
+        let workers = if config.workers == 0 { cores } else { config.workers };
+        Self {
+            workers: Arc::new(Semaphore::new(workers)),
+            places: Arc::new(Semaphore::new(workers.saturating_add(config.queue).min(Semaphore::MAX_PERMITS))),
+            budget: config.budget(),
+            stopping: Arc::new(AtomicBool::new(false)),
+        }
+    }
+
+    /// Runs `work` on a worker; `work` asks its argument, between steps, whether to give up. The caller going away
+    /// counts as giving up.
+    ///
+    /// # Errors
+    /// [`ServiceError::Busy`] when the queue is full, [`ServiceError::TooSlow`] when the budget ran out,
+    /// [`ServiceError::Broken`] when `work` panicked.
+    pub async fn run<T: Send + 'static>(
+        &self,
+        work: impl FnOnce(&dyn Fn() -> bool) -> T + Send + 'static,
+    ) -> Result<T, ServiceError> {
+        let too_slow = || ServiceError::TooSlow { budget: self.budget };
+        let place = self.places.clone().try_acquire_owned().map_err(|_| ServiceError::Busy)?;
+        let (asked, deadline) = (Instant::now(), Instant::now() + self.budget);
+        let busy = Gauged::new();
+        let worker = match timeout_at(deadline.into(), self.workers.clone().acquire_owned()).await {
+            Ok(Ok(worker)) => worker,
+            Ok(Err(_)) => return Err(ServiceError::Busy),
+            Err(_) => return Err(too_slow()),
+        };
+        histogram!("tailcast_compute_wait_seconds").record(asked.elapsed());
+        let given_up = Arc::new(AtomicBool::new(false));
+        let guard = CancelOnDrop(given_up.clone());
+        let stopping = self.stopping.clone();
+        let span = Span::current();
+        let task = spawn_blocking(move || {
+            // Held until the work has really stopped, so that abandoned work still counts against the cores.
+            let _held = (place, worker, busy);
+            let begun = Instant::now();
+            let cancelled =
+                || given_up.load(Ordering::Relaxed) || stopping.load(Ordering::Relaxed) || Instant::now() >= deadline;
+            let outcome = span.in_scope(|| work(&cancelled));
+            histogram!("tailcast_compute_seconds").record(begun.elapsed());
+            outcome
+        });
+        let outcome = timeout_at(deadline.into(), task).await;
+        drop(guard);
+        match outcome {
+            Ok(Ok(value)) => Ok(value),
+            Ok(Err(error)) => Err(ServiceError::Broken(format!("a computation stopped short: {error}"))),
+            Err(_) => Err(too_slow()),
+        }
+    }
+
+    /// The time one request may wait and compute.
+    pub fn budget(&self) -> Duration {
+        self.budget
+    }
+
+    /// Tells running work to give up, for good.
+    pub fn stop(&self) {
+        self.stopping.store(true, Ordering::Relaxed);
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    fn pool(workers: usize, queue: usize, budget_seconds: u64) -> CpuPool {
+        CpuPool::new(&ComputeConfig { workers, queue, budget_seconds })
+    }
+
+    /// Work that ends only when told to.
+    fn until_cancelled(cancelled: &dyn Fn() -> bool) {
+        while !cancelled() {
+            std::thread::sleep(Duration::from_millis(1));
+        }
+    }
+
+    #[tokio::test]
+    async fn work_beyond_the_queue_is_turned_away_and_the_rest_run_out_of_budget() {
+        let pool = pool(1, 1, 1);
+        let running = tokio::spawn({
+            let pool = pool.clone();
+            async move { pool.run(until_cancelled).await }
+        });
+        tokio::time::sleep(Duration::from_millis(50)).await;
+        let waiting = tokio::spawn({
+            let pool = pool.clone();
+            async move { pool.run(until_cancelled).await }
+        });
+        tokio::time::sleep(Duration::from_millis(50)).await;
+        assert!(matches!(pool.run(until_cancelled).await, Err(ServiceError::Busy)));
+        assert!(matches!(running.await.unwrap(), Err(ServiceError::TooSlow { .. }) | Ok(())));
+        assert!(matches!(waiting.await.unwrap(), Err(ServiceError::TooSlow { .. }) | Ok(())));
+        assert!(pool.run(|_| 7).await.is_ok_and(|value| value == 7), "a place is free again");
+    }
+
+    #[tokio::test]
+    async fn the_caller_going_away_stops_the_work() {
+        let pool = pool(1, 0, 60);
+        let abandoned = tokio::time::timeout(Duration::from_millis(50), pool.run(until_cancelled)).await;
+        assert!(abandoned.is_err());
+        tokio::time::sleep(Duration::from_millis(100)).await;
+        assert!(pool.run(|_| ()).await.is_ok());
+    }
+
+    #[tokio::test]
+    async fn a_panic_in_the_work_is_an_error_of_ours() {
+        let outcome = pool(1, 0, 60).run(|_| -> u8 { std::panic::resume_unwind(Box::new("broken")) }).await;
+        assert!(matches!(outcome, Err(ServiceError::Broken(_))));
+    }
+}

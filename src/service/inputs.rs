@@ -1,0 +1,173 @@
+//! Validated inputs of a run, their canonical form and its digest.
+
+use serde::Serialize;
+use sha2::{Digest, Sha256};
+
+use super::numbers::{Real, date_text};
+use crate::evaluate::OriginRequest;
+use crate::fit::{FitRequest, Model, ModelChoice};
+use crate::model::{ArrivalPlan, DegreeKind, Evidence, ForecastPlan};
+
+/// The largest seed: 2^53 − 1, the largest whole number every JSON reader keeps exactly.
+pub const MAX_SEED: u64 = (1 << 53) - 1;
+const MAX_LABEL_CHARS: usize = 200;
+
+/// A caller's name for a run: at most 200 characters, no NUL.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct Label(String);
+
+/// What is wrong with a label.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, thiserror::Error)]
+pub enum LabelFault {
+    /// Too many characters.
+    #[error("the label has {0} characters; at most {MAX_LABEL_CHARS} are kept")]
+    TooLong(usize),
+    /// A NUL character.
+    #[error("the label holds a NUL character (\\u0000); leave it out")]
+    Nul,
+}
+
+impl Label {
+    /// Checks a label.
+    ///
+    /// # Errors
+    /// When it is too long or holds a NUL character.
+    pub fn new(text: String) -> Result<Self, LabelFault> {
+        if text.contains('\0') {
+            return Err(LabelFault::Nul);
+        }
+        match text.chars().count() {
+            n if n > MAX_LABEL_CHARS => Err(LabelFault::TooLong(n)),
+            _ => Ok(Self(text)),
+        }
+    }
+
+    /// The text.
+    pub fn as_str(&self) -> &str {
+        &self.0
+    }
+}
+
+/// Everything one forecast needs.
+#[derive(Debug, Clone, PartialEq)]
+pub struct ForecastInputs {
+    /// The caller's name for the run.
+    pub label: Option<Label>,
+    /// What the core is asked.
+    pub request: OriginRequest,
+}
+
+/// Everything one fit needs.
+#[derive(Debug, Clone, PartialEq)]
+pub struct FitInputs {
+    /// The caller's name for the run.
+    pub label: Option<Label>,
+    /// What is known of the network.
+    pub evidence: Evidence,
+    /// What is asked of the fit.
+    pub fit: FitRequest,
+}
+
+/// Inputs in the one form that equal inputs share, however they were written: degrees ascending, defaults filled in,
+/// dates resolved. The seed and the label are not part of it.
+#[derive(Serialize)]
+struct Canonical<'a> {
+    asked: &'static str,
+    degree_kind: &'static str,
+    snapshots: Vec<CanonicalSnapshot>,
+    entry_degrees: Option<&'a [(u64, f64)]>,
+    model: &'static str,
+    preferential_share: Option<Real>,
+    links_per_arrival: Option<Real>,
+    departures_per_node_day: Real,
+    link_losses_per_link_day: Real,
+    #[serde(flatten)]
+    outlook: Option<CanonicalOutlook<'a>>,
+}
+
+#[derive(Serialize)]
+struct CanonicalSnapshot {
+    as_of: String,
+    degree_counts: Vec<(u64, u64)>,
+}
+
+/// What a forecast needs beyond a fit.
+#[derive(Serialize)]
+struct CanonicalOutlook<'a> {
+    /// `(days after the last snapshot, arrivals a day, growth a year)`
+    arrivals: Option<Vec<(Real, Real, Real)>>,
+    links_per_node_day: Real,
+    thresholds: &'a [u64],
+    dates: Vec<String>,
+    levels: &'a [f64],
+}
+
+impl ForecastInputs {
+    /// The canonical form, as JSON.
+    ///
+    /// # Errors
+    /// When a number is not finite, which no validated input holds.
+    pub fn canonical(&self) -> Result<String, serde_json::Error> {
+        let request = &self.request;
+        let mut canonical = canonical_fit("forecast", &request.evidence, &request.fit);
+        canonical.outlook = Some(canonical_outlook(request));
+        serde_json::to_string(&canonical)
+    }
+}
+
+impl FitInputs {
+    /// The canonical form, as JSON.
+    ///
+    /// # Errors
+    /// When a number is not finite, which no validated input holds.
+    pub fn canonical(&self) -> Result<String, serde_json::Error> {
+        serde_json::to_string(&canonical_fit("fit", &self.evidence, &self.fit))
+    }
+}
+
+fn canonical_fit<'a>(asked: &'static str, evidence: &'a Evidence, fit: &FitRequest) -> Canonical<'a> {
+    Canonical {
+        asked,
+        degree_kind: match evidence.kind() {
+            DegreeKind::Received => "received",
+            DegreeKind::Total => "total",
+        },
+        snapshots: evidence
+            .snapshots()
+            .iter()
+            .map(|s| CanonicalSnapshot { as_of: date_text(s.as_of), degree_counts: s.counts.iter().collect() })
+            .collect(),
+        entry_degrees: evidence.entry().map(|entry| entry.shares()),
+        model: match fit.choice {
+            ModelChoice::Auto => "auto",
+            ModelChoice::Only(Model::Uniform) => "uniform",
+            ModelChoice::Only(Model::Preferential) => "preferential",
+            ModelChoice::Only(Model::Mix) => "mix",
+        },
+        preferential_share: fit.fixed_mix.map(|mix| Real(mix.preferential_share())),
+        links_per_arrival: fit.links_per_arrival.map(Real),
+        departures_per_node_day: Real(fit.departures_per_node_day),
+        link_losses_per_link_day: Real(fit.link_losses_per_link_day),
+        outlook: None,
+    }
+}
+
+fn canonical_outlook(request: &OriginRequest) -> CanonicalOutlook<'_> {
+    let plan: &ForecastPlan = &request.plan;
+    let segments = |arrivals: &ArrivalPlan| {
+        let segments = arrivals.segments().iter();
+        segments.map(|s| (Real(s.from_day), Real(s.per_day), Real(s.growth_per_year))).collect()
+    };
+    CanonicalOutlook {
+        arrivals: request.arrivals.as_ref().map(segments),
+        links_per_node_day: Real(request.links_per_node_day),
+        thresholds: plan.thresholds(),
+        dates: plan.dates().iter().map(|&date| date_text(date)).collect(),
+        levels: plan.levels(),
+    }
+}
+
+/// SHA-256 of `bytes` in lower-case hexadecimal.
+pub fn sha256_hex(bytes: &[u8]) -> String {
+    Sha256::digest(bytes).iter().map(|byte| format!("{byte:02x}")).collect()
+}

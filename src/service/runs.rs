@@ -1,0 +1,146 @@
+//! Runs: make one, read it back, list, delete.
+
+use jiff::Timestamp;
+use serde::Serialize;
+use tracing::Instrument;
+use uuid::Uuid;
+
+use super::compute::{Question, inputs_digest};
+use super::inputs::sha256_hex;
+use super::{ENGINE, KeyClaim, RunFilter, RunKind, RunSummary, Service, ServiceError, StoredRun};
+use crate::evaluate::OriginError;
+use crate::store::{Inserted, NewRun};
+
+/// A run's document: its head in front of its answer.
+#[derive(Serialize)]
+struct Document<'a, A> {
+    id: Uuid,
+    created_at: String,
+    network: Option<&'a str>,
+    #[serde(flatten)]
+    answer: &'a A,
+}
+
+impl Service {
+    /// Computes an answer and keeps it, or finds the run that the same key and body led to before. When this returns
+    /// a run, it is on disk.
+    ///
+    /// # Errors
+    /// When the inputs have no answer, the key belongs to another body, there is no free worker in time, or the
+    /// database fails.
+    pub async fn create<Q: Question>(&self, question: Q, claim: Option<KeyClaim>) -> Result<StoredRun, ServiceError> {
+        if let Some(claim) = &claim
+            && let Some(earlier) = self.store.find_claim(Q::KIND, claim).await?
+        {
+            return replayed(earlier);
+        }
+        let budget = self.cpu.budget();
+        let run = self.cpu.run(move |cancelled| compute(&question, cancelled)).await?;
+        let run = run.map_err(|failure| failure.into_service_error(budget))?;
+        // In a task of its own: a caller that goes away in the middle cannot leave the write half done.
+        let store = self.store.clone();
+        let keep = async move {
+            match store.insert_run(&run, claim.as_ref()).await? {
+                Inserted::Kept => {
+                    Ok(StoredRun { id: run.id, created_at: run.created_at, tag: run.tag, document: run.document })
+                }
+                earlier => replayed(earlier),
+            }
+        };
+        match tokio::spawn(keep.in_current_span()).await {
+            Ok(outcome) => outcome,
+            Err(error) => Err(ServiceError::Broken(format!("keeping a run stopped short: {error}"))),
+        }
+    }
+
+    /// The run with this id.
+    ///
+    /// # Errors
+    /// [`ServiceError::NotFound`], or when the database fails.
+    pub async fn run(&self, kind: RunKind, id: Uuid) -> Result<StoredRun, ServiceError> {
+        self.store.find_run(kind, id).await?.ok_or(ServiceError::NotFound)
+    }
+
+    /// Runs that pass the filter, newest first, and whether more follow.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn list(&self, kind: RunKind, mut filter: RunFilter) -> Result<(Vec<RunSummary>, bool), ServiceError> {
+        let wanted = filter.limit as usize;
+        filter.limit = filter.limit.saturating_add(1);
+        let mut runs = self.store.list_runs(kind, &filter).await?;
+        let more = runs.len() > wanted;
+        runs.truncate(wanted);
+        Ok((runs, more))
+    }
+
+    /// Deletes a run; `matches` is asked about its validator first.
+    ///
+    /// # Errors
+    /// [`ServiceError::NotFound`], [`ServiceError::TagMismatch`], or when the database fails.
+    pub async fn delete(
+        &self,
+        kind: RunKind,
+        id: Uuid,
+        matches: impl FnOnce(&str) -> bool,
+    ) -> Result<(), ServiceError> {
+        // A run never changes, so nothing can come between looking at its validator and deleting it but its deletion.
+        let tag = self.store.find_tag(kind, id).await?.ok_or(ServiceError::NotFound)?;
+        if !matches(&tag) {
+            return Err(ServiceError::TagMismatch);
+        }
+        if self.store.delete_run(kind, id).await? { Ok(()) } else { Err(ServiceError::NotFound) }
+    }
+}
+
+/// Why a computation gave no run to keep.
+enum Failure {
+    Unanswered(OriginError),
+    Unwritable(serde_json::Error),
+}
+
+impl Failure {
+    fn into_service_error(self, budget: std::time::Duration) -> ServiceError {
+        match self {
+            Self::Unanswered(unanswered) => ServiceError::from_core(unanswered, budget),
+            Self::Unwritable(error) => ServiceError::Broken(format!("the answer cannot be written: {error}")),
+        }
+    }
+}
+
+fn compute<Q: Question>(question: &Q, cancelled: &dyn Fn() -> bool) -> Result<NewRun, Failure> {
+    let inputs = question.canonical().map_err(Failure::Unwritable)?;
+    let digest = inputs_digest(&inputs);
+    let answer = question.answer(digest.clone(), cancelled).map_err(Failure::Unanswered)?;
+    let id = Uuid::now_v7();
+    // Read back from the id, so that the order of ids and the order of times are one.
+    let created_at = id
+        .get_timestamp()
+        .and_then(|time| {
+            let (seconds, nanoseconds) = time.to_unix();
+            Timestamp::new(i64::try_from(seconds).ok()?, i32::try_from(nanoseconds).ok()?).ok()
+        })
+        .unwrap_or_else(Timestamp::now);
+    let document = Document { id, created_at: created_at.to_string(), network: None, answer: &answer };
+    let document = serde_json::to_string(&document).map_err(Failure::Unwritable)?;
+    Ok(NewRun {
+        id,
+        kind: Q::KIND,
+        label: question.label().map(|label| label.as_str().to_owned()),
+        created_at,
+        engine: ENGINE,
+        seed: question.seed(),
+        inputs_digest: digest,
+        tag: sha256_hex(document.as_bytes()),
+        document,
+        inputs,
+    })
+}
+
+fn replayed(earlier: Inserted) -> Result<StoredRun, ServiceError> {
+    match earlier {
+        Inserted::Replayed(run) => Ok(run),
+        Inserted::KeyTaken => Err(ServiceError::KeyTaken),
+        Inserted::Kept => Err(ServiceError::Broken("a kept run came back as an earlier one".into())),
+    }
+}

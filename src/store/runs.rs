@@ -1,0 +1,317 @@
+//! Runs, and the idempotency keys that lead to them.
+
+use jiff::Timestamp;
+use sqlx::{FromRow, QueryBuilder, Sqlite, SqliteConnection};
+use uuid::Uuid;
+
+use super::{Store, StoreError};
+
+/// What a run answered.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum RunKind {
+    /// A forecast.
+    Forecast,
+    /// A fit alone.
+    Fit,
+}
+
+impl RunKind {
+    fn as_str(self) -> &'static str {
+        match self {
+            Self::Forecast => "forecast",
+            Self::Fit => "fit",
+        }
+    }
+}
+
+/// A run to keep.
+#[derive(Debug, Clone)]
+pub struct NewRun {
+    /// Its id, ordered by time.
+    pub id: Uuid,
+    /// What it answered.
+    pub kind: RunKind,
+    /// The caller's label.
+    pub label: Option<String>,
+    /// When it was answered.
+    pub created_at: Timestamp,
+    /// Engine and version.
+    pub engine: &'static str,
+    /// Seed, at most 2^53 − 1.
+    pub seed: u64,
+    /// Digest of the inputs.
+    pub inputs_digest: String,
+    /// Strong validator of the document.
+    pub tag: String,
+    /// The answer, byte for byte.
+    pub document: String,
+    /// The inputs in canonical form.
+    pub inputs: String,
+}
+
+/// A caller's claim that requests with this key are one and the same.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct KeyClaim {
+    /// The key.
+    pub key: String,
+    /// Digest of the request body, hexadecimal.
+    pub body_digest: String,
+}
+
+/// A run as kept.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct StoredRun {
+    /// Its id.
+    pub id: Uuid,
+    /// When it was answered.
+    pub created_at: Timestamp,
+    /// Strong validator of the document.
+    pub tag: String,
+    /// The answer, byte for byte.
+    pub document: String,
+}
+
+/// A run's line in a list.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct RunSummary {
+    /// Its id.
+    pub id: Uuid,
+    /// The network it belongs to.
+    pub network: Option<String>,
+    /// The caller's label.
+    pub label: Option<String>,
+    /// When it was answered.
+    pub created_at: Timestamp,
+    /// Engine and version.
+    pub engine: String,
+    /// Seed.
+    pub seed: u64,
+    /// Digest of the inputs.
+    pub inputs_digest: String,
+}
+
+/// Which runs to list; newest first.
+#[derive(Debug, Clone, Default, PartialEq, Eq)]
+pub struct RunFilter {
+    /// Only this label.
+    pub label: Option<String>,
+    /// Only this network.
+    pub network: Option<String>,
+    /// Only runs older than this one.
+    pub before: Option<Uuid>,
+    /// At most this many.
+    pub limit: u32,
+}
+
+/// What came of keeping a run.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub enum Inserted {
+    /// It is kept.
+    Kept,
+    /// The key already led to this run, for the same body.
+    Replayed(StoredRun),
+    /// The key already led to a run for another body.
+    KeyTaken,
+}
+
+#[derive(FromRow)]
+struct RunRow {
+    id: String,
+    created_at: i64,
+    tag: String,
+    document: String,
+}
+
+#[derive(FromRow)]
+struct KeyedRunRow {
+    body_digest: String,
+    #[sqlx(flatten)]
+    run: RunRow,
+}
+
+#[derive(FromRow)]
+struct SummaryRow {
+    id: String,
+    network: Option<String>,
+    label: Option<String>,
+    created_at: i64,
+    engine: String,
+    seed: i64,
+    inputs_digest: String,
+}
+
+impl Store {
+    /// Keeps a run, and its key with it, or finds what the key already led to.
+    ///
+    /// # Errors
+    /// When the database fails; then nothing was kept.
+    pub async fn insert_run(&self, run: &NewRun, claim: Option<&KeyClaim>) -> Result<Inserted, StoreError> {
+        let mut transaction = self.write.begin_with("BEGIN IMMEDIATE").await?;
+        if let Some(claim) = claim
+            && let Some(earlier) = claimed(&mut transaction, run.kind, claim).await?
+        {
+            return Ok(earlier);
+        }
+        sqlx::query(
+            "INSERT INTO runs (id, kind, network, label, created_at, engine, seed, inputs_digest, tag, document, inputs) \
+             VALUES ($1, $2, NULL, $3, $4, $5, $6, $7, $8, $9, $10)",
+        )
+        .bind(run.id.to_string())
+        .bind(run.kind.as_str())
+        .bind(run.label.as_deref())
+        .bind(run.created_at.as_microsecond())
+        .bind(run.engine)
+        .bind(signed(run.seed)?)
+        .bind(run.inputs_digest.as_str())
+        .bind(run.tag.as_str())
+        .bind(run.document.as_str())
+        .bind(run.inputs.as_str())
+        .execute(&mut *transaction)
+        .await?;
+        if let Some(claim) = claim {
+            sqlx::query("INSERT INTO idempotency_keys (kind, key, body_digest, run_id) VALUES ($1, $2, $3, $4)")
+                .bind(run.kind.as_str())
+                .bind(claim.key.as_str())
+                .bind(claim.body_digest.as_str())
+                .bind(run.id.to_string())
+                .execute(&mut *transaction)
+                .await?;
+        }
+        transaction.commit().await?;
+        Ok(Inserted::Kept)
+    }
+
+    /// What a key already led to, if anything.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn find_claim(&self, kind: RunKind, claim: &KeyClaim) -> Result<Option<Inserted>, StoreError> {
+        let mut connection = self.read.acquire().await?;
+        claimed(&mut connection, kind, claim).await
+    }
+
+    /// The run with this id, if it is kept.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn find_run(&self, kind: RunKind, id: Uuid) -> Result<Option<StoredRun>, StoreError> {
+        let row: Option<RunRow> =
+            sqlx::query_as("SELECT id, created_at, tag, document FROM runs WHERE id = $1 AND kind = $2")
+                .bind(id.to_string())
+                .bind(kind.as_str())
+                .fetch_optional(&self.read)
+                .await?;
+        row.map(StoredRun::try_from).transpose()
+    }
+
+    /// The validator of the run with this id, if it is kept.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn find_tag(&self, kind: RunKind, id: Uuid) -> Result<Option<String>, StoreError> {
+        let tag = sqlx::query_scalar("SELECT tag FROM runs WHERE id = $1 AND kind = $2")
+            .bind(id.to_string())
+            .bind(kind.as_str())
+            .fetch_optional(&self.read)
+            .await?;
+        Ok(tag)
+    }
+
+    /// Runs that pass the filter, newest first.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn list_runs(&self, kind: RunKind, filter: &RunFilter) -> Result<Vec<RunSummary>, StoreError> {
+        // One text a combination, so that each finds its index.
+        let mut query = QueryBuilder::<Sqlite>::new(
+            "SELECT id, network, label, created_at, engine, seed, inputs_digest FROM runs WHERE kind = ",
+        );
+        query.push_bind(kind.as_str());
+        if let Some(label) = &filter.label {
+            query.push(" AND label = ").push_bind(label.as_str());
+        }
+        if let Some(network) = &filter.network {
+            query.push(" AND network = ").push_bind(network.as_str());
+        }
+        if let Some(before) = filter.before {
+            query.push(" AND id < ").push_bind(before.to_string());
+        }
+        query.push(" ORDER BY id DESC LIMIT ").push_bind(i64::from(filter.limit));
+        let rows: Vec<SummaryRow> = query.build_query_as().fetch_all(&self.read).await?;
+        rows.into_iter().map(RunSummary::try_from).collect()
+    }
+
+    /// Deletes a run and its keys; false when it was not kept.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn delete_run(&self, kind: RunKind, id: Uuid) -> Result<bool, StoreError> {
+        let done = sqlx::query("DELETE FROM runs WHERE id = $1 AND kind = $2")
+            .bind(id.to_string())
+            .bind(kind.as_str())
+            .execute(&self.write)
+            .await?;
+        Ok(done.rows_affected() > 0)
+    }
+}
+
+async fn claimed(
+    connection: &mut SqliteConnection,
+    kind: RunKind,
+    claim: &KeyClaim,
+) -> Result<Option<Inserted>, StoreError> {
+    let row: Option<KeyedRunRow> = sqlx::query_as(
+        "SELECT k.body_digest, r.id, r.created_at, r.tag, r.document \
+         FROM idempotency_keys k JOIN runs r ON r.id = k.run_id WHERE k.kind = $1 AND k.key = $2",
+    )
+    .bind(kind.as_str())
+    .bind(claim.key.as_str())
+    .fetch_optional(connection)
+    .await?;
+    match row {
+        None => Ok(None),
+        Some(row) if row.body_digest == claim.body_digest => Ok(Some(Inserted::Replayed(row.run.try_into()?))),
+        Some(_) => Ok(Some(Inserted::KeyTaken)),
+    }
+}
+
+impl TryFrom<RunRow> for StoredRun {
+    type Error = StoreError;
+
+    fn try_from(row: RunRow) -> Result<Self, StoreError> {
+        let (id, created_at) = (uuid(&row.id)?, timestamp(row.created_at)?);
+        Ok(Self { id, created_at, tag: row.tag, document: row.document })
+    }
+}
+
+impl TryFrom<SummaryRow> for RunSummary {
+    type Error = StoreError;
+
+    fn try_from(row: SummaryRow) -> Result<Self, StoreError> {
+        Ok(Self {
+            id: uuid(&row.id)?,
+            network: row.network,
+            label: row.label,
+            created_at: timestamp(row.created_at)?,
+            engine: row.engine,
+            seed: u64::try_from(row.seed).map_err(|_| corrupt("seed", row.seed))?,
+            inputs_digest: row.inputs_digest,
+        })
+    }
+}
+
+fn uuid(text: &str) -> Result<Uuid, StoreError> {
+    Uuid::parse_str(text).map_err(|_| corrupt("id", text))
+}
+
+fn timestamp(micros: i64) -> Result<Timestamp, StoreError> {
+    Timestamp::from_microsecond(micros).map_err(|_| corrupt("created_at", micros))
+}
+
+fn signed(seed: u64) -> Result<i64, StoreError> {
+    i64::try_from(seed).map_err(|_| corrupt("seed", seed))
+}
+
+fn corrupt(column: &str, value: impl std::fmt::Display) -> StoreError {
+    StoreError::Corrupt(format!("{column} = {value}"))
+}

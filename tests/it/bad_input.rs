@@ -1,0 +1,276 @@
+//! Input that is wrong: each gets a precise problem document, never a panic, a hang or a number that is none.
+
+use reqwest::Method;
+use reqwest::header::CONTENT_TYPE;
+use serde_json::{Value, json};
+
+use crate::harness::{Service, answered, changed, fit_body, forecast_body};
+
+/// A fault put into a sound forecast body: the pointer where it is put, the value, and where and how it is reported.
+type Case = (&'static str, Value, &'static str, &'static str);
+
+fn cases() -> Vec<Case> {
+    let counts = "/snapshots/0/degree_counts";
+    vec![
+        ("/degree_kind", json!("followers"), "/degree_kind", "received"),
+        ("/degree_kind", json!(1), "/degree_kind", "string"),
+        ("/snapshots", json!([]), "/snapshots", "at least one"),
+        ("/snapshots", json!({}), "/snapshots", "array"),
+        ("/snapshots", json!([7]), "/snapshots/0", "object"),
+        ("/snapshots/0/as_of", json!("2026-02-30"), "/snapshots/0/as_of", "no time"),
+        ("/snapshots/0/as_of", json!("yesterday"), "/snapshots/0/as_of", "2026-12-01"),
+        ("/snapshots/0/as_of", json!(20260601), "/snapshots/0/as_of", "string"),
+        ("/snapshots/0/asof", json!("2026-06-01"), "/snapshots/0/asof", "did you mean \"as_of\""),
+        (counts, json!([]), counts, "no degree has a node"),
+        (counts, json!([[5, 0]]), counts, "no degree has a node"),
+        (counts, json!([[0, 10], [3, 5], [3, 6]]), "/snapshots/0/degree_counts/2", "twice"),
+        (counts, json!([[0, 10], [-3, 5]]), "/snapshots/0/degree_counts/1/0", "negative"),
+        (counts, json!([[0, 10], [3, -5]]), "/snapshots/0/degree_counts/1/1", "negative"),
+        (counts, json!([[0, 10], [3, 5.5]]), "/snapshots/0/degree_counts/1/1", "not a whole number"),
+        (counts, json!([[0, 10], [3.5, 5]]), "/snapshots/0/degree_counts/1/0", "not a whole number"),
+        (counts, json!([[0, 10], [3, "NaN"]]), "/snapshots/0/degree_counts/1/1", "not a string"),
+        (counts, json!([[0, 10], [3, null]]), "/snapshots/0/degree_counts/1/1", "not null"),
+        (counts, json!([[0, 10], [3]]), "/snapshots/0/degree_counts/1", "2 numbers"),
+        (counts, json!([[0, 10], [3, 4, 5]]), "/snapshots/0/degree_counts/1", "2 numbers"),
+        (counts, json!([[0, 10], {"3": 4}]), "/snapshots/0/degree_counts/1", "pair"),
+        (counts, json!({"0": 10}), counts, "array"),
+        (counts, json!([[9007199254740992u64, 1]]), "/snapshots/0/degree_counts/0", "9007199254740991"),
+        (counts, json!([[0, u64::MAX], [1, 1]]), counts, "2^64 - 1"),
+        ("/arrivals", json!(42), "/arrivals", "object"),
+        ("/arrivals", json!({}), "/arrivals", "\"per_day\" is missing"),
+        ("/arrivals/per_day", json!(-1), "/arrivals/per_day", "between 0"),
+        ("/arrivals/per_day", json!("NaN"), "/arrivals/per_day", "number"),
+        ("/arrivals/growth_per_year", json!(-1), "/arrivals/growth_per_year", "above -1"),
+        ("/arrivals/segments", json!([]), "/arrivals", "not both"),
+        ("/arrivals", json!({"segments": []}), "/arrivals/segments", "at least one"),
+        (
+            "/arrivals",
+            json!({"segments": [{"from": "2026-07-01", "per_day": 1}]}),
+            "/arrivals/segments/0/from",
+            "at or before",
+        ),
+        (
+            "/arrivals",
+            json!({"segments": [{"from": "2026-05-01", "per_day": 1}, {"from": "2026-06-01", "per_day": -2}]}),
+            "/arrivals/segments/1/per_day",
+            "between 0",
+        ),
+        ("/links_per_arrival", json!(-0.5), "/links_per_arrival", "links_per_arrival must lie between 0"),
+        ("/links_per_arrival", json!(1e300), "/links_per_arrival", "between 0"),
+        ("/links_per_arrival", json!(true), "/links_per_arrival", "not a boolean"),
+        ("/links_per_node_day", json!(-1), "/links_per_node_day", "links_per_node_day must"),
+        ("/departures_per_node_day", json!([]), "/departures_per_node_day", "not an array"),
+        ("/link_losses_per_link_day", json!(-1), "/link_losses_per_link_day", "between 0"),
+        ("/entry_degrees", json!([[0, 0.5], [1, 0.4]]), "/entry_degrees", "add up"),
+        ("/entry_degrees", json!([[0, 1.5]]), "/entry_degrees/0", "between 0 and 1"),
+        ("/entry_degrees", json!([[0, 0.5], [0, 0.5]]), "/entry_degrees/1", "twice"),
+        ("/entry_degrees", json!([[0.5, 1]]), "/entry_degrees/0/0", "not a whole number"),
+        ("/thresholds", json!([]), "/thresholds", "at least one"),
+        ("/thresholds", json!([10, 0]), "/thresholds/1", "between 1"),
+        ("/thresholds", json!([9007199254740992u64]), "/thresholds/0", "between 1"),
+        ("/thresholds", json!([1.5]), "/thresholds/0", "not a whole number"),
+        ("/thresholds", json!([-5]), "/thresholds/0", "negative"),
+        ("/thresholds", json!(["10"]), "/thresholds/0", "without quotes"),
+        ("/thresholds", json!((1..=1001).collect::<Vec<_>>()), "/thresholds", "more than"),
+        ("/dates", json!([]), "/dates", "at least one"),
+        ("/dates", json!(["2026-07-01", "2026-05-01"]), "/dates/1", "not after the last snapshot"),
+        ("/dates", json!(["2026-06-01"]), "/dates/0", "not after the last snapshot"),
+        ("/dates", json!(["2526-06-01"]), "/dates/0", "more than"),
+        ("/dates", json!(["soon"]), "/dates/0", "no time"),
+        ("/horizon", json!({"until": "2027-01-01", "every": "P1M"}), "", "not both"),
+        ("/levels", json!([0.5, 1.0]), "/levels/1", "strictly between"),
+        ("/levels", json!([]), "/levels", "at least one"),
+        ("/levels", json!(["0.9"]), "/levels/0", "without quotes"),
+        ("/model", json!("magic"), "/model", "auto"),
+        ("/model", json!(["auto"]), "/model", "string"),
+        ("/fixed", json!({"preferential_share": 1.01}), "/fixed/preferential_share", "between 0 and 1"),
+        ("/fixed", json!({}), "/fixed", "missing"),
+        ("/fixed", json!({"share": 0.5, "preferential_share": 0.5}), "/fixed/share", "no field"),
+        ("/seed", json!(-1), "/seed", "negative"),
+        ("/seed", json!(9007199254740992u64), "/seed", "largest allowed"),
+        ("/label", json!("a\u{0}b"), "/label", "NUL"),
+        ("/label", json!("x".repeat(201)), "/label", "200"),
+        ("/label", json!(5), "/label", "string"),
+        ("/thresholdz", json!([1]), "/thresholdz", "did you mean \"thresholds\""),
+        ("/transitions", json!([]), "/transitions", "no field"),
+    ]
+}
+
+#[tokio::test]
+async fn each_fault_is_reported_at_its_place() {
+    let service = Service::start().await;
+    for (put_at, value, place, words) in cases() {
+        let body = changed(forecast_body(), put_at, value.clone());
+        // Null means a field taken away here; a null that is meant stands inside its list.
+        let answer = service.post("/v1/forecasts", &body).await.expect_problem(400, "invalid_request");
+        let errors = answer.json()["errors"].as_array().cloned().unwrap_or_default();
+        let reported = errors.iter().any(|error| {
+            error["pointer"] == place && error["detail"].as_str().is_some_and(|detail| detail.contains(words))
+        });
+        assert!(reported && errors.len() == 1, "{put_at} = {value}: {}", answer.text);
+    }
+}
+
+#[tokio::test]
+async fn numbers_that_json_text_can_disguise() {
+    let service = Service::start().await;
+    for (number, place, words) in [
+        ("1e400", "/snapshots/0/degree_counts/0/1", "2^64 - 1"),
+        ("18446744073709551616", "/snapshots/0/degree_counts/0/1", "2^64 - 1"),
+        ("-1e400", "/snapshots/0/degree_counts/0/1", "negative"),
+        ("1e-400", "", ""),
+        ("0.1e1", "", ""),
+    ] {
+        let text = fit_body().to_string().replacen("[[0,", &format!("[[0,{number}],[77777,"), 1);
+        let answer = service.post_text("/v1/fits", text).await;
+        if place.is_empty() {
+            assert_ne!(answer.status, 400, "{number}: {}", answer.text);
+        } else {
+            let answer = answer.expect_problem(400, "invalid_request");
+            assert_eq!(answer.places(), [place], "{number}");
+            assert!(answer.text.contains(words), "{number}: {}", answer.text);
+        }
+    }
+    for (number, words) in [("1e400", "too large"), ("null", "leave the field out"), ("\"Infinity\"", "without quotes")]
+    {
+        let text =
+            fit_body().to_string().replacen("\"links_per_arrival\":3.0", &format!("\"links_per_arrival\":{number}"), 1);
+        let answer = service.post_text("/v1/fits", text).await.expect_problem(400, "invalid_request");
+        assert_eq!(answer.places(), ["/links_per_arrival"]);
+        assert!(answer.text.contains(words), "{number}: {}", answer.text);
+    }
+}
+
+#[tokio::test]
+async fn all_faults_come_at_once() {
+    let service = Service::start().await;
+    let body = changed(forecast_body(), "/snapshots/0/degree_counts", json!([[0, -1], [1, 2.5]]));
+    let body = changed(body, "/dates", json!(["2020-01-01"]));
+    let body = changed(body, "/thresholds", json!([0]));
+    let body = changed(body, "/typo", json!(1));
+    let body = changed(body, "/degree_kind", Value::Null);
+    let answer = service.post("/v1/forecasts", &body).await.expect_problem(400, "invalid_request");
+    let mut places = answer.places();
+    places.sort();
+    let expected =
+        ["", "/dates/0", "/snapshots/0/degree_counts/0/1", "/snapshots/0/degree_counts/1/1", "/thresholds/0", "/typo"];
+    assert_eq!(places, expected, "{}", answer.text);
+}
+
+#[tokio::test]
+async fn thousands_of_faults_are_counted_not_listed() {
+    let service = Service::start().await;
+    let wrong: Vec<(u64, i64)> = (0..5000).map(|degree| (degree, -1)).collect();
+    let body = changed(fit_body(), "/snapshots/0/degree_counts", json!(wrong));
+    let answer = service.post("/v1/fits", &body).await.expect_problem(400, "invalid_request");
+    assert_eq!(answer.places().len(), 100);
+    let repeated: Vec<(u64, u64)> = (0..5000).map(|_| (3, 1)).collect();
+    let body = changed(fit_body(), "/snapshots/0/degree_counts", json!(repeated));
+    let answer = service.post("/v1/fits", &body).await.expect_problem(400, "invalid_request");
+    assert!(answer.text.contains("4899 more are not listed"), "{}", answer.text);
+}
+
+#[tokio::test]
+async fn text_that_is_no_json_object() {
+    let service = Service::start().await;
+    for (text, words) in [
+        ("", "empty"),
+        ("  \n", "empty"),
+        ("{", "breaks off"),
+        (&forecast_body().to_string()[..200], "breaks off"),
+        ("{\"seed\": NaN}", "not JSON"),
+        ("{\"seed\": 01}", "not JSON"),
+        ("{\"seed\": 1} {}", "not JSON"),
+        ("{'seed': 1}", "line 1 column 2"),
+    ] {
+        let answer = service.post_text("/v1/forecasts", text.to_owned()).await.expect_problem(400, "malformed_json");
+        assert!(answer.text.contains(words), "{text}: {}", answer.text);
+    }
+    let answer = service.post_text("/v1/forecasts", vec![b'{', 0xff, b'}']).await.expect_problem(400, "malformed_json");
+    assert!(answer.text.contains("UTF-8"));
+    for text in ["[]", "7", "\"text\"", "null", "true"] {
+        let answer = service.post_text("/v1/forecasts", text).await.expect_problem(400, "invalid_request");
+        assert_eq!(answer.places(), [""], "{text}");
+    }
+    let twice = r#"{"degree_kind": "received", "degree_kind": "total"}"#;
+    let answer = service.post_text("/v1/forecasts", twice).await.expect_problem(400, "invalid_request");
+    assert!(answer.text.contains("given twice"));
+    let nested = "[".repeat(100_000) + &"]".repeat(100_000);
+    service.post_text("/v1/forecasts", nested.clone()).await.expect(400);
+    let inside = format!("{{\"snapshots\": [{nested}], \"levels\": {nested}}}");
+    service.post_text("/v1/forecasts", inside).await.expect(400);
+    let many = format!("{{{}\"seed\": 1}}", "\"a\": 1, ".repeat(100_000));
+    service.post_text("/v1/forecasts", many).await.expect_problem(400, "invalid_request");
+    let mark = format!("\u{feff}{}", fit_body());
+    service.post_text("/v1/fits", mark).await.expect(201);
+}
+
+#[tokio::test]
+async fn media_types() {
+    let service = Service::start().await;
+    let post = |kind: &'static str| {
+        answered(service.request(Method::POST, "/v1/fits").header(CONTENT_TYPE, kind).body(fit_body().to_string()))
+    };
+    for kind in
+        ["text/plain", "text/csv", "application/x-www-form-urlencoded", "application/json; charset=latin1", "json"]
+    {
+        post(kind).await.expect_problem(415, "unsupported_media_type");
+    }
+    for kind in ["application/json; charset=UTF-8", "Application/JSON", "application/vnd.api+json"] {
+        post(kind).await.expect(201);
+    }
+    let bare = service.request(Method::POST, "/v1/fits").body(fit_body().to_string());
+    answered(bare).await.expect_problem(415, "unsupported_media_type");
+    let run = post("application/json").await.expect(201);
+    for accept in ["image/png", "text/html", "application/json;q=0"] {
+        service.get_with(run.header("location"), "accept", accept).await.expect_problem(406, "not_acceptable");
+    }
+    service.get(&format!("{}?format=svg", run.header("location"))).await.expect_problem(400, "invalid_request");
+    service.get(&format!("{}?formt=csv", run.header("location"))).await.expect_problem(400, "invalid_request");
+}
+
+#[tokio::test]
+async fn what_is_well_formed_but_has_no_answer() {
+    let service = Service::start().await;
+    let body = changed(forecast_body(), "/arrivals", Value::Null);
+    let answer = service.post("/v1/forecasts", &body).await.expect_problem(422, "arrivals_required");
+    assert_eq!(answer.places(), ["/arrivals"]);
+    // Extreme networks: a right answer or a problem that says why there is none, and nothing else.
+    for counts in [
+        json!([[0, 1]]),
+        json!([[0, 1000]]),
+        json!([[7, 1]]),
+        json!([[9007199254740991u64, 1]]),
+        json!([[1, u64::MAX]]),
+    ] {
+        for (pointer, value) in
+            [("/seed", json!(1)), ("/arrivals", json!({"per_day": 0})), ("/arrivals/per_day", json!(1e15))]
+        {
+            let body =
+                changed(changed(forecast_body(), "/snapshots/0/degree_counts", counts.clone()), pointer, value.clone());
+            let answer = service.post("/v1/forecasts", &body).await;
+            assert!([201, 422].contains(&answer.status), "{counts} {pointer} = {value}: {}", answer.text);
+        }
+    }
+}
+
+#[tokio::test]
+async fn unknown_routes_and_methods() {
+    let service = Service::start().await;
+    for path in ["/v2", "/v1", "/v1/forecasts/", "/v1/forecasts/a/b", "/favicon.ico", "/%00", "/v1/forecasts/%E2%82"] {
+        let answer = service.get(path).await;
+        assert!([400, 404].contains(&answer.status), "{path}: {}", answer.text);
+    }
+    for id in ["none", "0", "a%00b", "01a231cd-6fbd-74cb-ab23-3d832b2bafba"] {
+        service.get(&format!("/v1/forecasts/{id}")).await.expect_problem(404, "not_found");
+    }
+    for (method, path, allowed) in [
+        (Method::PUT, "/v1/forecasts", "POST"),
+        (Method::POST, "/v1/forecasts/x", "DELETE"),
+        (Method::POST, "/livez", "GET"),
+        (Method::PATCH, "/v1/fits", "POST"),
+    ] {
+        let answer = service.send(method, path).await.expect_problem(405, "method_not_allowed");
+        assert!(answer.header("allow").contains(allowed), "{path}: {}", answer.header("allow"));
+    }
+}

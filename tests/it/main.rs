@@ -1,0 +1,18 @@
+//! The service from outside: one binary, a file a subject.
+
+#![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic)]
+
+mod any_json;
+mod architecture;
+mod bad_input;
+mod command_line;
+mod coverage;
+mod durability;
+mod fits;
+mod forecasts;
+mod harness;
+mod limits;
+mod lists;
+mod openapi;
+mod operation;
+mod process;

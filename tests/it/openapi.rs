@@ -1,0 +1,79 @@
+//! The OpenAPI document: committed, complete, and in step with the readers.
+
+use std::collections::BTreeSet;
+
+use serde_json::Value;
+use tailcast::api::{FIT_FIELDS, FORECAST_FIELDS, example_request, openapi_text};
+
+use crate::harness::{DOCUMENT, Service};
+
+const COMMITTED: &str = include_str!("../../openapi/openapi.json");
+
+#[test]
+fn the_committed_document_is_current() {
+    assert!(COMMITTED == openapi_text(), "write it anew: cargo run -- openapi > openapi/openapi.json");
+    assert_eq!(DOCUMENT["openapi"], "3.1.0");
+}
+
+#[tokio::test]
+async fn the_served_document_is_the_committed_one() {
+    let service = Service::start().await;
+    assert_eq!(service.get("/openapi.json").await.expect(200).text, COMMITTED);
+}
+
+#[test]
+fn documented_fields_are_the_fields_that_are_read() {
+    let documented = |schema: &str| -> BTreeSet<String> {
+        let schema = &DOCUMENT["components"]["schemas"][schema];
+        assert_eq!(schema["additionalProperties"], false, "unknown fields are refused");
+        schema["properties"].as_object().unwrap().keys().cloned().collect()
+    };
+    let read = |fields: &[&str]| fields.iter().map(|&field| field.to_owned()).collect::<BTreeSet<_>>();
+    assert_eq!(documented("ForecastRequestBody"), read(&FORECAST_FIELDS));
+    assert_eq!(documented("FitRequestBody"), read(&FIT_FIELDS));
+}
+
+#[tokio::test]
+async fn the_example_is_read_without_a_fault() {
+    let service = Service::start().await;
+    let answer = service.post("/v1/forecasts", &example_request()).await;
+    assert!([201, 422].contains(&answer.status), "{}", answer.text);
+}
+
+#[test]
+fn every_operation_says_what_it_does_and_how_it_fails() {
+    for (path, item) in DOCUMENT["paths"].as_object().unwrap() {
+        for (method, operation) in item.as_object().unwrap() {
+            let name = format!("{method} {path}");
+            assert!(operation["summary"].as_str().is_some_and(|text| !text.is_empty()), "{name}");
+            for (status, response) in operation["responses"].as_object().unwrap() {
+                assert!(response["description"].as_str().is_some_and(|text| !text.is_empty()), "{name} {status}");
+                if status.starts_with(['4', '5']) {
+                    let schema = &response["content"]["application/problem+json"]["schema"]["$ref"];
+                    assert_eq!(schema, "#/components/schemas/Problem", "{name} {status}");
+                }
+            }
+        }
+    }
+}
+
+/// A reference that leads nowhere breaks generated clients.
+#[test]
+fn every_reference_leads_somewhere() {
+    fn walk(value: &Value, found: &mut Vec<String>) {
+        match value {
+            Value::Object(fields) => {
+                found.extend(fields.get("$ref").and_then(Value::as_str).map(str::to_owned));
+                fields.values().for_each(|inner| walk(inner, found));
+            }
+            Value::Array(items) => items.iter().for_each(|inner| walk(inner, found)),
+            _ => {}
+        }
+    }
+    let mut references = Vec::new();
+    walk(&DOCUMENT, &mut references);
+    assert!(!references.is_empty());
+    for reference in references {
+        assert!(DOCUMENT.pointer(reference.trim_start_matches('#')).is_some(), "{reference}");
+    }
+}

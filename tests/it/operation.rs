@@ -1,0 +1,113 @@
+//! Health, readiness, metrics, pages, tracing, a stop in good order.
+
+use std::time::Duration;
+
+use reqwest::Method;
+use sqlx::{Connection, Executor, SqliteConnection};
+
+use crate::harness::{Service, answered, fit_body, forecast_body};
+
+#[tokio::test]
+async fn probes_answer() {
+    let service = Service::start().await;
+    assert_eq!(service.get("/livez").await.expect(200).text, "alive\n");
+    assert_eq!(service.get("/readyz").await.expect(200).text, "ready\n");
+}
+
+#[tokio::test]
+async fn it_is_not_ready_before_its_tables_are_made() {
+    let service = Service::start_with(|config| config.database.migrate_on_start = false).await;
+    service.get("/livez").await.expect(200);
+    let answer = service.get("/readyz").await.expect_problem(503, "not_ready");
+    assert!(answer.text.contains("migrate"), "{}", answer.text);
+}
+
+#[tokio::test]
+async fn metrics_name_routes_not_paths() {
+    let service = Service::start().await;
+    service.post("/v1/fits", &fit_body()).await.expect(201);
+    service.get("/v1/fits/typed-by-a-client").await.expect(404);
+    service.get("/typed/by/a/client").await.expect(404);
+    let metrics = service.get("/metrics").await.expect(200);
+    assert!(metrics.header("content-type").starts_with("text/plain; version=0.0.4"));
+    for line in [
+        "tailcast_http_requests_total{method=\"POST\",route=\"/v1/fits\",status=\"201\"}",
+        "tailcast_http_requests_total{method=\"GET\",route=\"/v1/fits/{id}\",status=\"404\"}",
+        "tailcast_http_requests_total{method=\"GET\",route=\"unmatched\",status=\"404\"}",
+        "tailcast_compute_seconds_count",
+        "tailcast_build_info",
+    ] {
+        assert!(metrics.text.contains(line), "{line}");
+    }
+    assert!(!metrics.text.contains("typed"));
+}
+
+#[tokio::test]
+async fn pages_load_nothing_from_elsewhere() {
+    let service = Service::start().await;
+    for path in ["/", "/docs/"] {
+        let page = service.get(path).await.expect(200);
+        assert!(page.header("content-security-policy").starts_with("default-src 'self'"), "{path}");
+        assert!(!page.text.contains("//cdn") && !page.text.contains("src=\"http"), "{path}: {}", page.text);
+    }
+    let settings = service.get("/docs/swagger-initializer.js").await.expect(200);
+    assert!(
+        settings.text.contains("/openapi.json") && settings.text.contains("\"validatorUrl\": \"none\""),
+        "{}",
+        settings.text
+    );
+}
+
+#[tokio::test]
+async fn a_request_id_is_kept_when_sane_and_made_when_not() {
+    let service = Service::start().await;
+    let kept = service.get_with("/livez", "x-request-id", "nightly-17.a").await;
+    assert_eq!(kept.header("x-request-id"), "nightly-17.a");
+    let problem = service.get_with("/nothing", "x-request-id", "nightly-18").await.expect(404);
+    assert_eq!(problem.json()["request_id"], "nightly-18");
+    let replaced = service.get_with("/livez", "x-request-id", "a b\"c").await;
+    assert_eq!(replaced.header("x-request-id").len(), 36);
+    let traced = answered(service.request(Method::GET, "/livez").header("traceparent", "nonsense"));
+    traced.await.expect(200);
+}
+
+#[tokio::test]
+async fn a_stop_finishes_what_was_accepted() {
+    let service = Service::start().await;
+    let address = service.address();
+    let bodies: Vec<_> = (0..8).map(|_| service.request(Method::POST, "/v1/forecasts")).collect();
+    let pending: Vec<_> = bodies
+        .into_iter()
+        .map(|request| {
+            let request = request.header("content-type", "application/json").body(forecast_body().to_string());
+            tokio::spawn(async move { request.send().await.map(|response| response.status().as_u16()) })
+        })
+        .collect();
+    tokio::time::sleep(Duration::from_millis(30)).await;
+    service.stop().await;
+    for outcome in pending {
+        // Either it was accepted and answered in full, or it came after the door was closed; never cut off with a 5xx.
+        if let Ok(status) = outcome.await.unwrap() {
+            assert_eq!(status, 201);
+        }
+    }
+    assert!(tokio::net::TcpStream::connect(address).await.is_err(), "nobody listens any more");
+}
+
+#[tokio::test]
+async fn a_writer_elsewhere_is_waited_for_and_then_reported() {
+    let folder = tempfile::tempdir().unwrap();
+    let url = format!("sqlite://{}", folder.path().join("shared.db").display());
+    let service = Service::start_with(|config| {
+        config.database.url = url.clone();
+        config.database.busy_timeout_ms = 200;
+    })
+    .await;
+    let mut other = SqliteConnection::connect(&url).await.unwrap();
+    other.execute("BEGIN IMMEDIATE").await.unwrap();
+    let answer = service.post("/v1/fits", &fit_body()).await.expect_problem(503, "store_busy");
+    assert!(!answer.header("retry-after").is_empty());
+    service.get("/v1/fits").await.expect(200);
+    other.execute("ROLLBACK").await.unwrap();
+    service.post("/v1/fits", &fit_body()).await.expect(201);
+}
