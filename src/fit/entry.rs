@@ -6,9 +6,9 @@ use crate::model::{DegreeKind, EntryDegrees, Evidence, Warning};
 /// A mean entry degree within this share of the smallest degree is taken to be that degree.
 const SAME_DEGREE: f64 = 0.02;
 /// Entry shares below this are left out of an assumed distribution.
-const SMALLEST_SHARE: f64 = 1e-12;
+const SMALLEST_SHARE: f64 = 1e-9;
 /// Most entry degrees of an assumed distribution.
-const MOST_ENTRIES: usize = 4_000;
+const MOST_ENTRIES: usize = 2_000;
 
 /// Entry degrees given, or read from the counts, with what the reader should know of the reading.
 ///
