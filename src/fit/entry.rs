@@ -5,10 +5,10 @@ use crate::model::{DegreeKind, EntryDegrees, Evidence, Warning};
 
 /// A mean entry degree within this share of the smallest degree is taken to be that degree.
 const SAME_DEGREE: f64 = 0.02;
-/// Entry shares below this are left out of an assumed distribution.
-const SMALLEST_SHARE: f64 = 1e-9;
-/// Most entry degrees of an assumed distribution.
-const MOST_ENTRIES: usize = 2_000;
+/// An assumed distribution ends where less than this share is left.
+const SHARE_LEFT: f64 = 1e-6;
+/// Entry degrees of an assumed distribution are single up to this many, then cells growing by a quarter.
+const SINGLE_ENTRIES: u64 = 8;
 
 /// Entry degrees given, or read from the counts, with what the reader should know of the reading.
 ///
@@ -41,15 +41,8 @@ pub(super) fn entry_degrees(evidence: &Evidence) -> Result<(EntryDegrees, Vec<Wa
         }
         return Ok((EntryDegrees::single(smallest), warnings));
     }
-    let excess = mean - smallest as f64;
-    let ratio = excess / (1.0 + excess);
-    let shares: Vec<(u64, f64)> = (0..MOST_ENTRIES)
-        .map(|i| (smallest + i as u64, (1.0 - ratio) * ratio.powi(i as i32)))
-        .take_while(|&(_, share)| share > SMALLEST_SHARE)
-        .collect();
-    let total: f64 = shares.iter().map(|&(_, share)| share).sum();
-    let scaled: Vec<(u64, f64)> = shares.into_iter().map(|(k, share)| (k, share / total)).collect();
-    let entry = EntryDegrees::from_shares(&scaled).map_err(|faults| FitError::NotIdentified {
+    let shares = geometric_cells(smallest, mean - smallest as f64);
+    let entry = EntryDegrees::from_shares(&shares).map_err(|faults| FitError::NotIdentified {
         detail: format!("no entry degrees could be read from the counts: {}; give entry_degrees", faults[0].detail),
     })?;
     let detail = format!(
@@ -68,4 +61,41 @@ fn marginal_mean_degree(evidence: &Evidence) -> f64 {
         Some(ends as f64 / nodes as f64)
     });
     grown.unwrap_or_else(|| latest.mean_degree())
+}
+
+/// A geometric distribution from `smallest` up with mean `smallest + excess`, its far part gathered into cells at their
+/// means: about forty entry degrees whatever the mean.
+fn geometric_cells(smallest: u64, excess: f64) -> Vec<(u64, f64)> {
+    let ratio = excess / (1.0 + excess);
+    let beyond = |i: u64| ratio.powf(i as f64); // share at least i above the smallest
+    let (mut shares, mut from) = (Vec::new(), 0);
+    while beyond(from) > SHARE_LEFT {
+        let to = if from < SINGLE_ENTRIES { from + 1 } else { from + from.div_ceil(4) };
+        let last = beyond(to) <= SHARE_LEFT;
+        let share = beyond(from) - if last { 0.0 } else { beyond(to) };
+        // Mean of i given from ≤ i < to; given only from ≤ i it is from + excess.
+        let width = (to - from) as f64;
+        let inside = if last { excess } else { excess - width * beyond(to) / (beyond(from) - beyond(to)) };
+        shares.push((smallest + from + inside.round() as u64, share));
+        from = to;
+    }
+    shares
+}
+
+#[cfg(test)]
+mod tests {
+    use super::geometric_cells;
+
+    #[test]
+    fn cells_keep_the_mean_and_add_up() {
+        for excess in [0.3, 2.0, 17.5, 1_400.0, 48_000.0] {
+            let cells = geometric_cells(3, excess);
+            assert!(cells.len() < 80);
+            assert!(cells.windows(2).all(|pair| pair[0].0 < pair[1].0));
+            let total: f64 = cells.iter().map(|&(_, share)| share).sum();
+            let mean: f64 = cells.iter().map(|&(k, share)| k as f64 * share).sum();
+            assert!((total - 1.0).abs() < 1e-9);
+            assert!((mean - 3.0 - excess).abs() < 0.02 * (1.0 + excess), "{mean} for {excess}");
+        }
+    }
 }

@@ -8,6 +8,10 @@ use crate::numerics::roots::increasing_root;
 
 /// Means above this take their quantiles from the continuous limit; a whole node then matters less than 10⁻⁵.
 const CONTINUOUS_ABOVE: f64 = 1e5;
+/// Standard deviation of the uncertain rate over the mean beyond which a law says nothing more.
+const WIDEST_SPREAD: f64 = 3.0;
+/// A quantile is sought up to this: 2^63.
+const FARTHEST: f64 = 9.3e18;
 /// Variance within this of the mean, relative: Poisson.
 const POISSON_WITHIN: f64 = 1e-6;
 
@@ -28,9 +32,11 @@ pub struct CountLaw {
 }
 
 impl CountLaw {
-    /// A law with the certain part `floor`, and mean and variance of the rest; negative rounding residue counts as zero.
+    /// A law with the certain part `floor`, and mean and variance of the rest; negative rounding residue counts as zero,
+    /// and a spread beyond three times the mean as that.
     pub fn new(floor: f64, mean: f64, variance: f64) -> Self {
-        Self { floor, mean: mean.max(0.0), variance: variance.max(0.0) }
+        let mean = mean.max(0.0);
+        Self { floor, mean, variance: variance.clamp(0.0, mean + (WIDEST_SPREAD * mean).powi(2)) }
     }
 
     /// Smallest count x with P(count ≤ x) ≥ `probability`, for a probability in (0, 1).
@@ -47,7 +53,7 @@ impl CountLaw {
             return self.floor + self.continuous_quantile(probability).round();
         }
         let (mut below, mut reach) = (-1.0, self.mean + 8.0 * self.variance.sqrt() + 8.0);
-        while self.distribution(reach) < probability {
+        while self.distribution(reach) < probability && reach < FARTHEST {
             (below, reach) = (reach, 2.0 * reach);
         }
         let mut reach = reach.ceil();

@@ -82,8 +82,8 @@ impl Outlook<'_> {
             tail_sum(&self.central, self.counts, day, threshold, Accuracy::Full)?;
         let beyond = self
             .excursion_variance(|course| Ok(tail_sum(course, self.counts, day, threshold, Accuracy::Working)?.mean))?;
-        // The flow is what the model can be wrong about: nodes past the threshold that were not, and the other way round.
-        let flow = (mean - certain).max((mean - now).abs());
+        // The flow is what the model can be wrong about; a tail that all but vanishes is not wrong by what it lost.
+        let flow = if mean >= now { mean - now } else { (now - mean).min(mean) };
         let variance = variance + beyond + (self.model_error * flow).powi(2);
         Ok(TailForecast { threshold, size: self.count(now, certain, mean, variance) })
     }

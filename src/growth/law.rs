@@ -11,6 +11,11 @@ use crate::numerics::inversion::upper_tail;
 use crate::numerics::quadrature::{PANEL, PANEL_NODES};
 use crate::numerics::tolerances::Accuracy;
 
+/// Expected gains below this are none.
+const NEVER: f64 = 1e-280;
+/// Once a link's expected descendants are fewer than e^{−50}, what came before leaves no trace in double precision.
+const FORGOTTEN: f64 = -50.0;
+
 /// The law of a node's degree at day t given its degree at day s: a time-inhomogeneous linear birth, death and
 /// immigration process (Kendall 1948).
 ///
@@ -92,6 +97,9 @@ impl NodeLaw {
             law.spread = start_spread;
             law.shortfall += loss * integral(&expansion, &PANEL.weights);
             exponent += integral(&births, &PANEL.weights) - loss * days;
+            if exponent < FORGOTTEN {
+                break;
+            }
         }
         law.expansion = exponent.exp();
         law
@@ -127,8 +135,9 @@ impl NodeLaw {
         let open = if self.losses { starts.len() } else { starts.partition_point(|&(degree, _)| degree < threshold) };
         let certain: f64 = starts[open..].iter().map(|&(_, share)| share).sum();
         let Some(&(reference, _)) = starts[..open].last() else { return Ok(certain) };
-        let still = self.spread == 0.0 && !self.losses;
-        if self.mean_gain_from_uniform() == 0.0 && (reference == 0 || still) {
+        // Markov: a gain whose expectation is this small has no probability that a double could hold.
+        let offspring = if self.losses { self.expansion } else { self.spread };
+        if self.mean_gain_from_uniform() + reference as f64 * offspring < NEVER {
             return Ok(certain);
         }
         let share: f64 = starts[..open].iter().map(|&(_, share)| share).sum();

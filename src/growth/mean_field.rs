@@ -9,6 +9,8 @@ use crate::numerics::tolerances::{MESH_LOG_CHANGE, MESH_MAX_PANELS};
 /// Share of the horizon that the first panel takes when there is no link yet and L/K starts from infinity.
 const FIRST_PANEL_WITHOUT_LINKS: f64 = 1e-30;
 
+/// After this many mean lifetimes e^{−50} of the nodes are left.
+const FORGOTTEN_DEPARTURES: f64 = 50.0;
 /// Link ends beyond this are nonsense: 2^64 nodes of degree 2^53 have 10³⁵.
 const MOST_LINK_ENDS: f64 = 1e40;
 
@@ -178,6 +180,21 @@ impl Course {
         let mut edges = vec![first];
         let inner = self.panels.partition_point(|p| p.start <= first);
         edges.extend(self.panels[inner..].iter().map(|p| p.start).take_while(|&start| start < to));
+        edges.push(to);
+        edges
+    }
+
+    /// Edges for an integral over arrivals up to `to`: the mesh, or under losses, where the mesh is as fine as the hazards,
+    /// the stretches of the arrival plan within the span that losses let a newcomer leave a trace.
+    pub(crate) fn arrival_edges(&self, to: f64) -> Vec<f64> {
+        if !self.parameters.has_losses() {
+            return self.edges(0.0, to);
+        }
+        let departed = FORGOTTEN_DEPARTURES / self.parameters.departure_hazard();
+        let from = (to - departed).max(0.0);
+        let segments = self.parameters.arrivals.segments().iter().map(|s| s.from_day);
+        let mut edges = vec![from];
+        edges.extend(segments.filter(|&day| day > from && day < to));
         edges.push(to);
         edges
     }

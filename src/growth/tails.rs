@@ -98,7 +98,7 @@ fn newcomers_mean(
         Ok(parameters.arrivals.rate(arrival) * course.survival(day - arrival) * share)
     };
     let mut mean = 0.0;
-    for pair in course.edges(0.0, day).windows(2) {
+    for pair in course.arrival_edges(day).windows(2) {
         mean += integrate_adaptively(pair[0], pair[1], present + mean, accuracy, &mut in_tail)?;
     }
     Ok(mean)

@@ -82,12 +82,16 @@ pub fn upper_tail(gf: &impl GeneratingFunction, g: f64, accuracy: Accuracy) -> R
         if small || g <= 0.0 || g * gf.singularity() >= SQUEEZED {
             match contour_integral(gf, g, &saddle, accuracy) {
                 Err(InversionError) if !small => {}
-                settled => return settled.map(|tail| tail.clamp(0.0, 1.0)),
+                settled => return settled.and_then(probability),
             }
         }
     }
     let saddle = find_saddle(gf, g, mean, variance, Side::Lower);
-    contour_integral(gf, g, &saddle, accuracy).map(|below| (1.0 - below).clamp(0.0, 1.0))
+    contour_integral(gf, g, &saddle, accuracy).and_then(|below| probability(1.0 - below))
+}
+
+fn probability(value: f64) -> Result<f64, InversionError> {
+    if value.is_nan() { Err(InversionError) } else { Ok(value.clamp(0.0, 1.0)) }
 }
 
 /// Minimises the convex exponent ln E[e^{ζG}] − (g−1)ζ − ln|e^ζ − 1| on its side of 0 by bracketed Newton steps.
