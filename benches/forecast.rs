@@ -3,6 +3,7 @@
 //! usage: cargo bench --bench forecast
 //!
 //! Runs are interleaved and compared by their medians, so the ratios hold on a noisy machine; the times themselves do not.
+#![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic, clippy::print_stdout)]
 
 use std::hint::black_box;
 use std::time::{Duration, Instant};

@@ -4,6 +4,7 @@
 //!
 //! The output of a full run is kept in studies/mix_coverage.txt. The graphs of an independent library are checked one by one
 //! in tests/core/fit.rs.
+#![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic, clippy::print_stdout)]
 
 use std::sync::atomic::{AtomicUsize, Ordering};
 

@@ -208,11 +208,11 @@ impl<'a> Period<'a> {
     fn covariance(&self, p: f64) -> Result<Vec<Vec<f64>>, FitError> {
         let course = self.course(p)?;
         let size = self.thresholds.len();
-        let mut covariance = vec![vec![0.0; size]; size];
+        let mut upper = vec![vec![0.0; size]; size];
         let mut add = |weight: f64, tails: &[f64]| {
             for i in 0..size {
                 for j in i..size {
-                    covariance[i][j] += weight * (tails[j] - tails[i] * tails[j]);
+                    upper[i][j] += weight * (tails[j] - tails[i] * tails[j]);
                 }
             }
         };
@@ -229,12 +229,7 @@ impl<'a> Period<'a> {
             let entry = self.forces.entry.shares();
             add(newcomers, &tails(&law, entry, &self.thresholds, course.survival(self.days - arrival))?);
         }
-        for i in 0..size {
-            for j in 0..i {
-                covariance[i][j] = covariance[j][i];
-            }
-        }
-        Ok(covariance)
+        Ok((0..size).map(|i| (0..size).map(|j| upper[i.min(j)][i.max(j)]).collect()).collect())
     }
 
     /// Variance of Σ w_j·D_j given the total number of landed links, to first order.

@@ -69,7 +69,8 @@ fn present_sum(
         sum.mean += nodes * probability;
         sum.variance += nodes * probability * (1.0 - probability);
         sum.log_none += nodes * (-probability).ln_1p();
-        if probability == 1.0 {
+        // Not by probability = 1: that also happens by rounding, and would jump as the forces vary.
+        if degree >= threshold && !course.parameters().has_losses() {
             sum.certain += nodes;
         }
     }

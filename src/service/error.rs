@@ -76,7 +76,9 @@ impl ServiceError {
             OriginError::Forecast(ForecastError::Cancelled) => Self::TooSlow { budget },
             OriginError::Fit(FitError::Growth(growth)) | OriginError::Forecast(ForecastError::Growth(growth)) => {
                 match growth {
-                    GrowthError::NobodyStarts | GrowthError::TooFast { .. } => Self::Impossible(growth.to_string()),
+                    GrowthError::NobodyStarts | GrowthError::TooFast { .. } | GrowthError::TooLarge { .. } => {
+                        Self::Impossible(growth.to_string())
+                    }
                     GrowthError::Inversion(_) => Self::NotConverged(growth.to_string()),
                 }
             }

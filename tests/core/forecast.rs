@@ -90,7 +90,8 @@ fn one_snapshot_needs_arrivals() {
 fn no_arrivals_mean_no_change() {
     let snapshot = snapshots("debian").remove(2);
     let date = "2027-01-01T00:00:00Z".parse().unwrap();
-    let request = request(evidence(DegreeKind::Received, &[snapshot.clone()]), Some(0.0), &[10, 1_000], date);
+    let request =
+        request(evidence(DegreeKind::Received, std::slice::from_ref(&snapshot)), Some(0.0), &[10, 1_000], date);
     let at = &forecast(&request).forecast[0];
     assert_eq!(at.nodes.expected, snapshot.counts.nodes() as f64);
     for tail in &at.tail {

@@ -1,4 +1,5 @@
 //! Tests of the numerical core; they need no server feature.
+#![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic, clippy::print_stdout)]
 
 mod fit;
 mod forecast;

@@ -24,10 +24,13 @@ fn mean_and_variance(samples: &[f64]) -> (f64, f64) {
     (mean, samples.iter().map(|x| (x - mean).powi(2)).sum::<f64>() / (samples.len() - 1) as f64)
 }
 
+/// Degree kind, links each and preferential share, as the table writes them.
+type Setting = (String, String, String);
+
 /// Ten graphs a setting by igraph (tests/reference/graphs.py), forty by the simulator from the same start: one node.
 #[test]
 fn the_simulator_grows_what_igraph_grows() {
-    let mut graphs: BTreeMap<(String, String, String), BTreeMap<String, Vec<(u64, u64)>>> = BTreeMap::new();
+    let mut graphs: BTreeMap<Setting, BTreeMap<String, Vec<(u64, u64)>>> = BTreeMap::new();
     for row in rows("twosample.csv") {
         let setting = (row[0].clone(), row[1].clone(), row[2].clone());
         let graph = graphs.entry(setting).or_default().entry(row[4].clone()).or_default();
