@@ -10,11 +10,13 @@ use crate::model::{ArrivalPlan, AttachmentMix, Evidence, ForecastPlan, GrowthPar
 pub const DEFAULT_MODEL_ERROR: f64 = 0.15;
 
 /// What every reader of any forecast must keep in mind.
-pub const CAUTIONS: [&str; 4] = [
+pub const CAUTIONS: [&str; 5] = [
     "A forecast assumes that growth goes on as the fitted mix and the given rates say; a launch, a policy change or a ranking \
      change breaks it.",
     "Intervals cover chance, the uncertainty of the estimates and a stated allowance for model error, not events without \
      precedent in the data.",
+    "Unless departures or link losses are given, nodes stay and links last; where they do not, the largest hubs come out too \
+     many and too certain.",
     "Far thresholds and far dates rest on the fewest nodes: plan with the interval, not with its middle.",
     "Where a capacity failure could harm people, your own engineering practice and its safety margins come before this \
      forecast.",

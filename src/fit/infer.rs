@@ -56,6 +56,7 @@ pub fn fit(evidence: &Evidence, request: &FitRequest) -> Result<Fit, FitError> {
     if let Some(goodness) = &goodness {
         warnings.extend(diagnose(counts, &tail, goodness));
     }
+    warnings.extend(periods.last().and_then(|newest| shrinkage(newest, request)));
     let tail_exponent = tail_exponent(&profile, rates.exponent_links, entry.mean(), request);
     Ok(assemble(rung, profile, rates, entry, tail_exponent, tail, goodness, warnings))
 }
@@ -137,6 +138,22 @@ fn newest_tail(periods: &[Period], share: f64) -> Result<Vec<TailPoint>, FitErro
     Ok(newest.fitted_tail(share)?.into_iter().map(point).collect())
 }
 
+/// A warning when tails shrank although nothing is said to leave or to be lost.
+fn shrinkage(newest: &Period, request: &FitRequest) -> Option<Warning> {
+    let shrunken = newest.shrunken();
+    let &(threshold, before, after) = shrunken.first()?;
+    if request.departures_per_node_day > 0.0 || request.link_losses_per_link_day > 0.0 {
+        return None;
+    }
+    let detail = format!(
+        "nodes with {threshold} links or more fell from {before} to {after} in the newest period ({} of the thresholds looked \
+         at fell), so nodes leave or lose links; the forecast takes both as lasting, and its large hubs come out too many and \
+         too certain; give departures_per_node_day or link_losses_per_link_day if you know them",
+        shrunken.len()
+    );
+    Some(Warning::new("tails_shrank", detail))
+}
+
 /// Exponent 1 + (ℓ + ē)/(p·ℓ) that steady growth at these rates leads to; none for p = 0 or with losses.
 fn tail_exponent(profile: &Profile, links: f64, entry_mean: f64, request: &FitRequest) -> Option<Estimate> {
     let lossless = request.departures_per_node_day == 0.0 && request.link_losses_per_link_day == 0.0;
@@ -170,7 +187,16 @@ impl Rates {
         let past = counts.mean_degree() - entry.mean();
         let mut warnings = Vec::new();
         let (mut links_per_arrival, mut excursion) = (Estimate::given(past), RateExcursion::default());
-        let mut arrivals_per_day = None;
+        let mut arrivals_per_day = evidence.periods().next_back().map(|(before, after, days)| {
+            let grown = after.counts.nodes() as f64 - before.counts.nodes() as f64;
+            Estimate::given(grown.max(0.0) / days)
+        });
+        let newest_is_usable = |period: &&Period| std::ptr::eq(period.after(), counts);
+        if arrivals_per_day.is_some() && periods.last().filter(newest_is_usable).is_none() {
+            let detail = "the newest period did not grow, so links per arrival are those of an older one and arrivals are what \
+                          the newest shows";
+            warnings.push(Warning::new("growth_stopped", detail));
+        }
         if let Some(newest) = periods.last() {
             let arrived = newest.arrivals_per_day * newest.days;
             let spread = |rate: fn(&Period) -> f64, counted: f64| {
@@ -179,7 +205,9 @@ impl Rates {
             excursion.arrivals = spread(|p| p.arrivals_per_day, arrived);
             excursion.links_per_arrival = spread(|p| p.links_per_arrival, arrived * newest.links_per_arrival);
             links_per_arrival = log_normal(newest.links_per_arrival, excursion.links_per_arrival);
-            arrivals_per_day = Some(log_normal(newest.arrivals_per_day, excursion.arrivals));
+            if newest_is_usable(&newest) {
+                arrivals_per_day = Some(log_normal(newest.arrivals_per_day, excursion.arrivals));
+            }
             if periods.len() == 1 {
                 let detail = format!(
                     "arrivals and links per arrival come from a single period, which cannot show how they vary; {:.0} % is \

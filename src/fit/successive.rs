@@ -17,6 +17,8 @@ const SHARE_STEP: f64 = 2e-3;
 const THRESHOLD_GROWTH: f64 = std::f64::consts::SQRT_2;
 /// A threshold counts while at least this many nodes were past it at the period's end.
 const FEWEST_NODES: u64 = 5;
+/// Older periods than this many would weigh less than 2 % of the newest.
+const MOST_PERIODS: usize = 12;
 /// Crossings a threshold that no growth need explain, nodes.
 const UNEXPLAINED: f64 = 0.5;
 /// Flows with less variance than this say nothing of dispersion.
@@ -56,7 +58,8 @@ pub(super) fn periods<'a>(
     request: &FitRequest,
 ) -> Result<(Vec<Period<'a>>, Vec<Warning>), FitError> {
     let (mut periods, mut warnings) = (Vec::new(), Vec::new());
-    for (before, after, days) in evidence.periods() {
+    let oldest = (evidence.snapshots().len() - 1).saturating_sub(MOST_PERIODS);
+    for (before, after, days) in evidence.periods().skip(oldest) {
         match Period::read(evidence.kind(), &before.counts, &after.counts, days, entry, request) {
             Some(period) => periods.push(period),
             None => {
@@ -176,6 +179,11 @@ impl<'a> Period<'a> {
         Some(Self { before, after, days, arrivals_per_day, links_per_arrival, thresholds, forces, weight: 1.0 })
     }
 
+    /// The counts at the period's end.
+    pub fn after(&self) -> &'a DegreeCounts {
+        self.after
+    }
+
     fn course(&self, p: f64) -> Result<Course, GrowthError> {
         let mix = AttachmentMix::new(p).unwrap_or(AttachmentMix::UNIFORM);
         Course::new(self.before, self.forces.clone().with_mix(mix), self.days)
@@ -194,6 +202,12 @@ impl<'a> Period<'a> {
     fn observed(&self, flows: &[Flow]) -> Vec<f64> {
         let past = |(&threshold, flow): (&u64, &Flow)| self.after.tail_size(threshold) as f64 - flow.certain;
         self.thresholds.iter().zip(flows).map(past).collect()
+    }
+
+    /// Thresholds past which there are fewer nodes at the end than at the start.
+    pub fn shrunken(&self) -> Vec<(u64, u64, u64)> {
+        let sizes = self.thresholds.iter().map(|&j| (j, self.before.tail_size(j), self.after.tail_size(j)));
+        sizes.filter(|&(_, before, after)| after < before).collect()
     }
 
     /// Expected tail sizes at the period's end, with the observed ones: the picture of the fit.
@@ -263,4 +277,32 @@ fn tails(law: &NodeLaw, starts: &[(u64, f64)], thresholds: &[u64], survival: f64
         }
     }
     Ok(values)
+}
+
+#[cfg(test)]
+mod tests {
+    use super::Period;
+    use crate::fit::FitRequest;
+    use crate::model::{DegreeCounts, DegreeKind, EntryDegrees};
+
+    /// Arrivals and links read off a period, put back into the mean field, end at the period's totals, losses or not.
+    #[test]
+    fn rates_read_off_a_period_lead_back_to_its_totals() {
+        let before = DegreeCounts::from_pairs(&[(1, 900), (5, 90), (40, 10)]).unwrap();
+        let after = DegreeCounts::from_pairs(&[(1, 1_100), (5, 190), (40, 20)]).unwrap();
+        for kind in [DegreeKind::Received, DegreeKind::Total] {
+            for (departures, losses) in [(0.0, 0.0), (1e-3, 0.0), (0.0, 2e-3), (1e-3, 2e-3)] {
+                let request = FitRequest {
+                    departures_per_node_day: departures,
+                    link_losses_per_link_day: losses,
+                    ..FitRequest::default()
+                };
+                let entry = EntryDegrees::single(1);
+                let period = Period::read(kind, &before, &after, 60.0, &entry, &request).unwrap();
+                let course = period.course(0.5).unwrap();
+                assert!((course.nodes(60.0) / after.nodes() as f64 - 1.0).abs() < 1e-12);
+                assert!((course.link_ends(60.0) / after.link_ends() as f64 - 1.0).abs() < 1e-12);
+            }
+        }
+    }
 }
