@@ -1,5 +1,5 @@
-//! Puts fit and forecast together at an origin date, and (later) scores forecasts against what came after.
+//! Puts fit and forecast together at an origin date.
 
 mod origin;
 
-pub use origin::{OriginAnswer, OriginError, OriginRequest, answer, fit_evidence};
+pub use origin::{OriginAnswer, OriginError, OriginRequest, answer};

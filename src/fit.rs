@@ -47,6 +47,13 @@ pub enum Rung {
     SuccessiveSnapshots,
 }
 
+impl FitRequest {
+    /// Whether nodes leave or links are lost.
+    pub fn has_losses(&self) -> bool {
+        self.departures_per_node_day > 0.0 || self.link_losses_per_link_day > 0.0
+    }
+}
+
 /// What the caller asks of a fit.
 #[derive(Debug, Clone, PartialEq, Default)]
 pub struct FitRequest {
@@ -56,6 +63,8 @@ pub struct FitRequest {
     pub fixed_mix: Option<AttachmentMix>,
     /// ℓ to take as given instead of reading it from the data.
     pub links_per_arrival: Option<f64>,
+    /// ι, link ends landing per present node and day, as given by the caller.
+    pub links_per_node_day: f64,
     /// δ, departure hazard of a node, 1/day, as given by the caller.
     pub departures_per_node_day: f64,
     /// w, loss hazard of a link end, 1/day, as given by the caller.
@@ -164,6 +173,9 @@ pub enum FitError {
         /// Which iteration, and where it stood.
         detail: String,
     },
+    /// The caller asked to stop.
+    #[error("the fit was cancelled")]
+    Cancelled,
     /// Growth between two snapshots cannot be computed.
     #[error(transparent)]
     Growth(#[from] GrowthError),

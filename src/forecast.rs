@@ -63,12 +63,6 @@ pub struct DateForecast {
 /// Why no forecast can be given.
 #[derive(Debug, Clone, PartialEq, thiserror::Error)]
 pub enum ForecastError {
-    /// The request cannot be met by any network; says what would make it possible.
-    #[error("{detail}")]
-    Impossible {
-        /// What is impossible and what would make it possible.
-        detail: String,
-    },
     /// Growth to a date cannot be computed.
     #[error(transparent)]
     Growth(#[from] GrowthError),

@@ -119,5 +119,5 @@ fn grow_and_fit(setting: &Setting, nodes: u64, seed: u64) -> Fit {
         snapshots.push(snapshot(&network, "2026-04-01T00:00:00Z"));
     }
     let evidence = Evidence::new(setting.kind, snapshots, None).expect("ordered snapshots");
-    fit(&evidence, &FitRequest::default()).expect("a fit")
+    fit(&evidence, &FitRequest::default(), &|| false).expect("a fit")
 }

@@ -17,11 +17,12 @@ use crate::model::{ArrivalPlan, AttachmentMix, DegreeKind, EntryDegrees, GrowthP
 use crate::service::{FitInputs, FitRequest, ForecastInputs, Label, MAX_SEED, Model, ModelChoice, OriginRequest};
 
 /// Fields of a fit's body.
-pub const FIT_FIELDS: [&str; 10] = [
+pub const FIT_FIELDS: [&str; 11] = [
     "degree_kind",
     "snapshots",
     "entry_degrees",
     "links_per_arrival",
+    "links_per_node_day",
     "departures_per_node_day",
     "link_losses_per_link_day",
     "model",
@@ -70,8 +71,7 @@ pub fn read_forecast(raw: &RawValue, limits: &LimitsConfig, faults: &mut Faults)
     let label = label(&body, faults);
     let arrivals = outlook::arrivals(&body, evidence.latest, faults);
     let plan = outlook::plan(&body, evidence.latest, limits, faults);
-    let links_per_node_day = rate(&body, "links_per_node_day", faults).unwrap_or(0.0);
-    let request = OriginRequest { evidence: evidence.whole?, fit: fit?, arrivals, links_per_node_day, plan: plan? };
+    let request = OriginRequest { evidence: evidence.whole?, fit: fit?, arrivals, plan: plan? };
     Some(ForecastInputs { label, request })
 }
 
@@ -91,12 +91,14 @@ fn fit_request(body: &Object<'_>, faults: &mut Faults) -> Option<FitRequest> {
         None => Some(DEFAULT_SEED),
     };
     let links_per_arrival = rate(body, "links_per_arrival", faults);
-    let [departures_per_node_day, link_losses_per_link_day] =
-        ["departures_per_node_day", "link_losses_per_link_day"].map(|name| rate(body, name, faults).unwrap_or(0.0));
+    let [links_per_node_day, departures_per_node_day, link_losses_per_link_day] =
+        ["links_per_node_day", "departures_per_node_day", "link_losses_per_link_day"]
+            .map(|name| rate(body, name, faults).unwrap_or(0.0));
     Some(FitRequest {
         choice: choice?,
         fixed_mix,
         links_per_arrival,
+        links_per_node_day,
         departures_per_node_day,
         link_losses_per_link_day,
         seed: seed?,

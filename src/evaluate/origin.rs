@@ -27,12 +27,10 @@ pub const CAUTIONS: [&str; 5] = [
 pub struct OriginRequest {
     /// What is known of the network.
     pub evidence: Evidence,
-    /// What is asked of the fit; its losses hold for the forecast too.
+    /// What is asked of the fit; the rates given there hold for the forecast too.
     pub fit: FitRequest,
     /// Arrivals from the last snapshot on; `None`: estimated from the snapshots.
     pub arrivals: Option<ArrivalPlan>,
-    /// ι, link ends landing per present node and day from the last snapshot on.
-    pub links_per_node_day: f64,
     /// Thresholds, dates and levels.
     pub plan: ForecastPlan,
 }
@@ -69,14 +67,6 @@ pub enum OriginError {
     Rate(ParameterFault),
 }
 
-/// Fits the evidence alone.
-///
-/// # Errors
-/// When the evidence does not tell the mix.
-pub fn fit_evidence(evidence: &Evidence, request: &FitRequest) -> Result<Fit, FitError> {
-    fit(evidence, request)
-}
-
 /// Fits the evidence and forecasts from its newest snapshot; `cancelled` is asked between thresholds.
 ///
 /// # Errors
@@ -89,7 +79,7 @@ pub fn answer(request: &OriginRequest, cancelled: &dyn Fn() -> bool) -> Result<O
     if request.arrivals.is_none() && !estimable {
         return Err(OriginError::ArrivalsRequired);
     }
-    let fit = fit(&request.evidence, &request.fit)?;
+    let fit = fit(&request.evidence, &request.fit, cancelled)?;
     let scenario = scenario(request, &fit)?;
     let forecast = forecast(&request.evidence.latest().counts, &scenario, &request.plan, cancelled)?;
     let mut warnings = fit.warnings.clone();
@@ -121,7 +111,7 @@ fn scenario(request: &OriginRequest, fit: &Fit) -> Result<Scenario, OriginError>
         fit.entry.clone(),
         links,
     )
-    .and_then(|forces| forces.with_links_per_node_day(request.links_per_node_day))
+    .and_then(|forces| forces.with_links_per_node_day(request.fit.links_per_node_day))
     .and_then(|forces| forces.with_losses(request.fit.departures_per_node_day, request.fit.link_losses_per_link_day))
     .map_err(OriginError::Rate)?;
     let mut excursions = Vec::new();

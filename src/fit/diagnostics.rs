@@ -83,8 +83,13 @@ fn distance(points: impl Iterator<Item = (f64, f64)>, total: f64) -> f64 {
     points.map(|(observed, fitted)| (observed - fitted).abs() / total).fold(0.0, f64::max)
 }
 
+/// ln(observed/fitted), finite also where the fitted tail underflows.
+fn log_ratio(point: &TailPoint) -> f64 {
+    (point.observed as f64).ln() - point.fitted.max(f64::MIN_POSITIVE).ln()
+}
+
 fn worst_log_ratio(tail: &[TailPoint]) -> f64 {
-    let ratios = tail.iter().filter(|p| p.observed >= RATIO_NODES).map(|p| (p.observed as f64 / p.fitted).ln());
+    let ratios = tail.iter().filter(|p| p.observed >= RATIO_NODES).map(log_ratio);
     ratios.fold(0.0, |worst: f64, ratio| if ratio.abs() > worst.abs() { ratio } else { worst })
 }
 
@@ -103,10 +108,10 @@ pub(super) fn warnings(counts: &DegreeCounts, tail: &[TailPoint], goodness: &Goo
     let misfit = goodness.worst_log_ratio.abs() > WORTH_A_WARNING.ln();
     let beyond_chance = goodness.p_value.is_some_and(|p| p <= UNLIKELY) || goodness.dispersion.is_some_and(|d| d > 2.0);
     if misfit && beyond_chance {
-        let worst = tail.iter().filter(|p| p.observed >= RATIO_NODES).max_by(|a, b| {
-            let off = |p: &TailPoint| (p.observed as f64 / p.fitted).ln().abs();
-            off(a).total_cmp(&off(b))
-        });
+        let worst = tail
+            .iter()
+            .filter(|p| p.observed >= RATIO_NODES)
+            .max_by(|a, b| log_ratio(a).abs().total_cmp(&log_ratio(b).abs()));
         if let Some(p) = worst {
             let detail = format!(
                 "no mix of uniform and preferential attachment reproduces these counts: at {} links the fit has {:.1} nodes \

@@ -15,7 +15,7 @@ const SINGLE_ENTRIES: u64 = 8;
 /// Links received: newcomers arrive with the smallest degree present, usually 0. Total degree: a newcomer brings as many
 /// ends of its own as land on others, so ē is half of the mean degree (of the growth, given two snapshots); all at the
 /// smallest degree where that agrees, else a geometric distribution from the smallest degree with that mean.
-pub(super) fn entry_degrees(evidence: &Evidence) -> Result<(EntryDegrees, Vec<Warning>), FitError> {
+pub(super) fn entry_degrees(evidence: &Evidence, lossy: bool) -> Result<(EntryDegrees, Vec<Warning>), FitError> {
     let smallest = evidence.snapshots().iter().map(|s| s.counts.smallest()).min().unwrap_or(0);
     if let Some(given) = evidence.entry() {
         return Ok((given.clone(), Vec::new()));
@@ -28,6 +28,11 @@ pub(super) fn entry_degrees(evidence: &Evidence) -> Result<(EntryDegrees, Vec<Wa
         );
         let warnings = if smallest > 0 { vec![Warning::new("no_degree_zero", detail)] } else { Vec::new() };
         return Ok((entry, warnings));
+    }
+    if lossy {
+        let detail =
+            "with departures or link losses the counts do not show how many links newcomers bring; give entry_degrees";
+        return Err(FitError::NotIdentified { detail: detail.into() });
     }
     let mean = 0.5 * marginal_mean_degree(evidence);
     if mean <= smallest as f64 * (1.0 + SAME_DEGREE) {
@@ -52,7 +57,7 @@ pub(super) fn entry_degrees(evidence: &Evidence) -> Result<(EntryDegrees, Vec<Wa
     Ok((entry, vec![Warning::new("entry_degrees_assumed", detail)]))
 }
 
-/// Mean degree that growth adds per node: ΔK/ΔN between the last two snapshots where both grew, else K/N.
+/// Mean degree that growth adds per node: ΔK/ΔN between the last two snapshots if both grew, else K/N.
 fn marginal_mean_degree(evidence: &Evidence) -> f64 {
     let latest = &evidence.latest().counts;
     let grown = evidence.periods().next_back().and_then(|(before, after, _)| {

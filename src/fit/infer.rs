@@ -6,7 +6,7 @@ use super::one_snapshot::fit_one_snapshot;
 use super::profile::{ESTIMATE_LEVEL, Profile};
 use super::stationary::StationaryLaw;
 use super::successive::{Period, fit_successive, periods};
-use super::{Fit, FitError, FitRequest, Goodness, Model, RateExcursion, Rung, TailPoint};
+use super::{Fit, FitError, FitRequest, Model, RateExcursion, Rung, TailPoint};
 use crate::model::{AttachmentMix, EntryDegrees, Estimate, Evidence, Interval, Warning};
 
 /// Relative standard deviation of a rate that only one period shows, beyond counting noise. A stated default: common
@@ -19,10 +19,12 @@ const LINKS_MOVED: f64 = 1.5;
 ///
 /// One snapshot is fitted as a stationary degree law; two or more by their crossing flows; a fixed mix is taken as given.
 ///
+/// `cancelled` is asked before each evaluation of a flow likelihood.
+///
 /// # Errors
 /// [`FitError::NotIdentified`] when the counts cannot tell the mix, with what would.
-pub fn fit(evidence: &Evidence, request: &FitRequest) -> Result<Fit, FitError> {
-    let (entry, mut warnings) = entry_degrees(evidence)?;
+pub fn fit(evidence: &Evidence, request: &FitRequest, cancelled: &dyn Fn() -> bool) -> Result<Fit, FitError> {
+    let (entry, mut warnings) = entry_degrees(evidence, request.has_losses())?;
     let several = evidence.snapshots().len() > 1;
     let periods = match periods(evidence, &entry, request) {
         Ok((periods, skipped)) => {
@@ -39,7 +41,7 @@ pub fn fit(evidence: &Evidence, request: &FitRequest) -> Result<Fit, FitError> {
     let (rung, profile, tail, goodness) = match request.fixed_mix {
         Some(mix) => (Rung::Given, given(mix), Vec::new(), None),
         None if several => {
-            let fit = fit_successive(&periods, request)?;
+            let fit = fit_successive(&periods, request, cancelled)?;
             let tail = newest_tail(&periods, fit.profile.share.value)?;
             let goodness = flow_goodness(&tail, counts.nodes(), fit.dispersion, fit.flow_error);
             (Rung::SuccessiveSnapshots, fit.profile, tail, Some(goodness))
@@ -58,21 +60,7 @@ pub fn fit(evidence: &Evidence, request: &FitRequest) -> Result<Fit, FitError> {
     }
     warnings.extend(periods.last().and_then(|newest| shrinkage(newest, request)));
     let tail_exponent = tail_exponent(&profile, rates.exponent_links, entry.mean(), request);
-    Ok(assemble(rung, profile, rates, entry, tail_exponent, tail, goodness, warnings))
-}
-
-#[allow(clippy::too_many_arguments)]
-fn assemble(
-    rung: Rung,
-    profile: Profile,
-    rates: Rates,
-    entry: EntryDegrees,
-    tail_exponent: Option<Estimate>,
-    tail: Vec<TailPoint>,
-    goodness: Option<Goodness>,
-    warnings: Vec<Warning>,
-) -> Fit {
-    Fit {
+    Ok(Fit {
         model: profile.model,
         rung,
         preferential_share: profile.share,
@@ -86,7 +74,7 @@ fn assemble(
         goodness,
         tail,
         warnings,
-    }
+    })
 }
 
 fn given(mix: AttachmentMix) -> Profile {
@@ -107,7 +95,7 @@ fn past_links_per_arrival(evidence: &Evidence, entry: &EntryDegrees, request: &F
     let counts = &evidence.latest().counts;
     let refuse = |detail: String| Err(FitError::NotIdentified { detail });
     let remedy = "give fixed.preferential_share, or a second snapshot";
-    if request.departures_per_node_day > 0.0 || request.link_losses_per_link_day > 0.0 {
+    if request.has_losses() {
         return refuse(format!("one snapshot cannot tell the mix of a network that loses nodes or links; {remedy}"));
     }
     if counts.link_ends() == 0 {
@@ -142,7 +130,7 @@ fn newest_tail(periods: &[Period], share: f64) -> Result<Vec<TailPoint>, FitErro
 fn shrinkage(newest: &Period, request: &FitRequest) -> Option<Warning> {
     let shrunken = newest.shrunken();
     let &(threshold, before, after) = shrunken.first()?;
-    if request.departures_per_node_day > 0.0 || request.link_losses_per_link_day > 0.0 {
+    if request.has_losses() {
         return None;
     }
     let detail = format!(
@@ -156,9 +144,8 @@ fn shrinkage(newest: &Period, request: &FitRequest) -> Option<Warning> {
 
 /// Exponent 1 + (ℓ + ē)/(p·ℓ) that steady growth at these rates leads to; none for p = 0 or with losses.
 fn tail_exponent(profile: &Profile, links: f64, entry_mean: f64, request: &FitRequest) -> Option<Estimate> {
-    let lossless = request.departures_per_node_day == 0.0 && request.link_losses_per_link_day == 0.0;
     let exponent = |share: f64| 1.0 + (links + entry_mean) / (share * links);
-    if !lossless || profile.share.value <= 0.0 || links <= 0.0 {
+    if request.has_losses() || profile.share.value <= 0.0 || links <= 0.0 {
         return None;
     }
     let interval = profile.share.interval.filter(|i| i.low > 0.0);
@@ -185,6 +172,7 @@ impl Rates {
     ) -> Result<Self, FitError> {
         let counts = &evidence.latest().counts;
         let past = counts.mean_degree() - entry.mean();
+        let only_grows = !request.has_losses() && request.links_per_node_day == 0.0;
         let mut warnings = Vec::new();
         let (mut links_per_arrival, mut excursion) = (Estimate::given(past), RateExcursion::default());
         let mut arrivals_per_day = evidence.periods().next_back().map(|(before, after, days)| {
@@ -228,8 +216,9 @@ impl Rates {
                 );
                 warnings.push(Warning::new("links_per_arrival_differs", detail));
             }
-        } else if links_per_arrival.value <= 0.0 {
-            let detail = "the counts do not show how many links land per arrival; give links_per_arrival";
+        } else if links_per_arrival.value <= 0.0 || (periods.is_empty() && !only_grows) {
+            let detail = "the counts do not show how many links land per arrival (one snapshot shows it only where links come \
+                          with arrivals and nothing leaves); give links_per_arrival, or snapshots between which the network grew";
             return Err(FitError::NotIdentified { detail: detail.into() });
         }
         let exponent_links =

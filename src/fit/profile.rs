@@ -51,6 +51,11 @@ pub(super) fn profile_share(
         return Err(FitError::NotConverged { detail: format!("the preferential share stood at {}", best.at) });
     }
     let scale = scale_at(best.at)?;
+    if !scale.is_finite() {
+        let detail =
+            format!("the scatter of the likelihood's slope at a preferential share of {} is not finite", best.at);
+        return Err(FitError::NotConverged { detail });
+    }
     let (at, top) = (best.at, -best.value);
     let mut bounds = |fall: f64| {
         let mut side = |end: f64| {

@@ -29,7 +29,7 @@ const SHARE_STEP: f64 = 1e-4;
 ///
 /// # Numerical notes
 /// Implicit Euler on a grid of single degrees, then cells; good to a few per cent, which is what an interval needs.
-/// Checked by coverage on grown networks (`benches/coverage.rs`).
+/// Checked by coverage on grown networks (`studies/mix_coverage.rs`).
 pub(super) fn information_over_variance(share: f64, links_per_arrival: f64, entry: &EntryDegrees) -> f64 {
     let law = |p: f64| {
         StationaryLaw::new(
@@ -38,7 +38,9 @@ pub(super) fn information_over_variance(share: f64, links_per_arrival: f64, entr
             entry.clone(),
         )
     };
-    let (low, high) = ((share - SHARE_STEP).max(0.0), (share + SHARE_STEP).min(1.0));
+    // Half-way to a boundary at most: at p = 1 a law without first links has no logarithm.
+    let toward = |end: f64| share + (0.5 * (end - share)).clamp(-SHARE_STEP, SHARE_STEP);
+    let (low, high) = (toward(0.0), toward(1.0));
     let here = law(share);
     let grid = degree_grid(&here, entry.smallest());
     let cells = grid.len() - 1;

@@ -44,11 +44,6 @@ impl StationaryLaw {
         self.alpha + self.beta * degree
     }
 
-    /// Exponent 1 + 1/β of the pmf's power-law tail; infinite for p = 0.
-    pub fn tail_exponent(&self) -> f64 {
-        1.0 + 1.0 / self.beta
-    }
-
     /// ln P_k at ascending `degrees`; −∞ below the smallest entry degree.
     pub fn log_pmf(&self, degrees: &[u64]) -> Vec<f64> {
         let mut entries = self.entry.shares().iter().copied().peekable();

@@ -17,6 +17,8 @@ const SHARE_STEP: f64 = 2e-3;
 const THRESHOLD_GROWTH: f64 = std::f64::consts::SQRT_2;
 /// A threshold counts while at least this many nodes were past it at the period's end.
 const FEWEST_NODES: u64 = 5;
+/// Knowing the total leaves at least this share of a score's variance: grown networks show 0.2 and more.
+const LEAST_CONDITIONAL_VARIANCE: f64 = 0.05;
 /// Older periods than this many would weigh less than 2 % of the newest.
 const MOST_PERIODS: usize = 12;
 /// Crossings a threshold that no growth need explain, nodes.
@@ -89,8 +91,15 @@ pub(super) fn periods<'a>(
 /// past threshold j (log-spaced), both plus ½: half a node of unexplained crossings a threshold keeps one renamed or merged
 /// node, which no growth explains, from deciding the fit. Its fall is scaled by information over score variance (Godambe 1960). In that variance
 /// flows at different thresholds share nodes, and all compete for the known number of landed links.
-pub(super) fn fit_successive(periods: &[Period], request: &FitRequest) -> Result<SuccessiveFit, FitError> {
+pub(super) fn fit_successive(
+    periods: &[Period],
+    request: &FitRequest,
+    cancelled: &dyn Fn() -> bool,
+) -> Result<SuccessiveFit, FitError> {
     let log_likelihood = |p: f64| {
+        if cancelled() {
+            return Err(FitError::Cancelled);
+        }
         let mut sum = 0.0;
         for period in periods {
             let flows = period.flows(p)?;
@@ -127,17 +136,18 @@ pub(super) fn fit_successive(periods: &[Period], request: &FitRequest) -> Result
             flow_error = 1.4826 * errors[errors.len() / 2];
         }
         // A misfit beyond sampling noise widens the interval in the same proportion, and never narrows it.
-        Ok(information / (variance * dispersion.max(1.0)))
+        // Flows that do not answer to p say nothing of it: its interval is then all of [0, 1].
+        Ok(if information > 0.0 { information / (variance * dispersion.max(1.0)) } else { 0.0 })
     };
     let profile = profile_share(request.choice, SHARE_TOLERANCE, log_likelihood, scale_at)?;
     Ok(SuccessiveFit { profile, dispersion, flow_error })
 }
 
-/// Expected nodes past a threshold, without those that were past it from the start and cannot fall back.
+/// Expected nodes that come past a threshold, and those past it before that are expected to stay.
 #[derive(Clone, Copy)]
 struct Flow {
     mean: f64,
-    certain: f64,
+    kept: f64,
 }
 
 impl<'a> Period<'a> {
@@ -152,7 +162,8 @@ impl<'a> Period<'a> {
         let (departures, losses) = (request.departures_per_node_day, request.link_losses_per_link_day);
         let plan = ArrivalPlan::constant(1.0).ok()?;
         let forces = GrowthParameters::new(kind, AttachmentMix::UNIFORM, plan, entry.clone(), 0.0).ok()?;
-        let forces = forces.with_losses(departures, losses).ok()?;
+        let forces =
+            forces.with_losses(departures, losses).ok()?.with_links_per_node_day(request.links_per_node_day).ok()?;
         // dN/dt = A − δN and dK/dt = (ℓ+ē)A − θK at constant rates, solved for A and ℓ from both ends.
         let inflow = |start: f64, end: f64, hazard: f64| {
             let decay = (-hazard * days).exp();
@@ -162,12 +173,23 @@ impl<'a> Period<'a> {
         let theta = forces.end_loss_hazard() + departures;
         let arrivals_per_day = inflow(before.nodes() as f64, after.nodes() as f64, departures);
         let ends_per_day = inflow(before.link_ends() as f64, after.link_ends() as f64, theta);
-        let links_per_arrival = ends_per_day / arrivals_per_day - entry.mean();
+        let mut links_per_arrival = ends_per_day / arrivals_per_day - entry.mean();
         if !(arrivals_per_day > 0.0 && links_per_arrival > 0.0) {
             return None;
         }
         let arrivals = ArrivalPlan::constant(arrivals_per_day).ok()?;
-        let forces = forces.with_links_per_arrival(links_per_arrival).ok()?.with_arrivals(arrivals);
+        let mut forces = forces.with_links_per_arrival(links_per_arrival).ok()?.with_arrivals(arrivals);
+        if request.links_per_node_day > 0.0 {
+            // K(t) is linear in ℓ: what ι lands is what ends up beyond the observed total, and ℓ lands that much less.
+            let reached = Course::new(before, forces.clone(), days).ok()?.link_ends(days);
+            let without = forces.clone().with_links_per_arrival(0.0).ok()?;
+            let slope = (reached - Course::new(before, without, days).ok()?.link_ends(days)) / links_per_arrival;
+            links_per_arrival -= (reached - after.link_ends() as f64) / slope;
+            if links_per_arrival < 0.0 {
+                return None;
+            }
+            forces = forces.with_links_per_arrival(links_per_arrival).ok()?;
+        }
         let mut thresholds = vec![entry.smallest() + 1];
         while let Some(&last) = thresholds.last().filter(|&&last| after.tail_size(last) >= FEWEST_NODES) {
             thresholds.push((last as f64 * THRESHOLD_GROWTH).ceil() as u64);
@@ -193,14 +215,14 @@ impl<'a> Period<'a> {
         let course = self.course(p)?;
         let flow = |&threshold: &u64| {
             let sum = tail_sum(&course, self.before, self.days, threshold, Accuracy::Working)?;
-            Ok(Flow { mean: sum.mean - sum.certain, certain: sum.certain })
+            Ok(Flow { mean: sum.mean - sum.kept, kept: sum.kept })
         };
         self.thresholds.iter().map(flow).collect()
     }
 
-    /// D_j: nodes past each threshold at the end that were not certain to be there.
+    /// D_j: nodes past each threshold at the end, beyond those that were past it before and are expected to stay.
     fn observed(&self, flows: &[Flow]) -> Vec<f64> {
-        let past = |(&threshold, flow): (&u64, &Flow)| self.after.tail_size(threshold) as f64 - flow.certain;
+        let past = |(&threshold, flow): (&u64, &Flow)| self.after.tail_size(threshold) as f64 - flow.kept;
         self.thresholds.iter().zip(flows).map(past).collect()
     }
 
@@ -214,7 +236,7 @@ impl<'a> Period<'a> {
     pub fn fitted_tail(&self, p: f64) -> Result<Vec<(u64, u64, f64)>, FitError> {
         let flows = self.flows(p)?;
         let row =
-            |(&threshold, flow): (&u64, &Flow)| (threshold, self.after.tail_size(threshold), flow.mean + flow.certain);
+            |(&threshold, flow): (&u64, &Flow)| (threshold, self.after.tail_size(threshold), flow.mean + flow.kept);
         Ok(self.thresholds.iter().zip(&flows).map(row).collect())
     }
 
@@ -261,8 +283,9 @@ impl<'a> Period<'a> {
         let form = |a: &[f64], b: &[f64]| -> f64 {
             covariance.iter().zip(a).map(|(row, x)| x * row.iter().zip(b).map(|(c, y)| c * y).sum::<f64>()).sum()
         };
-        let shared = form(weights, &span);
-        form(weights, weights) - shared * shared / form(&span, &span)
+        let (own, shared) = (form(weights, weights), form(weights, &span));
+        // One threshold alone is all but the total itself; the total is not known that well from a few thresholds.
+        (own - shared * shared / form(&span, &span)).max(LEAST_CONDITIONAL_VARIANCE * own)
     }
 }
 
@@ -291,8 +314,11 @@ mod tests {
         let before = DegreeCounts::from_pairs(&[(1, 900), (5, 90), (40, 10)]).unwrap();
         let after = DegreeCounts::from_pairs(&[(1, 1_100), (5, 190), (40, 20)]).unwrap();
         for kind in [DegreeKind::Received, DegreeKind::Total] {
-            for (departures, losses) in [(0.0, 0.0), (1e-3, 0.0), (0.0, 2e-3), (1e-3, 2e-3)] {
+            for (departures, losses, per_node) in
+                [(0.0, 0.0, 0.0), (1e-3, 0.0, 0.0), (0.0, 2e-3, 1e-3), (1e-3, 2e-3, 0.0), (0.0, 0.0, 2e-3)]
+            {
                 let request = FitRequest {
+                    links_per_node_day: per_node,
                     departures_per_node_day: departures,
                     link_losses_per_link_day: losses,
                     ..FitRequest::default()

@@ -1,6 +1,6 @@
 //! Forecasts at each date of a plan.
 
-use super::largest::{largest_degree, median_largest};
+use super::largest::{largest_degree, quantile};
 use super::{CountForecast, CountLaw, DateForecast, ForecastError, TailForecast};
 use crate::growth::{Course, TailSum, tail_sum};
 use crate::model::{DegreeCounts, ForecastPlan, GrowthParameters};
@@ -78,13 +78,15 @@ impl Outlook<'_> {
             return Err(ForecastError::Cancelled);
         }
         let now = self.counts.tail_size(threshold) as f64;
-        let TailSum { certain, mean, variance, .. } =
+        let TailSum { kept, mean, variance, .. } =
             tail_sum(&self.central, self.counts, day, threshold, Accuracy::Full)?;
         let beyond = self
             .excursion_variance(|course| Ok(tail_sum(course, self.counts, day, threshold, Accuracy::Working)?.mean))?;
-        // The flow is what the model can be wrong about; a tail that all but vanishes is not wrong by what it lost.
-        let flow = if mean >= now { mean - now } else { (now - mean).min(mean) };
+        // Nodes that come past the threshold and nodes that leave the tail are what the model can be wrong about; of a tail
+        // that all but vanishes it is not wrong by all that was lost.
+        let flow = (mean - kept) + (now - kept).min(kept);
         let variance = variance + beyond + (self.model_error * flow).powi(2);
+        let certain = if self.central.parameters().has_losses() { 0.0 } else { kept };
         Ok(TailForecast { threshold, size: self.count(now, certain, mean, variance) })
     }
 
@@ -117,10 +119,10 @@ impl Outlook<'_> {
         if (self.cancelled)() {
             return Err(ForecastError::Cancelled);
         }
-        let log_median = |course: &Course| Ok(median_largest(course, self.counts, day)?.ln_1p());
+        let log_median = |course: &Course| Ok(quantile(course, self.counts, day, 0.5)?.ln_1p());
         let gain = (log_median(&self.central)? - (self.counts.largest() as f64).ln_1p()).abs();
         let variance = self.excursion_variance(log_median)? + (self.model_error * gain).powi(2);
-        largest_degree(&self.central, self.counts, day, self.plan.levels(), variance.sqrt())
+        largest_degree(&self.central, self.counts, day, self.plan.levels(), variance.sqrt(), self.cancelled)
     }
 
     fn excursion_variance(

@@ -17,11 +17,15 @@ pub(super) fn largest_degree(
     day: f64,
     levels: &[f64],
     spread: f64,
+    cancelled: &dyn Fn() -> bool,
 ) -> Result<DegreeForecast, ForecastError> {
     let median = quantile(course, counts, day, 0.5)?;
     let now = counts.largest() as f64;
     let least = if course.parameters().has_losses() { 0.0 } else { now };
     let widened = |probability: f64| -> Result<f64, ForecastError> {
+        if cancelled() {
+            return Err(ForecastError::Cancelled);
+        }
         let own = (quantile(course, counts, day, probability)?.ln_1p() - median.ln_1p()).abs();
         let beyond = normal_quantile(probability).abs() * spread;
         let side = if probability < 0.5 { -1.0 } else { 1.0 };
@@ -34,13 +38,13 @@ pub(super) fn largest_degree(
     Ok(DegreeForecast { now, median, intervals })
 }
 
-/// Median of the largest degree at `day`.
-pub(super) fn median_largest(course: &Course, counts: &DegreeCounts, day: f64) -> Result<f64, ForecastError> {
-    quantile(course, counts, day, 0.5)
-}
-
 /// Smallest x with P(max ≤ x) ≥ `probability`.
-fn quantile(course: &Course, counts: &DegreeCounts, day: f64, probability: f64) -> Result<f64, ForecastError> {
+pub(super) fn quantile(
+    course: &Course,
+    counts: &DegreeCounts,
+    day: f64,
+    probability: f64,
+) -> Result<f64, ForecastError> {
     let wanted = probability.ln();
     let mut failure: Option<GrowthError> = None;
     let mut excess = |x: f64| match tail_sum(course, counts, day, x as u64 + 1, Accuracy::Working) {

@@ -4,23 +4,26 @@ use crate::model::{DegreeCounts, GrowthParameters};
 use crate::numerics::elementary::exp_m1_ratio;
 use crate::numerics::inversion::InversionError;
 use crate::numerics::quadrature::PANEL;
-use crate::numerics::tolerances::{MESH_LOG_CHANGE, MESH_MAX_PANELS};
+use crate::numerics::tolerances::{MESH_HAZARD, MESH_LOG_CHANGE, MESH_MAX_PANELS};
 
 /// Share of the horizon that the first panel takes when there is no link yet and L/K starts from infinity.
 const FIRST_PANEL_WITHOUT_LINKS: f64 = 1e-30;
 
-/// After this many mean lifetimes e^{−50} of the nodes are left.
-const FORGOTTEN_DEPARTURES: f64 = 50.0;
+/// Without any link the first ends decide who gains: the law then leaves out a share 10^{−30(1−p)} of them, 10⁻⁶ here.
+const STARTS_UP_TO: f64 = 0.8;
+/// After this many mean lifetimes e^{−50} of the nodes or links are left.
+const FORGOTTEN_LIFETIMES: f64 = 50.0;
 /// Link ends beyond this are nonsense: 2^64 nodes of degree 2^53 have 10³⁵.
 const MOST_LINK_ENDS: f64 = 1e40;
 
 /// Why growth cannot be computed.
 #[derive(Debug, Clone, PartialEq, thiserror::Error)]
 pub enum GrowthError {
-    /// Every landing end must pick in proportion to degree, and no node has a link.
+    /// (Almost) every landing end must pick in proportion to degree, and no node has a link.
     #[error(
-        "no node has a link and the mix is purely preferential, so no node can ever gain one; give a preferential share \
-         below 1, entry degrees above 0, or a snapshot with links"
+        "no node has a link and more than {STARTS_UP_TO} of the landing ends pick in proportion to links, so the growth law \
+         cannot start (at a share of 1 no node ever gains a first link); give a smaller preferential share, entry degrees \
+         above 0, or a snapshot with links"
     )]
     NobodyStarts,
     /// The rates are so fast that the time mesh would pass its cap.
@@ -100,12 +103,12 @@ impl Course {
     /// The course of a network with `counts` at day 0 under `parameters`, up to day `horizon`.
     ///
     /// # Errors
-    /// [`GrowthError::NobodyStarts`] and [`GrowthError::TooFast`].
+    /// [`GrowthError::NobodyStarts`], [`GrowthError::TooFast`] and [`GrowthError::TooLarge`].
     pub fn new(counts: &DegreeCounts, parameters: GrowthParameters, horizon: f64) -> Result<Self, GrowthError> {
         let link_ends = counts.link_ends() as f64;
         let lands = parameters.links_per_arrival() > 0.0 || parameters.links_per_node_day() > 0.0;
-        let purely_preferential = parameters.mix.preferential_share() == 1.0;
-        if purely_preferential && lands && link_ends == 0.0 && parameters.entry.mean() == 0.0 {
+        let share = parameters.mix.preferential_share();
+        if share > STARTS_UP_TO && lands && link_ends == 0.0 && parameters.entry.mean() == 0.0 {
             return Err(GrowthError::NobodyStarts);
         }
         let mut course = Self { parameters, panels: Vec::new(), horizon };
@@ -116,7 +119,10 @@ impl Course {
             let panel = Panel { start, nodes, link_ends, arrival_rate, arrival_growth };
             course.panels.push(panel);
             let end = (start + course.panel_length(&panel)).min(edge).min(horizon);
-            if end >= horizon || end <= start {
+            if end <= start && start < horizon {
+                return Err(GrowthError::TooFast { reached: start, horizon });
+            }
+            if end >= horizon {
                 let (nodes, link_ends) = course.advance(&panel, horizon - start);
                 return course.check_countable(horizon, nodes, link_ends).map(|()| course);
             }
@@ -184,18 +190,26 @@ impl Course {
         edges
     }
 
-    /// Edges for an integral over arrivals up to `to`: the mesh, or under losses, where the mesh is as fine as the hazards,
-    /// the stretches of the arrival plan within the span that losses let a newcomer leave a trace.
+    /// Edges for an integral over arrivals up to `to`. The integrand is smoother than L/K, so where the mesh is graded towards
+    /// a start without links, or as fine as the hazards, a few edges serve better: those of the arrival plan, and stretches
+    /// that grow away from the start or back from `to`.
     pub(crate) fn arrival_edges(&self, to: f64) -> Vec<f64> {
-        if !self.parameters.has_losses() {
+        let first = self.edges(0.0, to)[0];
+        let loss = self.degree_loss();
+        let inner: Vec<f64> = if loss > 0.0 {
+            [FORGOTTEN_LIFETIMES, 10.0, 3.0, 1.0].map(|lifetimes| to - lifetimes / loss).to_vec()
+        } else if first > 0.0 {
+            [1e-3, 1e-1].map(|share| to * share).to_vec()
+        } else {
             return self.edges(0.0, to);
-        }
-        let departed = FORGOTTEN_DEPARTURES / self.parameters.departure_hazard();
-        let from = (to - departed).max(0.0);
-        let segments = self.parameters.arrivals.segments().iter().map(|s| s.from_day);
-        let mut edges = vec![from];
-        edges.extend(segments.filter(|&day| day > from && day < to));
-        edges.push(to);
+        };
+        let departed = to - FORGOTTEN_LIFETIMES / self.parameters.departure_hazard();
+        let from = departed.max(first);
+        let mut edges = vec![from, to];
+        edges.extend(inner.into_iter().chain(self.parameters.arrivals.segments().iter().map(|s| s.from_day)));
+        edges.retain(|&day| day >= from && day <= to);
+        edges.sort_by(f64::total_cmp);
+        edges.dedup();
         edges
     }
 
@@ -242,7 +256,7 @@ impl Course {
         }
         let growth = panel.arrival_growth.abs();
         let hazard = growth.max(self.degree_loss()).max(self.parameters.departure_hazard());
-        let by_hazard = MESH_LOG_CHANGE / hazard;
+        let by_hazard = MESH_HAZARD / hazard;
         // ln N and ln K change by at most MESH_LOG_CHANGE while the inflow is at most e^0.7 − 1 of the stock.
         let doubling = MESH_LOG_CHANGE.exp_m1();
         let by_nodes = doubling * panel.nodes / panel.arrival_rate;

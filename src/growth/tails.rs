@@ -10,8 +10,8 @@ use crate::numerics::tolerances::{Accuracy, TAIL_ZERO};
 /// plus a Poisson count over newcomers.
 #[derive(Debug, Clone, Copy, PartialEq, Default)]
 pub struct TailSum {
-    /// Present nodes that are in the tail for certain (no losses, and already past the threshold).
-    pub certain: f64,
+    /// Nodes in the tail at the start that are expected to be in it still: all of them without losses.
+    pub kept: f64,
     /// Expected tail size.
     pub mean: f64,
     /// Its sampling variance, given the parameters.
@@ -69,9 +69,8 @@ fn present_sum(
         sum.mean += nodes * probability;
         sum.variance += nodes * probability * (1.0 - probability);
         sum.log_none += nodes * (-probability).ln_1p();
-        // Not by probability = 1: that also happens by rounding, and would jump as the forces vary.
-        if degree >= threshold && !course.parameters().has_losses() {
-            sum.certain += nodes;
+        if degree >= threshold {
+            sum.kept += nodes * probability;
         }
     }
     Ok(sum)

@@ -12,6 +12,8 @@ const MAX_THRESHOLDS: usize = 1_000;
 const MAX_DATES: usize = 4_000;
 /// Most interval levels in one forecast.
 const MAX_LEVELS: usize = 20;
+/// Widest interval level: beyond it two moments and a fitted law say nothing.
+const MAX_LEVEL: f64 = 0.9999;
 /// Farthest a forecast may reach, days: two centuries.
 const MAX_HORIZON_DAYS: f64 = 73_050.0;
 
@@ -19,7 +21,7 @@ const MAX_HORIZON_DAYS: f64 = 73_050.0;
 #[derive(Debug, Clone, PartialEq, Eq)]
 pub struct Thresholds(Vec<u64>);
 
-/// Interval levels: ascending, distinct, each strictly between 0 and 1.
+/// Interval levels: ascending, distinct, each above 0 and at most 0.9999.
 #[derive(Debug, Clone, PartialEq)]
 pub struct Levels(Vec<f64>);
 
@@ -96,13 +98,13 @@ impl Levels {
     /// Sorts the levels and drops repeats.
     ///
     /// # Errors
-    /// Every level that is not strictly between 0 and 1; an empty or too long list.
+    /// Every level that is not above 0 and at most 0.9999; an empty or too long list.
     pub fn new(values: &[f64]) -> Result<Self, Vec<PlanFault>> {
         let field = "levels";
         let mut faults = length_faults(field, values.len(), MAX_LEVELS);
         for (i, &level) in values.iter().enumerate() {
-            if !(level > 0.0 && level < 1.0) {
-                let detail = format!("level {level} is not strictly between 0 and 1; write 0.9 for 90 %");
+            if !(level > 0.0 && level <= MAX_LEVEL) {
+                let detail = format!("level {level} is not above 0 and at most {MAX_LEVEL}; write 0.9 for 90 %");
                 faults.push(PlanFault { field, index: Some(i), detail });
             }
         }

@@ -54,9 +54,11 @@ pub const BRACKET_MAX_STEPS: usize = 200;
 /// Deepest splitting of one panel: 2⁻³⁰ of its length.
 pub const QUADRATURE_MAX_DEPTH: usize = 30;
 
-/// Largest change of ln N, of ln K and of any hazard × time over one panel of the time mesh. With 10 Gauss–Legendre
+/// Largest change of ln N and of ln K over one panel of the time mesh. With 10 Gauss–Legendre
 /// nodes a panel, the integrals of the totals are then good to about 10⁻¹³ (nearest pole of L/K one panel away).
 pub const MESH_LOG_CHANGE: f64 = 0.7;
+/// Largest hazard × time over one panel: 10 Gauss–Legendre nodes integrate e^{3x} over it to about 10⁻¹⁴.
+pub const MESH_HAZARD: f64 = 3.0;
 /// Most panels of the time mesh; more means rates per day far beyond any network's.
 pub const MESH_MAX_PANELS: usize = 20_000;
 

@@ -13,7 +13,7 @@ use super::inputs::{FitInputs, ForecastInputs, Label, sha256_hex};
 use super::numbers::{Count, Real, date_text};
 use super::{ENGINE, ServiceError};
 use crate::evaluate::{self, OriginError};
-use crate::fit::{Candidate, Fit, Goodness, Model, Rung, TailPoint};
+use crate::fit::{Candidate, Fit, Goodness, Model, Rung, TailPoint, fit};
 use crate::forecast::{CountForecast, DateForecast, DegreeForecast, TailForecast};
 use crate::model::{Estimate, Interval, Warning};
 use crate::store::RunKind;
@@ -114,8 +114,8 @@ impl Question for FitInputs {
         Self::canonical(self)
     }
 
-    fn answer(&self, inputs_digest: String, _cancelled: &dyn Fn() -> bool) -> Result<FitAnswer, OriginError> {
-        let fit = evaluate::fit_evidence(&self.evidence, &self.fit)?;
+    fn answer(&self, inputs_digest: String, cancelled: &dyn Fn() -> bool) -> Result<FitAnswer, OriginError> {
+        let fit = fit(&self.evidence, &self.fit, cancelled)?;
         Ok(FitAnswer {
             label: self.label.as_ref().map(|label| label.as_str().to_owned()),
             engine: ENGINE.to_owned(),

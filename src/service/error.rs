@@ -72,8 +72,9 @@ impl ServiceError {
             OriginError::Rate(fault) => Self::Impossible(fault.to_string()),
             OriginError::Fit(FitError::NotIdentified { detail }) => Self::NotIdentified(detail),
             OriginError::Fit(FitError::NotConverged { detail }) => Self::NotConverged(detail),
-            OriginError::Forecast(ForecastError::Impossible { detail }) => Self::Impossible(detail),
-            OriginError::Forecast(ForecastError::Cancelled) => Self::TooSlow { budget },
+            OriginError::Fit(FitError::Cancelled) | OriginError::Forecast(ForecastError::Cancelled) => {
+                Self::TooSlow { budget }
+            }
             OriginError::Fit(FitError::Growth(growth)) | OriginError::Forecast(ForecastError::Growth(growth)) => {
                 match growth {
                     GrowthError::NobodyStarts | GrowthError::TooFast { .. } | GrowthError::TooLarge { .. } => {

@@ -79,6 +79,7 @@ struct Canonical<'a> {
     model: &'static str,
     preferential_share: Option<Real>,
     links_per_arrival: Option<Real>,
+    links_per_node_day: Real,
     departures_per_node_day: Real,
     link_losses_per_link_day: Real,
     #[serde(flatten)]
@@ -96,7 +97,6 @@ struct CanonicalSnapshot {
 struct CanonicalOutlook<'a> {
     /// `(days after the last snapshot, arrivals a day, growth a year)`
     arrivals: Option<Vec<(Real, Real, Real)>>,
-    links_per_node_day: Real,
     thresholds: &'a [u64],
     dates: Vec<String>,
     levels: &'a [f64],
@@ -146,6 +146,7 @@ fn canonical_fit<'a>(asked: &'static str, evidence: &'a Evidence, fit: &FitReque
         },
         preferential_share: fit.fixed_mix.map(|mix| Real(mix.preferential_share())),
         links_per_arrival: fit.links_per_arrival.map(Real),
+        links_per_node_day: Real(fit.links_per_node_day),
         departures_per_node_day: Real(fit.departures_per_node_day),
         link_losses_per_link_day: Real(fit.link_losses_per_link_day),
         outlook: None,
@@ -160,7 +161,6 @@ fn canonical_outlook(request: &OriginRequest) -> CanonicalOutlook<'_> {
     };
     CanonicalOutlook {
         arrivals: request.arrivals.as_ref().map(segments),
-        links_per_node_day: Real(request.links_per_node_day),
         thresholds: plan.thresholds(),
         dates: plan.dates().iter().map(|&date| date_text(date)).collect(),
         levels: plan.levels(),

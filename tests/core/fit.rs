@@ -37,7 +37,8 @@ fn the_mix_of_independently_grown_graphs_is_recovered() {
     for ((name, links, share), pairs) in &graphs {
         let truth = number(share);
         let fit =
-            fit(&evidence(kind(name), &[("2026-01-01T00:00:00Z", pairs.clone())]), &FitRequest::default()).unwrap();
+            fit(&evidence(kind(name), &[("2026-01-01T00:00:00Z", pairs.clone())]), &FitRequest::default(), &|| false)
+                .unwrap();
         assert_eq!(fit.rung, Rung::OneSnapshot);
         let estimate = fit.preferential_share.value;
         let (low, high) = fit.share_excursion;

@@ -68,12 +68,12 @@ proptest! {
             fit: FitRequest {
                 fixed_mix: fixed.and_then(AttachmentMix::new),
                 links_per_arrival: links,
+                links_per_node_day: per_node,
                 departures_per_node_day: losses.0,
                 link_losses_per_link_day: losses.1,
                 ..FitRequest::default()
             },
             arrivals: Some(ArrivalPlan::from_segments(&[segment]).unwrap()),
-            links_per_node_day: per_node,
             plan: ForecastPlan::new(
                 as_of,
                 Thresholds::new(&[1, 10, 1_000, threshold]).unwrap(),

@@ -89,6 +89,10 @@ pub struct FitRequestBody {
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false, value_type = Vec<Vec<f64>>, min_items = 1)]
     pub entry_degrees: Option<Vec<(u64, f64)>>,
+    /// Link ends that land per present node and day, whoever arrives.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, minimum = 0, maximum = 1e9, default = 0.0)]
+    pub links_per_node_day: Option<f64>,
     /// Hazard that a node departs, per day.
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false, minimum = 0, maximum = 1e9, default = 0.0)]
