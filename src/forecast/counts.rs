@@ -1,7 +1,7 @@
 //! The law of a forecast count, given its mean and variance, and its quantiles.
 
-use statrs::function::beta::beta_reg;
-use statrs::function::gamma::{gamma_lr, gamma_ur};
+use statrs::function::beta::checked_beta_reg;
+use statrs::function::gamma::{checked_gamma_lr, checked_gamma_ur};
 
 use crate::model::Interval;
 use crate::numerics::roots::increasing_root;
@@ -76,16 +76,16 @@ impl CountLaw {
         levels.iter().map(interval).collect()
     }
 
-    /// P(R ≤ x) for whole x ≥ 0.
+    /// P(R ≤ x) for whole x ≥ 0. Arguments out of the functions' domain would be those of a law at its floor.
     fn distribution(&self, x: f64) -> f64 {
         let ratio = self.variance / self.mean;
         if (ratio - 1.0).abs() < POISSON_WITHIN {
-            gamma_ur(x + 1.0, self.mean)
+            checked_gamma_ur(x + 1.0, self.mean).unwrap_or(1.0)
         } else if ratio > 1.0 {
-            beta_reg(self.mean / (ratio - 1.0), x + 1.0, 1.0 / ratio)
+            checked_beta_reg(self.mean / (ratio - 1.0), x + 1.0, 1.0 / ratio).unwrap_or(1.0)
         } else {
             let trials = self.mean / (1.0 - ratio);
-            if x >= trials { 1.0 } else { beta_reg(trials - x, x + 1.0, ratio) }
+            if x >= trials { 1.0 } else { checked_beta_reg(trials - x, x + 1.0, ratio).unwrap_or(1.0) }
         }
     }
 
@@ -93,7 +93,7 @@ impl CountLaw {
         let shape = self.mean * self.mean / self.variance;
         if shape < WILSON_HILFERTY_FROM {
             let reach = self.mean + 60.0 * self.variance.sqrt();
-            let below = |x: f64| gamma_lr(shape, x * shape / self.mean) - probability;
+            let below = |x: f64| checked_gamma_lr(shape, x * shape / self.mean).unwrap_or(0.0) - probability;
             return increasing_root(0.0, reach, 1e-6 * self.mean, below);
         }
         let z = normal_quantile(probability);

@@ -9,8 +9,8 @@ use crate::numerics::tolerances::{MESH_HAZARD, MESH_LOG_CHANGE, MESH_MAX_PANELS}
 /// Share of the horizon that the first panel takes when there is no link yet and L/K starts from infinity.
 const FIRST_PANEL_WITHOUT_LINKS: f64 = 1e-30;
 
-/// Without any link the first ends decide who gains: the law then leaves out a share 10^{−30(1−p)} of them, 10⁻⁶ here.
-const STARTS_UP_TO: f64 = 0.8;
+/// Without any link the first ends decide who gains; the law is checked against the master equation up to this share.
+const STARTS_UP_TO: f64 = 0.95;
 /// After this many mean lifetimes e^{−50} of the nodes or links are left.
 const FORGOTTEN_LIFETIMES: f64 = 50.0;
 /// Link ends beyond this are nonsense: 2^64 nodes of degree 2^53 have 10³⁵.

@@ -28,20 +28,14 @@ fn drifting_ratio_matches_the_master_equation() {
         let v: Vec<f64> = row.iter().map(|c| number(c)).collect();
         let (start, threshold, tail) = (v[0] as u64, v[7] as u64, v[8]);
         let course = course(v[1], v[2], v[3], v[4] as u64, v[5] as u64, v[6]);
-        let ours = NodeLaw::between(&course, 0.0, v[6]).tail(start, threshold);
-        match ours {
-            Ok(ours) => {
-                let e = relative_error(ours, tail);
-                if e > 1e-8 {
-                    println!("{row:?} {ours:e} {e:e}");
-                }
-                worst = worst.max(e);
-            }
-            Err(e) => println!("{row:?} {e}"),
-        }
+        let ours = NodeLaw::between(&course, 0.0, v[6]).tail(start, threshold).unwrap();
+        let error = relative_error(ours, tail);
+        // From a network without any link to 1,623 of them: the one start that graded panels reach less exactly.
+        let allowed = if v[5] == 0.0 && threshold > 1_000 { 1e-6 } else { 1e-8 };
+        assert!(error < allowed, "{row:?}: {ours:e}, off by {error:e}");
+        worst = worst.max(error);
     }
     println!("worst {worst:e}");
-    assert!(worst < 1e-6);
 }
 
 #[test]
@@ -51,14 +45,8 @@ fn constant_ratio_matches_the_negative_binomial() {
         let v: Vec<f64> = row.iter().map(|c| number(c)).collect();
         let [start, growth, ratio, threshold, tail] = v[..] else { panic!("{row:?}") };
         let law = constant_rates(1.0, ratio, 0.0, growth);
-        let Ok(ours) = law.tail(start as u64, threshold as u64) else {
-            println!("FAIL {row:?}");
-            continue;
-        };
+        let ours = law.tail(start as u64, threshold as u64).unwrap();
         let e = relative_error(ours, tail);
-        if e > 1e-9 {
-            println!("{row:?} {ours:e} {e:e}");
-        }
         worst = worst.max(e);
     }
     println!("worst {worst:e}");
@@ -72,14 +60,8 @@ fn losses_match_the_master_equation() {
         let v: Vec<f64> = row.iter().map(|c| number(c)).collect();
         let [start, birth, immigration, loss, time, threshold, tail] = v[..] else { panic!("{row:?}") };
         let law = constant_rates(birth, immigration, loss, time);
-        let Ok(ours) = law.tail(start as u64, threshold as u64) else {
-            println!("FAIL {row:?}");
-            continue;
-        };
+        let ours = law.tail(start as u64, threshold as u64).unwrap();
         let e = relative_error(ours, tail);
-        if e > 1e-9 {
-            println!("{row:?} {ours:e} {e:e}");
-        }
         worst = worst.max(e);
     }
     println!("worst {worst:e}");

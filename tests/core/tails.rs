@@ -92,6 +92,7 @@ fn cost_and_answers_do_not_depend_on_scale() {
 fn nobody_starts_without_a_first_link() {
     let start = counts(&[(0, 10)]);
     assert_eq!(Course::new(&start, forces(1.0, 2.0), 10.0).unwrap_err(), GrowthError::NobodyStarts);
+    assert!(Course::new(&start, forces(0.96, 2.0), 10.0).is_err());
     let course = Course::new(&start, forces(0.9, 2.0), 10.0).unwrap();
     assert!(relative_error(size(&course, &start, 10.0, 0).mean, 20.0) < 1e-12);
     assert!(size(&course, &start, 10.0, 1).mean > 1.0);
