@@ -9,12 +9,15 @@ use crate::model::{ArrivalPlan, AttachmentMix, Evidence, ForecastPlan, GrowthPar
 /// flows by about this much.
 pub const DEFAULT_MODEL_ERROR: f64 = 0.15;
 
+/// Growth of arrivals a year beyond which a percentage may have been meant.
+const FAST_GROWTH: f64 = 3.0;
+
 /// What every reader of any forecast must keep in mind.
 pub const CAUTIONS: [&str; 5] = [
     "A forecast assumes that growth goes on as the fitted mix and the given rates say; a launch, a policy change or a ranking \
      change breaks it.",
-    "Intervals cover chance, the uncertainty of the estimates and a stated allowance for model error, not events without \
-     precedent in the data.",
+    "Intervals cover chance, the uncertainty of the estimates and a stated allowance for model error; rates that are given \
+     are taken as exact, and events without precedent in the data are not covered.",
     "Unless departures or link losses are given, nodes stay and links last; where they do not, the largest hubs come out too \
      many and too certain.",
     "Far thresholds and far dates rest on the fewest nodes: plan with the interval, not with its middle.",
@@ -94,6 +97,15 @@ pub fn answer(request: &OriginRequest, cancelled: &dyn Fn() -> bool) -> Result<O
         100.0 * scenario.model_error
     );
     warnings.push(Warning::new("model_error_assumed", detail));
+    let fastest =
+        request.arrivals.iter().flat_map(|plan| plan.segments()).map(|s| s.growth_per_year).fold(0.0, f64::max);
+    if fastest > FAST_GROWTH {
+        let detail = format!(
+            "growth_per_year {fastest} multiplies arrivals by {} each year; 20 % a year is written 0.2",
+            1.0 + fastest
+        );
+        warnings.push(Warning::new("arrivals_grow_fast", detail));
+    }
     Ok(OriginAnswer { fit, forecast, warnings, cautions: CAUTIONS.to_vec() })
 }
 

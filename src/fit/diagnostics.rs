@@ -5,7 +5,7 @@ use rand::rngs::SmallRng;
 use rand_distr::{Binomial, Distribution};
 
 use super::stationary::StationaryLaw;
-use super::{Goodness, TailPoint};
+use super::{Goodness, Model, ModelChoice, TailPoint};
 use crate::model::{DegreeCounts, Warning};
 
 /// Tail points grow by this factor in degree.
@@ -94,14 +94,19 @@ fn worst_log_ratio(tail: &[TailPoint]) -> f64 {
 }
 
 /// Warnings about a fit that its figures justify.
-pub(super) fn warnings(counts: &DegreeCounts, tail: &[TailPoint], goodness: &Goodness) -> Vec<Warning> {
+pub(super) fn warnings(
+    counts: &DegreeCounts,
+    tail: &[TailPoint],
+    goodness: &Goodness,
+    choice: ModelChoice,
+) -> Vec<Warning> {
     let mut warnings = Vec::new();
     let hubs_from = (HUB_TIMES_MEAN * counts.mean_degree()).ceil().max(1.0) as u64;
     let hubs = counts.tail_size(hubs_from);
     if hubs < FEW_HUBS {
         let detail = format!(
-            "only {hubs} nodes have {hubs_from} links or more (five times the mean); the tail, and so the forecast of large \
-             hubs, rests on little"
+            "nodes with {hubs_from} links or more (five times the mean): {hubs}; the tail, and so the forecast of large hubs, \
+             rests on little"
         );
         warnings.push(Warning::new("few_hubs", detail));
     }
@@ -113,9 +118,16 @@ pub(super) fn warnings(counts: &DegreeCounts, tail: &[TailPoint], goodness: &Goo
             .filter(|p| p.observed >= RATIO_NODES)
             .max_by(|a, b| log_ratio(a).abs().total_cmp(&log_ratio(b).abs()));
         if let Some(p) = worst {
+            let misfit = match choice {
+                ModelChoice::Only(Model::Uniform) => "uniform attachment alone does not reproduce these counts",
+                ModelChoice::Only(Model::Preferential) => {
+                    "preferential attachment alone does not reproduce these counts"
+                }
+                _ => "no mix of uniform and preferential attachment reproduces these counts",
+            };
             let detail = format!(
-                "no mix of uniform and preferential attachment reproduces these counts: at {} links the fit has {:.1} nodes \
-                 where {} were counted; trust the near thresholds more than the far ones",
+                "{misfit}: at {} links the fit has {:.1} nodes where {} were counted; trust the near thresholds more than the \
+                 far ones",
                 p.degree, p.fitted, p.observed
             );
             warnings.push(Warning::new("poor_fit", detail));

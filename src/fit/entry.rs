@@ -7,6 +7,8 @@ use crate::model::{DegreeKind, EntryDegrees, Evidence, Warning};
 const SAME_DEGREE: f64 = 0.02;
 /// An assumed distribution ends where less than this share is left.
 const SHARE_LEFT: f64 = 1e-6;
+/// No newcomer brings more links than this; its cells then stay below the largest degree, 2^53 − 1.
+const MOST_LINKS_BROUGHT: f64 = 1e12;
 /// Entry degrees of an assumed distribution are single up to this many, then cells growing by a quarter.
 const SINGLE_ENTRIES: u64 = 8;
 
@@ -46,6 +48,11 @@ pub(super) fn entry_degrees(evidence: &Evidence, lossy: bool) -> Result<(EntryDe
         }
         return Ok((EntryDegrees::single(smallest), warnings));
     }
+    if mean > MOST_LINKS_BROUGHT {
+        let detail =
+            format!("newcomers would bring {mean:.3e} links each by these counts; check them, or give entry_degrees");
+        return Err(FitError::NotIdentified { detail });
+    }
     let shares = geometric_cells(smallest, mean - smallest as f64);
     let entry = EntryDegrees::from_shares(&shares).map_err(|faults| FitError::NotIdentified {
         detail: format!("no entry degrees could be read from the counts: {}; give entry_degrees", faults[0].detail),
@@ -71,8 +78,8 @@ fn marginal_mean_degree(evidence: &Evidence) -> f64 {
 /// A geometric distribution from `smallest` up with mean `smallest + excess`, its far part gathered into cells at their
 /// means: about forty entry degrees whatever the mean.
 fn geometric_cells(smallest: u64, excess: f64) -> Vec<(u64, f64)> {
-    let ratio = excess / (1.0 + excess);
-    let beyond = |i: u64| ratio.powf(i as f64); // share at least i above the smallest
+    // Share at least i above the smallest: (excess/(1 + excess))^i.
+    let beyond = |i: u64| (-(i as f64) * excess.recip().ln_1p()).exp();
     let (mut shares, mut from) = (Vec::new(), 0);
     while beyond(from) > SHARE_LEFT {
         let to = if from < SINGLE_ENTRIES { from + 1 } else { from + from.div_ceil(4) };

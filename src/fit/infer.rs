@@ -56,9 +56,14 @@ pub fn fit(evidence: &Evidence, request: &FitRequest, cancelled: &dyn Fn() -> bo
         }
     };
     if let Some(goodness) = &goodness {
-        warnings.extend(diagnose(counts, &tail, goodness));
+        warnings.extend(diagnose(counts, &tail, goodness, request.choice));
     }
     warnings.extend(periods.last().and_then(|newest| shrinkage(newest, request)));
+    if profile.share.value == 1.0 && entry.smallest() == 0 {
+        let detail =
+            "every landing end picks in proportion to links, so a newcomer that arrives without any never gains one";
+        warnings.push(Warning::new("newcomers_never_gain", detail));
+    }
     let tail_exponent = tail_exponent(&profile, rates.exponent_links, entry.mean(), request);
     Ok(Fit {
         model: profile.model,

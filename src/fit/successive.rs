@@ -211,7 +211,11 @@ impl<'a> Period<'a> {
     }
 
     fn flows(&self, p: f64) -> Result<Vec<Flow>, FitError> {
-        let course = self.course(p)?;
+        let course = match self.course(p) {
+            // So preferential a mix gives no node its first link: nothing flows.
+            Err(GrowthError::NobodyStarts) => return Ok(vec![Flow { mean: 0.0, kept: 0.0 }; self.thresholds.len()]),
+            course => course?,
+        };
         let flow = |&threshold: &u64| {
             let sum = tail_sum(&course, self.before, self.days, threshold, Accuracy::Working)?;
             Ok(Flow { mean: sum.mean - sum.kept, kept: sum.kept })

@@ -16,6 +16,18 @@ pub struct Excursion {
     pub high: GrowthParameters,
 }
 
+impl CountForecast {
+    /// Keeps every quantile at most that of a count that can only be larger, such as the tail of a lower threshold: each law
+    /// is fitted to its own two moments, and two such laws may cross.
+    fn bound_by(&mut self, larger: &Self) {
+        self.median = self.median.min(larger.median);
+        for (own, larger) in self.intervals.iter_mut().zip(&larger.intervals) {
+            own.low = own.low.min(larger.low);
+            own.high = own.high.min(larger.high);
+        }
+    }
+}
+
 /// What is believed of a network's growth from its last snapshot on.
 #[derive(Debug, Clone, PartialEq)]
 pub struct Scenario {
@@ -63,17 +75,18 @@ struct Outlook<'a> {
 
 impl Outlook<'_> {
     fn at(&self, date: jiff::Timestamp, day: f64) -> Result<DateForecast, ForecastError> {
-        let tail = self.plan.thresholds().iter().map(|&threshold| self.tail(day, threshold));
-        Ok(DateForecast {
-            date,
-            nodes: self.nodes(day),
-            links: self.link_ends(day),
-            tail: tail.collect::<Result<_, _>>()?,
-            largest_degree: self.largest(day)?,
-        })
+        let nodes = self.nodes(day);
+        let tail = self.plan.thresholds().iter().map(|&threshold| self.tail(day, threshold, nodes.expected));
+        let mut tail: Vec<TailForecast> = tail.collect::<Result<_, _>>()?;
+        let mut bound = &nodes;
+        for row in &mut tail {
+            row.size.bound_by(bound);
+            bound = &row.size;
+        }
+        Ok(DateForecast { date, links: self.link_ends(day), largest_degree: self.largest(day)?, nodes, tail })
     }
 
-    fn tail(&self, day: f64, threshold: u64) -> Result<TailForecast, ForecastError> {
+    fn tail(&self, day: f64, threshold: u64, nodes: f64) -> Result<TailForecast, ForecastError> {
         if (self.cancelled)() {
             return Err(ForecastError::Cancelled);
         }
@@ -84,7 +97,8 @@ impl Outlook<'_> {
             .excursion_variance(|course| Ok(tail_sum(course, self.counts, day, threshold, Accuracy::Working)?.mean))?;
         // Nodes that come past the threshold and nodes that leave the tail are what the model can be wrong about; of a tail
         // that all but vanishes it is not wrong by all that was lost.
-        let flow = (mean - kept) + (now - kept).min(kept);
+        // And a threshold that nearly every node passes leaves little to be wrong about.
+        let flow = ((mean - kept) + (now - kept).min(kept)) * (1.0 - mean / nodes).max(0.0);
         let variance = variance + beyond + (self.model_error * flow).powi(2);
         let certain = if self.central.parameters().has_losses() { 0.0 } else { kept };
         Ok(TailForecast { threshold, size: self.count(now, certain, mean, variance) })

@@ -257,11 +257,12 @@ impl Course {
         let growth = panel.arrival_growth.abs();
         let hazard = growth.max(self.degree_loss()).max(self.parameters.departure_hazard());
         let by_hazard = MESH_HAZARD / hazard;
-        // ln N and ln K change by at most MESH_LOG_CHANGE while the inflow is at most e^0.7 − 1 of the stock.
+        // ln N and ln K change by at most MESH_LOG_CHANGE while the net inflow is at most e^0.7 − 1 of the stock.
         let doubling = MESH_LOG_CHANGE.exp_m1();
-        let by_nodes = doubling * panel.nodes / panel.arrival_rate;
-        let by_links = if inflow > 0.0 { doubling * panel.link_ends / inflow } else { f64::INFINITY };
-        let by_links = if by_links > 0.0 { by_links } else { f64::INFINITY };
+        let net_nodes = (panel.arrival_rate - self.parameters.departure_hazard() * panel.nodes).abs();
+        let net_links = (inflow - self.degree_loss() * panel.link_ends).abs();
+        let by_nodes = doubling * panel.nodes / net_nodes;
+        let by_links = if panel.link_ends > 0.0 { doubling * panel.link_ends / net_links } else { f64::INFINITY };
         by_hazard.min(by_nodes).min(by_links).max(self.horizon * FIRST_PANEL_WITHOUT_LINKS)
     }
 }

@@ -25,6 +25,8 @@ pub trait GeneratingFunction {
 const SQUEEZED: f64 = 0.5;
 /// ln of the least positive double, with room for the width of the integrand: below, a tail is zero in double precision.
 const UNDERFLOW: f64 = -760.0;
+/// Distance to the singularity over the integrand's width below which the saddle is pressed against it.
+const PRESSED: f64 = 0.05;
 /// A tail above this keeps eight digits or more as one minus its complement.
 const SMALL_TAIL: f64 = 1e-8;
 
@@ -79,7 +81,9 @@ pub fn upper_tail(gf: &impl GeneratingFunction, g: f64, accuracy: Accuracy) -> R
             return Ok(0.0);
         }
         let small = saddle.height < SMALL_TAIL.ln();
-        if small || g <= 0.0 || g * gf.singularity() >= SQUEEZED {
+        let squeezed = g > 0.0 && g * gf.singularity() < SQUEEZED;
+        let pressed = (gf.singularity() - saddle.zeta) * saddle.curvature.sqrt() < PRESSED;
+        if small || !(squeezed || pressed) {
             match contour_integral(gf, g, &saddle, accuracy) {
                 Err(InversionError) if !small => {}
                 settled => return settled.and_then(probability),
@@ -141,9 +145,12 @@ fn contour_integral(
     saddle: &Saddle,
     accuracy: Accuracy,
 ) -> Result<f64, InversionError> {
-    let to_singularity = gf.singularity() - saddle.zeta;
-    // Near a weak singularity the exponent is flatter than the singularity is far.
-    let width = saddle.curvature.sqrt().recip().min(to_singularity);
+    // Against a weak singularity the saddle comes closer to it than the integrand is wide. The step then follows the
+    // distance down to a twentieth of the width, and the sum is always checked by halving.
+    let by_curvature = saddle.curvature.sqrt().recip();
+    let to_singularity = (gf.singularity() - saddle.zeta).max(PRESSED * by_curvature);
+    let accuracy = if to_singularity < by_curvature { Accuracy::Full } else { accuracy };
+    let width = by_curvature.min(to_singularity);
     let mut parabola = Contour { gf, g, saddle, width, bend: 0.25 / to_singularity, accuracy, evaluations: 0 };
     match parabola.settle() {
         Ok(integral) => Ok(integral),

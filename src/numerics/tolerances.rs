@@ -60,7 +60,7 @@ pub const MESH_LOG_CHANGE: f64 = 0.7;
 /// Largest hazard × time over one panel: 10 Gauss–Legendre nodes integrate e^{3x} over it to about 10⁻¹⁴.
 pub const MESH_HAZARD: f64 = 3.0;
 /// Most panels of the time mesh; more means rates per day far beyond any network's.
-pub const MESH_MAX_PANELS: usize = 20_000;
+pub const MESH_MAX_PANELS: usize = 600;
 
 /// A tail of this many expected nodes or fewer is zero for every purpose.
 pub const TAIL_ZERO: f64 = 1e-18;

@@ -91,12 +91,19 @@ proptest! {
                 for at in &answer.forecast {
                     check(&at.nodes)?;
                     check(&at.links)?;
+                    let mut larger = &at.nodes;
                     for tail in &at.tail {
                         check(&tail.size)?;
+                        prop_assert!(tail.size.expected <= larger.expected * (1.0 + 1e-6), "{:?}", at.tail);
+                        prop_assert!(tail.size.median <= larger.median, "{:?}", at.tail);
+                        prop_assert!(tail.size.intervals[1].high <= larger.intervals[1].high, "{:?}", at.tail);
+                        larger = &tail.size;
                     }
                     prop_assert!(at.largest_degree.median.is_finite());
                 }
                 prop_assert!(answer.fit.preferential_share.value.is_finite());
+                prop_assert!(answer.fit.candidates.iter().all(|c| c.aic.is_finite() && c.weight.is_finite()));
+                prop_assert!(answer.fit.goodness.is_none_or(|g| g.distance.is_finite() && g.worst_log_ratio.is_finite()));
             }
             Err(error) => prop_assert!(!error.to_string().is_empty()),
         }
