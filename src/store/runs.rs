@@ -144,8 +144,9 @@ impl Store {
     /// Keeps a run, and its key with it, or finds what the key already led to.
     ///
     /// # Errors
-    /// When the database fails; then nothing was kept.
+    /// When the database fails; then nothing was kept. When its file is gone; then nothing is where anybody finds it.
     pub async fn insert_run(&self, run: &NewRun, claim: Option<&KeyClaim>) -> Result<Inserted, StoreError> {
+        self.file.check()?;
         let mut transaction = self.write.begin_with("BEGIN IMMEDIATE").await?;
         if let Some(claim) = claim
             && let Some(earlier) = claimed(&mut transaction, run.kind, claim).await?
@@ -178,6 +179,8 @@ impl Store {
                 .await?;
         }
         transaction.commit().await?;
+        // Once more: the file may have gone in between.
+        self.file.check()?;
         Ok(Inserted::Kept)
     }
 
@@ -246,6 +249,7 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn delete_run(&self, kind: RunKind, id: Uuid) -> Result<bool, StoreError> {
+        self.file.check()?;
         let done = sqlx::query("DELETE FROM runs WHERE id = $1 AND kind = $2")
             .bind(id.to_string())
             .bind(kind.as_str())
