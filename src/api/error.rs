@@ -149,9 +149,7 @@ fn service_problem(error: ServiceError) -> Problem {
             faults.add(&At::ROOT.field("arrivals"), "needed with one snapshot, as in {\"per_day\": 42.0}");
             Problem::new(S::UNPROCESSABLE_ENTITY, "arrivals_required", detail).with_faults(faults)
         }
-        ServiceError::NotIdentified(why) => {
-            Problem::new(S::UNPROCESSABLE_ENTITY, "not_identified", readable(&why))
-        }
+        ServiceError::NotIdentified(why) => Problem::new(S::UNPROCESSABLE_ENTITY, "not_identified", readable(&why)),
         ServiceError::Impossible(why) => Problem::new(S::UNPROCESSABLE_ENTITY, "impossible", readable(&why)),
         ServiceError::NotConverged(why) => {
             let detail = format!(

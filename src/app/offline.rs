@@ -7,8 +7,8 @@ use std::path::Path;
 use super::{OutputFormat, Stop, print};
 use crate::api::{self, ApiError, Problem};
 use crate::config::Config;
-use crate::service::{self, ServiceError};
 use crate::report;
+use crate::service::{self, ServiceError};
 
 /// Answers the request in `file`.
 pub fn forecast(config: &Config, file: &Path, format: OutputFormat) -> Result<(), Stop> {

@@ -83,9 +83,7 @@ impl Store {
     pub async fn try_write(&self) -> Result<(), StoreError> {
         // The writer is at work: proof enough.
         let Some(mut writer) = self.write.try_acquire() else { return Ok(()) };
-        let trial = async {
-            writer.begin_with("BEGIN IMMEDIATE").await?.rollback().await
-        };
+        let trial = async { writer.begin_with("BEGIN IMMEDIATE").await?.rollback().await };
         match timeout(TRIAL_TIMEOUT, trial).await {
             Ok(outcome) => Ok(outcome?),
             Err(_) => Err(StoreError::Busy(sqlx::Error::PoolTimedOut)),

@@ -81,7 +81,7 @@ fn cases() -> Vec<Case> {
         ("/dates", json!(["9999-12-31"]), "/dates/0", "out of range"),
         ("/dates", json!(["soon"]), "/dates/0", "no time"),
         ("/horizon", json!({"until": "2027-01-01", "every": "P1M"}), "", "not both"),
-        ("/levels", json!([0.5, 1.0]), "/levels/1", "strictly between"),
+        ("/levels", json!([0.5, 1.0]), "/levels/1", "at most 0.9999"),
         ("/levels", json!([]), "/levels", "at least one"),
         ("/levels", json!(["0.9"]), "/levels/0", "without quotes"),
         ("/model", json!("magic"), "/model", "auto"),

@@ -34,7 +34,11 @@ pub fn whole(raw: &RawValue, at: At<'_>, most: u64, faults: &mut Faults) -> Opti
 fn read_whole(raw: &RawValue, at: &At<'_>, most: u64) -> Result<u64, String> {
     let text = raw.get();
     let beyond = || {
-        let power = if most.trailing_ones() == most.count_ones() { format!(" (2^{} - 1)", most.count_ones()) } else { String::new() };
+        let power = if most.trailing_ones() == most.count_ones() {
+            format!(" (2^{} - 1)", most.count_ones())
+        } else {
+            String::new()
+        };
         format!("{} is above the largest allowed here, {most}{power}", quoted(raw))
     };
     if text.bytes().all(|byte| byte.is_ascii_digit()) {

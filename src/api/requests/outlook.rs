@@ -5,7 +5,9 @@ use serde_json::value::RawValue;
 
 use crate::api::decode::{At, Faults, Object, every, instant, list, object, real, whole};
 use crate::config::LimitsConfig;
-use crate::model::{ArrivalPlan, ArrivalSegment, ForecastPlan, Levels, MAX_DEGREE, PlanFault, Thresholds, days_between};
+use crate::model::{
+    ArrivalPlan, ArrivalSegment, ForecastPlan, Levels, MAX_DEGREE, PlanFault, Thresholds, days_between,
+};
 use crate::report::readable;
 
 /// Most dates a horizon is spread over before it is refused; one more than a plan takes, so that the plan says why.
