@@ -1,4 +1,5 @@
-//! The database's file, watched: rows written into a file that was removed or replaced are on no disk anybody can find.
+//! The database's file, watched: rows written into a file that was removed or replaced are on no disk anybody can find,
+//! and a connection opened later would read whatever stands in its place.
 
 use std::fs::Metadata;
 use std::path::{Path, PathBuf};

@@ -189,6 +189,7 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn find_claim(&self, kind: RunKind, claim: &KeyClaim) -> Result<Option<Inserted>, StoreError> {
+        self.file.check()?;
         let mut connection = self.read.acquire().await?;
         claimed(&mut connection, kind, claim).await
     }
@@ -198,6 +199,7 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn find_run(&self, kind: RunKind, id: Uuid) -> Result<Option<StoredRun>, StoreError> {
+        self.file.check()?;
         let row: Option<RunRow> =
             sqlx::query_as("SELECT id, created_at, tag, document FROM runs WHERE id = $1 AND kind = $2")
                 .bind(id.to_string())
@@ -212,6 +214,7 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn find_tag(&self, kind: RunKind, id: Uuid) -> Result<Option<String>, StoreError> {
+        self.file.check()?;
         let tag = sqlx::query_scalar("SELECT tag FROM runs WHERE id = $1 AND kind = $2")
             .bind(id.to_string())
             .bind(kind.as_str())
@@ -225,6 +228,7 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn list_runs(&self, kind: RunKind, filter: &RunFilter) -> Result<Vec<RunSummary>, StoreError> {
+        self.file.check()?;
         // One text a combination, so that each finds its index.
         let mut query = QueryBuilder::<Sqlite>::new(
             "SELECT id, network, label, created_at, engine, seed, inputs_digest FROM runs WHERE kind = ",
