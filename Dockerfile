@@ -1,4 +1,4 @@
-# Build: needs nothing from the network but the crates of Cargo.lock.
+# Build: needs nothing from the network but the two base images and the crates of Cargo.lock.
 FROM rust:1.95-slim-bookworm AS build
 WORKDIR /src
 COPY . .

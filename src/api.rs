@@ -70,7 +70,8 @@ fn observed<S: Clone + Send + Sync + 'static>(routes: Router<S>) -> Router<S> {
 
 /// The OpenAPI document; needs no database and no configuration.
 pub fn openapi() -> OpenApi {
-    OpenApiRouter::with_openapi(docs::preamble()).merge(work_routes()).merge(around_routes()).into_openapi()
+    let routes = OpenApiRouter::with_openapi(docs::preamble()).merge(work_routes()).merge(around_routes());
+    docs::with_exclusive_fields(routes.into_openapi())
 }
 
 /// The OpenAPI document as it is served and committed.

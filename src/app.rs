@@ -1,6 +1,7 @@
 //! The program: its commands, and how the parts are put together for each.
 
 mod check;
+mod connections;
 mod demo;
 mod offline;
 mod serve;

@@ -6,9 +6,16 @@ use std::path::Path;
 use std::time::Duration;
 
 use config::{ConfigError, File, FileFormat, Value, ValueKind};
-use serde::Deserialize;
+use serde::de::Error as _;
+use serde::{Deserialize, Deserializer};
 
 const DEFAULTS: &str = include_str!("../config/default.toml");
+/// Most threads or connections: more only wait for each other.
+const MOST_THREADS: u64 = 1024;
+/// Longest time, seconds: what runs for longer than a day is no request.
+const DAY_SECONDS: u64 = 86_400;
+/// Most of anything counted or measured in bytes.
+const MOST_THINGS: u64 = 1 << 40;
 const VARIABLE_PREFIX: &str = "TAILCAST_";
 
 /// All settings.
@@ -16,6 +23,7 @@ const VARIABLE_PREFIX: &str = "TAILCAST_";
 #[serde(deny_unknown_fields)]
 pub struct Config {
     /// Address and port to listen on.
+    #[serde(deserialize_with = "socket_address")]
     pub bind: SocketAddr,
     /// Where runs are kept.
     pub database: DatabaseConfig,
@@ -49,6 +57,8 @@ pub struct DatabaseConfig {
 pub struct HttpConfig {
     /// Largest request body, bytes.
     pub body_limit_bytes: usize,
+    /// Longest time to send a request's head, seconds.
+    pub head_timeout_seconds: u64,
     /// Longest time to send a body, seconds.
     pub body_timeout_seconds: u64,
     /// Requests served at the same time.
@@ -58,6 +68,11 @@ pub struct HttpConfig {
 }
 
 impl HttpConfig {
+    /// Longest time to send a request's head.
+    pub fn head_timeout(&self) -> Duration {
+        Duration::from_secs(self.head_timeout_seconds)
+    }
+
     /// Longest time to send a body.
     pub fn body_timeout(&self) -> Duration {
         Duration::from_secs(self.body_timeout_seconds)
@@ -110,12 +125,31 @@ pub struct LogConfig {
 
 /// Form of the log lines.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Deserialize)]
-#[serde(rename_all = "lowercase")]
+#[serde(try_from = "String")]
 pub enum LogFormat {
     /// For people.
     Text,
     /// For machines.
     Json,
+}
+
+impl TryFrom<String> for LogFormat {
+    type Error = String;
+
+    fn try_from(name: String) -> Result<Self, String> {
+        match name.as_str() {
+            "text" => Ok(Self::Text),
+            "json" => Ok(Self::Json),
+            _ => Err(format!("log.format is \"text\" or \"json\", not {name:?}")),
+        }
+    }
+}
+
+fn socket_address<'de, D: Deserializer<'de>>(deserializer: D) -> Result<SocketAddr, D::Error> {
+    let text = String::deserialize(deserializer)?;
+    text.parse().map_err(|_| {
+        D::Error::custom(format!("bind is an address and a port, such as 127.0.0.1:8080 or [::1]:8080, not {text:?}"))
+    })
 }
 
 /// Why the settings cannot be used.
@@ -132,11 +166,27 @@ pub enum SettingsError {
         /// The variables that are known.
         known: String,
     },
+    /// Keys in a file that are none of ours.
+    #[error("{file} has keys that are no settings: {}; the known ones are {known}", keys.join(", "))]
+    UnknownKeys {
+        /// The file.
+        file: String,
+        /// The keys.
+        keys: Vec<String>,
+        /// The keys that are known.
+        known: String,
+    },
     /// A value is outside its range.
-    #[error("{key} must be at least 1")]
-    Zero {
+    #[error("{key} must lie between {least} and {most}, not at {value}")]
+    OutOfRange {
         /// The key.
         key: &'static str,
+        /// The value given.
+        value: u64,
+        /// The smallest taken.
+        least: u64,
+        /// The largest taken.
+        most: u64,
     },
 }
 
@@ -164,7 +214,14 @@ impl Config {
         let keys = variable_keys(&defaults);
         let mut builder = config::Config::builder().add_source(defaults);
         if let Some(path) = file {
-            builder = builder.add_source(File::from(path).format(FileFormat::Toml));
+            let given = config::Config::builder().add_source(File::from(path).format(FileFormat::Toml)).build()?;
+            let unknown: Vec<String> =
+                variable_keys(&given).into_values().filter(|key| !keys.values().any(|known| known == key)).collect();
+            if !unknown.is_empty() {
+                let known = keys.values().cloned().collect::<Vec<_>>().join(", ");
+                return Err(SettingsError::UnknownKeys { file: path.display().to_string(), keys: unknown, known });
+            }
+            builder = builder.add_source(given);
         }
         for (name, value) in variables.filter(|(name, _)| name.starts_with(VARIABLE_PREFIX)) {
             let Some(key) = keys.get(&name) else {
@@ -177,15 +234,23 @@ impl Config {
     }
 
     fn checked(self) -> Result<Self, SettingsError> {
-        let positive = [
-            ("database.readers", self.database.readers as usize),
-            ("http.max_in_flight", self.http.max_in_flight),
-            ("http.body_limit_bytes", self.http.body_limit_bytes),
-            ("limits.degree_counts", self.limits.degree_counts),
-            ("limits.cells", self.limits.cells),
+        let (database, http, compute, limits) = (&self.database, &self.http, &self.compute, &self.limits);
+        let ranges = [
+            ("database.readers", u64::from(database.readers), 1, MOST_THREADS),
+            ("database.busy_timeout_ms", database.busy_timeout_ms, 0, DAY_SECONDS * 1000),
+            ("http.body_limit_bytes", http.body_limit_bytes as u64, 1, MOST_THINGS),
+            ("http.head_timeout_seconds", http.head_timeout_seconds, 1, DAY_SECONDS),
+            ("http.body_timeout_seconds", http.body_timeout_seconds, 1, DAY_SECONDS),
+            ("http.max_in_flight", http.max_in_flight as u64, 1, MOST_THINGS),
+            ("http.shutdown_grace_seconds", http.shutdown_grace_seconds, 0, DAY_SECONDS),
+            ("compute.workers", compute.workers as u64, 0, MOST_THREADS),
+            ("compute.queue", compute.queue as u64, 0, MOST_THINGS),
+            ("compute.budget_seconds", compute.budget_seconds, 1, DAY_SECONDS),
+            ("limits.degree_counts", limits.degree_counts as u64, 1, MOST_THINGS),
+            ("limits.cells", limits.cells as u64, 1, MOST_THINGS),
         ];
-        match positive.iter().find(|(_, value)| *value == 0) {
-            Some(&(key, _)) => Err(SettingsError::Zero { key }),
+        match ranges.into_iter().find(|&(_, value, least, most)| !(least..=most).contains(&value)) {
+            Some((key, value, least, most)) => Err(SettingsError::OutOfRange { key, value, least, most }),
             None => Ok(self),
         }
     }
@@ -250,16 +315,25 @@ mod tests {
         std::fs::write(&path, "[http]\nmax_in_flight = 3\n").unwrap();
         let config = Config::from_sources(Some(&path), std::iter::empty()).unwrap();
         assert_eq!(config.http.max_in_flight, 3);
-        std::fs::write(&path, "[http]\nmax_inflight = 3\n").unwrap();
+        std::fs::write(&path, "colour = 1\n[http]\nmax_inflight = 3\n").unwrap();
         let error = Config::from_sources(Some(&path), std::iter::empty()).unwrap_err().to_string();
-        assert!(error.contains("max_inflight"), "{error}");
+        assert!(error.contains("colour, http.max_inflight;"), "{error}");
     }
 
     #[test]
-    fn an_unknown_variable_or_a_zero_is_refused() {
+    fn an_unknown_variable_or_a_value_out_of_range_is_refused() {
         let error = with(&[("TAILCAST_BINDD", "1")]).unwrap_err().to_string();
         assert!(error.contains("TAILCAST_BINDD") && error.contains("TAILCAST_BIND,"), "{error}");
-        let error = with(&[("TAILCAST_HTTP_MAX_IN_FLIGHT", "0")]).unwrap_err().to_string();
-        assert!(error.contains("http.max_in_flight"), "{error}");
+        for (name, value, words) in [
+            ("TAILCAST_HTTP_MAX_IN_FLIGHT", "0", "http.max_in_flight must lie between 1"),
+            ("TAILCAST_COMPUTE_WORKERS", "1025", "between 0 and 1024"),
+            ("TAILCAST_COMPUTE_BUDGET_SECONDS", "0", "compute.budget_seconds must lie between 1 and 86400"),
+            ("TAILCAST_COMPUTE_BUDGET_SECONDS", "86401", "not at 86401"),
+            ("TAILCAST_LOG_FORMAT", "yaml", "\"text\" or \"json\", not \"yaml\""),
+            ("TAILCAST_BIND", "foo", "such as 127.0.0.1:8080"),
+        ] {
+            let error = with(&[(name, value)]).unwrap_err().to_string();
+            assert!(error.contains(words), "{name} = {value}: {error}");
+        }
     }
 }

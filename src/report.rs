@@ -6,7 +6,7 @@ mod text;
 
 pub use csv::{fit_csv, forecast_csv};
 pub use table::{align, forecast_table, mix_in_words};
-pub use text::{figure, wrap};
+pub use text::{figure, readable, wrap};
 
 /// A plain page of links.
 pub const INDEX_PAGE: &str = include_str!("report/index.html");

@@ -59,11 +59,24 @@ impl Service {
         outcome
     }
 
-    /// Whether requests can be served: the database answers and its tables are current.
+    /// Whether requests can be served: the database answers, its tables are current, and it can be written.
     ///
     /// # Errors
-    /// When it does not answer or its tables are not current.
+    /// [`ServiceError::TablesOutdated`], [`ServiceError::StoreBusy`] or [`ServiceError::StoreUnavailable`]: whatever
+    /// the database's fault, the service is not ready and nothing of the service is broken.
     pub async fn check_ready(&self) -> Result<(), ServiceError> {
+        let ready = async {
+            self.check_tables().await?;
+            Ok(self.store.try_write().await?)
+        };
+        ready.await.map_err(|error| match error {
+            ServiceError::Store(error) => ServiceError::StoreUnavailable(error),
+            other => other,
+        })
+    }
+
+    /// Whether the database answers and its tables are current.
+    async fn check_tables(&self) -> Result<(), ServiceError> {
         if self.store.is_current().await? { Ok(()) } else { Err(ServiceError::TablesOutdated) }
     }
 

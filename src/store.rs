@@ -1,20 +1,33 @@
 //! The only SQL: runs and idempotency keys in SQLite.
 //!
-//! One connection writes, a pool of read-only ones reads. Every write is one `BEGIN IMMEDIATE` transaction at
-//! `synchronous = FULL`: what was acknowledged is on disk, through a killed process and through a power cut.
+//! One connection writes, a pool of read-only ones reads. A run and its key are one `BEGIN IMMEDIATE` transaction, a
+//! deletion is one statement, each at `synchronous = FULL`: what was acknowledged is on disk, through a killed process
+//! and through a power cut. A write into a file that no longer stands at its path is never acknowledged.
 
 mod connect;
+mod file;
 mod runs;
 
+use std::path::PathBuf;
+
+use file::DatabaseFile;
 use sqlx::SqlitePool;
 
 pub use runs::{Inserted, KeyClaim, NewRun, RunFilter, RunKind, RunSummary, StoredRun};
+
+// Primary result codes: https://www.sqlite.org/rescode.html
+const SQLITE_BUSY: u32 = 5;
+const SQLITE_READONLY: u32 = 8;
+const SQLITE_IOERR: u32 = 10;
+const SQLITE_FULL: u32 = 13;
+const SQLITE_CANTOPEN: u32 = 14;
 
 /// The database.
 #[derive(Debug, Clone)]
 pub struct Store {
     write: SqlitePool,
     read: SqlitePool,
+    file: DatabaseFile,
 }
 
 /// Why the database did not do as asked.
@@ -31,6 +44,18 @@ pub enum StoreError {
         /// Why not.
         reason: String,
     },
+    /// The file was removed or replaced while it was open.
+    #[error("the database file {path} was removed or replaced; restart the service to open what stands there now")]
+    Gone {
+        /// Where it stood.
+        path: PathBuf,
+    },
+    /// The file can be neither read nor written as it stands: read-only, a full disk, a failing one.
+    #[error("the database cannot be used: {0}")]
+    Unusable(#[source] sqlx::Error),
+    /// A table of this version is missing.
+    #[error("a table is missing: {0}")]
+    NoTable(#[source] sqlx::Error),
     /// The tables are not those of this version.
     #[error("the database's tables do not fit this version: {0}")]
     Migration(#[from] sqlx::migrate::MigrateError),
@@ -44,11 +69,19 @@ pub enum StoreError {
 
 impl From<sqlx::Error> for StoreError {
     fn from(error: sqlx::Error) -> Self {
-        // SQLITE_BUSY is primary code 5; extended codes carry it in the low byte.
-        let locked = |code: &str| code.parse::<u32>().is_ok_and(|code| code & 0xff == 5);
-        match &error {
-            sqlx::Error::PoolTimedOut => Self::Busy(error),
-            sqlx::Error::Database(inner) if inner.code().is_some_and(|code| locked(&code)) => Self::Busy(error),
+        let sqlx::Error::Database(inner) = &error else {
+            return match error {
+                sqlx::Error::PoolTimedOut => Self::Busy(error),
+                sqlx::Error::Io(_) => Self::Unusable(error),
+                _ => Self::Failed(error),
+            };
+        };
+        // Extended result codes carry the primary one in the low byte.
+        match inner.code().and_then(|code| code.parse::<u32>().ok()).map(|code| code & 0xff) {
+            Some(SQLITE_BUSY) => Self::Busy(error),
+            Some(SQLITE_READONLY | SQLITE_IOERR | SQLITE_FULL | SQLITE_CANTOPEN) => Self::Unusable(error),
+            // The general code: the words alone tell a missing table from a mistake of ours.
+            _ if inner.message().contains("no such table") => Self::NoTable(error),
             _ => Self::Failed(error),
         }
     }

@@ -42,10 +42,11 @@ fn quoted(raw: &RawValue) -> String {
     }
 }
 
-/// What to do about a value of the wrong kind.
-fn advice_for(raw: &RawValue) -> &'static str {
+/// What to do about a value of the wrong kind. A list's item cannot be left out, a field that is needed is refused
+/// before it is read.
+fn advice_for(raw: &RawValue, at: &At<'_>) -> &'static str {
     match raw.get().as_bytes().first() {
-        Some(b'n') => "; leave the field out when there is nothing to say",
+        Some(b'n') if !at.is_item() => "; leave the field out when there is nothing to say",
         Some(b'"') => "; write it without quotes",
         _ => "",
     }

@@ -8,8 +8,9 @@ use axum::middleware::{self, Next};
 use axum::response::{Html, IntoResponse, Response};
 use axum::routing::get;
 use axum::{Extension, Router};
+use serde_json::json;
 use utoipa::OpenApi as _;
-use utoipa::openapi::OpenApi;
+use utoipa::openapi::{OpenApi, RefOr, Schema};
 use utoipa_axum::router::OpenApiRouter;
 use utoipa_axum::routes;
 use utoipa_swagger_ui::{Config, SwaggerUi};
@@ -45,6 +46,19 @@ struct Preamble;
 /// The document before any route adds itself.
 pub fn preamble() -> OpenApi {
     Preamble::openapi()
+}
+
+/// Says which fields exclude each other, in the one form that can be put beside properties: exactly one of them is
+/// required.
+pub fn with_exclusive_fields(mut document: OpenApi) -> OpenApi {
+    let Some(components) = document.components.as_mut() else { return document };
+    for (name, either, or) in [("ForecastRequestBody", "dates", "horizon"), ("ArrivalsBody", "per_day", "segments")] {
+        if let Some(RefOr::T(Schema::Object(body))) = components.schemas.get_mut(name) {
+            let one_of = json!([{"required": [either]}, {"required": [or]}]);
+            body.extensions.get_or_insert_default().insert("oneOf".to_owned(), one_of);
+        }
+    }
+    document
 }
 
 /// The routes of this resource that the document lists.

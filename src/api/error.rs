@@ -2,15 +2,23 @@
 
 use std::time::Duration;
 
-use axum::http::StatusCode;
+use axum::http::header::ACCEPT_ENCODING;
+use axum::http::{HeaderName, HeaderValue, StatusCode};
 use axum::response::{IntoResponse, Response};
 
 use super::decode::{At, Fault, Faults, Place};
 use super::problem::Problem;
+use crate::report::readable;
 use crate::service::ServiceError;
 
 /// After how long to try again when all places are taken.
 const BUSY_RETRY: Duration = Duration::from_secs(1);
+
+/// After how long to try again when somebody has to mend something first.
+const MENDING_RETRY: Duration = Duration::from_secs(30);
+
+/// What a 415 for an encoding says may be sent (RFC 9110, section 12.5.3).
+const IDENTITY_ONLY: (HeaderName, HeaderValue) = (ACCEPT_ENCODING, HeaderValue::from_static("identity"));
 
 /// Everything a request can end in other than its answer.
 #[derive(Debug)]
@@ -21,6 +29,8 @@ pub enum ApiError {
     Invalid(Faults),
     /// The body's media type is not JSON.
     UnsupportedMediaType,
+    /// The body is compressed or otherwise encoded.
+    EncodedBody,
     /// The body is larger than configured.
     TooLarge {
         /// The largest body, bytes.
@@ -69,6 +79,10 @@ impl ApiError {
             Self::UnsupportedMediaType => {
                 let detail = "The body must be JSON; send it with the header Content-Type: application/json.";
                 Problem::new(S::UNSUPPORTED_MEDIA_TYPE, "unsupported_media_type", detail)
+            }
+            Self::EncodedBody => {
+                let detail = "The body must come as it is, without a Content-Encoding; compressed bodies are not read.";
+                Problem::new(S::UNSUPPORTED_MEDIA_TYPE, "unsupported_encoding", detail).with_header(IDENTITY_ONLY)
             }
             Self::TooLarge { limit } => {
                 let detail = format!(
@@ -122,8 +136,9 @@ fn service_problem(error: ServiceError) -> Problem {
         }
         ServiceError::TooSlow { budget } => {
             let detail = format!(
-                "The answer was not ready within {} s. Try again later, ask for fewer dates and thresholds, or raise \
-                 compute.budget_seconds.",
+                "The answer was not ready within {} s. Check rates (they are per day), degrees and dates for their \
+                 orders of magnitude, ask for fewer dates and thresholds, try again when less is asked at once, or \
+                 raise compute.budget_seconds.",
                 budget.as_secs()
             );
             Problem::new(S::SERVICE_UNAVAILABLE, "too_slow", detail).retry_after(budget.max(BUSY_RETRY))
@@ -134,12 +149,13 @@ fn service_problem(error: ServiceError) -> Problem {
             faults.add(&At::ROOT.field("arrivals"), "needed with one snapshot, as in {\"per_day\": 42.0}");
             Problem::new(S::UNPROCESSABLE_ENTITY, "arrivals_required", detail).with_faults(faults)
         }
-        ServiceError::NotIdentified(why) => Problem::new(S::UNPROCESSABLE_ENTITY, "not_identified", why),
-        ServiceError::Impossible(why) => Problem::new(S::UNPROCESSABLE_ENTITY, "impossible", why),
+        ServiceError::NotIdentified(why) => Problem::new(S::UNPROCESSABLE_ENTITY, "not_identified", readable(&why)),
+        ServiceError::Impossible(why) => Problem::new(S::UNPROCESSABLE_ENTITY, "impossible", readable(&why)),
         ServiceError::NotConverged(why) => {
             let detail = format!(
-                "{why}. Check the counts for outliers, name a simpler model (uniform or preferential), or give the mix \
-                 in fixed."
+                "{}. The numbers could not be computed to the stated accuracy; check rates (they are per day), \
+                 degrees and dates for their orders of magnitude.",
+                readable(&why)
             );
             Problem::new(S::UNPROCESSABLE_ENTITY, "not_converged", detail)
         }
@@ -151,6 +167,13 @@ fn service_problem(error: ServiceError) -> Problem {
             let detail = "The database is busy; try again shortly.";
             Problem::new(S::SERVICE_UNAVAILABLE, "store_busy", detail)
                 .retry_after(BUSY_RETRY)
+                .because(error.to_string())
+        }
+        error @ ServiceError::StoreUnavailable(_) => {
+            let detail = "The database cannot be used as it stands, so nothing can be kept; the log has the cause \
+                          under this request id. Try again when whoever runs this service has mended it.";
+            Problem::new(S::SERVICE_UNAVAILABLE, "store_unavailable", detail)
+                .retry_after(MENDING_RETRY)
                 .because(error.to_string())
         }
         error @ ServiceError::Store(_) => broken(error.to_string()),

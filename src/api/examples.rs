@@ -2,14 +2,34 @@
 
 use serde_json::{Value, json};
 
+/// `[degree, nodes]` pairs that growth at a constant mix leads to.
+const COUNTS: [(u64, u64); 17] = [
+    (0, 5400),
+    (1, 1075),
+    (2, 416),
+    (3, 209),
+    (4, 120),
+    (5, 76),
+    (6, 52),
+    (7, 37),
+    (8, 27),
+    (9, 21),
+    (10, 17),
+    (12, 24),
+    (15, 18),
+    (20, 13),
+    (30, 8),
+    (45, 3),
+    (70, 1),
+];
+
 /// A request that answers as it stands.
 pub fn forecast_request() -> Value {
     json!({
         "degree_kind": "received",
-        "snapshots": [{"as_of": "2026-06-01", "degree_counts": [[0, 5400], [1, 2210], [2, 990], [40, 3]]}],
+        "snapshots": [{"as_of": "2026-06-01", "degree_counts": COUNTS}],
         "arrivals": {"per_day": 42.0},
-        "links_per_arrival": 3.1,
-        "thresholds": [10, 100, 1000],
+        "thresholds": [5, 10, 50],
         "dates": ["2026-12-01", "2027-06-01"],
         "label": "Heronsgate followers"
     })
@@ -19,8 +39,7 @@ pub fn forecast_request() -> Value {
 pub fn fit_request() -> Value {
     json!({
         "degree_kind": "received",
-        "snapshots": [{"as_of": "2026-06-01", "degree_counts": [[0, 5400], [1, 2210], [2, 990], [40, 3]]}],
-        "links_per_arrival": 3.1,
+        "snapshots": [{"as_of": "2026-06-01", "degree_counts": COUNTS}],
         "label": "Heronsgate followers"
     })
 }

@@ -26,6 +26,13 @@ pub fn run_id(text: &str) -> Result<Uuid, ApiError> {
 /// The query's parameters, each known and given once.
 fn parameters(uri: &Uri, known: &[&str], faults: &mut Faults) -> Vec<(String, String)> {
     let pairs = decode_query::<Vec<(String, String)>>(uri).unwrap_or_default();
+    if !is_utf8(uri.query().unwrap_or_default()) {
+        // The decoder puts the replacement character where there is none, which would look for what nobody asked.
+        let named = pairs.iter().find(|(name, value)| name.contains('\u{fffd}') || value.contains('\u{fffd}'));
+        let name = named.map(|(name, _)| name.chars().take(60).collect()).unwrap_or_default();
+        let detail = "what its percent signs stand for is not UTF-8".to_owned();
+        faults.push(Fault { place: Place::Query(name), detail });
+    }
     for (i, (name, _)) in pairs.iter().enumerate() {
         let mut fault = |detail| faults.push(Fault { place: Place::Query(name.chars().take(60).collect()), detail });
         if !known.contains(&name.as_str()) {
@@ -35,6 +42,21 @@ fn parameters(uri: &Uri, known: &[&str], faults: &mut Faults) -> Vec<(String, St
         }
     }
     pairs
+}
+
+/// Whether a query is UTF-8 once its percent signs are decoded.
+fn is_utf8(query: &str) -> bool {
+    let (mut bytes, mut rest) = (Vec::with_capacity(query.len()), query.as_bytes());
+    while let Some((&byte, after)) = rest.split_first() {
+        let hex = after.get(..2).and_then(|digits| u8::from_str_radix(std::str::from_utf8(digits).ok()?, 16).ok());
+        let (decoded, taken) = match hex {
+            Some(decoded) if byte == b'%' => (decoded, 3),
+            _ => (byte, 1),
+        };
+        bytes.push(decoded);
+        rest = rest.get(taken..).unwrap_or_default();
+    }
+    std::str::from_utf8(&bytes).is_ok()
 }
 
 fn decode_query<T: DeserializeOwned>(uri: &Uri) -> Option<T> {

@@ -29,9 +29,11 @@ pub fn routes() -> OpenApiRouter<AppState> {
     path = "/v1/forecasts",
     tag = "forecasts",
     params(
-        ("format" = Option<String>, Query, description = "json or csv; goes before Accept"),
+        ("format" = inline(Option<ResultFormat>), Query, description = "Goes before Accept"),
         ("Idempotency-Key" = Option<String>, Header,
-            description = "Requests with the same key and body are one and the same: the run is made once."),
+            min_length = 1, max_length = 255,
+            description = "Requests with the same key and body are one and the same: the run is made once. Bodies are \
+                           the same when their bytes are. Deleting the run frees its key."),
     ),
     request_body(content = ForecastRequestBody, content_type = "application/json", example = examples::forecast_request),
     responses(
@@ -50,7 +52,7 @@ pub fn routes() -> OpenApiRouter<AppState> {
         (status = 409, description = "The key came before with another body", body = Problem,
             content_type = "application/problem+json"),
         (status = 413, description = "The body is too large", body = Problem, content_type = "application/problem+json"),
-        (status = 415, description = "The body is not announced as JSON", body = Problem,
+        (status = 415, description = "The body is not announced as JSON, or is compressed", body = Problem,
             content_type = "application/problem+json"),
         (status = 422, description = "Well formed, but no forecast follows from it; the detail says what would help",
             body = Problem, content_type = "application/problem+json"),
@@ -81,7 +83,7 @@ async fn create_forecast(
     tag = "forecasts",
     params(
         ("id" = String, Path, description = "Id of the run"),
-        ("format" = Option<String>, Query, description = "json or csv; goes before Accept"),
+        ("format" = inline(Option<ResultFormat>), Query, description = "Goes before Accept"),
         ("If-None-Match" = Option<String>, Header, description = "Answer 304 when the run still has this ETag"),
     ),
     responses(
@@ -122,7 +124,7 @@ async fn get_forecast(
         ("network" = Option<String>, Query, description = "Only runs of this tracked network"),
         ("label" = Option<String>, Query, description = "Only runs with this label"),
         ("limit" = Option<u32>, Query, description = "At most this many, up to 200; 50 when left out", minimum = 1, maximum = 200),
-        ("cursor" = Option<String>, Query, description = "Where to go on, from the Link of the page before"),
+        ("cursor" = Option<Uuid>, Query, description = "Where to go on, from the Link of the page before"),
     ),
     responses(
         (status = 200, description = "A page of runs", body = RunPage, headers(

@@ -3,7 +3,7 @@
 use std::time::Instant;
 
 use axum::extract::{MatchedPath, Request};
-use axum::http::{HeaderMap, HeaderName, HeaderValue, Method, header};
+use axum::http::{HeaderMap, HeaderName, HeaderValue, Method, StatusCode, header};
 use axum::middleware::Next;
 use axum::response::Response;
 use metrics::{counter, histogram};
@@ -56,7 +56,10 @@ fn complete_problem(response: &mut Response, id: &str, path: &str) {
         Some(Pending(problem)) => problem.completed(id, path),
         None => Problem::of_status(status).completed(id, path),
     };
-    if status.is_server_error() {
+    if status == StatusCode::SERVICE_UNAVAILABLE {
+        // Turned away under load, or with a database to be mended: nothing of ours is broken.
+        tracing::warn!(code = problem.code(), cause = problem.cause(), "turned away");
+    } else if status.is_server_error() {
         tracing::error!(code = problem.code(), cause = problem.cause(), "failed");
     } else {
         tracing::debug!(code = problem.code(), detail = problem.detail(), "refused");

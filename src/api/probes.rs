@@ -24,11 +24,10 @@ async fn livez() -> Response {
 
 /// Can it serve requests?
 ///
-/// The database answers and its tables are those of this version.
+/// The database answers, its tables are those of this version, and it can be written.
 #[utoipa::path(get, path = "/readyz", tag = "operation", responses(
     (status = 200, description = "It can", body = String, content_type = "text/plain"),
-    (status = 500, description = "The database fails", body = Problem, content_type = "application/problem+json"),
-    (status = 503, description = "Not now", body = Problem, content_type = "application/problem+json"),
+    (status = 503, description = "Not now: the database cannot be read or written, or its tables are not those of this version", body = Problem, content_type = "application/problem+json"),
 ))]
 async fn readyz(State(state): State<AppState>) -> Result<Response, ApiError> {
     state.service.check_ready().await?;

@@ -4,7 +4,7 @@ use std::sync::Arc;
 use std::time::Duration;
 
 use axum::body::Body;
-use axum::http::{HeaderValue, StatusCode, header};
+use axum::http::{HeaderName, HeaderValue, StatusCode, header};
 use axum::response::{IntoResponse, Response};
 use serde::Serialize;
 use utoipa::ToSchema;
@@ -41,6 +41,9 @@ pub struct Problem {
     #[serde(skip)]
     #[schema(ignore)]
     retry_after: Option<Duration>,
+    #[serde(skip)]
+    #[schema(ignore)]
+    extra_header: Option<(HeaderName, HeaderValue)>,
     #[serde(skip)]
     #[schema(ignore)]
     cause: Option<String>,
@@ -80,6 +83,7 @@ impl Problem {
             request_id: String::new(),
             errors: Vec::new(),
             retry_after: None,
+            extra_header: None,
             cause: None,
         }
     }
@@ -115,6 +119,12 @@ impl Problem {
     /// Adds when to try again.
     pub fn retry_after(mut self, wait: Duration) -> Self {
         self.retry_after = Some(wait);
+        self
+    }
+
+    /// Adds a header that belongs to the status.
+    pub fn with_header(mut self, header: (HeaderName, HeaderValue)) -> Self {
+        self.extra_header = Some(header);
         self
     }
 
@@ -177,6 +187,7 @@ impl IntoResponse for Problem {
         if let Some(wait) = self.retry_after {
             response.headers_mut().insert(header::RETRY_AFTER, HeaderValue::from(wait.as_secs().max(1)));
         }
+        response.headers_mut().extend(self.extra_header.clone());
         response.extensions_mut().insert(Pending(Arc::new(self)));
         response
     }

@@ -14,6 +14,7 @@ pub use schema::{
 use super::decode::{At, Faults, Object, object, real, text, whole};
 use crate::config::LimitsConfig;
 use crate::model::{ArrivalPlan, AttachmentMix, DegreeKind, EntryDegrees, GrowthParameters, ParameterFault};
+use crate::report::readable;
 use crate::service::{FitInputs, FitRequest, ForecastInputs, Label, MAX_SEED, Model, ModelChoice, OriginRequest};
 
 /// Fields of a fit's body.
@@ -126,7 +127,7 @@ fn fixed_mix(raw: &RawValue, faults: &mut Faults) -> Option<AttachmentMix> {
     let share = real(body.required("preferential_share", &at, faults)?, share_at, faults)?;
     let mix = AttachmentMix::new(share);
     if mix.is_none() {
-        faults.add(&share_at, format!("a share lies between 0 and 1, not at {share}"));
+        faults.add(&share_at, readable(&format!("a share lies between 0 and 1, not at {share}")));
     }
     mix
 }
@@ -148,7 +149,7 @@ fn rate(body: &Object<'_>, name: &'static str, faults: &mut Faults) -> Option<f6
     match GrowthParameters::new(DegreeKind::Received, AttachmentMix::UNIFORM, arrivals, entry, value) {
         Ok(_) => Some(value),
         Err(fault) => {
-            faults.add(&at, ParameterFault { field: name, ..fault }.to_string());
+            faults.add(&at, readable(&ParameterFault { field: name, ..fault }.to_string()));
             None
         }
     }

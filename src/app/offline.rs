@@ -7,7 +7,8 @@ use std::path::Path;
 use super::{OutputFormat, Stop, print};
 use crate::api::{self, ApiError, Problem};
 use crate::config::Config;
-use crate::{report, service};
+use crate::report;
+use crate::service::{self, ServiceError};
 
 /// Answers the request in `file`.
 pub fn forecast(config: &Config, file: &Path, format: OutputFormat) -> Result<(), Stop> {
@@ -15,7 +16,10 @@ pub fn forecast(config: &Config, file: &Path, format: OutputFormat) -> Result<()
     let refused = |error: ApiError| Stop::Refused(in_words(&error.into_problem()));
     let inputs =
         api::read_json(&bytes, |raw, faults| api::read_forecast(raw, &config.limits, faults)).map_err(refused)?;
-    let answer = service::answer_at_once(&inputs).map_err(|error| refused(error.into()))?;
+    let answer = service::answer_at_once(&inputs, config.compute.budget()).map_err(|error| match error {
+        ServiceError::TooSlow { .. } => Stop::Failed(ApiError::from(error).into_problem().detail().to_owned()),
+        other => refused(other.into()),
+    })?;
     let text = match format {
         OutputFormat::Table => report::forecast_table(&answer),
         OutputFormat::Csv => report::forecast_csv(&answer).map_err(|error| Stop::failed("writing CSV", error))?,

@@ -10,7 +10,7 @@ use tokio::sync::watch;
 use tokio::task::JoinHandle;
 use tokio::time::timeout;
 
-use super::Stop;
+use super::{Stop, connections};
 use crate::api::{AppState, router};
 use crate::config::Config;
 use crate::service::Service;
@@ -25,7 +25,7 @@ pub struct Running {
     address: SocketAddr,
     service: Service,
     stop: watch::Sender<bool>,
-    server: JoinHandle<std::io::Result<()>>,
+    server: JoinHandle<()>,
     upkeep: JoinHandle<()>,
     grace: Duration,
 }
@@ -63,14 +63,10 @@ pub async fn start(config: Config) -> Result<Running, Stop> {
     let service =
         Service::open(&config.database, &config.compute).await.map_err(|error| Stop::failed("the database", error))?;
     let upkeep = tokio::spawn(telemetry::keep_metrics_small(metrics.clone()));
-    let grace = config.http.shutdown_grace();
+    let (grace, head_timeout) = (config.http.shutdown_grace(), config.http.head_timeout());
     let state = AppState { service: service.clone(), http: Arc::new(config.http), limits: config.limits, metrics };
-    let (stop, mut stopped) = watch::channel(false);
-    let until = async move {
-        // An error means that the sender is gone, which is a stop as well.
-        let _ = stopped.wait_for(|&stop| stop).await;
-    };
-    let server = tokio::spawn(async move { axum::serve(listener, router(state)).with_graceful_shutdown(until).await });
+    let (stop, stopped) = watch::channel(false);
+    let server = tokio::spawn(connections::serve(listener, router(state), head_timeout, stopped));
     tracing::info!(%address, "serving");
     if !address.ip().is_loopback() {
         tracing::warn!("reachable from other machines, and there is no access control: put a gateway in front");

@@ -1,4 +1,4 @@
-//! A forecast as a table for a planner, at most a hundred columns wide.
+//! A forecast as a table for a planner: prose breaks at a hundred columns, rows are as wide as their figures.
 
 use super::csv::percent;
 use super::text::{figure, wrap};
@@ -6,7 +6,7 @@ use crate::service::{
     AttachmentModel, CountAnswer, DegreeAnswer, EvidenceKind, FitReport, ForecastAnswer, IntervalAnswer, TailAnswer,
 };
 
-/// Widest line.
+/// Widest line of prose.
 const WIDTH: usize = 100;
 /// Most intervals that fit on a line; of more, the narrowest and the widest are shown.
 const MOST_INTERVALS: usize = 2;
@@ -35,13 +35,18 @@ pub fn mix_in_words(fit: &FitReport) -> String {
     let percent = |value: f64| format!("{:.1} %", value * 100.0);
     let interval = match (share.low, share.high, share.level) {
         (Some(low), Some(high), Some(level)) => {
-            format!(" ({:.0} % interval {} to {})", level.0 * 100.0, percent(low.0), percent(high.0))
+            format!(" ({} % interval {} to {})", super::csv::percent(level.0), percent(low.0), percent(high.0))
         }
         _ => String::new(),
     };
+    // One of the ends is still an estimate when the data leave room beside it.
+    let with_share = |law: &str| match interval.as_str() {
+        "" => law.to_owned(),
+        _ => format!("{law} In proportion: {}{interval}.", percent(share.estimate.0)),
+    };
     let mix = match fit.model {
-        AttachmentModel::Uniform => "Links land on any node alike, however many it has.".to_owned(),
-        AttachmentModel::Preferential => "Links land on nodes in proportion to the links they have.".to_owned(),
+        AttachmentModel::Uniform => with_share("Links land on any node alike, however many it has."),
+        AttachmentModel::Preferential => with_share("Links land on nodes in proportion to the links they have."),
         AttachmentModel::Mix => format!(
             "{}{interval} of links land in proportion to the links a node has, the rest on any node alike.",
             percent(share.estimate.0)

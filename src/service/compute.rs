@@ -1,6 +1,6 @@
 //! From validated inputs to an answer: the core's results in the answers' words. No I/O.
 
-use std::time::Duration;
+use std::time::{Duration, Instant};
 
 use serde::Serialize;
 use serde::de::DeserializeOwned;
@@ -28,7 +28,7 @@ const FIT_CAUTIONS: [&str; 2] = [
 /// Something that can be asked: validated inputs that lead to an answer of one kind.
 pub trait Question: Send + 'static {
     /// Its answer.
-    type Answer: Serialize + DeserializeOwned + Send + 'static;
+    type Answer: Serialize + DeserializeOwned + std::fmt::Debug + Send + 'static;
     /// What its runs are kept as.
     const KIND: RunKind;
 
@@ -44,6 +44,11 @@ pub trait Question: Send + 'static {
     /// When a number is not finite, which no validated input holds.
     fn canonical(&self) -> Result<String, serde_json::Error>;
 
+    /// Why there can be no answer, as far as that is plain without computing.
+    fn refusal(&self) -> Option<OriginError> {
+        None
+    }
+
     /// Computes the answer; `cancelled` is asked between steps.
     ///
     /// # Errors
@@ -51,14 +56,15 @@ pub trait Question: Send + 'static {
     fn answer(&self, inputs_digest: String, cancelled: &dyn Fn() -> bool) -> Result<Self::Answer, OriginError>;
 }
 
-/// Answers a question here and now, keeping nothing.
+/// Answers a question here and now, within `budget`, keeping nothing.
 ///
 /// # Errors
-/// When the inputs have no answer.
-pub fn answer_at_once<Q: Question>(question: &Q) -> Result<Q::Answer, ServiceError> {
+/// When the inputs have no answer, or the budget ran out.
+pub fn answer_at_once<Q: Question>(question: &Q, budget: Duration) -> Result<Q::Answer, ServiceError> {
+    let begun = Instant::now();
     let canonical = question.canonical().map_err(|error| ServiceError::Broken(error.to_string()))?;
-    let answer = question.answer(inputs_digest(&canonical), &|| false);
-    answer.map_err(|failure| ServiceError::from_core(failure, Duration::ZERO))
+    let answer = question.answer(inputs_digest(&canonical), &|| begun.elapsed() >= budget);
+    answer.map_err(|failure| ServiceError::from_core(failure, budget))
 }
 
 /// Digest of canonical inputs as answers write it.
@@ -80,6 +86,11 @@ impl Question for ForecastInputs {
 
     fn canonical(&self) -> Result<String, serde_json::Error> {
         Self::canonical(self)
+    }
+
+    fn refusal(&self) -> Option<OriginError> {
+        let unknowable = self.request.arrivals.is_none() && self.request.evidence.snapshots().len() == 1;
+        unknowable.then_some(OriginError::ArrivalsRequired)
     }
 
     fn answer(&self, inputs_digest: String, cancelled: &dyn Fn() -> bool) -> Result<ForecastAnswer, OriginError> {

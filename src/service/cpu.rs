@@ -55,7 +55,7 @@ impl CpuPool {
         let cores = available_parallelism().map_or(1, usize::from);
         let workers = if config.workers == 0 { cores } else { config.workers };
         Self {
-            workers: Arc::new(Semaphore::new(workers)),
+            workers: Arc::new(Semaphore::new(workers.min(Semaphore::MAX_PERMITS))),
             places: Arc::new(Semaphore::new(workers.saturating_add(config.queue).min(Semaphore::MAX_PERMITS))),
             budget: config.budget(),
             stopping: Arc::new(AtomicBool::new(false)),
@@ -74,7 +74,7 @@ impl CpuPool {
     ) -> Result<T, ServiceError> {
         let too_slow = || ServiceError::TooSlow { budget: self.budget };
         let place = self.places.clone().try_acquire_owned().map_err(|_| ServiceError::Busy)?;
-        let (asked, deadline) = (Instant::now(), Instant::now() + self.budget);
+        let (asked, deadline) = (Instant::now(), far_enough(self.budget));
         let busy = Gauged::new();
         let worker = match timeout_at(deadline.into(), self.workers.clone().acquire_owned()).await {
             Ok(Ok(worker)) => worker,
@@ -114,6 +114,12 @@ impl CpuPool {
     pub fn stop(&self) {
         self.stopping.store(true, Ordering::Relaxed);
     }
+}
+
+/// The moment `budget` from now; a budget beyond what a clock can say is a year.
+fn far_enough(budget: Duration) -> Instant {
+    let now = Instant::now();
+    now.checked_add(budget).unwrap_or(now + Duration::from_secs(365 * 86_400))
 }
 
 #[cfg(test)]

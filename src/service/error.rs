@@ -47,6 +47,9 @@ pub enum ServiceError {
     /// Another process holds the database for too long.
     #[error(transparent)]
     StoreBusy(StoreError),
+    /// The database's file is gone, or can be neither read nor written as it stands.
+    #[error(transparent)]
+    StoreUnavailable(StoreError),
     /// The database failed.
     #[error(transparent)]
     Store(StoreError),
@@ -59,6 +62,8 @@ impl From<StoreError> for ServiceError {
     fn from(error: StoreError) -> Self {
         match error {
             StoreError::Busy(_) => Self::StoreBusy(error),
+            StoreError::NoTable(_) => Self::TablesOutdated,
+            StoreError::Gone { .. } | StoreError::Unusable(_) => Self::StoreUnavailable(error),
             _ => Self::Store(error),
         }
     }

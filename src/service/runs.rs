@@ -29,10 +29,15 @@ impl Service {
     /// When the inputs have no answer, the key belongs to another body, there is no free worker in time, or the
     /// database fails.
     pub async fn create<Q: Question>(&self, question: Q, claim: Option<KeyClaim>) -> Result<StoredRun, ServiceError> {
+        // Before anything is computed that could not be kept.
+        self.check_tables().await?;
         if let Some(claim) = &claim
             && let Some(earlier) = self.store.find_claim(Q::KIND, claim).await?
         {
             return replayed(earlier);
+        }
+        if let Some(refusal) = question.refusal() {
+            return Err(ServiceError::from_core(refusal, self.cpu.budget()));
         }
         let budget = self.cpu.budget();
         let run = self.cpu.run(move |cancelled| compute(&question, cancelled)).await?;
@@ -96,7 +101,7 @@ impl Service {
 /// Why a computation gave no run to keep.
 enum Failure {
     Unanswered(OriginError),
-    Unwritable(serde_json::Error),
+    Unwritable(String),
 }
 
 impl Failure {
@@ -109,7 +114,7 @@ impl Failure {
 }
 
 fn compute<Q: Question>(question: &Q, cancelled: &dyn Fn() -> bool) -> Result<NewRun, Failure> {
-    let inputs = question.canonical().map_err(Failure::Unwritable)?;
+    let inputs = question.canonical().map_err(|error| Failure::Unwritable(error.to_string()))?;
     let digest = inputs_digest(&inputs);
     let answer = question.answer(digest.clone(), cancelled).map_err(Failure::Unanswered)?;
     let id = Uuid::now_v7();
@@ -122,7 +127,8 @@ fn compute<Q: Question>(question: &Q, cancelled: &dyn Fn() -> bool) -> Result<Ne
         })
         .unwrap_or_else(Timestamp::now);
     let document = Document { id, created_at: created_at.to_string(), network: None, answer: &answer };
-    let document = serde_json::to_string(&document).map_err(Failure::Unwritable)?;
+    let document = serde_json::to_string(&document)
+        .map_err(|error| Failure::Unwritable(format!("{error}: {}", place_of_no_number(&answer))))?;
     Ok(NewRun {
         id,
         kind: Q::KIND,
@@ -135,6 +141,16 @@ fn compute<Q: Question>(question: &Q, cancelled: &dyn Fn() -> bool) -> Result<Ne
         document,
         inputs,
     })
+}
+
+/// Where in an answer a number is not finite: the text around the first such place.
+fn place_of_no_number(answer: &impl std::fmt::Debug) -> String {
+    const CONTEXT_CHARS: usize = 200;
+    let text = format!("{answer:?}");
+    let first = ["(NaN)", "(inf)", "(-inf)"].iter().filter_map(|sign| text.find(sign)).min().unwrap_or(0);
+    let before = text.get(..first).unwrap_or_default();
+    let start = before.char_indices().rev().nth(CONTEXT_CHARS).map_or(0, |(at, _)| at);
+    text.get(start..).unwrap_or_default().chars().take(CONTEXT_CHARS + 20).collect()
 }
 
 fn replayed(earlier: Inserted) -> Result<StoredRun, ServiceError> {

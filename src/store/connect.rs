@@ -3,9 +3,12 @@
 use std::str::FromStr;
 use std::time::Duration;
 
+use sqlx::Connection;
 use sqlx::migrate::Migrator;
 use sqlx::sqlite::{SqliteConnectOptions, SqliteJournalMode, SqlitePoolOptions, SqliteSynchronous};
+use tokio::time::timeout;
 
+use super::file::DatabaseFile;
 use super::{Store, StoreError};
 use crate::config::DatabaseConfig;
 
@@ -13,6 +16,8 @@ static MIGRATOR: Migrator = sqlx::migrate!("./migrations");
 
 /// Longest wait for a free connection.
 const ACQUIRE_TIMEOUT: Duration = Duration::from_secs(10);
+/// Longest wait of a trial write: a probe that waits for a lock is no use as a probe.
+const TRIAL_TIMEOUT: Duration = Duration::from_secs(1);
 
 impl Store {
     /// Opens the database, creating the file when it is missing; the tables are left as they are.
@@ -29,11 +34,15 @@ impl Store {
             .busy_timeout(Duration::from_millis(config.busy_timeout_ms))
             .foreign_keys(true)
             .synchronous(SqliteSynchronous::Full);
+        let path = options.get_filename().to_owned();
+        if let Some(folder) = path.parent().filter(|folder| !folder.as_os_str().is_empty() && !folder.is_dir()) {
+            return Err(address_fault(format!("the folder {} does not exist; make it first", folder.display())));
+        }
         let writing = options.clone().create_if_missing(true).journal_mode(SqliteJournalMode::Wal);
         let write = pool(1).connect_with(writing).await.map_err(|error| address_fault(error.to_string()))?;
         // Opened after the writer, which creates the file and its write-ahead log.
         let read = pool(config.readers).connect_with(options.create_if_missing(false).read_only(true)).await?;
-        Ok(Self { write, read })
+        Ok(Self { write, read, file: DatabaseFile::at(&path)? })
     }
 
     /// Brings the tables up to date.
@@ -47,16 +56,37 @@ impl Store {
     /// Whether the database answers and its tables are those of this version.
     ///
     /// # Errors
-    /// When it does not answer.
+    /// When it does not answer, or its file is gone.
     pub async fn is_current(&self) -> Result<bool, StoreError> {
-        let known = MIGRATOR.iter().map(|migration| migration.version).max();
-        let found: Result<Option<i64>, sqlx::Error> =
-            sqlx::query_scalar("SELECT max(version) FROM _sqlx_migrations WHERE success").fetch_one(&self.read).await;
-        match found {
-            Ok(version) => Ok(version == known),
-            // The table is made by the first migration.
-            Err(sqlx::Error::Database(error)) if error.message().contains("no such table") => Ok(false),
-            Err(error) => Err(error.into()),
+        self.file.check()?;
+        match self.table_version().await {
+            Ok(version) => Ok(version == MIGRATOR.iter().map(|migration| migration.version).max()),
+            Err(StoreError::NoTable(_)) => Ok(false),
+            Err(error) => Err(error),
+        }
+    }
+
+    async fn table_version(&self) -> Result<Option<i64>, StoreError> {
+        let mut connection = self.read.acquire().await?;
+        // Names each table there is: a missing one fails here, before anything is computed for it.
+        sqlx::query("SELECT 1 FROM runs LEFT JOIN idempotency_keys ON run_id = runs.id LIMIT 1")
+            .fetch_optional(&mut *connection)
+            .await?;
+        let version = sqlx::query_scalar("SELECT max(version) FROM _sqlx_migrations WHERE success");
+        Ok(version.fetch_one(&mut *connection).await?)
+    }
+
+    /// Takes the lock of a write and gives it back.
+    ///
+    /// # Errors
+    /// When the file cannot be written, or another process holds the lock.
+    pub async fn try_write(&self) -> Result<(), StoreError> {
+        // The writer is at work: proof enough.
+        let Some(mut writer) = self.write.try_acquire() else { return Ok(()) };
+        let trial = async { writer.begin_with("BEGIN IMMEDIATE").await?.rollback().await };
+        match timeout(TRIAL_TIMEOUT, trial).await {
+            Ok(outcome) => Ok(outcome?),
+            Err(_) => Err(StoreError::Busy(sqlx::Error::PoolTimedOut)),
         }
     }
 

@@ -144,8 +144,9 @@ impl Store {
     /// Keeps a run, and its key with it, or finds what the key already led to.
     ///
     /// # Errors
-    /// When the database fails; then nothing was kept.
+    /// When the database fails; then nothing was kept. When its file is gone; then nothing is where anybody finds it.
     pub async fn insert_run(&self, run: &NewRun, claim: Option<&KeyClaim>) -> Result<Inserted, StoreError> {
+        self.file.check()?;
         let mut transaction = self.write.begin_with("BEGIN IMMEDIATE").await?;
         if let Some(claim) = claim
             && let Some(earlier) = claimed(&mut transaction, run.kind, claim).await?
@@ -178,6 +179,8 @@ impl Store {
                 .await?;
         }
         transaction.commit().await?;
+        // Once more: the file may have gone in between.
+        self.file.check()?;
         Ok(Inserted::Kept)
     }
 
@@ -186,6 +189,7 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn find_claim(&self, kind: RunKind, claim: &KeyClaim) -> Result<Option<Inserted>, StoreError> {
+        self.file.check()?;
         let mut connection = self.read.acquire().await?;
         claimed(&mut connection, kind, claim).await
     }
@@ -195,6 +199,7 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn find_run(&self, kind: RunKind, id: Uuid) -> Result<Option<StoredRun>, StoreError> {
+        self.file.check()?;
         let row: Option<RunRow> =
             sqlx::query_as("SELECT id, created_at, tag, document FROM runs WHERE id = $1 AND kind = $2")
                 .bind(id.to_string())
@@ -209,6 +214,7 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn find_tag(&self, kind: RunKind, id: Uuid) -> Result<Option<String>, StoreError> {
+        self.file.check()?;
         let tag = sqlx::query_scalar("SELECT tag FROM runs WHERE id = $1 AND kind = $2")
             .bind(id.to_string())
             .bind(kind.as_str())
@@ -222,6 +228,7 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn list_runs(&self, kind: RunKind, filter: &RunFilter) -> Result<Vec<RunSummary>, StoreError> {
+        self.file.check()?;
         // One text a combination, so that each finds its index.
         let mut query = QueryBuilder::<Sqlite>::new(
             "SELECT id, network, label, created_at, engine, seed, inputs_digest FROM runs WHERE kind = ",
@@ -246,6 +253,7 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn delete_run(&self, kind: RunKind, id: Uuid) -> Result<bool, StoreError> {
+        self.file.check()?;
         let done = sqlx::query("DELETE FROM runs WHERE id = $1 AND kind = $2")
             .bind(id.to_string())
             .bind(kind.as_str())

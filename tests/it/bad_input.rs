@@ -56,18 +56,20 @@ fn cases() -> Vec<Case> {
             "between 0",
         ),
         ("/links_per_arrival", json!(-0.5), "/links_per_arrival", "links_per_arrival must lie between 0"),
-        ("/links_per_arrival", json!(1e300), "/links_per_arrival", "between 0"),
+        ("/links_per_arrival", json!(1e300), "/links_per_arrival", "not 1e300"),
         ("/links_per_arrival", json!(true), "/links_per_arrival", "not a boolean"),
         ("/links_per_node_day", json!(-1), "/links_per_node_day", "links_per_node_day must"),
         ("/departures_per_node_day", json!([]), "/departures_per_node_day", "not an array"),
         ("/link_losses_per_link_day", json!(-1), "/link_losses_per_link_day", "between 0"),
         ("/entry_degrees", json!([[0, 0.5], [1, 0.4]]), "/entry_degrees", "add up"),
+        ("/entry_degrees", json!([]), "/entry_degrees", "empty"),
+        ("/entry_degrees", json!([[0, 0.3333], [1, 0.6666]]), "/entry_degrees", "more digits"),
         ("/entry_degrees", json!([[0, 1.5]]), "/entry_degrees/0", "between 0 and 1"),
         ("/entry_degrees", json!([[0, 0.5], [0, 0.5]]), "/entry_degrees/1", "twice"),
         ("/entry_degrees", json!([[0.5, 1]]), "/entry_degrees/0/0", "not a whole number"),
         ("/thresholds", json!([]), "/thresholds", "at least one"),
         ("/thresholds", json!([10, 0]), "/thresholds/1", "between 1"),
-        ("/thresholds", json!([9007199254740992u64]), "/thresholds/0", "between 1"),
+        ("/thresholds", json!([9007199254740992u64]), "/thresholds/0", "9007199254740991 (2^53 - 1)"),
         ("/thresholds", json!([1.5]), "/thresholds/0", "not a whole number"),
         ("/thresholds", json!([-5]), "/thresholds/0", "negative"),
         ("/thresholds", json!(["10"]), "/thresholds/0", "without quotes"),
@@ -76,9 +78,10 @@ fn cases() -> Vec<Case> {
         ("/dates", json!(["2026-07-01", "2026-05-01"]), "/dates/1", "not after the last snapshot"),
         ("/dates", json!(["2026-06-01"]), "/dates/0", "not after the last snapshot"),
         ("/dates", json!(["2526-06-01"]), "/dates/0", "more than"),
+        ("/dates", json!(["9999-12-31"]), "/dates/0", "out of range"),
         ("/dates", json!(["soon"]), "/dates/0", "no time"),
         ("/horizon", json!({"until": "2027-01-01", "every": "P1M"}), "", "not both"),
-        ("/levels", json!([0.5, 1.0]), "/levels/1", "strictly between"),
+        ("/levels", json!([0.5, 1.0]), "/levels/1", "at most 0.9999"),
         ("/levels", json!([]), "/levels", "at least one"),
         ("/levels", json!(["0.9"]), "/levels/0", "without quotes"),
         ("/model", json!("magic"), "/model", "auto"),
@@ -86,7 +89,7 @@ fn cases() -> Vec<Case> {
         ("/fixed", json!({"preferential_share": 1.01}), "/fixed/preferential_share", "between 0 and 1"),
         ("/fixed", json!({}), "/fixed", "missing"),
         ("/fixed", json!({"share": 0.5, "preferential_share": 0.5}), "/fixed/share", "no field"),
-        ("/seed", json!(-1), "/seed", "negative"),
+        ("/seed", json!(-1), "/seed", "seed starts at 0"),
         ("/seed", json!(9007199254740992u64), "/seed", "largest allowed"),
         ("/label", json!("a\u{0}b"), "/label", "NUL"),
         ("/label", json!("x".repeat(201)), "/label", "200"),
@@ -158,6 +161,33 @@ async fn all_faults_come_at_once() {
 }
 
 #[tokio::test]
+async fn each_wrong_threshold_is_told_and_a_needed_null_is_not_waved_through() {
+    let service = Service::start().await;
+    let text = forecast_body().to_string().replacen("[10,50]", "[0, 9007199254740992, 18446744073709551616, 1e300]", 1);
+    let answer = service.post_text("/v1/forecasts", text).await.expect_problem(400, "invalid_request");
+    let mut places = answer.places();
+    places.sort();
+    assert_eq!(places, ["/thresholds/0", "/thresholds/1", "/thresholds/2", "/thresholds/3"], "{}", answer.text);
+    assert!(!answer.text.contains("2^64"), "{}", answer.text);
+    let text = forecast_body().to_string().replacen("\"per_day\":50.0", "\"per_day\":null", 1);
+    let answer = service.post_text("/v1/forecasts", text).await.expect_problem(400, "invalid_request");
+    assert_eq!(answer.places(), ["/arrivals/per_day"]);
+    assert!(answer.text.contains("is needed") && !answer.text.contains("leave the field out"), "{}", answer.text);
+}
+
+#[tokio::test]
+async fn zero_has_one_spelling_in_the_digest() {
+    let service = Service::start().await;
+    let mut digests = Vec::new();
+    for zero in ["0", "-0", "-0.0"] {
+        let text = format!("{{\"departures_per_node_day\":{zero},{}", &fit_body().to_string()[1..]);
+        let run = service.post_text("/v1/fits", text).await.expect(201).json();
+        digests.push(run["inputs_digest"].clone());
+    }
+    assert!(digests.iter().all(|digest| *digest == digests[0]), "{digests:?}");
+}
+
+#[tokio::test]
 async fn thousands_of_faults_are_counted_not_listed() {
     let service = Service::start().await;
     let wrong: Vec<(u64, i64)> = (0..5000).map(|degree| (degree, -1)).collect();
@@ -221,6 +251,12 @@ async fn media_types() {
     }
     let bare = service.request(Method::POST, "/v1/fits").body(fit_body().to_string());
     answered(bare).await.expect_problem(415, "unsupported_media_type");
+    for (encoding, status) in [("gzip", 415), ("identity, br", 415), ("Identity", 201)] {
+        let request = service.request(Method::POST, "/v1/fits").header(CONTENT_TYPE, "application/json");
+        let answer = answered(request.header("content-encoding", encoding).body(fit_body().to_string())).await;
+        let answer = answer.expect(status);
+        assert_eq!(answer.header("accept-encoding"), if status == 415 { "identity" } else { "" });
+    }
     let run = post("application/json").await.expect(201);
     for accept in ["image/png", "text/html", "application/json;q=0"] {
         service.get_with(run.header("location"), "accept", accept).await.expect_problem(406, "not_acceptable");
@@ -244,7 +280,7 @@ async fn what_is_well_formed_but_has_no_answer() {
         json!([[1, u64::MAX]]),
     ] {
         for (pointer, value) in
-            [("/seed", json!(1)), ("/arrivals", json!({"per_day": 0})), ("/arrivals/per_day", json!(1e15))]
+            [("/arrivals/per_day", json!(50)), ("/arrivals", json!({"per_day": 0})), ("/arrivals/per_day", json!(1e15))]
         {
             let body =
                 changed(changed(forecast_body(), "/snapshots/0/degree_counts", counts.clone()), pointer, value.clone());
@@ -264,6 +300,10 @@ async fn unknown_routes_and_methods() {
     for id in ["none", "0", "a%00b", "01a231cd-6fbd-74cb-ab23-3d832b2bafba"] {
         service.get(&format!("/v1/forecasts/{id}")).await.expect_problem(404, "not_found");
     }
+    for query in ["label=%ff", "%ff=1", "label=a%C3"] {
+        service.get(&format!("/v1/fits?{query}")).await.expect_problem(400, "invalid_request");
+    }
+    service.get("/v1/fits?label=%C3%A9%25ff%2").await.expect(200);
     for (method, path, allowed) in [
         (Method::PUT, "/v1/forecasts", "POST"),
         (Method::POST, "/v1/forecasts/x", "DELETE"),

@@ -44,6 +44,6 @@ async fn a_given_mix_is_taken_as_given() {
     let service = Service::start().await;
     let body = changed(fit_body(), "/fixed", json!({"preferential_share": 0.25}));
     let run = service.post("/v1/fits", &body).await.expect(201).json();
-    assert!(run["fit"]["preferential_share"]["estimate"].is_number());
+    assert_eq!(run["fit"]["preferential_share"]["estimate"], 0.25);
     assert_eq!(run["network"], Value::Null);
 }

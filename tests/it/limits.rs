@@ -59,6 +59,30 @@ async fn a_body_that_does_not_come_is_not_waited_for() {
 }
 
 #[tokio::test(flavor = "multi_thread")]
+async fn a_head_that_does_not_come_is_not_waited_for() {
+    let service = Service::start_with(|config| config.http.head_timeout_seconds = 1).await;
+    let mut stream = TcpStream::connect(service.address()).unwrap();
+    stream.write_all(b"GET /livez HTTP/1.1\r\nHost: ").unwrap();
+    stream.set_read_timeout(Some(Duration::from_secs(10))).unwrap();
+    let mut rest = Vec::new();
+    stream.read_to_end(&mut rest).unwrap();
+    assert!(!String::from_utf8_lossy(&rest).contains("200 OK"));
+}
+
+#[tokio::test(flavor = "multi_thread")]
+async fn a_stop_does_not_wait_for_connections_that_ask_for_nothing() {
+    let service = Service::start().await;
+    let silent = TcpStream::connect(service.address()).unwrap();
+    let mut half = TcpStream::connect(service.address()).unwrap();
+    half.write_all(b"GET /livez HTTP/1.1\r\nHost: ").unwrap();
+    service.get("/livez").await.expect(200);
+    let begun = std::time::Instant::now();
+    service.stop().await;
+    assert!(begun.elapsed() < Duration::from_secs(5), "{:?}", begun.elapsed());
+    drop((silent, half));
+}
+
+#[tokio::test(flavor = "multi_thread")]
 async fn a_full_house_turns_requests_away_but_stays_alive() {
     let service = Service::start_with(|config| config.http.max_in_flight = 1).await;
     let held = hanging_post(&service);

@@ -20,6 +20,10 @@ async fn it_is_not_ready_before_its_tables_are_made() {
     service.get("/livez").await.expect(200);
     let answer = service.get("/readyz").await.expect_problem(503, "not_ready");
     assert!(answer.text.contains("migrate"), "{}", answer.text);
+    for (path, body) in [("/v1/fits", fit_body()), ("/v1/forecasts", forecast_body())] {
+        service.post(path, &body).await.expect_problem(503, "not_ready");
+        service.get(path).await.expect_problem(503, "not_ready");
+    }
 }
 
 #[tokio::test]
@@ -85,12 +89,15 @@ async fn a_stop_finishes_what_was_accepted() {
         .collect();
     tokio::time::sleep(Duration::from_millis(30)).await;
     service.stop().await;
+    let mut answered = 0;
     for outcome in pending {
         // Either it was accepted and answered in full, or it came after the door was closed; never cut off with a 5xx.
         if let Ok(status) = outcome.await.unwrap() {
             assert_eq!(status, 201);
+            answered += 1;
         }
     }
+    assert!(answered > 0, "some were accepted before the stop");
     assert!(tokio::net::TcpStream::connect(address).await.is_err(), "nobody listens any more");
 }
 
@@ -110,4 +117,52 @@ async fn a_writer_elsewhere_is_waited_for_and_then_reported() {
     service.get("/v1/fits").await.expect(200);
     other.execute("ROLLBACK").await.unwrap();
     service.post("/v1/fits", &fit_body()).await.expect(201);
+}
+
+#[cfg(unix)]
+#[tokio::test]
+async fn a_database_that_was_removed_or_replaced_takes_no_run() {
+    let folder = tempfile::tempdir().unwrap();
+    let path = folder.path().join("moved.db");
+    let service = Service::start_with(|config| config.database.url = format!("sqlite://{}", path.display())).await;
+    let kept = service.post("/v1/fits", &fit_body()).await.expect(201);
+    let refused = async || {
+        service.get("/readyz").await.expect_problem(503, "store_unavailable");
+        service.post("/v1/fits", &fit_body()).await.expect_problem(503, "store_unavailable");
+        service.send(Method::DELETE, kept.header("location")).await.expect_problem(503, "store_unavailable");
+        service.get("/livez").await.expect(200);
+    };
+    let aside = folder.path().join("aside.db");
+    std::fs::rename(&path, &aside).unwrap();
+    refused().await;
+    std::fs::write(&path, "").unwrap();
+    refused().await;
+    std::fs::rename(&aside, &path).unwrap();
+    service.get("/readyz").await.expect(200);
+    service.post("/v1/fits", &fit_body()).await.expect(201);
+}
+
+#[tokio::test]
+async fn a_missing_table_is_told_before_anything_is_computed() {
+    let folder = tempfile::tempdir().unwrap();
+    let url = format!("sqlite://{}", folder.path().join("tables.db").display());
+    let service = Service::start_with(|config| config.database.url = url.clone()).await;
+    let mut other = SqliteConnection::connect(&url).await.unwrap();
+    other.execute("DROP TABLE idempotency_keys").await.unwrap();
+    service.get("/readyz").await.expect_problem(503, "not_ready");
+    service.post("/v1/fits", &fit_body()).await.expect_problem(503, "not_ready");
+}
+
+#[tokio::test]
+async fn a_lock_held_elsewhere_makes_it_not_ready() {
+    let folder = tempfile::tempdir().unwrap();
+    let url = format!("sqlite://{}", folder.path().join("locked.db").display());
+    let service = Service::start_with(|config| config.database.url = url.clone()).await;
+    let mut other = SqliteConnection::connect(&url).await.unwrap();
+    other.execute("BEGIN IMMEDIATE").await.unwrap();
+    service.get("/readyz").await.expect_problem(503, "store_busy");
+    other.execute("ROLLBACK").await.unwrap();
+    // The trial that was given up ends with the lock it waited for.
+    tokio::time::sleep(Duration::from_millis(500)).await;
+    service.get("/readyz").await.expect(200);
 }

@@ -39,6 +39,30 @@ impl<'p> At<'p> {
         At { above: Some(self), step: Step::Item(index) }
     }
 
+    /// Whether it is an item of an array.
+    pub fn is_item(&self) -> bool {
+        matches!(self.step, Step::Item(_))
+    }
+
+    /// What stands here, in words.
+    pub fn subject(&self) -> String {
+        match (self.step, self.above) {
+            (Step::Field(name), _) => name.to_owned(),
+            (Step::Item(_), Some(above)) => match above.nearest_field() {
+                Some(name) => format!("a number in {name}"),
+                None => "a number".to_owned(),
+            },
+            _ => "a number".to_owned(),
+        }
+    }
+
+    fn nearest_field(&self) -> Option<&str> {
+        match self.step {
+            Step::Field(name) => Some(name),
+            _ => self.above?.nearest_field(),
+        }
+    }
+
     /// The place as an RFC 6901 pointer.
     pub fn pointer(&self) -> String {
         let mut text = self.above.map(At::pointer).unwrap_or_default();

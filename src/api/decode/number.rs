@@ -7,16 +7,14 @@ use super::{At, Faults, advice_for, kind_of, quoted};
 /// Whole numbers written with a fraction or exponent are taken up to here, where they are still exact.
 const MAX_EXACT_FLOAT: f64 = 9_007_199_254_740_992.0; // 2^53
 
-/// The first whole number beyond 64 bits.
-const BEYOND_U64: f64 = 18_446_744_073_709_551_616.0; // 2^64
-
 /// A finite real number.
 pub fn real(raw: &RawValue, at: At<'_>, faults: &mut Faults) -> Option<f64> {
     let outcome = match raw.get().parse::<f64>() {
         // JSON's grammar was checked, so what starts like a number is one; "NaN" and "inf" are strings there.
-        Ok(value) if value.is_finite() => return Some(value),
+        // Adding 0 turns -0 into 0: they are one number, and must give one digest.
+        Ok(value) if value.is_finite() => return Some(value + 0.0),
         Ok(_) => format!("{} is too large for a 64-bit real number", quoted(raw)),
-        Err(_) => format!("a number is wanted here, not {}{}", kind_of(raw), advice_for(raw)),
+        Err(_) => format!("a number is wanted here, not {}{}", kind_of(raw), advice_for(raw, &at)),
     };
     faults.add(&at, outcome);
     None
@@ -24,36 +22,41 @@ pub fn real(raw: &RawValue, at: At<'_>, faults: &mut Faults) -> Option<f64> {
 
 /// A whole number from 0 to `most`; 2.0 and 1e3 are whole too.
 pub fn whole(raw: &RawValue, at: At<'_>, most: u64, faults: &mut Faults) -> Option<u64> {
-    match read_whole(raw) {
-        Ok(value) if value <= most => return Some(value),
-        Ok(value) => faults.add(&at, format!("{value} is above the largest allowed here, {most}")),
-        Err(detail) => faults.add(&at, detail),
+    match read_whole(raw, &at, most) {
+        Ok(value) => Some(value),
+        Err(detail) => {
+            faults.add(&at, detail);
+            None
+        }
     }
-    None
 }
 
-fn read_whole(raw: &RawValue) -> Result<u64, String> {
+fn read_whole(raw: &RawValue, at: &At<'_>, most: u64) -> Result<u64, String> {
     let text = raw.get();
+    let beyond = || {
+        let power = if most.trailing_ones() == most.count_ones() {
+            format!(" (2^{} - 1)", most.count_ones())
+        } else {
+            String::new()
+        };
+        format!("{} is above the largest allowed here, {most}{power}", quoted(raw))
+    };
     if text.bytes().all(|byte| byte.is_ascii_digit()) {
-        return text
-            .parse()
-            .map_err(|_| format!("{} is above the largest allowed, {} (2^64 - 1)", quoted(raw), u64::MAX));
+        return text.parse().ok().filter(|&value| value <= most).ok_or_else(beyond);
     }
     let Ok(value) = text.parse::<f64>() else {
-        return Err(format!("a whole number is wanted here, not {}{}", kind_of(raw), advice_for(raw)));
+        return Err(format!("a whole number is wanted here, not {}{}", kind_of(raw), advice_for(raw, at)));
     };
-    whole_from_float(value).ok_or_else(|| {
-        let why = if value < 0.0 {
-            "is negative; counts, degrees and thresholds start at 0"
-        } else if value >= BEYOND_U64 {
-            "is above the largest allowed, 18446744073709551615 (2^64 - 1)"
-        } else if value > MAX_EXACT_FLOAT {
-            "is too large to be told exactly in this form; write it with digits alone"
-        } else {
-            "is not a whole number"
-        };
-        format!("{} {why}", quoted(raw))
-    })
+    match whole_from_float(value) {
+        Some(value) if value <= most => Ok(value),
+        Some(_) => Err(beyond()),
+        None if value < 0.0 => Err(format!("{} is negative; {} starts at 0", quoted(raw), at.subject())),
+        None if value > most as f64 => Err(beyond()),
+        None if value > MAX_EXACT_FLOAT => {
+            Err(format!("{} is too large to be told exactly in this form; write it with digits alone", quoted(raw)))
+        }
+        None => Err(format!("{} is not a whole number", quoted(raw))),
+    }
 }
 
 /// The whole number that a float stands for, when it stands for exactly one.
@@ -108,7 +111,10 @@ mod tests {
         for text in ["1e400", "-1e400", "\"Infinity\"", "null"] {
             assert_eq!(real(serde_json::from_str(text).unwrap(), At::ROOT, &mut faults), None, "{text}");
         }
-        assert_eq!(real(serde_json::from_str("1e-400").unwrap(), At::ROOT, &mut faults), Some(0.0));
+        for text in ["1e-400", "-0", "-0.0", "-1e-400"] {
+            let value = real(serde_json::from_str(text).unwrap(), At::ROOT, &mut faults).unwrap();
+            assert_eq!(value.to_bits(), 0, "{text}");
+        }
         assert_eq!(faults.into_parts().0.len(), 4);
     }
 }

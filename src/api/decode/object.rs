@@ -25,11 +25,17 @@ impl<'r> Object<'r> {
 
     /// A field that must be there.
     pub fn required(&self, name: &str, at: &At<'_>, faults: &mut Faults) -> Option<&'r RawValue> {
-        let found = self.get(name);
-        if found.is_none() {
-            faults.add(at, format!("the field {name:?} is missing"));
+        match self.get(name) {
+            None => {
+                faults.add(at, format!("the field {name:?} is missing"));
+                None
+            }
+            Some(raw) if raw.get() == "null" => {
+                faults.add(&at.field(name), format!("the field {name:?} is needed; it is null here"));
+                None
+            }
+            found => found,
         }
-        found
     }
 }
 

@@ -7,28 +7,46 @@ use super::{At, Faults, text};
 
 /// Length of a bare date, `YYYY-MM-DD`.
 const BARE_DATE_CHARS: usize = 10;
+/// First and last day that RFC 3339 and the calendar's arithmetic both reach.
+const FIRST_DATE: &str = "0000-01-01";
+const LAST_DATE: &str = "9999-12-30";
 
 /// A time: RFC 3339, or a bare date that means 00:00 UTC.
 pub fn instant(raw: &RawValue, at: At<'_>, faults: &mut Faults) -> Option<Timestamp> {
     let text = text(raw, at, faults)?;
+    // The parser takes signed years and a zone's name in brackets too, RFC 3339 does not.
+    let plain = text.starts_with(|c: char| c.is_ascii_digit()) && !text.ends_with(']');
     let parsed = if text.len() == BARE_DATE_CHARS {
         text.parse::<Date>().and_then(|date| date.to_zoned(TimeZone::UTC)).map(|zoned| zoned.timestamp())
-    } else if text.ends_with(']') {
-        // The parser takes a zone's name in brackets, RFC 3339 does not.
-        Err(jiff::Error::from_args(format_args!("a zone's name in brackets is not part of RFC 3339")))
     } else {
         text.parse::<Timestamp>()
     };
-    match parsed {
-        Ok(time) => Some(time),
-        Err(error) => {
-            let shown: String = text.chars().take(60).collect();
-            let detail =
-                format!("{shown:?} is no time: {error}; write a date as 2026-12-01, or a time as 2026-12-01T08:30:00Z");
-            faults.add(&at, detail);
-            None
-        }
+    let found = parsed.ok().filter(|_| plain);
+    if found.is_none() {
+        let shown: String = text.chars().take(60).collect();
+        faults.add(&at, format!("{shown:?} {}", why_no_time(&text)));
     }
+    found
+}
+
+/// What is wrong with a text that is no time.
+fn why_no_time(text: &str) -> String {
+    let (day, rest) = text.split_at_checked(BARE_DATE_CHARS).unwrap_or((text, ""));
+    let shaped = day.len() == BARE_DATE_CHARS
+        && day.bytes().enumerate().all(|(i, byte)| if i == 4 || i == 7 { byte == b'-' } else { byte.is_ascii_digit() });
+    let offset = rest.ends_with(['Z', 'z']) || rest.contains(['+', '-']);
+    let why = if !shaped || text.ends_with(']') {
+        "is no time of RFC 3339"
+    } else if day.parse::<Date>().is_err() {
+        "is no time: the calendar has no such day"
+    } else if rest.is_empty() || day >= LAST_DATE {
+        return format!("is out of range: dates from {FIRST_DATE} to {LAST_DATE} are taken");
+    } else if !offset {
+        "is no time: a time of day needs its offset from UTC, such as Z"
+    } else {
+        "is no time: there is no such time of day or offset"
+    };
+    format!("{why}; write a date as 2026-12-01, or a time as 2026-12-01T08:30:00Z")
 }
 
 /// A repeating step: an ISO 8601 duration longer than nothing, such as P1M or P30D.
@@ -62,6 +80,30 @@ mod tests {
         for text in ["2026-02-30", "20261201", "2026-12-01T00:00:00", "2026-12-01T00:00:00Z[UTC]", "tomorrow", ""] {
             assert_eq!(read(text), None, "{text}");
         }
+    }
+
+    #[test]
+    fn what_is_no_time_is_told_in_plain_words() {
+        for (text, words) in [
+            ("9999-12-31", "out of range: dates from 0000-01-01 to 9999-12-30"),
+            ("9999-12-31T00:00:00Z", "out of range"),
+            ("2026-02-30", "no such day"),
+            ("2026-13-01T00:00:00Z", "no such day"),
+            ("2026-12-01T00:00:00", "offset from UTC"),
+            ("2026-12-01T25:00:00Z", "no such time of day"),
+            ("2026-12-01T00:00:00Z[UTC]", "RFC 3339"),
+            ("-000001-01-01", "RFC 3339"),
+            ("soon", "RFC 3339"),
+            ("", "RFC 3339"),
+            ("äöüäö-äö-äö", "RFC 3339"),
+        ] {
+            let mut faults = Faults::default();
+            let json = serde_json::to_string(text).unwrap();
+            assert_eq!(instant(serde_json::from_str(&json).unwrap(), At::ROOT, &mut faults), None, "{text}");
+            let detail = faults.into_parts().0.remove(0).detail;
+            assert!(detail.contains(words) && !detail.contains("Unix"), "{text}: {detail}");
+        }
+        assert_eq!(read("9999-12-30").unwrap(), "9999-12-30T00:00:00Z");
     }
 
     #[test]

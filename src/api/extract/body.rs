@@ -44,6 +44,9 @@ impl FromRequest<AppState> for JsonBody {
         if !is_json(request.headers()) {
             return Err(ApiError::UnsupportedMediaType);
         }
+        if !is_plain(request.headers()) {
+            return Err(ApiError::EncodedBody);
+        }
         let announced =
             request.headers().get(header::CONTENT_LENGTH).and_then(|value| value.to_str().ok()?.parse().ok());
         if announced.is_some_and(|length: u64| length > limit as u64) {
@@ -96,6 +99,15 @@ fn is_json(headers: &HeaderMap) -> bool {
         _ => true,
     });
     json && utf8
+}
+
+/// Whether the body is sent as it is: neither compressed nor otherwise encoded.
+fn is_plain(headers: &HeaderMap) -> bool {
+    let encodings = headers.get_all(header::CONTENT_ENCODING).iter();
+    encodings.flat_map(|value| value.as_bytes().split(|&byte| byte == b',')).all(|encoding| {
+        let encoding = encoding.trim_ascii();
+        encoding.is_empty() || encoding.eq_ignore_ascii_case(b"identity")
+    })
 }
 
 fn is_length_limit(error: &axum::Error) -> bool {

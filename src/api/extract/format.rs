@@ -3,13 +3,15 @@
 use axum::extract::FromRequestParts;
 use axum::http::request::Parts;
 use axum::http::{HeaderMap, header};
+use utoipa::ToSchema;
 
 use super::parameters;
 use crate::api::decode::{Fault, Faults, Place};
 use crate::api::{ApiError, AppState};
 
 /// The form a result is answered in.
-#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+#[derive(Debug, Clone, Copy, PartialEq, Eq, ToSchema)]
+#[schema(rename_all = "snake_case")]
 pub enum ResultFormat {
     /// The run as it is kept.
     Json,

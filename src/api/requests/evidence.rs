@@ -6,6 +6,7 @@ use serde_json::value::RawValue;
 use crate::api::decode::{At, Faults, Object, degree_counts, instant, list, object, real, text, whole};
 use crate::config::LimitsConfig;
 use crate::model::{DegreeKind, EntryDegrees, Evidence, MAX_DEGREE, Snapshot};
+use crate::report::readable;
 
 /// The evidence as far as it could be read.
 pub struct Reading {
@@ -98,17 +99,33 @@ fn entry_degrees(raw: &RawValue, faults: &mut Faults) -> Option<EntryDegrees> {
     if length > MOST_ENTRY_DEGREES {
         faults.add(&at, format!("{length} entry degrees are more than the {MOST_ENTRY_DEGREES} that are taken"));
     }
+    if length == 0 {
+        let detail = "entry_degrees is empty; write at least one [degree, share] pair, or leave the field out";
+        faults.add(&at, detail);
+        return None;
+    }
     if pairs.len() != length {
         return None;
     }
     let found = EntryDegrees::from_shares(&pairs);
     for fault in found.as_ref().err().into_iter().flatten() {
         match fault.index {
-            Some(index) => faults.add(&at.item(index), fault.detail.as_str()),
-            None => faults.add(&at, fault.detail.as_str()),
+            Some(index) => faults.add(&at.item(index), readable(&fault.detail)),
+            None => faults.add(&at, entry_sum_advice(&pairs, &fault.detail)),
         }
     }
     found.ok()
+}
+
+/// A fault of all the shares together, with what to do when they were only rounded.
+fn entry_sum_advice(pairs: &[(u64, f64)], detail: &str) -> String {
+    /// Shares this near to one altogether are meant to be one.
+    const ROUNDED: f64 = 1e-3;
+    let sum: f64 = pairs.iter().map(|&(_, share)| share).sum();
+    if (sum - 1.0).abs() <= ROUNDED {
+        return format!("{detail}; write the shares with more digits, or as counts divided by their sum");
+    }
+    readable(detail)
 }
 
 fn entry_pair(raw: &RawValue, at: At<'_>, faults: &mut Faults) -> Option<(u64, f64)> {

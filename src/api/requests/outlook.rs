@@ -5,7 +5,10 @@ use serde_json::value::RawValue;
 
 use crate::api::decode::{At, Faults, Object, every, instant, list, object, real, whole};
 use crate::config::LimitsConfig;
-use crate::model::{ArrivalPlan, ArrivalSegment, ForecastPlan, Levels, PlanFault, Thresholds, days_between};
+use crate::model::{
+    ArrivalPlan, ArrivalSegment, ForecastPlan, Levels, MAX_DEGREE, PlanFault, Thresholds, days_between,
+};
+use crate::report::readable;
 
 /// Most dates a horizon is spread over before it is refused; one more than a plan takes, so that the plan says why.
 const MOST_STEPS: i64 = 4_001;
@@ -27,7 +30,7 @@ pub fn arrivals(body: &Object<'_>, latest: Option<Timestamp>, faults: &mut Fault
     };
     let plan = ArrivalPlan::from_segments(&segments);
     for fault in plan.as_ref().err().into_iter().flatten() {
-        let detail = fault.detail.as_str();
+        let detail = readable(&fault.detail);
         match (segmented, fault.index) {
             (Some(_), Some(index)) => faults.add(&at.field("segments").item(index).field(fault.field), detail),
             _ => faults.add(&at.field(fault.field), detail),
@@ -106,8 +109,8 @@ fn note(fault: &PlanFault, stepped: bool, faults: &mut Faults) {
     let root = At::ROOT;
     let list = root.field(if stepped && fault.field == "dates" { "horizon" } else { fault.field });
     match fault.index {
-        Some(index) if !stepped => faults.add(&list.item(index), fault.detail.as_str()),
-        _ => faults.add(&list, fault.detail.as_str()),
+        Some(index) if !stepped => faults.add(&list.item(index), readable(&fault.detail)),
+        _ => faults.add(&list, readable(&fault.detail)),
     }
 }
 
@@ -116,14 +119,16 @@ fn thresholds(body: &Object<'_>, faults: &mut Faults) -> Option<Thresholds> {
     let at = root.field("thresholds");
     let raw = body.required("thresholds", &root, faults)?;
     let mut values = Vec::new();
-    let length =
-        list(raw, at, faults, |index, item, faults| values.extend(whole(item, at.item(index), u64::MAX, faults)))?;
-    if values.len() != length {
-        return None;
-    }
+    let mut complete = true;
+    list(raw, at, faults, |index, item, faults| {
+        let value = whole(item, at.item(index), MAX_DEGREE, faults);
+        complete &= value.is_some();
+        // In place of what is no threshold stands a sound one, so that the others are checked and keep their index.
+        values.push(value.unwrap_or(1));
+    })?;
     let found = Thresholds::new(&values);
     found.as_ref().err().into_iter().flatten().for_each(|fault| note(fault, false, faults));
-    found.ok()
+    found.ok().filter(|_| complete)
 }
 
 fn levels(body: &Object<'_>, faults: &mut Faults) -> Option<Levels> {
@@ -131,13 +136,16 @@ fn levels(body: &Object<'_>, faults: &mut Faults) -> Option<Levels> {
     let at = root.field("levels");
     let Some(raw) = body.get("levels") else { return Some(Levels::default()) };
     let mut values = Vec::new();
-    let length = list(raw, at, faults, |index, item, faults| values.extend(real(item, at.item(index), faults)))?;
-    if values.len() != length {
-        return None;
-    }
+    let mut complete = true;
+    list(raw, at, faults, |index, item, faults| {
+        let value = real(item, at.item(index), faults);
+        complete &= value.is_some();
+        // As with thresholds.
+        values.push(value.unwrap_or(0.5));
+    })?;
     let found = Levels::new(&values);
     found.as_ref().err().into_iter().flatten().for_each(|fault| note(fault, false, faults));
-    found.ok()
+    found.ok().filter(|_| complete)
 }
 
 fn dates(raw: &RawValue, faults: &mut Faults) -> Option<Vec<Timestamp>> {

@@ -2,7 +2,45 @@
 //! every fault's place; a test holds the two lists of fields against each other.
 
 use serde::Serialize;
+use serde_json::json;
 use utoipa::ToSchema;
+use utoipa::openapi::schema::{Array, ArrayBuilder, ObjectBuilder, SchemaType, Type};
+use utoipa::openapi::{KnownFormat, SchemaFormat};
+
+use crate::model::MAX_DEGREE;
+
+/// `[[degree, nodes], …]`
+fn degree_pairs() -> Array {
+    let pair = ArrayBuilder::new().items(whole(0)).min_items(Some(2)).max_items(Some(2));
+    let example = json!([[0, 5400], [1, 1075], [2, 416], [40, 3]]);
+    let says = "`[degree, nodes]` pairs in any order, no degree twice: so many nodes have exactly so many links.";
+    ArrayBuilder::new().items(pair).min_items(Some(1)).description(Some(says)).examples([example]).build()
+}
+
+/// `[[degree, share], …]`
+fn share_pairs() -> Array {
+    let number = ObjectBuilder::new().schema_type(SchemaType::Type(Type::Number)).minimum(Some(0));
+    let pair = ArrayBuilder::new().items(number).min_items(Some(2)).max_items(Some(2));
+    let says = "`[degree, share]` pairs: the degrees newcomers arrive with; the shares add up to 1. Read from the data \
+                when left out.";
+    let example = json!([[0, 0.9], [2, 0.1]]);
+    ArrayBuilder::new().items(pair).min_items(Some(1)).description(Some(says)).examples([example]).build()
+}
+
+/// Thresholds, each a degree.
+fn thresholds() -> Array {
+    let says =
+        "A hub is a node with at least this many links; one answer for each, in ascending order, repeats dropped.";
+    let item = whole(1).maximum(Some(MAX_DEGREE as f64));
+    ArrayBuilder::new().items(item).min_items(Some(1)).max_items(Some(1000)).description(Some(says)).build()
+}
+
+fn whole(least: u32) -> ObjectBuilder {
+    ObjectBuilder::new()
+        .schema_type(SchemaType::Type(Type::Integer))
+        .format(Some(SchemaFormat::KnownFormat(KnownFormat::Int64)))
+        .minimum(Some(least))
+}
 
 /// What a forecast is made from and what is asked of it. Unknown fields are refused. Give either `dates` or `horizon`.
 #[derive(Debug, Clone, PartialEq, Serialize, ToSchema)]
@@ -28,7 +66,7 @@ pub struct ForecastRequestBody {
     /// `[degree, share]` pairs: the degrees newcomers arrive with; the shares add up to 1. Read from the data when
     /// left out.
     #[serde(skip_serializing_if = "Option::is_none")]
-    #[schema(nullable = false, value_type = Vec<Vec<f64>>, min_items = 1)]
+    #[schema(schema_with = share_pairs)]
     pub entry_degrees: Option<Vec<(u64, f64)>>,
     /// Hazard that a node departs, per day.
     #[serde(skip_serializing_if = "Option::is_none")]
@@ -38,10 +76,11 @@ pub struct ForecastRequestBody {
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false, minimum = 0, maximum = 1e9, default = 0.0)]
     pub link_losses_per_link_day: Option<f64>,
-    /// A hub is a node with at least this many links; one answer for each.
-    #[schema(min_items = 1, max_items = 1000, value_type = Vec<u64>)]
+    /// A hub is a node with at least this many links; one answer for each, in ascending order, repeats dropped.
+    #[schema(schema_with = thresholds)]
     pub thresholds: Vec<u64>,
-    /// Dates to forecast, each after the newest snapshot: RFC 3339, or a bare date for 00:00 UTC.
+    /// Dates to forecast, each after the newest snapshot: RFC 3339, or a bare date for 00:00 UTC. Answered in
+    /// ascending order, repeats dropped.
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false, min_items = 1, max_items = 4000)]
     pub dates: Option<Vec<String>>,
@@ -57,7 +96,7 @@ pub struct ForecastRequestBody {
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false)]
     pub fixed: Option<FixedBody>,
-    /// Levels of the intervals, each strictly between 0 and 1; 0.5 and 0.9 when left out.
+    /// Levels of the intervals, each above 0 and at most 0.9999; 0.5 and 0.9 when left out.
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false, min_items = 1, max_items = 20)]
     pub levels: Option<Vec<f64>>,
@@ -87,7 +126,7 @@ pub struct FitRequestBody {
     /// `[degree, share]` pairs: the degrees newcomers arrive with; the shares add up to 1. Read from the data when
     /// left out.
     #[serde(skip_serializing_if = "Option::is_none")]
-    #[schema(nullable = false, value_type = Vec<Vec<f64>>, min_items = 1)]
+    #[schema(schema_with = share_pairs)]
     pub entry_degrees: Option<Vec<(u64, f64)>>,
     /// Link ends that land per present node and day, whoever arrives.
     #[serde(skip_serializing_if = "Option::is_none")]
@@ -137,7 +176,7 @@ pub struct SnapshotBody {
     #[schema(examples("2026-06-01"))]
     pub as_of: String,
     /// `[degree, nodes]` pairs in any order, no degree twice: so many nodes have exactly so many links.
-    #[schema(value_type = Vec<Vec<u64>>, min_items = 1, examples(json!([[0, 5400], [1, 2210], [2, 990], [40, 3]])))]
+    #[schema(schema_with = degree_pairs)]
     pub degree_counts: Vec<(u64, u64)>,
 }
 

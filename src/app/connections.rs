@@ -1,0 +1,73 @@
+//! Connections: accept, serve, and let go of those that ask for nothing.
+
+use std::sync::Arc;
+use std::sync::atomic::{AtomicUsize, Ordering};
+use std::time::Duration;
+
+use axum::Router;
+use axum::serve::Listener;
+use hyper::body::Incoming;
+use hyper::server::conn::http1;
+use hyper::service::{Service, service_fn};
+use hyper_util::rt::{TokioIo, TokioTimer};
+use hyper_util::service::TowerToHyperService;
+use tokio::net::{TcpListener, TcpStream};
+use tokio::sync::watch;
+use tokio::task::JoinSet;
+
+/// How long a connection without a request in work is kept after the stop: the time to flush its last answer.
+const FLUSH: Duration = Duration::from_millis(500);
+
+/// Serves until told to stop; returns when every connection has ended.
+pub async fn serve(mut listener: TcpListener, router: Router, head_timeout: Duration, mut stop: watch::Receiver<bool>) {
+    let mut open = JoinSet::new();
+    loop {
+        tokio::select! {
+            _ = stopped(&mut stop) => break,
+            // Waits and goes on when the system has no more connections to give.
+            (stream, _) = Listener::accept(&mut listener) => {
+                open.spawn(connection(stream, router.clone(), head_timeout, stop.clone()));
+            }
+            Some(_) = open.join_next() => {}
+        }
+    }
+    drop(listener);
+    while open.join_next().await.is_some() {}
+}
+
+/// Serves one connection. After the stop its request in work is finished; a request that has not come in full by then
+/// is not waited for.
+async fn connection(stream: TcpStream, router: Router, head_timeout: Duration, mut stop: watch::Receiver<bool>) {
+    let in_work = Arc::new(AtomicUsize::new(0));
+    let counted = in_work.clone();
+    let service = service_fn(move |request: hyper::Request<Incoming>| {
+        counted.fetch_add(1, Ordering::Relaxed);
+        let (answer, counted) = (TowerToHyperService::new(router.clone()).call(request), counted.clone());
+        async move {
+            let answer = answer.await;
+            counted.fetch_sub(1, Ordering::Relaxed);
+            answer
+        }
+    });
+    let serving = http1::Builder::new()
+        .timer(TokioTimer::new())
+        .header_read_timeout(head_timeout)
+        .serve_connection(TokioIo::new(stream), service);
+    tokio::pin!(serving);
+    tokio::select! {
+        // A connection that breaks is the client's affair.
+        _ = serving.as_mut() => return,
+        _ = stopped(&mut stop) => serving.as_mut().graceful_shutdown(),
+    }
+    loop {
+        tokio::select! {
+            _ = serving.as_mut() => return,
+            () = tokio::time::sleep(FLUSH) => if in_work.load(Ordering::Relaxed) == 0 { return },
+        }
+    }
+}
+
+async fn stopped(stop: &mut watch::Receiver<bool>) {
+    // An error means that the sender is gone, which is a stop as well.
+    let _ = stop.wait_for(|&stop| stop).await;
+}

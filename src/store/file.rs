@@ -1,0 +1,53 @@
+//! The database's file, watched: rows written into a file that was removed or replaced are on no disk anybody can find,
+//! and a connection opened later would read whatever stands in its place.
+
+use std::fs::Metadata;
+use std::path::{Path, PathBuf};
+
+use super::StoreError;
+
+/// The file that the connections have open.
+#[derive(Debug, Clone)]
+pub struct DatabaseFile {
+    path: PathBuf,
+    identity: Identity,
+}
+
+/// What tells one file from another under the same path.
+type Identity = (u64, u64);
+
+impl DatabaseFile {
+    /// The file that stands at `path` now.
+    ///
+    /// # Errors
+    /// When there is none.
+    pub fn at(path: &Path) -> Result<Self, StoreError> {
+        // The working folder may change, the file may not.
+        let path = std::path::absolute(path).unwrap_or_else(|_| path.to_owned());
+        let found = std::fs::metadata(&path).map_err(|_| StoreError::Gone { path: path.clone() })?;
+        Ok(Self { identity: identity(&found), path })
+    }
+
+    /// Checks that the file still stands at its path.
+    ///
+    /// # Errors
+    /// When it is gone, or another stands there.
+    pub fn check(&self) -> Result<(), StoreError> {
+        match std::fs::metadata(&self.path) {
+            Ok(found) if identity(&found) == self.identity => Ok(()),
+            _ => Err(StoreError::Gone { path: self.path.clone() }),
+        }
+    }
+}
+
+#[cfg(unix)]
+fn identity(found: &Metadata) -> Identity {
+    use std::os::unix::fs::MetadataExt;
+    (found.dev(), found.ino())
+}
+
+/// Elsewhere an open file can be neither removed nor replaced: that it stands there is enough.
+#[cfg(not(unix))]
+fn identity(_found: &Metadata) -> Identity {
+    (0, 0)
+}
