@@ -27,7 +27,7 @@ pub struct RunLine {
     network: Option<String>,
     /// Engine and version that computed it.
     engine: String,
-    /// Seed of everything random in it.
+    /// Seed of everything random in it, so far the samples behind the goodness of fit.
     seed: u64,
     /// Digest of the validated inputs.
     inputs_digest: String,

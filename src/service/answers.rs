@@ -29,7 +29,7 @@ pub struct ForecastAnswer {
     /// Engine and version that computed it.
     #[schema(examples("tailcast 0.1.0"))]
     pub engine: String,
-    /// Seed of everything random in it.
+    /// Seed of everything random in it, so far the samples behind the goodness of fit.
     pub seed: u64,
     /// Digest of the validated inputs in canonical form, seed and label left out. The same digest, seed and engine
     /// give the same fit and forecast, byte for byte.
@@ -70,7 +70,7 @@ pub struct FitAnswer {
     /// Engine and version that computed it.
     #[schema(examples("tailcast 0.1.0"))]
     pub engine: String,
-    /// Seed of everything random in it.
+    /// Seed of everything random in it, so far the samples behind the goodness of fit.
     pub seed: u64,
     /// Digest of the validated inputs in canonical form, seed and label left out.
     pub inputs_digest: String,

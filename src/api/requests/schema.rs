@@ -100,7 +100,7 @@ pub struct ForecastRequestBody {
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false, min_items = 1, max_items = 20)]
     pub levels: Option<Vec<f64>>,
-    /// Seed of everything random; 1 when left out.
+    /// Seed of everything random, so far the samples behind the goodness of fit; 1 when left out.
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false, maximum = 9007199254740991u64)]
     pub seed: Option<u64>,
@@ -148,7 +148,7 @@ pub struct FitRequestBody {
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false)]
     pub fixed: Option<FixedBody>,
-    /// Seed of everything random; 1 when left out.
+    /// Seed of everything random, so far the samples behind the goodness of fit; 1 when left out.
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false, maximum = 9007199254740991u64)]
     pub seed: Option<u64>,
