@@ -41,7 +41,7 @@ impl Accuracy {
 
 /// Contour points whose integrand is below this share of the peak add nothing in double precision.
 pub const CONTOUR_NEGLIGIBLE: f64 = 1e-17;
-/// Most points on half a contour before inversion gives up; the cases of the reference tables need at most a tenth of it.
+/// Most points on half a contour before inversion gives up; the 721 cases of the reference tables need at most 822.
 pub const CONTOUR_MAX_POINTS: usize = 1 << 13;
 /// Newton steps to the saddle point; bisection alone needs about 50 for full precision.
 pub const SADDLE_MAX_STEPS: usize = 80;
