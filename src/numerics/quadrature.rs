@@ -4,7 +4,7 @@ use std::sync::LazyLock;
 
 use gauss_quad::GaussLegendre;
 
-use super::tolerances::{Accuracy, QUADRATURE_MAX_DEPTH};
+use super::tolerances::{Accuracy, QUADRATURE_MAX_DEPTH, QUADRATURE_MAX_PANELS};
 
 /// Nodes of one panel.
 pub const PANEL_NODES: usize = 10;
@@ -63,7 +63,8 @@ fn lagrange(nodes: &[f64], j: usize, x: f64) -> f64 {
 /// Integrates `f` ≥ 0 over [a, b], halving panels until halves and whole agree.
 ///
 /// Formula: Gauss–Legendre with 10 nodes on each panel. A panel is accepted when its two halves add up to it within
-/// `accuracy` of `scale` plus the integral so far, or at the depth cap, 2⁻³⁰ of [a, b].
+/// `accuracy` of `scale` plus the integral so far, or at the caps: 2⁻³⁰ of [a, b], or 1,000
+/// splits.
 ///
 /// # Numerical notes
 /// `scale` is a lower bound of the quantity that the integral is added to (0 when it stands alone); it spares the work
@@ -86,14 +87,18 @@ pub fn integrate_adaptively<E>(
 ) -> Result<f64, E> {
     let whole = panel(a, b, f)?;
     let mut pending = vec![(a, b, whole, 0)];
-    let mut total = 0.0;
+    let (mut total, mut split) = (0.0, 0);
     while let Some((a, b, whole, depth)) = pending.pop() {
         let middle = 0.5 * (a + b);
         let (left, right) = (panel(a, middle, f)?, panel(middle, b, f)?);
         let error = (left + right - whole).abs();
-        if error <= accuracy.quadrature() * (scale + total + left + right) || depth >= QUADRATURE_MAX_DEPTH {
+        if error <= accuracy.quadrature() * (scale + total + left + right)
+            || depth >= QUADRATURE_MAX_DEPTH
+            || split >= QUADRATURE_MAX_PANELS
+        {
             total += left + right;
         } else {
+            split += 1;
             pending.push((middle, b, right, depth + 1));
             pending.push((a, middle, left, depth + 1));
         }

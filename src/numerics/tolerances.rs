@@ -53,6 +53,8 @@ pub const BRACKET_MAX_STEPS: usize = 200;
 
 /// Deepest splitting of one panel: 2⁻³⁰ of its length.
 pub const QUADRATURE_MAX_DEPTH: usize = 30;
+/// Most splits of one integral: a smooth integrand with one sharp edge takes about 30; more means noise that no splitting mends.
+pub const QUADRATURE_MAX_PANELS: usize = 1_000;
 
 /// Largest change of ln N and of ln K over one panel of the time mesh. With 10 Gauss–Legendre
 /// nodes a panel, the integrals of the totals are then good to about 10⁻¹³ (nearest pole of L/K one panel away).
