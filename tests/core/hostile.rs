@@ -40,7 +40,7 @@ fn check(count: &CountForecast) -> Result<(), TestCaseError> {
 }
 
 proptest! {
-    // The same cases every time: a rare one takes minutes in a single tail (DEVELOPERS.md), and must not decide a build.
+    // The same cases every time: a rare slow one (DEVELOPERS.md) must not decide a build.
     #![proptest_config(ProptestConfig { rng_seed: RngSeed::Fixed(20_260_601), ..ProptestConfig::with_cases(30) })]
     #[test]
     fn extreme_inputs_get_finite_answers_or_words(
