@@ -8,16 +8,20 @@ mod counts;
 mod entry;
 mod estimate;
 mod evidence;
+mod link_events;
 mod parameters;
 mod plan;
+mod transitions;
 
 pub use arrivals::{ArrivalFault, ArrivalPlan, ArrivalSegment};
 pub use counts::{CountsFault, CountsFaultKind, DegreeCounts, DegreeKind, MAX_DEGREE};
 pub use entry::{EntryDegrees, EntryFault};
 pub use estimate::{Estimate, Interval, Warning};
 pub use evidence::{Evidence, EvidenceFault, Snapshot};
+pub use link_events::{AttachmentCell, AttachmentWindow, LinkEvents, LinkEventsFault, RatioClass};
 pub use parameters::{AttachmentMix, GrowthParameters, ParameterFault};
 pub use plan::{ForecastPlan, Levels, PlanFault, Thresholds};
+pub use transitions::{Move, Transitions, TransitionsFault};
 
 /// Days from `origin` to `time`, as a real number; negative when `time` is earlier.
 pub fn days_between(origin: jiff::Timestamp, time: jiff::Timestamp) -> f64 {
