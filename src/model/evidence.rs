@@ -4,7 +4,7 @@ use std::fmt;
 
 use jiff::Timestamp;
 
-use super::{DegreeCounts, DegreeKind, EntryDegrees, days_between};
+use super::{DegreeCounts, DegreeKind, EntryDegrees, LinkEvents, Transitions, days_between};
 
 /// Most snapshots in one piece of evidence.
 const MAX_SNAPSHOTS: usize = 1_000;
@@ -18,18 +18,21 @@ pub struct Snapshot {
     pub counts: DegreeCounts,
 }
 
-/// Snapshots of one network, oldest first, each later than the one before; never empty.
+/// What is known of one network: snapshots, oldest first, each later than the one before, never empty; where known, the
+/// transitions between dates and the attachment statistics of its link list.
 #[derive(Debug, Clone, PartialEq)]
 pub struct Evidence {
     kind: DegreeKind,
     snapshots: Vec<Snapshot>,
     entry: Option<EntryDegrees>,
+    transitions: Vec<Transitions>,
+    link_events: Option<LinkEvents>,
 }
 
-/// What is wrong with the list of snapshots, and where.
+/// What is wrong with a list of snapshots or of transitions, and where.
 #[derive(Debug, Clone, PartialEq, Eq)]
 pub struct EvidenceFault {
-    /// Index of the offending snapshot; `None` for the whole list.
+    /// Index of the offending item; `None` for the whole list.
     pub index: Option<usize>,
     /// What is wrong and how to mend it.
     pub detail: String,
@@ -68,7 +71,63 @@ impl Evidence {
                 faults.push(EvidenceFault { index: Some(i + 1), detail });
             }
         }
-        if faults.is_empty() { Ok(Self { kind, snapshots, entry }) } else { Err(faults) }
+        if !faults.is_empty() {
+            return Err(faults);
+        }
+        Ok(Self { kind, snapshots, entry, transitions: Vec::new(), link_events: None })
+    }
+
+    /// The same with `transitions`, oldest first, periods that do not overlap.
+    ///
+    /// # Errors
+    /// Periods out of order or overlapping; a table whose counts at a date are not those of the snapshot of that date; a
+    /// table that ends after the newest snapshot.
+    pub fn with_transitions(mut self, transitions: Vec<Transitions>) -> Result<Self, Vec<EvidenceFault>> {
+        let mut faults = Vec::new();
+        let mut fault = |index, detail| faults.push(EvidenceFault { index: Some(index), detail });
+        for (i, pair) in transitions.windows(2).enumerate() {
+            if pair[1].from() < pair[0].to() {
+                let detail = format!(
+                    "the table from {} starts before the one before it ends ({}); list transitions oldest first, periods \
+                     that do not overlap",
+                    pair[1].from(),
+                    pair[0].to()
+                );
+                fault(i + 1, detail);
+            }
+        }
+        for (i, table) in transitions.iter().enumerate() {
+            for (date, counts) in [(table.from(), table.counts_before()), (table.to(), table.counts_after())] {
+                let snapshot = self.snapshots.iter().find(|snapshot| snapshot.as_of == date);
+                if let Some(snapshot) = snapshot.filter(|snapshot| counts.as_ref() != Some(&snapshot.counts)) {
+                    let nodes = counts.map_or(0, |counts| counts.nodes());
+                    let detail = format!(
+                        "at {date} the table has other degree counts than the snapshot of that date ({nodes} nodes, where the \
+                         snapshot has {}); make both from the same nodes",
+                        snapshot.counts.nodes()
+                    );
+                    fault(i, detail);
+                }
+            }
+            if table.to() > self.latest().as_of {
+                let detail = format!(
+                    "the table ends at {}, after the newest snapshot ({}); add a snapshot of that date",
+                    table.to(),
+                    self.latest().as_of
+                );
+                fault(i, detail);
+            }
+        }
+        if !faults.is_empty() {
+            return Err(faults);
+        }
+        self.transitions = transitions;
+        Ok(self)
+    }
+
+    /// The same with the attachment statistics of the network's link list.
+    pub fn with_link_events(self, link_events: LinkEvents) -> Self {
+        Self { link_events: Some(link_events), ..self }
     }
 
     /// What a degree counts.
@@ -89,6 +148,16 @@ impl Evidence {
     /// Entry degrees given by the caller.
     pub fn entry(&self) -> Option<&EntryDegrees> {
         self.entry.as_ref()
+    }
+
+    /// Transitions, oldest first; may be empty.
+    pub fn transitions(&self) -> &[Transitions] {
+        &self.transitions
+    }
+
+    /// Attachment statistics of the network's link list, when known.
+    pub fn link_events(&self) -> Option<&LinkEvents> {
+        self.link_events.as_ref()
     }
 
     /// Consecutive snapshots with the days between them, oldest first.
