@@ -1,11 +1,14 @@
 //! How degrees grow: the mean field, the law of one node, tail sizes, and exact simulation.
 
+mod attraction;
 mod law;
 mod mean_field;
+mod moments;
 mod simulation;
 mod tails;
 
 pub use law::NodeLaw;
 pub use mean_field::{Course, GrowthError};
 pub use simulation::{Simulation, SimulationError};
-pub use tails::{TailSum, tail_sum};
+pub use moments::MomentLaw;
+pub use tails::{NetworkLaw, TailSum};

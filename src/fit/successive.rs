@@ -2,7 +2,7 @@
 
 use super::profile::{Profile, profile_share};
 use super::{FitError, FitRequest};
-use crate::growth::{Course, GrowthError, NodeLaw, tail_sum};
+use crate::growth::{Course, GrowthError, NetworkLaw, NodeLaw};
 use crate::model::{
     ArrivalPlan, AttachmentMix, DegreeCounts, DegreeKind, EntryDegrees, Evidence, GrowthParameters, Warning,
 };
@@ -216,8 +216,9 @@ impl<'a> Period<'a> {
             Err(GrowthError::NobodyStarts) => return Ok(vec![Flow { mean: 0.0, kept: 0.0 }; self.thresholds.len()]),
             course => course?,
         };
+        let law = NetworkLaw::at(&course, self.before, self.days)?;
         let flow = |&threshold: &u64| {
-            let sum = tail_sum(&course, self.before, self.days, threshold, Accuracy::Working)?;
+            let sum = law.tail(threshold, Accuracy::Working)?;
             Ok(Flow { mean: sum.mean - sum.kept, kept: sum.kept })
         };
         self.thresholds.iter().map(flow).collect()

@@ -66,3 +66,6 @@ pub const MESH_MAX_PANELS: usize = 600;
 
 /// A tail of this many expected nodes or fewer is zero for every purpose.
 pub const TAIL_ZERO: f64 = 1e-18;
+
+/// Relative and absolute tolerance of the growth equations that have no closed form, a step.
+pub const ODE_TOLERANCE: f64 = 1e-11;

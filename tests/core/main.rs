@@ -2,6 +2,7 @@
 #![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic, clippy::print_stdout)]
 
 mod fit;
+mod forces;
 mod forecast;
 mod hostile;
 mod law;
