@@ -7,6 +7,7 @@ mod moments;
 mod simulation;
 mod tails;
 
+pub(crate) use attraction::{GrowthFactor, growth_factors};
 pub use law::NodeLaw;
 pub use mean_field::{Course, GrowthError};
 pub use simulation::{Simulation, SimulationError};
