@@ -229,14 +229,14 @@ pub struct Outliers {
     pub renamed: Vec<(u64, u64)>,
 }
 
-/// What one period's transitions tell under the mix, a node or a link over the period.
+/// What one period's transitions tell under the likeliest candidate, a node or a link over the period.
 #[derive(Debug, Clone, Copy, PartialEq)]
 pub struct PeriodRates {
     /// The earlier date.
     pub from: Timestamp,
     /// The later date.
     pub to: Timestamp,
-    /// Share of the nodes present that departed; nodes under a new name do not count.
+    /// Share of the nodes present that departed, those under a new name included.
     pub departure_share: f64,
     /// Uniform gains a node.
     pub uniform_gain: f64,

@@ -32,14 +32,16 @@ const fn way(name: &'static str, transitions: bool, rung: Rung, choice: ModelCho
 }
 
 const MIX: ModelChoice = ModelChoice::Only(Model::Mix);
-const WAYS: [Way; 7] = [
+const WAYS: [Way; 9] = [
     way("counts, mix", false, Rung::SuccessiveSnapshots, MIX),
-    way("counts and transitions, mix", true, Rung::SuccessiveSnapshots, MIX),
-    way("counts and transitions, auto", true, Rung::SuccessiveSnapshots, ModelChoice::Auto),
+    way("both, mix", true, Rung::SuccessiveSnapshots, MIX),
+    way("both, dormancy", true, Rung::SuccessiveSnapshots, ModelChoice::Only(Model::Dormancy)),
+    way("both, growth variance", true, Rung::SuccessiveSnapshots, ModelChoice::Only(Model::GrowthVariance)),
     way("transitions, mix", true, Rung::Transitions, MIX),
     way("transitions, dormancy", true, Rung::Transitions, ModelChoice::Only(Model::Dormancy)),
     way("transitions, growth variance", true, Rung::Transitions, ModelChoice::Only(Model::GrowthVariance)),
-    way("transitions, auto", true, Rung::Transitions, ModelChoice::Auto),
+    way("transitions, power", true, Rung::Transitions, ModelChoice::Only(Model::Power)),
+    Way { name: "all defaults", transitions: true, rung: None, choice: ModelChoice::Auto },
 ];
 
 fn main() {
@@ -136,7 +138,11 @@ fn forecasts(tables: &[Transitions], ahead: usize, thresholds: &[u64], given: bo
                 fit: FitRequest {
                     rung: way.rung,
                     choice: way.choice,
-                    links_per_arrival: given.then_some(0.0).map(|_| landed_per_arrival(tables, origin, ahead, landed, arrived)),
+                    links_per_arrival: given.then(|| match way.transitions {
+                        // Counts alone take newcomers to bring none.
+                        false => landed / arrived,
+                        true => landed_per_arrival(tables, origin, ahead, landed, arrived),
+                    }),
                     ..FitRequest::default()
                 },
                 arrivals: given.then(|| ArrivalPlan::constant(arrived / days).unwrap()),

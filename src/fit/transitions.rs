@@ -98,34 +98,39 @@ pub(super) fn fit_transitions(
         );
         return Err(FitError::NotIdentified { detail });
     }
-    let mut found: Vec<(Model, Vec<PanelFit>)> = Vec::new();
+    let (mut found, mut warnings): (Vec<(Model, Vec<PanelFit>)>, _) = (Vec::new(), Vec::new());
     for &model in std::iter::once(&Model::Mix).chain(models.iter().filter(|&&model| model != Model::Mix)) {
         let mut fits = Vec::new();
         for (i, period) in periods.iter().enumerate() {
             if cancelled() {
                 return Err(FitError::Cancelled);
             }
-            let near = found.first().map(|(_, mix)| &mix[i]);
-            let fit = period.panel.fit(model, near);
-            if !fit.converged {
-                let detail = format!("the {} candidate on the transitions of {}", model.name(), period.table.from());
+            fits.push(period.panel.fit(model, found.first().map(|(_, mix)| &mix[i])));
+        }
+        if let Some(stuck) = fits.iter().position(|fit| !fit.converged) {
+            let detail = format!("the {} candidate on the transitions from {}", model.name(), periods[stuck].table.from());
+            if model == Model::Mix || models == [model] {
                 return Err(FitError::NotConverged { detail });
             }
-            fits.push(fit);
+            let detail = format!("{detail} found no maximum of its likelihood and is left out");
+            warnings.push(Warning::new("candidate_left_out", detail));
+        } else {
+            found.push((model, fits));
         }
-        found.push((model, fits));
     }
     let mix = &found[0].1;
-    let (last, fit) = (&periods[periods.len() - 1], &mix[mix.len() - 1]);
+    let aic = |fits: &[PanelFit]| fits.iter().map(|fit| fit.parameters as f64 - fit.log_likelihood).sum::<f64>();
+    let best = found.iter().map(|(_, fits)| fits).min_by(|a, b| aic(a).total_cmp(&aic(b))).unwrap_or(mix);
+    let (last, fit) = (&periods[periods.len() - 1], &best[best.len() - 1]);
     Ok(TransitionFit {
         departures: departures(&periods),
-        link_losses: link_losses(&periods, mix, evidence.kind()),
+        link_losses: link_losses(&periods, best, evidence.kind()),
         entry: last.entry(fit),
         summary: TransitionSummary {
-            periods: periods.iter().zip(mix).map(|(period, fit)| period.rates(fit)).collect(),
-            outliers: outliers(&periods, mix),
+            periods: periods.iter().zip(best).map(|(period, fit)| period.rates(fit)).collect(),
+            outliers: outliers(&periods, best),
         },
-        warnings: Vec::new(),
+        warnings,
         candidates: found.iter().map(|(model, fits)| candidate(*model, &periods, fits)).collect(),
     })
 }
@@ -149,7 +154,7 @@ impl<'a> Read<'a> {
     }
 
     fn rates(&self, fit: &PanelFit) -> PeriodRates {
-        let (departed, present) = self.departed();
+        let (departed, present) = (self.table.departed(), self.table.departed() + self.table.stayed());
         PeriodRates {
             from: self.table.from(),
             to: self.table.to(),

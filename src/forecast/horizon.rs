@@ -101,7 +101,7 @@ impl Outlook<'_> {
         }
         let now = self.counts.tail_size(threshold) as f64;
         let TailSum { kept, mean, variance, .. } = laws.central.tail(threshold, Accuracy::Full)?;
-        let beyond = excursion_variance(&laws.ends, |law| Ok(law.tail(threshold, Accuracy::Working)?.mean))?;
+        let beyond = excursion_variance(&laws.ends, |law| Ok(law.rough_tail(threshold)?.mean))?;
         // Nodes that come past the threshold and nodes that leave the tail are what the model can be wrong about; of a tail
         // that all but vanishes it is not wrong by all that was lost.
         // And a threshold that nearly every node passes leaves little to be wrong about.
@@ -141,10 +141,11 @@ impl Outlook<'_> {
             return Err(ForecastError::Cancelled);
         }
         let range = DegreeRange::of(self.counts, self.central.parameters().has_losses());
-        let log_median = |law: &NetworkLaw| Ok(range.quantile(law, 0.5)?.ln_1p());
-        let gain = (log_median(&laws.central)? - (self.counts.largest() as f64).ln_1p()).abs();
-        let variance = excursion_variance(&laws.ends, log_median)? + (self.model_error * gain).powi(2);
-        largest_degree(&laws.central, &range, self.plan.levels(), variance.sqrt(), self.cancelled)
+        let median = range.quantile(&laws.central, 0.5)?;
+        let gain = (median.ln_1p() - (self.counts.largest() as f64).ln_1p()).abs();
+        let shift = range.shift(&laws.central, median)?;
+        let variance = excursion_variance(&laws.ends, shift)? + (self.model_error * gain).powi(2);
+        largest_degree(&laws.central, &range, median, self.plan.levels(), variance.sqrt(), self.cancelled)
     }
 
     fn count(&self, now: f64, certain: f64, mean: f64, variance: f64) -> CountForecast {

@@ -2,7 +2,7 @@
 
 use super::counts::{first_whole, normal_quantile};
 use super::{DegreeForecast, ForecastError};
-use crate::growth::{GrowthError, NetworkLaw};
+use crate::growth::{GrowthError, NetworkLaw, TailSum};
 use crate::model::{DegreeCounts, Interval, MAX_DEGREE};
 use crate::numerics::tolerances::Accuracy;
 
@@ -14,11 +14,11 @@ use crate::numerics::tolerances::Accuracy;
 pub(super) fn largest_degree(
     law: &NetworkLaw,
     range: &DegreeRange,
+    median: f64,
     levels: &[f64],
     spread: f64,
     cancelled: &dyn Fn() -> bool,
 ) -> Result<DegreeForecast, ForecastError> {
-    let median = range.quantile(law, 0.5)?;
     let widened = |probability: f64| -> Result<f64, ForecastError> {
         if cancelled() {
             return Err(ForecastError::Cancelled);
@@ -35,6 +35,15 @@ pub(super) fn largest_degree(
     Ok(DegreeForecast { now: range.now, median, intervals })
 }
 
+/// ln of a probability that is none.
+const NOBODY: f64 = -1e300;
+/// Relative step of a difference quotient in degree.
+const SLOPE_STEP: f64 = 1.03;
+/// Exact tails taken to correct a quantile that rough tails found.
+const POLISHING_STEPS: usize = 2;
+/// A first-order shift of ln(degree) beyond this is not believed.
+const FARTHEST_SHIFT: f64 = 1.5;
+
 /// Where the largest degree stands today and how far it can fall.
 pub(super) struct DegreeRange {
     now: f64,
@@ -50,10 +59,46 @@ impl DegreeRange {
 
     /// Smallest x with P(max ≤ x) ≥ `probability`.
     pub fn quantile(&self, law: &NetworkLaw, probability: f64) -> Result<f64, ForecastError> {
+        let exact = |x: f64| law.tail(x as u64 + 1, Accuracy::Working);
+        if !law.has_rough_tail() {
+            return self.search(probability, exact);
+        }
+        // Search by rough tails, then correct by the exact tail at the place found, along the rough slope.
+        let mut found = self.search(probability, |x| law.rough_tail(x as u64 + 1))?;
+        for _ in 0..POLISHING_STEPS {
+            let slope = slope(law, found)?;
+            let step = (exact(found)?.log_none.max(NOBODY) - probability.ln()) / slope;
+            if !step.is_finite() {
+                break;
+            }
+            found = (found.ln_1p() - step.clamp(-1.0, 1.0)).exp_m1().round().max(self.least);
+        }
+        Ok(found)
+    }
+
+    /// How far ln(median) moves under other forces than those of `central`, whose median is `median`: to first order.
+    pub fn shift(
+        &self,
+        central: &NetworkLaw,
+        median: f64,
+    ) -> Result<impl FnMut(&NetworkLaw) -> Result<f64, ForecastError> + use<>, ForecastError> {
+        let (slope, least) = (slope(central, median)?, self.least);
+        Ok(move |law: &NetworkLaw| {
+            let step = (law.rough_tail(median as u64 + 1)?.log_none.max(NOBODY) - 0.5_f64.ln()) / slope;
+            let moved = if step.is_finite() { (median.ln_1p() - step.clamp(-FARTHEST_SHIFT, FARTHEST_SHIFT)).exp_m1() } else { median };
+            Ok(moved.max(least).ln_1p())
+        })
+    }
+
+    fn search(
+        &self,
+        probability: f64,
+        tail: impl Fn(f64) -> Result<TailSum, GrowthError>,
+    ) -> Result<f64, ForecastError> {
         let wanted = probability.ln();
         let mut failure: Option<GrowthError> = None;
-        let mut excess = |x: f64| match law.tail(x as u64 + 1, Accuracy::Working) {
-            Ok(sum) => sum.log_none.max(-1e300) - wanted,
+        let mut excess = |x: f64| match tail(x) {
+            Ok(sum) => sum.log_none.max(NOBODY) - wanted,
             Err(error) => {
                 failure.get_or_insert(error);
                 0.0
@@ -66,4 +111,11 @@ impl DegreeRange {
         let found = first_whole(self.least, reach, excess);
         failure.map_or(Ok(found), |error| Err(error.into()))
     }
+}
+
+/// d ln P(max ≤ x)/d ln(1 + x) about x, by rough tails.
+fn slope(law: &NetworkLaw, x: f64) -> Result<f64, ForecastError> {
+    let higher = (x * SLOPE_STEP).max(x + 1.0).round();
+    let at = |x: f64| Ok::<_, ForecastError>(law.rough_tail(x as u64 + 1)?.log_none.max(NOBODY));
+    Ok((at(higher)? - at(x)?) / (higher.ln_1p() - x.ln_1p()))
 }

@@ -7,8 +7,8 @@ use super::mean_field::{Course, GrowthError};
 use crate::numerics::quadrature::PANEL;
 use crate::numerics::tolerances::ODE_TOLERANCE;
 
-/// Growth factors that stand for a gamma distribution: with 8, moments up to the 15th are exact.
-const FACTORS: usize = 8;
+/// Growth factors that stand for a gamma distribution: with 6, moments up to the 11th are exact.
+const FACTORS: usize = 6;
 
 /// One growth factor η of the quadrature over their distribution.
 #[derive(Debug, Clone, Copy, PartialEq)]
@@ -77,7 +77,9 @@ impl Attraction {
         let p = forces.mix.preferential_share();
         let kappa = forces.dormancy_hazard();
         let attraction = |y: &[f64]| -> f64 { factors.iter().zip(y).map(|(f, y)| f.share * f.factor * y).sum() };
-        let slope = |day: f64, y: &Vec<f64>, dy: &mut Vec<f64>| {
+        // Time runs from 0 to 1 on each panel: the solver lands on a whole 1 exactly, and on a day only nearly.
+        let slope = |start: f64, days: f64, part: f64, y: &Vec<f64>, dy: &mut Vec<f64>| {
+            let day = start + days * part;
             let (nodes, link_ends) = course.totals(day);
             let arrivals = forces.arrivals.rate(day);
             let (landing, entering) = (course.landing(day, nodes), forces.entry.mean() * arrivals);
@@ -86,26 +88,25 @@ impl Attraction {
             let shrink = kappa * arrivals / nodes + (landing + entering) / link_ends;
             for (i, f) in factors.iter().enumerate() {
                 let landed = landing * f.factor * ((1.0 - p) + p * y[i] / total);
-                dy[i] = (landed + entering) / link_ends - shrink * y[i];
+                dy[i] = days * ((landed + entering) / link_ends - shrink * y[i]);
             }
         };
         let mut state = vec![1.0 - forces.dormant_share(); factors.len()];
         let mut panels = Vec::new();
         for pair in course.edges(0.0, course.horizon()).windows(2) {
             let (start, end) = (pair[0], pair[1]);
-            let mut times: Vec<f64> = PANEL.nodes.iter().map(|x| start + (end - start) * x).collect();
-            times.insert(0, start);
-            times.push(end);
-            let solution = IVP::ode_from_fn(slope, start, end, state.clone())
-                .t_eval(&times[1..])
+            let days = end - start;
+            let parts: Vec<f64> = PANEL.nodes.iter().copied().chain([1.0]).collect();
+            let along = |part: f64, y: &Vec<f64>, dy: &mut Vec<f64>| slope(start, days, part, y, dy);
+            let solution = IVP::ode_from_fn(along, 0.0, 1.0, state.clone())
+                .t_eval(&parts)
                 .method(ExplicitRungeKutta::dop853().rtol(ODE_TOLERANCE).atol(ODE_TOLERANCE))
                 .solve()
-                .map_err(|error| GrowthError::Integration { detail: format!("{error:?}") })?;
+                .map_err(|_| GrowthError::Integration { from: start, to: end })?;
             let mut points = vec![(start, attraction(&state))];
-            points.extend(solution.t.iter().zip(&solution.y).map(|(&t, y)| (t, attraction(y))));
-            if points.len() != times.len() || points.iter().any(|(_, value)| !(value.is_finite() && *value > 0.0)) {
-                let detail = format!("no answer between day {start:.3} and day {end:.3}");
-                return Err(GrowthError::Integration { detail });
+            points.extend(solution.t.iter().zip(&solution.y).map(|(&part, y)| (start + days * part, attraction(y))));
+            if points.len() != parts.len() + 1 || points.iter().any(|(_, value)| !(value.is_finite() && *value > 0.0)) {
+                return Err(GrowthError::Integration { from: start, to: end });
             }
             state = solution.y.last().cloned().unwrap_or(state);
             let weights = barycentric(&points);

@@ -173,6 +173,11 @@ impl NodeLaw {
         }
     }
 
+    /// Whether links may be lost.
+    pub(crate) fn can_fall(&self) -> bool {
+        self.losses
+    }
+
     /// Expected degree at the end of a node of degree `degree` at the start.
     pub fn mean(&self, degree: u64) -> f64 {
         degree as f64 * self.expansion + self.mean_gain_from_uniform()

@@ -48,10 +48,15 @@ pub enum GrowthError {
         reached: f64,
     },
     /// An ordinary differential equation could not be solved to its tolerance.
-    #[error("the growth equations could not be integrated: {detail}")]
+    #[error(
+        "the growth equations could not be integrated from day {from:.3} to day {to:.3}; check that rates are per day, or ask \
+         for nearer dates"
+    )]
     Integration {
-        /// What the solver said.
-        detail: String,
+        /// Where the step began.
+        from: f64,
+        /// Where it should have ended.
+        to: f64,
     },
     /// A tail probability could not be computed.
     #[error(transparent)]

@@ -4,7 +4,7 @@ use super::law::MixedLaw;
 use super::mean_field::{Course, GrowthError};
 use super::moments::MomentLaw;
 use crate::model::DegreeCounts;
-use crate::numerics::quadrature::integrate_adaptively;
+use crate::numerics::quadrature::{PANEL, integrate_adaptively};
 use crate::numerics::tolerances::{Accuracy, TAIL_ZERO};
 
 /// The tail size S_j at a date, as far as the growth law determines it: a Poisson-binomial count over the present nodes
@@ -90,6 +90,38 @@ impl<'a> NetworkLaw<'a> {
                 laws.newcomers(threshold)
             }
         };
+        sum.mean += newcomers;
+        sum.variance += newcomers;
+        sum.log_none -= newcomers;
+        Ok(sum)
+    }
+
+    /// Whether [`Self::rough_tail`] is cheaper than [`Self::tail`].
+    pub fn has_rough_tail(&self) -> bool {
+        matches!(&self.nodes, NodeLaws::Exact { present, .. } if present.is_mixed())
+    }
+
+    /// The tail size to a few per cent, for what only measures an uncertainty or starts a search: under dormancy or growth
+    /// variance by two moments of each node's law, else [`Self::tail`] at working accuracy.
+    ///
+    /// # Errors
+    /// Those of [`super::NodeLaw::tail`].
+    pub fn rough_tail(&self, threshold: u64) -> Result<TailSum, GrowthError> {
+        let present = match &self.nodes {
+            NodeLaws::Exact { present, .. } if present.is_mixed() => present,
+            _ => return self.tail(threshold, Accuracy::Working),
+        };
+        let mut sum = TailSum::default();
+        self.add_present(&mut sum, threshold, Accuracy::Working, |k| Ok(present.rough_tail(&[(k, 1.0)], threshold)))?;
+        let (course, day) = (self.course, self.day);
+        let parameters = course.parameters();
+        let in_tail = |arrival: f64| {
+            let law = MixedLaw::of_newcomer(course, arrival, day);
+            let share = law.rough_tail(parameters.entry.shares(), threshold);
+            parameters.arrivals.rate(arrival) * course.survival(day - arrival) * share
+        };
+        let edges = course.arrival_edges(day);
+        let newcomers: f64 = edges.windows(2).map(|pair| PANEL.integrate(pair[0], pair[1], in_tail)).sum();
         sum.mean += newcomers;
         sum.variance += newcomers;
         sum.log_none -= newcomers;

@@ -19,6 +19,8 @@ pub struct ScoringMaximum {
 
 /// Half-width of difference quotients; parameters are logarithms, logits or of order one.
 const STEP: f64 = 1e-4;
+/// Steps are stretched up to 2 to this power.
+const LONGEST_STRETCH: u32 = 6;
 /// A damping beyond this leaves no step worth taking.
 const STIFFEST: f64 = 1e8;
 
@@ -58,15 +60,28 @@ pub fn maximise(
                 damping *= 10.0;
                 continue;
             };
-            let trial: Vec<f64> =
-                (0..size).map(|i| (at[i] + step[i].clamp(-2.0, 2.0)).clamp(bounds[i].0, bounds[i].1)).collect();
-            let found = total(&terms(&trial));
-            if found > value {
-                (gained, at, value) = (found - value, trial, found);
-                damping = (0.1 * damping).max(1e-9);
-                break;
+            let reach = |length: f64| -> Vec<f64> {
+                let moved = |i: usize| at[i] + (length * step[i]).clamp(-2.0, 2.0);
+                (0..size).map(|i| moved(i).clamp(bounds[i].0, bounds[i].1)).collect()
+            };
+            let mut trial = reach(1.0);
+            let mut found = total(&terms(&trial));
+            if found <= value {
+                damping *= 10.0;
+                continue;
             }
-            damping *= 10.0;
+            // Where the model is wrong the scores scatter more than the likelihood curves, and the step comes out short.
+            for doubling in 1..=LONGEST_STRETCH {
+                let farther = reach(f64::from(1 << doubling));
+                let there = total(&terms(&farther));
+                if there <= found {
+                    break;
+                }
+                (trial, found) = (farther, there);
+            }
+            (gained, at, value) = (found - value, trial, found);
+            damping = (0.1 * damping).max(1e-9);
+            break;
         }
         if gained < SCORING_GAIN {
             converged = true;

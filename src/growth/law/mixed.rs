@@ -4,6 +4,7 @@ use super::NodeLaw;
 use crate::growth::mean_field::{Course, GrowthError};
 use crate::numerics::quadrature::PANEL;
 use crate::numerics::tolerances::Accuracy;
+use crate::numerics::two_moments::TwoMoments;
 
 /// A mixture of node laws, over growth factors and over the day at which a node falls dormant.
 ///
@@ -63,5 +64,28 @@ impl MixedLaw {
         }
         let tail = |(share, law): &(f64, NodeLaw)| Ok(share * law.mixture_tail(starts, threshold, accuracy)?);
         self.parts.iter().map(tail).sum()
+    }
+
+    /// Whether [`Self::rough_tail`] is cheaper than [`Self::tail`].
+    pub fn is_mixed(&self) -> bool {
+        self.parts.len() > 1
+    }
+
+    /// [`Self::tail`] with each part's law fitted to its mean and variance: ten times as fast, and good to a few per cent, to
+    /// a factor of two in far tails.
+    pub fn rough_tail(&self, starts: &[(u64, f64)], threshold: u64) -> f64 {
+        let of_start = |law: &NodeLaw, degree: u64| {
+            let floor = if law.can_fall() { 0 } else { degree };
+            let law = TwoMoments { mean: law.mean(degree) - floor as f64, variance: law.variance(degree) };
+            match threshold.checked_sub(floor) {
+                None | Some(0) => 1.0,
+                Some(_) if law.mean <= 0.0 || law.variance <= 0.0 => f64::from(degree >= threshold),
+                Some(wanted) => law.above(wanted as f64 - 1.0),
+            }
+        };
+        let of_part = |(share, law): &(f64, NodeLaw)| -> f64 {
+            share * starts.iter().map(|&(degree, weight)| weight * of_start(law, degree)).sum::<f64>()
+        };
+        self.parts.iter().map(of_part).sum()
     }
 }
