@@ -225,7 +225,7 @@ impl<'a> Period<'a> {
         };
         let law = NetworkLaw::at(&course, self.before, self.days)?;
         let flow = |&threshold: &u64| {
-            let sum = law.tail(threshold, Accuracy::Working)?;
+            let sum = law.rough_tail(threshold)?;
             Ok(Flow { mean: sum.mean - sum.kept, kept: sum.kept })
         };
         self.thresholds.iter().map(flow).collect()
