@@ -7,8 +7,8 @@ mod schema;
 use serde_json::value::RawValue;
 
 pub use schema::{
-    ArrivalsBody, DegreeKindName, FitRequestBody, FixedBody, ForecastRequestBody, HorizonBody, ModelName, SegmentBody,
-    SnapshotBody,
+    ArrivalsBody, DegreeKindName, FitRequestBody, FixedBody, ForecastRequestBody, HorizonBody, LinkEventsBody,
+    ModelName, SegmentBody, SnapshotBody, TransitionsBody, WindowBody,
 };
 
 use super::decode::{At, Faults, Object, object, real, text, whole};
@@ -18,9 +18,11 @@ use crate::report::readable;
 use crate::service::{FitInputs, FitRequest, ForecastInputs, Label, MAX_SEED, Model, ModelChoice, OriginRequest};
 
 /// Fields of a fit's body.
-pub const FIT_FIELDS: [&str; 11] = [
+pub const FIT_FIELDS: [&str; 13] = [
     "degree_kind",
     "snapshots",
+    "transitions",
+    "link_events",
     "entry_degrees",
     "links_per_arrival",
     "links_per_node_day",
@@ -33,9 +35,11 @@ pub const FIT_FIELDS: [&str; 11] = [
 ];
 
 /// Fields of a forecast's body.
-pub const FORECAST_FIELDS: [&str; 16] = [
+pub const FORECAST_FIELDS: [&str; 18] = [
     "degree_kind",
     "snapshots",
+    "transitions",
+    "link_events",
     "entry_degrees",
     "links_per_arrival",
     "model",

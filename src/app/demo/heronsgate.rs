@@ -127,6 +127,8 @@ fn request(
         ..ArrivalsBody::default()
     };
     ForecastRequestBody {
+        transitions: None,
+        link_events: None,
         degree_kind: DegreeKindName::Received,
         snapshots: vec![SnapshotBody { as_of: date_text(snapshot), degree_counts: counts.iter().collect() }],
         arrivals: Some(arrivals),
