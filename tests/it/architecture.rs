@@ -4,9 +4,10 @@ use std::collections::{BTreeMap, BTreeSet};
 use std::path::{Path, PathBuf};
 
 /// Every module with the modules it may name.
-const ARROWS: [(&str, &[&str]); 13] = [
+const ARROWS: [(&str, &[&str]); 14] = [
     ("numerics", &[]),
     ("model", &["numerics"]),
+    ("census", &["model"]),
     ("growth", &["model", "numerics"]),
     ("fit", &["growth", "model", "numerics"]),
     ("forecast", &["growth", "model", "numerics"]),
@@ -22,7 +23,7 @@ const ARROWS: [(&str, &[&str]); 13] = [
     ("app", &["api", "config", "growth", "model", "report", "service", "telemetry"]),
 ];
 
-const CORE: [&str; 6] = ["numerics", "model", "growth", "fit", "forecast", "evaluate"];
+const CORE: [&str; 7] = ["numerics", "model", "census", "growth", "fit", "forecast", "evaluate"];
 
 /// Crates that the core must not know.
 const BOUNDARY_CRATES: [&str; 16] = [
