@@ -148,9 +148,9 @@ impl Census {
         self.degrees.len()
     }
 
-    /// Whether a link at `time` would be out of order.
-    pub fn is_past(&self, time: Timestamp) -> bool {
-        self.now.is_some_and(|now| time < now)
+    /// Time of the last link counted; an earlier one is out of order.
+    pub fn now(&self) -> Option<Timestamp> {
+        self.now
     }
 
     /// Whether repeats were no longer looked for at some instant, because it had too many links to remember.
@@ -169,7 +169,7 @@ impl Census {
         }
         self.check_number(source, self.degrees.len())?;
         self.check_number(target, self.degrees.len().max(source as usize + 1))?;
-        if self.is_past(time) {
+        if self.now.is_some_and(|now| time < now) {
             return Ok(Verdict::OutOfOrder);
         }
         if self.now != Some(time) {

@@ -2,8 +2,8 @@
 //! it means for capacity.
 //!
 //! The core (`numerics`, `model`, `census`, `growth`, `fit`, `forecast`, `evaluate`) is plain, synchronous and
-//! deterministic. The boundary (`store`, `service`, `api`, `report`, `app`) needs the feature `server`. DEVELOPERS.md has
-//! the map.
+//! deterministic. The boundary (`ingest`, `store`, `service`, `api`, `report`, `app`) needs the feature `server`.
+//! DEVELOPERS.md has the map.
 
 pub mod census;
 pub mod evaluate;
@@ -19,6 +19,8 @@ pub mod api;
 pub mod app;
 #[cfg(feature = "server")]
 pub mod config;
+#[cfg(feature = "server")]
+pub mod ingest;
 #[cfg(feature = "server")]
 pub mod report;
 #[cfg(feature = "server")]

@@ -208,11 +208,14 @@ impl Recount {
     }
 }
 
+/// Landings, node exposure and end exposure of a degree.
+type ByDegree = BTreeMap<u64, (u64, u64, u64)>;
+
 /// Landings and exposures of every degree, window by window, visiting every node at every landing.
-fn recount(kind: DegreeKind, links: &[(i64, u32, u32)]) -> (Vec<BTreeMap<u64, (u64, u64, u64)>>, Vec<f64>) {
+fn recount(kind: DegreeKind, links: &[(i64, u32, u32)]) -> (Vec<ByDegree>, Vec<f64>) {
     let mut network = Recount::default();
     let (mut windows, mut ratios) = (Vec::new(), Vec::new());
-    let mut window = BTreeMap::<u64, (u64, u64, u64)>::new();
+    let mut window = ByDegree::new();
     let mut start = (0, 0);
     let mut now = i64::MIN;
     let grown = |start: (u64, u64), size: (u64, u64)| {

@@ -4,7 +4,7 @@ use std::collections::{BTreeMap, BTreeSet};
 use std::path::{Path, PathBuf};
 
 /// Every module with the modules it may name.
-const ARROWS: [(&str, &[&str]); 14] = [
+const ARROWS: [(&str, &[&str]); 15] = [
     ("numerics", &[]),
     ("model", &["numerics"]),
     ("census", &["model"]),
@@ -12,6 +12,7 @@ const ARROWS: [(&str, &[&str]); 14] = [
     ("fit", &["growth", "model", "numerics"]),
     ("forecast", &["growth", "model", "numerics"]),
     ("evaluate", &["fit", "forecast", "growth", "model", "numerics"]),
+    ("ingest", &["census", "model"]),
     ("config", &[]),
     ("telemetry", &["config"]),
     ("store", &["config", "model"]),
@@ -20,7 +21,7 @@ const ARROWS: [(&str, &[&str]); 14] = [
     ("report", &["service"]),
     ("api", &["config", "model", "report", "service"]),
     // growth: the demo grows its network with the simulator, so that what comes true is known.
-    ("app", &["api", "config", "growth", "model", "report", "service", "telemetry"]),
+    ("app", &["api", "census", "config", "growth", "ingest", "model", "report", "service", "telemetry"]),
 ];
 
 const CORE: [&str; 7] = ["numerics", "model", "census", "growth", "fit", "forecast", "evaluate"];
