@@ -7,7 +7,7 @@ use jiff::Timestamp;
 use super::{DegreeCounts, DegreeKind, EntryDegrees, LinkEvents, Transitions, days_between};
 
 /// Most snapshots in one piece of evidence.
-const MAX_SNAPSHOTS: usize = 1_000;
+pub const MAX_SNAPSHOTS: usize = 1_000;
 
 /// Degree counts at a date.
 #[derive(Debug, Clone, PartialEq)]
