@@ -10,6 +10,6 @@ mod tails;
 pub(crate) use attraction::{GrowthFactor, growth_factors};
 pub use law::NodeLaw;
 pub use mean_field::{Course, GrowthError};
-pub use simulation::{Simulation, SimulationError};
 pub use moments::MomentLaw;
+pub use simulation::{Simulation, SimulationError};
 pub use tails::{NetworkLaw, TailSum};

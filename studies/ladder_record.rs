@@ -45,10 +45,9 @@ const WAYS: [Way; 9] = [
 ];
 
 fn main() {
-    for (network, thresholds) in [
-        ("answers", vec![5, 10, 20, 50, 100, 200]),
-        ("debian", vec![5, 10, 20, 50, 100, 200, 500, 1_000, 2_000]),
-    ] {
+    for (network, thresholds) in
+        [("answers", vec![5, 10, 20, 50, 100, 200]), ("debian", vec![5, 10, 20, 50, 100, 200, 500, 1_000, 2_000])]
+    {
         let tables = transitions(network);
         println!("== {network}\n");
         estimates(&tables);
@@ -69,7 +68,9 @@ fn evidence(tables: &[Transitions], with_transitions: bool) -> Evidence {
 }
 
 fn estimates(tables: &[Transitions]) {
-    println!("estimates period by period (90 % intervals): preferential share by crossing flows and by transitions; by transitions");
+    println!(
+        "estimates period by period (90 % intervals): preferential share by crossing flows and by transitions; by transitions"
+    );
     println!("departures and link losses a year, uniform gain a node and period, weights of the candidates");
     for table in tables {
         let evidence = evidence(std::slice::from_ref(table), true);
@@ -127,7 +128,8 @@ fn forecasts(tables: &[Transitions], ahead: usize, thresholds: &[u64], given: bo
         let (mut error, mut inside, mut cases) = (0.0, [0.0; 2], 0.0);
         for origin in 1..=tables.len() - ahead {
             let past = &tables[..origin];
-            let (now, then) = (past[origin - 1].counts_after().unwrap(), tables[origin + ahead - 1].counts_after().unwrap());
+            let (now, then) =
+                (past[origin - 1].counts_after().unwrap(), tables[origin + ahead - 1].counts_after().unwrap());
             let before = past[origin - 1].counts_before().unwrap();
             let (start, end) = (past[origin - 1].to(), tables[origin + ahead - 1].to());
             let days = days_between(start, end);
@@ -146,7 +148,8 @@ fn forecasts(tables: &[Transitions], ahead: usize, thresholds: &[u64], given: bo
                     ..FitRequest::default()
                 },
                 arrivals: given.then(|| ArrivalPlan::constant(arrived / days).unwrap()),
-                plan: ForecastPlan::new(start, Thresholds::new(thresholds).unwrap(), &[end], Levels::default()).unwrap(),
+                plan: ForecastPlan::new(start, Thresholds::new(thresholds).unwrap(), &[end], Levels::default())
+                    .unwrap(),
             };
             for tail in &answer(&request, &|| false).unwrap().forecast[0].tail {
                 let observed = then.tail_size(tail.threshold) as f64;
@@ -183,7 +186,13 @@ fn forecasts(tables: &[Transitions], ahead: usize, thresholds: &[u64], given: bo
             }
         }
         let share = |x: f64| 100.0 * x / cases;
-        println!("  {:<30} {:>6.2} %   {:>3.0} {:>3.0} %  ({cases} cases)", way.name, share(error), share(inside[0]), share(inside[1]));
+        println!(
+            "  {:<30} {:>6.2} %   {:>3.0} {:>3.0} %  ({cases} cases)",
+            way.name,
+            share(error),
+            share(inside[0]),
+            share(inside[1])
+        );
     }
     for (name, (error, cases)) in trends {
         println!("  {name:<30} {:>6.2} %", 100.0 * error / cases);
@@ -226,7 +235,11 @@ fn debian_table(tables: &[Transitions]) {
             let i = tail.size.intervals[1];
             println!(
                 "  {:>9} {s1:>7} {:>10.0} {:>8.0} to {:<8.0} {:>8} {ratio:>13.0}",
-                tail.threshold, tail.size.expected, i.low, i.high, then.tail_size(tail.threshold)
+                tail.threshold,
+                tail.size.expected,
+                i.low,
+                i.high,
+                then.tail_size(tail.threshold)
             );
         }
     }

@@ -1,6 +1,6 @@
 //! One origin: fit the evidence up to a date, then forecast from it.
 
-use crate::fit::{Fit, Force, Forces, FitError, FitRequest, fit};
+use crate::fit::{Fit, FitError, FitRequest, Force, Forces, fit};
 use crate::forecast::{DateForecast, Excursion, ForecastError, Scenario, forecast};
 use crate::model::{ArrivalPlan, AttachmentMix, Evidence, ForecastPlan, GrowthParameters, ParameterFault, Warning};
 
@@ -135,7 +135,9 @@ fn scenario(request: &OriginRequest, fit: &Fit) -> Result<Scenario, OriginError>
         let (low, high) = moved(&fit.forces).excursion;
         if high > low {
             let at = |side: fn(&Force) -> f64| {
-                under(&fit.forces, &forces, |force| if std::ptr::eq(force, moved(&fit.forces)) { side(force) } else { force.value() })
+                under(&fit.forces, &forces, |force| {
+                    if std::ptr::eq(force, moved(&fit.forces)) { side(force) } else { force.value() }
+                })
             };
             excursions.push(Excursion { low: at(|f| f.excursion.0)?, high: at(|f| f.excursion.1)? });
         }
@@ -166,7 +168,11 @@ const DIRECTIONS: [fn(&Forces) -> &Force; 5] = [
 ];
 
 /// `base` with the fitted forces at the values that `at` picks.
-fn under(fitted: &Forces, base: &GrowthParameters, at: impl Fn(&Force) -> f64) -> Result<GrowthParameters, OriginError> {
+fn under(
+    fitted: &Forces,
+    base: &GrowthParameters,
+    at: impl Fn(&Force) -> f64,
+) -> Result<GrowthParameters, OriginError> {
     base.clone()
         .with_losses(at(&fitted.departures), at(&fitted.link_losses))
         .and_then(|forces| forces.with_kernel_exponent(at(&fitted.kernel_exponent)))

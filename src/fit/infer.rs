@@ -2,8 +2,8 @@
 
 use super::diagnostics::{flow_goodness, goodness, stationary_tail, warnings as diagnose};
 use super::entry::entry_degrees;
-use super::one_snapshot::fit_one_snapshot;
 use super::link_events::{LinkEventFit, fit_link_events};
+use super::one_snapshot::fit_one_snapshot;
 use super::profile::Profile;
 use super::rates::Rates;
 use super::stationary::StationaryLaw;
@@ -90,8 +90,7 @@ pub fn fit(evidence: &Evidence, request: &FitRequest, cancelled: &dyn Fn() -> bo
         warnings.push(Warning::new("newcomers_never_gain", detail));
     }
     let linear = profile.model != Model::Power;
-    let tail_exponent =
-        tail_exponent(&profile, rates.exponent_links, entry.mean(), &forces).filter(|_| linear);
+    let tail_exponent = tail_exponent(&profile, rates.exponent_links, entry.mean(), &forces).filter(|_| linear);
     let mut fit = Fit {
         model: profile.model,
         rung,
@@ -137,7 +136,9 @@ fn rung(evidence: &Evidence, request: &FitRequest) -> Result<Rung, FitError> {
                 Rung::Transitions => "transitions",
                 Rung::OneSnapshot | Rung::LinkEvents => "link_events",
             };
-            Err(FitError::NotIdentified { detail: format!("the mix cannot be read from that evidence; give {missing}") })
+            Err(FitError::NotIdentified {
+                detail: format!("the mix cannot be read from that evidence; give {missing}"),
+            })
         }
         None => {
             let ladder = [Rung::SuccessiveSnapshots, Rung::Transitions, Rung::LinkEvents];
@@ -301,4 +302,3 @@ fn tail_exponent(profile: &Profile, links: f64, entry_mean: f64, forces: &Forces
     let interval = interval.map(|i| Interval { level: i.level, low: exponent(i.high), high: exponent(i.low) });
     Some(Estimate { value: exponent(profile.share.value), interval })
 }
-

@@ -148,7 +148,8 @@ fn log_terms(events: &LinkEvents, share: f64, exponent: f64) -> Vec<f64> {
         }
         for (_, phi) in window.cells.iter().zip(&phi).filter(|(cell, _)| cell.landings > 0) {
             // Nobody attracts while no node has a link: then all ends pick uniformly.
-            let preferential = if attraction > 0.0 { share * phi * landings / attraction } else { share * landings / nodes };
+            let preferential =
+                if attraction > 0.0 { share * phi * landings / attraction } else { share * landings / nodes };
             terms.push(((1.0 - share) * landings / nodes + preferential).max(f64::MIN_POSITIVE).ln());
         }
     }
@@ -178,7 +179,8 @@ fn curve(events: &LinkEvents, share: f64) -> Vec<CurvePoint> {
         }
     }
     let point = |(&(lowest, highest), &(landings, alike, fitted)): (&(u64, u64), &(u64, f64, f64))| {
-        let bound = |shape: f64, probability: f64| Gamma::new(shape, 1.0).map_or(0.0, |law| law.inverse_cdf(probability));
+        let bound =
+            |shape: f64, probability: f64| Gamma::new(shape, 1.0).map_or(0.0, |law| law.inverse_cdf(probability));
         let n = landings as f64;
         // Ends of a Poisson mean (Garwood 1936).
         let low = if landings == 0 { 0.0 } else { bound(n, 0.5 - 0.5 * ESTIMATE_LEVEL) };

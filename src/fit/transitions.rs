@@ -108,7 +108,8 @@ pub(super) fn fit_transitions(
             fits.push(period.panel.fit(model, found.first().map(|(_, mix)| &mix[i])));
         }
         if let Some(stuck) = fits.iter().position(|fit| !fit.converged) {
-            let detail = format!("the {} candidate on the transitions from {}", model.name(), periods[stuck].table.from());
+            let detail =
+                format!("the {} candidate on the transitions from {}", model.name(), periods[stuck].table.from());
             if model == Model::Mix || models == [model] {
                 return Err(FitError::NotConverged { detail });
             }
@@ -277,7 +278,8 @@ fn pooled(rows: &[(f64, f64, f64)], back: fn(f64) -> f64) -> Force {
     let mean = sum(&|r| inverse(r.1) * r.0) / total;
     let scatter = sum(&|r| inverse(r.1) * (r.0 - mean).powi(2));
     let freedom = rows.len() as f64 - 1.0;
-    let between = ((scatter - freedom) / (total - sum(&|r| inverse(r.1).powi(2)) / total).max(f64::MIN_POSITIVE)).max(0.0);
+    let between =
+        ((scatter - freedom) / (total - sum(&|r| inverse(r.1).powi(2)) / total).max(f64::MIN_POSITIVE)).max(0.0);
     let between = if rows.len() < 2 { 0.0 } else { between };
     let weight = |r: &(f64, f64, f64)| r.2 / (r.1.max(1e-9).powi(2) + between);
     let total = sum(&weight);

@@ -13,7 +13,9 @@ pub(super) fn verdict(fit: &Fit) -> String {
     } else if share < 0.75 {
         format!("{:.0} % of links follow degree, the rest fall on all nodes alike", 100.0 * share)
     } else if share < 0.98 {
-        format!("links follow degree almost proportionally; a uniform share of {uniform:.0} % gives newcomers their chance")
+        format!(
+            "links follow degree almost proportionally; a uniform share of {uniform:.0} % gives newcomers their chance"
+        )
     } else {
         "links follow degree proportionally; next to none fall on all nodes alike".to_owned()
     };
@@ -26,7 +28,9 @@ pub(super) fn verdict(fit: &Fit) -> String {
         Model::Dormancy => format!("; {:.0} % of nodes no longer draw links", 100.0 * fit.forces.dormant_share.value()),
         Model::GrowthVariance => {
             let spread = 100.0 * fit.forces.growth_variance.value().sqrt();
-            format!("; nodes alike in degree differ in how fast they grow (standard deviation {spread:.0} % of the mean)")
+            format!(
+                "; nodes alike in degree differ in how fast they grow (standard deviation {spread:.0} % of the mean)"
+            )
         }
         Model::Uniform | Model::Preferential | Model::Mix => String::new(),
     };

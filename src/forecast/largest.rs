@@ -85,7 +85,11 @@ impl DegreeRange {
         let (slope, least) = (slope(central, median)?, self.least);
         Ok(move |law: &NetworkLaw| {
             let step = (law.rough_tail(median as u64 + 1)?.log_none.max(NOBODY) - 0.5_f64.ln()) / slope;
-            let moved = if step.is_finite() { (median.ln_1p() - step.clamp(-FARTHEST_SHIFT, FARTHEST_SHIFT)).exp_m1() } else { median };
+            let moved = if step.is_finite() {
+                (median.ln_1p() - step.clamp(-FARTHEST_SHIFT, FARTHEST_SHIFT)).exp_m1()
+            } else {
+                median
+            };
             Ok(moved.max(least).ln_1p())
         })
     }

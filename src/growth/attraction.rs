@@ -151,7 +151,8 @@ mod tests {
         for variance in [1e-6, 0.01, 0.3, 1.0, 4.0, 20.0] {
             let factors = growth_factors(variance);
             let moment = |n: i32| -> f64 { factors.iter().map(|f| f.share * f.factor.powi(n)).sum() };
-            for (n, exact) in [(0, 1.0), (1, 1.0), (2, 1.0 + variance), (3, (1.0 + variance) * (1.0 + 2.0 * variance))] {
+            for (n, exact) in [(0, 1.0), (1, 1.0), (2, 1.0 + variance), (3, (1.0 + variance) * (1.0 + 2.0 * variance))]
+            {
                 assert!((moment(n) / exact - 1.0).abs() < 1e-10, "variance {variance}, moment {n}: {}", moment(n));
             }
         }

@@ -138,7 +138,8 @@ impl MomentLaw {
                 by_degree += weight * mean;
             }
             let uniform = (1.0 - p) * landing / nodes;
-            let attracted = if p > 0.0 && by_kernel > 0.0 { p * landing * by_degree / (link_ends * by_kernel) } else { 0.0 };
+            let attracted =
+                if p > 0.0 && by_kernel > 0.0 { p * landing * by_degree / (link_ends * by_kernel) } else { 0.0 };
             for ((class, moments), slopes) in classes.iter().zip(y.chunks_exact(2)).zip(dy.chunks_exact_mut(2)) {
                 let mean = class.start + moments[0];
                 let [phi, steep, bend] = kernel.at(mean);

@@ -95,7 +95,8 @@ impl Simulation {
 
     /// How many nodes went from which degree at the last mark (the start, when there was none) to which today.
     pub fn moves(&self) -> Vec<Move> {
-        let present = self.members.marked.iter().zip(&self.members.degrees).map(|(&before, &after)| (before, Some(after)));
+        let present =
+            self.members.marked.iter().zip(&self.members.degrees).map(|(&before, &after)| (before, Some(after)));
         let departed = self.members.departed.iter().map(|&before| (Some(before), None));
         let mut sorted: Vec<_> = present.chain(departed).collect();
         sorted.sort_unstable();

@@ -122,7 +122,9 @@ impl Evidence {
         if !faults.is_empty() {
             return Err(faults);
         }
-        for (date, counts) in transitions.iter().flat_map(|t| [(t.from(), t.counts_before()), (t.to(), t.counts_after())]) {
+        for (date, counts) in
+            transitions.iter().flat_map(|t| [(t.from(), t.counts_before()), (t.to(), t.counts_after())])
+        {
             let place = self.snapshots.partition_point(|snapshot| snapshot.as_of < date);
             let known = self.snapshots.get(place).is_some_and(|snapshot| snapshot.as_of == date);
             if let Some(counts) = counts.filter(|_| !known) {

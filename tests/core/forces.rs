@@ -70,7 +70,10 @@ fn moment_equations_agree_with_the_exact_law_on_the_linear_kernel() {
             (NodeLaw::between(&course, 0.0, DAYS), MomentLaw::solve(&course, &counts(), DAYS).unwrap());
         for &degree in counts().degrees() {
             let (mean, variance) = moments.moments(degree).unwrap();
-            assert!((mean - exact.mean(degree)).abs() <= 1e-8 * exact.mean(degree).max(1e-3), "{share} {degree}: {mean}");
+            assert!(
+                (mean - exact.mean(degree)).abs() <= 1e-8 * exact.mean(degree).max(1e-3),
+                "{share} {degree}: {mean}"
+            );
             let off = (variance - exact.variance(degree)).abs();
             assert!(off <= 1e-8 * exact.variance(degree).max(1e-3), "{share} {degree}: {variance}");
         }

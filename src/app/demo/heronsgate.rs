@@ -141,6 +141,7 @@ fn request(
         dates: Some(dates.iter().map(|&date| date_text(date)).collect()),
         horizon: None,
         model: None,
+        evidence: None,
         fixed: None,
         levels: None,
         seed: None,

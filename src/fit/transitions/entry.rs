@@ -25,8 +25,7 @@ pub(super) fn entry_degrees(newcomers: &[(u64, u64)], law: impl Fn(u64, u64) -> 
     let observed: Vec<(u64, f64)> =
         newcomers.iter().filter(|&&(j, _)| j <= SINGLE_DEGREES).map(|&(j, n)| (j, n as f64 / total as f64)).collect();
     let most = observed.iter().map(|&(j, _)| j).max().unwrap_or(0);
-    let matrix: Vec<Vec<f64>> =
-        observed.iter().map(|&(j, _)| (0..=most).map(|k| law(k, j)).collect()).collect();
+    let matrix: Vec<Vec<f64>> = observed.iter().map(|&(j, _)| (0..=most).map(|k| law(k, j)).collect()).collect();
     let low: f64 = observed.iter().map(|&(_, share)| share).sum();
     let mut shares = vec![low / (most + 1) as f64; most as usize + 1];
     for &(j, share) in &observed {

@@ -186,7 +186,8 @@ impl Panel {
         let Forces { uniform: u, preferential: v, loss: w, dormant_share, growth_variance, exponent, .. } = *forces;
         if exponent != 1.0 {
             let k = degree as f64;
-            let slope = v * (kernel(k + 0.5, exponent) - kernel((k - 0.5).max(0.0), exponent)) / (k + 0.5 - (k - 0.5).max(0.0));
+            let slope =
+                v * (kernel(k + 0.5, exponent) - kernel((k - 0.5).max(0.0), exponent)) / (k + 0.5 - (k - 0.5).max(0.0));
             return vec![(1.0, PeriodLaw::tangent(u + v * kernel(k, exponent), slope, w))];
         }
         if growth_variance > 0.0 {
@@ -214,8 +215,7 @@ impl Panel {
                 (laws, at) = (self.laws(forces, before), before);
             }
             let probability: f64 = laws.iter().map(|(share, law)| share * law.probability(before, after)).sum();
-            let probability =
-                (1.0 - forces.outliers) * probability + forces.outliers * outlier_probability(after);
+            let probability = (1.0 - forces.outliers) * probability + forces.outliers * outlier_probability(after);
             probability.max(f64::MIN_POSITIVE).ln()
         };
         self.rows.iter().map(term).collect()
@@ -270,9 +270,8 @@ impl Panel {
         };
         let terms = self.log_terms(&forces);
         let rows = self.rows.iter().zip(&self.weights).zip(&terms);
-        let strange = rows.filter(|((row, _), term)| {
-            forces.outliers * outlier_probability(row.1) > OUTLIER_FROM * term.exp()
-        });
+        let strange =
+            rows.filter(|((row, _), term)| forces.outliers * outlier_probability(row.1) > OUTLIER_FROM * term.exp());
         strange.map(|((&(k, j), &n), _)| (k, j, n as u64)).collect()
     }
 

@@ -85,8 +85,7 @@ impl PeriodLaw {
         // Negative binomial of the gain when `most` links are kept.
         let gained = j - most;
         let shape = self.shape.at(most);
-        let mut term =
-            ln_rising(shape, gained) - ln_rising(1.0, gained) + shape * ln_fresh + gained * odds.ln();
+        let mut term = ln_rising(shape, gained) - ln_rising(1.0, gained) + shape * ln_fresh + gained * odds.ln();
         if self.lost <= 0.0 {
             return if after < before { 0.0 } else { term.exp() };
         }
@@ -122,12 +121,12 @@ impl PeriodLaw {
         let (mean, variance) = match self.shape {
             Shape::Kept(ratio) => (
                 self.mean(k),
-                k * self.expansion * (2.0 * self.spread - self.expansion + 1.0) + ratio * self.spread * (1.0 + self.spread),
+                k * self.expansion * (2.0 * self.spread - self.expansion + 1.0)
+                    + ratio * self.spread * (1.0 + self.spread),
             ),
-            Shape::Fixed(shape) => (
-                self.mean(k),
-                k * self.expansion * (1.0 - self.expansion) + shape * self.spread * (1.0 + self.spread),
-            ),
+            Shape::Fixed(shape) => {
+                (self.mean(k), k * self.expansion * (1.0 - self.expansion) + shape * self.spread * (1.0 + self.spread))
+            }
         };
         let variance = variance.max(1e-6);
         (-0.5 * (j - mean).powi(2) / variance).exp() / (2.0 * std::f64::consts::PI * variance).sqrt()

@@ -24,7 +24,8 @@ pub(super) fn renamed(table: &Transitions, mean_degree: f64) -> Vec<(u64, u64)> 
         let distance = |before: u64| (before as f64 / after as f64).ln().abs();
         let place = departed.partition_point(|&before| before < after);
         let nearest = [place.checked_sub(1), Some(place).filter(|&i| i < departed.len())];
-        let nearest = nearest.into_iter().flatten().min_by(|&a, &b| distance(departed[a]).total_cmp(&distance(departed[b])));
+        let nearest =
+            nearest.into_iter().flatten().min_by(|&a, &b| distance(departed[a]).total_cmp(&distance(departed[b])));
         if let Some(index) = nearest.filter(|&i| distance(departed[i]) <= NEAREST.ln()) {
             pairs.push((departed.remove(index), after));
         }

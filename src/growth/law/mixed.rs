@@ -39,9 +39,8 @@ impl MixedLaw {
         if still_active < 1.0 {
             // The hazard of falling dormant is that of arriving, κ·A/N.
             let forces = course.parameters();
-            let falls = |day: f64| {
-                course.still_active(from, day) * forces.arrivals.rate(day) / course.nodes(day) * (to - from)
-            };
+            let falls =
+                |day: f64| course.still_active(from, day) * forces.arrivals.rate(day) / course.nodes(day) * (to - from);
             let days = PANEL.nodes.map(|x| from + (to - from) * x);
             let weights: Vec<f64> = days.iter().zip(&PANEL.weights).map(|(&day, w)| w * falls(day)).collect();
             let total: f64 = weights.iter().sum();
