@@ -37,7 +37,8 @@ pub use extract::read_json;
 pub use problem::Problem;
 pub use requests::{
     ArrivalsBody, DegreeKindName, FIT_FIELDS, FORECAST_FIELDS, FitRequestBody, FixedBody, ForecastRequestBody,
-    HorizonBody, ModelName, SegmentBody, SnapshotBody, read_fit, read_forecast,
+    HorizonBody, LinkEventsBody, ModelName, SegmentBody, SnapshotBody, TransitionsBody, WindowBody, read_fit,
+    read_forecast,
 };
 
 /// What handlers share.

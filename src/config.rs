@@ -109,6 +109,10 @@ impl ComputeConfig {
 pub struct LimitsConfig {
     /// Pairs in one snapshot.
     pub degree_counts: usize,
+    /// Rows in one table of transitions.
+    pub transitions: usize,
+    /// Ratio classes, windows and cells in one link list's attachment statistics, each.
+    pub link_events: usize,
     /// Thresholds times dates in one forecast.
     pub cells: usize,
 }
@@ -247,6 +251,8 @@ impl Config {
             ("compute.queue", compute.queue as u64, 0, MOST_THINGS),
             ("compute.budget_seconds", compute.budget_seconds, 1, DAY_SECONDS),
             ("limits.degree_counts", limits.degree_counts as u64, 1, MOST_THINGS),
+            ("limits.transitions", limits.transitions as u64, 1, MOST_THINGS),
+            ("limits.link_events", limits.link_events as u64, 1, MOST_THINGS),
             ("limits.cells", limits.cells as u64, 1, MOST_THINGS),
         ];
         match ranges.into_iter().find(|&(_, value, least, most)| !(least..=most).contains(&value)) {

@@ -12,12 +12,13 @@ use crate::config::{ComputeConfig, DatabaseConfig};
 use crate::store::{Store, StoreError};
 
 pub use crate::evaluate::OriginRequest;
-pub use crate::fit::{FitRequest, Model, ModelChoice};
+pub use crate::fit::{FitRequest, Fixed, Model, ModelChoice, Rung};
 pub use crate::store::{KeyClaim, RunFilter, RunKind, RunSummary, StoredRun};
 pub use answers::{
-    AttachmentModel, CandidateAnswer, CountAnswer, DateAnswer, DegreeAnswer, EstimateAnswer, EvidenceKind, FitAnswer,
-    FitReport, FitRun, ForecastAnswer, ForecastRun, GoodnessAnswer, IntervalAnswer, LimitAnswer, TailAnswer,
-    TailPointAnswer, WarningAnswer,
+    AttachmentAnswer, AttachmentModel, CandidateAnswer, CountAnswer, CurvePointAnswer, DateAnswer, DegreeAnswer,
+    EstimateAnswer, EvidenceKind, FitAnswer, FitReport, FitRun, ForecastAnswer, ForecastRun, GoodnessAnswer,
+    IntervalAnswer, LimitAnswer, OutlierClassAnswer, PeriodRatesAnswer, TailAnswer, TailPointAnswer, TransitionsAnswer,
+    WarningAnswer,
 };
 pub use compute::{Question, answer_at_once};
 pub use cpu::CpuPool;

@@ -6,12 +6,15 @@
 
 mod counts;
 mod faults;
+mod link_events;
 mod number;
 mod object;
+mod rows;
 mod time;
 
-pub use counts::degree_counts;
+pub use counts::{degree_counts, moves};
 pub use faults::{At, Fault, Faults, Place};
+pub use link_events::link_events;
 pub use number::{real, whole};
 pub use object::{Object, list, object, text, unknown_name};
 pub use time::{every, instant};

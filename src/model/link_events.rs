@@ -91,8 +91,10 @@ impl LinkEvents {
                 }
             }
         }
-        if ratios.iter().map(|class| u128::from(class.landings)).sum::<u128>() == 0 {
-            fault("ratios", None, "no link landed on a node that was there before");
+        match ratios.iter().map(|class| u128::from(class.landings)).sum::<u128>() {
+            0 => fault("ratios", None, "no link landed on a node that was there before"),
+            sum if sum > u128::from(u64::MAX) => fault("ratios", None, "the landings add up to more than 2^64 - 1"),
+            _ => {}
         }
         if faults.is_empty() { Ok(Self { ratios, windows }) } else { Err(faults) }
     }

@@ -5,8 +5,8 @@ use sha2::{Digest, Sha256};
 
 use super::numbers::{Real, date_text};
 use crate::evaluate::OriginRequest;
-use crate::fit::{FitRequest, Model, ModelChoice};
-use crate::model::{ArrivalPlan, DegreeKind, Evidence, ForecastPlan};
+use crate::fit::{FitRequest, ModelChoice};
+use crate::model::{ArrivalPlan, AttachmentCell, DegreeKind, Evidence, ForecastPlan, LinkEvents, Transitions};
 
 /// The largest seed: 2^53 − 1, the largest whole number every JSON reader keeps exactly.
 pub const MAX_SEED: u64 = (1 << 53) - 1;
@@ -76,12 +76,28 @@ struct Canonical<'a> {
     degree_kind: &'static str,
     snapshots: Vec<CanonicalSnapshot>,
     entry_degrees: Option<&'a [(u64, f64)]>,
+    // Left out when there are none, as in inputs from before they could be given: digests do not change.
+    #[serde(skip_serializing_if = "Vec::is_empty")]
+    transitions: Vec<CanonicalTransitions>,
+    #[serde(skip_serializing_if = "Option::is_none")]
+    link_events: Option<CanonicalLinkEvents>,
     model: &'static str,
     preferential_share: Option<Real>,
     links_per_arrival: Option<Real>,
     links_per_node_day: Real,
-    departures_per_node_day: Real,
-    link_losses_per_link_day: Real,
+    // Without transitions a loss that is not given is none.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    departures_per_node_day: Option<Real>,
+    #[serde(skip_serializing_if = "Option::is_none")]
+    link_losses_per_link_day: Option<Real>,
+    #[serde(skip_serializing_if = "Option::is_none")]
+    evidence: Option<String>,
+    #[serde(skip_serializing_if = "Option::is_none")]
+    kernel_exponent: Option<Real>,
+    #[serde(skip_serializing_if = "Option::is_none")]
+    dormant_share: Option<Real>,
+    #[serde(skip_serializing_if = "Option::is_none")]
+    growth_variance: Option<Real>,
     #[serde(flatten)]
     outlook: Option<CanonicalOutlook<'a>>,
 }
@@ -91,6 +107,23 @@ struct CanonicalSnapshot {
     as_of: String,
     degree_counts: Vec<(u64, u64)>,
 }
+
+#[derive(Serialize)]
+struct CanonicalTransitions {
+    from: String,
+    to: String,
+    counts: Vec<(Option<u64>, Option<u64>, u64)>,
+}
+
+#[derive(Serialize)]
+struct CanonicalLinkEvents {
+    ratios: Vec<(Real, Real, u64)>,
+    windows: Vec<Vec<CanonicalCell>>,
+}
+
+/// Lowest and highest degree, landings, node exposure, end exposure.
+#[derive(Serialize)]
+struct CanonicalCell(u64, u64, u64, Real, Real);
 
 /// What a forecast needs beyond a fit.
 #[derive(Serialize)]
@@ -126,6 +159,8 @@ impl FitInputs {
 }
 
 fn canonical_fit<'a>(asked: &'static str, evidence: &'a Evidence, fit: &FitRequest) -> Canonical<'a> {
+    let known = !evidence.transitions().is_empty();
+    let given = |rate: Option<f64>| rate.or((!known).then_some(0.0)).map(Real);
     Canonical {
         asked,
         degree_kind: match evidence.kind() {
@@ -138,18 +173,40 @@ fn canonical_fit<'a>(asked: &'static str, evidence: &'a Evidence, fit: &FitReque
             .map(|s| CanonicalSnapshot { as_of: date_text(s.as_of), degree_counts: s.counts.iter().collect() })
             .collect(),
         entry_degrees: evidence.entry().map(|entry| entry.shares()),
+        transitions: evidence.transitions().iter().map(canonical_transitions).collect(),
+        link_events: evidence.link_events().map(canonical_link_events),
         model: match fit.choice {
             ModelChoice::Auto => "auto",
-            ModelChoice::Only(Model::Uniform) => "uniform",
-            ModelChoice::Only(Model::Preferential) => "preferential",
-            ModelChoice::Only(Model::Mix) => "mix",
+            ModelChoice::Only(model) => model.name(),
         },
-        preferential_share: fit.fixed_mix.map(|mix| Real(mix.preferential_share())),
+        preferential_share: fit.fixed.mix.map(|mix| Real(mix.preferential_share())),
         links_per_arrival: fit.links_per_arrival.map(Real),
         links_per_node_day: Real(fit.links_per_node_day),
-        departures_per_node_day: Real(fit.departures_per_node_day),
-        link_losses_per_link_day: Real(fit.link_losses_per_link_day),
+        departures_per_node_day: given(fit.departures_per_node_day),
+        link_losses_per_link_day: given(fit.link_losses_per_link_day),
+        evidence: fit.rung.map(|rung| format!("{rung:?}")),
+        kernel_exponent: fit.fixed.kernel_exponent.map(Real),
+        dormant_share: fit.fixed.dormant_share.map(Real),
+        growth_variance: fit.fixed.growth_variance.map(Real),
         outlook: None,
+    }
+}
+
+fn canonical_transitions(table: &Transitions) -> CanonicalTransitions {
+    CanonicalTransitions {
+        from: date_text(table.from()),
+        to: date_text(table.to()),
+        counts: table.moves().iter().map(|row| (row.before, row.after, row.nodes)).collect(),
+    }
+}
+
+fn canonical_link_events(events: &LinkEvents) -> CanonicalLinkEvents {
+    let cell = |cell: &AttachmentCell| {
+        CanonicalCell(cell.lowest, cell.highest, cell.landings, Real(cell.node_exposure), Real(cell.end_exposure))
+    };
+    CanonicalLinkEvents {
+        ratios: events.ratios().iter().map(|class| (Real(class.ratio), Real(class.variance), class.landings)).collect(),
+        windows: events.windows().iter().map(|window| window.cells.iter().map(cell).collect()).collect(),
     }
 }
 

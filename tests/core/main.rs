@@ -3,6 +3,7 @@
 
 mod census;
 mod fit;
+mod forces;
 mod forecast;
 mod hostile;
 mod law;

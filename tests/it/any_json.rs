@@ -74,6 +74,14 @@ proptest! {
     }
 
     #[test]
+    fn any_rows_of_evidence(rows in any_json(), list in prop::sample::select(vec!["ratios", "windows"])) {
+        let table = json!([{"from": "2026-05-01", "to": "2026-06-01", "counts": [[0, null, 2], rows]}]);
+        check(changed(forecast_body(), "/transitions", table).to_string().as_bytes())?;
+        let events = json!({"ratios": [[1, 0, 5]], "windows": [{"cells": [rows]}]});
+        check(changed(forecast_body(), "/link_events", changed(events, &format!("/{list}"), rows)).to_string().as_bytes())?;
+    }
+
+    #[test]
     fn any_horizon(until in any_text(), every in any_text()) {
         let body = changed(forecast_body(), "/dates", Value::Null);
         check(changed(body, "/horizon", json!({"until": until, "every": every})).to_string().as_bytes())?;

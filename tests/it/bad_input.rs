@@ -95,8 +95,63 @@ fn cases() -> Vec<Case> {
         ("/label", json!("x".repeat(201)), "/label", "200"),
         ("/label", json!(5), "/label", "string"),
         ("/thresholdz", json!([1]), "/thresholdz", "did you mean \"thresholds\""),
-        ("/transitions", json!([]), "/transitions", "no field"),
+        ("/transition", json!([]), "/transition", "did you mean \"transitions\""),
+        ("/transitions", json!({}), "/transitions", "array"),
+        ("/transitions", json!([[0, 1, 2]]), "/transitions/0", "object"),
+        ("/transitions", json!([{"from": "2026-05-01", "counts": [[0, 1, 1]]}]), "/transitions/0", "\"to\" is missing"),
+        (
+            "/transitions",
+            table("2026-06-01", "2026-05-01", json!([[0, 1, 1]])),
+            "/transitions/0",
+            "not after its start",
+        ),
+        ("/transitions", table("2026-05-01", "soon", json!([[0, 1, 1]])), "/transitions/0/to", "no time"),
+        ("/transitions", sound_dates(json!([])), "/transitions/0", "no node was there at the start"),
+        ("/transitions", sound_dates(json!([[null, 1, 5]])), "/transitions/0", "no node was there at the start"),
+        (
+            "/transitions",
+            sound_dates(json!([[0, 1, 1], [null, null, 1]])),
+            "/transitions/0/counts/1",
+            "tells of nobody",
+        ),
+        ("/transitions", sound_dates(json!([[0, 1, 1], [0, 1, 2]])), "/transitions/0/counts/1", "same pair"),
+        ("/transitions", sound_dates(json!([[0, 1, null]])), "/transitions/0/counts/0/2", "not null"),
+        ("/transitions", sound_dates(json!([[0, -1, 1]])), "/transitions/0/counts/0/1", "negative"),
+        ("/transitions", sound_dates(json!([[0.5, 1, 1]])), "/transitions/0/counts/0/0", "not a whole number"),
+        ("/transitions", sound_dates(json!([[0, "", 1]])), "/transitions/0/counts/0/1", "not a string"),
+        ("/transitions", sound_dates(json!([[0, 1]])), "/transitions/0/counts/0", "3 entries, not 2"),
+        ("/transitions", sound_dates(json!([{"before": 0}])), "/transitions/0/counts/0", "row"),
+        (
+            "/transitions",
+            sound_dates(json!([[9007199254740992u64, 1, 1]])),
+            "/transitions/0/counts/0",
+            "9007199254740991",
+        ),
+        ("/transitions", sound_dates(json!([[0, 1, u64::MAX], [0, 2, 1]])), "/transitions/0", "2^64 - 1"),
+        // The snapshot of that date has other counts.
+        ("/transitions", sound_dates(json!([[0, 1, 5]])), "/transitions/0", "other degree counts than the snapshot"),
+        ("/transitions", table("2026-05-01", "2026-07-01", json!([[0, 1, 5]])), "/transitions/0", "after the newest"),
+        ("/link_events", json!([]), "/link_events", "object"),
+        ("/link_events", json!({"ratios": [[1, 0, 5]]}), "/link_events", "\"windows\" is missing"),
+        ("/link_events", json!({"ratios": [[1, 0]], "windows": []}), "/link_events/ratios/0", "3 numbers, not 2"),
+        ("/link_events", json!({"ratios": [[null, 0, 1]], "windows": []}), "/link_events/ratios/0/0", "not null"),
+        ("/link_events", json!({"ratios": [], "windows": []}), "/link_events/ratios", "no link landed"),
+        (
+            "/link_events",
+            json!({"ratios": [[1, 0, 5]], "windows": [{"cells": [[0, 0, 1, 1, 0], [0, 1, 1, 1, 0]]}]}),
+            "/link_events/windows/0",
+            "ascending",
+        ),
     ]
+}
+
+fn table(from: &str, to: &str, counts: Value) -> Value {
+    json!([{"from": from, "to": to, "counts": counts}])
+}
+
+/// A table that ends at the date of the snapshot.
+fn sound_dates(counts: Value) -> Value {
+    table("2026-05-01", "2026-06-01", counts)
 }
 
 #[tokio::test]

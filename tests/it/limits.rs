@@ -25,6 +25,27 @@ async fn more_pairs_than_configured_are_refused() {
 }
 
 #[tokio::test]
+async fn more_rows_of_evidence_than_configured_are_refused() {
+    let service = Service::start_with(|config| {
+        config.limits.transitions = 1;
+        config.limits.link_events = 1;
+    })
+    .await;
+    let rows = json!([[0, 0, 5], [0, 1, 5]]);
+    let body = changed(fit_body(), "/transitions", json!([{"from": "2026-05-01", "to": "2026-06-01", "counts": rows}]));
+    let cells = json!([[0, 0, 1, 1, 0], [1, 1, 1, 1, 1]]);
+    let events = json!({"ratios": [[1, 0, 1], [2, 0, 1]], "windows": [{"cells": cells}]});
+    let body = changed(body, "/link_events", events);
+    let answer = service.post("/v1/fits", &body).await.expect_problem(400, "invalid_request");
+    assert_eq!(
+        answer.places(),
+        ["/transitions/0/counts", "/link_events/ratios", "/link_events/windows/0/cells"],
+        "{}",
+        answer.text
+    );
+}
+
+#[tokio::test]
 async fn more_answers_than_configured_are_refused() {
     let service = Service::start_with(|config| config.limits.cells = 3).await;
     let answer = service.post("/v1/forecasts", &forecast_body()).await.expect_problem(400, "invalid_request");

@@ -1,21 +1,34 @@
-//! Degree counts: a fast way for lists without a fault, and a slow one that finds every fault.
+//! Degree counts and transitions.
 
-use std::fmt;
-
-use serde::de::{DeserializeSeed, Deserializer, Error, IgnoredAny, SeqAccess, Visitor};
 use serde_json::value::RawValue;
 
-use super::number::whole_from_float;
-use super::{At, Faults, kind_of, list, whole};
-use crate::model::{DegreeCounts, MAX_DEGREE};
+use super::rows::{Rows, Whole, rows};
+use super::{At, Faults, whole};
+use crate::model::{DegreeCounts, MAX_DEGREE, Move};
+
+const PAIRS: Rows =
+    Rows { one: "a [degree, nodes] pair", cells: "numbers", several: "pairs", holder: "one snapshot may have" };
+
+const MOVES: Rows = Rows {
+    one: "a [degree before, degree after, nodes] row",
+    cells: "entries",
+    several: "rows",
+    holder: "one table of transitions may have",
+};
 
 /// `[[degree, nodes], …]`, at most `most` pairs.
 pub fn degree_counts(raw: &RawValue, at: At<'_>, most: usize, faults: &mut Faults) -> Option<DegreeCounts> {
-    let fast = Pairs { most }.deserialize(&mut serde_json::Deserializer::from_str(raw.get()));
-    let pairs = match fast {
-        Ok(pairs) => pairs,
-        Err(_) => pairs_with_faults(raw, at, most, faults)?,
-    };
+    let pairs = rows(
+        raw,
+        at,
+        (&PAIRS, most),
+        faults,
+        |(Whole(degree), Whole(nodes))| Some((degree, nodes)),
+        |[degree, nodes], at, faults| {
+            let degree = whole(degree, at.item(0), MAX_DEGREE, faults);
+            degree.zip(whole(nodes, at.item(1), u64::MAX, faults))
+        },
+    )?;
     let found = DegreeCounts::from_pairs(&pairs);
     for fault in found.as_ref().err().into_iter().flatten() {
         let detail = fault.to_string();
@@ -27,93 +40,24 @@ pub fn degree_counts(raw: &RawValue, at: At<'_>, most: usize, faults: &mut Fault
     found.ok()
 }
 
-/// The pairs, when the list turns out to have no fault after all.
-fn pairs_with_faults(raw: &RawValue, at: At<'_>, most: usize, faults: &mut Faults) -> Option<Vec<(u64, u64)>> {
-    let length = serde_json::from_str::<Vec<IgnoredAny>>(raw.get()).map_or(0, |items| items.len());
-    if length > most {
-        faults.add(&at, format!("{length} pairs are more than the {most} that one snapshot may have"));
-        return None;
-    }
-    let mut pairs = Vec::with_capacity(length);
-    list(raw, at, faults, |index, item, faults| pairs.extend(pair(item, at.item(index), faults)))?;
-    (pairs.len() == length).then_some(pairs)
+/// `[[degree before | null, degree after | null, nodes], …]`, at most `most` rows.
+pub fn moves(raw: &RawValue, at: At<'_>, most: usize, faults: &mut Faults) -> Option<Vec<Move>> {
+    type Plain = (Option<Whole>, Option<Whole>, Whole);
+    let plain = |(before, after, Whole(nodes)): Plain| {
+        let degree = |blank: Option<Whole>| blank.map(|Whole(degree)| degree);
+        Some(Move { before: degree(before), after: degree(after), nodes })
+    };
+    rows(raw, at, (&MOVES, most), faults, plain, |[before, after, nodes], at, faults| {
+        let before = degree_or_blank(before, at.item(0), faults);
+        let after = degree_or_blank(after, at.item(1), faults);
+        let nodes = whole(nodes, at.item(2), u64::MAX, faults);
+        Some(Move { before: before?, after: after?, nodes: nodes? })
+    })
 }
 
-fn pair(raw: &RawValue, at: At<'_>, faults: &mut Faults) -> Option<(u64, u64)> {
-    if !raw.get().starts_with('[') {
-        faults.add(&at, format!("a [degree, nodes] pair is wanted here, not {}", kind_of(raw)));
-        return None;
-    }
-    let mut numbers = [None; 2];
-    let length = list(raw, at, faults, |index, item, faults| {
-        if let Some(slot) = numbers.get_mut(index) {
-            let largest = if index == 0 { MAX_DEGREE } else { u64::MAX };
-            *slot = whole(item, at.item(index), largest, faults);
-        }
-    })?;
-    if length != 2 {
-        faults.add(&at, format!("a [degree, nodes] pair has 2 numbers, not {length}"));
-        return None;
-    }
-    numbers[0].zip(numbers[1])
-}
-
-struct Pairs {
-    most: usize,
-}
-
-impl<'de> DeserializeSeed<'de> for Pairs {
-    type Value = Vec<(u64, u64)>;
-
-    fn deserialize<D: Deserializer<'de>>(self, deserializer: D) -> Result<Self::Value, D::Error> {
-        deserializer.deserialize_seq(self)
-    }
-}
-
-impl<'de> Visitor<'de> for Pairs {
-    type Value = Vec<(u64, u64)>;
-
-    fn expecting(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
-        f.write_str("an array of pairs")
-    }
-
-    fn visit_seq<S: SeqAccess<'de>>(self, mut items: S) -> Result<Self::Value, S::Error> {
-        let mut pairs = Vec::new();
-        while let Some((Whole(degree), Whole(nodes))) = items.next_element()? {
-            if pairs.len() == self.most {
-                return Err(S::Error::custom("too many pairs"));
-            }
-            pairs.push((degree, nodes));
-        }
-        Ok(pairs)
-    }
-}
-
-/// A whole number in a list without a fault.
-struct Whole(u64);
-
-impl<'de> serde::Deserialize<'de> for Whole {
-    fn deserialize<D: Deserializer<'de>>(deserializer: D) -> Result<Self, D::Error> {
-        deserializer.deserialize_any(WholeVisitor).map(Self)
-    }
-}
-
-struct WholeVisitor;
-
-impl Visitor<'_> for WholeVisitor {
-    type Value = u64;
-
-    fn expecting(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
-        f.write_str("a whole number")
-    }
-
-    fn visit_u64<E: Error>(self, value: u64) -> Result<u64, E> {
-        Ok(value)
-    }
-
-    fn visit_f64<E: Error>(self, value: f64) -> Result<u64, E> {
-        whole_from_float(value).ok_or_else(|| E::custom("not a whole number"))
-    }
+/// A degree, or null for a node that was not there.
+fn degree_or_blank(raw: &RawValue, at: At<'_>, faults: &mut Faults) -> Option<Option<u64>> {
+    if raw.get() == "null" { Some(None) } else { whole(raw, at, MAX_DEGREE, faults).map(Some) }
 }
 
 #[cfg(test)]
@@ -158,5 +102,21 @@ mod tests {
             let faults = read(text, 3).unwrap_err();
             assert!(faults.len() == 1 && faults[0].0 == place && faults[0].1.contains(words), "{text}: {faults:?}");
         }
+    }
+
+    fn read_moves(text: &str) -> Result<Vec<Move>, Vec<Place>> {
+        let mut faults = Faults::default();
+        let moves = moves(serde_json::from_str(text).unwrap(), At::ROOT, 4, &mut faults);
+        moves.ok_or_else(|| faults.into_parts().0.into_iter().map(|fault| fault.place).collect())
+    }
+
+    #[test]
+    fn a_blank_is_a_null_and_stands_in_the_first_two_places_alone() {
+        let (before, after, nodes) = (None, Some(1), 7);
+        assert_eq!(read_moves("[[null, 1.0, 7]]"), Ok(vec![Move { before, after, nodes }]));
+        assert_eq!(read_moves("[[3, null, 2e0]]"), Ok(vec![Move { before: Some(3), after: None, nodes: 2 }]));
+        let at = |pointers: &[&str]| Err(pointers.iter().map(|&at| Place::Body(at.to_owned())).collect());
+        assert_eq!(read_moves("[[0, 1, null], [1, 2], [\"\", 2, 1], null]"), at(&["/0/2", "/1", "/2/0", "/3"]));
+        assert_eq!(read_moves("[[0,1,1],[0,2,1],[0,3,1],[0,4,1],[0,5,1]]"), at(&[""]));
     }
 }

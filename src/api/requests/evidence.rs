@@ -1,11 +1,13 @@
-//! What is known of the network: degree kind, snapshots, entry degrees.
+//! What is known of the network: degree kind, snapshots, entry degrees, transitions, link events.
 
 use jiff::Timestamp;
 use serde_json::value::RawValue;
 
-use crate::api::decode::{At, Faults, Object, degree_counts, instant, list, object, real, text, whole};
+use crate::api::decode::{
+    At, Faults, Object, degree_counts, instant, link_events, list, moves, object, real, text, whole,
+};
 use crate::config::LimitsConfig;
-use crate::model::{DegreeKind, EntryDegrees, Evidence, MAX_DEGREE, Snapshot};
+use crate::model::{DegreeKind, EntryDegrees, Evidence, EvidenceFault, MAX_DEGREE, Snapshot, Transitions};
 use crate::report::readable;
 
 /// The evidence as far as it could be read.
@@ -24,20 +26,42 @@ pub fn read(body: &Object<'_>, limits: &LimitsConfig, faults: &mut Faults) -> Re
         None => Some(None),
     };
     let (snapshots, latest) = snapshots(body, limits, faults);
+    let transitions = match body.get("transitions") {
+        Some(raw) => transitions(raw, limits, faults),
+        None => Some(Vec::new()),
+    };
+    let root = At::ROOT;
+    let events = match body.get("link_events") {
+        Some(raw) => link_events(raw, root.field("link_events"), limits.link_events, faults).map(Some),
+        None => Some(None),
+    };
     let whole = (|| {
-        let root = At::ROOT;
-        let at = root.field("snapshots");
-        let evidence = Evidence::new(kind?, snapshots?, entry?);
-        for fault in evidence.as_ref().err().into_iter().flatten() {
-            let detail = fault.detail.as_str();
-            match fault.index {
-                Some(index) => faults.add(&at.item(index).field("as_of"), detail),
-                None => faults.add(&at, detail),
-            }
-        }
-        evidence.ok()
+        let evidence = noted(Evidence::new(kind?, snapshots?, entry?), root.field("snapshots"), Some("as_of"), faults)?;
+        let evidence = noted(evidence.with_transitions(transitions?), root.field("transitions"), None, faults)?;
+        Some(match events? {
+            Some(events) => evidence.with_link_events(events),
+            None => evidence,
+        })
     })();
     Reading { whole, latest }
+}
+
+/// What was found, or its faults, each in its item of the list at `at`, in `field` when it has one.
+fn noted<T>(
+    found: Result<T, Vec<EvidenceFault>>,
+    at: At<'_>,
+    field: Option<&'static str>,
+    faults: &mut Faults,
+) -> Option<T> {
+    for fault in found.as_ref().err().into_iter().flatten() {
+        let detail = fault.detail.as_str();
+        match (fault.index, field) {
+            (Some(index), Some(field)) => faults.add(&at.item(index).field(field), detail),
+            (Some(index), None) => faults.add(&at.item(index), detail),
+            (None, _) => faults.add(&at, detail),
+        }
+    }
+    found.ok()
 }
 
 fn degree_kind(body: &Object<'_>, faults: &mut Faults) -> Option<DegreeKind> {
@@ -83,6 +107,39 @@ fn snapshot(
         .required("degree_counts", &at, faults)
         .and_then(|raw| degree_counts(raw, at.field("degree_counts"), limits.degree_counts, faults));
     (as_of.zip(counts).map(|(as_of, counts)| Snapshot { as_of, counts }), as_of)
+}
+
+fn transitions(raw: &RawValue, limits: &LimitsConfig, faults: &mut Faults) -> Option<Vec<Transitions>> {
+    /// One more than there can be periods between snapshots.
+    const MOST_TABLES: usize = 1_000;
+    let root = At::ROOT;
+    let at = root.field("transitions");
+    let mut tables = Vec::new();
+    let length = list(raw, at, faults, |index, item, faults| {
+        if index < MOST_TABLES {
+            tables.extend(table(item, at.item(index), limits, faults));
+        }
+    })?;
+    if length > MOST_TABLES {
+        faults.add(&at, format!("{length} tables are more than the {MOST_TABLES} one request takes"));
+    }
+    (tables.len() == length).then_some(tables)
+}
+
+fn table(raw: &RawValue, at: At<'_>, limits: &LimitsConfig, faults: &mut Faults) -> Option<Transitions> {
+    let body = object(raw, at, &["from", "to", "counts"], faults)?;
+    let [from, to] = ["from", "to"]
+        .map(|name| body.required(name, &at, faults).and_then(|raw| instant(raw, at.field(name), faults)));
+    let counts = at.field("counts");
+    let rows = body.required("counts", &at, faults).and_then(|raw| moves(raw, counts, limits.transitions, faults));
+    let found = Transitions::new(from?, to?, &rows?);
+    for fault in found.as_ref().err().into_iter().flatten() {
+        match fault.index {
+            Some(index) => faults.add(&counts.item(index), fault.detail.as_str()),
+            None => faults.add(&at, fault.detail.as_str()),
+        }
+    }
+    found.ok()
 }
 
 fn entry_degrees(raw: &RawValue, faults: &mut Faults) -> Option<EntryDegrees> {

@@ -4,7 +4,7 @@
 use serde::Serialize;
 use serde_json::json;
 use utoipa::ToSchema;
-use utoipa::openapi::schema::{Array, ArrayBuilder, ObjectBuilder, SchemaType, Type};
+use utoipa::openapi::schema::{Array, ArrayBuilder, ArrayItems, ObjectBuilder, Schema, SchemaType, Type};
 use utoipa::openapi::{KnownFormat, SchemaFormat};
 
 use crate::model::MAX_DEGREE;
@@ -42,6 +42,47 @@ fn whole(least: u32) -> ObjectBuilder {
         .minimum(Some(least))
 }
 
+/// `[[degree before | null, degree after | null, nodes], …]`
+fn move_rows() -> Array {
+    let blank = || {
+        let kinds = SchemaType::from_iter([Type::Integer, Type::Null]);
+        whole(0).schema_type(kinds).maximum(Some(MAX_DEGREE as f64)).build().into()
+    };
+    let says = "`[degree before, degree after, nodes]` rows in any order, no pair of degrees twice; null before: the \
+                nodes arrived since, null after: they departed.";
+    let example = json!([[0, 0, 4900], [0, 1, 300], [null, 0, 1200], [7, null, 2]]);
+    rows(vec![blank(), blank(), whole(0).build().into()]).description(Some(says)).examples([example]).build()
+}
+
+/// `[[ratio, variance, landings], …]`
+fn ratio_rows() -> Array {
+    let says = "`[ratio, variance, landings]` rows: so many links landed on nodes whose degree just before was about \
+                ratio times the mean degree, with this variance of the ratio among them.";
+    let example = json!([[0.5, 0.001, 210], [1.0, 0.002, 340], [8.0, 0.05, 120]]);
+    rows(vec![real(), real(), whole(0).build().into()]).description(Some(says)).examples([example]).build()
+}
+
+/// `[[lowest, highest, landings, node exposure, end exposure], …]`
+fn cell_rows() -> Array {
+    let degree = || whole(0).maximum(Some(MAX_DEGREE as f64)).build().into();
+    let says = "`[lowest degree, highest degree, landings, node exposure, end exposure]` cells in ascending degree: \
+                landings on nodes of these degrees, and the nodes and their link ends just before each landing of \
+                the window, summed over its landings.";
+    let example = json!([[0, 0, 12, 54000.0, 0.0], [1, 3, 30, 22000.0, 41000.0]]);
+    let row = vec![degree(), degree(), whole(0).build().into(), real(), real()];
+    rows(row).description(Some(says)).examples([example]).build()
+}
+
+fn rows(cells: Vec<Schema>) -> ArrayBuilder {
+    let width = cells.len();
+    let row = ArrayBuilder::new().prefix_items(cells).items(ArrayItems::False);
+    ArrayBuilder::new().items(row.min_items(Some(width)).max_items(Some(width)))
+}
+
+fn real() -> Schema {
+    ObjectBuilder::new().schema_type(SchemaType::Type(Type::Number)).minimum(Some(0)).build().into()
+}
+
 /// What a forecast is made from and what is asked of it. Unknown fields are refused. Give either `dates` or `horizon`.
 #[derive(Debug, Clone, PartialEq, Serialize, ToSchema)]
 #[serde(deny_unknown_fields)]
@@ -51,6 +92,15 @@ pub struct ForecastRequestBody {
     /// Degree counts at one date or several, oldest first.
     #[schema(min_items = 1, max_items = 1000)]
     pub snapshots: Vec<SnapshotBody>,
+    /// Between dates, how many nodes went from each degree to each other; oldest first, periods that do not overlap. Where
+    /// a table and a snapshot have a date in common, they must have the same degree counts.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, max_items = 1000)]
+    pub transitions: Option<Vec<TransitionsBody>>,
+    /// Attachment statistics of the time-ordered list of links.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false)]
+    pub link_events: Option<LinkEventsBody>,
     /// Arrivals from the newest snapshot on. Needed with one snapshot; estimated when left out with two or more.
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false)]
@@ -68,11 +118,11 @@ pub struct ForecastRequestBody {
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(schema_with = share_pairs)]
     pub entry_degrees: Option<Vec<(u64, f64)>>,
-    /// Hazard that a node departs, per day.
+    /// Hazard that a node departs, per day; read from transitions, or none, when left out.
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false, minimum = 0, maximum = 1e9, default = 0.0)]
     pub departures_per_node_day: Option<f64>,
-    /// Hazard that a link is lost, per day.
+    /// Hazard that a link is lost, per day; read from transitions, or none, when left out.
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false, minimum = 0, maximum = 1e9, default = 0.0)]
     pub link_losses_per_link_day: Option<f64>,
@@ -92,7 +142,12 @@ pub struct ForecastRequestBody {
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false)]
     pub model: Option<ModelName>,
-    /// A mix to take as given instead of fitting one.
+    /// Evidence to read the mix from; the best there is when left out: snapshots, then transitions, then link events, then
+    /// the one snapshot.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false)]
+    pub evidence: Option<EvidenceName>,
+    /// What to take as given instead of fitting it.
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false)]
     pub fixed: Option<FixedBody>,
@@ -119,6 +174,15 @@ pub struct FitRequestBody {
     /// Degree counts at one date or several, oldest first.
     #[schema(min_items = 1, max_items = 1000)]
     pub snapshots: Vec<SnapshotBody>,
+    /// Between dates, how many nodes went from each degree to each other; oldest first, periods that do not overlap. Where
+    /// a table and a snapshot have a date in common, they must have the same degree counts.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, max_items = 1000)]
+    pub transitions: Option<Vec<TransitionsBody>>,
+    /// Attachment statistics of the time-ordered list of links.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false)]
+    pub link_events: Option<LinkEventsBody>,
     /// Link ends that land on nodes already present with each arrival; read from the data when left out.
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false, minimum = 0, maximum = 1e9)]
@@ -132,11 +196,11 @@ pub struct FitRequestBody {
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false, minimum = 0, maximum = 1e9, default = 0.0)]
     pub links_per_node_day: Option<f64>,
-    /// Hazard that a node departs, per day.
+    /// Hazard that a node departs, per day; read from transitions, or none, when left out.
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false, minimum = 0, maximum = 1e9, default = 0.0)]
     pub departures_per_node_day: Option<f64>,
-    /// Hazard that a link is lost, per day.
+    /// Hazard that a link is lost, per day; read from transitions, or none, when left out.
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false, minimum = 0, maximum = 1e9, default = 0.0)]
     pub link_losses_per_link_day: Option<f64>,
@@ -144,7 +208,12 @@ pub struct FitRequestBody {
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false)]
     pub model: Option<ModelName>,
-    /// A mix to take as given instead of fitting one.
+    /// Evidence to read the mix from; the best there is when left out: snapshots, then transitions, then link events, then
+    /// the one snapshot.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false)]
+    pub evidence: Option<EvidenceName>,
+    /// What to take as given instead of fitting it.
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false)]
     pub fixed: Option<FixedBody>,
@@ -178,6 +247,41 @@ pub struct SnapshotBody {
     /// `[degree, nodes]` pairs in any order, no degree twice: so many nodes have exactly so many links.
     #[schema(schema_with = degree_pairs)]
     pub degree_counts: Vec<(u64, u64)>,
+}
+
+/// Where every node's degree went between two dates.
+#[derive(Debug, Clone, PartialEq, Eq, Serialize, ToSchema)]
+#[serde(deny_unknown_fields)]
+pub struct TransitionsBody {
+    /// The earlier date: RFC 3339, or a bare date for 00:00 UTC.
+    #[schema(examples("2026-05-01"))]
+    pub from: String,
+    /// The later date.
+    #[schema(examples("2026-06-01"))]
+    pub to: String,
+    /// `[degree before, degree after, nodes]` rows; null before: arrived since, null after: departed.
+    #[schema(schema_with = move_rows)]
+    pub counts: Vec<(Option<u64>, Option<u64>, u64)>,
+}
+
+/// What a time-ordered link list tells of attachment: each landing with its target's degree just before, summed up.
+#[derive(Debug, Clone, PartialEq, Serialize, ToSchema)]
+#[serde(deny_unknown_fields)]
+pub struct LinkEventsBody {
+    /// Landings by the ratio of their target's degree to the mean degree.
+    #[schema(schema_with = ratio_rows)]
+    pub ratios: Vec<(f64, f64, u64)>,
+    /// Landings and exposure by degree, stretch by stretch, oldest first.
+    pub windows: Vec<WindowBody>,
+}
+
+/// A stretch of the link list over which the network grew by a few per cent.
+#[derive(Debug, Clone, PartialEq, Serialize, ToSchema)]
+#[serde(deny_unknown_fields)]
+pub struct WindowBody {
+    /// `[lowest degree, highest degree, landings, node exposure, end exposure]` cells.
+    #[schema(schema_with = cell_rows)]
+    pub cells: Vec<(u64, u64, u64, f64, f64)>,
 }
 
 /// How many nodes arrive: `per_day` (and `growth_per_year`), or `segments`.
@@ -238,13 +342,46 @@ pub enum ModelName {
     Preferential,
     /// A share of each.
     Mix,
+    /// A mix whose preferential links follow a power of the degree.
+    Power,
+    /// A mix among the nodes that still draw links.
+    Dormancy,
+    /// A mix among nodes that differ in how fast they grow.
+    GrowthVariance,
 }
 
-/// What to take as given.
-#[derive(Debug, Clone, PartialEq, Serialize, ToSchema)]
+/// What to take as given: any of these, of the last three only one.
+#[derive(Debug, Clone, PartialEq, Default, Serialize, ToSchema)]
 #[serde(deny_unknown_fields)]
 pub struct FixedBody {
     /// Share of landing links that pick their node in proportion to its degree.
-    #[schema(minimum = 0, maximum = 1)]
-    pub preferential_share: f64,
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, minimum = 0, maximum = 1)]
+    pub preferential_share: Option<f64>,
+    /// Power of the degree that preferential links follow; 1 is in proportion.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, minimum = 0, maximum = 2)]
+    pub kernel_exponent: Option<f64>,
+    /// Share of present nodes that draw no links.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, minimum = 0, maximum = 0.99)]
+    pub dormant_share: Option<f64>,
+    /// Variance of the nodes' growth factors, whose mean is 1.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, minimum = 0, maximum = 20)]
+    pub growth_variance: Option<f64>,
+}
+
+/// Evidence that the mix can be read from.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, ToSchema)]
+#[serde(rename_all = "snake_case")]
+pub enum EvidenceName {
+    /// The newest snapshot alone.
+    OneSnapshot,
+    /// How many nodes crossed each degree between snapshots.
+    SuccessiveSnapshots,
+    /// Each node's degree before and after.
+    Transitions,
+    /// Each landing link.
+    LinkEvents,
 }
