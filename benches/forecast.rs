@@ -60,7 +60,7 @@ fn simulate() -> u64 {
     let start = DegreeCounts::from_pairs(&[(0, 1)]).expect("one node");
     let mut network = Simulation::new(&start, forces, 1).expect("a small network");
     network.arrive_many(1_000_000).expect("room");
-    network.degree_counts().link_ends() as u64
+    network.degree_counts().unwrap().link_ends() as u64
 }
 
 fn timed<T>(work: impl FnOnce() -> T) -> (Duration, T) {

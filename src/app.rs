@@ -5,9 +5,10 @@ mod connections;
 mod demo;
 mod offline;
 mod serve;
+mod tally;
 
 use std::fmt;
-use std::io::Write;
+use std::io::{self, BufWriter, Write};
 use std::path::PathBuf;
 use std::process::ExitCode;
 
@@ -17,6 +18,8 @@ use tokio::runtime::Runtime;
 use crate::config::{Config, LogConfig};
 use crate::service::Service;
 use crate::{api, telemetry};
+use offline::Completion;
+use tally::TallyOptions;
 
 pub use serve::{Running, start};
 
@@ -41,10 +44,14 @@ enum Command {
         #[arg(long)]
         once: bool,
     },
+    /// Count a time-ordered link list: degree counts, or all the evidence that a forecast takes
+    Tally(TallyOptions),
     /// Answer one forecast here and now: no server, no database
     Forecast {
         /// Request body, as for POST /v1/forecasts; - reads the standard input
         file: PathBuf,
+        #[command(flatten)]
+        completion: Completion,
         /// Form of the answer
         #[arg(long, value_enum, default_value_t = OutputFormat::Table)]
         format: OutputFormat,
@@ -95,7 +102,7 @@ pub fn run(line: CommandLine) -> ExitCode {
         Err(Stop::Refused(message)) => (message, ExitCode::from(REFUSED)),
     };
     // Nothing is left to tell it to when the standard error stream is gone.
-    let _ = std::io::stderr().write_all(message.as_bytes());
+    let _ = io::stderr().write_all(message.as_bytes());
     code
 }
 
@@ -105,7 +112,8 @@ fn dispatch(line: CommandLine) -> Result<(), Stop> {
     }
     let config = Config::load(line.config.as_deref()).map_err(|error| Stop::failed("settings", error))?;
     match line.command {
-        Command::Forecast { file, format } => offline::forecast(&config, &file, format),
+        Command::Tally(options) => tally::tally(&options),
+        Command::Forecast { file, completion, format } => offline::forecast(&config, &file, &completion, format),
         Command::Openapi => Ok(()),
         Command::Check => check::ready(config.bind),
         Command::Migrate => {
@@ -128,11 +136,15 @@ fn runtime() -> Result<Runtime, Stop> {
     Runtime::new().map_err(|error| Stop::failed("the async runtime", error))
 }
 
-/// Writes to the standard output; a reader that has read enough is no failure.
 fn print(text: &str) -> Result<(), Stop> {
-    let mut out = std::io::stdout().lock();
-    match out.write_all(text.as_bytes()).and_then(|()| out.flush()) {
-        Err(error) if error.kind() != std::io::ErrorKind::BrokenPipe => Err(Stop::failed("standard output", error)),
+    print_with(|out| out.write_all(text.as_bytes()))
+}
+
+/// Writes to the standard output; a reader that has read enough is no failure.
+fn print_with(write: impl FnOnce(&mut dyn Write) -> io::Result<()>) -> Result<(), Stop> {
+    let mut out = BufWriter::new(io::stdout().lock());
+    match write(&mut out).and_then(|()| out.flush()) {
+        Err(error) if error.kind() != io::ErrorKind::BrokenPipe => Err(Stop::failed("standard output", error)),
         _ => Ok(()),
     }
 }

@@ -1,9 +1,11 @@
 //! tailcast forecasts the growth of networks: how many hubs a growing network will have, how sure that is, and what
 //! it means for capacity.
 //!
-//! The core (`numerics`, `model`, `growth`, `fit`, `forecast`, `evaluate`) is plain, synchronous and deterministic.
-//! The boundary (`store`, `service`, `api`, `report`, `app`) needs the feature `server`. DEVELOPERS.md has the map.
+//! The core (`numerics`, `model`, `census`, `growth`, `fit`, `forecast`, `evaluate`) is plain, synchronous and
+//! deterministic. The boundary (`ingest`, `store`, `service`, `api`, `report`, `app`) needs the feature `server`.
+//! DEVELOPERS.md has the map.
 
+pub mod census;
 pub mod evaluate;
 pub mod fit;
 pub mod forecast;
@@ -17,6 +19,8 @@ pub mod api;
 pub mod app;
 #[cfg(feature = "server")]
 pub mod config;
+#[cfg(feature = "server")]
+pub mod ingest;
 #[cfg(feature = "server")]
 pub mod report;
 #[cfg(feature = "server")]

@@ -17,7 +17,7 @@ pub use arrivals::{ArrivalFault, ArrivalPlan, ArrivalSegment};
 pub use counts::{CountsFault, CountsFaultKind, DegreeCounts, DegreeKind, MAX_DEGREE};
 pub use entry::{EntryDegrees, EntryFault};
 pub use estimate::{Estimate, Interval, Warning};
-pub use evidence::{Evidence, EvidenceFault, Snapshot};
+pub use evidence::{Evidence, EvidenceFault, MAX_SNAPSHOTS, Snapshot};
 pub use link_events::{AttachmentCell, AttachmentWindow, LinkEvents, LinkEventsFault, RatioClass};
 pub use parameters::{AttachmentMix, GrowthParameters, ParameterFault};
 pub use plan::{ForecastPlan, Levels, PlanFault, Thresholds};

@@ -8,4 +8,7 @@ pub mod inversion;
 pub mod optimise;
 pub mod quadrature;
 pub mod roots;
+pub mod scoring;
+pub mod sum_tree;
 pub mod tolerances;
+pub mod two_moments;

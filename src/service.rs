@@ -16,18 +16,20 @@ use std::future::Future;
 use tracing::Instrument;
 
 use crate::config::{Config, DatabaseConfig};
+use crate::model::MAX_SNAPSHOTS;
 use crate::store::{Caps, Store, StoreError};
 
 pub use crate::evaluate::OriginRequest;
-pub use crate::fit::{FitRequest, Model, ModelChoice};
+pub use crate::fit::{FitRequest, Fixed, Model, ModelChoice, Rung};
 pub use crate::store::{
     Clash, KeyClaim, NetworkSummary, NewNetwork, RunFilter, RunKind, RunSummary, SnapshotSummary, StoredLinkEvents,
     StoredNetwork, StoredRun, StoredSnapshot, StoredTransitions, TransitionsSummary,
 };
 pub use answers::{
-    AttachmentModel, CandidateAnswer, CountAnswer, DateAnswer, DegreeAnswer, EstimateAnswer, EvidenceKind, FitAnswer,
-    FitReport, FitRun, ForecastAnswer, ForecastRun, GoodnessAnswer, IntervalAnswer, LimitAnswer, TailAnswer,
-    TailPointAnswer, WarningAnswer,
+    AttachmentAnswer, AttachmentModel, CandidateAnswer, CountAnswer, CurvePointAnswer, DateAnswer, DegreeAnswer,
+    EstimateAnswer, EvidenceKind, FitAnswer, FitReport, FitRun, ForecastAnswer, ForecastRun, GoodnessAnswer,
+    IntervalAnswer, LimitAnswer, OutlierClassAnswer, PeriodRatesAnswer, TailAnswer, TailPointAnswer, TransitionsAnswer,
+    WarningAnswer,
 };
 pub use compute::{Question, answer_at_once};
 pub use cpu::CpuPool;
@@ -39,9 +41,6 @@ pub use numbers::{Count, Real, date_text};
 
 /// The name and version every run carries.
 pub const ENGINE: &str = concat!(env!("CARGO_PKG_NAME"), " ", env!("CARGO_PKG_VERSION"));
-
-/// Most snapshots, and tables of transitions, of one network: as many as one piece of evidence takes.
-const MOST_DATES: u64 = 1_000;
 
 /// The use cases over one database.
 #[derive(Debug, Clone)]
@@ -61,7 +60,7 @@ impl Service {
         if config.database.migrate_on_start {
             store.migrate().await?;
         }
-        let caps = Caps { dates: MOST_DATES, rows: config.limits.network_rows as u64 };
+        let caps = Caps { dates: MAX_SNAPSHOTS as u64, rows: config.limits.network_rows as u64 };
         Ok(Self { store, cpu: CpuPool::new(&config.compute), caps })
     }
 

@@ -110,7 +110,7 @@ fn grow_and_fit(setting: &Setting, nodes: u64, seed: u64) -> Fit {
     let mut network = Simulation::new(&start, forces, seed).expect("a small network");
     let snapshot = |network: &Simulation, as_of: &str| Snapshot {
         as_of: as_of.parse().expect("a date"),
-        counts: network.degree_counts(),
+        counts: network.degree_counts().unwrap(),
     };
     network.arrive_many(nodes - 1).expect("room");
     let mut snapshots = vec![snapshot(&network, "2026-01-01T00:00:00Z")];

@@ -22,10 +22,12 @@ use super::decode::{At, Faults, Object, object, real, text, whole};
 use crate::config::LimitsConfig;
 use crate::model::{ArrivalPlan, AttachmentMix, DegreeKind, EntryDegrees, GrowthParameters, ParameterFault};
 use crate::report::readable;
-use crate::service::{FitInputs, FitRequest, ForecastInputs, Label, MAX_SEED, Model, ModelChoice, OriginRequest};
+use crate::service::{
+    FitInputs, FitRequest, Fixed, ForecastInputs, Label, MAX_SEED, Model, ModelChoice, OriginRequest, Rung,
+};
 
 /// Fields of a fit's body.
-pub const FIT_FIELDS: [&str; 13] = [
+pub const FIT_FIELDS: [&str; 14] = [
     "degree_kind",
     "snapshots",
     "transitions",
@@ -36,13 +38,14 @@ pub const FIT_FIELDS: [&str; 13] = [
     "departures_per_node_day",
     "link_losses_per_link_day",
     "model",
+    "evidence",
     "fixed",
     "seed",
     "label",
 ];
 
 /// Fields of a forecast's body.
-pub const FORECAST_FIELDS: [&str; 18] = [
+pub const FORECAST_FIELDS: [&str; 19] = [
     "degree_kind",
     "snapshots",
     "transitions",
@@ -50,6 +53,7 @@ pub const FORECAST_FIELDS: [&str; 18] = [
     "entry_degrees",
     "links_per_arrival",
     "model",
+    "evidence",
     "fixed",
     "seed",
     "label",
@@ -61,6 +65,17 @@ pub const FORECAST_FIELDS: [&str; 18] = [
     "dates",
     "horizon",
     "levels",
+];
+
+/// Fields of what is taken as given.
+pub const FIXED_FIELDS: [&str; 4] = ["preferential_share", "kernel_exponent", "dormant_share", "growth_variance"];
+
+/// Evidence as callers name it.
+const RUNGS: [(&str, Rung); 4] = [
+    ("one_snapshot", Rung::OneSnapshot),
+    ("successive_snapshots", Rung::SuccessiveSnapshots),
+    ("transitions", Rung::Transitions),
+    ("link_events", Rung::LinkEvents),
 ];
 
 /// Seed when none is given.
@@ -93,22 +108,26 @@ fn fit_request(body: &Object<'_>, faults: &mut Faults) -> Option<FitRequest> {
         None => Some(ModelChoice::Auto),
         Some(name) => name.and_then(|name| model_choice(&name, faults)),
     };
-    let fixed_mix = body.get("fixed").and_then(|raw| fixed_mix(raw, faults));
-    if let (Some(_), Some(ModelChoice::Only(Model::Uniform | Model::Preferential))) = (fixed_mix, choice) {
-        let detail = "a given mix goes with the models auto and mix; the model named here says what the mix is already";
-        faults.add(&at.field("fixed"), detail);
+    let rung = match body.get("evidence").map(|raw| text(raw, at.field("evidence"), faults)) {
+        None => Some(None),
+        Some(name) => name.and_then(|name| rung(&name, faults)).map(Some),
+    };
+    let fixed = body.get("fixed").map_or(Some(Fixed::default()), |raw| fixed(raw, faults));
+    if let (Some(fixed), Some(choice)) = (fixed, choice) {
+        check_fixed(fixed, choice, faults);
     }
     let seed = match body.get("seed") {
         Some(raw) => whole(raw, at.field("seed"), MAX_SEED, faults),
         None => Some(DEFAULT_SEED),
     };
     let links_per_arrival = rate(body, "links_per_arrival", faults);
-    let [links_per_node_day, departures_per_node_day, link_losses_per_link_day] =
-        ["links_per_node_day", "departures_per_node_day", "link_losses_per_link_day"]
-            .map(|name| rate(body, name, faults).unwrap_or(0.0));
+    let links_per_node_day = rate(body, "links_per_node_day", faults).unwrap_or(0.0);
+    let [departures_per_node_day, link_losses_per_link_day] =
+        ["departures_per_node_day", "link_losses_per_link_day"].map(|name| rate(body, name, faults));
     Some(FitRequest {
         choice: choice?,
-        fixed_mix,
+        rung: rung?,
+        fixed: fixed?,
         links_per_arrival,
         links_per_node_day,
         departures_per_node_day,
@@ -118,29 +137,80 @@ fn fit_request(body: &Object<'_>, faults: &mut Faults) -> Option<FitRequest> {
 }
 
 fn model_choice(name: &str, faults: &mut Faults) -> Option<ModelChoice> {
-    match name {
+    let choice = match name {
         "auto" => Some(ModelChoice::Auto),
-        "uniform" => Some(ModelChoice::Only(Model::Uniform)),
-        "preferential" => Some(ModelChoice::Only(Model::Preferential)),
-        "mix" => Some(ModelChoice::Only(Model::Mix)),
-        _ => {
-            faults.add(&At::ROOT.field("model"), "the models are auto, uniform, preferential and mix");
-            None
-        }
+        _ => Model::ALL.into_iter().find(|model| model.name() == name).map(ModelChoice::Only),
+    };
+    if choice.is_none() {
+        let names = Model::ALL.map(Model::name).join(", ");
+        faults.add(&At::ROOT.field("model"), format!("the models are auto, {names}"));
     }
+    choice
 }
 
-fn fixed_mix(raw: &RawValue, faults: &mut Faults) -> Option<AttachmentMix> {
+/// The evidence that the mix is to be read from.
+fn rung(name: &str, faults: &mut Faults) -> Option<Rung> {
+    let rung = RUNGS.into_iter().find(|&(known, _)| known == name).map(|(_, rung)| rung);
+    if rung.is_none() {
+        let names = RUNGS.map(|(name, _)| name).join(", ");
+        faults.add(&At::ROOT.field("evidence"), format!("the mix can be read from {names}"));
+    }
+    rung
+}
+
+fn fixed(raw: &RawValue, faults: &mut Faults) -> Option<Fixed> {
     let root = At::ROOT;
     let at = root.field("fixed");
-    let body = object(raw, at, &["preferential_share"], faults)?;
-    let share_at = at.field("preferential_share");
-    let share = real(body.required("preferential_share", &at, faults)?, share_at, faults)?;
-    let mix = AttachmentMix::new(share);
-    if mix.is_none() {
-        faults.add(&share_at, readable(&format!("a share lies between 0 and 1, not at {share}")));
+    let body = object(raw, at, &FIXED_FIELDS, faults)?;
+    let mut number = |name: &'static str| real(body.get(name)?, at.field(name), faults);
+    let [share, exponent, dormant, variance] = FIXED_FIELDS.map(&mut number);
+    let given = FIXED_FIELDS.iter().filter(|name| body.get(name).is_some()).count();
+    if given == 0 {
+        faults.add(&at, format!("nothing is given; the fields are {}", FIXED_FIELDS.join(", ")));
+        return None;
     }
-    mix
+    let mix = share.and_then(AttachmentMix::new);
+    let mut sound = [share, exponent, dormant, variance].iter().flatten().count() == given;
+    let mut check = |field: &'static str, fault: Option<String>| {
+        if let Some(detail) = fault {
+            faults.add(&at.field(field), readable(&detail));
+            sound = false;
+        }
+    };
+    let outside = share.filter(|_| mix.is_none());
+    check("preferential_share", outside.map(|share| format!("a share lies between 0 and 1, not at {share}")));
+    // The model knows the range of the others.
+    let forces = plain_forces(0.0).ok()?;
+    let fault = |found: Result<GrowthParameters, ParameterFault>| found.err().map(|fault| fault.to_string());
+    check("kernel_exponent", fault(forces.clone().with_kernel_exponent(exponent.unwrap_or(1.0))));
+    check("dormant_share", fault(forces.clone().with_dormant_share(dormant.unwrap_or(0.0))));
+    check("growth_variance", fault(forces.with_growth_variance(variance.unwrap_or(0.0))));
+    sound.then_some(Fixed { mix, kernel_exponent: exponent, dormant_share: dormant, growth_variance: variance })
+}
+
+/// What is given must go with the model asked for.
+fn check_fixed(fixed: Fixed, choice: ModelChoice, faults: &mut Faults) {
+    let root = At::ROOT;
+    let at = root.field("fixed");
+    if let (Some(_), ModelChoice::Only(Model::Uniform | Model::Preferential)) = (fixed.mix, choice) {
+        let detail =
+            "a given mix does not go with the models uniform and preferential, which say what the mix is already";
+        faults.add(&at, detail);
+    }
+    let own = [
+        ("kernel_exponent", fixed.kernel_exponent.is_some(), Model::Power),
+        ("dormant_share", fixed.dormant_share.is_some(), Model::Dormancy),
+        ("growth_variance", fixed.growth_variance.is_some(), Model::GrowthVariance),
+    ];
+    let given = own.iter().filter(|(_, given, _)| *given);
+    for (field, _, model) in given.clone() {
+        if !matches!(choice, ModelChoice::Auto) && choice != ModelChoice::Only(*model) {
+            faults.add(&at.field(field), format!("{field} goes with the models auto and {}", model.name()));
+        }
+    }
+    if given.count() > 1 {
+        faults.add(&at, "kernel_exponent, dormant_share and growth_variance exclude each other; give one of them");
+    }
 }
 
 fn label(body: &Object<'_>, faults: &mut Faults) -> Option<Label> {
@@ -156,12 +226,17 @@ fn rate(body: &Object<'_>, name: &'static str, faults: &mut Faults) -> Option<f6
     let at = root.field(name);
     let value = real(body.get(name)?, at, faults)?;
     // The model knows the range of a rate; every rate has the same.
-    let (arrivals, entry) = (ArrivalPlan::constant(0.0).ok()?, EntryDegrees::single(0));
-    match GrowthParameters::new(DegreeKind::Received, AttachmentMix::UNIFORM, arrivals, entry, value) {
+    match plain_forces(value) {
         Ok(_) => Some(value),
         Err(fault) => {
             faults.add(&at, readable(&ParameterFault { field: name, ..fault }.to_string()));
             None
         }
     }
+}
+
+/// Forces with nothing but so many links per arrival, for the ranges that the model accepts.
+fn plain_forces(links_per_arrival: f64) -> Result<GrowthParameters, ParameterFault> {
+    let (entry, arrivals) = (EntryDegrees::single(0), ArrivalPlan::none());
+    GrowthParameters::new(DegreeKind::Received, AttachmentMix::UNIFORM, arrivals, entry, links_per_arrival)
 }

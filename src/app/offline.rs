@@ -1,5 +1,7 @@
 //! `forecast`: the same request body and the same answer as over HTTP, with no server and no database.
 
+mod completion;
+
 use std::fmt::Write as _;
 use std::io::Read;
 use std::path::Path;
@@ -10,9 +12,11 @@ use crate::config::Config;
 use crate::report;
 use crate::service::{self, ServiceError};
 
-/// Answers the request in `file`.
-pub fn forecast(config: &Config, file: &Path, format: OutputFormat) -> Result<(), Stop> {
-    let bytes = read(file)?;
+pub use completion::Completion;
+
+/// Answers the request in `file`, with what `completion` puts over its fields.
+pub fn forecast(config: &Config, file: &Path, completion: &Completion, format: OutputFormat) -> Result<(), Stop> {
+    let bytes = completion.over(read(file)?)?;
     let refused = |error: ApiError| Stop::Refused(in_words(&error.into_problem()));
     let inputs =
         api::read_json(&bytes, |raw, faults| api::read_forecast(raw, &config.limits, faults)).map_err(refused)?;

@@ -1,6 +1,6 @@
 //! One origin: fit the evidence up to a date, then forecast from it.
 
-use crate::fit::{Fit, FitError, FitRequest, fit};
+use crate::fit::{Fit, FitError, FitRequest, Force, Forces, fit};
 use crate::forecast::{DateForecast, Excursion, ForecastError, Scenario, forecast};
 use crate::model::{ArrivalPlan, AttachmentMix, Evidence, ForecastPlan, GrowthParameters, ParameterFault, Warning};
 
@@ -124,12 +124,23 @@ fn scenario(request: &OriginRequest, fit: &Fit) -> Result<Scenario, OriginError>
         links,
     )
     .and_then(|forces| forces.with_links_per_node_day(request.fit.links_per_node_day))
-    .and_then(|forces| forces.with_losses(request.fit.departures_per_node_day, request.fit.link_losses_per_link_day))
     .map_err(OriginError::Rate)?;
+    let forces = under(&fit.forces, &forces, |force| force.value())?;
     let mut excursions = Vec::new();
     let (low, high) = fit.share_excursion;
     if high > low {
         excursions.push(Excursion { low: forces.clone().with_mix(mix(low)), high: forces.clone().with_mix(mix(high)) });
+    }
+    for moved in DIRECTIONS {
+        let (low, high) = moved(&fit.forces).excursion;
+        if high > low {
+            let at = |side: fn(&Force) -> f64| {
+                under(&fit.forces, &forces, |force| {
+                    if std::ptr::eq(force, moved(&fit.forces)) { side(force) } else { force.value() }
+                })
+            };
+            excursions.push(Excursion { low: at(|f| f.excursion.0)?, high: at(|f| f.excursion.1)? });
+        }
     }
     let spread = fit.rate_excursion;
     if spread.links_per_arrival > 0.0 {
@@ -145,4 +156,27 @@ fn scenario(request: &OriginRequest, fit: &Fit) -> Result<Scenario, OriginError>
     // A fit that misses the very flows it was made from will miss the next ones by no less.
     let flow_error = fit.goodness.and_then(|g| g.flow_error).unwrap_or(0.0);
     Ok(Scenario { forces, excursions, model_error: flow_error.max(DEFAULT_MODEL_ERROR) })
+}
+
+/// The forces besides the mix in which a fit may be uncertain.
+const DIRECTIONS: [fn(&Forces) -> &Force; 5] = [
+    |forces| &forces.departures,
+    |forces| &forces.link_losses,
+    |forces| &forces.kernel_exponent,
+    |forces| &forces.dormant_share,
+    |forces| &forces.growth_variance,
+];
+
+/// `base` with the fitted forces at the values that `at` picks.
+fn under(
+    fitted: &Forces,
+    base: &GrowthParameters,
+    at: impl Fn(&Force) -> f64,
+) -> Result<GrowthParameters, OriginError> {
+    base.clone()
+        .with_losses(at(&fitted.departures), at(&fitted.link_losses))
+        .and_then(|forces| forces.with_kernel_exponent(at(&fitted.kernel_exponent)))
+        .and_then(|forces| forces.with_dormant_share(at(&fitted.dormant_share)))
+        .and_then(|forces| forces.with_growth_variance(at(&fitted.growth_variance)))
+        .map_err(OriginError::Rate)
 }

@@ -2,70 +2,96 @@
 
 use super::diagnostics::{flow_goodness, goodness, stationary_tail, warnings as diagnose};
 use super::entry::entry_degrees;
+use super::link_events::{LinkEventFit, fit_link_events};
 use super::one_snapshot::fit_one_snapshot;
-use super::profile::{ESTIMATE_LEVEL, Profile};
+use super::profile::Profile;
+use super::rates::Rates;
 use super::stationary::StationaryLaw;
 use super::successive::{Period, fit_successive, periods};
-use super::{Fit, FitError, FitRequest, Model, RateExcursion, Rung, TailPoint};
+use super::transitions::{TransitionFit, fit_transitions};
+use super::verdict::verdict;
+use super::{Candidate, Fit, FitError, FitRequest, Force, Forces, Model, ModelChoice, Rung, TailPoint};
 use crate::model::{AttachmentMix, EntryDegrees, Estimate, Evidence, Interval, Warning};
 
-/// Relative standard deviation of a rate that only one period shows, beyond counting noise. A stated default: common
-/// practice, no source; ten snapshots of a real network moved by 5 to 20 % a period.
-const ONE_PERIOD_RATE_SPREAD: f64 = 0.1;
-/// A given ℓ this many times the past one, or less than its inverse, is worth a warning.
-const LINKS_MOVED: f64 = 1.5;
-
-/// Infers the attachment mix from the evidence.
+/// Infers the attachment mix, and where the evidence allows the other forces, from the evidence.
 ///
-/// One snapshot is fitted as a stationary degree law; two or more by their crossing flows; a fixed mix is taken as given.
+/// Departures, losses, entry degrees, dormancy, growth variance and the kernel exponent come from transitions (the exponent
+/// also from link events), unless given. The mix comes from crossing flows when there are two snapshots or more, which on real
+/// networks forecasts tails best, else from transitions, link events, or the one snapshot; a fixed mix is taken as given.
 ///
-/// `cancelled` is asked before each evaluation of a flow likelihood.
+/// `cancelled` is asked before each evaluation of a flow likelihood and each fit of a period.
 ///
 /// # Errors
-/// [`FitError::NotIdentified`] when the counts cannot tell the mix, with what would.
+/// [`FitError::NotIdentified`] when the evidence cannot tell what is asked, with what would.
 pub fn fit(evidence: &Evidence, request: &FitRequest, cancelled: &dyn Fn() -> bool) -> Result<Fit, FitError> {
-    let (entry, mut warnings) = entry_degrees(evidence, request.has_losses())?;
+    let moves = match evidence.transitions() {
+        [] => None,
+        _ => Some(fit_transitions(evidence, &candidates_of(request.choice), cancelled)?),
+    };
+    let events = evidence.link_events().map(fit_link_events).transpose()?;
+    let rung = rung(evidence, request)?;
+    let chosen = choose(request, rung, moves.as_ref(), events.as_ref())?;
+    let forces = chosen.forces;
+    let (entry, mut warnings) = match moves.as_ref().and_then(|moves| moves.entry.clone()) {
+        Some(entry) if evidence.entry().is_none() => (entry, Vec::new()),
+        _ => entry_degrees(evidence, forces.has_losses())?,
+    };
     let several = evidence.snapshots().len() > 1;
-    let periods = match periods(evidence, &entry, request) {
+    let periods = match periods(evidence, &entry, &forces, request.links_per_node_day) {
         Ok((periods, skipped)) => {
             warnings.extend(skipped);
             periods
         }
-        // A given mix needs no flows; a single snapshot has none.
-        Err(_) if !several || request.fixed_mix.is_some() => Vec::new(),
+        // Only crossing flows need a period with growth.
+        Err(_) if !several || rung != Rung::SuccessiveSnapshots => Vec::new(),
         Err(error) => return Err(error),
     };
-    let rates = Rates::read(evidence, &entry, &periods, request)?;
+    let rates = Rates::read(evidence, &entry, &periods, request, forces.has_losses())?;
     warnings.extend(rates.warnings.iter().cloned());
     let counts = &evidence.latest().counts;
-    let (rung, profile, tail, goodness) = match request.fixed_mix {
-        Some(mix) => (Rung::Given, given(mix), Vec::new(), None),
-        None if several => {
-            let fit = fit_successive(&periods, request, cancelled)?;
+    let choice = chosen.model.map_or(request.choice, ModelChoice::Only);
+    let (mut profile, tail, goodness) = match rung {
+        Rung::Given => (given(request.fixed.mix.unwrap_or(AttachmentMix::UNIFORM)), Vec::new(), None),
+        Rung::SuccessiveSnapshots => {
+            let fit = fit_successive(&periods, choice, cancelled)?;
             let tail = newest_tail(&periods, fit.profile.share.value)?;
             let goodness = flow_goodness(&tail, counts.nodes(), fit.dispersion, fit.flow_error);
-            (Rung::SuccessiveSnapshots, fit.profile, tail, Some(goodness))
+            (fit.profile, tail, Some(goodness))
         }
-        None => {
-            let past = past_links_per_arrival(evidence, &entry, request)?;
+        Rung::OneSnapshot => {
+            let past = past_links_per_arrival(evidence, &entry, &forces)?;
             let profile = fit_one_snapshot(counts, &entry, past, request)?;
             let mix = AttachmentMix::new(profile.share.value).unwrap_or(AttachmentMix::UNIFORM);
             let tail = stationary_tail(counts, &StationaryLaw::new(mix, past, entry.clone()));
             let goodness = goodness(&tail, counts.nodes(), request.seed);
-            (Rung::OneSnapshot, profile, tail, Some(goodness))
+            (profile, tail, Some(goodness))
+        }
+        Rung::Transitions | Rung::LinkEvents => {
+            let share = chosen.share.unwrap_or(Force::given(0.0));
+            let tail = newest_tail(&periods, share.value())?;
+            (Profile { share: share.estimate, excursion: share.excursion, ..given(AttachmentMix::UNIFORM) }, tail, None)
         }
     };
-    if let Some(goodness) = &goodness {
-        warnings.extend(diagnose(counts, &tail, goodness, request.choice));
+    if let Some(model) = chosen.model {
+        profile.model = model;
     }
-    warnings.extend(periods.last().and_then(|newest| shrinkage(newest, request)));
+    if let Some(candidates) = chosen.candidates {
+        profile.candidates = candidates;
+    }
+    if let Some(goodness) = &goodness {
+        warnings.extend(diagnose(counts, &tail, goodness, choice));
+    }
+    warnings.extend(moves.iter().flat_map(|moves| moves.warnings.iter().cloned()));
+    warnings.extend(events.iter().flat_map(|events| events.warnings.iter().cloned()));
+    warnings.extend(periods.last().and_then(|newest| shrinkage(newest, &forces)));
     if profile.share.value == 1.0 && entry.smallest() == 0 {
         let detail =
             "every landing end picks in proportion to links, so a newcomer that arrives without any never gains one";
         warnings.push(Warning::new("newcomers_never_gain", detail));
     }
-    let tail_exponent = tail_exponent(&profile, rates.exponent_links, entry.mean(), request);
-    Ok(Fit {
+    let linear = profile.model != Model::Power;
+    let tail_exponent = tail_exponent(&profile, rates.exponent_links, entry.mean(), &forces).filter(|_| linear);
+    let mut fit = Fit {
         model: profile.model,
         rung,
         preferential_share: profile.share,
@@ -73,13 +99,125 @@ pub fn fit(evidence: &Evidence, request: &FitRequest, cancelled: &dyn Fn() -> bo
         links_per_arrival: rates.links_per_arrival,
         arrivals_per_day: rates.arrivals_per_day,
         rate_excursion: rates.excursion,
+        forces,
         entry,
         tail_exponent,
         candidates: profile.candidates,
         goodness,
         tail,
+        transitions: moves.map(|moves| moves.summary),
+        attachment: events.map(|events| events.attachment),
+        verdict: String::new(),
         warnings,
-    })
+    };
+    fit.verdict = verdict(&fit);
+    Ok(fit)
+}
+
+/// The rung asked for, or the best that the evidence reaches.
+fn rung(evidence: &Evidence, request: &FitRequest) -> Result<Rung, FitError> {
+    if request.fixed.mix.is_some() {
+        return Ok(Rung::Given);
+    }
+    let several = evidence.snapshots().len() > 1;
+    let reached = |rung: Rung| match rung {
+        Rung::Given => false,
+        Rung::OneSnapshot => true,
+        Rung::SuccessiveSnapshots => several,
+        Rung::Transitions => !evidence.transitions().is_empty(),
+        Rung::LinkEvents => evidence.link_events().is_some(),
+    };
+    match request.rung {
+        Some(rung) if reached(rung) => Ok(rung),
+        Some(rung) => {
+            let missing = match rung {
+                Rung::Given => "fixed.preferential_share",
+                Rung::SuccessiveSnapshots => "a second snapshot",
+                Rung::Transitions => "transitions",
+                Rung::OneSnapshot | Rung::LinkEvents => "link_events",
+            };
+            Err(FitError::NotIdentified {
+                detail: format!("the mix cannot be read from that evidence; give {missing}"),
+            })
+        }
+        None => {
+            let ladder = [Rung::SuccessiveSnapshots, Rung::Transitions, Rung::LinkEvents];
+            Ok(ladder.into_iter().find(|&rung| reached(rung)).unwrap_or(Rung::OneSnapshot))
+        }
+    }
+}
+
+/// Candidates that transitions are asked about.
+fn candidates_of(choice: ModelChoice) -> Vec<Model> {
+    match choice {
+        ModelChoice::Auto => Model::ALL.to_vec(),
+        ModelChoice::Only(model) => vec![model],
+    }
+}
+
+/// What is settled before the mix: the candidate, its own parameter, and the losses.
+struct Chosen {
+    /// None when the rung's own likelihood is to choose.
+    model: Option<Model>,
+    forces: Forces,
+    /// The preferential share that goes with it, on the rungs that fit all at once.
+    share: Option<Force>,
+    candidates: Option<Vec<Candidate>>,
+}
+
+fn choose(
+    request: &FitRequest,
+    rung: Rung,
+    moves: Option<&TransitionFit>,
+    events: Option<&LinkEventFit>,
+) -> Result<Chosen, FitError> {
+    let zero = Force::given(0.0);
+    let given_or = |given: Option<f64>, found: Option<Force>| given.map(Force::given).or(found);
+    let mut forces = Forces {
+        departures: given_or(request.departures_per_node_day, moves.map(|m| m.departures)).unwrap_or(zero),
+        link_losses: given_or(request.link_losses_per_link_day, moves.and_then(|m| m.link_losses)).unwrap_or(zero),
+        kernel_exponent: Force::given(1.0),
+        dormant_share: zero,
+        growth_variance: zero,
+    };
+    let candidates = moves.map(TransitionFit::weighed).or_else(|| {
+        let events = events.filter(|_| rung == Rung::LinkEvents)?;
+        Some(events.candidates.clone())
+    });
+    let fixed = request.fixed;
+    let model = match request.choice {
+        ModelChoice::Only(model) => Some(model),
+        ModelChoice::Auto if fixed.kernel_exponent.is_some() => Some(Model::Power),
+        ModelChoice::Auto if fixed.dormant_share.is_some() => Some(Model::Dormancy),
+        ModelChoice::Auto if fixed.growth_variance.is_some() => Some(Model::GrowthVariance),
+        ModelChoice::Auto if matches!(rung, Rung::Transitions | Rung::LinkEvents) => {
+            let heaviest = candidates.iter().flatten().max_by(|a, b| a.weight.total_cmp(&b.weight));
+            heaviest.map(|candidate| candidate.model)
+        }
+        ModelChoice::Auto => None,
+    };
+    let from_moves = model.and_then(|model| moves?.candidates.iter().find(|c| c.model == model));
+    let own = from_moves.and_then(|candidate| candidate.own);
+    let needed = |given: Option<f64>, found: Option<Force>, what: &str| {
+        given_or(given, found).ok_or_else(|| FitError::NotIdentified {
+            detail: format!("degree counts alone do not tell the {what}; give transitions, or fixed.{what}"),
+        })
+    };
+    match model {
+        Some(Model::Power) => {
+            let found = own.or(events.map(|events| events.attachment.kernel_exponent));
+            forces.kernel_exponent = needed(fixed.kernel_exponent, found, "kernel_exponent")?;
+        }
+        Some(Model::Dormancy) => forces.dormant_share = needed(fixed.dormant_share, own, "dormant_share")?,
+        Some(Model::GrowthVariance) => forces.growth_variance = needed(fixed.growth_variance, own, "growth_variance")?,
+        _ => {}
+    }
+    let share = match rung {
+        Rung::Transitions => from_moves.map(|candidate| candidate.preferential_share),
+        Rung::LinkEvents => model.zip(events).map(|(model, events)| events.share(model)),
+        _ => None,
+    };
+    Ok(Chosen { model, forces, share, candidates })
 }
 
 fn given(mix: AttachmentMix) -> Profile {
@@ -96,12 +234,19 @@ fn given(mix: AttachmentMix) -> Profile {
 ///
 /// # Errors
 /// When that is not positive, or nodes stand below the smallest entry degree, or losses make the law another one.
-fn past_links_per_arrival(evidence: &Evidence, entry: &EntryDegrees, request: &FitRequest) -> Result<f64, FitError> {
+fn past_links_per_arrival(evidence: &Evidence, entry: &EntryDegrees, forces: &Forces) -> Result<f64, FitError> {
     let counts = &evidence.latest().counts;
     let refuse = |detail: String| Err(FitError::NotIdentified { detail });
     let remedy = "give fixed.preferential_share, or a second snapshot";
-    if request.has_losses() {
+    if forces.has_losses() {
         return refuse(format!("one snapshot cannot tell the mix of a network that loses nodes or links; {remedy}"));
+    }
+    let own = [forces.kernel_exponent.value() - 1.0, forces.dormant_share.value(), forces.growth_variance.value()];
+    if own.iter().any(|&value| value != 0.0) {
+        return refuse(format!(
+            "one snapshot is read by the stationary law of a plain mix, which a kernel exponent, dormancy or growth variance \
+             change; {remedy}"
+        ));
     }
     if counts.link_ends() == 0 {
         return refuse(format!("no node has a link, so the counts say nothing of how links attach; {remedy}"));
@@ -132,10 +277,10 @@ fn newest_tail(periods: &[Period], share: f64) -> Result<Vec<TailPoint>, FitErro
 }
 
 /// A warning when tails shrank although nothing is said to leave or to be lost.
-fn shrinkage(newest: &Period, request: &FitRequest) -> Option<Warning> {
+fn shrinkage(newest: &Period, forces: &Forces) -> Option<Warning> {
     let shrunken = newest.shrunken();
     let &(threshold, before, after) = shrunken.first()?;
-    if request.has_losses() {
+    if forces.has_losses() {
         return None;
     }
     let detail = format!(
@@ -148,100 +293,12 @@ fn shrinkage(newest: &Period, request: &FitRequest) -> Option<Warning> {
 }
 
 /// Exponent 1 + (ℓ + ē)/(p·ℓ) that steady growth at these rates leads to; none for p = 0 or with losses.
-fn tail_exponent(profile: &Profile, links: f64, entry_mean: f64, request: &FitRequest) -> Option<Estimate> {
+fn tail_exponent(profile: &Profile, links: f64, entry_mean: f64, forces: &Forces) -> Option<Estimate> {
     let exponent = |share: f64| 1.0 + (links + entry_mean) / (share * links);
-    if request.has_losses() || profile.share.value <= 0.0 || links <= 0.0 {
+    if forces.has_losses() || profile.share.value <= 0.0 || links <= 0.0 {
         return None;
     }
     let interval = profile.share.interval.filter(|i| i.low > 0.0);
     let interval = interval.map(|i| Interval { level: i.level, low: exponent(i.high), high: exponent(i.low) });
     Some(Estimate { value: exponent(profile.share.value), interval })
-}
-
-/// Rates read off the totals, or given.
-struct Rates {
-    links_per_arrival: Estimate,
-    arrivals_per_day: Option<Estimate>,
-    excursion: RateExcursion,
-    /// ℓ that the tail exponent goes with: the fitted law's own.
-    exponent_links: f64,
-    warnings: Vec<Warning>,
-}
-
-impl Rates {
-    fn read(
-        evidence: &Evidence,
-        entry: &EntryDegrees,
-        periods: &[Period],
-        request: &FitRequest,
-    ) -> Result<Self, FitError> {
-        let counts = &evidence.latest().counts;
-        let past = counts.mean_degree() - entry.mean();
-        let only_grows = !request.has_losses() && request.links_per_node_day == 0.0;
-        let mut warnings = Vec::new();
-        let (mut links_per_arrival, mut excursion) = (Estimate::given(past), RateExcursion::default());
-        let mut arrivals_per_day = evidence.periods().next_back().map(|(before, after, days)| {
-            let grown = after.counts.nodes() as f64 - before.counts.nodes() as f64;
-            Estimate::given(grown.max(0.0) / days)
-        });
-        let newest_is_usable = |period: &&Period| std::ptr::eq(period.after(), counts);
-        if arrivals_per_day.is_some() && periods.last().filter(newest_is_usable).is_none() {
-            let detail = "the newest period did not grow, so links per arrival are those of an older one and arrivals are what \
-                          the newest shows";
-            warnings.push(Warning::new("growth_stopped", detail));
-        }
-        if let Some(newest) = periods.last() {
-            let arrived = newest.arrivals_per_day * newest.days;
-            let spread = |rate: fn(&Period) -> f64, counted: f64| {
-                (period_spread(periods, rate).powi(2) + 1.0 / counted.max(1.0)).sqrt()
-            };
-            excursion.arrivals = spread(|p| p.arrivals_per_day, arrived);
-            excursion.links_per_arrival = spread(|p| p.links_per_arrival, arrived * newest.links_per_arrival);
-            links_per_arrival = log_normal(newest.links_per_arrival, excursion.links_per_arrival);
-            if newest_is_usable(&newest) {
-                arrivals_per_day = Some(log_normal(newest.arrivals_per_day, excursion.arrivals));
-            }
-            if periods.len() == 1 {
-                let detail = format!(
-                    "arrivals and links per arrival come from a single period, which cannot show how they vary; {:.0} % is \
-                     assumed",
-                    100.0 * ONE_PERIOD_RATE_SPREAD
-                );
-                warnings.push(Warning::new("rates_from_one_period", detail));
-            }
-        }
-        let fitted = links_per_arrival.value;
-        if let Some(given) = request.links_per_arrival {
-            links_per_arrival = Estimate::given(given);
-            excursion.links_per_arrival = 0.0;
-            if given > 0.0 && fitted > 0.0 && (given / fitted).ln().abs() > LINKS_MOVED.ln() {
-                let detail = format!(
-                    "links_per_arrival is given as {given}, but the counts grew with {fitted:.3}; the forecast uses the given \
-                     value from the last snapshot on"
-                );
-                warnings.push(Warning::new("links_per_arrival_differs", detail));
-            }
-        } else if links_per_arrival.value <= 0.0 || (periods.is_empty() && !only_grows) {
-            let detail = "the counts do not show how many links land per arrival (one snapshot shows it only where links come \
-                          with arrivals and nothing leaves); give links_per_arrival, or snapshots between which the network grew";
-            return Err(FitError::NotIdentified { detail: detail.into() });
-        }
-        let exponent_links =
-            if periods.is_empty() && request.fixed_mix.is_none() { past } else { links_per_arrival.value };
-        Ok(Self { links_per_arrival, arrivals_per_day, excursion, exponent_links, warnings })
-    }
-}
-
-/// Root mean square step of ln(rate) between successive periods; the stated default when there is only one.
-fn period_spread(periods: &[Period], rate: fn(&Period) -> f64) -> f64 {
-    let steps: Vec<f64> = periods.windows(2).map(|pair| (rate(&pair[1]) / rate(&pair[0])).ln().powi(2)).collect();
-    if steps.is_empty() { ONE_PERIOD_RATE_SPREAD } else { (steps.iter().sum::<f64>() / steps.len() as f64).sqrt() }
-}
-
-/// A positive rate with relative standard deviation `spread`, its interval log-normal.
-fn log_normal(value: f64, spread: f64) -> Estimate {
-    const NORMAL_95: f64 = 1.644_853_626_951_472_2; // standard normal quantile at 0.95, for a 90 % interval
-    let factor = (NORMAL_95 * spread).exp();
-    let interval = Interval { level: ESTIMATE_LEVEL, low: value / factor, high: value * factor };
-    Estimate { value, interval: Some(interval) }
 }

@@ -77,7 +77,8 @@ pub(super) fn profile_share(
     let (model, share, excursion) = match choice {
         ModelChoice::Only(Model::Uniform) => (Model::Uniform, Estimate::given(0.0), (0.0, 0.0)),
         ModelChoice::Only(Model::Preferential) => (Model::Preferential, Estimate::given(1.0), (1.0, 1.0)),
-        ModelChoice::Only(Model::Mix) => (Model::Mix, Estimate { value: at, interval: Some(interval) }, excursion),
+        // Candidates with a parameter of their own are mixes once that parameter is known.
+        ModelChoice::Only(_) => (Model::Mix, Estimate { value: at, interval: Some(interval) }, excursion),
         ModelChoice::Auto => {
             let heaviest = candidates.iter().max_by(|a, b| a.weight.total_cmp(&b.weight));
             let (model, value) = heaviest.map_or((Model::Mix, at), |c| (c.model, c.preferential_share));
@@ -97,15 +98,20 @@ fn weighed(candidates: &[(Model, f64, f64)], scale: f64) -> Vec<Candidate> {
         .filter(|&&(_, _, log_likelihood)| log_likelihood.is_finite())
         .map(|&(model, preferential_share, log_likelihood)| {
             let aic = 2.0 * parameters(model) - 2.0 * scale * log_likelihood;
-            Candidate { model, preferential_share, log_likelihood, aic, weight: 0.0 }
+            Candidate { model, preferential_share, parameter: None, log_likelihood, aic, weight: 0.0 }
         })
         .collect();
+    weigh(&mut rows);
+    rows
+}
+
+/// Sets every candidate's AIC weight (Akaike 1978).
+pub(super) fn weigh(rows: &mut [Candidate]) {
     let least = rows.iter().map(|c| c.aic).fold(f64::INFINITY, f64::min);
     let total: f64 = rows.iter().map(|c| (-0.5 * (c.aic - least)).exp()).sum();
-    for row in &mut rows {
+    for row in rows {
         row.weight = (-0.5 * (row.aic - least)).exp() / total;
     }
-    rows
 }
 
 /// Quantile of χ² with one degree of freedom: 2.7055 at 0.9.

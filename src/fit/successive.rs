@@ -1,8 +1,8 @@
 //! Rung 2: successive snapshots, by the flow of nodes across thresholds.
 
 use super::profile::{Profile, profile_share};
-use super::{FitError, FitRequest};
-use crate::growth::{Course, GrowthError, NodeLaw, tail_sum};
+use super::{FitError, Forces, ModelChoice};
+use crate::growth::{Course, GrowthError, NetworkLaw, NodeLaw};
 use crate::model::{
     ArrivalPlan, AttachmentMix, DegreeCounts, DegreeKind, EntryDegrees, Evidence, GrowthParameters, Warning,
 };
@@ -55,12 +55,13 @@ pub(super) struct SuccessiveFit {
 pub(super) fn periods<'a>(
     evidence: &'a Evidence,
     entry: &EntryDegrees,
-    request: &FitRequest,
+    forces: &Forces,
+    links_per_node_day: f64,
 ) -> Result<(Vec<Period<'a>>, Vec<Warning>), FitError> {
     let (mut periods, mut warnings) = (Vec::new(), Vec::new());
     let oldest = (evidence.snapshots().len() - 1).saturating_sub(MOST_PERIODS);
     for (before, after, days) in evidence.periods().skip(oldest) {
-        match Period::read(evidence.kind(), &before.counts, &after.counts, days, entry, request) {
+        match Period::read(evidence.kind(), &before.counts, &after.counts, days, entry, forces, links_per_node_day) {
             Some(period) => periods.push(period),
             None => {
                 let detail = format!(
@@ -92,7 +93,7 @@ pub(super) fn periods<'a>(
 /// networks, and is left out.
 pub(super) fn fit_successive(
     periods: &[Period],
-    request: &FitRequest,
+    choice: ModelChoice,
     cancelled: &dyn Fn() -> bool,
 ) -> Result<SuccessiveFit, FitError> {
     let log_likelihood = |p: f64| {
@@ -138,7 +139,7 @@ pub(super) fn fit_successive(
         // Flows that do not answer to p say nothing of it: its interval is then all of [0, 1].
         Ok(if information > 0.0 { information / (variance * dispersion.max(1.0)) } else { 0.0 })
     };
-    let profile = profile_share(request.choice, SHARE_TOLERANCE, log_likelihood, scale_at)?;
+    let profile = profile_share(choice, SHARE_TOLERANCE, log_likelihood, scale_at)?;
     Ok(SuccessiveFit { profile, dispersion, flow_error })
 }
 
@@ -156,13 +157,19 @@ impl<'a> Period<'a> {
         after: &'a DegreeCounts,
         days: f64,
         entry: &EntryDegrees,
-        request: &FitRequest,
+        given: &Forces,
+        links_per_node_day: f64,
     ) -> Option<Self> {
-        let (departures, losses) = (request.departures_per_node_day, request.link_losses_per_link_day);
+        let (departures, losses) = (given.departures.value(), given.link_losses.value());
         let plan = ArrivalPlan::constant(1.0).ok()?;
         let forces = GrowthParameters::new(kind, AttachmentMix::UNIFORM, plan, entry.clone(), 0.0).ok()?;
-        let forces =
-            forces.with_losses(departures, losses).ok()?.with_links_per_node_day(request.links_per_node_day).ok()?;
+        let forces = forces
+            .with_losses(departures, losses)
+            .and_then(|forces| forces.with_links_per_node_day(links_per_node_day))
+            .and_then(|forces| forces.with_kernel_exponent(given.kernel_exponent.value()))
+            .and_then(|forces| forces.with_dormant_share(given.dormant_share.value()))
+            .and_then(|forces| forces.with_growth_variance(given.growth_variance.value()))
+            .ok()?;
         // dN/dt = A − δN and dK/dt = (ℓ+ē)A − θK at constant rates, solved for A and ℓ from both ends.
         let inflow = |start: f64, end: f64, hazard: f64| {
             let decay = (-hazard * days).exp();
@@ -178,7 +185,7 @@ impl<'a> Period<'a> {
         }
         let arrivals = ArrivalPlan::constant(arrivals_per_day).ok()?;
         let mut forces = forces.with_links_per_arrival(links_per_arrival).ok()?.with_arrivals(arrivals);
-        if request.links_per_node_day > 0.0 {
+        if links_per_node_day > 0.0 {
             // K(t) is linear in ℓ: what ι lands is what ends up beyond the observed total, and ℓ lands that much less.
             let reached = Course::new(before, forces.clone(), days).ok()?.link_ends(days);
             let without = forces.clone().with_links_per_arrival(0.0).ok()?;
@@ -216,8 +223,9 @@ impl<'a> Period<'a> {
             Err(GrowthError::NobodyStarts) => return Ok(vec![Flow { mean: 0.0, kept: 0.0 }; self.thresholds.len()]),
             course => course?,
         };
+        let law = NetworkLaw::at(&course, self.before, self.days)?;
         let flow = |&threshold: &u64| {
-            let sum = tail_sum(&course, self.before, self.days, threshold, Accuracy::Working)?;
+            let sum = law.rough_tail(threshold)?;
             Ok(Flow { mean: sum.mean - sum.kept, kept: sum.kept })
         };
         self.thresholds.iter().map(flow).collect()
@@ -294,7 +302,7 @@ fn tails(law: &NodeLaw, starts: &[(u64, f64)], thresholds: &[u64], survival: f64
 #[cfg(test)]
 mod tests {
     use super::Period;
-    use crate::fit::FitRequest;
+    use crate::fit::{Force, Forces};
     use crate::model::{DegreeCounts, DegreeKind, EntryDegrees};
 
     /// Arrivals and links read off a period, put back into the mean field, end at the period's totals, losses or not.
@@ -306,14 +314,15 @@ mod tests {
             for (departures, losses, per_node) in
                 [(0.0, 0.0, 0.0), (1e-3, 0.0, 0.0), (0.0, 2e-3, 1e-3), (1e-3, 2e-3, 0.0), (0.0, 0.0, 2e-3)]
             {
-                let request = FitRequest {
-                    links_per_node_day: per_node,
-                    departures_per_node_day: departures,
-                    link_losses_per_link_day: losses,
-                    ..FitRequest::default()
+                let forces = Forces {
+                    departures: Force::given(departures),
+                    link_losses: Force::given(losses),
+                    kernel_exponent: Force::given(1.0),
+                    dormant_share: Force::given(0.0),
+                    growth_variance: Force::given(0.0),
                 };
                 let entry = EntryDegrees::single(1);
-                let period = Period::read(kind, &before, &after, 60.0, &entry, &request).unwrap();
+                let period = Period::read(kind, &before, &after, 60.0, &entry, &forces, per_node).unwrap();
                 let course = period.course(0.5).unwrap();
                 assert!((course.nodes(60.0) / after.nodes() as f64 - 1.0).abs() < 1e-12);
                 assert!((course.link_ends(60.0) / after.link_ends() as f64 - 1.0).abs() < 1e-12);

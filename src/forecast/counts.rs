@@ -1,10 +1,10 @@
 //! The law of a forecast count, given its mean and variance, and its quantiles.
 
-use statrs::function::beta::checked_beta_reg;
-use statrs::function::gamma::{checked_gamma_lr, checked_gamma_ur};
+use statrs::function::gamma::checked_gamma_lr;
 
 use crate::model::Interval;
 use crate::numerics::roots::increasing_root;
+use crate::numerics::two_moments::TwoMoments;
 
 /// Means above this take their quantiles from the continuous limit; a whole node then matters less than 10⁻⁵.
 const CONTINUOUS_ABOVE: f64 = 1e5;
@@ -14,8 +14,6 @@ const WIDEST_SPREAD: f64 = 3.0;
 const WILSON_HILFERTY_FROM: f64 = 9.0;
 /// A quantile is sought up to this: 2^63.
 const FARTHEST: f64 = 9.3e18;
-/// Variance within this of the mean, relative: Poisson.
-const POISSON_WITHIN: f64 = 1e-6;
 
 /// A count `floor + R`, R a whole number ≥ 0 with the given mean and variance: negative binomial when the variance exceeds
 /// the mean (a Poisson count whose rate is uncertain), Poisson when they agree, binomial below (present nodes that may or
@@ -76,17 +74,8 @@ impl CountLaw {
         levels.iter().map(interval).collect()
     }
 
-    /// P(R ≤ x) for whole x ≥ 0. Arguments out of the functions' domain would be those of a law at its floor.
     fn distribution(&self, x: f64) -> f64 {
-        let ratio = self.variance / self.mean;
-        if (ratio - 1.0).abs() < POISSON_WITHIN {
-            checked_gamma_ur(x + 1.0, self.mean).unwrap_or(1.0)
-        } else if ratio > 1.0 {
-            checked_beta_reg(self.mean / (ratio - 1.0), x + 1.0, 1.0 / ratio).unwrap_or(1.0)
-        } else {
-            let trials = self.mean / (1.0 - ratio);
-            if x >= trials { 1.0 } else { checked_beta_reg(trials - x, x + 1.0, ratio).unwrap_or(1.0) }
-        }
+        TwoMoments { mean: self.mean, variance: self.variance }.at_most(x)
     }
 
     fn continuous_quantile(&self, probability: f64) -> f64 {

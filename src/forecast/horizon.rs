@@ -1,8 +1,8 @@
 //! Forecasts at each date of a plan.
 
-use super::largest::{largest_degree, quantile};
+use super::largest::{DegreeRange, largest_degree};
 use super::{CountForecast, CountLaw, DateForecast, ForecastError, TailForecast};
-use crate::growth::{Course, TailSum, tail_sum};
+use crate::growth::{Course, GrowthError, NetworkLaw, TailSum};
 use crate::model::{DegreeCounts, ForecastPlan, GrowthParameters};
 use crate::numerics::tolerances::Accuracy;
 
@@ -73,28 +73,35 @@ struct Outlook<'a> {
     cancelled: &'a dyn Fn() -> bool,
 }
 
+/// The network's law at one day, under the central forces and at both ends of each excursion.
+struct Laws<'a> {
+    central: NetworkLaw<'a>,
+    ends: Vec<(NetworkLaw<'a>, NetworkLaw<'a>)>,
+}
+
 impl Outlook<'_> {
     fn at(&self, date: jiff::Timestamp, day: f64) -> Result<DateForecast, ForecastError> {
         let nodes = self.nodes(day);
-        let tail = self.plan.thresholds().iter().map(|&threshold| self.tail(day, threshold, nodes.expected));
+        let law = |course| NetworkLaw::at(course, self.counts, day);
+        let ends = self.ends.iter().map(|(low, high)| Ok((law(low)?, law(high)?)));
+        let laws = Laws { central: law(&self.central)?, ends: ends.collect::<Result<_, GrowthError>>()? };
+        let tail = self.plan.thresholds().iter().map(|&threshold| self.tail(&laws, threshold, nodes.expected));
         let mut tail: Vec<TailForecast> = tail.collect::<Result<_, _>>()?;
         let mut bound = &nodes;
         for row in &mut tail {
             row.size.bound_by(bound);
             bound = &row.size;
         }
-        Ok(DateForecast { date, links: self.link_ends(day), largest_degree: self.largest(day)?, nodes, tail })
+        Ok(DateForecast { date, links: self.link_ends(day), largest_degree: self.largest(&laws)?, nodes, tail })
     }
 
-    fn tail(&self, day: f64, threshold: u64, nodes: f64) -> Result<TailForecast, ForecastError> {
+    fn tail(&self, laws: &Laws, threshold: u64, nodes: f64) -> Result<TailForecast, ForecastError> {
         if (self.cancelled)() {
             return Err(ForecastError::Cancelled);
         }
         let now = self.counts.tail_size(threshold) as f64;
-        let TailSum { kept, mean, variance, .. } =
-            tail_sum(&self.central, self.counts, day, threshold, Accuracy::Full)?;
-        let beyond = self
-            .excursion_variance(|course| Ok(tail_sum(course, self.counts, day, threshold, Accuracy::Working)?.mean))?;
+        let TailSum { kept, mean, variance, .. } = laws.central.tail(threshold, Accuracy::Full)?;
+        let beyond = excursion_variance(&laws.ends, |law| Ok(law.rough_tail(threshold)?.mean))?;
         // Nodes that come past the threshold and nodes that leave the tail are what the model can be wrong about; of a tail
         // that all but vanishes it is not wrong by all that was lost.
         // And a threshold that nearly every node passes leaves little to be wrong about.
@@ -110,7 +117,7 @@ impl Outlook<'_> {
         let certain = if survival == 1.0 { now } else { 0.0 };
         // Arrivals are Poisson; of the present nodes a binomial number stays.
         let sampling = (mean - now * survival) + now * survival * (1.0 - survival);
-        let beyond = self.excursion_variance(|course| Ok(course.nodes(day))).unwrap_or(0.0);
+        let beyond = excursion_variance(&self.ends, |course| Ok(course.nodes(day))).unwrap_or(0.0);
         self.count(now, certain, mean, sampling + beyond)
     }
 
@@ -125,33 +132,36 @@ impl Outlook<'_> {
         let gained = (mean - now * (-forces.end_loss_hazard() * day).exp()).max(0.0);
         let kept = (mean - gained).max(0.0);
         let sampling = per_arrival * gained + kept * (1.0 - kept / now.max(1.0));
-        let beyond = self.excursion_variance(|course| Ok(course.link_ends(day))).unwrap_or(0.0);
+        let beyond = excursion_variance(&self.ends, |course| Ok(course.link_ends(day))).unwrap_or(0.0);
         self.count(now, certain, mean, sampling + beyond)
     }
 
-    fn largest(&self, day: f64) -> Result<super::DegreeForecast, ForecastError> {
+    fn largest(&self, laws: &Laws) -> Result<super::DegreeForecast, ForecastError> {
         if (self.cancelled)() {
             return Err(ForecastError::Cancelled);
         }
-        let log_median = |course: &Course| Ok(quantile(course, self.counts, day, 0.5)?.ln_1p());
-        let gain = (log_median(&self.central)? - (self.counts.largest() as f64).ln_1p()).abs();
-        let variance = self.excursion_variance(log_median)? + (self.model_error * gain).powi(2);
-        largest_degree(&self.central, self.counts, day, self.plan.levels(), variance.sqrt(), self.cancelled)
-    }
-
-    fn excursion_variance(
-        &self,
-        mut value: impl FnMut(&Course) -> Result<f64, ForecastError>,
-    ) -> Result<f64, ForecastError> {
-        let mut variance = 0.0;
-        for (low, high) in &self.ends {
-            variance += (0.5 * (value(high)? - value(low)?)).powi(2);
-        }
-        Ok(variance)
+        let range = DegreeRange::of(self.counts, self.central.parameters().has_losses());
+        let median = range.quantile(&laws.central, 0.5)?;
+        let gain = (median.ln_1p() - (self.counts.largest() as f64).ln_1p()).abs();
+        let shift = range.shift(&laws.central, median)?;
+        let variance = excursion_variance(&laws.ends, shift)? + (self.model_error * gain).powi(2);
+        largest_degree(&laws.central, &range, median, self.plan.levels(), variance.sqrt(), self.cancelled)
     }
 
     fn count(&self, now: f64, certain: f64, mean: f64, variance: f64) -> CountForecast {
         let law = CountLaw::new(certain, mean - certain, variance);
         CountForecast { now, expected: mean, median: law.quantile(0.5), intervals: law.intervals(self.plan.levels()) }
     }
+}
+
+/// Σ over excursions of (½·(value at the high end − value at the low end))².
+fn excursion_variance<T>(
+    ends: &[(T, T)],
+    mut value: impl FnMut(&T) -> Result<f64, ForecastError>,
+) -> Result<f64, ForecastError> {
+    let mut variance = 0.0;
+    for (low, high) in ends {
+        variance += (0.5 * (value(high)? - value(low)?)).powi(2);
+    }
+    Ok(variance)
 }

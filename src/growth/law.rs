@@ -1,10 +1,14 @@
 //! The law of one node's degree: the exact distribution of where a node stands after some days.
 
 mod gain;
+mod mixed;
 mod panel;
+
+pub(crate) use mixed::MixedLaw;
 
 use gain::GainLaw;
 use panel::{LawPanel, barycentric_weights};
+use statrs::function::beta::checked_beta_reg;
 
 use super::mean_field::{Course, GrowthError};
 use crate::numerics::inversion::upper_tail;
@@ -59,21 +63,28 @@ pub struct NodeLaw {
 }
 
 impl NodeLaw {
-    /// The law from day `from` to day `to` of a course.
+    /// The law from day `from` to day `to` of a course, for an active node of growth factor one.
     pub fn between(course: &Course, from: f64, to: f64) -> Self {
+        Self::of_group(course, 1.0, from, to, to)
+    }
+
+    /// The law from day `from` to day `to` of a node with growth factor `factor` that falls dormant at day `until`, and from
+    /// then on only loses links.
+    pub(crate) fn of_group(course: &Course, factor: f64, from: f64, until: f64, to: f64) -> Self {
         let loss = course.parameters().end_loss_hazard();
-        let edges = course.edges(from, to);
+        let edges = if until > from { split(&course.edges(from, until), factor) } else { Vec::new() };
+        let dormant_expansion = (-loss * (to - until)).exp();
         let mut law = Self {
-            expansion: 1.0,
+            expansion: dormant_expansion,
             spread: 0.0,
-            shortfall: -1.0,
+            shortfall: -dormant_expansion,
             losses: loss > 0.0,
             panels: Vec::with_capacity(edges.len()),
         };
-        let mut exponent = 0.0; // R at the end of the panel in hand
+        let mut exponent = -loss * (to - until); // R at the end of the panel in hand
         for pair in edges.windows(2).rev() {
             let (start, days) = (pair[0], pair[1] - pair[0]);
-            let hazards = PANEL.nodes.map(|x| course.hazards(start + days * x));
+            let hazards = PANEL.nodes.map(|x| course.hazards(start + days * x, factor));
             let births = hazards.map(|h| h.preferential);
             let integral = |values: &[f64; PANEL_NODES], weights: &[f64; PANEL_NODES]| -> f64 {
                 days * values.iter().zip(weights).map(|(value, weight)| value * weight).sum::<f64>()
@@ -132,6 +143,9 @@ impl NodeLaw {
         if threshold == 0 {
             return Ok(1.0);
         }
+        if self.panels.is_empty() {
+            return Ok(starts.iter().map(|&(degree, share)| share * self.tail_of_losses(degree, threshold)).sum());
+        }
         let open = if self.losses { starts.len() } else { starts.partition_point(|&(degree, _)| degree < threshold) };
         let certain: f64 = starts[open..].iter().map(|&(_, share)| share).sum();
         let Some(&(reference, _)) = starts[..open].last() else { return Ok(certain) };
@@ -146,6 +160,22 @@ impl NodeLaw {
         let law = GainLaw { law: self, reference: reference as f64, below: &below };
         let gain = threshold as f64 - reference as f64;
         Ok(certain + share * upper_tail(&law, gain, accuracy)?)
+    }
+
+    /// P(at least `threshold` of `degree` links are kept), for a node that gains none: binomial.
+    fn tail_of_losses(&self, degree: u64, threshold: u64) -> f64 {
+        match (degree.checked_sub(threshold), self.expansion < 1.0) {
+            (None, _) => 0.0,
+            (Some(_), false) => 1.0,
+            (Some(spare), true) => {
+                checked_beta_reg(threshold as f64, spare as f64 + 1.0, self.expansion).unwrap_or(0.0)
+            }
+        }
+    }
+
+    /// Whether links may be lost.
+    pub(crate) fn can_fall(&self) -> bool {
+        self.losses
     }
 
     /// Expected degree at the end of a node of degree `degree` at the start.
@@ -167,4 +197,16 @@ impl NodeLaw {
     fn nodes(&self) -> impl Iterator<Item = (f64, f64)> + '_ {
         self.panels.iter().flat_map(|p| p.spread.iter().copied().zip(p.immigration.iter().copied()))
     }
+}
+
+/// The mesh is made for nodes of growth factor one: faster ones need panels that are shorter in proportion, or the
+/// interpolation in C breaks down.
+fn split(edges: &[f64], factor: f64) -> Vec<f64> {
+    let pieces = factor.ceil().max(1.0);
+    let mut finer = edges.first().copied().into_iter().collect::<Vec<_>>();
+    for pair in edges.windows(2) {
+        finer.extend((1..pieces as u32).map(|i| pair[0] + (pair[1] - pair[0]) * f64::from(i) / pieces));
+        finer.push(pair[1]);
+    }
+    finer
 }

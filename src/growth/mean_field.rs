@@ -1,5 +1,6 @@
 //! The network's totals over time: nodes N(t) and link ends K(t).
 
+use super::attraction::{Attraction, GrowthFactor, growth_factors};
 use crate::model::{DegreeCounts, GrowthParameters};
 use crate::numerics::elementary::exp_m1_ratio;
 use crate::numerics::inversion::InversionError;
@@ -46,6 +47,17 @@ pub enum GrowthError {
         /// Day reached.
         reached: f64,
     },
+    /// An ordinary differential equation could not be solved to its tolerance.
+    #[error(
+        "the growth equations could not be integrated from day {from:.3} to day {to:.3}; check that rates are per day, or ask \
+         for nearer dates"
+    )]
+    Integration {
+        /// Where the step began.
+        from: f64,
+        /// Where it should have ended.
+        to: f64,
+    },
     /// A tail probability could not be computed.
     #[error(transparent)]
     Inversion(#[from] InversionError),
@@ -76,6 +88,8 @@ pub struct Course {
     parameters: GrowthParameters,
     panels: Vec<Panel>,
     horizon: f64,
+    growth_factors: Vec<GrowthFactor>,
+    attraction: Attraction,
 }
 
 /// The state at a panel's start; within it the arrival rate is one exponential.
@@ -111,7 +125,9 @@ impl Course {
         if share > STARTS_UP_TO && lands && link_ends == 0.0 && parameters.entry.mean() == 0.0 {
             return Err(GrowthError::NobodyStarts);
         }
-        let mut course = Self { parameters, panels: Vec::new(), horizon };
+        let growth_factors = growth_factors(parameters.growth_variance());
+        let attraction = Attraction::default();
+        let mut course = Self { parameters, panels: Vec::new(), horizon, growth_factors, attraction };
         let (mut start, mut nodes, mut link_ends) = (0.0, counts.nodes() as f64, link_ends);
         loop {
             let arrival_rate = course.parameters.arrivals.rate(start);
@@ -124,7 +140,9 @@ impl Course {
             }
             if end >= horizon {
                 let (nodes, link_ends) = course.advance(&panel, horizon - start);
-                return course.check_countable(horizon, nodes, link_ends).map(|()| course);
+                course.check_countable(horizon, nodes, link_ends)?;
+                course.attraction = Attraction::along(&course)?;
+                return Ok(course);
             }
             if course.panels.len() >= MESH_MAX_PANELS {
                 return Err(GrowthError::TooFast { reached: end, horizon });
@@ -165,16 +183,41 @@ impl Course {
         (-self.parameters.departure_hazard() * days).exp()
     }
 
-    pub(crate) fn hazards(&self, day: f64) -> Hazards {
+    /// Hazards of an active node of growth factor `factor` (η). Landing ends share themselves out among active nodes alone:
+    /// (1−d)·N of them, with attraction·K link ends weighed by their growth factors.
+    pub(crate) fn hazards(&self, day: f64, factor: f64) -> Hazards {
         let (nodes, link_ends) = self.totals(day);
         let p = self.parameters.mix.preferential_share();
-        let arrivals = self.parameters.arrivals.rate(day);
-        let landing = self.parameters.links_per_arrival() * arrivals + self.parameters.links_per_node_day() * nodes;
+        let landing = self.landing(day, nodes);
+        let nodes = nodes * (1.0 - self.parameters.dormant_share());
+        let attracting = link_ends * self.attraction.at(day);
         Hazards {
-            uniform: (1.0 - p) * landing / nodes,
-            preferential: if p > 0.0 { p * landing / link_ends } else { 0.0 },
-            ratio: if p > 0.0 { (1.0 - p) * link_ends / (p * nodes) } else { 0.0 },
+            uniform: factor * (1.0 - p) * landing / nodes,
+            preferential: if p > 0.0 { factor * p * landing / attracting } else { 0.0 },
+            ratio: if p > 0.0 { (1.0 - p) * attracting / (p * nodes) } else { 0.0 },
         }
+    }
+
+    /// L = ℓ·A + ι·N, link ends landing on present nodes a day.
+    pub(super) fn landing(&self, day: f64, nodes: f64) -> f64 {
+        self.parameters.links_per_arrival() * self.parameters.arrivals.rate(day)
+            + self.parameters.links_per_node_day() * nodes
+    }
+
+    /// The growth factors that stand for the whole distribution, with their shares of the nodes.
+    pub(crate) fn growth_factors(&self) -> &[GrowthFactor] {
+        &self.growth_factors
+    }
+
+    /// Probability that a node active at day `from` is active still at day `to`, given that it stays.
+    pub(crate) fn still_active(&self, from: f64, to: f64) -> f64 {
+        let kappa = self.parameters.dormancy_hazard();
+        if kappa == 0.0 {
+            return 1.0;
+        }
+        // ∫κ·A/N = κ·(ln N + δt): what arrives is growth plus replacement.
+        let arrived = (self.nodes(to) / self.nodes(from)).ln() + self.parameters.departure_hazard() * (to - from);
+        (-kappa * arrived).exp()
     }
 
     /// Edges of the mesh within [from, to], both included. Where the course starts without links, the first, vanishing
@@ -213,7 +256,7 @@ impl Course {
         edges
     }
 
-    fn totals(&self, day: f64) -> (f64, f64) {
+    pub(super) fn totals(&self, day: f64) -> (f64, f64) {
         let after = self.panels.partition_point(|p| p.start <= day);
         let panel = &self.panels[after.saturating_sub(1)];
         self.advance(panel, day - panel.start)
@@ -236,7 +279,7 @@ impl Course {
     }
 
     /// θ: hazard at which link ends vanish from K, a departing node's own included.
-    fn degree_loss(&self) -> f64 {
+    pub(super) fn degree_loss(&self) -> f64 {
         self.parameters.end_loss_hazard() + self.parameters.departure_hazard()
     }
 

@@ -1,10 +1,14 @@
 //! Exact event-by-event simulation of the same network, seeded.
 
+mod members;
+
 use rand::rngs::SmallRng;
 use rand::{RngExt, SeedableRng};
 use rand_distr::{Distribution, Poisson};
 
-use crate::model::{DegreeCounts, GrowthParameters};
+use members::Members;
+
+use crate::model::{CountsFault, DegreeCounts, GrowthParameters, Move};
 
 /// Most nodes and most link ends a simulation holds in memory: node indices are 32-bit.
 const MAX_HELD: u64 = 1 << 31;
@@ -18,16 +22,16 @@ pub enum SimulationError {
         /// Nodes or link ends asked for.
         held: u128,
     },
-    /// Losses are not simulated.
-    #[error("departures and link losses are not simulated")]
-    Losses,
 }
 
 /// A growing network, event by event: nodes arrive as a Poisson process at the planned rate, and with each arrival ℓ link
 /// ends land on nodes already present (a fractional ℓ lands its whole part and one more with the fraction's
-/// probability); further ends land at rate ι per present node. Each end picks its node by the attachment mix.
+/// probability); further ends land at rate ι per present node. Each end picks its node by the attachment mix among the active
+/// nodes. Nodes depart and ends are lost one by one, in continuous time; with each arrival every active node falls dormant
+/// with probability κ/N. A node's growth factor is drawn when it arrives, or when the simulation starts.
 ///
-/// While no node has a link, an end that would pick in proportion to degree picks uniformly.
+/// While no active node has a link, an end that would pick in proportion to degree picks uniformly; while none is active, ends
+/// land nowhere.
 ///
 /// ```
 /// use tailcast::growth::Simulation;
@@ -39,14 +43,12 @@ pub enum SimulationError {
 /// let start = DegreeCounts::from_pairs(&[(0, 10), (1, 5)]).unwrap();
 /// let mut network = Simulation::new(&start, forces, 7).unwrap();
 /// network.run_until(100.0).unwrap();
-/// let counts = network.degree_counts();
+/// let counts = network.degree_counts().unwrap();
 /// assert_eq!(counts.link_ends(), 5 + 3 * u128::from(counts.nodes() - 15));
 /// ```
 pub struct Simulation {
     parameters: GrowthParameters,
-    degrees: Vec<u64>,
-    /// The node at each link end: a uniform pick from it is a pick in proportion to degree.
-    ends: Vec<u32>,
+    members: Members,
     day: f64,
     rng: SmallRng,
 }
@@ -55,37 +57,51 @@ impl Simulation {
     /// A network with `counts` at day 0, grown under `parameters` with random numbers from `seed`.
     ///
     /// # Errors
-    /// When the network would not fit in memory, or loses nodes or links.
+    /// When the network would not fit in memory.
     pub fn new(counts: &DegreeCounts, parameters: GrowthParameters, seed: u64) -> Result<Self, SimulationError> {
         let held = u128::from(counts.nodes()).max(counts.link_ends());
         if held > u128::from(MAX_HELD) {
             return Err(SimulationError::TooLarge { held });
         }
-        if parameters.has_losses() {
-            return Err(SimulationError::Losses);
-        }
-        let mut network = Self {
-            parameters,
-            degrees: Vec::with_capacity(counts.nodes() as usize),
-            ends: Vec::with_capacity(counts.link_ends() as usize),
-            day: 0.0,
-            rng: SmallRng::seed_from_u64(seed),
-        };
+        let members = Members::new(&parameters, counts);
+        let mut network = Self { parameters, members, day: 0.0, rng: SmallRng::seed_from_u64(seed) };
+        let dormant = network.parameters.dormant_share();
         for (degree, nodes) in counts.iter() {
             for _ in 0..nodes {
-                network.add_node(degree);
+                let active = dormant == 0.0 || network.rng.random::<f64>() >= dormant;
+                network.members.join(degree, active, &mut network.rng);
             }
         }
+        network.mark();
         Ok(network)
     }
 
     /// Today's degree counts.
-    pub fn degree_counts(&self) -> DegreeCounts {
-        let mut sorted = self.degrees.clone();
+    ///
+    /// # Errors
+    /// When every node has departed.
+    pub fn degree_counts(&self) -> Result<DegreeCounts, Vec<CountsFault>> {
+        let mut sorted = self.members.degrees.clone();
         sorted.sort_unstable();
         let pairs: Vec<(u64, u64)> = sorted.chunk_by(|a, b| a == b).map(|run| (run[0], run.len() as u64)).collect();
-        // A simulation starts from a network with at least one node, and never loses one: the pairs are sound.
-        DegreeCounts::from_pairs(&pairs).unwrap_or_else(|_| unreachable!("a simulated network has nodes"))
+        DegreeCounts::from_pairs(&pairs)
+    }
+
+    /// Remembers every node's degree of today, for [`Self::moves`].
+    pub fn mark(&mut self) {
+        self.members.marked = self.members.degrees.iter().copied().map(Some).collect();
+        self.members.departed.clear();
+    }
+
+    /// How many nodes went from which degree at the last mark (the start, when there was none) to which today.
+    pub fn moves(&self) -> Vec<Move> {
+        let present =
+            self.members.marked.iter().zip(&self.members.degrees).map(|(&before, &after)| (before, Some(after)));
+        let departed = self.members.departed.iter().map(|&before| (Some(before), None));
+        let mut sorted: Vec<_> = present.chain(departed).collect();
+        sorted.sort_unstable();
+        let runs = sorted.chunk_by(|a, b| a == b);
+        runs.map(|run| Move { before: run[0].0, after: run[0].1, nodes: run.len() as u64 }).collect()
     }
 
     /// Grows the network to `day`; does nothing when that is past.
@@ -96,20 +112,16 @@ impl Simulation {
         // The cumulative arrivals of a Poisson process are exponential steps of mean one: walk them on that clock.
         let planned = self.parameters.arrivals.arrivals_between(self.day, day);
         let arrivals = draw_poisson(planned, &mut self.rng);
-        let per_node = self.parameters.links_per_node_day();
-        if per_node == 0.0 {
-            for _ in 0..arrivals {
-                self.arrive()?;
-            }
+        if self.quiet_between_arrivals() {
+            self.arrive_many(arrivals)?;
         } else {
             let mut times: Vec<f64> = (0..arrivals).map(|_| self.draw_arrival_time(day)).collect();
             times.sort_by(f64::total_cmp);
             for time in times {
-                self.land_between(self.day, time)?;
+                self.pass_until(time)?;
                 self.arrive()?;
-                self.day = time;
             }
-            self.land_between(self.day, day)?;
+            self.pass_until(day)?;
         }
         self.day = self.day.max(day);
         Ok(())
@@ -130,38 +142,56 @@ impl Simulation {
         self.land(landing)?;
         let entry = self.draw_entry();
         self.check_room(entry)?;
-        self.add_node(entry);
+        let kappa = self.parameters.dormancy_hazard();
+        if kappa > 0.0 {
+            let active = self.members.active_nodes() as f64 / self.members.degrees.len() as f64;
+            for _ in 0..draw_poisson(kappa * active, &mut self.rng) {
+                self.members.put_to_sleep(&mut self.rng);
+            }
+        }
+        self.members.join(entry, true, &mut self.rng);
         Ok(())
     }
 
     /// Lands `count` ends at once: all pick from the state before the first of them.
     fn land(&mut self, count: u64) -> Result<(), SimulationError> {
         self.check_room(count)?;
-        let (nodes, ends) = (self.degrees.len(), self.ends.len());
         let share = self.parameters.mix.preferential_share();
-        for _ in 0..count {
-            let preferential = ends > 0 && self.rng.random::<f64>() < share;
-            let node = match preferential {
-                true => self.ends[self.rng.random_range(0..ends)],
-                false => self.rng.random_range(0..nodes) as u32,
-            };
-            self.degrees[node as usize] += 1;
-            self.ends.push(node);
-        }
+        self.members.land(count, share, &mut self.rng);
         Ok(())
     }
 
-    /// Ends that land at rate ι per node between two arrivals, one by one.
-    fn land_between(&mut self, from: f64, to: f64) -> Result<(), SimulationError> {
-        let mean = self.parameters.links_per_node_day() * self.degrees.len() as f64 * (to - from);
-        let count = draw_poisson(mean, &mut self.rng);
-        (0..count).try_for_each(|_| self.land(1))
+    /// Whether nothing happens but arrivals and what lands with them.
+    fn quiet_between_arrivals(&self) -> bool {
+        self.parameters.links_per_node_day() == 0.0 && !self.parameters.has_losses()
     }
 
-    fn add_node(&mut self, degree: u64) {
-        let node = self.degrees.len() as u32;
-        self.degrees.push(degree);
-        self.ends.extend(std::iter::repeat_n(node, degree as usize));
+    /// Departures, lost ends and ends that land at rate ι per node, one by one until `time`, with exponential waiting times
+    /// (Gillespie 1977).
+    fn pass_until(&mut self, time: f64) -> Result<(), SimulationError> {
+        let (per_node, departure, loss) = (
+            self.parameters.links_per_node_day(),
+            self.parameters.departure_hazard(),
+            self.parameters.end_loss_hazard(),
+        );
+        loop {
+            let (nodes, ends) = (self.members.degrees.len() as f64, self.members.link_ends as f64);
+            let total = (per_node + departure) * nodes + loss * ends;
+            self.day += -(1.0 - self.rng.random::<f64>()).ln() / total;
+            if self.day.is_nan() || self.day >= time {
+                // The waiting time has no memory: what was not due before `time` starts anew.
+                self.day = time;
+                return Ok(());
+            }
+            let pick = self.rng.random::<f64>() * total;
+            if pick < per_node * nodes {
+                self.land(1)?;
+            } else if pick < (per_node + departure) * nodes {
+                self.members.depart(&mut self.rng);
+            } else {
+                self.members.lose_end(&mut self.rng);
+            }
+        }
     }
 
     fn draw_entry(&mut self) -> u64 {
@@ -196,7 +226,7 @@ impl Simulation {
     }
 
     fn check_room(&self, more: u64) -> Result<(), SimulationError> {
-        let held = u128::from(more) + self.ends.len().max(self.degrees.len()) as u128;
+        let held = u128::from(more) + u128::from(self.members.link_ends).max(self.members.degrees.len() as u128);
         if held > u128::from(MAX_HELD) { Err(SimulationError::TooLarge { held }) } else { Ok(()) }
     }
 }

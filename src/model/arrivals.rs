@@ -67,6 +67,11 @@ impl ArrivalPlan {
         Self::from_segments(&[ArrivalSegment { from_day: 0.0, per_day, growth_per_year: 0.0 }])
     }
 
+    /// Nobody arrives.
+    pub fn none() -> Self {
+        Self { segments: vec![ArrivalSegment { from_day: 0.0, per_day: 0.0, growth_per_year: 0.0 }] }
+    }
+
     /// A plan of segments in ascending `from_day`; the first must start at or before day 0.
     ///
     /// # Errors

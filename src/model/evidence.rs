@@ -7,7 +7,7 @@ use jiff::Timestamp;
 use super::{DegreeCounts, DegreeKind, EntryDegrees, LinkEvents, Transitions, days_between};
 
 /// Most snapshots in one piece of evidence.
-const MAX_SNAPSHOTS: usize = 1_000;
+pub const MAX_SNAPSHOTS: usize = 1_000;
 
 /// Degree counts at a date.
 #[derive(Debug, Clone, PartialEq)]
@@ -77,7 +77,8 @@ impl Evidence {
         Ok(Self { kind, snapshots, entry, transitions: Vec::new(), link_events: None })
     }
 
-    /// The same with `transitions`, oldest first, periods that do not overlap.
+    /// The same with `transitions`, oldest first, periods that do not overlap. Their dates become snapshots, where there is none
+    /// of that date.
     ///
     /// # Errors
     /// Periods out of order or overlapping; a table whose counts at a date are not those of the snapshot of that date; a
@@ -120,6 +121,15 @@ impl Evidence {
         }
         if !faults.is_empty() {
             return Err(faults);
+        }
+        for (date, counts) in
+            transitions.iter().flat_map(|t| [(t.from(), t.counts_before()), (t.to(), t.counts_after())])
+        {
+            let place = self.snapshots.partition_point(|snapshot| snapshot.as_of < date);
+            let known = self.snapshots.get(place).is_some_and(|snapshot| snapshot.as_of == date);
+            if let Some(counts) = counts.filter(|_| !known) {
+                self.snapshots.insert(place, Snapshot { as_of: date, counts });
+            }
         }
         self.transitions = transitions;
         Ok(self)

@@ -1,5 +1,6 @@
 //! Gauss–Legendre quadrature on panels, and adaptive integration by halving.
 
+use std::num::NonZeroUsize;
 use std::sync::LazyLock;
 
 use gauss_quad::GaussLegendre;
@@ -25,9 +26,10 @@ pub static PANEL: LazyLock<PanelRule> = LazyLock::new(PanelRule::new);
 
 impl PanelRule {
     fn new() -> Self {
-        let mut pairs: Vec<(f64, f64)> = GaussLegendre::new(PANEL_NODES)
-            .map(|rule| rule.into_node_weight_pairs())
-            .unwrap_or_default()
+        const DEGREE: NonZeroUsize = NonZeroUsize::new(PANEL_NODES).unwrap();
+        let mut pairs: Vec<(f64, f64)> = GaussLegendre::new(DEGREE)
+            .into_node_weight_pairs()
+            .into_vec()
             .into_iter()
             .map(|(node, weight)| (0.5 * (1.0 + node), 0.5 * weight))
             .collect();

@@ -66,3 +66,12 @@ pub const MESH_MAX_PANELS: usize = 600;
 
 /// A tail of this many expected nodes or fewer is zero for every purpose.
 pub const TAIL_ZERO: f64 = 1e-18;
+
+/// Relative and absolute tolerance of the growth equations that have no closed form, a step.
+pub const ODE_TOLERANCE: f64 = 1e-11;
+
+/// Steps of likelihood scoring; from the starts used, 5 to 20 are enough.
+pub const SCORING_MAX_STEPS: usize = 100;
+/// A step that raises a log-likelihood by less than this is the last: estimates are then within a thousandth of their
+/// standard errors of the maximum.
+pub const SCORING_GAIN: f64 = 1e-6;

@@ -51,11 +51,16 @@ pub fn mix_in_words(fit: &FitReport) -> String {
             "{}{interval} of links land in proportion to the links a node has, the rest on any node alike.",
             percent(share.estimate.0)
         ),
+        AttachmentModel::Power | AttachmentModel::Dormancy | AttachmentModel::GrowthVariance => {
+            format!("{} Preferential share {}{interval}.", fit.verdict, percent(share.estimate.0))
+        }
     };
     let evidence = match fit.evidence {
         EvidenceKind::Given => "The mix was given, not fitted.",
         EvidenceKind::OneSnapshot => "Read from one snapshot, as if the network had always grown this way.",
         EvidenceKind::SuccessiveSnapshots => "Read from what changed between snapshots.",
+        EvidenceKind::Transitions => "Read from each node's degree before and after.",
+        EvidenceKind::LinkEvents => "Read from each landing link.",
     };
     format!("{mix} {evidence}")
 }

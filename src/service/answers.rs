@@ -78,6 +78,10 @@ pub struct FitAnswer {
     pub fit: FitReport,
     /// Observed against fitted tail of the newest snapshot.
     pub tail: Vec<TailPointAnswer>,
+    /// What the transitions tell by themselves; null without them.
+    pub transitions: Option<TransitionsAnswer>,
+    /// What the link list tells by itself; null without link events.
+    pub attachment: Option<AttachmentAnswer>,
     /// What was seen in these inputs that the reader must know before acting.
     pub warnings: Vec<WarningAnswer>,
     /// What holds for every fit.
@@ -97,6 +101,16 @@ pub struct FitReport {
     pub links_per_arrival: EstimateAnswer,
     /// Arrivals a day over the newest period; null when there is one snapshot.
     pub arrivals_per_day: Option<EstimateAnswer>,
+    /// Hazard that a node departs, per day; null when neither given nor read from transitions.
+    pub departures_per_node_day: Option<EstimateAnswer>,
+    /// Hazard that a link is lost, per day; null when neither given nor read from transitions.
+    pub link_losses_per_link_day: Option<EstimateAnswer>,
+    /// Power of the degree that preferential links follow; null but under the power model.
+    pub kernel_exponent: Option<EstimateAnswer>,
+    /// Share of present nodes that draw no links; null but under dormancy.
+    pub dormant_share: Option<EstimateAnswer>,
+    /// Variance of the nodes' growth factors; null but under growth variance.
+    pub growth_variance: Option<EstimateAnswer>,
     /// Exponent of the degree law's tail; null when the tail falls faster than any power.
     pub tail_exponent: Option<EstimateAnswer>,
     /// `[degree, share]` pairs: the degrees newcomers arrive with.
@@ -106,6 +120,8 @@ pub struct FitReport {
     pub candidates: Vec<CandidateAnswer>,
     /// How well the fitted law reproduces the counts; null when nothing was fitted.
     pub goodness: Option<GoodnessAnswer>,
+    /// The fit in words.
+    pub verdict: String,
 }
 
 /// A candidate for how landing links pick their node.
@@ -118,6 +134,12 @@ pub enum AttachmentModel {
     Preferential,
     /// A share of each.
     Mix,
+    /// A mix whose preferential links follow a power of the degree.
+    Power,
+    /// A mix among the nodes that still draw links.
+    Dormancy,
+    /// A mix among nodes that differ in how fast they grow.
+    GrowthVariance,
 }
 
 /// The evidence a fit stands on.
@@ -130,6 +152,10 @@ pub enum EvidenceKind {
     OneSnapshot,
     /// How many nodes crossed each degree between successive snapshots.
     SuccessiveSnapshots,
+    /// Each node's degree before and after.
+    Transitions,
+    /// Each landing link.
+    LinkEvents,
 }
 
 /// An estimate and its interval; low, high and level are null when it was given or the data cannot bound it.
@@ -152,6 +178,8 @@ pub struct CandidateAnswer {
     pub model: AttachmentModel,
     /// Its preferential share.
     pub preferential_share: Real,
+    /// Its own parameter: the kernel exponent, dormant share or growth variance; null where there is none.
+    pub parameter: Option<Real>,
     /// Log-likelihood.
     pub log_likelihood: Real,
     /// Akaike's information criterion; lower is better.
@@ -267,4 +295,80 @@ pub struct WarningAnswer {
     pub code: String,
     /// What was seen.
     pub detail: String,
+}
+
+/// What transitions tell.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize, ToSchema)]
+pub struct TransitionsAnswer {
+    /// Period by period, oldest first.
+    pub periods: Vec<PeriodRatesAnswer>,
+    /// Nodes set aside because no candidate's growth explains their jump.
+    pub outliers: u64,
+    /// The same by class of degree before.
+    pub outlier_classes: Vec<OutlierClassAnswer>,
+    /// `[before, after, nodes]`: the farthest jumps among them, at most 100.
+    #[schema(value_type = Vec<Vec<u64>>)]
+    pub jumps: Vec<(u64, u64, u64)>,
+    /// `[before, after]`: hubs that departed as another node arrived with about as many links, taken as one node under a new
+    /// name, at most 100; the largest first.
+    #[schema(value_type = Vec<Vec<u64>>)]
+    pub renamed: Vec<(u64, u64)>,
+}
+
+/// What one period's transitions tell under the likeliest candidate.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize, ToSchema)]
+pub struct PeriodRatesAnswer {
+    /// The earlier date.
+    pub from: String,
+    /// The later date.
+    pub to: String,
+    /// Share of the nodes present that departed.
+    pub departure_share: Real,
+    /// Links gained a node over the period, whatever its degree.
+    pub uniform_gain: Real,
+    /// Links gained over the period a link held.
+    pub gain_per_link: Real,
+    /// Links lost over the period a link held.
+    pub loss_per_link: Real,
+}
+
+/// Outliers whose degree before lay in one class.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, Deserialize, ToSchema)]
+pub struct OutlierClassAnswer {
+    /// Smallest degree.
+    pub lowest: u64,
+    /// Largest degree.
+    pub highest: u64,
+    /// Nodes set aside.
+    pub nodes: u64,
+}
+
+/// What a link list tells of attachment.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize, ToSchema)]
+pub struct AttachmentAnswer {
+    /// Link ends that landed on nodes present before.
+    pub landings: u64,
+    /// Preferential share by the likelihood of every landing.
+    pub preferential_share: EstimateAnswer,
+    /// Power of the degree that preferential links follow.
+    pub kernel_exponent: EstimateAnswer,
+    /// Probability of so much better a fit with a power of its own, if links followed degree in proportion.
+    pub linear_p_value: Real,
+    /// Landings by degree against what the fitted mix gives.
+    pub curve: Vec<CurvePointAnswer>,
+}
+
+/// The attachment curve at one range of degree.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize, ToSchema)]
+pub struct CurvePointAnswer {
+    /// Smallest degree.
+    pub lowest: u64,
+    /// Largest degree.
+    pub highest: u64,
+    /// Link ends that landed there.
+    pub landings: u64,
+    /// How often a node there draws a link, the average node being 1.
+    pub attraction: EstimateAnswer,
+    /// The same by the fitted mix.
+    pub fitted: Real,
 }

@@ -6,14 +6,18 @@ use serde::Serialize;
 use serde::de::DeserializeOwned;
 
 use super::answers::{
-    AttachmentModel, CandidateAnswer, CountAnswer, DateAnswer, DegreeAnswer, EstimateAnswer, EvidenceKind, FitAnswer,
-    FitReport, ForecastAnswer, GoodnessAnswer, IntervalAnswer, TailAnswer, TailPointAnswer, WarningAnswer,
+    AttachmentAnswer, AttachmentModel, CandidateAnswer, CountAnswer, CurvePointAnswer, DateAnswer, DegreeAnswer,
+    EstimateAnswer, EvidenceKind, FitAnswer, FitReport, ForecastAnswer, GoodnessAnswer, IntervalAnswer,
+    OutlierClassAnswer, PeriodRatesAnswer, TailAnswer, TailPointAnswer, TransitionsAnswer, WarningAnswer,
 };
 use super::inputs::{FitInputs, ForecastInputs, Label, sha256_hex};
 use super::numbers::{Count, Real, date_text};
 use super::{ENGINE, ServiceError};
 use crate::evaluate::{self, OriginError};
-use crate::fit::{Candidate, Fit, Goodness, Model, Rung, TailPoint, fit};
+use crate::fit::{
+    Attachment, Candidate, CurvePoint, Fit, Force, Goodness, Model, OutlierClass, PeriodRates, Rung, TailPoint,
+    TransitionSummary, fit,
+};
 use crate::forecast::{CountForecast, DateForecast, DegreeForecast, TailForecast};
 use crate::model::{Estimate, Interval, Warning};
 use crate::store::RunKind;
@@ -134,6 +138,8 @@ impl Question for FitInputs {
             inputs_digest,
             fit: FitReport::from(&fit),
             tail: fit.tail.iter().map(TailPointAnswer::from).collect(),
+            transitions: fit.transitions.as_ref().map(TransitionsAnswer::from),
+            attachment: fit.attachment.as_ref().map(AttachmentAnswer::from),
             warnings: fit.warnings.into_iter().map(WarningAnswer::from).collect(),
             cautions: FIT_CAUTIONS.map(str::to_owned).to_vec(),
         })
@@ -142,20 +148,33 @@ impl Question for FitInputs {
 
 impl From<&Fit> for FitReport {
     fn from(fit: &Fit) -> Self {
+        // A loss of exactly 0 without an interval was neither given nor looked for.
+        let known = |force: &Force| {
+            (force.value() > 0.0 || force.estimate.interval.is_some()).then(|| EstimateAnswer::from(&force.estimate))
+        };
+        let own = |model: Model, force: &Force| (fit.model == model).then(|| EstimateAnswer::from(&force.estimate));
         Self {
             model: fit.model.into(),
             evidence: match fit.rung {
                 Rung::Given => EvidenceKind::Given,
                 Rung::OneSnapshot => EvidenceKind::OneSnapshot,
                 Rung::SuccessiveSnapshots => EvidenceKind::SuccessiveSnapshots,
+                Rung::Transitions => EvidenceKind::Transitions,
+                Rung::LinkEvents => EvidenceKind::LinkEvents,
             },
             preferential_share: (&fit.preferential_share).into(),
             links_per_arrival: (&fit.links_per_arrival).into(),
             arrivals_per_day: fit.arrivals_per_day.as_ref().map(EstimateAnswer::from),
+            departures_per_node_day: known(&fit.forces.departures),
+            link_losses_per_link_day: known(&fit.forces.link_losses),
+            kernel_exponent: own(Model::Power, &fit.forces.kernel_exponent),
+            dormant_share: own(Model::Dormancy, &fit.forces.dormant_share),
+            growth_variance: own(Model::GrowthVariance, &fit.forces.growth_variance),
             tail_exponent: fit.tail_exponent.as_ref().map(EstimateAnswer::from),
             entry_degrees: fit.entry.shares().iter().map(|&(degree, share)| (degree, Real(share))).collect(),
             candidates: fit.candidates.iter().map(CandidateAnswer::from).collect(),
             goodness: fit.goodness.as_ref().map(GoodnessAnswer::from),
+            verdict: fit.verdict.clone(),
         }
     }
 }
@@ -166,6 +185,9 @@ impl From<Model> for AttachmentModel {
             Model::Uniform => Self::Uniform,
             Model::Preferential => Self::Preferential,
             Model::Mix => Self::Mix,
+            Model::Power => Self::Power,
+            Model::Dormancy => Self::Dormancy,
+            Model::GrowthVariance => Self::GrowthVariance,
         }
     }
 }
@@ -186,6 +208,7 @@ impl From<&Candidate> for CandidateAnswer {
         Self {
             model: candidate.model.into(),
             preferential_share: Real(candidate.preferential_share),
+            parameter: candidate.parameter.map(Real),
             log_likelihood: Real(candidate.log_likelihood),
             aic: Real(candidate.aic),
             weight: Real(candidate.weight),
@@ -209,6 +232,48 @@ impl From<&Goodness> for GoodnessAnswer {
 impl From<&TailPoint> for TailPointAnswer {
     fn from(point: &TailPoint) -> Self {
         Self { degree: point.degree, observed: point.observed, fitted: Real(point.fitted) }
+    }
+}
+
+impl From<&TransitionSummary> for TransitionsAnswer {
+    fn from(found: &TransitionSummary) -> Self {
+        /// Jumps and renamed nodes told one by one.
+        const MOST_TOLD: usize = 100;
+        let period = |rates: &PeriodRates| PeriodRatesAnswer {
+            from: date_text(rates.from),
+            to: date_text(rates.to),
+            departure_share: Real(rates.departure_share),
+            uniform_gain: Real(rates.uniform_gain),
+            gain_per_link: Real(rates.gain_per_link),
+            loss_per_link: Real(rates.loss_per_link),
+        };
+        let class = |c: &OutlierClass| OutlierClassAnswer { lowest: c.lowest, highest: c.highest, nodes: c.nodes };
+        Self {
+            periods: found.periods.iter().map(period).collect(),
+            outliers: found.outliers.nodes,
+            outlier_classes: found.outliers.classes.iter().map(class).collect(),
+            jumps: found.outliers.jumps.iter().take(MOST_TOLD).copied().collect(),
+            renamed: found.outliers.renamed.iter().take(MOST_TOLD).copied().collect(),
+        }
+    }
+}
+
+impl From<&Attachment> for AttachmentAnswer {
+    fn from(found: &Attachment) -> Self {
+        let point = |point: &CurvePoint| CurvePointAnswer {
+            lowest: point.lowest,
+            highest: point.highest,
+            landings: point.landings,
+            attraction: (&point.attraction).into(),
+            fitted: Real(point.fitted),
+        };
+        Self {
+            landings: found.landings,
+            preferential_share: (&found.preferential_share.estimate).into(),
+            kernel_exponent: (&found.kernel_exponent.estimate).into(),
+            linear_p_value: Real(found.linear_p_value),
+            curve: found.curve.iter().map(point).collect(),
+        }
     }
 }
 

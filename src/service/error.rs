@@ -117,7 +117,9 @@ impl ServiceError {
                     GrowthError::NobodyStarts | GrowthError::TooFast { .. } | GrowthError::TooLarge { .. } => {
                         Self::Impossible(growth.to_string())
                     }
-                    GrowthError::Inversion(_) => Self::NotConverged(growth.to_string()),
+                    GrowthError::Inversion(_) | GrowthError::Integration { .. } => {
+                        Self::NotConverged(growth.to_string())
+                    }
                 }
             }
         }

@@ -6,7 +6,7 @@ use sha2::{Digest, Sha256};
 use super::network::kind_name;
 use super::numbers::{Real, date_text};
 use crate::evaluate::OriginRequest;
-use crate::fit::{FitRequest, Model, ModelChoice};
+use crate::fit::{FitRequest, ModelChoice};
 use crate::model::{ArrivalPlan, AttachmentCell, Evidence, ForecastPlan, LinkEvents, Transitions};
 
 /// The largest seed: 2^53 − 1, the largest whole number every JSON reader keeps exactly.
@@ -96,8 +96,19 @@ struct Canonical<'a> {
     preferential_share: Option<Real>,
     links_per_arrival: Option<Real>,
     links_per_node_day: Real,
-    departures_per_node_day: Real,
-    link_losses_per_link_day: Real,
+    // Without transitions a loss that is not given is none.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    departures_per_node_day: Option<Real>,
+    #[serde(skip_serializing_if = "Option::is_none")]
+    link_losses_per_link_day: Option<Real>,
+    #[serde(skip_serializing_if = "Option::is_none")]
+    evidence: Option<String>,
+    #[serde(skip_serializing_if = "Option::is_none")]
+    kernel_exponent: Option<Real>,
+    #[serde(skip_serializing_if = "Option::is_none")]
+    dormant_share: Option<Real>,
+    #[serde(skip_serializing_if = "Option::is_none")]
+    growth_variance: Option<Real>,
     #[serde(flatten)]
     outlook: Option<CanonicalOutlook<'a>>,
 }
@@ -159,6 +170,8 @@ impl FitInputs {
 }
 
 fn canonical_fit<'a>(asked: &'static str, evidence: &'a Evidence, fit: &FitRequest) -> Canonical<'a> {
+    let known = !evidence.transitions().is_empty();
+    let given = |rate: Option<f64>| rate.or((!known).then_some(0.0)).map(Real);
     Canonical {
         asked,
         degree_kind: kind_name(evidence.kind()),
@@ -172,15 +185,17 @@ fn canonical_fit<'a>(asked: &'static str, evidence: &'a Evidence, fit: &FitReque
         link_events: evidence.link_events().map(canonical_link_events),
         model: match fit.choice {
             ModelChoice::Auto => "auto",
-            ModelChoice::Only(Model::Uniform) => "uniform",
-            ModelChoice::Only(Model::Preferential) => "preferential",
-            ModelChoice::Only(Model::Mix) => "mix",
+            ModelChoice::Only(model) => model.name(),
         },
-        preferential_share: fit.fixed_mix.map(|mix| Real(mix.preferential_share())),
+        preferential_share: fit.fixed.mix.map(|mix| Real(mix.preferential_share())),
         links_per_arrival: fit.links_per_arrival.map(Real),
         links_per_node_day: Real(fit.links_per_node_day),
-        departures_per_node_day: Real(fit.departures_per_node_day),
-        link_losses_per_link_day: Real(fit.link_losses_per_link_day),
+        departures_per_node_day: given(fit.departures_per_node_day),
+        link_losses_per_link_day: given(fit.link_losses_per_link_day),
+        evidence: fit.rung.map(|rung| format!("{rung:?}")),
+        kernel_exponent: fit.fixed.kernel_exponent.map(Real),
+        dormant_share: fit.fixed.dormant_share.map(Real),
+        growth_variance: fit.fixed.growth_variance.map(Real),
         outlook: None,
     }
 }

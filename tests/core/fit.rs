@@ -70,11 +70,13 @@ fn the_mix_is_recovered_from_the_flow_between_two_snapshots() {
             let start = if kind == "total" { counts(&[(links, 1)]) } else { counts(&[(0, 1)]) };
             let mut network = Simulation::new(&start, forces.clone(), seed).unwrap();
             network.arrive_many(20_000).unwrap();
-            let before = network.degree_counts();
+            let before = network.degree_counts().unwrap();
             network.arrive_many(5_000).unwrap();
             let snapshot = |as_of: &str, counts| Snapshot { as_of: as_of.parse().unwrap(), counts };
-            let pair =
-                [snapshot("2026-01-01T00:00:00Z", before), snapshot("2026-04-01T00:00:00Z", network.degree_counts())];
+            let pair = [
+                snapshot("2026-01-01T00:00:00Z", before),
+                snapshot("2026-04-01T00:00:00Z", network.degree_counts().unwrap()),
+            ];
             let evidence = Evidence::new(self::kind(kind), pair.to_vec(), None).unwrap();
             let fit = fit(&evidence, &FitRequest::default(), &|| false).unwrap();
             assert_eq!(fit.rung, Rung::SuccessiveSnapshots);

@@ -62,12 +62,12 @@ fn a_known_network_comes_true_within_its_intervals() {
     for seed in 0..20 {
         let mut network = Simulation::new(&counts(&[(0, 5), (1, 5)]), truth.clone(), seed).unwrap();
         network.arrive_many(20_000).unwrap();
-        let snapshot = Snapshot { as_of, counts: network.degree_counts() };
+        let snapshot = Snapshot { as_of, counts: network.degree_counts().unwrap() };
         let request = request(evidence(DegreeKind::Received, &[snapshot]), Some(50.0), &thresholds, date);
         let answer = forecast(&request);
         assert_eq!(answer.fit.rung, Rung::OneSnapshot);
         network.run_until(days_between(as_of, date)).unwrap();
-        let came = network.degree_counts();
+        let came = network.degree_counts().unwrap();
         for tail in &answer.forecast[0].tail {
             let (ninety, size) = (tail.size.intervals[1], came.tail_size(tail.threshold) as f64);
             inside += usize::from(ninety.low <= size && size <= ninety.high);

@@ -3,7 +3,7 @@
 use proptest::prelude::*;
 use proptest::test_runner::RngSeed;
 use tailcast::evaluate::{OriginRequest, answer};
-use tailcast::fit::FitRequest;
+use tailcast::fit::{FitRequest, Fixed};
 use tailcast::forecast::CountForecast;
 use tailcast::model::{
     ArrivalPlan, ArrivalSegment, AttachmentMix, DegreeCounts, DegreeKind, Evidence, ForecastPlan, Levels, MAX_DEGREE,
@@ -68,11 +68,11 @@ proptest! {
         let request = OriginRequest {
             evidence: Evidence::new(kind, snapshots, None).unwrap(),
             fit: FitRequest {
-                fixed_mix: fixed.and_then(AttachmentMix::new),
+                fixed: Fixed { mix: fixed.and_then(AttachmentMix::new), ..Fixed::default() },
                 links_per_arrival: links,
                 links_per_node_day: per_node,
-                departures_per_node_day: losses.0,
-                link_losses_per_link_day: losses.1,
+                departures_per_node_day: Some(losses.0),
+                link_losses_per_link_day: Some(losses.1),
                 ..FitRequest::default()
             },
             arrivals: Some(ArrivalPlan::from_segments(&[segment]).unwrap()),

@@ -1,7 +1,9 @@
 //! Tests of the numerical core; they need no server feature.
 #![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic, clippy::print_stdout)]
 
+mod census;
 mod fit;
+mod forces;
 mod forecast;
 mod hostile;
 mod law;

@@ -2,7 +2,7 @@
 
 use std::collections::BTreeMap;
 
-use tailcast::growth::{Course, Simulation, tail_sum};
+use tailcast::growth::{Course, NetworkLaw, Simulation};
 use tailcast::numerics::tolerances::Accuracy;
 
 use crate::networks::{counts, forces, total_forces, young_network};
@@ -45,7 +45,7 @@ fn the_simulator_grows_what_igraph_grows() {
             .map(|seed| {
                 let mut network = Simulation::new(&counts(&[(0, 1)]), forces.clone(), seed).unwrap();
                 network.arrive_many(19_999).unwrap();
-                binned(network.degree_counts().iter())
+                binned(network.degree_counts().unwrap().iter())
             })
             .collect();
         for bin in 0..EDGES.len() {
@@ -69,13 +69,13 @@ fn expected_tails_are_what_the_simulator_shows() {
             .map(|seed| {
                 let mut network = Simulation::new(&start, forces.clone(), seed).unwrap();
                 network.arrive_many(2_000).unwrap();
-                network.degree_counts()
+                network.degree_counts().unwrap()
             })
             .collect();
         for threshold in [1, 3, 10, 30, 100] {
             let tails: Vec<f64> = runs.iter().map(|counts| counts.tail_size(threshold) as f64).collect();
             let (mean, variance) = mean_and_variance(&tails);
-            let ours = tail_sum(&course, &start, 2_000.0, threshold, Accuracy::Full).unwrap();
+            let ours = NetworkLaw::at(&course, &start, 2_000.0).unwrap().tail(threshold, Accuracy::Full).unwrap();
             let z = (mean - ours.mean) / (variance / RUNS as f64).sqrt().max(0.02);
             assert!(z.abs() < 4.5, "threshold {threshold}: simulated {mean}, expected {}, z = {z}", ours.mean);
             // The tail's sampling variance is not understated: nodes compete for links, which only narrows it.
@@ -89,7 +89,7 @@ fn the_same_seed_grows_the_same_network() {
     let grow = |seed| {
         let mut network = Simulation::new(&young_network(), forces(0.5, 2.5), seed).unwrap();
         network.run_until(500.0).unwrap();
-        network.degree_counts()
+        network.degree_counts().unwrap()
     };
     assert_eq!(grow(3), grow(3));
     assert_ne!(grow(3), grow(4));

@@ -1,7 +1,7 @@
 //! Tail sizes: conservation, monotonicity, consistency over time, closed mean-field cases.
 
 use proptest::prelude::*;
-use tailcast::growth::{Course, GrowthError, NodeLaw, TailSum, tail_sum};
+use tailcast::growth::{Course, GrowthError, NetworkLaw, NodeLaw, TailSum};
 use tailcast::model::{ArrivalPlan, AttachmentMix, DegreeCounts, DegreeKind, EntryDegrees, GrowthParameters};
 use tailcast::numerics::tolerances::Accuracy;
 
@@ -9,7 +9,7 @@ use crate::networks::{counts, forces, total_forces, young_network};
 use crate::reference::relative_error;
 
 fn size(course: &Course, counts: &DegreeCounts, day: f64, threshold: u64) -> TailSum {
-    tail_sum(course, counts, day, threshold, Accuracy::Full).unwrap()
+    NetworkLaw::at(course, counts, day).unwrap().tail(threshold, Accuracy::Full).unwrap()
 }
 
 #[test]

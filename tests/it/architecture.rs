@@ -4,13 +4,15 @@ use std::collections::{BTreeMap, BTreeSet};
 use std::path::{Path, PathBuf};
 
 /// Every module with the modules it may name.
-const ARROWS: [(&str, &[&str]); 13] = [
+const ARROWS: [(&str, &[&str]); 15] = [
     ("numerics", &[]),
     ("model", &["numerics"]),
+    ("census", &["model"]),
     ("growth", &["model", "numerics"]),
     ("fit", &["growth", "model", "numerics"]),
     ("forecast", &["growth", "model", "numerics"]),
     ("evaluate", &["fit", "forecast", "growth", "model", "numerics"]),
+    ("ingest", &["census", "model"]),
     ("config", &[]),
     ("telemetry", &["config"]),
     ("store", &["config", "model"]),
@@ -19,10 +21,10 @@ const ARROWS: [(&str, &[&str]); 13] = [
     ("report", &["service"]),
     ("api", &["config", "model", "report", "service"]),
     // growth: the demo grows its network with the simulator, so that what comes true is known.
-    ("app", &["api", "config", "growth", "model", "report", "service", "telemetry"]),
+    ("app", &["api", "census", "config", "growth", "ingest", "model", "report", "service", "telemetry"]),
 ];
 
-const CORE: [&str; 6] = ["numerics", "model", "growth", "fit", "forecast", "evaluate"];
+const CORE: [&str; 7] = ["numerics", "model", "census", "growth", "fit", "forecast", "evaluate"];
 
 /// Crates that the core must not know.
 const BOUNDARY_CRATES: [&str; 16] = [

@@ -199,7 +199,7 @@ pub static COUNTS: LazyLock<[DegreeCounts; 2]> = LazyLock::new(|| {
     let mut network = Simulation::new(&founders, forces, 11).unwrap();
     [60.0, 90.0].map(|day| {
         network.run_until(day).unwrap();
-        network.degree_counts()
+        network.degree_counts().unwrap()
     })
 });
 

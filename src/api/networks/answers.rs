@@ -112,7 +112,7 @@ pub struct SnapshotPage {
 
 /// A table of transitions.
 #[derive(Debug, Clone, Serialize, ToSchema)]
-pub struct TransitionsAnswer {
+pub struct TransitionTableAnswer {
     /// The earlier date.
     from: String,
     /// The later date.
@@ -238,7 +238,7 @@ impl From<SnapshotSummary> for SnapshotLine {
     }
 }
 
-impl TryFrom<StoredTransitions> for TransitionsAnswer {
+impl TryFrom<StoredTransitions> for TransitionTableAnswer {
     type Error = ApiError;
 
     fn try_from(stored: StoredTransitions) -> Result<Self, ApiError> {

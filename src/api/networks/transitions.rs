@@ -8,7 +8,7 @@ use jiff::Timestamp;
 use utoipa_axum::router::OpenApiRouter;
 use utoipa_axum::routes;
 
-use super::answers::{TransitionsAnswer, TransitionsLine, TransitionsPage};
+use super::answers::{TransitionTableAnswer, TransitionsLine, TransitionsPage};
 use super::{address, json_body, written};
 use crate::api::decode::instant_of;
 use crate::api::extract::{NoQuery, ResultFormat, RowsBody, date, network_name};
@@ -98,7 +98,7 @@ async fn put_transitions(
             ("ETag" = String, description = "Strong validator of this form of the transitions"),
             ("Last-Modified" = String, description = "When they were last stored"),
         ), content(
-            (TransitionsAnswer = "application/json"),
+            (TransitionTableAnswer = "application/json"),
             (String = "text/csv"),
         )),
         (status = 304, description = "The client has them already"),
@@ -115,7 +115,7 @@ async fn get_transitions(
     let stored = state.service.transitions(&name, dates).await?;
     let (tag, modified) = (stored.summary.tag.clone(), stored.summary.updated_at);
     representation::found(Validator { tag: &tag, modified }, format, &headers, || match format {
-        ResultFormat::Json => json_body(&TransitionsAnswer::try_from(stored)?),
+        ResultFormat::Json => json_body(&TransitionTableAnswer::try_from(stored)?),
         ResultFormat::Csv => csv(&stored),
     })
 }

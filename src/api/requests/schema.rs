@@ -118,11 +118,11 @@ pub struct ForecastRequestBody {
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(schema_with = share_pairs)]
     pub entry_degrees: Option<Vec<(u64, f64)>>,
-    /// Hazard that a node departs, per day.
+    /// Hazard that a node departs, per day; read from transitions, or none, when left out.
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false, minimum = 0, maximum = 1e9, default = 0.0)]
     pub departures_per_node_day: Option<f64>,
-    /// Hazard that a link is lost, per day.
+    /// Hazard that a link is lost, per day; read from transitions, or none, when left out.
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false, minimum = 0, maximum = 1e9, default = 0.0)]
     pub link_losses_per_link_day: Option<f64>,
@@ -142,7 +142,12 @@ pub struct ForecastRequestBody {
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false)]
     pub model: Option<ModelName>,
-    /// A mix to take as given instead of fitting one.
+    /// Evidence to read the mix from; the best there is when left out: snapshots, then transitions, then link events, then
+    /// the one snapshot.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false)]
+    pub evidence: Option<EvidenceName>,
+    /// What to take as given instead of fitting it.
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false)]
     pub fixed: Option<FixedBody>,
@@ -191,11 +196,11 @@ pub struct FitRequestBody {
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false, minimum = 0, maximum = 1e9, default = 0.0)]
     pub links_per_node_day: Option<f64>,
-    /// Hazard that a node departs, per day.
+    /// Hazard that a node departs, per day; read from transitions, or none, when left out.
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false, minimum = 0, maximum = 1e9, default = 0.0)]
     pub departures_per_node_day: Option<f64>,
-    /// Hazard that a link is lost, per day.
+    /// Hazard that a link is lost, per day; read from transitions, or none, when left out.
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false, minimum = 0, maximum = 1e9, default = 0.0)]
     pub link_losses_per_link_day: Option<f64>,
@@ -203,7 +208,12 @@ pub struct FitRequestBody {
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false)]
     pub model: Option<ModelName>,
-    /// A mix to take as given instead of fitting one.
+    /// Evidence to read the mix from; the best there is when left out: snapshots, then transitions, then link events, then
+    /// the one snapshot.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false)]
+    pub evidence: Option<EvidenceName>,
+    /// What to take as given instead of fitting it.
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false)]
     pub fixed: Option<FixedBody>,
@@ -341,13 +351,46 @@ pub enum ModelName {
     Preferential,
     /// A share of each.
     Mix,
+    /// A mix whose preferential links follow a power of the degree.
+    Power,
+    /// A mix among the nodes that still draw links.
+    Dormancy,
+    /// A mix among nodes that differ in how fast they grow.
+    GrowthVariance,
 }
 
-/// What to take as given.
-#[derive(Debug, Clone, PartialEq, Serialize, ToSchema)]
+/// What to take as given: any of these, of the last three only one.
+#[derive(Debug, Clone, PartialEq, Default, Serialize, ToSchema)]
 #[serde(deny_unknown_fields)]
 pub struct FixedBody {
     /// Share of landing links that pick their node in proportion to its degree.
-    #[schema(minimum = 0, maximum = 1)]
-    pub preferential_share: f64,
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, minimum = 0, maximum = 1)]
+    pub preferential_share: Option<f64>,
+    /// Power of the degree that preferential links follow; 1 is in proportion.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, minimum = 0, maximum = 2)]
+    pub kernel_exponent: Option<f64>,
+    /// Share of present nodes that draw no links.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, minimum = 0, maximum = 0.99)]
+    pub dormant_share: Option<f64>,
+    /// Variance of the nodes' growth factors, whose mean is 1.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, minimum = 0, maximum = 20)]
+    pub growth_variance: Option<f64>,
+}
+
+/// Evidence that the mix can be read from.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, ToSchema)]
+#[serde(rename_all = "snake_case")]
+pub enum EvidenceName {
+    /// The newest snapshot alone.
+    OneSnapshot,
+    /// How many nodes crossed each degree between snapshots.
+    SuccessiveSnapshots,
+    /// Each node's degree before and after.
+    Transitions,
+    /// Each landing link.
+    LinkEvents,
 }

@@ -66,7 +66,7 @@ impl Story {
         let (forces, arrivals_per_day) = forces(days_between(launch, snapshot))?;
         let mut network = Simulation::new(&start, forces, SEED).map_err(|error| broken(&error))?;
         network.run_until(days_between(launch, snapshot)).map_err(|error| broken(&error))?;
-        let counts = network.degree_counts();
+        let counts = network.degree_counts().map_err(|faults| broken(&format!("{faults:?}")))?;
         let request = request(&counts, snapshot, arrivals_per_day, &dates);
         Ok(Self { request, accounts: counts.nodes(), network, dates, launch })
     }
@@ -92,6 +92,7 @@ impl Story {
                 .run_until(days_between(self.launch, date))
                 .map_err(|error| Stop::failed("the demo network", error))?;
             let counts = self.network.degree_counts();
+            let counts = counts.map_err(|faults| Stop::failed("the demo network", format!("{faults:?}")))?;
             outcomes.extend(THRESHOLDS.map(|threshold| Outcome {
                 date: date_text(date),
                 threshold,
@@ -140,6 +141,7 @@ fn request(
         dates: Some(dates.iter().map(|&date| date_text(date)).collect()),
         horizon: None,
         model: None,
+        evidence: None,
         fixed: None,
         levels: None,
         seed: None,

@@ -1,0 +1,109 @@
+//! What the command line adds to a request: a file that tells of a network becomes one that asks of it.
+
+use std::fmt;
+
+use clap::Args;
+use serde::de::{Deserialize, Deserializer, MapAccess, Visitor};
+use serde_json::value::RawValue;
+
+use crate::app::Stop;
+
+/// Fields of a forecast's body given as options; each takes the place of the body's own.
+#[derive(Debug, Args)]
+pub struct Completion {
+    /// Hub thresholds in place of the body's
+    #[arg(long, value_name = "N,N,…")]
+    thresholds: Option<String>,
+    /// Date to forecast in place of the body's dates; with --every the last of several
+    #[arg(long, value_name = "DATE")]
+    until: Option<String>,
+    /// Period between dates, up to --until
+    #[arg(long, value_name = "PERIOD", requires = "until")]
+    every: Option<String>,
+    /// Interval levels in place of the body's
+    #[arg(long, value_name = "P,P,…")]
+    levels: Option<String>,
+    /// New nodes a day in place of the body's arrivals
+    #[arg(long, value_name = "PER_DAY")]
+    arrivals: Option<String>,
+}
+
+impl Completion {
+    /// A body with these fields over its own. One that is no JSON object is left to the reader, which says so.
+    pub fn over(&self, body: Vec<u8>) -> Result<Vec<u8>, Stop> {
+        let added = self.fields()?;
+        if added.is_empty() {
+            return Ok(body);
+        }
+        let json = body.strip_prefix(b"\xef\xbb\xbf").unwrap_or(&body);
+        let Ok(Fields(mut fields)) = serde_json::from_slice(json) else { return Ok(body) };
+        let replaced = |name: &str| {
+            let dated = self.until.is_some() && ["dates", "horizon"].contains(&name);
+            dated || added.iter().any(|(field, _)| *field == name)
+        };
+        fields.retain(|(name, _)| !replaced(name));
+        let own = fields.iter().map(|(name, value)| (name.as_str(), *value));
+        let fields = own.chain(added.iter().map(|(name, value)| (*name, value.as_ref())));
+        let fields: Vec<String> = fields.map(|(name, value)| format!("{}:{}", quoted(name), value.get())).collect();
+        Ok(format!("{{{}}}", fields.join(",")).into_bytes())
+    }
+
+    /// The fields given. Whether their values make sense is told by whoever reads the body.
+    fn fields(&self) -> Result<Vec<(&'static str, Box<RawValue>)>, Stop> {
+        let mut fields = Vec::new();
+        let mut add = |name, option: &str, json: String, example: &str| match RawValue::from_string(json) {
+            Ok(value) => {
+                fields.push((name, value));
+                Ok(())
+            }
+            Err(_) => Err(Stop::Refused(format!("tailcast: {option}: write numbers like {example}\n"))),
+        };
+        if let Some(list) = &self.thresholds {
+            add("thresholds", "--thresholds", format!("[{list}]"), "10,100,1000")?;
+        }
+        if let Some(list) = &self.levels {
+            add("levels", "--levels", format!("[{list}]"), "0.5,0.9")?;
+        }
+        if let Some(rate) = &self.arrivals {
+            add("arrivals", "--arrivals", format!("{{\"per_day\":{rate}}}"), "42.5")?;
+        }
+        match (&self.until, &self.every) {
+            (Some(until), Some(every)) => {
+                let horizon = format!("{{\"until\":{},\"every\":{}}}", quoted(until), quoted(every));
+                add("horizon", "--until", horizon, "")?;
+            }
+            (Some(until), None) => add("dates", "--until", format!("[{}]", quoted(until)), "")?,
+            (None, _) => {}
+        }
+        Ok(fields)
+    }
+}
+
+fn quoted(text: &str) -> String {
+    serde_json::Value::from(text).to_string()
+}
+
+/// An object's fields as they stand, repeated ones too.
+struct Fields<'a>(Vec<(String, &'a RawValue)>);
+
+impl<'de: 'a, 'a> Deserialize<'de> for Fields<'a> {
+    fn deserialize<D: Deserializer<'de>>(deserializer: D) -> Result<Self, D::Error> {
+        struct FieldsVisitor;
+        impl<'de> Visitor<'de> for FieldsVisitor {
+            type Value = Fields<'de>;
+
+            fn expecting(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
+                f.write_str("an object")
+            }
+
+            fn visit_map<M: MapAccess<'de>>(self, mut map: M) -> Result<Fields<'de>, M::Error> {
+                let mut fields = Vec::new();
+                while let Some(field) = map.next_entry()? {
+                    fields.push(field);
+                }
+                Ok(Fields(fields))
+            }
+        }
+        deserializer.deserialize_map(FieldsVisitor)
+    }
+}

@@ -1,0 +1,299 @@
+//! The likelihood of one period's transitions under each candidate.
+
+use nalgebra::DMatrix;
+
+use super::super::Model;
+use super::node_pmf::PeriodLaw;
+use crate::growth::growth_factors;
+use crate::model::DegreeCounts;
+use crate::numerics::quadrature::PANEL;
+use crate::numerics::scoring::{ScoringMaximum, maximise};
+
+/// Rates per period are sought between these.
+const RATES: (f64, f64) = (1e-10, 20.0);
+/// At most this share of the nodes is set aside as outliers.
+const MOST_OUTLIERS: f64 = 0.05;
+/// A row is an outlier when it more likely is one than not.
+const OUTLIER_FROM: f64 = 0.5;
+/// Days at which an active node falls dormant within the period: Gauss–Legendre with two nodes, (1 ∓ 1/√3)/2.
+const FALLS_DORMANT: [f64; 2] = [0.211_324_865_405_187_1, 0.788_675_134_594_812_9];
+
+/// What is seen of one period: nodes present at both ends, by degree before and after.
+pub(super) struct Panel {
+    rows: Vec<(u64, u64)>,
+    weights: Vec<f64>,
+    /// N, Σφ is made from these: the network at the period's start and end.
+    before: DegreeCounts,
+    after: DegreeCounts,
+    /// Arrivals over nodes, ∫A/N: what an active node falls dormant by.
+    turnover: f64,
+    shrinks: bool,
+}
+
+/// One candidate's fit of one period. Rates are per period.
+#[derive(Debug, Clone)]
+pub(super) struct PanelFit {
+    pub uniform: f64,
+    pub preferential: f64,
+    pub loss: f64,
+    pub dormant_share: f64,
+    pub growth_variance: f64,
+    pub exponent: f64,
+    pub outlier_share: f64,
+    pub log_likelihood: f64,
+    pub parameters: usize,
+    pub converged: bool,
+    /// Standard errors of ln(u/v), ln u, ln v, ln w and of the candidate's own parameter (logit d, ln σ² or γ).
+    pub errors: Errors,
+}
+
+/// Standard errors on the scales in which estimates are near normal.
+#[derive(Debug, Clone, Copy, Default)]
+pub(super) struct Errors {
+    pub log_odds: f64,
+    pub log_loss: f64,
+    pub own: f64,
+}
+
+/// Which coordinates of the likelihood's argument hold what.
+#[derive(Clone, Copy)]
+struct Layout {
+    model: Model,
+    uniform: Option<usize>,
+    preferential: Option<usize>,
+    loss: Option<usize>,
+    own: Option<usize>,
+    outliers: usize,
+    size: usize,
+}
+
+/// The forces of one period, read from the likelihood's argument.
+struct Forces {
+    uniform: f64,
+    preferential: f64,
+    loss: f64,
+    dormant_share: f64,
+    growth_variance: f64,
+    exponent: f64,
+    outliers: f64,
+}
+
+impl Layout {
+    fn new(model: Model, shrinks: bool) -> Self {
+        let mut size = 0;
+        let mut next = |wanted: bool| {
+            size += usize::from(wanted);
+            wanted.then(|| size - 1)
+        };
+        let uniform = next(model != Model::Preferential);
+        let preferential = next(model != Model::Uniform);
+        let loss = next(shrinks);
+        let own = next(matches!(model, Model::Power | Model::Dormancy | Model::GrowthVariance));
+        let outliers = next(true).unwrap_or(0);
+        Self { model, uniform, preferential, loss, own, outliers, size }
+    }
+
+    fn forces(&self, theta: &[f64]) -> Forces {
+        let rate = |index: Option<usize>| index.map_or(0.0, |i| theta[i].exp());
+        let own = self.own.map_or(0.0, |i| theta[i]);
+        let logistic = |x: f64| 1.0 / (1.0 + (-x).exp());
+        Forces {
+            uniform: rate(self.uniform),
+            preferential: rate(self.preferential),
+            loss: rate(self.loss),
+            dormant_share: if self.model == Model::Dormancy { logistic(own) } else { 0.0 },
+            growth_variance: if self.model == Model::GrowthVariance { own.exp() } else { 0.0 },
+            exponent: if self.model == Model::Power { own } else { 1.0 },
+            outliers: MOST_OUTLIERS * logistic(theta[self.outliers]),
+        }
+    }
+}
+
+/// Degree of an outlier: broad, with a tail fatter than any network's, so that no jump is beyond it.
+fn outlier_probability(after: u64) -> f64 {
+    const NORMALISED: f64 = 0.57; // Σ_{j≥0} 1/((j+1)·(1+ln(j+1))²) is about 1.75
+    let scale = 1.0 + (after as f64).ln_1p();
+    NORMALISED / ((after as f64 + 1.0) * scale * scale)
+}
+
+/// k^γ, and k itself up to 1.
+pub(super) fn kernel(degree: f64, exponent: f64) -> f64 {
+    if degree <= 1.0 { degree } else { degree.powf(exponent) }
+}
+
+impl Panel {
+    pub fn new(rows: &[(u64, u64, u64)], before: DegreeCounts, after: DegreeCounts, turnover: f64) -> Self {
+        Self {
+            shrinks: rows.iter().any(|&(k, j, _)| j < k),
+            rows: rows.iter().map(|&(k, j, _)| (k, j)).collect(),
+            weights: rows.iter().map(|&(_, _, nodes)| nodes as f64).collect(),
+            before,
+            after,
+            turnover,
+        }
+    }
+
+    /// Fits one candidate, from `near` when another candidate's fit is known.
+    pub fn fit(&self, model: Model, near: Option<&PanelFit>) -> PanelFit {
+        let layout = Layout::new(model, self.shrinks);
+        let (start, bounds) = self.start(&layout, near);
+        let best = maximise(&start, &bounds, &self.weights, |theta| self.log_terms(&layout.forces(theta)));
+        self.read(&layout, &best)
+    }
+
+    fn start(&self, layout: &Layout, near: Option<&PanelFit>) -> (Vec<f64>, Vec<(f64, f64)>) {
+        let (mut gained, mut lost) = (0.0, 0.0);
+        for (&(k, j), n) in self.rows.iter().zip(&self.weights) {
+            // One jump does not decide where the search begins.
+            let step = (j as f64 - k as f64).clamp(-2.0 - k as f64, 2.0 + k as f64);
+            if step > 0.0 { gained += n * step } else { lost -= n * step }
+        }
+        let (nodes, ends) = (self.before.nodes() as f64, (self.before.link_ends() as f64).max(1.0));
+        let rate = |value: f64| value.clamp(100.0 * RATES.0, 0.5 * RATES.1).ln();
+        let mut start = vec![0.0; layout.size];
+        let mut bounds = vec![(RATES.0.ln(), RATES.1.ln()); layout.size];
+        let mut put = |index: Option<usize>, value: f64| {
+            if let Some(i) = index {
+                start[i] = value;
+            }
+        };
+        match near {
+            Some(fit) => {
+                put(layout.uniform, rate(fit.uniform));
+                put(layout.preferential, rate(fit.preferential));
+                put(layout.loss, rate(fit.loss));
+            }
+            None => {
+                put(layout.uniform, rate(0.5 * gained / nodes));
+                put(layout.preferential, rate(0.5 * gained / ends));
+                put(layout.loss, rate(lost / ends));
+            }
+        }
+        put(Some(layout.outliers), -3.0);
+        bounds[layout.outliers] = (-12.0, 12.0);
+        if let Some(i) = layout.own {
+            (start[i], bounds[i]) = match layout.model {
+                Model::Power => (1.0, (0.0, 2.0)),
+                Model::Dormancy => (-1.0, (-12.0, 4.5)),
+                _ => (-1.0, (-12.0, 3.0)),
+            };
+        }
+        (start, bounds)
+    }
+
+    /// Shares and laws of the kinds of node there are, at degrees near `degree` where the kernel is curved.
+    fn laws(&self, forces: &Forces, degree: u64) -> Vec<(f64, PeriodLaw)> {
+        let Forces { uniform: u, preferential: v, loss: w, dormant_share, growth_variance, exponent, .. } = *forces;
+        if exponent != 1.0 {
+            let k = degree as f64;
+            let slope =
+                v * (kernel(k + 0.5, exponent) - kernel((k - 0.5).max(0.0), exponent)) / (k + 0.5 - (k - 0.5).max(0.0));
+            return vec![(1.0, PeriodLaw::tangent(u + v * kernel(k, exponent), slope, w))];
+        }
+        if growth_variance > 0.0 {
+            let law = |f: &crate::growth::GrowthFactor| (f.share, PeriodLaw::new(f.factor * u, f.factor * v, w, 1.0));
+            return growth_factors(growth_variance).iter().map(law).collect();
+        }
+        if dormant_share > 0.0 {
+            let still_active = (-self.turnover * dormant_share / (1.0 - dormant_share)).exp();
+            // Rates are those of an active node: the network's landings fall on the active share.
+            let active = 1.0 - dormant_share;
+            let law = |until: f64| PeriodLaw::new(u / active, v / active, w, until);
+            let falling = 0.5 * active * (1.0 - still_active);
+            let mut laws = vec![(active * still_active, law(1.0)), (dormant_share, law(0.0))];
+            laws.extend(FALLS_DORMANT.map(|until| (falling, law(until))));
+            return laws;
+        }
+        vec![(1.0, PeriodLaw::new(u, v, w, 1.0))]
+    }
+
+    fn log_terms(&self, forces: &Forces) -> Vec<f64> {
+        let mut laws = self.laws(forces, 0);
+        let mut at = 0;
+        let term = |&(before, after): &(u64, u64)| {
+            if forces.exponent != 1.0 && before != at {
+                (laws, at) = (self.laws(forces, before), before);
+            }
+            let probability: f64 = laws.iter().map(|(share, law)| share * law.probability(before, after)).sum();
+            let probability = (1.0 - forces.outliers) * probability + forces.outliers * outlier_probability(after);
+            probability.max(f64::MIN_POSITIVE).ln()
+        };
+        self.rows.iter().map(term).collect()
+    }
+
+    fn read(&self, layout: &Layout, best: &ScoringMaximum) -> PanelFit {
+        let forces = layout.forces(&best.at);
+        let covariance: &DMatrix<f64> = &best.covariance;
+        let variance = |i: usize| covariance[(i, i)].max(0.0);
+        let log_odds = match (layout.uniform, layout.preferential) {
+            (Some(u), Some(v)) => (variance(u) + variance(v) - 2.0 * covariance[(u, v)]).max(0.0).sqrt(),
+            _ => 0.0,
+        };
+        PanelFit {
+            uniform: forces.uniform,
+            preferential: forces.preferential,
+            loss: forces.loss,
+            dormant_share: forces.dormant_share,
+            growth_variance: forces.growth_variance,
+            exponent: forces.exponent,
+            outlier_share: forces.outliers,
+            log_likelihood: best.value,
+            parameters: layout.size,
+            converged: best.converged,
+            errors: Errors {
+                log_odds,
+                log_loss: layout.loss.map_or(0.0, |i| variance(i).sqrt()),
+                own: layout.own.map_or(0.0, |i| variance(i).sqrt()),
+            },
+        }
+    }
+
+    /// Landed ends over the period, uniform and preferential.
+    pub fn landed(&self, fit: &PanelFit) -> (f64, f64) {
+        let nodes = log_mean(self.before.nodes() as f64, self.after.nodes() as f64);
+        let kernel_sum = |counts: &DegreeCounts| -> f64 {
+            counts.iter().map(|(k, n)| n as f64 * kernel(k as f64, fit.exponent)).sum()
+        };
+        (fit.uniform * nodes, fit.preferential * log_mean(kernel_sum(&self.before), kernel_sum(&self.after)))
+    }
+
+    /// Rows that more likely are outliers than not: (before, after, nodes).
+    pub fn outliers(&self, fit: &PanelFit) -> Vec<(u64, u64, u64)> {
+        let forces = Forces {
+            uniform: fit.uniform,
+            preferential: fit.preferential,
+            loss: fit.loss,
+            dormant_share: fit.dormant_share,
+            growth_variance: fit.growth_variance,
+            exponent: fit.exponent,
+            outliers: fit.outlier_share,
+        };
+        let terms = self.log_terms(&forces);
+        let rows = self.rows.iter().zip(&self.weights).zip(&terms);
+        let strange =
+            rows.filter(|((row, _), term)| forces.outliers * outlier_probability(row.1) > OUTLIER_FROM * term.exp());
+        strange.map(|((&(k, j), &n), _)| (k, j, n as u64)).collect()
+    }
+
+    /// Law of a newcomer's degree at the period's end from its degree on arrival, averaged over the arrival's day.
+    pub fn newcomer_law(&self, fit: &PanelFit) -> impl Fn(u64, u64) -> f64 + use<> {
+        let laws: Vec<(f64, PeriodLaw)> = PANEL
+            .nodes
+            .iter()
+            .zip(&PANEL.weights)
+            .step_by(3)
+            .map(|(&left, &weight)| {
+                (weight, PeriodLaw::new(fit.uniform * left, fit.preferential * left, fit.loss * left, 1.0))
+            })
+            .collect();
+        let total: f64 = laws.iter().map(|(weight, _)| weight).sum();
+        move |entry, after| laws.iter().map(|(weight, law)| weight / total * law.probability(entry, after)).sum()
+    }
+}
+
+/// (b − a)/ln(b/a), the mean of 1/x's reciprocal over a straight line from a to b.
+pub(super) fn log_mean(a: f64, b: f64) -> f64 {
+    let (a, b) = (a.max(f64::MIN_POSITIVE), b.max(f64::MIN_POSITIVE));
+    let log = (b / a).ln();
+    if log.abs() < 1e-6 { 0.5 * (a + b) } else { (b - a) / log }
+}

@@ -1,0 +1,70 @@
+//! The bytes of a list, decompressed where need be and counted.
+
+use std::cell::Cell;
+use std::io::{self, BufReader, Cursor, Read};
+use std::rc::Rc;
+
+use flate2::bufread::MultiGzDecoder;
+
+use super::IngestError;
+
+/// First two bytes of every gzip member (RFC 1952, section 2.3.1).
+const GZIP: [u8; 2] = [0x1f, 0x8b];
+/// Bytes of compressed input read at a time.
+const BLOCK: usize = 1 << 16;
+
+/// A list's bytes.
+pub struct Source<'r> {
+    input: Box<dyn Read + 'r>,
+    bytes: Rc<Cell<u64>>,
+    compressed: bool,
+}
+
+impl<'r> Source<'r> {
+    /// Looks whether `input` is compressed.
+    pub fn open(input: impl Read + 'r) -> io::Result<Self> {
+        let bytes = Rc::new(Cell::new(0));
+        let mut input = Counted { input, bytes: bytes.clone() };
+        let mut start = Vec::new();
+        input.by_ref().take(GZIP.len() as u64).read_to_end(&mut start)?;
+        let compressed = start == GZIP;
+        let whole = Cursor::new(start).chain(input);
+        let input: Box<dyn Read + 'r> = match compressed {
+            true => Box::new(MultiGzDecoder::new(BufReader::with_capacity(BLOCK, whole))),
+            false => Box::new(whole),
+        };
+        Ok(Self { input, bytes, compressed })
+    }
+
+    /// Bytes read so far, as they came.
+    pub fn bytes(&self) -> u64 {
+        self.bytes.get()
+    }
+
+    /// A failure to read on after `line`, in the words that fit.
+    pub fn fault(&self, line: u64, error: io::Error) -> IngestError {
+        match self.compressed {
+            true => IngestError::Gzip { line, error },
+            false => IngestError::Read { line, error },
+        }
+    }
+}
+
+impl Read for Source<'_> {
+    fn read(&mut self, buffer: &mut [u8]) -> io::Result<usize> {
+        self.input.read(buffer)
+    }
+}
+
+struct Counted<R> {
+    input: R,
+    bytes: Rc<Cell<u64>>,
+}
+
+impl<R: Read> Read for Counted<R> {
+    fn read(&mut self, buffer: &mut [u8]) -> io::Result<usize> {
+        let read = self.input.read(buffer)?;
+        self.bytes.set(self.bytes.get() + read as u64);
+        Ok(read)
+    }
+}
