@@ -10,9 +10,13 @@ mod examples;
 mod extract;
 mod fits;
 mod forecasts;
+mod networks;
 mod observe;
+mod pages;
 mod probes;
 mod problem;
+mod refusals;
+mod representation;
 mod requests;
 mod runs;
 
@@ -36,9 +40,9 @@ pub use examples::forecast_request as example_request;
 pub use extract::read_json;
 pub use problem::Problem;
 pub use requests::{
-    ArrivalsBody, DegreeKindName, FIT_FIELDS, FORECAST_FIELDS, FitRequestBody, FixedBody, ForecastRequestBody,
-    HorizonBody, LinkEventsBody, ModelName, SegmentBody, SnapshotBody, TransitionsBody, WindowBody, read_fit,
-    read_forecast,
+    ArrivalsBody, DegreeKindName, EVIDENCE_FIELDS, FIT_FIELDS, FORECAST_FIELDS, FitRequestBody, FixedBody,
+    ForecastRequestBody, HorizonBody, LinkEventsBody, ModelName, NETWORK_FIELDS, SegmentBody, SnapshotBody,
+    TransitionsBody, WindowBody, read_fit, read_forecast,
 };
 
 /// What handlers share.
@@ -83,7 +87,7 @@ pub fn openapi_text() -> String {
 
 /// Routes that do the service's work, and count against `http.max_in_flight`.
 fn work_routes() -> OpenApiRouter<AppState> {
-    OpenApiRouter::new().merge(forecasts::routes()).merge(fits::routes())
+    OpenApiRouter::new().merge(forecasts::routes()).merge(fits::routes()).merge(networks::routes())
 }
 
 /// Routes that must answer however busy the others are.

@@ -113,6 +113,8 @@ pub struct LimitsConfig {
     pub transitions: usize,
     /// Ratio classes, windows and cells in one link list's attachment statistics, each.
     pub link_events: usize,
+    /// Rows of all the evidence stored of one network.
+    pub network_rows: usize,
     /// Thresholds times dates in one forecast.
     pub cells: usize,
 }
@@ -253,6 +255,7 @@ impl Config {
             ("limits.degree_counts", limits.degree_counts as u64, 1, MOST_THINGS),
             ("limits.transitions", limits.transitions as u64, 1, MOST_THINGS),
             ("limits.link_events", limits.link_events as u64, 1, MOST_THINGS),
+            ("limits.network_rows", limits.network_rows as u64, 1, MOST_THINGS),
             ("limits.cells", limits.cells as u64, 1, MOST_THINGS),
         ];
         match ranges.into_iter().find(|&(_, value, least, most)| !(least..=most).contains(&value)) {

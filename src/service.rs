@@ -4,16 +4,27 @@ mod answers;
 mod compute;
 mod cpu;
 mod error;
+mod evidence;
 mod inputs;
+mod network;
+mod networks;
 mod numbers;
 mod runs;
 
-use crate::config::{ComputeConfig, DatabaseConfig};
-use crate::store::{Store, StoreError};
+use std::future::Future;
+
+use tracing::Instrument;
+
+use crate::config::{Config, DatabaseConfig};
+use crate::model::MAX_SNAPSHOTS;
+use crate::store::{Caps, Store, StoreError};
 
 pub use crate::evaluate::OriginRequest;
 pub use crate::fit::{FitRequest, Fixed, Model, ModelChoice, Rung};
-pub use crate::store::{KeyClaim, RunFilter, RunKind, RunSummary, StoredRun};
+pub use crate::store::{
+    Clash, KeyClaim, NetworkSummary, NewNetwork, RunFilter, RunKind, RunSummary, SnapshotSummary, StoredLinkEvents,
+    StoredNetwork, StoredRun, StoredSnapshot, StoredTransitions, TransitionsSummary,
+};
 pub use answers::{
     AttachmentAnswer, AttachmentModel, CandidateAnswer, CountAnswer, CurvePointAnswer, DateAnswer, DegreeAnswer,
     EstimateAnswer, EvidenceKind, FitAnswer, FitReport, FitRun, ForecastAnswer, ForecastRun, GoodnessAnswer,
@@ -22,8 +33,10 @@ pub use answers::{
 };
 pub use compute::{Question, answer_at_once};
 pub use cpu::CpuPool;
-pub use error::ServiceError;
-pub use inputs::{FitInputs, ForecastInputs, Label, LabelFault, MAX_SEED, sha256_hex};
+pub use error::{ServiceError, Thing};
+pub use evidence::Written;
+pub use inputs::{FitInputs, ForecastInputs, Label, MAX_SEED, TextFault, sha256_hex};
+pub use network::{Description, NameFault, NetworkName, NetworkSettings, kind_name};
 pub use numbers::{Count, Real, date_text};
 
 /// The name and version every run carries.
@@ -34,6 +47,7 @@ pub const ENGINE: &str = concat!(env!("CARGO_PKG_NAME"), " ", env!("CARGO_PKG_VE
 pub struct Service {
     store: Store,
     cpu: CpuPool,
+    caps: Caps,
 }
 
 impl Service {
@@ -41,12 +55,13 @@ impl Service {
     ///
     /// # Errors
     /// When the database cannot be opened or migrated.
-    pub async fn open(database: &DatabaseConfig, compute: &ComputeConfig) -> Result<Self, StoreError> {
-        let store = Store::connect(database).await?;
-        if database.migrate_on_start {
+    pub async fn open(config: &Config) -> Result<Self, StoreError> {
+        let store = Store::connect(&config.database).await?;
+        if config.database.migrate_on_start {
             store.migrate().await?;
         }
-        Ok(Self { store, cpu: CpuPool::new(compute) })
+        let caps = Caps { dates: MAX_SNAPSHOTS as u64, rows: config.limits.network_rows as u64 };
+        Ok(Self { store, cpu: CpuPool::new(&config.compute), caps })
     }
 
     /// Brings the database's tables up to date and closes it.
@@ -89,5 +104,15 @@ impl Service {
     /// Closes the database.
     pub async fn close(&self) {
         self.store.close().await;
+    }
+}
+
+/// Runs a write in a task of its own: a caller that goes away in the middle cannot leave it half done.
+async fn in_own_task<T: Send + 'static>(
+    write: impl Future<Output = Result<T, ServiceError>> + Send + 'static,
+) -> Result<T, ServiceError> {
+    match tokio::spawn(write.in_current_span()).await {
+        Ok(outcome) => outcome,
+        Err(error) => Err(ServiceError::Broken(format!("a write stopped short: {error}"))),
     }
 }

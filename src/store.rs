@@ -1,19 +1,30 @@
-//! The only SQL: runs and idempotency keys in SQLite.
+//! The only SQL: runs and their idempotency keys, tracked networks and what is known of them, in SQLite.
 //!
-//! One connection writes, a pool of read-only ones reads. A run and its key are one `BEGIN IMMEDIATE` transaction, a
-//! deletion is one statement, each at `synchronous = FULL`: what was acknowledged is on disk, through a killed process
+//! One connection writes, a pool of read-only ones reads. A run and its key are one `BEGIN IMMEDIATE` transaction, and so
+//! is every other write that looks before it leaps, each at `synchronous = FULL`: what was acknowledged is on disk, through a killed process
 //! and through a power cut. A write into a file that no longer stands at its path is never acknowledged.
 
+mod columns;
 mod connect;
 mod file;
+mod link_events;
+mod networks;
 mod runs;
+mod snapshots;
+mod transitions;
+mod writes;
 
 use std::path::PathBuf;
 
 use file::DatabaseFile;
 use sqlx::SqlitePool;
 
+pub use link_events::StoredLinkEvents;
+pub use networks::{NetworkSummary, NewNetwork, StoredEvidence, StoredNetwork};
 pub use runs::{Inserted, KeyClaim, NewRun, RunFilter, RunKind, RunSummary, StoredRun};
+pub use snapshots::{SnapshotSummary, StoredSnapshot};
+pub use transitions::{EndTags, StoredTransitions, TransitionsSummary};
+pub use writes::{Caps, Clash, WriteError};
 
 // Primary result codes: https://www.sqlite.org/rescode.html
 const SQLITE_BUSY: u32 = 5;

@@ -5,6 +5,7 @@
 //! 1e400 is refused where it stands instead of ending the parse.
 
 mod counts;
+mod csv;
 mod faults;
 mod link_events;
 mod number;
@@ -13,11 +14,12 @@ mod rows;
 mod time;
 
 pub use counts::{degree_counts, moves};
+pub use csv::{degree_counts_csv, moves_csv};
 pub use faults::{At, Fault, Faults, Place};
 pub use link_events::link_events;
 pub use number::{real, whole};
 pub use object::{Object, list, object, text, unknown_name};
-pub use time::{every, instant};
+pub use time::{every, instant, instant_of};
 
 use serde_json::value::RawValue;
 

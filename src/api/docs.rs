@@ -38,6 +38,7 @@ const PAGE_POLICY: &str = "default-src 'self'; style-src 'self' 'unsafe-inline';
     tags(
         (name = "forecasts", description = "Hubs at future dates"),
         (name = "fits", description = "The attachment mix alone"),
+        (name = "networks", description = "Tracked networks, and runs from what is stored of them"),
         (name = "operation", description = "Health, readiness, metrics, this document"),
     )
 )]
@@ -52,7 +53,12 @@ pub fn preamble() -> OpenApi {
 /// required.
 pub fn with_exclusive_fields(mut document: OpenApi) -> OpenApi {
     let Some(components) = document.components.as_mut() else { return document };
-    for (name, either, or) in [("ForecastRequestBody", "dates", "horizon"), ("ArrivalsBody", "per_day", "segments")] {
+    let exclusive = [
+        ("ForecastRequestBody", "dates", "horizon"),
+        ("NetworkForecastBody", "dates", "horizon"),
+        ("ArrivalsBody", "per_day", "segments"),
+    ];
+    for (name, either, or) in exclusive {
         if let Some(RefOr::T(Schema::Object(body))) = components.schemas.get_mut(name) {
             let one_of = json!([{"required": [either]}, {"required": [or]}]);
             body.extensions.get_or_insert_default().insert("oneOf".to_owned(), one_of);

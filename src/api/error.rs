@@ -1,5 +1,7 @@
 //! The one table of errors: the status and code each is answered with, and what to do about it.
 
+mod clash;
+
 use std::time::Duration;
 
 use axum::http::header::ACCEPT_ENCODING;
@@ -9,7 +11,7 @@ use axum::response::{IntoResponse, Response};
 use super::decode::{At, Fault, Faults, Place};
 use super::problem::Problem;
 use crate::report::readable;
-use crate::service::ServiceError;
+use crate::service::{ServiceError, Thing};
 
 /// After how long to try again when all places are taken.
 const BUSY_RETRY: Duration = Duration::from_secs(1);
@@ -27,8 +29,11 @@ pub enum ApiError {
     MalformedJson(String),
     /// The content of the request is wrong.
     Invalid(Faults),
-    /// The body's media type is not JSON.
-    UnsupportedMediaType,
+    /// The body's media type is none that is read.
+    UnsupportedMediaType {
+        /// Those that are.
+        taken: &'static str,
+    },
     /// The body is compressed or otherwise encoded.
     EncodedBody,
     /// The body is larger than configured.
@@ -76,8 +81,8 @@ impl ApiError {
                 let detail = "The request was understood but parts of it are wrong; errors lists each with its place.";
                 Problem::new(S::BAD_REQUEST, "invalid_request", detail).with_faults(faults)
             }
-            Self::UnsupportedMediaType => {
-                let detail = "The body must be JSON; send it with the header Content-Type: application/json.";
+            Self::UnsupportedMediaType { taken } => {
+                let detail = format!("The body must be {taken}, in UTF-8; say so in the header Content-Type.");
                 Problem::new(S::UNSUPPORTED_MEDIA_TYPE, "unsupported_media_type", detail)
             }
             Self::EncodedBody => {
@@ -118,17 +123,21 @@ impl ApiError {
 fn service_problem(error: ServiceError) -> Problem {
     use StatusCode as S;
     match error {
-        ServiceError::NotFound => {
-            let detail = "There is no such run: it was never made, or was deleted.";
-            Problem::new(S::NOT_FOUND, "not_found", detail)
-        }
+        ServiceError::NotFound(thing) => Problem::new(S::NOT_FOUND, "not_found", missing(thing)),
         ServiceError::KeyTaken => {
             let detail = "This Idempotency-Key came before with another body; use a new key for a new request.";
             Problem::new(S::CONFLICT, "idempotency_key_reused", detail)
         }
         ServiceError::TagMismatch => {
-            let detail = "The run is not the one that If-Match names; read it again and use its ETag.";
+            let detail = "What stands there is not what If-Match or If-None-Match asks for; read it again and use its \
+                          ETag.";
             Problem::new(S::PRECONDITION_FAILED, "precondition_failed", detail)
+        }
+        ServiceError::Clash(clash) => clash::clash_problem(clash),
+        ServiceError::NoSnapshot => {
+            let detail = "The network has no snapshot, so there is nothing to start from. PUT one under \
+                          /v1/networks/{name}/snapshots/{as_of}, or transitions, or a link list.";
+            Problem::new(S::UNPROCESSABLE_ENTITY, "no_snapshot", detail)
         }
         ServiceError::Busy => {
             let detail = "Every worker is taken and the queue is full; try again shortly.";
@@ -178,6 +187,18 @@ fn service_problem(error: ServiceError) -> Problem {
         }
         error @ ServiceError::Store(_) => broken(error.to_string()),
         ServiceError::Broken(cause) => broken(cause),
+    }
+}
+
+fn missing(thing: Thing) -> &'static str {
+    match thing {
+        Thing::Run => "There is no such run: it was never made, or was deleted.",
+        Thing::Network => "There is no such network; PUT its settings under /v1/networks/{name} first.",
+        Thing::Snapshot => "The network has no snapshot of this date; its list of snapshots has the dates.",
+        Thing::Transitions => {
+            "The network has no transitions between these dates; its list of transitions has the dates."
+        }
+        Thing::LinkEvents => "The network has no link events; PUT them, or a link list to derive them from.",
     }
 }
 

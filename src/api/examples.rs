@@ -44,6 +44,21 @@ pub fn fit_request() -> Value {
     })
 }
 
+/// A tracked network's settings.
+pub fn network() -> Value {
+    json!({"degree_kind": "received", "description": "Followers of the accounts on Heronsgate"})
+}
+
+/// What is asked of a forecast of the tracked network.
+pub fn network_forecast() -> Value {
+    json!({"arrivals": {"per_day": 42.0}, "thresholds": [5, 10, 50], "horizon": {"until": "2027-06-01", "every": "P1M"}})
+}
+
+/// What is asked of a fit to the tracked network.
+pub fn network_fit() -> Value {
+    json!({"model": "mix", "label": "Heronsgate followers"})
+}
+
 /// A problem with two faults.
 pub fn problem() -> Value {
     json!({

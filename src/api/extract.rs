@@ -4,27 +4,31 @@ mod body;
 mod format;
 mod key;
 mod listing;
+mod place;
 
-pub use body::{JsonBody, read_json};
+pub use body::{JsonBody, RowsBody, read_json};
 pub use format::ResultFormat;
 pub use key::IdempotencyKey;
 pub use listing::Listing;
+pub use place::{date, network_name};
 
+use axum::extract::FromRequestParts;
 use axum::http::Uri;
+use axum::http::request::Parts;
 use serde::de::DeserializeOwned;
 use uuid::Uuid;
 
-use super::ApiError;
 use super::decode::{Fault, Faults, Place, unknown_name};
-use crate::service::ServiceError;
+use super::{ApiError, AppState};
+use crate::service::{ServiceError, Thing};
 
 /// Reads a run's id from a path; what is no id belongs to no run.
 pub fn run_id(text: &str) -> Result<Uuid, ApiError> {
-    Uuid::try_parse(text).map_err(|_| ServiceError::NotFound.into())
+    Uuid::try_parse(text).map_err(|_| ServiceError::NotFound(Thing::Run).into())
 }
 
 /// The query's parameters, each known and given once.
-fn parameters(uri: &Uri, known: &[&str], faults: &mut Faults) -> Vec<(String, String)> {
+pub fn parameters(uri: &Uri, known: &[&str], faults: &mut Faults) -> Vec<(String, String)> {
     let pairs = decode_query::<Vec<(String, String)>>(uri).unwrap_or_default();
     if !is_utf8(uri.query().unwrap_or_default()) {
         // The decoder puts the replacement character where there is none, which would look for what nobody asked.
@@ -42,6 +46,20 @@ fn parameters(uri: &Uri, known: &[&str], faults: &mut Faults) -> Vec<(String, St
         }
     }
     pairs
+}
+
+/// No query: a parameter that would be ignored is refused.
+#[derive(Debug, Clone, Copy)]
+pub struct NoQuery;
+
+impl FromRequestParts<AppState> for NoQuery {
+    type Rejection = ApiError;
+
+    async fn from_request_parts(parts: &mut Parts, _state: &AppState) -> Result<Self, ApiError> {
+        let mut faults = Faults::default();
+        parameters(&parts.uri, &[], &mut faults);
+        if faults.is_empty() { Ok(Self) } else { Err(ApiError::Invalid(faults)) }
+    }
 }
 
 /// Whether a query is UTF-8 once its percent signs are decoded.

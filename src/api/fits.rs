@@ -8,13 +8,15 @@ use utoipa_axum::routes;
 
 use super::extract::{IdempotencyKey, JsonBody, Listing, ResultFormat, run_id};
 use super::problem::Problem;
+use super::representation::Conditions;
 use super::requests::{FitRequestBody, read_fit};
 use super::runs::{self, RunPage};
 use super::{ApiError, AppState, examples};
 use crate::report;
 use crate::service::{FitRun, RunKind};
 
-const PATH: &str = "/v1/fits";
+/// Where these runs are kept.
+pub const PATH: &str = "/v1/fits";
 
 /// The routes of this resource.
 pub fn routes() -> OpenApiRouter<AppState> {
@@ -70,7 +72,7 @@ async fn create_fit(
     let claim = key.claim(&body);
     let limits = state.limits;
     let inputs = body.read(move |raw, faults| read_fit(raw, &limits, faults)).await?;
-    let run = state.service.create(inputs, claim).await?;
+    let run = state.service.create(inputs, None, claim).await?;
     runs::created(PATH, run, format, csv)
 }
 
@@ -162,14 +164,15 @@ async fn list_fits(State(state): State<AppState>, listing: Listing) -> Result<Re
 async fn delete_fit(
     State(state): State<AppState>,
     Path(id): Path<String>,
-    headers: HeaderMap,
+    conditions: Conditions,
 ) -> Result<StatusCode, ApiError> {
-    let matches = |tag: &str| runs::if_match_holds(&headers, tag);
+    let matches = |tag: &str| conditions.hold(Some(tag));
     state.service.delete(RunKind::Fit, run_id(&id)?, matches).await?;
     Ok(StatusCode::NO_CONTENT)
 }
 
-fn csv(document: &str) -> Result<String, ApiError> {
+/// The run as CSV.
+pub fn csv(document: &str) -> Result<String, ApiError> {
     let run: FitRun = serde_json::from_str(document).map_err(|error| ApiError::Broken(error.to_string()))?;
     report::fit_csv(&run.answer).map_err(|error| ApiError::Broken(error.to_string()))
 }

@@ -8,13 +8,15 @@ use utoipa_axum::routes;
 
 use super::extract::{IdempotencyKey, JsonBody, Listing, ResultFormat, run_id};
 use super::problem::Problem;
+use super::representation::Conditions;
 use super::requests::{ForecastRequestBody, read_forecast};
 use super::runs::{self, RunPage};
 use super::{ApiError, AppState, examples};
 use crate::report;
 use crate::service::{ForecastRun, RunKind};
 
-const PATH: &str = "/v1/forecasts";
+/// Where these runs are kept.
+pub const PATH: &str = "/v1/forecasts";
 
 /// The routes of this resource.
 pub fn routes() -> OpenApiRouter<AppState> {
@@ -70,7 +72,7 @@ async fn create_forecast(
     let claim = key.claim(&body);
     let limits = state.limits;
     let inputs = body.read(move |raw, faults| read_forecast(raw, &limits, faults)).await?;
-    let run = state.service.create(inputs, claim).await?;
+    let run = state.service.create(inputs, None, claim).await?;
     runs::created(PATH, run, format, csv)
 }
 
@@ -162,14 +164,15 @@ async fn list_forecasts(State(state): State<AppState>, listing: Listing) -> Resu
 async fn delete_forecast(
     State(state): State<AppState>,
     Path(id): Path<String>,
-    headers: HeaderMap,
+    conditions: Conditions,
 ) -> Result<StatusCode, ApiError> {
-    let matches = |tag: &str| runs::if_match_holds(&headers, tag);
+    let matches = |tag: &str| conditions.hold(Some(tag));
     state.service.delete(RunKind::Forecast, run_id(&id)?, matches).await?;
     Ok(StatusCode::NO_CONTENT)
 }
 
-fn csv(document: &str) -> Result<String, ApiError> {
+/// The run as CSV.
+pub fn csv(document: &str) -> Result<String, ApiError> {
     let run: ForecastRun = serde_json::from_str(document).map_err(|error| ApiError::Broken(error.to_string()))?;
     report::forecast_csv(&run.answer).map_err(|error| ApiError::Broken(error.to_string()))
 }

@@ -56,7 +56,11 @@ pub struct FaultNote {
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(examples("/snapshots/0/degree_counts/3"))]
     pointer: Option<String>,
-    /// Query parameter at fault, when the fault is not in the body.
+    /// Line of the body, when that is CSV.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false)]
+    line: Option<u64>,
+    /// Parameter of the query or the path at fault, when the fault is not in the body.
     #[serde(skip_serializing_if = "Option::is_none")]
     parameter: Option<String>,
     /// Header at fault, when the fault is not in the body.
@@ -170,13 +174,14 @@ impl Problem {
 
 impl FaultNote {
     fn new(place: Place, detail: String) -> Self {
-        let (mut pointer, mut parameter, mut header) = (None, None, None);
+        let (mut pointer, mut line, mut parameter, mut header) = (None, None, None, None);
         match place {
             Place::Body(at) => pointer = Some(at),
+            Place::Line(number) => line = Some(number),
             Place::Query(name) => parameter = Some(name),
             Place::Header(name) => header = Some(name),
         }
-        Self { pointer, parameter, header, detail }
+        Self { pointer, line, parameter, header, detail }
     }
 }
 

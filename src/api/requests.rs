@@ -1,14 +1,21 @@
 //! Reading request bodies into validated inputs.
 
 mod evidence;
+mod network;
+mod network_schema;
 mod outlook;
 mod schema;
 
 use serde_json::value::RawValue;
 
+pub use network::{
+    EVIDENCE_FIELDS, NETWORK_FIELDS, read_link_events, read_network, read_network_fit, read_network_forecast,
+    read_snapshot, read_snapshot_csv, read_transitions, read_transitions_csv,
+};
+pub use network_schema::{DegreeCountsBody, NetworkBody, NetworkFitBody, NetworkForecastBody, TransitionCountsBody};
 pub use schema::{
     ArrivalsBody, DegreeKindName, FitRequestBody, FixedBody, ForecastRequestBody, HorizonBody, LinkEventsBody,
-    ModelName, SegmentBody, SnapshotBody, TransitionsBody, WindowBody,
+    ModelName, SegmentBody, SnapshotBody, TransitionsBody, WindowBody, degree_pairs, move_rows,
 };
 
 use super::decode::{At, Faults, Object, object, real, text, whole};

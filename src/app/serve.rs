@@ -60,8 +60,7 @@ pub async fn start(config: Config) -> Result<Running, Stop> {
     let listener = TcpListener::bind(config.bind).await.map_err(|error| address_fault(config.bind, &error))?;
     let address = listener.local_addr().map_err(|error| Stop::failed("the listening address", error))?;
     let metrics = telemetry::start_metrics().map_err(|error| Stop::failed("metrics", error))?;
-    let service =
-        Service::open(&config.database, &config.compute).await.map_err(|error| Stop::failed("the database", error))?;
+    let service = Service::open(&config).await.map_err(|error| Stop::failed("the database", error))?;
     let upkeep = tokio::spawn(telemetry::keep_metrics_small(metrics.clone()));
     let (grace, head_timeout) = (config.http.shutdown_grace(), config.http.head_timeout());
     let state = AppState { service: service.clone(), http: Arc::new(config.http), limits: config.limits, metrics };

@@ -6,20 +6,26 @@ use crate::evaluate::OriginError;
 use crate::fit::FitError;
 use crate::forecast::ForecastError;
 use crate::growth::GrowthError;
-use crate::store::StoreError;
+use crate::store::{Clash, StoreError, WriteError};
 
 /// Why a use case has no answer.
 #[derive(Debug, thiserror::Error)]
 pub enum ServiceError {
-    /// No run has this id.
-    #[error("there is no such run")]
-    NotFound,
+    /// There is no such thing.
+    #[error("there is no such {0:?}")]
+    NotFound(Thing),
     /// The idempotency key belongs to another request body.
     #[error("the idempotency key was used with another request body")]
     KeyTaken,
-    /// The run is not the one the caller named.
-    #[error("the run does not match")]
+    /// What stands there is not what the caller named.
+    #[error("what stands there does not match")]
     TagMismatch,
+    /// It does not fit what is stored of the network.
+    #[error("it does not fit what is stored")]
+    Clash(Clash),
+    /// Nothing is stored of the network that a run could start from.
+    #[error("the network has no snapshot")]
+    NoSnapshot,
     /// Every worker is taken and the queue is full.
     #[error("every worker is taken and the queue is full")]
     Busy,
@@ -58,6 +64,21 @@ pub enum ServiceError {
     Broken(String),
 }
 
+/// What can be kept here, and so be missing.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum Thing {
+    /// A forecast or fit.
+    Run,
+    /// A tracked network.
+    Network,
+    /// A network's snapshot.
+    Snapshot,
+    /// A network's table of transitions.
+    Transitions,
+    /// A network's attachment statistics.
+    LinkEvents,
+}
+
 impl From<StoreError> for ServiceError {
     fn from(error: StoreError) -> Self {
         match error {
@@ -70,6 +91,17 @@ impl From<StoreError> for ServiceError {
 }
 
 impl ServiceError {
+    /// A write's failure; `thing` is what it was about.
+    pub fn from_write(error: WriteError, thing: Thing) -> Self {
+        match error {
+            WriteError::NoNetwork => Self::NotFound(Thing::Network),
+            WriteError::Missing => Self::NotFound(thing),
+            WriteError::Mismatch => Self::TagMismatch,
+            WriteError::Clash(clash) => Self::Clash(clash),
+            WriteError::Store(error) => error.into(),
+        }
+    }
+
     /// The core's failure; `budget` is what it had when it was cancelled.
     pub fn from_core(error: OriginError, budget: Duration) -> Self {
         match error {

@@ -3,10 +3,11 @@
 use serde::Serialize;
 use sha2::{Digest, Sha256};
 
+use super::network::kind_name;
 use super::numbers::{Real, date_text};
 use crate::evaluate::OriginRequest;
 use crate::fit::{FitRequest, ModelChoice};
-use crate::model::{ArrivalPlan, AttachmentCell, DegreeKind, Evidence, ForecastPlan, LinkEvents, Transitions};
+use crate::model::{ArrivalPlan, AttachmentCell, Evidence, ForecastPlan, LinkEvents, Transitions};
 
 /// The largest seed: 2^53 − 1, the largest whole number every JSON reader keeps exactly.
 pub const MAX_SEED: u64 = (1 << 53) - 1;
@@ -16,15 +17,31 @@ const MAX_LABEL_CHARS: usize = 200;
 #[derive(Debug, Clone, PartialEq, Eq)]
 pub struct Label(String);
 
-/// What is wrong with a label.
+/// What is wrong with a text.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, thiserror::Error)]
-pub enum LabelFault {
+pub enum TextFault {
     /// Too many characters.
-    #[error("the label has {0} characters; at most {MAX_LABEL_CHARS} are kept")]
-    TooLong(usize),
+    #[error("the text has {length} characters; at most {most} are kept")]
+    TooLong {
+        /// Its characters.
+        length: usize,
+        /// The most.
+        most: usize,
+    },
     /// A NUL character.
-    #[error("the label holds a NUL character (\\u0000); leave it out")]
+    #[error("the text holds a NUL character (\\u0000); leave it out")]
     Nul,
+}
+
+/// The text, when it has at most `most` characters and no NUL.
+pub(super) fn checked_text(text: String, most: usize) -> Result<String, TextFault> {
+    if text.contains('\0') {
+        return Err(TextFault::Nul);
+    }
+    match text.chars().count() {
+        length if length > most => Err(TextFault::TooLong { length, most }),
+        _ => Ok(text),
+    }
 }
 
 impl Label {
@@ -32,14 +49,8 @@ impl Label {
     ///
     /// # Errors
     /// When it is too long or holds a NUL character.
-    pub fn new(text: String) -> Result<Self, LabelFault> {
-        if text.contains('\0') {
-            return Err(LabelFault::Nul);
-        }
-        match text.chars().count() {
-            n if n > MAX_LABEL_CHARS => Err(LabelFault::TooLong(n)),
-            _ => Ok(Self(text)),
-        }
+    pub fn new(text: String) -> Result<Self, TextFault> {
+        checked_text(text, MAX_LABEL_CHARS).map(Self)
     }
 
     /// The text.
@@ -163,10 +174,7 @@ fn canonical_fit<'a>(asked: &'static str, evidence: &'a Evidence, fit: &FitReque
     let given = |rate: Option<f64>| rate.or((!known).then_some(0.0)).map(Real);
     Canonical {
         asked,
-        degree_kind: match evidence.kind() {
-            DegreeKind::Received => "received",
-            DegreeKind::Total => "total",
-        },
+        degree_kind: kind_name(evidence.kind()),
         snapshots: evidence
             .snapshots()
             .iter()

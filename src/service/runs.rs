@@ -2,12 +2,13 @@
 
 use jiff::Timestamp;
 use serde::Serialize;
-use tracing::Instrument;
 use uuid::Uuid;
 
 use super::compute::{Question, inputs_digest};
 use super::inputs::sha256_hex;
-use super::{ENGINE, KeyClaim, RunFilter, RunKind, RunSummary, Service, ServiceError, StoredRun};
+use super::{
+    ENGINE, KeyClaim, NetworkName, RunFilter, RunKind, RunSummary, Service, ServiceError, StoredRun, Thing, in_own_task,
+};
 use crate::evaluate::OriginError;
 use crate::store::{Inserted, NewRun};
 
@@ -22,13 +23,18 @@ struct Document<'a, A> {
 }
 
 impl Service {
-    /// Computes an answer and keeps it, or finds the run that the same key and body led to before. When this returns
-    /// a run, it is on disk.
+    /// Computes an answer and keeps it, as a run of `network` when it stands on what is stored of one; or finds the run
+    /// that the same key and body led to before. When this returns a run, it is on disk.
     ///
     /// # Errors
     /// When the inputs have no answer, the key belongs to another body, there is no free worker in time, or the
     /// database fails.
-    pub async fn create<Q: Question>(&self, question: Q, claim: Option<KeyClaim>) -> Result<StoredRun, ServiceError> {
+    pub async fn create<Q: Question>(
+        &self,
+        question: Q,
+        network: Option<NetworkName>,
+        claim: Option<KeyClaim>,
+    ) -> Result<StoredRun, ServiceError> {
         // Before anything is computed that could not be kept.
         self.check_tables().await?;
         if let Some(claim) = &claim
@@ -40,22 +46,18 @@ impl Service {
             return Err(ServiceError::from_core(refusal, self.cpu.budget()));
         }
         let budget = self.cpu.budget();
-        let run = self.cpu.run(move |cancelled| compute(&question, cancelled)).await?;
+        let run = self.cpu.run(move |cancelled| compute(&question, network, cancelled)).await?;
         let run = run.map_err(|failure| failure.into_service_error(budget))?;
-        // In a task of its own: a caller that goes away in the middle cannot leave the write half done.
         let store = self.store.clone();
-        let keep = async move {
+        in_own_task(async move {
             match store.insert_run(&run, claim.as_ref()).await? {
                 Inserted::Kept => {
                     Ok(StoredRun { id: run.id, created_at: run.created_at, tag: run.tag, document: run.document })
                 }
                 earlier => replayed(earlier),
             }
-        };
-        match tokio::spawn(keep.in_current_span()).await {
-            Ok(outcome) => outcome,
-            Err(error) => Err(ServiceError::Broken(format!("keeping a run stopped short: {error}"))),
-        }
+        })
+        .await
     }
 
     /// The run with this id.
@@ -63,7 +65,7 @@ impl Service {
     /// # Errors
     /// [`ServiceError::NotFound`], or when the database fails.
     pub async fn run(&self, kind: RunKind, id: Uuid) -> Result<StoredRun, ServiceError> {
-        self.store.find_run(kind, id).await?.ok_or(ServiceError::NotFound)
+        self.store.find_run(kind, id).await?.ok_or(ServiceError::NotFound(Thing::Run))
     }
 
     /// Runs that pass the filter, newest first, and whether more follow.
@@ -90,11 +92,11 @@ impl Service {
         matches: impl FnOnce(&str) -> bool,
     ) -> Result<(), ServiceError> {
         // A run never changes, so nothing can come between looking at its validator and deleting it but its deletion.
-        let tag = self.store.find_tag(kind, id).await?.ok_or(ServiceError::NotFound)?;
+        let tag = self.store.find_tag(kind, id).await?.ok_or(ServiceError::NotFound(Thing::Run))?;
         if !matches(&tag) {
             return Err(ServiceError::TagMismatch);
         }
-        if self.store.delete_run(kind, id).await? { Ok(()) } else { Err(ServiceError::NotFound) }
+        if self.store.delete_run(kind, id).await? { Ok(()) } else { Err(ServiceError::NotFound(Thing::Run)) }
     }
 }
 
@@ -113,7 +115,11 @@ impl Failure {
     }
 }
 
-fn compute<Q: Question>(question: &Q, cancelled: &dyn Fn() -> bool) -> Result<NewRun, Failure> {
+fn compute<Q: Question>(
+    question: &Q,
+    network: Option<NetworkName>,
+    cancelled: &dyn Fn() -> bool,
+) -> Result<NewRun, Failure> {
     let inputs = question.canonical().map_err(|error| Failure::Unwritable(error.to_string()))?;
     let digest = inputs_digest(&inputs);
     let answer = question.answer(digest.clone(), cancelled).map_err(Failure::Unanswered)?;
@@ -126,12 +132,18 @@ fn compute<Q: Question>(question: &Q, cancelled: &dyn Fn() -> bool) -> Result<Ne
             Timestamp::new(i64::try_from(seconds).ok()?, i32::try_from(nanoseconds).ok()?).ok()
         })
         .unwrap_or_else(Timestamp::now);
-    let document = Document { id, created_at: created_at.to_string(), network: None, answer: &answer };
+    let document = Document {
+        id,
+        created_at: created_at.to_string(),
+        network: network.as_ref().map(NetworkName::as_str),
+        answer: &answer,
+    };
     let document = serde_json::to_string(&document)
         .map_err(|error| Failure::Unwritable(format!("{error}: {}", place_of_no_number(&answer))))?;
     Ok(NewRun {
         id,
         kind: Q::KIND,
+        network: network.map(|name| name.as_str().to_owned()),
         label: question.label().map(|label| label.as_str().to_owned()),
         created_at,
         engine: ENGINE,

@@ -69,9 +69,13 @@ impl Store {
     async fn table_version(&self) -> Result<Option<i64>, StoreError> {
         let mut connection = self.read.acquire().await?;
         // Names each table there is: a missing one fails here, before anything is computed for it.
-        sqlx::query("SELECT 1 FROM runs LEFT JOIN idempotency_keys ON run_id = runs.id LIMIT 1")
-            .fetch_optional(&mut *connection)
-            .await?;
+        sqlx::query(
+            "SELECT 1 WHERE EXISTS (SELECT 1 FROM runs) OR EXISTS (SELECT 1 FROM idempotency_keys) \
+             OR EXISTS (SELECT 1 FROM networks) OR EXISTS (SELECT 1 FROM snapshots) \
+             OR EXISTS (SELECT 1 FROM transitions) OR EXISTS (SELECT 1 FROM link_events)",
+        )
+        .fetch_optional(&mut *connection)
+        .await?;
         let version = sqlx::query_scalar("SELECT max(version) FROM _sqlx_migrations WHERE success");
         Ok(version.fetch_one(&mut *connection).await?)
     }

@@ -4,6 +4,7 @@ use jiff::Timestamp;
 use sqlx::{FromRow, QueryBuilder, Sqlite, SqliteConnection};
 use uuid::Uuid;
 
+use super::columns::{signed, time, unsigned, uuid};
 use super::{Store, StoreError};
 
 /// What a run answered.
@@ -31,6 +32,8 @@ pub struct NewRun {
     pub id: Uuid,
     /// What it answered.
     pub kind: RunKind,
+    /// The network it belongs to.
+    pub network: Option<String>,
     /// The caller's label.
     pub label: Option<String>,
     /// When it was answered.
@@ -146,8 +149,7 @@ impl Store {
     /// # Errors
     /// When the database fails; then nothing was kept. When its file is gone; then nothing is where anybody finds it.
     pub async fn insert_run(&self, run: &NewRun, claim: Option<&KeyClaim>) -> Result<Inserted, StoreError> {
-        self.file.check()?;
-        let mut transaction = self.write.begin_with("BEGIN IMMEDIATE").await?;
+        let mut transaction = self.begin().await?;
         if let Some(claim) = claim
             && let Some(earlier) = claimed(&mut transaction, run.kind, claim).await?
         {
@@ -155,14 +157,15 @@ impl Store {
         }
         sqlx::query(
             "INSERT INTO runs (id, kind, network, label, created_at, engine, seed, inputs_digest, tag, document, inputs) \
-             VALUES ($1, $2, NULL, $3, $4, $5, $6, $7, $8, $9, $10)",
+             VALUES ($1, $2, $3, $4, $5, $6, $7, $8, $9, $10, $11)",
         )
         .bind(run.id.to_string())
         .bind(run.kind.as_str())
+        .bind(run.network.as_deref())
         .bind(run.label.as_deref())
         .bind(run.created_at.as_microsecond())
         .bind(run.engine)
-        .bind(signed(run.seed)?)
+        .bind(signed("seed", run.seed)?)
         .bind(run.inputs_digest.as_str())
         .bind(run.tag.as_str())
         .bind(run.document.as_str())
@@ -178,9 +181,7 @@ impl Store {
                 .execute(&mut *transaction)
                 .await?;
         }
-        transaction.commit().await?;
-        // Once more: the file may have gone in between.
-        self.file.check()?;
+        self.commit(transaction).await?;
         Ok(Inserted::Kept)
     }
 
@@ -287,7 +288,7 @@ impl TryFrom<RunRow> for StoredRun {
     type Error = StoreError;
 
     fn try_from(row: RunRow) -> Result<Self, StoreError> {
-        let (id, created_at) = (uuid(&row.id)?, timestamp(row.created_at)?);
+        let (id, created_at) = (uuid(&row.id)?, time(row.created_at)?);
         Ok(Self { id, created_at, tag: row.tag, document: row.document })
     }
 }
@@ -300,26 +301,10 @@ impl TryFrom<SummaryRow> for RunSummary {
             id: uuid(&row.id)?,
             network: row.network,
             label: row.label,
-            created_at: timestamp(row.created_at)?,
+            created_at: time(row.created_at)?,
             engine: row.engine,
-            seed: u64::try_from(row.seed).map_err(|_| corrupt("seed", row.seed))?,
+            seed: unsigned("seed", row.seed)?,
             inputs_digest: row.inputs_digest,
         })
     }
-}
-
-fn uuid(text: &str) -> Result<Uuid, StoreError> {
-    Uuid::parse_str(text).map_err(|_| corrupt("id", text))
-}
-
-fn timestamp(micros: i64) -> Result<Timestamp, StoreError> {
-    Timestamp::from_microsecond(micros).map_err(|_| corrupt("created_at", micros))
-}
-
-fn signed(seed: u64) -> Result<i64, StoreError> {
-    i64::try_from(seed).map_err(|_| corrupt("seed", seed))
-}
-
-fn corrupt(column: &str, value: impl std::fmt::Display) -> StoreError {
-    StoreError::Corrupt(format!("{column} = {value}"))
 }

@@ -112,6 +112,46 @@ async fn try_post(
     Ok((location, response.text().await?))
 }
 
+/// One snapshot is replaced again and again, each time with a node more: after a kill it is the last one acknowledged, or
+/// the one that was being stored.
+#[tokio::test(flavor = "multi_thread")]
+async fn no_kill_loses_an_acknowledged_snapshot() {
+    let folder = tempfile::tempdir().unwrap();
+    let client = Client::builder().no_proxy().build().unwrap();
+    let mut nodes = 0;
+    for round in 0..4 {
+        let served = serve(folder.path());
+        let network = format!("http://{}/v1/networks/heronsgate", served.address);
+        let snapshot = format!("{network}/snapshots/2026-06-01");
+        let settings = client.put(&network).json(&json!({"degree_kind": "received"})).send().await.unwrap();
+        assert!(settings.status().is_success());
+        if round > 0 {
+            let kept: Value = client.get(&snapshot).send().await.unwrap().json().await.unwrap();
+            let found = kept["nodes"].as_u64().unwrap();
+            assert!(found == nodes || found == nodes + 1, "{found} nodes, where {nodes} were acknowledged");
+            nodes = found;
+        }
+        let writer = tokio::spawn({
+            let (client, mut nodes) = (client.clone(), nodes);
+            async move {
+                loop {
+                    let body = json!({"degree_counts": [[0, nodes + 1]]});
+                    match client.put(&snapshot).json(&body).send().await {
+                        Ok(answer) => assert!(answer.status().is_success()),
+                        Err(_) => return nodes,
+                    }
+                    nodes += 1;
+                }
+            }
+        });
+        tokio::time::sleep(Duration::from_millis(80 + 53 * round)).await;
+        served.kill();
+        let acknowledged = writer.await.unwrap();
+        assert!(acknowledged > nodes, "nothing was acknowledged before the kill");
+        nodes = acknowledged;
+    }
+}
+
 #[cfg(unix)]
 #[tokio::test]
 async fn a_terminated_service_ends_in_good_order() {

@@ -73,9 +73,32 @@ impl Service {
         self.post_text(path, body.to_string()).await
     }
 
+    pub async fn put(&self, path: &str, body: &Value) -> Answer {
+        self.put_with(path, json_text(body), &[]).await
+    }
+
+    pub async fn put_with(&self, path: &str, body: (&str, String), headers: &[(&str, &str)]) -> Answer {
+        let request = self.request(Method::PUT, path).header(CONTENT_TYPE, body.0).body(body.1);
+        answered(headers.iter().fold(request, |request, &(name, value)| request.header(name, value))).await
+    }
+
+    pub async fn delete_if(&self, path: &str, tag: &str) -> Answer {
+        answered(self.request(Method::DELETE, path).header("if-match", tag)).await
+    }
+
     pub async fn post_text(&self, path: &str, body: impl Into<reqwest::Body>) -> Answer {
         answered(self.request(Method::POST, path).header(CONTENT_TYPE, "application/json").body(body)).await
     }
+}
+
+/// A request's body with its media type.
+pub fn csv(text: &str) -> (&'static str, String) {
+    ("text/csv", text.to_owned())
+}
+
+/// A request's body with its media type.
+pub fn json_text(body: &Value) -> (&'static str, String) {
+    ("application/json", body.to_string())
 }
 
 /// Sends a request and checks what every response promises.
@@ -160,7 +183,8 @@ impl Answer {
     pub fn places(&self) -> Vec<String> {
         let errors = self.json()["errors"].as_array().cloned().unwrap_or_default();
         let place = |error: &Value| {
-            ["pointer", "parameter", "header"].iter().find_map(|&member| error[member].as_str().map(str::to_owned))
+            let text = ["pointer", "parameter", "header"].iter().find_map(|&member| error[member].as_str());
+            text.map(str::to_owned).or_else(|| error["line"].as_u64().map(|line| format!("line {line}")))
         };
         errors.iter().filter_map(place).collect()
     }

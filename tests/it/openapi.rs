@@ -2,8 +2,8 @@
 
 use std::collections::BTreeSet;
 
-use serde_json::Value;
-use tailcast::api::{FIT_FIELDS, FORECAST_FIELDS, example_request, openapi_text};
+use serde_json::{Value, json};
+use tailcast::api::{EVIDENCE_FIELDS, FIT_FIELDS, FORECAST_FIELDS, NETWORK_FIELDS, example_request, openapi_text};
 
 use crate::harness::{DOCUMENT, Service};
 
@@ -31,6 +31,10 @@ fn documented_fields_are_the_fields_that_are_read() {
     let read = |fields: &[&str]| fields.iter().map(|&field| field.to_owned()).collect::<BTreeSet<_>>();
     assert_eq!(documented("ForecastRequestBody"), read(&FORECAST_FIELDS));
     assert_eq!(documented("FitRequestBody"), read(&FIT_FIELDS));
+    assert_eq!(documented("NetworkBody"), read(&NETWORK_FIELDS));
+    let evidence = read(&EVIDENCE_FIELDS);
+    assert_eq!(documented("NetworkForecastBody"), &read(&FORECAST_FIELDS) - &evidence);
+    assert_eq!(documented("NetworkFitBody"), &read(&FIT_FIELDS) - &evidence);
 }
 
 #[tokio::test]
@@ -44,7 +48,19 @@ async fn the_examples_are_answered_as_they_stand() {
         let content = &DOCUMENT["paths"][path]["post"]["requestBody"]["content"]["application/json"];
         service.post(path, &content["example"]).await.expect(201);
     }
-    for body in ["ForecastRequestBody", "ArrivalsBody"] {
+    service.put("/v1/networks/{name}", &json!({"degree_kind": "received"})).await.expect(400);
+    let network = "/v1/networks/heronsgate";
+    let example = |path: &str, method: &str| {
+        DOCUMENT["paths"][path][method]["requestBody"]["content"]["application/json"]["example"].clone()
+    };
+    service.put(network, &example("/v1/networks/{name}", "put")).await.expect(201);
+    let counts = &example("/v1/fits", "post")["snapshots"][0]["degree_counts"];
+    service.put(&format!("{network}/snapshots/2026-06-01"), &json!({"degree_counts": counts})).await.expect(201);
+    for runs in ["forecasts", "fits"] {
+        let body = example(&format!("/v1/networks/{{name}}/{runs}"), "post");
+        service.post(&format!("{network}/{runs}"), &body).await.expect(201);
+    }
+    for body in ["ForecastRequestBody", "NetworkForecastBody", "ArrivalsBody"] {
         assert_eq!(DOCUMENT["components"]["schemas"][body]["oneOf"].as_array().map(Vec::len), Some(2), "{body}");
     }
 }

@@ -86,7 +86,9 @@ impl<'p> At<'p> {
 pub enum Place {
     /// In the body, at an RFC 6901 pointer.
     Body(String),
-    /// In a query parameter.
+    /// In a line of the body, when that is no JSON; the first is 1.
+    Line(u64),
+    /// In a parameter of the query or the path.
     Query(String),
     /// In a header.
     Header(&'static str),
@@ -115,6 +117,15 @@ impl Faults {
             self.unlisted += 1;
         } else {
             self.push(Fault { place: Place::Body(at.pointer()), detail: detail.into() });
+        }
+    }
+
+    /// Notes a fault in a line of a body that is no JSON.
+    pub fn add_line(&mut self, line: u64, detail: impl Into<String>) {
+        if self.is_full() {
+            self.unlisted += 1;
+        } else {
+            self.push(Fault { place: Place::Line(line), detail: detail.into() });
         }
     }
 

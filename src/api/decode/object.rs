@@ -73,6 +73,7 @@ pub fn unknown_name(what: &str, name: &str, known: &[&str]) -> String {
         Some((alike, candidate)) if alike >= ALIKE => {
             format!("there is no {what} {shown:?}; did you mean {candidate:?}?")
         }
+        _ if known.is_empty() => format!("there is no {what} {shown:?}; none is taken here"),
         _ => format!("there is no {what} {shown:?}; the known ones are {}", known.join(", ")),
     }
 }

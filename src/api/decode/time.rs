@@ -13,7 +13,12 @@ const LAST_DATE: &str = "9999-12-30";
 
 /// A time: RFC 3339, or a bare date that means 00:00 UTC.
 pub fn instant(raw: &RawValue, at: At<'_>, faults: &mut Faults) -> Option<Timestamp> {
-    let text = text(raw, at, faults)?;
+    let found = instant_of(&text(raw, at, faults)?);
+    found.map_err(|detail| faults.add(&at, detail)).ok()
+}
+
+/// The time that a text tells, or why it tells none.
+pub fn instant_of(text: &str) -> Result<Timestamp, String> {
     // The parser takes signed years and a zone's name in brackets too, RFC 3339 does not.
     let plain = text.starts_with(|c: char| c.is_ascii_digit()) && !text.ends_with(']');
     let parsed = if text.len() == BARE_DATE_CHARS {
@@ -21,12 +26,10 @@ pub fn instant(raw: &RawValue, at: At<'_>, faults: &mut Faults) -> Option<Timest
     } else {
         text.parse::<Timestamp>()
     };
-    let found = parsed.ok().filter(|_| plain);
-    if found.is_none() {
+    parsed.ok().filter(|_| plain).ok_or_else(|| {
         let shown: String = text.chars().take(60).collect();
-        faults.add(&at, format!("{shown:?} {}", why_no_time(&text)));
-    }
-    found
+        format!("{shown:?} {}", why_no_time(text))
+    })
 }
 
 /// What is wrong with a text that is no time.
@@ -51,16 +54,18 @@ fn why_no_time(text: &str) -> String {
 
 /// A repeating step: an ISO 8601 duration longer than nothing, such as P1M or P30D.
 pub fn every(raw: &RawValue, at: At<'_>, faults: &mut Faults) -> Option<Span> {
-    let text = text(raw, at, faults)?;
+    let found = every_of(&text(raw, at, faults)?);
+    found.map_err(|detail| faults.add(&at, detail)).ok()
+}
+
+/// The step that a text tells, or why it tells none.
+pub fn every_of(text: &str) -> Result<Span, String> {
     // The parser takes a friendlier form too; what ISO 8601 calls a duration starts with P.
     let span = text.starts_with('P').then(|| text.parse::<Span>().ok()).flatten().filter(|span| span.is_positive());
-    if span.is_none() {
+    span.ok_or_else(|| {
         let shown: String = text.chars().take(60).collect();
-        let detail =
-            format!("{shown:?} is no ISO 8601 duration longer than nothing; write P1M for a month, P30D for 30 days");
-        faults.add(&at, detail);
-    }
-    span
+        format!("{shown:?} is no ISO 8601 duration longer than nothing; write P1M for a month, P30D for 30 days")
+    })
 }
 
 #[cfg(test)]

@@ -40,24 +40,69 @@ impl FromRequest<AppState> for JsonBody {
     type Rejection = ApiError;
 
     async fn from_request(request: Request, state: &AppState) -> Result<Self, ApiError> {
-        let (limit, time) = (state.http.body_limit_bytes, state.http.body_timeout());
         if !is_json(request.headers()) {
-            return Err(ApiError::UnsupportedMediaType);
+            return Err(ApiError::UnsupportedMediaType { taken: "JSON (application/json)" });
         }
-        if !is_plain(request.headers()) {
-            return Err(ApiError::EncodedBody);
+        complete(request, state).await.map(Self)
+    }
+}
+
+/// A body of rows, announced as JSON or as CSV.
+#[derive(Debug, Clone)]
+pub enum RowsBody {
+    /// JSON.
+    Json(JsonBody),
+    /// CSV (RFC 4180) with a header.
+    Csv(Bytes),
+}
+
+impl RowsBody {
+    /// Reads the body in the form it has; both ways note every fault.
+    pub async fn read<T: Send + 'static>(
+        self,
+        json: impl FnOnce(&RawValue, &mut Faults) -> Option<T> + Send + 'static,
+        csv: impl FnOnce(&[u8], &mut Faults) -> Option<T> + Send + 'static,
+    ) -> Result<T, ApiError> {
+        match self {
+            Self::Json(body) => body.read(json).await,
+            Self::Csv(bytes) if bytes.len() <= OFFLOAD_BYTES => faultless(|faults| csv(&bytes, faults)),
+            Self::Csv(bytes) => {
+                let reading = spawn_blocking(move || faultless(|faults| csv(&bytes, faults))).await;
+                reading.unwrap_or_else(|error| Err(ApiError::Broken(format!("reading a body stopped short: {error}"))))
+            }
         }
-        let announced =
-            request.headers().get(header::CONTENT_LENGTH).and_then(|value| value.to_str().ok()?.parse().ok());
-        if announced.is_some_and(|length: u64| length > limit as u64) {
-            return Err(ApiError::TooLarge { limit });
+    }
+}
+
+impl FromRequest<AppState> for RowsBody {
+    type Rejection = ApiError;
+
+    async fn from_request(request: Request, state: &AppState) -> Result<Self, ApiError> {
+        if is_json(request.headers()) {
+            complete(request, state).await.map(|bytes| Self::Json(JsonBody(bytes)))
+        } else if media_type(request.headers()).is_some_and(|essence| essence == "text/csv") {
+            complete(request, state).await.map(Self::Csv)
+        } else {
+            Err(ApiError::UnsupportedMediaType { taken: "JSON (application/json) or CSV (text/csv)" })
         }
-        match timeout(time, to_bytes(request.into_body(), limit)).await {
-            Ok(Ok(bytes)) => Ok(Self(bytes)),
-            Ok(Err(error)) if is_length_limit(&error) => Err(ApiError::TooLarge { limit }),
-            Ok(Err(_)) => Err(ApiError::BodyBroken),
-            Err(_) => Err(ApiError::BodyTooSlow { limit: time }),
-        }
+    }
+}
+
+/// The whole body, when it comes as it is, in time and within the size limit.
+async fn complete(request: Request, state: &AppState) -> Result<Bytes, ApiError> {
+    let (limit, time) = (state.http.body_limit_bytes, state.http.body_timeout());
+    if !is_plain(request.headers()) {
+        return Err(ApiError::EncodedBody);
+    }
+    let announced = request.headers().get(header::CONTENT_LENGTH).and_then(|value| value.to_str().ok()?.parse().ok());
+    if announced.is_some_and(|length: u64| length > limit as u64) {
+        return Err(ApiError::TooLarge { limit });
+    }
+    match timeout(time, to_bytes(request.into_body(), limit)).await {
+        Ok(Ok(bytes)) => Ok(bytes),
+        Ok(Err(error)) if is_length_limit(&error) => Err(ApiError::TooLarge { limit }),
+        Ok(Err(_)) => Err(ApiError::BodyBroken),
+        Err(_) => Err(ApiError::BodyTooSlow { limit: time }),
     }
 }
 
@@ -77,8 +122,13 @@ pub fn read_json<T>(bytes: &[u8], read: impl FnOnce(&RawValue, &mut Faults) -> O
         Err(error) if error.is_eof() => return malformed(format!("The body breaks off before its end: {error}.")),
         Err(error) => return malformed(format!("The body is not JSON: {error}.")),
     };
+    faultless(|faults| read(raw, faults))
+}
+
+/// What `read` gives, unless it noted a fault.
+fn faultless<T>(read: impl FnOnce(&mut Faults) -> Option<T>) -> Result<T, ApiError> {
     let mut faults = Faults::default();
-    match read(raw, &mut faults) {
+    match read(&mut faults) {
         Some(value) if faults.is_empty() => Ok(value),
         None if faults.is_empty() => Err(ApiError::Broken("a body was refused without a fault".into())),
         _ => Err(ApiError::Invalid(faults)),
@@ -87,10 +137,16 @@ pub fn read_json<T>(bytes: &[u8], read: impl FnOnce(&RawValue, &mut Faults) -> O
 
 /// `application/json` or another JSON format's media type, in UTF-8.
 fn is_json(headers: &HeaderMap) -> bool {
-    let Some(Ok(value)) = headers.get(header::CONTENT_TYPE).map(|value| value.to_str()) else { return false };
-    let mut parts = value.split(';').map(str::trim);
+    let json = |essence: &str| {
+        essence == "application/json" || (essence.starts_with("application/") && essence.ends_with("+json"))
+    };
+    media_type(headers).is_some_and(|essence| json(&essence))
+}
+
+/// The body's media type in lower case; none when it is not announced, or as text in another encoding than UTF-8.
+fn media_type(headers: &HeaderMap) -> Option<String> {
+    let mut parts = headers.get(header::CONTENT_TYPE)?.to_str().ok()?.split(';').map(str::trim);
     let essence = parts.next().unwrap_or_default().to_ascii_lowercase();
-    let json = essence == "application/json" || (essence.starts_with("application/") && essence.ends_with("+json"));
     let utf8 = parts.all(|parameter| match parameter.split_once('=') {
         Some((name, value)) if name.eq_ignore_ascii_case("charset") => {
             let value = value.trim_matches('"');
@@ -98,7 +154,7 @@ fn is_json(headers: &HeaderMap) -> bool {
         }
         _ => true,
     });
-    json && utf8
+    utf8.then_some(essence)
 }
 
 /// Whether the body is sent as it is: neither compressed nor otherwise encoded.

@@ -6,7 +6,7 @@ use axum::http::request::Parts;
 use super::JsonBody;
 use crate::api::decode::Place;
 use crate::api::{ApiError, AppState};
-use crate::service::{KeyClaim, sha256_hex};
+use crate::service::{KeyClaim, NetworkName, sha256_hex};
 
 const NAME: &str = "idempotency-key";
 const MAX_CHARS: usize = 255;
@@ -19,6 +19,13 @@ impl IdempotencyKey {
     /// The key's claim on a body.
     pub fn claim(self, body: &JsonBody) -> Option<KeyClaim> {
         self.0.map(|key| KeyClaim { key, body_digest: sha256_hex(body.bytes()) })
+    }
+
+    /// The key's claim on a body that is meant for a network: the same body for another network is another request.
+    pub fn claim_for(self, network: &NetworkName, body: &JsonBody) -> Option<KeyClaim> {
+        // A name holds no NUL.
+        let meant = [network.as_str().as_bytes(), b"\0", body.bytes()].concat();
+        self.0.map(|key| KeyClaim { key, body_digest: sha256_hex(&meant) })
     }
 }
 

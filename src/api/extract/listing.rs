@@ -6,12 +6,11 @@ use uuid::Uuid;
 
 use super::parameters;
 use crate::api::decode::{Fault, Faults, Place};
+use crate::api::pages::{NO_CURSOR, limit};
 use crate::api::{ApiError, AppState};
 use crate::service::RunFilter;
 
 const KNOWN: [&str; 4] = ["network", "label", "limit", "cursor"];
-const DEFAULT_LIMIT: u32 = 50;
-const MAX_LIMIT: u32 = 200;
 
 /// The query of a list of runs.
 #[derive(Debug, Clone, PartialEq, Eq)]
@@ -27,7 +26,7 @@ impl FromRequestParts<AppState> for Listing {
 
     async fn from_request_parts(parts: &mut Parts, _state: &AppState) -> Result<Self, ApiError> {
         let mut faults = Faults::default();
-        let mut filter = RunFilter { limit: DEFAULT_LIMIT, ..RunFilter::default() };
+        let mut filter = RunFilter { limit: limit(None).unwrap_or(1), ..RunFilter::default() };
         let mut repeated = Vec::new();
         for (name, value) in parameters(&parts.uri, &KNOWN, &mut faults) {
             let Some(known) = KNOWN.into_iter().find(|&known| known == name) else { continue };
@@ -40,13 +39,13 @@ impl FromRequestParts<AppState> for Listing {
             match known {
                 "network" => filter.network = Some(value.clone()),
                 "label" => filter.label = Some(value.clone()),
-                "limit" => match value.parse() {
-                    Ok(limit) if (1..=MAX_LIMIT).contains(&limit) => filter.limit = limit,
-                    _ => fault("a limit is a whole number from 1 to 200"),
+                "limit" => match limit(Some(&value)) {
+                    Ok(limit) => filter.limit = limit,
+                    Err(detail) => fault(&detail),
                 },
                 _ => match Uuid::try_parse(&value) {
                     Ok(id) => filter.before = Some(id),
-                    Err(_) => fault("this is no cursor; take it from the Link header of the page before"),
+                    Err(_) => fault(NO_CURSOR),
                 },
             }
             if known != "cursor" {

@@ -64,7 +64,8 @@ fn noted<T>(
     found.ok()
 }
 
-fn degree_kind(body: &Object<'_>, faults: &mut Faults) -> Option<DegreeKind> {
+/// Reads what a degree counts.
+pub fn degree_kind(body: &Object<'_>, faults: &mut Faults) -> Option<DegreeKind> {
     let root = At::ROOT;
     let at = root.field("degree_kind");
     match text(body.required("degree_kind", &root, faults)?, at, faults)?.as_str() {
@@ -142,7 +143,8 @@ fn table(raw: &RawValue, at: At<'_>, limits: &LimitsConfig, faults: &mut Faults)
     found.ok()
 }
 
-fn entry_degrees(raw: &RawValue, faults: &mut Faults) -> Option<EntryDegrees> {
+/// Reads the degrees that newcomers arrive with.
+pub fn entry_degrees(raw: &RawValue, faults: &mut Faults) -> Option<EntryDegrees> {
     /// Entry degrees are few; the check for repeats is quadratic.
     const MOST_ENTRY_DEGREES: usize = 10_000;
     let root = At::ROOT;

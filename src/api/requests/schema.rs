@@ -7,10 +7,10 @@ use utoipa::ToSchema;
 use utoipa::openapi::schema::{Array, ArrayBuilder, ArrayItems, ObjectBuilder, Schema, SchemaType, Type};
 use utoipa::openapi::{KnownFormat, SchemaFormat};
 
-use crate::model::MAX_DEGREE;
+use crate::model::{DegreeKind, MAX_DEGREE};
 
 /// `[[degree, nodes], …]`
-fn degree_pairs() -> Array {
+pub fn degree_pairs() -> Array {
     let pair = ArrayBuilder::new().items(whole(0)).min_items(Some(2)).max_items(Some(2));
     let example = json!([[0, 5400], [1, 1075], [2, 416], [40, 3]]);
     let says = "`[degree, nodes]` pairs in any order, no degree twice: so many nodes have exactly so many links.";
@@ -18,7 +18,7 @@ fn degree_pairs() -> Array {
 }
 
 /// `[[degree, share], …]`
-fn share_pairs() -> Array {
+pub fn share_pairs() -> Array {
     let number = ObjectBuilder::new().schema_type(SchemaType::Type(Type::Number)).minimum(Some(0));
     let pair = ArrayBuilder::new().items(number).min_items(Some(2)).max_items(Some(2));
     let says = "`[degree, share]` pairs: the degrees newcomers arrive with; the shares add up to 1. Read from the data \
@@ -43,7 +43,7 @@ fn whole(least: u32) -> ObjectBuilder {
 }
 
 /// `[[degree before | null, degree after | null, nodes], …]`
-fn move_rows() -> Array {
+pub fn move_rows() -> Array {
     let blank = || {
         let kinds = SchemaType::from_iter([Type::Integer, Type::Null]);
         whole(0).schema_type(kinds).maximum(Some(MAX_DEGREE as f64)).build().into()
@@ -235,6 +235,15 @@ pub enum DegreeKindName {
     Received,
     /// All links of an undirected network.
     Total,
+}
+
+impl From<DegreeKind> for DegreeKindName {
+    fn from(kind: DegreeKind) -> Self {
+        match kind {
+            DegreeKind::Received => Self::Received,
+            DegreeKind::Total => Self::Total,
+        }
+    }
 }
 
 /// Degree counts at a date.

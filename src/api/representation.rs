@@ -1,0 +1,152 @@
+//! Representations of what is kept, with their validators (RFC 9110, sections 8.8 and 13).
+
+use axum::body::Body;
+use axum::extract::FromRequestParts;
+use axum::http::request::Parts;
+use axum::http::{HeaderMap, HeaderValue, StatusCode, header};
+use axum::response::{IntoResponse, Response};
+use jiff::Timestamp;
+
+use super::extract::ResultFormat;
+use super::{ApiError, AppState};
+
+/// What tells one state of something kept from another.
+#[derive(Debug, Clone, Copy)]
+pub struct Validator<'a> {
+    /// Digest of its content.
+    pub tag: &'a str,
+    /// When it was last changed.
+    pub modified: Timestamp,
+}
+
+/// 200 with a representation, or 304 when the client has it already.
+pub fn found(
+    validator: Validator<'_>,
+    format: ResultFormat,
+    asked: &HeaderMap,
+    body: impl FnOnce() -> Result<Body, ApiError>,
+) -> Result<Response, ApiError> {
+    if is_unmodified(asked, &entity_tag(validator.tag, format), validator.modified) {
+        let mut response = StatusCode::NOT_MODIFIED.into_response();
+        *response.headers_mut() = validators(validator, format)?;
+        return Ok(response);
+    }
+    represented(validator, format, body()?)
+}
+
+/// A representation with its validators.
+pub fn represented(validator: Validator<'_>, format: ResultFormat, body: Body) -> Result<Response, ApiError> {
+    let mut headers = validators(validator, format)?;
+    headers.insert(header::CONTENT_TYPE, HeaderValue::from_static(format.content_type()));
+    let mut response = Response::new(body);
+    *response.headers_mut() = headers;
+    Ok(response)
+}
+
+/// Strong validator of one form of something kept. The CSV is made anew by each version, so the version is part of its
+/// validator.
+pub fn entity_tag(tag: &str, format: ResultFormat) -> String {
+    match format {
+        ResultFormat::Json => format!("\"{tag}\""),
+        ResultFormat::Csv => format!("\"{tag}-csv-{}\"", env!("CARGO_PKG_VERSION")),
+    }
+}
+
+/// What is kept can change or be deleted: caches may keep it, and must ask before each use.
+fn validators(validator: Validator<'_>, format: ResultFormat) -> Result<HeaderMap, ApiError> {
+    let mut headers = HeaderMap::new();
+    headers.insert(header::ETAG, header_value(&entity_tag(validator.tag, format))?);
+    headers.insert(header::LAST_MODIFIED, header_value(&httpdate::fmt_http_date(validator.modified.into()))?);
+    headers.insert(header::CACHE_CONTROL, HeaderValue::from_static("private, no-cache"));
+    headers.insert(header::VARY, HeaderValue::from_static("accept"));
+    Ok(headers)
+}
+
+/// If-None-Match decides; If-Modified-Since only where the former is absent (RFC 9110, section 13.2.2).
+fn is_unmodified(asked: &HeaderMap, entity_tag: &str, modified: Timestamp) -> bool {
+    let mut tags = asked.get_all(header::IF_NONE_MATCH).iter().peekable();
+    if tags.peek().is_some() {
+        return tags.any(|value| names_any(value, &[entity_tag.to_owned()], true));
+    }
+    let since = asked.get(header::IF_MODIFIED_SINCE).and_then(|value| value.to_str().ok());
+    let since =
+        since.and_then(|text| httpdate::parse_http_date(text).ok()).and_then(|time| Timestamp::try_from(time).ok());
+    since.is_some_and(|since| modified.as_second() <= since.as_second())
+}
+
+/// The conditions that a change is asked for under: If-Match and If-None-Match.
+#[derive(Debug, Clone)]
+pub struct Conditions {
+    match_any: Vec<HeaderValue>,
+    match_none: Vec<HeaderValue>,
+}
+
+impl Conditions {
+    /// Whether they hold where what stands there has this validator, in either of its forms, or where there is nothing.
+    pub fn hold(&self, current: Option<&str>) -> bool {
+        let forms = current.map(|tag| [ResultFormat::Json, ResultFormat::Csv].map(|format| entity_tag(tag, format)));
+        let named = |values: &[HeaderValue], weak| {
+            forms.as_ref().is_some_and(|forms| values.iter().any(|value| names_any(value, forms, weak)))
+        };
+        (self.match_any.is_empty() || named(&self.match_any, false)) && !named(&self.match_none, true)
+    }
+}
+
+impl FromRequestParts<AppState> for Conditions {
+    type Rejection = ApiError;
+
+    async fn from_request_parts(parts: &mut Parts, _state: &AppState) -> Result<Self, ApiError> {
+        let all = |name| parts.headers.get_all(name).iter().cloned().collect();
+        Ok(Self { match_any: all(header::IF_MATCH), match_none: all(header::IF_NONE_MATCH) })
+    }
+}
+
+/// Whether a list of entity tags holds one of `forms`, or is `*`. Weak tags match only where `weak` says so.
+fn names_any(value: &HeaderValue, forms: &[String], weak: bool) -> bool {
+    let Ok(text) = value.to_str() else { return false };
+    text.trim() == "*"
+        || text.split(',').map(str::trim).any(|tag| {
+            let opaque = if weak { tag.strip_prefix("W/").unwrap_or(tag) } else { tag };
+            forms.iter().any(|form| form == opaque)
+        })
+}
+
+/// A text as a header's value.
+pub fn header_value(text: &str) -> Result<HeaderValue, ApiError> {
+    HeaderValue::from_str(text).map_err(|error| ApiError::Broken(format!("{text:?} is no header value: {error}")))
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    fn conditions(match_any: &[&'static str], match_none: &[&'static str]) -> Conditions {
+        let values = |texts: &[&'static str]| texts.iter().map(|&text| HeaderValue::from_static(text)).collect();
+        Conditions { match_any: values(match_any), match_none: values(match_none) }
+    }
+
+    #[test]
+    fn conditions_hold_as_rfc_9110_says() {
+        // If-Match, If-None-Match, what stands there, whether they hold.
+        for (match_any, match_none, current, holds) in [
+            (vec![], vec![], None, true),
+            (vec![], vec![], Some("a"), true),
+            (vec!["*"], vec![], None, false),
+            (vec!["*"], vec![], Some("a"), true),
+            (vec!["\"b\", \"a\""], vec![], Some("a"), true),
+            (vec!["\"b\""], vec![], Some("a"), false),
+            (vec!["W/\"a\""], vec![], Some("a"), false),
+            (vec!["\"b\"", "\"a\""], vec![], Some("a"), true),
+            (vec!["a"], vec![], Some("a"), false),
+            (vec![], vec!["*"], None, true),
+            (vec![], vec!["*"], Some("a"), false),
+            (vec![], vec!["W/\"a\""], Some("a"), false),
+            (vec![], vec!["\"b\""], Some("a"), true),
+        ] {
+            let conditions = conditions(&match_any, &match_none);
+            assert_eq!(conditions.hold(current), holds, "{conditions:?} {current:?}");
+        }
+        let csv: &'static str = Box::leak(entity_tag("a", ResultFormat::Csv).into_boxed_str());
+        assert!(conditions(&[csv], &[]).hold(Some("a")), "either form names it");
+    }
+}

@@ -1,0 +1,221 @@
+//! What is stored of tracked networks: snapshots, transitions, link events; and all of it as evidence for a run.
+
+mod assemble;
+mod encode;
+
+use jiff::Timestamp;
+
+use super::networks::cut;
+use super::{NetworkName, Service, ServiceError, Thing, in_own_task};
+use crate::model::{Evidence, LinkEvents, Snapshot, Transitions};
+use crate::store::{
+    SnapshotSummary, StoredLinkEvents, StoredSnapshot, StoredTransitions, TransitionsSummary, WriteError,
+};
+
+/// What a write answers: the line of what is stored now, and whether nothing stood there before.
+pub type Written<T> = Result<(T, bool), ServiceError>;
+
+impl Service {
+    /// Stores a snapshot. `allows` is asked about the validator of what stands there.
+    ///
+    /// # Errors
+    /// When there is no such network, `allows` refuses, the counts clash with stored ones, a cap is reached, or the
+    /// database fails.
+    pub async fn put_snapshot(
+        &self,
+        name: NetworkName,
+        snapshot: Snapshot,
+        allows: impl FnOnce(Option<&str>) -> bool + Send + 'static,
+    ) -> Written<SnapshotSummary> {
+        self.check_tables().await?;
+        let stored = encoded(move || encode::snapshot(&snapshot)).await?;
+        let (store, caps) = (self.store.clone(), self.caps);
+        in_own_task(async move {
+            let made = store.put_snapshot(name.as_str(), &stored, &caps, allows).await;
+            Ok((stored.summary, made.map_err(refused(Thing::Snapshot))?))
+        })
+        .await
+    }
+
+    /// A snapshot.
+    ///
+    /// # Errors
+    /// When there is no such network or snapshot, or the database fails.
+    pub async fn snapshot(&self, name: &NetworkName, as_of: Timestamp) -> Result<StoredSnapshot, ServiceError> {
+        let found = self.store.find_snapshot(name.as_str(), as_of).await?;
+        self.found(name, found, Thing::Snapshot).await
+    }
+
+    /// Snapshots later than `after`, oldest first, and whether more follow.
+    ///
+    /// # Errors
+    /// When there is no such network, or the database fails.
+    pub async fn snapshots(
+        &self,
+        name: &NetworkName,
+        after: Option<Timestamp>,
+        limit: u32,
+    ) -> Result<(Vec<SnapshotSummary>, bool), ServiceError> {
+        self.network(name).await?;
+        Ok(cut(self.store.list_snapshots(name.as_str(), after, limit.saturating_add(1)).await?, limit))
+    }
+
+    /// Deletes a snapshot. `allows` is asked about its validator.
+    ///
+    /// # Errors
+    /// When there is no such network or snapshot, `allows` refuses, or the database fails.
+    pub async fn delete_snapshot(
+        &self,
+        name: NetworkName,
+        as_of: Timestamp,
+        allows: impl FnOnce(Option<&str>) -> bool + Send + 'static,
+    ) -> Result<(), ServiceError> {
+        let store = self.store.clone();
+        in_own_task(async move {
+            store.delete_snapshot(name.as_str(), as_of, allows).await.map_err(refused(Thing::Snapshot))
+        })
+        .await
+    }
+
+    /// Stores a table of transitions. `allows` is asked about the validator of what stands there.
+    ///
+    /// # Errors
+    /// As [`Self::put_snapshot`]; when the period overlaps a stored one.
+    pub async fn put_transitions(
+        &self,
+        name: NetworkName,
+        table: Transitions,
+        allows: impl FnOnce(Option<&str>) -> bool + Send + 'static,
+    ) -> Written<TransitionsSummary> {
+        self.check_tables().await?;
+        let (stored, ends) = encoded(move || encode::transitions(&table)).await?;
+        let (store, caps) = (self.store.clone(), self.caps);
+        in_own_task(async move {
+            let made = store.put_transitions(name.as_str(), &stored, &ends, &caps, allows).await;
+            Ok((stored.summary, made.map_err(refused(Thing::Transitions))?))
+        })
+        .await
+    }
+
+    /// A table of transitions.
+    ///
+    /// # Errors
+    /// When there is no such network or table, or the database fails.
+    pub async fn transitions(
+        &self,
+        name: &NetworkName,
+        (from, to): (Timestamp, Timestamp),
+    ) -> Result<StoredTransitions, ServiceError> {
+        let found = self.store.find_transitions(name.as_str(), from, to).await?;
+        self.found(name, found, Thing::Transitions).await
+    }
+
+    /// Tables of transitions that start later than `after`, oldest first, and whether more follow.
+    ///
+    /// # Errors
+    /// When there is no such network, or the database fails.
+    pub async fn transitions_list(
+        &self,
+        name: &NetworkName,
+        after: Option<Timestamp>,
+        limit: u32,
+    ) -> Result<(Vec<TransitionsSummary>, bool), ServiceError> {
+        self.network(name).await?;
+        Ok(cut(self.store.list_transitions(name.as_str(), after, limit.saturating_add(1)).await?, limit))
+    }
+
+    /// Deletes a table of transitions. `allows` is asked about its validator.
+    ///
+    /// # Errors
+    /// When there is no such network or table, `allows` refuses, or the database fails.
+    pub async fn delete_transitions(
+        &self,
+        name: NetworkName,
+        dates: (Timestamp, Timestamp),
+        allows: impl FnOnce(Option<&str>) -> bool + Send + 'static,
+    ) -> Result<(), ServiceError> {
+        let store = self.store.clone();
+        in_own_task(async move {
+            store.delete_transitions(name.as_str(), dates, allows).await.map_err(refused(Thing::Transitions))
+        })
+        .await
+    }
+
+    /// Stores a network's attachment statistics. `allows` is asked about the validator of what stands there.
+    ///
+    /// # Errors
+    /// When there is no such network, `allows` refuses, a cap is reached, or the database fails.
+    pub async fn put_link_events(
+        &self,
+        name: NetworkName,
+        events: LinkEvents,
+        allows: impl FnOnce(Option<&str>) -> bool + Send + 'static,
+    ) -> Written<StoredLinkEvents> {
+        self.check_tables().await?;
+        let stored = encoded(move || encode::link_events(&events)).await?;
+        let (store, caps) = (self.store.clone(), self.caps);
+        in_own_task(async move {
+            let made = store.put_link_events(name.as_str(), &stored, &caps, allows).await;
+            Ok((stored, made.map_err(refused(Thing::LinkEvents))?))
+        })
+        .await
+    }
+
+    /// A network's attachment statistics.
+    ///
+    /// # Errors
+    /// When there is no such network, it has none, or the database fails.
+    pub async fn link_events(&self, name: &NetworkName) -> Result<StoredLinkEvents, ServiceError> {
+        let found = self.store.find_link_events(name.as_str()).await?;
+        self.found(name, found, Thing::LinkEvents).await
+    }
+
+    /// Deletes a network's attachment statistics. `allows` is asked about their validator.
+    ///
+    /// # Errors
+    /// When there is no such network, it has none, `allows` refuses, or the database fails.
+    pub async fn delete_link_events(
+        &self,
+        name: NetworkName,
+        allows: impl FnOnce(Option<&str>) -> bool + Send + 'static,
+    ) -> Result<(), ServiceError> {
+        let store = self.store.clone();
+        in_own_task(
+            async move { store.delete_link_events(name.as_str(), allows).await.map_err(refused(Thing::LinkEvents)) },
+        )
+        .await
+    }
+
+    /// All that is stored of a network, as evidence for a run.
+    ///
+    /// # Errors
+    /// When there is no such network, nothing is stored that a run could start from, or the database fails.
+    pub async fn evidence(&self, name: &NetworkName) -> Result<Evidence, ServiceError> {
+        let stored = self.store.find_evidence(name.as_str()).await?.ok_or(ServiceError::NotFound(Thing::Network))?;
+        off_runtime(move || assemble::evidence(stored)).await?
+    }
+
+    /// What was found, or whether the network or the thing under it is missing.
+    async fn found<T>(&self, name: &NetworkName, found: Option<T>, thing: Thing) -> Result<T, ServiceError> {
+        match found {
+            Some(found) => Ok(found),
+            None => self.network(name).await.and(Err(ServiceError::NotFound(thing))),
+        }
+    }
+}
+
+fn refused(thing: Thing) -> impl FnOnce(WriteError) -> ServiceError {
+    move |error| ServiceError::from_write(error, thing)
+}
+
+/// Large counts take a while to write as JSON.
+async fn encoded<T: Send + 'static>(
+    work: impl FnOnce() -> Result<T, serde_json::Error> + Send + 'static,
+) -> Result<T, ServiceError> {
+    off_runtime(work).await?.map_err(|error| ServiceError::Broken(error.to_string()))
+}
+
+async fn off_runtime<T: Send + 'static>(work: impl FnOnce() -> T + Send + 'static) -> Result<T, ServiceError> {
+    let done = tokio::task::spawn_blocking(work).await;
+    done.map_err(|error| ServiceError::Broken(format!("a conversion stopped short: {error}")))
+}

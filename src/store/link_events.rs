@@ -1,0 +1,135 @@
+//! Attachment statistics of tracked networks: at most one a network.
+
+use jiff::Timestamp;
+use sqlx::{FromRow, SqliteConnection};
+
+use super::columns::{signed, time, total, unsigned};
+use super::writes::{Caps, WriteError, network_exists, room_for_rows};
+use super::{Store, StoreError};
+
+/// Attachment statistics as stored.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct StoredLinkEvents {
+    /// Landing ends.
+    pub landings: u64,
+    /// Ratio classes and cells.
+    pub rows: u64,
+    /// SHA-256 of the statistics.
+    pub tag: String,
+    /// When they were last stored.
+    pub updated_at: Timestamp,
+    /// The statistics, JSON.
+    pub statistics: String,
+}
+
+#[derive(FromRow)]
+struct LinkEventsRow {
+    landings: String,
+    row_count: i64,
+    tag: String,
+    updated_at: i64,
+    statistics: String,
+}
+
+impl Store {
+    /// Stores a network's attachment statistics; true when it had none. `allows` is asked about the validator of what
+    /// stands there.
+    ///
+    /// # Errors
+    /// When there is no such network, `allows` refuses, a cap is reached, or the database fails.
+    pub async fn put_link_events(
+        &self,
+        network: &str,
+        events: &StoredLinkEvents,
+        caps: &Caps,
+        allows: impl FnOnce(Option<&str>) -> bool,
+    ) -> Result<bool, WriteError> {
+        let mut transaction = self.begin().await?;
+        network_exists(&mut transaction, network).await?;
+        let stored = stored_tag(&mut transaction, network).await?;
+        if !allows(stored.as_ref().map(|(tag, _)| tag.as_str())) {
+            return Err(WriteError::Mismatch);
+        }
+        let replaced = stored.as_ref().map_or(Ok(0), |&(_, rows)| unsigned("row_count", rows))?;
+        room_for_rows(&mut transaction, network, (events.rows, replaced), caps).await?;
+        insert(&mut transaction, network, events).await?;
+        self.commit(transaction).await?;
+        Ok(stored.is_none())
+    }
+
+    /// A network's attachment statistics, if they are stored.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn find_link_events(&self, network: &str) -> Result<Option<StoredLinkEvents>, StoreError> {
+        self.file.check()?;
+        let row: Option<LinkEventsRow> = sqlx::query_as(
+            "SELECT landings, row_count, tag, updated_at, statistics FROM link_events WHERE network = $1",
+        )
+        .bind(network)
+        .fetch_optional(&self.read)
+        .await?;
+        row.map(StoredLinkEvents::try_from).transpose()
+    }
+
+    /// Deletes a network's attachment statistics.
+    ///
+    /// # Errors
+    /// When there are none, `allows` refuses, or the database fails.
+    pub async fn delete_link_events(
+        &self,
+        network: &str,
+        allows: impl FnOnce(Option<&str>) -> bool,
+    ) -> Result<(), WriteError> {
+        let mut transaction = self.begin().await?;
+        network_exists(&mut transaction, network).await?;
+        let (tag, _) = stored_tag(&mut transaction, network).await?.ok_or(WriteError::Missing)?;
+        if !allows(Some(&tag)) {
+            return Err(WriteError::Mismatch);
+        }
+        sqlx::query("DELETE FROM link_events WHERE network = $1").bind(network).execute(&mut *transaction).await?;
+        Ok(self.commit(transaction).await?)
+    }
+}
+
+async fn stored_tag(connection: &mut SqliteConnection, network: &str) -> Result<Option<(String, i64)>, StoreError> {
+    let row = sqlx::query_as("SELECT tag, row_count FROM link_events WHERE network = $1").bind(network);
+    Ok(row.fetch_optional(connection).await?)
+}
+
+/// Stores statistics in place of those the network has, if any.
+pub(super) async fn insert(
+    connection: &mut SqliteConnection,
+    network: &str,
+    events: &StoredLinkEvents,
+) -> Result<(), StoreError> {
+    sqlx::query(
+        "INSERT INTO link_events (network, landings, row_count, tag, updated_at, statistics) \
+         VALUES ($1, $2, $3, $4, $5, $6) ON CONFLICT (network) DO UPDATE SET landings = excluded.landings, \
+         row_count = excluded.row_count, tag = excluded.tag, updated_at = excluded.updated_at, \
+         statistics = excluded.statistics",
+    )
+    .bind(network)
+    .bind(events.landings.to_string())
+    .bind(signed("row_count", events.rows)?)
+    .bind(events.tag.as_str())
+    .bind(events.updated_at.as_microsecond())
+    .bind(events.statistics.as_str())
+    .execute(connection)
+    .await?;
+    Ok(())
+}
+
+impl TryFrom<LinkEventsRow> for StoredLinkEvents {
+    type Error = StoreError;
+
+    fn try_from(row: LinkEventsRow) -> Result<Self, StoreError> {
+        Ok(Self {
+            landings: total("landings", &row.landings)?,
+            rows: unsigned("row_count", row.row_count)?,
+            tag: row.tag,
+            updated_at: time(row.updated_at)?,
+            statistics: row.statistics,
+        })
+    }
+}

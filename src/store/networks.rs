@@ -1,0 +1,260 @@
+//! Tracked networks: their settings, and everything that is known of one.
+
+use jiff::Timestamp;
+use sqlx::{FromRow, SqliteConnection};
+
+use super::columns::{date, kind, kind_name, time, unsigned};
+use super::writes::{Clash, WriteError};
+use super::{Store, StoreError};
+use crate::model::DegreeKind;
+
+/// A network's settings, to be stored.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct NewNetwork {
+    /// Its name.
+    pub name: String,
+    /// What its degrees count.
+    pub degree_kind: DegreeKind,
+    /// The caller's words.
+    pub description: Option<String>,
+    /// Entry degrees, JSON.
+    pub entry_degrees: Option<String>,
+    /// Strong validator of the settings.
+    pub tag: String,
+}
+
+/// A network's settings as stored.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct StoredNetwork {
+    /// The settings.
+    pub settings: NewNetwork,
+    /// When they were first stored.
+    pub created_at: Timestamp,
+    /// When they last changed.
+    pub updated_at: Timestamp,
+}
+
+/// A network's line in a list.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct NetworkSummary {
+    /// Its settings.
+    pub network: StoredNetwork,
+    /// Snapshots stored.
+    pub snapshots: u64,
+    /// Date of the newest one.
+    pub newest: Option<Timestamp>,
+    /// Tables of transitions stored.
+    pub transitions: u64,
+    /// Whether link events are stored.
+    pub link_events: bool,
+}
+
+/// All that is known of a network, at one moment; lists oldest first, counts as JSON.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct StoredEvidence {
+    /// Its settings.
+    pub network: StoredNetwork,
+    /// Date and degree counts.
+    pub snapshots: Vec<(Timestamp, String)>,
+    /// Start, end and counts.
+    pub transitions: Vec<(Timestamp, Timestamp, String)>,
+    /// Attachment statistics.
+    pub link_events: Option<String>,
+}
+
+#[derive(FromRow)]
+struct NetworkRow {
+    name: String,
+    degree_kind: String,
+    description: Option<String>,
+    tag: String,
+    created_at: i64,
+    updated_at: i64,
+    entry_degrees: Option<String>,
+}
+
+#[derive(FromRow)]
+struct SummaryRow {
+    #[sqlx(flatten)]
+    network: NetworkRow,
+    snapshots: i64,
+    newest: Option<String>,
+    transitions: i64,
+    link_events: i64,
+}
+
+impl Store {
+    /// Stores a network's settings; true when it is new. `allows` is asked about the validator of what stands there.
+    ///
+    /// # Errors
+    /// When `allows` refuses, the kind of degree would change under stored counts, or the database fails.
+    pub async fn put_network(
+        &self,
+        network: &NewNetwork,
+        allows: impl FnOnce(Option<&str>) -> bool,
+    ) -> Result<bool, WriteError> {
+        let mut transaction = self.begin().await?;
+        let stored = find(&mut transaction, &network.name).await?;
+        if !allows(stored.as_ref().map(|stored| stored.settings.tag.as_str())) {
+            return Err(WriteError::Mismatch);
+        }
+        if let Some(stored) = &stored
+            && stored.settings.degree_kind != network.degree_kind
+            && has_evidence(&mut transaction, &network.name).await?
+        {
+            return Err(Clash::DegreeKind { stored: stored.settings.degree_kind }.into());
+        }
+        sqlx::query(
+            "INSERT INTO networks (name, degree_kind, description, tag, created_at, updated_at, entry_degrees) \
+             VALUES ($1, $2, $3, $4, $5, $5, $6) ON CONFLICT (name) DO UPDATE SET degree_kind = excluded.degree_kind, \
+             description = excluded.description, tag = excluded.tag, updated_at = excluded.updated_at, \
+             entry_degrees = excluded.entry_degrees",
+        )
+        .bind(network.name.as_str())
+        .bind(kind_name(network.degree_kind))
+        .bind(network.description.as_deref())
+        .bind(network.tag.as_str())
+        .bind(Timestamp::now().as_microsecond())
+        .bind(network.entry_degrees.as_deref())
+        .execute(&mut *transaction)
+        .await?;
+        self.commit(transaction).await?;
+        Ok(stored.is_none())
+    }
+
+    /// The settings of a network, if it is tracked.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn find_network(&self, name: &str) -> Result<Option<StoredNetwork>, StoreError> {
+        self.file.check()?;
+        let mut connection = self.read.acquire().await?;
+        find(&mut connection, name).await
+    }
+
+    /// Networks whose name comes after `after`, in the order of their names.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn list_networks(&self, after: Option<&str>, limit: u32) -> Result<Vec<NetworkSummary>, StoreError> {
+        self.file.check()?;
+        let rows: Vec<SummaryRow> = sqlx::query_as(
+            "SELECT name, degree_kind, description, tag, created_at, updated_at, entry_degrees, \
+             (SELECT count(*) FROM snapshots WHERE network = name) AS snapshots, \
+             (SELECT max(as_of) FROM snapshots WHERE network = name) AS newest, \
+             (SELECT count(*) FROM transitions WHERE network = name) AS transitions, \
+             (SELECT count(*) FROM link_events WHERE network = name) AS link_events \
+             FROM networks WHERE name > $1 ORDER BY name LIMIT $2",
+        )
+        .bind(after.unwrap_or_default())
+        .bind(i64::from(limit))
+        .fetch_all(&self.read)
+        .await?;
+        rows.into_iter().map(NetworkSummary::try_from).collect()
+    }
+
+    /// Deletes a network and all that is stored of it; its runs stay.
+    ///
+    /// # Errors
+    /// When there is no such network, `allows` refuses, or the database fails.
+    pub async fn delete_network(
+        &self,
+        name: &str,
+        allows: impl FnOnce(Option<&str>) -> bool,
+    ) -> Result<(), WriteError> {
+        let mut transaction = self.begin().await?;
+        let stored = find(&mut transaction, name).await?.ok_or(WriteError::NoNetwork)?;
+        if !allows(Some(&stored.settings.tag)) {
+            return Err(WriteError::Mismatch);
+        }
+        sqlx::query("DELETE FROM networks WHERE name = $1").bind(name).execute(&mut *transaction).await?;
+        Ok(self.commit(transaction).await?)
+    }
+
+    /// All that is known of a network, if it is tracked.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn find_evidence(&self, name: &str) -> Result<Option<StoredEvidence>, StoreError> {
+        self.file.check()?;
+        // One transaction reads one state, whatever is written meanwhile.
+        let mut transaction = self.read.begin().await?;
+        let Some(network) = find(&mut transaction, name).await? else { return Ok(None) };
+        let snapshots: Vec<(String, String)> =
+            sqlx::query_as("SELECT as_of, degree_counts FROM snapshots WHERE network = $1 ORDER BY as_of")
+                .bind(name)
+                .fetch_all(&mut *transaction)
+                .await?;
+        let transitions: Vec<(String, String, String)> =
+            sqlx::query_as("SELECT starts_at, ends_at, counts FROM transitions WHERE network = $1 ORDER BY starts_at")
+                .bind(name)
+                .fetch_all(&mut *transaction)
+                .await?;
+        let link_events = sqlx::query_scalar("SELECT statistics FROM link_events WHERE network = $1")
+            .bind(name)
+            .fetch_optional(&mut *transaction)
+            .await?;
+        let dated = |(as_of, counts): (String, String)| Ok((date(&as_of)?, counts));
+        let framed = |(from, to, counts): (String, String, String)| Ok((date(&from)?, date(&to)?, counts));
+        Ok(Some(StoredEvidence {
+            network,
+            snapshots: snapshots.into_iter().map(dated).collect::<Result<_, StoreError>>()?,
+            transitions: transitions.into_iter().map(framed).collect::<Result<_, StoreError>>()?,
+            link_events,
+        }))
+    }
+}
+
+async fn find(connection: &mut SqliteConnection, name: &str) -> Result<Option<StoredNetwork>, StoreError> {
+    let row: Option<NetworkRow> = sqlx::query_as(
+        "SELECT name, degree_kind, description, tag, created_at, updated_at, entry_degrees FROM networks WHERE name = $1",
+    )
+    .bind(name)
+    .fetch_optional(connection)
+    .await?;
+    row.map(StoredNetwork::try_from).transpose()
+}
+
+async fn has_evidence(connection: &mut SqliteConnection, name: &str) -> Result<bool, StoreError> {
+    let found: i64 = sqlx::query_scalar(
+        "SELECT EXISTS (SELECT 1 FROM snapshots WHERE network = $1) \
+         OR EXISTS (SELECT 1 FROM transitions WHERE network = $1) \
+         OR EXISTS (SELECT 1 FROM link_events WHERE network = $1)",
+    )
+    .bind(name)
+    .fetch_one(connection)
+    .await?;
+    Ok(found != 0)
+}
+
+impl TryFrom<NetworkRow> for StoredNetwork {
+    type Error = StoreError;
+
+    fn try_from(row: NetworkRow) -> Result<Self, StoreError> {
+        Ok(Self {
+            created_at: time(row.created_at)?,
+            updated_at: time(row.updated_at)?,
+            settings: NewNetwork {
+                degree_kind: kind(&row.degree_kind)?,
+                name: row.name,
+                description: row.description,
+                entry_degrees: row.entry_degrees,
+                tag: row.tag,
+            },
+        })
+    }
+}
+
+impl TryFrom<SummaryRow> for NetworkSummary {
+    type Error = StoreError;
+
+    fn try_from(row: SummaryRow) -> Result<Self, StoreError> {
+        Ok(Self {
+            network: row.network.try_into()?,
+            snapshots: unsigned("snapshots", row.snapshots)?,
+            newest: row.newest.as_deref().map(date).transpose()?,
+            transitions: unsigned("transitions", row.transitions)?,
+            link_events: row.link_events > 0,
+        })
+    }
+}
