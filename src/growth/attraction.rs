@@ -7,8 +7,8 @@ use super::mean_field::{Course, GrowthError};
 use crate::numerics::quadrature::PANEL;
 use crate::numerics::tolerances::ODE_TOLERANCE;
 
-/// Growth factors that stand for a gamma distribution in a forecast: with 6, moments up to the 11th are exact.
-pub(crate) const FACTORS: usize = 6;
+/// Growth factors that stand for a gamma distribution in a forecast: with 8, moments up to the 15th are exact.
+pub(crate) const FACTORS: usize = 8;
 
 /// One growth factor η of the quadrature over their distribution.
 #[derive(Debug, Clone, Copy, PartialEq)]
@@ -143,7 +143,7 @@ fn barycentric(points: &[(f64, f64)]) -> Vec<f64> {
 
 #[cfg(test)]
 mod tests {
-    use super::growth_factors;
+    use super::{FACTORS, growth_factors};
 
     /// Moments of the gamma distribution with mean one: E η² = 1 + σ², E η³ = (1 + σ²)(1 + 2σ²).
     #[test]
