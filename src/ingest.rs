@@ -59,6 +59,8 @@ pub struct Progress {
     pub bytes: u64,
     /// Links counted.
     pub links: u64,
+    /// Nodes met.
+    pub nodes: u64,
 }
 
 /// Why a list could not be counted.
@@ -141,7 +143,7 @@ pub fn count_links(
     let mut format = None;
     loop {
         let more = lines.fill().map_err(|error| lines.source().fault(counter.line(), error))?;
-        let progress = Progress { bytes: lines.source().bytes(), links: counter.links() };
+        let progress = Progress { bytes: lines.source().bytes(), links: counter.links(), nodes: counter.nodes() };
         if watch(progress).is_break() {
             return Err(IngestError::Cancelled);
         }

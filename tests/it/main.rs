@@ -11,6 +11,7 @@ mod durability;
 mod fits;
 mod forecasts;
 mod harness;
+mod jobs;
 mod limits;
 mod lists;
 mod network_runs;
