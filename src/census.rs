@@ -148,6 +148,12 @@ impl Census {
         self.degrees.len()
     }
 
+    /// A node's degree so far; 0 for one that has not arrived.
+    #[inline]
+    pub fn degree(&self, id: u32) -> u32 {
+        self.degrees.get(id as usize).copied().unwrap_or(0)
+    }
+
     /// Time of the last link counted; an earlier one is out of order.
     pub fn now(&self) -> Option<Timestamp> {
         self.now

@@ -244,6 +244,8 @@ pub struct PeriodRates {
     pub gain_per_link: f64,
     /// Losses a link.
     pub loss_per_link: f64,
+    /// Ends that landed on nodes present, a day.
+    pub landed_per_day: f64,
 }
 
 /// What transitions tell.

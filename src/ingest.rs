@@ -5,6 +5,7 @@
 //! but an empty one; in JSON it may be an integer too, which is the same as its digits. A time is RFC 3339, a bare date
 //! (00:00 UTC) or seconds since 1970.
 
+mod batch;
 mod clock;
 mod counter;
 mod csv;
@@ -156,6 +157,7 @@ pub fn count_links(
         } else {
             lines.consume(read);
         }
+        counter.settle()?;
         if !more {
             return counter.finish();
         }

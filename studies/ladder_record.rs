@@ -32,11 +32,9 @@ const fn way(name: &'static str, transitions: bool, rung: Rung, choice: ModelCho
 }
 
 const MIX: ModelChoice = ModelChoice::Only(Model::Mix);
-const WAYS: [Way; 9] = [
+const WAYS: [Way; 7] = [
     way("counts, mix", false, Rung::SuccessiveSnapshots, MIX),
     way("both, mix", true, Rung::SuccessiveSnapshots, MIX),
-    way("both, dormancy", true, Rung::SuccessiveSnapshots, ModelChoice::Only(Model::Dormancy)),
-    way("both, growth variance", true, Rung::SuccessiveSnapshots, ModelChoice::Only(Model::GrowthVariance)),
     way("transitions, mix", true, Rung::Transitions, MIX),
     way("transitions, dormancy", true, Rung::Transitions, ModelChoice::Only(Model::Dormancy)),
     way("transitions, growth variance", true, Rung::Transitions, ModelChoice::Only(Model::GrowthVariance)),
@@ -80,24 +78,24 @@ fn estimates(tables: &[Transitions]) {
         };
         let (flows, moves) = (by(Rung::SuccessiveSnapshots), by(Rung::Transitions));
         let yearly = |estimate: Estimate| 100.0 * (1.0 - (-estimate.value * 365.2425).exp());
-        let rates = moves.transitions.as_ref().unwrap().periods[0];
+        let request = FitRequest { rung: Some(Rung::Transitions), ..FitRequest::default() };
+        let all = fit(&evidence, &request, &|| false).unwrap();
+        let rates = all.transitions.as_ref().unwrap().periods[0];
         println!(
             "{}  flows {}  transitions {}  departed {:.4}  {:.1} % a year  links lost {:.1} % a year  uniform gain {:.4}",
             &table.to().to_string()[..10],
             share(&flows.preferential_share),
             share(&moves.preferential_share),
             rates.departure_share,
-            yearly(moves.forces.departures.estimate),
-            yearly(moves.forces.link_losses.estimate),
+            yearly(all.forces.departures.estimate),
+            yearly(all.forces.link_losses.estimate),
             rates.uniform_gain,
         );
-        let request = FitRequest { rung: Some(Rung::Transitions), ..FitRequest::default() };
-        let all = fit(&evidence, &request, &|| false).unwrap();
         for c in &all.candidates {
             let own = c.parameter.map_or(String::new(), |own| format!(" ({own:.3})"));
             println!("    {:<16} p {:.3}{own} AIC weight {:.3}", c.model.name(), c.preferential_share, c.weight);
         }
-        outliers(&moves);
+        outliers(&all);
         println!("    {}", all.verdict);
     }
     println!();

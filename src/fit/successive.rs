@@ -1,7 +1,7 @@
 //! Rung 2: successive snapshots, by the flow of nodes across thresholds.
 
 use super::profile::{Profile, profile_share};
-use super::{FitError, Forces, ModelChoice};
+use super::{FitError, Forces, ModelChoice, PeriodRates, TransitionSummary};
 use crate::growth::{Course, GrowthError, NetworkLaw, NodeLaw};
 use crate::model::{
     ArrivalPlan, AttachmentMix, DegreeCounts, DegreeKind, EntryDegrees, Evidence, GrowthParameters, Warning,
@@ -57,11 +57,16 @@ pub(super) fn periods<'a>(
     entry: &EntryDegrees,
     forces: &Forces,
     links_per_node_day: f64,
+    moved: Option<&TransitionSummary>,
 ) -> Result<(Vec<Period<'a>>, Vec<Warning>), FitError> {
     let (mut periods, mut warnings) = (Vec::new(), Vec::new());
     let oldest = (evidence.snapshots().len() - 1).saturating_sub(MOST_PERIODS);
     for (before, after, days) in evidence.periods().skip(oldest) {
-        match Period::read(evidence.kind(), &before.counts, &after.counts, days, entry, forces, links_per_node_day) {
+        // One departing hub can take more ends than all that landed: then transitions still tell what landed.
+        let same = |rates: &&PeriodRates| (rates.from, rates.to) == (before.as_of, after.as_of);
+        let landed = moved.and_then(|moved| moved.periods.iter().find(same)).map(|rates| rates.landed_per_day);
+        let (kind, forces) = (evidence.kind(), (forces, links_per_node_day));
+        match Period::read(kind, &before.counts, &after.counts, days, entry, forces, landed) {
             Some(period) => periods.push(period),
             None => {
                 let detail = format!(
@@ -157,8 +162,8 @@ impl<'a> Period<'a> {
         after: &'a DegreeCounts,
         days: f64,
         entry: &EntryDegrees,
-        given: &Forces,
-        links_per_node_day: f64,
+        (given, links_per_node_day): (&Forces, f64),
+        landed_per_day: Option<f64>,
     ) -> Option<Self> {
         let (departures, losses) = (given.departures.value(), given.link_losses.value());
         let plan = ArrivalPlan::constant(1.0).ok()?;
@@ -180,6 +185,9 @@ impl<'a> Period<'a> {
         let arrivals_per_day = inflow(before.nodes() as f64, after.nodes() as f64, departures);
         let ends_per_day = inflow(before.link_ends() as f64, after.link_ends() as f64, theta);
         let mut links_per_arrival = ends_per_day / arrivals_per_day - entry.mean();
+        if links_per_arrival <= 0.0 {
+            links_per_arrival = landed_per_day? / arrivals_per_day;
+        }
         if !(arrivals_per_day > 0.0 && links_per_arrival > 0.0) {
             return None;
         }
@@ -322,7 +330,7 @@ mod tests {
                     growth_variance: Force::given(0.0),
                 };
                 let entry = EntryDegrees::single(1);
-                let period = Period::read(kind, &before, &after, 60.0, &entry, &forces, per_node).unwrap();
+                let period = Period::read(kind, &before, &after, 60.0, &entry, (&forces, per_node), None).unwrap();
                 let course = period.course(0.5).unwrap();
                 assert!((course.nodes(60.0) / after.nodes() as f64 - 1.0).abs() < 1e-12);
                 assert!((course.link_ends(60.0) / after.link_ends() as f64 - 1.0).abs() < 1e-12);

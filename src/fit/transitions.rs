@@ -1,5 +1,6 @@
 //! Transitions: every force that moves single nodes, by likelihood.
 
+mod birth_death;
 mod entry;
 mod likelihood;
 mod node_pmf;
@@ -99,29 +100,34 @@ pub(super) fn fit_transitions(
         return Err(FitError::NotIdentified { detail });
     }
     let (mut found, mut warnings): (Vec<(Model, Vec<PanelFit>)>, _) = (Vec::new(), Vec::new());
+    let mut near: Vec<PanelFit> = Vec::new();
+    // The mix is where the search for every other candidate begins.
     for &model in std::iter::once(&Model::Mix).chain(models.iter().filter(|&&model| model != Model::Mix)) {
         let mut fits = Vec::new();
         for (i, period) in periods.iter().enumerate() {
             if cancelled() {
                 return Err(FitError::Cancelled);
             }
-            fits.push(period.panel.fit(model, found.first().map(|(_, mix)| &mix[i])));
+            fits.push(period.panel.fit(model, near.get(i)));
         }
         if let Some(stuck) = fits.iter().position(|fit| !fit.converged) {
-            let detail =
-                format!("the {} candidate on the transitions from {}", model.name(), periods[stuck].table.from());
-            if model == Model::Mix || models == [model] {
+            let detail = format!("the {} candidate on the transitions from {}", model.name(), periods[stuck].table.from());
+            if models == [model] {
                 return Err(FitError::NotConverged { detail });
             }
             let detail = format!("{detail} found no maximum of its likelihood and is left out");
             warnings.push(Warning::new("candidate_left_out", detail));
         } else {
-            found.push((model, fits));
+            found.push((model, fits.clone()));
+        }
+        if near.is_empty() {
+            near = fits;
         }
     }
-    let mix = &found[0].1;
     let aic = |fits: &[PanelFit]| fits.iter().map(|fit| fit.parameters as f64 - fit.log_likelihood).sum::<f64>();
-    let best = found.iter().map(|(_, fits)| fits).min_by(|a, b| aic(a).total_cmp(&aic(b))).unwrap_or(mix);
+    let Some((_, best)) = found.iter().min_by(|a, b| aic(&a.1).total_cmp(&aic(&b.1))) else {
+        return Err(FitError::NotConverged { detail: "no candidate found a maximum on the transitions".into() });
+    };
     let (last, fit) = (&periods[periods.len() - 1], &best[best.len() - 1]);
     Ok(TransitionFit {
         departures: departures(&periods),
@@ -155,6 +161,8 @@ impl<'a> Read<'a> {
     }
 
     fn rates(&self, fit: &PanelFit) -> PeriodRates {
+        let (uniform, preferential) = self.panel.landed(fit);
+        let landed = uniform + preferential;
         let (departed, present) = (self.table.departed(), self.table.departed() + self.table.stayed());
         PeriodRates {
             from: self.table.from(),
@@ -163,6 +171,7 @@ impl<'a> Read<'a> {
             uniform_gain: fit.uniform,
             gain_per_link: fit.preferential,
             loss_per_link: fit.loss,
+            landed_per_day: landed / self.table.days(),
         }
     }
 

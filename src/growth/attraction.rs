@@ -7,8 +7,8 @@ use super::mean_field::{Course, GrowthError};
 use crate::numerics::quadrature::PANEL;
 use crate::numerics::tolerances::ODE_TOLERANCE;
 
-/// Growth factors that stand for a gamma distribution: with 6, moments up to the 11th are exact.
-const FACTORS: usize = 6;
+/// Growth factors that stand for a gamma distribution in a forecast: with 8, moments up to the 15th are exact.
+pub(crate) const FACTORS: usize = 8;
 
 /// One growth factor η of the quadrature over their distribution.
 #[derive(Debug, Clone, Copy, PartialEq)]
@@ -19,16 +19,16 @@ pub(crate) struct GrowthFactor {
     pub factor: f64,
 }
 
-/// Nodes and weights of the gamma distribution with mean one and the given variance.
+/// `count` nodes and weights of the gamma distribution with mean one and the given variance.
 ///
 /// Formula: generalised Gauss–Laguerre quadrature, α = 1/σ² − 1, from the eigenvalues of the Jacobi matrix (Golub & Welsch
 /// 1969); the weights come out normalised, so that no Γ(1/σ²) overflows at small variances.
-pub(crate) fn growth_factors(variance: f64) -> Vec<GrowthFactor> {
+pub(crate) fn growth_factors(variance: f64, count: usize) -> Vec<GrowthFactor> {
     if variance == 0.0 {
         return vec![GrowthFactor { share: 1.0, factor: 1.0 }];
     }
     let alpha = variance.recip() - 1.0;
-    let jacobi = DMatrix::from_fn(FACTORS, FACTORS, |i, j| {
+    let jacobi = DMatrix::from_fn(count, count, |i, j| {
         let (low, high) = (i.min(j) as f64, i.max(j) as f64);
         match i.abs_diff(j) {
             0 => variance * (2.0 * low + 1.0 + alpha),
@@ -143,13 +143,13 @@ fn barycentric(points: &[(f64, f64)]) -> Vec<f64> {
 
 #[cfg(test)]
 mod tests {
-    use super::growth_factors;
+    use super::{FACTORS, growth_factors};
 
     /// Moments of the gamma distribution with mean one: E η² = 1 + σ², E η³ = (1 + σ²)(1 + 2σ²).
     #[test]
     fn factors_have_the_moments_of_the_gamma_law() {
         for variance in [1e-6, 0.01, 0.3, 1.0, 4.0, 20.0] {
-            let factors = growth_factors(variance);
+            let factors = growth_factors(variance, FACTORS);
             let moment = |n: i32| -> f64 { factors.iter().map(|f| f.share * f.factor.powi(n)).sum() };
             for (n, exact) in [(0, 1.0), (1, 1.0), (2, 1.0 + variance), (3, (1.0 + variance) * (1.0 + 2.0 * variance))]
             {

@@ -1,6 +1,6 @@
 //! The network's totals over time: nodes N(t) and link ends K(t).
 
-use super::attraction::{Attraction, GrowthFactor, growth_factors};
+use super::attraction::{Attraction, FACTORS, GrowthFactor, growth_factors};
 use crate::model::{DegreeCounts, GrowthParameters};
 use crate::numerics::elementary::exp_m1_ratio;
 use crate::numerics::inversion::InversionError;
@@ -125,7 +125,7 @@ impl Course {
         if share > STARTS_UP_TO && lands && link_ends == 0.0 && parameters.entry.mean() == 0.0 {
             return Err(GrowthError::NobodyStarts);
         }
-        let growth_factors = growth_factors(parameters.growth_variance());
+        let growth_factors = growth_factors(parameters.growth_variance(), FACTORS);
         let attraction = Attraction::default();
         let mut course = Self { parameters, panels: Vec::new(), horizon, growth_factors, attraction };
         let (mut start, mut nodes, mut link_ends) = (0.0, counts.nodes() as f64, link_ends);

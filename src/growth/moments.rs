@@ -2,8 +2,6 @@
 
 use differential_equations::prelude::{ExplicitRungeKutta, IVP};
 
-use nalgebra::{Matrix4, Vector4};
-
 use super::mean_field::{Course, GrowthError};
 use crate::model::DegreeCounts;
 use crate::numerics::quadrature::PANEL;
@@ -45,37 +43,10 @@ struct Class {
     variance: f64,
 }
 
-/// φ, a smooth curve through k^γ at every whole degree: k^γ itself from 2 on, below it the quartic through 0 and 1 that joins it
-/// with two derivatives. At γ = 1 it is k.
-#[derive(Debug, Clone, Copy)]
-struct Kernel {
-    exponent: f64,
-    /// Coefficients of k to k⁴ below 2.
-    low: [f64; 4],
-}
-
-impl Kernel {
-    fn new(exponent: f64) -> Self {
-        // φ(1) = 1 and φ, φ', φ'' at 2; written for the departure from k, which vanishes at γ = 1.
-        let [value, slope, bend] = power(2.0, exponent);
-        let (value, slope) = (value - 2.0, slope - 1.0);
-        let rows = Matrix4::new(1.0, 1.0, 1.0, 1.0, 2.0, 4.0, 8.0, 16.0, 1.0, 4.0, 12.0, 32.0, 0.0, 2.0, 12.0, 48.0);
-        let found = rows.lu().solve(&Vector4::new(0.0, value, slope, bend)).unwrap_or_else(Vector4::zeros);
-        Self { exponent, low: [1.0 + found[0], found[1], found[2], found[3]] }
-    }
-
-    /// φ with its first two derivatives.
-    fn at(&self, k: f64) -> [f64; 3] {
-        if k >= 2.0 {
-            return power(k, self.exponent);
-        }
-        let [a, b, c, d] = self.low;
-        [
-            k * (a + k * (b + k * (c + k * d))),
-            a + k * (2.0 * b + k * (3.0 * c + k * 4.0 * d)),
-            2.0 * b + k * (6.0 * c + k * 12.0 * d),
-        ]
-    }
+/// φ with its first two derivatives: k^γ from 1 on, and k below. Between whole degrees any curve serves; below 1 the straight
+/// line gives the mean of φ over a node that has no link yet or one.
+fn kernel(k: f64, exponent: f64) -> [f64; 3] {
+    if k <= 1.0 { [k, 1.0, 0.0] } else { power(k, exponent) }
 }
 
 fn power(k: f64, exponent: f64) -> [f64; 3] {
@@ -120,8 +91,7 @@ impl MomentLaw {
         let arrived = self.cohorts.partition_point(|class| class.since <= from);
         let classes: Vec<Class> = self.present.iter().chain(&self.cohorts[..arrived]).copied().collect();
         let forces = course.parameters();
-        let (p, kernel, loss) =
-            (forces.mix.preferential_share(), Kernel::new(forces.kernel_exponent()), forces.end_loss_hazard());
+        let (p, gamma, loss) = (forces.mix.preferential_share(), forces.kernel_exponent(), forces.end_loss_hazard());
         // State: each class's gain m − k₀, which keeps its digits beside a large k₀, then its variance.
         // Time runs from 0 to 1: the solver lands on a whole 1 exactly, and on a day only nearly.
         let days = to - from;
@@ -132,7 +102,7 @@ impl MomentLaw {
             let (mut by_kernel, mut by_degree) = (0.0, 0.0);
             for (class, moments) in classes.iter().zip(y.chunks_exact(2)) {
                 let mean = class.start + moments[0];
-                let [phi, _, bend] = kernel.at(mean);
+                let [phi, _, bend] = kernel(mean, gamma);
                 let weight = class.nodes * course.survival(time - class.since);
                 by_kernel += weight * (phi + 0.5 * bend * moments[1]).max(0.0);
                 by_degree += weight * mean;
@@ -142,7 +112,7 @@ impl MomentLaw {
                 if p > 0.0 && by_kernel > 0.0 { p * landing * by_degree / (link_ends * by_kernel) } else { 0.0 };
             for ((class, moments), slopes) in classes.iter().zip(y.chunks_exact(2)).zip(dy.chunks_exact_mut(2)) {
                 let mean = class.start + moments[0];
-                let [phi, steep, bend] = kernel.at(mean);
+                let [phi, steep, bend] = kernel(mean, gamma);
                 let gain = uniform + attracted * (phi + 0.5 * bend * moments[1]).max(0.0);
                 slopes[0] = days * (gain - loss * mean);
                 slopes[1] = days * (2.0 * (attracted * steep - loss) * moments[1] + gain + loss * mean);

@@ -10,7 +10,7 @@ const DATE_BYTES: usize = 10;
 const FIRST: i64 = -62_167_219_200;
 const END: i64 = 253_402_214_400;
 
-/// Reads times; remembers the last one, for the next is often of the same day or the very same.
+/// Reads times; remembers the last day and the last text, for the next time is often of the same day or the very same.
 #[derive(Debug)]
 pub struct Clock {
     text: Vec<u8>,
@@ -29,17 +29,7 @@ impl Clock {
     /// The time that `text` says; none when it says none, see [`why_no_time`].
     #[inline]
     pub fn read(&mut self, text: &[u8]) -> Option<Timestamp> {
-        if text == self.text {
-            return Some(self.time);
-        }
-        let time = match self.same_day(text) {
-            Some(time) => time,
-            None => self.any(text)?,
-        };
-        self.text.clear();
-        self.text.extend_from_slice(text);
-        self.time = time;
-        Some(time)
+        self.same_day(text).or_else(|| self.any(text))
     }
 
     /// `T08:30:00Z`, with or without a fraction, on the day read last.
@@ -63,13 +53,18 @@ impl Clock {
         Timestamp::new(self.midnight + 3_600 * hour + 60 * minute + second, nanoseconds).ok()
     }
 
-    #[cold]
     fn any(&mut self, text: &[u8]) -> Option<Timestamp> {
+        if text == self.text {
+            return Some(self.time);
+        }
         let time = epoch(text).or_else(|| calendar(text)).filter(in_range)?;
         let day = text.first_chunk::<DATE_BYTES>().and_then(|day| Some((*day, midnight(day)?.as_second())));
         if let Some((day, midnight)) = day {
             (self.day, self.midnight) = (day, midnight);
         }
+        self.text.clear();
+        self.text.extend_from_slice(text);
+        self.time = time;
         Some(time)
     }
 }

@@ -2,6 +2,7 @@
 
 use jiff::Timestamp;
 
+use super::batch::{Batch, Link, bring_near};
 use super::clock::{Clock, why_no_time};
 use super::names::Names;
 use super::report::{LinkFault, LinkReport, shown};
@@ -13,6 +14,7 @@ pub struct Counter {
     census: Census,
     names: Names,
     clock: Clock,
+    batch: Batch,
     policy: FaultPolicy,
     report: LinkReport,
     line: u64,
@@ -25,6 +27,7 @@ impl Counter {
             census: Census::new(plan.kind, plan.every),
             names: Names::default(),
             clock: Clock::default(),
+            batch: Batch::default(),
             policy: plan.faults,
             report: LinkReport::default(),
             line: 0,
@@ -36,7 +39,7 @@ impl Counter {
         self.line
     }
 
-    /// Links counted.
+    /// Links counted, but for those that wait.
     pub fn links(&self) -> u64 {
         self.report.links
     }
@@ -62,8 +65,6 @@ impl Counter {
     }
 
     /// Counts a link of the current line.
-    ///
-    /// A line that will not be counted must not number its nodes, so that numbers stay in order of arrival.
     #[inline]
     pub fn link_at(&mut self, time: Timestamp, source: &[u8], target: &[u8]) -> Result<(), IngestError> {
         for (what, name) in [("source", source), ("target", target)] {
@@ -71,18 +72,44 @@ impl Counter {
                 return self.malformed(|| why_no_identifier(what, name));
             }
         }
+        if self.batch.push(self.line, time, source, target, &self.names) { self.settle() } else { Ok(()) }
+    }
+
+    /// The current line cannot be read.
+    #[cold]
+    pub fn malformed(&mut self, reason: impl FnOnce() -> String) -> Result<(), IngestError> {
+        // Those that wait come first; one of them may stop the counting.
+        self.settle()?;
+        self.fault(LinkFault::Malformed, self.line, reason)
+    }
+
+    /// Takes the links that wait to the census.
+    pub fn settle(&mut self) -> Result<(), IngestError> {
+        let mut batch = std::mem::take(&mut self.batch);
+        batch.look_up(&self.names);
+        bring_near(batch.targets().map(|target| self.census.degree(target)));
+        batch.links().try_for_each(|link| self.count(&link))?;
+        batch.clear();
+        self.batch = batch;
+        Ok(())
+    }
+
+    /// A link that will not be counted must not number its nodes, so that numbers stay in order of arrival.
+    #[inline]
+    fn count(&mut self, link: &Link<'_>) -> Result<(), IngestError> {
+        let Link { line, time, source, target } = *link;
         if let Some(now) = self.census.now().filter(|&now| time < now) {
             let reason =
                 || format!("its time, {time}, is before that of an earlier line, {now}; sort the list by time");
-            return self.fault(LinkFault::OutOfOrder, reason);
+            return self.fault(LinkFault::OutOfOrder, line, reason);
         }
-        if source == target {
-            return self.fault(LinkFault::SelfLink, || format!("it links {} to itself; drop it", shown(source)));
+        if source.is(&target) {
+            let reason = || format!("it links {} to itself; drop it", shown(source.text));
+            return self.fault(LinkFault::SelfLink, line, reason);
         }
-        let verdict = self
-            .names
-            .number(source)
-            .zip(self.names.number(target))
+        let verdict = source
+            .number(&mut self.names)
+            .zip(target.number(&mut self.names))
             .map_or(Err(CensusError::TooMany("nodes or bytes of identifiers")), |(source, target)| {
                 self.census.record(time, source, target)
             });
@@ -92,34 +119,30 @@ impl Counter {
                 self.report.links += 1;
                 Ok(())
             }
-            Ok(Verdict::Repeated) => self.fault(LinkFault::Repeated, || {
-                let (source, target) = (shown(source), shown(target));
+            Ok(Verdict::Repeated) => self.fault(LinkFault::Repeated, line, || {
+                let (source, target) = (shown(source.text), shown(target.text));
                 format!("it repeats the link from {source} to {target} at {time}; drop it")
             }),
             // Both were looked for above.
-            Ok(Verdict::OutOfOrder) => self.fault(LinkFault::OutOfOrder, String::new),
-            Ok(Verdict::SelfLink) => self.fault(LinkFault::SelfLink, String::new),
-            Err(error) => Err(IngestError::Census { line: self.line, error }),
+            Ok(Verdict::OutOfOrder) => self.fault(LinkFault::OutOfOrder, line, String::new),
+            Ok(Verdict::SelfLink) => self.fault(LinkFault::SelfLink, line, String::new),
+            Err(error) => Err(IngestError::Census { line, error }),
         }
-    }
-
-    /// The current line cannot be read.
-    pub fn malformed(&mut self, reason: impl FnOnce() -> String) -> Result<(), IngestError> {
-        self.fault(LinkFault::Malformed, reason)
     }
 
     #[cold]
-    fn fault(&mut self, fault: LinkFault, reason: impl FnOnce() -> String) -> Result<(), IngestError> {
+    fn fault(&mut self, fault: LinkFault, line: u64, reason: impl FnOnce() -> String) -> Result<(), IngestError> {
         if self.policy == FaultPolicy::Refuse {
-            return Err(IngestError::Faulty { line: self.line, fault, reason: reason() });
+            return Err(IngestError::Faulty { line, fault, reason: reason() });
         }
         self.report.lines += 1;
-        self.report.note(fault, self.line, reason);
+        self.report.note(fault, line, reason);
         Ok(())
     }
 
     /// What the whole list tells.
-    pub fn finish(self) -> Result<(Tally, LinkReport), IngestError> {
+    pub fn finish(mut self) -> Result<(Tally, LinkReport), IngestError> {
+        self.settle()?;
         let Self { census, mut report, line, .. } = self;
         report.repeats_unchecked = census.repeats_unchecked();
         match census.finish() {

@@ -19,6 +19,8 @@ pub struct ScoringMaximum {
 
 /// Half-width of difference quotients; parameters are logarithms, logits or of order one.
 const STEP: f64 = 1e-4;
+/// After so many steps by the scores' scatter alone the model is wrong enough for Newton's own steps to be shorter work.
+const NEWTON_FROM: usize = 12;
 /// Steps are stretched up to 2 to this power.
 const LONGEST_STRETCH: u32 = 6;
 /// A damping beyond this leaves no step worth taking.
@@ -48,8 +50,14 @@ pub fn maximise(
     let mut at = start.to_vec();
     let mut value = total(&terms(&at));
     let (mut damping, mut converged) = (1e-3, false);
-    for _ in 0..SCORING_MAX_STEPS {
-        let (gradient, scatter) = scores(&at, bounds, weights, &mut terms);
+    for number in 0..SCORING_MAX_STEPS {
+        let (gradient, mut scatter) = scores(&at, bounds, weights, &mut terms);
+        if number >= NEWTON_FROM {
+            let curved = curvature(&at, bounds, weights, &mut terms);
+            if curved.clone().cholesky().is_some() {
+                scatter = curved;
+            }
+        }
         let mut gained = 0.0;
         while damping < STIFFEST {
             let mut system = scatter.clone();
@@ -89,7 +97,7 @@ pub fn maximise(
         }
     }
     let (_, scatter) = scores(&at, bounds, weights, &mut terms);
-    let covariance = covariance(&at, bounds, weights, &scatter, &mut terms);
+    let covariance = sandwich(&curvature(&at, bounds, weights, &mut terms), &scatter);
     ScoringMaximum { at, value, covariance, converged }
 }
 
@@ -121,11 +129,11 @@ fn scores(
     (gradient, DMatrix::from_fn(size, size, |i, j| weighted(i, Some(j))))
 }
 
-fn covariance(
+/// −Hessian of the log-likelihood by differences.
+fn curvature(
     at: &[f64],
     bounds: &[(f64, f64)],
     weights: &[f64],
-    scatter: &DMatrix<f64>,
     terms: &mut impl FnMut(&[f64]) -> Vec<f64>,
 ) -> DMatrix<f64> {
     const WIDE: f64 = 30.0 * STEP;
@@ -148,9 +156,15 @@ fn covariance(
             curvature[(j, i)] = curvature[(i, j)];
         }
     }
+    curvature
+}
+
+/// H⁻¹JH⁻¹ of the curvature and the scores' scatter.
+fn sandwich(curvature: &DMatrix<f64>, scatter: &DMatrix<f64>) -> DMatrix<f64> {
+    let size = scatter.nrows();
     // A direction the data say nothing of (a rate at its floor) has no curvature: a ridge keeps it from spoiling the others.
     let ridge = |matrix: &DMatrix<f64>| matrix + DMatrix::from_diagonal_element(size, size, 1e-6);
-    let inverse = ridge(&curvature).cholesky().or_else(|| ridge(scatter).cholesky()).map(|factor| factor.inverse());
+    let inverse = ridge(curvature).cholesky().or_else(|| ridge(scatter).cholesky()).map(|factor| factor.inverse());
     let inverse = inverse.unwrap_or_else(|| DMatrix::from_diagonal_element(size, size, 1e6));
     &inverse * scatter * &inverse
 }

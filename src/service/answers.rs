@@ -330,6 +330,8 @@ pub struct PeriodRatesAnswer {
     pub gain_per_link: Real,
     /// Links lost over the period a link held.
     pub loss_per_link: Real,
+    /// Link ends that landed on present nodes a day.
+    pub landed_per_day: Real,
 }
 
 /// Outliers whose degree before lay in one class.

@@ -246,6 +246,7 @@ impl From<&TransitionSummary> for TransitionsAnswer {
             uniform_gain: Real(rates.uniform_gain),
             gain_per_link: Real(rates.gain_per_link),
             loss_per_link: Real(rates.loss_per_link),
+            landed_per_day: Real(rates.landed_per_day),
         };
         let class = |c: &OutlierClass| OutlierClassAnswer { lowest: c.lowest, highest: c.highest, nodes: c.nodes };
         Self {

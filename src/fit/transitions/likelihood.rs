@@ -3,8 +3,9 @@
 use nalgebra::DMatrix;
 
 use super::super::Model;
+use super::birth_death::{BirthDeath, LARGEST_STATE};
 use super::node_pmf::PeriodLaw;
-use crate::growth::growth_factors;
+use crate::growth::{GrowthFactor, growth_factors};
 use crate::model::DegreeCounts;
 use crate::numerics::quadrature::PANEL;
 use crate::numerics::scoring::{ScoringMaximum, maximise};
@@ -15,6 +16,14 @@ const RATES: (f64, f64) = (1e-10, 20.0);
 const MOST_OUTLIERS: f64 = 0.05;
 /// A row is an outlier when it more likely is one than not.
 const OUTLIER_FROM: f64 = 0.5;
+/// Hazards a period up to which the exact law of low degrees is worth its steps.
+const MOST_STEPS: f64 = 500.0;
+/// Expected gains up to which a handful of growth factors stand for all: single gains then blur what lies between them.
+const FEW_GAINS: f64 = 0.3;
+const FEW_FACTORS: usize = 6;
+/// The same for more factors.
+const MORE_GAINS: f64 = 8.0;
+const MORE_FACTORS: usize = 20;
 /// Days at which an active node falls dormant within the period: Gauss–Legendre with two nodes, (1 ∓ 1/√3)/2.
 const FALLS_DORMANT: [f64; 2] = [0.211_324_865_405_187_1, 0.788_675_134_594_812_9];
 
@@ -28,6 +37,9 @@ pub(super) struct Panel {
     /// Arrivals over nodes, ∫A/N: what an active node falls dormant by.
     turnover: f64,
     shrinks: bool,
+    /// Gains a node and gains a link to begin with, half of all gains each; losses a link.
+    crude_gains: (f64, f64),
+    crude_losses: f64,
 }
 
 /// One candidate's fit of one period. Rates are per period.
@@ -109,6 +121,28 @@ impl Layout {
     }
 }
 
+/// Laws over the growth factors, with few factors and with more; empty without growth variance.
+struct Mixtures {
+    few: Vec<(f64, PeriodLaw)>,
+    more: Vec<(f64, PeriodLaw)>,
+}
+
+impl Mixtures {
+    fn new(forces: &Forces) -> Self {
+        let laws = |count: usize| -> Vec<(f64, PeriodLaw)> {
+            if forces.growth_variance == 0.0 {
+                return Vec::new();
+            }
+            let law = |f: &GrowthFactor| {
+                let (u, v) = (f.factor * forces.uniform, f.factor * forces.preferential);
+                (f.share, PeriodLaw::new(u, v, forces.loss, 1.0))
+            };
+            growth_factors(forces.growth_variance, count).iter().map(law).collect()
+        };
+        Self { few: laws(FEW_FACTORS), more: laws(MORE_FACTORS) }
+    }
+}
+
 /// Degree of an outlier: broad, with a tail fatter than any network's, so that no jump is beyond it.
 fn outlier_probability(after: u64) -> f64 {
     const NORMALISED: f64 = 0.57; // Σ_{j≥0} 1/((j+1)·(1+ln(j+1))²) is about 1.75
@@ -123,7 +157,16 @@ pub(super) fn kernel(degree: f64, exponent: f64) -> f64 {
 
 impl Panel {
     pub fn new(rows: &[(u64, u64, u64)], before: DegreeCounts, after: DegreeCounts, turnover: f64) -> Self {
+        let (mut gained, mut lost) = (0.0, 0.0);
+        for &(k, j, n) in rows {
+            // One jump does not decide where the search begins.
+            let step = (j as f64 - k as f64).clamp(-2.0 - k as f64, 2.0 + k as f64);
+            if step > 0.0 { gained += n as f64 * step } else { lost -= n as f64 * step }
+        }
+        let (nodes, ends) = (before.nodes() as f64, (before.link_ends() as f64).max(1.0));
         Self {
+            crude_gains: (0.5 * gained / nodes, 0.5 * gained / ends),
+            crude_losses: lost / ends,
             shrinks: rows.iter().any(|&(k, j, _)| j < k),
             rows: rows.iter().map(|&(k, j, _)| (k, j)).collect(),
             weights: rows.iter().map(|&(_, _, nodes)| nodes as f64).collect(),
@@ -142,13 +185,6 @@ impl Panel {
     }
 
     fn start(&self, layout: &Layout, near: Option<&PanelFit>) -> (Vec<f64>, Vec<(f64, f64)>) {
-        let (mut gained, mut lost) = (0.0, 0.0);
-        for (&(k, j), n) in self.rows.iter().zip(&self.weights) {
-            // One jump does not decide where the search begins.
-            let step = (j as f64 - k as f64).clamp(-2.0 - k as f64, 2.0 + k as f64);
-            if step > 0.0 { gained += n * step } else { lost -= n * step }
-        }
-        let (nodes, ends) = (self.before.nodes() as f64, (self.before.link_ends() as f64).max(1.0));
         let rate = |value: f64| value.clamp(100.0 * RATES.0, 0.5 * RATES.1).ln();
         let mut start = vec![0.0; layout.size];
         let mut bounds = vec![(RATES.0.ln(), RATES.1.ln()); layout.size];
@@ -164,9 +200,9 @@ impl Panel {
                 put(layout.loss, rate(fit.loss));
             }
             None => {
-                put(layout.uniform, rate(0.5 * gained / nodes));
-                put(layout.preferential, rate(0.5 * gained / ends));
-                put(layout.loss, rate(lost / ends));
+                put(layout.uniform, rate(self.crude_gains.0));
+                put(layout.preferential, rate(self.crude_gains.1));
+                put(layout.loss, rate(self.crude_losses));
             }
         }
         put(Some(layout.outliers), -3.0);
@@ -181,18 +217,36 @@ impl Panel {
         (start, bounds)
     }
 
-    /// Shares and laws of the kinds of node there are, at degrees near `degree` where the kernel is curved.
-    fn laws(&self, forces: &Forces, degree: u64) -> Vec<(f64, PeriodLaw)> {
+    /// Shares and laws of the kinds of node there are among those of degree `degree`.
+    fn laws(&self, forces: &Forces, mixtures: &Mixtures, degree: u64) -> Vec<(f64, PeriodLaw)> {
         let Forces { uniform: u, preferential: v, loss: w, dormant_share, growth_variance, exponent, .. } = *forces;
+        let k = degree as f64;
         if exponent != 1.0 {
-            let k = degree as f64;
-            let slope =
-                v * (kernel(k + 0.5, exponent) - kernel((k - 0.5).max(0.0), exponent)) / (k + 0.5 - (k - 0.5).max(0.0));
-            return vec![(1.0, PeriodLaw::tangent(u + v * kernel(k, exponent), slope, w))];
+            // The tangent half-way along the expected gain, where it errs least over the whole of it.
+            let hazard = |x: f64| u + v * kernel(x.max(0.0), exponent);
+            let middle = k + 0.5 * (hazard(k) - w * k).clamp(-k, k + 1.0);
+            let half = 0.5_f64.min(middle.max(0.25));
+            let slope = (hazard(middle + half) - hazard(middle - half)) / (2.0 * half);
+            let moments = PeriodLaw::moments(hazard(middle) - slope * middle, slope, w, k);
+            return vec![(1.0, PeriodLaw::by_moments(k, moments, w))];
         }
         if growth_variance > 0.0 {
-            let law = |f: &crate::growth::GrowthFactor| (f.share, PeriodLaw::new(f.factor * u, f.factor * v, w, 1.0));
-            return growth_factors(growth_variance).iter().map(law).collect();
+            // Where one way ends and the next begins must not move with the rates: the likelihood would jump.
+            let (uniform, preferential) = self.crude_gains;
+            let gains = uniform + preferential * k;
+            let laws = if gains < FEW_GAINS { &mixtures.few } else { &mixtures.more };
+            if gains < MORE_GAINS {
+                return laws.clone();
+            }
+            // A handful of factors leaves gaps between the gains they lead to. Poisson gains of gamma-distributed mean are
+            // negative binomial, and nearly so these: the law with the mixture's mean and variance has no gaps.
+            let (mut mean, mut square) = (0.0, 0.0);
+            for (share, law) in laws {
+                let (m, s) = law.moments_from(k);
+                mean += share * m;
+                square += share * (s + m * m);
+            }
+            return vec![(1.0, PeriodLaw::by_moments(k, (mean, square - mean * mean), w))];
         }
         if dormant_share > 0.0 {
             let still_active = (-self.turnover * dormant_share / (1.0 - dormant_share)).exp();
@@ -208,13 +262,21 @@ impl Panel {
     }
 
     fn log_terms(&self, forces: &Forces) -> Vec<f64> {
-        let mut laws = self.laws(forces, 0);
+        let by_degree = forces.exponent != 1.0 || forces.growth_variance > 0.0;
+        // A curved kernel bends most at low degrees, where an exact law is cheap.
+        let hazard = |k: f64| forces.uniform + forces.preferential * kernel(k, forces.exponent);
+        let slow = hazard(LARGEST_STATE as f64) < MOST_STEPS;
+        let low = (forces.exponent != 1.0 && slow).then(|| BirthDeath::new(hazard, forces.loss));
+        let mixtures = Mixtures::new(forces);
+        let mut laws = self.laws(forces, &mixtures, 0);
         let mut at = 0;
         let term = |&(before, after): &(u64, u64)| {
-            if forces.exponent != 1.0 && before != at {
-                (laws, at) = (self.laws(forces, before), before);
+            if by_degree && before != at {
+                (laws, at) = (self.laws(forces, &mixtures, before), before);
             }
-            let probability: f64 = laws.iter().map(|(share, law)| share * law.probability(before, after)).sum();
+            let exact = low.as_ref().and_then(|low| low.probability(before, after));
+            let mixture = || laws.iter().map(|(share, law)| share * law.probability(before, after)).sum();
+            let probability: f64 = exact.unwrap_or_else(mixture);
             let probability = (1.0 - forces.outliers) * probability + forces.outliers * outlier_probability(after);
             probability.max(f64::MIN_POSITIVE).ln()
         };
@@ -254,7 +316,20 @@ impl Panel {
         let kernel_sum = |counts: &DegreeCounts| -> f64 {
             counts.iter().map(|(k, n)| n as f64 * kernel(k as f64, fit.exponent)).sum()
         };
-        (fit.uniform * nodes, fit.preferential * log_mean(kernel_sum(&self.before), kernel_sum(&self.after)))
+        let end = kernel_sum(&self.after) * self.attraction_at_end(fit);
+        (fit.uniform * nodes, fit.preferential * log_mean(kernel_sum(&self.before), end))
+    }
+
+    /// Σ η·k over Σ k at the period's end: under growth variance fast nodes hold more links than their share.
+    fn attraction_at_end(&self, fit: &PanelFit) -> f64 {
+        let (mut weighed, mut plain) = (0.0, 0.0);
+        for f in growth_factors(fit.growth_variance, FEW_FACTORS) {
+            let law = PeriodLaw::new(f.factor * fit.uniform, f.factor * fit.preferential, fit.loss, 1.0);
+            let ends: f64 = self.before.iter().map(|(k, n)| n as f64 * law.mean(k as f64)).sum();
+            weighed += f.share * f.factor * ends;
+            plain += f.share * ends;
+        }
+        if plain > 0.0 { weighed / plain } else { 1.0 }
     }
 
     /// Rows that more likely are outliers than not: (before, after, nodes).

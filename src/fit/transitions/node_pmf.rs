@@ -61,14 +61,42 @@ impl PeriodLaw {
         }
     }
 
-    /// The law near one degree of a kernel with gain hazard `hazard` there and the derivative `slope`, a period. Kept links
-    /// and gains are taken as independent, which errs by the square of what is gained a period.
-    pub fn tangent(hazard: f64, slope: f64, loss: f64) -> Self {
-        let slope = slope.max(LEAST_RATE);
-        let spread = slope.exp_m1() * (-0.5 * loss).exp();
-        let expansion = (-loss).exp();
-        let shape = Shape::Fixed(hazard.max(LEAST_RATE) / slope);
-        Self { lost: 1.0 - expansion, fresh: 1.0 / (1.0 + spread), spread, expansion, shape }
+    /// Linear rates u, v, w over the period where u may be negative: the tangent of a curved kernel. Only its moments mean
+    /// anything.
+    pub fn moments(uniform: f64, preferential: f64, loss: f64, before: f64) -> (f64, f64) {
+        let net = preferential - loss;
+        let growth = if net.abs() < 1e-9 { 1.0 + 0.5 * net } else { net.exp_m1() / net };
+        let (expansion, spread) = (net.exp(), preferential * growth);
+        // ∫u·e^R(2C + 1) with C linear in e^R: e^R and C move together.
+        let immigrants = uniform * growth;
+        let mean = before * expansion + immigrants;
+        let variance = before * expansion * (2.0 * spread - expansion + 1.0) + immigrants * (1.0 + spread);
+        (mean, variance)
+    }
+
+    /// The law of a node of degree `before` with this mean and variance at the end: links are kept with probability e^{−w},
+    /// and the gain beside them is negative binomial.
+    pub fn by_moments(before: f64, (mean, variance): (f64, f64), loss: f64) -> Self {
+        let kept = (-loss).exp();
+        let gain = (mean - before * kept).max(LEAST_RATE);
+        let excess = (variance - before * kept * (1.0 - kept) - gain).max(1e-9 * gain * gain);
+        let spread = (excess / gain).max(LEAST_RATE);
+        let shape = Shape::Fixed(gain / spread);
+        Self { lost: 1.0 - kept, fresh: 1.0 / (1.0 + spread), spread, expansion: kept, shape }
+    }
+
+    /// Mean and variance at the end.
+    pub fn moments_from(&self, before: f64) -> (f64, f64) {
+        let variance = match self.shape {
+            Shape::Kept(ratio) => {
+                before * self.expansion * (2.0 * self.spread - self.expansion + 1.0)
+                    + ratio * self.spread * (1.0 + self.spread)
+            }
+            Shape::Fixed(shape) => {
+                before * self.expansion * (1.0 - self.expansion) + shape * self.spread * (1.0 + self.spread)
+            }
+        };
+        (self.mean(before), variance)
     }
 
     /// P(degree `after` at the end | degree `before` at the start).
@@ -118,16 +146,7 @@ impl PeriodLaw {
     }
 
     fn normal(&self, k: f64, j: f64) -> f64 {
-        let (mean, variance) = match self.shape {
-            Shape::Kept(ratio) => (
-                self.mean(k),
-                k * self.expansion * (2.0 * self.spread - self.expansion + 1.0)
-                    + ratio * self.spread * (1.0 + self.spread),
-            ),
-            Shape::Fixed(shape) => {
-                (self.mean(k), k * self.expansion * (1.0 - self.expansion) + shape * self.spread * (1.0 + self.spread))
-            }
-        };
+        let (mean, variance) = self.moments_from(k);
         let variance = variance.max(1e-6);
         (-0.5 * (j - mean).powi(2) / variance).exp() / (2.0 * std::f64::consts::PI * variance).sqrt()
     }
