@@ -3,6 +3,7 @@
 #![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic)]
 
 mod any_json;
+mod any_links;
 mod architecture;
 mod bad_input;
 mod command_line;
@@ -12,6 +13,7 @@ mod fits;
 mod forecasts;
 mod harness;
 mod limits;
+mod link_lists;
 mod lists;
 mod openapi;
 mod operation;
