@@ -122,7 +122,7 @@ fn midnight(day: &[u8; DATE_BYTES]) -> Option<Timestamp> {
 
 /// What is wrong with a text that says no time.
 pub fn why_no_time(text: &[u8]) -> String {
-    let seconds = std::str::from_utf8(text).ok().and_then(|text| text.parse::<f64>().ok());
+    let seconds = std::str::from_utf8(text).ok().and_then(|text| text.parse::<f64>().ok()).filter(|x| x.is_finite());
     let offset = text.get(DATE_BYTES..).is_some_and(|rest| rest.iter().any(|byte| b"Zz+-".contains(byte)));
     let date = |day| std::str::from_utf8(day).ok()?.parse::<Date>().ok();
     let dated = text.get(..DATE_BYTES).and_then(date).is_some();
