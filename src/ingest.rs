@@ -166,7 +166,7 @@ pub fn count_links(
 
 /// How the lines are written.
 enum Format {
-    Csv(csv::Columns),
+    Csv(Box<csv::Columns>),
     Ndjson,
 }
 
@@ -175,7 +175,7 @@ impl Format {
     fn of(start: &[u8]) -> Self {
         match start.trim_ascii_start().first() {
             Some(b'{') => Self::Ndjson,
-            _ => Self::Csv(csv::Columns::default()),
+            _ => Self::Csv(Box::default()),
         }
     }
 
