@@ -10,6 +10,7 @@ mod examples;
 mod extract;
 mod fits;
 mod forecasts;
+mod jobs;
 mod networks;
 mod observe;
 mod pages;
@@ -32,7 +33,7 @@ use tower_http::catch_panic::CatchPanicLayer;
 use utoipa::openapi::OpenApi;
 use utoipa_axum::router::OpenApiRouter;
 
-use crate::config::{HttpConfig, LimitsConfig};
+use crate::config::{HttpConfig, JobsConfig, LimitsConfig};
 use crate::service::Service;
 
 pub use error::ApiError;
@@ -54,6 +55,8 @@ pub struct AppState {
     pub http: Arc<HttpConfig>,
     /// Limits of one request's content.
     pub limits: LimitsConfig,
+    /// Limits of work that outlasts its request.
+    pub jobs: JobsConfig,
     /// The process's metrics.
     pub metrics: PrometheusHandle,
 }
@@ -87,7 +90,11 @@ pub fn openapi_text() -> String {
 
 /// Routes that do the service's work, and count against `http.max_in_flight`.
 fn work_routes() -> OpenApiRouter<AppState> {
-    OpenApiRouter::new().merge(forecasts::routes()).merge(fits::routes()).merge(networks::routes())
+    OpenApiRouter::new()
+        .merge(forecasts::routes())
+        .merge(fits::routes())
+        .merge(networks::routes())
+        .merge(jobs::routes())
 }
 
 /// Routes that must answer however busy the others are.

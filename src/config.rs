@@ -31,6 +31,8 @@ pub struct Config {
     pub http: HttpConfig,
     /// Limits of the computing side.
     pub compute: ComputeConfig,
+    /// Work that outlasts its request.
+    pub jobs: JobsConfig,
     /// Limits of one request's content.
     pub limits: LimitsConfig,
     /// Logging.
@@ -100,6 +102,36 @@ impl ComputeConfig {
     /// Longest wait and computation of one request.
     pub fn budget(&self) -> Duration {
         Duration::from_secs(self.budget_seconds)
+    }
+}
+
+/// Work that outlasts its request.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Deserialize)]
+#[serde(deny_unknown_fields)]
+pub struct JobsConfig {
+    /// Jobs at work at the same time.
+    pub workers: usize,
+    /// Jobs that may wait.
+    pub queue: usize,
+    /// Longest time that a request waits for its job, seconds.
+    pub wait_seconds: u64,
+    /// Largest link list, bytes as it is sent.
+    pub link_list_bytes: u64,
+    /// Longest time to send a link list, seconds.
+    pub link_list_seconds: u64,
+    /// Most nodes of a link list.
+    pub link_list_nodes: u64,
+}
+
+impl JobsConfig {
+    /// Longest time that a request waits for its job.
+    pub fn wait(&self) -> Duration {
+        Duration::from_secs(self.wait_seconds)
+    }
+
+    /// Longest time to send a link list.
+    pub fn link_list_time(&self) -> Duration {
+        Duration::from_secs(self.link_list_seconds)
     }
 }
 
@@ -241,6 +273,7 @@ impl Config {
 
     fn checked(self) -> Result<Self, SettingsError> {
         let (database, http, compute, limits) = (&self.database, &self.http, &self.compute, &self.limits);
+        let jobs = &self.jobs;
         let ranges = [
             ("database.readers", u64::from(database.readers), 1, MOST_THREADS),
             ("database.busy_timeout_ms", database.busy_timeout_ms, 0, DAY_SECONDS * 1000),
@@ -252,6 +285,12 @@ impl Config {
             ("compute.workers", compute.workers as u64, 0, MOST_THREADS),
             ("compute.queue", compute.queue as u64, 0, MOST_THINGS),
             ("compute.budget_seconds", compute.budget_seconds, 1, DAY_SECONDS),
+            ("jobs.workers", jobs.workers as u64, 1, MOST_THREADS),
+            ("jobs.queue", jobs.queue as u64, 0, MOST_THINGS),
+            ("jobs.wait_seconds", jobs.wait_seconds, 0, DAY_SECONDS),
+            ("jobs.link_list_bytes", jobs.link_list_bytes, 1, MOST_THINGS),
+            ("jobs.link_list_seconds", jobs.link_list_seconds, 1, DAY_SECONDS),
+            ("jobs.link_list_nodes", jobs.link_list_nodes, 1, MOST_THINGS),
             ("limits.degree_counts", limits.degree_counts as u64, 1, MOST_THINGS),
             ("limits.transitions", limits.transitions as u64, 1, MOST_THINGS),
             ("limits.link_events", limits.link_events as u64, 1, MOST_THINGS),

@@ -60,6 +60,8 @@ pub struct Progress {
     pub bytes: u64,
     /// Links counted.
     pub links: u64,
+    /// Nodes met.
+    pub nodes: u64,
 }
 
 /// Why a list could not be counted.
@@ -142,7 +144,7 @@ pub fn count_links(
     let mut format = None;
     loop {
         let more = lines.fill().map_err(|error| lines.source().fault(counter.line(), error))?;
-        let progress = Progress { bytes: lines.source().bytes(), links: counter.links() };
+        let progress = Progress { bytes: lines.source().bytes(), links: counter.links(), nodes: counter.nodes() };
         if watch(progress).is_break() {
             return Err(IngestError::Cancelled);
         }
@@ -164,7 +166,7 @@ pub fn count_links(
 
 /// How the lines are written.
 enum Format {
-    Csv(csv::Columns),
+    Csv(Box<csv::Columns>),
     Ndjson,
 }
 
@@ -173,7 +175,7 @@ impl Format {
     fn of(start: &[u8]) -> Self {
         match start.trim_ascii_start().first() {
             Some(b'{') => Self::Ndjson,
-            _ => Self::Csv(csv::Columns::default()),
+            _ => Self::Csv(Box::default()),
         }
     }
 

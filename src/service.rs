@@ -6,6 +6,7 @@ mod cpu;
 mod error;
 mod evidence;
 mod inputs;
+mod jobs;
 mod network;
 mod networks;
 mod numbers;
@@ -18,12 +19,15 @@ use tracing::Instrument;
 use crate::config::{Config, DatabaseConfig};
 use crate::model::MAX_SNAPSHOTS;
 use crate::store::{Caps, Store, StoreError};
+use jobs::Board;
 
 pub use crate::evaluate::OriginRequest;
 pub use crate::fit::{FitRequest, Fixed, Model, ModelChoice, Rung};
+pub use crate::ingest::FaultPolicy;
 pub use crate::store::{
-    Clash, KeyClaim, NetworkSummary, NewNetwork, RunFilter, RunKind, RunSummary, SnapshotSummary, StoredLinkEvents,
-    StoredNetwork, StoredRun, StoredSnapshot, StoredTransitions, TransitionsSummary,
+    Clash, JobFilter, JobState, KeyClaim, NetworkSummary, NewNetwork, RunFilter, RunKind, RunSummary, SnapshotSummary,
+    StoredJob, StoredLinkEvents, StoredNetwork, StoredRun, StoredSnapshot, StoredTransitions, TransitionsSummary,
+    Upload,
 };
 pub use answers::{
     AttachmentAnswer, AttachmentModel, CandidateAnswer, CountAnswer, CurvePointAnswer, DateAnswer, DegreeAnswer,
@@ -36,6 +40,9 @@ pub use cpu::CpuPool;
 pub use error::{ServiceError, Thing};
 pub use evidence::Written;
 pub use inputs::{FitInputs, ForecastInputs, Label, MAX_SEED, TextFault, sha256_hex};
+pub use jobs::{
+    JobFailure, JobFault, JobOutcome, JobProblem, JobView, LinkListResult, LinkListTask, PassedOver, SkippedLines,
+};
 pub use network::{Description, NameFault, NetworkName, NetworkSettings, kind_name};
 pub use numbers::{Count, Real, date_text};
 
@@ -48,6 +55,7 @@ pub struct Service {
     store: Store,
     cpu: CpuPool,
     caps: Caps,
+    jobs: Board,
 }
 
 impl Service {
@@ -61,7 +69,7 @@ impl Service {
             store.migrate().await?;
         }
         let caps = Caps { dates: MAX_SNAPSHOTS as u64, rows: config.limits.network_rows as u64 };
-        Ok(Self { store, cpu: CpuPool::new(&config.compute), caps })
+        Ok(Self { store, cpu: CpuPool::new(&config.compute), caps, jobs: Board::new(config.jobs) })
     }
 
     /// Brings the database's tables up to date and closes it.
@@ -96,9 +104,10 @@ impl Service {
         if self.store.is_current().await? { Ok(()) } else { Err(ServiceError::TablesOutdated) }
     }
 
-    /// Tells running computations to stop at their next step.
+    /// Tells running computations and jobs to stop at their next step.
     pub fn cancel_all(&self) {
         self.cpu.stop();
+        self.jobs.stop();
     }
 
     /// Closes the database.

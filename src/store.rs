@@ -1,4 +1,4 @@
-//! The only SQL: runs and their idempotency keys, tracked networks and what is known of them, in SQLite.
+//! The only SQL: runs and their idempotency keys, tracked networks and what is known of them, jobs, in SQLite.
 //!
 //! One connection writes, a pool of read-only ones reads. A run and its key are one `BEGIN IMMEDIATE` transaction, and so
 //! is every other write that looks before it leaps, each at `synchronous = FULL`: what was acknowledged is on disk, through a killed process
@@ -6,11 +6,14 @@
 
 mod columns;
 mod connect;
+mod derived;
 mod file;
+mod jobs;
 mod link_events;
 mod networks;
 mod runs;
 mod snapshots;
+mod spool;
 mod transitions;
 mod writes;
 
@@ -19,10 +22,13 @@ use std::path::PathBuf;
 use file::DatabaseFile;
 use sqlx::SqlitePool;
 
+pub use derived::DerivedEvidence;
+pub use jobs::{CalledOff, JobFilter, JobState, StoredJob};
 pub use link_events::StoredLinkEvents;
 pub use networks::{NetworkSummary, NewNetwork, StoredEvidence, StoredNetwork};
 pub use runs::{Inserted, KeyClaim, NewRun, RunFilter, RunKind, RunSummary, StoredRun};
 pub use snapshots::{SnapshotSummary, StoredSnapshot};
+pub use spool::Upload;
 pub use transitions::{EndTags, StoredTransitions, TransitionsSummary};
 pub use writes::{Caps, Clash, WriteError};
 

@@ -19,7 +19,7 @@ pub use faults::{At, Fault, Faults, Place};
 pub use link_events::link_events;
 pub use number::{real, whole};
 pub use object::{Object, list, object, text, unknown_name};
-pub use time::{every, instant, instant_of};
+pub use time::{every, every_of, instant, instant_of};
 
 use serde_json::value::RawValue;
 

@@ -1,6 +1,7 @@
 //! The one table of errors: the status and code each is answered with, and what to do about it.
 
 mod clash;
+mod job;
 
 use std::time::Duration;
 
@@ -11,7 +12,7 @@ use axum::response::{IntoResponse, Response};
 use super::decode::{At, Fault, Faults, Place};
 use super::problem::Problem;
 use crate::report::readable;
-use crate::service::{ServiceError, Thing};
+use crate::service::{JobProblem, ServiceError, Thing};
 
 /// After how long to try again when all places are taken.
 const BUSY_RETRY: Duration = Duration::from_secs(1);
@@ -21,6 +22,9 @@ const MENDING_RETRY: Duration = Duration::from_secs(30);
 
 /// What a 415 for an encoding says may be sent (RFC 9110, section 12.5.3).
 const IDENTITY_ONLY: (HeaderName, HeaderValue) = (ACCEPT_ENCODING, HeaderValue::from_static("identity"));
+
+/// The same where gzip is read too.
+const GZIP_TOO: (HeaderName, HeaderValue) = (ACCEPT_ENCODING, HeaderValue::from_static("gzip, identity"));
 
 /// Everything a request can end in other than its answer.
 #[derive(Debug)]
@@ -35,7 +39,10 @@ pub enum ApiError {
         taken: &'static str,
     },
     /// The body is compressed or otherwise encoded.
-    EncodedBody,
+    EncodedBody {
+        /// Whether gzip would be read.
+        gzip: bool,
+    },
     /// The body is larger than configured.
     TooLarge {
         /// The largest body, bytes.
@@ -46,10 +53,27 @@ pub enum ApiError {
         /// The time it had.
         limit: Duration,
     },
+    /// The body stopped coming.
+    BodyPaused {
+        /// The longest pause.
+        limit: Duration,
+    },
     /// The body broke off.
     BodyBroken,
+    /// The link list is larger than configured.
+    ListTooLarge {
+        /// The largest list, bytes.
+        limit: u64,
+    },
+    /// The job that the request made failed.
+    Job(JobProblem),
+    /// The job that the request made was called off.
+    JobCancelled,
     /// None of the forms that the client takes is one we have.
-    NotAcceptable,
+    NotAcceptable {
+        /// Those we have.
+        offered: &'static str,
+    },
     /// As many requests as configured are being served.
     Full,
     /// A use case failed.
@@ -85,9 +109,13 @@ impl ApiError {
                 let detail = format!("The body must be {taken}, in UTF-8; say so in the header Content-Type.");
                 Problem::new(S::UNSUPPORTED_MEDIA_TYPE, "unsupported_media_type", detail)
             }
-            Self::EncodedBody => {
+            Self::EncodedBody { gzip: false } => {
                 let detail = "The body must come as it is, without a Content-Encoding; compressed bodies are not read.";
                 Problem::new(S::UNSUPPORTED_MEDIA_TYPE, "unsupported_encoding", detail).with_header(IDENTITY_ONLY)
+            }
+            Self::EncodedBody { gzip: true } => {
+                let detail = "The body must come as it is, or compressed with gzip alone.";
+                Problem::new(S::UNSUPPORTED_MEDIA_TYPE, "unsupported_encoding", detail).with_header(GZIP_TOO)
             }
             Self::TooLarge { limit } => {
                 let detail = format!(
@@ -101,13 +129,27 @@ impl ApiError {
                 let detail = format!("The body did not arrive within {} s; send it again.", limit.as_secs());
                 Problem::new(S::REQUEST_TIMEOUT, "body_too_slow", detail)
             }
+            Self::BodyPaused { limit } => {
+                let detail = format!("Nothing more of the body came for {} s; send it again.", limit.as_secs());
+                Problem::new(S::REQUEST_TIMEOUT, "body_too_slow", detail)
+            }
+            Self::ListTooLarge { limit } => {
+                let detail = format!(
+                    "The link list is larger than {limit} bytes. Compress it with gzip, or raise jobs.link_list_bytes."
+                );
+                Problem::new(S::PAYLOAD_TOO_LARGE, "body_too_large", detail)
+            }
+            Self::Job(problem) => job::job_problem(problem),
+            Self::JobCancelled => {
+                let detail = "The job was called off before it ended; nothing was changed.";
+                Problem::new(S::CONFLICT, "job_cancelled", detail)
+            }
             Self::BodyBroken => {
                 let detail = "The body broke off before its announced end; send it again.";
                 Problem::new(S::BAD_REQUEST, "body_broken_off", detail)
             }
-            Self::NotAcceptable => {
-                let detail = "Results are offered as application/json and text/csv; name one in Accept, or add \
-                              ?format=json or ?format=csv.";
+            Self::NotAcceptable { offered } => {
+                let detail = format!("What was asked for is offered as {offered}; name one of them in Accept.");
                 Problem::new(S::NOT_ACCEPTABLE, "not_acceptable", detail)
             }
             Self::Full => {
@@ -198,6 +240,7 @@ fn missing(thing: Thing) -> &'static str {
         Thing::Transitions => {
             "The network has no transitions between these dates; its list of transitions has the dates."
         }
+        Thing::Job => "There is no such job: it was never taken on, or its record was deleted.",
         Thing::LinkEvents => "The network has no link events; PUT them, or a link list to derive them from.",
     }
 }

@@ -3,13 +3,17 @@
 mod body;
 mod format;
 mod key;
+mod link_list;
 mod listing;
+mod patience;
 mod place;
 
 pub use body::{JsonBody, RowsBody, read_json};
-pub use format::ResultFormat;
+pub use format::{ResultFormat, prefers_events};
 pub use key::IdempotencyKey;
+pub use link_list::LinkListBody;
 pub use listing::Listing;
+pub use patience::Patience;
 pub use place::{date, network_name};
 
 use axum::extract::FromRequestParts;

@@ -2,6 +2,7 @@
 
 mod answers;
 mod link_events;
+mod links;
 mod runs;
 mod snapshots;
 mod transitions;
@@ -33,6 +34,7 @@ pub fn routes() -> OpenApiRouter<AppState> {
         .merge(snapshots::routes())
         .merge(transitions::routes())
         .merge(link_events::routes())
+        .merge(links::routes())
         .merge(runs::routes())
 }
 
@@ -96,7 +98,7 @@ async fn get_network(
     headers: HeaderMap,
 ) -> Result<Response, ApiError> {
     let stored = state.service.network(&network_name(&name)?).await?;
-    let validator = Validator { tag: &stored.settings.tag.clone(), modified: stored.updated_at };
+    let validator = Validator { tag: &stored.settings.tag.clone(), modified: Some(stored.updated_at) };
     representation::found(validator, ResultFormat::Json, &headers, || {
         json_body(&NetworkAnswer::try_from(stored.settings)?)
     })

@@ -15,8 +15,8 @@ use super::{ApiError, AppState};
 pub struct Validator<'a> {
     /// Digest of its content.
     pub tag: &'a str,
-    /// When it was last changed.
-    pub modified: Timestamp,
+    /// When it was last changed; none for what changes from moment to moment.
+    pub modified: Option<Timestamp>,
 }
 
 /// 200 with a representation, or 304 when the client has it already.
@@ -56,14 +56,16 @@ pub fn entity_tag(tag: &str, format: ResultFormat) -> String {
 fn validators(validator: Validator<'_>, format: ResultFormat) -> Result<HeaderMap, ApiError> {
     let mut headers = HeaderMap::new();
     headers.insert(header::ETAG, header_value(&entity_tag(validator.tag, format))?);
-    headers.insert(header::LAST_MODIFIED, header_value(&httpdate::fmt_http_date(validator.modified.into()))?);
+    if let Some(modified) = validator.modified {
+        headers.insert(header::LAST_MODIFIED, header_value(&httpdate::fmt_http_date(modified.into()))?);
+    }
     headers.insert(header::CACHE_CONTROL, HeaderValue::from_static("private, no-cache"));
     headers.insert(header::VARY, HeaderValue::from_static("accept"));
     Ok(headers)
 }
 
 /// If-None-Match decides; If-Modified-Since only where the former is absent (RFC 9110, section 13.2.2).
-fn is_unmodified(asked: &HeaderMap, entity_tag: &str, modified: Timestamp) -> bool {
+fn is_unmodified(asked: &HeaderMap, entity_tag: &str, modified: Option<Timestamp>) -> bool {
     let mut tags = asked.get_all(header::IF_NONE_MATCH).iter().peekable();
     if tags.peek().is_some() {
         return tags.any(|value| names_any(value, &[entity_tag.to_owned()], true));
@@ -71,7 +73,7 @@ fn is_unmodified(asked: &HeaderMap, entity_tag: &str, modified: Timestamp) -> bo
     let since = asked.get(header::IF_MODIFIED_SINCE).and_then(|value| value.to_str().ok());
     let since =
         since.and_then(|text| httpdate::parse_http_date(text).ok()).and_then(|time| Timestamp::try_from(time).ok());
-    since.is_some_and(|since| modified.as_second() <= since.as_second())
+    since.zip(modified).is_some_and(|(since, modified)| modified.as_second() <= since.as_second())
 }
 
 /// The conditions that a change is asked for under: If-Match and If-None-Match.

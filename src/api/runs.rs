@@ -78,7 +78,7 @@ pub fn page(path: &str, listing: &Listing, runs: Vec<RunSummary>, more: bool) ->
 
 /// A run never changes.
 fn validator(run: &StoredRun) -> Validator<'_> {
-    Validator { tag: &run.tag, modified: run.created_at }
+    Validator { tag: &run.tag, modified: Some(run.created_at) }
 }
 
 fn body(run: &StoredRun, format: ResultFormat, to_csv: ToCsv) -> Result<Body, ApiError> {

@@ -61,9 +61,13 @@ pub async fn start(config: Config) -> Result<Running, Stop> {
     let address = listener.local_addr().map_err(|error| Stop::failed("the listening address", error))?;
     let metrics = telemetry::start_metrics().map_err(|error| Stop::failed("metrics", error))?;
     let service = Service::open(&config).await.map_err(|error| Stop::failed("the database", error))?;
+    if let Err(error) = service.resume_jobs().await {
+        tracing::warn!(%error, "jobs of the last process are not taken up before the next start");
+    }
     let upkeep = tokio::spawn(telemetry::keep_metrics_small(metrics.clone()));
     let (grace, head_timeout) = (config.http.shutdown_grace(), config.http.head_timeout());
-    let state = AppState { service: service.clone(), http: Arc::new(config.http), limits: config.limits, metrics };
+    let (limits, jobs) = (config.limits, config.jobs);
+    let state = AppState { service: service.clone(), http: Arc::new(config.http), limits, jobs, metrics };
     let (stop, stopped) = watch::channel(false);
     let server = tokio::spawn(connections::serve(listener, router(state), head_timeout, stopped));
     tracing::info!(%address, "serving");

@@ -6,23 +6,19 @@ use super::report::shown;
 
 /// Length of a bare date, `YYYY-MM-DD`.
 const DATE_BYTES: usize = 10;
-/// Times that RFC 3339 and the calendar's arithmetic both reach: from 0000-01-01 on, and before 9999-12-31, seconds.
+/// Times that RFC 3339 and the calendar's arithmetic both reach: from 0000-01-01 on, and before 9999-12-30, seconds.
 const FIRST: i64 = -62_167_219_200;
-const END: i64 = 253_402_214_400;
+const END: i64 = 253_402_128_000;
+const END_DAY: &[u8] = b"9999-12-30";
 
 /// Reads times; remembers the last day and the last text, for the next time is often of the same day or the very same.
-#[derive(Debug)]
+#[derive(Debug, Default)]
 pub struct Clock {
     text: Vec<u8>,
-    time: Timestamp,
-    day: [u8; DATE_BYTES],
-    midnight: i64,
-}
-
-impl Default for Clock {
-    fn default() -> Self {
-        Self { text: Vec::new(), time: Timestamp::UNIX_EPOCH, day: [0; DATE_BYTES], midnight: 0 }
-    }
+    /// What `text` says.
+    time: Option<Timestamp>,
+    /// A date and the second it begins at.
+    day: Option<([u8; DATE_BYTES], i64)>,
 }
 
 impl Clock {
@@ -42,7 +38,8 @@ impl Clock {
             _ => None,
         };
         let (hour, minute, second) = (two(*h1, *h2)?, two(*m1, *m2)?, two(*s1, *s2)?);
-        if *day != self.day || hour > 23 || minute > 59 || second > 59 {
+        let (known, midnight) = self.day?;
+        if *day != known || hour > 23 || minute > 59 || second > 59 {
             return None;
         }
         let nanoseconds = match fraction {
@@ -50,22 +47,20 @@ impl Clock {
             [b'.', digits @ ..] => nanoseconds(digits)?,
             _ => return None,
         };
-        Timestamp::new(self.midnight + 3_600 * hour + 60 * minute + second, nanoseconds).ok()
+        Timestamp::new(midnight + 3_600 * hour + 60 * minute + second, nanoseconds).ok()
     }
 
     fn any(&mut self, text: &[u8]) -> Option<Timestamp> {
-        if text == self.text {
-            return Some(self.time);
+        if text == self.text && self.time.is_some() {
+            return self.time;
         }
         let time = epoch(text).or_else(|| calendar(text)).filter(in_range)?;
         let day = text.first_chunk::<DATE_BYTES>().and_then(|day| Some((*day, midnight(day)?.as_second())));
-        if let Some((day, midnight)) = day {
-            (self.day, self.midnight) = (day, midnight);
-        }
+        self.day = day.or(self.day);
         self.text.clear();
         self.text.extend_from_slice(text);
-        self.time = time;
-        Some(time)
+        self.time = Some(time);
+        self.time
     }
 }
 
@@ -127,15 +122,16 @@ fn midnight(day: &[u8; DATE_BYTES]) -> Option<Timestamp> {
 
 /// What is wrong with a text that says no time.
 pub fn why_no_time(text: &[u8]) -> String {
-    let number = !text.is_empty() && text.iter().all(|byte| byte.is_ascii_digit() || b"-.".contains(byte));
+    let seconds = std::str::from_utf8(text).ok().and_then(|text| text.parse::<f64>().ok()).filter(|x| x.is_finite());
     let offset = text.get(DATE_BYTES..).is_some_and(|rest| rest.iter().any(|byte| b"Zz+-".contains(byte)));
-    let dated = text.first_chunk::<DATE_BYTES>().is_some_and(|day| midnight(day).is_some());
-    let why = if number && !dated && epoch(text).is_some() {
+    let date = |day| std::str::from_utf8(day).ok()?.parse::<Date>().ok();
+    let dated = text.get(..DATE_BYTES).and_then(date).is_some();
+    let why = if seconds.is_some_and(|seconds| !(FIRST as f64..END as f64).contains(&seconds)) {
         "is out of range; times in numbers are seconds, so divide milliseconds by 1000"
     } else if dated && text.len() > DATE_BYTES && !offset {
         "needs its offset from UTC, such as Z at its end"
-    } else if calendar(text).is_some() {
-        "is out of range: years from 0000 to 9999 are taken"
+    } else if dated && text >= END_DAY {
+        "is out of range: dates from 0000-01-01 to 9999-12-29 are taken"
     } else {
         "is none; write it as 2026-12-01T08:30:00Z, as 2026-12-01, or as seconds since 1970 with up to nine decimals"
     };

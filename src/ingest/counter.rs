@@ -44,6 +44,11 @@ impl Counter {
         self.report.links
     }
 
+    /// Nodes met.
+    pub fn nodes(&self) -> u64 {
+        self.census.nodes() as u64
+    }
+
     /// Goes on by so many lines.
     #[inline]
     pub fn pass(&mut self, lines: u64) {

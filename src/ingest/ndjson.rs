@@ -9,6 +9,10 @@ use serde::de::{Deserialize, Deserializer, Error, Visitor};
 use super::IngestError;
 use super::clock::from_seconds;
 use super::counter::Counter;
+use super::report::shown;
+
+/// What a line should be.
+const EXAMPLE: &str = "a line is an object like {\"time\":\"2026-12-01\",\"source\":1,\"target\":2}";
 
 /// Counts the complete lines of `block`; returns how many bytes they take.
 pub fn read(block: &[u8], last: bool, counter: &mut Counter) -> Result<usize, IngestError> {
@@ -30,6 +34,10 @@ pub fn read(block: &[u8], last: bool, counter: &mut Counter) -> Result<usize, In
 }
 
 fn object(text: &[u8], counter: &mut Counter) -> Result<(), IngestError> {
+    // The fields alone, in an array, would be taken too.
+    if !text.starts_with(b"{") {
+        return counter.malformed(|| format!("{} is no JSON object; {EXAMPLE}", shown(text)));
+    }
     let link: Link<'_> = match serde_json::from_slice(text) {
         Ok(link) => link,
         Err(error) => return counter.malformed(|| why_no_link(&error)),
@@ -49,10 +57,7 @@ fn object(text: &[u8], counter: &mut Counter) -> Result<(), IngestError> {
 fn why_no_link(error: &serde_json::Error) -> String {
     let text = error.to_string();
     let what = text.rsplit_once(" at line ").map_or(text.as_str(), |(what, _)| what);
-    format!(
-        "{what} (column {}); a line is an object like {{\"time\":\"2026-12-01\",\"source\":1,\"target\":2}}",
-        error.column()
-    )
+    format!("{what} (column {}); {EXAMPLE}", error.column())
 }
 
 /// Other keys are passed over.

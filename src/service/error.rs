@@ -77,6 +77,8 @@ pub enum Thing {
     Transitions,
     /// A network's attachment statistics.
     LinkEvents,
+    /// A job.
+    Job,
 }
 
 impl From<StoreError> for ServiceError {

@@ -1,7 +1,7 @@
 //! What is stored of tracked networks: snapshots, transitions, link events; and all of it as evidence for a run.
 
 mod assemble;
-mod encode;
+pub(super) mod encode;
 
 use jiff::Timestamp;
 

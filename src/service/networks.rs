@@ -47,7 +47,7 @@ impl Service {
         Ok(cut(found, limit))
     }
 
-    /// Deletes a network and all that is stored of it; its runs stay. `allows` is asked about its validator.
+    /// Deletes a network and all that is stored of it, and calls its job off; its runs stay. `allows` is asked about its validator.
     ///
     /// # Errors
     /// When there is no such network, `allows` refuses, or the database fails.
@@ -56,10 +56,12 @@ impl Service {
         name: NetworkName,
         allows: impl FnOnce(Option<&str>) -> bool + Send + 'static,
     ) -> Result<(), ServiceError> {
-        let store = self.store.clone();
+        let (store, jobs) = (self.store.clone(), self.jobs.clone());
         in_own_task(async move {
             let done = store.delete_network(name.as_str(), allows).await;
-            done.map_err(|error| ServiceError::from_write(error, Thing::Network))
+            let job = done.map_err(|error| ServiceError::from_write(error, Thing::Network))?;
+            job.into_iter().for_each(|job| jobs.call_off(job));
+            Ok(())
         })
         .await
     }

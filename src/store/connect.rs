@@ -72,7 +72,8 @@ impl Store {
         sqlx::query(
             "SELECT 1 WHERE EXISTS (SELECT 1 FROM runs) OR EXISTS (SELECT 1 FROM idempotency_keys) \
              OR EXISTS (SELECT 1 FROM networks) OR EXISTS (SELECT 1 FROM snapshots) \
-             OR EXISTS (SELECT 1 FROM transitions) OR EXISTS (SELECT 1 FROM link_events)",
+             OR EXISTS (SELECT 1 FROM transitions) OR EXISTS (SELECT 1 FROM link_events) \
+             OR EXISTS (SELECT 1 FROM jobs)",
         )
         .fetch_optional(&mut *connection)
         .await?;

@@ -28,6 +28,11 @@ impl DatabaseFile {
         Ok(Self { identity: identity(&found), path })
     }
 
+    /// Where it stands.
+    pub fn path(&self) -> &Path {
+        &self.path
+    }
+
     /// Checks that the file still stands at its path.
     ///
     /// # Errors

@@ -2,8 +2,10 @@
 
 use jiff::Timestamp;
 use sqlx::{FromRow, SqliteConnection};
+use uuid::Uuid;
 
 use super::columns::{date, kind, kind_name, time, unsigned};
+use super::jobs::call_off_of;
 use super::writes::{Clash, WriteError};
 use super::{Store, StoreError};
 use crate::model::DegreeKind;
@@ -153,7 +155,7 @@ impl Store {
         rows.into_iter().map(NetworkSummary::try_from).collect()
     }
 
-    /// Deletes a network and all that is stored of it; its runs stay.
+    /// Deletes a network and all that is stored of it, and calls its live job off, whose id it returns; its runs stay.
     ///
     /// # Errors
     /// When there is no such network, `allows` refuses, or the database fails.
@@ -161,14 +163,16 @@ impl Store {
         &self,
         name: &str,
         allows: impl FnOnce(Option<&str>) -> bool,
-    ) -> Result<(), WriteError> {
+    ) -> Result<Option<Uuid>, WriteError> {
         let mut transaction = self.begin().await?;
         let stored = find(&mut transaction, name).await?.ok_or(WriteError::NoNetwork)?;
         if !allows(Some(&stored.settings.tag)) {
             return Err(WriteError::Mismatch);
         }
+        let job = call_off_of(&mut transaction, name).await?;
         sqlx::query("DELETE FROM networks WHERE name = $1").bind(name).execute(&mut *transaction).await?;
-        Ok(self.commit(transaction).await?)
+        self.commit(transaction).await?;
+        Ok(job)
     }
 
     /// All that is known of a network, if it is tracked.
@@ -205,7 +209,8 @@ impl Store {
     }
 }
 
-async fn find(connection: &mut SqliteConnection, name: &str) -> Result<Option<StoredNetwork>, StoreError> {
+/// The settings of a network, if it is tracked.
+pub(super) async fn find(connection: &mut SqliteConnection, name: &str) -> Result<Option<StoredNetwork>, StoreError> {
     let row: Option<NetworkRow> = sqlx::query_as(
         "SELECT name, degree_kind, description, tag, created_at, updated_at, entry_degrees FROM networks WHERE name = $1",
     )

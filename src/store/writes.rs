@@ -2,6 +2,7 @@
 
 use jiff::Timestamp;
 use sqlx::{Sqlite, SqliteConnection, Transaction};
+use uuid::Uuid;
 
 use super::columns::unsigned;
 use super::{Store, StoreError};
@@ -69,6 +70,13 @@ pub enum Clash {
         /// The most.
         most: u64,
     },
+    /// The network has a job that has not ended.
+    JobLive {
+        /// The job.
+        job: Uuid,
+    },
+    /// As many jobs as configured have not ended.
+    TooManyJobs,
     /// More rows than one network may have.
     TooManyRows {
         /// Rows in all.

@@ -17,7 +17,7 @@ const ARROWS: [(&str, &[&str]); 15] = [
     ("telemetry", &["config"]),
     ("store", &["config", "model"]),
     // fit, forecast and growth: the words of evaluate's requests, answers and errors.
-    ("service", &["config", "evaluate", "fit", "forecast", "growth", "model", "store"]),
+    ("service", &["census", "config", "evaluate", "fit", "forecast", "growth", "ingest", "model", "store"]),
     ("report", &["service"]),
     ("api", &["config", "model", "report", "service"]),
     // growth: the demo grows its network with the simulator, so that what comes true is known.

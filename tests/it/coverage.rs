@@ -2,12 +2,12 @@
 
 use std::collections::BTreeSet;
 
-use serde_json::{Value, json};
+use serde_json::json;
 
-use crate::harness::{DOCUMENT, Service, answered, fit_body, forecast_body};
+use crate::harness::{DOCUMENT, Service, answered, csv, fit_body, forecast_body, json_text};
 
 /// Every operation with the status its plain use is answered with, in an order in which all of them work.
-const CALLS: [(&str, &str, u16); 29] = [
+const CALLS: [(&str, &str, u16); 33] = [
     ("get", "/livez", 200),
     ("get", "/readyz", 200),
     ("get", "/metrics", 200),
@@ -23,6 +23,10 @@ const CALLS: [(&str, &str, u16); 29] = [
     ("put", "/v1/networks/{name}", 201),
     ("get", "/v1/networks/{name}", 200),
     ("get", "/v1/networks", 200),
+    ("put", "/v1/networks/{name}/links", 200),
+    ("get", "/v1/jobs", 200),
+    ("get", "/v1/jobs/{id}", 200),
+    ("delete", "/v1/jobs/{id}", 204),
     ("put", "/v1/networks/{name}/snapshots/{as_of}", 201),
     ("get", "/v1/networks/{name}/snapshots/{as_of}", 200),
     ("get", "/v1/networks/{name}/snapshots", 200),
@@ -40,12 +44,15 @@ const CALLS: [(&str, &str, u16); 29] = [
 ];
 
 /// The body that a call is made with.
-fn body(method: &str, path: &str) -> Option<Value> {
+fn body(method: &str, path: &str) -> Option<(&'static str, String)> {
     if !["post", "put"].contains(&method) {
         return None;
     }
     let resource = path.split('/').rfind(|part| !part.starts_with('{')).unwrap();
-    Some(match (resource, path.contains("{name}")) {
+    if resource == "links" {
+        return Some(csv("time,source,target\n2020-01-01,ana,ben\n"));
+    }
+    Some(json_text(&match (resource, path.contains("{name}")) {
         ("forecasts", false) => forecast_body(),
         ("fits", false) => fit_body(),
         ("forecasts", true) => json!({"arrivals": {"per_day": 1}, "thresholds": [3], "dates": ["2027-01-01"]}),
@@ -57,7 +64,7 @@ fn body(method: &str, path: &str) -> Option<Value> {
         }
         ("link-events", _) => json!({"ratios": [[1, 0, 5]], "windows": []}),
         (other, _) => panic!("{other}: no body is known"),
-    })
+    }))
 }
 
 #[test]
@@ -79,10 +86,10 @@ async fn every_operation_works() {
         let address = address.replace("{from}", "2026-05-01").replace("{to}", "2026-06-01");
         let request = service.request(method.to_uppercase().parse().unwrap(), &address);
         let answer = match body(method, path) {
-            Some(body) => answered(request.json(&body)).await.expect(status),
+            Some((kind, body)) => answered(request.header("content-type", kind).body(body)).await.expect(status),
             None => answered(request).await.expect(status),
         };
-        if method == "post" {
+        if method == "post" || path.ends_with("/links") {
             made = answer.json()["id"].as_str().unwrap().to_owned();
         }
     }

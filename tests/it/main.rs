@@ -3,6 +3,7 @@
 #![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic)]
 
 mod any_json;
+mod any_links;
 mod architecture;
 mod bad_input;
 mod command_line;
@@ -11,7 +12,9 @@ mod durability;
 mod fits;
 mod forecasts;
 mod harness;
+mod jobs;
 mod limits;
+mod link_lists;
 mod lists;
 mod network_runs;
 mod networks;

@@ -1,9 +1,14 @@
 //! What stored evidence a write does not fit, in words.
 
+use std::time::Duration;
+
 use axum::http::StatusCode;
 
 use crate::api::problem::Problem;
 use crate::service::{Clash, date_text, kind_name};
+
+/// After how long to try again when the queue of jobs is full.
+const JOBS_RETRY: Duration = Duration::from_secs(60);
 
 /// The problem that a clash is answered with.
 pub fn clash_problem(clash: Clash) -> Problem {
@@ -45,6 +50,20 @@ pub fn clash_problem(clash: Clash) -> Problem {
             let detail =
                 format!("The network has {most} {what} already, as many as one run takes. Delete old ones first.");
             ("network_full", detail)
+        }
+        Clash::JobLive { job } => {
+            let detail = format!(
+                "The network has a job that has not ended. Wait for /v1/jobs/{job}, or DELETE it, then send the list again."
+            );
+            ("job_live", detail)
+        }
+        Clash::TooManyJobs => {
+            return Problem::new(
+                StatusCode::SERVICE_UNAVAILABLE,
+                "overloaded",
+                "As many jobs as this service takes are waiting; try again when one has ended.",
+            )
+            .retry_after(JOBS_RETRY);
         }
         Clash::TooManyRows { total, most } => {
             let detail = format!(

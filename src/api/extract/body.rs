@@ -92,10 +92,9 @@ impl FromRequest<AppState> for RowsBody {
 async fn complete(request: Request, state: &AppState) -> Result<Bytes, ApiError> {
     let (limit, time) = (state.http.body_limit_bytes, state.http.body_timeout());
     if !is_plain(request.headers()) {
-        return Err(ApiError::EncodedBody);
+        return Err(ApiError::EncodedBody { gzip: false });
     }
-    let announced = request.headers().get(header::CONTENT_LENGTH).and_then(|value| value.to_str().ok()?.parse().ok());
-    if announced.is_some_and(|length: u64| length > limit as u64) {
+    if announced_length(request.headers()).is_some_and(|length| length > limit as u64) {
         return Err(ApiError::TooLarge { limit });
     }
     match timeout(time, to_bytes(request.into_body(), limit)).await {
@@ -144,7 +143,7 @@ fn is_json(headers: &HeaderMap) -> bool {
 }
 
 /// The body's media type in lower case; none when it is not announced, or as text in another encoding than UTF-8.
-fn media_type(headers: &HeaderMap) -> Option<String> {
+pub(super) fn media_type(headers: &HeaderMap) -> Option<String> {
     let mut parts = headers.get(header::CONTENT_TYPE)?.to_str().ok()?.split(';').map(str::trim);
     let essence = parts.next().unwrap_or_default().to_ascii_lowercase();
     let utf8 = parts.all(|parameter| match parameter.split_once('=') {
@@ -159,11 +158,19 @@ fn media_type(headers: &HeaderMap) -> Option<String> {
 
 /// Whether the body is sent as it is: neither compressed nor otherwise encoded.
 fn is_plain(headers: &HeaderMap) -> bool {
-    let encodings = headers.get_all(header::CONTENT_ENCODING).iter();
-    encodings.flat_map(|value| value.as_bytes().split(|&byte| byte == b',')).all(|encoding| {
-        let encoding = encoding.trim_ascii();
-        encoding.is_empty() || encoding.eq_ignore_ascii_case(b"identity")
-    })
+    encodings(headers).next().is_none()
+}
+
+/// How the body is encoded, in the order in which that was done.
+pub(super) fn encodings(headers: &HeaderMap) -> impl Iterator<Item = &[u8]> {
+    let values = headers.get_all(header::CONTENT_ENCODING).iter();
+    let named = values.flat_map(|value| value.as_bytes().split(|&byte| byte == b',')).map(<[u8]>::trim_ascii);
+    named.filter(|encoding| !encoding.is_empty() && !encoding.eq_ignore_ascii_case(b"identity"))
+}
+
+/// The length that the body is announced with.
+pub(super) fn announced_length(headers: &HeaderMap) -> Option<u64> {
+    headers.get(header::CONTENT_LENGTH)?.to_str().ok()?.parse().ok()
 }
 
 fn is_length_limit(error: &axum::Error) -> bool {

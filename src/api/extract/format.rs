@@ -58,12 +58,24 @@ impl FromRequestParts<AppState> for ResultFormat {
         if !faults.is_empty() {
             return Err(ApiError::Invalid(faults));
         }
-        format.or_else(|| accepted(&parts.headers)).ok_or(ApiError::NotAcceptable)
+        let offered = "application/json and text/csv";
+        format.or_else(|| accepted(&parts.headers)).ok_or(ApiError::NotAcceptable { offered })
     }
 }
 
 /// The form the client likes best of those we have; none when it takes none of them.
 fn accepted(headers: &HeaderMap) -> Option<ResultFormat> {
+    best(headers, &ResultFormat::ALL.map(|format| (format, format.media_type())))
+}
+
+/// Whether the client likes a stream of events better than one answer in JSON.
+pub fn prefers_events(headers: &HeaderMap) -> Result<bool, ApiError> {
+    best(headers, &[(false, ("application", "json")), (true, ("text", "event-stream"))])
+        .ok_or(ApiError::NotAcceptable { offered: "application/json and text/event-stream" })
+}
+
+/// What the client likes best of what is on offer, the default first; none when it takes nothing of it.
+fn best<T: Copy>(headers: &HeaderMap, offers: &[(T, (&str, &str))]) -> Option<T> {
     let ranges: Vec<Range> = headers
         .get_all(header::ACCEPT)
         .iter()
@@ -72,24 +84,21 @@ fn accepted(headers: &HeaderMap) -> Option<ResultFormat> {
         .filter_map(Range::parse)
         .collect();
     if ranges.is_empty() {
-        return Some(ResultFormat::Json);
+        return offers.first().map(|&(offer, _)| offer);
     }
-    let quality = |format: ResultFormat| {
+    let quality = |media_type| {
         // The most specific range that covers the form decides.
-        ranges
-            .iter()
-            .filter(|range| range.covers(format))
-            .max_by_key(|range| range.specificity())
-            .map_or(0.0, |r| r.quality)
+        let covering = ranges.iter().filter(|range| range.covers(media_type));
+        covering.max_by_key(|range| range.specificity()).map_or(0.0, |range| range.quality)
     };
-    let mut best: Option<(f32, ResultFormat)> = None;
-    for format in ResultFormat::ALL {
-        let q = quality(format);
+    let mut best: Option<(f32, T)> = None;
+    for &(offer, media_type) in offers {
+        let q = quality(media_type);
         if q > best.map_or(0.0, |(q, _)| q) {
-            best = Some((q, format));
+            best = Some((q, offer));
         }
     }
-    best.map(|(_, format)| format)
+    best.map(|(_, offer)| offer)
 }
 
 struct Range {
@@ -110,8 +119,7 @@ impl Range {
         Some(Self { kind, subtype, quality })
     }
 
-    fn covers(&self, format: ResultFormat) -> bool {
-        let (kind, subtype) = format.media_type();
+    fn covers(&self, (kind, subtype): (&str, &str)) -> bool {
         match (self.kind.as_str(), self.subtype.as_str()) {
             ("*", "*") => true,
             (k, "*") => k == kind,
@@ -148,5 +156,18 @@ mod tests {
             assert_eq!(accepted(&headers), expected, "{accept}");
         }
         assert_eq!(accepted(&HeaderMap::new()), Some(Json));
+    }
+
+    #[test]
+    fn a_stream_is_for_who_asks_for_one() {
+        for (accept, expected) in [
+            ("*/*", Some(false)),
+            ("text/event-stream", Some(true)),
+            ("text/event-stream, application/json;q=0.9", Some(true)),
+            ("text/csv", None),
+        ] {
+            let headers = HeaderMap::from_iter([(header::ACCEPT, HeaderValue::from_static(accept))]);
+            assert_eq!(prefers_events(&headers).ok(), expected, "{accept}");
+        }
     }
 }

@@ -83,7 +83,7 @@ async fn get_link_events(
     headers: HeaderMap,
 ) -> Result<Response, ApiError> {
     let stored = state.service.link_events(&network_name(&name)?).await?;
-    let validator = Validator { tag: &stored.tag, modified: stored.updated_at };
+    let validator = Validator { tag: &stored.tag, modified: Some(stored.updated_at) };
     representation::found(validator, ResultFormat::Json, &headers, || Ok(Body::from(stored.statistics.clone())))
 }
 

@@ -100,7 +100,7 @@ async fn get_snapshot(
     headers: HeaderMap,
 ) -> Result<Response, ApiError> {
     let stored = state.service.snapshot(&network_name(&name)?, date("as_of", &as_of)?).await?;
-    let (tag, modified) = (stored.summary.tag.clone(), stored.summary.updated_at);
+    let (tag, modified) = (stored.summary.tag.clone(), Some(stored.summary.updated_at));
     representation::found(Validator { tag: &tag, modified }, format, &headers, || match format {
         ResultFormat::Json => json_body(&SnapshotAnswer::try_from(stored)?),
         ResultFormat::Csv => csv(&stored),

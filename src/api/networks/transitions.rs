@@ -113,7 +113,7 @@ async fn get_transitions(
 ) -> Result<Response, ApiError> {
     let (name, dates) = table(path)?;
     let stored = state.service.transitions(&name, dates).await?;
-    let (tag, modified) = (stored.summary.tag.clone(), stored.summary.updated_at);
+    let (tag, modified) = (stored.summary.tag.clone(), Some(stored.summary.updated_at));
     representation::found(Validator { tag: &tag, modified }, format, &headers, || match format {
         ResultFormat::Json => json_body(&TransitionTableAnswer::try_from(stored)?),
         ResultFormat::Csv => csv(&stored),

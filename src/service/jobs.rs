@@ -1,0 +1,257 @@
+//! Jobs: work that outlasts its request and, taken up again, the process.
+
+mod board;
+mod link_list;
+mod outcome;
+
+use std::future::Future;
+use std::time::Duration;
+
+use tokio::sync::watch;
+use tokio::time::{sleep, timeout};
+use tracing::{Instrument, info_span};
+use uuid::Uuid;
+
+use super::networks::cut;
+use super::{NetworkName, Service, ServiceError, Thing, in_own_task};
+use crate::store::{CalledOff, JobFilter, JobState, StoreError, StoredJob, Upload, WriteError};
+pub use board::Board;
+use board::Turn;
+pub use link_list::LinkListTask;
+use link_list::{Stopped, Told, count};
+pub use outcome::{JobFailure, JobFault, JobOutcome, JobProblem, LinkListResult, PassedOver, SkippedLines};
+
+/// How often a job is begun before it is given up: one that stops the process each time must not do so for ever.
+const MOST_STARTS: u64 = 3;
+/// How often, and after how long at first, the end of a job is written again when the database fails.
+const WRITE_TRIES: u32 = 6;
+const WRITE_PAUSE: Duration = Duration::from_secs(1);
+
+/// A job as it stands.
+#[derive(Debug, Clone, PartialEq)]
+pub struct JobView {
+    /// As stored.
+    pub job: StoredJob,
+    /// How far it has come, 0 to 1; none when it ended without a result.
+    pub progress: Option<f64>,
+    /// What came of it.
+    pub outcome: Option<JobOutcome>,
+}
+
+impl Service {
+    /// Begins to receive a network's link list.
+    ///
+    /// # Errors
+    /// When there is no such network, it has a live job, or the database fails.
+    pub async fn begin_link_list(&self, name: &NetworkName) -> Result<Upload, ServiceError> {
+        self.check_tables().await?;
+        self.store.check_idle(name.as_str()).await.map_err(refused)?;
+        Ok(self.store.begin_upload().await?)
+    }
+
+    /// Takes on a link list that was received in full; returns the job's id. It is on disk when this returns.
+    ///
+    /// # Errors
+    /// As [`Self::begin_link_list`]; when as many jobs as configured wait.
+    pub async fn take_link_list(
+        &self,
+        name: NetworkName,
+        task: LinkListTask,
+        list: Upload,
+    ) -> Result<Uuid, ServiceError> {
+        let service = self.clone();
+        in_own_task(async move {
+            let kind = service.network(&name).await?.settings.degree_kind;
+            let task = task.to_json(kind, list.bytes())?;
+            let id = Uuid::now_v7();
+            list.keep(id).await?;
+            let taken = service.store.insert_job(id, name.as_str(), &task, service.jobs.most_live()).await;
+            if let Err(error) = taken {
+                service.drop_list(id).await;
+                return Err(refused(error));
+            }
+            service.launch(id);
+            Ok(id)
+        })
+        .await
+    }
+
+    /// A job as it stands.
+    ///
+    /// # Errors
+    /// When there is none with this id, or the database fails.
+    pub async fn job(&self, id: Uuid) -> Result<JobView, ServiceError> {
+        let progress = self.jobs.watch(id).map(|pulse| *pulse.borrow());
+        let job = self.store.find_job(id).await?.ok_or(ServiceError::NotFound(Thing::Job))?;
+        view(job, progress)
+    }
+
+    /// A job as it stands when it has ended, or after `patience`.
+    ///
+    /// # Errors
+    /// As [`Self::job`].
+    pub async fn job_after(&self, id: Uuid, patience: Duration) -> Result<JobView, ServiceError> {
+        if let Some(mut pulse) = self.jobs.watch(id) {
+            // Changes until the job ends; running out of patience is no failure.
+            let _ = timeout(patience, async { while pulse.changed().await.is_ok() {} }).await;
+        }
+        self.job(id).await
+    }
+
+    /// Tells each time that a live job has come on; closed when it ends. None when it is not at work here.
+    pub fn job_pulse(&self, id: Uuid) -> Option<watch::Receiver<f64>> {
+        self.jobs.watch(id)
+    }
+
+    /// Jobs that pass the filter, newest first, and whether more follow.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn list_jobs(&self, mut filter: JobFilter) -> Result<(Vec<JobView>, bool), ServiceError> {
+        let limit = filter.limit;
+        filter.limit = limit.saturating_add(1);
+        let (jobs, more) = cut(self.store.list_jobs(&filter).await?, limit);
+        let progress = |id| self.jobs.watch(id).map(|pulse| *pulse.borrow());
+        let views = jobs.into_iter().map(|job| {
+            let progress = progress(job.id);
+            view(job, progress)
+        });
+        Ok((views.collect::<Result<_, _>>()?, more))
+    }
+
+    /// Calls a live job off, or removes the record of one that has ended.
+    ///
+    /// # Errors
+    /// When there is none with this id, or the database fails.
+    pub async fn call_off(&self, id: Uuid) -> Result<(), ServiceError> {
+        let (store, jobs) = (self.store.clone(), self.jobs.clone());
+        in_own_task(async move {
+            match store.call_off(id).await? {
+                CalledOff::Missing => Err(ServiceError::NotFound(Thing::Job)),
+                CalledOff::Removed => Ok(()),
+                CalledOff::Cancelled => {
+                    jobs.call_off(id);
+                    Ok(())
+                }
+            }
+        })
+        .await
+    }
+
+    /// Takes up the jobs that had not ended when the last process stopped, and sweeps away what it left lying.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn resume_jobs(&self) -> Result<(), ServiceError> {
+        self.check_tables().await?;
+        // What is younger than an upload may take may belong to one.
+        self.store.sweep_spool(self.jobs.config().link_list_time()).await?;
+        for id in self.store.live_jobs().await? {
+            self.launch(id);
+        }
+        Ok(())
+    }
+
+    fn launch(&self, id: Uuid) {
+        let (service, turn) = (self.clone(), self.jobs.open(id));
+        let work = async move {
+            if let Err(error) = service.work(id, &turn).await {
+                tracing::error!(%error, "the job's end could not be written; it is taken up again at the next start");
+            }
+        };
+        tokio::spawn(work.instrument(info_span!("job", %id)));
+    }
+
+    /// Works a job to its end, or until the process stops.
+    async fn work(&self, id: Uuid, turn: &Turn) -> Result<(), ServiceError> {
+        let _worker = turn.come().await;
+        if turn.is_stopping() {
+            return Ok(());
+        }
+        if let Some(job) = self.store.start_job(id).await? {
+            match self.told(&job, turn).await {
+                Ok(told) => self.finish(&job, &told).await?,
+                Err(Stopped::Process) => return Ok(()),
+                Err(Stopped::CalledOff) => {}
+                Err(Stopped::Failed(problem)) => self.fail(&job, problem).await?,
+            }
+        }
+        self.drop_list(id).await;
+        Ok(())
+    }
+
+    /// What the list of a job tells.
+    async fn told(&self, job: &StoredJob, turn: &Turn) -> Result<Told, Stopped> {
+        if job.starts > MOST_STARTS {
+            return Err(Stopped::Failed(JobProblem::interrupted(job.starts - 1)));
+        }
+        let (path, task, progress) = (self.store.spooled(job.id), job.task.clone(), turn.progress());
+        let most_nodes = self.jobs.config().link_list_nodes;
+        let counting = tokio::task::spawn_blocking(move || count(&path, &task, most_nodes, &progress));
+        match counting.await {
+            Ok(told) => told,
+            Err(error) => Err(Stopped::broken(format!("counting stopped short: {error}"))),
+        }
+    }
+
+    async fn finish(&self, job: &StoredJob, told: &Told) -> Result<(), ServiceError> {
+        let outcome = JobOutcome::Result(told.result.clone()).to_json()?;
+        let written = persistently(|| async {
+            match self.store.finish_link_list(job.id, &job.network, &told.derived, &self.caps, &outcome).await {
+                Ok(_) => Ok(None),
+                Err(WriteError::Clash(clash)) => Ok(Some(JobProblem::clash(&clash))),
+                // The network went, and the job with it.
+                Err(WriteError::NoNetwork | WriteError::Missing | WriteError::Mismatch) => Ok(None),
+                Err(WriteError::Store(error)) => Err(error),
+            }
+        });
+        match written.await? {
+            Some(problem) => self.fail(job, problem).await,
+            None => Ok(()),
+        }
+    }
+
+    async fn fail(&self, job: &StoredJob, problem: JobProblem) -> Result<(), ServiceError> {
+        let outcome = JobOutcome::Problem(problem).to_json()?;
+        persistently(|| self.store.fail_job(job.id, &outcome)).await?;
+        Ok(())
+    }
+
+    async fn drop_list(&self, id: Uuid) {
+        let path = self.store.spooled(id);
+        if let Err(error) = tokio::fs::remove_file(&path).await
+            && error.kind() != std::io::ErrorKind::NotFound
+        {
+            tracing::warn!(path = %path.display(), %error, "a link list that is needed no more could not be removed");
+        }
+    }
+}
+
+/// Writes again, with growing pauses, while the database fails.
+async fn persistently<T, F: Future<Output = Result<T, StoreError>>>(
+    mut write: impl FnMut() -> F,
+) -> Result<T, StoreError> {
+    for round in 0..WRITE_TRIES {
+        match write().await {
+            Ok(done) => return Ok(done),
+            Err(error) => tracing::warn!(%error, "the end of a job could not be written; it is tried again"),
+        }
+        sleep(WRITE_PAUSE * 2u32.pow(round)).await;
+    }
+    write().await
+}
+
+fn view(job: StoredJob, live: Option<f64>) -> Result<JobView, ServiceError> {
+    let outcome = job.outcome.as_deref().map(JobOutcome::from_json).transpose()?;
+    let progress = match job.state {
+        JobState::Waiting => Some(0.0),
+        JobState::Running => Some(live.unwrap_or(0.0)),
+        JobState::Succeeded => Some(1.0),
+        JobState::Failed | JobState::Cancelled => None,
+    };
+    Ok(JobView { job, progress, outcome })
+}
+
+fn refused(error: WriteError) -> ServiceError {
+    ServiceError::from_write(error, Thing::Job)
+}

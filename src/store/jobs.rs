@@ -1,0 +1,306 @@
+//! Jobs: work that outlasts its request and the process.
+
+use jiff::Timestamp;
+use sqlx::{FromRow, QueryBuilder, Sqlite, SqliteConnection};
+use uuid::Uuid;
+
+use super::columns::{corrupt, time, unsigned, uuid};
+use super::writes::{Clash, WriteError, network_exists};
+use super::{Store, StoreError};
+
+/// How a job stands.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum JobState {
+    /// For a free worker.
+    Waiting,
+    /// At work, or to be taken up again by the next process.
+    Running,
+    /// Its result is stored.
+    Succeeded,
+    /// It changed nothing.
+    Failed,
+    /// It was called off, and changed nothing.
+    Cancelled,
+}
+
+impl JobState {
+    const ALL: [Self; 5] = [Self::Waiting, Self::Running, Self::Succeeded, Self::Failed, Self::Cancelled];
+
+    /// Its name.
+    pub fn as_str(self) -> &'static str {
+        match self {
+            Self::Waiting => "waiting",
+            Self::Running => "running",
+            Self::Succeeded => "succeeded",
+            Self::Failed => "failed",
+            Self::Cancelled => "cancelled",
+        }
+    }
+
+    /// Whether there is something left to do.
+    pub fn is_live(self) -> bool {
+        matches!(self, Self::Waiting | Self::Running)
+    }
+}
+
+/// A job as stored.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct StoredJob {
+    /// Its id, ordered by time.
+    pub id: Uuid,
+    /// The network it is about.
+    pub network: String,
+    /// How it stands.
+    pub state: JobState,
+    /// How often it was begun.
+    pub starts: u64,
+    /// When it was asked for.
+    pub created_at: Timestamp,
+    /// When it was last begun.
+    pub started_at: Option<Timestamp>,
+    /// When it ended.
+    pub ended_at: Option<Timestamp>,
+    /// What is to be done, JSON.
+    pub task: String,
+    /// What came of it, or why nothing did, JSON.
+    pub outcome: Option<String>,
+}
+
+/// Which jobs to list; newest first.
+#[derive(Debug, Clone, Default, PartialEq, Eq)]
+pub struct JobFilter {
+    /// Only of this network.
+    pub network: Option<String>,
+    /// Only older than this one.
+    pub before: Option<Uuid>,
+    /// At most this many.
+    pub limit: u32,
+}
+
+/// What came of calling a job off.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum CalledOff {
+    /// It was live and is cancelled now.
+    Cancelled,
+    /// It had ended; its record is gone now.
+    Removed,
+    /// There was none.
+    Missing,
+}
+
+#[derive(FromRow)]
+struct JobRow {
+    id: String,
+    network: String,
+    state: String,
+    starts: i64,
+    created_at: i64,
+    started_at: Option<i64>,
+    ended_at: Option<i64>,
+    task: String,
+    outcome: Option<String>,
+}
+
+impl Store {
+    /// Stores a waiting job of a network that has no other.
+    ///
+    /// # Errors
+    /// When there is no such network, it has a live job, `most_live` jobs are live, or the database fails.
+    pub async fn insert_job(&self, id: Uuid, network: &str, task: &str, most_live: u64) -> Result<(), WriteError> {
+        let mut transaction = self.begin().await?;
+        network_exists(&mut transaction, network).await?;
+        if let Some(job) = live_job(&mut transaction, network).await? {
+            return Err(Clash::JobLive { job }.into());
+        }
+        let live: i64 = sqlx::query_scalar("SELECT count(*) FROM jobs WHERE state IN ('waiting', 'running')")
+            .fetch_one(&mut *transaction)
+            .await?;
+        if unsigned("live", live)? >= most_live {
+            return Err(Clash::TooManyJobs.into());
+        }
+        sqlx::query(
+            "INSERT INTO jobs (id, kind, network, state, starts, created_at, task) \
+             VALUES ($1, 'link_list', $2, 'waiting', 0, $3, $4)",
+        )
+        .bind(id.to_string())
+        .bind(network)
+        .bind(Timestamp::now().as_microsecond())
+        .bind(task)
+        .execute(&mut *transaction)
+        .await?;
+        Ok(self.commit(transaction).await?)
+    }
+
+    /// Checks that a network is tracked and has no live job.
+    ///
+    /// # Errors
+    /// When it is not, or it has one, or the database fails.
+    pub async fn check_idle(&self, network: &str) -> Result<(), WriteError> {
+        self.file.check()?;
+        let mut connection = self.read.acquire().await.map_err(StoreError::from)?;
+        network_exists(&mut connection, network).await?;
+        match live_job(&mut connection, network).await? {
+            Some(job) => Err(Clash::JobLive { job }.into()),
+            None => Ok(()),
+        }
+    }
+
+    /// Notes that a live job begins; none when it was called off.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn start_job(&self, id: Uuid) -> Result<Option<StoredJob>, StoreError> {
+        let mut transaction = self.begin().await?;
+        let done = sqlx::query(
+            "UPDATE jobs SET state = 'running', starts = starts + 1, started_at = $2 \
+             WHERE id = $1 AND state IN ('waiting', 'running')",
+        )
+        .bind(id.to_string())
+        .bind(Timestamp::now().as_microsecond())
+        .execute(&mut *transaction)
+        .await?;
+        let job = if done.rows_affected() > 0 { find(&mut transaction, id).await? } else { None };
+        self.commit(transaction).await?;
+        Ok(job)
+    }
+
+    /// Notes that a live job failed; false when it was called off before.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn fail_job(&self, id: Uuid, outcome: &str) -> Result<bool, StoreError> {
+        let mut transaction = self.begin().await?;
+        let ended = end(&mut transaction, id, JobState::Failed, Some(outcome)).await?;
+        self.commit(transaction).await?;
+        Ok(ended)
+    }
+
+    /// Calls a live job off, or removes the record of one that has ended.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn call_off(&self, id: Uuid) -> Result<CalledOff, StoreError> {
+        let mut transaction = self.begin().await?;
+        let done = if end(&mut transaction, id, JobState::Cancelled, None).await? {
+            CalledOff::Cancelled
+        } else {
+            let removed = sqlx::query("DELETE FROM jobs WHERE id = $1").bind(id.to_string());
+            match removed.execute(&mut *transaction).await?.rows_affected() {
+                0 => CalledOff::Missing,
+                _ => CalledOff::Removed,
+            }
+        };
+        self.commit(transaction).await?;
+        Ok(done)
+    }
+
+    /// The job with this id, if there is one.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn find_job(&self, id: Uuid) -> Result<Option<StoredJob>, StoreError> {
+        self.file.check()?;
+        let mut connection = self.read.acquire().await?;
+        find(&mut connection, id).await
+    }
+
+    /// Jobs that pass the filter, newest first.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn list_jobs(&self, filter: &JobFilter) -> Result<Vec<StoredJob>, StoreError> {
+        self.file.check()?;
+        let mut query = QueryBuilder::<Sqlite>::new(
+            "SELECT id, network, state, starts, created_at, started_at, ended_at, task, outcome FROM jobs WHERE kind = \
+             'link_list'",
+        );
+        if let Some(network) = &filter.network {
+            query.push(" AND network = ").push_bind(network.as_str());
+        }
+        if let Some(before) = filter.before {
+            query.push(" AND id < ").push_bind(before.to_string());
+        }
+        query.push(" ORDER BY id DESC LIMIT ").push_bind(i64::from(filter.limit));
+        let rows: Vec<JobRow> = query.build_query_as().fetch_all(&self.read).await?;
+        rows.into_iter().map(StoredJob::try_from).collect()
+    }
+
+    /// Every job that has not ended, oldest first.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn live_jobs(&self) -> Result<Vec<Uuid>, StoreError> {
+        self.file.check()?;
+        let ids: Vec<String> =
+            sqlx::query_scalar("SELECT id FROM jobs WHERE state IN ('waiting', 'running') ORDER BY id")
+                .fetch_all(&self.read)
+                .await?;
+        ids.iter().map(|id| uuid(id)).collect()
+    }
+}
+
+/// Ends a live job; false when it has ended.
+pub(super) async fn end(
+    connection: &mut SqliteConnection,
+    id: Uuid,
+    state: JobState,
+    outcome: Option<&str>,
+) -> Result<bool, StoreError> {
+    let done = sqlx::query(
+        "UPDATE jobs SET state = $2, outcome = $3, ended_at = $4 WHERE id = $1 AND state IN ('waiting', 'running')",
+    )
+    .bind(id.to_string())
+    .bind(state.as_str())
+    .bind(outcome)
+    .bind(Timestamp::now().as_microsecond())
+    .execute(connection)
+    .await?;
+    Ok(done.rows_affected() > 0)
+}
+
+/// Calls a network's live job off, if it has one.
+pub(super) async fn call_off_of(connection: &mut SqliteConnection, network: &str) -> Result<Option<Uuid>, StoreError> {
+    let job = live_job(connection, network).await?;
+    if let Some(job) = job {
+        end(connection, job, JobState::Cancelled, None).await?;
+    }
+    Ok(job)
+}
+
+async fn live_job(connection: &mut SqliteConnection, network: &str) -> Result<Option<Uuid>, StoreError> {
+    let id: Option<String> =
+        sqlx::query_scalar("SELECT id FROM jobs WHERE network = $1 AND state IN ('waiting', 'running')")
+            .bind(network)
+            .fetch_optional(connection)
+            .await?;
+    id.as_deref().map(uuid).transpose()
+}
+
+async fn find(connection: &mut SqliteConnection, id: Uuid) -> Result<Option<StoredJob>, StoreError> {
+    let row: Option<JobRow> = sqlx::query_as(
+        "SELECT id, network, state, starts, created_at, started_at, ended_at, task, outcome FROM jobs WHERE id = $1",
+    )
+    .bind(id.to_string())
+    .fetch_optional(connection)
+    .await?;
+    row.map(StoredJob::try_from).transpose()
+}
+
+impl TryFrom<JobRow> for StoredJob {
+    type Error = StoreError;
+
+    fn try_from(row: JobRow) -> Result<Self, StoreError> {
+        let state = JobState::ALL.into_iter().find(|state| state.as_str() == row.state);
+        Ok(Self {
+            id: uuid(&row.id)?,
+            state: state.ok_or_else(|| corrupt("state", &row.state))?,
+            network: row.network,
+            starts: unsigned("starts", row.starts)?,
+            created_at: time(row.created_at)?,
+            started_at: row.started_at.map(time).transpose()?,
+            ended_at: row.ended_at.map(time).transpose()?,
+            task: row.task,
+            outcome: row.outcome,
+        })
+    }
+}
