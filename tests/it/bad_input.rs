@@ -87,7 +87,7 @@ fn cases() -> Vec<Case> {
         ("/model", json!("magic"), "/model", "auto"),
         ("/model", json!(["auto"]), "/model", "string"),
         ("/fixed", json!({"preferential_share": 1.01}), "/fixed/preferential_share", "between 0 and 1"),
-        ("/fixed", json!({}), "/fixed", "missing"),
+        ("/fixed", json!({}), "/fixed", "nothing is given"),
         ("/fixed", json!({"share": 0.5, "preferential_share": 0.5}), "/fixed/share", "no field"),
         ("/seed", json!(-1), "/seed", "seed starts at 0"),
         ("/seed", json!(9007199254740992u64), "/seed", "largest allowed"),
