@@ -13,7 +13,9 @@ mod numbers;
 mod runs;
 
 use std::future::Future;
+use std::sync::Arc;
 
+use tokio::sync::Semaphore;
 use tracing::Instrument;
 
 use crate::config::{Config, DatabaseConfig};
@@ -56,6 +58,8 @@ pub struct Service {
     cpu: CpuPool,
     caps: Caps,
     jobs: Board,
+    /// Stored evidence may be large: no more runs hold some at once than can be computed at once.
+    evidence_places: Arc<Semaphore>,
 }
 
 impl Service {
@@ -69,7 +73,9 @@ impl Service {
             store.migrate().await?;
         }
         let caps = Caps { dates: MAX_SNAPSHOTS as u64, rows: config.limits.network_rows as u64 };
-        Ok(Self { store, cpu: CpuPool::new(&config.compute), caps, jobs: Board::new(config.jobs) })
+        let cpu = CpuPool::new(&config.compute);
+        let evidence_places = Arc::new(Semaphore::new(cpu.workers()));
+        Ok(Self { store, cpu, caps, jobs: Board::new(config.jobs), evidence_places })
     }
 
     /// Brings the database's tables up to date and closes it.

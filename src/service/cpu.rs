@@ -17,6 +17,7 @@ use crate::config::ComputeConfig;
 /// Workers for computations.
 #[derive(Debug, Clone)]
 pub struct CpuPool {
+    size: usize,
     workers: Arc<Semaphore>,
     /// Workers and queue together: who finds no place here is turned away at once.
     places: Arc<Semaphore>,
@@ -54,8 +55,10 @@ impl CpuPool {
     pub fn new(config: &ComputeConfig) -> Self {
         let cores = available_parallelism().map_or(1, usize::from);
         let workers = if config.workers == 0 { cores } else { config.workers };
+        let size = workers.min(Semaphore::MAX_PERMITS);
         Self {
-            workers: Arc::new(Semaphore::new(workers.min(Semaphore::MAX_PERMITS))),
+            size,
+            workers: Arc::new(Semaphore::new(size)),
             places: Arc::new(Semaphore::new(workers.saturating_add(config.queue).min(Semaphore::MAX_PERMITS))),
             budget: config.budget(),
             stopping: Arc::new(AtomicBool::new(false)),
@@ -103,6 +106,11 @@ impl CpuPool {
             Ok(Err(error)) => Err(ServiceError::Broken(format!("a computation stopped short: {error}"))),
             Err(_) => Err(too_slow()),
         }
+    }
+
+    /// Computations at the same time.
+    pub fn workers(&self) -> usize {
+        self.size
     }
 
     /// The time one request may wait and compute.

@@ -4,6 +4,8 @@ mod assemble;
 pub(super) mod encode;
 
 use jiff::Timestamp;
+use tokio::sync::OwnedSemaphorePermit;
+use tokio::time::timeout;
 
 use super::networks::cut;
 use super::{NetworkName, Service, ServiceError, Thing, in_own_task};
@@ -186,13 +188,23 @@ impl Service {
         .await
     }
 
-    /// All that is stored of a network, as evidence for a run.
+    /// All that is stored of a network, as evidence for a run, and the place it takes in memory: to be kept until the
+    /// run is made.
     ///
     /// # Errors
-    /// When there is no such network, nothing is stored that a run could start from, or the database fails.
-    pub async fn evidence(&self, name: &NetworkName) -> Result<Evidence, ServiceError> {
+    /// When there is no such network, nothing is stored that a run could start from, no place is free within the time
+    /// budget, or the database fails.
+    pub async fn evidence(&self, name: &NetworkName) -> Result<(Evidence, OwnedSemaphorePermit), ServiceError> {
+        self.network(name).await?;
+        let budget = self.cpu.budget();
+        let place = match timeout(budget, self.evidence_places.clone().acquire_owned()).await {
+            Ok(Ok(place)) => place,
+            Ok(Err(_)) => return Err(ServiceError::Busy),
+            Err(_) => return Err(ServiceError::TooSlow { budget }),
+        };
         let stored = self.store.find_evidence(name.as_str()).await?.ok_or(ServiceError::NotFound(Thing::Network))?;
-        off_runtime(move || assemble::evidence(stored)).await?
+        let evidence = off_runtime(move || assemble::evidence(stored)).await??;
+        Ok((evidence, place))
     }
 
     /// What was found, or whether the network or the thing under it is missing.

@@ -398,6 +398,23 @@ async fn a_job_that_stops_the_process_each_time_is_given_up() {
     let job = ended(&service, &format!("/v1/jobs/{id}")).await;
     assert_eq!((&job["state"], &job["problem"]["code"]), (&json!("failed"), &json!("interrupted")));
     assert!(job["problem"]["detail"].as_str().unwrap().contains("stopped 3 times"), "{job}");
+    assert_eq!(spooled(&spool), 0);
+}
+
+/// A list that somebody removed cannot be counted, and the network takes another.
+#[tokio::test]
+async fn a_job_without_its_list_fails() {
+    let folder = tempfile::tempdir().unwrap();
+    let url = format!("sqlite://{}", folder.path().join("jobs.db").display());
+    let service = tracking_with(|config| config.database.url = url.clone()).await;
+    let at_work = long_job(&service, "i").await;
+    let waiting = send(&service, LINKS, link_list(10), &[("prefer", "respond-async")]).await.expect(202);
+    let (location, id) = (waiting.header("location"), waiting.json()["id"].as_str().unwrap().to_owned());
+    std::fs::remove_file(folder.path().join(format!("jobs.db-jobs/{id}.links"))).unwrap();
+    service.send(Method::DELETE, &at_work).await.expect(204);
+    let job = ended(&service, location).await;
+    assert_eq!((&job["state"], &job["problem"]["code"]), (&json!("failed"), &json!("internal")));
+    send(&service, LINKS, link_list(10), &[]).await.expect(200);
 }
 
 /// A stop in good order leaves the job at work to the next process.

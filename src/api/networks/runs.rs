@@ -57,7 +57,7 @@ async fn create_network_forecast(
 ) -> Result<Response, ApiError> {
     let (name, limits) = (network_name(&name)?, state.limits);
     let claim = key.claim_for(&name, &body);
-    let evidence = state.service.evidence(&name).await?;
+    let (evidence, _place) = state.service.evidence(&name).await?;
     let inputs = body.read(move |raw, faults| read_network_forecast(raw, evidence, &limits, faults)).await?;
     let run = state.service.create(inputs, Some(name), claim).await?;
     runs::created(forecasts::PATH, run, format, forecasts::csv)
@@ -103,7 +103,7 @@ async fn create_network_fit(
 ) -> Result<Response, ApiError> {
     let name = network_name(&name)?;
     let claim = key.claim_for(&name, &body);
-    let evidence = state.service.evidence(&name).await?;
+    let (evidence, _place) = state.service.evidence(&name).await?;
     let inputs = body.read(move |raw, faults| read_network_fit(raw, evidence, faults)).await?;
     let run = state.service.create(inputs, Some(name), claim).await?;
     runs::created(fits::PATH, run, format, fits::csv)
