@@ -24,7 +24,7 @@ struct Entry {
 /// The identifiers of a list.
 ///
 /// A look-up waits for memory twice: for the table and for the bytes. [`Self::candidate`] and [`Self::confirm`] are its
-/// two halves, so that many can wait at the same time. With the identifiers of 10⁶ nodes that takes a third off the time
+/// two halves, so that many can wait at the same time. With the identifiers of 10⁶ nodes that halves the time
 /// of a whole list.
 #[derive(Debug, Default)]
 pub struct Names {
