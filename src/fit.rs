@@ -238,8 +238,10 @@ pub struct PeriodRates {
     pub to: Timestamp,
     /// Share of the nodes present that departed, those under a new name included.
     pub departure_share: f64,
-    /// Uniform gains a node.
+    /// Uniform gains a node, outliers left out.
     pub uniform_gain: f64,
+    /// Mean gain of the nodes that had no link, as counted; none when every node had one.
+    pub first_gain: Option<f64>,
     /// Preferential gains a link.
     pub gain_per_link: f64,
     /// Losses a link.

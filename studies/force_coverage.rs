@@ -16,7 +16,8 @@ use tailcast::census::Census;
 use tailcast::fit::{Fit, FitRequest, Force, Model, ModelChoice, Rung, fit};
 use tailcast::growth::Simulation;
 use tailcast::model::{
-    ArrivalPlan, AttachmentMix, DegreeCounts, DegreeKind, EntryDegrees, Evidence, GrowthParameters, Snapshot, Transitions,
+    ArrivalPlan, AttachmentMix, DegreeCounts, DegreeKind, EntryDegrees, Evidence, GrowthParameters, Snapshot,
+    Transitions,
 };
 use tailcast::numerics::sum_tree::SumTree;
 
@@ -62,9 +63,15 @@ const SETTINGS: [Setting; 15] = [
 fn main() {
     let mut arguments = std::env::args().skip(1).map(|a| a.parse::<u64>().expect("a whole number"));
     let (runs, nodes) = (arguments.next().unwrap_or(200), arguments.next().unwrap_or(30_000));
-    println!("{runs} runs of {nodes} nodes a setting; nominal coverage 90 %, its binomial error {:.1}\n", 30.0 / (runs as f64).sqrt());
-    println!("{:<30} {:<18} {:>9} {:>10} {:>10} {:>10} {:>9}", "evidence", "force", "truth", "mean", "sd", "mean se", "covered");
-    for setting in SETTINGS.iter().filter(|s| std::env::var("ONLY").map_or(true, |only| s.name.contains(&only))) {
+    println!(
+        "{runs} runs of {nodes} nodes a setting; nominal coverage 90 %, its binomial error {:.1}\n",
+        30.0 / (runs as f64).sqrt()
+    );
+    println!(
+        "{:<30} {:<18} {:>9} {:>10} {:>10} {:>10} {:>9}",
+        "evidence", "force", "truth", "mean", "sd", "mean se", "covered"
+    );
+    for setting in &SETTINGS {
         let fits = all(setting, runs, nodes);
         type Read = fn(&Fit) -> Force;
         let share: Read = |fit| Force { estimate: fit.preferential_share, excursion: fit.share_excursion };
@@ -77,12 +84,18 @@ fn main() {
         }
         match setting.model {
             Model::Dormancy => report(setting, "dormant share", setting.own, &fits, |fit| fit.forces.dormant_share),
-            Model::GrowthVariance => report(setting, "growth variance", setting.own, &fits, |fit| fit.forces.growth_variance),
+            Model::GrowthVariance => {
+                report(setting, "growth variance", setting.own, &fits, |fit| fit.forces.growth_variance)
+            }
             Model::Power => report(setting, "kernel exponent", setting.own, &fits, |fit| fit.forces.kernel_exponent),
             _ if setting.events => {
                 report(setting, "kernel exponent", 1.0, &fits, |fit| fit.attachment.as_ref().unwrap().kernel_exponent);
                 let refused = fits.iter().filter(|fit| fit.attachment.as_ref().unwrap().linear_p_value < 0.1).count();
-                println!("{:<30} γ = 1 refused at the 10 % level in {:.1} % of runs", setting.name, 100.0 * refused as f64 / fits.len() as f64);
+                println!(
+                    "{:<30} γ = 1 refused at the 10 % level in {:.1} % of runs",
+                    setting.name,
+                    100.0 * refused as f64 / fits.len() as f64
+                );
             }
             _ => {}
         }
@@ -138,9 +151,8 @@ fn of_moves(setting: &Setting, nodes: u64, seed: u64) -> Fit {
     let start = DegreeCounts::from_pairs(&[(3, 200)]).unwrap();
     let mut network = Simulation::new(&start, forces(0.8, 1.0), seed).unwrap();
     network.arrive_many(nodes - 200).unwrap();
-    let mut truth = forces(setting.share, 0.2 * nodes as f64 / DAYS)
-        .with_losses(setting.departures, setting.losses)
-        .unwrap();
+    let mut truth =
+        forces(setting.share, 0.2 * nodes as f64 / DAYS).with_losses(setting.departures, setting.losses).unwrap();
     truth = match setting.model {
         Model::Dormancy => truth.with_dormant_share(setting.own).unwrap(),
         Model::GrowthVariance => truth.with_growth_variance(setting.own).unwrap(),
@@ -171,7 +183,8 @@ fn of_events(setting: &Setting, nodes: u64, seed: u64) -> Fit {
             // A second of its own for each link: at the same one a link to the same node again would be a repeat.
             let time = start + jiff::SignedDuration::from_secs(3 * i64::from(source) + link);
             let preferential = attraction.total() > 0.0 && rng.random::<f64>() < setting.share;
-            let target = if preferential { attraction.pick(rng.random()).unwrap() } else { rng.random_range(0..present) };
+            let target =
+                if preferential { attraction.pick(rng.random()).unwrap() } else { rng.random_range(0..present) };
             census.record(time, number(source as usize), number(target)).unwrap();
             degrees[target] += 1;
             attraction.set(target, (degrees[target] as f64).powf(setting.own));

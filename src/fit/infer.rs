@@ -37,7 +37,13 @@ pub fn fit(evidence: &Evidence, request: &FitRequest, cancelled: &dyn Fn() -> bo
         _ => entry_degrees(evidence, forces.has_losses())?,
     };
     let several = evidence.snapshots().len() > 1;
-    let periods = match periods(evidence, &entry, &forces, request.links_per_node_day, moves.as_ref().map(|moves| &moves.summary)) {
+    let periods = match periods(
+        evidence,
+        &entry,
+        &forces,
+        request.links_per_node_day,
+        moves.as_ref().map(|moves| &moves.summary),
+    ) {
         Ok((periods, skipped)) => {
             warnings.extend(skipped);
             periods

@@ -111,7 +111,8 @@ pub(super) fn fit_transitions(
             fits.push(period.panel.fit(model, near.get(i)));
         }
         if let Some(stuck) = fits.iter().position(|fit| !fit.converged) {
-            let detail = format!("the {} candidate on the transitions from {}", model.name(), periods[stuck].table.from());
+            let detail =
+                format!("the {} candidate on the transitions from {}", model.name(), periods[stuck].table.from());
             if models == [model] {
                 return Err(FitError::NotConverged { detail });
             }
@@ -163,12 +164,16 @@ impl<'a> Read<'a> {
     fn rates(&self, fit: &PanelFit) -> PeriodRates {
         let (uniform, preferential) = self.panel.landed(fit);
         let landed = uniform + preferential;
+        let without_links = self.table.stays().filter(|&(before, _, _)| before == 0);
+        let (unlinked, gained) = without_links
+            .fold((0_u64, 0_u128), |(n, g), (_, after, nodes)| (n + nodes, g + u128::from(after) * u128::from(nodes)));
         let (departed, present) = (self.table.departed(), self.table.departed() + self.table.stayed());
         PeriodRates {
             from: self.table.from(),
             to: self.table.to(),
             departure_share: departed as f64 / present as f64,
             uniform_gain: fit.uniform,
+            first_gain: (unlinked > 0).then(|| gained as f64 / unlinked as f64),
             gain_per_link: fit.preferential,
             loss_per_link: fit.loss,
             landed_per_day: landed / self.table.days(),

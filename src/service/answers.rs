@@ -324,8 +324,10 @@ pub struct PeriodRatesAnswer {
     pub to: String,
     /// Share of the nodes present that departed.
     pub departure_share: Real,
-    /// Links gained a node over the period, whatever its degree.
+    /// Links gained a node over the period, whatever its degree, outliers left out.
     pub uniform_gain: Real,
+    /// Mean gain of the nodes that had no link, as counted; null when every node had one.
+    pub first_gain: Option<Real>,
     /// Links gained over the period a link held.
     pub gain_per_link: Real,
     /// Links lost over the period a link held.

@@ -244,6 +244,7 @@ impl From<&TransitionSummary> for TransitionsAnswer {
             to: date_text(rates.to),
             departure_share: Real(rates.departure_share),
             uniform_gain: Real(rates.uniform_gain),
+            first_gain: rates.first_gain.map(Real),
             gain_per_link: Real(rates.gain_per_link),
             loss_per_link: Real(rates.loss_per_link),
             landed_per_day: Real(rates.landed_per_day),

@@ -13,3 +13,4 @@ mod reference;
 mod simulation;
 mod stationary;
 mod tails;
+mod transitions;

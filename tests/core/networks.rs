@@ -3,7 +3,8 @@
 use std::collections::BTreeMap;
 
 use tailcast::model::{
-    ArrivalPlan, AttachmentMix, DegreeCounts, DegreeKind, EntryDegrees, Evidence, GrowthParameters, Snapshot,
+    ArrivalPlan, AttachmentMix, DegreeCounts, DegreeKind, EntryDegrees, Evidence, GrowthParameters, Move, Snapshot,
+    Transitions,
 };
 
 use crate::reference::{number, rows};
@@ -45,6 +46,21 @@ pub fn snapshots(network: &str) -> Vec<Snapshot> {
         Snapshot { as_of: as_of.parse().unwrap(), counts: counts(&pairs) }
     };
     by_date.into_iter().map(snapshot).collect()
+}
+
+/// Transitions of a real network in `examples/data`, oldest first.
+pub fn transitions(network: &str) -> Vec<Transitions> {
+    let mut periods: BTreeMap<[String; 2], Vec<Move>> = BTreeMap::new();
+    for row in rows(&format!("../../examples/data/{network}/transitions.csv")) {
+        let degree = |text: &String| (!text.is_empty()).then(|| number(text) as u64);
+        let step = Move { before: degree(&row[2]), after: degree(&row[3]), nodes: number(&row[4]) as u64 };
+        periods.entry([row[0].clone(), row[1].clone()]).or_default().push(step);
+    }
+    let date = |text: &str| {
+        let text = if text.contains('T') { text.to_owned() } else { format!("{text}T00:00:00Z") };
+        text.parse().unwrap()
+    };
+    periods.iter().map(|([from, to], moves)| Transitions::new(date(from), date(to), moves).unwrap()).collect()
 }
 
 pub fn evidence(kind: DegreeKind, snapshots: &[Snapshot]) -> Evidence {

@@ -59,6 +59,36 @@ fn the_simulator_grows_what_igraph_grows() {
     }
 }
 
+/// Ten graphs an exponent by igraph, total degree, two links each, no uniform share; twenty by the simulator.
+#[test]
+fn the_simulator_grows_what_igraph_grows_by_a_power_of_degree() {
+    let mut graphs: BTreeMap<String, BTreeMap<String, Vec<(u64, u64)>>> = BTreeMap::new();
+    for row in rows("power_graphs.csv") {
+        let graph = graphs.entry(row[2].clone()).or_default().entry(row[4].clone()).or_default();
+        graph.push((number(&row[5]) as u64, number(&row[6]) as u64));
+    }
+    assert_eq!(graphs.len(), 2);
+    for (exponent, graphs) in graphs {
+        let forces = total_forces(1.0, 2).with_kernel_exponent(number(&exponent)).unwrap();
+        let theirs: Vec<_> = graphs.values().map(|pairs| binned(pairs.iter().copied())).collect();
+        let ours: Vec<_> = (0..20)
+            .map(|seed| {
+                let mut network = Simulation::new(&counts(&[(0, 1)]), forces.clone(), seed).unwrap();
+                network.arrive_many(19_999).unwrap();
+                binned(network.degree_counts().unwrap().iter())
+            })
+            .collect();
+        for bin in 2..EDGES.len() {
+            let column = |samples: &[[f64; EDGES.len()]]| samples.iter().map(|s| s[bin]).collect::<Vec<_>>();
+            let ((a, var_a), (b, var_b)) = (mean_and_variance(&column(&theirs)), mean_and_variance(&column(&ours)));
+            let pooled = ((9.0 * var_a + 19.0 * var_b) / 28.0).max(0.1);
+            let t = (a - b) / (pooled * (1.0 / 10.0 + 1.0 / 20.0)).sqrt();
+            // 28 degrees of freedom, 16 comparisons: |t| > 4.2 happens once in 250 such tests.
+            assert!(t.abs() < 4.2, "γ {exponent} from {} links: {a} and {b}, t = {t}", EDGES[bin]);
+        }
+    }
+}
+
 #[test]
 fn expected_tails_are_what_the_simulator_shows() {
     let start = young_network();
