@@ -141,8 +141,12 @@ fn whole(cell: &[u8]) -> Option<u64> {
 
 #[cfg(test)]
 mod tests {
+    use proptest::prelude::*;
+
     use super::*;
     use crate::api::decode::{Fault, Place};
+    use crate::model::MAX_DEGREE;
+    use crate::report;
 
     fn lines(faults: Faults) -> Vec<(u64, String)> {
         let line = |fault: Fault| match fault.place {
@@ -203,5 +207,34 @@ mod tests {
         assert_eq!(moves_csv(with_returns.as_bytes(), 9, &mut faults).unwrap(), (moves, at));
         assert!(moves_csv(b"degree_before,degree_after,nodes\n1,2,\n", 9, &mut faults).is_none());
         assert_eq!(lines(faults), [(2, "nodes is \"\", not a whole number from 0 to 2^64 - 1".to_owned())]);
+    }
+
+    proptest! {
+        #![proptest_config(ProptestConfig { cases: 500, failure_persistence: None, ..ProptestConfig::default() })]
+
+        /// Whatever comes ends in rows or in faults.
+        #[test]
+        fn any_bytes(bytes in prop::collection::vec(prop::sample::select(b"09,\n\r\" -.e\x00\xff".to_vec()), 0..60)) {
+            for head in ["", "degree,nodes\n", "degree_before,degree_after,nodes\n"] {
+                let text = [head.as_bytes(), &bytes].concat();
+                let mut faults = Faults::default();
+                let counted = degree_counts_csv(&text, 5, &mut faults).is_some();
+                prop_assert!(counted == faults.is_empty());
+                let mut faults = Faults::default();
+                let read = moves_csv(&text, 5, &mut faults).is_some();
+                prop_assert!(read == faults.is_empty());
+                let lines = text.iter().filter(|&&byte| byte == b'\n').count() as u64 + 1;
+                prop_assert!(self::lines(faults).iter().all(|&(line, _)| (1..=lines).contains(&line)));
+            }
+        }
+
+        /// What is answered as CSV is taken as CSV.
+        #[test]
+        fn answers_are_taken_back(pairs in prop::collection::btree_map(0..=MAX_DEGREE, 1..u64::MAX >> 8, 1..20)) {
+            let pairs: Vec<(u64, u64)> = pairs.into_iter().collect();
+            let mut faults = Faults::default();
+            let counts = degree_counts_csv(report::degree_counts_csv(&pairs).as_bytes(), 20, &mut faults);
+            prop_assert_eq!(counts, DegreeCounts::from_pairs(&pairs).ok());
+        }
     }
 }
