@@ -63,7 +63,8 @@ fn debian_loses_packages_and_renames_hubs() {
     let tables = transitions("debian");
     let newest = Snapshot { as_of: tables[0].to(), counts: tables[0].counts_after().unwrap() };
     let evidence = Evidence::new(DegreeKind::Received, vec![newest], None).unwrap();
-    let fit = fit(&evidence.with_transitions(vec![tables[0].clone()]).unwrap(), &FitRequest::default());
+    let request = FitRequest { rung: Some(Rung::Transitions), ..FitRequest::default() };
+    let fit = fit(&evidence.with_transitions(vec![tables[0].clone()]).unwrap(), &request);
     let summary = fit.transitions.as_ref().unwrap();
     let rates = summary.periods[0];
     assert!((rates.departure_share - 0.104).abs() < 5e-4, "{rates:?}");

@@ -108,7 +108,7 @@ impl PeriodLaw {
             return self.normal(before as f64, after as f64);
         }
         let (k, j) = (before as f64, after as f64);
-        let (ln_fresh, odds) = (self.fresh.ln(), self.spread * self.fresh); // odds = 1 − q
+        let (ln_fresh, odds) = (-self.spread.ln_1p(), self.spread * self.fresh); // odds = 1 − q
         let most = before.min(after) as f64;
         // Negative binomial of the gain when `most` links are kept.
         let gained = j - most;
