@@ -19,7 +19,9 @@ pub use entry::{EntryDegrees, EntryFault};
 pub use estimate::{Estimate, Interval, Warning};
 pub use evidence::{Evidence, EvidenceFault, MAX_SNAPSHOTS, Snapshot};
 pub use link_events::{AttachmentCell, AttachmentWindow, LinkEvents, LinkEventsFault, RatioClass};
-pub use parameters::{AttachmentMix, GrowthParameters, ParameterFault};
+pub use parameters::{
+    AttachmentMix, GrowthParameters, MAX_DORMANT_SHARE, MAX_GROWTH_VARIANCE, MAX_KERNEL_EXPONENT, ParameterFault,
+};
 pub use plan::{ForecastPlan, Levels, PlanFault, Thresholds};
 pub use transitions::{Move, Transitions, TransitionsFault};
 

@@ -12,7 +12,10 @@ use statrs::distribution::{Beta, ContinuousCDF};
 use super::profile::ESTIMATE_LEVEL;
 use super::profile::weigh;
 use super::{Candidate, FitError, Force, Model, OutlierClass, Outliers, PeriodRates, TransitionSummary};
-use crate::model::{DegreeKind, EntryDegrees, Estimate, Evidence, Interval, Transitions, Warning};
+use crate::model::{
+    DegreeKind, EntryDegrees, Estimate, Evidence, Interval, MAX_DORMANT_SHARE, MAX_GROWTH_VARIANCE,
+    MAX_KERNEL_EXPONENT, Transitions, Warning,
+};
 
 /// Periods read at most, the newest ones.
 const MOST_PERIODS: usize = 6;
@@ -270,9 +273,12 @@ fn candidate(model: Model, periods: &[Read], fits: &[PanelFit]) -> CandidateFit 
         model,
         preferential_share,
         own: match model {
-            Model::Dormancy => Some(own(|fit| (fit.dormant_share / (1.0 - fit.dormant_share)).ln(), logistic)),
-            Model::GrowthVariance => Some(own(|fit| fit.growth_variance.ln(), f64::exp)),
-            Model::Power => Some(own(|fit| fit.exponent, std::convert::identity)),
+            Model::Dormancy => Some(own(
+                |fit| (fit.dormant_share / (1.0 - fit.dormant_share)).ln(),
+                |x| logistic(x).min(MAX_DORMANT_SHARE),
+            )),
+            Model::GrowthVariance => Some(own(|fit| fit.growth_variance.ln(), |x| x.exp().min(MAX_GROWTH_VARIANCE))),
+            Model::Power => Some(own(|fit| fit.exponent, |x| x.clamp(0.0, MAX_KERNEL_EXPONENT))),
             _ => None,
         },
         log_likelihood: fits.iter().map(|fit| fit.log_likelihood).sum(),

@@ -148,7 +148,7 @@ mod tests {
     /// Moments of the gamma distribution with mean one: E η² = 1 + σ², E η³ = (1 + σ²)(1 + 2σ²).
     #[test]
     fn factors_have_the_moments_of_the_gamma_law() {
-        for variance in [1e-6, 0.01, 0.3, 1.0, 4.0, 20.0] {
+        for variance in [1e-6, 0.01, 0.3, 1.0, 6.0] {
             let factors = growth_factors(variance, FACTORS);
             let moment = |n: i32| -> f64 { factors.iter().map(|f| f.share * f.factor.powi(n)).sum() };
             for (n, exact) in [(0, 1.0), (1, 1.0), (2, 1.0 + variance), (3, (1.0 + variance) * (1.0 + 2.0 * variance))]

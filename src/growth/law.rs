@@ -13,7 +13,7 @@ use statrs::function::beta::checked_beta_reg;
 use super::mean_field::{Course, GrowthError};
 use crate::numerics::inversion::upper_tail;
 use crate::numerics::quadrature::{PANEL, PANEL_NODES};
-use crate::numerics::tolerances::Accuracy;
+use crate::numerics::tolerances::{Accuracy, MESH_LOG_CHANGE};
 
 /// Expected gains below this are none.
 const NEVER: f64 = 1e-280;
@@ -72,7 +72,7 @@ impl NodeLaw {
     /// then on only loses links.
     pub(crate) fn of_group(course: &Course, factor: f64, from: f64, until: f64, to: f64) -> Self {
         let loss = course.parameters().end_loss_hazard();
-        let edges = if until > from { split(&course.edges(from, until), factor) } else { Vec::new() };
+        let edges = if until > from { split(course, &course.edges(from, until), factor) } else { Vec::new() };
         let dormant_expansion = (-loss * (to - until)).exp();
         let mut law = Self {
             expansion: dormant_expansion,
@@ -199,13 +199,17 @@ impl NodeLaw {
     }
 }
 
-/// The mesh is made for nodes of growth factor one: faster ones need panels that are shorter in proportion, or the
+/// The mesh is made for nodes of growth factor one: where a faster one gains much, panels must be shorter, or the
 /// interpolation in C breaks down.
-fn split(edges: &[f64], factor: f64) -> Vec<f64> {
-    let pieces = factor.ceil().max(1.0);
+fn split(course: &Course, edges: &[f64], factor: f64) -> Vec<f64> {
+    /// Most pieces of a panel; gains beyond what they resolve are beyond any network's.
+    const MOST_PIECES: f64 = 64.0;
     let mut finer = edges.first().copied().into_iter().collect::<Vec<_>>();
     for pair in edges.windows(2) {
-        finer.extend((1..pieces as u32).map(|i| pair[0] + (pair[1] - pair[0]) * f64::from(i) / pieces));
+        let days = pair[1] - pair[0];
+        let gain = if factor > 1.0 { course.hazards(pair[0] + 0.5 * days, factor).preferential * days } else { 0.0 };
+        let pieces = (gain / MESH_LOG_CHANGE).ceil().clamp(1.0, MOST_PIECES);
+        finer.extend((1..pieces as u32).map(|i| pair[0] + days * f64::from(i) / pieces));
         finer.push(pair[1]);
     }
     finer

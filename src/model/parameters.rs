@@ -7,12 +7,12 @@ use super::{ArrivalPlan, DegreeKind, EntryDegrees};
 /// The largest rate accepted for links per arrival, links per node and day, departures and losses.
 const MAX_RATE: f64 = 1e9;
 /// The largest share of dormant nodes accepted: with fewer than one node in a hundred active there is no network to speak of.
-const MAX_DORMANT_SHARE: f64 = 0.99;
-/// The largest variance of growth factors accepted: at 20, half of all nodes grow a billionth as fast as the mean or slower.
-const MAX_GROWTH_VARIANCE: f64 = 20.0;
+pub const MAX_DORMANT_SHARE: f64 = 0.99;
+/// The largest variance of growth factors accepted: at 6, half of all nodes grow at a hundredth of the mean or slower.
+pub const MAX_GROWTH_VARIANCE: f64 = 6.0;
 /// The largest kernel exponent accepted; from 2 on, nearly every link ends at one node within a few arrivals (Krapivsky,
 /// Redner & Leyvraz 2000).
-const MAX_KERNEL_EXPONENT: f64 = 2.0;
+pub const MAX_KERNEL_EXPONENT: f64 = 2.0;
 
 /// The attachment mix: the share p of landing link ends that pick their node in proportion to its degree; the rest
 /// pick uniformly.
@@ -147,7 +147,7 @@ impl GrowthParameters {
     /// Sets σ², the variance of the nodes' growth factors.
     ///
     /// # Errors
-    /// When the variance is not between 0 and 20.
+    /// When the variance is not between 0 and 6.
     pub fn with_growth_variance(mut self, variance: f64) -> Result<Self, ParameterFault> {
         self.rates.growth_variance = checked("growth_variance", variance, MAX_GROWTH_VARIANCE)?;
         Ok(self)

@@ -52,6 +52,12 @@ proptest! {
         links in prop::option::of(rate()),
         per_node in prop_oneof![3 => Just(0.0), 1 => Just(1e-4), 1 => rate()],
         losses in prop_oneof![3 => Just((0.0, 0.0)), 1 => (0.0..0.01f64, 0.0..0.01f64), 1 => (rate(), rate())],
+        own in prop_oneof![
+            4 => Just(Fixed::default()),
+            1 => (0.0..=2.0f64).prop_map(|x| Fixed { kernel_exponent: Some(x), ..Fixed::default() }),
+            1 => (0.0..=0.99f64).prop_map(|x| Fixed { dormant_share: Some(x), ..Fixed::default() }),
+            1 => (0.0..=6.0f64).prop_map(|x| Fixed { growth_variance: Some(x), ..Fixed::default() }),
+        ],
         threshold in 1..=MAX_DEGREE,
         days in prop_oneof![3 => 1i64..2_000, 1 => Just(70_000i64)],
     ) {
@@ -68,7 +74,7 @@ proptest! {
         let request = OriginRequest {
             evidence: Evidence::new(kind, snapshots, None).unwrap(),
             fit: FitRequest {
-                fixed: Fixed { mix: fixed.and_then(AttachmentMix::new), ..Fixed::default() },
+                fixed: Fixed { mix: fixed.and_then(AttachmentMix::new), ..own },
                 links_per_arrival: links,
                 links_per_node_day: per_node,
                 departures_per_node_day: Some(losses.0),

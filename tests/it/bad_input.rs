@@ -90,7 +90,7 @@ fn cases() -> Vec<Case> {
         ("/fixed", json!({}), "/fixed", "nothing is given"),
         ("/fixed", json!({"kernel_exponent": 2.5}), "/fixed/kernel_exponent", "between 0 and 2"),
         ("/fixed", json!({"dormant_share": 1.0}), "/fixed/dormant_share", "between 0 and 0.99"),
-        ("/fixed", json!({"growth_variance": -1.0}), "/fixed/growth_variance", "between 0 and 20"),
+        ("/fixed", json!({"growth_variance": -1.0}), "/fixed/growth_variance", "between 0 and 6"),
         ("/fixed", json!({"growth_variance": 1.0, "dormant_share": 0.1}), "/fixed", "exclude each other"),
         ("/evidence", json!("hearsay"), "/evidence", "one_snapshot"),
         ("/fixed", json!({"share": 0.5, "preferential_share": 0.5}), "/fixed/share", "no field"),

@@ -377,7 +377,7 @@ pub struct FixedBody {
     pub dormant_share: Option<f64>,
     /// Variance of the nodes' growth factors, whose mean is 1.
     #[serde(skip_serializing_if = "Option::is_none")]
-    #[schema(nullable = false, minimum = 0, maximum = 20)]
+    #[schema(nullable = false, minimum = 0, maximum = 6)]
     pub growth_variance: Option<f64>,
 }
 

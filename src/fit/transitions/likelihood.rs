@@ -6,7 +6,7 @@ use super::super::Model;
 use super::birth_death::{BirthDeath, LARGEST_STATE};
 use super::node_pmf::PeriodLaw;
 use crate::growth::{GrowthFactor, growth_factors};
-use crate::model::DegreeCounts;
+use crate::model::{DegreeCounts, MAX_GROWTH_VARIANCE};
 use crate::numerics::quadrature::PANEL;
 use crate::numerics::scoring::{ScoringMaximum, maximise};
 
@@ -211,7 +211,7 @@ impl Panel {
             (start[i], bounds[i]) = match layout.model {
                 Model::Power => (1.0, (0.0, 2.0)),
                 Model::Dormancy => (-1.0, (-12.0, 4.5)),
-                _ => (-1.0, (-12.0, 3.0)),
+                _ => (-1.0, (-12.0, MAX_GROWTH_VARIANCE.ln())),
             };
         }
         (start, bounds)
