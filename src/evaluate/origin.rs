@@ -18,8 +18,8 @@ pub const CAUTIONS: [&str; 5] = [
      change breaks it.",
     "Intervals cover chance, the uncertainty of the estimates and a stated allowance for model error; rates that are given \
      are taken as exact, and events without precedent in the data are not covered.",
-    "Unless departures or link losses are given, nodes stay and links last; where they do not, the largest hubs come out too \
-     many and too certain.",
+    "Unless departures or link losses are given or read from transitions, nodes stay and links last; where they do not, the \
+     largest hubs come out too many and too certain.",
     "Far thresholds and far dates rest on the fewest nodes: plan with the interval, not with its middle.",
     "Where a capacity failure could harm people, your own engineering practice and its safety margins come before this \
      forecast.",
