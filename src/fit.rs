@@ -94,6 +94,18 @@ pub struct Fixed {
     pub growth_variance: Option<f64>,
 }
 
+impl Fixed {
+    /// The given value of a candidate's own parameter.
+    pub fn own(&self, model: Model) -> Option<f64> {
+        match model {
+            Model::Power => self.kernel_exponent,
+            Model::Dormancy => self.dormant_share,
+            Model::GrowthVariance => self.growth_variance,
+            Model::Uniform | Model::Preferential | Model::Mix => None,
+        }
+    }
+}
+
 /// What the caller asks of a fit.
 #[derive(Debug, Clone, PartialEq, Default)]
 pub struct FitRequest {
@@ -257,6 +269,8 @@ pub struct TransitionSummary {
     pub periods: Vec<PeriodRates>,
     /// What was set aside.
     pub outliers: Outliers,
+    /// Every candidate's record on the transitions.
+    pub candidates: Vec<Candidate>,
 }
 
 /// Landings against exposure at one range of degree.
@@ -287,6 +301,8 @@ pub struct Attachment {
     pub linear_p_value: f64,
     /// The non-parametric attachment curve.
     pub curve: Vec<CurvePoint>,
+    /// Every candidate's record on the landings.
+    pub candidates: Vec<Candidate>,
 }
 
 /// Relative standard deviations of the rates read off the totals; 0 for what was given.
@@ -321,7 +337,7 @@ pub struct Fit {
     pub entry: EntryDegrees,
     /// Exponent of the degree law's tail, 1 + 1/β; none when p = 0 (the tail is geometric).
     pub tail_exponent: Option<Estimate>,
-    /// Every candidate's record.
+    /// Every candidate's record on the evidence that the mix was read from.
     pub candidates: Vec<Candidate>,
     /// How well the fitted law reproduces the counts; none when nothing was fitted.
     pub goodness: Option<Goodness>,

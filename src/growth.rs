@@ -11,5 +11,6 @@ pub(crate) use attraction::{GrowthFactor, growth_factors};
 pub use law::NodeLaw;
 pub use mean_field::{Course, GrowthError};
 pub use moments::MomentLaw;
+pub(crate) use moments::power_kernel;
 pub use simulation::{Simulation, SimulationError};
 pub use tails::{NetworkLaw, TailSum};

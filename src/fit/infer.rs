@@ -26,9 +26,9 @@ use crate::model::{AttachmentMix, EntryDegrees, Estimate, Evidence, Interval, Wa
 pub fn fit(evidence: &Evidence, request: &FitRequest, cancelled: &dyn Fn() -> bool) -> Result<Fit, FitError> {
     let moves = match evidence.transitions() {
         [] => None,
-        _ => Some(fit_transitions(evidence, &candidates_of(request.choice), cancelled)?),
+        _ => Some(fit_transitions(evidence, &candidates_of(request), request.fixed, cancelled)?),
     };
-    let events = evidence.link_events().map(fit_link_events).transpose()?;
+    let events = evidence.link_events().map(|events| fit_link_events(events, cancelled)).transpose()?;
     let rung = rung(evidence, request)?;
     let chosen = choose(request, rung, moves.as_ref(), events.as_ref())?;
     let forces = chosen.forces;
@@ -154,8 +154,8 @@ fn rung(evidence: &Evidence, request: &FitRequest) -> Result<Rung, FitError> {
 }
 
 /// Candidates that transitions are asked about.
-fn candidates_of(choice: ModelChoice) -> Vec<Model> {
-    match choice {
+fn candidates_of(request: &FitRequest) -> Vec<Model> {
+    match request.choice {
         ModelChoice::Auto => Model::ALL.to_vec(),
         ModelChoice::Only(model) => vec![model],
     }
@@ -186,10 +186,12 @@ fn choose(
         dormant_share: zero,
         growth_variance: zero,
     };
-    let candidates = moves.map(TransitionFit::weighed).or_else(|| {
-        let events = events.filter(|_| rung == Rung::LinkEvents)?;
-        Some(events.candidates.clone())
-    });
+    // Likelihoods of different evidence do not compare: the candidates are those of the rung in use.
+    let candidates = match rung {
+        Rung::Transitions => moves.map(|moves| moves.summary.candidates.clone()),
+        Rung::LinkEvents => events.map(|events| events.attachment.candidates.clone()),
+        _ => None,
+    };
     let fixed = request.fixed;
     let model = match request.choice {
         ModelChoice::Only(model) => Some(model),
@@ -217,6 +219,11 @@ fn choose(
         Some(Model::Dormancy) => forces.dormant_share = needed(fixed.dormant_share, own, "dormant_share")?,
         Some(Model::GrowthVariance) => forces.growth_variance = needed(fixed.growth_variance, own, "growth_variance")?,
         _ => {}
+    }
+    if rung == Rung::LinkEvents && matches!(model, Some(Model::Dormancy | Model::GrowthVariance)) {
+        let detail = "link events tell the mix of nodes that differ in degree alone, not under dormancy or growth variance; \
+                      read it from transitions or snapshots, or ask for another model";
+        return Err(FitError::NotIdentified { detail: detail.into() });
     }
     let share = match rung {
         Rung::Transitions => from_moves.map(|candidate| candidate.preferential_share),

@@ -2,9 +2,11 @@
 
 use statrs::distribution::{ChiSquared, ContinuousCDF, Gamma};
 
-use super::profile::{ESTIMATE_LEVEL, Profile, profile_share, weigh};
+use super::profile::{ESTIMATE_LEVEL, NORMAL_95, Profile, profile_share, weigh};
 use super::{Attachment, Candidate, CurvePoint, FitError, Force, Model, ModelChoice};
+use crate::growth::power_kernel;
 use crate::model::{AttachmentCell, Estimate, Interval, LinkEvents, Warning};
+use crate::numerics::elementary::logistic;
 use crate::numerics::scoring::maximise;
 
 /// p is found to this.
@@ -18,13 +20,10 @@ const DOUBTED: f64 = 0.01;
 const WORTH_A_WARNING: f64 = 1.3;
 /// Ranges with fewer landings say little.
 const FEWEST_LANDINGS: u64 = 50;
-/// Standard normal quantile at 0.95: the ends of a 90 % interval.
-const NORMAL_95: f64 = 1.644_853_626_951_472_2;
 
 /// What a link list tells.
 pub(super) struct LinkEventFit {
     pub attachment: Attachment,
-    pub candidates: Vec<Candidate>,
     pub warnings: Vec<Warning>,
     /// p of the power kernel.
     power_share: Force,
@@ -48,7 +47,7 @@ impl LinkEventFit {
 /// their variance, which leaves less than 10⁻⁷ of a landing's term. The exponent: `Σ C ln[(1−p)/N + p·φ/Φ]` over cells of degree in
 /// stretches of a few per cent growth, C landings, φ = k^γ, N and Φ averages over the stretch; p stays free, and twice the
 /// gain over γ = 1 is read as χ².
-pub(super) fn fit_link_events(events: &LinkEvents) -> Result<LinkEventFit, FitError> {
+pub(super) fn fit_link_events(events: &LinkEvents, cancelled: &dyn Fn() -> bool) -> Result<LinkEventFit, FitError> {
     let log_likelihood = |p: f64| {
         let term = |class: &crate::model::RatioClass| {
             let inner = 1.0 - p + p * class.ratio;
@@ -59,7 +58,7 @@ pub(super) fn fit_link_events(events: &LinkEvents) -> Result<LinkEventFit, FitEr
     };
     let linear = profile_share(ModelChoice::Only(Model::Mix), SHARE_TOLERANCE, log_likelihood, |_| Ok(1.0))?;
     let share = Force { estimate: linear.share, excursion: linear.excursion };
-    let power = PowerFit::new(events, linear.share.value);
+    let power = PowerFit::new(events, linear.share.value, cancelled)?;
     let mut candidates = linear.candidates.clone();
     // The two likelihoods differ by a constant; their differences to the mix do not.
     if let Some(mix) = candidates.iter().find(|c| c.model == Model::Mix).copied() {
@@ -83,8 +82,9 @@ pub(super) fn fit_link_events(events: &LinkEvents) -> Result<LinkEventFit, FitEr
         kernel_exponent: power.exponent,
         linear_p_value: power.p_value,
         curve,
+        candidates,
     };
-    Ok(LinkEventFit { attachment, candidates, warnings, power_share: power.share })
+    Ok(LinkEventFit { attachment, warnings, power_share: power.share })
 }
 
 struct PowerFit {
@@ -96,15 +96,17 @@ struct PowerFit {
 }
 
 impl PowerFit {
-    fn new(events: &LinkEvents, share: f64) -> Self {
+    fn new(events: &LinkEvents, share: f64, cancelled: &dyn Fn() -> bool) -> Result<Self, FitError> {
         let logit = |p: f64| (p / (1.0 - p)).ln().clamp(-12.0, 12.0);
-        let logistic = |x: f64| 1.0 / (1.0 + (-x).exp());
         let weights: Vec<f64> =
             cells(events).filter(|(_, cell)| cell.landings > 0).map(|(_, cell)| cell.landings as f64).collect();
-        let terms = |theta: &[f64]| log_terms(events, logistic(theta[0]), theta.get(1).copied().unwrap_or(1.0));
+        let terms = |theta: &[f64]| match cancelled() {
+            true => Err(FitError::Cancelled),
+            false => Ok(log_terms(events, logistic(theta[0]), theta.get(1).copied().unwrap_or(1.0))),
+        };
         let start = logit(share.clamp(0.02, 0.98));
-        let linear = maximise(&[start], &[(-12.0, 12.0)], &weights, terms);
-        let best = maximise(&[linear.at[0], 1.0], &[(-12.0, 12.0), (0.0, 2.0)], &weights, terms);
+        let linear = maximise(&[start], &[(-12.0, 12.0)], &weights, terms)?;
+        let best = maximise(&[linear.at[0], 1.0], &[(-12.0, 12.0), (0.0, 2.0)], &weights, terms)?;
         let gain = (best.value - linear.value).max(0.0);
         let error = |i: usize| best.covariance[(i, i)].max(0.0).sqrt();
         let force = |value: f64, error: f64, back: &dyn Fn(f64) -> f64| {
@@ -113,12 +115,12 @@ impl PowerFit {
             let estimate = Estimate { value: back(value), interval: Some(interval) };
             Force { estimate, excursion: (back(value - error), back(value + error)) }
         };
-        Self {
+        Ok(Self {
             share: force(best.at[0], error(0), &logistic),
             exponent: force(best.at[1], error(1), &|x| x.clamp(0.0, 2.0)),
             gain,
             p_value: ChiSquared::new(1.0).map_or(1.0, |law| law.sf(2.0 * gain)),
-        }
+        })
     }
 }
 
@@ -131,15 +133,11 @@ fn mean_degree(cell: &AttachmentCell) -> f64 {
     if cell.node_exposure > 0.0 { cell.end_exposure / cell.node_exposure } else { cell.lowest as f64 }
 }
 
-fn kernel(degree: f64, exponent: f64) -> f64 {
-    if degree <= 1.0 { degree } else { degree.powf(exponent) }
-}
-
 /// ln of the probability of a landing on one node of each cell that has landings, window by window.
 fn log_terms(events: &LinkEvents, share: f64, exponent: f64) -> Vec<f64> {
     let mut terms = Vec::new();
     for window in events.windows() {
-        let phi: Vec<f64> = window.cells.iter().map(|cell| kernel(mean_degree(cell), exponent)).collect();
+        let phi: Vec<f64> = window.cells.iter().map(|cell| power_kernel(mean_degree(cell), exponent)).collect();
         let (mut nodes, mut attraction, mut landings) = (0.0, 0.0, 0.0);
         for (cell, phi) in window.cells.iter().zip(&phi) {
             nodes += cell.node_exposure;

@@ -11,6 +11,10 @@ use crate::numerics::roots::increasing_root;
 
 /// Level of the intervals that come with every fitted estimate.
 pub(super) const ESTIMATE_LEVEL: f64 = 0.9;
+/// Standard normal quantile at 0.95: the ends of a 90 % interval.
+pub(super) const NORMAL_95: f64 = 1.644_853_626_951_472_2;
+/// Each period weighs this much of the next newer one: the mix may move, and the forecast wants today's.
+pub(super) const AGE_WEIGHT: f64 = 0.7;
 
 /// The likelihood of the preferential share, maximised and bounded.
 #[derive(Debug, Clone, PartialEq)]

@@ -1,6 +1,6 @@
 //! Arrivals and links per arrival, read off the totals or given.
 
-use super::profile::ESTIMATE_LEVEL;
+use super::profile::{ESTIMATE_LEVEL, NORMAL_95};
 use super::successive::Period;
 use super::{FitError, FitRequest, RateExcursion};
 use crate::model::{EntryDegrees, Estimate, Evidence, Interval, Warning};
@@ -94,7 +94,6 @@ fn period_spread(periods: &[Period], rate: fn(&Period) -> f64) -> f64 {
 
 /// A positive rate with relative standard deviation `spread`, its interval log-normal.
 fn log_normal(value: f64, spread: f64) -> Estimate {
-    const NORMAL_95: f64 = 1.644_853_626_951_472_2; // standard normal quantile at 0.95, for a 90 % interval
     let factor = (NORMAL_95 * spread).exp();
     let interval = Interval { level: ESTIMATE_LEVEL, low: value / factor, high: value * factor };
     Estimate { value, interval: Some(interval) }

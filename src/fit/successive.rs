@@ -1,6 +1,6 @@
 //! Rung 2: successive snapshots, by the flow of nodes across thresholds.
 
-use super::profile::{Profile, profile_share};
+use super::profile::{AGE_WEIGHT, Profile, profile_share};
 use super::{FitError, Forces, ModelChoice, PeriodRates, TransitionSummary};
 use crate::growth::{Course, GrowthError, NetworkLaw, NodeLaw};
 use crate::model::{
@@ -23,8 +23,6 @@ const MOST_PERIODS: usize = 12;
 const UNEXPLAINED: f64 = 0.5;
 /// Flows with less variance than this say nothing of dispersion.
 const LEAST_VARIANCE: f64 = 1.0;
-/// Each period weighs this much of the next newer one: the mix may move, and the forecast wants today's.
-const AGE_WEIGHT: f64 = 0.7;
 
 /// What the totals of one period between two snapshots say, taken at constant rates.
 #[derive(Debug, Clone)]

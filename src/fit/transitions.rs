@@ -9,20 +9,16 @@ mod renames;
 use likelihood::{Panel, PanelFit};
 use statrs::distribution::{Beta, ContinuousCDF};
 
-use super::profile::ESTIMATE_LEVEL;
-use super::profile::weigh;
-use super::{Candidate, FitError, Force, Model, OutlierClass, Outliers, PeriodRates, TransitionSummary};
+use super::profile::{AGE_WEIGHT, ESTIMATE_LEVEL, NORMAL_95, weigh};
+use super::{Candidate, FitError, Fixed, Force, Model, OutlierClass, Outliers, PeriodRates, TransitionSummary};
 use crate::model::{
     DegreeKind, EntryDegrees, Estimate, Evidence, Interval, MAX_DORMANT_SHARE, MAX_GROWTH_VARIANCE,
     MAX_KERNEL_EXPONENT, Transitions, Warning,
 };
+use crate::numerics::elementary::logistic;
 
 /// Periods read at most, the newest ones.
 const MOST_PERIODS: usize = 6;
-/// Each period weighs this much of the next newer one, as for crossing flows.
-const AGE_WEIGHT: f64 = 0.7;
-/// Standard normal quantile at 0.95: the ends of a 90 % interval.
-const NORMAL_95: f64 = 1.644_853_626_951_472_2;
 /// Fewer nodes present at both dates than this tell next to nothing.
 const FEWEST_NODES: u64 = 50;
 
@@ -49,21 +45,19 @@ pub(super) struct TransitionFit {
     pub warnings: Vec<Warning>,
 }
 
-impl TransitionFit {
-    /// The candidates with their AIC weights.
-    pub fn weighed(&self) -> Vec<Candidate> {
-        let row = |fit: &CandidateFit| Candidate {
-            model: fit.model,
-            preferential_share: fit.preferential_share.value(),
-            parameter: fit.own.map(|own| own.value()),
-            log_likelihood: fit.log_likelihood,
-            aic: 2.0 * fit.parameters as f64 - 2.0 * fit.log_likelihood,
-            weight: 0.0,
-        };
-        let mut rows: Vec<Candidate> = self.candidates.iter().map(row).collect();
-        weigh(&mut rows);
-        rows
-    }
+/// The candidates with their AIC weights.
+fn weighed(fits: &[CandidateFit]) -> Vec<Candidate> {
+    let row = |fit: &CandidateFit| Candidate {
+        model: fit.model,
+        preferential_share: fit.preferential_share.value(),
+        parameter: fit.own.map(|own| own.value()),
+        log_likelihood: fit.log_likelihood,
+        aic: 2.0 * fit.parameters as f64 - 2.0 * fit.log_likelihood,
+        weight: 0.0,
+    };
+    let mut rows: Vec<Candidate> = fits.iter().map(row).collect();
+    weigh(&mut rows);
+    rows
 }
 
 /// One period as it is read.
@@ -74,7 +68,7 @@ struct Read<'a> {
     weight: f64,
 }
 
-/// Fits every candidate asked for to the newest periods of `evidence`.
+/// Fits every candidate asked for to the newest periods of `evidence`; a parameter that is given in `fixed` is held there.
 ///
 /// Formula: nodes present at both dates by `Π [(1−ε)·P(k → k') + ε·h(k')]^n`, P the law of one node at constant rates and h a
 /// broad law for outliers; departures binomial; entry degrees by taking the growth since arrival off the newcomers'. Periods
@@ -86,6 +80,7 @@ struct Read<'a> {
 pub(super) fn fit_transitions(
     evidence: &Evidence,
     models: &[Model],
+    fixed: Fixed,
     cancelled: &dyn Fn() -> bool,
 ) -> Result<TransitionFit, FitError> {
     let tables = evidence.transitions();
@@ -108,10 +103,7 @@ pub(super) fn fit_transitions(
     for &model in std::iter::once(&Model::Mix).chain(models.iter().filter(|&&model| model != Model::Mix)) {
         let mut fits = Vec::new();
         for (i, period) in periods.iter().enumerate() {
-            if cancelled() {
-                return Err(FitError::Cancelled);
-            }
-            fits.push(period.panel.fit(model, near.get(i)));
+            fits.push(period.panel.fit(model, fixed.own(model), near.get(i), cancelled)?);
         }
         if let Some(stuck) = fits.iter().position(|fit| !fit.converged) {
             let detail =
@@ -133,6 +125,7 @@ pub(super) fn fit_transitions(
         return Err(FitError::NotConverged { detail: "no candidate found a maximum on the transitions".into() });
     };
     let (last, fit) = (&periods[periods.len() - 1], &best[best.len() - 1]);
+    let candidates: Vec<CandidateFit> = found.iter().map(|(model, fits)| candidate(*model, &periods, fits)).collect();
     Ok(TransitionFit {
         departures: departures(&periods),
         link_losses: link_losses(&periods, best, evidence.kind()),
@@ -140,9 +133,10 @@ pub(super) fn fit_transitions(
         summary: TransitionSummary {
             periods: periods.iter().zip(best).map(|(period, fit)| period.rates(fit)).collect(),
             outliers: outliers(&periods, best),
+            candidates: weighed(&candidates),
         },
         warnings,
-        candidates: found.iter().map(|(model, fits)| candidate(*model, &periods, fits)).collect(),
+        candidates,
     })
 }
 
@@ -284,10 +278,6 @@ fn candidate(model: Model, periods: &[Read], fits: &[PanelFit]) -> CandidateFit 
         log_likelihood: fits.iter().map(|fit| fit.log_likelihood).sum(),
         parameters: fits.iter().map(|fit| fit.parameters).sum(),
     }
-}
-
-fn logistic(x: f64) -> f64 {
-    1.0 / (1.0 + (-x).exp())
 }
 
 /// Pools (value, standard error, age weight) on the scale where values are near normal; `back` leads to the natural scale.

@@ -43,6 +43,11 @@ struct Class {
     variance: f64,
 }
 
+/// k^γ, and k itself up to 1: what a node of degree `degree` weighs for preferential ends.
+pub(crate) fn power_kernel(degree: f64, exponent: f64) -> f64 {
+    if degree <= 1.0 { degree } else { degree.powf(exponent) }
+}
+
 /// φ with its first two derivatives: k^γ from 1 on, and k below. Between whole degrees any curve serves; below 1 the straight
 /// line gives the mean of φ over a node that has no link yet or one.
 fn kernel(k: f64, exponent: f64) -> [f64; 3] {

@@ -48,3 +48,12 @@ pub fn complex_exp_m1(z: Complex64) -> Complex64 {
     let (sine, cosine) = z.im.sin_cos();
     Complex64::new(z.re.exp_m1() * cosine - 2.0 * half_sine * half_sine, z.re.exp() * sine)
 }
+
+/// 1/(1 + e^{−x}), the share whose logit is x.
+///
+/// ```
+/// assert_eq!(tailcast::numerics::elementary::logistic(0.0), 0.5);
+/// ```
+pub fn logistic(x: f64) -> f64 {
+    1.0 / (1.0 + (-x).exp())
+}

@@ -34,26 +34,29 @@ const STIFFEST: f64 = 1e8;
 /// ```
 /// use tailcast::numerics::scoring::maximise;
 /// // Three successes in ten, as a logit: the maximum is at ln(3/7), its variance 1/(10·0.3·0.7).
-/// let terms = |theta: &[f64]| vec![-(-theta[0]).exp().ln_1p(), -theta[0].exp().ln_1p()];
-/// let found = maximise(&[0.0], &[(-20.0, 20.0)], &[3.0, 7.0], terms);
+/// let terms = |theta: &[f64]| Ok::<_, ()>(vec![-(-theta[0]).exp().ln_1p(), -theta[0].exp().ln_1p()]);
+/// let found = maximise(&[0.0], &[(-20.0, 20.0)], &[3.0, 7.0], terms).unwrap();
 /// assert!(found.converged && (found.at[0] - (3.0f64 / 7.0).ln()).abs() < 1e-4);
 /// assert!((found.covariance[(0, 0)] - 1.0 / 2.1).abs() < 1e-4);
 /// ```
-pub fn maximise(
+///
+/// # Errors
+/// The first error of `terms`, which may be that it was told to stop.
+pub fn maximise<E>(
     start: &[f64],
     bounds: &[(f64, f64)],
     weights: &[f64],
-    mut terms: impl FnMut(&[f64]) -> Vec<f64>,
-) -> ScoringMaximum {
+    mut terms: impl FnMut(&[f64]) -> Result<Vec<f64>, E>,
+) -> Result<ScoringMaximum, E> {
     let size = start.len();
     let total = |terms: &[f64]| terms.iter().zip(weights).map(|(l, n)| n * l).sum::<f64>();
     let mut at = start.to_vec();
-    let mut value = total(&terms(&at));
+    let mut value = total(&terms(&at)?);
     let (mut damping, mut converged) = (1e-3, false);
     for number in 0..SCORING_MAX_STEPS {
-        let (gradient, mut scatter) = scores(&at, bounds, weights, &mut terms);
+        let (gradient, mut scatter) = scores(&at, bounds, weights, &mut terms)?;
         if number >= NEWTON_FROM {
-            let curved = curvature(&at, bounds, weights, &mut terms);
+            let curved = curvature(&at, bounds, weights, &mut terms)?;
             if curved.clone().cholesky().is_some() {
                 scatter = curved;
             }
@@ -73,7 +76,7 @@ pub fn maximise(
                 (0..size).map(|i| moved(i).clamp(bounds[i].0, bounds[i].1)).collect()
             };
             let mut trial = reach(1.0);
-            let mut found = total(&terms(&trial));
+            let mut found = total(&terms(&trial)?);
             if found <= value {
                 damping *= 10.0;
                 continue;
@@ -81,7 +84,7 @@ pub fn maximise(
             // Where the model is wrong the scores scatter more than the likelihood curves, and the step comes out short.
             for doubling in 1..=LONGEST_STRETCH {
                 let farther = reach(f64::from(1 << doubling));
-                let there = total(&terms(&farther));
+                let there = total(&terms(&farther)?);
                 if there <= found {
                     break;
                 }
@@ -96,18 +99,18 @@ pub fn maximise(
             break;
         }
     }
-    let (_, scatter) = scores(&at, bounds, weights, &mut terms);
-    let covariance = sandwich(&curvature(&at, bounds, weights, &mut terms), &scatter);
-    ScoringMaximum { at, value, covariance, converged }
+    let (_, scatter) = scores(&at, bounds, weights, &mut terms)?;
+    let covariance = sandwich(&curvature(&at, bounds, weights, &mut terms)?, &scatter);
+    Ok(ScoringMaximum { at, value, covariance, converged })
 }
 
 /// Σ n·g and Σ n·g·gᵀ over the rows' gradients g; a parameter at a bound has its difference taken inwards.
-fn scores(
+fn scores<E>(
     at: &[f64],
     bounds: &[(f64, f64)],
     weights: &[f64],
-    terms: &mut impl FnMut(&[f64]) -> Vec<f64>,
-) -> (DVector<f64>, DMatrix<f64>) {
+    terms: &mut impl FnMut(&[f64]) -> Result<Vec<f64>, E>,
+) -> Result<(DVector<f64>, DMatrix<f64>), E> {
     let size = at.len();
     let slopes: Vec<Vec<f64>> = (0..size)
         .map(|i| {
@@ -115,48 +118,48 @@ fn scores(
             let (low, high) = (end(-1.0), end(1.0));
             let mut moved = at.to_vec();
             moved[i] = high;
-            let above = terms(&moved);
+            let above = terms(&moved)?;
             moved[i] = low;
-            let below = terms(&moved);
-            above.iter().zip(&below).map(|(a, b)| (a - b) / (high - low)).collect()
+            let below = terms(&moved)?;
+            Ok(above.iter().zip(&below).map(|(a, b)| (a - b) / (high - low)).collect())
         })
-        .collect();
+        .collect::<Result<_, E>>()?;
     let weighted = |i: usize, j: Option<usize>| -> f64 {
         let row = |(row, n): (usize, &f64)| n * slopes[i][row] * j.map_or(1.0, |j| slopes[j][row]);
         weights.iter().enumerate().map(row).sum()
     };
     let gradient = DVector::from_fn(size, |i, _| weighted(i, None));
-    (gradient, DMatrix::from_fn(size, size, |i, j| weighted(i, Some(j))))
+    Ok((gradient, DMatrix::from_fn(size, size, |i, j| weighted(i, Some(j)))))
 }
 
 /// −Hessian of the log-likelihood by differences.
-fn curvature(
+fn curvature<E>(
     at: &[f64],
     bounds: &[(f64, f64)],
     weights: &[f64],
-    terms: &mut impl FnMut(&[f64]) -> Vec<f64>,
-) -> DMatrix<f64> {
+    terms: &mut impl FnMut(&[f64]) -> Result<Vec<f64>, E>,
+) -> Result<DMatrix<f64>, E> {
     const WIDE: f64 = 30.0 * STEP;
     let size = at.len();
-    let mut total = |moves: &[(usize, f64)]| -> f64 {
+    let mut total = |moves: &[(usize, f64)]| -> Result<f64, E> {
         let mut moved = at.to_vec();
         for &(i, by) in moves {
             moved[i] = (moved[i] + by * WIDE).clamp(bounds[i].0, bounds[i].1);
         }
-        terms(&moved).iter().zip(weights).map(|(l, n)| n * l).sum()
+        Ok(terms(&moved)?.iter().zip(weights).map(|(l, n)| n * l).sum())
     };
-    let here = total(&[]);
+    let here = total(&[])?;
     let mut curvature = DMatrix::zeros(size, size);
     for i in 0..size {
-        curvature[(i, i)] = -(total(&[(i, 1.0)]) - 2.0 * here + total(&[(i, -1.0)])) / (WIDE * WIDE);
+        curvature[(i, i)] = -(total(&[(i, 1.0)])? - 2.0 * here + total(&[(i, -1.0)])?) / (WIDE * WIDE);
         for j in 0..i {
-            let cross = total(&[(i, 1.0), (j, 1.0)]) - total(&[(i, 1.0), (j, -1.0)]) - total(&[(i, -1.0), (j, 1.0)])
-                + total(&[(i, -1.0), (j, -1.0)]);
+            let (up, down) = (total(&[(i, 1.0), (j, 1.0)])?, total(&[(i, -1.0), (j, -1.0)])?);
+            let cross = up + down - total(&[(i, 1.0), (j, -1.0)])? - total(&[(i, -1.0), (j, 1.0)])?;
             curvature[(i, j)] = -cross / (4.0 * WIDE * WIDE);
             curvature[(j, i)] = curvature[(i, j)];
         }
     }
-    curvature
+    Ok(curvature)
 }
 
 /// H⁻¹JH⁻¹ of the curvature and the scores' scatter.

@@ -116,7 +116,7 @@ pub struct FitReport {
     /// `[degree, share]` pairs: the degrees newcomers arrive with.
     #[schema(value_type = Vec<Vec<f64>>, examples(json!([[0, 0.9], [2, 0.1]])))]
     pub entry_degrees: Vec<(u64, Real)>,
-    /// Every candidate's record on the evidence.
+    /// Every candidate's record on the evidence that the mix was read from.
     pub candidates: Vec<CandidateAnswer>,
     /// How well the fitted law reproduces the counts; null when nothing was fitted.
     pub goodness: Option<GoodnessAnswer>,
@@ -313,6 +313,8 @@ pub struct TransitionsAnswer {
     /// name, at most 100; the largest first.
     #[schema(value_type = Vec<Vec<u64>>)]
     pub renamed: Vec<(u64, u64)>,
+    /// Every candidate's record on the transitions.
+    pub candidates: Vec<CandidateAnswer>,
 }
 
 /// What one period's transitions tell under the likeliest candidate.
@@ -360,6 +362,8 @@ pub struct AttachmentAnswer {
     pub linear_p_value: Real,
     /// Landings by degree against what the fitted mix gives.
     pub curve: Vec<CurvePointAnswer>,
+    /// Every candidate's record on the landings.
+    pub candidates: Vec<CandidateAnswer>,
 }
 
 /// The attachment curve at one range of degree.

@@ -256,6 +256,7 @@ impl From<&TransitionSummary> for TransitionsAnswer {
             outlier_classes: found.outliers.classes.iter().map(class).collect(),
             jumps: found.outliers.jumps.iter().take(MOST_TOLD).copied().collect(),
             renamed: found.outliers.renamed.iter().take(MOST_TOLD).copied().collect(),
+            candidates: found.candidates.iter().map(CandidateAnswer::from).collect(),
         }
     }
 }
@@ -275,6 +276,7 @@ impl From<&Attachment> for AttachmentAnswer {
             kernel_exponent: (&found.kernel_exponent.estimate).into(),
             linear_p_value: Real(found.linear_p_value),
             curve: found.curve.iter().map(point).collect(),
+            candidates: found.candidates.iter().map(CandidateAnswer::from).collect(),
         }
     }
 }

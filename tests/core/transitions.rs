@@ -187,3 +187,64 @@ fn link_events_give_mix_exponent_and_curve() {
     // Of about 20 ranges two are expected outside their 90 % intervals.
     assert!(outside.count() <= 6, "{:?}", attachment.curve);
 }
+
+/// A given parameter is held while the mix is fitted, not put in afterwards: at the truth the mix is the truth, far from it it moves.
+#[test]
+fn a_given_parameter_is_held_in_the_fit() {
+    let mut network = Simulation::new(&counts(&[(3, 200)]), forces(0.8, 3.0), 1).unwrap();
+    network.arrive_many(20_000).unwrap();
+    let truth = forces(0.8, 3.0).with_arrivals(tailcast::model::ArrivalPlan::constant(40.0).unwrap());
+    let truth = truth.with_kernel_exponent(0.7).unwrap();
+    let mut network = Simulation::new(&network.degree_counts().unwrap(), truth, 2).unwrap();
+    network.run_until(100.0).unwrap();
+    let evidence = from_moves(DegreeKind::Received, &network.moves());
+    let at = |exponent: f64| {
+        let fixed = Fixed { kernel_exponent: Some(exponent), ..Fixed::default() };
+        fit(&evidence, &FitRequest { fixed, ..asked(Rung::Transitions, Model::Power) })
+    };
+    assert!(off(&at(0.7), 0.8).abs() < 3.0, "{:?}", at(0.7).preferential_share);
+    assert!(off(&at(1.2), 0.8).abs() > 5.0, "{:?}", at(1.2).preferential_share);
+    assert_eq!(at(1.2).forces.kernel_exponent.value(), 1.2);
+}
+
+/// With a cadence a link list gives all rungs at once; each answers with its own candidates.
+#[test]
+fn each_rung_answers_with_its_own_candidates() {
+    let mut census = Census::new(DegreeKind::Received, Some("P1D".parse().unwrap()));
+    let start: jiff::Timestamp = "2026-01-01T00:00:00Z".parse().unwrap();
+    census.record(start, 0, 1).unwrap();
+    for source in 2..3_000_u32 {
+        let time = start + jiff::SignedDuration::from_secs(120 * i64::from(source));
+        // Half to the same few, half to anyone: no law of growth, but evidence of every kind.
+        let target = if source % 2 == 0 { source * 7_919 % source.min(97) } else { source * 7_919 % source };
+        census.record(time, source, target).unwrap();
+    }
+    let evidence = census.finish().unwrap().into_evidence().unwrap();
+    assert!(evidence.snapshots().len() > 2 && !evidence.transitions().is_empty());
+    let by = |rung| fit(&evidence, &FitRequest { rung: Some(rung), ..FitRequest::default() });
+    let (flows, moves, events) = (by(Rung::SuccessiveSnapshots), by(Rung::Transitions), by(Rung::LinkEvents));
+    assert_eq!(flows.candidates.len(), 3);
+    assert_eq!(moves.candidates, moves.transitions.as_ref().unwrap().candidates);
+    assert_eq!(events.candidates, events.attachment.as_ref().unwrap().candidates);
+    assert!(events.candidates.iter().any(|candidate| candidate.model == events.model));
+    for model in [Model::Dormancy, Model::GrowthVariance] {
+        let refused = tailcast::fit::fit(&evidence, &asked(Rung::LinkEvents, model), &|| false);
+        assert!(matches!(refused, Err(FitError::NotIdentified { .. })), "{refused:?}");
+    }
+}
+
+/// A search asks whether to go on before each evaluation, so a long table does not keep a worker.
+#[test]
+fn a_fit_of_transitions_stops_when_told() {
+    let tables = transitions("debian");
+    let newest = Snapshot { as_of: tables[0].to(), counts: tables[0].counts_after().unwrap() };
+    let evidence = Evidence::new(DegreeKind::Received, vec![newest], None).unwrap();
+    let evidence = evidence.with_transitions(vec![tables[0].clone()]).unwrap();
+    let asks = std::cell::Cell::new(0);
+    let stopped = tailcast::fit::fit(&evidence, &FitRequest::default(), &|| {
+        asks.set(asks.get() + 1);
+        asks.get() > 5
+    });
+    assert!(matches!(stopped, Err(FitError::Cancelled)), "{stopped:?}");
+    assert_eq!(asks.get(), 6);
+}

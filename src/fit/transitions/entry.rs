@@ -2,7 +2,7 @@
 
 use std::collections::BTreeMap;
 
-use crate::model::EntryDegrees;
+use crate::model::{EntryDegrees, MAX_DEGREE};
 
 /// Degrees on arrival are told apart one by one up to here; above, a newcomer's gain is taken off by its expectation.
 const SINGLE_DEGREES: u64 = 60;
@@ -10,13 +10,13 @@ const SINGLE_DEGREES: u64 = 60;
 const STEPS: usize = 40;
 /// An iteration that moves no share by more than this has settled.
 const SETTLED: f64 = 1e-7;
-/// At most so many distinct entry degrees are kept: above a tenth of the mean they are gathered into cells.
+/// Degrees on arrival above the single ones are gathered into cells that grow by this factor.
 const CELL_GROWTH: f64 = 1.15;
 
 /// Entry degrees whose law after growth comes nearest to `newcomers` (degree at the end, nodes).
 ///
 /// Formula: Richardson (1972) and Lucy (1974) iteration, which keeps shares positive and adding up to one; `law(k, j)` is the
-/// probability of degree j at the end from k on arrival, `mean(k)` its mean.
+/// probability of degree j at the end from k on arrival.
 pub(super) fn entry_degrees(newcomers: &[(u64, u64)], law: impl Fn(u64, u64) -> f64) -> Option<EntryDegrees> {
     let total: u64 = newcomers.iter().map(|&(_, nodes)| nodes).sum();
     if total == 0 {
@@ -65,5 +65,5 @@ fn mean_gain(law: &impl Fn(u64, u64) -> f64, degree: u64) -> f64 {
 /// The cell's degree for a large entry degree.
 fn cell(degree: u64) -> u64 {
     let steps = ((degree as f64 / SINGLE_DEGREES as f64).ln() / CELL_GROWTH.ln()).round();
-    (SINGLE_DEGREES as f64 * CELL_GROWTH.powf(steps)).round() as u64
+    ((SINGLE_DEGREES as f64 * CELL_GROWTH.powf(steps)).round() as u64).min(MAX_DEGREE)
 }

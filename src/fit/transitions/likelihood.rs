@@ -2,11 +2,12 @@
 
 use nalgebra::DMatrix;
 
-use super::super::Model;
+use super::super::{FitError, Model};
 use super::birth_death::{BirthDeath, LARGEST_STATE};
 use super::node_pmf::PeriodLaw;
-use crate::growth::{GrowthFactor, growth_factors};
+use crate::growth::{GrowthFactor, growth_factors, power_kernel};
 use crate::model::{DegreeCounts, MAX_GROWTH_VARIANCE};
+use crate::numerics::elementary::logistic;
 use crate::numerics::quadrature::PANEL;
 use crate::numerics::scoring::{ScoringMaximum, maximise};
 
@@ -75,6 +76,8 @@ struct Layout {
     preferential: Option<usize>,
     loss: Option<usize>,
     own: Option<usize>,
+    /// The candidate's own parameter, where it is given.
+    given: Option<f64>,
     outliers: usize,
     size: usize,
 }
@@ -91,7 +94,7 @@ struct Forces {
 }
 
 impl Layout {
-    fn new(model: Model, shrinks: bool) -> Self {
+    fn new(model: Model, given: Option<f64>, shrinks: bool) -> Self {
         let mut size = 0;
         let mut next = |wanted: bool| {
             size += usize::from(wanted);
@@ -100,22 +103,26 @@ impl Layout {
         let uniform = next(model != Model::Preferential);
         let preferential = next(model != Model::Uniform);
         let loss = next(shrinks);
-        let own = next(matches!(model, Model::Power | Model::Dormancy | Model::GrowthVariance));
+        let own = next(given.is_none() && matches!(model, Model::Power | Model::Dormancy | Model::GrowthVariance));
         let outliers = next(true).unwrap_or(0);
-        Self { model, uniform, preferential, loss, own, outliers, size }
+        Self { model, uniform, preferential, loss, own, given, outliers, size }
     }
 
     fn forces(&self, theta: &[f64]) -> Forces {
         let rate = |index: Option<usize>| index.map_or(0.0, |i| theta[i].exp());
-        let own = self.own.map_or(0.0, |i| theta[i]);
-        let logistic = |x: f64| 1.0 / (1.0 + (-x).exp());
+        // Dormancy is sought as a logit, growth variance as a logarithm, the exponent as it is.
+        let own = |model: Model, back: fn(f64) -> f64, absent: f64| match (self.model == model, self.own) {
+            (false, _) => absent,
+            (true, Some(i)) => back(theta[i]),
+            (true, None) => self.given.unwrap_or(absent),
+        };
         Forces {
             uniform: rate(self.uniform),
             preferential: rate(self.preferential),
             loss: rate(self.loss),
-            dormant_share: if self.model == Model::Dormancy { logistic(own) } else { 0.0 },
-            growth_variance: if self.model == Model::GrowthVariance { own.exp() } else { 0.0 },
-            exponent: if self.model == Model::Power { own } else { 1.0 },
+            dormant_share: own(Model::Dormancy, logistic, 0.0),
+            growth_variance: own(Model::GrowthVariance, f64::exp, 0.0),
+            exponent: own(Model::Power, std::convert::identity, 1.0),
             outliers: MOST_OUTLIERS * logistic(theta[self.outliers]),
         }
     }
@@ -150,11 +157,6 @@ fn outlier_probability(after: u64) -> f64 {
     NORMALISED / ((after as f64 + 1.0) * scale * scale)
 }
 
-/// k^γ, and k itself up to 1.
-pub(super) fn kernel(degree: f64, exponent: f64) -> f64 {
-    if degree <= 1.0 { degree } else { degree.powf(exponent) }
-}
-
 impl Panel {
     pub fn new(rows: &[(u64, u64, u64)], before: DegreeCounts, after: DegreeCounts, turnover: f64) -> Self {
         let (mut gained, mut lost) = (0.0, 0.0);
@@ -176,12 +178,25 @@ impl Panel {
         }
     }
 
-    /// Fits one candidate, from `near` when another candidate's fit is known.
-    pub fn fit(&self, model: Model, near: Option<&PanelFit>) -> PanelFit {
-        let layout = Layout::new(model, self.shrinks);
+    /// Fits one candidate, its own parameter held where `given`, from `near` when another candidate's fit is known.
+    ///
+    /// # Errors
+    /// Cancellation, asked before each evaluation of the likelihood.
+    pub fn fit(
+        &self,
+        model: Model,
+        given: Option<f64>,
+        near: Option<&PanelFit>,
+        cancelled: &dyn Fn() -> bool,
+    ) -> Result<PanelFit, FitError> {
+        let layout = Layout::new(model, given, self.shrinks);
         let (start, bounds) = self.start(&layout, near);
-        let best = maximise(&start, &bounds, &self.weights, |theta| self.log_terms(&layout.forces(theta)));
-        self.read(&layout, &best)
+        let terms = |theta: &[f64]| match cancelled() {
+            true => Err(FitError::Cancelled),
+            false => Ok(self.log_terms(&layout.forces(theta))),
+        };
+        let best = maximise(&start, &bounds, &self.weights, terms)?;
+        Ok(self.read(&layout, &best))
     }
 
     fn start(&self, layout: &Layout, near: Option<&PanelFit>) -> (Vec<f64>, Vec<(f64, f64)>) {
@@ -223,7 +238,7 @@ impl Panel {
         let k = degree as f64;
         if exponent != 1.0 {
             // The tangent half-way along the expected gain, where it errs least over the whole of it.
-            let hazard = |x: f64| u + v * kernel(x.max(0.0), exponent);
+            let hazard = |x: f64| u + v * power_kernel(x.max(0.0), exponent);
             let middle = k + 0.5 * (hazard(k) - w * k).clamp(-k, k + 1.0);
             let half = 0.5_f64.min(middle.max(0.25));
             let slope = (hazard(middle + half) - hazard(middle - half)) / (2.0 * half);
@@ -264,7 +279,7 @@ impl Panel {
     fn log_terms(&self, forces: &Forces) -> Vec<f64> {
         let by_degree = forces.exponent != 1.0 || forces.growth_variance > 0.0;
         // A curved kernel bends most at low degrees, where an exact law is cheap.
-        let hazard = |k: f64| forces.uniform + forces.preferential * kernel(k, forces.exponent);
+        let hazard = |k: f64| forces.uniform + forces.preferential * power_kernel(k, forces.exponent);
         let slow = hazard(LARGEST_STATE as f64) < MOST_STEPS;
         let low = (forces.exponent != 1.0 && slow).then(|| BirthDeath::new(hazard, forces.loss));
         let mixtures = Mixtures::new(forces);
@@ -314,7 +329,7 @@ impl Panel {
     pub fn landed(&self, fit: &PanelFit) -> (f64, f64) {
         let nodes = log_mean(self.before.nodes() as f64, self.after.nodes() as f64);
         let kernel_sum = |counts: &DegreeCounts| -> f64 {
-            counts.iter().map(|(k, n)| n as f64 * kernel(k as f64, fit.exponent)).sum()
+            counts.iter().map(|(k, n)| n as f64 * power_kernel(k as f64, fit.exponent)).sum()
         };
         let end = kernel_sum(&self.after) * self.attraction_at_end(fit);
         (fit.uniform * nodes, fit.preferential * log_mean(kernel_sum(&self.before), end))

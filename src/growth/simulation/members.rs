@@ -4,6 +4,7 @@ use rand::RngExt;
 use rand::rngs::SmallRng;
 use rand_distr::{Distribution, Gamma};
 
+use crate::growth::power_kernel;
 use crate::model::{DegreeCounts, GrowthParameters};
 use crate::numerics::sum_tree::SumTree;
 
@@ -172,7 +173,7 @@ impl Weights {
     fn weigh(&mut self, node: usize, degree: u64) {
         let (factor, k) = (self.factors[node], degree as f64);
         self.by_node.set(node, factor);
-        self.by_degree.set(node, factor * if k <= 1.0 { k } else { k.powf(self.exponent) });
+        self.by_degree.set(node, factor * power_kernel(k, self.exponent));
         self.by_end.set(node, k);
     }
 }
