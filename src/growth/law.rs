@@ -11,12 +11,14 @@ use panel::{LawPanel, barycentric_weights};
 use statrs::function::beta::checked_beta_reg;
 
 use super::mean_field::{Course, GrowthError};
-use crate::numerics::inversion::upper_tail;
+use crate::numerics::inversion::{rare_upper_tail, upper_tail};
 use crate::numerics::quadrature::{PANEL, PANEL_NODES};
 use crate::numerics::tolerances::{Accuracy, MESH_LOG_CHANGE};
 
 /// Expected gains below this are none.
 const NEVER: f64 = 1e-280;
+/// Below this shape (u/v, for a node without links) nearly all of the law lies at no gain, and the rest is a logarithmic series.
+const RARE_SHAPE: f64 = 0.01;
 /// Once a link's expected descendants are fewer than e^{−50}, what came before leaves no trace in double precision.
 const FORGOTTEN: f64 = -50.0;
 
@@ -159,7 +161,13 @@ impl NodeLaw {
         let below: Vec<(f64, f64)> = starts[..open].iter().rev().map(below).collect();
         let law = GainLaw { law: self, reference: reference as f64, below: &below };
         let gain = threshold as f64 - reference as f64;
-        Ok(certain + share * upper_tail(&law, gain, accuracy)?)
+        // Without losses and from one degree the gain starts at 0; its mean over the spread is the law's shape.
+        let gained = self.mean(reference) - reference as f64;
+        let rare = !self.losses && below.len() == 1 && gained < RARE_SHAPE * self.spread;
+        // A network that starts without any link bends u/v too much for the rare form; the common one serves it.
+        let rare = if rare { rare_upper_tail(&law, gain, accuracy).ok() } else { None };
+        let tail = rare.map_or_else(|| upper_tail(&law, gain, accuracy), Ok);
+        Ok(certain + share * tail?)
     }
 
     /// P(at least `threshold` of `degree` links are kept), for a node that gains none: binomial.

@@ -95,6 +95,53 @@ pub fn upper_tail(gf: &impl GeneratingFunction, g: f64, accuracy: Accuracy) -> R
     contour_integral(gf, g, &saddle, accuracy).and_then(|below| probability(1.0 - below))
 }
 
+/// Computes P(G ≥ g), g ≥ 1, of a variable on 0, 1, 2, … that is seldom above 0.
+///
+/// Formula: `(1/2πi) ∮ (E[z^G] − P(G = 0)) z^{−g}/(z−1) dz` outside z = 1. The constant taken out contributes nothing to the
+/// integral, but where it is nearly all of E[z^G] it hides a singularity as weak as a logarithm, and the saddle point of the
+/// whole lies too close to it for any step to settle.
+///
+/// # Errors
+/// [`InversionError`] when the sums do not settle.
+pub fn rare_upper_tail(gf: &impl GeneratingFunction, g: f64, accuracy: Accuracy) -> Result<f64, InversionError> {
+    const NEARLY_ZERO: f64 = -700.0; // z = e^{−700}
+    let log_zero = gf.log_real(NEARLY_ZERO)[0];
+    let some = -log_zero.exp_m1();
+    if g <= 1.0 || some <= 0.0 {
+        return probability(some);
+    }
+    let above = AboveZero { gf, log_zero };
+    let [_, mean, variance] = above.log_real(0.0);
+    let saddle = find_saddle(&above, g, mean.min(g - 0.5), variance.max(1e-3), Side::Upper);
+    if saddle.height < UNDERFLOW {
+        return Ok(0.0);
+    }
+    contour_integral(&above, g, &saddle, accuracy).and_then(probability)
+}
+
+/// E[z^G] − P(G = 0): its coefficients are still probabilities.
+struct AboveZero<'a, G> {
+    gf: &'a G,
+    log_zero: f64,
+}
+
+impl<G: GeneratingFunction> GeneratingFunction for AboveZero<'_, G> {
+    fn log_at(&self, zeta: Complex64) -> Complex64 {
+        self.log_zero + complex_exp_m1(self.gf.log_at(zeta) - self.log_zero).ln()
+    }
+
+    fn log_real(&self, zeta: f64) -> [f64; 3] {
+        let [value, slope, bend] = self.gf.log_real(zeta);
+        let excess = (value - self.log_zero).exp_m1().max(f64::MIN_POSITIVE);
+        let whole = 1.0 + excess.recip();
+        [self.log_zero + excess.ln(), slope * whole, bend * whole - slope * slope * whole / excess]
+    }
+
+    fn singularity(&self) -> f64 {
+        self.gf.singularity()
+    }
+}
+
 fn probability(value: f64) -> Result<f64, InversionError> {
     if value.is_nan() { Err(InversionError) } else { Ok(value.clamp(0.0, 1.0)) }
 }

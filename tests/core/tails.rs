@@ -161,3 +161,32 @@ fn a_mixture_of_starts_is_the_sum_of_its_parts() {
         }
     }
 }
+
+/// A newcomer without links under almost purely preferential attachment: nearly all of its law lies at 0, and the rest is nearly
+/// Fisher's logarithmic series. Against the closed form (a negative binomial law of tiny shape, here summed term by term).
+#[test]
+fn rare_gains_are_as_exact_as_common_ones() {
+    for (share, days) in [(0.99999, 1_000.0), (0.9999999, 1_000.0), (0.999, 20.0), (0.99999, 5.0)] {
+        // K/N stays 3: the law is exactly negative binomial.
+        let start = counts(&[(0, 500), (3, 400), (18, 100)]);
+        let course = Course::new(&start, forces(share, 3.0), days).unwrap();
+        let law = NodeLaw::between(&course, 0.0, days);
+        let (shape, q) = ((1.0 - share) * 3.0 / share, (-share * (1.0 + days / 1e3_f64).ln()).exp());
+        for accuracy in [Accuracy::Full, Accuracy::Working] {
+            for threshold in [1_u64, 2, 3, 17, 60, 200] {
+                let mut term = q.powf(shape);
+                let mut exact = 0.0;
+                for n in 0..4_000 {
+                    exact += if n >= threshold { term } else { 0.0 };
+                    term *= (shape + n as f64) * (1.0 - q) / (n as f64 + 1.0);
+                }
+                let ours = law.tail_within(0, threshold, accuracy).unwrap();
+                let allowed = if accuracy == Accuracy::Full { 1e-8 } else { 2e-5 };
+                assert!(
+                    (ours - exact).abs() <= allowed * exact + 1e-290,
+                    "p {share}, {days} days, {threshold}: {ours:e} {exact:e}"
+                );
+            }
+        }
+    }
+}
