@@ -4,6 +4,7 @@
 
 pub mod elementary;
 pub mod gamma;
+pub mod intervals;
 pub mod inversion;
 pub mod optimise;
 pub mod quadrature;

@@ -1,12 +1,13 @@
 //! Link events: the exact likelihood of every landing, and the attachment curve without a model.
 
-use statrs::distribution::{ChiSquared, ContinuousCDF, Gamma};
+use statrs::distribution::{ChiSquared, ContinuousCDF};
 
 use super::profile::{ESTIMATE_LEVEL, NORMAL_95, Profile, profile_share, weigh};
 use super::{Attachment, Candidate, CurvePoint, FitError, Force, Model, ModelChoice};
 use crate::growth::power_kernel;
 use crate::model::{AttachmentCell, Estimate, Interval, LinkEvents, Warning};
 use crate::numerics::elementary::logistic;
+use crate::numerics::intervals::poisson_mean;
 use crate::numerics::scoring::maximise;
 
 /// p is found to this.
@@ -177,14 +178,9 @@ fn curve(events: &LinkEvents, share: f64) -> Vec<CurvePoint> {
         }
     }
     let point = |(&(lowest, highest), &(landings, alike, fitted)): (&(u64, u64), &(u64, f64, f64))| {
-        let bound =
-            |shape: f64, probability: f64| Gamma::new(shape, 1.0).map_or(0.0, |law| law.inverse_cdf(probability));
-        let n = landings as f64;
-        // Ends of a Poisson mean (Garwood 1936).
-        let low = if landings == 0 { 0.0 } else { bound(n, 0.5 - 0.5 * ESTIMATE_LEVEL) };
-        let high = bound(n + 1.0, 0.5 + 0.5 * ESTIMATE_LEVEL);
+        let (low, high) = poisson_mean(landings as f64, ESTIMATE_LEVEL);
         let interval = Interval { level: ESTIMATE_LEVEL, low: low / alike, high: high / alike };
-        let attraction = Estimate { value: n / alike, interval: Some(interval) };
+        let attraction = Estimate { value: landings as f64 / alike, interval: Some(interval) };
         CurvePoint { lowest, highest, landings, attraction, fitted: fitted / alike }
     };
     ranges.iter().zip(&sums).filter(|(_, sum)| sum.1 > 0.0).map(point).collect()

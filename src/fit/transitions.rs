@@ -6,9 +6,6 @@ mod likelihood;
 mod node_pmf;
 mod renames;
 
-use likelihood::{Panel, PanelFit};
-use statrs::distribution::{Beta, ContinuousCDF};
-
 use super::profile::{AGE_WEIGHT, ESTIMATE_LEVEL, NORMAL_95, weigh};
 use super::{Candidate, FitError, Fixed, Force, Model, OutlierClass, Outliers, PeriodRates, TransitionSummary};
 use crate::model::{
@@ -16,6 +13,8 @@ use crate::model::{
     MAX_KERNEL_EXPONENT, Transitions, Warning,
 };
 use crate::numerics::elementary::logistic;
+use crate::numerics::intervals::binomial_share;
+use likelihood::{Panel, PanelFit};
 
 /// Periods read at most, the newest ones.
 const MOST_PERIODS: usize = 6;
@@ -216,12 +215,7 @@ fn departures(periods: &[Read]) -> Force {
         .collect();
     let mut force = pooled(&logs, f64::exp);
     if let [(departed, present, days, _)] = rows[..] {
-        let bound = |a: f64, b: f64, probability: f64| {
-            Beta::new(a, b).map_or(departed as f64 / present as f64, |law| law.inverse_cdf(probability))
-        };
-        let (d, stayed) = (departed as f64, (present - departed) as f64);
-        let low = if departed == 0 { 0.0 } else { bound(d, stayed + 1.0, (1.0 - ESTIMATE_LEVEL) / 2.0) };
-        let high = if stayed == 0.0 { 1.0 } else { bound(d + 1.0, stayed, (1.0 + ESTIMATE_LEVEL) / 2.0) };
+        let (low, high) = binomial_share(departed as f64, present as f64, ESTIMATE_LEVEL);
         let interval = Interval { level: ESTIMATE_LEVEL, low: hazard(low, days), high: hazard(high, days) };
         force.estimate.interval = Some(interval);
     }

@@ -3,11 +3,11 @@
 use proptest::prelude::*;
 use proptest::test_runner::RngSeed;
 use tailcast::evaluate::{OriginRequest, answer};
-use tailcast::fit::{FitRequest, Fixed};
+use tailcast::fit::{FitRequest, Fixed, Rung, fit};
 use tailcast::forecast::CountForecast;
 use tailcast::model::{
     ArrivalPlan, ArrivalSegment, AttachmentMix, DegreeCounts, DegreeKind, Evidence, ForecastPlan, Levels, MAX_DEGREE,
-    Snapshot, Thresholds,
+    Move, Snapshot, Thresholds, Transitions,
 };
 
 fn degree() -> impl Strategy<Value = u64> {
@@ -114,6 +114,53 @@ proptest! {
                 prop_assert!(answer.fit.goodness.is_none_or(|g| g.distance.is_finite() && g.worst_log_ratio.is_finite()));
             }
             Err(error) => prop_assert!(!error.to_string().is_empty()),
+        }
+    }
+}
+
+fn row() -> impl Strategy<Value = (Option<u64>, Option<u64>, u64)> {
+    let degree = || prop_oneof![3 => 0..6u64, 2 => 0..400u64, 1 => 0..=MAX_DEGREE];
+    let side = move || prop_oneof![5 => degree().prop_map(Some), 1 => Just(None)];
+    (side(), side(), prop_oneof![4 => 1..300u64, 1 => 1..1u64 << 40])
+}
+
+proptest! {
+    #![proptest_config(ProptestConfig { rng_seed: RngSeed::Fixed(20_260_602), ..ProptestConfig::with_cases(20) })]
+    #[test]
+    fn any_table_of_transitions_gets_finite_estimates_or_words(
+        rows in prop::collection::vec(row(), 1..60),
+        total in any::<bool>(),
+        days in prop_oneof![4 => 1i64..1_000, 1 => Just(100_000i64)],
+    ) {
+        let kind = if total { DegreeKind::Total } else { DegreeKind::Received };
+        let from: jiff::Timestamp = "2026-01-01T00:00:00Z".parse().unwrap();
+        let mut seen = std::collections::BTreeSet::new();
+        let moves: Vec<Move> = rows
+            .into_iter()
+            .filter(|row| seen.insert((row.0, row.1)) && (row.0.is_some() || row.1.is_some()))
+            .map(|(before, after, nodes)| Move { before, after, nodes })
+            .collect();
+        let to = from + jiff::SignedDuration::from_hours(24 * days);
+        let Ok(table) = Transitions::new(from, to, &moves) else { return Ok(()) };
+        let Some(counts) = table.counts_after() else { return Ok(()) };
+        let evidence = Evidence::new(kind, vec![Snapshot { as_of: to, counts }], None).unwrap();
+        let evidence = evidence.with_transitions(vec![table]).unwrap();
+        for rung in [Rung::Transitions, Rung::SuccessiveSnapshots] {
+            let clock = std::time::Instant::now();
+            let request = FitRequest { rung: Some(rung), ..FitRequest::default() };
+            let result = fit(&evidence, &request, &|| clock.elapsed().as_millis() > 1_500);
+            prop_assert!(clock.elapsed().as_secs() < 30, "took {:?}", clock.elapsed());
+            let Ok(fit) = result else { continue };
+            let forces = fit.forces;
+            for force in [forces.departures, forces.link_losses, forces.kernel_exponent, forces.dormant_share, forces.growth_variance] {
+                let interval = force.estimate.interval;
+                prop_assert!(force.value().is_finite() && force.excursion.0.is_finite() && force.excursion.1.is_finite());
+                prop_assert!(interval.is_none_or(|i| i.low.is_finite() && i.high.is_finite()), "{force:?}");
+            }
+            prop_assert!((0.0..=1.0).contains(&fit.preferential_share.value), "{:?}", fit.preferential_share);
+            let summary = fit.transitions.unwrap();
+            prop_assert!(summary.candidates.iter().all(|c| c.aic.is_finite() && c.weight.is_finite()), "{:?}", summary.candidates);
+            prop_assert!(summary.periods.iter().all(|p| p.landed_per_day.is_finite() && p.departure_share.is_finite()));
         }
     }
 }
