@@ -14,7 +14,7 @@ use crate::model::{
 };
 use crate::numerics::elementary::logistic;
 use crate::numerics::intervals::binomial_share;
-use likelihood::{Panel, PanelFit};
+use likelihood::{Change, Panel, PanelFit};
 
 /// Periods read at most, the newest ones.
 const MOST_PERIODS: usize = 6;
@@ -124,6 +124,7 @@ pub(super) fn fit_transitions(
         return Err(FitError::NotConverged { detail: "no candidate found a maximum on the transitions".into() });
     };
     let (last, fit) = (&periods[periods.len() - 1], &best[best.len() - 1]);
+    warnings.extend(misfit(last, fit));
     let candidates: Vec<CandidateFit> = found.iter().map(|(model, fits)| candidate(*model, &periods, fits)).collect();
     Ok(TransitionFit {
         departures: departures(&periods),
@@ -296,6 +297,31 @@ fn pooled(rows: &[(f64, f64, f64)], back: fn(f64) -> f64) -> Force {
         estimate: Estimate { value: back(value), interval: Some(interval) },
         excursion: (back(value - deviation), back(value + deviation)),
     }
+}
+
+/// A warning when even the likeliest candidate misses how some class of nodes changed, in the newest period.
+fn misfit(period: &Read, fit: &PanelFit) -> Option<Warning> {
+    /// Standard errors, and links a node, by which a class must be off to be worth a warning.
+    const BEYOND_CHANCE: f64 = 4.0;
+    const WORTH_A_WARNING: f64 = 0.25;
+    let changes = period.panel.changes(fit);
+    let off = |c: &Change| (c.observed - c.expected) / c.variance.max(1.0).sqrt();
+    let far = |c: &&Change| {
+        let scale = c.observed.abs().max(c.expected.abs());
+        off(c).abs() > BEYOND_CHANCE && (c.observed - c.expected).abs() > WORTH_A_WARNING * scale
+    };
+    let worst = changes.iter().filter(far).max_by(|a, b| off(a).abs().total_cmp(&off(b).abs()))?;
+    let detail = format!(
+        "no candidate reproduces how degrees changed from {} to {}: nodes with {} to {} links moved by {:+.3} links on average, \
+         outliers aside, where the likeliest candidate has {:+.3}; something besides degree decides who gains or loses there",
+        period.table.from(),
+        period.table.to(),
+        worst.lowest,
+        (2 * worst.lowest).saturating_sub(1),
+        worst.observed / worst.nodes,
+        worst.expected / worst.nodes
+    );
+    Some(Warning::new("transitions_misfit", detail))
 }
 
 /// What was set aside, by class of degree before: single degrees 0 and 1, then doubling.

@@ -186,6 +186,8 @@ pub struct CandidateAnswer {
     pub aic: Real,
     /// Weight among the candidates; the weights add up to one.
     pub weight: Real,
+    /// The candidate in words.
+    pub verdict: String,
 }
 
 /// How well the fitted law reproduces the counts.

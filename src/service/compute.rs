@@ -212,6 +212,7 @@ impl From<&Candidate> for CandidateAnswer {
             log_likelihood: Real(candidate.log_likelihood),
             aic: Real(candidate.aic),
             weight: Real(candidate.weight),
+            verdict: candidate.verdict(),
         }
     }
 }

@@ -248,3 +248,31 @@ fn a_fit_of_transitions_stops_when_told() {
     assert!(matches!(stopped, Err(FitError::Cancelled)), "{stopped:?}");
     assert_eq!(asks.get(), 6);
 }
+
+/// Nodes that gain whatever no kernel gives them: half of those with four to seven links get five more, the rest of the network
+/// grows by a mix. The fit says where it fails; of a plain mix it has nothing to say.
+#[test]
+fn a_misfit_of_transitions_is_told() {
+    let mut network = Simulation::new(&counts(&[(3, 200)]), forces(0.8, 3.0), 1).unwrap();
+    network.arrive_many(20_000).unwrap();
+    let arrivals = tailcast::model::ArrivalPlan::constant(40.0).unwrap();
+    let start = network.degree_counts().unwrap();
+    let mut network = Simulation::new(&start, forces(0.8, 3.0).with_arrivals(arrivals), 2).unwrap();
+    network.run_until(100.0).unwrap();
+    let plain = network.moves();
+    let mut moved: BTreeMap<(Option<u64>, Option<u64>), u64> = BTreeMap::new();
+    for step in &plain {
+        let pushed = if step.before.is_some_and(|k| (4..8).contains(&k)) { step.nodes / 2 } else { 0 };
+        *moved.entry((step.before, step.after)).or_default() += step.nodes - pushed;
+        *moved.entry((step.before, step.after.map(|k| k + 5))).or_default() += pushed;
+    }
+    let odd: Vec<Move> = moved.into_iter().map(|((before, after), nodes)| Move { before, after, nodes }).collect();
+    let request = FitRequest { rung: Some(Rung::Transitions), ..FitRequest::default() };
+    let told = |moves: &[Move]| {
+        let fit = fit(&from_moves(DegreeKind::Received, moves), &request);
+        fit.warnings.into_iter().find(|warning| warning.code == "transitions_misfit")
+    };
+    assert_eq!(told(&plain), None);
+    let warning = told(&odd).expect("a warning");
+    assert!(warning.detail.contains("4 to 7 links"), "{}", warning.detail);
+}

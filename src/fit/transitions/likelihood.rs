@@ -60,6 +60,40 @@ pub(super) struct PanelFit {
     pub errors: Errors,
 }
 
+impl PanelFit {
+    fn forces(&self) -> Forces {
+        Forces {
+            uniform: self.uniform,
+            preferential: self.preferential,
+            loss: self.loss,
+            dormant_share: self.dormant_share,
+            growth_variance: self.growth_variance,
+            exponent: self.exponent,
+            outliers: self.outlier_share,
+        }
+    }
+}
+
+/// How the degrees of one class of nodes changed, summed over the nodes.
+#[derive(Debug, Clone, Copy)]
+pub(super) struct Change {
+    /// Smallest degree before of the class.
+    pub lowest: u64,
+    pub nodes: f64,
+    pub observed: f64,
+    pub expected: f64,
+    pub variance: f64,
+}
+
+impl Change {
+    fn add(&mut self, other: &Self) {
+        self.nodes += other.nodes;
+        self.observed += other.observed;
+        self.expected += other.expected;
+        self.variance += other.variance;
+    }
+}
+
 /// Standard errors on the scales in which estimates are near normal.
 #[derive(Debug, Clone, Copy, Default)]
 pub(super) struct Errors {
@@ -349,20 +383,43 @@ impl Panel {
 
     /// Rows that more likely are outliers than not: (before, after, nodes).
     pub fn outliers(&self, fit: &PanelFit) -> Vec<(u64, u64, u64)> {
-        let forces = Forces {
-            uniform: fit.uniform,
-            preferential: fit.preferential,
-            loss: fit.loss,
-            dormant_share: fit.dormant_share,
-            growth_variance: fit.growth_variance,
-            exponent: fit.exponent,
-            outliers: fit.outlier_share,
-        };
+        let forces = fit.forces();
         let terms = self.log_terms(&forces);
         let rows = self.rows.iter().zip(&self.weights).zip(&terms);
         let strange =
             rows.filter(|((row, _), term)| forces.outliers * outlier_probability(row.1) > OUTLIER_FROM * term.exp());
         strange.map(|((&(k, j), &n), _)| (k, j, n as u64)).collect()
+    }
+
+    /// Mean change of degree by class of degree before (0, then doubling), as counted without outliers and as fitted.
+    pub fn changes(&self, fit: &PanelFit) -> Vec<Change> {
+        let forces = fit.forces();
+        let (mixtures, outliers) = (Mixtures::new(&forces), self.outliers(fit));
+        let mut changes: Vec<Change> = Vec::new();
+        for (&(before, after), n) in self.rows.iter().zip(&self.weights) {
+            if outliers.binary_search(&(before, after, *n as u64)).is_ok() {
+                continue;
+            }
+            let lowest = if before == 0 { 0 } else { 1 << before.ilog2() };
+            let (k, mut mean, mut square) = (before as f64, 0.0, 0.0);
+            for (share, law) in self.laws(&forces, &mixtures, before) {
+                let (m, s) = law.moments_from(k);
+                mean += share * (m - k);
+                square += share * (s + (m - k).powi(2));
+            }
+            let change = Change {
+                lowest,
+                nodes: *n,
+                observed: n * (after as f64 - k),
+                expected: n * mean,
+                variance: n * (square - mean * mean),
+            };
+            match changes.last_mut().filter(|last| last.lowest == lowest) {
+                Some(last) => last.add(&change),
+                None => changes.push(change),
+            }
+        }
+        changes
     }
 
     /// Law of a newcomer's degree at the period's end from its degree on arrival, averaged over the arrival's day.
