@@ -172,7 +172,7 @@ pub struct EstimateAnswer {
 }
 
 /// One candidate's record on the evidence.
-#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize, ToSchema)]
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize, ToSchema)]
 pub struct CandidateAnswer {
     /// The candidate.
     pub model: AttachmentModel,
