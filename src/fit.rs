@@ -81,6 +81,22 @@ pub enum Rung {
     LinkEvents,
 }
 
+impl Rung {
+    /// The rungs that a mix can be read from, lowest first.
+    pub const READ: [Self; 4] = [Self::OneSnapshot, Self::SuccessiveSnapshots, Self::Transitions, Self::LinkEvents];
+
+    /// Its name as callers write it.
+    pub fn name(self) -> &'static str {
+        match self {
+            Self::Given => "given",
+            Self::OneSnapshot => "one_snapshot",
+            Self::SuccessiveSnapshots => "successive_snapshots",
+            Self::Transitions => "transitions",
+            Self::LinkEvents => "link_events",
+        }
+    }
+}
+
 /// What to take as given instead of fitting it.
 #[derive(Debug, Clone, Copy, PartialEq, Default)]
 pub struct Fixed {

@@ -70,14 +70,6 @@ pub const FORECAST_FIELDS: [&str; 19] = [
 /// Fields of what is taken as given.
 pub const FIXED_FIELDS: [&str; 4] = ["preferential_share", "kernel_exponent", "dormant_share", "growth_variance"];
 
-/// Evidence as callers name it.
-const RUNGS: [(&str, Rung); 4] = [
-    ("one_snapshot", Rung::OneSnapshot),
-    ("successive_snapshots", Rung::SuccessiveSnapshots),
-    ("transitions", Rung::Transitions),
-    ("link_events", Rung::LinkEvents),
-];
-
 /// Seed when none is given.
 const DEFAULT_SEED: u64 = 1;
 
@@ -150,9 +142,9 @@ fn model_choice(name: &str, faults: &mut Faults) -> Option<ModelChoice> {
 
 /// The evidence that the mix is to be read from.
 fn rung(name: &str, faults: &mut Faults) -> Option<Rung> {
-    let rung = RUNGS.into_iter().find(|&(known, _)| known == name).map(|(_, rung)| rung);
+    let rung = Rung::READ.into_iter().find(|rung| rung.name() == name);
     if rung.is_none() {
-        let names = RUNGS.map(|(name, _)| name).join(", ");
+        let names = Rung::READ.map(Rung::name).join(", ");
         faults.add(&At::ROOT.field("evidence"), format!("the mix can be read from {names}"));
     }
     rung

@@ -120,7 +120,9 @@ pub struct FitReport {
     pub candidates: Vec<CandidateAnswer>,
     /// How well the fitted law reproduces the counts; null when nothing was fitted.
     pub goodness: Option<GoodnessAnswer>,
-    /// The fit in words.
+    /// The fit in words; empty in runs from before there were any.
+    #[serde(default)]
+    #[schema(required = true)]
     pub verdict: String,
 }
 
@@ -186,7 +188,9 @@ pub struct CandidateAnswer {
     pub aic: Real,
     /// Weight among the candidates; the weights add up to one.
     pub weight: Real,
-    /// The candidate in words.
+    /// The candidate in words; empty in runs from before there were any.
+    #[serde(default)]
+    #[schema(required = true)]
     pub verdict: String,
 }
 

@@ -6,7 +6,7 @@ use sha2::{Digest, Sha256};
 use super::network::kind_name;
 use super::numbers::{Real, date_text};
 use crate::evaluate::OriginRequest;
-use crate::fit::{FitRequest, ModelChoice};
+use crate::fit::{FitRequest, ModelChoice, Rung};
 use crate::model::{ArrivalPlan, AttachmentCell, Evidence, ForecastPlan, LinkEvents, Transitions};
 
 /// The largest seed: 2^53 − 1, the largest whole number every JSON reader keeps exactly.
@@ -102,7 +102,7 @@ struct Canonical<'a> {
     #[serde(skip_serializing_if = "Option::is_none")]
     link_losses_per_link_day: Option<Real>,
     #[serde(skip_serializing_if = "Option::is_none")]
-    evidence: Option<String>,
+    evidence: Option<&'static str>,
     #[serde(skip_serializing_if = "Option::is_none")]
     kernel_exponent: Option<Real>,
     #[serde(skip_serializing_if = "Option::is_none")]
@@ -192,7 +192,7 @@ fn canonical_fit<'a>(asked: &'static str, evidence: &'a Evidence, fit: &FitReque
         links_per_node_day: Real(fit.links_per_node_day),
         departures_per_node_day: given(fit.departures_per_node_day),
         link_losses_per_link_day: given(fit.link_losses_per_link_day),
-        evidence: fit.rung.map(|rung| format!("{rung:?}")),
+        evidence: fit.rung.map(Rung::name),
         kernel_exponent: fit.fixed.kernel_exponent.map(Real),
         dormant_share: fit.fixed.dormant_share.map(Real),
         growth_variance: fit.fixed.growth_variance.map(Real),

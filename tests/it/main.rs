@@ -22,3 +22,4 @@ mod openapi;
 mod operation;
 mod process;
 mod stored_evidence;
+mod upgrade;
