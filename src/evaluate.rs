@@ -4,8 +4,10 @@ mod member;
 mod origin;
 mod pool;
 mod record;
+mod scores;
 
 pub use member::{Member, Step, Totals, Trend};
 pub use origin::{OriginAnswer, OriginError, OriginRequest, answer};
 pub use pool::{Pool, PoolShare, pool, pooled_size};
 pub use record::{Growth, LawSizes, OriginRecord, Outlook, Target, record};
+pub use scores::{Coverage, LOG_ERROR_FLOOR, absolute_error, crps, interval_score, log_error};
