@@ -4,12 +4,13 @@ use jiff::Timestamp;
 
 use super::member::{HALF_A_NODE, Member};
 use super::record::{Growth, OriginRecord, Outlook};
+use super::scores::log_error;
 use crate::fit::Model;
 
 /// Weight of a score from one more period back.
-const DECAY: f64 = 0.7;
+pub(super) const DECAY: f64 = 0.7;
 /// Weight of scores at other horizons than the one asked for.
-const OTHER_HORIZON: f64 = 0.5;
+pub(super) const OTHER_HORIZON: f64 = 0.5;
 /// Weights fall with this power of the score.
 const POWER: i32 = 4;
 /// Tails of fewer nodes do not score.
@@ -156,11 +157,6 @@ fn hindsight(record: &OriginRecord) -> Vec<(Member, f64)> {
         }
     }
     means.take()
-}
-
-/// ln(forecast/observed), half a node at the least on either side.
-pub(super) fn log_error(forecast: f64, observed: f64) -> f64 {
-    (forecast.max(HALF_A_NODE) / observed.max(HALF_A_NODE)).ln()
 }
 
 /// Running means, one a member.

@@ -77,6 +77,8 @@ pub struct OriginRecord {
     pub totals: (Totals, Totals),
     /// Tail sizes at both, one pair a threshold.
     pub sizes: Vec<(f64, f64)>,
+    /// Whether no node leaves and no link is lost, so that nodes in a tail are in it for good.
+    pub lossless: bool,
     /// Candidates that could be fitted.
     pub models: Vec<Model>,
     /// What each made of the newest period, from its start: its fit in hindsight.
@@ -148,6 +150,7 @@ pub fn record(
         thresholds: thresholds.to_vec(),
         totals: (totals(before), totals(now)),
         sizes: thresholds.iter().map(|&j| (size(before, j), size(now, j))).collect(),
+        lossless: !fitted.iter().any(|mechanism| mechanism.forces.has_losses()),
         models: fitted.iter().map(|mechanism| mechanism.model).collect(),
         hindsight,
         outlooks,
