@@ -46,10 +46,13 @@ const WILSON_HILFERTY_FROM: f64 = 1e5;
 /// assert!((ranked_score(&rare, 0.0) / 1e-8 - 1.0).abs() < 1e-3);
 /// ```
 pub fn ranked_score(law: &TwoMoments, observed: f64) -> f64 {
-    let Some(excess) = Ratios::of(law).shape().filter(|_| law.variance >= SUMMED_BELOW) else {
-        return if law.variance < SUMMED_BELOW { summed(law, observed) } else { smooth(law, observed) };
-    };
-    if excess < SKEWED_BELOW { skewed(law, excess, observed) } else { smooth(law, observed) }
+    if law.variance < SUMMED_BELOW {
+        return summed(law, observed);
+    }
+    match Ratios::of(law).shape() {
+        Some(shape) if shape < SKEWED_BELOW => skewed(law, shape, observed),
+        _ => smooth(law, observed),
+    }
 }
 
 /// The laws as one family: P(x + 1)/P(x) = (a + b·x)/(x + 1) with r the variance over the mean, a = mean/r and b = 1 − 1/r
