@@ -1,22 +1,26 @@
 //! Puts fit and forecast together at an origin date, keeps a record of what came of it, and pools by the record; forecasts
 //! arrivals.
 
+mod ahead;
 mod arrivals;
 mod backtest;
 mod member;
 mod origin;
 mod pool;
+mod pooled;
 mod rates;
 mod record;
 mod scores;
 mod spread;
 
+pub use ahead::Rates;
 pub use arrivals::{ArrivalForecast, arrival_periods, forecast_arrivals, forecast_links_per_arrival, link_periods};
 pub use backtest::{Case, Observed, Replay, replay};
 pub use member::{Member, Step, Totals, Trend};
-pub use origin::{OriginAnswer, OriginError, OriginRequest, answer};
+pub use origin::{OriginAnswer, OriginError, OriginRequest, answer, answer_by, is_pooled};
 pub use pool::{Pool, PoolShare, pool, pooled_size};
+pub use pooled::{PoolUse, SCORED_AHEAD, past_records, scored_origins};
 pub use rates::{RateHistory, RateOutlook, RatePeriod};
-pub use record::{Growth, LawSizes, OriginRecord, Outlook, Target, record};
+pub use record::{Growth, LawSizes, OriginRecord, Outlook, Rate, RecordPlan, Target, record};
 pub use scores::{Coverage, LOG_ERROR_FLOOR, absolute_error, crps, interval_score, log_error};
 pub use spread::{DEFAULT_FLOW_ERROR, Spread};

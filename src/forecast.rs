@@ -5,7 +5,7 @@ mod horizon;
 mod largest;
 
 pub use counts::CountLaw;
-pub use horizon::{Excursion, Scenario, forecast};
+pub use horizon::{Excursion, Scenario, forecast, forecast_totals};
 
 use jiff::Timestamp;
 

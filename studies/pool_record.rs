@@ -15,7 +15,7 @@ use std::collections::BTreeMap;
 use std::sync::Mutex;
 use std::sync::atomic::{AtomicU64, Ordering};
 
-use tailcast::evaluate::{Case, Growth, Member, OriginRecord, Target, Trend, crps, log_error, record, replay};
+use tailcast::evaluate::{Case, Member, OriginRecord, RecordPlan, Trend, crps, log_error, record, replay};
 use tailcast::fit::{FitRequest, Model};
 use tailcast::model::{DegreeKind, Evidence, Snapshot};
 use worlds::{HARD, Kind, MIXED};
@@ -82,17 +82,9 @@ fn past(snapshots: &[Snapshot], thresholds: &[u64]) -> Vec<Case> {
     let observed = |date, threshold| {
         snapshots.iter().find(|snapshot| snapshot.as_of == date).map(|s| s.counts.tail_size(threshold) as f64)
     };
-    let target = |origin: usize, ahead: usize| {
-        let then = snapshots.get(origin + ahead)?;
-        let totals = (then.counts.nodes() as f64, then.counts.link_ends() as f64);
-        Some(Target { date: then.as_of, ahead: ahead as f64, growth: Growth::Known, totals })
-    };
-    let records: Vec<OriginRecord> = (1..snapshots.len() - 1)
-        .map(|origin| {
-            let targets: Vec<Target> = (1..=AHEAD).filter_map(|ahead| target(origin, ahead)).collect();
-            record(&evidence, origin, thresholds, &targets, &FitRequest::default(), &|| false).expect("a record")
-        })
-        .collect();
+    let plan = RecordPlan { thresholds: thresholds.to_vec(), ahead: AHEAD, expected: true, fit: FitRequest::default() };
+    let records: Vec<OriginRecord> =
+        (1..snapshots.len() - 1).map(|origin| record(&evidence, origin, &plan, &|| false).expect("a record")).collect();
     replay(&records, &observed).cases
 }
 

@@ -56,8 +56,12 @@ pub fn forecast_arrivals(evidence: &Evidence, departures: f64, horizon: f64) -> 
 }
 
 /// Forecasts the mean of ℓ, links that land on present nodes per arrival, over `horizon` days after the newest snapshot; losses,
-/// departures, entry degrees and links per node and day are those of `forces`. `None` where no period has arrivals.
+/// departures, entry degrees and links per node and day are those of `forces`. `None` where no period has arrivals, and where
+/// there are transitions: those tell what landed better than totals, from which one departing hub may take more than all that came.
 pub fn forecast_links_per_arrival(evidence: &Evidence, forces: &GrowthParameters, horizon: f64) -> Option<RateOutlook> {
+    if !evidence.transitions().is_empty() {
+        return None;
+    }
     RateHistory::new(&link_periods(evidence, forces)).map(|history| history.mean_over(horizon))
 }
 

@@ -4,7 +4,7 @@ use jiff::Timestamp;
 
 use super::member::Member;
 use super::pool::{Pool, pool, pooled_size};
-use super::record::{Growth, OriginRecord, Outlook};
+use super::record::{Growth, OriginRecord, Outlook, Rate};
 use super::spread::{Miss, PooledTail, Spread, miss, spread};
 use crate::fit::Model;
 use crate::forecast::CountLaw;
@@ -50,7 +50,7 @@ pub fn replay(records: &[OriginRecord], observed: &Observed) -> Replay {
     let mut replay = Replay::default();
     for (origin, record) in records.iter().enumerate() {
         for outlook in &record.outlooks {
-            let target = outlook.target;
+            let target = &outlook.target;
             if !matches!(target.growth, Growth::Known | Growth::Expected) {
                 continue;
             }
@@ -95,7 +95,7 @@ impl Replay {
 }
 
 /// The pooled forecast of the tail at index `j`, with its variance by chance and by what the members disagree by.
-fn pooled_tail(record: &OriginRecord, outlook: &Outlook, weights: &Pool, j: usize) -> Option<PooledTail> {
+pub(super) fn pooled_tail(record: &OriginRecord, outlook: &Outlook, weights: &Pool, j: usize) -> Option<PooledTail> {
     let members = record.members(outlook, j);
     let size = pooled_size(weights, &members)?;
     let mix = record.models.iter().position(|&m| m == Model::Mix).and_then(|i| outlook.laws.get(i)?.as_ref());
@@ -119,9 +119,9 @@ fn pooled_tail(record: &OriginRecord, outlook: &Outlook, weights: &Pool, j: usiz
     Some(PooledTail { size, kept, variance: chance + between })
 }
 
-/// Variance that the uncertainty of arrivals and landings adds: the square of half of what one standard deviation to either side
-/// makes of the tail at index `j`; 0 where they are known.
-fn of_growth(record: &OriginRecord, outlook: &Outlook, j: usize) -> f64 {
+/// Variance that the uncertainty of arrivals and landings adds: for each the square of half of what one standard deviation to
+/// either side makes of the tail at index `j`; 0 where they are known.
+pub(super) fn of_growth(record: &OriginRecord, outlook: &Outlook, j: usize) -> f64 {
     if outlook.target.growth == Growth::Known {
         return 0.0;
     }
@@ -131,14 +131,15 @@ fn of_growth(record: &OriginRecord, outlook: &Outlook, j: usize) -> f64 {
         let mut found = found.filter(|o| o.target.growth == growth && o.target.date == outlook.target.date);
         found.next()?.laws.get(mix?)?.as_ref()?.mean.get(j).copied()
     };
-    match (side(Growth::Low), side(Growth::High)) {
+    let variance = |rate| match (side(Growth::Low(rate)), side(Growth::High(rate))) {
         (Some(low), Some(high)) => (0.5 * (high - low)).powi(2),
         _ => 0.0,
-    }
+    };
+    variance(Rate::Arrivals) + variance(Rate::Links)
 }
 
 /// The law of the pooled forecast, with `more` variance than the record makes of it.
-fn law(record: &OriginRecord, tail: &PooledTail, spread: &Spread, more: f64) -> CountLaw {
+pub(super) fn law(record: &OriginRecord, tail: &PooledTail, spread: &Spread, more: f64) -> CountLaw {
     let certain = if record.lossless { tail.kept } else { 0.0 };
     let law = CountLaw::new(certain, tail.size - certain, spread.variance(tail) + more);
     law.with_degrees_of_freedom(spread.degrees_of_freedom)

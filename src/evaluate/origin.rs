@@ -1,7 +1,11 @@
 //! One origin: fit the evidence up to a date, then forecast from it.
 
-use crate::fit::{Fit, FitError, FitRequest, Force, Forces, fit};
-use crate::forecast::{DateForecast, Excursion, ForecastError, Scenario, forecast};
+use super::arrivals::{forecast_arrivals, forecast_links_per_arrival};
+use super::member::Member;
+use super::pooled::{PoolUse, past_records, pooled};
+use super::record::OriginRecord;
+use crate::fit::{Fit, FitError, FitRequest, Fixed, Force, Forces, ModelChoice, fit};
+use crate::forecast::{DateForecast, Excursion, ForecastError, Scenario, forecast, forecast_totals};
 use crate::model::{ArrivalPlan, AttachmentMix, Evidence, ForecastPlan, GrowthParameters, ParameterFault, Warning};
 
 /// Relative standard deviation of the flow past a threshold that parameters do not account for, while a network has no
@@ -45,6 +49,8 @@ pub struct OriginAnswer {
     pub fit: Fit,
     /// The forecast, one entry a date.
     pub forecast: Vec<DateForecast>,
+    /// How members were weighed for the tails, nearest dates first; empty when a single candidate was asked for or is all there is.
+    pub pools: Vec<PoolUse>,
     /// Warnings of the fit and of the forecast.
     pub warnings: Vec<Warning>,
     /// What every reader of any forecast must keep in mind.
@@ -78,6 +84,27 @@ pub enum OriginError {
 /// # Errors
 /// When the evidence does not tell the mix, or nothing can be forecast from it.
 pub fn answer(request: &OriginRequest, cancelled: &dyn Fn() -> bool) -> Result<OriginAnswer, OriginError> {
+    let past = if is_pooled(request) { past_records(request, cancelled)? } else { Vec::new() };
+    answer_by(request, &past, cancelled)
+}
+
+/// Whether a request asks for the pooled forecast: nothing is fixed, no candidate or evidence is asked for, and there is a period.
+pub fn is_pooled(request: &OriginRequest) -> bool {
+    let asks = &request.fit;
+    let free = asks.choice == ModelChoice::Auto && asks.rung.is_none() && asks.fixed == Fixed::default();
+    free && request.evidence.snapshots().len() > 1
+}
+
+/// The same as [`answer`] with the records of earlier origins at hand, those of [`super::scored_origins`] by
+/// [`super::RecordPlan::for_forecast`].
+///
+/// # Errors
+/// Those of [`answer`].
+pub fn answer_by(
+    request: &OriginRequest,
+    past: &[OriginRecord],
+    cancelled: &dyn Fn() -> bool,
+) -> Result<OriginAnswer, OriginError> {
     if cancelled() {
         return Err(ForecastError::Cancelled.into());
     }
@@ -86,20 +113,28 @@ pub fn answer(request: &OriginRequest, cancelled: &dyn Fn() -> bool) -> Result<O
         return Err(OriginError::ArrivalsRequired);
     }
     let fit = fit(&request.evidence, &request.fit, cancelled)?;
-    let scenario = scenario(request, &fit)?;
-    let forecast = forecast(&request.evidence.latest().counts, &scenario, &request.plan, cancelled)?;
+    let (scenario, expected) = scenario(request, &fit)?;
+    let counts = &request.evidence.latest().counts;
     let mut warnings = fit.warnings.clone();
-    let reason = if scenario.model_error > DEFAULT_MODEL_ERROR {
-        "as much as the fit itself misses the observed flows by"
-    } else {
-        "a stated default"
+    let pooled = match is_pooled(request).then(|| pooled(request, past, cancelled)) {
+        Some(Ok(pooled)) => Some(pooled),
+        // Without a candidate there is nothing to pool.
+        None | Some(Err(OriginError::NoPeriod)) => None,
+        Some(Err(error)) => return Err(error),
     };
-    let detail = format!(
-        "this network has no record of past forecasts, so intervals allow {:.0} % of each expected flow for model error, \
-         {reason}",
-        100.0 * scenario.model_error
-    );
-    warnings.push(Warning::new("model_error_assumed", detail));
+    let (forecast, pools) = match pooled {
+        Some(pooled) => {
+            let totals = forecast_totals(counts, &scenario, &request.plan, cancelled)?;
+            let dated = totals.into_iter().zip(pooled.tails);
+            warnings.extend(pooled.uses.first().map(|nearest| of_record(nearest)));
+            (dated.map(|(totals, tail)| totals.with_tail(tail)).collect(), pooled.uses)
+        }
+        None => {
+            warnings.push(assumed(scenario.model_error));
+            (forecast(counts, &scenario, &request.plan, cancelled)?, Vec::new())
+        }
+    };
+    warnings.extend(expected);
     let fastest =
         request.arrivals.iter().flat_map(|plan| plan.segments()).map(|s| s.growth_per_year).fold(0.0, f64::max);
     if fastest > FAST_GROWTH {
@@ -109,14 +144,60 @@ pub fn answer(request: &OriginRequest, cancelled: &dyn Fn() -> bool) -> Result<O
         );
         warnings.push(Warning::new("arrivals_grow_fast", detail));
     }
-    Ok(OriginAnswer { fit, forecast, warnings, cautions: CAUTIONS.to_vec() })
+    Ok(OriginAnswer { fit, forecast, pools, warnings, cautions: CAUTIONS.to_vec() })
 }
 
-/// The forces that the fit and the request imply, and the directions in which the fit leaves them uncertain.
-fn scenario(request: &OriginRequest, fit: &Fit) -> Result<Scenario, OriginError> {
-    let estimated = fit.arrivals_per_day.and_then(|rate| ArrivalPlan::constant(rate.value).ok());
-    let given = request.arrivals.is_some();
-    let arrivals = request.arrivals.clone().or(estimated).ok_or(OriginError::ArrivalsRequired)?;
+/// What a single candidate's intervals allow for.
+fn assumed(model_error: f64) -> Warning {
+    let reason = if model_error > DEFAULT_MODEL_ERROR {
+        "as much as the fit itself misses the observed flows by"
+    } else {
+        "a stated default"
+    };
+    let detail = format!(
+        "the forecast is by one candidate, without a record of past forecasts, so intervals allow {:.0} % of each expected flow \
+         for model error, {reason}",
+        100.0 * model_error
+    );
+    Warning::new("model_error_assumed", detail)
+}
+
+/// What a pooled forecast's weights and intervals stand on.
+fn of_record(nearest: &PoolUse) -> Warning {
+    let PoolUse { pool, spread, .. } = nearest;
+    let heaviest = pool.shares.first().map_or("none", |share| share.member.name());
+    let error = 100.0 * spread.flow_error;
+    if pool.scored == 0 {
+        let detail = format!(
+            "this network has no record of past forecasts yet: members are weighed by how well each explains the newest period \
+             (heaviest: {heaviest}), and intervals allow {error:.0} % of each flow for model error, a stated default"
+        );
+        return Warning::new("no_record", detail);
+    }
+    let leans = match pool.shares.first().map(|share| share.member) {
+        Some(Member::Trend(_)) => {
+            "; a plain trend does better here than any law of attachment, and the forecast leans on it"
+        }
+        _ => "",
+    };
+    let detail = format!(
+        "members are weighed by their record on {} past dates (heaviest: {heaviest}), and intervals allow {error:.1} % of each flow \
+         for model error one period ahead{leans}",
+        pool.scored
+    );
+    Warning::new("pooled_by_record", detail)
+}
+
+/// The forces that the fit and the request imply, the directions in which they are uncertain, and where the arrivals come from when
+/// they are not given.
+fn scenario(request: &OriginRequest, fit: &Fit) -> Result<(Scenario, Option<Warning>), OriginError> {
+    let horizon = request.plan.days().last().copied().unwrap_or(0.0);
+    let forecast = match &request.arrivals {
+        Some(_) => None,
+        None => forecast_arrivals(&request.evidence, fit.forces.departures.value(), horizon),
+    };
+    let arrivals = request.arrivals.clone().or(forecast.as_ref().map(|forecast| forecast.central.clone()));
+    let arrivals = arrivals.ok_or(OriginError::ArrivalsRequired)?;
     let mix = |share: f64| AttachmentMix::new(share).unwrap_or(AttachmentMix::UNIFORM);
     let links = fit.links_per_arrival.value;
     let forces = GrowthParameters::new(
@@ -129,6 +210,13 @@ fn scenario(request: &OriginRequest, fit: &Fit) -> Result<Scenario, OriginError>
     .and_then(|forces| forces.with_links_per_node_day(request.fit.links_per_node_day))
     .map_err(OriginError::Rate)?;
     let forces = under(&fit.forces, &forces, |force| force.value())?;
+    let outlook = match request.fit.links_per_arrival {
+        Some(_) => None,
+        None => forecast_links_per_arrival(&request.evidence, &forces, horizon),
+    };
+    let (links, deviation) =
+        outlook.map_or((links, fit.rate_excursion.links_per_arrival), |l| (l.rate, l.log_deviation));
+    let forces = forces.with_links_per_arrival(links).map_err(OriginError::Rate)?;
     let mut excursions = Vec::new();
     let (low, high) = fit.share_excursion;
     if high > low {
@@ -145,20 +233,19 @@ fn scenario(request: &OriginRequest, fit: &Fit) -> Result<Scenario, OriginError>
             excursions.push(Excursion { low: at(|f| f.excursion.0)?, high: at(|f| f.excursion.1)? });
         }
     }
-    let spread = fit.rate_excursion;
-    if spread.links_per_arrival > 0.0 {
-        let factor = spread.links_per_arrival.exp();
-        let with = |links| forces.clone().with_links_per_arrival(links).map_err(OriginError::Rate);
+    let with = |links| forces.clone().with_links_per_arrival(links).map_err(OriginError::Rate);
+    if deviation > 0.0 {
+        let factor = deviation.exp();
         excursions.push(Excursion { low: with(links / factor)?, high: with(links * factor)? });
     }
-    if spread.arrivals > 0.0 && !given {
-        let factor = spread.arrivals.exp();
-        let with = |factor: f64| forces.clone().with_arrivals(arrivals.scaled(factor));
-        excursions.push(Excursion { low: with(factor.recip()), high: with(factor) });
+    if let Some(forecast) = &forecast {
+        let with = |plan: &ArrivalPlan| forces.clone().with_arrivals(plan.clone());
+        excursions.push(Excursion { low: with(&forecast.low), high: with(&forecast.high) });
     }
     // A fit that misses the very flows it was made from will miss the next ones by no less.
     let flow_error = fit.goodness.and_then(|g| g.flow_error).unwrap_or(0.0);
-    Ok(Scenario { forces, excursions, model_error: flow_error.max(DEFAULT_MODEL_ERROR) })
+    let expected = forecast.map(|forecast| Warning::new("arrivals_forecast", forecast.detail));
+    Ok((Scenario { forces, excursions, model_error: flow_error.max(DEFAULT_MODEL_ERROR) }, expected))
 }
 
 /// The forces besides the mix in which a fit may be uncertain.

@@ -3,8 +3,9 @@
 use jiff::Timestamp;
 
 use super::OriginError;
+use super::ahead::{GivenRates, Rates, expected_rates};
 use super::member::{HALF_A_NODE, Member, Step, Totals, Trend};
-use crate::fit::{FitError, FitRequest, Model, mechanisms};
+use crate::fit::{FitError, FitRequest, Mechanism, Model, mechanisms};
 use crate::forecast::ForecastError;
 use crate::growth::{Course, NetworkLaw};
 use crate::model::{ArrivalPlan, Evidence, GrowthParameters, Snapshot, days_between};
@@ -19,6 +20,15 @@ const MOST_CORRECTION: f64 = 3.0;
 /// too many at once.
 const FEW_ARRIVALS: f64 = 1e-3;
 
+/// A rate that the totals ahead depend on.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum Rate {
+    /// Arrivals.
+    Arrivals,
+    /// Links per arrival.
+    Links,
+}
+
 /// What a target's totals are.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
 pub enum Growth {
@@ -26,14 +36,14 @@ pub enum Growth {
     Known,
     /// Those expected at the origin.
     Expected,
-    /// Those at one standard deviation below the expected ones; by the plain mix only.
-    Low,
-    /// Those at one standard deviation above; by the plain mix only.
-    High,
+    /// Expected, but for one rate at one standard deviation below; by the plain mix only.
+    Low(Rate),
+    /// The same above.
+    High(Rate),
 }
 
 /// A date to look ahead to, and the totals then.
-#[derive(Debug, Clone, Copy, PartialEq)]
+#[derive(Debug, Clone, PartialEq)]
 pub struct Target {
     /// The date.
     pub date: Timestamp,
@@ -43,6 +53,8 @@ pub struct Target {
     pub growth: Growth,
     /// N and K then.
     pub totals: (f64, f64),
+    /// The rates that lead there; none: constant ones.
+    pub rates: Option<Rates>,
 }
 
 /// What one candidate's law says of the tails at one date: means, and those of nodes in the tail at the start that are in it
@@ -87,7 +99,21 @@ pub struct OriginRecord {
     pub outlooks: Vec<Outlook>,
 }
 
-/// Records what every candidate, fitted to the evidence up to snapshot `origin` (an index ≥ 1), makes of `targets`.
+/// What a record of an origin is to hold.
+#[derive(Debug, Clone, PartialEq)]
+pub struct RecordPlan {
+    /// Thresholds, ascending.
+    pub thresholds: Vec<u64>,
+    /// So many snapshots after the origin are looked ahead to.
+    pub ahead: usize,
+    /// Whether also by the arrivals and links expected at the origin, besides those that came.
+    pub expected: bool,
+    /// What is asked of the fits.
+    pub fit: FitRequest,
+}
+
+/// Records what every candidate, fitted to the evidence up to snapshot `origin` (an index of at least 1), makes of the dates of
+/// the snapshots that follow.
 ///
 /// Candidates are fitted to the newest period; where that shows no growth, to a few periods before it. Without any, the
 /// record has trends only.
@@ -97,64 +123,148 @@ pub struct OriginRecord {
 pub fn record(
     evidence: &Evidence,
     origin: usize,
-    thresholds: &[u64],
-    targets: &[Target],
-    request: &FitRequest,
+    plan: &RecordPlan,
     cancelled: &dyn Fn() -> bool,
 ) -> Result<OriginRecord, OriginError> {
-    let (Some(now), Some(before)) =
-        (evidence.snapshots().get(origin), origin.checked_sub(1).and_then(|i| evidence.snapshots().get(i)))
-    else {
-        return Err(OriginError::NoPeriod);
-    };
-    let request = FitRequest { links_per_arrival: None, ..request.clone() };
-    let mut fitted = Vec::new();
-    for depth in [2, OLDER_SNAPSHOTS] {
-        match mechanisms(&evidence.window(origin, depth), &request, cancelled) {
-            Ok(found) => {
-                fitted = found;
-                break;
+    let known = evidence.window(origin, evidence.snapshots().len());
+    let scene = Scene::new(&known, &plan.fit, cancelled)?;
+    let mut targets = Vec::new();
+    for (i, then) in evidence.snapshots().iter().skip(origin + 1).take(plan.ahead).enumerate() {
+        let (date, ahead) = (then.as_of, (i + 1) as f64);
+        let totals = (then.counts.nodes() as f64, then.counts.link_ends() as f64);
+        targets.push(Target { date, ahead, growth: Growth::Known, totals, rates: None });
+        if plan.expected {
+            targets.extend(scene.expected(date, ahead));
+        }
+    }
+    scene.record(&plan.thresholds, targets)
+}
+
+/// An origin with its candidates fitted.
+pub(super) struct Scene<'a> {
+    known: &'a Evidence,
+    before: &'a Snapshot,
+    now: &'a Snapshot,
+    fitted: Vec<Mechanism>,
+    cancelled: &'a dyn Fn() -> bool,
+}
+
+impl<'a> Scene<'a> {
+    /// The origin at the newest snapshot of `known`.
+    pub fn new(
+        known: &'a Evidence,
+        request: &FitRequest,
+        cancelled: &'a dyn Fn() -> bool,
+    ) -> Result<Self, OriginError> {
+        let [.., before, now] = known.snapshots() else { return Err(OriginError::NoPeriod) };
+        let request = FitRequest { links_per_arrival: None, ..request.clone() };
+        let newest = known.snapshots().len() - 1;
+        let mut fitted = Vec::new();
+        for depth in [2, OLDER_SNAPSHOTS] {
+            match mechanisms(&known.window(newest, depth), &request, cancelled) {
+                Ok(found) => {
+                    fitted = found;
+                    break;
+                }
+                Err(FitError::Cancelled) => return Err(FitError::Cancelled.into()),
+                Err(_) => {}
             }
-            Err(FitError::Cancelled) => return Err(FitError::Cancelled.into()),
-            Err(_) => {}
         }
+        Ok(Self { known, before, now, fitted, cancelled })
     }
-    let look = |from: &Snapshot, forces: &GrowthParameters, to: Timestamp, totals| {
-        if cancelled() {
-            return Err(OriginError::Forecast(ForecastError::Cancelled));
-        }
-        Ok(law_sizes(from, forces, days_between(from.as_of, to), totals, thresholds))
-    };
-    let (nodes, ends) = (now.counts.nodes() as f64, now.counts.link_ends() as f64);
-    let hindsight = fitted.iter().map(|m| look(before, &m.forces, now.as_of, (nodes, ends)));
-    let hindsight = hindsight.collect::<Result<_, _>>()?;
-    let mut outlooks = Vec::new();
-    for &target in targets {
-        let only_mix = matches!(target.growth, Growth::Low | Growth::High);
-        let laws = fitted.iter().map(|m| match m.model {
-            Model::Mix => look(now, &m.forces, target.date, target.totals),
-            _ if only_mix => Ok(None),
-            _ => look(now, &m.forces, target.date, target.totals),
+
+    /// Targets at `date` by the arrivals and links that are to be expected at the origin; none where nothing can be.
+    pub fn expected(&self, date: Timestamp, ahead: f64) -> Vec<Target> {
+        self.targets(date, ahead, &GivenRates::default())
+    }
+
+    /// The same with the rates that are given.
+    pub fn targets(&self, date: Timestamp, ahead: f64, given: &GivenRates) -> Vec<Target> {
+        let Some(mix) = self.mix() else { return Vec::new() };
+        let days = days_between(self.now.as_of, date);
+        let target = |(growth, rates): (Growth, Rates)| {
+            let totals = self.totals(&rates, days)?;
+            Some(Target { date, ahead, growth, totals, rates: Some(rates) })
+        };
+        expected_rates(self.known, &mix.forces, days, given).into_iter().filter_map(target).collect()
+    }
+
+    fn mix(&self) -> Option<&Mechanism> {
+        self.fitted.iter().find(|mechanism| mechanism.model == Model::Mix)
+    }
+
+    fn totals(&self, rates: &Rates, days: f64) -> Option<(f64, f64)> {
+        let course = Course::new(&self.now.counts, rates.drive(&self.mix()?.forces)?, days).ok()?;
+        Some((course.nodes(days), course.link_ends(days)))
+    }
+
+    /// What every candidate makes of `targets`.
+    pub fn record(&self, thresholds: &[u64], targets: Vec<Target>) -> Result<OriginRecord, OriginError> {
+        let (before, now) = (self.before, self.now);
+        let size = |snapshot: &Snapshot, threshold| snapshot.counts.tail_size(threshold) as f64;
+        let totals = |snapshot: &Snapshot| Totals {
+            day: days_between(now.as_of, snapshot.as_of),
+            nodes: snapshot.counts.nodes() as f64,
+            link_ends: snapshot.counts.link_ends() as f64,
+        };
+        let reached = (now.counts.nodes() as f64, now.counts.link_ends() as f64);
+        let hindsight = self.fitted.iter().map(|mechanism| {
+            let days = days_between(before.as_of, now.as_of);
+            let forces = leading_to(&mechanism.forces, before, days, reached);
+            self.law_sizes(before, forces, days, thresholds)
         });
-        let laws = laws.collect::<Result<_, _>>()?;
-        outlooks.push(Outlook { target, laws });
+        let hindsight = hindsight.collect::<Result<_, _>>()?;
+        let mut outlooks = Vec::new();
+        for target in targets {
+            let only_mix = matches!(target.growth, Growth::Low(_) | Growth::High(_));
+            let days = days_between(now.as_of, target.date);
+            let laws = self.fitted.iter().map(|mechanism| {
+                if only_mix && mechanism.model != Model::Mix {
+                    return Ok(None);
+                }
+                let forces = match &target.rates {
+                    Some(rates) => rates.drive(&mechanism.forces),
+                    None => leading_to(&mechanism.forces, now, days, target.totals),
+                };
+                self.law_sizes(now, forces, days, thresholds)
+            });
+            let laws = laws.collect::<Result<_, _>>()?;
+            outlooks.push(Outlook { target, laws });
+        }
+        Ok(OriginRecord {
+            as_of: now.as_of,
+            thresholds: thresholds.to_vec(),
+            totals: (totals(before), totals(now)),
+            sizes: thresholds.iter().map(|&j| (size(before, j), size(now, j))).collect(),
+            lossless: !self.fitted.iter().any(|mechanism| mechanism.forces.has_losses()),
+            models: self.fitted.iter().map(|mechanism| mechanism.model).collect(),
+            hindsight,
+            outlooks,
+        })
     }
-    let size = |snapshot: &Snapshot, threshold| snapshot.counts.tail_size(threshold) as f64;
-    let totals = |snapshot: &Snapshot| Totals {
-        day: days_between(now.as_of, snapshot.as_of),
-        nodes: snapshot.counts.nodes() as f64,
-        link_ends: snapshot.counts.link_ends() as f64,
-    };
-    Ok(OriginRecord {
-        as_of: now.as_of,
-        thresholds: thresholds.to_vec(),
-        totals: (totals(before), totals(now)),
-        sizes: thresholds.iter().map(|&j| (size(before, j), size(now, j))).collect(),
-        lossless: !fitted.iter().any(|mechanism| mechanism.forces.has_losses()),
-        models: fitted.iter().map(|mechanism| mechanism.model).collect(),
-        hindsight,
-        outlooks,
-    })
+
+    /// The tails `days` after `from`; none where they cannot be computed.
+    fn law_sizes(
+        &self,
+        from: &Snapshot,
+        forces: Option<GrowthParameters>,
+        days: f64,
+        thresholds: &[u64],
+    ) -> Result<Option<LawSizes>, OriginError> {
+        if (self.cancelled)() {
+            return Err(ForecastError::Cancelled.into());
+        }
+        let Some(Ok(course)) = forces.map(|forces| Course::new(&from.counts, forces, days)) else { return Ok(None) };
+        let Ok(law) = NetworkLaw::at(&course, &from.counts, days) else { return Ok(None) };
+        let mut sizes = LawSizes::default();
+        for &threshold in thresholds {
+            let Ok(sum) = law.rough_tail(threshold) else { return Ok(None) };
+            sizes.mean.push(sum.mean);
+            sizes.kept.push(sum.kept);
+            sizes.variance.push(sum.variance);
+        }
+        Ok(Some(sizes))
+    }
 }
 
 impl OriginRecord {
@@ -203,27 +313,6 @@ impl OriginRecord {
 fn at(laws: &[Option<LawSizes>], i: usize, j: usize) -> Option<(f64, f64)> {
     let sizes = laws.get(i)?.as_ref()?;
     Some((*sizes.mean.get(j)?, *sizes.kept.get(j)?))
-}
-
-/// The tails after `days` from `from` by `forces`, their rates such that the totals become `totals`.
-fn law_sizes(
-    from: &Snapshot,
-    forces: &GrowthParameters,
-    days: f64,
-    totals: (f64, f64),
-    thresholds: &[u64],
-) -> Option<LawSizes> {
-    let forces = leading_to(forces, from, days, totals)?;
-    let course = Course::new(&from.counts, forces, days).ok()?;
-    let law = NetworkLaw::at(&course, &from.counts, days).ok()?;
-    let mut sizes = LawSizes::default();
-    for &threshold in thresholds {
-        let sum = law.rough_tail(threshold).ok()?;
-        sizes.mean.push(sum.mean);
-        sizes.kept.push(sum.kept);
-        sizes.variance.push(sum.variance);
-    }
-    Some(sizes)
 }
 
 /// `forces` with constant arrivals and landings that lead from `from` to `totals` in `days`.

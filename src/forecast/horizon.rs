@@ -55,13 +55,35 @@ pub fn forecast(
     plan: &ForecastPlan,
     cancelled: &dyn Fn() -> bool,
 ) -> Result<Vec<DateForecast>, ForecastError> {
-    let horizon = plan.days().last().copied().unwrap_or(0.0);
-    let course = |forces: &GrowthParameters| Course::new(counts, forces.clone(), horizon);
-    let central = course(&scenario.forces)?;
-    let ends = scenario.excursions.iter().map(|e| Ok((course(&e.low)?, course(&e.high)?)));
-    let ends = ends.collect::<Result<Vec<_>, ForecastError>>()?;
-    let outlook = Outlook { counts, central, ends, model_error: scenario.model_error, plan, cancelled };
+    let outlook = Outlook::new(counts, scenario, plan, cancelled)?;
     plan.dates().iter().zip(plan.days()).map(|(&date, &day)| outlook.at(date, day)).collect()
+}
+
+/// Forecasts the totals and the largest degree as [`forecast`] does, and leaves the tails to others.
+///
+/// # Errors
+/// Those of [`forecast`].
+pub fn forecast_totals(
+    counts: &DegreeCounts,
+    scenario: &Scenario,
+    plan: &ForecastPlan,
+    cancelled: &dyn Fn() -> bool,
+) -> Result<Vec<DateForecast>, ForecastError> {
+    let outlook = Outlook::new(counts, scenario, plan, cancelled)?;
+    plan.dates().iter().zip(plan.days()).map(|(&date, &day)| outlook.totals(&outlook.laws(day)?, date, day)).collect()
+}
+
+impl DateForecast {
+    /// The same with tails, thresholds ascending, their quantiles kept in order.
+    pub fn with_tail(mut self, tail: Vec<TailForecast>) -> Self {
+        self.tail = tail;
+        let mut bound = &self.nodes;
+        for row in &mut self.tail {
+            row.size.bound_by(bound);
+            bound = &row.size;
+        }
+        self
+    }
 }
 
 struct Outlook<'a> {
@@ -79,20 +101,38 @@ struct Laws<'a> {
     ends: Vec<(NetworkLaw<'a>, NetworkLaw<'a>)>,
 }
 
-impl Outlook<'_> {
-    fn at(&self, date: jiff::Timestamp, day: f64) -> Result<DateForecast, ForecastError> {
-        let nodes = self.nodes(day);
+impl<'a> Outlook<'a> {
+    fn new(
+        counts: &'a DegreeCounts,
+        scenario: &Scenario,
+        plan: &'a ForecastPlan,
+        cancelled: &'a dyn Fn() -> bool,
+    ) -> Result<Self, ForecastError> {
+        let horizon = plan.days().last().copied().unwrap_or(0.0);
+        let course = |forces: &GrowthParameters| Course::new(counts, forces.clone(), horizon);
+        let central = course(&scenario.forces)?;
+        let ends = scenario.excursions.iter().map(|e| Ok((course(&e.low)?, course(&e.high)?)));
+        let ends = ends.collect::<Result<Vec<_>, ForecastError>>()?;
+        Ok(Self { counts, central, ends, model_error: scenario.model_error, plan, cancelled })
+    }
+
+    fn laws(&self, day: f64) -> Result<Laws<'_>, ForecastError> {
         let law = |course| NetworkLaw::at(course, self.counts, day);
         let ends = self.ends.iter().map(|(low, high)| Ok((law(low)?, law(high)?)));
-        let laws = Laws { central: law(&self.central)?, ends: ends.collect::<Result<_, GrowthError>>()? };
-        let tail = self.plan.thresholds().iter().map(|&threshold| self.tail(&laws, threshold, nodes.expected));
-        let mut tail: Vec<TailForecast> = tail.collect::<Result<_, _>>()?;
-        let mut bound = &nodes;
-        for row in &mut tail {
-            row.size.bound_by(bound);
-            bound = &row.size;
-        }
-        Ok(DateForecast { date, links: self.link_ends(day), largest_degree: self.largest(&laws)?, nodes, tail })
+        Ok(Laws { central: law(&self.central)?, ends: ends.collect::<Result<_, GrowthError>>()? })
+    }
+
+    fn at(&self, date: jiff::Timestamp, day: f64) -> Result<DateForecast, ForecastError> {
+        let laws = self.laws(day)?;
+        let totals = self.totals(&laws, date, day)?;
+        let nodes = totals.nodes.expected;
+        let tail = self.plan.thresholds().iter().map(|&j| self.tail(&laws, j, nodes));
+        Ok(totals.with_tail(tail.collect::<Result<_, _>>()?))
+    }
+
+    fn totals(&self, laws: &Laws, date: jiff::Timestamp, day: f64) -> Result<DateForecast, ForecastError> {
+        let (nodes, links) = (self.nodes(day), self.link_ends(day));
+        Ok(DateForecast { date, nodes, links, largest_degree: self.largest(laws)?, tail: Vec::new() })
     }
 
     fn tail(&self, laws: &Laws, threshold: u64, nodes: f64) -> Result<TailForecast, ForecastError> {
@@ -129,7 +169,9 @@ impl Outlook<'_> {
         // Each arrival brings ℓ + ē ends at once, so their number scatters by that factor more than arrivals do; an end that
         // may be lost or not is one more draw.
         let per_arrival = (forces.links_per_arrival() + forces.entry.mean()).max(1.0);
-        let gained = (mean - now * (-forces.end_loss_hazard() * day).exp()).max(0.0);
+        // A departing node takes its own ends along, besides what each end may lose.
+        let hazard = forces.end_loss_hazard() + forces.departure_hazard();
+        let gained = (mean - now * (-hazard * day).exp()).max(0.0);
         let kept = (mean - gained).max(0.0);
         let sampling = per_arrival * gained + kept * (1.0 - kept / now.max(1.0));
         let beyond = excursion_variance(&self.ends, |course| Ok(course.link_ends(day))).unwrap_or(0.0);

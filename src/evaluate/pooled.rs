@@ -1,0 +1,148 @@
+//! The pooled forecast from the newest snapshot on.
+
+use jiff::Timestamp;
+
+use super::ahead::GivenRates;
+use super::backtest::{Replay, law, of_growth, pooled_tail, replay};
+use super::pool::{FEWEST_NODES, Pool, pool};
+use super::record::{Growth, OriginRecord, RecordPlan, Scene, record};
+use super::spread::Spread;
+use super::{OriginError, OriginRequest};
+use crate::forecast::{CountForecast, TailForecast};
+use crate::model::{DegreeCounts, Evidence};
+
+/// Periods ahead that are scored; farther dates go by the farthest.
+pub const SCORED_AHEAD: usize = 3;
+/// Origins that are scored, the newest ones: older ones would weigh less than 2 % of the newest.
+const MOST_ORIGINS: usize = 12;
+/// Thresholds that are scored at most.
+const MOST_THRESHOLDS: usize = 16;
+/// Periods that a typical one is taken over.
+const TYPICAL_OVER: usize = 3;
+
+/// How members were weighed for dates so many periods ahead.
+#[derive(Debug, Clone, PartialEq)]
+pub struct PoolUse {
+    /// Periods ahead, a whole number.
+    pub ahead: f64,
+    /// The members and their weights.
+    pub pool: Pool,
+    /// What the record makes of the variance there.
+    pub spread: Spread,
+}
+
+/// Pooled tails.
+pub(super) struct Pooled {
+    /// One list of thresholds a date of the plan.
+    pub tails: Vec<Vec<TailForecast>>,
+    /// The pools they are by, nearest first.
+    pub uses: Vec<PoolUse>,
+}
+
+impl RecordPlan {
+    /// What records are to hold to weigh the members of a forecast: up to 16 of its thresholds past which there are nodes enough
+    /// to score; where there is none, 1, 2, 5, 10, … as far as there are.
+    pub fn for_forecast(request: &OriginRequest) -> Self {
+        let counts = &request.evidence.latest().counts;
+        let enough = |threshold: &u64| counts.tail_size(*threshold) as f64 >= FEWEST_NODES;
+        let asked: Vec<u64> = request.plan.thresholds().iter().copied().filter(enough).collect();
+        let found = if asked.is_empty() { round_degrees(counts) } else { asked };
+        let thinned = |i: usize| found.get(i * (found.len() - 1) / (MOST_THRESHOLDS - 1)).copied();
+        let thresholds = match found.len() {
+            n if n > MOST_THRESHOLDS => (0..MOST_THRESHOLDS).filter_map(thinned).collect(),
+            _ => found,
+        };
+        Self { thresholds, ahead: SCORED_AHEAD, expected: false, fit: request.fit.clone() }
+    }
+}
+
+/// 1, 2, 5, 10, … as long as enough nodes have as many links.
+fn round_degrees(counts: &DegreeCounts) -> Vec<u64> {
+    let decades = std::iter::successors(Some(1u64), |decade| decade.checked_mul(10));
+    let degrees = decades.flat_map(|decade| [decade, decade.saturating_mul(2), decade.saturating_mul(5)]);
+    degrees.take_while(|&degree| counts.tail_size(degree) as f64 >= FEWEST_NODES).collect()
+}
+
+/// Origins (indices of snapshots) whose forecasts the newest snapshot can score, oldest first.
+pub fn scored_origins(evidence: &Evidence) -> std::ops::Range<usize> {
+    let newest = evidence.snapshots().len().saturating_sub(1);
+    newest.saturating_sub(MOST_ORIGINS).max(1)..newest.max(1)
+}
+
+/// The records that weigh a forecast's members.
+///
+/// # Errors
+/// Cancellation.
+pub fn past_records(request: &OriginRequest, cancelled: &dyn Fn() -> bool) -> Result<Vec<OriginRecord>, OriginError> {
+    let plan = RecordPlan::for_forecast(request);
+    scored_origins(&request.evidence).map(|origin| record(&request.evidence, origin, &plan, cancelled)).collect()
+}
+
+/// Pools the members' tails at the dates of a forecast, weighed by `past`.
+///
+/// # Errors
+/// Cancellation; a single snapshot.
+pub(super) fn pooled(
+    request: &OriginRequest,
+    past: &[OriginRecord],
+    cancelled: &dyn Fn() -> bool,
+) -> Result<Pooled, OriginError> {
+    let (evidence, plan) = (&request.evidence, &request.plan);
+    let observed = |date: Timestamp, threshold: u64| {
+        let found = evidence.snapshots().binary_search_by_key(&date, |snapshot| snapshot.as_of).ok()?;
+        Some(evidence.snapshots()[found].counts.tail_size(threshold) as f64)
+    };
+    let replay = replay(past, &observed);
+    let period = typical_period(evidence);
+    let scene = Scene::new(evidence, &request.fit, cancelled)?;
+    let given = GivenRates {
+        arrivals: request.arrivals.clone(),
+        links_per_arrival: request.fit.links_per_arrival,
+        links_per_node_day: request.fit.links_per_node_day,
+    };
+    let dates = plan.dates().iter().zip(plan.days());
+    let targets = dates.flat_map(|(&date, &day)| scene.targets(date, day / period, &given)).collect();
+    let newest = scene.record(plan.thresholds(), targets)?;
+    // Members are weighed by the thresholds that were scored, in hindsight too.
+    let weighed_by = scene.record(&RecordPlan::for_forecast(request).thresholds, Vec::new())?;
+    let weigh = |ahead: f64| pool(&weighed_by, past, &observed, ahead);
+    let (mut tails, mut uses): (Vec<Vec<TailForecast>>, Vec<PoolUse>) = (Vec::new(), Vec::new());
+    for &date in plan.dates() {
+        let outlook = newest.outlooks.iter().find(|outlook| {
+            outlook.target.date == date && matches!(outlook.target.growth, Growth::Known | Growth::Expected)
+        });
+        let Some(outlook) = outlook else { return Err(OriginError::NoPeriod) };
+        let ahead = outlook.target.ahead.round().clamp(1.0, SCORED_AHEAD as f64);
+        if uses.last().is_none_or(|last| last.ahead != ahead) {
+            uses.push(PoolUse { ahead, pool: weigh(ahead), spread: replay.spread(ahead) });
+        }
+        let Some(PoolUse { pool, .. }) = uses.last() else { return Err(OriginError::NoPeriod) };
+        tails.push(tails_at(&newest, outlook, pool, &replay, plan.levels()));
+    }
+    Ok(Pooled { tails, uses })
+}
+
+/// Mean length of the newest periods, days.
+fn typical_period(evidence: &Evidence) -> f64 {
+    let days: Vec<f64> = evidence.periods().rev().take(TYPICAL_OVER).map(|(.., days)| days).collect();
+    days.iter().sum::<f64>() / days.len().max(1) as f64
+}
+
+fn tails_at(
+    record: &OriginRecord,
+    outlook: &super::Outlook,
+    pool: &Pool,
+    replay: &Replay,
+    levels: &[f64],
+) -> Vec<TailForecast> {
+    let spread = replay.spread(outlook.target.ahead);
+    let row = |(j, &threshold): (usize, &u64)| {
+        let tail = pooled_tail(record, outlook, pool, j)?;
+        let law = law(record, &tail, &spread, of_growth(record, outlook, j));
+        let now = record.sizes.get(j)?.1;
+        let size =
+            CountForecast { now, expected: tail.size, median: law.quantile(0.5), intervals: law.intervals(levels) };
+        Some(TailForecast { threshold, size })
+    };
+    record.thresholds.iter().enumerate().filter_map(row).collect()
+}
