@@ -12,6 +12,7 @@ mod rates;
 mod record;
 mod scores;
 mod spread;
+mod table;
 
 pub use ahead::Rates;
 pub use arrivals::{ArrivalForecast, arrival_periods, forecast_arrivals, forecast_links_per_arrival, link_periods};
@@ -24,3 +25,4 @@ pub use rates::{RateHistory, RateOutlook, RatePeriod};
 pub use record::{Growth, LawSizes, OriginRecord, Outlook, Rate, RecordPlan, Target, record};
 pub use scores::{Coverage, LOG_ERROR_FLOOR, absolute_error, crps, interval_score, log_error};
 pub use spread::{DEFAULT_FLOW_ERROR, Spread};
+pub use table::{Errors, Judged, ScoreRow, Scores, score_table};

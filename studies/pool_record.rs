@@ -3,7 +3,7 @@
 //!
 //! usage: cargo run --release --example pool_record [-- simulated networks, default 400]
 //!
-//! From every origin with a period before it, one to three periods ahead, given the arrivals and landed links that came. Errors
+//! From every origin with a period before it, one to three periods ahead, given the arrivals and links that came and by those expected then. Errors
 //! are |ln(forecast/observed)| and coverages those of the 50 % and 90 % intervals, over thresholds 5 to 200 (to 2,000 on Debian)
 //! past which at least 5 nodes came. The output is kept in studies/pool_record.txt. Sources of the data: the README beside each
 //! table; kinds of simulated networks: studies/worlds/mod.rs.
@@ -11,11 +11,10 @@
 
 mod worlds;
 
-use std::collections::BTreeMap;
 use std::sync::Mutex;
 use std::sync::atomic::{AtomicU64, Ordering};
 
-use tailcast::evaluate::{Case, Member, OriginRecord, RecordPlan, Trend, crps, log_error, record, replay};
+use tailcast::evaluate::{Case, Judged, Member, OriginRecord, RecordPlan, Trend, record, replay, score_table};
 use tailcast::fit::{FitRequest, Model};
 use tailcast::model::{DegreeKind, Evidence, Snapshot};
 use worlds::{HARD, Kind, MIXED};
@@ -28,11 +27,29 @@ const AHEAD: usize = 3;
 
 fn main() {
     let networks: u64 = std::env::args().nth(1).map_or(400, |text| text.parse().expect("a number of networks"));
-    println!("pooled forecast and plain trends: mean |ln(forecast/observed)|; the ratio is to the best plain trend");
-    println!("inside the 50 and 90 % intervals; CRPS of the pool over that of the best trend (nodes)\n");
     println!(
-        "{:<16} {:>5} {:>6} {:>8} {:>8} {:>8} {:>8} {:>8} {:>7} {:>7} {:>7} {:>7}",
-        "network", "ahead", "cases", "pool", "mix", "arrival", "link", "ln nodes", "ratio", "in 50%", "in 90%", "CRPS"
+        "mean |ln(forecast/observed)| of the pooled forecast, the plain mix and plain trends, given the arrivals and links that"
+    );
+    println!(
+        "came and by those expected at the origin; the ratio is the pool's to the best plain trend's; outcomes inside the 50"
+    );
+    println!("and 90 % intervals; CRPS of the pool over the best trend's\n");
+    println!(
+        "{:<15} {:<8} {:>5} {:>6} {:>8} {:>8} {:>8} {:>8} {:>8} {:>8} {:>6} {:>8} {:>7} {:>6}",
+        "network",
+        "growth",
+        "ahead",
+        "cases",
+        "pool",
+        "mix",
+        "arrival",
+        "link",
+        "day",
+        "ln nodes",
+        "ratio",
+        "in 50%",
+        "in 90%",
+        "CRPS"
     );
     table("answers", &past(&worlds::real("answers"), &THRESHOLDS));
     table("debian", &past(&worlds::real("debian"), &DEBIAN_THRESHOLDS));
@@ -89,37 +106,29 @@ fn past(snapshots: &[Snapshot], thresholds: &[u64]) -> Vec<Case> {
 }
 
 fn table(name: &str, cases: &[Case]) {
-    let mut by_horizon: BTreeMap<u32, Vec<&Case>> = BTreeMap::new();
-    for case in cases.iter().filter(|case| case.observed >= 5.0) {
-        by_horizon.entry(case.ahead).or_default().push(case);
-    }
-    for (ahead, cases) in by_horizon {
-        let count = cases.len() as f64;
-        let mean = |value: &dyn Fn(&Case) -> f64| cases.iter().map(|case| value(case)).sum::<f64>() / count;
-        let of = |case: &Case, member| case.members.iter().find(|(m, _)| *m == member).map_or(case.pooled, |m| m.1);
-        let error = |member| 100.0 * mean(&|case| log_error(of(case, member), case.observed).abs());
-        let pool = 100.0 * mean(&|case| log_error(case.pooled, case.observed).abs());
-        let trends = [Trend::PerArrival, Trend::PerLink, Trend::LogNodes].map(|trend| error(Member::Trend(trend)));
-        let best = trends.iter().copied().fold(f64::INFINITY, f64::min);
-        let inside = |level: f64| {
-            100.0
-                * mean(&|case| {
-                    let interval = case.law.intervals(&[level])[0];
-                    f64::from(interval.low <= case.observed && case.observed <= interval.high)
-                })
-        };
-        let trend_crps = [Trend::PerArrival, Trend::PerLink]
-            .map(|trend| mean(&|case| (of(case, Member::Trend(trend)) - case.observed).abs()));
-        println!(
-            "{name:<16} {ahead:>5} {count:>6} {pool:>7.2}% {:>7.2}% {:>7.2}% {:>7.2}% {:>7.2}% {:>7.2} {:>6.1}% {:>6.1}% {:>7.2}",
-            error(Member::Mechanism(Model::Mix)),
-            trends[0],
-            trends[1],
-            trends[2],
-            pool / best,
-            inside(0.5),
-            inside(0.9),
-            mean(&|case| crps(&case.law, case.observed)) / trend_crps[0].min(trend_crps[1]),
-        );
+    for (judged, given) in [(Judged::Mechanism, "given"), (Judged::Whole, "expected")] {
+        for row in score_table(cases, judged, &[0.5, 0.9]).iter().filter(|row| row.threshold.is_none()) {
+            let scores = &row.scores;
+            let error = |member| {
+                let found = scores.members.iter().find(|(own, _)| *own == member);
+                found.map_or("-".into(), |(_, errors)| format!("{:.2}%", 100.0 * errors.log_error))
+            };
+            let inside = |i: usize| 100.0 * scores.coverage[i].1.share().unwrap_or(f64::NAN);
+            println!(
+                "{name:<15} {given:<8} {:>5} {:>6} {:>7.2}% {:>8} {:>8} {:>8} {:>8} {:>8} {:>6.2} {:>7.1}% {:>6.1}% {:>6.2}",
+                row.ahead,
+                scores.cases,
+                100.0 * scores.pooled.log_error,
+                error(Member::Mechanism(Model::Mix)),
+                error(Member::Trend(Trend::PerArrival)),
+                error(Member::Trend(Trend::PerLink)),
+                error(Member::Trend(Trend::PerDay)),
+                error(Member::Trend(Trend::LogNodes)),
+                1.0 - scores.skill.unwrap_or(f64::NAN),
+                inside(0),
+                inside(1),
+                1.0 - scores.crps_skill.unwrap_or(f64::NAN),
+            );
+        }
     }
 }
