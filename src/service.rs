@@ -34,8 +34,8 @@ pub use crate::store::{
 pub use answers::{
     AttachmentAnswer, AttachmentModel, CandidateAnswer, CountAnswer, CurvePointAnswer, DateAnswer, DegreeAnswer,
     EstimateAnswer, EvidenceKind, FitAnswer, FitReport, FitRun, ForecastAnswer, ForecastRun, GoodnessAnswer,
-    IntervalAnswer, LimitAnswer, OutlierClassAnswer, PeriodRatesAnswer, TailAnswer, TailPointAnswer, TransitionsAnswer,
-    WarningAnswer,
+    IntervalAnswer, LimitAnswer, OutlierClassAnswer, PeriodRatesAnswer, PoolAnswer, PoolMemberAnswer, TailAnswer,
+    TailPointAnswer, TransitionsAnswer, WarningAnswer,
 };
 pub use compute::{Question, answer_at_once};
 pub use cpu::CpuPool;

@@ -126,7 +126,7 @@ pub fn answer_by(
         Some(pooled) => {
             let totals = forecast_totals(counts, &scenario, &request.plan, cancelled)?;
             let dated = totals.into_iter().zip(pooled.tails);
-            warnings.extend(pooled.uses.first().map(|nearest| of_record(nearest)));
+            warnings.extend(pooled.uses.first().and_then(of_record));
             (dated.map(|(totals, tail)| totals.with_tail(tail)).collect(), pooled.uses)
         }
         None => {
@@ -162,30 +162,14 @@ fn assumed(model_error: f64) -> Warning {
     Warning::new("model_error_assumed", detail)
 }
 
-/// What a pooled forecast's weights and intervals stand on.
-fn of_record(nearest: &PoolUse) -> Warning {
-    let PoolUse { pool, spread, .. } = nearest;
-    let heaviest = pool.shares.first().map_or("none", |share| share.member.name());
-    let error = 100.0 * spread.flow_error;
-    if pool.scored == 0 {
-        let detail = format!(
-            "this network has no record of past forecasts yet: members are weighed by how well each explains the newest period \
-             (heaviest: {heaviest}), and intervals allow {error:.0} % of each flow for model error, a stated default"
-        );
-        return Warning::new("no_record", detail);
-    }
-    let leans = match pool.shares.first().map(|share| share.member) {
-        Some(Member::Trend(_)) => {
-            "; a plain trend does better here than any law of attachment, and the forecast leans on it"
-        }
-        _ => "",
+/// What the reader of a pooled forecast must know before acting: that there is no record yet, or that no law of attachment leads.
+fn of_record(nearest: &PoolUse) -> Option<Warning> {
+    let code = match nearest.pool.shares.first()?.member {
+        _ if nearest.pool.scored == 0 => "model_error_assumed",
+        Member::Trend(_) => "trend_leads",
+        _ => return None,
     };
-    let detail = format!(
-        "members are weighed by their record on {} past dates (heaviest: {heaviest}), and intervals allow {error:.1} % of each flow \
-         for model error one period ahead{leans}",
-        pool.scored
-    );
-    Warning::new("pooled_by_record", detail)
+    Some(Warning::new(code, nearest.in_words()))
 }
 
 /// The forces that the fit and the request imply, the directions in which they are uncertain, and where the arrivals come from when

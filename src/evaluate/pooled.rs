@@ -4,6 +4,7 @@ use jiff::Timestamp;
 
 use super::ahead::GivenRates;
 use super::backtest::{Replay, law, of_growth, pooled_tail, replay};
+use super::member::Member;
 use super::pool::{FEWEST_NODES, Pool, pool};
 use super::record::{Growth, OriginRecord, RecordPlan, Scene, record};
 use super::spread::Spread;
@@ -29,6 +30,34 @@ pub struct PoolUse {
     pub pool: Pool,
     /// What the record makes of the variance there.
     pub spread: Spread,
+}
+
+impl PoolUse {
+    /// What weights and intervals stand on.
+    pub fn in_words(&self) -> String {
+        let heaviest = self.pool.shares.first().map(|share| share.member);
+        let name = heaviest.map_or("none", Member::name);
+        let error = 100.0 * self.spread.flow_error;
+        if self.pool.scored == 0 {
+            return format!(
+                "this network has no record of past forecasts yet, so members are weighed by how well each explains the newest \
+                 period (heaviest: {name}), and intervals allow {error:.0} % of each flow past a threshold for model error, a \
+                 stated default, and what the members disagree by"
+            );
+        }
+        let leads = match heaviest {
+            Some(Member::Trend(_)) => {
+                "; a plain trend has done better here than any law of attachment, and the forecast leans on it"
+            }
+            _ => "",
+        };
+        format!(
+            "members are weighed by how their forecasts of {} past dates did (heaviest: {name}); by the same record intervals allow \
+             {error:.0} % of each flow past a threshold for model error and are scaled by {:.2}{leads}",
+            self.pool.scored,
+            self.spread.scale.sqrt()
+        )
+    }
 }
 
 /// Pooled tails.

@@ -39,12 +39,45 @@ pub struct ForecastAnswer {
     pub fit: FitReport,
     /// One entry a date, in ascending order.
     pub forecast: Vec<DateAnswer>,
+    /// How candidates and plain trends were weighed for the tails, by periods ahead; empty where the forecast is by one candidate.
+    #[serde(default)]
+    #[schema(required = true)]
+    pub pools: Vec<PoolAnswer>,
     /// Capacity limits asked about; none can be asked about yet.
     pub limits: Vec<LimitAnswer>,
     /// What was seen in these inputs that the reader must know before acting.
     pub warnings: Vec<WarningAnswer>,
     /// What holds for every forecast.
     pub cautions: Vec<String>,
+}
+
+/// How the members of a pooled forecast were weighed.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize, ToSchema)]
+pub struct PoolAnswer {
+    /// Periods ahead, a period being the typical time between snapshots; farther dates go by the last pool.
+    pub periods_ahead: u32,
+    /// Past dates that the members were scored on; at 0 they are weighed by how well each explains the newest period.
+    pub scored_dates: u64,
+    /// Relative error of the flow past a threshold that intervals allow for.
+    pub flow_error: Real,
+    /// Factor on the width of intervals, by how past ones did.
+    pub interval_scale: Real,
+    /// The members, heaviest first.
+    pub members: Vec<PoolMemberAnswer>,
+    /// The same in words.
+    pub detail: String,
+}
+
+/// A member of a pool.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize, ToSchema)]
+pub struct PoolMemberAnswer {
+    /// A candidate, a candidate corrected by its newest flows, or a plain trend.
+    #[schema(examples("mix_flow_corrected"))]
+    pub member: String,
+    /// Mean of |ln(forecast/observed)|·√observed over its record; lower is better.
+    pub score: Real,
+    /// Its weight; the weights add up to one.
+    pub weight: Real,
 }
 
 /// A kept fit.

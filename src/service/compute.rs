@@ -8,12 +8,13 @@ use serde::de::DeserializeOwned;
 use super::answers::{
     AttachmentAnswer, AttachmentModel, CandidateAnswer, CountAnswer, CurvePointAnswer, DateAnswer, DegreeAnswer,
     EstimateAnswer, EvidenceKind, FitAnswer, FitReport, ForecastAnswer, GoodnessAnswer, IntervalAnswer,
-    OutlierClassAnswer, PeriodRatesAnswer, TailAnswer, TailPointAnswer, TransitionsAnswer, WarningAnswer,
+    OutlierClassAnswer, PeriodRatesAnswer, PoolAnswer, PoolMemberAnswer, TailAnswer, TailPointAnswer,
+    TransitionsAnswer, WarningAnswer,
 };
 use super::inputs::{FitInputs, ForecastInputs, Label, sha256_hex};
 use super::numbers::{Count, Real, date_text};
 use super::{ENGINE, ServiceError};
-use crate::evaluate::{self, OriginError};
+use crate::evaluate::{self, OriginError, PoolShare, PoolUse};
 use crate::fit::{
     Attachment, Candidate, CurvePoint, Fit, Force, Goodness, Model, OutlierClass, PeriodRates, Rung, TailPoint,
     TransitionSummary, fit,
@@ -106,6 +107,7 @@ impl Question for ForecastInputs {
             inputs_digest,
             fit: FitReport::from(&found.fit),
             forecast: found.forecast.iter().map(DateAnswer::from).collect(),
+            pools: found.pools.iter().map(PoolAnswer::from).collect(),
             limits: Vec::new(),
             warnings: found.warnings.into_iter().map(WarningAnswer::from).collect(),
             cautions: found.cautions.iter().map(ToString::to_string).collect(),
@@ -213,6 +215,24 @@ impl From<&Candidate> for CandidateAnswer {
             aic: Real(candidate.aic),
             weight: Real(candidate.weight),
             verdict: candidate.verdict(),
+        }
+    }
+}
+
+impl From<&PoolUse> for PoolAnswer {
+    fn from(used: &PoolUse) -> Self {
+        let member = |share: &PoolShare| PoolMemberAnswer {
+            member: share.member.name().to_owned(),
+            score: Real(share.score),
+            weight: Real(share.weight),
+        };
+        Self {
+            periods_ahead: used.ahead as u32,
+            scored_dates: used.pool.scored as u64,
+            flow_error: Real(used.spread.flow_error),
+            interval_scale: Real(used.spread.scale.sqrt()),
+            members: used.pool.shares.iter().map(member).collect(),
+            detail: used.in_words(),
         }
     }
 }
