@@ -8,6 +8,7 @@ pub mod intervals;
 pub mod inversion;
 pub mod optimise;
 pub mod quadrature;
+pub mod ranked_score;
 pub mod roots;
 pub mod scoring;
 pub mod sum_tree;

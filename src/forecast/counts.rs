@@ -39,6 +39,16 @@ impl CountLaw {
         Self { floor, mean, variance: variance.clamp(0.0, mean + (WIDEST_SPREAD * mean).powi(2)) }
     }
 
+    /// The certain part.
+    pub fn floor(&self) -> f64 {
+        self.floor
+    }
+
+    /// Expectation and variance of what comes on top of the certain part.
+    pub fn rest(&self) -> TwoMoments {
+        TwoMoments { mean: self.mean, variance: self.variance }
+    }
+
     /// Smallest count x with P(count ≤ x) ≥ `probability`, for a probability in (0, 1).
     ///
     /// # Numerical notes
@@ -75,7 +85,7 @@ impl CountLaw {
     }
 
     fn distribution(&self, x: f64) -> f64 {
-        TwoMoments { mean: self.mean, variance: self.variance }.at_most(x)
+        self.rest().at_most(x)
     }
 
     fn continuous_quantile(&self, probability: f64) -> f64 {

@@ -75,3 +75,10 @@ pub const SCORING_MAX_STEPS: usize = 100;
 /// A step that raises a log-likelihood by less than this is the last: estimates are then within a thousandth of their
 /// standard errors of the maximum.
 pub const SCORING_GAIN: f64 = 1e-6;
+
+/// Probabilities of a count below this add nothing to its ranked probability score.
+pub const SCORE_NEGLIGIBLE: f64 = 1e-18;
+/// Most terms on either side of a ranked probability score's sum: 40 times the spread of the most skewed law that is summed.
+pub const SCORE_MAX_TERMS: usize = 10_000;
+/// Step in the logarithm of a trapezoid sum for Gini's mean difference: its error is about e^{−π²/step}, 10⁻¹⁷.
+pub const GINI_STEP: f64 = 0.25;

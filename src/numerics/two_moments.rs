@@ -26,10 +26,15 @@ pub struct TwoMoments {
 }
 
 impl TwoMoments {
+    /// Whether mean and variance agree, within 10⁻⁶.
+    pub fn is_poisson(&self) -> bool {
+        (self.variance / self.mean - 1.0).abs() < POISSON_WITHIN
+    }
+
     /// P(R ≤ x) for whole x ≥ 0.
     pub fn at_most(&self, x: f64) -> f64 {
         let ratio = self.variance / self.mean;
-        if (ratio - 1.0).abs() < POISSON_WITHIN {
+        if self.is_poisson() {
             checked_gamma_ur(x + 1.0, self.mean).unwrap_or(1.0)
         } else if ratio > 1.0 {
             checked_beta_reg(self.mean / (ratio - 1.0), x + 1.0, 1.0 / ratio).unwrap_or(1.0)
@@ -42,7 +47,7 @@ impl TwoMoments {
     /// P(R > x) for whole x ≥ 0, exact in the far tail.
     pub fn above(&self, x: f64) -> f64 {
         let ratio = self.variance / self.mean;
-        if (ratio - 1.0).abs() < POISSON_WITHIN {
+        if self.is_poisson() {
             checked_gamma_lr(x + 1.0, self.mean).unwrap_or(0.0)
         } else if ratio > 1.0 {
             checked_beta_reg(x + 1.0, self.mean / (ratio - 1.0), 1.0 - 1.0 / ratio).unwrap_or(0.0)

@@ -10,6 +10,7 @@ mod law;
 mod networks;
 mod quantiles;
 mod reference;
+mod scores;
 mod simulation;
 mod stationary;
 mod tails;
