@@ -26,6 +26,9 @@ pub enum ServiceError {
     /// Nothing is stored of the network that a run could start from.
     #[error("the network has no snapshot")]
     NoSnapshot,
+    /// The network has no forecast yet, for this reason.
+    #[error("the network has no forecast yet: {0}")]
+    NoForecast(String),
     /// Every worker is taken and the queue is full.
     #[error("every worker is taken and the queue is full")]
     Busy,
