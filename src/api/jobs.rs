@@ -70,8 +70,6 @@ enum JobKindName {
     LinkList,
     /// Makes a network's latest forecast anew, and accounts for earlier ones.
     Refresh,
-    /// Scores forecasts from every date of a network's past.
-    Backtest,
 }
 
 /// What was done, by the kind of the job.
@@ -120,7 +118,6 @@ impl From<JobView> for JobAnswer {
             kind: match view.job.kind {
                 JobKind::LinkList => JobKindName::LinkList,
                 JobKind::Refresh => JobKindName::Refresh,
-                JobKind::Backtest => JobKindName::Backtest,
             },
             network: view.job.network,
             state: match view.job.state {

@@ -143,7 +143,6 @@ impl Service {
         match job.kind {
             JobKind::LinkList => self.count_link_list(&job, turn).await,
             JobKind::Refresh => self.refresh(&job, turn).await,
-            JobKind::Backtest => self.fail(&job, JobProblem::internal()).await,
         }
     }
 

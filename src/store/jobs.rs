@@ -6,7 +6,7 @@ use uuid::Uuid;
 
 use super::columns::{corrupt, time, unsigned, uuid};
 use super::writes::{Clash, WriteError, network_exists};
-use super::{Store, StoreError, refreshes};
+use super::{RefreshState, Store, StoreError, refreshes};
 
 /// Why a network has no newer forecast when its refresh was called off.
 const CALLED_OFF: &str =
@@ -54,19 +54,16 @@ pub enum JobKind {
     LinkList,
     /// Makes a network's latest forecast anew, and accounts for earlier ones.
     Refresh,
-    /// Scores forecasts from every date of a network's past.
-    Backtest,
 }
 
 impl JobKind {
-    const ALL: [Self; 3] = [Self::LinkList, Self::Refresh, Self::Backtest];
+    const ALL: [Self; 2] = [Self::LinkList, Self::Refresh];
 
     /// Its name.
     pub fn as_str(self) -> &'static str {
         match self {
             Self::LinkList => "link_list",
             Self::Refresh => "refresh",
-            Self::Backtest => "backtest",
         }
     }
 
@@ -219,7 +216,8 @@ impl Store {
         let job = find(&mut transaction, id).await?;
         let done = if end(&mut transaction, id, JobState::Cancelled, None).await? {
             if let Some(job) = job.filter(|job| job.kind == JobKind::Refresh) {
-                refreshes::note_of(&mut transaction, &job.network, id, CALLED_OFF).await?;
+                let stands = (RefreshState::Outdated, Some(CALLED_OFF));
+                refreshes::note_of(&mut transaction, &job.network, id, stands).await?;
             }
             CalledOff::Cancelled
         } else {

@@ -149,7 +149,8 @@ impl Store {
         Ok(RefreshEnded::Stored)
     }
 
-    /// Ends a refresh that came to nothing; false when it was called off before. Where no other waits, the network says why.
+    /// Ends a refresh that has nothing to store; false when it was called off before. `stands` is how the latest forecast
+    /// stands then, and why; it is noted where no newer refresh has a say.
     ///
     /// # Errors
     /// When the database fails.
@@ -158,14 +159,14 @@ impl Store {
         job: Uuid,
         network: &str,
         (state, outcome): (JobState, &str),
-        reason: Option<&str>,
+        stands: Option<(RefreshState, Option<&str>)>,
     ) -> Result<bool, StoreError> {
         let mut transaction = self.begin().await?;
         if !end(&mut transaction, job, state, Some(outcome)).await? {
             return Ok(false);
         }
-        if let Some(reason) = reason {
-            note_of(&mut transaction, network, job, reason).await?;
+        if let Some((state, reason)) = stands {
+            note_of(&mut transaction, network, job, (state, reason)).await?;
         }
         prune(&mut transaction, network).await?;
         self.commit(transaction).await?;
@@ -230,12 +231,12 @@ pub(super) async fn corrected(
     Ok(())
 }
 
-/// Notes why there is no newer forecast, where `job` is the newest refresh.
+/// Notes how the latest forecast stands and why, where `job` is the newest refresh.
 pub(super) async fn note_of(
     connection: &mut SqliteConnection,
     network: &str,
     job: Uuid,
-    reason: &str,
+    (state, reason): (RefreshState, Option<&str>),
 ) -> Result<(), StoreError> {
     let newest: Option<i64> = sqlx::query_scalar("SELECT 1 FROM networks WHERE name = $1 AND refresh_job = $2")
         .bind(network)
@@ -243,7 +244,7 @@ pub(super) async fn note_of(
         .fetch_optional(&mut *connection)
         .await?;
     if newest.is_some() {
-        note(connection, network, RefreshState::Outdated, job, Some(reason)).await?;
+        note(connection, network, state, job, reason).await?;
     }
     Ok(())
 }

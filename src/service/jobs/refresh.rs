@@ -17,7 +17,7 @@ use crate::service::evidence::{assemble, off_runtime};
 use crate::service::inputs::{DEFAULT_SEED, ForecastInputs};
 use crate::service::runs::compute;
 use crate::service::{NetworkName, RunOrigin, Service, ServiceError, plan};
-use crate::store::{JobState, NewRun, RefreshEnd, RefreshEnded, StoredJob, StoredOrigin};
+use crate::store::{JobState, NewRun, RefreshEnd, RefreshEnded, RefreshState, StoredJob, StoredOrigin};
 
 /// Why a refresh came to nothing although nothing went wrong.
 const SUPERSEDED: &str = "what is stored changed while it was at work; a later refresh stands for all of it";
@@ -76,7 +76,7 @@ impl Service {
         let Some(network) = self.store.find_network(&job.network).await? else { return Ok(()) };
         // Taken up again after a kill while another waits: that one stands for all of it.
         if network.refresh.is_some_and(|newest| newest.job != job.id) {
-            return self.end_without(job, network.revision, SUPERSEDED).await;
+            return self.end_without(job, network.revision, SUPERSEDED, None).await;
         }
         if job.starts > MOST_STARTS {
             let again = "store the network's settings again";
@@ -175,19 +175,25 @@ impl Service {
             withdrawn: &accounts.withdrawn,
             end: (state, &outcome),
         };
-        let nothing = match persistently(|| self.store.finish_refresh(&end)).await? {
-            RefreshEnded::Stored | RefreshEnded::CalledOff => return Ok(()),
-            RefreshEnded::Superseded => SUPERSEDED,
-            RefreshEnded::Done => DONE,
-        };
-        self.end_without(job, revision, nothing).await
+        match persistently(|| self.store.finish_refresh(&end)).await? {
+            RefreshEnded::Stored | RefreshEnded::CalledOff => Ok(()),
+            RefreshEnded::Superseded => self.end_without(job, revision, SUPERSEDED, None).await,
+            RefreshEnded::Done => self.end_without(job, revision, DONE, Some((RefreshState::Current, None))).await,
+        }
     }
 
     /// Ends a refresh that has nothing to store.
-    async fn end_without(&self, job: &StoredJob, revision: u64, reason: &str) -> Result<(), ServiceError> {
+    async fn end_without(
+        &self,
+        job: &StoredJob,
+        revision: u64,
+        reason: &str,
+        stands: Option<(RefreshState, Option<&str>)>,
+    ) -> Result<(), ServiceError> {
         let outcome = RefreshResult { revision, forecast: None, accounts: 0, reason: Some(reason.to_owned()) };
         let outcome = JobOutcome::Refresh(outcome).to_json()?;
-        persistently(|| self.store.end_refresh(job.id, &job.network, (JobState::Succeeded, &outcome), None)).await?;
+        let end = (JobState::Succeeded, outcome.as_str());
+        persistently(|| self.store.end_refresh(job.id, &job.network, end, stands)).await?;
         Ok(())
     }
 
@@ -196,7 +202,10 @@ impl Service {
         let reason = problem.detail.clone();
         let outcome = JobOutcome::Problem(problem).to_json()?;
         let end = (JobState::Failed, outcome.as_str());
-        persistently(|| self.store.end_refresh(job.id, &job.network, end, Some(&reason))).await?;
+        persistently(|| {
+            self.store.end_refresh(job.id, &job.network, end, Some((RefreshState::Outdated, Some(reason.as_str()))))
+        })
+        .await?;
         Ok(())
     }
 }
