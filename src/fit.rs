@@ -4,6 +4,7 @@ mod diagnostics;
 mod entry;
 mod infer;
 mod link_events;
+mod mechanisms;
 mod one_snapshot;
 mod profile;
 mod rates;
@@ -14,6 +15,7 @@ mod transitions;
 mod verdict;
 
 pub use infer::fit;
+pub use mechanisms::{Mechanism, mechanisms};
 pub use stationary::StationaryLaw;
 
 use jiff::Timestamp;

@@ -65,6 +65,9 @@ pub enum OriginError {
         "no arrivals are given, and a single snapshot cannot show them; give arrivals.per_day or a second snapshot"
     )]
     ArrivalsRequired,
+    /// A record of forecasts needs a period before its origin.
+    #[error("an origin needs a snapshot before it")]
+    NoPeriod,
     /// A rate is out of range.
     #[error("{0}")]
     Rate(ParameterFault),

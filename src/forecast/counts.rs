@@ -1,5 +1,6 @@
 //! The law of a forecast count, given its mean and variance, and its quantiles.
 
+use statrs::distribution::{ContinuousCDF, StudentsT};
 use statrs::function::gamma::checked_gamma_lr;
 
 use crate::model::Interval;
@@ -29,6 +30,8 @@ pub struct CountLaw {
     floor: f64,
     mean: f64,
     variance: f64,
+    /// How much is known of the variance; infinite when it is taken as known.
+    degrees_of_freedom: f64,
 }
 
 impl CountLaw {
@@ -36,7 +39,14 @@ impl CountLaw {
     /// and a spread beyond three times the mean as that.
     pub fn new(floor: f64, mean: f64, variance: f64) -> Self {
         let mean = mean.max(0.0);
-        Self { floor, mean, variance: variance.clamp(0.0, mean + (WIDEST_SPREAD * mean).powi(2)) }
+        let variance = variance.clamp(0.0, mean + (WIDEST_SPREAD * mean).powi(2));
+        Self { floor, mean, variance, degrees_of_freedom: f64::INFINITY }
+    }
+
+    /// The same, its variance known only as well as so many past misses tell it (at least 1): intervals are wider in the proportion
+    /// of Student's quantile to the normal one, the more so the higher their level.
+    pub fn with_degrees_of_freedom(self, degrees_of_freedom: f64) -> Self {
+        Self { degrees_of_freedom: degrees_of_freedom.max(1.0), ..self }
     }
 
     /// The certain part.
@@ -62,26 +72,56 @@ impl CountLaw {
         if self.mean > CONTINUOUS_ABOVE {
             return self.floor + self.continuous_quantile(probability).round();
         }
+        self.floor + self.first(|x| self.distribution(x) >= probability)
+    }
+
+    /// Central intervals at `levels`, whole nodes, the median always inside.
+    ///
+    /// Formula: from the smallest x with G(x) ≥ (1 − level)/2 to the largest with G(x) ≤ (1 + level)/2, G(x) = P(count < x) +
+    /// ½·P(count = x) the mid-distribution function (Parzen 2004; Ma, Genton & Parzen 2011, doi:10.1007/s10463-009-0225-6). Ends
+    /// by plain quantiles would count both end nodes as inside in full, and cover far more than the level where counts are few.
+    pub fn intervals(&self, levels: &[f64]) -> Vec<Interval> {
+        let median = self.quantile(0.5);
+        let interval = |&level: &f64| {
+            let upper = 0.5 + 0.5 * level;
+            let wide = Self::new(self.floor, self.mean, self.variance * self.student_factor(upper).powi(2));
+            let (low, high) = wide.mid_range(0.5 - 0.5 * level, upper);
+            Interval { level, low: low.min(median), high: high.max(median) }
+        };
+        levels.iter().map(interval).collect()
+    }
+
+    /// Student's over the normal quantile at `probability`.
+    fn student_factor(&self, probability: f64) -> f64 {
+        match StudentsT::new(0.0, 1.0, self.degrees_of_freedom) {
+            Ok(law) if self.degrees_of_freedom.is_finite() => {
+                law.inverse_cdf(probability) / normal_quantile(probability)
+            }
+            _ => 1.0,
+        }
+    }
+
+    fn mid_range(&self, low: f64, high: f64) -> (f64, f64) {
+        if self.mean == 0.0 || self.variance == 0.0 || self.mean > CONTINUOUS_ABOVE {
+            return (self.quantile(low), self.quantile(high));
+        }
+        let twice_mid = |x: f64| self.distribution(x) + if x > 0.0 { self.distribution(x - 1.0) } else { 0.0 };
+        let from = self.first(|x| twice_mid(x) >= 2.0 * low);
+        (self.floor + from, self.floor + self.first(|x| twice_mid(x) > 2.0 * high) - 1.0)
+    }
+
+    /// Smallest whole x ≥ 0 from which on the increasing condition holds, by bisection.
+    fn first(&self, holds: impl Fn(f64) -> bool) -> f64 {
         let (mut below, mut reach) = (-1.0, self.mean + 8.0 * self.variance.sqrt() + 8.0);
-        while self.distribution(reach) < probability && reach < FARTHEST {
+        while !holds(reach) && reach < FARTHEST {
             (below, reach) = (reach, 2.0 * reach);
         }
         let mut reach = reach.ceil();
         while reach - below > 1.0 {
             let middle = (0.5 * (below + reach)).floor();
-            if self.distribution(middle) >= probability { reach = middle } else { below = middle }
+            if holds(middle) { reach = middle } else { below = middle }
         }
-        self.floor + reach
-    }
-
-    /// Central intervals at `levels`.
-    pub fn intervals(&self, levels: &[f64]) -> Vec<Interval> {
-        let interval = |&level: &f64| Interval {
-            level,
-            low: self.quantile(0.5 - 0.5 * level),
-            high: self.quantile(0.5 + 0.5 * level),
-        };
-        levels.iter().map(interval).collect()
+        reach
     }
 
     fn distribution(&self, x: f64) -> f64 {

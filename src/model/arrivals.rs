@@ -4,8 +4,6 @@ use std::fmt;
 
 use super::DAYS_PER_YEAR;
 
-/// The largest arrival rate accepted, nodes a day: above it N would pass 2^64 within a lifetime of a plan.
-const MAX_PER_DAY: f64 = 1e15;
 /// The fastest growth accepted: a hundredfold a year.
 const MAX_GROWTH_PER_YEAR: f64 = 99.0;
 
@@ -59,6 +57,9 @@ impl fmt::Display for ArrivalFault {
 }
 
 impl ArrivalPlan {
+    /// The largest arrival rate accepted, nodes a day: above it N would pass 2^64 within a lifetime of a plan.
+    pub const MAX_PER_DAY: f64 = 1e15;
+
     /// The same rate for ever.
     ///
     /// # Errors
@@ -84,8 +85,9 @@ impl ArrivalPlan {
         }
         for (i, s) in segments.iter().enumerate() {
             let mut fault = |field, detail| faults.push(ArrivalFault { index: Some(i), field, detail });
-            if !(s.per_day.is_finite() && (0.0..=MAX_PER_DAY).contains(&s.per_day)) {
-                fault("per_day", format!("arrivals per day must lie between 0 and {MAX_PER_DAY:e}, not {}", s.per_day));
+            if !(s.per_day.is_finite() && (0.0..=Self::MAX_PER_DAY).contains(&s.per_day)) {
+                let most = Self::MAX_PER_DAY;
+                fault("per_day", format!("arrivals per day must lie between 0 and {most:e}, not {}", s.per_day));
             }
             if !(s.growth_per_year > -1.0 && s.growth_per_year <= MAX_GROWTH_PER_YEAR) {
                 let detail = format!(

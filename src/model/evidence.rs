@@ -170,6 +170,23 @@ impl Evidence {
         self.link_events.as_ref()
     }
 
+    /// What was known at snapshot `newest` (an index) of the last `depth` dates: those snapshots, and the transitions between them.
+    /// Link events are left out, for they do not say what was known when. All of it when there is no such snapshot.
+    pub fn window(&self, newest: usize, depth: usize) -> Self {
+        let end = newest.saturating_add(1).min(self.snapshots.len());
+        let start = end.saturating_sub(depth.max(1));
+        let snapshots = self.snapshots[start..end].to_vec();
+        let (first, last) = (snapshots[0].as_of, snapshots[snapshots.len() - 1].as_of);
+        let within = |table: &&Transitions| table.from() >= first && table.to() <= last;
+        Self {
+            kind: self.kind,
+            entry: self.entry.clone(),
+            transitions: self.transitions.iter().filter(within).cloned().collect(),
+            snapshots,
+            link_events: None,
+        }
+    }
+
     /// Consecutive snapshots with the days between them, oldest first.
     pub fn periods(&self) -> impl DoubleEndedIterator<Item = (&Snapshot, &Snapshot, f64)> {
         self.snapshots.windows(2).map(|pair| (&pair[0], &pair[1], days_between(pair[0].as_of, pair[1].as_of)))

@@ -111,6 +111,7 @@ impl ServiceError {
     pub fn from_core(error: OriginError, budget: Duration) -> Self {
         match error {
             OriginError::ArrivalsRequired => Self::ArrivalsRequired,
+            OriginError::NoPeriod => Self::Impossible(error.to_string()),
             OriginError::Rate(fault) => Self::Impossible(fault.to_string()),
             OriginError::Fit(FitError::NotIdentified { detail }) => Self::NotIdentified(detail),
             OriginError::Fit(FitError::NotConverged { detail }) => Self::NotConverged(detail),

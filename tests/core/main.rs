@@ -2,6 +2,7 @@
 #![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic, clippy::print_stdout)]
 
 mod account;
+mod arrivals;
 mod census;
 mod fit;
 mod forces;

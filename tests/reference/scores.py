@@ -7,6 +7,7 @@ Writes scores.csv and interval_scores.csv beside this script. CRPS of Poisson, n
 special functions give out (large counts) from the sum over whole numbers, which is also what small ones are checked against.
 """
 import csv
+import math
 import pathlib
 import platform
 
@@ -18,6 +19,7 @@ from scipy import stats
 HERE = pathlib.Path(__file__).parent
 Z = (-6.0, -2.0, -0.7, 0.0, 0.4, 1.5, 4.0, 30.0)
 MOST_SUMMED = 1e6
+MOST_TRIALS = 1e5  # scoringrules sums over all of them
 
 
 def law_of(mean, ratio):
@@ -29,7 +31,8 @@ def law_of(mean, ratio):
         return stats.nbinom(size, chance), lambda y: scoringrules.crps_negbinom(y, size, chance)
     trials = round(mean / (1 - ratio))
     chance = 1 - ratio
-    return stats.binom(trials, chance), lambda y: scoringrules.crps_binomial(y, trials, chance)
+    few = trials <= MOST_TRIALS
+    return stats.binom(trials, chance), lambda y: scoringrules.crps_binomial(y, trials, chance) if few else math.nan
 
 
 def summed(law, observed):
