@@ -109,9 +109,9 @@ fn trials(accounts: &[IssuedAccount]) -> Vec<&IssuedAccount> {
 }
 
 fn tested_level(account: &Account) -> Option<f64> {
-    let levels = account.nodes.intervals.iter().map(|interval| interval.level);
+    let mut levels = account.nodes.intervals.iter().map(|interval| interval.level);
     let wanted = levels.clone().find(|&level| level == WANTED_LEVEL);
-    wanted.or(levels.last())
+    wanted.or(levels.next_back())
 }
 
 fn is_missed(account: &Account, level: f64) -> bool {
