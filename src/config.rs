@@ -109,8 +109,12 @@ impl ComputeConfig {
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Deserialize)]
 #[serde(deny_unknown_fields)]
 pub struct JobsConfig {
-    /// Jobs at work at the same time.
+    /// Jobs that callers ask for, at work at the same time.
     pub workers: usize,
+    /// Refreshes of tracked networks at work at the same time.
+    pub refresh_workers: usize,
+    /// Longest time that a refresh computes, seconds.
+    pub refresh_seconds: u64,
     /// Jobs that may wait.
     pub queue: usize,
     /// Longest time that a request waits for its job, seconds.
@@ -127,6 +131,11 @@ impl JobsConfig {
     /// Longest time that a request waits for its job.
     pub fn wait(&self) -> Duration {
         Duration::from_secs(self.wait_seconds)
+    }
+
+    /// Longest time that a refresh computes.
+    pub fn refresh_time(&self) -> Duration {
+        Duration::from_secs(self.refresh_seconds)
     }
 
     /// Longest time to send a link list.
@@ -286,6 +295,8 @@ impl Config {
             ("compute.queue", compute.queue as u64, 0, MOST_THINGS),
             ("compute.budget_seconds", compute.budget_seconds, 1, DAY_SECONDS),
             ("jobs.workers", jobs.workers as u64, 1, MOST_THREADS),
+            ("jobs.refresh_workers", jobs.refresh_workers as u64, 1, MOST_THREADS),
+            ("jobs.refresh_seconds", jobs.refresh_seconds, 1, DAY_SECONDS),
             ("jobs.queue", jobs.queue as u64, 0, MOST_THINGS),
             ("jobs.wait_seconds", jobs.wait_seconds, 0, DAY_SECONDS),
             ("jobs.link_list_bytes", jobs.link_list_bytes, 1, MOST_THINGS),

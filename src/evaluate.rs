@@ -1,9 +1,11 @@
 //! Puts fit and forecast together at an origin date, keeps a record of what came of it, and pools by the record; forecasts
 //! arrivals.
 
+mod account;
 mod ahead;
 mod arrivals;
 mod backtest;
+mod drift;
 mod member;
 mod origin;
 mod pool;
@@ -14,9 +16,11 @@ mod scores;
 mod spread;
 mod table;
 
+pub use account::{Account, Outcome, OutcomeSummary, account};
 pub use ahead::Rates;
 pub use arrivals::{ArrivalForecast, arrival_periods, forecast_arrivals, forecast_links_per_arrival, link_periods};
 pub use backtest::{Case, Observed, Replay, replay};
+pub use drift::{DRIFT_TEST_LEVEL, DriftCause, DriftTest, FitRecord, IssuedAccount, drift_test};
 pub use member::{Member, Step, Totals, Trend};
 pub use origin::{OriginAnswer, OriginError, OriginRequest, answer, answer_by, is_pooled};
 pub use pool::{Pool, PoolShare, pool, pooled_size};

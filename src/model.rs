@@ -11,6 +11,7 @@ mod evidence;
 mod link_events;
 mod parameters;
 mod plan;
+mod standing_plan;
 mod transitions;
 
 pub use arrivals::{ArrivalFault, ArrivalPlan, ArrivalSegment};
@@ -23,6 +24,7 @@ pub use parameters::{
     AttachmentMix, GrowthParameters, MAX_DORMANT_SHARE, MAX_GROWTH_VARIANCE, MAX_KERNEL_EXPONENT, ParameterFault,
 };
 pub use plan::{ForecastPlan, Levels, PlanFault, Thresholds};
+pub use standing_plan::{Horizon, HorizonEnd, StandingArrivals, StandingPlan, StandingSegment};
 pub use transitions::{Move, Transitions, TransitionsFault};
 
 /// Days from `origin` to `time`, as a real number; negative when `time` is earlier.

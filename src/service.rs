@@ -1,5 +1,7 @@
 //! Use cases: check, compute off the runtime within a time budget, keep the run, answer with what was kept.
 
+mod accounts;
+mod accuracy;
 mod answers;
 mod compute;
 mod cpu;
@@ -7,9 +9,11 @@ mod error;
 mod evidence;
 mod inputs;
 mod jobs;
+mod latest;
 mod network;
 mod networks;
 mod numbers;
+mod plan;
 mod runs;
 
 use std::future::Future;
@@ -27,9 +31,14 @@ pub use crate::evaluate::OriginRequest;
 pub use crate::fit::{FitRequest, Fixed, Model, ModelChoice, Rung};
 pub use crate::ingest::FaultPolicy;
 pub use crate::store::{
-    Clash, JobFilter, JobState, KeyClaim, NetworkSummary, NewNetwork, RunFilter, RunKind, RunSummary, SnapshotSummary,
-    StoredJob, StoredLinkEvents, StoredNetwork, StoredRun, StoredSnapshot, StoredTransitions, TransitionsSummary,
-    Upload,
+    Clash, JobFilter, JobKind, JobState, KeyClaim, LatestForecast, NetworkSummary, NewNetwork, RefreshState,
+    RefreshStatus, RunFilter, RunKind, RunSummary, SnapshotSummary, StoredJob, StoredLinkEvents, StoredNetwork,
+    StoredRun, StoredSnapshot, StoredTransitions, TransitionsSummary, Upload,
+};
+pub use accounts::{DateOutcome, IntervalOutcome, OutcomeAnswer, TailOutcome};
+pub use accuracy::{
+    AccuracyAnswer, CoverageAnswer, DateAccount, DriftAnswer, DriftCauseName, ForecastAccounts, SummaryAnswer,
+    ThresholdSummary,
 };
 pub use answers::{
     AttachmentAnswer, AttachmentModel, CandidateAnswer, CountAnswer, CurvePointAnswer, DateAnswer, DegreeAnswer,
@@ -40,10 +49,11 @@ pub use answers::{
 pub use compute::{Question, answer_at_once};
 pub use cpu::CpuPool;
 pub use error::{ServiceError, Thing};
-pub use evidence::Written;
-pub use inputs::{FitInputs, ForecastInputs, Label, MAX_SEED, TextFault, sha256_hex};
+pub use evidence::{NetworkEvidence, RunOrigin, Written};
+pub use inputs::{DEFAULT_SEED, FitInputs, ForecastInputs, Label, MAX_SEED, TextFault, sha256_hex};
 pub use jobs::{
-    JobFailure, JobFault, JobOutcome, JobProblem, JobView, LinkListResult, LinkListTask, PassedOver, SkippedLines,
+    JobFailure, JobFault, JobOutcome, JobProblem, JobView, LinkListResult, LinkListTask, PassedOver, RefreshResult,
+    SkippedLines,
 };
 pub use network::{Description, NameFault, NetworkName, NetworkSettings, kind_name};
 pub use numbers::{Count, Real, date_text};

@@ -4,13 +4,16 @@
 //! is every other write that looks before it leaps, each at `synchronous = FULL`: what was acknowledged is on disk, through a killed process
 //! and through a power cut. A write into a file that no longer stands at its path is never acknowledged.
 
+mod accounts;
 mod columns;
 mod connect;
 mod derived;
 mod file;
 mod jobs;
+mod latest;
 mod link_events;
 mod networks;
+mod refreshes;
 mod runs;
 mod snapshots;
 mod spool;
@@ -22,11 +25,14 @@ use std::path::PathBuf;
 use file::DatabaseFile;
 use sqlx::SqlitePool;
 
+pub use accounts::{AccountKey, IssuedRun, NewAccount, StoredAccount};
 pub use derived::DerivedEvidence;
-pub use jobs::{CalledOff, JobFilter, JobState, StoredJob};
+pub use jobs::{CalledOff, JobFilter, JobKind, JobState, StoredJob};
+pub use latest::LatestForecast;
 pub use link_events::StoredLinkEvents;
 pub use networks::{NetworkSummary, NewNetwork, StoredEvidence, StoredNetwork};
-pub use runs::{Inserted, KeyClaim, NewRun, RunFilter, RunKind, RunSummary, StoredRun};
+pub use refreshes::{Change, RefreshEnd, RefreshEnded, RefreshState, RefreshStatus};
+pub use runs::{Inserted, KeyClaim, NewRun, RunFilter, RunKind, RunSummary, StoredOrigin, StoredRun};
 pub use snapshots::{SnapshotSummary, StoredSnapshot};
 pub use spool::Upload;
 pub use transitions::{EndTags, StoredTransitions, TransitionsSummary};

@@ -181,6 +181,9 @@ fn service_problem(error: ServiceError) -> Problem {
                           /v1/networks/{name}/snapshots/{as_of}, or transitions, or a link list.";
             Problem::new(S::UNPROCESSABLE_ENTITY, "no_snapshot", detail)
         }
+        ServiceError::NoForecast(why) => {
+            Problem::new(S::NOT_FOUND, "no_forecast", format!("The network has no forecast yet: {}.", readable(&why)))
+        }
         ServiceError::Busy => {
             let detail = "Every worker is taken and the queue is full; try again shortly.";
             Problem::new(S::SERVICE_UNAVAILABLE, "overloaded", detail).retry_after(BUSY_RETRY)

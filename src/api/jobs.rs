@@ -21,10 +21,12 @@ use super::refusals::{FormRefusals, Refusals};
 use super::representation::{self, Validator, header_value};
 use super::{ApiError, AppState};
 use crate::service::{
-    JobFilter, JobOutcome, JobProblem, JobState, JobView, LinkListResult, ServiceError, Thing, sha256_hex,
+    JobFilter, JobKind, JobOutcome, JobProblem, JobState, JobView, LinkListResult, RefreshResult, ServiceError, Thing,
+    sha256_hex,
 };
 
-const PATH: &str = "/v1/jobs";
+/// Where jobs are.
+pub const PATH: &str = "/v1/jobs";
 
 /// The routes of this resource.
 pub fn routes() -> OpenApiRouter<AppState> {
@@ -55,7 +57,7 @@ pub struct JobAnswer {
     #[schema(format = DateTime)]
     ended_at: Option<String>,
     /// What was done; null until it has succeeded.
-    result: Option<LinkListResult>,
+    result: Option<JobResult>,
     /// Why nothing was done; null unless it failed.
     problem: Option<JobProblem>,
 }
@@ -66,6 +68,18 @@ pub struct JobAnswer {
 enum JobKindName {
     /// Counts a link list.
     LinkList,
+    /// Makes a network's latest forecast anew, and accounts for earlier ones.
+    Refresh,
+}
+
+/// What was done, by the kind of the job.
+#[derive(Debug, Clone, Serialize, ToSchema)]
+#[serde(untagged)]
+enum JobResult {
+    /// A link list was counted.
+    LinkList(LinkListResult),
+    /// A network was refreshed.
+    Refresh(RefreshResult),
 }
 
 /// How a job stands.
@@ -78,7 +92,7 @@ enum JobStateName {
     Running,
     /// Its result is stored.
     Succeeded,
-    /// It changed nothing.
+    /// It came to no result.
     Failed,
     /// It was called off, and changed nothing.
     Cancelled,
@@ -94,13 +108,17 @@ struct JobPage {
 impl From<JobView> for JobAnswer {
     fn from(view: JobView) -> Self {
         let (result, problem) = match view.outcome {
-            Some(JobOutcome::Result(result)) => (Some(result), None),
+            Some(JobOutcome::Result(result)) => (Some(JobResult::LinkList(result)), None),
+            Some(JobOutcome::Refresh(result)) => (Some(JobResult::Refresh(result)), None),
             Some(JobOutcome::Problem(problem)) => (None, Some(problem)),
             None => (None, None),
         };
         Self {
             id: view.job.id,
-            kind: JobKindName::LinkList,
+            kind: match view.job.kind {
+                JobKind::LinkList => JobKindName::LinkList,
+                JobKind::Refresh => JobKindName::Refresh,
+            },
             network: view.job.network,
             state: match view.job.state {
                 JobState::Waiting => JobStateName::Waiting,

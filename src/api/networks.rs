@@ -1,6 +1,8 @@
 //! `/v1/networks`: tracked networks and their settings; what is stored of them and runs from it in the rooms below.
 
+mod accuracy;
 mod answers;
+mod latest;
 mod link_events;
 mod links;
 mod runs;
@@ -35,12 +37,15 @@ pub fn routes() -> OpenApiRouter<AppState> {
         .merge(transitions::routes())
         .merge(link_events::routes())
         .merge(links::routes())
+        .merge(latest::routes())
+        .merge(accuracy::routes())
         .merge(runs::routes())
 }
 
 /// Track a network
 ///
-/// Stores its settings, in place of those it has. They hold for everything that is stored of it.
+/// Stores its settings, in place of those it has. They hold for everything that is stored of it. With a `forecast_plan`, its
+/// forecast is made anew whenever what is stored changes, and held against the snapshots that come later.
 #[utoipa::path(
     put,
     path = "/v1/networks/{name}",
@@ -68,7 +73,8 @@ async fn put_network(
     body: JsonBody,
 ) -> Result<Response, ApiError> {
     let name = network_name(&name)?;
-    let settings = body.read(read_network).await?;
+    let limits = state.limits;
+    let settings = body.read(move |raw, faults| read_network(raw, &limits, faults)).await?;
     let (stored, made) = state.service.put_network(&name, &settings, move |tag| conditions.hold(tag)).await?;
     written(StoredNetworkAnswer::try_from(stored)?, made, &address(&name))
 }

@@ -12,7 +12,9 @@ pub use network::{
     EVIDENCE_FIELDS, NETWORK_FIELDS, read_link_events, read_network, read_network_fit, read_network_forecast,
     read_snapshot, read_snapshot_csv, read_transitions, read_transitions_csv,
 };
-pub use network_schema::{DegreeCountsBody, NetworkBody, NetworkFitBody, NetworkForecastBody, TransitionCountsBody};
+pub use network_schema::{
+    DegreeCountsBody, ForecastPlanBody, NetworkBody, NetworkFitBody, NetworkForecastBody, TransitionCountsBody,
+};
 pub use schema::{
     ArrivalsBody, DegreeKindName, FitRequestBody, FixedBody, ForecastRequestBody, HorizonBody, LinkEventsBody,
     ModelName, SegmentBody, SnapshotBody, TransitionsBody, WindowBody, degree_pairs, move_rows,
@@ -23,7 +25,8 @@ use crate::config::LimitsConfig;
 use crate::model::{ArrivalPlan, AttachmentMix, DegreeKind, EntryDegrees, GrowthParameters, ParameterFault};
 use crate::report::readable;
 use crate::service::{
-    FitInputs, FitRequest, Fixed, ForecastInputs, Label, MAX_SEED, Model, ModelChoice, OriginRequest, Rung,
+    DEFAULT_SEED, FitInputs, FitRequest, Fixed, ForecastInputs, Label, MAX_SEED, Model, ModelChoice, OriginRequest,
+    Rung,
 };
 
 /// Fields of a fit's body.
@@ -70,9 +73,6 @@ pub const FORECAST_FIELDS: [&str; 19] = [
 /// Fields of what is taken as given.
 pub const FIXED_FIELDS: [&str; 4] = ["preferential_share", "kernel_exponent", "dormant_share", "growth_variance"];
 
-/// Seed when none is given.
-const DEFAULT_SEED: u64 = 1;
-
 /// Reads the body of a fit.
 pub fn read_fit(raw: &RawValue, limits: &LimitsConfig, faults: &mut Faults) -> Option<FitInputs> {
     let body = object(raw, At::ROOT, &FIT_FIELDS, faults)?;
@@ -88,8 +88,8 @@ pub fn read_forecast(raw: &RawValue, limits: &LimitsConfig, faults: &mut Faults)
     let evidence = evidence::read(&body, limits, faults);
     let fit = fit_request(&body, faults);
     let label = label(&body, faults);
-    let arrivals = outlook::arrivals(&body, evidence.latest, faults);
-    let plan = outlook::plan(&body, evidence.latest, limits, faults);
+    let arrivals = outlook::arrivals(&body, evidence.latest, None, faults);
+    let plan = outlook::plan(&body, evidence.latest, None, limits, faults);
     let request = OriginRequest { evidence: evidence.whole?, fit: fit?, arrivals, plan: plan? };
     Some(ForecastInputs { label, request })
 }

@@ -30,6 +30,11 @@ pub struct RunLine {
     seed: u64,
     /// Digest of the validated inputs.
     inputs_digest: String,
+    /// Whether a refresh of its network issued it: only such forecasts are accounted for.
+    issued: bool,
+    /// When counts it stands on were last replaced or deleted; null when they stand. The run itself stays as it was made.
+    #[schema(format = DateTime)]
+    evidence_corrected_at: Option<String>,
 }
 
 /// Runs, newest first; the Link header leads to the next page.
@@ -49,6 +54,8 @@ impl From<RunSummary> for RunLine {
             engine: run.engine,
             seed: run.seed,
             inputs_digest: run.inputs_digest,
+            issued: run.issued,
+            evidence_corrected_at: run.evidence_corrected_at.map(|time| time.to_string()),
         }
     }
 }

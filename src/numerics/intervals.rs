@@ -34,6 +34,24 @@ pub fn binomial_share(successes: f64, trials: f64, level: f64) -> (f64, f64) {
     (low, high)
 }
 
+/// Computes P(X ≥ `successes`) for X binomial with so many trials, each a success with probability `share` in (0, 1).
+///
+/// ```
+/// use tailcast::numerics::intervals::binomial_tail;
+/// // Two of two, and at least one of two.
+/// assert!((binomial_tail(2, 2, 0.1) - 0.01).abs() < 1e-12);
+/// assert!((binomial_tail(1, 2, 0.1) - 0.19).abs() < 1e-12);
+/// assert_eq!(binomial_tail(0, 2, 0.1), 1.0);
+/// ```
+pub fn binomial_tail(successes: u64, trials: u64, share: f64) -> f64 {
+    match successes {
+        0 => 1.0,
+        _ if successes > trials => 0.0,
+        // P(X ≥ k) is the regularised incomplete beta function I_share(k, n − k + 1).
+        _ => checked_beta_reg(successes as f64, (trials - successes) as f64 + 1.0, share).unwrap_or(1.0),
+    }
+}
+
 /// Computes the central interval of a Poisson mean of which `count` was seen (Garwood 1936).
 ///
 /// ```

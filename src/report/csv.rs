@@ -59,11 +59,11 @@ pub fn percent(level: f64) -> String {
     text.trim_end_matches('0').trim_end_matches('.').to_owned()
 }
 
-fn writer() -> csv::Writer<Vec<u8>> {
+pub(super) fn writer() -> csv::Writer<Vec<u8>> {
     WriterBuilder::new().terminator(Terminator::CRLF).from_writer(Vec::new())
 }
 
-fn text(writer: csv::Writer<Vec<u8>>) -> Result<String, csv::Error> {
+pub(super) fn text(writer: csv::Writer<Vec<u8>>) -> Result<String, csv::Error> {
     let bytes = writer.into_inner().map_err(|error| csv::Error::from(error.into_error()))?;
     String::from_utf8(bytes).map_err(|error| csv::Error::from(std::io::Error::other(error)))
 }

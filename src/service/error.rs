@@ -26,6 +26,9 @@ pub enum ServiceError {
     /// Nothing is stored of the network that a run could start from.
     #[error("the network has no snapshot")]
     NoSnapshot,
+    /// The network has no forecast yet, for this reason.
+    #[error("the network has no forecast yet: {0}")]
+    NoForecast(String),
     /// Every worker is taken and the queue is full.
     #[error("every worker is taken and the queue is full")]
     Busy,
@@ -108,6 +111,7 @@ impl ServiceError {
     pub fn from_core(error: OriginError, budget: Duration) -> Self {
         match error {
             OriginError::ArrivalsRequired => Self::ArrivalsRequired,
+            OriginError::NoPeriod => Self::Impossible(error.to_string()),
             OriginError::Rate(fault) => Self::Impossible(fault.to_string()),
             OriginError::Fit(FitError::NotIdentified { detail }) => Self::NotIdentified(detail),
             OriginError::Fit(FitError::NotConverged { detail }) => Self::NotConverged(detail),

@@ -1,6 +1,6 @@
 //! What is stored of tracked networks: snapshots, transitions, link events; and all of it as evidence for a run.
 
-mod assemble;
+pub(super) mod assemble;
 pub(super) mod encode;
 
 use jiff::Timestamp;
@@ -8,14 +8,36 @@ use tokio::sync::OwnedSemaphorePermit;
 use tokio::time::timeout;
 
 use super::networks::cut;
-use super::{NetworkName, Service, ServiceError, Thing, in_own_task};
-use crate::model::{Evidence, LinkEvents, Snapshot, Transitions};
+use super::{NetworkName, Service, ServiceError, Thing, in_own_task, plan};
+use crate::model::{Evidence, LinkEvents, Snapshot, StandingPlan, Transitions};
 use crate::store::{
-    SnapshotSummary, StoredLinkEvents, StoredSnapshot, StoredTransitions, TransitionsSummary, WriteError,
+    SnapshotSummary, StoredLinkEvents, StoredOrigin, StoredSnapshot, StoredTransitions, TransitionsSummary, WriteError,
 };
 
 /// What a write answers: the line of what is stored now, and whether nothing stood there before.
 pub type Written<T> = Result<(T, bool), ServiceError>;
+
+/// All that is stored of a network.
+#[derive(Debug)]
+pub struct NetworkEvidence {
+    /// What is known.
+    pub evidence: Evidence,
+    /// What is asked of its forecasts.
+    pub plan: Option<StandingPlan>,
+    /// What a run from it stands on.
+    pub origin: RunOrigin,
+    /// The place it takes in memory: to be kept until the run is made.
+    pub place: OwnedSemaphorePermit,
+}
+
+/// What a run of a tracked network stands on.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct RunOrigin {
+    /// The network.
+    pub network: NetworkName,
+    /// The state it was in.
+    pub stored: StoredOrigin,
+}
 
 impl Service {
     /// Stores a snapshot. `allows` is asked about the validator of what stands there.
@@ -31,10 +53,14 @@ impl Service {
     ) -> Written<SnapshotSummary> {
         self.check_tables().await?;
         let stored = encoded(move || encode::snapshot(&snapshot)).await?;
-        let (store, caps) = (self.store.clone(), self.caps);
+        let service = self.clone();
         in_own_task(async move {
-            let made = store.put_snapshot(name.as_str(), &stored, &caps, allows).await;
-            Ok((stored.summary, made.map_err(refused(Thing::Snapshot))?))
+            let change = service.store.put_snapshot(name.as_str(), &stored, &service.caps, allows).await;
+            let change = change.map_err(refused(Thing::Snapshot))?;
+            service.start_refresh(change.refresh);
+            let mut summary = stored.summary;
+            summary.updated_at = change.stands_since.unwrap_or(summary.updated_at);
+            Ok((summary, change.made))
         })
         .await
     }
@@ -72,9 +98,11 @@ impl Service {
         as_of: Timestamp,
         allows: impl FnOnce(Option<&str>) -> bool + Send + 'static,
     ) -> Result<(), ServiceError> {
-        let store = self.store.clone();
+        let service = self.clone();
         in_own_task(async move {
-            store.delete_snapshot(name.as_str(), as_of, allows).await.map_err(refused(Thing::Snapshot))
+            let refresh = service.store.delete_snapshot(name.as_str(), as_of, allows).await;
+            service.start_refresh(refresh.map_err(refused(Thing::Snapshot))?);
+            Ok(())
         })
         .await
     }
@@ -91,10 +119,14 @@ impl Service {
     ) -> Written<TransitionsSummary> {
         self.check_tables().await?;
         let (stored, ends) = encoded(move || encode::transitions(&table)).await?;
-        let (store, caps) = (self.store.clone(), self.caps);
+        let service = self.clone();
         in_own_task(async move {
-            let made = store.put_transitions(name.as_str(), &stored, &ends, &caps, allows).await;
-            Ok((stored.summary, made.map_err(refused(Thing::Transitions))?))
+            let change = service.store.put_transitions(name.as_str(), &stored, &ends, &service.caps, allows).await;
+            let change = change.map_err(refused(Thing::Transitions))?;
+            service.start_refresh(change.refresh);
+            let mut summary = stored.summary;
+            summary.updated_at = change.stands_since.unwrap_or(summary.updated_at);
+            Ok((summary, change.made))
         })
         .await
     }
@@ -136,9 +168,11 @@ impl Service {
         dates: (Timestamp, Timestamp),
         allows: impl FnOnce(Option<&str>) -> bool + Send + 'static,
     ) -> Result<(), ServiceError> {
-        let store = self.store.clone();
+        let service = self.clone();
         in_own_task(async move {
-            store.delete_transitions(name.as_str(), dates, allows).await.map_err(refused(Thing::Transitions))
+            let refresh = service.store.delete_transitions(name.as_str(), dates, allows).await;
+            service.start_refresh(refresh.map_err(refused(Thing::Transitions))?);
+            Ok(())
         })
         .await
     }
@@ -154,11 +188,14 @@ impl Service {
         allows: impl FnOnce(Option<&str>) -> bool + Send + 'static,
     ) -> Written<StoredLinkEvents> {
         self.check_tables().await?;
-        let stored = encoded(move || encode::link_events(&events)).await?;
-        let (store, caps) = (self.store.clone(), self.caps);
+        let mut stored = encoded(move || encode::link_events(&events)).await?;
+        let service = self.clone();
         in_own_task(async move {
-            let made = store.put_link_events(name.as_str(), &stored, &caps, allows).await;
-            Ok((stored, made.map_err(refused(Thing::LinkEvents))?))
+            let change = service.store.put_link_events(name.as_str(), &stored, &service.caps, allows).await;
+            let change = change.map_err(refused(Thing::LinkEvents))?;
+            service.start_refresh(change.refresh);
+            stored.updated_at = change.stands_since.unwrap_or(stored.updated_at);
+            Ok((stored, change.made))
         })
         .await
     }
@@ -181,20 +218,21 @@ impl Service {
         name: NetworkName,
         allows: impl FnOnce(Option<&str>) -> bool + Send + 'static,
     ) -> Result<(), ServiceError> {
-        let store = self.store.clone();
-        in_own_task(
-            async move { store.delete_link_events(name.as_str(), allows).await.map_err(refused(Thing::LinkEvents)) },
-        )
+        let service = self.clone();
+        in_own_task(async move {
+            let refresh = service.store.delete_link_events(name.as_str(), allows).await;
+            service.start_refresh(refresh.map_err(refused(Thing::LinkEvents))?);
+            Ok(())
+        })
         .await
     }
 
-    /// All that is stored of a network, as evidence for a run, and the place it takes in memory: to be kept until the
-    /// run is made.
+    /// All that is stored of a network, for a run.
     ///
     /// # Errors
     /// When there is no such network, nothing is stored that a run could start from, no place is free within the time
     /// budget, or the database fails.
-    pub async fn evidence(&self, name: &NetworkName) -> Result<(Evidence, OwnedSemaphorePermit), ServiceError> {
+    pub async fn evidence(&self, name: &NetworkName) -> Result<NetworkEvidence, ServiceError> {
         self.network(name).await?;
         let budget = self.cpu.budget();
         let place = match timeout(budget, self.evidence_places.clone().acquire_owned()).await {
@@ -203,8 +241,12 @@ impl Service {
             Err(_) => return Err(ServiceError::TooSlow { budget }),
         };
         let stored = self.store.find_evidence(name.as_str()).await?.ok_or(ServiceError::NotFound(Thing::Network))?;
+        let plan = stored.network.settings.forecast_plan.as_deref().map(plan::from_json).transpose()?;
+        let revision = stored.network.revision;
         let evidence = off_runtime(move || assemble::evidence(stored)).await??;
-        Ok((evidence, place))
+        let origin =
+            RunOrigin { network: name.clone(), stored: StoredOrigin { revision, as_of: evidence.latest().as_of } };
+        Ok(NetworkEvidence { evidence, plan, origin, place })
     }
 
     /// What was found, or whether the network or the thing under it is missing.
@@ -227,7 +269,9 @@ async fn encoded<T: Send + 'static>(
     off_runtime(work).await?.map_err(|error| ServiceError::Broken(error.to_string()))
 }
 
-async fn off_runtime<T: Send + 'static>(work: impl FnOnce() -> T + Send + 'static) -> Result<T, ServiceError> {
+pub(super) async fn off_runtime<T: Send + 'static>(
+    work: impl FnOnce() -> T + Send + 'static,
+) -> Result<T, ServiceError> {
     let done = tokio::task::spawn_blocking(work).await;
     done.map_err(|error| ServiceError::Broken(format!("a conversion stopped short: {error}")))
 }

@@ -11,6 +11,8 @@ use crate::model::{ArrivalPlan, AttachmentCell, Evidence, ForecastPlan, LinkEven
 
 /// The largest seed: 2^53 − 1, the largest whole number every JSON reader keeps exactly.
 pub const MAX_SEED: u64 = (1 << 53) - 1;
+/// Seed when none is given.
+pub const DEFAULT_SEED: u64 = 1;
 const MAX_LABEL_CHARS: usize = 200;
 
 /// A caller's name for a run: at most 200 characters, no NUL.

@@ -1,8 +1,10 @@
 //! Jobs: work that outlasts its request and, taken up again, the process.
 
 mod board;
+mod counting;
 mod link_list;
 mod outcome;
+mod refresh;
 
 use std::future::Future;
 use std::time::Duration;
@@ -13,13 +15,14 @@ use tracing::{Instrument, info_span};
 use uuid::Uuid;
 
 use super::networks::cut;
-use super::{NetworkName, Service, ServiceError, Thing, in_own_task};
-use crate::store::{CalledOff, JobFilter, JobState, StoreError, StoredJob, Upload, WriteError};
+use super::{Service, ServiceError, Thing, in_own_task};
+use crate::store::{CalledOff, JobFilter, JobKind, JobState, StoreError, StoredJob, WriteError};
 pub use board::Board;
 use board::Turn;
 pub use link_list::LinkListTask;
-use link_list::{Stopped, Told, count};
-pub use outcome::{JobFailure, JobFault, JobOutcome, JobProblem, LinkListResult, PassedOver, SkippedLines};
+pub use outcome::{
+    JobFailure, JobFault, JobOutcome, JobProblem, LinkListResult, PassedOver, RefreshResult, SkippedLines,
+};
 
 /// How often a job is begun before it is given up: one that stops the process each time must not do so for ever.
 const MOST_STARTS: u64 = 3;
@@ -39,43 +42,6 @@ pub struct JobView {
 }
 
 impl Service {
-    /// Begins to receive a network's link list.
-    ///
-    /// # Errors
-    /// When there is no such network, it has a live job, or the database fails.
-    pub async fn begin_link_list(&self, name: &NetworkName) -> Result<Upload, ServiceError> {
-        self.check_tables().await?;
-        self.store.check_idle(name.as_str()).await.map_err(refused)?;
-        Ok(self.store.begin_upload().await?)
-    }
-
-    /// Takes on a link list that was received in full; returns the job's id. It is on disk when this returns.
-    ///
-    /// # Errors
-    /// As [`Self::begin_link_list`]; when as many jobs as configured wait.
-    pub async fn take_link_list(
-        &self,
-        name: NetworkName,
-        task: LinkListTask,
-        list: Upload,
-    ) -> Result<Uuid, ServiceError> {
-        let service = self.clone();
-        in_own_task(async move {
-            let kind = service.network(&name).await?.settings.degree_kind;
-            let task = task.to_json(kind, list.bytes())?;
-            let id = Uuid::now_v7();
-            list.keep(id).await?;
-            let taken = service.store.insert_job(id, name.as_str(), &task, service.jobs.most_live()).await;
-            if let Err(error) = taken {
-                service.drop_list(id).await;
-                return Err(refused(error));
-            }
-            service.launch(id);
-            Ok(id)
-        })
-        .await
-    }
-
     /// A job as it stands.
     ///
     /// # Errors
@@ -146,16 +112,17 @@ impl Service {
         self.check_tables().await?;
         // What is younger than an upload may take may belong to one.
         self.store.sweep_spool(self.jobs.config().link_list_time()).await?;
-        for id in self.store.live_jobs().await? {
-            self.launch(id);
+        for (id, kind) in self.store.live_jobs().await? {
+            self.launch(id, kind);
         }
         Ok(())
     }
 
-    fn launch(&self, id: Uuid) {
-        let (service, turn) = (self.clone(), self.jobs.open(id));
+    fn launch(&self, id: Uuid, kind: JobKind) {
+        // Two changes may both find the refresh that stands for them.
+        let (service, Some(turn)) = (self.clone(), self.jobs.open(id)) else { return };
         let work = async move {
-            if let Err(error) = service.work(id, &turn).await {
+            if let Err(error) = service.work(id, kind, &turn).await {
                 tracing::error!(%error, "the job's end could not be written; it is taken up again at the next start");
             }
         };
@@ -163,51 +130,19 @@ impl Service {
     }
 
     /// Works a job to its end, or until the process stops.
-    async fn work(&self, id: Uuid, turn: &Turn) -> Result<(), ServiceError> {
-        let _worker = turn.come().await;
+    async fn work(&self, id: Uuid, kind: JobKind, turn: &Turn) -> Result<(), ServiceError> {
+        let _worker = turn.come(kind).await;
         if turn.is_stopping() {
             return Ok(());
         }
-        if let Some(job) = self.store.start_job(id).await? {
-            match self.told(&job, turn).await {
-                Ok(told) => self.finish(&job, &told).await?,
-                Err(Stopped::Process) => return Ok(()),
-                Err(Stopped::CalledOff) => {}
-                Err(Stopped::Failed(problem)) => self.fail(&job, problem).await?,
-            }
-        }
-        self.drop_list(id).await;
-        Ok(())
-    }
-
-    /// What the list of a job tells.
-    async fn told(&self, job: &StoredJob, turn: &Turn) -> Result<Told, Stopped> {
-        if job.starts > MOST_STARTS {
-            return Err(Stopped::Failed(JobProblem::interrupted(job.starts - 1)));
-        }
-        let (path, task, progress) = (self.store.spooled(job.id), job.task.clone(), turn.progress());
-        let most_nodes = self.jobs.config().link_list_nodes;
-        let counting = tokio::task::spawn_blocking(move || count(&path, &task, most_nodes, &progress));
-        match counting.await {
-            Ok(told) => told,
-            Err(error) => Err(Stopped::broken(format!("counting stopped short: {error}"))),
-        }
-    }
-
-    async fn finish(&self, job: &StoredJob, told: &Told) -> Result<(), ServiceError> {
-        let outcome = JobOutcome::Result(told.result.clone()).to_json()?;
-        let written = persistently(|| async {
-            match self.store.finish_link_list(job.id, &job.network, &told.derived, &self.caps, &outcome).await {
-                Ok(_) => Ok(None),
-                Err(WriteError::Clash(clash)) => Ok(Some(JobProblem::clash(&clash))),
-                // The network went, and the job with it.
-                Err(WriteError::NoNetwork | WriteError::Missing | WriteError::Mismatch) => Ok(None),
-                Err(WriteError::Store(error)) => Err(error),
-            }
-        });
-        match written.await? {
-            Some(problem) => self.fail(job, problem).await,
-            None => Ok(()),
+        let Some(job) = self.store.start_job(id).await? else {
+            // A list that was received in vain.
+            self.drop_list(id).await;
+            return Ok(());
+        };
+        match job.kind {
+            JobKind::LinkList => self.count_link_list(&job, turn).await,
+            JobKind::Refresh => self.refresh(&job, turn).await,
         }
     }
 
@@ -215,15 +150,6 @@ impl Service {
         let outcome = JobOutcome::Problem(problem).to_json()?;
         persistently(|| self.store.fail_job(job.id, &outcome)).await?;
         Ok(())
-    }
-
-    async fn drop_list(&self, id: Uuid) {
-        let path = self.store.spooled(id);
-        if let Err(error) = tokio::fs::remove_file(&path).await
-            && error.kind() != std::io::ErrorKind::NotFound
-        {
-            tracing::warn!(path = %path.display(), %error, "a link list that is needed no more could not be removed");
-        }
     }
 }
 

@@ -3,7 +3,8 @@
 use serde::Serialize;
 
 use super::inputs::{TextFault, checked_text, sha256_hex};
-use crate::model::{DegreeKind, EntryDegrees};
+use super::plan;
+use crate::model::{DegreeKind, EntryDegrees, StandingPlan};
 use crate::store::NewNetwork;
 
 const MAX_NAME_CHARS: usize = 100;
@@ -55,7 +56,7 @@ impl Description {
 }
 
 /// What holds for all of a network's evidence.
-#[derive(Debug, Clone, PartialEq)]
+#[derive(Debug, Clone)]
 pub struct NetworkSettings {
     /// What its degrees count.
     pub degree_kind: DegreeKind,
@@ -63,6 +64,8 @@ pub struct NetworkSettings {
     pub description: Option<Description>,
     /// Entry degrees, when the caller knows them.
     pub entry_degrees: Option<EntryDegrees>,
+    /// What is asked of its forecasts.
+    pub forecast_plan: Option<StandingPlan>,
 }
 
 impl NetworkSettings {
@@ -76,18 +79,27 @@ impl NetworkSettings {
             degree_kind: &'a str,
             description: Option<&'a str>,
             entry_degrees: Option<&'a str>,
+            // Left out when there is none, as before there could be one: tags do not change.
+            #[serde(skip_serializing_if = "Option::is_none")]
+            forecast_plan: Option<&'a str>,
         }
         let entry_degrees =
             self.entry_degrees.as_ref().map(|entry| serde_json::to_string(entry.shares())).transpose()?;
         let description = self.description.as_ref().map(|Description(text)| text.as_str());
-        let tagged =
-            Settings { degree_kind: kind_name(self.degree_kind), description, entry_degrees: entry_degrees.as_deref() };
+        let forecast_plan = self.forecast_plan.as_ref().map(plan::to_json).transpose()?;
+        let tagged = Settings {
+            degree_kind: kind_name(self.degree_kind),
+            description,
+            entry_degrees: entry_degrees.as_deref(),
+            forecast_plan: forecast_plan.as_deref(),
+        };
         Ok(NewNetwork {
             name: name.0.clone(),
             degree_kind: self.degree_kind,
             description: description.map(str::to_owned),
             tag: sha256_hex(&serde_json::to_vec(&tagged)?),
             entry_degrees,
+            forecast_plan,
         })
     }
 }

@@ -4,7 +4,8 @@ use super::{NetworkName, NetworkSettings, Service, ServiceError, Thing, in_own_t
 use crate::store::{NetworkSummary, NewNetwork, StoredNetwork};
 
 impl Service {
-    /// Stores a network's settings; true when it is new. `allows` is asked about the validator of what stands there.
+    /// Stores a network's settings; true when it is new. A refresh follows where they change what a forecast follows from.
+    /// `allows` is asked about the validator of what stands there.
     ///
     /// # Errors
     /// When `allows` refuses, the kind of degree would change under stored counts, or the database fails.
@@ -16,11 +17,12 @@ impl Service {
     ) -> Result<(NewNetwork, bool), ServiceError> {
         self.check_tables().await?;
         let network = settings.to_stored(name).map_err(|error| ServiceError::Broken(error.to_string()))?;
-        let store = self.store.clone();
+        let service = self.clone();
         in_own_task(async move {
-            let made = store.put_network(&network, allows).await;
-            let made = made.map_err(|error| ServiceError::from_write(error, Thing::Network))?;
-            Ok((network, made))
+            let change = service.store.put_network(&network, allows).await;
+            let change = change.map_err(|error| ServiceError::from_write(error, Thing::Network))?;
+            service.start_refresh(change.refresh);
+            Ok((network, change.made))
         })
         .await
     }
@@ -47,7 +49,7 @@ impl Service {
         Ok(cut(found, limit))
     }
 
-    /// Deletes a network and all that is stored of it, and calls its job off; its runs stay. `allows` is asked about its validator.
+    /// Deletes a network and all that is stored of it, and calls its jobs off; its runs stay. `allows` is asked about its validator.
     ///
     /// # Errors
     /// When there is no such network, `allows` refuses, or the database fails.
@@ -59,8 +61,8 @@ impl Service {
         let (store, jobs) = (self.store.clone(), self.jobs.clone());
         in_own_task(async move {
             let done = store.delete_network(name.as_str(), allows).await;
-            let job = done.map_err(|error| ServiceError::from_write(error, Thing::Network))?;
-            job.into_iter().for_each(|job| jobs.call_off(job));
+            let called_off = done.map_err(|error| ServiceError::from_write(error, Thing::Network))?;
+            called_off.into_iter().for_each(|job| jobs.call_off(job));
             Ok(())
         })
         .await

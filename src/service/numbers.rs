@@ -53,6 +53,11 @@ pub fn date_text(time: Timestamp) -> String {
     if civil.time() == Time::midnight() { civil.date().to_string() } else { time.to_string() }
 }
 
+/// The time that [`date_text`] wrote.
+pub fn date_of(text: &str) -> Option<Timestamp> {
+    text.parse().or_else(|_| format!("{text}T00:00:00Z").parse()).ok()
+}
+
 #[cfg(test)]
 mod tests {
     use super::*;

@@ -7,7 +7,7 @@ use uuid::Uuid;
 use super::compute::{Question, inputs_digest};
 use super::inputs::sha256_hex;
 use super::{
-    ENGINE, KeyClaim, NetworkName, RunFilter, RunKind, RunSummary, Service, ServiceError, StoredRun, Thing, in_own_task,
+    ENGINE, KeyClaim, RunFilter, RunKind, RunOrigin, RunSummary, Service, ServiceError, StoredRun, Thing, in_own_task,
 };
 use crate::evaluate::OriginError;
 use crate::store::{Inserted, NewRun};
@@ -23,7 +23,7 @@ struct Document<'a, A> {
 }
 
 impl Service {
-    /// Computes an answer and keeps it, as a run of `network` when it stands on what is stored of one; or finds the run
+    /// Computes an answer and keeps it, as a run of the network of `origin` when it stands on what is stored of one; or finds the run
     /// that the same key and body led to before. When this returns a run, it is on disk.
     ///
     /// # Errors
@@ -32,7 +32,7 @@ impl Service {
     pub async fn create<Q: Question>(
         &self,
         question: Q,
-        network: Option<NetworkName>,
+        origin: Option<RunOrigin>,
         claim: Option<KeyClaim>,
     ) -> Result<StoredRun, ServiceError> {
         // Before anything is computed that could not be kept.
@@ -46,7 +46,7 @@ impl Service {
             return Err(ServiceError::from_core(refusal, self.cpu.budget()));
         }
         let budget = self.cpu.budget();
-        let run = self.cpu.run(move |cancelled| compute(&question, network, cancelled)).await?;
+        let run = self.cpu.run(move |cancelled| compute(&question, origin, cancelled)).await?;
         let run = run.map_err(|failure| failure.into_service_error(budget))?;
         let store = self.store.clone();
         in_own_task(async move {
@@ -101,13 +101,13 @@ impl Service {
 }
 
 /// Why a computation gave no run to keep.
-enum Failure {
+pub(super) enum Failure {
     Unanswered(OriginError),
     Unwritable(String),
 }
 
 impl Failure {
-    fn into_service_error(self, budget: std::time::Duration) -> ServiceError {
+    pub(super) fn into_service_error(self, budget: std::time::Duration) -> ServiceError {
         match self {
             Self::Unanswered(unanswered) => ServiceError::from_core(unanswered, budget),
             Self::Unwritable(error) => ServiceError::Broken(format!("the answer cannot be written: {error}")),
@@ -115,9 +115,10 @@ impl Failure {
     }
 }
 
-fn compute<Q: Question>(
+/// Computes the answer to a question as a run to keep.
+pub(super) fn compute<Q: Question>(
     question: &Q,
-    network: Option<NetworkName>,
+    origin: Option<RunOrigin>,
     cancelled: &dyn Fn() -> bool,
 ) -> Result<NewRun, Failure> {
     let inputs = question.canonical().map_err(|error| Failure::Unwritable(error.to_string()))?;
@@ -135,7 +136,7 @@ fn compute<Q: Question>(
     let document = Document {
         id,
         created_at: created_at.to_string(),
-        network: network.as_ref().map(NetworkName::as_str),
+        network: origin.as_ref().map(|origin| origin.network.as_str()),
         answer: &answer,
     };
     let document = serde_json::to_string(&document)
@@ -143,7 +144,7 @@ fn compute<Q: Question>(
     Ok(NewRun {
         id,
         kind: Q::KIND,
-        network: network.map(|name| name.as_str().to_owned()),
+        network: origin.as_ref().map(|origin| origin.network.as_str().to_owned()),
         label: question.label().map(|label| label.as_str().to_owned()),
         created_at,
         engine: ENGINE,
@@ -152,6 +153,7 @@ fn compute<Q: Question>(
         tag: sha256_hex(document.as_bytes()),
         document,
         inputs,
+        stored: origin.map(|origin| origin.stored),
     })
 }
 

@@ -73,7 +73,8 @@ impl Store {
             "SELECT 1 WHERE EXISTS (SELECT 1 FROM runs) OR EXISTS (SELECT 1 FROM idempotency_keys) \
              OR EXISTS (SELECT 1 FROM networks) OR EXISTS (SELECT 1 FROM snapshots) \
              OR EXISTS (SELECT 1 FROM transitions) OR EXISTS (SELECT 1 FROM link_events) \
-             OR EXISTS (SELECT 1 FROM jobs)",
+             OR EXISTS (SELECT 1 FROM jobs) OR EXISTS (SELECT 1 FROM network_runs) \
+             OR EXISTS (SELECT 1 FROM latest_forecasts) OR EXISTS (SELECT 1 FROM accounts)",
         )
         .fetch_optional(&mut *connection)
         .await?;

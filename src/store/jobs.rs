@@ -6,7 +6,11 @@ use uuid::Uuid;
 
 use super::columns::{corrupt, time, unsigned, uuid};
 use super::writes::{Clash, WriteError, network_exists};
-use super::{Store, StoreError};
+use super::{RefreshState, Store, StoreError, refreshes};
+
+/// Why a network has no newer forecast when its refresh was called off.
+const CALLED_OFF: &str =
+    "the refresh was called off; the next change, or storing the network's settings again, makes another";
 
 /// How a job stands.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
@@ -17,7 +21,7 @@ pub enum JobState {
     Running,
     /// Its result is stored.
     Succeeded,
-    /// It changed nothing.
+    /// It came to no result.
     Failed,
     /// It was called off, and changed nothing.
     Cancelled,
@@ -43,11 +47,38 @@ impl JobState {
     }
 }
 
+/// What a job does.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum JobKind {
+    /// Counts a link list.
+    LinkList,
+    /// Makes a network's latest forecast anew, and accounts for earlier ones.
+    Refresh,
+}
+
+impl JobKind {
+    const ALL: [Self; 2] = [Self::LinkList, Self::Refresh];
+
+    /// Its name.
+    pub fn as_str(self) -> &'static str {
+        match self {
+            Self::LinkList => "link_list",
+            Self::Refresh => "refresh",
+        }
+    }
+
+    fn named(name: &str) -> Result<Self, StoreError> {
+        Self::ALL.into_iter().find(|kind| kind.as_str() == name).ok_or_else(|| corrupt("kind", name))
+    }
+}
+
 /// A job as stored.
 #[derive(Debug, Clone, PartialEq, Eq)]
 pub struct StoredJob {
     /// Its id, ordered by time.
     pub id: Uuid,
+    /// What it does.
+    pub kind: JobKind,
     /// The network it is about.
     pub network: String,
     /// How it stands.
@@ -91,6 +122,7 @@ pub enum CalledOff {
 #[derive(FromRow)]
 struct JobRow {
     id: String,
+    kind: String,
     network: String,
     state: String,
     starts: i64,
@@ -102,44 +134,44 @@ struct JobRow {
 }
 
 impl Store {
-    /// Stores a waiting job of a network that has no other.
+    /// Stores a waiting job of a network that has no other of its kind.
     ///
     /// # Errors
-    /// When there is no such network, it has a live job, `most_live` jobs are live, or the database fails.
-    pub async fn insert_job(&self, id: Uuid, network: &str, task: &str, most_live: u64) -> Result<(), WriteError> {
+    /// When there is no such network, it has a live job of the kind, `most_live` jobs are live, refreshes not counted, or the
+    /// database fails.
+    pub async fn insert_job(
+        &self,
+        id: Uuid,
+        (kind, network): (JobKind, &str),
+        task: &str,
+        most_live: u64,
+    ) -> Result<(), WriteError> {
         let mut transaction = self.begin().await?;
         network_exists(&mut transaction, network).await?;
-        if let Some(job) = live_job(&mut transaction, network).await? {
+        if let Some(job) = live_job(&mut transaction, network, kind).await? {
             return Err(Clash::JobLive { job }.into());
         }
-        let live: i64 = sqlx::query_scalar("SELECT count(*) FROM jobs WHERE state IN ('waiting', 'running')")
-            .fetch_one(&mut *transaction)
-            .await?;
+        // Refreshes are the service's own: a network has at most one that waits.
+        let live: i64 =
+            sqlx::query_scalar("SELECT count(*) FROM jobs WHERE state IN ('waiting', 'running') AND kind <> 'refresh'")
+                .fetch_one(&mut *transaction)
+                .await?;
         if unsigned("live", live)? >= most_live {
             return Err(Clash::TooManyJobs.into());
         }
-        sqlx::query(
-            "INSERT INTO jobs (id, kind, network, state, starts, created_at, task) \
-             VALUES ($1, 'link_list', $2, 'waiting', 0, $3, $4)",
-        )
-        .bind(id.to_string())
-        .bind(network)
-        .bind(Timestamp::now().as_microsecond())
-        .bind(task)
-        .execute(&mut *transaction)
-        .await?;
+        insert(&mut transaction, id, kind, network, task).await?;
         Ok(self.commit(transaction).await?)
     }
 
-    /// Checks that a network is tracked and has no live job.
+    /// Checks that a network is tracked and has no live job of a kind.
     ///
     /// # Errors
     /// When it is not, or it has one, or the database fails.
-    pub async fn check_idle(&self, network: &str) -> Result<(), WriteError> {
+    pub async fn check_idle(&self, network: &str, kind: JobKind) -> Result<(), WriteError> {
         self.file.check()?;
         let mut connection = self.read.acquire().await.map_err(StoreError::from)?;
         network_exists(&mut connection, network).await?;
-        match live_job(&mut connection, network).await? {
+        match live_job(&mut connection, network, kind).await? {
             Some(job) => Err(Clash::JobLive { job }.into()),
             None => Ok(()),
         }
@@ -181,7 +213,12 @@ impl Store {
     /// When the database fails.
     pub async fn call_off(&self, id: Uuid) -> Result<CalledOff, StoreError> {
         let mut transaction = self.begin().await?;
+        let job = find(&mut transaction, id).await?;
         let done = if end(&mut transaction, id, JobState::Cancelled, None).await? {
+            if let Some(job) = job.filter(|job| job.kind == JobKind::Refresh) {
+                let stands = (RefreshState::Outdated, Some(CALLED_OFF));
+                refreshes::note_of(&mut transaction, &job.network, id, stands).await?;
+            }
             CalledOff::Cancelled
         } else {
             let removed = sqlx::query("DELETE FROM jobs WHERE id = $1").bind(id.to_string());
@@ -211,8 +248,8 @@ impl Store {
     pub async fn list_jobs(&self, filter: &JobFilter) -> Result<Vec<StoredJob>, StoreError> {
         self.file.check()?;
         let mut query = QueryBuilder::<Sqlite>::new(
-            "SELECT id, network, state, starts, created_at, started_at, ended_at, task, outcome FROM jobs WHERE kind = \
-             'link_list'",
+            "SELECT id, kind, network, state, starts, created_at, started_at, ended_at, task, outcome FROM jobs WHERE \
+             true",
         );
         if let Some(network) = &filter.network {
             query.push(" AND network = ").push_bind(network.as_str());
@@ -229,13 +266,13 @@ impl Store {
     ///
     /// # Errors
     /// When the database fails.
-    pub async fn live_jobs(&self) -> Result<Vec<Uuid>, StoreError> {
+    pub async fn live_jobs(&self) -> Result<Vec<(Uuid, JobKind)>, StoreError> {
         self.file.check()?;
-        let ids: Vec<String> =
-            sqlx::query_scalar("SELECT id FROM jobs WHERE state IN ('waiting', 'running') ORDER BY id")
+        let jobs: Vec<(String, String)> =
+            sqlx::query_as("SELECT id, kind FROM jobs WHERE state IN ('waiting', 'running') ORDER BY id")
                 .fetch_all(&self.read)
                 .await?;
-        ids.iter().map(|id| uuid(id)).collect()
+        jobs.iter().map(|(id, kind)| Ok((uuid(id)?, JobKind::named(kind)?))).collect()
     }
 }
 
@@ -258,19 +295,46 @@ pub(super) async fn end(
     Ok(done.rows_affected() > 0)
 }
 
-/// Calls a network's live job off, if it has one.
-pub(super) async fn call_off_of(connection: &mut SqliteConnection, network: &str) -> Result<Option<Uuid>, StoreError> {
-    let job = live_job(connection, network).await?;
-    if let Some(job) = job {
-        end(connection, job, JobState::Cancelled, None).await?;
-    }
-    Ok(job)
+/// Stores a waiting job.
+pub(super) async fn insert(
+    connection: &mut SqliteConnection,
+    id: Uuid,
+    kind: JobKind,
+    network: &str,
+    task: &str,
+) -> Result<(), StoreError> {
+    sqlx::query(
+        "INSERT INTO jobs (id, kind, network, state, starts, created_at, task) VALUES ($1, $2, $3, 'waiting', 0, $4, $5)",
+    )
+    .bind(id.to_string())
+    .bind(kind.as_str())
+    .bind(network)
+    .bind(Timestamp::now().as_microsecond())
+    .bind(task)
+    .execute(connection)
+    .await?;
+    Ok(())
 }
 
-async fn live_job(connection: &mut SqliteConnection, network: &str) -> Result<Option<Uuid>, StoreError> {
-    let id: Option<String> =
+/// Calls every live job of a network off.
+pub(super) async fn call_off_of(connection: &mut SqliteConnection, network: &str) -> Result<Vec<Uuid>, StoreError> {
+    let ids: Vec<String> =
         sqlx::query_scalar("SELECT id FROM jobs WHERE network = $1 AND state IN ('waiting', 'running')")
             .bind(network)
+            .fetch_all(&mut *connection)
+            .await?;
+    let jobs = ids.iter().map(|id| uuid(id)).collect::<Result<Vec<_>, _>>()?;
+    for &job in &jobs {
+        end(connection, job, JobState::Cancelled, None).await?;
+    }
+    Ok(jobs)
+}
+
+async fn live_job(connection: &mut SqliteConnection, network: &str, kind: JobKind) -> Result<Option<Uuid>, StoreError> {
+    let id: Option<String> =
+        sqlx::query_scalar("SELECT id FROM jobs WHERE network = $1 AND kind = $2 AND state IN ('waiting', 'running')")
+            .bind(network)
+            .bind(kind.as_str())
             .fetch_optional(connection)
             .await?;
     id.as_deref().map(uuid).transpose()
@@ -278,7 +342,7 @@ async fn live_job(connection: &mut SqliteConnection, network: &str) -> Result<Op
 
 async fn find(connection: &mut SqliteConnection, id: Uuid) -> Result<Option<StoredJob>, StoreError> {
     let row: Option<JobRow> = sqlx::query_as(
-        "SELECT id, network, state, starts, created_at, started_at, ended_at, task, outcome FROM jobs WHERE id = $1",
+        "SELECT id, kind, network, state, starts, created_at, started_at, ended_at, task, outcome FROM jobs WHERE id = $1",
     )
     .bind(id.to_string())
     .fetch_optional(connection)
@@ -293,6 +357,7 @@ impl TryFrom<JobRow> for StoredJob {
         let state = JobState::ALL.into_iter().find(|state| state.as_str() == row.state);
         Ok(Self {
             id: uuid(&row.id)?,
+            kind: JobKind::named(&row.kind)?,
             state: state.ok_or_else(|| corrupt("state", &row.state))?,
             network: row.network,
             starts: unsigned("starts", row.starts)?,

@@ -2,8 +2,10 @@
 
 use jiff::Timestamp;
 use sqlx::{FromRow, SqliteConnection};
+use uuid::Uuid;
 
 use super::columns::{signed, time, total, unsigned};
+use super::refreshes::{Change, changed};
 use super::writes::{Caps, WriteError, network_exists, room_for_rows};
 use super::{Store, StoreError};
 
@@ -32,8 +34,8 @@ struct LinkEventsRow {
 }
 
 impl Store {
-    /// Stores a network's attachment statistics; true when it had none. `allows` is asked about the validator of what
-    /// stands there.
+    /// Stores a network's attachment statistics; nothing is changed when they are those that stand there. `allows` is asked
+    /// about the validator of what stands there.
     ///
     /// # Errors
     /// When there is no such network, `allows` refuses, a cap is reached, or the database fails.
@@ -43,18 +45,24 @@ impl Store {
         events: &StoredLinkEvents,
         caps: &Caps,
         allows: impl FnOnce(Option<&str>) -> bool,
-    ) -> Result<bool, WriteError> {
+    ) -> Result<Change, WriteError> {
         let mut transaction = self.begin().await?;
         network_exists(&mut transaction, network).await?;
         let stored = stored_tag(&mut transaction, network).await?;
-        if !allows(stored.as_ref().map(|(tag, _)| tag.as_str())) {
+        if !allows(stored.as_ref().map(|(tag, ..)| tag.as_str())) {
             return Err(WriteError::Mismatch);
         }
-        let replaced = stored.as_ref().map_or(Ok(0), |&(_, rows)| unsigned("row_count", rows))?;
+        if let Some((tag, _, updated_at)) = &stored
+            && *tag == events.tag
+        {
+            return Ok(Change { stands_since: Some(time(*updated_at)?), ..Change::default() });
+        }
+        let replaced = stored.as_ref().map_or(Ok(0), |&(_, rows, _)| unsigned("row_count", rows))?;
         room_for_rows(&mut transaction, network, (events.rows, replaced), caps).await?;
+        let (_, refresh) = changed(&mut transaction, network).await?;
         insert(&mut transaction, network, events).await?;
         self.commit(transaction).await?;
-        Ok(stored.is_none())
+        Ok(Change { made: stored.is_none(), stands_since: None, refresh })
     }
 
     /// A network's attachment statistics, if they are stored.
@@ -72,7 +80,7 @@ impl Store {
         row.map(StoredLinkEvents::try_from).transpose()
     }
 
-    /// Deletes a network's attachment statistics.
+    /// Deletes a network's attachment statistics; returns the refresh that was taken on.
     ///
     /// # Errors
     /// When there are none, `allows` refuses, or the database fails.
@@ -80,20 +88,26 @@ impl Store {
         &self,
         network: &str,
         allows: impl FnOnce(Option<&str>) -> bool,
-    ) -> Result<(), WriteError> {
+    ) -> Result<Option<Uuid>, WriteError> {
         let mut transaction = self.begin().await?;
         network_exists(&mut transaction, network).await?;
-        let (tag, _) = stored_tag(&mut transaction, network).await?.ok_or(WriteError::Missing)?;
+        let (tag, ..) = stored_tag(&mut transaction, network).await?.ok_or(WriteError::Missing)?;
         if !allows(Some(&tag)) {
             return Err(WriteError::Mismatch);
         }
         sqlx::query("DELETE FROM link_events WHERE network = $1").bind(network).execute(&mut *transaction).await?;
-        Ok(self.commit(transaction).await?)
+        let (_, refresh) = changed(&mut transaction, network).await?;
+        self.commit(transaction).await?;
+        Ok(refresh)
     }
 }
 
-async fn stored_tag(connection: &mut SqliteConnection, network: &str) -> Result<Option<(String, i64)>, StoreError> {
-    let row = sqlx::query_as("SELECT tag, row_count FROM link_events WHERE network = $1").bind(network);
+/// Digest, rows and time of what is stored.
+async fn stored_tag(
+    connection: &mut SqliteConnection,
+    network: &str,
+) -> Result<Option<(String, i64, i64)>, StoreError> {
+    let row = sqlx::query_as("SELECT tag, row_count, updated_at FROM link_events WHERE network = $1").bind(network);
     Ok(row.fetch_optional(connection).await?)
 }
 

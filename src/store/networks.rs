@@ -4,8 +4,9 @@ use jiff::Timestamp;
 use sqlx::{FromRow, SqliteConnection};
 use uuid::Uuid;
 
-use super::columns::{date, kind, kind_name, time, unsigned};
+use super::columns::{date, kind, kind_name, time, unsigned, uuid};
 use super::jobs::call_off_of;
+use super::refreshes::{Change, RefreshState, RefreshStatus, changed, enqueue};
 use super::writes::{Clash, WriteError};
 use super::{Store, StoreError};
 use crate::model::DegreeKind;
@@ -21,6 +22,8 @@ pub struct NewNetwork {
     pub description: Option<String>,
     /// Entry degrees, JSON.
     pub entry_degrees: Option<String>,
+    /// Plan of its forecasts, JSON.
+    pub forecast_plan: Option<String>,
     /// Strong validator of the settings.
     pub tag: String,
 }
@@ -34,6 +37,10 @@ pub struct StoredNetwork {
     pub created_at: Timestamp,
     /// When they last changed.
     pub updated_at: Timestamp,
+    /// How often its evidence or plan changed.
+    pub revision: u64,
+    /// What the newest change led to; none before anything followed from one.
+    pub refresh: Option<RefreshStatus>,
 }
 
 /// A network's line in a list.
@@ -73,6 +80,11 @@ struct NetworkRow {
     created_at: i64,
     updated_at: i64,
     entry_degrees: Option<String>,
+    forecast_plan: Option<String>,
+    revision: i64,
+    refresh_state: Option<String>,
+    refresh_job: Option<String>,
+    refresh_reason: Option<String>,
 }
 
 #[derive(FromRow)]
@@ -86,7 +98,8 @@ struct SummaryRow {
 }
 
 impl Store {
-    /// Stores a network's settings; true when it is new. `allows` is asked about the validator of what stands there.
+    /// Stores a network's settings. Where they change what a forecast follows from, or no forecast follows yet, a refresh is
+    /// taken on. `allows` is asked about the validator of what stands there.
     ///
     /// # Errors
     /// When `allows` refuses, the kind of degree would change under stored counts, or the database fails.
@@ -94,7 +107,7 @@ impl Store {
         &self,
         network: &NewNetwork,
         allows: impl FnOnce(Option<&str>) -> bool,
-    ) -> Result<bool, WriteError> {
+    ) -> Result<Change, WriteError> {
         let mut transaction = self.begin().await?;
         let stored = find(&mut transaction, &network.name).await?;
         if !allows(stored.as_ref().map(|stored| stored.settings.tag.as_str())) {
@@ -107,10 +120,11 @@ impl Store {
             return Err(Clash::DegreeKind { stored: stored.settings.degree_kind }.into());
         }
         sqlx::query(
-            "INSERT INTO networks (name, degree_kind, description, tag, created_at, updated_at, entry_degrees) \
-             VALUES ($1, $2, $3, $4, $5, $5, $6) ON CONFLICT (name) DO UPDATE SET degree_kind = excluded.degree_kind, \
-             description = excluded.description, tag = excluded.tag, updated_at = excluded.updated_at, \
-             entry_degrees = excluded.entry_degrees",
+            "INSERT INTO networks (name, degree_kind, description, tag, created_at, updated_at, entry_degrees, \
+             forecast_plan) VALUES ($1, $2, $3, $4, $5, $5, $6, $7) ON CONFLICT (name) DO UPDATE SET \
+             degree_kind = excluded.degree_kind, description = excluded.description, tag = excluded.tag, \
+             updated_at = excluded.updated_at, entry_degrees = excluded.entry_degrees, \
+             forecast_plan = excluded.forecast_plan",
         )
         .bind(network.name.as_str())
         .bind(kind_name(network.degree_kind))
@@ -118,10 +132,12 @@ impl Store {
         .bind(network.tag.as_str())
         .bind(Timestamp::now().as_microsecond())
         .bind(network.entry_degrees.as_deref())
+        .bind(network.forecast_plan.as_deref())
         .execute(&mut *transaction)
         .await?;
+        let refresh = follow(&mut transaction, network, stored.as_ref()).await?;
         self.commit(transaction).await?;
-        Ok(stored.is_none())
+        Ok(Change { made: stored.is_none(), stands_since: None, refresh })
     }
 
     /// The settings of a network, if it is tracked.
@@ -141,8 +157,8 @@ impl Store {
     pub async fn list_networks(&self, after: Option<&str>, limit: u32) -> Result<Vec<NetworkSummary>, StoreError> {
         self.file.check()?;
         let rows: Vec<SummaryRow> = sqlx::query_as(
-            "SELECT name, degree_kind, description, tag, created_at, updated_at, entry_degrees, \
-             (SELECT count(*) FROM snapshots WHERE network = name) AS snapshots, \
+            "SELECT name, degree_kind, description, tag, created_at, updated_at, entry_degrees, forecast_plan, revision, \
+             refresh_state, refresh_job, refresh_reason, (SELECT count(*) FROM snapshots WHERE network = name) AS snapshots, \
              (SELECT max(as_of) FROM snapshots WHERE network = name) AS newest, \
              (SELECT count(*) FROM transitions WHERE network = name) AS transitions, \
              (SELECT count(*) FROM link_events WHERE network = name) AS link_events \
@@ -155,7 +171,7 @@ impl Store {
         rows.into_iter().map(NetworkSummary::try_from).collect()
     }
 
-    /// Deletes a network and all that is stored of it, and calls its live job off, whose id it returns; its runs stay.
+    /// Deletes a network and all that is stored of it, and calls its live jobs off, whose ids it returns; its runs stay.
     ///
     /// # Errors
     /// When there is no such network, `allows` refuses, or the database fails.
@@ -163,16 +179,16 @@ impl Store {
         &self,
         name: &str,
         allows: impl FnOnce(Option<&str>) -> bool,
-    ) -> Result<Option<Uuid>, WriteError> {
+    ) -> Result<Vec<Uuid>, WriteError> {
         let mut transaction = self.begin().await?;
         let stored = find(&mut transaction, name).await?.ok_or(WriteError::NoNetwork)?;
         if !allows(Some(&stored.settings.tag)) {
             return Err(WriteError::Mismatch);
         }
-        let job = call_off_of(&mut transaction, name).await?;
+        let jobs = call_off_of(&mut transaction, name).await?;
         sqlx::query("DELETE FROM networks WHERE name = $1").bind(name).execute(&mut *transaction).await?;
         self.commit(transaction).await?;
-        Ok(job)
+        Ok(jobs)
     }
 
     /// All that is known of a network, if it is tracked.
@@ -212,12 +228,34 @@ impl Store {
 /// The settings of a network, if it is tracked.
 pub(super) async fn find(connection: &mut SqliteConnection, name: &str) -> Result<Option<StoredNetwork>, StoreError> {
     let row: Option<NetworkRow> = sqlx::query_as(
-        "SELECT name, degree_kind, description, tag, created_at, updated_at, entry_degrees FROM networks WHERE name = $1",
+        "SELECT name, degree_kind, description, tag, created_at, updated_at, entry_degrees, forecast_plan, revision, \
+         refresh_state, refresh_job, refresh_reason FROM networks WHERE name = $1",
     )
     .bind(name)
     .fetch_optional(connection)
     .await?;
     row.map(StoredNetwork::try_from).transpose()
+}
+
+/// The refresh that follows from new settings, if one does.
+async fn follow(
+    connection: &mut SqliteConnection,
+    network: &NewNetwork,
+    stored: Option<&StoredNetwork>,
+) -> Result<Option<Uuid>, StoreError> {
+    let read =
+        |settings: &NewNetwork| (settings.degree_kind, settings.entry_degrees.clone(), settings.forecast_plan.clone());
+    if stored.is_none_or(|stored| read(&stored.settings) != read(network)) {
+        return Ok(changed(connection, &network.name).await?.1);
+    }
+    let pending: i64 = sqlx::query_scalar(
+        "SELECT EXISTS (SELECT 1 FROM networks WHERE name = $1 AND forecast_plan IS NOT NULL AND (refresh_state = 'outdated' \
+         OR refresh_state = 'current' AND NOT EXISTS (SELECT 1 FROM latest_forecasts WHERE network = $1)))",
+    )
+    .bind(network.name.as_str())
+    .fetch_one(&mut *connection)
+    .await?;
+    if pending != 0 { enqueue(connection, &network.name).await } else { Ok(None) }
 }
 
 async fn has_evidence(connection: &mut SqliteConnection, name: &str) -> Result<bool, StoreError> {
@@ -239,11 +277,21 @@ impl TryFrom<NetworkRow> for StoredNetwork {
         Ok(Self {
             created_at: time(row.created_at)?,
             updated_at: time(row.updated_at)?,
+            revision: unsigned("revision", row.revision)?,
+            refresh: match (row.refresh_state, row.refresh_job) {
+                (Some(state), Some(job)) => Some(RefreshStatus {
+                    state: RefreshState::named(&state)?,
+                    job: uuid(&job)?,
+                    reason: row.refresh_reason,
+                }),
+                _ => None,
+            },
             settings: NewNetwork {
                 degree_kind: kind(&row.degree_kind)?,
                 name: row.name,
                 description: row.description,
                 entry_degrees: row.entry_degrees,
+                forecast_plan: row.forecast_plan,
                 tag: row.tag,
             },
         })

@@ -4,7 +4,7 @@ use jiff::Timestamp;
 use sqlx::{FromRow, QueryBuilder, Sqlite, SqliteConnection};
 use uuid::Uuid;
 
-use super::columns::{signed, time, unsigned, uuid};
+use super::columns::{date_key, signed, time, unsigned, uuid};
 use super::{Store, StoreError};
 
 /// What a run answered.
@@ -50,6 +50,17 @@ pub struct NewRun {
     pub document: String,
     /// The inputs in canonical form.
     pub inputs: String,
+    /// What it stands on, when that is stored of a network.
+    pub stored: Option<StoredOrigin>,
+}
+
+/// What a run of a tracked network stands on.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub struct StoredOrigin {
+    /// Revision of the network.
+    pub revision: u64,
+    /// Date of the newest counts.
+    pub as_of: Timestamp,
 }
 
 /// A caller's claim that requests with this key are one and the same.
@@ -91,6 +102,10 @@ pub struct RunSummary {
     pub seed: u64,
     /// Digest of the inputs.
     pub inputs_digest: String,
+    /// Whether a refresh issued it.
+    pub issued: bool,
+    /// When counts it stands on were last replaced.
+    pub evidence_corrected_at: Option<Timestamp>,
 }
 
 /// Which runs to list; newest first.
@@ -141,6 +156,8 @@ struct SummaryRow {
     engine: String,
     seed: i64,
     inputs_digest: String,
+    issued: i64,
+    evidence_corrected_at: Option<i64>,
 }
 
 impl Store {
@@ -155,23 +172,7 @@ impl Store {
         {
             return Ok(earlier);
         }
-        sqlx::query(
-            "INSERT INTO runs (id, kind, network, label, created_at, engine, seed, inputs_digest, tag, document, inputs) \
-             VALUES ($1, $2, $3, $4, $5, $6, $7, $8, $9, $10, $11)",
-        )
-        .bind(run.id.to_string())
-        .bind(run.kind.as_str())
-        .bind(run.network.as_deref())
-        .bind(run.label.as_deref())
-        .bind(run.created_at.as_microsecond())
-        .bind(run.engine)
-        .bind(signed("seed", run.seed)?)
-        .bind(run.inputs_digest.as_str())
-        .bind(run.tag.as_str())
-        .bind(run.document.as_str())
-        .bind(run.inputs.as_str())
-        .execute(&mut *transaction)
-        .await?;
+        insert_run(&mut transaction, run, None).await?;
         if let Some(claim) = claim {
             sqlx::query("INSERT INTO idempotency_keys (kind, key, body_digest, run_id) VALUES ($1, $2, $3, $4)")
                 .bind(run.kind.as_str())
@@ -232,14 +233,15 @@ impl Store {
         self.file.check()?;
         // One text a combination, so that each finds its index.
         let mut query = QueryBuilder::<Sqlite>::new(
-            "SELECT id, network, label, created_at, engine, seed, inputs_digest FROM runs WHERE kind = ",
+            "SELECT id, runs.network, label, created_at, engine, seed, inputs_digest, issued_to IS NOT NULL AS issued, \
+             evidence_corrected_at FROM runs LEFT JOIN network_runs ON run_id = id WHERE kind = ",
         );
         query.push_bind(kind.as_str());
         if let Some(label) = &filter.label {
             query.push(" AND label = ").push_bind(label.as_str());
         }
         if let Some(network) = &filter.network {
-            query.push(" AND network = ").push_bind(network.as_str());
+            query.push(" AND runs.network = ").push_bind(network.as_str());
         }
         if let Some(before) = filter.before {
             query.push(" AND id < ").push_bind(before.to_string());
@@ -262,6 +264,45 @@ impl Store {
             .await?;
         Ok(done.rows_affected() > 0)
     }
+}
+
+/// Stores a run and what it stands on; `issued_to` is the last date of a forecast that a refresh issues.
+pub(super) async fn insert_run(
+    connection: &mut SqliteConnection,
+    run: &NewRun,
+    issued_to: Option<Timestamp>,
+) -> Result<(), StoreError> {
+    sqlx::query(
+        "INSERT INTO runs (id, kind, network, label, created_at, engine, seed, inputs_digest, tag, document, inputs) \
+         VALUES ($1, $2, $3, $4, $5, $6, $7, $8, $9, $10, $11)",
+    )
+    .bind(run.id.to_string())
+    .bind(run.kind.as_str())
+    .bind(run.network.as_deref())
+    .bind(run.label.as_deref())
+    .bind(run.created_at.as_microsecond())
+    .bind(run.engine)
+    .bind(signed("seed", run.seed)?)
+    .bind(run.inputs_digest.as_str())
+    .bind(run.tag.as_str())
+    .bind(run.document.as_str())
+    .bind(run.inputs.as_str())
+    .execute(&mut *connection)
+    .await?;
+    let Some(stored) = run.stored else { return Ok(()) };
+    // The network may have gone since the evidence was read.
+    sqlx::query(
+        "INSERT INTO network_runs (run_id, network, revision, origin, issued_to) \
+         VALUES ($1, (SELECT name FROM networks WHERE name = $2), $3, $4, $5)",
+    )
+    .bind(run.id.to_string())
+    .bind(run.network.as_deref())
+    .bind(signed("revision", stored.revision)?)
+    .bind(date_key(stored.as_of))
+    .bind(issued_to.map(date_key))
+    .execute(connection)
+    .await?;
+    Ok(())
 }
 
 async fn claimed(
@@ -305,6 +346,8 @@ impl TryFrom<SummaryRow> for RunSummary {
             engine: row.engine,
             seed: unsigned("seed", row.seed)?,
             inputs_digest: row.inputs_digest,
+            issued: row.issued != 0,
+            evidence_corrected_at: row.evidence_corrected_at.map(time).transpose()?,
         })
     }
 }

@@ -2,8 +2,10 @@
 
 use jiff::Timestamp;
 use sqlx::{FromRow, SqliteConnection};
+use uuid::Uuid;
 
 use super::columns::{date, date_key, signed, time, total, unsigned};
+use super::refreshes::{Change, changed, corrected};
 use super::writes::{Caps, Clash, WriteError, network_exists, room_for_one, room_for_rows};
 use super::{Store, StoreError};
 
@@ -54,7 +56,8 @@ struct CountsRow {
 }
 
 impl Store {
-    /// Stores a snapshot; true when its date had none. `allows` is asked about the validator of what stands there.
+    /// Stores a snapshot, and marks the runs that stand on other counts of its date; nothing is changed when the counts are
+    /// those that stand there. `allows` is asked about the validator of what stands there.
     ///
     /// # Errors
     /// When there is no such network, `allows` refuses, transitions of that date have other counts, a cap is reached, or
@@ -65,29 +68,39 @@ impl Store {
         snapshot: &StoredSnapshot,
         caps: &Caps,
         allows: impl FnOnce(Option<&str>) -> bool,
-    ) -> Result<bool, WriteError> {
+    ) -> Result<Change, WriteError> {
         let summary = &snapshot.summary;
         let mut transaction = self.begin().await?;
         network_exists(&mut transaction, network).await?;
-        let stored: Option<(String, i64)> =
-            sqlx::query_as("SELECT tag, row_count FROM snapshots WHERE network = $1 AND as_of = $2")
-                .bind(network)
-                .bind(date_key(summary.as_of))
-                .fetch_optional(&mut *transaction)
-                .await?;
-        if !allows(stored.as_ref().map(|(tag, _)| tag.as_str())) {
+        let stored: Option<(String, i64, i64, i64)> = sqlx::query_as(
+            "SELECT tag, row_count, updated_at, revision FROM snapshots WHERE network = $1 AND as_of = $2",
+        )
+        .bind(network)
+        .bind(date_key(summary.as_of))
+        .fetch_optional(&mut *transaction)
+        .await?;
+        if !allows(stored.as_ref().map(|(tag, ..)| tag.as_str())) {
             return Err(WriteError::Mismatch);
         }
+        if let Some((tag, _, updated_at, _)) = &stored
+            && *tag == summary.tag
+        {
+            return Ok(Change { stands_since: Some(time(*updated_at)?), ..Change::default() });
+        }
         fits_transitions(&mut transaction, network, summary).await?;
-        let replaced = stored.as_ref().map_or(Ok(0), |&(_, rows)| unsigned("row_count", rows))?;
+        let replaced = stored.as_ref().map_or(Ok(0), |&(_, rows, ..)| unsigned("row_count", rows))?;
         room_for_rows(&mut transaction, network, (summary.rows, replaced), caps).await?;
         if stored.is_none() {
             let count = sqlx::query_scalar("SELECT count(*) FROM snapshots WHERE network = $1");
             room_for_one("snapshots", count.bind(network).fetch_one(&mut *transaction).await?, caps)?;
         }
-        insert(&mut transaction, network, snapshot).await?;
+        if let Some((.., revision)) = stored {
+            corrected(&mut transaction, network, unsigned("revision", revision)?).await?;
+        }
+        let (revision, refresh) = changed(&mut transaction, network).await?;
+        insert(&mut transaction, network, snapshot, revision).await?;
         self.commit(transaction).await?;
-        Ok(stored.is_none())
+        Ok(Change { made: stored.is_none(), stands_since: None, refresh })
     }
 
     /// A snapshot and its counts, if it is stored.
@@ -131,7 +144,7 @@ impl Store {
         rows.into_iter().map(SnapshotSummary::try_from).collect()
     }
 
-    /// Deletes a snapshot.
+    /// Deletes a snapshot, and marks the runs that stand on it; returns the refresh that was taken on.
     ///
     /// # Errors
     /// When it is not stored, `allows` refuses, or the database fails.
@@ -140,23 +153,28 @@ impl Store {
         network: &str,
         as_of: Timestamp,
         allows: impl FnOnce(Option<&str>) -> bool,
-    ) -> Result<(), WriteError> {
+    ) -> Result<Option<Uuid>, WriteError> {
         let mut transaction = self.begin().await?;
         network_exists(&mut transaction, network).await?;
-        let stored: Option<String> = sqlx::query_scalar("SELECT tag FROM snapshots WHERE network = $1 AND as_of = $2")
-            .bind(network)
-            .bind(date_key(as_of))
-            .fetch_optional(&mut *transaction)
-            .await?;
-        if !allows(Some(&stored.ok_or(WriteError::Missing)?)) {
+        let stored: Option<(String, i64)> =
+            sqlx::query_as("SELECT tag, revision FROM snapshots WHERE network = $1 AND as_of = $2")
+                .bind(network)
+                .bind(date_key(as_of))
+                .fetch_optional(&mut *transaction)
+                .await?;
+        let (tag, revision) = stored.ok_or(WriteError::Missing)?;
+        if !allows(Some(&tag)) {
             return Err(WriteError::Mismatch);
         }
+        corrected(&mut transaction, network, unsigned("revision", revision)?).await?;
         sqlx::query("DELETE FROM snapshots WHERE network = $1 AND as_of = $2")
             .bind(network)
             .bind(date_key(as_of))
             .execute(&mut *transaction)
             .await?;
-        Ok(self.commit(transaction).await?)
+        let (_, refresh) = changed(&mut transaction, network).await?;
+        self.commit(transaction).await?;
+        Ok(refresh)
     }
 }
 
@@ -188,14 +206,15 @@ pub(super) async fn insert(
     connection: &mut SqliteConnection,
     network: &str,
     snapshot: &StoredSnapshot,
+    revision: u64,
 ) -> Result<(), StoreError> {
     let summary = &snapshot.summary;
     sqlx::query(
         "INSERT INTO snapshots (network, as_of, nodes, link_ends, largest_degree, row_count, tag, updated_at, \
-         degree_counts) VALUES ($1, $2, $3, $4, $5, $6, $7, $8, $9) ON CONFLICT (network, as_of) DO UPDATE SET \
+         degree_counts, revision) VALUES ($1, $2, $3, $4, $5, $6, $7, $8, $9, $10) ON CONFLICT (network, as_of) DO UPDATE SET \
          nodes = excluded.nodes, link_ends = excluded.link_ends, largest_degree = excluded.largest_degree, \
          row_count = excluded.row_count, tag = excluded.tag, updated_at = excluded.updated_at, \
-         degree_counts = excluded.degree_counts",
+         degree_counts = excluded.degree_counts, revision = excluded.revision",
     )
     .bind(network)
     .bind(date_key(summary.as_of))
@@ -206,6 +225,7 @@ pub(super) async fn insert(
     .bind(summary.tag.as_str())
     .bind(summary.updated_at.as_microsecond())
     .bind(snapshot.degree_counts.as_str())
+    .bind(signed("revision", revision)?)
     .execute(connection)
     .await?;
     Ok(())

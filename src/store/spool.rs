@@ -83,7 +83,7 @@ impl Store {
     /// # Errors
     /// When the database fails, or the folder cannot be read.
     pub async fn sweep_spool(&self, age: Duration) -> Result<(), StoreError> {
-        let needed: Vec<PathBuf> = self.live_jobs().await?.into_iter().map(|job| self.spooled(job)).collect();
+        let needed: Vec<PathBuf> = self.live_jobs().await?.into_iter().map(|(job, _)| self.spooled(job)).collect();
         let folder = self.spool_folder();
         let swept = tokio::task::spawn_blocking(move || sweep(&folder, &needed, age));
         swept.await.map_err(io::Error::other).and_then(|outcome| outcome).map_err(unusable)

@@ -2,8 +2,10 @@
 
 use jiff::Timestamp;
 use sqlx::{FromRow, SqliteConnection};
+use uuid::Uuid;
 
 use super::columns::{date, date_key, signed, time, total, unsigned};
+use super::refreshes::{Change, changed, corrected};
 use super::writes::{Caps, Clash, WriteError, network_exists, room_for_one, room_for_rows};
 use super::{Store, StoreError};
 
@@ -66,8 +68,8 @@ struct CountsRow {
 }
 
 impl Store {
-    /// Stores a table of transitions; true when there was none between its dates. `allows` is asked about the validator
-    /// of what stands there.
+    /// Stores a table of transitions, and marks the runs that stand on another between its dates; nothing is changed when the
+    /// rows are those that stand there. `allows` is asked about the validator of what stands there.
     ///
     /// # Errors
     /// When there is no such network, `allows` refuses, a snapshot of one of its dates has other counts, another table
@@ -79,33 +81,43 @@ impl Store {
         ends: &EndTags,
         caps: &Caps,
         allows: impl FnOnce(Option<&str>) -> bool,
-    ) -> Result<bool, WriteError> {
+    ) -> Result<Change, WriteError> {
         let summary = &table.summary;
         let mut transaction = self.begin().await?;
         network_exists(&mut transaction, network).await?;
-        let stored: Option<(String, i64)> = sqlx::query_as(
-            "SELECT tag, row_count FROM transitions WHERE network = $1 AND starts_at = $2 AND ends_at = $3",
+        let stored: Option<(String, i64, i64, i64)> = sqlx::query_as(
+            "SELECT tag, row_count, updated_at, revision FROM transitions \
+             WHERE network = $1 AND starts_at = $2 AND ends_at = $3",
         )
         .bind(network)
         .bind(date_key(summary.from))
         .bind(date_key(summary.to))
         .fetch_optional(&mut *transaction)
         .await?;
-        if !allows(stored.as_ref().map(|(tag, _)| tag.as_str())) {
+        if !allows(stored.as_ref().map(|(tag, ..)| tag.as_str())) {
             return Err(WriteError::Mismatch);
+        }
+        if let Some((tag, _, updated_at, _)) = &stored
+            && *tag == summary.tag
+        {
+            return Ok(Change { stands_since: Some(time(*updated_at)?), ..Change::default() });
         }
         overlaps_none(&mut transaction, network, summary).await?;
         fits_snapshots(&mut transaction, network, summary, ends).await?;
         fits_neighbours(&mut transaction, network, summary, ends).await?;
-        let replaced = stored.as_ref().map_or(Ok(0), |&(_, rows)| unsigned("row_count", rows))?;
+        let replaced = stored.as_ref().map_or(Ok(0), |&(_, rows, ..)| unsigned("row_count", rows))?;
         room_for_rows(&mut transaction, network, (summary.rows, replaced), caps).await?;
         if stored.is_none() {
             let count = sqlx::query_scalar("SELECT count(*) FROM transitions WHERE network = $1");
             room_for_one("tables of transitions", count.bind(network).fetch_one(&mut *transaction).await?, caps)?;
         }
-        insert(&mut transaction, network, table, ends).await?;
+        if let Some((.., revision)) = stored {
+            corrected(&mut transaction, network, unsigned("revision", revision)?).await?;
+        }
+        let (revision, refresh) = changed(&mut transaction, network).await?;
+        insert(&mut transaction, network, (table, ends), revision).await?;
         self.commit(transaction).await?;
-        Ok(stored.is_none())
+        Ok(Change { made: stored.is_none(), stands_since: None, refresh })
     }
 
     /// A table of transitions and its rows, if it is stored.
@@ -154,7 +166,7 @@ impl Store {
         rows.into_iter().map(TransitionsSummary::try_from).collect()
     }
 
-    /// Deletes a table of transitions.
+    /// Deletes a table of transitions, and marks the runs that stand on it; returns the refresh that was taken on.
     ///
     /// # Errors
     /// When it is not stored, `allows` refuses, or the database fails.
@@ -163,25 +175,30 @@ impl Store {
         network: &str,
         (from, to): (Timestamp, Timestamp),
         allows: impl FnOnce(Option<&str>) -> bool,
-    ) -> Result<(), WriteError> {
+    ) -> Result<Option<Uuid>, WriteError> {
         let mut transaction = self.begin().await?;
         network_exists(&mut transaction, network).await?;
-        let stored: Option<String> =
-            sqlx::query_scalar("SELECT tag FROM transitions WHERE network = $1 AND starts_at = $2 AND ends_at = $3")
-                .bind(network)
-                .bind(date_key(from))
-                .bind(date_key(to))
-                .fetch_optional(&mut *transaction)
-                .await?;
-        if !allows(Some(&stored.ok_or(WriteError::Missing)?)) {
+        let stored: Option<(String, i64)> = sqlx::query_as(
+            "SELECT tag, revision FROM transitions WHERE network = $1 AND starts_at = $2 AND ends_at = $3",
+        )
+        .bind(network)
+        .bind(date_key(from))
+        .bind(date_key(to))
+        .fetch_optional(&mut *transaction)
+        .await?;
+        let (tag, revision) = stored.ok_or(WriteError::Missing)?;
+        if !allows(Some(&tag)) {
             return Err(WriteError::Mismatch);
         }
+        corrected(&mut transaction, network, unsigned("revision", revision)?).await?;
         sqlx::query("DELETE FROM transitions WHERE network = $1 AND starts_at = $2")
             .bind(network)
             .bind(date_key(from))
             .execute(&mut *transaction)
             .await?;
-        Ok(self.commit(transaction).await?)
+        let (_, refresh) = changed(&mut transaction, network).await?;
+        self.commit(transaction).await?;
+        Ok(refresh)
     }
 }
 
@@ -261,17 +278,17 @@ async fn fits_snapshots(
 pub(super) async fn insert(
     connection: &mut SqliteConnection,
     network: &str,
-    table: &StoredTransitions,
-    ends: &EndTags,
+    (table, ends): (&StoredTransitions, &EndTags),
+    revision: u64,
 ) -> Result<(), StoreError> {
     let summary = &table.summary;
     sqlx::query(
         "INSERT INTO transitions (network, starts_at, ends_at, stayed, arrived, departed, row_count, tag, before_tag, \
-         after_tag, updated_at, counts) VALUES ($1, $2, $3, $4, $5, $6, $7, $8, $9, $10, $11, $12) \
+         after_tag, updated_at, counts, revision) VALUES ($1, $2, $3, $4, $5, $6, $7, $8, $9, $10, $11, $12, $13) \
          ON CONFLICT (network, starts_at) DO UPDATE SET ends_at = excluded.ends_at, stayed = excluded.stayed, \
          arrived = excluded.arrived, departed = excluded.departed, row_count = excluded.row_count, tag = excluded.tag, \
          before_tag = excluded.before_tag, after_tag = excluded.after_tag, updated_at = excluded.updated_at, \
-         counts = excluded.counts",
+         counts = excluded.counts, revision = excluded.revision",
     )
     .bind(network)
     .bind(date_key(summary.from))
@@ -285,6 +302,7 @@ pub(super) async fn insert(
     .bind(ends.after.as_deref())
     .bind(summary.updated_at.as_microsecond())
     .bind(table.counts.as_str())
+    .bind(signed("revision", revision)?)
     .execute(connection)
     .await?;
     Ok(())

@@ -1,6 +1,7 @@
 //! Tests of the numerical core; they need no server feature.
 #![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic, clippy::print_stdout)]
 
+mod account;
 mod arrivals;
 mod census;
 mod fit;

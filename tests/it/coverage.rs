@@ -7,7 +7,7 @@ use serde_json::json;
 use crate::harness::{DOCUMENT, Service, answered, csv, fit_body, forecast_body, json_text};
 
 /// Every operation with the status its plain use is answered with, in an order in which all of them work.
-const CALLS: [(&str, &str, u16); 33] = [
+const CALLS: [(&str, &str, u16); 35] = [
     ("get", "/livez", 200),
     ("get", "/readyz", 200),
     ("get", "/metrics", 200),
@@ -37,6 +37,9 @@ const CALLS: [(&str, &str, u16); 33] = [
     ("get", "/v1/networks/{name}/link-events", 200),
     ("post", "/v1/networks/{name}/forecasts", 201),
     ("post", "/v1/networks/{name}/fits", 201),
+    ("get", "/v1/networks/{name}/accuracy", 200),
+    // The network has no plan.
+    ("get", "/v1/networks/{name}/forecasts/latest", 404),
     ("delete", "/v1/networks/{name}/link-events", 204),
     ("delete", "/v1/networks/{name}/transitions/{from}/{to}", 204),
     ("delete", "/v1/networks/{name}/snapshots/{as_of}", 204),

@@ -19,7 +19,7 @@ use crate::process::serve;
 const LINKS: &str = "/v1/networks/h/links";
 
 /// A growing network's links as CSV: one newcomer an hour, linked to somebody before it, now and then two.
-fn link_list(links: u64) -> String {
+pub fn link_list(links: u64) -> String {
     let mut text = "time,source,target\n".to_owned();
     let mut random = 7u64;
     for link in 0..links {

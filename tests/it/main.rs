@@ -22,4 +22,6 @@ mod openapi;
 mod operation;
 mod process;
 mod stored_evidence;
+mod tracking;
+mod tracking_kills;
 mod upgrade;

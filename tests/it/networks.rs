@@ -18,7 +18,8 @@ async fn settings_are_stored_and_replaced() {
     assert_eq!(made.header("location"), "/v1/networks/heronsgate");
     assert_eq!(made.header("etag"), "", "the bytes sent are not the bytes kept");
     let read = service.get("/v1/networks/heronsgate").await.expect(200);
-    let expected = changed(settings(), "/name", json!("heronsgate"));
+    let mut expected = changed(settings(), "/name", json!("heronsgate"));
+    expected["forecast_plan"] = Value::Null;
     assert_eq!(read.json(), expected);
     assert_eq!(read.header("etag"), made.json()["etag"]);
     assert!(!read.header("last-modified").is_empty());
@@ -111,7 +112,7 @@ async fn names_and_settings_that_are_none_are_refused() {
         ("/description", json!(7), "/description", "string"),
         ("/entry_degrees", json!([[0, 0.5]]), "/entry_degrees", "add up"),
         ("/descripton", json!("x"), "/descripton", "did you mean \"description\""),
-        ("/forecast_plan", json!({}), "/forecast_plan", "no field"),
+        ("/forecast_plan", json!({"thresholds": [5]}), "/forecast_plan", "horizon"),
     ] {
         let answer = service.put("/v1/networks/h", &changed(settings(), pointer, value)).await;
         let answer = answer.expect_problem(400, "invalid_request");

@@ -1,27 +1,41 @@
-//! A database of the first version, with a run of that time: opened, brought up to date, and answered from.
+//! Databases of earlier versions, with what was kept in them: opened, brought up to date, and answered from.
 
+use std::path::Path;
 use std::str::FromStr;
 
+use serde_json::json;
 use sqlx::sqlite::SqliteConnectOptions;
-use sqlx::{ConnectOptions, Connection};
+use sqlx::{ConnectOptions, Connection, SqliteConnection};
 
-use crate::harness::Service;
+use crate::harness::{COUNTS, Service, pairs};
 
 const ID: &str = "0190a0b0-0000-7000-8000-000000000001";
 /// As the first version answered a fit: no verdict, no losses, no parameter of a candidate.
 const DOCUMENT: &str = r#"{"id":"0190a0b0-0000-7000-8000-000000000001","created_at":"2026-06-01T00:00:00Z","network":null,"label":"old","engine":"tailcast 0.1.0","seed":1,"inputs_digest":"sha-256:0000000000000000000000000000000000000000000000000000000000000000","fit":{"model":"mix","evidence":"one_snapshot","preferential_share":{"estimate":0.7,"low":0.6,"high":0.8,"level":0.9},"links_per_arrival":{"estimate":3.0,"low":null,"high":null,"level":null},"arrivals_per_day":null,"tail_exponent":null,"entry_degrees":[[0,1.0]],"candidates":[{"model":"mix","preferential_share":0.7,"log_likelihood":-1.0,"aic":4.0,"weight":1.0}],"goodness":null},"tail":[{"degree":1,"observed":5,"fitted":5.5}],"warnings":[],"cautions":[]}"#;
 
+/// A database after these migrations, and its address.
+async fn database(folder: &Path, migrations: &[&str]) -> (SqliteConnection, String) {
+    let url = format!("sqlite://{}", folder.join("old.db").display());
+    let earlier = folder.join("migrations");
+    std::fs::create_dir(&earlier).unwrap();
+    for name in migrations {
+        std::fs::copy(Path::new(env!("CARGO_MANIFEST_DIR")).join("migrations").join(name), earlier.join(name)).unwrap();
+    }
+    let options = SqliteConnectOptions::from_str(&url).unwrap().create_if_missing(true).foreign_keys(true);
+    let mut database = options.connect().await.unwrap();
+    sqlx::migrate::Migrator::new(earlier.as_path())
+        .await
+        .unwrap()
+        .run_direct(None, &mut database, false)
+        .await
+        .unwrap();
+    (database, url)
+}
+
 #[tokio::test]
 async fn a_run_of_the_first_version_is_read_in_every_form() {
     let folder = tempfile::tempdir().unwrap();
-    let url = format!("sqlite://{}", folder.path().join("old.db").display());
-    let first = folder.path().join("migrations");
-    std::fs::create_dir(&first).unwrap();
-    let migrations = concat!(env!("CARGO_MANIFEST_DIR"), "/migrations/0001_runs.sql");
-    std::fs::copy(migrations, first.join("0001_runs.sql")).unwrap();
-    let options = SqliteConnectOptions::from_str(&url).unwrap().create_if_missing(true);
-    let mut database = options.connect().await.unwrap();
-    sqlx::migrate::Migrator::new(first.as_path()).await.unwrap().run_direct(None, &mut database, false).await.unwrap();
+    let (mut database, url) = database(folder.path(), &["0001_runs.sql"]).await;
     sqlx::query(
         "INSERT INTO runs (id, kind, label, created_at, engine, seed, inputs_digest, tag, document, inputs) \
          VALUES ($1, 'fit', 'old', 1780272000000000, 'tailcast 0.1.0', 1, $2, 'tag', $3, '{}')",
@@ -41,5 +55,61 @@ async fn a_run_of_the_first_version_is_read_in_every_form() {
     assert_eq!(table.status, 200, "{}", table.text);
     assert!(table.text.contains("1,5,5.5"), "{}", table.text);
     assert_eq!(service.get("/v1/networks").await.status, 200);
+    service.stop().await;
+}
+
+/// A network of the third version with a job that has ended and one that has not: all of it is kept, and the network can be
+/// given a plan.
+#[tokio::test]
+async fn a_network_of_the_third_version_keeps_its_evidence_and_jobs() {
+    let folder = tempfile::tempdir().unwrap();
+    let (mut database, url) = database(folder.path(), &["0001_runs.sql", "0002_networks.sql", "0003_jobs.sql"]).await;
+    let counts = pairs(&COUNTS[1]).to_string();
+    let tag = tailcast::service::sha256_hex(counts.as_bytes());
+    let problem = r#"{"problem":{"code":"invalid_request","detail":"old","errors":[]}}"#;
+    for (statement, values) in [
+        (
+            "INSERT INTO networks (name, degree_kind, tag, created_at, updated_at) VALUES ('heronsgate', 'received', $1, 5, 6)",
+            vec![tag.as_str()],
+        ),
+        (
+            "INSERT INTO snapshots (network, as_of, nodes, link_ends, largest_degree, row_count, tag, updated_at, degree_counts) \
+             VALUES ('heronsgate', '2026-06-01T00:00:00.000000000Z', '4520', '9000', 99, 50, $1, 7, $2)",
+            vec![tag.as_str(), counts.as_str()],
+        ),
+        (
+            "INSERT INTO jobs (id, kind, network, state, starts, created_at, ended_at, task, outcome) \
+             VALUES ($1, 'link_list', 'heronsgate', 'failed', 1, 5, 6, '{}', $2)",
+            vec![ID, problem],
+        ),
+        (
+            "INSERT INTO jobs (id, kind, network, state, starts, created_at, task) \
+             VALUES ($1, 'link_list', 'heronsgate', 'running', 3, 5, '{}')",
+            vec!["0190a0b0-0000-7000-8000-000000000002"],
+        ),
+    ] {
+        let query = values.into_iter().fold(sqlx::query(statement), |query, value| query.bind(value));
+        query.execute(&mut database).await.unwrap();
+    }
+    database.close().await.unwrap();
+
+    let service = Service::start_with(|config| config.database.url = url.clone()).await;
+    let jobs = service.get("/v1/jobs?network=heronsgate").await.expect(200).json();
+    assert_eq!(jobs["items"].as_array().unwrap().len(), 2, "{jobs}");
+    let old = service.get(&format!("/v1/jobs/{ID}")).await.expect(200).json();
+    assert_eq!(
+        (&old["kind"], &old["state"], &old["problem"]["detail"]),
+        (&json!("link_list"), &json!("failed"), &json!("old"))
+    );
+    let network = service.get("/v1/networks/heronsgate").await.expect(200);
+    assert_eq!(
+        (network.header("etag"), &network.json()["forecast_plan"]),
+        (format!("\"{tag}\"").as_str(), &json!(null))
+    );
+    let snapshot = service.get("/v1/networks/heronsgate/snapshots/2026-06-01").await.expect(200);
+    assert_eq!(snapshot.json()["degree_counts"], pairs(&COUNTS[1]));
+    service.put("/v1/networks/heronsgate", &crate::tracking::settings()).await.expect(200);
+    assert_eq!(crate::tracking::settled(&service).await["refresh"]["state"], "current");
+    service.get("/v1/networks/heronsgate/forecasts/latest").await.expect(200);
     service.stop().await;
 }

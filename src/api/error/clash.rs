@@ -53,7 +53,7 @@ pub fn clash_problem(clash: Clash) -> Problem {
         }
         Clash::JobLive { job } => {
             let detail = format!(
-                "The network has a job that has not ended. Wait for /v1/jobs/{job}, or DELETE it, then send the list again."
+                "The network has a job of this kind that has not ended. Wait for /v1/jobs/{job}, or DELETE it, then ask again."
             );
             ("job_live", detail)
         }

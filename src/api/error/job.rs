@@ -29,6 +29,12 @@ pub fn job_problem(problem: JobProblem) -> Problem {
         JobFailure::BodyTooLarge => told(S::PAYLOAD_TOO_LARGE, "body_too_large"),
         JobFailure::DegreeKindFixed => told(S::CONFLICT, "degree_kind_fixed"),
         JobFailure::NetworkFull => told(S::CONFLICT, "network_full"),
+        JobFailure::NoSnapshot => told(S::UNPROCESSABLE_ENTITY, "no_snapshot"),
+        JobFailure::ArrivalsRequired => told(S::UNPROCESSABLE_ENTITY, "arrivals_required"),
+        JobFailure::NotIdentified => told(S::UNPROCESSABLE_ENTITY, "not_identified"),
+        JobFailure::Impossible => told(S::UNPROCESSABLE_ENTITY, "impossible"),
+        JobFailure::NotConverged => told(S::UNPROCESSABLE_ENTITY, "not_converged"),
+        JobFailure::TooSlow => told(S::SERVICE_UNAVAILABLE, "too_slow").retry_after(RETRY),
         JobFailure::Interrupted => told(S::SERVICE_UNAVAILABLE, "interrupted").retry_after(RETRY),
         JobFailure::Internal => told(S::INTERNAL_SERVER_ERROR, "internal"),
     }

@@ -3,14 +3,15 @@
 use serde::Serialize;
 use serde_json::value::RawValue;
 use utoipa::ToSchema;
+use uuid::Uuid;
 
 use crate::api::ApiError;
 use crate::api::extract::ResultFormat;
 use crate::api::representation::entity_tag;
-use crate::api::requests::{DegreeKindName, degree_pairs, move_rows};
+use crate::api::requests::{DegreeKindName, ForecastPlanBody, degree_pairs, move_rows};
 use crate::service::{
-    Count, NetworkSummary, NewNetwork, SnapshotSummary, StoredLinkEvents, StoredSnapshot, StoredTransitions,
-    TransitionsSummary, date_text,
+    Count, NetworkSummary, NewNetwork, RefreshState, RefreshStatus, SnapshotSummary, StoredLinkEvents, StoredSnapshot,
+    StoredTransitions, TransitionsSummary, date_text,
 };
 
 /// A tracked network's settings.
@@ -25,6 +26,9 @@ pub struct NetworkAnswer {
     /// `[degree, share]` pairs: the degrees newcomers arrive with; null when they are read from the data.
     #[schema(value_type = Option<Vec<Vec<f64>>>, examples(json!([[0, 0.9], [2, 0.1]])))]
     entry_degrees: Option<Box<RawValue>>,
+    /// What is asked of its forecasts; null when none are made.
+    #[schema(value_type = Option<ForecastPlanBody>)]
+    forecast_plan: Option<Box<RawValue>>,
 }
 
 /// A tracked network's settings as they are stored now.
@@ -57,6 +61,31 @@ pub struct NetworkLine {
     transitions: u64,
     /// Whether link events are stored.
     link_events: bool,
+    /// How its latest forecast stands; null before there was anything to forecast by.
+    refresh: Option<RefreshAnswer>,
+}
+
+/// How a network's latest forecast stands to what is stored.
+#[derive(Debug, Clone, Serialize, ToSchema)]
+pub struct RefreshAnswer {
+    /// How it stands.
+    state: RefreshStateName,
+    /// The refresh that says so, at `/v1/jobs/{id}`.
+    job: Uuid,
+    /// Why there is no newer forecast; null unless outdated.
+    reason: Option<String>,
+}
+
+/// How a network's latest forecast stands to what is stored.
+#[derive(Debug, Clone, Copy, Serialize, ToSchema)]
+#[serde(rename_all = "snake_case")]
+enum RefreshStateName {
+    /// It is being made anew.
+    Refreshing,
+    /// It stands on all that is stored.
+    Current,
+    /// No newer one could be made.
+    Outdated,
 }
 
 /// Networks, in the order of their names.
@@ -182,6 +211,7 @@ impl TryFrom<NewNetwork> for NetworkAnswer {
             degree_kind: stored.degree_kind.into(),
             description: stored.description,
             entry_degrees: stored.entry_degrees.map(raw).transpose()?,
+            forecast_plan: stored.forecast_plan.map(raw).transpose()?,
         })
     }
 }
@@ -201,12 +231,24 @@ impl TryFrom<NetworkSummary> for NetworkLine {
         Ok(Self {
             created_at: found.network.created_at.to_string(),
             updated_at: found.network.updated_at.to_string(),
+            refresh: found.network.refresh.map(RefreshAnswer::from),
             network: found.network.settings.try_into()?,
             snapshots: found.snapshots,
             newest_snapshot: found.newest.map(date_text),
             transitions: found.transitions,
             link_events: found.link_events,
         })
+    }
+}
+
+impl From<RefreshStatus> for RefreshAnswer {
+    fn from(status: RefreshStatus) -> Self {
+        let state = match status.state {
+            RefreshState::Refreshing => RefreshStateName::Refreshing,
+            RefreshState::Current => RefreshStateName::Current,
+            RefreshState::Outdated => RefreshStateName::Outdated,
+        };
+        Self { state, job: status.job, reason: status.reason }
     }
 }
 

@@ -9,7 +9,7 @@ use crate::api::extract::{IdempotencyKey, JsonBody, ResultFormat, network_name};
 use crate::api::refusals::{BodyRefusals, FormRefusals, Refusals};
 use crate::api::requests::{NetworkFitBody, NetworkForecastBody, read_network_fit, read_network_forecast};
 use crate::api::{ApiError, AppState, Problem, examples, fits, forecasts, runs};
-use crate::service::{FitRun, ForecastRun};
+use crate::service::{FitRun, ForecastRun, NetworkEvidence};
 
 /// The routes of this resource.
 pub fn routes() -> OpenApiRouter<AppState> {
@@ -18,7 +18,8 @@ pub fn routes() -> OpenApiRouter<AppState> {
 
 /// Forecast a tracked network
 ///
-/// A forecast from all that is stored of the network: its snapshots, transitions and link events. The run is one of
+/// A forecast from all that is stored of the network: its snapshots, transitions and link events. What is left out comes from its
+/// `forecast_plan`, if it has one; what is given goes before the plan, for this run only. The run is one of
 /// `/v1/forecasts` and stays when the network goes.
 #[utoipa::path(
     post,
@@ -57,9 +58,10 @@ async fn create_network_forecast(
 ) -> Result<Response, ApiError> {
     let (name, limits) = (network_name(&name)?, state.limits);
     let claim = key.claim_for(&name, &body);
-    let (evidence, _place) = state.service.evidence(&name).await?;
-    let inputs = body.read(move |raw, faults| read_network_forecast(raw, evidence, &limits, faults)).await?;
-    let run = state.service.create(inputs, Some(name), claim).await?;
+    let NetworkEvidence { evidence, plan, origin, place: _place } = state.service.evidence(&name).await?;
+    let inputs =
+        body.read(move |raw, faults| read_network_forecast(raw, evidence, plan.as_ref(), &limits, faults)).await?;
+    let run = state.service.create(inputs, Some(origin), claim).await?;
     runs::created(forecasts::PATH, run, format, forecasts::csv)
 }
 
@@ -103,8 +105,8 @@ async fn create_network_fit(
 ) -> Result<Response, ApiError> {
     let name = network_name(&name)?;
     let claim = key.claim_for(&name, &body);
-    let (evidence, _place) = state.service.evidence(&name).await?;
+    let NetworkEvidence { evidence, origin, place: _place, .. } = state.service.evidence(&name).await?;
     let inputs = body.read(move |raw, faults| read_network_fit(raw, evidence, faults)).await?;
-    let run = state.service.create(inputs, Some(name), claim).await?;
+    let run = state.service.create(inputs, Some(origin), claim).await?;
     runs::created(fits::PATH, run, format, fits::csv)
 }

@@ -9,18 +9,18 @@ use crate::api::decode::{
     At, Faults, Object, degree_counts, degree_counts_csv, link_events, moves, moves_csv, object, text,
 };
 use crate::config::LimitsConfig;
-use crate::model::{Evidence, LinkEvents, Snapshot, Transitions, TransitionsFault};
+use crate::model::{Evidence, LinkEvents, Snapshot, StandingPlan, Transitions, TransitionsFault};
 use crate::service::{Description, FitInputs, ForecastInputs, NetworkSettings, OriginRequest};
 
 /// Fields of a network's settings.
-pub const NETWORK_FIELDS: [&str; 3] = ["degree_kind", "description", "entry_degrees"];
+pub const NETWORK_FIELDS: [&str; 4] = ["degree_kind", "description", "entry_degrees", "forecast_plan"];
 
 /// Fields of an inline request that say what is known of the network: a run of a tracked one takes that from what is
 /// stored.
 pub const EVIDENCE_FIELDS: [&str; 5] = ["degree_kind", "snapshots", "transitions", "link_events", "entry_degrees"];
 
 /// Reads a network's settings.
-pub fn read_network(raw: &RawValue, faults: &mut Faults) -> Option<NetworkSettings> {
+pub fn read_network(raw: &RawValue, limits: &LimitsConfig, faults: &mut Faults) -> Option<NetworkSettings> {
     let root = At::ROOT;
     let body = object(raw, root, &NETWORK_FIELDS, faults)?;
     let degree_kind = degree_kind(&body, faults);
@@ -31,7 +31,16 @@ pub fn read_network(raw: &RawValue, faults: &mut Faults) -> Option<NetworkSettin
         Some(raw) => entry_degrees(raw, faults).map(Some),
         None => Some(None),
     };
-    Some(NetworkSettings { degree_kind: degree_kind?, description: description?, entry_degrees: entry_degrees? })
+    let forecast_plan = match body.get("forecast_plan") {
+        Some(raw) => outlook::standing_plan(raw, root.field("forecast_plan"), limits, faults).map(Some),
+        None => Some(None),
+    };
+    Some(NetworkSettings {
+        degree_kind: degree_kind?,
+        description: description?,
+        entry_degrees: entry_degrees?,
+        forecast_plan: forecast_plan?,
+    })
 }
 
 /// Reads the degree counts of a snapshot.
@@ -108,10 +117,11 @@ pub fn read_network_fit(raw: &RawValue, evidence: Evidence, faults: &mut Faults)
     Some(FitInputs { label, evidence, fit: fit? })
 }
 
-/// Reads what is asked of a forecast of a tracked network.
+/// Reads what is asked of a forecast of a tracked network; what is left out comes from its plan, if it has one.
 pub fn read_network_forecast(
     raw: &RawValue,
     evidence: Evidence,
+    standing: Option<&StandingPlan>,
     limits: &LimitsConfig,
     faults: &mut Faults,
 ) -> Option<ForecastInputs> {
@@ -120,8 +130,8 @@ pub fn read_network_forecast(
     let latest = Some(evidence.latest().as_of);
     let fit = fit_request(&body, faults);
     let label = label(&body, faults);
-    let arrivals = outlook::arrivals(&body, latest, faults);
-    let plan = outlook::plan(&body, latest, limits, faults);
+    let arrivals = outlook::arrivals(&body, latest, standing, faults);
+    let plan = outlook::plan(&body, latest, standing, limits, faults);
     let request = OriginRequest { evidence, fit: fit?, arrivals, plan: plan? };
     Some(ForecastInputs { label, request })
 }

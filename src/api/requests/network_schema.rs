@@ -7,7 +7,10 @@ use utoipa::openapi::{RefOr, Schema};
 use utoipa::{PartialSchema, ToSchema};
 
 use super::network::EVIDENCE_FIELDS;
-use super::schema::{DegreeKindName, FitRequestBody, ForecastRequestBody, degree_pairs, move_rows, share_pairs};
+use super::schema::{
+    ArrivalsBody, DegreeKindName, FitRequestBody, ForecastRequestBody, HorizonBody, degree_pairs, move_rows,
+    share_pairs, thresholds,
+};
 
 /// A tracked network's settings. Unknown fields are refused.
 #[derive(Debug, Clone, PartialEq, Serialize, ToSchema)]
@@ -24,6 +27,29 @@ pub struct NetworkBody {
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(schema_with = share_pairs)]
     pub entry_degrees: Option<Vec<(u64, f64)>>,
+    /// What is asked of its forecasts, which are then made anew whenever what is stored changes.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false)]
+    pub forecast_plan: Option<ForecastPlanBody>,
+}
+
+/// What is asked of every forecast of a tracked network. Unknown fields are refused.
+#[derive(Debug, Clone, PartialEq, Serialize, ToSchema)]
+#[serde(deny_unknown_fields)]
+pub struct ForecastPlanBody {
+    /// A hub is a node with at least this many links; one answer for each.
+    #[schema(schema_with = thresholds)]
+    pub thresholds: Vec<u64>,
+    /// Dates, counted from the newest snapshot on.
+    pub horizon: HorizonBody,
+    /// Levels of the intervals, each above 0 and at most 0.9999; 0.5 and 0.9 when left out.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, min_items = 1, max_items = 20)]
+    pub levels: Option<Vec<f64>>,
+    /// New nodes; estimated from the snapshots when left out, which takes two of them.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false)]
+    pub arrivals: Option<ArrivalsBody>,
 }
 
 /// The degree counts of a snapshot.
@@ -52,9 +78,15 @@ pub struct NetworkFitBody;
 
 impl PartialSchema for NetworkForecastBody {
     fn schema() -> RefOr<Schema> {
-        let says = "What is asked of a forecast of a tracked network. Unknown fields are refused. Give either `dates` or \
-                    `horizon`.";
-        without_evidence(ForecastRequestBody::schema(), says)
+        let says = "What is asked of a forecast of a tracked network. Unknown fields are refused. What is left out comes from \
+                    the network's `forecast_plan`; without one, `thresholds` and either `dates` or `horizon` are needed.";
+        match without_evidence(ForecastRequestBody::schema(), says) {
+            RefOr::T(Schema::Object(mut body)) => {
+                body.required.retain(|name| name != "thresholds");
+                RefOr::T(Schema::Object(body))
+            }
+            other => other,
+        }
     }
 }
 

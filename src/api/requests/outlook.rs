@@ -1,23 +1,84 @@
-//! What is asked about the future: arrivals, thresholds, dates, levels.
+//! What is asked about the future: arrivals, thresholds, dates, levels; for one forecast, or as a network's standing plan.
 
-use jiff::{Span, Timestamp, tz::TimeZone};
+use jiff::Timestamp;
 use serde_json::value::RawValue;
 
 use crate::api::decode::{At, Faults, Object, every, instant, list, object, real, whole};
 use crate::config::LimitsConfig;
 use crate::model::{
-    ArrivalPlan, ArrivalSegment, ForecastPlan, Levels, MAX_DEGREE, PlanFault, Thresholds, days_between,
+    ArrivalFault, ArrivalPlan, ForecastPlan, Horizon, HorizonEnd, Levels, MAX_DEGREE, PlanFault, StandingArrivals,
+    StandingPlan, StandingSegment, Thresholds,
 };
 use crate::report::readable;
 
-/// Most dates a horizon is spread over before it is refused; one more than a plan takes, so that the plan says why.
-const MOST_STEPS: i64 = 4_001;
+/// Fields of a network's forecast plan.
+pub const PLAN_FIELDS: [&str; 4] = ["thresholds", "horizon", "levels", "arrivals"];
 
-/// Arrivals from the newest snapshot on; none when they were left out.
-pub fn arrivals(body: &Object<'_>, latest: Option<Timestamp>, faults: &mut Faults) -> Option<ArrivalPlan> {
+/// The snapshot that a plan's horizon is tried from before there is one: its first day of a leap year.
+const TRIAL_DATE: &str = "2000-01-01T00:00:00Z";
+
+/// Arrivals from the newest snapshot on; those of the network's plan, or none, when they were left out.
+pub fn arrivals(
+    body: &Object<'_>,
+    latest: Option<Timestamp>,
+    standing: Option<&StandingPlan>,
+    faults: &mut Faults,
+) -> Option<ArrivalPlan> {
+    let Some(raw) = body.get("arrivals") else {
+        let planned = standing?.arrivals.as_ref()?.at(latest?);
+        return noted_plan(planned.map_err(|found| format!("forecast_plan: {}", in_words(&found))), faults);
+    };
     let root = At::ROOT;
     let at = root.field("arrivals");
-    let raw = body.get("arrivals")?;
+    let (given, segmented) = given_arrivals(raw, at, faults)?;
+    // Without a newest snapshot there is no day to count from; that is a fault of its own already.
+    let plan = given.at(latest?);
+    plan.map_err(|found| note_arrivals(&found, at, segmented, faults)).ok()
+}
+
+fn in_words(found: &[ArrivalFault]) -> String {
+    found.iter().take(3).map(ToString::to_string).collect::<Vec<_>>().join("; ")
+}
+
+/// A network's plan.
+pub fn standing_plan(raw: &RawValue, at: At<'_>, limits: &LimitsConfig, faults: &mut Faults) -> Option<StandingPlan> {
+    let given = object(raw, at, &PLAN_FIELDS, faults)?;
+    let thresholds = given.required("thresholds", &at, faults);
+    let thresholds = thresholds.and_then(|raw| thresholds_of(raw, at, faults));
+    let levels = match given.get("levels") {
+        Some(raw) => levels_of(raw, at, faults),
+        None => Some(Levels::default()),
+    };
+    let horizon = given.required("horizon", &at, faults);
+    let horizon = horizon.and_then(|raw| horizon_of(raw, at.field("horizon"), faults));
+    let arrivals = match given.get("arrivals") {
+        Some(raw) => given_arrivals(raw, at.field("arrivals"), faults).map(|(arrivals, _)| Some(arrivals)),
+        None => Some(None),
+    };
+    let plan = StandingPlan { thresholds: thresholds?, levels: levels?, horizon: horizon?, arrivals: arrivals? };
+    // How many dates there are until a given one shows at a snapshot.
+    if let HorizonEnd::After(_) = plan.horizon.end {
+        let from = TRIAL_DATE.parse().ok()?;
+        let dates = plan.horizon.dates(from);
+        if dates.is_empty() {
+            faults.add(
+                &at.field("horizon").field("ends_after"),
+                "the horizon ends before its first date: ends_after is shorter than every",
+            );
+            return None;
+        }
+        let tried = ForecastPlan::new(from, plan.thresholds.clone(), &dates, plan.levels.clone());
+        tried.as_ref().err().into_iter().flatten().for_each(|fault| note(fault, at, true, faults));
+        if let Some(detail) = too_many_cells(&tried.ok()?, limits) {
+            faults.add(&at.field("horizon"), detail);
+            return None;
+        }
+    }
+    Some(plan)
+}
+
+/// Arrivals as they are given, and whether in segments.
+fn given_arrivals(raw: &RawValue, at: At<'_>, faults: &mut Faults) -> Option<(StandingArrivals, bool)> {
     let given = object(raw, at, &["per_day", "growth_per_year", "segments"], faults)?;
     let segmented = given.get("segments");
     if segmented.is_some() && (given.get("per_day").is_some() || given.get("growth_per_year").is_some()) {
@@ -25,60 +86,71 @@ pub fn arrivals(body: &Object<'_>, latest: Option<Timestamp>, faults: &mut Fault
         return None;
     }
     let segments = match segmented {
-        Some(raw) => segments(raw, at.field("segments"), latest, faults)?,
-        None => vec![segment(&given, at, 0.0, faults)?],
+        Some(raw) => segments(raw, at.field("segments"), faults)?,
+        None => vec![segment(&given, at, None, faults)?],
     };
-    let plan = ArrivalPlan::from_segments(&segments);
-    for fault in plan.as_ref().err().into_iter().flatten() {
+    let arrivals = StandingArrivals::new(segments);
+    let segmented = segmented.is_some();
+    arrivals.map(|arrivals| (arrivals, segmented)).map_err(|found| note_arrivals(&found, at, segmented, faults)).ok()
+}
+
+fn note_arrivals(found: &[ArrivalFault], at: At<'_>, segmented: bool, faults: &mut Faults) {
+    for fault in found {
         let detail = readable(&fault.detail);
-        match (segmented, fault.index) {
-            (Some(_), Some(index)) => faults.add(&at.field("segments").item(index).field(fault.field), detail),
+        match fault.index {
+            Some(index) if segmented => faults.add(&at.field("segments").item(index).field(fault.field), detail),
             _ => faults.add(&at.field(fault.field), detail),
         }
     }
-    plan.ok()
 }
 
-fn segments(raw: &RawValue, at: At<'_>, latest: Option<Timestamp>, faults: &mut Faults) -> Option<Vec<ArrivalSegment>> {
+fn segments(raw: &RawValue, at: At<'_>, faults: &mut Faults) -> Option<Vec<StandingSegment>> {
     let mut segments = Vec::new();
     let length = list(raw, at, faults, |index, item, faults| {
         let at = at.item(index);
         segments.extend(object(item, at, &["from", "per_day", "growth_per_year"], faults).and_then(|given| {
             let from = given.required("from", &at, faults).and_then(|raw| instant(raw, at.field("from"), faults));
-            // Without a newest snapshot there is no day to count from; that is a fault of its own already.
-            let from_day = from.zip(latest).map(|(from, latest)| days_between(latest, from));
-            let segment = segment(&given, at, from_day.unwrap_or(0.0), faults);
-            from_day.and(segment)
+            let segment = segment(&given, at, from, faults);
+            from.and(segment)
         }));
     })?;
     (segments.len() == length).then_some(segments)
 }
 
-fn segment(given: &Object<'_>, at: At<'_>, from_day: f64, faults: &mut Faults) -> Option<ArrivalSegment> {
+fn segment(given: &Object<'_>, at: At<'_>, from: Option<Timestamp>, faults: &mut Faults) -> Option<StandingSegment> {
     let per_day = given.required("per_day", &at, faults).and_then(|raw| real(raw, at.field("per_day"), faults));
     let growth_per_year = match given.get("growth_per_year") {
         Some(raw) => real(raw, at.field("growth_per_year"), faults),
         None => Some(0.0),
     };
-    Some(ArrivalSegment { from_day, per_day: per_day?, growth_per_year: growth_per_year? })
+    Some(StandingSegment { from, per_day: per_day?, growth_per_year: growth_per_year? })
 }
 
-/// Thresholds, dates and levels.
+/// Thresholds, dates and levels; those of the network's plan where they were left out.
 pub fn plan(
     body: &Object<'_>,
     latest: Option<Timestamp>,
+    standing: Option<&StandingPlan>,
     limits: &LimitsConfig,
     faults: &mut Faults,
 ) -> Option<ForecastPlan> {
-    let thresholds = thresholds(body, faults);
-    let levels = levels(body, faults);
-    let (dates, stepped) = match (body.get("dates"), body.get("horizon")) {
-        (Some(raw), None) => (dates(raw, faults), false),
-        (None, Some(raw)) => (horizon(raw, latest, faults), true),
-        (given, _) => {
+    let root = At::ROOT;
+    let thresholds = match (body.get("thresholds"), standing) {
+        (None, Some(standing)) => Some(standing.thresholds.clone()),
+        _ => body.required("thresholds", &root, faults).and_then(|raw| thresholds_of(raw, root, faults)),
+    };
+    let levels = match (body.get("levels"), standing) {
+        (Some(raw), _) => levels_of(raw, root, faults),
+        (None, standing) => Some(standing.map(|standing| standing.levels.clone()).unwrap_or_default()),
+    };
+    let (dates, stepped) = match (body.get("dates"), body.get("horizon"), standing) {
+        (Some(raw), None, _) => (dates(raw, faults), false),
+        (None, Some(raw), _) => (horizon(raw, latest, faults), true),
+        (None, None, Some(standing)) => (planned_dates(standing, latest, faults), true),
+        (given, ..) => {
             let detail = "give either dates, or a horizon to spread dates over";
             let also = if given.is_some() { ", not both" } else { "" };
-            faults.add(&At::ROOT, format!("{detail}{also}"));
+            faults.add(&root, format!("{detail}{also}"));
             (None, false)
         }
     };
@@ -88,36 +160,38 @@ pub fn plan(
     let (thresholds, levels) = (thresholds.unwrap_or(stand_in), levels.unwrap_or_default());
     let plan = ForecastPlan::new(latest?, thresholds, &dates?, levels);
     for fault in plan.as_ref().err().into_iter().flatten() {
-        note(fault, stepped, faults);
+        note(fault, root, stepped, faults);
     }
     let plan = plan.ok().filter(|_| complete)?;
-    let cells = plan.thresholds().len() * plan.dates().len();
-    if cells > limits.cells {
-        let detail = format!(
-            "{} thresholds at {} dates make {cells} answers; one forecast gives at most {}: split the request",
-            plan.thresholds().len(),
-            plan.dates().len(),
-            limits.cells
-        );
-        faults.add(&At::ROOT.field(if stepped { "horizon" } else { "dates" }), detail);
+    if let Some(detail) = too_many_cells(&plan, limits) {
+        faults.add(&root.field(if stepped { "horizon" } else { "dates" }), detail);
         return None;
     }
     Some(plan)
 }
 
-fn note(fault: &PlanFault, stepped: bool, faults: &mut Faults) {
-    let root = At::ROOT;
-    let list = root.field(if stepped && fault.field == "dates" { "horizon" } else { fault.field });
+fn too_many_cells(plan: &ForecastPlan, limits: &LimitsConfig) -> Option<String> {
+    let (thresholds, dates) = (plan.thresholds().len(), plan.dates().len());
+    let cells = thresholds * dates;
+    (cells > limits.cells).then(|| {
+        format!(
+            "{thresholds} thresholds at {dates} dates make {cells} answers; one forecast gives at most {}: split the \
+             request",
+            limits.cells
+        )
+    })
+}
+
+fn note(fault: &PlanFault, at: At<'_>, stepped: bool, faults: &mut Faults) {
+    let list = at.field(if stepped && fault.field == "dates" { "horizon" } else { fault.field });
     match fault.index {
         Some(index) if !stepped => faults.add(&list.item(index), readable(&fault.detail)),
         _ => faults.add(&list, readable(&fault.detail)),
     }
 }
 
-fn thresholds(body: &Object<'_>, faults: &mut Faults) -> Option<Thresholds> {
-    let root = At::ROOT;
-    let at = root.field("thresholds");
-    let raw = body.required("thresholds", &root, faults)?;
+fn thresholds_of(raw: &RawValue, above: At<'_>, faults: &mut Faults) -> Option<Thresholds> {
+    let at = above.field("thresholds");
     let mut values = Vec::new();
     let mut complete = true;
     list(raw, at, faults, |index, item, faults| {
@@ -127,14 +201,12 @@ fn thresholds(body: &Object<'_>, faults: &mut Faults) -> Option<Thresholds> {
         values.push(value.unwrap_or(1));
     })?;
     let found = Thresholds::new(&values);
-    found.as_ref().err().into_iter().flatten().for_each(|fault| note(fault, false, faults));
+    found.as_ref().err().into_iter().flatten().for_each(|fault| note(fault, above, false, faults));
     found.ok().filter(|_| complete)
 }
 
-fn levels(body: &Object<'_>, faults: &mut Faults) -> Option<Levels> {
-    let root = At::ROOT;
-    let at = root.field("levels");
-    let Some(raw) = body.get("levels") else { return Some(Levels::default()) };
+fn levels_of(raw: &RawValue, above: At<'_>, faults: &mut Faults) -> Option<Levels> {
+    let at = above.field("levels");
     let mut values = Vec::new();
     let mut complete = true;
     list(raw, at, faults, |index, item, faults| {
@@ -144,7 +216,7 @@ fn levels(body: &Object<'_>, faults: &mut Faults) -> Option<Levels> {
         values.push(value.unwrap_or(0.5));
     })?;
     let found = Levels::new(&values);
-    found.as_ref().err().into_iter().flatten().for_each(|fault| note(fault, false, faults));
+    found.as_ref().err().into_iter().flatten().for_each(|fault| note(fault, above, false, faults));
     found.ok().filter(|_| complete)
 }
 
@@ -156,53 +228,56 @@ fn dates(raw: &RawValue, faults: &mut Faults) -> Option<Vec<Timestamp>> {
     (dates.len() == length).then_some(dates)
 }
 
-/// The dates `latest + every`, `latest + 2·every`, … up to and including `until`, by the calendar.
+/// The dates of a horizon that is given.
 fn horizon(raw: &RawValue, latest: Option<Timestamp>, faults: &mut Faults) -> Option<Vec<Timestamp>> {
     let root = At::ROOT;
     let at = root.field("horizon");
-    let given = object(raw, at, &["until", "every"], faults)?;
-    let until = given.required("until", &at, faults).and_then(|raw| instant(raw, at.field("until"), faults));
-    let step = given.required("every", &at, faults).and_then(|raw| every(raw, at.field("every"), faults));
-    let (until, step, latest) = (until?, step?, latest?);
-    let dates = steps(latest, until, step);
+    let given = horizon_of(raw, at, faults)?;
+    let dates = given.dates(latest?);
     if dates.is_empty() {
-        faults.add(&at.field("until"), format!("{until} is before the first date, one step after the newest snapshot"));
+        let (field, detail) = match given.end {
+            HorizonEnd::Until(until) => {
+                ("until", format!("{until} is before the first date, one step after the newest snapshot"))
+            }
+            HorizonEnd::After(after) => ("ends_after", format!("{after} is shorter than one step")),
+        };
+        faults.add(&at.field(field), detail);
         return None;
     }
     Some(dates)
 }
 
-/// Counted from the start each time: a month after 31 January is 28 February, two months after it 31 March.
-fn steps(from: Timestamp, until: Timestamp, step: Span) -> Vec<Timestamp> {
-    let from = from.to_zoned(TimeZone::UTC);
-    (1..=MOST_STEPS)
-        .map_while(|count| Some(from.checked_add(step.checked_mul(count).ok()?).ok()?.timestamp()))
-        .take_while(|&date| date <= until)
-        .collect()
+fn horizon_of(raw: &RawValue, at: At<'_>, faults: &mut Faults) -> Option<Horizon> {
+    let given = object(raw, at, &["until", "ends_after", "every"], faults)?;
+    let step = given.required("every", &at, faults).and_then(|raw| every(raw, at.field("every"), faults));
+    let end = match (given.get("until"), given.get("ends_after")) {
+        (Some(raw), None) => instant(raw, at.field("until"), faults).map(HorizonEnd::Until),
+        (None, Some(raw)) => every(raw, at.field("ends_after"), faults).map(HorizonEnd::After),
+        (given, _) => {
+            let also = if given.is_some() { ", not both" } else { "" };
+            faults.add(
+                &at,
+                format!("give either until, a date, or ends_after, a duration from the newest snapshot on{also}"),
+            );
+            None
+        }
+    };
+    Some(Horizon { end: end?, every: step? })
 }
 
-#[cfg(test)]
-mod tests {
-    use super::*;
-
-    #[test]
-    fn steps_follow_the_calendar_and_include_the_end() {
-        let dates = steps(
-            "2026-01-31T00:00:00Z".parse().unwrap(),
-            "2026-04-30T00:00:00Z".parse().unwrap(),
-            "P1M".parse().unwrap(),
-        );
-        let dates: Vec<String> = dates.iter().map(|date| date.to_string()[..10].to_owned()).collect();
-        assert_eq!(dates, ["2026-02-28", "2026-03-31", "2026-04-30"]);
+/// The dates of a network's plan.
+fn planned_dates(standing: &StandingPlan, latest: Option<Timestamp>, faults: &mut Faults) -> Option<Vec<Timestamp>> {
+    let dates = standing.horizon.dates(latest?);
+    if dates.is_empty() {
+        let detail = "the horizon of the network's forecast_plan has no date after the newest snapshot; give dates or a \
+                      horizon, or store another plan";
+        faults.add(&At::ROOT, detail);
+        return None;
     }
+    Some(dates)
+}
 
-    #[test]
-    fn a_tiny_step_does_not_run_for_ever() {
-        let dates = steps(
-            "2026-01-01T00:00:00Z".parse().unwrap(),
-            "2200-01-01T00:00:00Z".parse().unwrap(),
-            "PT1S".parse().unwrap(),
-        );
-        assert_eq!(dates.len(), 4_001);
-    }
+fn noted_plan(plan: Result<ArrivalPlan, String>, faults: &mut Faults) -> Option<ArrivalPlan> {
+    let root = At::ROOT;
+    plan.map_err(|detail| faults.add(&root.field("arrivals"), detail)).ok()
 }

@@ -28,7 +28,7 @@ pub fn share_pairs() -> Array {
 }
 
 /// Thresholds, each a degree.
-fn thresholds() -> Array {
+pub(super) fn thresholds() -> Array {
     let says =
         "A hub is a node with at least this many links; one answer for each, in ascending order, repeats dropped.";
     let item = whole(1).maximum(Some(MAX_DEGREE as f64));
@@ -327,13 +327,18 @@ pub struct SegmentBody {
     pub growth_per_year: Option<f64>,
 }
 
-/// Evenly spread dates: one step after the newest snapshot, two steps, and so on.
+/// Evenly spread dates: one step after the newest snapshot, two steps, and so on. Give either `until` or `ends_after`.
 #[derive(Debug, Clone, PartialEq, Eq, Serialize, ToSchema)]
 #[serde(deny_unknown_fields)]
 pub struct HorizonBody {
     /// No date comes after this one: RFC 3339, or a bare date for 00:00 UTC.
-    #[schema(examples("2027-12-01"))]
-    pub until: String,
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, examples("2027-12-01"))]
+    pub until: Option<String>,
+    /// No date comes later than this after the newest snapshot: an ISO 8601 duration.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, examples("P1Y"))]
+    pub ends_after: Option<String>,
     /// The step, an ISO 8601 duration; months and years go by the calendar.
     #[schema(examples("P1M"))]
     pub every: String,

@@ -70,6 +70,11 @@ pub fn link_events(events: &LinkEvents) -> Result<StoredLinkEvents, serde_json::
     })
 }
 
+/// Digest of degree counts: the same as of a snapshot that has them.
+pub fn counts_tag(counts: &DegreeCounts) -> Result<String, serde_json::Error> {
+    Ok(sha256_hex(pairs(counts)?.as_bytes()))
+}
+
 fn pairs(counts: &DegreeCounts) -> Result<String, serde_json::Error> {
     serde_json::to_string(&counts.iter().collect::<Vec<_>>())
 }

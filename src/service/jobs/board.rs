@@ -1,6 +1,7 @@
 //! Which jobs are at work in this process, how far they have come, and which were called off.
 
 use std::collections::HashMap;
+use std::collections::hash_map::Entry;
 use std::sync::atomic::{AtomicBool, Ordering};
 use std::sync::{Arc, Mutex, MutexGuard, PoisonError};
 
@@ -8,6 +9,7 @@ use tokio::sync::{Notify, OwnedSemaphorePermit, Semaphore, watch};
 use uuid::Uuid;
 
 use crate::config::JobsConfig;
+use crate::store::JobKind;
 
 /// Smallest step of progress that is told.
 const STEP: f64 = 0.002;
@@ -22,6 +24,8 @@ pub struct Board {
 struct Inner {
     live: Mutex<HashMap<Uuid, Arc<Live>>>,
     workers: Arc<Semaphore>,
+    /// Refreshes have workers of their own: dashboards do not wait for somebody's long list.
+    refreshers: Arc<Semaphore>,
     stopping: AtomicBool,
     config: JobsConfig,
 }
@@ -62,8 +66,9 @@ impl Board {
     /// An empty board.
     pub fn new(config: JobsConfig) -> Self {
         let workers = Arc::new(Semaphore::new(config.workers.min(Semaphore::MAX_PERMITS)));
+        let refreshers = Arc::new(Semaphore::new(config.refresh_workers.min(Semaphore::MAX_PERMITS)));
         let (live, stopping) = (Mutex::default(), AtomicBool::new(false));
-        Self { inner: Arc::new(Inner { live, workers, stopping, config }) }
+        Self { inner: Arc::new(Inner { live, workers, refreshers, stopping, config }) }
     }
 
     /// The settings.
@@ -71,20 +76,25 @@ impl Board {
         &self.inner.config
     }
 
-    /// Most jobs that may be live at once.
+    /// Most jobs that may be live at once, refreshes not counted.
     pub fn most_live(&self) -> u64 {
         self.inner.config.workers.saturating_add(self.inner.config.queue) as u64
     }
 
-    /// A place for a job.
-    pub fn open(&self, id: Uuid) -> Turn {
+    /// A place for a job; none when it has one.
+    pub fn open(&self, id: Uuid) -> Option<Turn> {
         let live = Arc::new(Live {
             progress: watch::Sender::new(0.0),
             called_off: AtomicBool::new(false),
             wake: Notify::new(),
         });
-        self.inner.live().insert(id, live.clone());
-        Turn { id, live, board: self.inner.clone() }
+        match self.inner.live().entry(id) {
+            Entry::Occupied(_) => None,
+            Entry::Vacant(place) => {
+                place.insert(live.clone());
+                Some(Turn { id, live, board: self.inner.clone() })
+            }
+        }
     }
 
     /// How far a live job has come; closed when it ends.
@@ -116,9 +126,13 @@ impl Inner {
 
 impl Turn {
     /// Waits for a free worker; none when there is nothing to wait for any more.
-    pub async fn come(&self) -> Option<OwnedSemaphorePermit> {
+    pub async fn come(&self, kind: JobKind) -> Option<OwnedSemaphorePermit> {
+        let workers = match kind {
+            JobKind::Refresh => &self.board.refreshers,
+            JobKind::LinkList => &self.board.workers,
+        };
         tokio::select! {
-            worker = self.board.workers.clone().acquire_owned() => worker.ok(),
+            worker = workers.clone().acquire_owned() => worker.ok(),
             () = self.live.wake.notified() => None,
         }
     }
@@ -146,12 +160,7 @@ impl Progress {
     /// # Errors
     /// When it is to stop.
     pub fn note(&self, progress: f64) -> Result<(), Stop> {
-        if self.live.called_off.load(Ordering::Relaxed) {
-            return Err(Stop::CalledOff);
-        }
-        if self.board.stopping.load(Ordering::Relaxed) {
-            return Err(Stop::Process);
-        }
+        self.stop().map_or(Ok(()), Err)?;
         self.live.progress.send_if_modified(|told| {
             let step = progress - *told >= STEP;
             if step {
@@ -160,6 +169,14 @@ impl Progress {
             step
         });
         Ok(())
+    }
+
+    /// Why the work is to stop, if it is.
+    pub fn stop(&self) -> Option<Stop> {
+        if self.live.called_off.load(Ordering::Relaxed) {
+            return Some(Stop::CalledOff);
+        }
+        self.board.stopping.load(Ordering::Relaxed).then_some(Stop::Process)
     }
 }
 
@@ -175,6 +192,8 @@ mod tests {
         let (link_list_bytes, link_list_seconds, link_list_nodes) = (1, 1, 1);
         Board::new(JobsConfig {
             workers: 1,
+            refresh_workers: 1,
+            refresh_seconds: 1,
             queue: 0,
             wait_seconds: 0,
             link_list_bytes,
@@ -186,7 +205,8 @@ mod tests {
     #[tokio::test]
     async fn a_watcher_sees_progress_and_the_end() {
         let (board, id) = (board(), Uuid::now_v7());
-        let turn = board.open(id);
+        let turn = board.open(id).unwrap();
+        assert!(board.open(id).is_none());
         let mut pulse = board.watch(id).unwrap();
         turn.progress().note(0.5).unwrap();
         turn.progress().note(0.5001).unwrap();
@@ -200,14 +220,14 @@ mod tests {
     #[tokio::test]
     async fn a_job_that_waits_is_woken_when_it_is_called_off_or_the_process_stops() {
         let (board, ids) = (board(), [0; 3].map(|_| Uuid::now_v7()));
-        let turns = ids.map(|id| board.open(id));
-        let worker = turns[0].come().await.unwrap();
+        let turns = ids.map(|id| board.open(id).unwrap());
+        let worker = turns[0].come(JobKind::LinkList).await.unwrap();
         board.call_off(ids[1]);
-        assert!(turns[1].come().await.is_none());
+        assert!(turns[1].come(JobKind::LinkList).await.is_none());
         assert_eq!(turns[1].progress().note(0.1), Err(Stop::CalledOff));
-        assert!(timeout(Duration::from_millis(20), turns[2].come()).await.is_err(), "it waits on");
+        assert!(timeout(Duration::from_millis(20), turns[2].come(JobKind::LinkList)).await.is_err(), "it waits on");
         board.stop();
-        assert!(turns[2].come().await.is_none());
+        assert!(turns[2].come(JobKind::LinkList).await.is_none());
         assert_eq!(turns[0].progress().note(0.1), Err(Stop::Process));
         drop(worker);
     }

@@ -2,6 +2,7 @@
 
 use serde::{Deserialize, Serialize};
 use utoipa::ToSchema;
+use uuid::Uuid;
 
 use crate::ingest::{FaultyLines, LinkReport};
 use crate::service::ServiceError;
@@ -11,8 +12,10 @@ use crate::store::Clash;
 #[derive(Debug, Clone, PartialEq, Eq, Serialize, Deserialize)]
 #[serde(rename_all = "snake_case")]
 pub enum JobOutcome {
-    /// It was done.
+    /// A link list was counted.
     Result(LinkListResult),
+    /// A network's forecast was made anew, or there was none to make.
+    Refresh(RefreshResult),
     /// Why it was not.
     Problem(JobProblem),
 }
@@ -38,6 +41,19 @@ pub struct LinkListResult {
     pub skipped: SkippedLines,
     /// Whether an instant had so many links that repeats were no longer looked for in the rest of it.
     pub repeats_unchecked: bool,
+}
+
+/// What a refresh came to.
+#[derive(Debug, Clone, PartialEq, Eq, Serialize, Deserialize, ToSchema)]
+pub struct RefreshResult {
+    /// The state of the network that it looked at, counted in changes of evidence and plan.
+    pub revision: u64,
+    /// The forecast that is the latest now; null when there was none to make.
+    pub forecast: Option<Uuid>,
+    /// Accounts of earlier forecasts that were made.
+    pub accounts: u64,
+    /// Why there was no forecast to make; null when there was one.
+    pub reason: Option<String>,
 }
 
 /// Lines that were passed over, by what is wrong with them.
@@ -85,6 +101,18 @@ pub enum JobFailure {
     DegreeKindFixed,
     /// What was derived is more than one network may have.
     NetworkFull,
+    /// Nothing is stored that a forecast could start from.
+    NoSnapshot,
+    /// One snapshot does not tell how many nodes arrive.
+    ArrivalsRequired,
+    /// The evidence does not tell the mix.
+    NotIdentified,
+    /// No network can do what is asked.
+    Impossible,
+    /// The numbers could not be computed to the stated accuracy.
+    NotConverged,
+    /// It took longer than configured.
+    TooSlow,
     /// The process stopped each time the job was at work.
     Interrupted,
     /// A fault of ours.
@@ -145,11 +173,11 @@ impl JobProblem {
         Self { code: JobFailure::BodyTooLarge, detail, errors: Vec::new() }
     }
 
-    /// A process that stopped too often.
-    pub fn interrupted(times: u64) -> Self {
+    /// A process that stopped too often; `again` says how to try once more.
+    pub fn interrupted(times: u64, again: &str) -> Self {
         let detail = format!(
             "The service stopped {times} times while this job was at work, so it is not begun again. See to the memory \
-             the service has, then send the list again."
+             the service has, then {again}."
         );
         Self { code: JobFailure::Interrupted, detail, errors: Vec::new() }
     }
@@ -168,6 +196,35 @@ impl JobProblem {
                 JobFailure::DegreeKindFixed,
                 "The network's degree_kind changed while its list was counted; send the list again.".to_owned(),
             ),
+        };
+        Self { code, detail, errors: Vec::new() }
+    }
+
+    /// What a use case of this service says against the work.
+    pub fn refusal(error: &ServiceError) -> Self {
+        let (code, detail) = match error {
+            ServiceError::NoSnapshot => {
+                (JobFailure::NoSnapshot, "the network has no snapshot, so there is nothing to forecast from".to_owned())
+            }
+            ServiceError::ArrivalsRequired => (
+                JobFailure::ArrivalsRequired,
+                "one snapshot does not tell how many nodes arrive; give forecast_plan.arrivals, or a second snapshot"
+                    .to_owned(),
+            ),
+            ServiceError::NotIdentified(why) => (JobFailure::NotIdentified, why.clone()),
+            ServiceError::Impossible(why) => (JobFailure::Impossible, why.clone()),
+            ServiceError::NotConverged(why) => (JobFailure::NotConverged, why.clone()),
+            ServiceError::TooSlow { budget } => (
+                JobFailure::TooSlow,
+                format!(
+                    "it was not done within {} s; plan fewer dates and thresholds, or raise jobs.refresh_seconds",
+                    budget.as_secs()
+                ),
+            ),
+            other => {
+                tracing::error!(cause = %other, "a job could not be done");
+                return Self::internal();
+            }
         };
         Self { code, detail, errors: Vec::new() }
     }

@@ -1,0 +1,123 @@
+//! A network's latest forecast: a copy of its run in one row, for it is read far more often than it is made.
+
+use jiff::Timestamp;
+use sqlx::{FromRow, SqliteConnection};
+use uuid::Uuid;
+
+use super::columns::{time, uuid};
+use super::refreshes::RefreshState;
+use super::runs::{NewRun, StoredRun};
+use super::{Store, StoreError};
+
+/// The read of the latest forecast: by the table's key, one row and nothing else.
+const FIND: &str = "SELECT run_id, state, job, created_at, tag, document FROM latest_forecasts WHERE network = $1";
+
+/// A network's latest forecast.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct LatestForecast {
+    /// The run.
+    pub run: StoredRun,
+    /// How it stands to what is stored of the network.
+    pub state: RefreshState,
+    /// The refresh that says so.
+    pub job: Uuid,
+}
+
+#[derive(FromRow)]
+struct LatestRow {
+    run_id: String,
+    state: String,
+    job: String,
+    created_at: i64,
+    tag: String,
+    document: String,
+}
+
+impl Store {
+    /// The latest forecast of a network, if there is one.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn find_latest(&self, network: &str) -> Result<Option<LatestForecast>, StoreError> {
+        self.file.check()?;
+        let row: Option<LatestRow> = sqlx::query_as(FIND).bind(network).fetch_optional(&self.read).await?;
+        row.map(LatestForecast::try_from).transpose()
+    }
+}
+
+/// Puts a run in the place of the latest forecast.
+pub(super) async fn replace(
+    connection: &mut SqliteConnection,
+    network: &str,
+    run: &NewRun,
+    job: Uuid,
+) -> Result<(), StoreError> {
+    sqlx::query(
+        "INSERT INTO latest_forecasts (network, run_id, state, job, created_at, tag, document) \
+         VALUES ($1, $2, 'current', $3, $4, $5, $6) ON CONFLICT (network) DO UPDATE SET run_id = excluded.run_id, \
+         state = excluded.state, job = excluded.job, created_at = excluded.created_at, tag = excluded.tag, \
+         document = excluded.document",
+    )
+    .bind(network)
+    .bind(run.id.to_string())
+    .bind(job.to_string())
+    .bind(run.created_at.as_microsecond())
+    .bind(run.tag.as_str())
+    .bind(run.document.as_str())
+    .execute(connection)
+    .await?;
+    Ok(())
+}
+
+/// Notes how the latest forecast stands, if there is one.
+pub(super) async fn note(
+    connection: &mut SqliteConnection,
+    network: &str,
+    state: RefreshState,
+    job: Uuid,
+) -> Result<(), StoreError> {
+    sqlx::query("UPDATE latest_forecasts SET state = $2, job = $3 WHERE network = $1")
+        .bind(network)
+        .bind(state.as_str())
+        .bind(job.to_string())
+        .execute(connection)
+        .await?;
+    Ok(())
+}
+
+impl TryFrom<LatestRow> for LatestForecast {
+    type Error = StoreError;
+
+    fn try_from(row: LatestRow) -> Result<Self, StoreError> {
+        let created_at: Timestamp = time(row.created_at)?;
+        Ok(Self {
+            run: StoredRun { id: uuid(&row.run_id)?, created_at, tag: row.tag, document: row.document },
+            state: RefreshState::named(&row.state)?,
+            job: uuid(&row.job)?,
+        })
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::config::Config;
+
+    #[tokio::test]
+    async fn the_latest_forecast_is_one_row_found_by_its_key() {
+        let folder = tempfile::tempdir().unwrap();
+        let mut config = Config::from_sources(None, std::iter::empty()).unwrap();
+        config.database.url = format!("sqlite://{}", folder.path().join("plan.db").display());
+        let store = Store::connect(&config.database).await.unwrap();
+        store.migrate().await.unwrap();
+        let steps: Vec<(i64, i64, i64, String)> =
+            sqlx::query_as(sqlx::AssertSqlSafe(format!("EXPLAIN QUERY PLAN {FIND}")))
+                .bind("heronsgate")
+                .fetch_all(&store.read)
+                .await
+                .unwrap();
+        let steps: Vec<&str> = steps.iter().map(|step| step.3.as_str()).collect();
+        assert_eq!(steps, ["SEARCH latest_forecasts USING INDEX sqlite_autoindex_latest_forecasts_1 (network=?)"]);
+        store.close().await;
+    }
+}
