@@ -10,8 +10,8 @@ const LATER_EDGE: f64 = 1.5;
 const EDGE_GROWTH: f64 = 1.5;
 /// Segments of a plan at most: the last edge is then 10⁹ periods away.
 const MOST_SEGMENTS: usize = 64;
-/// Rates that differ by less than this, relative, are one segment.
-const SAME_RATE: f64 = 1e-9;
+/// Rates that differ by less than this, relative, are one segment: each costs a panel of every node's law.
+const SAME_RATE: f64 = 0.02;
 
 /// Arrivals ahead.
 #[derive(Debug, Clone, PartialEq)]
@@ -108,10 +108,15 @@ fn path(rates: &RateHistory, horizon: f64, side: f64) -> Option<ArrivalPlan> {
         let upto = to * outlook.rate * (side * outlook.log_deviation).exp();
         let per_day = ((upto - arrived) / (to - from_day)).clamp(0.0, ArrivalPlan::MAX_PER_DAY);
         let differs = |last: &ArrivalSegment| (per_day / last.per_day - 1.0).abs() > SAME_RATE;
-        if segments.last().is_none_or(differs) {
-            segments.push(ArrivalSegment { from_day, per_day, growth_per_year: 0.0 });
+        match segments.last() {
+            // What is put right by the next segment that differs.
+            Some(last) if !differs(last) => arrived += last.per_day * (to - from_day),
+            _ => {
+                segments.push(ArrivalSegment { from_day, per_day, growth_per_year: 0.0 });
+                arrived = upto;
+            }
         }
-        (from_day, arrived) = (to, upto);
+        from_day = to;
     }
     ArrivalPlan::from_segments(&segments).ok()
 }

@@ -123,7 +123,22 @@ pub(super) fn pooled(
     };
     let replay = replay(past, &observed);
     let period = typical_period(evidence);
-    let scene = Scene::new(evidence, &request.fit, cancelled)?;
+    let mut scene = Scene::new(evidence, &request.fit, cancelled)?;
+    // Members are weighed by the thresholds that were scored, in hindsight too.
+    let weighed_by = scene.record(&RecordPlan::for_forecast(request).thresholds, Vec::new())?;
+    let mut uses: Vec<PoolUse> = Vec::new();
+    for &day in plan.days() {
+        let ahead = (day / period).round().clamp(1.0, SCORED_AHEAD as f64);
+        if uses.last().is_none_or(|last| last.ahead != ahead) {
+            let pool = pool(&weighed_by, past, &observed, ahead);
+            uses.push(PoolUse { ahead, pool, spread: replay.spread(ahead) });
+        }
+    }
+    let in_use = |model| {
+        let own = [Member::Mechanism(model), Member::Corrected(model)];
+        uses.iter().flat_map(|used| &used.pool.shares).any(|share| own.contains(&share.member))
+    };
+    scene.keep(in_use);
     let given = GivenRates {
         arrivals: request.arrivals.clone(),
         links_per_arrival: request.fit.links_per_arrival,
@@ -132,21 +147,15 @@ pub(super) fn pooled(
     let dates = plan.dates().iter().zip(plan.days());
     let targets = dates.flat_map(|(&date, &day)| scene.targets(date, day / period, &given)).collect();
     let newest = scene.record(plan.thresholds(), targets)?;
-    // Members are weighed by the thresholds that were scored, in hindsight too.
-    let weighed_by = scene.record(&RecordPlan::for_forecast(request).thresholds, Vec::new())?;
-    let weigh = |ahead: f64| pool(&weighed_by, past, &observed, ahead);
-    let (mut tails, mut uses): (Vec<Vec<TailForecast>>, Vec<PoolUse>) = (Vec::new(), Vec::new());
-    for &date in plan.dates() {
+    let mut tails = Vec::new();
+    for (&date, &day) in plan.dates().iter().zip(plan.days()) {
         let outlook = newest.outlooks.iter().find(|outlook| {
             outlook.target.date == date && matches!(outlook.target.growth, Growth::Known | Growth::Expected)
         });
-        let Some(outlook) = outlook else { return Err(OriginError::NoPeriod) };
-        let ahead = outlook.target.ahead.round().clamp(1.0, SCORED_AHEAD as f64);
-        if uses.last().is_none_or(|last| last.ahead != ahead) {
-            uses.push(PoolUse { ahead, pool: weigh(ahead), spread: replay.spread(ahead) });
-        }
-        let Some(PoolUse { pool, .. }) = uses.last() else { return Err(OriginError::NoPeriod) };
-        tails.push(tails_at(&newest, outlook, pool, &replay, plan.levels()));
+        let ahead = (day / period).round().clamp(1.0, SCORED_AHEAD as f64);
+        let used = uses.iter().find(|used| used.ahead == ahead);
+        let (Some(outlook), Some(used)) = (outlook, used) else { return Err(OriginError::NoPeriod) };
+        tails.push(tails_at(&newest, outlook, &used.pool, &replay, plan.levels()));
     }
     Ok(Pooled { tails, uses })
 }

@@ -16,6 +16,8 @@ const OLDER_SNAPSHOTS: usize = 4;
 const CORRECTION_DAMPING: f64 = 5.0;
 /// A correction lies between a third and three.
 const MOST_CORRECTION: f64 = 3.0;
+/// Thresholds at which an uncertainty of rates is measured at most.
+const MOST_SIDE_THRESHOLDS: usize = 24;
 /// With fewer arrivals than this share of the nodes, links are taken to land per node and day: per arrival there would be
 /// too many at once.
 const FEW_ARRIVALS: f64 = 1e-3;
@@ -182,9 +184,11 @@ impl<'a> Scene<'a> {
     pub fn targets(&self, date: Timestamp, ahead: f64, given: &GivenRates) -> Vec<Target> {
         let Some(mix) = self.mix() else { return Vec::new() };
         let days = days_between(self.now.as_of, date);
+        let planned = given.arrivals.is_some();
         let target = |(growth, rates): (Growth, Rates)| {
             let totals = self.totals(&rates, days)?;
-            Some(Target { date, ahead, growth, totals, rates: Some(rates) })
+            // Of rates that are only expected, what they add up to is all that matters, and constant ones cost less.
+            Some(Target { date, ahead, growth, totals, rates: planned.then_some(rates) })
         };
         expected_rates(self.known, &mix.forces, days, given).into_iter().filter_map(target).collect()
     }
@@ -196,6 +200,11 @@ impl<'a> Scene<'a> {
     fn totals(&self, rates: &Rates, days: f64) -> Option<(f64, f64)> {
         let course = Course::new(&self.now.counts, rates.drive(&self.mix()?.forces)?, days).ok()?;
         Some((course.nodes(days), course.link_ends(days)))
+    }
+
+    /// The same with those candidates only that `wanted` has; the plain mix stays, for chance is told by it.
+    pub fn keep(&mut self, wanted: impl Fn(Model) -> bool) {
+        self.fitted.retain(|mechanism| mechanism.model == Model::Mix || wanted(mechanism.model));
     }
 
     /// What every candidate makes of `targets`.
@@ -226,6 +235,9 @@ impl<'a> Scene<'a> {
                     Some(rates) => rates.drive(&mechanism.forces),
                     None => leading_to(&mechanism.forces, now, days, target.totals),
                 };
+                if only_mix {
+                    return self.sides(forces, days, thresholds);
+                }
                 self.law_sizes(now, forces, days, thresholds)
             });
             let laws = laws.collect::<Result<_, _>>()?;
@@ -241,6 +253,34 @@ impl<'a> Scene<'a> {
             hindsight,
             outlooks,
         })
+    }
+
+    /// The tails by rates at one standard deviation, between every so many thresholds log-linear: they only measure an uncertainty.
+    fn sides(
+        &self,
+        forces: Option<GrowthParameters>,
+        days: f64,
+        thresholds: &[u64],
+    ) -> Result<Option<LawSizes>, OriginError> {
+        let step = thresholds.len().div_ceil(MOST_SIDE_THRESHOLDS).max(1);
+        let last = thresholds.len().saturating_sub(1);
+        let mut places: Vec<usize> = (0..thresholds.len()).step_by(step).collect();
+        places.extend((places.last() != Some(&last)).then_some(last));
+        let coarse: Vec<u64> = places.iter().filter_map(|&i| thresholds.get(i).copied()).collect();
+        let Some(sizes) = self.law_sizes(self.now, forces, days, &coarse)? else { return Ok(None) };
+        let logs: Vec<f64> = sizes.mean.iter().map(|mean| mean.max(HALF_A_NODE).ln()).collect();
+        let mean = thresholds.iter().enumerate().map(|(i, _)| {
+            let (j, within) = (i / step, (i % step) as f64);
+            let at = |j: usize| (places.get(j).copied(), logs.get(j).copied());
+            match (at(j), at(j + 1)) {
+                ((Some(from), Some(low)), (Some(to), Some(high))) => {
+                    (low + (high - low) * within / (to - from) as f64).exp()
+                }
+                ((_, Some(only)), _) => only.exp(),
+                _ => 0.0,
+            }
+        });
+        Ok(Some(LawSizes { mean: mean.collect(), ..LawSizes::default() }))
     }
 
     /// The tails `days` after `from`; none where they cannot be computed.

@@ -10,6 +10,7 @@ mod forecast;
 mod hostile;
 mod law;
 mod networks;
+mod pool;
 mod quantiles;
 mod reference;
 mod scores;
@@ -17,3 +18,6 @@ mod simulation;
 mod stationary;
 mod tails;
 mod transitions;
+
+#[path = "../../studies/worlds/mod.rs"]
+mod worlds;
