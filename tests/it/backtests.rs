@@ -173,7 +173,7 @@ async fn a_backtest_scores_every_origin_and_is_kept() {
 
 #[tokio::test]
 async fn what_cannot_be_tested_is_refused_with_what_would_help() {
-    let service = Service::start().await;
+    let service = Service::start_with(|config| config.jobs.wait_seconds = 100).await;
     ask(&service, &json!({}), &[]).await.expect_problem(404, "not_found");
     service.put(NETWORK, &json!({"degree_kind": "received"})).await.expect(201);
     let thresholds = json!({"thresholds": [3]});
@@ -187,7 +187,7 @@ async fn what_cannot_be_tested_is_refused_with_what_would_help() {
         put_counts(&service, DATES[i], counts).await;
     }
     for (body, place) in [
-        (json!({}), "/thresholds"),
+        (json!({}), ""),
         (json!({"thresholds": [0]}), "/thresholds/0"),
         (json!({"thresholds": [3], "ahead": 0}), "/ahead"),
         (json!({"thresholds": [3], "ahead": 13}), "/ahead"),
@@ -273,8 +273,8 @@ async fn a_change_while_it_is_at_work_makes_a_backtest_begin_anew() {
     // As a correction by another process would leave it.
     sqlx::query("DELETE FROM snapshots WHERE as_of LIKE '2026-12-01%'").execute(&mut connection).await.unwrap();
     connection.close().await.unwrap();
+    let other = monthly(12).remove(11);
     let service = service_in(folder.path()).await;
-    let other = monthly(12).remove(10);
     put_counts(&service, "2026-11-16", &other).await;
     assert_eq!(ended(&service, &location).await["state"], "succeeded");
     let id = location.rsplit('/').next().unwrap();
