@@ -3,6 +3,7 @@
 //! A handler takes apart a request, makes one service call and puts together a response; everything that can go wrong
 //! is an [`ApiError`], which the outermost layer answers as a problem document.
 
+mod backtests;
 mod decode;
 mod docs;
 mod error;
@@ -41,8 +42,8 @@ pub use examples::forecast_request as example_request;
 pub use extract::read_json;
 pub use problem::Problem;
 pub use requests::{
-    ArrivalsBody, DegreeKindName, EVIDENCE_FIELDS, FIT_FIELDS, FORECAST_FIELDS, FitRequestBody, FixedBody,
-    ForecastRequestBody, HorizonBody, LinkEventsBody, ModelName, NETWORK_FIELDS, SegmentBody, SnapshotBody,
+    ArrivalsBody, BacktestBody, DegreeKindName, EVIDENCE_FIELDS, FIT_FIELDS, FORECAST_FIELDS, FitRequestBody,
+    FixedBody, ForecastRequestBody, HorizonBody, LinkEventsBody, ModelName, NETWORK_FIELDS, SegmentBody, SnapshotBody,
     TransitionsBody, WindowBody, read_fit, read_forecast,
 };
 
@@ -94,6 +95,7 @@ fn work_routes() -> OpenApiRouter<AppState> {
         .merge(forecasts::routes())
         .merge(fits::routes())
         .merge(networks::routes())
+        .merge(backtests::routes())
         .merge(jobs::routes())
 }
 

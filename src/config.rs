@@ -156,7 +156,7 @@ pub struct LimitsConfig {
     pub link_events: usize,
     /// Rows of all the evidence stored of one network.
     pub network_rows: usize,
-    /// Thresholds times dates in one forecast.
+    /// Thresholds times dates in one forecast; times origins in one backtest.
     pub cells: usize,
 }
 

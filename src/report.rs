@@ -1,12 +1,14 @@
 //! Answers as tables and pages.
 
 mod accuracy;
+mod backtest;
 mod csv;
 mod rows;
 mod table;
 mod text;
 
 pub use accuracy::accuracy_csv;
+pub use backtest::backtest_csv;
 pub use csv::{fit_csv, forecast_csv};
 pub use rows::{degree_counts_csv, transitions_csv};
 pub use table::{align, forecast_table, mix_in_words};

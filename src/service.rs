@@ -3,6 +3,7 @@
 mod accounts;
 mod accuracy;
 mod answers;
+mod backtests;
 mod compute;
 mod cpu;
 mod error;
@@ -31,9 +32,9 @@ pub use crate::evaluate::OriginRequest;
 pub use crate::fit::{FitRequest, Fixed, Model, ModelChoice, Rung};
 pub use crate::ingest::FaultPolicy;
 pub use crate::store::{
-    Clash, JobFilter, JobKind, JobState, KeyClaim, LatestForecast, NetworkSummary, NewNetwork, RefreshState,
-    RefreshStatus, RunFilter, RunKind, RunSummary, SnapshotSummary, StoredJob, StoredLinkEvents, StoredNetwork,
-    StoredRun, StoredSnapshot, StoredTransitions, TransitionsSummary, Upload,
+    BacktestSummary, Clash, JobFilter, JobKind, JobState, KeyClaim, LatestForecast, NetworkSummary, NewNetwork,
+    RefreshState, RefreshStatus, RunFilter, RunKind, RunSummary, SnapshotSummary, StoredBacktest, StoredJob,
+    StoredLinkEvents, StoredNetwork, StoredRun, StoredSnapshot, StoredTransitions, TransitionsSummary, Upload,
 };
 pub use accounts::{DateOutcome, IntervalOutcome, OutcomeAnswer, TailOutcome};
 pub use accuracy::{
@@ -46,14 +47,18 @@ pub use answers::{
     IntervalAnswer, LimitAnswer, OutlierClassAnswer, PeriodRatesAnswer, PoolAnswer, PoolMemberAnswer, TailAnswer,
     TailPointAnswer, TransitionsAnswer, WarningAnswer,
 };
+pub use backtests::{
+    BacktestRequest, BacktestRun, CoverageRow, DEFAULT_AHEAD, ErrorsAnswer, MOST_AHEAD, MemberErrors, PooledErrors,
+    ScoreAnswer,
+};
 pub use compute::{Question, answer_at_once};
 pub use cpu::CpuPool;
 pub use error::{ServiceError, Thing};
 pub use evidence::{NetworkEvidence, RunOrigin, Written};
 pub use inputs::{DEFAULT_SEED, FitInputs, ForecastInputs, Label, MAX_SEED, TextFault, sha256_hex};
 pub use jobs::{
-    JobFailure, JobFault, JobOutcome, JobProblem, JobView, LinkListResult, LinkListTask, PassedOver, RefreshResult,
-    SkippedLines,
+    BacktestResult, JobFailure, JobFault, JobOutcome, JobProblem, JobView, LinkListResult, LinkListTask, PassedOver,
+    RefreshResult, SkippedLines,
 };
 pub use network::{Description, NameFault, NetworkName, NetworkSettings, kind_name};
 pub use numbers::{Count, Real, date_text};

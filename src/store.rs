@@ -5,6 +5,7 @@
 //! and through a power cut. A write into a file that no longer stands at its path is never acknowledged.
 
 mod accounts;
+mod backtests;
 mod columns;
 mod connect;
 mod derived;
@@ -26,6 +27,7 @@ use file::DatabaseFile;
 use sqlx::SqlitePool;
 
 pub use accounts::{AccountKey, IssuedRun, NewAccount, StoredAccount};
+pub use backtests::{BacktestSummary, BacktestWrite, NewBacktest, StoredBacktest};
 pub use derived::DerivedEvidence;
 pub use jobs::{CalledOff, JobFilter, JobKind, JobState, StoredJob};
 pub use latest::LatestForecast;

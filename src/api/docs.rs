@@ -39,6 +39,7 @@ const PAGE_POLICY: &str = "default-src 'self'; style-src 'self' 'unsafe-inline';
         (name = "forecasts", description = "Hubs at future dates"),
         (name = "fits", description = "The attachment mix alone"),
         (name = "networks", description = "Tracked networks, and runs from what is stored of them"),
+        (name = "backtests", description = "What would have been forecast at past snapshots, against what came"),
         (name = "jobs", description = "Work that outlasts its request"),
         (name = "operation", description = "Health, readiness, metrics, this document"),
     )

@@ -244,6 +244,7 @@ fn missing(thing: Thing) -> &'static str {
             "The network has no transitions between these dates; its list of transitions has the dates."
         }
         Thing::Job => "There is no such job: it was never taken on, or its record was deleted.",
+        Thing::Backtest => "There is no such backtest: it was never made, or was deleted.",
         Thing::LinkEvents => "The network has no link events; PUT them, or a link list to derive them from.",
     }
 }

@@ -8,7 +8,7 @@ mod listing;
 mod patience;
 mod place;
 
-pub use body::{JsonBody, RowsBody, read_json};
+pub use body::{JsonBody, OptionalJsonBody, RowsBody, read_json};
 pub use format::{ResultFormat, prefers_events};
 pub use key::IdempotencyKey;
 pub use link_list::LinkListBody;

@@ -21,8 +21,8 @@ use super::refusals::{FormRefusals, Refusals};
 use super::representation::{self, Validator, header_value};
 use super::{ApiError, AppState};
 use crate::service::{
-    JobFilter, JobKind, JobOutcome, JobProblem, JobState, JobView, LinkListResult, RefreshResult, ServiceError, Thing,
-    sha256_hex,
+    BacktestResult, JobFilter, JobKind, JobOutcome, JobProblem, JobState, JobView, LinkListResult, RefreshResult,
+    ServiceError, Thing, sha256_hex,
 };
 
 /// Where jobs are.
@@ -70,6 +70,8 @@ enum JobKindName {
     LinkList,
     /// Makes a network's latest forecast anew, and accounts for earlier ones.
     Refresh,
+    /// Forecasts from past snapshots and scores that by what came.
+    Backtest,
 }
 
 /// What was done, by the kind of the job.
@@ -80,6 +82,8 @@ enum JobResult {
     LinkList(LinkListResult),
     /// A network was refreshed.
     Refresh(RefreshResult),
+    /// A backtest was made.
+    Backtest(BacktestResult),
 }
 
 /// How a job stands.
@@ -110,6 +114,7 @@ impl From<JobView> for JobAnswer {
         let (result, problem) = match view.outcome {
             Some(JobOutcome::Result(result)) => (Some(JobResult::LinkList(result)), None),
             Some(JobOutcome::Refresh(result)) => (Some(JobResult::Refresh(result)), None),
+            Some(JobOutcome::Backtest(result)) => (Some(JobResult::Backtest(result)), None),
             Some(JobOutcome::Problem(problem)) => (None, Some(problem)),
             None => (None, None),
         };
@@ -118,6 +123,7 @@ impl From<JobView> for JobAnswer {
             kind: match view.job.kind {
                 JobKind::LinkList => JobKindName::LinkList,
                 JobKind::Refresh => JobKindName::Refresh,
+                JobKind::Backtest => JobKindName::Backtest,
             },
             network: view.job.network,
             state: match view.job.state {

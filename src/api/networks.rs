@@ -2,6 +2,7 @@
 
 mod accuracy;
 mod answers;
+mod backtests;
 mod latest;
 mod link_events;
 mod links;
@@ -40,6 +41,7 @@ pub fn routes() -> OpenApiRouter<AppState> {
         .merge(latest::routes())
         .merge(accuracy::routes())
         .merge(runs::routes())
+        .merge(backtests::routes())
 }
 
 /// Track a network

@@ -1,5 +1,6 @@
 //! Reading request bodies into validated inputs.
 
+mod backtest;
 mod evidence;
 mod network;
 mod network_schema;
@@ -8,6 +9,7 @@ mod schema;
 
 use serde_json::value::RawValue;
 
+pub use backtest::{BacktestBody, read_backtest};
 pub use network::{
     EVIDENCE_FIELDS, NETWORK_FIELDS, read_link_events, read_network, read_network_fit, read_network_forecast,
     read_snapshot, read_snapshot_csv, read_transitions, read_transitions_csv,

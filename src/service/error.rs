@@ -82,6 +82,8 @@ pub enum Thing {
     LinkEvents,
     /// A job.
     Job,
+    /// A backtest.
+    Backtest,
 }
 
 impl From<StoreError> for ServiceError {

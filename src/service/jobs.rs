@@ -1,5 +1,6 @@
 //! Jobs: work that outlasts its request and, taken up again, the process.
 
+mod backtest;
 mod board;
 mod counting;
 mod link_list;
@@ -21,7 +22,8 @@ pub use board::Board;
 use board::Turn;
 pub use link_list::LinkListTask;
 pub use outcome::{
-    JobFailure, JobFault, JobOutcome, JobProblem, LinkListResult, PassedOver, RefreshResult, SkippedLines,
+    BacktestResult, JobFailure, JobFault, JobOutcome, JobProblem, LinkListResult, PassedOver, RefreshResult,
+    SkippedLines,
 };
 
 /// How often a job is begun before it is given up: one that stops the process each time must not do so for ever.
@@ -143,6 +145,7 @@ impl Service {
         match job.kind {
             JobKind::LinkList => self.count_link_list(&job, turn).await,
             JobKind::Refresh => self.refresh(&job, turn).await,
+            JobKind::Backtest => self.backtest(&job, turn).await,
         }
     }
 

@@ -6,7 +6,7 @@ use uuid::Uuid;
 
 use super::columns::{corrupt, time, unsigned, uuid};
 use super::writes::{Clash, WriteError, network_exists};
-use super::{RefreshState, Store, StoreError, refreshes};
+use super::{RefreshState, Store, StoreError, backtests, refreshes};
 
 /// Why a network has no newer forecast when its refresh was called off.
 const CALLED_OFF: &str =
@@ -54,16 +54,19 @@ pub enum JobKind {
     LinkList,
     /// Makes a network's latest forecast anew, and accounts for earlier ones.
     Refresh,
+    /// Forecasts from past snapshots and scores that by what came.
+    Backtest,
 }
 
 impl JobKind {
-    const ALL: [Self; 2] = [Self::LinkList, Self::Refresh];
+    const ALL: [Self; 3] = [Self::LinkList, Self::Refresh, Self::Backtest];
 
     /// Its name.
     pub fn as_str(self) -> &'static str {
         match self {
             Self::LinkList => "link_list",
             Self::Refresh => "refresh",
+            Self::Backtest => "backtest",
         }
     }
 
@@ -276,7 +279,7 @@ impl Store {
     }
 }
 
-/// Ends a live job; false when it has ended.
+/// Ends a live job, and drops what it had so far; false when it has ended.
 pub(super) async fn end(
     connection: &mut SqliteConnection,
     id: Uuid,
@@ -290,8 +293,9 @@ pub(super) async fn end(
     .bind(state.as_str())
     .bind(outcome)
     .bind(Timestamp::now().as_microsecond())
-    .execute(connection)
+    .execute(&mut *connection)
     .await?;
+    backtests::drop_records(connection, id).await?;
     Ok(done.rows_affected() > 0)
 }
 
@@ -330,7 +334,11 @@ pub(super) async fn call_off_of(connection: &mut SqliteConnection, network: &str
     Ok(jobs)
 }
 
-async fn live_job(connection: &mut SqliteConnection, network: &str, kind: JobKind) -> Result<Option<Uuid>, StoreError> {
+pub(super) async fn live_job(
+    connection: &mut SqliteConnection,
+    network: &str,
+    kind: JobKind,
+) -> Result<Option<Uuid>, StoreError> {
     let id: Option<String> =
         sqlx::query_scalar("SELECT id FROM jobs WHERE network = $1 AND kind = $2 AND state IN ('waiting', 'running')")
             .bind(network)

@@ -9,7 +9,7 @@ use super::columns::{corrupt, signed, unsigned, uuid};
 use super::jobs::{JobKind, JobState, end, insert};
 use super::latest;
 use super::runs::{NewRun, insert_run};
-use super::{Store, StoreError};
+use super::{Store, StoreError, backtests};
 
 /// Ended refreshes whose records are kept of one network: a network that is fed for years does not fill the list of jobs.
 const KEPT_REFRESHES: i64 = 100;
@@ -88,8 +88,8 @@ pub struct RefreshEnd<'a> {
 /// What came of ending a refresh.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
 pub enum RefreshEnded {
-    /// All of it is stored.
-    Stored,
+    /// All of it is stored; with the backtest that was taken on anew.
+    Stored(Option<Uuid>),
     /// The job was called off before.
     CalledOff,
     /// What is stored of the network changed meanwhile; another refresh waits.
@@ -99,7 +99,8 @@ pub enum RefreshEnded {
 }
 
 impl Store {
-    /// Stores what a refresh came to and ends its job, in one transaction; nothing at all but for [`RefreshEnded::Stored`].
+    /// Stores what a refresh came to and ends its job, in one transaction; nothing at all but for [`RefreshEnded::Stored`]. A backtest
+    /// whose counts were replaced is taken on anew.
     ///
     /// # Errors
     /// When the database fails.
@@ -144,13 +145,15 @@ impl Store {
             }
             None => note(&mut transaction, ended.network, RefreshState::Outdated, ended.job, ended.reason).await?,
         }
+        let redo = backtests::redo(&mut transaction, ended.network).await?;
         prune(&mut transaction, ended.network).await?;
         self.commit(transaction).await?;
-        Ok(RefreshEnded::Stored)
+        Ok(RefreshEnded::Stored(redo))
     }
 
-    /// Ends a refresh that has nothing to store; false when it was called off before. `stands` is how the latest forecast
-    /// stands then, and why; it is noted where no newer refresh has a say.
+    /// Ends a refresh that has nothing to store, unless it was called off before. `stands` is how the latest forecast stands
+    /// then, and why; it is noted where no newer refresh has a say, and a backtest whose counts were replaced is taken on anew
+    /// and returned.
     ///
     /// # Errors
     /// When the database fails.
@@ -160,17 +163,19 @@ impl Store {
         network: &str,
         (state, outcome): (JobState, &str),
         stands: Option<(RefreshState, Option<&str>)>,
-    ) -> Result<bool, StoreError> {
+    ) -> Result<Option<Uuid>, StoreError> {
         let mut transaction = self.begin().await?;
         if !end(&mut transaction, job, state, Some(outcome)).await? {
-            return Ok(false);
+            return Ok(None);
         }
+        let mut redo = None;
         if let Some((state, reason)) = stands {
             note_of(&mut transaction, network, job, (state, reason)).await?;
+            redo = backtests::redo(&mut transaction, network).await?;
         }
         prune(&mut transaction, network).await?;
         self.commit(transaction).await?;
-        Ok(true)
+        Ok(redo)
     }
 }
 
@@ -216,7 +221,7 @@ pub(super) async fn enqueue(connection: &mut SqliteConnection, network: &str) ->
     Ok(Some(job))
 }
 
-/// Marks the runs of a network that stand on counts of `revision`, which are replaced now.
+/// Marks the runs and backtests of a network that stand on counts of `revision`, which are replaced now.
 pub(super) async fn corrected(
     connection: &mut SqliteConnection,
     network: &str,
@@ -226,9 +231,9 @@ pub(super) async fn corrected(
         .bind(network)
         .bind(signed("revision", revision)?)
         .bind(Timestamp::now().as_microsecond())
-        .execute(connection)
+        .execute(&mut *connection)
         .await?;
-    Ok(())
+    backtests::corrected(connection, network, revision).await
 }
 
 /// Notes how the latest forecast stands and why, where `job` is the newest refresh.

@@ -7,7 +7,7 @@ use serde_json::json;
 use crate::harness::{DOCUMENT, Service, answered, csv, fit_body, forecast_body, json_text};
 
 /// Every operation with the status its plain use is answered with, in an order in which all of them work.
-const CALLS: [(&str, &str, u16); 35] = [
+const CALLS: [(&str, &str, u16); 39] = [
     ("get", "/livez", 200),
     ("get", "/readyz", 200),
     ("get", "/metrics", 200),
@@ -38,6 +38,10 @@ const CALLS: [(&str, &str, u16); 35] = [
     ("post", "/v1/networks/{name}/forecasts", 201),
     ("post", "/v1/networks/{name}/fits", 201),
     ("get", "/v1/networks/{name}/accuracy", 200),
+    ("post", "/v1/networks/{name}/backtests", 201),
+    ("get", "/v1/networks/{name}/backtests", 200),
+    ("get", "/v1/backtests/{id}", 200),
+    ("delete", "/v1/backtests/{id}", 204),
     // The network has no plan.
     ("get", "/v1/networks/{name}/forecasts/latest", 404),
     ("delete", "/v1/networks/{name}/link-events", 204),
@@ -60,6 +64,7 @@ fn body(method: &str, path: &str) -> Option<(&'static str, String)> {
         ("fits", false) => fit_body(),
         ("forecasts", true) => json!({"arrivals": {"per_day": 1}, "thresholds": [3], "dates": ["2027-01-01"]}),
         ("fits", true) => json!({"fixed": {"preferential_share": 0.5}}),
+        ("backtests", _) => json!({"thresholds": [1]}),
         ("networks", _) => json!({"degree_kind": "received"}),
         ("snapshots", _) => json!({"degree_counts": [[0, 48], [1, 30], [2, 17], [5, 5]]}),
         ("transitions", _) => {

@@ -45,7 +45,7 @@ pub fn grown(days: &[f64], forces: impl Fn(f64) -> (f64, f64)) -> Vec<DegreeCoun
     grown
 }
 
-async fn put_counts(service: &Service, as_of: &str, counts: &DegreeCounts) -> Answer {
+pub async fn put_counts(service: &Service, as_of: &str, counts: &DegreeCounts) -> Answer {
     let put = service.put(&format!("{NETWORK}/snapshots/{as_of}"), &json!({"degree_counts": pairs(counts)})).await;
     assert!([200, 201].contains(&put.status), "{}", put.text);
     put

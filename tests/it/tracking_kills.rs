@@ -1,4 +1,4 @@
-//! A network keeps itself up to date through kills at any moment: each change is followed by one forecast, and none is lost.
+//! A network keeps itself up to date, and its backtests end, through kills at any moment: each change is followed by one forecast, and none is lost.
 
 use std::collections::BTreeSet;
 use std::time::{Duration, Instant};
@@ -84,4 +84,74 @@ async fn no_kill_loses_a_snapshot_or_a_refresh_or_does_one_twice() {
     .await
     .unwrap();
     assert_eq!(twice, 0, "no revision has two forecasts");
+}
+
+/// However often the process is killed, each backtest ends exactly once, and no record that is kept is lost.
+#[tokio::test(flavor = "multi_thread")]
+async fn no_kill_loses_a_backtest_or_makes_one_twice() {
+    let folder = tempfile::tempdir().unwrap();
+    let client = Client::builder().no_proxy().build().unwrap();
+    let days: Vec<f64> = (0..10).map(|month| 60.0 + 30.0 * f64::from(month)).collect();
+    let served = serve(folder.path());
+    let network = format!("http://{}/v1/networks/heronsgate", served.address);
+    client.put(&network).json(&json!({"degree_kind": "received"})).send().await.unwrap().error_for_status().unwrap();
+    for (month, counts) in grown(&days, |_| (20.0, 3.0)).iter().enumerate() {
+        let body = json!({"degree_counts": pairs(counts)});
+        let put = client.put(format!("{network}/snapshots/2026-{:02}-01", month + 1)).json(&body);
+        put.send().await.unwrap().error_for_status().unwrap();
+    }
+    served.kill();
+    let url = format!("sqlite://{}", folder.path().join("tailcast.db").display());
+    let origins = async || -> Vec<i64> {
+        let mut database = SqliteConnection::connect(&url).await.unwrap();
+        let query = sqlx::query_scalar("SELECT origin FROM backtest_records ORDER BY origin");
+        query.fetch_all(&mut database).await.unwrap()
+    };
+    let (mut taken, mut kept) = (BTreeSet::new(), Vec::new());
+    for round in 0..ROUNDS {
+        let served = serve(folder.path());
+        let asked = client
+            .post(format!("http://{}/v1/networks/heronsgate/backtests", served.address))
+            .header("prefer", "respond-async")
+            .json(&json!({"thresholds": [3, 10]}));
+        let asked = asked.send().await.unwrap();
+        // 409 while the one before goes on.
+        match asked.status().as_u16() {
+            202 => {
+                kept.clear();
+                taken.insert(asked.json::<Value>().await.unwrap()["id"].as_str().unwrap().to_owned());
+            }
+            status => assert_eq!(status, 409),
+        }
+        tokio::time::sleep(Duration::from_millis((97 * round as u64 * round as u64) % 900)).await;
+        served.kill();
+        let now = origins().await;
+        assert!(now.is_empty() || now.starts_with(&kept), "{kept:?} {now:?}");
+        kept = now;
+    }
+    let served = serve(folder.path());
+    let read = async |path: &str| -> Value {
+        client.get(format!("http://{}{path}", served.address)).send().await.unwrap().json().await.unwrap()
+    };
+    let begun = Instant::now();
+    let jobs = loop {
+        let jobs = read("/v1/jobs?network=heronsgate&limit=200").await["items"].as_array().unwrap().clone();
+        if jobs.iter().all(|job| !["waiting", "running"].contains(&job["state"].as_str().unwrap())) {
+            break jobs;
+        }
+        assert!(begun.elapsed() < Duration::from_secs(180), "{jobs:?}");
+        tokio::time::sleep(Duration::from_millis(50)).await;
+    };
+    let ids =
+        |lines: &[Value]| -> Vec<String> { lines.iter().map(|line| line["id"].as_str().unwrap().to_owned()).collect() };
+    let mut ended = ids(&jobs);
+    ended.reverse();
+    assert_eq!(ended, taken.into_iter().collect::<Vec<_>>());
+    // Begun again four times without a step forward, a job is given up; all others are backtests.
+    let given_up = |job: &Value| job["problem"]["code"] == "interrupted";
+    assert!(jobs.iter().all(|job| job["state"] == "succeeded" || given_up(job)), "{jobs:?}");
+    let made: Vec<Value> = jobs.iter().filter(|job| !given_up(job)).cloned().collect();
+    let list = read("/v1/networks/heronsgate/backtests?limit=200").await;
+    assert_eq!(ids(list["items"].as_array().unwrap()), ids(&made));
+    assert!(origins().await.is_empty());
 }

@@ -113,3 +113,48 @@ async fn a_network_of_the_third_version_keeps_its_evidence_and_jobs() {
     service.get("/v1/networks/heronsgate/forecasts/latest").await.expect(200);
     service.stop().await;
 }
+
+/// A network of the fourth version, which knew no backtests, can be tested from what it kept.
+#[tokio::test]
+async fn a_network_of_the_fourth_version_can_be_backtested() {
+    let folder = tempfile::tempdir().unwrap();
+    let migrations = ["0001_runs.sql", "0002_networks.sql", "0003_jobs.sql", "0004_tracking.sql"];
+    let (mut database, url) = database(folder.path(), &migrations).await;
+    let tag = tailcast::service::sha256_hex(b"settings");
+    sqlx::query(
+        "INSERT INTO networks (name, degree_kind, tag, created_at, updated_at, revision) \
+         VALUES ('heronsgate', 'received', $1, 5, 6, 3)",
+    )
+    .bind(tag)
+    .execute(&mut database)
+    .await
+    .unwrap();
+    let grown = crate::tracking::grown(&[60.0, 90.0, 120.0], |_| (20.0, 3.0));
+    for (month, counts) in grown.iter().enumerate() {
+        let text = pairs(counts).to_string();
+        sqlx::query(
+            "INSERT INTO snapshots (network, as_of, nodes, link_ends, largest_degree, row_count, tag, updated_at, degree_counts, \
+             revision) VALUES ('heronsgate', $1, $2, $3, 99, 50, $4, 7, $5, 2)",
+        )
+        .bind(format!("2026-{:02}-01T00:00:00.000000000Z", month + 1))
+        .bind(counts.nodes().to_string())
+        .bind(counts.link_ends().to_string())
+        .bind(tailcast::service::sha256_hex(text.as_bytes()))
+        .bind(text)
+        .execute(&mut database)
+        .await
+        .unwrap();
+    }
+    database.close().await.unwrap();
+
+    let service = Service::start_with(|config| {
+        config.database.url = url.clone();
+        config.jobs.wait_seconds = 100;
+    })
+    .await;
+    let path = "/v1/networks/heronsgate/backtests";
+    assert_eq!(service.get(path).await.expect(200).json()["items"], json!([]));
+    let made = service.post(path, &json!({"thresholds": [3]})).await.expect(201).json();
+    assert_eq!(made["origins"], json!(["2026-02-01"]));
+    service.stop().await;
+}

@@ -47,6 +47,24 @@ impl FromRequest<AppState> for JsonBody {
     }
 }
 
+/// A JSON body that may be left out, which is an object without fields.
+#[derive(Debug, Clone)]
+pub struct OptionalJsonBody(pub JsonBody);
+
+impl FromRequest<AppState> for OptionalJsonBody {
+    type Rejection = ApiError;
+
+    async fn from_request(request: Request, state: &AppState) -> Result<Self, ApiError> {
+        let json = is_json(request.headers());
+        let bytes = complete(request, state).await?;
+        match bytes.is_empty() {
+            true => Ok(Self(JsonBody(Bytes::from_static(b"{}")))),
+            false if json => Ok(Self(JsonBody(bytes))),
+            false => Err(ApiError::UnsupportedMediaType { taken: "JSON (application/json)" }),
+        }
+    }
+}
+
 /// A body of rows, announced as JSON or as CSV.
 #[derive(Debug, Clone)]
 pub enum RowsBody {

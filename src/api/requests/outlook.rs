@@ -190,7 +190,7 @@ fn note(fault: &PlanFault, at: At<'_>, stepped: bool, faults: &mut Faults) {
     }
 }
 
-fn thresholds_of(raw: &RawValue, above: At<'_>, faults: &mut Faults) -> Option<Thresholds> {
+pub(super) fn thresholds_of(raw: &RawValue, above: At<'_>, faults: &mut Faults) -> Option<Thresholds> {
     let at = above.field("thresholds");
     let mut values = Vec::new();
     let mut complete = true;
@@ -205,7 +205,7 @@ fn thresholds_of(raw: &RawValue, above: At<'_>, faults: &mut Faults) -> Option<T
     found.ok().filter(|_| complete)
 }
 
-fn levels_of(raw: &RawValue, above: At<'_>, faults: &mut Faults) -> Option<Levels> {
+pub(super) fn levels_of(raw: &RawValue, above: At<'_>, faults: &mut Faults) -> Option<Levels> {
     let at = above.field("levels");
     let mut values = Vec::new();
     let mut complete = true;

@@ -129,7 +129,7 @@ impl Turn {
     pub async fn come(&self, kind: JobKind) -> Option<OwnedSemaphorePermit> {
         let workers = match kind {
             JobKind::Refresh => &self.board.refreshers,
-            JobKind::LinkList => &self.board.workers,
+            JobKind::LinkList | JobKind::Backtest => &self.board.workers,
         };
         tokio::select! {
             worker = workers.clone().acquire_owned() => worker.ok(),

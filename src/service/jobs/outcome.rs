@@ -16,6 +16,8 @@ pub enum JobOutcome {
     Result(LinkListResult),
     /// A network's forecast was made anew, or there was none to make.
     Refresh(RefreshResult),
+    /// A backtest was made.
+    Backtest(BacktestResult),
     /// Why it was not.
     Problem(JobProblem),
 }
@@ -54,6 +56,15 @@ pub struct RefreshResult {
     pub accounts: u64,
     /// Why there was no forecast to make; null when there was one.
     pub reason: Option<String>,
+}
+
+/// What a backtest came to.
+#[derive(Debug, Clone, PartialEq, Eq, Serialize, Deserialize, ToSchema)]
+pub struct BacktestResult {
+    /// The backtest, under `/v1/backtests`.
+    pub backtest: Uuid,
+    /// Snapshots that were forecast from.
+    pub origins: u64,
 }
 
 /// Lines that were passed over, by what is wrong with them.

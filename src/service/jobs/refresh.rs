@@ -176,7 +176,11 @@ impl Service {
             end: (state, &outcome),
         };
         match persistently(|| self.store.finish_refresh(&end)).await? {
-            RefreshEnded::Stored | RefreshEnded::CalledOff => Ok(()),
+            RefreshEnded::Stored(redo) => {
+                self.start_backtest(redo);
+                Ok(())
+            }
+            RefreshEnded::CalledOff => Ok(()),
             RefreshEnded::Superseded => self.end_without(job, revision, SUPERSEDED, None).await,
             RefreshEnded::Done => self.end_without(job, revision, DONE, Some((RefreshState::Current, None))).await,
         }
@@ -193,7 +197,8 @@ impl Service {
         let outcome = RefreshResult { revision, forecast: None, accounts: 0, reason: Some(reason.to_owned()) };
         let outcome = JobOutcome::Refresh(outcome).to_json()?;
         let end = (JobState::Succeeded, outcome.as_str());
-        persistently(|| self.store.end_refresh(job.id, &job.network, end, stands)).await?;
+        let redo = persistently(|| self.store.end_refresh(job.id, &job.network, end, stands)).await?;
+        self.start_backtest(redo);
         Ok(())
     }
 
@@ -202,10 +207,9 @@ impl Service {
         let reason = problem.detail.clone();
         let outcome = JobOutcome::Problem(problem).to_json()?;
         let end = (JobState::Failed, outcome.as_str());
-        persistently(|| {
-            self.store.end_refresh(job.id, &job.network, end, Some((RefreshState::Outdated, Some(reason.as_str()))))
-        })
-        .await?;
+        let stands = Some((RefreshState::Outdated, Some(reason.as_str())));
+        let redo = persistently(|| self.store.end_refresh(job.id, &job.network, end, stands)).await?;
+        self.start_backtest(redo);
         Ok(())
     }
 }
