@@ -6,9 +6,9 @@ use super::transitions::fit_transitions;
 use super::{FitError, FitRequest, Fixed, Force, Forces, Model};
 use crate::model::{Evidence, GrowthParameters};
 
-/// Share of dormant nodes where nothing tells it: half of them.
+/// Share of dormant nodes: half of them.
 const ASSUMED_DORMANT_SHARE: f64 = 0.5;
-/// Variance of growth factors where nothing tells it: as wide as their mean.
+/// Variance of growth factors: as wide as their mean.
 const ASSUMED_GROWTH_VARIANCE: f64 = 1.0;
 
 /// A candidate with its likeliest forces.
@@ -18,14 +18,11 @@ pub struct Mechanism {
     pub model: Model,
     /// Its forces, with the arrivals and links per arrival of the newest period.
     pub forces: GrowthParameters,
-    /// Whether its own parameter was assumed, for want of evidence that tells it.
-    pub assumed: bool,
 }
 
-/// The candidates' likeliest forces by the crossing flows of the snapshots in `evidence`; departures, losses, entry degrees
-/// and the candidates' own parameters from transitions, where there are some, or as given. A dormant share that nothing tells is
-/// taken as one half and a growth variance as one, said in [`Mechanism::assumed`]; a kernel exponent that nothing tells leaves
-/// its candidate out.
+/// The candidates' likeliest forces by the crossing flows of the snapshots in `evidence`; departures, losses and entry degrees from
+/// transitions, where there are some, or as given. The dormant share is taken as one half and the variance of growth factors as one:
+/// as members of a pool they are to differ from the mix, not to be exact. The power kernel is left out, for want of its exponent.
 ///
 /// # Errors
 /// [`FitError::NotIdentified`] when no period shows growth; cancellation.
@@ -34,10 +31,10 @@ pub fn mechanisms(
     request: &FitRequest,
     cancelled: &dyn Fn() -> bool,
 ) -> Result<Vec<Mechanism>, FitError> {
-    let own = [Model::Mix, Model::Power, Model::Dormancy, Model::GrowthVariance];
+    // The mix alone: every further candidate costs as much again, and a record has a dozen origins.
     let moves = match evidence.transitions() {
         [] => None,
-        _ => Some(fit_transitions(evidence, &own, Fixed::default(), cancelled)?),
+        _ => Some(fit_transitions(evidence, &[Model::Mix], Fixed::default(), cancelled)?),
     };
     let zero = Force::given(0.0);
     let given_or = |given: Option<f64>, found: Option<Force>| given.map(Force::given).or(found).unwrap_or(zero);
@@ -52,19 +49,14 @@ pub fn mechanisms(
         Some(entry) if evidence.entry().is_none() => entry,
         _ => entry_degrees(evidence, plain.has_losses())?.0,
     };
-    let read = |model| moves.as_ref()?.candidates.iter().find(|c| c.model == model)?.own;
     let mut found = Vec::new();
     for model in Model::ALL {
         let mut forces = plain;
-        let own = read(model);
         match model {
             Model::Uniform | Model::Preferential | Model::Mix => {}
-            Model::Power => match own {
-                Some(exponent) => forces.kernel_exponent = exponent,
-                None => continue,
-            },
-            Model::Dormancy => forces.dormant_share = own.unwrap_or(Force::given(ASSUMED_DORMANT_SHARE)),
-            Model::GrowthVariance => forces.growth_variance = own.unwrap_or(Force::given(ASSUMED_GROWTH_VARIANCE)),
+            Model::Power => continue,
+            Model::Dormancy => forces.dormant_share = Force::given(ASSUMED_DORMANT_SHARE),
+            Model::GrowthVariance => forces.growth_variance = Force::given(ASSUMED_GROWTH_VARIANCE),
         }
         let summary = moves.as_ref().map(|moves| &moves.summary);
         let (periods, _) = periods(evidence, &entry, &forces, request.links_per_node_day, summary)?;
@@ -74,8 +66,7 @@ pub fn mechanisms(
             _ => likeliest_share(&periods, cancelled)?,
         };
         if let Some(newest) = periods.last() {
-            let assumed = own.is_none() && matches!(model, Model::Dormancy | Model::GrowthVariance);
-            found.push(Mechanism { model, forces: newest.forces(share), assumed });
+            found.push(Mechanism { model, forces: newest.forces(share) });
         }
     }
     Ok(found)
