@@ -204,8 +204,10 @@ mod tests {
         });
         let evidence = Evidence::new(DegreeKind::Received, snapshots.collect(), None).unwrap();
         let plan = RecordPlan { thresholds: vec![3, 10], ahead: 2, expected: true, fit: FitRequest::default() };
-        let made = record(&evidence, 1, &plan, &|| false).unwrap();
-        assert!(made.outlooks.iter().any(|outlook| outlook.target.rates.is_some()));
+        let mut made = record(&evidence, 1, &plan, &|| false).unwrap();
+        let segment = |from_day, per_day| ArrivalSegment { from_day, per_day, growth_per_year: 0.1 };
+        let arrivals = ArrivalPlan::from_segments(&[segment(0.0, 20.5), segment(30.25, 1.0 / 3.0)]).unwrap();
+        made.outlooks[0].target.rates = Some(Rates { arrivals, links_per_arrival: 3.1, links_per_node_day: 1e-7 });
         assert_eq!(from_json(&to_json(&made).unwrap()).unwrap(), made);
     }
 }
