@@ -23,7 +23,7 @@ pub use backtest::{Case, Observed, Replay, replay};
 pub use drift::{DRIFT_TEST_LEVEL, DriftCause, DriftTest, FitRecord, IssuedAccount, drift_test};
 pub use member::{Member, Step, Totals, Trend};
 pub use origin::{OriginAnswer, OriginError, OriginRequest, answer, answer_by, is_pooled};
-pub use pool::{Pool, PoolShare, pool, pooled_size};
+pub use pool::{Pool, PoolShare, pooled_size};
 pub use pooled::{PoolUse, SCORED_AHEAD, past_records, scored_origins};
 pub use rates::{RateHistory, RateOutlook, RatePeriod};
 pub use record::{Growth, LawSizes, OriginRecord, Outlook, Rate, RecordPlan, Target, record};

@@ -3,7 +3,7 @@
 use jiff::Timestamp;
 
 use super::member::Member;
-use super::pool::{Pool, pool, pooled_size};
+use super::pool::{DateScore, Pool, date_scores, pool, pooled_size};
 use super::record::{Growth, OriginRecord, Outlook, Rate};
 use super::spread::{Miss, PooledTail, Spread, miss, spread};
 use crate::fit::Model;
@@ -32,11 +32,12 @@ pub struct Case {
     pub members: Vec<(Member, f64)>,
 }
 
-/// Every forecast that came due, origin by origin, and what their misses say of those to come.
+/// Every forecast that came due, origin by origin, and what it says of those to come.
 #[derive(Debug, Clone, PartialEq, Default)]
 pub struct Replay {
     /// The forecasts.
     pub cases: Vec<Case>,
+    scores: Vec<DateScore>,
     misses: Vec<Miss>,
     origins: usize,
 }
@@ -46,16 +47,19 @@ pub type Observed<'a> = dyn Fn(Timestamp, u64) -> Option<f64> + 'a;
 
 /// Goes through `records`, oldest first, one a period, as time did: each origin's members are weighed and its intervals made by
 /// what had come by then, and by nothing else.
+///
+/// Cost: linear in the cases, and in the scored dates of each origin.
 pub fn replay(records: &[OriginRecord], observed: &Observed) -> Replay {
     let mut replay = Replay::default();
-    for (origin, record) in records.iter().enumerate() {
+    for record in records {
+        let mut misses = Vec::new();
         for outlook in &record.outlooks {
             let target = &outlook.target;
             if !matches!(target.growth, Growth::Known | Growth::Expected) {
                 continue;
             }
-            let weights = pool(record, &records[..origin], observed, target.ahead);
-            let spread = spread(&replay.misses, origin, target.ahead);
+            let weights = replay.pool(record, target.ahead);
+            let spread = replay.spread(target.ahead, target.growth);
             let mut came_due = Vec::new();
             for (j, &threshold) in record.thresholds.iter().enumerate() {
                 let came = observed(target.date, threshold);
@@ -69,28 +73,28 @@ pub fn replay(records: &[OriginRecord], observed: &Observed) -> Replay {
                     threshold,
                     observed: came,
                     pooled: tail.size,
-                    law: law(record, &tail, &spread, of_growth(record, outlook, j)),
+                    law: law(record, &tail, &spread),
                     members: record.members(outlook, j),
                 });
             }
-            if target.growth == Growth::Known {
-                replay.misses.extend(miss(origin, target.ahead, &came_due, &spread));
-            }
+            misses.extend(miss(replay.origins, target, &came_due, &spread));
         }
-        replay.origins = origin + 1;
+        replay.misses.extend(misses);
+        replay.scores.extend(date_scores(replay.origins, record, observed));
+        replay.origins += 1;
     }
     replay
 }
 
 impl Replay {
-    /// The spread `ahead` periods from the newest origin, the one after all that were replayed.
-    pub fn spread(&self, ahead: f64) -> Spread {
-        spread(&self.misses, self.origins, ahead)
+    /// How members are weighed at `record`, the origin after all that were replayed, for dates `ahead` periods away.
+    pub fn pool(&self, record: &OriginRecord, ahead: f64) -> Pool {
+        pool(record, self.origins, &self.scores, ahead)
     }
 
-    /// Dates that came due.
-    pub fn scored(&self) -> usize {
-        self.misses.len()
+    /// The spread `ahead` periods from the origin after all that were replayed, by totals that are known or expected.
+    pub fn spread(&self, ahead: f64, growth: Growth) -> Spread {
+        spread(&self.misses, self.origins, ahead, growth == Growth::Known)
     }
 }
 
@@ -116,12 +120,12 @@ pub(super) fn pooled_tail(record: &OriginRecord, outlook: &Outlook, weights: &Po
             Some(share.weight * (own - size).powi(2))
         })
         .sum();
-    Some(PooledTail { size, kept, variance: chance + between })
+    Some(PooledTail { size, kept, variance: chance + between, of_growth: of_growth(record, outlook, j) })
 }
 
 /// Variance that the uncertainty of arrivals and landings adds: for each the square of half of what one standard deviation to
 /// either side makes of the tail at index `j`; 0 where they are known.
-pub(super) fn of_growth(record: &OriginRecord, outlook: &Outlook, j: usize) -> f64 {
+fn of_growth(record: &OriginRecord, outlook: &Outlook, j: usize) -> f64 {
     if outlook.target.growth == Growth::Known {
         return 0.0;
     }
@@ -138,9 +142,9 @@ pub(super) fn of_growth(record: &OriginRecord, outlook: &Outlook, j: usize) -> f
     variance(Rate::Arrivals) + variance(Rate::Links)
 }
 
-/// The law of the pooled forecast, with `more` variance than the record makes of it.
-pub(super) fn law(record: &OriginRecord, tail: &PooledTail, spread: &Spread, more: f64) -> CountLaw {
+/// The law of the pooled forecast.
+pub(super) fn law(record: &OriginRecord, tail: &PooledTail, spread: &Spread) -> CountLaw {
     let certain = if record.lossless { tail.kept } else { 0.0 };
-    let law = CountLaw::new(certain, tail.size - certain, spread.variance(tail) + more);
+    let law = CountLaw::new(certain, tail.size - certain, spread.variance(tail));
     law.with_degrees_of_freedom(spread.degrees_of_freedom)
 }

@@ -2,6 +2,7 @@
 
 use jiff::Timestamp;
 
+use super::backtest::Observed;
 use super::member::{HALF_A_NODE, Member};
 use super::record::{Growth, OriginRecord, Outlook};
 use super::scores::log_error;
@@ -46,19 +47,38 @@ pub struct Pool {
     pub shares: Vec<PoolShare>,
 }
 
-/// Weighs the members at the origin of `record` for dates `ahead` periods away, by what came (`observed` at a date and threshold)
-/// of their forecasts in `past`, the records of the origins before, oldest first, one a period.
+/// What every member's forecast of one date came to.
+#[derive(Debug, Clone, PartialEq)]
+pub(super) struct DateScore {
+    /// Place of the origin among the records.
+    origin: usize,
+    /// Periods ahead.
+    ahead: f64,
+    /// The date.
+    date: Timestamp,
+    /// Mean of |ln(forecast/observed)|·√observed over thresholds with at least 5 nodes.
+    scores: Vec<(Member, f64)>,
+}
+
+/// The scores of the dates that the record at place `origin` looks ahead to by known totals, and that have been observed.
+pub(super) fn date_scores(origin: usize, record: &OriginRecord, observed: &Observed) -> Vec<DateScore> {
+    let known = record.outlooks.iter().filter(|outlook| outlook.target.growth == Growth::Known);
+    let score = |outlook: &Outlook| {
+        let scores = scores(record, outlook, observed);
+        let (ahead, date) = (outlook.target.ahead, outlook.target.date);
+        (!scores.is_empty()).then_some(DateScore { origin, ahead, date, scores })
+    };
+    known.filter_map(score).collect()
+}
+
+/// Weighs the members at the origin of `record`, at place `origin` among the records one a period, for dates `ahead` periods away, by
+/// what had come of earlier forecasts (`past`) by then.
 ///
 /// Formula: score = Σ a·m/Σ a over the scored dates, m the mean of |ln(forecast/observed)|·√observed over thresholds with at
 /// least 5 nodes, a = 0.7^age, halved at other horizons. One more score, of half a date's weight, is what each member made of the
 /// newest period in hindsight, at least 15 % of its flow for a mechanism and 20 % for its corrected form or a trend: without a
 /// record, mechanisms go before trends unless they miss the very flows they were fitted to. Weight ∝ score⁻⁴.
-pub fn pool(
-    record: &OriginRecord,
-    past: &[OriginRecord],
-    observed: &dyn Fn(Timestamp, u64) -> Option<f64>,
-    ahead: f64,
-) -> Pool {
+pub(super) fn pool(record: &OriginRecord, origin: usize, past: &[DateScore], ahead: f64) -> Pool {
     let mut sums: Vec<(Member, f64, f64)> = Member::all().filter(|m| is_pooled(*m)).map(|m| (m, 0.0, 0.0)).collect();
     let mut add = |scores: &[(Member, f64)], weight: f64| {
         for (member, score, total) in &mut sums {
@@ -69,17 +89,11 @@ pub fn pool(
         }
     };
     let mut scored = 0;
-    for (i, earlier) in past.iter().enumerate() {
-        for outlook in &earlier.outlooks {
-            let known = outlook.target.growth == Growth::Known && outlook.target.date <= record.as_of;
-            let scores = if known { scores(earlier, outlook, observed) } else { Vec::new() };
-            if !scores.is_empty() {
-                let age = (past.len() as f64 - i as f64 - outlook.target.ahead).max(0.0);
-                let same = outlook.target.ahead.round() == ahead.round();
-                add(&scores, DECAY.powf(age) * if same { 1.0 } else { OTHER_HORIZON });
-                scored += 1;
-            }
-        }
+    for date in past.iter().filter(|date| date.date <= record.as_of) {
+        let age = (origin as f64 - date.origin as f64 - date.ahead).max(0.0);
+        let same = date.ahead.round() == ahead.round();
+        add(&date.scores, DECAY.powf(age) * if same { 1.0 } else { OTHER_HORIZON });
+        scored += 1;
     }
     add(&hindsight(record), HINDSIGHT);
     let mut shares: Vec<PoolShare> = sums
@@ -122,11 +136,7 @@ pub fn pooled_size(pool: &Pool, sizes: &[(Member, f64)]) -> Option<f64> {
 }
 
 /// Every member's mean score at one date that has come.
-fn scores(
-    record: &OriginRecord,
-    outlook: &Outlook,
-    observed: &dyn Fn(Timestamp, u64) -> Option<f64>,
-) -> Vec<(Member, f64)> {
+fn scores(record: &OriginRecord, outlook: &Outlook, observed: &Observed) -> Vec<(Member, f64)> {
     let mut means = Means::default();
     for (j, &threshold) in record.thresholds.iter().enumerate() {
         let Some(came) = observed(outlook.target.date, threshold).filter(|&came| came >= FEWEST_NODES) else {

@@ -3,9 +3,9 @@
 use jiff::Timestamp;
 
 use super::ahead::GivenRates;
-use super::backtest::{Replay, law, of_growth, pooled_tail, replay};
+use super::backtest::{Replay, law, pooled_tail, replay};
 use super::member::Member;
-use super::pool::{FEWEST_NODES, Pool, pool};
+use super::pool::{FEWEST_NODES, Pool};
 use super::record::{Growth, OriginRecord, RecordPlan, Scene, record};
 use super::spread::Spread;
 use super::{OriginError, OriginRequest};
@@ -81,7 +81,9 @@ impl RecordPlan {
             n if n > MOST_THRESHOLDS => (0..MOST_THRESHOLDS).filter_map(thinned).collect(),
             _ => found,
         };
-        Self { thresholds, ahead: SCORED_AHEAD, expected: false, fit: request.fit.clone() }
+        // Where rates are to be expected, what expecting them cost before tells how far to trust it.
+        let expected = request.arrivals.is_none() || request.fit.links_per_arrival.is_none();
+        Self { thresholds, ahead: SCORED_AHEAD, expected, fit: request.fit.clone() }
     }
 }
 
@@ -126,12 +128,13 @@ pub(super) fn pooled(
     let mut scene = Scene::new(evidence, &request.fit, cancelled)?;
     // Members are weighed by the thresholds that were scored, in hindsight too.
     let weighed_by = scene.record(&RecordPlan::for_forecast(request).thresholds, Vec::new())?;
+    let all_given = request.arrivals.is_some() && request.fit.links_per_arrival.is_some();
+    let growth = if all_given { Growth::Known } else { Growth::Expected };
     let mut uses: Vec<PoolUse> = Vec::new();
     for &day in plan.days() {
         let ahead = (day / period).round().clamp(1.0, SCORED_AHEAD as f64);
         if uses.last().is_none_or(|last| last.ahead != ahead) {
-            let pool = pool(&weighed_by, past, &observed, ahead);
-            uses.push(PoolUse { ahead, pool, spread: replay.spread(ahead) });
+            uses.push(PoolUse { ahead, pool: replay.pool(&weighed_by, ahead), spread: replay.spread(ahead, growth) });
         }
     }
     let in_use = |model| {
@@ -149,9 +152,8 @@ pub(super) fn pooled(
     let newest = scene.record(plan.thresholds(), targets)?;
     let mut tails = Vec::new();
     for (&date, &day) in plan.dates().iter().zip(plan.days()) {
-        let outlook = newest.outlooks.iter().find(|outlook| {
-            outlook.target.date == date && matches!(outlook.target.growth, Growth::Known | Growth::Expected)
-        });
+        let outlook =
+            newest.outlooks.iter().find(|outlook| outlook.target.date == date && outlook.target.growth == growth);
         let ahead = (day / period).round().clamp(1.0, SCORED_AHEAD as f64);
         let used = uses.iter().find(|used| used.ahead == ahead);
         let (Some(outlook), Some(used)) = (outlook, used) else { return Err(OriginError::NoPeriod) };
@@ -173,10 +175,10 @@ fn tails_at(
     replay: &Replay,
     levels: &[f64],
 ) -> Vec<TailForecast> {
-    let spread = replay.spread(outlook.target.ahead);
+    let spread = replay.spread(outlook.target.ahead, outlook.target.growth);
     let row = |(j, &threshold): (usize, &u64)| {
         let tail = pooled_tail(record, outlook, pool, j)?;
-        let law = law(record, &tail, &spread, of_growth(record, outlook, j));
+        let law = law(record, &tail, &spread);
         let now = record.sizes.get(j)?.1;
         let size =
             CountForecast { now, expected: tail.size, median: law.quantile(0.5), intervals: law.intervals(levels) };

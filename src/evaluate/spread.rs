@@ -1,6 +1,7 @@
 //! How far pooled forecasts of this network miss, beyond chance and beyond what their members disagree by.
 
 use super::pool::{DECAY, FEWEST_NODES, OTHER_HORIZON};
+use super::record::{Growth, Target};
 
 /// Relative error of a flow one period ahead, while a network has no record of its own. A stated default: what pooled forecasts
 /// of simulated networks of mixed kinds and of two real ones miss by.
@@ -27,6 +28,8 @@ pub(super) struct PooledTail {
     pub kept: f64,
     /// Variance by chance and by what the members disagree by.
     pub variance: f64,
+    /// Variance that the uncertainty of arrivals and landings adds; 0 where they are known.
+    pub of_growth: f64,
 }
 
 impl PooledTail {
@@ -43,6 +46,8 @@ pub(super) struct Miss {
     origin: usize,
     /// Periods ahead.
     ahead: f64,
+    /// Whether the totals were known.
+    known: bool,
     /// Mean of (miss² − variance)/flow² over the thresholds, weighed by how much each tells.
     excess: f64,
     /// Mean of miss²/variance over the thresholds, the flow's error included in the variance.
@@ -63,12 +68,16 @@ pub struct Spread {
 impl Spread {
     /// The variance of a pooled tail.
     pub(super) fn variance(&self, tail: &PooledTail) -> f64 {
-        self.scale * (tail.variance + (self.flow_error * tail.flow()).powi(2))
+        self.scale * self.allowed(tail)
+    }
+
+    fn allowed(&self, tail: &PooledTail) -> f64 {
+        tail.variance + (self.flow_error * tail.flow()).powi(2) + tail.of_growth
     }
 }
 
 /// The miss at one date, from the pooled tails and what came, where `spread` was allowed for; none where too few nodes came.
-pub(super) fn miss(origin: usize, ahead: f64, tails: &[(PooledTail, f64)], spread: &Spread) -> Option<Miss> {
+pub(super) fn miss(origin: usize, target: &Target, tails: &[(PooledTail, f64)], spread: &Spread) -> Option<Miss> {
     let (mut sum, mut total) = (0.0, 0.0);
     let (mut surprise, mut count) = (0.0, 0.0);
     for (tail, came) in tails.iter().filter(|(tail, came)| *came >= FEWEST_NODES && tail.flow() > 0.0) {
@@ -78,36 +87,43 @@ pub(super) fn miss(origin: usize, ahead: f64, tails: &[(PooledTail, f64)], sprea
         sum += weight * (missed - tail.variance);
         total += weight * squared;
         // Half a node is rounding, and a single outlier is not to widen all to come.
-        let allowed = tail.variance + (spread.flow_error * tail.flow()).powi(2) + ROUNDING_VARIANCE;
-        surprise += (missed / allowed).min(MOST_SURPRISE);
+        surprise += (missed / (spread.allowed(tail) + ROUNDING_VARIANCE)).min(MOST_SURPRISE);
         count += 1.0;
     }
-    (total > 0.0).then(|| Miss { origin, ahead, excess: sum / total, surprise: surprise / count })
+    let (ahead, known) = (target.ahead, target.growth == Growth::Known);
+    (total > 0.0).then(|| Miss { origin, ahead, known, excess: sum / total, surprise: surprise / count })
 }
 
-/// The spread `ahead` periods from the origin at place `origin`, by the misses known there.
+/// The spread `ahead` periods from the origin at place `origin`, of forecasts whose totals are `known` or not, by the misses known
+/// there.
 ///
-/// Formula: flow error r² = (ν·r₀²·h + Σ a·x·h/h')/(ν + Σ a), at least 0: x the excess of a miss at horizon h', a = 0.7^age, halved
-/// at other horizons than h, r₀ the default, ν = 1; the square grows with the horizon as that of a random walk does. Scale =
-/// (μ + Σ a·s)/(μ + Σ a), s the surprise of a miss and μ = 2.
-pub(super) fn spread(misses: &[Miss], origin: usize, ahead: f64) -> Spread {
+/// Formula: flow error r² = (ν·r₀²·h + Σ a·x·h/h')/(ν + Σ a), at least 0: x the excess of a miss at horizon h' where totals were known,
+/// a = 0.7^age, halved at other horizons than h, r₀ the default, ν = 1; the square grows with the horizon as that of a random walk
+/// does. Scale = (μ + Σ a·s)/(μ + Σ a), s the surprise of a miss of the same kind of totals and μ = 2.
+pub(super) fn spread(misses: &[Miss], origin: usize, ahead: f64, known: bool) -> Spread {
     let default = DEFAULT_FLOW_ERROR.powi(2) * ahead;
-    let (mut excess, mut surprise, mut total) = (0.0, 0.0, 0.0);
+    let (mut excess, mut of_known) = (DEFAULT_COUNTS_AS * default, DEFAULT_COUNTS_AS);
+    let (mut surprise, mut of_kind) = (0.0, 0.0);
     for miss in misses {
         let age = origin as f64 - miss.origin as f64 - miss.ahead;
-        if age >= 0.0 {
-            let same = miss.ahead.round() == ahead.round();
-            let weight = DECAY.powf(age) * if same { 1.0 } else { OTHER_HORIZON };
+        if age < 0.0 {
+            continue;
+        }
+        let same = miss.ahead.round() == ahead.round();
+        let weight = DECAY.powf(age) * if same { 1.0 } else { OTHER_HORIZON };
+        if miss.known {
             excess += weight * miss.excess * ahead / miss.ahead;
+            of_known += weight;
+        }
+        if miss.known == known {
             surprise += weight * miss.surprise;
-            total += weight;
+            of_kind += weight;
         }
     }
-    let squared = (DEFAULT_COUNTS_AS * default + excess) / (DEFAULT_COUNTS_AS + total);
-    let scale = (SCALE_COUNTS_AS + surprise) / (SCALE_COUNTS_AS + total);
+    let scale = (SCALE_COUNTS_AS + surprise) / (SCALE_COUNTS_AS + of_kind);
     Spread {
-        flow_error: squared.max(0.0).sqrt(),
+        flow_error: (excess / of_known).max(0.0).sqrt(),
         scale: scale.max(LEAST_SCALE),
-        degrees_of_freedom: FEWEST_DEGREES + total,
+        degrees_of_freedom: FEWEST_DEGREES + of_kind,
     }
 }

@@ -1,8 +1,8 @@
 //! The pooled forecast: its parts, its record on a real network, and networks that no attachment law fits.
 
 use tailcast::evaluate::{
-    Growth, Judged, LawSizes, Member, OriginRecord, Outlook, RecordPlan, Step, Target, Totals, Trend, pool,
-    pooled_size, record, replay, score_table,
+    Growth, Judged, LawSizes, Member, OriginRecord, Outlook, RecordPlan, Step, Target, Totals, Trend, pooled_size,
+    record, replay, score_table,
 };
 use tailcast::fit::{FitRequest, Model};
 use tailcast::forecast::CountLaw;
@@ -66,7 +66,7 @@ fn by_hand(day: i64, uniform: f64, mix: f64) -> OriginRecord {
 fn the_member_that_was_right_gets_the_weight() {
     let observed = |_: jiff::Timestamp, _: u64| Some(200.0);
     let past: Vec<OriginRecord> = (0..6).map(|day| by_hand(day, 300.0, 201.0)).collect();
-    let weights = pool(&by_hand(6, 300.0, 201.0), &past, &observed, 1.0);
+    let weights = replay(&past, &observed).pool(&by_hand(6, 300.0, 201.0), 1.0);
     let weight = |member| weights.shares.iter().find(|share| share.member == member).map_or(0.0, |share| share.weight);
     assert_eq!(weights.scored, 6);
     assert!(weight(Member::Mechanism(Model::Mix)) > 10.0 * weight(Member::Mechanism(Model::Uniform)));

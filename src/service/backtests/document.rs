@@ -7,7 +7,7 @@ use uuid::Uuid;
 
 use super::{BacktestRequest, words};
 use crate::evaluate::{
-    Coverage, Errors, Judged, Member, OriginRecord, PoolUse, Replay, ScoreRow, pool, replay, score_table,
+    Coverage, Errors, Growth, Judged, Member, OriginRecord, PoolUse, Replay, ScoreRow, Target, replay, score_table,
 };
 use crate::model::Evidence;
 use crate::service::answers::PoolAnswer;
@@ -161,10 +161,12 @@ pub fn document(
 fn pools(records: &[OriginRecord], observed: &dyn Fn(Timestamp, u64) -> Option<f64>) -> Vec<PoolAnswer> {
     let Some((newest, past)) = records.split_last() else { return Vec::new() };
     let before: Replay = replay(past, observed);
-    let mut horizons: Vec<f64> = newest.outlooks.iter().map(|outlook| outlook.target.ahead).collect();
-    horizons.dedup();
-    let used = |ahead: f64| PoolUse { ahead, pool: pool(newest, past, observed, ahead), spread: before.spread(ahead) };
-    horizons.into_iter().map(|ahead| PoolAnswer::from(&used(ahead))).collect()
+    let known = newest.outlooks.iter().map(|outlook| &outlook.target).filter(|target| target.growth == Growth::Known);
+    let used = |target: &Target| {
+        let (pool, spread) = (before.pool(newest, target.ahead), before.spread(target.ahead, target.growth));
+        PoolAnswer::from(&PoolUse { ahead: target.ahead, pool, spread })
+    };
+    known.map(used).collect()
 }
 
 fn score(row: &ScoreRow) -> ScoreAnswer {
