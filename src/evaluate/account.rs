@@ -54,7 +54,7 @@ pub struct OutcomeSummary {
 ///
 /// Formula: snapshots rarely fall on a date that was forecast, so between the two dates around the snapshot everything
 /// stated is interpolated linearly in time, the origin's own counts being the first date. Interval ends are then rounded
-/// outwards to whole nodes, as those of a forecast are. Before the first date this takes a standard deviation to grow in
+/// to whole nodes: outwards, they would cover more than their level. Before the first date this takes a standard deviation to grow in
 /// proportion to time, which suits the allowance for model error and is too narrow where chance alone is at work.
 pub fn account(origin: Timestamp, forecast: &[DateForecast], snapshot: &Snapshot) -> Option<Account> {
     let days_ahead = days_between(origin, snapshot.as_of);
@@ -86,7 +86,7 @@ fn between(start: Option<&CountForecast>, end: &CountForecast, share: f64, obser
     let interval = |(i, end_interval): (usize, &Interval)| {
         let start = start.and_then(|start| start.intervals.get(i));
         let (low, high) = start.map_or((end.now, end.now), |start| (start.low, start.high));
-        let (low, high) = (at(low, end_interval.low).floor(), at(high, end_interval.high).ceil());
+        let (low, high) = (at(low, end_interval.low).round(), at(high, end_interval.high).round());
         Interval { level: end_interval.level, low, high }
     };
     Outcome {

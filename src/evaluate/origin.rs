@@ -2,9 +2,10 @@
 
 use super::arrivals::{forecast_arrivals, forecast_links_per_arrival};
 use super::member::Member;
+use super::pool::LEAST_WEIGHT;
 use super::pooled::{PoolUse, past_records, pooled};
 use super::record::OriginRecord;
-use crate::fit::{Fit, FitError, FitRequest, Fixed, Force, Forces, ModelChoice, fit};
+use crate::fit::{Candidate, Fit, FitError, FitRequest, Fixed, Force, Forces, ModelChoice, Rung, fit};
 use crate::forecast::{DateForecast, Excursion, ForecastError, Scenario, forecast, forecast_totals};
 use crate::model::{ArrivalPlan, AttachmentMix, Evidence, ForecastPlan, GrowthParameters, ParameterFault, Warning};
 
@@ -90,9 +91,12 @@ pub fn answer(request: &OriginRequest, cancelled: &dyn Fn() -> bool) -> Result<O
 
 /// Whether a request asks for the pooled forecast: nothing is fixed, no candidate or evidence is asked for, and there is a period.
 pub fn is_pooled(request: &OriginRequest) -> bool {
+    asks_for_any(request) && request.evidence.snapshots().len() > 1
+}
+
+fn asks_for_any(request: &OriginRequest) -> bool {
     let asks = &request.fit;
-    let free = asks.choice == ModelChoice::Auto && asks.rung.is_none() && asks.fixed == Fixed::default();
-    free && request.evidence.snapshots().len() > 1
+    asks.choice == ModelChoice::Auto && asks.rung.is_none() && asks.fixed == Fixed::default()
 }
 
 /// The same as [`answer`] with the records of earlier origins at hand, those of [`super::scored_origins`] by
@@ -130,7 +134,7 @@ pub fn answer_by(
             (dated.map(|(totals, tail)| totals.with_tail(tail)).collect(), pooled.uses)
         }
         None => {
-            warnings.push(assumed(scenario.model_error));
+            warnings.push(assumed(scenario.model_error, &alternatives(request, &fit)));
             (forecast(counts, &scenario, &request.plan, cancelled)?, Vec::new())
         }
     };
@@ -148,15 +152,23 @@ pub fn answer_by(
 }
 
 /// What a single candidate's intervals allow for.
-fn assumed(model_error: f64) -> Warning {
+fn assumed(model_error: f64, others: &[Candidate]) -> Warning {
     let reason = if model_error > DEFAULT_MODEL_ERROR {
         "as much as the fit itself misses the observed flows by"
     } else {
         "a stated default"
     };
+    let share = |c: &Candidate| format!("{} ({:.0} %)", c.model.name(), 100.0 * c.weight);
+    let by = match others {
+        [] => "by one candidate".to_owned(),
+        others => {
+            let others: Vec<String> = others.iter().map(share).collect();
+            format!("by the fitted candidate, pooled by AIC weights with {}", others.join(" and "))
+        }
+    };
     let detail = format!(
-        "the forecast is by one candidate, without a record of past forecasts, so intervals allow {:.0} % of each expected flow \
-         for model error, {reason}",
+        "the forecast is {by}, without a record of past forecasts, so intervals allow {:.0} % of each expected flow for model \
+         error, {reason}",
         100.0 * model_error
     );
     Warning::new("model_error_assumed", detail)
@@ -229,7 +241,17 @@ fn scenario(request: &OriginRequest, fit: &Fit) -> Result<(Scenario, Option<Warn
     // A fit that misses the very flows it was made from will miss the next ones by no less.
     let flow_error = fit.goodness.and_then(|g| g.flow_error).unwrap_or(0.0);
     let expected = forecast.map(|forecast| Warning::new("arrivals_forecast", forecast.detail));
-    Ok((Scenario { forces, excursions, model_error: flow_error.max(DEFAULT_MODEL_ERROR) }, expected))
+    let alternatives = alternatives(request, fit).into_iter();
+    let alternatives = alternatives.map(|c| (forces.clone().with_mix(mix(c.preferential_share)), c.weight)).collect();
+    Ok((Scenario { forces, excursions, alternatives, model_error: flow_error.max(DEFAULT_MODEL_ERROR) }, expected))
+}
+
+/// Candidates of one snapshot besides the fitted one, which no record can weigh: those with an AIC weight that counts.
+fn alternatives(request: &OriginRequest, fit: &Fit) -> Vec<Candidate> {
+    if !asks_for_any(request) || fit.rung != Rung::OneSnapshot {
+        return Vec::new();
+    }
+    fit.candidates.iter().copied().filter(|c| c.model != fit.model && c.weight >= LEAST_WEIGHT).collect()
 }
 
 /// The forces besides the mix in which a fit may be uncertain.

@@ -25,7 +25,7 @@ const TREND_ERROR: f64 = 0.2;
 /// Added to scores: a member that was right by chance once does not take all.
 const SCORE_FLOOR: f64 = 1e-3;
 /// Members of less weight are left out.
-const LEAST_WEIGHT: f64 = 0.01;
+pub(super) const LEAST_WEIGHT: f64 = 0.01;
 
 /// One member of a pool.
 #[derive(Debug, Clone, Copy, PartialEq)]

@@ -35,6 +35,9 @@ pub struct Scenario {
     pub forces: GrowthParameters,
     /// Directions in which they are uncertain.
     pub excursions: Vec<Excursion>,
+    /// Other candidates' forces with their weights, which with that of `forces` add up to one: tails are pooled geometrically. A
+    /// candidate whose growth cannot be computed has no say.
+    pub alternatives: Vec<(GrowthParameters, f64)>,
     /// Relative standard deviation of the flow past a threshold that no parameter accounts for.
     pub model_error: f64,
 }
@@ -90,6 +93,7 @@ struct Outlook<'a> {
     counts: &'a DegreeCounts,
     central: Course,
     ends: Vec<(Course, Course)>,
+    alternatives: Vec<(Course, f64)>,
     model_error: f64,
     plan: &'a ForecastPlan,
     cancelled: &'a dyn Fn() -> bool,
@@ -99,6 +103,7 @@ struct Outlook<'a> {
 struct Laws<'a> {
     central: NetworkLaw<'a>,
     ends: Vec<(NetworkLaw<'a>, NetworkLaw<'a>)>,
+    alternatives: Vec<(NetworkLaw<'a>, f64)>,
 }
 
 impl<'a> Outlook<'a> {
@@ -113,13 +118,17 @@ impl<'a> Outlook<'a> {
         let central = course(&scenario.forces)?;
         let ends = scenario.excursions.iter().map(|e| Ok((course(&e.low)?, course(&e.high)?)));
         let ends = ends.collect::<Result<Vec<_>, ForecastError>>()?;
-        Ok(Self { counts, central, ends, model_error: scenario.model_error, plan, cancelled })
+        let others = scenario.alternatives.iter();
+        let alternatives = others.filter_map(|(forces, weight)| Some((course(forces).ok()?, *weight))).collect();
+        Ok(Self { counts, central, ends, alternatives, model_error: scenario.model_error, plan, cancelled })
     }
 
     fn laws(&self, day: f64) -> Result<Laws<'_>, ForecastError> {
         let law = |course| NetworkLaw::at(course, self.counts, day);
         let ends = self.ends.iter().map(|(low, high)| Ok((law(low)?, law(high)?)));
-        Ok(Laws { central: law(&self.central)?, ends: ends.collect::<Result<_, GrowthError>>()? })
+        let ends = ends.collect::<Result<_, GrowthError>>()?;
+        let alternatives = self.alternatives.iter().map(|(course, weight)| Ok((law(course)?, *weight)));
+        Ok(Laws { central: law(&self.central)?, ends, alternatives: alternatives.collect::<Result<_, GrowthError>>()? })
     }
 
     fn at(&self, date: jiff::Timestamp, day: f64) -> Result<DateForecast, ForecastError> {
@@ -140,13 +149,14 @@ impl<'a> Outlook<'a> {
             return Err(ForecastError::Cancelled);
         }
         let now = self.counts.tail_size(threshold) as f64;
-        let TailSum { kept, mean, variance, .. } = laws.central.tail(threshold, Accuracy::Full)?;
+        let TailSum { kept, mean: central, variance, .. } = laws.central.tail(threshold, Accuracy::Full)?;
+        let (mean, disagreement) = pooled(laws, threshold, central)?;
         let beyond = excursion_variance(&laws.ends, |law| Ok(law.rough_tail(threshold)?.mean))?;
         // Nodes that come past the threshold and nodes that leave the tail are what the model can be wrong about; of a tail
         // that all but vanishes it is not wrong by all that was lost.
         // And a threshold that nearly every node passes leaves little to be wrong about.
         let flow = ((mean - kept) + (now - kept).min(kept)) * (1.0 - mean / nodes).max(0.0);
-        let variance = variance + beyond + (self.model_error * flow).powi(2);
+        let variance = variance + beyond + disagreement + (self.model_error * flow).powi(2);
         let certain = if self.central.parameters().has_losses() { 0.0 } else { kept };
         Ok(TailForecast { threshold, size: self.count(now, certain, mean, variance) })
     }
@@ -194,6 +204,18 @@ impl<'a> Outlook<'a> {
         let law = CountLaw::new(certain, mean - certain, variance);
         CountForecast { now, expected: mean, median: law.quantile(0.5), intervals: law.intervals(self.plan.levels()) }
     }
+}
+
+/// The weighted geometric mean of the candidates' expectations, and by how much they disagree about it: Σ w·(own − mean)².
+fn pooled(laws: &Laws, threshold: u64, central: f64) -> Result<(f64, f64), ForecastError> {
+    let mut means = vec![(central, 1.0 - laws.alternatives.iter().map(|(_, weight)| weight).sum::<f64>())];
+    for (law, weight) in &laws.alternatives {
+        means.push((law.tail(threshold, Accuracy::Full)?.mean, *weight));
+    }
+    let [_, _, ..] = means[..] else { return Ok((central, 0.0)) };
+    let log = means.iter().map(|(mean, weight)| weight * mean.max(f64::MIN_POSITIVE).ln()).sum::<f64>();
+    let mean = log.exp();
+    Ok((mean, means.iter().map(|(own, weight)| weight * (own - mean).powi(2)).sum()))
 }
 
 /// Σ over excursions of (½·(value at the high end − value at the low end))².
