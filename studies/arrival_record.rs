@@ -7,14 +7,12 @@
 //! what is expected added. Simulated histories are of 14 periods, 200 a kind. The output is kept in studies/arrival_record.txt.
 #![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic, clippy::print_stdout)]
 
-use std::collections::BTreeMap;
+mod real;
 
 use rand::{RngExt, SeedableRng, rngs::StdRng};
 use rand_distr::{Distribution, Normal, Poisson};
 use tailcast::evaluate::{RateHistory, RatePeriod, arrival_periods, link_periods};
-use tailcast::model::{
-    ArrivalPlan, AttachmentMix, DegreeCounts, DegreeKind, EntryDegrees, Evidence, GrowthParameters, Snapshot,
-};
+use tailcast::model::{ArrivalPlan, AttachmentMix, DegreeKind, EntryDegrees, Evidence, GrowthParameters};
 
 const PERIODS: usize = 14;
 const HISTORIES: usize = 200;
@@ -79,8 +77,8 @@ fn score(history: &[RatePeriod], ahead: usize, record: &mut Record) {
 /// Arrivals and links per arrival of the two real networks.
 fn networks() -> Vec<(String, Vec<Vec<RatePeriod>>)> {
     let mut all = Vec::new();
-    for (network, column, departures) in [("answers", 0, 0.0), ("debian", 1, DEBIAN_DEPARTURES)] {
-        let evidence = Evidence::new(DegreeKind::Received, snapshots(network, column), None).expect("in order");
+    for (network, departures) in [("answers", 0.0), ("debian", DEBIAN_DEPARTURES)] {
+        let evidence = Evidence::new(DegreeKind::Received, real::snapshots(network), None).expect("in order");
         let (mix, plan) = (AttachmentMix::UNIFORM, ArrivalPlan::none());
         let forces = GrowthParameters::new(DegreeKind::Received, mix, plan, EntryDegrees::single(0), 1.0)
             .and_then(|forces| forces.with_losses(departures, 0.0))
@@ -149,23 +147,4 @@ fn normal(rng: &mut StdRng, deviation: f64) -> f64 {
 
 fn pick(rng: &mut StdRng, values: [f64; 3]) -> f64 {
     values[rng.random_range(0..3)]
-}
-
-/// Snapshots of a network, oldest first; `column` is where its table has the date.
-fn snapshots(network: &str, column: usize) -> Vec<Snapshot> {
-    let folder = std::path::Path::new(env!("CARGO_MANIFEST_DIR")).join("examples/data").join(network);
-    let table = std::fs::read_to_string(folder.join("degree_counts.csv")).expect("the table");
-    let mut by_date: BTreeMap<String, Vec<(u64, u64)>> = BTreeMap::new();
-    for row in table.lines().skip(1).map(|line| line.split(',').collect::<Vec<_>>()) {
-        let pair = (row[column + 1].parse().expect("a degree"), row[column + 2].parse().expect("a count"));
-        by_date.entry(row[column].to_owned()).or_default().push(pair);
-    }
-    let snapshot = |(date, pairs): (String, Vec<(u64, u64)>)| {
-        let as_of = if date.contains('T') { date } else { format!("{date}T00:00:00Z") };
-        Snapshot {
-            as_of: as_of.parse().expect("a date"),
-            counts: DegreeCounts::from_pairs(&pairs).expect("sound counts"),
-        }
-    };
-    by_date.into_iter().map(snapshot).collect()
 }

@@ -9,6 +9,7 @@
 //! table; kinds of simulated networks: studies/worlds/mod.rs.
 #![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic, clippy::print_stdout)]
 
+mod real;
 mod worlds;
 
 use std::sync::Mutex;
@@ -51,8 +52,8 @@ fn main() {
         "in 90%",
         "CRPS"
     );
-    table("answers", &past(&worlds::real("answers"), &THRESHOLDS));
-    table("debian", &past(&worlds::real("debian"), &DEBIAN_THRESHOLDS));
+    table("answers", &past(&real::snapshots("answers"), &THRESHOLDS));
+    table("debian", &past(&real::snapshots("debian"), &DEBIAN_THRESHOLDS));
     let mixed = simulated(&MIXED, networks);
     println!();
     for kind in MIXED {

@@ -1,4 +1,4 @@
-//! How forecasts from two successive snapshots did on the two real networks of `examples/data`, beside plain trends.
+//! How forecasts by the plain mix, from two successive snapshots, did on the two real networks of `examples/data`, beside plain trends.
 //!
 //! usage: cargo run --release --example two_snapshot_record
 //!
@@ -8,13 +8,11 @@
 //! studies/two_snapshot_record.txt. Sources of the data: the README beside each table.
 #![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic, clippy::print_stdout)]
 
-use std::collections::BTreeMap;
+mod real;
 
 use tailcast::evaluate::{OriginRequest, answer};
-use tailcast::fit::FitRequest;
-use tailcast::model::{
-    ArrivalPlan, DegreeCounts, DegreeKind, Evidence, ForecastPlan, Levels, Snapshot, Thresholds, days_between,
-};
+use tailcast::fit::{FitRequest, Model, ModelChoice};
+use tailcast::model::{ArrivalPlan, DegreeKind, Evidence, ForecastPlan, Levels, Snapshot, Thresholds, days_between};
 
 struct Record {
     error: f64,
@@ -30,12 +28,10 @@ fn main() {
         "{:<8} {:>7} {:>6} {:>9} {:>12} {:>10} {:>9} {:>9} {:>15}",
         "network", "periods", "cases", "forecast", "per arrival", "per link", "in 50 %", "in 90 %", "to best trend"
     );
-    let networks = [
-        ("answers", 0, vec![5, 10, 20, 50, 100, 200]),
-        ("debian", 1, vec![5, 10, 20, 50, 100, 200, 500, 1_000, 2_000]),
-    ];
-    for (network, column, thresholds) in networks {
-        let snapshots = snapshots(network, column);
+    let networks =
+        [("answers", vec![5, 10, 20, 50, 100, 200]), ("debian", vec![5, 10, 20, 50, 100, 200, 500, 1_000, 2_000])];
+    for (network, thresholds) in networks {
+        let snapshots = real::snapshots(network);
         for ahead in 1..=3 {
             let Some(r) = record(&snapshots, ahead, &thresholds) else { continue };
             let best = r.by_arrivals.min(r.by_links);
@@ -64,7 +60,11 @@ fn record(snapshots: &[Snapshot], ahead: usize, thresholds: &[u64]) -> Option<Re
         let thresholds = Thresholds::new(thresholds).expect("thresholds");
         let request = OriginRequest {
             evidence,
-            fit: FitRequest { links_per_arrival: Some(landed / arrived), ..FitRequest::default() },
+            fit: FitRequest {
+                choice: ModelChoice::Only(Model::Mix),
+                links_per_arrival: Some(landed / arrived),
+                ..FitRequest::default()
+            },
             arrivals: Some(ArrivalPlan::constant(arrived / days_between(now.as_of, then.as_of)).expect("a rate")),
             plan: ForecastPlan::new(now.as_of, thresholds, &[then.as_of], Levels::default()).expect("a plan"),
         };
@@ -92,23 +92,4 @@ fn record(snapshots: &[Snapshot], ahead: usize, thresholds: &[u64]) -> Option<Re
         inside: sum.inside.map(|n| n / sum.cases),
         cases: sum.cases,
     })
-}
-
-/// Snapshots of a network, oldest first; `column` is where its table has the date.
-fn snapshots(network: &str, column: usize) -> Vec<Snapshot> {
-    let folder = std::path::Path::new(env!("CARGO_MANIFEST_DIR")).join("examples/data").join(network);
-    let table = std::fs::read_to_string(folder.join("degree_counts.csv")).expect("the table");
-    let mut by_date: BTreeMap<String, Vec<(u64, u64)>> = BTreeMap::new();
-    for row in table.lines().skip(1).map(|line| line.split(',').collect::<Vec<_>>()) {
-        let pair = (row[column + 1].parse().expect("a degree"), row[column + 2].parse().expect("a count"));
-        by_date.entry(row[column].to_owned()).or_default().push(pair);
-    }
-    let snapshot = |(date, pairs): (String, Vec<(u64, u64)>)| {
-        let as_of = if date.contains('T') { date } else { format!("{date}T00:00:00Z") };
-        Snapshot {
-            as_of: as_of.parse().expect("a date"),
-            counts: DegreeCounts::from_pairs(&pairs).expect("sound counts"),
-        }
-    };
-    by_date.into_iter().map(snapshot).collect()
 }

@@ -19,5 +19,7 @@ mod stationary;
 mod tails;
 mod transitions;
 
+#[path = "../../studies/real/mod.rs"]
+mod real;
 #[path = "../../studies/worlds/mod.rs"]
 mod worlds;

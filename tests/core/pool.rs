@@ -8,7 +8,8 @@ use tailcast::fit::{FitRequest, Model};
 use tailcast::forecast::CountLaw;
 use tailcast::model::{DegreeKind, Evidence, Snapshot};
 
-use crate::worlds::{HARD, Kind, MIXED, history, real};
+use crate::real;
+use crate::worlds::{HARD, Kind, MIXED, history};
 
 const THRESHOLDS: [u64; 6] = [5, 10, 20, 50, 100, 200];
 
@@ -95,7 +96,7 @@ fn a_replay_knows_nothing_of_what_came_later() {
 /// Data: the answers-to-questions network of a question-and-answer site (examples/data/answers; Paranjape, Benson & Leskovec 2017).
 #[test]
 fn on_the_answers_network_the_pool_misses_by_three_quarters_of_the_best_trend_at_most() {
-    let snapshots = real("answers");
+    let snapshots = real::snapshots("answers");
     let cases = replay(&records(&snapshots), &|date, threshold| size_at(&snapshots, date, threshold)).cases;
     let table = score_table(&cases, Judged::Mechanism, &[0.5, 0.9]);
     let all: Vec<_> = table.iter().filter(|row| row.threshold.is_none()).collect();
