@@ -9,6 +9,7 @@ use sqlx::{Connection, SqliteConnection};
 use tailcast::model::DegreeCounts;
 
 use crate::harness::{Answer, Service, answered, csv, json_text};
+use crate::jobs::ended;
 use crate::tracking::{grown, put_counts, settings, settled};
 
 const NETWORK: &str = "/v1/networks/heronsgate";
@@ -45,18 +46,6 @@ async fn ask(service: &Service, body: &Value, headers: &[(&str, &str)]) -> Answe
     answered(headers.iter().fold(request, |request, &(name, value)| request.header(name, value))).await
 }
 
-async fn ended(service: &Service, location: &str) -> Value {
-    let begun = Instant::now();
-    loop {
-        let job = service.get(location).await.expect(200).json();
-        if !["waiting", "running"].contains(&job["state"].as_str().unwrap()) {
-            return job;
-        }
-        assert!(begun.elapsed() < Duration::from_secs(180), "{job}");
-        tokio::time::sleep(Duration::from_millis(30)).await;
-    }
-}
-
 /// A connection of the test's own to the database of a folder.
 async fn database(folder: &Path) -> SqliteConnection {
     SqliteConnection::connect(&format!("sqlite://{}", folder.join("it.db").display())).await.unwrap()
@@ -73,6 +62,15 @@ async fn service_in(folder: &Path) -> Service {
 
 async fn records(database: &mut SqliteConnection) -> i64 {
     sqlx::query_scalar("SELECT count(*) FROM backtest_records").fetch_one(database).await.unwrap()
+}
+
+/// A service in `folder` at work on a backtest of a network of twelve months; the database, and the job's address.
+async fn at_work_in(folder: &Path) -> (Service, SqliteConnection, String) {
+    let service = service_in(folder).await;
+    with_snapshots(&service, &json!({"degree_kind": "received"}), 12).await;
+    let mut connection = database(folder).await;
+    let location = at_work(&service, &mut connection).await;
+    (service, connection, location)
 }
 
 /// Takes a backtest on and waits until it has its first record; returns the job's address.
@@ -220,10 +218,7 @@ async fn more_forecasts_than_configured_are_refused() {
 #[tokio::test(flavor = "multi_thread")]
 async fn a_backtest_that_is_called_off_leaves_nothing() {
     let folder = tempfile::tempdir().unwrap();
-    let service = service_in(folder.path()).await;
-    with_snapshots(&service, &json!({"degree_kind": "received"}), 12).await;
-    let mut database = database(folder.path()).await;
-    let location = at_work(&service, &mut database).await;
+    let (service, mut database, location) = at_work_in(folder.path()).await;
     let again = ask(&service, &json!({"thresholds": [3]}), &[]).await.expect_problem(409, "job_live");
     assert!(again.json()["detail"].as_str().unwrap().contains(&location), "{again:?}");
     service.send(Method::DELETE, &location).await.expect(204);
@@ -241,10 +236,7 @@ async fn a_backtest_that_is_called_off_leaves_nothing() {
 #[tokio::test(flavor = "multi_thread")]
 async fn a_restart_goes_on_from_the_records_that_are_kept() {
     let folder = tempfile::tempdir().unwrap();
-    let service = service_in(folder.path()).await;
-    with_snapshots(&service, &json!({"degree_kind": "received"}), 12).await;
-    let mut connection = database(folder.path()).await;
-    let location = at_work(&service, &mut connection).await;
+    let (service, mut connection, location) = at_work_in(folder.path()).await;
     service.stop().await;
     let before = records(&mut connection).await;
     assert!((1..10).contains(&before), "{before}");
@@ -264,10 +256,7 @@ async fn a_restart_goes_on_from_the_records_that_are_kept() {
 #[tokio::test(flavor = "multi_thread")]
 async fn a_change_while_it_is_at_work_makes_a_backtest_begin_anew() {
     let folder = tempfile::tempdir().unwrap();
-    let service = service_in(folder.path()).await;
-    with_snapshots(&service, &json!({"degree_kind": "received"}), 12).await;
-    let mut connection = database(folder.path()).await;
-    let location = at_work(&service, &mut connection).await;
+    let (service, mut connection, location) = at_work_in(folder.path()).await;
     service.stop().await;
     mark(&mut connection).await;
     // As a correction by another process would leave it.

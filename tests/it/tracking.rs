@@ -9,6 +9,7 @@ use tailcast::growth::Simulation;
 use tailcast::model::{ArrivalPlan, AttachmentMix, DegreeCounts, DegreeKind, EntryDegrees, GrowthParameters};
 
 use crate::harness::{Answer, COUNTS, Service, changed, csv, pairs};
+use crate::jobs::is_live;
 use crate::jobs::link_list;
 
 const NETWORK: &str = "/v1/networks/heronsgate";
@@ -57,8 +58,7 @@ pub async fn settled(service: &Service) -> Value {
     loop {
         let line = service.get("/v1/networks").await.expect(200).json()["items"][0].clone();
         let jobs = service.get("/v1/jobs?network=heronsgate").await.expect(200).json();
-        let live = |job: &Value| ["waiting", "running"].contains(&job["state"].as_str().unwrap());
-        if line["refresh"]["state"] != "refreshing" && !jobs["items"].as_array().unwrap().iter().any(live) {
+        if line["refresh"]["state"] != "refreshing" && !jobs["items"].as_array().unwrap().iter().any(is_live) {
             return line;
         }
         assert!(begun.elapsed() < Duration::from_secs(120), "{line} {jobs}");

@@ -8,11 +8,30 @@ use serde_json::{Value, json};
 use sqlx::{Connection, SqliteConnection};
 
 use crate::harness::pairs;
-use crate::process::serve;
+use crate::jobs::is_live;
+use crate::process::{Served, serve};
 use crate::tracking::{grown, settings};
 
 /// Times the process is killed.
 const ROUNDS: usize = 8;
+
+async fn read(client: &Client, served: &Served, path: &str) -> Value {
+    client.get(format!("http://{}{path}", served.address)).send().await.unwrap().json().await.unwrap()
+}
+
+/// All jobs of the network when each has ended, newest first.
+async fn ended_jobs(client: &Client, served: &Served) -> Vec<Value> {
+    let begun = Instant::now();
+    loop {
+        let list = read(client, served, "/v1/jobs?network=heronsgate&limit=200").await;
+        let jobs = list["items"].as_array().unwrap();
+        if !jobs.iter().any(is_live) {
+            return jobs.clone();
+        }
+        assert!(begun.elapsed() < Duration::from_secs(180), "{jobs:?}");
+        tokio::time::sleep(Duration::from_millis(50)).await;
+    }
+}
 
 #[tokio::test(flavor = "multi_thread")]
 async fn no_kill_loses_a_snapshot_or_a_refresh_or_does_one_twice() {
@@ -41,18 +60,8 @@ async fn no_kill_loses_a_snapshot_or_a_refresh_or_does_one_twice() {
     }
     let served = serve(folder.path());
     let network = format!("http://{}/v1/networks/heronsgate", served.address);
-    let read = async |path: &str| -> Value {
-        client.get(format!("http://{}{path}", served.address)).send().await.unwrap().json().await.unwrap()
-    };
-    let begun = Instant::now();
-    let jobs = loop {
-        let jobs = read("/v1/jobs?network=heronsgate&limit=200").await["items"].as_array().unwrap().clone();
-        if jobs.iter().all(|job| !["waiting", "running"].contains(&job["state"].as_str().unwrap())) {
-            break jobs;
-        }
-        assert!(begun.elapsed() < Duration::from_secs(120), "{jobs:?}");
-        tokio::time::sleep(Duration::from_millis(50)).await;
-    };
+    let read = async |path: &str| read(&client, &served, path).await;
+    let jobs = ended_jobs(&client, &served).await;
     let kept = read("/v1/networks/heronsgate/snapshots?limit=200").await;
     let kept: BTreeSet<String> =
         kept["items"].as_array().unwrap().iter().map(|line| line["as_of"].as_str().unwrap().to_owned()).collect();
@@ -130,18 +139,8 @@ async fn no_kill_loses_a_backtest_or_makes_one_twice() {
         kept = now;
     }
     let served = serve(folder.path());
-    let read = async |path: &str| -> Value {
-        client.get(format!("http://{}{path}", served.address)).send().await.unwrap().json().await.unwrap()
-    };
-    let begun = Instant::now();
-    let jobs = loop {
-        let jobs = read("/v1/jobs?network=heronsgate&limit=200").await["items"].as_array().unwrap().clone();
-        if jobs.iter().all(|job| !["waiting", "running"].contains(&job["state"].as_str().unwrap())) {
-            break jobs;
-        }
-        assert!(begun.elapsed() < Duration::from_secs(180), "{jobs:?}");
-        tokio::time::sleep(Duration::from_millis(50)).await;
-    };
+    let read = async |path: &str| read(&client, &served, path).await;
+    let jobs = ended_jobs(&client, &served).await;
     let ids =
         |lines: &[Value]| -> Vec<String> { lines.iter().map(|line| line["id"].as_str().unwrap().to_owned()).collect() };
     let mut ended = ids(&jobs);
