@@ -278,3 +278,32 @@ fn carry(gap: f64) -> (f64, f64) {
     let left = DAMPING.powf(gap);
     (DAMPING * (1.0 - left) / (1.0 - DAMPING), left)
 }
+
+#[cfg(test)]
+mod tests {
+    use super::{LIKELY_STEP, Model, Seen};
+
+    /// Kalman filter of filterpy (tests/reference/rates.py).
+    #[test]
+    fn a_damped_trend_is_filtered_as_an_independent_library_does() {
+        let table = include_str!("../../tests/reference/rates.csv");
+        for row in table.lines().skip(1) {
+            let columns: Vec<&str> = row.split(',').collect();
+            let number = |i: usize| columns[i].parse::<f64>().unwrap();
+            let seen = columns[3].split(' ').enumerate().map(|(i, events)| Seen {
+                middle: i as f64,
+                events: events.parse().unwrap(),
+                exposure: 30.0,
+            });
+            let model = Model { step: number(0), noise: number(1), trend: number(2) };
+            let found = model.filter(&seen.collect::<Vec<_>>());
+            let (likely, spread) = LIKELY_STEP;
+            let prior = -0.5 * ((model.step / likely).ln() / spread).powi(2);
+            let ours =
+                [found.level, found.trend, found.level_variance, found.trend_variance, found.log_likelihood - prior];
+            for (i, own) in ours.into_iter().enumerate() {
+                assert!((own - number(4 + i)).abs() < 1e-9 * (1.0 + number(4 + i).abs()), "{row}: {own} in column {i}");
+            }
+        }
+    }
+}
