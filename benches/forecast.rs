@@ -44,7 +44,13 @@ fn request(nodes: u64) -> OriginRequest {
     let evidence = Evidence::new(DegreeKind::Received, vec![Snapshot { as_of, counts }], None).expect("one snapshot");
     let thresholds = Thresholds::new(&[10, 100, 1_000, 5_000, 10_000]).expect("thresholds");
     let plan = ForecastPlan::new(as_of, thresholds, &dates, Levels::default()).expect("a plan");
-    OriginRequest { evidence, fit: FitRequest::default(), arrivals: Some(arrivals), plan }
+    OriginRequest {
+        evidence,
+        fit: FitRequest::default(),
+        arrivals: Some(arrivals),
+        plan,
+        questions: Default::default(),
+    }
 }
 
 /// Grows 10⁶ nodes with three links each, event by event; returns the links landed.

@@ -34,6 +34,7 @@ fn main() {
         // Log-spaced from 1 to 3,000.
         let thresholds: Vec<u64> = (0..THRESHOLDS).map(|i| 1 + i + (i * i * i) / 2_800).collect();
         let request = OriginRequest {
+            questions: Default::default(),
             evidence,
             fit: FitRequest::default(),
             arrivals: None,

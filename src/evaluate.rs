@@ -10,6 +10,7 @@ mod member;
 mod origin;
 mod pool;
 mod pooled;
+mod questions;
 mod rates;
 mod record;
 mod scores;
@@ -25,6 +26,11 @@ pub use member::{Member, Step, Totals, Trend};
 pub use origin::{OriginAnswer, OriginError, OriginRequest, answer, answer_by, is_pooled};
 pub use pool::{Pool, PoolShare, pooled_size};
 pub use pooled::{PoolUse, SCORED_AHEAD, past_records, scored_origins};
+pub use questions::{
+    AmountForecast, Answers, BandAmounts, BandsAnswer, BandsAtDate, ClassAnswer, ClassAtDate, ClassPassing, DateAt,
+    DegreeAtDate, HubRank, HubsAtDate, LimitAnswer, LimitAtDate, NodeAnswer, PassedAtDate, Passing, ScenarioAnswer,
+    ScenarioAtDate, Sustainable, TailDifference, WatchAnswer,
+};
 pub use rates::{RateHistory, RateOutlook, RatePeriod};
 pub use record::{Growth, LawSizes, OriginRecord, Outlook, Rate, RecordPlan, Target, record};
 pub use scores::{Coverage, LOG_ERROR_FLOOR, absolute_error, crps, interval_score, log_error};

@@ -11,6 +11,7 @@ mod evidence;
 mod link_events;
 mod parameters;
 mod plan;
+mod questions;
 mod standing_plan;
 mod transitions;
 
@@ -24,6 +25,10 @@ pub use parameters::{
     AttachmentMix, GrowthParameters, MAX_DORMANT_SHARE, MAX_GROWTH_VARIANCE, MAX_KERNEL_EXPONENT, ParameterFault,
 };
 pub use plan::{ForecastPlan, Levels, PlanFault, Thresholds};
+pub use questions::{
+    Band, Bands, Change, DegreeCap, Limit, MAX_BANDS, MAX_LIMITS, MAX_NEXT_HUBS, MAX_SCENARIOS, MAX_WATCHED,
+    QuestionFault, Questions, RefusedLinks, Shift, Watch, WatchedClass, WatchedNode,
+};
 pub use standing_plan::{Horizon, HorizonEnd, StandingArrivals, StandingPlan, StandingSegment};
 pub use transitions::{Move, Transitions, TransitionsFault};
 

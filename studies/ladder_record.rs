@@ -134,6 +134,7 @@ fn forecasts(tables: &[Transitions], ahead: usize, thresholds: &[u64], given: bo
             let arrived = then.nodes() as f64 - now.nodes() as f64;
             let landed = then.link_ends() as f64 - now.link_ends() as f64;
             let request = OriginRequest {
+                questions: Default::default(),
                 evidence: evidence(past, way.transitions),
                 fit: FitRequest {
                     rung: way.rung,
@@ -220,6 +221,7 @@ fn debian_table(tables: &[Transitions]) {
         let (start, end) = (past[origin - 1].to(), tables[origin].to());
         let then = tables[origin].counts_after().unwrap();
         let request = OriginRequest {
+            questions: Default::default(),
             evidence: evidence(past, true),
             fit: FitRequest::default(),
             arrivals: None,

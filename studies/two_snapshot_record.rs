@@ -59,6 +59,7 @@ fn record(snapshots: &[Snapshot], ahead: usize, thresholds: &[u64]) -> Option<Re
         let evidence = Evidence::new(DegreeKind::Received, vec![before.clone(), now.clone()], None).expect("in order");
         let thresholds = Thresholds::new(thresholds).expect("thresholds");
         let request = OriginRequest {
+            questions: Default::default(),
             evidence,
             fit: FitRequest {
                 choice: ModelChoice::Only(Model::Mix),

@@ -92,7 +92,8 @@ pub fn read_forecast(raw: &RawValue, limits: &LimitsConfig, faults: &mut Faults)
     let label = label(&body, faults);
     let arrivals = outlook::arrivals(&body, evidence.latest, None, faults);
     let plan = outlook::plan(&body, evidence.latest, None, limits, faults);
-    let request = OriginRequest { evidence: evidence.whole?, fit: fit?, arrivals, plan: plan? };
+    let request =
+        OriginRequest { evidence: evidence.whole?, fit: fit?, arrivals, plan: plan?, questions: Default::default() };
     Some(ForecastInputs { label, request })
 }
 

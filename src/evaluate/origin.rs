@@ -4,10 +4,13 @@ use super::arrivals::{forecast_arrivals, forecast_links_per_arrival};
 use super::member::Member;
 use super::pool::LEAST_WEIGHT;
 use super::pooled::{PoolUse, past_records, pooled};
+use super::questions::Answers;
 use super::record::OriginRecord;
 use crate::fit::{Candidate, Fit, FitError, FitRequest, Fixed, Force, Forces, ModelChoice, Rung, fit};
 use crate::forecast::{DateForecast, Excursion, ForecastError, Scenario, forecast, forecast_totals};
-use crate::model::{ArrivalPlan, AttachmentMix, Evidence, ForecastPlan, GrowthParameters, ParameterFault, Warning};
+use crate::model::{
+    ArrivalPlan, AttachmentMix, Evidence, ForecastPlan, GrowthParameters, ParameterFault, Questions, Warning,
+};
 
 /// Relative standard deviation of the flow past a threshold that parameters do not account for, while a network has no
 /// record of its own. A stated default: one-period forecasts of the two real networks in `examples/data` missed their
@@ -41,6 +44,8 @@ pub struct OriginRequest {
     pub arrivals: Option<ArrivalPlan>,
     /// Thresholds, dates and levels.
     pub plan: ForecastPlan,
+    /// What is asked besides the tails.
+    pub questions: Questions,
 }
 
 /// A fit and the forecast from it.
@@ -52,6 +57,8 @@ pub struct OriginAnswer {
     pub forecast: Vec<DateForecast>,
     /// How members were weighed for the tails, nearest dates first; empty when a single candidate was asked for or is all there is.
     pub pools: Vec<PoolUse>,
+    /// Answers to the questions.
+    pub answers: Answers,
     /// Warnings of the fit and of the forecast.
     pub warnings: Vec<Warning>,
     /// What every reader of any forecast must keep in mind.
@@ -148,7 +155,8 @@ pub fn answer_by(
         );
         warnings.push(Warning::new("arrivals_grow_fast", detail));
     }
-    Ok(OriginAnswer { fit, forecast, pools, warnings, cautions: CAUTIONS.to_vec() })
+    let answers = Answers::default();
+    Ok(OriginAnswer { fit, forecast, pools, answers, warnings, cautions: CAUTIONS.to_vec() })
 }
 
 /// What a single candidate's intervals allow for.

@@ -11,7 +11,7 @@ fn request(evidence: Evidence, arrivals: Option<f64>, thresholds: &[u64], date: 
     let thresholds = Thresholds::new(thresholds).unwrap();
     let plan = ForecastPlan::new(evidence.latest().as_of, thresholds, &[date], Levels::default()).unwrap();
     let arrivals = arrivals.map(|per_day| ArrivalPlan::constant(per_day).unwrap());
-    OriginRequest { evidence, fit: FitRequest::default(), arrivals, plan }
+    OriginRequest { evidence, fit: FitRequest::default(), arrivals, plan, questions: Default::default() }
 }
 
 fn forecast(request: &OriginRequest) -> OriginAnswer {

@@ -72,6 +72,7 @@ proptest! {
         let as_of = snapshots.last().unwrap().as_of;
         let segment = ArrivalSegment { from_day: 0.0, per_day: arrivals, growth_per_year: growth };
         let request = OriginRequest {
+            questions: Default::default(),
             evidence: Evidence::new(kind, snapshots, None).unwrap(),
             fit: FitRequest {
                 fixed: Fixed { mix: fixed.and_then(AttachmentMix::new), ..own },

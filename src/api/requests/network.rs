@@ -132,7 +132,7 @@ pub fn read_network_forecast(
     let label = label(&body, faults);
     let arrivals = outlook::arrivals(&body, latest, standing, faults);
     let plan = outlook::plan(&body, latest, standing, limits, faults);
-    let request = OriginRequest { evidence, fit: fit?, arrivals, plan: plan? };
+    let request = OriginRequest { evidence, fit: fit?, arrivals, plan: plan?, questions: Default::default() };
     Some(ForecastInputs { label, request })
 }
 

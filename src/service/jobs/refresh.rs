@@ -116,7 +116,7 @@ impl Service {
                     Err(why) => Err(NoForecast::Problem(JobProblem::refusal(&ServiceError::Impossible(why)))),
                     Ok((plan, arrivals)) => {
                         let fit = FitRequest { seed: DEFAULT_SEED, ..FitRequest::default() };
-                        let request = OriginRequest { evidence, fit, arrivals, plan };
+                        let request = OriginRequest { evidence, fit, arrivals, plan, questions: Default::default() };
                         self.forecast(ForecastInputs { label: None, request }, origin, progress).await?
                     }
                 }

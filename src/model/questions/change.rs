@@ -1,0 +1,120 @@
+//! What-ifs: the forces that a decision would change.
+
+use super::QuestionFault;
+use crate::model::{ArrivalPlan, AttachmentMix, MAX_DEGREE};
+
+/// The largest factor on a rate.
+const MAX_FACTOR: f64 = 1e6;
+/// The largest departure hazard accepted, 1/day.
+const MAX_DEPARTURES: f64 = 1e9;
+
+/// What happens to links that would take a node past its cap.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum RefusedLinks {
+    /// They pick again, by the same mix, among the nodes below the cap.
+    Spread,
+    /// They are not made.
+    Lost,
+}
+
+/// No node gains links beyond so many; nodes that have more keep them.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub struct DegreeCap {
+    links: u64,
+    refused: RefusedLinks,
+}
+
+impl DegreeCap {
+    /// A cap at `links`.
+    ///
+    /// # Errors
+    /// A cap of 0, or above 2^53 − 1.
+    pub fn new(links: u64, refused: RefusedLinks) -> Result<Self, QuestionFault> {
+        if links == 0 || links > MAX_DEGREE {
+            let detail = format!("a cap of {links} is not between 1 and {MAX_DEGREE}");
+            return Err(QuestionFault::new(None, "links", detail));
+        }
+        Ok(Self { links, refused })
+    }
+
+    /// Most links of a node.
+    pub fn links(&self) -> u64 {
+        self.links
+    }
+
+    /// What happens to the others.
+    pub fn refused(&self) -> RefusedLinks {
+        self.refused
+    }
+}
+
+/// A rate in place of the one that holds, or that one times a factor.
+#[derive(Debug, Clone, PartialEq)]
+pub enum Shift<T> {
+    /// In its place.
+    To(T),
+    /// Times this.
+    Factor(f64),
+}
+
+/// A what-if: what of the forces would be other than they are.
+#[derive(Debug, Clone, PartialEq)]
+pub struct Change {
+    /// The caller's name for it.
+    pub name: String,
+    /// Arrivals.
+    pub arrivals: Option<Shift<ArrivalPlan>>,
+    /// ℓ, link ends landing on present nodes per arrival.
+    pub links_per_arrival: Option<Shift<f64>>,
+    /// p.
+    pub mix: Option<AttachmentMix>,
+    /// δ, 1/day.
+    pub departures_per_node_day: Option<f64>,
+    /// A cap on degrees.
+    pub degree_cap: Option<DegreeCap>,
+}
+
+impl Change {
+    /// No change at all, under a name.
+    pub fn none(name: impl Into<String>) -> Self {
+        Self {
+            name: name.into(),
+            arrivals: None,
+            links_per_arrival: None,
+            mix: None,
+            departures_per_node_day: None,
+            degree_cap: None,
+        }
+    }
+
+    /// Checks the factors and rates.
+    ///
+    /// # Errors
+    /// A change of nothing; a factor or rate that is negative, not finite or absurdly large.
+    pub fn checked(self) -> Result<Self, Vec<QuestionFault>> {
+        let mut faults = Vec::new();
+        let mut range = |field, value: f64, most: f64| {
+            if !(0.0..=most).contains(&value) {
+                let detail = format!("{field} must lie between 0 and {most:e}, not {value}");
+                faults.push(QuestionFault::new(None, field, detail));
+            }
+        };
+        if let Some(Shift::Factor(factor)) = self.arrivals {
+            range("arrivals_factor", factor, MAX_FACTOR);
+        }
+        match self.links_per_arrival {
+            Some(Shift::Factor(factor)) => range("links_factor", factor, MAX_FACTOR),
+            Some(Shift::To(links)) => range("links_per_arrival", links, MAX_DEPARTURES),
+            None => {}
+        }
+        if let Some(rate) = self.departures_per_node_day {
+            range("departures_per_node_day", rate, MAX_DEPARTURES);
+        }
+        if self == Self::none(self.name.clone()) {
+            let detail = "nothing is changed; give arrivals, arrivals_factor, links_per_arrival, links_factor, \
+                          preferential_share, departures_per_node_day or degree_cap";
+            faults.push(QuestionFault::new(None, "", detail));
+        }
+        if faults.is_empty() { Ok(self) } else { Err(faults) }
+    }
+}
