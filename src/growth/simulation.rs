@@ -87,6 +87,11 @@ impl Simulation {
         DegreeCounts::from_pairs(&pairs)
     }
 
+    /// Nodes with at least `threshold` links today.
+    pub fn tail_size(&self, threshold: u64) -> u64 {
+        self.members.degrees.iter().filter(|&&degree| degree >= threshold).count() as u64
+    }
+
     /// Remembers every node's degree of today, for [`Self::moves`].
     pub fn mark(&mut self) {
         self.members.marked = self.members.degrees.iter().copied().map(Some).collect();

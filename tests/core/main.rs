@@ -12,6 +12,7 @@ mod law;
 mod networks;
 mod pool;
 mod quantiles;
+mod questions;
 mod reference;
 mod scores;
 mod simulation;
