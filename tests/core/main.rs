@@ -3,6 +3,7 @@
 
 mod account;
 mod arrivals;
+mod cap;
 mod census;
 mod fit;
 mod forces;
