@@ -11,6 +11,7 @@ mod forecast;
 mod hostile;
 mod law;
 mod networks;
+mod orthant;
 mod pool;
 mod quantiles;
 mod reference;
