@@ -4,6 +4,7 @@ mod attraction;
 mod law;
 mod mean_field;
 mod moments;
+mod passage;
 mod simulation;
 mod tails;
 
@@ -12,5 +13,6 @@ pub use law::NodeLaw;
 pub use mean_field::{Course, GrowthError};
 pub use moments::MomentLaw;
 pub(crate) use moments::power_kernel;
+pub use passage::Passage;
 pub use simulation::{Simulation, SimulationError};
 pub use tails::{NetworkLaw, TailSum};

@@ -12,6 +12,7 @@ mod hostile;
 mod law;
 mod networks;
 mod orthant;
+mod passage;
 mod pool;
 mod quantiles;
 mod reference;
