@@ -18,7 +18,7 @@ pub use law::NodeLaw;
 pub use mean_field::{Course, GrowthError};
 pub use moments::MomentLaw;
 pub(crate) use moments::power_kernel;
-pub use passage::passage;
+pub use passage::Passage;
 pub use simulation::{Simulation, SimulationError};
 pub use tail_path::tail_correlations;
 pub use tails::{NetworkLaw, TailClass, TailParts, TailSum};

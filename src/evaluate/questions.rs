@@ -2,13 +2,13 @@
 
 use jiff::Timestamp;
 
-use super::{OriginError, OriginRequest};
 use super::costs::costs;
 use super::hubs::hubs;
 use super::limits::limits;
 use super::prospect::Prospect;
 use super::scenarios::compare;
 use super::watched::watched;
+use super::{OriginError, OriginRequest};
 use crate::forecast::Scenario;
 use crate::model::{Change, Interval, Limit, WatchedClass, WatchedNode};
 

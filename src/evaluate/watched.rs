@@ -8,7 +8,7 @@ use super::questions::{
     WatchAnswer,
 };
 use crate::forecast::{CountLaw, ForecastError, first_whole};
-use crate::growth::{Course, GrowthError, MixedLaw, passage};
+use crate::growth::{Course, GrowthError, MixedLaw, Passage};
 use crate::model::{Change, Interval, MAX_DEGREE, Watch, WatchedClass, WatchedNode};
 use crate::numerics::elementary::normal_quantile;
 use crate::numerics::tolerances::Accuracy;
@@ -192,7 +192,7 @@ impl<'a> Scene<'a> {
         let at_least = way.laws.iter().zip(&self.days).map(at).collect::<Result<Vec<f64>, OriginError>>()?;
         // Without losses nobody comes back; nodes that do not grow alike are followed by where they stand.
         let passed = if forces.has_losses() && forces.grow_alike() {
-            passage(course, way.factor, start, threshold, &self.days).map_err(of_growth)?
+            Passage::of(course, way.factor, start, threshold, &self.days).map_err(of_growth)?
         } else {
             at_least.clone()
         };

@@ -3,6 +3,7 @@
 
 mod account;
 mod arrivals;
+mod cap;
 mod census;
 mod fit;
 mod forces;
@@ -10,6 +11,8 @@ mod forecast;
 mod hostile;
 mod law;
 mod networks;
+mod orthant;
+mod passage;
 mod pool;
 mod quantiles;
 mod questions;

@@ -32,7 +32,12 @@ fn check(counts: &DegreeCounts, forces: &GrowthParameters, threshold: u64, most:
     let by = |day: f64| first.iter().filter(|&&crossed| crossed <= day).count() as u64;
     eprintln!("{} {:?} monotone {}", found.now, found.verdict, found.monotone);
     for (at, day) in found.dates.iter().zip([50.0, 100.0, 150.0, HORIZON]) {
-        eprintln!("day {day}: exceeding {:.4} crossed {:.4} seen {:.4}", at.exceeding, at.crossed, by(day) as f64 / RUNS as f64);
+        eprintln!(
+            "day {day}: exceeding {:.4} crossed {:.4} seen {:.4}",
+            at.exceeding,
+            at.crossed,
+            by(day) as f64 / RUNS as f64
+        );
     }
     for at in &found.crossing {
         if let Some(date) = at.date {

@@ -6,8 +6,8 @@ use tailcast::fit::FitRequest;
 use tailcast::forecast::Scenario;
 use tailcast::growth::Simulation;
 use tailcast::model::{
-    ArrivalPlan, AttachmentMix, DegreeCounts, DegreeKind, EntryDegrees, Evidence, ForecastPlan, GrowthParameters, Levels,
-    Questions, Snapshot, Thresholds,
+    ArrivalPlan, AttachmentMix, DegreeCounts, DegreeKind, EntryDegrees, Evidence, ForecastPlan, GrowthParameters,
+    Levels, Questions, Snapshot, Thresholds,
 };
 
 pub const AS_OF: &str = "2026-01-01T00:00:00Z";
@@ -77,5 +77,8 @@ pub fn simulate(
 pub fn assert_share(seen: u64, runs: u64, expected: f64, what: &str) {
     let share = seen as f64 / runs as f64;
     let slack = 4.0 * (expected * (1.0 - expected) / runs as f64).sqrt() + 0.5 / runs as f64;
-    assert!((share - expected).abs() <= slack, "{what}: {share:.4} of {runs} runs, expected {expected:.4} ± {slack:.4}");
+    assert!(
+        (share - expected).abs() <= slack,
+        "{what}: {share:.4} of {runs} runs, expected {expected:.4} ± {slack:.4}"
+    );
 }
