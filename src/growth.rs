@@ -1,6 +1,7 @@
 //! How degrees grow: the mean field, the law of one node, tail sizes, and exact simulation.
 
 mod attraction;
+mod capped;
 mod holdings;
 mod law;
 mod mean_field;

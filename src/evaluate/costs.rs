@@ -5,7 +5,7 @@ use super::prospect::{Prospect, of_growth};
 use super::questions::{AmountForecast, BandAmounts, BandsAnswer, BandsAtDate};
 use crate::forecast::{ForecastError, TailLaw};
 use crate::growth::{Course, Holding, Holdings, NetworkLaw, Piece};
-use crate::model::{Bands, Change, DegreeCounts, Interval};
+use crate::model::{Bands, Change, DegreeCounts, GrowthParameters, Interval};
 use crate::numerics::gamma::gamma_quantile;
 
 /// Costs of `bands` at every date of the forecast under `change`.
@@ -13,7 +13,8 @@ use crate::numerics::gamma::gamma_quantile;
 /// Formula: a band holds `S_from − S_{to+1}` nodes, as forecast, and as many links each as the fitted law says of its nodes. The
 /// variance of what they cost is that of chance (each node's cost varies with its degree), plus for each direction in which the
 /// forces are uncertain the square of half of what its two ends differ by, plus (model error × cost of what came or left)².
-/// Intervals are those of a gamma law with the cost's mean and variance.
+/// Landing ends come ℓ at a time, so their number scatters more than the nodes' own laws, independent of each other, have it: by
+/// (1 − 1/ℓ)/arrivals of its square, another direction. Intervals are those of a gamma law with the cost's mean and variance.
 ///
 /// # Errors
 /// Cancellation; growth that cannot be computed; a power kernel.
@@ -35,6 +36,7 @@ pub(super) fn costs(prospect: &Prospect, bands: &Bands, change: &Change) -> Resu
     let horizon = plan.days().last().copied().unwrap_or(0.0);
     let central = prospect.course(change, horizon)?;
     let ends = prospect.ends(change, horizon)?;
+    let landing = landing_pair(prospect, change, horizon)?;
     let mut dates = Vec::new();
     for ((&date, &day), tails) in plan.dates().iter().zip(plan.days()).zip(&tails) {
         if (prospect.cancelled)() {
@@ -47,6 +49,8 @@ pub(super) fn costs(prospect: &Prospect, bands: &Bands, change: &Change) -> Resu
         let own = held(&central)?;
         let ends = ends.iter().map(|(low, high)| Ok((held(low)?, held(high)?)));
         let ends = ends.collect::<Result<Vec<_>, OriginError>>()?;
+        let landed = (held(&landing.0)?, held(&landing.1)?);
+        let scatter = landing_scatter(central.parameters(), day) / LANDING_STEP;
         let nodes_in = |piece: &Piece| {
             let tail = |edge: u64| tails.iter().find(|law| law.threshold == edge).map(TailLaw::mean);
             let from = if piece.from == 0 { Some(central.nodes(day)) } else { tail(piece.from) };
@@ -65,8 +69,9 @@ pub(super) fn costs(prospect: &Prospect, bands: &Bands, change: &Change) -> Resu
             let links = holding.links * ratio;
             let cost = weigh(piece, nodes, links);
             let beyond: f64 = ends.iter().map(|(low, high)| half_difference(piece, low, high, i).powi(2)).sum();
+            let together = scatter * half_difference(piece, &landed.0, &landed.1, i);
             let flow = (cost - standing(prospect.counts, piece)).abs() + gone * cost;
-            let variance = holding.variance * ratio + beyond + (error * flow).powi(2);
+            let variance = holding.variance * ratio + beyond + together.powi(2) + (error * flow).powi(2);
             total += cost;
             came += flow;
             amounts.push(BandAmounts {
@@ -79,13 +84,34 @@ pub(super) fn costs(prospect: &Prospect, bands: &Bands, change: &Change) -> Resu
         }
         let of_end = |held: &Holdings| -> f64 { pieces.iter().zip(&held.pieces).map(|(p, h)| weighed(p, h)).sum() };
         let beyond: f64 = ends.iter().map(|(low, high)| (0.5 * (of_end(high) - of_end(low))).powi(2)).sum();
-        let variance = own.variance + beyond + (error * came).powi(2);
+        let together = scatter * 0.5 * (of_end(&landed.1) - of_end(&landed.0));
+        let variance = own.variance + beyond + together.powi(2) + (error * came).powi(2);
         dates.push(BandsAtDate { date, total: amount(total, variance, plan.levels()), bands: amounts });
     }
     let largest = dates.iter().enumerate().max_by(|a, b| a.1.total.expected.total_cmp(&b.1.total.expected));
     let peak = largest.map_or(0, |(i, _)| i);
     let now = prospect.counts.iter().map(|(degree, nodes)| nodes as f64 * bands.cost(degree)).sum();
     Ok(BandsAnswer { unit: bands.unit().map(str::to_owned), now, dates, peak })
+}
+
+/// Relative step in ℓ by which the effect of more landing ends is measured.
+const LANDING_STEP: f64 = 0.01;
+
+/// Courses with a little fewer and a little more links per arrival.
+fn landing_pair(prospect: &Prospect, change: &Change, horizon: f64) -> Result<(Course, Course), OriginError> {
+    let forces = prospect.forces(change)?;
+    let with = |factor: f64| {
+        let links = forces.links_per_arrival() * factor;
+        let forces = forces.clone().with_links_per_arrival(links).map_err(OriginError::Rate)?;
+        Course::new(prospect.counts, forces, horizon).map_err(of_growth)
+    };
+    Ok((with(1.0 - LANDING_STEP)?, with(1.0 + LANDING_STEP)?))
+}
+
+/// Relative standard deviation of the number of landing ends by `day` beyond that of as many independent ones.
+fn landing_scatter(forces: &GrowthParameters, day: f64) -> f64 {
+    let (links, arrivals) = (forces.links_per_arrival(), forces.arrivals.arrivals_between(0.0, day));
+    if links <= 1.0 || arrivals <= 0.0 { 0.0 } else { ((1.0 - links.recip()) / arrivals).sqrt() }
 }
 
 fn weigh(piece: &Piece, nodes: f64, links: f64) -> f64 {

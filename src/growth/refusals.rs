@@ -16,8 +16,7 @@ const MOST_REFUSED: f64 = 0.999;
 /// Q' = L·R − θ·Q. Spread ends pick again until they find a node below the cap: hazards there are 1/(1−R) times as large.
 ///
 /// # Numerical notes
-/// Fixed-point rounds over the whole course, until R moves by less than 10⁻⁶; linear between 24 days. Where links are lost (w > 0)
-/// a node at the cap may fall below it and gain again: that is taken up to first order only, through the law of the uncapped node.
+/// Fixed-point rounds over the whole course, until R moves by less than 10⁻⁶; linear between 24 days.
 #[derive(Debug, Clone, Default)]
 pub(super) struct Refusals {
     days: Vec<f64>,

@@ -18,8 +18,8 @@ const NEGLIGIBLE_CLASS: f64 = 1e-6;
 /// Poisson.
 ///
 /// # Numerical notes
-/// Degrees past the threshold are taken in classes that widen from 1 % of it on, each at its geometric middle: within about 1 % of
-/// the correlation. Cost: days × classes tails of the network, days² × classes tails of a node.
+/// Degrees past the threshold are taken in classes that widen from 1 % of it on, each at its geometric middle and with its law by
+/// two moments: within about 1 % of the correlation. Cost: days × classes tails of the network, days² × classes tails of a node.
 ///
 /// # Errors
 /// Those of [`NetworkLaw::tail`].
@@ -57,7 +57,7 @@ pub fn tail_correlations(
             let survival = course.survival(days[j] - days[i]);
             let mut both = 0.0;
             for &(degree, nodes) in classes[i].iter().filter(|class| class.1 > 0.0) {
-                both += nodes * survival * law.tail_within(degree, threshold, Accuracy::Working)?;
+                both += nodes * survival * law.moments_above(degree, threshold)[0];
             }
             covariances[i][j] = both - products(&parts[i], &parts[j]);
             covariances[j][i] = covariances[i][j];

@@ -1,5 +1,6 @@
 //! Tail sizes: how many nodes will have at least a threshold of links.
 
+use super::capped::{capped_parts, needs_states};
 use super::holdings::{Holdings, Piece, holdings};
 use super::law::{MixedLaw, NodeLaw};
 use super::mean_field::{Course, GrowthError};
@@ -128,6 +129,9 @@ impl<'a> NetworkLaw<'a> {
     /// # Errors
     /// Those of [`super::NodeLaw::tail`].
     pub fn parts(&self, threshold: u64, accuracy: Accuracy) -> Result<TailParts, GrowthError> {
+        if let Some(cap) = self.course.cap().filter(|_| needs_states(self.course, threshold)) {
+            return Ok(capped_parts(self.course, self.counts, self.day, threshold, cap));
+        }
         let mut parts = TailParts::default();
         match &self.nodes {
             NodeLaws::Exact { present, earliest } => {

@@ -87,6 +87,10 @@ pub const GINI_STEP: f64 = 0.25;
 pub const CAP_AGREEMENT: f64 = 1e-6;
 /// Rounds to settle it; each brings about a digit, and a cap that refuses nearly all needs about 30.
 pub const CAP_MAX_ROUNDS: usize = 60;
+/// Time steps of the backward equation under a cap: errors fall with their square, to about 10⁻⁵ of a probability.
+pub const CAP_TIME_STEPS: usize = 240;
+/// Of them, so many first ones damp the jump at the threshold.
+pub const CAP_DAMPING_STEPS: usize = 4;
 
 /// Points of the lattice that a normal vector's probability is averaged over: absolute errors of about 10⁻⁴ in four
 /// dimensions and 2·10⁻³ in 64; with 2,000 points they were up to 4·10⁻³.

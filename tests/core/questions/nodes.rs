@@ -1,6 +1,6 @@
 //! Watched nodes and the next hubs against simulated networks.
 
-use super::scene::{ask, assert_share, forces, grown, simulate};
+use super::scene::{ask, assert_share, forces, grown, share_inside, simulate};
 use tailcast::growth::Simulation;
 use tailcast::model::{
     ArrivalPlan, AttachmentMix, DegreeCounts, GrowthParameters, Questions, Thresholds, Watch, WatchedClass, WatchedNode,
@@ -104,7 +104,7 @@ fn the_degree_of_a_watched_node() {
     let deviation = (degrees.iter().map(|d| (d - mean).powi(2)).sum::<f64>() / RUNS as f64).sqrt();
     assert!((at.expected - mean).abs() < 4.0 * deviation / (RUNS as f64).sqrt(), "{} seen {mean}", at.expected);
     for interval in &at.intervals {
-        let inside = degrees.iter().filter(|&&d| d >= interval.low && d <= interval.high).count() as f64 / RUNS as f64;
+        let inside = share_inside(&degrees, interval.low, interval.high);
         assert!((inside - interval.level).abs() < 0.06, "{inside} inside at {}", interval.level);
     }
 }
@@ -164,7 +164,7 @@ fn the_next_hubs() {
         );
         assert!((rank.expected - mean).abs() < 4.0 * deviation / (RUNS as f64).sqrt() + 0.002 * mean);
         for interval in &rank.intervals {
-            let inside = seen.iter().filter(|&&d| d >= interval.low && d <= interval.high).count() as f64 / RUNS as f64;
+            let inside = share_inside(seen, interval.low, interval.high);
             assert!(
                 (inside - interval.level).abs() < 0.07,
                 "rank {}: {inside} inside at {}",

@@ -27,7 +27,7 @@ fn moments(values: impl Iterator<Item = f64> + Clone) -> (f64, f64) {
 fn a_small_difference_shows_above_the_noise() {
     let before = forces(0.70);
     let counts = grown(&before);
-    let mix = AttachmentMix::new(0.71).unwrap();
+    let mix = AttachmentMix::new(0.75).unwrap();
     let change = Change { mix: Some(mix), ..Change::none("a little more preferential") };
     let questions = Questions { scenarios: vec![change.clone()], ..Questions::default() };
     let answer = ask(&counts, &before, &[10], &[DAY], questions).scenarios.remove(0);
@@ -94,12 +94,12 @@ fn a_cap_that_spreads_or_loses_what_it_refuses() {
     check_cap(RefusedLinks::Lost, &forces(0.7), 1e-3);
 }
 
-/// Under losses a capped node that loses a link gains again: the law takes that to first order.
+/// Under losses a capped node that loses a link gains again.
 #[test]
-fn a_cap_on_a_network_with_losses_is_within_a_few_per_cent() {
+fn a_cap_on_a_network_that_loses_links() {
     let forces = forces(0.7).with_losses(0.001, 0.001).unwrap();
-    check_cap(RefusedLinks::Spread, &forces, 0.03);
-    check_cap(RefusedLinks::Lost, &forces, 0.03);
+    check_cap(RefusedLinks::Spread, &forces, 3e-3);
+    check_cap(RefusedLinks::Lost, &forces, 3e-3);
 }
 
 #[test]

@@ -82,3 +82,13 @@ pub fn assert_share(seen: u64, runs: u64, expected: f64, what: &str) {
         "{what}: {share:.4} of {runs} runs, expected {expected:.4} ± {slack:.4}"
     );
 }
+
+/// The share of whole numbers inside an interval, those at its ends by half: that is what its level promises.
+pub fn share_inside(seen: &[f64], low: f64, high: f64) -> f64 {
+    let weight = |&value: &f64| match value {
+        v if v > low && v < high => 1.0,
+        v if v == low || v == high => 0.5,
+        _ => 0.0,
+    };
+    seen.iter().map(weight).sum::<f64>() / seen.len() as f64
+}
