@@ -42,10 +42,13 @@ pub use accuracy::{
     ThresholdSummary,
 };
 pub use answers::{
-    AttachmentAnswer, AttachmentModel, CandidateAnswer, CountAnswer, CurvePointAnswer, DateAnswer, DegreeAnswer,
+    AmountAnswer, AttachmentAnswer, AttachmentModel, BandAnswer, BandsAnswer, BandsAtDateAnswer, CandidateAnswer,
+    ClassPassedAnswer, ClassPassingAnswer, CountAnswer, CurvePointAnswer, DateAnswer, DateAtAnswer, DegreeAnswer,
     EstimateAnswer, EvidenceKind, FitAnswer, FitReport, FitRun, ForecastAnswer, ForecastRun, GoodnessAnswer,
-    IntervalAnswer, LimitAnswer, OutlierClassAnswer, PeriodRatesAnswer, PoolAnswer, PoolMemberAnswer, TailAnswer,
-    TailPointAnswer, TransitionsAnswer, WarningAnswer,
+    HubRankAnswer, IntervalAnswer, LimitAnswer, LimitAtDateAnswer, NextHubsAnswer, OutlierClassAnswer, PassedAnswer,
+    PassingAnswer, PeriodRatesAnswer, PoolAnswer, PoolMemberAnswer, ScenarioAnswer, ScenarioAtDateAnswer,
+    SustainableAnswer, TailAnswer, TailDifferenceAnswer, TailPointAnswer, TransitionsAnswer, WarningAnswer,
+    WatchAnswer, WatchedClassAnswer, WatchedDegreeAnswer, WatchedNodeAnswer,
 };
 pub use backtests::{
     BacktestRequest, BacktestRun, CoverageRow, DEFAULT_AHEAD, ErrorsAnswer, MOST_AHEAD, MemberErrors, PooledErrors,
@@ -55,7 +58,7 @@ pub use compute::{Question, answer_at_once};
 pub use cpu::CpuPool;
 pub use error::{ServiceError, Thing};
 pub use evidence::{NetworkEvidence, RunOrigin, Written};
-pub use inputs::{DEFAULT_SEED, FitInputs, ForecastInputs, Label, MAX_SEED, TextFault, sha256_hex};
+pub use inputs::{DEFAULT_RISK, DEFAULT_SEED, FitInputs, ForecastInputs, Label, MAX_SEED, TextFault, sha256_hex};
 pub use jobs::{
     BacktestResult, JobFailure, JobFault, JobOutcome, JobProblem, JobView, LinkListResult, LinkListTask, PassedOver,
     RefreshResult, SkippedLines,

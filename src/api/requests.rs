@@ -5,6 +5,8 @@ mod evidence;
 mod network;
 mod network_schema;
 mod outlook;
+mod questions;
+mod questions_schema;
 mod schema;
 
 use serde_json::value::RawValue;
@@ -16,6 +18,10 @@ pub use network::{
 };
 pub use network_schema::{
     DegreeCountsBody, ForecastPlanBody, NetworkBody, NetworkFitBody, NetworkForecastBody, TransitionCountsBody,
+};
+pub use questions_schema::{
+    BandBody, ChangeBody, DegreeCapBody, KeptLimitBody, LimitBody, RefusedLinksName, ScenarioBody, WatchBody,
+    WatchedClassBody, WatchedNodeBody,
 };
 pub use schema::{
     ArrivalsBody, DegreeKindName, FitRequestBody, FixedBody, ForecastRequestBody, HorizonBody, LinkEventsBody,
@@ -50,7 +56,7 @@ pub const FIT_FIELDS: [&str; 14] = [
 ];
 
 /// Fields of a forecast's body.
-pub const FORECAST_FIELDS: [&str; 19] = [
+pub const FORECAST_FIELDS: [&str; 25] = [
     "degree_kind",
     "snapshots",
     "transitions",
@@ -70,6 +76,12 @@ pub const FORECAST_FIELDS: [&str; 19] = [
     "dates",
     "horizon",
     "levels",
+    "limits",
+    "bands",
+    "cost_unit",
+    "watch",
+    "next_hubs",
+    "scenarios",
 ];
 
 /// Fields of what is taken as given.
@@ -92,8 +104,8 @@ pub fn read_forecast(raw: &RawValue, limits: &LimitsConfig, faults: &mut Faults)
     let label = label(&body, faults);
     let arrivals = outlook::arrivals(&body, evidence.latest, None, faults);
     let plan = outlook::plan(&body, evidence.latest, None, limits, faults);
-    let request =
-        OriginRequest { evidence: evidence.whole?, fit: fit?, arrivals, plan: plan?, questions: Default::default() };
+    let questions = questions::read(&body, evidence.latest, plan.as_ref(), limits, faults);
+    let request = OriginRequest { evidence: evidence.whole?, fit: fit?, arrivals, plan: plan?, questions: questions? };
     Some(ForecastInputs { label, request })
 }
 

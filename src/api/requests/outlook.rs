@@ -28,8 +28,16 @@ pub fn arrivals(
         let planned = standing?.arrivals.as_ref()?.at(latest?);
         return noted_plan(planned.map_err(|found| format!("forecast_plan: {}", in_words(&found))), faults);
     };
-    let root = At::ROOT;
-    let at = root.field("arrivals");
+    arrivals_at(raw, At::ROOT.field("arrivals"), latest, faults)
+}
+
+/// Arrivals that stand at `at`, from the newest snapshot on.
+pub(super) fn arrivals_at(
+    raw: &RawValue,
+    at: At<'_>,
+    latest: Option<Timestamp>,
+    faults: &mut Faults,
+) -> Option<ArrivalPlan> {
     let (given, segmented) = given_arrivals(raw, at, faults)?;
     // Without a newest snapshot there is no day to count from; that is a fault of its own already.
     let plan = given.at(latest?);
