@@ -15,6 +15,7 @@ mod network;
 mod networks;
 mod numbers;
 mod plan;
+mod questions;
 mod runs;
 
 use std::future::Future;
@@ -33,8 +34,9 @@ pub use crate::fit::{FitRequest, Fixed, Model, ModelChoice, Rung};
 pub use crate::ingest::FaultPolicy;
 pub use crate::store::{
     BacktestSummary, Clash, JobFilter, JobKind, JobState, KeyClaim, LatestForecast, NetworkSummary, NewNetwork,
-    RefreshState, RefreshStatus, RunFilter, RunKind, RunSummary, SnapshotSummary, StoredBacktest, StoredJob,
-    StoredLinkEvents, StoredNetwork, StoredRun, StoredSnapshot, StoredTransitions, TransitionsSummary, Upload,
+    QuestionKind, RefreshState, RefreshStatus, RunFilter, RunKind, RunSummary, SnapshotSummary, StoredBacktest,
+    StoredJob, StoredLinkEvents, StoredNetwork, StoredQuestion, StoredRun, StoredSnapshot, StoredTransitions,
+    TransitionsSummary, Upload,
 };
 pub use accounts::{DateOutcome, IntervalOutcome, OutcomeAnswer, TailOutcome};
 pub use accuracy::{
@@ -65,6 +67,7 @@ pub use jobs::{
 };
 pub use network::{Description, NameFault, NetworkName, NetworkSettings, kind_name};
 pub use numbers::{Count, Real, date_text};
+pub use questions::{KeptLimitAnswer, LimitStanding, LimitState, QuestionName};
 
 /// The name and version every run carries.
 pub const ENGINE: &str = concat!(env!("CARGO_PKG_NAME"), " ", env!("CARGO_PKG_VERSION"));

@@ -16,7 +16,7 @@ pub use link_list::LinkListBody;
 pub use listing::Listing;
 pub use part::ForecastForm;
 pub use patience::Patience;
-pub use place::{date, network_name};
+pub use place::{date, network_name, question_name};
 
 use axum::extract::FromRequestParts;
 use axum::http::Uri;

@@ -1,6 +1,7 @@
 //! Reading request bodies into validated inputs.
 
 mod backtest;
+mod comparison;
 mod evidence;
 mod network;
 mod network_schema;
@@ -12,6 +13,7 @@ mod schema;
 use serde_json::value::RawValue;
 
 pub use backtest::{BacktestBody, read_backtest};
+pub use comparison::{CHANGE_FIELDS, ComparisonQuery, LIMIT_FIELDS, read_kept_change, read_kept_limit};
 pub use network::{
     EVIDENCE_FIELDS, NETWORK_FIELDS, read_link_events, read_network, read_network_fit, read_network_forecast,
     read_snapshot, read_snapshot_csv, read_transitions, read_transitions_csv,
@@ -19,10 +21,7 @@ pub use network::{
 pub use network_schema::{
     DegreeCountsBody, ForecastPlanBody, NetworkBody, NetworkFitBody, NetworkForecastBody, TransitionCountsBody,
 };
-pub use questions_schema::{
-    BandBody, ChangeBody, DegreeCapBody, KeptLimitBody, LimitBody, RefusedLinksName, ScenarioBody, WatchBody,
-    WatchedClassBody, WatchedNodeBody,
-};
+pub use questions_schema::{ChangeBody, KeptLimitBody};
 pub use schema::{
     ArrivalsBody, DegreeKindName, FitRequestBody, FixedBody, ForecastRequestBody, HorizonBody, LinkEventsBody,
     ModelName, SegmentBody, SnapshotBody, TransitionsBody, WindowBody, degree_pairs, move_rows,

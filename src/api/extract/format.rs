@@ -51,7 +51,7 @@ impl FromRequestParts<AppState> for ResultFormat {
 
 impl ResultFormat {
     /// The form that the query, or else the client's headers, ask for; `faults` are those of the query so far.
-    pub(super) fn of(given: &[(String, String)], headers: &HeaderMap, mut faults: Faults) -> Result<Self, ApiError> {
+    pub fn of(given: &[(String, String)], headers: &HeaderMap, mut faults: Faults) -> Result<Self, ApiError> {
         let asked = given.iter().find(|(name, _)| name == "format");
         let format = match asked.map(|(_, value)| value.as_str()) {
             None => None,

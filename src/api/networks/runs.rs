@@ -60,9 +60,10 @@ async fn create_network_forecast(
 ) -> Result<Response, ApiError> {
     let (name, limits) = (network_name(&name)?, state.limits);
     let claim = key.claim_for(&name, &body);
-    let NetworkEvidence { evidence, plan, origin, place: _place, .. } = state.service.evidence(&name).await?;
+    let NetworkEvidence { evidence, plan, limits: kept, origin, place: _place, .. } =
+        state.service.evidence(&name).await?;
     let inputs = body
-        .read(move |raw, faults| read_network_forecast(raw, evidence, (plan.as_ref(), Vec::new()), &limits, faults))
+        .read(move |raw, faults| read_network_forecast(raw, evidence, (plan.as_ref(), kept), &limits, faults))
         .await?;
     let run = state.service.create(inputs, Some(origin), claim).await?;
     runs::created(forecasts::PATH, run, form)

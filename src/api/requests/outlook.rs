@@ -39,8 +39,9 @@ pub(super) fn arrivals_at(
     faults: &mut Faults,
 ) -> Option<ArrivalPlan> {
     let (given, segmented) = given_arrivals(raw, at, faults)?;
-    // Without a newest snapshot there is no day to count from; that is a fault of its own already.
-    let plan = given.at(latest?);
+    // Without a newest snapshot they are checked from their own start; that there is none is told elsewhere where it matters.
+    let from = latest.or(given.segments().first().and_then(|segment| segment.from));
+    let plan = given.at(from.unwrap_or(Timestamp::UNIX_EPOCH));
     plan.map_err(|found| note_arrivals(&found, at, segmented, faults)).ok()
 }
 
@@ -178,7 +179,7 @@ pub fn plan(
     Some(plan)
 }
 
-fn too_many_cells(plan: &ForecastPlan, limits: &LimitsConfig) -> Option<String> {
+pub(super) fn too_many_cells(plan: &ForecastPlan, limits: &LimitsConfig) -> Option<String> {
     let (thresholds, dates) = (plan.thresholds().len(), plan.dates().len());
     let cells = thresholds * dates;
     (cells > limits.cells).then(|| {

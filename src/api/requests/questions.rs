@@ -1,7 +1,7 @@
 //! What is asked besides the tails: limits, bands, watched nodes, the next hubs; what-ifs in the room below.
 
 pub(super) mod scenarios;
-mod work;
+pub(super) mod work;
 
 use jiff::Timestamp;
 use serde_json::value::RawValue;
