@@ -103,7 +103,7 @@ pub fn read_forecast(raw: &RawValue, limits: &LimitsConfig, faults: &mut Faults)
     let label = label(&body, faults);
     let arrivals = outlook::arrivals(&body, evidence.latest, None, faults);
     let plan = outlook::plan(&body, evidence.latest, None, limits, faults);
-    let questions = questions::read(&body, evidence.latest, plan.as_ref(), limits, faults);
+    let questions = questions::read(&body, evidence.latest, (plan.as_ref(), Vec::new()), limits, faults);
     let request = OriginRequest { evidence: evidence.whole?, fit: fit?, arrivals, plan: plan?, questions: questions? };
     Some(ForecastInputs { label, request })
 }

@@ -17,7 +17,8 @@ const NAME_CHARS: usize = 24;
 pub fn question_lines(answer: &ForecastAnswer) -> Vec<String> {
     let mut lines = Vec::new();
     let mut block = |title: String, inside: Vec<String>| {
-        lines.extend([String::new(), title]);
+        lines.push(String::new());
+        lines.extend(wrap(&title, WIDTH, "  "));
         lines.extend(inside);
     };
     for limit in &answer.limits {
@@ -27,7 +28,7 @@ pub fn question_lines(answer: &ForecastAnswer) -> Vec<String> {
         block(bands_title(bands), bands_lines(bands));
     }
     if let Some(watch) = &answer.watch {
-        block("Watched nodes".to_owned(), watch_lines(watch));
+        block("Watched nodes, and their chance to pass each threshold".to_owned(), watch_lines(watch));
     }
     if !answer.next_hubs.is_empty() {
         block("Largest nodes".to_owned(), hub_lines(&answer.next_hubs));
@@ -52,13 +53,13 @@ fn limit_title(limit: &LimitAnswer) -> String {
 fn limit_lines(limit: &LimitAnswer) -> Vec<String> {
     let mut lines = paragraph(&limit.verdict);
     let crossing: Vec<String> =
-        limit.crossing.iter().map(|at| format!("{} by {}", chance(at.probability.0), reached(at))).collect();
-    let left = limit.days_left.map(|days| format!(", {} days from now", figure(days.0.round()))).unwrap_or_default();
+        limit.crossing.iter().map(|at| format!("{} {}", chance(at.probability.0), by_date(at))).collect();
+    let left = limit.days_left.map(|days| format!(", in {} days", figure(days.0.round()))).unwrap_or_default();
     lines.extend(paragraph(&format!(
-        "{} such nodes today. Crossed with probability {}; the risk is reached by {}{left}.",
+        "{} such nodes today. Crossed with probability {}; the risk is reached {}{left}.",
         figure(limit.now as f64),
         crossing.join(", "),
-        reached(&limit.risk_reached)
+        by_date(&limit.risk_reached)
     )));
     for sustainable in [&limit.arrivals, &limit.links_per_arrival] {
         lines.extend(paragraph(&sustainable.detail));
@@ -97,9 +98,7 @@ fn bands_lines(bands: &BandsAnswer) -> Vec<String> {
 
 fn watch_lines(watch: &WatchAnswer) -> Vec<String> {
     let mut cells = vec![
-        ["node", "links now", "expected", "threshold", "chance to pass it", "by", "even chance by"]
-            .map(str::to_owned)
-            .to_vec(),
+        ["node", "links now", "expected", "threshold", "chance", "by", "even chance by"].map(str::to_owned).to_vec(),
     ];
     for node in &watch.nodes {
         let expected = node.dates.last().map(|at| figure(at.expected.0)).unwrap_or_default();
@@ -217,7 +216,11 @@ fn chance(probability: f64) -> String {
 }
 
 fn reached(at: &DateAtAnswer) -> String {
-    at.date.clone().unwrap_or_else(|| "no date asked".to_owned())
+    at.date.clone().unwrap_or_else(|| "-".to_owned())
+}
+
+fn by_date(at: &DateAtAnswer) -> String {
+    at.date.as_ref().map_or("at no date looked at".to_owned(), |date| format!("by {date}"))
 }
 
 /// A caller's text on one short line.

@@ -3,6 +3,7 @@
 use serde_json::{Value, json};
 
 use crate::harness::{Service, changed, forecast_body};
+use crate::process::{command, run};
 
 /// Every question at once, about the network of `forecast_body`.
 pub fn asked() -> Value {
@@ -187,4 +188,66 @@ async fn a_table_tells_one_part() {
     let limits = service.post("/v1/forecasts?format=csv&part=limits", &asked()).await.expect(201);
     assert!(limits.text.starts_with("limit,"));
     service.delete_if(&path, &tags.pop().unwrap()).await.expect(204);
+}
+
+#[test]
+fn the_command_line_prints_the_answers_within_a_hundred_columns() {
+    let folder = tempfile::tempdir().unwrap();
+    let answer = |arguments: &[&str]| {
+        let mut command = command(folder.path());
+        command.args(["forecast", "-"]).args(arguments);
+        let output = run(command, &asked().to_string());
+        let texts = [output.stdout, output.stderr].map(|bytes| String::from_utf8(bytes).unwrap());
+        (output.status.code(), texts)
+    };
+    let (code, [table, _]) = answer(&[]);
+    assert_eq!(code, Some(0));
+    for words in [
+        "Limit fan-out shards: at most 100 nodes with >= 50 links until 2026-10-01, at a risk of 10 %",
+        "Costs in EUR/month: now ",
+        "Watched nodes, and their chance",
+        "ana",
+        "nodes with 20 to 49 links",
+        "Largest nodes",
+        "What if: campaign",
+        "as it stands",
+    ] {
+        assert!(table.contains(words), "{words}: {table}");
+    }
+    let is_digest = |line: &str| line.contains("sha-256:");
+    assert!(table.lines().filter(|line| !is_digest(line)).all(|line| line.chars().count() <= 100), "{table}");
+    let (code, [csv, _]) = answer(&["--format", "csv", "--part", "next_hubs"]);
+    assert_eq!((code, csv.lines().next().map(|line| line.starts_with("date,rank,"))), (Some(0), Some(true)), "{csv}");
+    let (code, [_, told]) = answer(&["--part", "limits"]);
+    assert_eq!(code, Some(2));
+    assert!(told.contains("--format csv"), "{told}");
+}
+
+#[tokio::test]
+async fn every_answer_is_in_json_as_it_was_asked() {
+    let service = Service::start().await;
+    let run = service.post("/v1/forecasts", &asked()).await.expect(201).json();
+    let limit = &run["limits"][0];
+    for (field, value) in asked()["limits"][0].as_object().unwrap() {
+        assert_eq!(&limit[field], value, "{field}");
+    }
+    assert_eq!((&run["limits"][1]["name"], &run["limits"][1]["risk"]), (&json!(null), &json!(0.05)));
+    let last = limit["dates"].as_array().unwrap().iter().find(|at| at["date"] == "2026-10-01").unwrap();
+    assert_eq!(last, &limit["at_by"]);
+    let chances: Vec<_> = limit["crossing"].as_array().unwrap().iter().map(|at| &at["probability"]).collect();
+    assert_eq!(chances, [&json!(0.05), &json!(0.5), &json!(0.95)]);
+    assert_eq!((&run["bands"]["cost_unit"], run["bands"]["dates"].as_array().unwrap().len()), (&json!("EUR/month"), 2));
+    assert_eq!(run["bands"]["dates"][0]["bands"].as_array().unwrap().len(), 2);
+    assert_eq!((&run["watch"]["nodes"][0]["name"], &run["watch"]["nodes"][0]["degree"]), (&json!("ana"), &json!(40)));
+    assert_eq!((&run["watch"]["classes"][0]["from"], &run["watch"]["classes"][0]["to"]), (&json!(20), &json!(49)));
+    assert_eq!(run["next_hubs"][1]["ranks"].as_array().unwrap().len(), 3);
+    let names: Vec<_> = run["scenarios"].as_array().unwrap().iter().map(|scenario| &scenario["name"]).collect();
+    assert_eq!(names, ["campaign", "spread", "plan"]);
+    for scenario in run["scenarios"].as_array().unwrap() {
+        assert_eq!(scenario["limits"].as_array().unwrap().len(), 2);
+        let difference = &scenario["dates"][1]["tail"][0];
+        let [what_if, standing] = ["scenario", "standing"].map(|field| difference[field].as_f64().unwrap());
+        let expected = difference["difference"]["expected"].as_f64().unwrap();
+        assert!((expected - (what_if - standing)).abs() < 1e-6 * standing.max(1.0), "{difference}");
+    }
 }

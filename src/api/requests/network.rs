@@ -133,12 +133,8 @@ pub fn read_network_forecast(
     let label = label(&body, faults);
     let arrivals = outlook::arrivals(&body, latest, standing, faults);
     let plan = outlook::plan(&body, latest, standing, limits, faults);
-    let questions = questions::read(&body, latest, plan.as_ref(), limits, faults);
-    let mut questions = questions?;
-    if body.get("limits").is_none() {
-        questions.limits = kept;
-    }
-    let request = OriginRequest { evidence, fit: fit?, arrivals, plan: plan?, questions };
+    let questions = questions::read(&body, latest, (plan.as_ref(), kept), limits, faults);
+    let request = OriginRequest { evidence, fit: fit?, arrivals, plan: plan?, questions: questions? };
     Some(ForecastInputs { label, request })
 }
 

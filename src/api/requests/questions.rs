@@ -19,11 +19,11 @@ use crate::service::{DEFAULT_RISK, Label};
 /// Fields of a limit but for its name.
 pub const LIMIT_FIELDS: [&str; 4] = ["threshold", "max_nodes", "by", "risk"];
 
-/// Everything that is asked besides the tails; `plan` is what the tails are asked for.
+/// Everything that is asked besides the tails; `kept` limits stand where none are given, `plan` is what the tails are asked for.
 pub fn read(
     body: &Object<'_>,
     latest: Option<Timestamp>,
-    plan: Option<&ForecastPlan>,
+    (plan, kept): (Option<&ForecastPlan>, Vec<Limit>),
     config: &LimitsConfig,
     faults: &mut Faults,
 ) -> Option<Questions> {
@@ -32,6 +32,7 @@ pub fn read(
     let watch = asked(body, "watch", faults, |raw, at, faults| watch(raw, at, faults).map(Some));
     let next_hubs = asked(body, "next_hubs", faults, next_hubs);
     let scenarios = asked(body, "scenarios", faults, |raw, at, faults| scenarios::read_list(raw, at, latest, faults));
+    let limits = if body.get("limits").is_some() { limits } else { Some(kept) };
     let questions =
         Questions { limits: limits?, bands: bands?, watch: watch?, next_hubs: next_hubs?, scenarios: scenarios? };
     work::within(&questions, plan?, config, faults).then_some(questions)
