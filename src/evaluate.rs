@@ -5,17 +5,25 @@ mod account;
 mod ahead;
 mod arrivals;
 mod backtest;
+mod costs;
+mod crossing;
 mod drift;
+mod hubs;
+mod limits;
 mod member;
 mod origin;
 mod pool;
 mod pooled;
+mod prospect;
 mod questions;
 mod rates;
 mod record;
+mod scenarios;
 mod scores;
 mod spread;
+mod sustainable;
 mod table;
+mod watched;
 
 pub use account::{Account, Outcome, OutcomeSummary, account};
 pub use ahead::Rates;
@@ -29,7 +37,7 @@ pub use pooled::{PoolUse, SCORED_AHEAD, past_records, scored_origins};
 pub use questions::{
     AmountForecast, Answers, BandAmounts, BandsAnswer, BandsAtDate, ClassAnswer, ClassAtDate, ClassPassing, DateAt,
     DegreeAtDate, HubRank, HubsAtDate, LimitAnswer, LimitAtDate, NodeAnswer, PassedAtDate, Passing, ScenarioAnswer,
-    ScenarioAtDate, Sustainable, TailDifference, WatchAnswer,
+    ScenarioAtDate, Sustainable, TailDifference, WatchAnswer, answers_by,
 };
 pub use rates::{RateHistory, RateOutlook, RatePeriod};
 pub use record::{Growth, LawSizes, OriginRecord, Outlook, Rate, RecordPlan, Target, record};

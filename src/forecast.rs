@@ -3,9 +3,12 @@
 mod counts;
 mod horizon;
 mod largest;
+mod ranks;
 
 pub use counts::CountLaw;
-pub use horizon::{Excursion, Scenario, forecast, forecast_totals};
+pub(crate) use counts::first_whole;
+pub use horizon::{Excursion, Scenario, forecast, forecast_totals, tail_laws};
+pub use ranks::RankLaw;
 
 use jiff::Timestamp;
 
@@ -43,6 +46,52 @@ pub struct TailForecast {
     pub threshold: u64,
     /// The tail size.
     pub size: CountForecast,
+}
+
+/// The law of a forecast tail size.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct TailLaw {
+    /// Threshold j.
+    pub threshold: u64,
+    /// The tail size at the last snapshot.
+    pub now: f64,
+    /// Its law, everything that is uncertain included.
+    pub law: CountLaw,
+    /// The part of its variance that chance alone makes, were the forces known.
+    pub chance: f64,
+}
+
+impl TailLaw {
+    /// Expected tail size.
+    pub fn mean(&self) -> f64 {
+        self.law.floor() + self.law.rest().mean
+    }
+
+    /// Standard deviation of the tail's expectation: what is not known of the forces.
+    pub fn doubt(&self) -> f64 {
+        (self.law.rest().variance - self.chance).max(0.0).sqrt()
+    }
+
+    /// The same tail, larger by a factor.
+    pub fn scaled(&self, factor: f64) -> Self {
+        let (rest, doubt) = (self.law.rest(), self.doubt() * factor);
+        let mean = self.mean() * factor;
+        let floor = self.law.floor().min(mean);
+        let chance = self.chance * if rest.mean > 0.0 { (mean - floor) / rest.mean } else { factor };
+        let law = self.law.with_moments(floor, mean - floor, chance + doubt * doubt);
+        Self { law, chance, ..*self }
+    }
+
+    /// Its middle and intervals.
+    pub fn forecast(&self, levels: &[f64]) -> TailForecast {
+        let size = CountForecast {
+            now: self.now,
+            expected: self.mean(),
+            median: self.law.quantile(0.5),
+            intervals: self.law.intervals(levels),
+        };
+        TailForecast { threshold: self.threshold, size }
+    }
 }
 
 /// The forecast at one date.

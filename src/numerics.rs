@@ -7,6 +7,7 @@ pub mod gamma;
 pub mod intervals;
 pub mod inversion;
 pub mod optimise;
+pub mod orthant;
 pub mod quadrature;
 pub mod ranked_score;
 pub mod roots;

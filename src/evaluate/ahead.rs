@@ -28,11 +28,27 @@ impl Rates {
 }
 
 /// Rates that the caller gives; the others are to be expected.
-#[derive(Debug, Clone, PartialEq, Default)]
+#[derive(Debug, Clone, PartialEq)]
 pub(super) struct GivenRates {
     pub arrivals: Option<ArrivalPlan>,
     pub links_per_arrival: Option<f64>,
     pub links_per_node_day: f64,
+    /// On the arrivals, given or expected.
+    pub arrivals_factor: f64,
+    /// On the links per arrival, given or expected.
+    pub links_factor: f64,
+}
+
+impl Default for GivenRates {
+    fn default() -> Self {
+        Self {
+            arrivals: None,
+            links_per_arrival: None,
+            links_per_node_day: 0.0,
+            arrivals_factor: 1.0,
+            links_factor: 1.0,
+        }
+    }
 }
 
 /// The rates over `days` after the newest snapshot of `known`: those `given`, and for the others what is to be expected, with one of
@@ -51,8 +67,8 @@ pub(super) fn expected_rates(
         (None, None) => (forces.links_per_arrival(), ONE_PERIOD_LINKS_SPREAD),
     };
     let rates = |arrivals: &ArrivalPlan, links_per_arrival| Rates {
-        arrivals: arrivals.clone(),
-        links_per_arrival,
+        arrivals: arrivals.scaled(given.arrivals_factor),
+        links_per_arrival: links_per_arrival * given.links_factor,
         links_per_node_day: given.links_per_node_day,
     };
     let all_given = given.arrivals.is_some() && given.links_per_arrival.is_some();

@@ -133,7 +133,7 @@ fn edges(period: f64, horizon: f64) -> Vec<f64> {
 }
 
 /// A rate in words, with three digits.
-fn figures(rate: f64) -> String {
+pub(super) fn figures(rate: f64) -> String {
     if rate >= 100.0 {
         return format!("{rate:.0}");
     }

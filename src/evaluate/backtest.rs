@@ -120,7 +120,7 @@ pub(super) fn pooled_tail(record: &OriginRecord, outlook: &Outlook, weights: &Po
             Some(share.weight * (own - size).powi(2))
         })
         .sum();
-    Some(PooledTail { size, kept, variance: chance + between, of_growth: of_growth(record, outlook, j) })
+    Some(PooledTail { size, kept, chance, variance: chance + between, of_growth: of_growth(record, outlook, j) })
 }
 
 /// Variance that the uncertainty of arrivals and landings adds: for each the square of half of what one standard deviation to

@@ -3,14 +3,17 @@
 use super::arrivals::{forecast_arrivals, forecast_links_per_arrival};
 use super::member::Member;
 use super::pool::LEAST_WEIGHT;
-use super::pooled::{PoolUse, past_records, pooled};
-use super::questions::Answers;
+use super::pooled::{PoolUse, past_records};
+use super::prospect::Prospect;
+use super::questions::{Answers, answers};
 use super::record::OriginRecord;
 use crate::fit::{Candidate, Fit, FitError, FitRequest, Fixed, Force, Forces, ModelChoice, Rung, fit};
 use crate::forecast::{DateForecast, Excursion, ForecastError, Scenario, forecast, forecast_totals};
 use crate::model::{
     ArrivalPlan, AttachmentMix, Evidence, ForecastPlan, GrowthParameters, ParameterFault, Questions, Warning,
+    days_between,
 };
+use crate::numerics::orthant::OrthantError;
 
 /// Relative standard deviation of the flow past a threshold that parameters do not account for, while a network has no
 /// record of its own. A stated default: one-period forecasts of the two real networks in `examples/data` missed their
@@ -82,6 +85,12 @@ pub enum OriginError {
     /// A record of forecasts needs a period before its origin.
     #[error("an origin needs a snapshot before it")]
     NoPeriod,
+    /// A question asks for dates that no forecast reaches.
+    #[error("{0}")]
+    Unplanned(String),
+    /// A first passage cannot be computed.
+    #[error(transparent)]
+    Passage(#[from] OrthantError),
     /// A rate is out of range.
     #[error("{0}")]
     Rate(ParameterFault),
@@ -127,24 +136,27 @@ pub fn answer_by(
     let (scenario, expected) = scenario(request, &fit)?;
     let counts = &request.evidence.latest().counts;
     let mut warnings = fit.warnings.clone();
-    let pooled = match is_pooled(request).then(|| pooled(request, past, cancelled)) {
-        Some(Ok(pooled)) => Some(pooled),
-        // Without a candidate there is nothing to pool.
-        None | Some(Err(OriginError::NoPeriod)) => None,
-        Some(Err(error)) => return Err(error),
-    };
-    let (forecast, pools) = match pooled {
+    let days = asked_days(request);
+    let prospect = Prospect::new(request, scenario, past, &days, cancelled)?;
+    let (forecast, pools) = match &prospect.pooled {
         Some(pooled) => {
-            let totals = forecast_totals(counts, &scenario, &request.plan, cancelled)?;
-            let dated = totals.into_iter().zip(pooled.tails);
-            warnings.extend(pooled.uses.first().and_then(of_record));
-            (dated.map(|(totals, tail)| totals.with_tail(tail)).collect(), pooled.uses)
+            let totals = forecast_totals(counts, &prospect.scenario, &request.plan, cancelled)?;
+            let tails = pooled.tails(&request.plan, &pooled.given())?;
+            let levels = request.plan.levels();
+            let forecast = totals
+                .into_iter()
+                .zip(&tails)
+                .map(|(totals, tails)| totals.with_tail(tails.iter().map(|law| law.forecast(levels)).collect()));
+            let uses = pooled.uses_at(request.plan.days());
+            warnings.extend(uses.first().and_then(of_record));
+            (forecast.collect(), uses)
         }
         None => {
-            warnings.push(assumed(scenario.model_error, &alternatives(request, &fit)));
-            (forecast(counts, &scenario, &request.plan, cancelled)?, Vec::new())
+            warnings.push(assumed(prospect.scenario.model_error, &alternatives(request, &fit)));
+            (forecast(counts, &prospect.scenario, &request.plan, cancelled)?, Vec::new())
         }
     };
+    let answers = answers(&prospect)?;
     warnings.extend(expected);
     let fastest =
         request.arrivals.iter().flat_map(|plan| plan.segments()).map(|s| s.growth_per_year).fold(0.0, f64::max);
@@ -155,8 +167,21 @@ pub fn answer_by(
         );
         warnings.push(Warning::new("arrivals_grow_fast", detail));
     }
-    let answers = Answers::default();
     Ok(OriginAnswer { fit, forecast, pools, answers, warnings, cautions: CAUTIONS.to_vec() })
+}
+
+/// Days ahead that anything is asked of: those of the forecast, and on the way to limits.
+fn asked_days(request: &OriginRequest) -> Vec<f64> {
+    /// Enough to meet every whole number of periods that pools tell apart.
+    const ON_THE_WAY: u32 = 64;
+    let mut days = request.plan.days().to_vec();
+    if !request.questions.limits.is_empty() {
+        let as_of = request.evidence.latest().as_of;
+        let limits = request.questions.limits.iter().map(|limit| days_between(as_of, limit.by()));
+        let farthest = limits.chain(days.iter().copied()).fold(0.0, f64::max);
+        days.extend((1..=ON_THE_WAY).map(|i| farthest * f64::from(i) / f64::from(ON_THE_WAY)));
+    }
+    days
 }
 
 /// What a single candidate's intervals allow for.

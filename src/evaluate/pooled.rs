@@ -9,8 +9,8 @@ use super::pool::{FEWEST_NODES, Pool};
 use super::record::{Growth, OriginRecord, RecordPlan, Scene, record};
 use super::spread::Spread;
 use super::{OriginError, OriginRequest};
-use crate::forecast::{CountForecast, TailForecast};
-use crate::model::{DegreeCounts, Evidence};
+use crate::forecast::TailLaw;
+use crate::model::{DegreeCounts, Evidence, ForecastPlan};
 
 /// Periods ahead that are scored; farther dates go by the farthest.
 pub const SCORED_AHEAD: usize = 3;
@@ -60,12 +60,14 @@ impl PoolUse {
     }
 }
 
-/// Pooled tails.
-pub(super) struct Pooled {
-    /// One list of thresholds a date of the plan.
-    pub tails: Vec<Vec<TailForecast>>,
-    /// The pools they are by, nearest first.
-    pub uses: Vec<PoolUse>,
+/// The pooled forecast from the newest snapshot on: members fitted, weighed, and ready for any date and threshold.
+pub(super) struct PooledOutlook<'a> {
+    request: &'a OriginRequest,
+    replay: Replay,
+    scene: Scene<'a>,
+    period: f64,
+    /// The pools, nearest first.
+    uses: Vec<PoolUse>,
 }
 
 impl RecordPlan {
@@ -109,57 +111,106 @@ pub fn past_records(request: &OriginRequest, cancelled: &dyn Fn() -> bool) -> Re
     scored_origins(&request.evidence).map(|origin| record(&request.evidence, origin, &plan, cancelled)).collect()
 }
 
-/// Pools the members' tails at the dates of a forecast, weighed by `past`.
-///
-/// # Errors
-/// Cancellation; a single snapshot.
-pub(super) fn pooled(
-    request: &OriginRequest,
-    past: &[OriginRecord],
-    cancelled: &dyn Fn() -> bool,
-) -> Result<Pooled, OriginError> {
-    let (evidence, plan) = (&request.evidence, &request.plan);
-    let observed = |date: Timestamp, threshold: u64| {
-        let found = evidence.snapshots().binary_search_by_key(&date, |snapshot| snapshot.as_of).ok()?;
-        Some(evidence.snapshots()[found].counts.tail_size(threshold) as f64)
-    };
-    let replay = replay(past, &observed);
-    let period = typical_period(evidence);
-    let mut scene = Scene::new(evidence, &request.fit, cancelled)?;
-    // Members are weighed by the thresholds that were scored, in hindsight too.
-    let weighed_by = scene.record(&RecordPlan::for_forecast(request).thresholds, Vec::new())?;
-    let all_given = request.arrivals.is_some() && request.fit.links_per_arrival.is_some();
-    let growth = if all_given { Growth::Known } else { Growth::Expected };
-    let mut uses: Vec<PoolUse> = Vec::new();
-    for &day in plan.days() {
-        let ahead = (day / period).round().clamp(1.0, SCORED_AHEAD as f64);
-        if uses.last().is_none_or(|last| last.ahead != ahead) {
-            uses.push(PoolUse { ahead, pool: replay.pool(&weighed_by, ahead), spread: replay.spread(ahead, growth) });
+impl<'a> PooledOutlook<'a> {
+    /// Weighs the members by `past` for dates so many `days` ahead, and keeps those in use there.
+    ///
+    /// # Errors
+    /// Cancellation; a single snapshot.
+    pub fn new(
+        request: &'a OriginRequest,
+        past: &[OriginRecord],
+        days: &[f64],
+        cancelled: &'a dyn Fn() -> bool,
+    ) -> Result<Self, OriginError> {
+        let evidence = &request.evidence;
+        let observed = |date: Timestamp, threshold: u64| {
+            let found = evidence.snapshots().binary_search_by_key(&date, |snapshot| snapshot.as_of).ok()?;
+            Some(evidence.snapshots()[found].counts.tail_size(threshold) as f64)
+        };
+        let replay = replay(past, &observed);
+        let period = typical_period(evidence);
+        let mut scene = Scene::new(evidence, &request.fit, cancelled)?;
+        // Members are weighed by the thresholds that were scored, in hindsight too.
+        let weighed_by = scene.record(&RecordPlan::for_forecast(request).thresholds, Vec::new())?;
+        let growth = growth_of(&given_by(request));
+        let mut uses: Vec<PoolUse> = Vec::new();
+        for &day in days {
+            let ahead = periods_ahead(day, period);
+            if uses.iter().all(|used| used.ahead != ahead) {
+                uses.push(PoolUse {
+                    ahead,
+                    pool: replay.pool(&weighed_by, ahead),
+                    spread: replay.spread(ahead, growth),
+                });
+            }
         }
+        uses.sort_by(|a, b| a.ahead.total_cmp(&b.ahead));
+        let in_use = |model| {
+            let own = [Member::Mechanism(model), Member::Corrected(model)];
+            uses.iter().flat_map(|used| &used.pool.shares).any(|share| own.contains(&share.member))
+        };
+        scene.keep(in_use);
+        let last = request.plan.dates().last().copied();
+        if last.is_none_or(|last| scene.targets(last, 1.0, &given_by(request)).is_empty()) {
+            return Err(OriginError::NoPeriod);
+        }
+        Ok(Self { request, replay, scene, period, uses })
     }
-    let in_use = |model| {
-        let own = [Member::Mechanism(model), Member::Corrected(model)];
-        uses.iter().flat_map(|used| &used.pool.shares).any(|share| own.contains(&share.member))
-    };
-    scene.keep(in_use);
-    let given = GivenRates {
+
+    /// The laws of the tails of `plan`, by the rates of the request or others: one list a date, one law a threshold.
+    ///
+    /// # Errors
+    /// Cancellation; no candidate.
+    pub fn tails(&self, plan: &ForecastPlan, given: &GivenRates) -> Result<Vec<Vec<TailLaw>>, OriginError> {
+        let dates = plan.dates().iter().zip(plan.days());
+        let targets = dates.flat_map(|(&date, &day)| self.scene.targets(date, day / self.period, given)).collect();
+        let newest = self.scene.record(plan.thresholds(), targets)?;
+        let growth = growth_of(given);
+        let at = |(&date, &day): (&Timestamp, &f64)| {
+            let outlook = newest.outlooks.iter().find(|o| o.target.date == date && o.target.growth == growth);
+            let used = self.uses.iter().find(|used| used.ahead == periods_ahead(day, self.period));
+            let (Some(outlook), Some(used)) = (outlook, used) else { return Err(OriginError::NoPeriod) };
+            Ok(tails_at(&newest, outlook, &used.pool, &self.replay))
+        };
+        plan.dates().iter().zip(plan.days()).map(at).collect()
+    }
+
+    /// The pools in use at so many days ahead.
+    pub fn uses_at(&self, days: &[f64]) -> Vec<PoolUse> {
+        let ahead = |used: &&PoolUse| days.iter().any(|&day| periods_ahead(day, self.period) == used.ahead);
+        self.uses.iter().filter(ahead).cloned().collect()
+    }
+
+    /// The rates that the request gives.
+    pub fn given(&self) -> GivenRates {
+        given_by(self.request)
+    }
+
+    /// Relative error of the flow past a threshold so many days ahead, as the record has it.
+    pub fn flow_error(&self, day: f64) -> f64 {
+        let spread = self.replay.spread(day / self.period, growth_of(&self.given()));
+        spread.flow_error * spread.scale.sqrt()
+    }
+}
+
+fn given_by(request: &OriginRequest) -> GivenRates {
+    GivenRates {
         arrivals: request.arrivals.clone(),
         links_per_arrival: request.fit.links_per_arrival,
         links_per_node_day: request.fit.links_per_node_day,
-    };
-    let dates = plan.dates().iter().zip(plan.days());
-    let targets = dates.flat_map(|(&date, &day)| scene.targets(date, day / period, &given)).collect();
-    let newest = scene.record(plan.thresholds(), targets)?;
-    let mut tails = Vec::new();
-    for (&date, &day) in plan.dates().iter().zip(plan.days()) {
-        let outlook =
-            newest.outlooks.iter().find(|outlook| outlook.target.date == date && outlook.target.growth == growth);
-        let ahead = (day / period).round().clamp(1.0, SCORED_AHEAD as f64);
-        let used = uses.iter().find(|used| used.ahead == ahead);
-        let (Some(outlook), Some(used)) = (outlook, used) else { return Err(OriginError::NoPeriod) };
-        tails.push(tails_at(&newest, outlook, &used.pool, &replay, plan.levels()));
+        ..GivenRates::default()
     }
-    Ok(Pooled { tails, uses })
+}
+
+/// Whether the totals ahead are known or expected.
+fn growth_of(given: &GivenRates) -> Growth {
+    let known = given.arrivals.is_some() && given.links_per_arrival.is_some();
+    if known { Growth::Known } else { Growth::Expected }
+}
+
+/// Whole periods ahead as members are weighed for them.
+fn periods_ahead(day: f64, period: f64) -> f64 {
+    (day / period).round().clamp(1.0, SCORED_AHEAD as f64)
 }
 
 /// Mean length of the newest periods, days.
@@ -168,21 +219,12 @@ fn typical_period(evidence: &Evidence) -> f64 {
     days.iter().sum::<f64>() / days.len().max(1) as f64
 }
 
-fn tails_at(
-    record: &OriginRecord,
-    outlook: &super::Outlook,
-    pool: &Pool,
-    replay: &Replay,
-    levels: &[f64],
-) -> Vec<TailForecast> {
+fn tails_at(record: &OriginRecord, outlook: &super::Outlook, pool: &Pool, replay: &Replay) -> Vec<TailLaw> {
     let spread = replay.spread(outlook.target.ahead, outlook.target.growth);
     let row = |(j, &threshold): (usize, &u64)| {
         let tail = pooled_tail(record, outlook, pool, j)?;
         let law = law(record, &tail, &spread);
-        let now = record.sizes.get(j)?.1;
-        let size =
-            CountForecast { now, expected: tail.size, median: law.quantile(0.5), intervals: law.intervals(levels) };
-        Some(TailForecast { threshold, size })
+        Some(TailLaw { threshold, now: record.sizes.get(j)?.1, law, chance: tail.chance.min(law.rest().variance) })
     };
     record.thresholds.iter().enumerate().filter_map(row).collect()
 }

@@ -2,7 +2,15 @@
 
 use jiff::Timestamp;
 
-use crate::model::{Interval, Limit, WatchedClass, WatchedNode};
+use super::costs::costs;
+use super::hubs::hubs;
+use super::limits::limits;
+use super::prospect::Prospect;
+use super::scenarios::compare;
+use super::watched::watched;
+use super::{OriginError, OriginRequest};
+use crate::forecast::Scenario;
+use crate::model::{Change, Interval, Limit, WatchedClass, WatchedNode};
 
 /// Answers to [`crate::model::Questions`].
 #[derive(Debug, Clone, PartialEq, Default)]
@@ -17,6 +25,32 @@ pub struct Answers {
     pub next_hubs: Vec<HubsAtDate>,
     /// What-ifs, in the order asked.
     pub scenarios: Vec<ScenarioAnswer>,
+}
+
+/// Answers what is asked of `prospect` besides the tails.
+pub(super) fn answers(prospect: &Prospect) -> Result<Answers, OriginError> {
+    let asked = &prospect.request.questions;
+    let standing = Change::none("");
+    Ok(Answers {
+        limits: limits(prospect, &standing, true)?,
+        bands: asked.bands.as_ref().map(|bands| costs(prospect, bands, &standing)).transpose()?,
+        watch: asked.watch.as_ref().map(|watch| watched(prospect, watch)).transpose()?,
+        next_hubs: hubs(prospect, asked.next_hubs)?,
+        scenarios: asked.scenarios.iter().map(|change| compare(prospect, change)).collect::<Result<_, _>>()?,
+    })
+}
+
+/// Answers the questions of `request` by forces that are given, with what is uncertain of them: nothing is fitted or pooled.
+///
+/// # Errors
+/// When growth cannot be computed; cancellation.
+pub fn answers_by(
+    request: &OriginRequest,
+    scenario: Scenario,
+    cancelled: &dyn Fn() -> bool,
+) -> Result<Answers, OriginError> {
+    let counts = &request.evidence.latest().counts;
+    answers(&Prospect { request, counts, scenario, pooled: None, cancelled })
 }
 
 /// A probability and the first date by which it is reached; none: not by the farthest date looked at.

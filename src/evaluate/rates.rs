@@ -1,9 +1,6 @@
 //! Forecasts of a positive rate from what past periods showed of it: arrivals a day, links per arrival.
 
-use std::f64::consts::SQRT_2;
-
-use statrs::function::erf::erfc;
-
+use crate::numerics::elementary::normal_cdf;
 use crate::numerics::roots::increasing_root;
 
 /// Standard deviation of ln(rate)'s lasting step from one period to the next, the models tried.
@@ -121,7 +118,7 @@ impl RateHistory {
         // Read off the 80 % that lie nearest: the few models of giant steps would make the second moment alone far too wide.
         let within = |reach: f64| {
             let inside = |&(weight, own, deviation): &(f64, f64, f64)| {
-                weight * (below((mean + reach - own) / deviation) - below((mean - reach - own) / deviation))
+                weight * (normal_cdf((mean + reach - own) / deviation) - normal_cdf((mean - reach - own) / deviation))
             };
             parts.iter().map(inside).sum::<f64>() / total - 0.8
         };
@@ -143,11 +140,6 @@ impl RateHistory {
     pub fn newest_rate(&self) -> f64 {
         self.newest_rate
     }
-}
-
-/// P(Z ≤ z) of a standard normal.
-fn below(z: f64) -> f64 {
-    0.5 * erfc(-z / SQRT_2)
 }
 
 #[derive(Debug, Clone, Copy)]

@@ -26,6 +26,8 @@ pub(super) struct PooledTail {
     pub size: f64,
     /// Nodes that are in the tail for certain, or expected to stay in it.
     pub kept: f64,
+    /// Variance by chance.
+    pub chance: f64,
     /// Variance by chance and by what the members disagree by.
     pub variance: f64,
     /// Variance that the uncertainty of arrivals and landings adds; 0 where they are known.

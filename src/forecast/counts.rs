@@ -1,9 +1,10 @@
 //! The law of a forecast count, given its mean and variance, and its quantiles.
 
 use statrs::distribution::{ContinuousCDF, StudentsT};
-use statrs::function::gamma::checked_gamma_lr;
 
 use crate::model::Interval;
+use crate::numerics::elementary::normal_quantile;
+use crate::numerics::gamma::gamma_quantile;
 use crate::numerics::roots::increasing_root;
 use crate::numerics::two_moments::TwoMoments;
 
@@ -11,8 +12,6 @@ use crate::numerics::two_moments::TwoMoments;
 const CONTINUOUS_ABOVE: f64 = 1e5;
 /// Standard deviation of the uncertain rate over the mean beyond which a law says nothing more.
 const WIDEST_SPREAD: f64 = 3.0;
-/// Shape of a gamma law from which the Wilson–Hilferty approximation is used, a standard deviation of a third of the mean.
-const WILSON_HILFERTY_FROM: f64 = 9.0;
 /// A quantile is sought up to this: 2^63.
 const FARTHEST: f64 = 9.3e18;
 
@@ -49,6 +48,49 @@ impl CountLaw {
         Self { degrees_of_freedom: degrees_of_freedom.max(1.0), ..self }
     }
 
+    /// The same knowledge of the variance, with another certain part, mean and variance of the rest.
+    pub(super) fn with_moments(self, floor: f64, mean: f64, variance: f64) -> Self {
+        Self::new(floor, mean, variance).with_degrees_of_freedom(self.degrees_of_freedom)
+    }
+
+    /// How much is known of the variance: degrees of freedom of Student's law, infinite when it is taken as known.
+    pub fn degrees_of_freedom(&self) -> f64 {
+        self.degrees_of_freedom
+    }
+
+    /// P(count ≤ `most`) were the variance known; 0 or 1 where the count is certain.
+    ///
+    /// ```
+    /// use tailcast::forecast::CountLaw;
+    /// assert!((CountLaw::new(3.0, 2.0, 2.0).at_most(3.0) - (-2f64).exp()).abs() < 1e-14);
+    /// ```
+    pub fn at_most(&self, most: f64) -> f64 {
+        let spare = most - self.floor;
+        if self.mean == 0.0 || self.variance == 0.0 {
+            return f64::from(self.mean.round() <= spare);
+        }
+        if spare < 0.0 { 0.0 } else { self.rest().at_most(spare.floor()) }
+    }
+
+    /// P(count > `most`), the variance known only as well as its degrees of freedom say: the place of `most` in standard normal units
+    /// is looked up in Student's law, as intervals do.
+    pub fn above(&self, most: f64) -> f64 {
+        if self.mean == 0.0 || self.variance == 0.0 {
+            return f64::from(self.mean.round() > most - self.floor);
+        }
+        let spare = (most - self.floor).floor();
+        if spare < 0.0 {
+            return 1.0;
+        }
+        let known = self.rest().above(spare);
+        match StudentsT::new(0.0, 1.0, self.degrees_of_freedom) {
+            Ok(law) if self.degrees_of_freedom.is_finite() && known > 0.0 && known < 1.0 => {
+                law.cdf(normal_quantile(known))
+            }
+            _ => known,
+        }
+    }
+
     /// The certain part.
     pub fn floor(&self) -> f64 {
         self.floor
@@ -70,7 +112,7 @@ impl CountLaw {
             return self.floor + self.mean.round();
         }
         if self.mean > CONTINUOUS_ABOVE {
-            return self.floor + self.continuous_quantile(probability).round();
+            return self.floor + gamma_quantile(self.mean, self.variance, probability).round();
         }
         self.floor + self.first(|x| self.distribution(x) >= probability)
     }
@@ -127,28 +169,11 @@ impl CountLaw {
     fn distribution(&self, x: f64) -> f64 {
         self.rest().at_most(x)
     }
-
-    fn continuous_quantile(&self, probability: f64) -> f64 {
-        let shape = self.mean * self.mean / self.variance;
-        if shape < WILSON_HILFERTY_FROM {
-            let reach = self.mean + 60.0 * self.variance.sqrt();
-            let below = |x: f64| checked_gamma_lr(shape, x * shape / self.mean).unwrap_or(0.0) - probability;
-            return increasing_root(0.0, reach, 1e-6 * self.mean, below);
-        }
-        let z = normal_quantile(probability);
-        let ninth = self.variance / (9.0 * self.mean * self.mean);
-        self.mean * (1.0 - ninth + z * ninth.sqrt()).max(0.0).powi(3)
-    }
-}
-
-/// Standard normal quantile.
-pub(super) fn normal_quantile(probability: f64) -> f64 {
-    -std::f64::consts::SQRT_2 * statrs::function::erf::erfc_inv(2.0 * probability)
 }
 
 /// Smallest whole x in [low, high] at which the increasing `f` is at least zero: sought first in ln(1 + x), then settled to
 /// the unit, or to 10⁻⁵ relative where that is more.
-pub(super) fn first_whole(low: f64, high: f64, mut f: impl FnMut(f64) -> f64) -> f64 {
+pub(crate) fn first_whole(low: f64, high: f64, mut f: impl FnMut(f64) -> f64) -> f64 {
     const LOG_SEARCH: f64 = 1e-4;
     const SETTLED: f64 = 1e-5;
     if f(low) >= 0.0 {

@@ -1,9 +1,9 @@
 //! Forecasts at each date of a plan.
 
 use super::largest::{DegreeRange, largest_degree};
-use super::{CountForecast, CountLaw, DateForecast, ForecastError, TailForecast};
+use super::{CountForecast, CountLaw, DateForecast, ForecastError, TailForecast, TailLaw};
 use crate::growth::{Course, GrowthError, NetworkLaw, TailSum};
-use crate::model::{DegreeCounts, ForecastPlan, GrowthParameters};
+use crate::model::{Change, DegreeCounts, ForecastPlan, GrowthParameters, ParameterFault};
 use crate::numerics::tolerances::Accuracy;
 
 /// The forces one standard deviation below and above their estimates in one direction of uncertainty; directions are
@@ -42,6 +42,23 @@ pub struct Scenario {
     pub model_error: f64,
 }
 
+impl Scenario {
+    /// The same under a change.
+    ///
+    /// # Errors
+    /// When a rate comes out of range.
+    pub fn under(&self, change: &Change) -> Result<Self, ParameterFault> {
+        let excursion = |e: &Excursion| Ok(Excursion { low: change.apply(&e.low)?, high: change.apply(&e.high)? });
+        let alternative = |(forces, weight): &(GrowthParameters, f64)| Ok((change.apply(forces)?, *weight));
+        Ok(Self {
+            forces: change.apply(&self.forces)?,
+            excursions: self.excursions.iter().map(excursion).collect::<Result<_, _>>()?,
+            alternatives: self.alternatives.iter().map(alternative).collect::<Result<_, _>>()?,
+            model_error: self.model_error,
+        })
+    }
+}
+
 /// Forecasts the network with `counts` today at every date of `plan`; `cancelled` is asked before each threshold.
 ///
 /// Formula: the variance of a count is its sampling variance under the central forces, plus for each excursion the square
@@ -74,6 +91,20 @@ pub fn forecast_totals(
 ) -> Result<Vec<DateForecast>, ForecastError> {
     let outlook = Outlook::new(counts, scenario, plan, cancelled)?;
     plan.dates().iter().zip(plan.days()).map(|(&date, &day)| outlook.totals(&outlook.laws(day)?, date, day)).collect()
+}
+
+/// The laws of the tails that [`forecast`] gives: one list a date, one law a threshold.
+///
+/// # Errors
+/// Those of [`forecast`].
+pub fn tail_laws(
+    counts: &DegreeCounts,
+    scenario: &Scenario,
+    plan: &ForecastPlan,
+    cancelled: &dyn Fn() -> bool,
+) -> Result<Vec<Vec<TailLaw>>, ForecastError> {
+    let outlook = Outlook::new(counts, scenario, plan, cancelled)?;
+    plan.days().iter().map(|&day| outlook.tails(&outlook.laws(day)?, outlook.central.nodes(day))).collect()
 }
 
 impl DateForecast {
@@ -135,8 +166,12 @@ impl<'a> Outlook<'a> {
         let laws = self.laws(day)?;
         let totals = self.totals(&laws, date, day)?;
         let nodes = totals.nodes.expected;
-        let tail = self.plan.thresholds().iter().map(|&j| self.tail(&laws, j, nodes));
-        Ok(totals.with_tail(tail.collect::<Result<_, _>>()?))
+        let tail = self.tails(&laws, nodes)?;
+        Ok(totals.with_tail(tail.iter().map(|law| law.forecast(self.plan.levels())).collect()))
+    }
+
+    fn tails(&self, laws: &Laws, nodes: f64) -> Result<Vec<TailLaw>, ForecastError> {
+        self.plan.thresholds().iter().map(|&j| self.tail(laws, j, nodes)).collect()
     }
 
     fn totals(&self, laws: &Laws, date: jiff::Timestamp, day: f64) -> Result<DateForecast, ForecastError> {
@@ -144,21 +179,22 @@ impl<'a> Outlook<'a> {
         Ok(DateForecast { date, nodes, links, largest_degree: self.largest(laws)?, tail: Vec::new() })
     }
 
-    fn tail(&self, laws: &Laws, threshold: u64, nodes: f64) -> Result<TailForecast, ForecastError> {
+    fn tail(&self, laws: &Laws, threshold: u64, nodes: f64) -> Result<TailLaw, ForecastError> {
         if (self.cancelled)() {
             return Err(ForecastError::Cancelled);
         }
         let now = self.counts.tail_size(threshold) as f64;
-        let TailSum { kept, mean: central, variance, .. } = laws.central.tail(threshold, Accuracy::Full)?;
+        let TailSum { kept, mean: central, variance: chance, .. } = laws.central.tail(threshold, Accuracy::Full)?;
         let (mean, disagreement) = pooled(laws, threshold, central)?;
         let beyond = excursion_variance(&laws.ends, |law| Ok(law.rough_tail(threshold)?.mean))?;
         // Nodes that come past the threshold and nodes that leave the tail are what the model can be wrong about; of a tail
         // that all but vanishes it is not wrong by all that was lost.
         // And a threshold that nearly every node passes leaves little to be wrong about.
         let flow = ((mean - kept) + (now - kept).min(kept)) * (1.0 - mean / nodes).max(0.0);
-        let variance = variance + beyond + disagreement + (self.model_error * flow).powi(2);
+        let variance = chance + beyond + disagreement + (self.model_error * flow).powi(2);
         let certain = if self.central.parameters().has_losses() { 0.0 } else { kept };
-        Ok(TailForecast { threshold, size: self.count(now, certain, mean, variance) })
+        let law = CountLaw::new(certain, mean - certain, variance);
+        Ok(TailLaw { threshold, now, law, chance })
     }
 
     fn nodes(&self, day: f64) -> CountForecast {

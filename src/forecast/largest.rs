@@ -1,9 +1,10 @@
 //! The law of the largest degree.
 
-use super::counts::{first_whole, normal_quantile};
+use super::counts::first_whole;
 use super::{DegreeForecast, ForecastError};
 use crate::growth::{GrowthError, NetworkLaw, TailSum};
 use crate::model::{DegreeCounts, Interval, MAX_DEGREE};
+use crate::numerics::elementary::normal_quantile;
 use crate::numerics::tolerances::Accuracy;
 
 /// Forecasts the largest degree of a network with law `law`.

@@ -14,6 +14,7 @@ use super::mean_field::{Course, GrowthError};
 use crate::numerics::inversion::{rare_upper_tail, upper_tail};
 use crate::numerics::quadrature::{PANEL, PANEL_NODES};
 use crate::numerics::tolerances::{Accuracy, MESH_LOG_CHANGE};
+use crate::numerics::two_moments::TwoMoments;
 
 /// Expected gains below this are none.
 const NEVER: f64 = 1e-280;
@@ -68,6 +69,11 @@ impl NodeLaw {
     /// The law from day `from` to day `to` of a course, for an active node of growth factor one.
     pub fn between(course: &Course, from: f64, to: f64) -> Self {
         Self::of_group(course, 1.0, from, to, to)
+    }
+
+    /// The law from day `from` to day `to` of a node that gains no link.
+    pub(crate) fn gainless(course: &Course, from: f64, to: f64) -> Self {
+        Self::of_group(course, 0.0, from, from, to)
     }
 
     /// The law from day `from` to day `to` of a node with growth factor `factor` that falls dormant at day `until`, and from
@@ -196,6 +202,16 @@ impl NodeLaw {
         let of_one_link = self.expansion * (2.0 * self.spread - self.expansion + 1.0);
         let of_immigrants: f64 = self.nodes().map(|(spread, immigration)| immigration * (2.0 * spread + 1.0)).sum();
         degree as f64 * of_one_link + of_immigrants
+    }
+
+    /// P(X ≥ j), E[X; X ≥ j] and E[X²; X ≥ j] of a node that starts with `degree` links, given that it stays, by the counting law with
+    /// its mean and variance: exact at constant u/v without losses.
+    pub(crate) fn moments_above(&self, degree: u64, threshold: u64) -> [f64; 3] {
+        let floor = if self.losses { 0 } else { degree };
+        let rest = TwoMoments { mean: self.mean(degree) - floor as f64, variance: self.variance(degree) };
+        let [p, first, second] = rest.moments_from(threshold.saturating_sub(floor) as f64);
+        let floor = floor as f64;
+        [p, floor * p + first, floor * floor * p + 2.0 * floor * first + second]
     }
 
     fn mean_gain_from_uniform(&self) -> f64 {

@@ -1,6 +1,7 @@
 //! The network's totals over time: nodes N(t) and link ends K(t).
 
 use super::attraction::{Attraction, FACTORS, GrowthFactor, growth_factors};
+use super::refusals::Refusals;
 use crate::model::{DegreeCounts, GrowthParameters};
 use crate::numerics::elementary::exp_m1_ratio;
 use crate::numerics::inversion::InversionError;
@@ -58,6 +59,18 @@ pub enum GrowthError {
         /// Where it should have ended.
         to: f64,
     },
+    /// A cap on nodes that do not grow alike.
+    #[error(
+        "a degree cap is worked out for nodes that all grow by one linear kernel; ask for it with the model mix, uniform or \
+         preferential"
+    )]
+    CapNeedsAlike,
+    /// The share of refused links could not be found.
+    #[error("the share of links that the degree cap refuses did not settle; ask for nearer dates or a higher cap")]
+    CapUnsettled,
+    /// A kernel whose nodes have no exact law.
+    #[error("this is worked out for the linear kernel; ask for another model than power, or give no kernel_exponent")]
+    NoNodeLaw,
     /// A tail probability could not be computed.
     #[error(transparent)]
     Inversion(#[from] InversionError),
@@ -90,6 +103,7 @@ pub struct Course {
     horizon: f64,
     growth_factors: Vec<GrowthFactor>,
     attraction: Attraction,
+    refusals: Refusals,
 }
 
 /// The state at a panel's start; within it the arrival rate is one exponential.
@@ -122,12 +136,16 @@ impl Course {
         let link_ends = counts.link_ends() as f64;
         let lands = parameters.links_per_arrival() > 0.0 || parameters.links_per_node_day() > 0.0;
         let share = parameters.mix.preferential_share();
+        if parameters.degree_cap.is_some() && !parameters.grow_alike() {
+            return Err(GrowthError::CapNeedsAlike);
+        }
         if share > STARTS_UP_TO && lands && link_ends == 0.0 && parameters.entry.mean() == 0.0 {
             return Err(GrowthError::NobodyStarts);
         }
         let growth_factors = growth_factors(parameters.growth_variance(), FACTORS);
         let attraction = Attraction::default();
-        let mut course = Self { parameters, panels: Vec::new(), horizon, growth_factors, attraction };
+        let mut course =
+            Self { parameters, panels: Vec::new(), horizon, growth_factors, attraction, refusals: Refusals::default() };
         let (mut start, mut nodes, mut link_ends) = (0.0, counts.nodes() as f64, link_ends);
         loop {
             let arrival_rate = course.parameters.arrivals.rate(start);
@@ -142,6 +160,7 @@ impl Course {
                 let (nodes, link_ends) = course.advance(&panel, horizon - start);
                 course.check_countable(horizon, nodes, link_ends)?;
                 course.attraction = Attraction::along(&course)?;
+                course.refusals = Refusals::along(&course, counts)?;
                 return Ok(course);
             }
             if course.panels.len() >= MESH_MAX_PANELS {
@@ -168,6 +187,15 @@ impl Course {
         self.horizon
     }
 
+    /// The most links a node can gain up to, if there is a cap.
+    pub(crate) fn cap(&self) -> Option<u64> {
+        self.parameters.degree_cap.map(|cap| cap.links())
+    }
+
+    pub(super) fn with_refusals(self, refusals: Refusals) -> Self {
+        Self { refusals, ..self }
+    }
+
     /// Expected number of nodes N(t) at `day`.
     pub fn nodes(&self, day: f64) -> f64 {
         self.totals(day).0
@@ -188,7 +216,7 @@ impl Course {
     pub(crate) fn hazards(&self, day: f64, factor: f64) -> Hazards {
         let (nodes, link_ends) = self.totals(day);
         let p = self.parameters.mix.preferential_share();
-        let landing = self.landing(day, nodes);
+        let landing = self.landing(day, nodes) * self.refusals.boost(day);
         let nodes = nodes * (1.0 - self.parameters.dormant_share());
         let attracting = link_ends * self.attraction.at(day);
         Hazards {
@@ -259,7 +287,8 @@ impl Course {
     pub(super) fn totals(&self, day: f64) -> (f64, f64) {
         let after = self.panels.partition_point(|p| p.start <= day);
         let panel = &self.panels[after.saturating_sub(1)];
-        self.advance(panel, day - panel.start)
+        let (nodes, link_ends) = self.advance(panel, day - panel.start);
+        (nodes, (link_ends - self.refusals.lost_by(day)).max(0.0))
     }
 
     fn advance(&self, panel: &Panel, days: f64) -> (f64, f64) {

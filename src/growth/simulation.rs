@@ -1,14 +1,17 @@
 //! Exact event-by-event simulation of the same network, seeded.
 
 mod members;
+mod streams;
 
 use rand::rngs::SmallRng;
 use rand::{RngExt, SeedableRng};
 use rand_distr::{Distribution, Poisson};
 
 use members::Members;
+use streams::{Part, Streams};
 
-use crate::model::{CountsFault, DegreeCounts, GrowthParameters, Move};
+use crate::model::{CountsFault, DegreeCap, DegreeCounts, GrowthParameters, Move};
+use crate::numerics::roots::increasing_root;
 
 /// Most nodes and most link ends a simulation holds in memory: node indices are 32-bit.
 const MAX_HELD: u64 = 1 << 31;
@@ -51,6 +54,9 @@ pub struct Simulation {
     members: Members,
     day: f64,
     rng: SmallRng,
+    cap: Option<DegreeCap>,
+    /// Streams of random numbers for each arrival, where the network is one of a pair.
+    streams: Option<Streams>,
 }
 
 impl Simulation {
@@ -64,7 +70,9 @@ impl Simulation {
             return Err(SimulationError::TooLarge { held });
         }
         let members = Members::new(&parameters, counts);
-        let mut network = Self { parameters, members, day: 0.0, rng: SmallRng::seed_from_u64(seed) };
+        let rng = SmallRng::seed_from_u64(seed);
+        let cap = parameters.degree_cap;
+        let mut network = Self { parameters, members, day: 0.0, rng, cap, streams: None };
         let dormant = network.parameters.dormant_share();
         for (degree, nodes) in counts.iter() {
             for _ in 0..nodes {
@@ -76,6 +84,30 @@ impl Simulation {
         Ok(network)
     }
 
+    /// One of a pair: every arrival, and what lands with it, draws from a stream of its own that `seed` and the arrival's
+    /// number alone decide (common random numbers), so that two networks of equal seeds and slightly different forces
+    /// differ by their forces and little else. Arrivals are the same where the plans are.
+    ///
+    /// The pairing is exact only while nothing happens between arrivals; under departures, lost links or links that land per
+    /// node and day, what happens between two arrivals draws on the stream of the first, and networks drift apart within
+    /// that stretch.
+    ///
+    /// # Errors
+    /// When the network would not fit in memory.
+    pub fn paired(counts: &DegreeCounts, parameters: GrowthParameters, seed: u64) -> Result<Self, SimulationError> {
+        let mut network = Self::new(counts, parameters, seed)?;
+        network.streams = Some(Streams::new(seed));
+        Ok(network)
+    }
+
+    /// From now on no node gains links beyond the cap; nodes that have more keep them, and a newcomer's own links are not
+    /// cut. An end picks its node as without a cap. Where that node is full the end is lost, or picks again by the same
+    /// mix until it finds one that is not; it is lost too when every node that the mix could pick is full.
+    pub fn with_cap(mut self, cap: DegreeCap) -> Self {
+        self.cap = Some(cap);
+        self
+    }
+
     /// Today's degree counts.
     ///
     /// # Errors
@@ -85,6 +117,11 @@ impl Simulation {
         sorted.sort_unstable();
         let pairs: Vec<(u64, u64)> = sorted.chunk_by(|a, b| a == b).map(|run| (run[0], run.len() as u64)).collect();
         DegreeCounts::from_pairs(&pairs)
+    }
+
+    /// Nodes with at least `threshold` links today.
+    pub fn tail_size(&self, threshold: u64) -> u64 {
+        self.members.degrees.iter().filter(|&&degree| degree >= threshold).count() as u64
     }
 
     /// Remembers every node's degree of today, for [`Self::moves`].
@@ -104,12 +141,29 @@ impl Simulation {
         runs.map(|run| Move { before: run[0].0, after: run[0].1, nodes: run.len() as u64 }).collect()
     }
 
+    /// Watches the highest degree of every node from today on, for [`Self::peaks`]; marks too.
+    pub fn watch_peaks(&mut self) {
+        self.mark();
+        self.members.peaks = Some(self.members.degrees.clone());
+        self.members.departed_peaks.clear();
+    }
+
+    /// (Degree when peaks began to be watched, highest degree since) of every node that was present then, those that
+    /// departed since included. Without [`Self::watch_peaks`], degrees of today stand for the highest.
+    pub fn peaks(&self) -> Vec<(u64, u64)> {
+        let present = self.members.marked.iter().enumerate();
+        let present = present.filter_map(|(node, &before)| Some((before?, self.members.peak(node))));
+        present.chain(self.members.departed_peaks.iter().copied()).collect()
+    }
+
     /// Grows the network to `day`; does nothing when that is past.
     ///
     /// # Errors
     /// When the network outgrows memory.
     pub fn run_until(&mut self, day: f64) -> Result<(), SimulationError> {
-        // The cumulative arrivals of a Poisson process are exponential steps of mean one: walk them on that clock.
+        if self.streams.is_some() {
+            return self.run_paired(day);
+        }
         let planned = self.parameters.arrivals.arrivals_between(self.day, day);
         let arrivals = draw_poisson(planned, &mut self.rng);
         if self.quiet_between_arrivals() {
@@ -127,6 +181,29 @@ impl Simulation {
         Ok(())
     }
 
+    /// The cumulative arrivals of a Poisson process are exponential steps of mean one: arrivals walk on that clock, each by
+    /// a step of its own, whatever the plan.
+    fn run_paired(&mut self, day: f64) -> Result<(), SimulationError> {
+        let quiet = self.quiet_between_arrivals();
+        while let Some(due) = self.streams.as_ref().map(Streams::next_arrival) {
+            let plan = &self.parameters.arrivals;
+            if due > plan.arrivals_between(0.0, day) {
+                break;
+            }
+            if !quiet {
+                let passed = |day: f64| plan.arrivals_between(0.0, day) - due;
+                let time = increasing_root(self.day, day, f64::EPSILON * day, passed);
+                self.pass_until(time)?;
+            }
+            self.arrive()?;
+        }
+        if !quiet {
+            self.pass_until(day)?;
+        }
+        self.day = self.day.max(day);
+        Ok(())
+    }
+
     /// Grows the network by exactly `arrivals` nodes, whatever the plan's rate.
     ///
     /// # Errors
@@ -137,9 +214,14 @@ impl Simulation {
 
     /// One arrival: its landing ends pick among the nodes present, in the state before the arrival; then it joins.
     fn arrive(&mut self) -> Result<(), SimulationError> {
+        if let Some(streams) = &mut self.streams {
+            streams.count_arrival();
+        }
+        self.draw_from(Part::Landing);
         let mean = self.parameters.links_per_arrival();
         let landing = mean.floor() as u64 + u64::from(self.rng.random::<f64>() < mean.fract());
         self.land(landing)?;
+        self.draw_from(Part::Joining);
         let entry = self.draw_entry();
         self.check_room(entry)?;
         let kappa = self.parameters.dormancy_hazard();
@@ -153,11 +235,21 @@ impl Simulation {
         Ok(())
     }
 
+    /// Turns to the stream of a part of the arrival in hand, where the network is one of a pair.
+    fn draw_from(&mut self, part: Part) {
+        if let Some(streams) = &self.streams {
+            self.rng = streams.of(part);
+        }
+    }
+
     /// Lands `count` ends at once: all pick from the state before the first of them.
     fn land(&mut self, count: u64) -> Result<(), SimulationError> {
         self.check_room(count)?;
         let share = self.parameters.mix.preferential_share();
-        self.members.land(count, share, &mut self.rng);
+        match self.cap {
+            None => self.members.land(count, share, &mut self.rng),
+            Some(cap) => self.members.land_capped(count, share, cap, &mut self.rng),
+        }
         Ok(())
     }
 

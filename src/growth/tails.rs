@@ -1,6 +1,7 @@
 //! Tail sizes: how many nodes will have at least a threshold of links.
 
-use super::law::MixedLaw;
+use super::holdings::{Holdings, Piece, holdings};
+use super::law::{MixedLaw, NodeLaw};
 use super::mean_field::{Course, GrowthError};
 use super::moments::MomentLaw;
 use crate::model::DegreeCounts;
@@ -19,6 +20,46 @@ pub struct TailSum {
     pub variance: f64,
     /// ln of the probability that no node at all is in the tail.
     pub log_none: f64,
+}
+
+/// The present nodes of one degree, as far as they can matter to a tail.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct TailClass {
+    /// Degree at the start.
+    pub degree: u64,
+    /// Nodes of that degree at the start.
+    pub nodes: f64,
+    /// Probability that one of them is present and in the tail.
+    pub probability: f64,
+}
+
+/// Whom a tail is made of.
+#[derive(Debug, Clone, PartialEq, Default)]
+pub struct TailParts {
+    /// Present nodes, from the largest degree down; those that cannot matter are left out.
+    pub present: Vec<TailClass>,
+    /// Expected newcomers.
+    pub newcomers: f64,
+}
+
+impl TailParts {
+    /// The tail size, and how many of those with `threshold` links or more at the start are in it still.
+    pub fn sum(&self, threshold: u64) -> TailSum {
+        let mut sum = TailSum { kept: 0.0, mean: self.newcomers, variance: self.newcomers, log_none: -self.newcomers };
+        for &TailClass { degree, nodes, probability } in &self.present {
+            sum.mean += nodes * probability;
+            sum.variance += nodes * probability * (1.0 - probability);
+            sum.log_none += nodes * (-probability).ln_1p();
+            if degree >= threshold {
+                sum.kept += nodes * probability;
+            }
+        }
+        sum
+    }
+
+    fn present_mean(&self) -> f64 {
+        self.present.iter().map(|class| class.nodes * class.probability).sum()
+    }
 }
 
 /// The law of a whole network at one day: of every present node's degree and of the newcomers'.
@@ -54,7 +95,7 @@ pub struct NetworkLaw<'a> {
 /// The laws of the network's nodes.
 enum NodeLaws {
     /// Exact, of a present node and of one that arrives at day 0.
-    Exact { present: MixedLaw, earliest: MixedLaw },
+    Exact { present: Box<MixedLaw>, earliest: MixedLaw },
     /// By two moments.
     Moments(MomentLaw),
 }
@@ -66,7 +107,7 @@ impl<'a> NetworkLaw<'a> {
     /// When the moments of a power kernel cannot be integrated.
     pub fn at(course: &'a Course, counts: &'a DegreeCounts, day: f64) -> Result<Self, GrowthError> {
         let nodes = if course.parameters().kernel_exponent() == 1.0 {
-            let present = MixedLaw::of_present(course, day);
+            let present = Box::new(MixedLaw::of_present(course, day));
             NodeLaws::Exact { present, earliest: MixedLaw::of_newcomer(course, 0.0, day) }
         } else {
             NodeLaws::Moments(MomentLaw::solve(course, counts, day)?)
@@ -79,21 +120,26 @@ impl<'a> NetworkLaw<'a> {
     /// # Errors
     /// Those of [`super::NodeLaw::tail`].
     pub fn tail(&self, threshold: u64, accuracy: Accuracy) -> Result<TailSum, GrowthError> {
-        let mut sum = TailSum::default();
-        let newcomers = match &self.nodes {
+        Ok(self.parts(threshold, accuracy)?.sum(threshold))
+    }
+
+    /// Whom the tail is made of.
+    ///
+    /// # Errors
+    /// Those of [`super::NodeLaw::tail`].
+    pub fn parts(&self, threshold: u64, accuracy: Accuracy) -> Result<TailParts, GrowthError> {
+        let mut parts = TailParts::default();
+        match &self.nodes {
             NodeLaws::Exact { present, earliest } => {
-                self.add_present(&mut sum, threshold, accuracy, |k| present.tail(&[(k, 1.0)], threshold, accuracy))?;
-                self.newcomers(earliest, threshold, accuracy, sum.mean)?
+                self.add_present(&mut parts, threshold, accuracy, |k| present.tail(&[(k, 1.0)], threshold, accuracy))?;
+                parts.newcomers = self.newcomers(earliest, threshold, accuracy, parts.present_mean())?;
             }
             NodeLaws::Moments(laws) => {
-                self.add_present(&mut sum, threshold, accuracy, |k| Ok(laws.tail(k, threshold)))?;
-                laws.newcomers(threshold)
+                self.add_present(&mut parts, threshold, accuracy, |k| Ok(laws.tail(k, threshold)))?;
+                parts.newcomers = laws.newcomers(threshold);
             }
-        };
-        sum.mean += newcomers;
-        sum.variance += newcomers;
-        sum.log_none -= newcomers;
-        Ok(sum)
+        }
+        Ok(parts)
     }
 
     /// Whether [`Self::rough_tail`] is cheaper than [`Self::tail`].
@@ -111,8 +157,9 @@ impl<'a> NetworkLaw<'a> {
             NodeLaws::Exact { present, .. } if present.is_mixed() => present,
             _ => return self.tail(threshold, Accuracy::Working),
         };
-        let mut sum = TailSum::default();
-        self.add_present(&mut sum, threshold, Accuracy::Working, |k| Ok(present.rough_tail(&[(k, 1.0)], threshold)))?;
+        let mut parts = TailParts::default();
+        let tail = |k| Ok(present.rough_tail(&[(k, 1.0)], threshold));
+        self.add_present(&mut parts, threshold, Accuracy::Working, tail)?;
         let (course, day) = (self.course, self.day);
         let parameters = course.parameters();
         let in_tail = |arrival: f64| {
@@ -121,35 +168,45 @@ impl<'a> NetworkLaw<'a> {
             parameters.arrivals.rate(arrival) * course.survival(day - arrival) * share
         };
         let edges = course.arrival_edges(day);
-        let newcomers: f64 = edges.windows(2).map(|pair| PANEL.integrate(pair[0], pair[1], in_tail)).sum();
-        sum.mean += newcomers;
-        sum.variance += newcomers;
-        sum.log_none -= newcomers;
-        Ok(sum)
+        parts.newcomers = edges.windows(2).map(|pair| PANEL.integrate(pair[0], pair[1], in_tail)).sum();
+        Ok(parts.sum(threshold))
+    }
+
+    /// What the nodes within each of `pieces` of the degrees hold and weigh.
+    ///
+    /// # Errors
+    /// Under a kernel whose nodes have no exact law.
+    pub fn holdings(&self, pieces: &[Piece]) -> Result<Holdings, GrowthError> {
+        let NodeLaws::Exact { present, .. } = &self.nodes else { return Err(GrowthError::NoNodeLaw) };
+        Ok(holdings(self.course, self.counts, self.day, present, pieces))
     }
 
     fn add_present(
         &self,
-        sum: &mut TailSum,
+        parts: &mut TailParts,
         threshold: u64,
         accuracy: Accuracy,
         tail: impl Fn(u64) -> Result<f64, GrowthError>,
     ) -> Result<(), GrowthError> {
         let survival = self.course.survival(self.day);
+        let cap = self.course.cap();
+        let gainless = cap.map(|_| NodeLaw::gainless(self.course, 0.0, self.day));
         let mut below = self.counts.nodes();
+        let mut mean = 0.0;
         for (degree, nodes) in self.counts.iter().rev() {
-            let probability = survival * tail(degree)?;
-            if probability * below as f64 <= accuracy.negligible() * sum.mean + TAIL_ZERO {
+            let probability = match (cap, &gainless) {
+                (Some(cap), Some(law)) if degree >= cap => law.tail_within(degree, threshold, accuracy)?,
+                (Some(cap), _) if threshold > cap => 0.0,
+                _ => tail(degree)?,
+            };
+            let probability = survival * probability;
+            if probability * below as f64 <= accuracy.negligible() * mean + TAIL_ZERO {
                 break;
             }
             below -= nodes;
             let nodes = nodes as f64;
-            sum.mean += nodes * probability;
-            sum.variance += nodes * probability * (1.0 - probability);
-            sum.log_none += nodes * (-probability).ln_1p();
-            if degree >= threshold {
-                sum.kept += nodes * probability;
-            }
+            mean += nodes * probability;
+            parts.present.push(TailClass { degree, nodes, probability });
         }
         Ok(())
     }
@@ -165,13 +222,20 @@ impl<'a> NetworkLaw<'a> {
         let parameters = course.parameters();
         let arrivals = parameters.arrivals.arrivals_between(0.0, day);
         let entry = parameters.entry.shares();
+        // Of those that arrive at or past a cap, links are only lost; the others do not come past it.
+        let (open, full) = entry.split_at(course.cap().map_or(entry.len(), |cap| entry.partition_point(|e| e.0 < cap)));
+        let open = if course.cap().is_some_and(|cap| threshold > cap) { &[] } else { open };
         // The earliest newcomers bound the later ones, as long as links are not lost.
-        let bound = arrivals * earliest.tail(entry, threshold, accuracy)?;
-        if arrivals == 0.0 || (!parameters.has_losses() && bound <= accuracy.negligible() * present + TAIL_ZERO) {
+        let lossless = !parameters.has_losses() && full.is_empty();
+        let bound = arrivals * if lossless { earliest.tail(open, threshold, accuracy)? } else { 1.0 };
+        if arrivals == 0.0 || (lossless && bound <= accuracy.negligible() * present + TAIL_ZERO) {
             return Ok(0.0);
         }
         let mut in_tail = |arrival: f64| -> Result<f64, GrowthError> {
-            let share = MixedLaw::of_newcomer(course, arrival, day).tail(entry, threshold, accuracy)?;
+            let mut share = MixedLaw::of_newcomer(course, arrival, day).tail(open, threshold, accuracy)?;
+            if !full.is_empty() {
+                share += NodeLaw::gainless(course, arrival, day).mixture_tail(full, threshold, accuracy)?;
+            }
             Ok(parameters.arrivals.rate(arrival) * course.survival(day - arrival) * share)
         };
         let mut mean = 0.0;

@@ -165,6 +165,12 @@ impl DegreeCounts {
         self.degrees.last().copied().unwrap_or(0)
     }
 
+    /// The degree of the node of a rank, 1 the largest; none where there are fewer nodes.
+    pub fn degree_of_rank(&self, rank: u64) -> Option<u64> {
+        let place = self.tails.partition_point(|&tail| tail >= rank);
+        place.checked_sub(1).and_then(|i| self.degrees.get(i)).copied()
+    }
+
     /// Tail size S_j: the number of nodes with degree at least `threshold`.
     pub fn tail_size(&self, threshold: u64) -> u64 {
         let first = self.degrees.partition_point(|&k| k < threshold);

@@ -2,7 +2,7 @@
 
 use std::fmt;
 
-use super::{ArrivalPlan, DegreeKind, EntryDegrees};
+use super::{ArrivalPlan, DegreeCap, DegreeKind, EntryDegrees};
 
 /// The largest rate accepted for links per arrival, links per node and day, departures and losses.
 const MAX_RATE: f64 = 1e9;
@@ -63,6 +63,8 @@ pub struct GrowthParameters {
     pub arrivals: ArrivalPlan,
     /// Distribution of a newcomer's degree.
     pub entry: EntryDegrees,
+    /// Cap on the links a node can gain up to, if there is one.
+    pub degree_cap: Option<DegreeCap>,
     rates: Rates,
 }
 
@@ -113,7 +115,14 @@ impl GrowthParameters {
         links_per_arrival: f64,
     ) -> Result<Self, ParameterFault> {
         let links_per_arrival = checked("links_per_arrival", links_per_arrival, MAX_RATE)?;
-        Ok(Self { kind, mix, arrivals, entry, rates: Rates { links_per_arrival, ..Rates::default() } })
+        Ok(Self {
+            kind,
+            mix,
+            arrivals,
+            entry,
+            degree_cap: None,
+            rates: Rates { links_per_arrival, ..Rates::default() },
+        })
     }
 
     /// Adds ι: link ends landing per present node and day, whoever arrives.
@@ -179,6 +188,16 @@ impl GrowthParameters {
     pub fn with_links_per_arrival(mut self, links_per_arrival: f64) -> Result<Self, ParameterFault> {
         self.rates.links_per_arrival = checked("links_per_arrival", links_per_arrival, MAX_RATE)?;
         Ok(self)
+    }
+
+    /// The same forces with a cap on degrees.
+    pub fn with_degree_cap(self, degree_cap: Option<DegreeCap>) -> Self {
+        Self { degree_cap, ..self }
+    }
+
+    /// Whether all nodes grow by one linear kernel: none dormant, none faster than others of its degree.
+    pub fn grow_alike(&self) -> bool {
+        self.rates.dormant_share == 0.0 && self.rates.growth_variance == 0.0 && self.rates.excess_exponent == 0.0
     }
 
     /// ℓ, link ends landing on present nodes per arrival.

@@ -1,6 +1,9 @@
 //! Elementary functions that keep their relative accuracy near zero.
 
+use std::f64::consts::{FRAC_1_SQRT_2, SQRT_2};
+
 use num_complex::Complex64;
+use statrs::function::erf::{erfc, erfc_inv};
 
 /// Computes (e^x − 1)/x, with its limit 1 at x = 0.
 ///
@@ -56,4 +59,20 @@ pub fn complex_exp_m1(z: Complex64) -> Complex64 {
 /// ```
 pub fn logistic(x: f64) -> f64 {
     1.0 / (1.0 + (-x).exp())
+}
+
+/// Standard normal distribution function Φ(z).
+///
+/// ```
+/// use tailcast::numerics::elementary::{normal_cdf, normal_quantile};
+/// assert!((normal_cdf(1.96) - 0.9750021048517795).abs() < 1e-12);
+/// assert!((normal_quantile(normal_cdf(-3.0)) + 3.0).abs() < 1e-9);
+/// ```
+pub fn normal_cdf(z: f64) -> f64 {
+    0.5 * erfc(-z * FRAC_1_SQRT_2)
+}
+
+/// Standard normal quantile; −∞ at 0 and ∞ at 1.
+pub fn normal_quantile(probability: f64) -> f64 {
+    -SQRT_2 * erfc_inv(2.0 * probability)
 }

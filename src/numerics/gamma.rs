@@ -1,5 +1,12 @@
 //! Ratios of gamma functions without the cancellation of two large logarithms.
 
+use statrs::function::gamma::checked_gamma_lr;
+
+use super::elementary::normal_quantile;
+use super::roots::increasing_root;
+
+/// Shape from which the Wilson–Hilferty approximation is used, a standard deviation of a third of the mean.
+const WILSON_HILFERTY_FROM: f64 = 9.0;
 /// Below this the Stirling series is not used; its first omitted term is then under 10⁻¹⁶.
 const STIRLING_FROM: f64 = 30.0;
 
@@ -37,4 +44,29 @@ pub fn ln_rising(z: f64, n: f64) -> f64 {
 fn stirling_tail(z: f64) -> f64 {
     let square = 1.0 / (z * z);
     (1.0 / 12.0 - square * (1.0 / 360.0 - square * (1.0 / 1260.0 - square / 1680.0))) / z
+}
+
+/// Quantile of a gamma law by its mean and variance, for a probability in (0, 1); its mean without variance.
+///
+/// # Numerical notes
+/// By root finding, or from a standard deviation of a third of the mean down the Wilson–Hilferty approximation (1931), within 0.1 %
+/// of the distance that matters.
+///
+/// ```
+/// use tailcast::numerics::gamma::gamma_quantile;
+/// // An exponential law.
+/// assert!((gamma_quantile(2.0, 4.0, 0.5) - 2.0 * 2f64.ln()).abs() < 1e-5);
+/// ```
+pub fn gamma_quantile(mean: f64, variance: f64, probability: f64) -> f64 {
+    if mean <= 0.0 || variance <= 0.0 {
+        return mean;
+    }
+    let shape = mean * mean / variance;
+    if shape < WILSON_HILFERTY_FROM {
+        let reach = mean + 60.0 * variance.sqrt();
+        let below = |x: f64| checked_gamma_lr(shape, x * shape / mean).unwrap_or(0.0) - probability;
+        return increasing_root(0.0, reach, 1e-6 * mean, below);
+    }
+    let ninth = 1.0 / (9.0 * shape);
+    mean * (1.0 - ninth + normal_quantile(probability) * ninth.sqrt()).max(0.0).powi(3)
 }

@@ -1,11 +1,11 @@
 //! The continuous ranked probability score of a count by two moments.
 
-use std::f64::consts::{FRAC_1_SQRT_2, PI};
+use std::f64::consts::PI;
 
 use statrs::function::beta::checked_beta_reg;
-use statrs::function::erf::erfc;
 use statrs::function::gamma::{checked_gamma_lr, ln_gamma};
 
+use super::elementary::normal_cdf;
 use super::gamma::ln_rising;
 use super::tolerances::{GINI_STEP, SCORE_MAX_TERMS, SCORE_NEGLIGIBLE};
 use super::two_moments::TwoMoments;
@@ -140,7 +140,7 @@ fn smooth(law: &TwoMoments, observed: f64) -> f64 {
     let (z, skewness) = ((observed - law.mean) / deviation * 1f64.copysign(skewness), skewness.abs());
     let normal_density = (-0.5 * z * z).exp() / (2.0 * PI).sqrt();
     let (below, flux, gini) = if skewness < SYMMETRIC {
-        (0.5 * erfc(-z * FRAC_1_SQRT_2), normal_density, 1.0 / PI.sqrt())
+        (normal_cdf(z), normal_density, 1.0 / PI.sqrt())
     } else {
         let shape = 4.0 / (skewness * skewness);
         let scale = 0.5 * skewness;
@@ -163,7 +163,7 @@ fn gamma_below(shape: f64, lift: f64) -> f64 {
     }
     let ninth = 1.0 / (9.0 * shape);
     let z = ((lift.ln_1p() / 3.0).exp_m1() + ninth) / ninth.sqrt();
-    0.5 * erfc(-z * FRAC_1_SQRT_2)
+    normal_cdf(z)
 }
 
 /// x times the density at x = shape·(1 + lift) of a gamma law: x^shape·e^{−x}/Γ(shape).

@@ -82,3 +82,27 @@ pub const SCORE_NEGLIGIBLE: f64 = 1e-18;
 pub const SCORE_MAX_TERMS: usize = 10_000;
 /// Step in the logarithm of a trapezoid sum for Gini's mean difference: its error is about e^{−π²/step}, 10⁻¹⁷.
 pub const GINI_STEP: f64 = 0.25;
+
+/// The share of links that a degree cap refuses is settled once a round moves it by less than this.
+pub const CAP_AGREEMENT: f64 = 1e-6;
+/// Rounds to settle it; each brings about a digit, and a cap that refuses nearly all needs about 30.
+pub const CAP_MAX_ROUNDS: usize = 60;
+
+/// Points of the lattice that a normal vector's probability is averaged over: absolute errors of about 10⁻⁴ in four
+/// dimensions and 2·10⁻³ in 64; with 2,000 points they were up to 4·10⁻³.
+pub const ORTHANT_POINTS: usize = 10_000;
+/// Most coordinates of such a vector.
+pub const ORTHANT_MAX_DIMENSION: usize = 128;
+/// A share of variance below this is none: what rounding leaves of a coordinate that others determine.
+pub const ORTHANT_PIVOT: f64 = 1e-12;
+
+/// How often a refused link end picks again before the nodes below the cap are listed: a listing costs about as much.
+pub const CAP_MAX_PICKS: usize = 1_000;
+
+/// Cells of a first-passage equation at first, and at most: cost goes with the square.
+pub const PASSAGE_FIRST_CELLS: usize = 8;
+/// See [`PASSAGE_FIRST_CELLS`].
+pub const PASSAGE_MAX_CELLS: usize = 128;
+/// Halving the cells must change a first-passage probability by no more than this; the finer answer is then better by about
+/// a factor of three.
+pub const PASSAGE_AGREEMENT: f64 = 1e-3;

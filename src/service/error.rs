@@ -127,6 +127,8 @@ impl ServiceError {
         match error {
             OriginError::ArrivalsRequired => Self::ArrivalsRequired,
             OriginError::NoPeriod => Self::Impossible(error.to_string()),
+            OriginError::Passage(error) => Self::Broken(error.to_string()),
+            OriginError::Unplanned(detail) => Self::Impossible(detail),
             OriginError::Rate(fault) => Self::Impossible(fault.to_string()),
             OriginError::Fit(FitError::NotIdentified { detail }) => Self::NotIdentified(detail),
             OriginError::Fit(FitError::NotConverged { detail }) => Self::NotConverged(detail),

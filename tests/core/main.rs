@@ -3,6 +3,7 @@
 
 mod account;
 mod arrivals;
+mod cap;
 mod census;
 mod fit;
 mod forces;
@@ -10,8 +11,11 @@ mod forecast;
 mod hostile;
 mod law;
 mod networks;
+mod orthant;
+mod passage;
 mod pool;
 mod quantiles;
+mod questions;
 mod reference;
 mod scores;
 mod simulation;

@@ -20,8 +20,13 @@ pub(crate) struct MixedLaw {
 impl MixedLaw {
     /// Of a node present at day 0, of whom a share is dormant already.
     pub fn of_present(course: &Course, day: f64) -> Self {
+        Self::of_present_growing(course, 1.0, day)
+    }
+
+    /// The same of a node whose hazard is `factor` times that of its kind.
+    pub fn of_present_growing(course: &Course, factor: f64, day: f64) -> Self {
         let dormant = course.parameters().dormant_share();
-        let mut law = Self::of_active(course, 0.0, day, 1.0 - dormant);
+        let mut law = Self::of_active(course, factor, 0.0, day, 1.0 - dormant);
         if dormant > 0.0 {
             law.parts.push((dormant, NodeLaw::of_group(course, 0.0, 0.0, 0.0, day)));
         }
@@ -30,10 +35,10 @@ impl MixedLaw {
 
     /// Of a node that arrives, active, at day `from`.
     pub fn of_newcomer(course: &Course, from: f64, to: f64) -> Self {
-        Self::of_active(course, from, to, 1.0)
+        Self::of_active(course, 1.0, from, to, 1.0)
     }
 
-    fn of_active(course: &Course, from: f64, to: f64, share: f64) -> Self {
+    fn of_active(course: &Course, factor: f64, from: f64, to: f64, share: f64) -> Self {
         let still_active = course.still_active(from, to);
         let mut stretches = vec![(still_active, to)];
         if still_active < 1.0 {
@@ -50,7 +55,8 @@ impl MixedLaw {
         let mut parts = Vec::with_capacity(stretches.len() * course.growth_factors().len());
         for group in course.growth_factors() {
             for &(weight, until) in &stretches {
-                parts.push((share * weight * group.share, NodeLaw::of_group(course, group.factor, from, until, to)));
+                let law = NodeLaw::of_group(course, factor * group.factor, from, until, to);
+                parts.push((share * weight * group.share, law));
             }
         }
         Self { parts }
@@ -86,5 +92,27 @@ impl MixedLaw {
             share * starts.iter().map(|&(degree, weight)| weight * of_start(law, degree)).sum::<f64>()
         };
         self.parts.iter().map(of_part).sum()
+    }
+
+    /// Mean and variance of the degree at the end of a node of degree `degree` at the start.
+    pub fn moments(&self, degree: u64) -> (f64, f64) {
+        let (mut mean, mut square) = (0.0, 0.0);
+        for (share, law) in &self.parts {
+            let own = law.mean(degree);
+            mean += share * own;
+            square += share * (law.variance(degree) + own * own);
+        }
+        (mean, (square - mean * mean).max(0.0))
+    }
+
+    /// P(X ≥ j), E[X; X ≥ j] and E[X²; X ≥ j] of a node that starts with `degree` links, given that it stays: each part's law by its
+    /// first two moments.
+    pub fn moments_above(&self, degree: u64, threshold: u64) -> [f64; 3] {
+        let mut sum = [0.0; 3];
+        for (share, law) in &self.parts {
+            let own = law.moments_above(degree, threshold);
+            sum.iter_mut().zip(own).for_each(|(sum, own)| *sum += share * own);
+        }
+        sum
     }
 }

@@ -1,5 +1,7 @@
 //! The nodes of a simulated network, and how link ends pick among them.
 
+mod capped;
+
 use rand::RngExt;
 use rand::rngs::SmallRng;
 use rand_distr::{Distribution, Gamma};
@@ -16,6 +18,10 @@ pub(super) struct Members {
     /// Degrees at the last mark of nodes that have departed since.
     pub departed: Vec<u64>,
     pub link_ends: u64,
+    /// Highest degree of each node since peaks are watched; none when they are not.
+    pub peaks: Option<Vec<u64>>,
+    /// (Degree at the last mark, highest degree) of nodes that departed since peaks are watched.
+    pub departed_peaks: Vec<(u64, u64)>,
     picks: Picks,
 }
 
@@ -61,7 +67,8 @@ impl Members {
             }))
         };
         let degrees = Vec::with_capacity(counts.nodes() as usize);
-        Self { degrees, marked: Vec::new(), departed: Vec::new(), link_ends: 0, picks }
+        let (marked, departed, departed_peaks) = (Vec::new(), Vec::new(), Vec::new());
+        Self { degrees, marked, departed, link_ends: 0, peaks: None, departed_peaks, picks }
     }
 
     pub fn join(&mut self, degree: u64, active: bool, rng: &mut SmallRng) {
@@ -69,6 +76,9 @@ impl Members {
         self.degrees.push(degree);
         self.marked.push(None);
         self.link_ends += degree;
+        if let Some(peaks) = &mut self.peaks {
+            peaks.push(degree);
+        }
         match &mut self.picks {
             Picks::Ends(ends) => ends.extend(std::iter::repeat_n(node as u32, degree as usize)),
             Picks::Weighed(weights) => {
@@ -116,9 +126,21 @@ impl Members {
                     self.degrees[node] += 1;
                     self.link_ends += 1;
                     weights.weigh(node, self.degrees[node]);
+                    if let Some(peaks) = &mut self.peaks {
+                        peaks[node] = peaks[node].max(self.degrees[node]);
+                    }
                 }
             }
         }
+    }
+
+    /// Highest degree of `node` since peaks are watched. Where links last that is its degree today.
+    pub fn peak(&self, node: usize) -> u64 {
+        let watched = match self.picks {
+            Picks::Ends(_) => None,
+            Picks::Weighed(_) => self.peaks.as_ref(),
+        };
+        watched.map_or(self.degrees[node], |peaks| peaks[node])
     }
 
     /// An active node, any of them alike, falls dormant.
@@ -148,7 +170,12 @@ impl Members {
         let node = rng.random_range(0..self.degrees.len());
         let last = self.degrees.len() - 1;
         self.link_ends -= self.degrees.swap_remove(node);
-        self.departed.extend(self.marked.swap_remove(node));
+        let before = self.marked.swap_remove(node);
+        self.departed.extend(before);
+        if let Some(peaks) = &mut self.peaks {
+            let peak = peaks.swap_remove(node);
+            self.departed_peaks.extend(before.map(|before| (before, peak)));
+        }
         weights.active -= u64::from(weights.factors.swap_remove(node) > 0.0);
         for tree in [&mut weights.by_node, &mut weights.by_degree, &mut weights.by_end] {
             tree.set(last, 0.0);

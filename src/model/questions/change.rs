@@ -1,7 +1,7 @@
 //! What-ifs: the forces that a decision would change.
 
 use super::QuestionFault;
-use crate::model::{ArrivalPlan, AttachmentMix, MAX_DEGREE};
+use crate::model::{ArrivalPlan, AttachmentMix, GrowthParameters, MAX_DEGREE, ParameterFault};
 
 /// The largest factor on a rate.
 const MAX_FACTOR: f64 = 1e6;
@@ -85,6 +85,43 @@ impl Change {
             departures_per_node_day: None,
             degree_cap: None,
         }
+    }
+
+    /// The part of the change that is of arrivals and links per arrival.
+    pub fn of_rates(&self) -> Self {
+        Self {
+            arrivals: self.arrivals.clone(),
+            links_per_arrival: self.links_per_arrival.clone(),
+            ..Self::none(self.name.clone())
+        }
+    }
+
+    /// Whether anything but arrivals and links per arrival is changed.
+    pub fn is_of_mechanism(&self) -> bool {
+        self.mix.is_some() || self.departures_per_node_day.is_some() || self.degree_cap.is_some()
+    }
+
+    /// The forces under the change.
+    ///
+    /// # Errors
+    /// When a rate comes out of range.
+    pub fn apply(&self, forces: &GrowthParameters) -> Result<GrowthParameters, ParameterFault> {
+        let mut forces = forces.clone();
+        forces.arrivals = match &self.arrivals {
+            Some(Shift::To(plan)) => plan.clone(),
+            Some(Shift::Factor(factor)) => forces.arrivals.scaled(*factor),
+            None => forces.arrivals,
+        };
+        forces.mix = self.mix.unwrap_or(forces.mix);
+        forces.degree_cap = self.degree_cap.or(forces.degree_cap);
+        let links = match self.links_per_arrival {
+            Some(Shift::To(links)) => links,
+            Some(Shift::Factor(factor)) => forces.links_per_arrival() * factor,
+            None => forces.links_per_arrival(),
+        };
+        let departures = self.departures_per_node_day.unwrap_or(forces.departure_hazard());
+        let losses = forces.link_loss_hazard();
+        forces.with_links_per_arrival(links)?.with_losses(departures, losses)
     }
 
     /// Checks the factors and rates.

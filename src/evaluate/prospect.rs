@@ -1,0 +1,175 @@
+//! The forecast as a law: the tail past any threshold at any date, as things stand or under a change.
+
+use jiff::{SignedDuration, Timestamp};
+
+use super::ahead::GivenRates;
+use super::pooled::PooledOutlook;
+use super::record::OriginRecord;
+use super::{OriginError, OriginRequest, is_pooled};
+use crate::forecast::{Scenario, TailLaw, tail_laws};
+use crate::growth::{Course, GrowthError};
+use crate::model::{
+    Change, DegreeCounts, ForecastPlan, GrowthParameters, Levels, PlanFault, Shift, Thresholds, days_between,
+};
+
+/// Seconds of a day.
+const DAY_SECONDS: f64 = 86_400.0;
+
+/// What is believed of the network from its newest snapshot on.
+pub(super) struct Prospect<'a> {
+    /// What was asked.
+    pub request: &'a OriginRequest,
+    /// Today's counts.
+    pub counts: &'a DegreeCounts,
+    /// The fitted forces and how uncertain they are.
+    pub scenario: Scenario,
+    /// The pooled forecast; none: by the fitted forces.
+    pub pooled: Option<PooledOutlook<'a>>,
+    /// Asked between thresholds.
+    pub cancelled: &'a dyn Fn() -> bool,
+}
+
+impl<'a> Prospect<'a> {
+    /// Ready for dates so many `days` ahead.
+    ///
+    /// # Errors
+    /// Cancellation.
+    pub fn new(
+        request: &'a OriginRequest,
+        scenario: Scenario,
+        past: &[OriginRecord],
+        days: &[f64],
+        cancelled: &'a dyn Fn() -> bool,
+    ) -> Result<Self, OriginError> {
+        let pooled = match is_pooled(request).then(|| PooledOutlook::new(request, past, days, cancelled)) {
+            Some(Ok(pooled)) => Some(pooled),
+            // Without a candidate there is nothing to pool.
+            None | Some(Err(OriginError::NoPeriod)) => None,
+            Some(Err(error)) => return Err(error),
+        };
+        let counts = &request.evidence.latest().counts;
+        Ok(Self { request, counts, scenario, pooled, cancelled })
+    }
+
+    /// The laws of the tails of `plan` under `change`: one list a date, one law a threshold.
+    ///
+    /// Of a pooled forecast every member follows other arrivals and links. What else is changed moves the pooled tails in the
+    /// proportion in which it moves those of the fitted forces, for only these have a mechanism to change.
+    ///
+    /// # Errors
+    /// Cancellation; growth that cannot be computed; a rate out of range.
+    pub fn tails(&self, plan: &ForecastPlan, change: &Change) -> Result<Vec<Vec<TailLaw>>, OriginError> {
+        let Some(pooled) = &self.pooled else {
+            let scenario = self.scenario.under(change).map_err(OriginError::Rate)?;
+            return Ok(tail_laws(self.counts, &scenario, plan, self.cancelled)?);
+        };
+        let standing = pooled.tails(plan, &rates_under(pooled.given(), change))?;
+        if !change.is_of_mechanism() {
+            return Ok(standing);
+        }
+        let before = self.central_tails(plan, &change.of_rates())?;
+        let after = self.central_tails(plan, change)?;
+        let moved = standing.iter().zip(before.iter().zip(&after)).map(|(standing, (before, after))| {
+            let pairs = before.iter().zip(after);
+            let scaled = |(law, (before, after)): (&TailLaw, (&TailLaw, &TailLaw))| {
+                let mean = before.mean();
+                if mean > 0.0 { law.scaled(after.mean() / mean) } else { *law }
+            };
+            standing.iter().zip(pairs).map(scaled).collect()
+        });
+        Ok(moved.collect())
+    }
+
+    /// The same by the fitted forces alone, without what is uncertain of them.
+    fn central_tails(&self, plan: &ForecastPlan, change: &Change) -> Result<Vec<Vec<TailLaw>>, OriginError> {
+        let forces = self.forces(change)?;
+        let scenario = Scenario { forces, excursions: Vec::new(), alternatives: Vec::new(), model_error: 0.0 };
+        Ok(tail_laws(self.counts, &scenario, plan, self.cancelled)?)
+    }
+
+    /// The fitted forces under `change`; of a pooled forecast those of nodes that grow alike, where a cap needs that.
+    ///
+    /// # Errors
+    /// A rate out of range.
+    pub fn forces(&self, change: &Change) -> Result<GrowthParameters, OriginError> {
+        let forces = change.apply(&self.scenario.forces).map_err(OriginError::Rate)?;
+        if self.pooled.is_none() || change.degree_cap.is_none() {
+            return Ok(forces);
+        }
+        let alike = forces.with_dormant_share(0.0).and_then(|f| f.with_growth_variance(0.0));
+        alike.and_then(|f| f.with_kernel_exponent(1.0)).map_err(OriginError::Rate)
+    }
+
+    /// The course under `change` up to day `horizon`.
+    ///
+    /// # Errors
+    /// Growth that cannot be computed; a rate out of range.
+    pub fn course(&self, change: &Change, horizon: f64) -> Result<Course, OriginError> {
+        Course::new(self.counts, self.forces(change)?, horizon).map_err(of_growth)
+    }
+
+    /// Courses at both ends of each direction in which the forces are uncertain, under `change`.
+    ///
+    /// # Errors
+    /// Growth that cannot be computed; a rate out of range.
+    pub fn ends(&self, change: &Change, horizon: f64) -> Result<Vec<(Course, Course)>, OriginError> {
+        let scenario = self.scenario.under(change).map_err(OriginError::Rate)?;
+        let course = |forces: &GrowthParameters| Course::new(self.counts, forces.clone(), horizon).map_err(of_growth);
+        scenario.excursions.iter().map(|e| Ok((course(&e.low)?, course(&e.high)?))).collect()
+    }
+
+    /// Relative error of a flow `day` days ahead that no parameter accounts for.
+    pub fn model_error(&self, day: f64) -> f64 {
+        self.pooled.as_ref().map_or(self.scenario.model_error, |pooled| pooled.flow_error(day))
+    }
+
+    /// A plan for one threshold.
+    ///
+    /// # Errors
+    /// Dates that no forecast takes.
+    pub fn plan(&self, thresholds: &[u64], days: &[f64]) -> Result<ForecastPlan, OriginError> {
+        let as_of = self.request.evidence.latest().as_of;
+        let dates: Vec<Timestamp> = days.iter().filter_map(|&day| date_after(as_of, day)).collect();
+        let unplanned = |faults: Vec<PlanFault>| {
+            OriginError::Unplanned(faults.first().map(|fault| fault.detail.clone()).unwrap_or_default())
+        };
+        let thresholds = Thresholds::new(thresholds).map_err(unplanned)?;
+        ForecastPlan::new(as_of, thresholds, &dates, Levels::default()).map_err(unplanned)
+    }
+
+    /// The date so many days after the newest snapshot.
+    pub fn date(&self, day: f64) -> Option<Timestamp> {
+        date_after(self.request.evidence.latest().as_of, day)
+    }
+
+    /// Days from the newest snapshot to a date.
+    pub fn day(&self, date: Timestamp) -> f64 {
+        days_between(self.request.evidence.latest().as_of, date)
+    }
+}
+
+/// Growth that cannot be computed is a forecast that cannot be given.
+pub(super) fn of_growth(error: GrowthError) -> OriginError {
+    OriginError::Forecast(error.into())
+}
+
+fn date_after(as_of: Timestamp, day: f64) -> Option<Timestamp> {
+    let seconds = SignedDuration::try_from_secs_f64(day * DAY_SECONDS).ok()?;
+    as_of.checked_add(seconds).ok()
+}
+
+/// The rates that pooled members follow under a change.
+fn rates_under(given: GivenRates, change: &Change) -> GivenRates {
+    let mut rates = given;
+    match &change.arrivals {
+        Some(Shift::To(plan)) => rates.arrivals = Some(plan.clone()),
+        Some(Shift::Factor(factor)) => rates.arrivals_factor *= factor,
+        None => {}
+    }
+    match change.links_per_arrival {
+        Some(Shift::To(links)) => rates.links_per_arrival = Some(links),
+        Some(Shift::Factor(factor)) => rates.links_factor *= factor,
+        None => {}
+    }
+    rates
+}
