@@ -7,11 +7,13 @@ use super::prospect::{Prospect, of_growth};
 use crate::forecast::{CountLaw, TailLaw};
 use crate::growth::tail_correlations;
 use crate::model::Change;
-use crate::numerics::elementary::normal_quantile;
+use crate::numerics::elementary::{normal_cdf, normal_quantile};
 use crate::numerics::orthant::{Bridge, OrthantError, orthant_probability};
 
 /// Probabilities are told apart down to this many standard deviations.
 const FARTHEST_DEVIATION: f64 = 8.0;
+/// Days that dates may be rounded by.
+const DATE_ROUNDING: f64 = 1e-6;
 /// Factors on the correlations of a path, tried until they are those of a process.
 const NEARNESS: [f64; 5] = [1.0, 0.999, 0.99, 0.9, 0.0];
 
@@ -101,9 +103,7 @@ impl TailCourse {
         let Some(correlations) = &self.correlations else {
             return Ok(laws.iter().map(above).fold(0.0, f64::max));
         };
-        let place = |law: &CountLaw, most: f64| {
-            normal_quantile(law.at_most(most)).clamp(-FARTHEST_DEVIATION, FARTHEST_DEVIATION)
-        };
+        let place = |law: &CountLaw, most: f64| deviations(law.at_most(most));
         let bounds: Vec<f64> = laws.iter().map(|law| place(law, most)).collect();
         // A path of whole numbers meets the limit at one more; the bound of a day lies half a node before.
         let barriers: Vec<f64> =
@@ -140,6 +140,20 @@ impl TailCourse {
         Ok((1.0 - kept).max(laws.last().map_or(0.0, above)))
     }
 
+    /// The probability of a crossing by `day`, from those at the days of the course: linear between them, in standard deviations.
+    pub fn probability_at(&self, crossed: &[f64], day: f64) -> f64 {
+        let after = self.days.partition_point(|&d| d < day - DATE_ROUNDING);
+        let (Some(&to), Some(&p)) = (self.days.get(after), crossed.get(after)) else {
+            return crossed.last().copied().unwrap_or(0.0);
+        };
+        if to <= day + DATE_ROUNDING {
+            return p;
+        }
+        let Some(before) = after.checked_sub(1) else { return p * day / to };
+        let part = (day - self.days[before]) / (to - self.days[before]);
+        normal_cdf(deviations(crossed[before]) * (1.0 - part) + deviations(p) * part)
+    }
+
     /// The first day by which the crossing has come with `probability`; none when it has not by the last.
     pub fn day_at(&self, crossed: &[f64], probability: f64) -> Option<f64> {
         let reached = crossed.iter().position(|&p| p >= probability)?;
@@ -148,7 +162,6 @@ impl TailCourse {
         let Some((day_before, p_before)) = before else {
             return Some(if p > 0.0 { day * probability / p } else { day });
         };
-        let deviations = |p: f64| normal_quantile(p).clamp(-FARTHEST_DEVIATION, FARTHEST_DEVIATION);
         let (low, high) = (deviations(p_before), deviations(p));
         let part = if high > low { (deviations(probability) - low) / (high - low) } else { 1.0 };
         Some(day_before + (day - day_before) * part.clamp(0.0, 1.0))
@@ -161,4 +174,9 @@ fn seen(law: &TailLaw, view: View) -> CountLaw {
     let (floor, rest) = (law.law.floor(), law.law.rest().mean);
     let mean = (rest + deviations * law.doubt()).max(0.0);
     CountLaw::new(floor, mean, if rest > 0.0 { law.chance * mean / rest } else { law.chance })
+}
+
+/// A probability in standard deviations.
+fn deviations(probability: f64) -> f64 {
+    normal_quantile(probability).clamp(-FARTHEST_DEVIATION, FARTHEST_DEVIATION)
 }

@@ -1,14 +1,21 @@
 //! Limits on tail sizes: how likely they are passed, when, and what growth keeps within them.
 
+use jiff::Timestamp;
+
 use super::OriginError;
 use super::crossing::{TailCourse, View};
 use super::prospect::Prospect;
 use super::questions::{DateAt, LimitAnswer, LimitAtDate};
 use super::sustainable::{Rate, sustainable, untold};
+use crate::forecast::TailLaw;
 use crate::model::{Change, Limit, MAX_DEGREE};
 
-/// Days that the way to the farthest date is looked at, besides those asked for.
-const STEPS: u32 = 32;
+/// Even steps in which the way to a limit's date is looked at, where nodes in the tail stay in it.
+const STEPS: u32 = 24;
+/// The same where the tail can shrink: every step is one more dimension of the path's law, and between steps it is a bridge.
+pub(super) const PATH_STEPS: u32 = 12;
+/// Most steps beyond the limit's date.
+const MOST_BEYOND: f64 = 24.0;
 /// Days that dates may be rounded by.
 const DATE_ROUNDING: f64 = 1e-6;
 /// Probabilities whose dates are told.
@@ -27,19 +34,23 @@ fn answer(prospect: &Prospect, limit: &Limit, change: &Change, backwards: bool) 
     let by = prospect.day(limit.by());
     let plan = &prospect.request.plan;
     let farthest = plan.days().iter().copied().fold(by, f64::max);
-    let mut days: Vec<f64> = (1..=STEPS).map(|i| farthest * f64::from(i) / f64::from(STEPS)).collect();
-    days.extend(plan.days().iter().copied().chain([by]));
-    days.sort_by(f64::total_cmp);
-    days.dedup();
-    let course = TailCourse::new(prospect, limit.threshold(), &days, change)?;
+    let course = TailCourse::new(prospect, limit.threshold(), &way(prospect, change, by, farthest)?, change)?;
     let most = limit.max_nodes() as f64;
     let crossed = course.crossed(most, View::Whole)?;
-    let at = |date, day: f64| {
-        // The dates asked for are among the days, up to the rounding of dates.
-        let nearest = course.days().iter().enumerate().min_by(|a, b| (a.1 - day).abs().total_cmp(&(b.1 - day).abs()));
-        let i = nearest.map_or(0, |(i, _)| i);
-        let exceeding = course.laws().get(i).map_or(0.0, |law| law.law.above(most));
-        LimitAtDate { date, exceeding, crossed: crossed.get(i).copied().unwrap_or(0.0).max(exceeding) }
+    let own_date = (!plan.dates().contains(&limit.by())).then_some(limit.by());
+    let mut asked: Vec<Timestamp> = plan.dates().iter().copied().chain(own_date).collect();
+    asked.sort_unstable();
+    let days: Vec<f64> = asked.iter().map(|&date| prospect.day(date)).collect();
+    let laws = prospect.tails(&prospect.plan(&[limit.threshold()], &days)?, change)?;
+    let mut highest: f64 = 0.0;
+    let at = |((date, day), laws): ((Timestamp, f64), Vec<TailLaw>)| {
+        let exceeding = laws.first().map_or(0.0, |law| law.law.above(most));
+        highest = highest.max(exceeding).max(course.probability_at(&crossed, day));
+        LimitAtDate { date, exceeding, crossed: highest }
+    };
+    let dates: Vec<LimitAtDate> = asked.iter().copied().zip(days.iter().copied()).zip(laws).map(at).collect();
+    let Some(at_by) = dates.iter().copied().find(|at| at.date == limit.by()) else {
+        return Err(OriginError::Unplanned(format!("{} is no date of the limit's own", limit.by())));
     };
     let date_at = |probability: f64| {
         let date = course.day_at(&crossed, probability).and_then(|day| prospect.date(day));
@@ -53,7 +64,6 @@ fn answer(prospect: &Prospect, limit: &Limit, change: &Change, backwards: bool) 
     if passed {
         crossing.iter_mut().chain([&mut risk_reached]).for_each(|at| at.date = Some(as_of));
     }
-    let at_by = at(limit.by(), by);
     let days_left = risk_reached.date.map(|date| prospect.day(date).max(0.0));
     let (arrivals, links) = match (backwards, passed) {
         (true, false) => (sustainable(prospect, limit, Rate::Arrivals)?, sustainable(prospect, limit, Rate::Links)?),
@@ -68,11 +78,6 @@ fn answer(prospect: &Prospect, limit: &Limit, change: &Change, backwards: bool) 
     };
     let nearest = nearest_limit(&course, limit, by)?;
     let verdict = in_words(limit, now, &at_by, &risk_reached, nearest, course.is_monotone());
-    let mut dates: Vec<LimitAtDate> = plan.dates().iter().zip(plan.days()).map(|(&date, &day)| at(date, day)).collect();
-    if !plan.dates().contains(&limit.by()) {
-        dates.push(at_by);
-        dates.sort_by_key(|at| at.date);
-    }
     Ok(LimitAnswer {
         limit: limit.clone(),
         now,
@@ -87,6 +92,17 @@ fn answer(prospect: &Prospect, limit: &Limit, change: &Change, backwards: bool) 
         links_per_arrival: links,
         verdict,
     })
+}
+
+/// Days at which the way is looked at: even steps up to the limit's date, and beyond it to the farthest.
+fn way(prospect: &Prospect, change: &Change, by: f64, farthest: f64) -> Result<Vec<f64>, OriginError> {
+    let steps = if prospect.forces(change)?.has_losses() { PATH_STEPS } else { STEPS };
+    let mut days: Vec<f64> = (1..=steps).map(|i| by * f64::from(i) / f64::from(steps)).collect();
+    if farthest > by + DATE_ROUNDING {
+        let beyond = ((farthest - by) / by * f64::from(steps)).ceil().clamp(1.0, MOST_BEYOND);
+        days.extend((1..=beyond as u32).map(|i| by + (farthest - by) * f64::from(i) / beyond));
+    }
+    Ok(days)
 }
 
 /// The smallest number of nodes that would keep the risk up to the limit's date: what would have to be provided for.
@@ -119,7 +135,7 @@ fn in_words(
 ) -> String {
     let name = limit.name().map_or(String::new(), |name| format!("{name}: "));
     let (most, threshold) = (limit.max_nodes(), limit.threshold());
-    let day = |date: jiff::Timestamp| date.strftime("%Y-%m-%d").to_string();
+    let day = |date: Timestamp| date.strftime("%Y-%m-%d").to_string();
     let by = day(limit.by());
     let provide = nearest.map_or(String::new(), |nearest| {
         let risk = if limit.risk() < LEAST_RISK { LEAST_RISK } else { limit.risk() };

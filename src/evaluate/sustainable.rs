@@ -3,7 +3,7 @@
 use super::OriginError;
 use super::arrivals::figures;
 use super::crossing::{TailCourse, View};
-use super::limits::{LEAST_RISK, percent};
+use super::limits::{LEAST_RISK, PATH_STEPS, percent};
 use super::prospect::Prospect;
 use super::questions::Sustainable;
 use crate::forecast::ForecastError;
@@ -19,8 +19,6 @@ const RATE_TOLERANCE: f64 = 1e-11;
 const END_TOLERANCE: f64 = 1e-3;
 /// Factors on the rate that are tried: up to this, and down to its inverse squared.
 const MOST_FACTOR: f64 = 64.0;
-/// Days at which a tail that can shrink is looked at on its way.
-const STEPS: u32 = 8;
 
 /// A rate that a planner may hold down.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
@@ -108,7 +106,7 @@ impl<'a> Search<'a> {
     fn new(prospect: &'a Prospect<'a>, limit: &'a Limit, rate: Rate) -> Self {
         let forces = &prospect.scenario.forces;
         let by = prospect.day(limit.by());
-        let steps = if forces.has_losses() { STEPS } else { 1 };
+        let steps = if forces.has_losses() { PATH_STEPS } else { 1 };
         let days = (1..=steps).map(|i| by * f64::from(i) / f64::from(steps)).collect();
         Self { prospect, limit, rate, by, days, arrivals: forces.arrivals.clone(), links: forces.links_per_arrival() }
     }

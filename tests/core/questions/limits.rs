@@ -66,3 +66,56 @@ fn crossings_of_a_tail_that_can_shrink() {
     let now = counts.tail_size(20);
     check(&counts, &forces, 20, now + 6);
 }
+
+/// The rate that is said to keep the risk keeps it: by the forecast exactly, by simulation within its error.
+fn check_rates(counts: &DegreeCounts, forces: &GrowthParameters, threshold: u64, most: u64) {
+    let risk = 0.2;
+    let found = answer(counts, forces, threshold, most, risk);
+    let rate = found.arrivals.rate.unwrap();
+    let slower = forces.clone().with_arrivals(ArrivalPlan::constant(rate).unwrap());
+    let links = found.links_per_arrival.rate.unwrap();
+    let fewer = forces.clone().with_links_per_arrival(links).unwrap();
+    for (forces, what) in [(&slower, "arrivals"), (&fewer, "links")] {
+        let again = answer(counts, forces, threshold, most, risk).at_by.crossed;
+        eprintln!("{what}: again {again}");
+        assert!((again - risk).abs() < 1e-6, "{what}: {again}");
+        let crossed = crossings(counts, forces, threshold, most).iter().filter(|day| day.is_finite()).count() as u64;
+        eprintln!("{what}: simulated {}", crossed as f64 / RUNS as f64);
+        assert_share(crossed, RUNS, risk, what);
+    }
+    let interval = found.arrivals.interval.unwrap();
+    assert!(interval.low <= rate && rate <= interval.high);
+}
+
+#[test]
+fn sustainable_rates_keep_the_risk() {
+    let forces = forces(0.7);
+    let counts = grown(&forces);
+    check_rates(&counts, &forces, 20, counts.tail_size(20) + 25);
+}
+
+#[test]
+fn sustainable_rates_keep_the_risk_of_a_tail_that_can_shrink() {
+    let counts = grown(&forces(0.7));
+    let forces = forces(0.7).with_losses(0.001, 0.002).unwrap();
+    check_rates(&counts, &forces, 20, counts.tail_size(20) + 6);
+}
+
+#[test]
+fn impossible_limits_are_answered_with_what_comes_nearest() {
+    let forces = forces(0.7);
+    let counts = grown(&forces);
+    let now = counts.tail_size(20);
+    let passed = answer(&counts, &forces, 20, now - 1, 0.05);
+    assert!(passed.verdict.contains("passed already") && passed.verdict.contains("would keep"), "{}", passed.verdict);
+    assert!(passed.headroom == -1.0 && passed.at_by.crossed == 1.0 && passed.days_left == Some(0.0));
+    assert!(passed.arrivals.rate.is_none() && passed.arrivals.detail.contains("passed already"));
+    let certain = answer(&counts, &forces, 20, now + 25, 0.0);
+    assert!(certain.arrivals.rate.is_none() && certain.arrivals.detail.contains("nearest"), "{:?}", certain.arrivals);
+    // Links that land per node and day do not mind arrivals.
+    let busy = forces.clone().with_links_per_node_day(0.02).unwrap();
+    let helpless = answer(&counts, &busy, 20, now + 25, 0.05);
+    assert!(helpless.arrivals.rate.is_none() && helpless.arrivals.detail.contains("even with none"), "{helpless:?}");
+    let far = answer(&counts, &forces, 20, 1_000_000, 0.05);
+    assert!(far.arrivals.rate.is_none() && far.arrivals.detail.contains("64 times"), "{:?}", far.arrivals);
+}
