@@ -137,10 +137,12 @@ impl ServiceError {
             }
             OriginError::Fit(FitError::Growth(growth)) | OriginError::Forecast(ForecastError::Growth(growth)) => {
                 match growth {
-                    GrowthError::NobodyStarts | GrowthError::TooFast { .. } | GrowthError::TooLarge { .. } => {
-                        Self::Impossible(growth.to_string())
-                    }
-                    GrowthError::Inversion(_) | GrowthError::Integration { .. } => {
+                    GrowthError::NobodyStarts
+                    | GrowthError::TooFast { .. }
+                    | GrowthError::TooLarge { .. }
+                    | GrowthError::CapNeedsAlike
+                    | GrowthError::NoNodeLaw => Self::Impossible(growth.to_string()),
+                    GrowthError::Inversion(_) | GrowthError::Integration { .. } | GrowthError::CapUnsettled => {
                         Self::NotConverged(growth.to_string())
                     }
                 }
