@@ -16,6 +16,7 @@ use clap::{Parser, Subcommand, ValueEnum};
 use tokio::runtime::Runtime;
 
 use crate::config::{Config, LogConfig};
+use crate::report::ForecastPart;
 use crate::service::Service;
 use crate::{api, telemetry};
 use offline::Completion;
@@ -55,6 +56,9 @@ enum Command {
         /// Form of the answer
         #[arg(long, value_enum, default_value_t = OutputFormat::Table)]
         format: OutputFormat,
+        /// What of the answer --format csv tells; tail when left out
+        #[arg(long, value_enum, value_name = "PART")]
+        part: Option<ForecastPart>,
     },
     /// Ask the service at `bind` whether it is ready; ends with 0 when it is
     Check,
@@ -71,7 +75,7 @@ pub enum OutputFormat {
     Table,
     /// As the HTTP API answers, without id and time
     Json,
-    /// One row a date and threshold (RFC 4180)
+    /// One table (RFC 4180), that of the tails or of --part
     Csv,
 }
 
@@ -113,7 +117,9 @@ fn dispatch(line: CommandLine) -> Result<(), Stop> {
     let config = Config::load(line.config.as_deref()).map_err(|error| Stop::failed("settings", error))?;
     match line.command {
         Command::Tally(options) => tally::tally(&options),
-        Command::Forecast { file, completion, format } => offline::forecast(&config, &file, &completion, format),
+        Command::Forecast { file, completion, format, part } => {
+            offline::forecast(&config, &file, &completion, (format, part))
+        }
         Command::Openapi => Ok(()),
         Command::Check => check::ready(config.bind),
         Command::Migrate => {

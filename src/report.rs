@@ -3,13 +3,15 @@
 mod accuracy;
 mod backtest;
 mod csv;
+mod questions_csv;
+mod questions_table;
 mod rows;
 mod table;
 mod text;
 
 pub use accuracy::accuracy_csv;
 pub use backtest::backtest_csv;
-pub use csv::{fit_csv, forecast_csv};
+pub use csv::{ForecastPart, fit_csv, part_csv};
 pub use rows::{degree_counts_csv, transitions_csv};
 pub use table::{align, forecast_table, mix_in_words};
 pub use text::{figure, readable, wrap};

@@ -15,6 +15,7 @@ mod network;
 mod networks;
 mod numbers;
 mod plan;
+mod questions;
 mod runs;
 
 use std::future::Future;
@@ -33,8 +34,9 @@ pub use crate::fit::{FitRequest, Fixed, Model, ModelChoice, Rung};
 pub use crate::ingest::FaultPolicy;
 pub use crate::store::{
     BacktestSummary, Clash, JobFilter, JobKind, JobState, KeyClaim, LatestForecast, NetworkSummary, NewNetwork,
-    RefreshState, RefreshStatus, RunFilter, RunKind, RunSummary, SnapshotSummary, StoredBacktest, StoredJob,
-    StoredLinkEvents, StoredNetwork, StoredRun, StoredSnapshot, StoredTransitions, TransitionsSummary, Upload,
+    QuestionKind, RefreshState, RefreshStatus, RunFilter, RunKind, RunSummary, SnapshotSummary, StoredBacktest,
+    StoredJob, StoredLinkEvents, StoredNetwork, StoredQuestion, StoredRun, StoredSnapshot, StoredTransitions,
+    TransitionsSummary, Upload,
 };
 pub use accounts::{DateOutcome, IntervalOutcome, OutcomeAnswer, TailOutcome};
 pub use accuracy::{
@@ -42,10 +44,13 @@ pub use accuracy::{
     ThresholdSummary,
 };
 pub use answers::{
-    AttachmentAnswer, AttachmentModel, CandidateAnswer, CountAnswer, CurvePointAnswer, DateAnswer, DegreeAnswer,
+    AmountAnswer, AttachmentAnswer, AttachmentModel, BandAnswer, BandsAnswer, BandsAtDateAnswer, CandidateAnswer,
+    ClassPassedAnswer, ClassPassingAnswer, CountAnswer, CurvePointAnswer, DateAnswer, DateAtAnswer, DegreeAnswer,
     EstimateAnswer, EvidenceKind, FitAnswer, FitReport, FitRun, ForecastAnswer, ForecastRun, GoodnessAnswer,
-    IntervalAnswer, LimitAnswer, OutlierClassAnswer, PeriodRatesAnswer, PoolAnswer, PoolMemberAnswer, TailAnswer,
-    TailPointAnswer, TransitionsAnswer, WarningAnswer,
+    HubRankAnswer, IntervalAnswer, LimitAnswer, LimitAtDateAnswer, NextHubsAnswer, OutlierClassAnswer, PassedAnswer,
+    PassingAnswer, PeriodRatesAnswer, PoolAnswer, PoolMemberAnswer, ScenarioAnswer, ScenarioAtDateAnswer,
+    SustainableAnswer, TailAnswer, TailDifferenceAnswer, TailPointAnswer, TransitionsAnswer, WarningAnswer,
+    WatchAnswer, WatchedClassAnswer, WatchedDegreeAnswer, WatchedNodeAnswer,
 };
 pub use backtests::{
     BacktestRequest, BacktestRun, CoverageRow, DEFAULT_AHEAD, ErrorsAnswer, MOST_AHEAD, MemberErrors, PooledErrors,
@@ -55,13 +60,14 @@ pub use compute::{Question, answer_at_once};
 pub use cpu::CpuPool;
 pub use error::{ServiceError, Thing};
 pub use evidence::{NetworkEvidence, RunOrigin, Written};
-pub use inputs::{DEFAULT_SEED, FitInputs, ForecastInputs, Label, MAX_SEED, TextFault, sha256_hex};
+pub use inputs::{DEFAULT_RISK, DEFAULT_SEED, FitInputs, ForecastInputs, Label, MAX_SEED, TextFault, sha256_hex};
 pub use jobs::{
     BacktestResult, JobFailure, JobFault, JobOutcome, JobProblem, JobView, LinkListResult, LinkListTask, PassedOver,
     RefreshResult, SkippedLines,
 };
 pub use network::{Description, NameFault, NetworkName, NetworkSettings, kind_name};
 pub use numbers::{Count, Real, date_text};
+pub use questions::{KeptLimitAnswer, LimitStanding, LimitState, QuestionName};
 
 /// The name and version every run carries.
 pub const ENGINE: &str = concat!(env!("CARGO_PKG_NAME"), " ", env!("CARGO_PKG_VERSION"));

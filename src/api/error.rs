@@ -181,6 +181,24 @@ fn service_problem(error: ServiceError) -> Problem {
                           /v1/networks/{name}/snapshots/{as_of}, or transitions, or a link list.";
             Problem::new(S::UNPROCESSABLE_ENTITY, "no_snapshot", detail)
         }
+        ServiceError::NoScenarios(names) => {
+            let names: Vec<String> = names.iter().map(|name| format!("{name:?}")).collect();
+            let detail = format!(
+                "The network keeps no scenario named {}; its list of scenarios has the names.",
+                names.join(" or ")
+            );
+            Problem::new(S::NOT_FOUND, "not_found", detail)
+        }
+        ServiceError::NothingToCompare => {
+            let detail =
+                "The network keeps no scenario to compare; PUT one under /v1/networks/{name}/scenarios/{scenario}.";
+            Problem::new(S::UNPROCESSABLE_ENTITY, "no_scenario", detail)
+        }
+        ServiceError::NoPlan => {
+            let detail = "The network has no forecast_plan that says for which thresholds and dates to compare. Store one with \
+                          its settings, or give thresholds and until (and every) in the query.";
+            Problem::new(S::UNPROCESSABLE_ENTITY, "no_plan", detail)
+        }
         ServiceError::NoForecast(why) => {
             Problem::new(S::NOT_FOUND, "no_forecast", format!("The network has no forecast yet: {}.", readable(&why)))
         }
@@ -245,6 +263,8 @@ fn missing(thing: Thing) -> &'static str {
         }
         Thing::Job => "There is no such job: it was never taken on, or its record was deleted.",
         Thing::Backtest => "There is no such backtest: it was never made, or was deleted.",
+        Thing::Limit => "The network keeps no limit of this name; its list of limits has the names.",
+        Thing::Scenario => "The network keeps no scenario of this name; its list of scenarios has the names.",
         Thing::LinkEvents => "The network has no link events; PUT them, or a link list to derive them from.",
     }
 }

@@ -5,6 +5,7 @@ mod format;
 mod key;
 mod link_list;
 mod listing;
+mod part;
 mod patience;
 mod place;
 
@@ -13,8 +14,9 @@ pub use format::{ResultFormat, prefers_events};
 pub use key::IdempotencyKey;
 pub use link_list::LinkListBody;
 pub use listing::Listing;
+pub use part::ForecastForm;
 pub use patience::Patience;
-pub use place::{date, network_name};
+pub use place::{date, network_name, question_name};
 
 use axum::extract::FromRequestParts;
 use axum::http::Uri;

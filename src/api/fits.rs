@@ -10,7 +10,7 @@ use super::extract::{IdempotencyKey, JsonBody, Listing, ResultFormat, run_id};
 use super::problem::Problem;
 use super::representation::Conditions;
 use super::requests::{FitRequestBody, read_fit};
-use super::runs::{self, RunPage};
+use super::runs::{self, RunForm, RunPage};
 use super::{ApiError, AppState, examples};
 use crate::report;
 use crate::service::{FitRun, RunKind};
@@ -73,7 +73,7 @@ async fn create_fit(
     let limits = state.limits;
     let inputs = body.read(move |raw, faults| read_fit(raw, &limits, faults)).await?;
     let run = state.service.create(inputs, None, claim).await?;
-    runs::created(PATH, run, format, csv)
+    runs::created(PATH, run, format)
 }
 
 /// Read a fit
@@ -112,7 +112,7 @@ async fn get_fit(
     headers: HeaderMap,
 ) -> Result<Response, ApiError> {
     let run = state.service.run(RunKind::Fit, run_id(&id)?).await?;
-    runs::found(run, format, &headers, csv)
+    runs::found(run, format, &headers)
 }
 
 /// List fits
@@ -171,8 +171,18 @@ async fn delete_fit(
     Ok(StatusCode::NO_CONTENT)
 }
 
-/// The run as CSV.
-pub fn csv(document: &str) -> Result<String, ApiError> {
-    let run: FitRun = serde_json::from_str(document).map_err(|error| ApiError::Broken(error.to_string()))?;
-    report::fit_csv(&run.answer).map_err(|error| ApiError::Broken(error.to_string()))
+/// Fits have one table.
+impl RunForm for ResultFormat {
+    fn format(self) -> ResultFormat {
+        self
+    }
+
+    fn tag(self, tag: &str) -> String {
+        tag.to_owned()
+    }
+
+    fn csv(self, document: &str) -> Result<String, ApiError> {
+        let run: FitRun = serde_json::from_str(document).map_err(|error| ApiError::Broken(error.to_string()))?;
+        report::fit_csv(&run.answer).map_err(|error| ApiError::Broken(error.to_string()))
+    }
 }

@@ -6,13 +6,13 @@ use axum::response::Response;
 use utoipa_axum::router::OpenApiRouter;
 use utoipa_axum::routes;
 
-use super::extract::{IdempotencyKey, JsonBody, Listing, ResultFormat, run_id};
+use super::extract::{ForecastForm, IdempotencyKey, JsonBody, Listing, ResultFormat, run_id};
 use super::problem::Problem;
 use super::representation::Conditions;
 use super::requests::{ForecastRequestBody, read_forecast};
-use super::runs::{self, RunPage};
+use super::runs::{self, RunForm, RunPage};
 use super::{ApiError, AppState, examples};
-use crate::report;
+use crate::report::{self, ForecastPart};
 use crate::service::{ForecastRun, RunKind};
 
 /// Where these runs are kept.
@@ -32,6 +32,7 @@ pub fn routes() -> OpenApiRouter<AppState> {
     tag = "forecasts",
     params(
         ("format" = inline(Option<ResultFormat>), Query, description = "Goes before Accept"),
+        ("part" = inline(Option<ForecastPart>), Query, description = "Which table of CSV; `tail` when left out"),
         ("Idempotency-Key" = Option<String>, Header,
             min_length = 1, max_length = 255,
             description = "Requests with the same key and body are one and the same: the run is made once. Bodies are \
@@ -65,7 +66,7 @@ pub fn routes() -> OpenApiRouter<AppState> {
 )]
 async fn create_forecast(
     State(state): State<AppState>,
-    format: ResultFormat,
+    form: ForecastForm,
     key: IdempotencyKey,
     body: JsonBody,
 ) -> Result<Response, ApiError> {
@@ -73,7 +74,7 @@ async fn create_forecast(
     let limits = state.limits;
     let inputs = body.read(move |raw, faults| read_forecast(raw, &limits, faults)).await?;
     let run = state.service.create(inputs, None, claim).await?;
-    runs::created(PATH, run, format, csv)
+    runs::created(PATH, run, form)
 }
 
 /// Read a forecast
@@ -86,6 +87,7 @@ async fn create_forecast(
     params(
         ("id" = String, Path, description = "Id of the run"),
         ("format" = inline(Option<ResultFormat>), Query, description = "Goes before Accept"),
+        ("part" = inline(Option<ForecastPart>), Query, description = "Which table of CSV; `tail` when left out"),
         ("If-None-Match" = Option<String>, Header, description = "Answer 304 when the run still has this ETag"),
     ),
     responses(
@@ -108,11 +110,11 @@ async fn create_forecast(
 async fn get_forecast(
     State(state): State<AppState>,
     Path(id): Path<String>,
-    format: ResultFormat,
+    form: ForecastForm,
     headers: HeaderMap,
 ) -> Result<Response, ApiError> {
     let run = state.service.run(RunKind::Forecast, run_id(&id)?).await?;
-    runs::found(run, format, &headers, csv)
+    runs::found(run, form, &headers)
 }
 
 /// List forecasts
@@ -171,8 +173,17 @@ async fn delete_forecast(
     Ok(StatusCode::NO_CONTENT)
 }
 
-/// The run as CSV.
-pub fn csv(document: &str) -> Result<String, ApiError> {
-    let run: ForecastRun = serde_json::from_str(document).map_err(|error| ApiError::Broken(error.to_string()))?;
-    report::forecast_csv(&run.answer).map_err(|error| ApiError::Broken(error.to_string()))
+impl RunForm for ForecastForm {
+    fn format(self) -> ResultFormat {
+        self.format
+    }
+
+    fn tag(self, tag: &str) -> String {
+        Self::tag(self, tag)
+    }
+
+    fn csv(self, document: &str) -> Result<String, ApiError> {
+        let run: ForecastRun = serde_json::from_str(document).map_err(|error| ApiError::Broken(error.to_string()))?;
+        report::part_csv(&run.answer, self.part).map_err(|error| ApiError::Broken(error.to_string()))
+    }
 }

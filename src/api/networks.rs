@@ -3,10 +3,13 @@
 mod accuracy;
 mod answers;
 mod backtests;
+mod comparison;
 mod latest;
+mod limits;
 mod link_events;
 mod links;
 mod runs;
+mod scenarios;
 mod snapshots;
 mod transitions;
 
@@ -42,6 +45,9 @@ pub fn routes() -> OpenApiRouter<AppState> {
         .merge(accuracy::routes())
         .merge(runs::routes())
         .merge(backtests::routes())
+        .merge(limits::routes())
+        .merge(scenarios::routes())
+        .merge(comparison::routes())
 }
 
 /// Track a network

@@ -68,7 +68,7 @@ fn validators(validator: Validator<'_>, format: ResultFormat) -> Result<HeaderMa
 fn is_unmodified(asked: &HeaderMap, entity_tag: &str, modified: Option<Timestamp>) -> bool {
     let mut tags = asked.get_all(header::IF_NONE_MATCH).iter().peekable();
     if tags.peek().is_some() {
-        return tags.any(|value| names_any(value, &[entity_tag.to_owned()], true));
+        return tags.any(|value| names(value, |opaque| opaque == entity_tag, true));
     }
     let since = asked.get(header::IF_MODIFIED_SINCE).and_then(|value| value.to_str().ok());
     let since =
@@ -84,11 +84,10 @@ pub struct Conditions {
 }
 
 impl Conditions {
-    /// Whether they hold where what stands there has this validator, in either of its forms, or where there is nothing.
+    /// Whether they hold where what stands there has this validator, in any of its forms, or where there is nothing.
     pub fn hold(&self, current: Option<&str>) -> bool {
-        let forms = current.map(|tag| [ResultFormat::Json, ResultFormat::Csv].map(|format| entity_tag(tag, format)));
         let named = |values: &[HeaderValue], weak| {
-            forms.as_ref().is_some_and(|forms| values.iter().any(|value| names_any(value, forms, weak)))
+            current.is_some_and(|tag| values.iter().any(|value| names(value, |opaque| is_form_of(opaque, tag), weak)))
         };
         (self.match_any.is_empty() || named(&self.match_any, false)) && !named(&self.match_none, true)
     }
@@ -103,13 +102,19 @@ impl FromRequestParts<AppState> for Conditions {
     }
 }
 
-/// Whether a list of entity tags holds one of `forms`, or is `*`. Weak tags match only where `weak` says so.
-fn names_any(value: &HeaderValue, forms: &[String], weak: bool) -> bool {
+/// Whether an entity tag is that of a form of what has the validator `tag`: it starts with it, and goes on with the form.
+fn is_form_of(entity_tag: &str, tag: &str) -> bool {
+    let after = entity_tag.strip_prefix('"').and_then(|text| text.strip_prefix(tag));
+    after.is_some_and(|rest| rest.starts_with('-') && rest.ends_with('"') || rest == "\"")
+}
+
+/// Whether a list of entity tags holds one that `is_meant`, or is `*`. Weak tags match only where `weak` says so.
+fn names(value: &HeaderValue, is_meant: impl Fn(&str) -> bool, weak: bool) -> bool {
     let Ok(text) = value.to_str() else { return false };
     text.trim() == "*"
         || text.split(',').map(str::trim).any(|tag| {
             let opaque = if weak { tag.strip_prefix("W/").unwrap_or(tag) } else { tag };
-            forms.iter().any(|form| form == opaque)
+            is_meant(opaque)
         })
 }
 
@@ -150,5 +155,7 @@ mod tests {
         }
         let csv: &'static str = Box::leak(entity_tag("a", ResultFormat::Csv).into_boxed_str());
         assert!(conditions(&[csv], &[]).hold(Some("a")), "either form names it");
+        assert!(conditions(&["\"a-limits-csv-0.1.0\""], &[]).hold(Some("a")), "and so does a part");
+        assert!(!conditions(&["\"ab\""], &[]).hold(Some("a")), "another validator does not");
     }
 }

@@ -1,15 +1,19 @@
 //! Reading request bodies into validated inputs.
 
 mod backtest;
+mod comparison;
 mod evidence;
 mod network;
 mod network_schema;
 mod outlook;
+mod questions;
+mod questions_schema;
 mod schema;
 
 use serde_json::value::RawValue;
 
 pub use backtest::{BacktestBody, read_backtest};
+pub use comparison::{CHANGE_FIELDS, ComparisonQuery, LIMIT_FIELDS, read_kept_change, read_kept_limit};
 pub use network::{
     EVIDENCE_FIELDS, NETWORK_FIELDS, read_link_events, read_network, read_network_fit, read_network_forecast,
     read_snapshot, read_snapshot_csv, read_transitions, read_transitions_csv,
@@ -17,6 +21,7 @@ pub use network::{
 pub use network_schema::{
     DegreeCountsBody, ForecastPlanBody, NetworkBody, NetworkFitBody, NetworkForecastBody, TransitionCountsBody,
 };
+pub use questions_schema::{ChangeBody, KeptLimitBody};
 pub use schema::{
     ArrivalsBody, DegreeKindName, FitRequestBody, FixedBody, ForecastRequestBody, HorizonBody, LinkEventsBody,
     ModelName, SegmentBody, SnapshotBody, TransitionsBody, WindowBody, degree_pairs, move_rows,
@@ -50,7 +55,7 @@ pub const FIT_FIELDS: [&str; 14] = [
 ];
 
 /// Fields of a forecast's body.
-pub const FORECAST_FIELDS: [&str; 19] = [
+pub const FORECAST_FIELDS: [&str; 25] = [
     "degree_kind",
     "snapshots",
     "transitions",
@@ -70,6 +75,12 @@ pub const FORECAST_FIELDS: [&str; 19] = [
     "dates",
     "horizon",
     "levels",
+    "limits",
+    "bands",
+    "cost_unit",
+    "watch",
+    "next_hubs",
+    "scenarios",
 ];
 
 /// Fields of what is taken as given.
@@ -92,8 +103,8 @@ pub fn read_forecast(raw: &RawValue, limits: &LimitsConfig, faults: &mut Faults)
     let label = label(&body, faults);
     let arrivals = outlook::arrivals(&body, evidence.latest, None, faults);
     let plan = outlook::plan(&body, evidence.latest, None, limits, faults);
-    let request =
-        OriginRequest { evidence: evidence.whole?, fit: fit?, arrivals, plan: plan?, questions: Default::default() };
+    let questions = questions::read(&body, evidence.latest, (plan.as_ref(), Vec::new()), limits, faults);
+    let request = OriginRequest { evidence: evidence.whole?, fit: fit?, arrivals, plan: plan?, questions: questions? };
     Some(ForecastInputs { label, request })
 }
 

@@ -60,21 +60,35 @@ impl From<RunSummary> for RunLine {
     }
 }
 
-/// Turns a kept document into CSV.
-pub type ToCsv = fn(&str) -> Result<String, ApiError>;
+/// The form that a kind of run is answered in.
+pub trait RunForm: Copy {
+    /// JSON or CSV.
+    fn format(self) -> ResultFormat;
+
+    /// The run's validator in this form, but for what JSON and CSV add.
+    fn tag(self, tag: &str) -> String;
+
+    /// A kept document as CSV.
+    ///
+    /// # Errors
+    /// When the document is none that was kept.
+    fn csv(self, document: &str) -> Result<String, ApiError>;
+}
 
 /// 201 with the run and where it is kept.
-pub fn created(path: &str, run: StoredRun, format: ResultFormat, to_csv: ToCsv) -> Result<Response, ApiError> {
+pub fn created(path: &str, run: StoredRun, form: impl RunForm) -> Result<Response, ApiError> {
     let location = header_value(&format!("{path}/{}", run.id))?;
-    let represented = representation::represented(validator(&run), format, body(&run, format, to_csv)?)?;
+    let tag = form.tag(&run.tag);
+    let represented = representation::represented(validator(&tag, &run), form.format(), body(&run, form)?)?;
     let mut response = (StatusCode::CREATED, represented).into_response();
     response.headers_mut().insert(header::LOCATION, location);
     Ok(response)
 }
 
 /// 200 with the run, or 304 when the client has it already.
-pub fn found(run: StoredRun, format: ResultFormat, asked: &HeaderMap, to_csv: ToCsv) -> Result<Response, ApiError> {
-    representation::found(validator(&run), format, asked, || body(&run, format, to_csv))
+pub fn found(run: StoredRun, form: impl RunForm, asked: &HeaderMap) -> Result<Response, ApiError> {
+    let tag = form.tag(&run.tag);
+    representation::found(validator(&tag, &run), form.format(), asked, || body(&run, form))
 }
 
 /// A page of runs with a Link to the next one.
@@ -84,14 +98,14 @@ pub fn page(path: &str, listing: &Listing, runs: Vec<RunSummary>, more: bool) ->
 }
 
 /// A run never changes.
-fn validator(run: &StoredRun) -> Validator<'_> {
-    Validator { tag: &run.tag, modified: Some(run.created_at) }
+fn validator<'a>(tag: &'a str, run: &StoredRun) -> Validator<'a> {
+    Validator { tag, modified: Some(run.created_at) }
 }
 
-fn body(run: &StoredRun, format: ResultFormat, to_csv: ToCsv) -> Result<Body, ApiError> {
-    Ok(match format {
+fn body(run: &StoredRun, form: impl RunForm) -> Result<Body, ApiError> {
+    Ok(match form.format() {
         ResultFormat::Json => Body::from(run.document.clone()),
-        ResultFormat::Csv => Body::from(to_csv(&run.document)?),
+        ResultFormat::Csv => Body::from(form.csv(&run.document)?),
     })
 }
 

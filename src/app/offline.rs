@@ -9,13 +9,21 @@ use std::path::Path;
 use super::{OutputFormat, Stop, print};
 use crate::api::{self, ApiError, Problem};
 use crate::config::Config;
-use crate::report;
+use crate::report::{self, ForecastPart};
 use crate::service::{self, ServiceError};
 
 pub use completion::Completion;
 
 /// Answers the request in `file`, with what `completion` puts over its fields.
-pub fn forecast(config: &Config, file: &Path, completion: &Completion, format: OutputFormat) -> Result<(), Stop> {
+pub fn forecast(
+    config: &Config,
+    file: &Path,
+    completion: &Completion,
+    (format, part): (OutputFormat, Option<ForecastPart>),
+) -> Result<(), Stop> {
+    if part.is_some() && format != OutputFormat::Csv {
+        return Err(Stop::Refused("tailcast: --part goes with --format csv; the other forms tell everything\n".into()));
+    }
     let bytes = completion.over(read(file)?)?;
     let refused = |error: ApiError| Stop::Refused(in_words(&error.into_problem()));
     let inputs =
@@ -26,7 +34,8 @@ pub fn forecast(config: &Config, file: &Path, completion: &Completion, format: O
     })?;
     let text = match format {
         OutputFormat::Table => report::forecast_table(&answer),
-        OutputFormat::Csv => report::forecast_csv(&answer).map_err(|error| Stop::failed("writing CSV", error))?,
+        OutputFormat::Csv => report::part_csv(&answer, part.unwrap_or(ForecastPart::Tail))
+            .map_err(|error| Stop::failed("writing CSV", error))?,
         OutputFormat::Json => {
             serde_json::to_string_pretty(&answer).map_err(|error| Stop::failed("writing JSON", error))? + "\n"
         }

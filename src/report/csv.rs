@@ -1,14 +1,68 @@
 //! Answers as CSV (RFC 4180), long form: one row a date and threshold.
 
+use clap::ValueEnum;
 use csv::{Terminator, WriterBuilder};
+use utoipa::ToSchema;
 
+use super::questions_csv::{bands_csv, limits_csv, next_hubs_csv, scenarios_csv, watch_csv};
 use crate::service::{FitAnswer, ForecastAnswer, IntervalAnswer};
+
+/// What of a forecast a table tells.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, ToSchema, ValueEnum)]
+#[schema(rename_all = "snake_case")]
+#[value(rename_all = "snake_case")]
+pub enum ForecastPart {
+    /// How many hubs there will be: one row a date and threshold.
+    Tail,
+    /// Limits: one row a limit and date.
+    Limits,
+    /// Costs by degree: one row a date and band.
+    Bands,
+    /// Watched nodes and classes: one row each, date, threshold and quantity.
+    Watch,
+    /// The largest nodes: one row a date and rank.
+    NextHubs,
+    /// What-ifs: one row each, date and threshold.
+    Scenarios,
+}
+
+impl ForecastPart {
+    /// Every part, the default first.
+    pub const ALL: [Self; 6] = [Self::Tail, Self::Limits, Self::Bands, Self::Watch, Self::NextHubs, Self::Scenarios];
+
+    /// Its name.
+    pub fn name(self) -> &'static str {
+        match self {
+            Self::Tail => "tail",
+            Self::Limits => "limits",
+            Self::Bands => "bands",
+            Self::Watch => "watch",
+            Self::NextHubs => "next_hubs",
+            Self::Scenarios => "scenarios",
+        }
+    }
+}
+
+/// A part of a forecast; without rows where it was not asked for.
+///
+/// # Errors
+/// When a row cannot be written, which memory alone can cause.
+pub fn part_csv(answer: &ForecastAnswer, part: ForecastPart) -> Result<String, csv::Error> {
+    match part {
+        ForecastPart::Tail => forecast_csv(answer),
+        ForecastPart::Limits => limits_csv(answer),
+        ForecastPart::Bands => bands_csv(answer),
+        ForecastPart::Watch => watch_csv(answer),
+        ForecastPart::NextHubs => next_hubs_csv(answer),
+        ForecastPart::Scenarios => scenarios_csv(answer),
+    }
+}
 
 /// A forecast: one row a date and threshold, intervals as columns, the cautions on the first row of each date.
 ///
 /// # Errors
 /// When a row cannot be written, which memory alone can cause.
-pub fn forecast_csv(answer: &ForecastAnswer) -> Result<String, csv::Error> {
+fn forecast_csv(answer: &ForecastAnswer) -> Result<String, csv::Error> {
     let mut writer = writer();
     let levels = answer.forecast.first().map(|at| at.nodes.intervals.as_slice()).unwrap_or_default();
     let mut header: Vec<String> = ["date", "threshold", "now", "expected", "median"].map(str::to_owned).to_vec();

@@ -1,6 +1,7 @@
 //! A forecast as a table for a planner: prose breaks at a hundred columns, rows are as wide as their figures.
 
 use super::csv::percent;
+use super::questions_table::question_lines;
 use super::text::{figure, wrap};
 use crate::service::{
     AttachmentModel, CountAnswer, DegreeAnswer, EvidenceKind, FitReport, ForecastAnswer, IntervalAnswer, TailAnswer,
@@ -11,12 +12,13 @@ const WIDTH: usize = 100;
 /// Most intervals that fit on a line; of more, the narrowest and the widest are shown.
 const MOST_INTERVALS: usize = 2;
 
-/// The forecast, the mix in plain words, then every warning and caution.
+/// The mix in plain words, the forecast, what else was asked, then every warning and caution.
 pub fn forecast_table(answer: &ForecastAnswer) -> String {
     let mut lines = Vec::new();
     lines.extend(wrap(&mix_in_words(&answer.fit), WIDTH, ""));
     lines.push(String::new());
     lines.extend(rows(answer));
+    lines.extend(question_lines(answer));
     lines.push(String::new());
     for warning in &answer.warnings {
         lines.extend(wrap(&format!("Warning ({}): {}", warning.code, warning.detail), WIDTH, "  "));

@@ -1,10 +1,19 @@
 //! Answers as they are kept and sent: their field names are a promise to callers.
 
+mod questions;
+
 use serde::{Deserialize, Serialize};
 use utoipa::ToSchema;
 use uuid::Uuid;
 
 use super::numbers::{Count, Real};
+
+pub use questions::{
+    AmountAnswer, BandAnswer, BandsAnswer, BandsAtDateAnswer, ClassPassedAnswer, ClassPassingAnswer, DateAtAnswer,
+    HubRankAnswer, LimitAnswer, LimitAtDateAnswer, NextHubsAnswer, PassedAnswer, PassingAnswer, ScenarioAnswer,
+    ScenarioAtDateAnswer, SustainableAnswer, TailDifferenceAnswer, WatchAnswer, WatchedClassAnswer,
+    WatchedDegreeAnswer, WatchedNodeAnswer,
+};
 
 /// A kept forecast.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize, ToSchema)]
@@ -43,8 +52,24 @@ pub struct ForecastAnswer {
     #[serde(default)]
     #[schema(required = true)]
     pub pools: Vec<PoolAnswer>,
-    /// Capacity limits asked about; none can be asked about yet.
+    /// Capacity limits asked about, in the order asked.
     pub limits: Vec<LimitAnswer>,
+    /// Costs by degree; null when not asked about.
+    #[serde(default)]
+    #[schema(required = true)]
+    pub bands: Option<BandsAnswer>,
+    /// Watched nodes and classes; null when not asked about.
+    #[serde(default)]
+    #[schema(required = true)]
+    pub watch: Option<WatchAnswer>,
+    /// The largest nodes, one entry a date; empty when not asked about.
+    #[serde(default)]
+    #[schema(required = true)]
+    pub next_hubs: Vec<NextHubsAnswer>,
+    /// What-ifs asked about, in the order asked.
+    #[serde(default)]
+    #[schema(required = true)]
+    pub scenarios: Vec<ScenarioAnswer>,
     /// What was seen in these inputs that the reader must know before acting.
     pub warnings: Vec<WarningAnswer>,
     /// What holds for every forecast.
@@ -321,10 +346,6 @@ pub struct TailPointAnswer {
     /// The same by the fitted law.
     pub fitted: Real,
 }
-
-/// A capacity limit and how it fares.
-#[derive(Debug, Clone, PartialEq, Serialize, Deserialize, ToSchema)]
-pub struct LimitAnswer {}
 
 /// Something the reader must know before acting.
 #[derive(Debug, Clone, PartialEq, Eq, Serialize, Deserialize, ToSchema)]

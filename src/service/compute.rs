@@ -1,15 +1,17 @@
 //! From validated inputs to an answer: the core's results in the answers' words. No I/O.
 
+mod questions;
+
 use std::time::{Duration, Instant};
 
 use serde::Serialize;
 use serde::de::DeserializeOwned;
 
 use super::answers::{
-    AttachmentAnswer, AttachmentModel, CandidateAnswer, CountAnswer, CurvePointAnswer, DateAnswer, DegreeAnswer,
-    EstimateAnswer, EvidenceKind, FitAnswer, FitReport, ForecastAnswer, GoodnessAnswer, IntervalAnswer,
+    AttachmentAnswer, AttachmentModel, BandsAnswer, CandidateAnswer, CountAnswer, CurvePointAnswer, DateAnswer,
+    DegreeAnswer, EstimateAnswer, EvidenceKind, FitAnswer, FitReport, ForecastAnswer, GoodnessAnswer, IntervalAnswer,
     OutlierClassAnswer, PeriodRatesAnswer, PoolAnswer, PoolMemberAnswer, TailAnswer, TailPointAnswer,
-    TransitionsAnswer, WarningAnswer,
+    TransitionsAnswer, WarningAnswer, WatchAnswer,
 };
 use super::inputs::{FitInputs, ForecastInputs, Label, sha256_hex};
 use super::numbers::{Count, Real, date_text};
@@ -22,6 +24,7 @@ use crate::fit::{
 use crate::forecast::{CountForecast, DateForecast, DegreeForecast, TailForecast};
 use crate::model::{Estimate, Interval, Warning};
 use crate::store::RunKind;
+use questions::each;
 
 /// What holds for every fit, said with each.
 const FIT_CAUTIONS: [&str; 2] = [
@@ -108,7 +111,11 @@ impl Question for ForecastInputs {
             fit: FitReport::from(&found.fit),
             forecast: found.forecast.iter().map(DateAnswer::from).collect(),
             pools: found.pools.iter().map(PoolAnswer::from).collect(),
-            limits: Vec::new(),
+            limits: each(&found.answers.limits),
+            bands: found.answers.bands.as_ref().map(BandsAnswer::from),
+            watch: found.answers.watch.as_ref().map(WatchAnswer::from),
+            next_hubs: each(&found.answers.next_hubs),
+            scenarios: each(&found.answers.scenarios),
             warnings: found.warnings.into_iter().map(WarningAnswer::from).collect(),
             cautions: found.cautions.iter().map(ToString::to_string).collect(),
         })

@@ -26,6 +26,15 @@ pub enum ServiceError {
     /// Nothing is stored of the network that a run could start from.
     #[error("the network has no snapshot")]
     NoSnapshot,
+    /// Scenarios that the network does not have.
+    #[error("there are no scenarios {0:?}")]
+    NoScenarios(Vec<String>),
+    /// The network has no scenario to compare.
+    #[error("the network has no scenario")]
+    NothingToCompare,
+    /// The network has no plan, and none is given.
+    #[error("the network has no forecast_plan")]
+    NoPlan,
     /// The network has no forecast yet, for this reason.
     #[error("the network has no forecast yet: {0}")]
     NoForecast(String),
@@ -84,6 +93,10 @@ pub enum Thing {
     Job,
     /// A backtest.
     Backtest,
+    /// A limit kept with a network.
+    Limit,
+    /// A scenario kept with a network.
+    Scenario,
 }
 
 impl From<StoreError> for ServiceError {
@@ -124,10 +137,12 @@ impl ServiceError {
             }
             OriginError::Fit(FitError::Growth(growth)) | OriginError::Forecast(ForecastError::Growth(growth)) => {
                 match growth {
-                    GrowthError::NobodyStarts | GrowthError::TooFast { .. } | GrowthError::TooLarge { .. } => {
-                        Self::Impossible(growth.to_string())
-                    }
-                    GrowthError::Inversion(_) | GrowthError::Integration { .. } => {
+                    GrowthError::NobodyStarts
+                    | GrowthError::TooFast { .. }
+                    | GrowthError::TooLarge { .. }
+                    | GrowthError::CapNeedsAlike
+                    | GrowthError::NoNodeLaw => Self::Impossible(growth.to_string()),
+                    GrowthError::Inversion(_) | GrowthError::Integration { .. } | GrowthError::CapUnsettled => {
                         Self::NotConverged(growth.to_string())
                     }
                 }

@@ -8,10 +8,12 @@ use tokio::sync::OwnedSemaphorePermit;
 use tokio::time::timeout;
 
 use super::networks::cut;
+use super::questions::limits_from;
 use super::{NetworkName, Service, ServiceError, Thing, in_own_task, plan};
-use crate::model::{Evidence, LinkEvents, Snapshot, StandingPlan, Transitions};
+use crate::model::{Evidence, Limit, LinkEvents, Snapshot, StandingPlan, Transitions};
 use crate::store::{
-    SnapshotSummary, StoredLinkEvents, StoredOrigin, StoredSnapshot, StoredTransitions, TransitionsSummary, WriteError,
+    QuestionKind, SnapshotSummary, StoredLinkEvents, StoredOrigin, StoredSnapshot, StoredTransitions,
+    TransitionsSummary, WriteError,
 };
 
 /// What a write answers: the line of what is stored now, and whether nothing stood there before.
@@ -24,6 +26,10 @@ pub struct NetworkEvidence {
     pub evidence: Evidence,
     /// What is asked of its forecasts.
     pub plan: Option<StandingPlan>,
+    /// The limits kept with it that a run from it reaches.
+    pub limits: Vec<Limit>,
+    /// Scenarios kept with it: name and body.
+    pub scenarios: Vec<(String, String)>,
     /// What a run from it stands on.
     pub origin: RunOrigin,
     /// The place it takes in memory: to be kept until the run is made.
@@ -240,13 +246,18 @@ impl Service {
             Ok(Err(_)) => return Err(ServiceError::Busy),
             Err(_) => return Err(ServiceError::TooSlow { budget }),
         };
-        let stored = self.store.find_evidence(name.as_str()).await?.ok_or(ServiceError::NotFound(Thing::Network))?;
+        let found = self.store.find_evidence(name.as_str()).await?;
+        let mut stored = found.ok_or(ServiceError::NotFound(Thing::Network))?;
         let plan = stored.network.settings.forecast_plan.as_deref().map(plan::from_json).transpose()?;
         let revision = stored.network.revision;
+        let questions = std::mem::take(&mut stored.questions);
         let evidence = off_runtime(move || assemble::evidence(stored)).await??;
+        let limits = limits_from(&questions, evidence.latest().as_of)?;
+        let scenarios = questions.into_iter().filter(|question| question.kind == QuestionKind::Scenario);
+        let scenarios = scenarios.map(|question| (question.name, question.body)).collect();
         let origin =
             RunOrigin { network: name.clone(), stored: StoredOrigin { revision, as_of: evidence.latest().as_of } };
-        Ok(NetworkEvidence { evidence, plan, origin, place })
+        Ok(NetworkEvidence { evidence, plan, limits, scenarios, origin, place })
     }
 
     /// What was found, or whether the network or the thing under it is missing.

@@ -1,5 +1,7 @@
 //! Validated inputs of a run, their canonical form and its digest.
 
+mod questions;
+
 use serde::Serialize;
 use sha2::{Digest, Sha256};
 
@@ -8,11 +10,14 @@ use super::numbers::{Real, date_text};
 use crate::evaluate::OriginRequest;
 use crate::fit::{FitRequest, ModelChoice, Rung};
 use crate::model::{ArrivalPlan, AttachmentCell, Evidence, ForecastPlan, LinkEvents, Transitions};
+use questions::CanonicalQuestions;
 
 /// The largest seed: 2^53 − 1, the largest whole number every JSON reader keeps exactly.
 pub const MAX_SEED: u64 = (1 << 53) - 1;
 /// Seed when none is given.
 pub const DEFAULT_SEED: u64 = 1;
+/// Risk of a limit when none is given.
+pub const DEFAULT_RISK: f64 = 0.05;
 const MAX_LABEL_CHARS: usize = 200;
 
 /// A caller's name for a run: at most 200 characters, no NUL.
@@ -146,6 +151,9 @@ struct CanonicalOutlook<'a> {
     thresholds: &'a [u64],
     dates: Vec<String>,
     levels: &'a [f64],
+    // Left out when nothing is asked besides, as in inputs from before it could be: digests do not change.
+    #[serde(flatten)]
+    questions: CanonicalQuestions<'a>,
 }
 
 impl ForecastInputs {
@@ -231,6 +239,7 @@ fn canonical_outlook(request: &OriginRequest) -> CanonicalOutlook<'_> {
         thresholds: plan.thresholds(),
         dates: plan.dates().iter().map(|&date| date_text(date)).collect(),
         levels: plan.levels(),
+        questions: CanonicalQuestions::from(&request.questions),
     }
 }
 

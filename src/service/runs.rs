@@ -60,6 +60,22 @@ impl Service {
         .await
     }
 
+    /// Computes an answer within the time budget and keeps nothing.
+    ///
+    /// # Errors
+    /// When the inputs have no answer, or there is no free worker in time.
+    pub async fn answer<Q: Question>(&self, question: Q) -> Result<Q::Answer, ServiceError> {
+        if let Some(refusal) = question.refusal() {
+            return Err(ServiceError::from_core(refusal, self.cpu.budget()));
+        }
+        let budget = self.cpu.budget();
+        let answered = self.cpu.run(move |cancelled| {
+            let canonical = question.canonical().map_err(|error| Failure::Unwritable(error.to_string()))?;
+            question.answer(inputs_digest(&canonical), cancelled).map_err(Failure::Unanswered)
+        });
+        answered.await?.map_err(|failure| failure.into_service_error(budget))
+    }
+
     /// The run with this id.
     ///
     /// # Errors

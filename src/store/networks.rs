@@ -8,7 +8,7 @@ use super::columns::{date, kind, kind_name, time, unsigned, uuid};
 use super::jobs::call_off_of;
 use super::refreshes::{Change, RefreshState, RefreshStatus, changed, enqueue};
 use super::writes::{Clash, WriteError};
-use super::{Store, StoreError, backtests};
+use super::{Store, StoreError, StoredQuestion, backtests, questions};
 use crate::model::DegreeKind;
 
 /// A network's settings, to be stored.
@@ -69,7 +69,9 @@ pub struct StoredEvidence {
     pub transitions: Vec<(Timestamp, Timestamp, String)>,
     /// Attachment statistics.
     pub link_events: Option<String>,
-    /// SHA-256 of all of it but the plan and the description.
+    /// Limits and scenarios kept with it, in the order of their names.
+    pub questions: Vec<StoredQuestion>,
+    /// SHA-256 of all of it but the plan, the description and the questions.
     pub digest: String,
 }
 
@@ -217,6 +219,7 @@ impl Store {
             .fetch_optional(&mut *transaction)
             .await?;
         let digest = backtests::digest(&mut transaction, name).await?;
+        let questions = questions::all(&mut transaction, name).await?;
         let dated = |(as_of, counts): (String, String)| Ok((date(&as_of)?, counts));
         let framed = |(from, to, counts): (String, String, String)| Ok((date(&from)?, date(&to)?, counts));
         Ok(Some(StoredEvidence {
@@ -224,6 +227,7 @@ impl Store {
             snapshots: snapshots.into_iter().map(dated).collect::<Result<_, StoreError>>()?,
             transitions: transitions.into_iter().map(framed).collect::<Result<_, StoreError>>()?,
             link_events,
+            questions,
             digest,
         }))
     }

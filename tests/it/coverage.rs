@@ -7,7 +7,7 @@ use serde_json::json;
 use crate::harness::{DOCUMENT, Service, answered, csv, fit_body, forecast_body, json_text};
 
 /// Every operation with the status its plain use is answered with, in an order in which all of them work.
-const CALLS: [(&str, &str, u16); 39] = [
+const CALLS: [(&str, &str, u16); 48] = [
     ("get", "/livez", 200),
     ("get", "/readyz", 200),
     ("get", "/metrics", 200),
@@ -37,6 +37,16 @@ const CALLS: [(&str, &str, u16); 39] = [
     ("get", "/v1/networks/{name}/link-events", 200),
     ("post", "/v1/networks/{name}/forecasts", 201),
     ("post", "/v1/networks/{name}/fits", 201),
+    ("put", "/v1/networks/{name}/limits/{limit}", 201),
+    ("get", "/v1/networks/{name}/limits/{limit}", 200),
+    ("get", "/v1/networks/{name}/limits", 200),
+    ("put", "/v1/networks/{name}/scenarios/{scenario}", 201),
+    ("get", "/v1/networks/{name}/scenarios/{scenario}", 200),
+    ("get", "/v1/networks/{name}/scenarios", 200),
+    // The network has no plan.
+    ("get", "/v1/networks/{name}/comparison", 422),
+    ("delete", "/v1/networks/{name}/limits/{limit}", 204),
+    ("delete", "/v1/networks/{name}/scenarios/{scenario}", 204),
     ("get", "/v1/networks/{name}/accuracy", 200),
     ("post", "/v1/networks/{name}/backtests", 201),
     ("get", "/v1/networks/{name}/backtests", 200),
@@ -65,6 +75,8 @@ fn body(method: &str, path: &str) -> Option<(&'static str, String)> {
         ("forecasts", true) => json!({"arrivals": {"per_day": 1}, "thresholds": [3], "dates": ["2027-01-01"]}),
         ("fits", true) => json!({"fixed": {"preferential_share": 0.5}}),
         ("backtests", _) => json!({"thresholds": [1]}),
+        ("limits", _) => json!({"threshold": 3, "max_nodes": 20, "by": "2027-01-01"}),
+        ("scenarios", _) => json!({"arrivals_factor": 1.2}),
         ("networks", _) => json!({"degree_kind": "received"}),
         ("snapshots", _) => json!({"degree_counts": [[0, 48], [1, 30], [2, 17], [5, 5]]}),
         ("transitions", _) => {
@@ -92,6 +104,7 @@ async fn every_operation_works() {
     for (method, path, status) in CALLS {
         let address = path.replace("{id}", &made).replace("{name}", "heronsgate").replace("{as_of}", "2026-06-01");
         let address = address.replace("{from}", "2026-05-01").replace("{to}", "2026-06-01");
+        let address = address.replace("{limit}", "fan-out").replace("{scenario}", "campaign");
         let request = service.request(method.to_uppercase().parse().unwrap(), &address);
         let answer = match body(method, path) {
             Some((kind, body)) => answered(request.header("content-type", kind).body(body)).await.expect(status),

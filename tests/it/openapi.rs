@@ -3,7 +3,10 @@
 use std::collections::BTreeSet;
 
 use serde_json::{Value, json};
-use tailcast::api::{EVIDENCE_FIELDS, FIT_FIELDS, FORECAST_FIELDS, NETWORK_FIELDS, example_request, openapi_text};
+use tailcast::api::{
+    CHANGE_FIELDS, EVIDENCE_FIELDS, FIT_FIELDS, FORECAST_FIELDS, LIMIT_FIELDS, NETWORK_FIELDS, example_request,
+    openapi_text,
+};
 
 use crate::harness::{DOCUMENT, Service};
 
@@ -32,6 +35,11 @@ fn documented_fields_are_the_fields_that_are_read() {
     assert_eq!(documented("ForecastRequestBody"), read(&FORECAST_FIELDS));
     assert_eq!(documented("FitRequestBody"), read(&FIT_FIELDS));
     assert_eq!(documented("NetworkBody"), read(&NETWORK_FIELDS));
+    assert_eq!(documented("KeptLimitBody"), read(&LIMIT_FIELDS));
+    assert_eq!(documented("ChangeBody"), read(&CHANGE_FIELDS));
+    for (inline, kept) in [("LimitBody", "KeptLimitBody"), ("ScenarioBody", "ChangeBody")] {
+        assert_eq!(&documented(inline) - &documented(kept), read(&["name"]));
+    }
     let evidence = read(&EVIDENCE_FIELDS);
     assert_eq!(documented("NetworkForecastBody"), &read(&FORECAST_FIELDS) - &evidence);
     assert_eq!(documented("NetworkFitBody"), &read(&FIT_FIELDS) - &evidence);

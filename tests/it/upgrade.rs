@@ -158,3 +158,59 @@ async fn a_network_of_the_fourth_version_can_be_backtested() {
     assert_eq!(made["origins"], json!(["2026-02-01"]));
     service.stop().await;
 }
+
+/// A network of the fifth version, which knew no questions, with a forecast that has none in its document: the document is answered
+/// as it is, a limit can be kept and waits for the next forecast.
+#[tokio::test]
+async fn a_network_of_the_fifth_version_keeps_its_forecast_and_takes_limits() {
+    let folder = tempfile::tempdir().unwrap();
+    let made = {
+        let service = Service::start().await;
+        service.post("/v1/forecasts", &crate::harness::forecast_body()).await.expect(201)
+    };
+    let mut document = made.json();
+    for field in ["bands", "watch", "next_hubs", "scenarios"] {
+        document.as_object_mut().unwrap().remove(field).unwrap();
+    }
+    document["network"] = json!("heronsgate");
+    let (id, document) = (document["id"].as_str().unwrap().to_owned(), document.to_string());
+    let migrations = ["0001_runs.sql", "0002_networks.sql", "0003_jobs.sql", "0004_tracking.sql", "0005_backtests.sql"];
+    let (mut database, url) = database(folder.path(), &migrations).await;
+    let tag = tailcast::service::sha256_hex(b"settings");
+    let plan = r#"{"thresholds":[10],"horizon":{"ends_after":"P2M","every":"P1M"},"levels":[0.5,0.9]}"#;
+    for (statement, values) in [
+        (
+            "INSERT INTO networks (name, degree_kind, tag, created_at, updated_at, revision, forecast_plan, refresh_state, refresh_job) \
+             VALUES ('heronsgate', 'received', $1, 5, 6, 3, $2, 'current', $3)",
+            vec![tag.as_str(), plan, ID],
+        ),
+        (
+            "INSERT INTO runs (id, kind, label, created_at, engine, seed, inputs_digest, tag, document, inputs) \
+             VALUES ($1, 'forecast', 'old', 1780272000000000, 'tailcast 0.1.0', 1, 'sha-256:' || $2, $2, $3, '{}')",
+            vec![id.as_str(), tag.as_str(), document.as_str()],
+        ),
+        (
+            "INSERT INTO latest_forecasts (network, run_id, state, job, created_at, tag, document) \
+             VALUES ('heronsgate', $1, 'current', $2, 1780272000000000, $3, $4)",
+            vec![id.as_str(), ID, tag.as_str(), document.as_str()],
+        ),
+    ] {
+        let query = values.into_iter().fold(sqlx::query(statement), |query, value| query.bind(value));
+        query.execute(&mut database).await.unwrap();
+    }
+    database.close().await.unwrap();
+
+    let service = Service::start_with(|config| config.database.url = url.clone()).await;
+    let latest = service.get("/v1/networks/heronsgate/forecasts/latest").await.expect(200);
+    assert_eq!(latest.text, document);
+    for part in ["tail", "limits", "bands", "scenarios"] {
+        let table = service.get(&format!("/v1/forecasts/{id}?format=csv&part={part}")).await.expect(200);
+        assert_eq!(table.text.lines().count() > 1, part == "tail", "{}", table.text);
+    }
+    let path = "/v1/networks/heronsgate/limits/fan-out";
+    let limit = json!({"threshold": 10, "max_nodes": 20, "by": "2027-01-01"});
+    assert_eq!(service.put(path, &limit).await.expect(201).json()["answer"], json!(null));
+    crate::tracking::settled(&service).await;
+    assert_eq!(service.get(path).await.expect(200).json()["state"], "waiting", "nothing is stored to start from");
+    service.stop().await;
+}

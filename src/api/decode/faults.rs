@@ -148,6 +148,11 @@ impl Faults {
         self.list.is_empty()
     }
 
+    /// How many there are.
+    pub fn count(&self) -> usize {
+        self.list.len() + self.unlisted
+    }
+
     /// The faults listed, and how many more there are.
     pub fn into_parts(self) -> (Vec<Fault>, usize) {
         (self.list, self.unlisted)

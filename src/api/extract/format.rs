@@ -44,8 +44,16 @@ impl FromRequestParts<AppState> for ResultFormat {
 
     async fn from_request_parts(parts: &mut Parts, _state: &AppState) -> Result<Self, ApiError> {
         let mut faults = Faults::default();
-        let asked = parameters(&parts.uri, &["format"], &mut faults).into_iter().find(|(name, _)| name == "format");
-        let format = match asked.as_ref().map(|(_, value)| value.as_str()) {
+        let given = parameters(&parts.uri, &["format"], &mut faults);
+        Self::of(&given, &parts.headers, faults)
+    }
+}
+
+impl ResultFormat {
+    /// The form that the query, or else the client's headers, ask for; `faults` are those of the query so far.
+    pub fn of(given: &[(String, String)], headers: &HeaderMap, mut faults: Faults) -> Result<Self, ApiError> {
+        let asked = given.iter().find(|(name, _)| name == "format");
+        let format = match asked.map(|(_, value)| value.as_str()) {
             None => None,
             Some("json") => Some(Self::Json),
             Some("csv") => Some(Self::Csv),
@@ -59,7 +67,7 @@ impl FromRequestParts<AppState> for ResultFormat {
             return Err(ApiError::Invalid(faults));
         }
         let offered = "application/json and text/csv";
-        format.or_else(|| accepted(&parts.headers)).ok_or(ApiError::NotAcceptable { offered })
+        format.or_else(|| accepted(headers)).ok_or(ApiError::NotAcceptable { offered })
     }
 }
 

@@ -321,10 +321,10 @@ impl From<StoredLinkEvents> for LinkEventsLine {
     }
 }
 
-fn etag(tag: &str) -> String {
+pub fn etag(tag: &str) -> String {
     entity_tag(tag, ResultFormat::Json)
 }
 
-fn raw(json: String) -> Result<Box<RawValue>, ApiError> {
+pub fn raw(json: String) -> Result<Box<RawValue>, ApiError> {
     RawValue::from_string(json).map_err(|error| ApiError::Broken(format!("what is stored is not JSON: {error}")))
 }

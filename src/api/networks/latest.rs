@@ -6,10 +6,11 @@ use axum::response::Response;
 use utoipa_axum::router::OpenApiRouter;
 use utoipa_axum::routes;
 
-use crate::api::extract::{ResultFormat, network_name};
+use crate::api::extract::{ForecastForm, ResultFormat, network_name};
 use crate::api::refusals::{FormRefusals, Refusals};
 use crate::api::representation::header_value;
 use crate::api::{ApiError, AppState, forecasts, jobs, runs};
+use crate::report::ForecastPart;
 use crate::service::ForecastRun;
 
 /// The routes of this resource.
@@ -29,6 +30,7 @@ pub fn routes() -> OpenApiRouter<AppState> {
     params(
         ("name" = String, Path, description = "The network"),
         ("format" = inline(Option<ResultFormat>), Query, description = "Goes before Accept"),
+        ("part" = inline(Option<ForecastPart>), Query, description = "Which table of CSV; `tail` when left out"),
         ("If-None-Match" = Option<String>, Header, description = "Answer 304 when this ETag is still the latest"),
     ),
     responses(
@@ -50,13 +52,13 @@ pub fn routes() -> OpenApiRouter<AppState> {
 async fn get_latest_forecast(
     State(state): State<AppState>,
     Path(name): Path<String>,
-    format: ResultFormat,
+    form: ForecastForm,
     headers: HeaderMap,
 ) -> Result<Response, ApiError> {
     let latest = state.service.latest_forecast(&network_name(&name)?).await?;
     let place = header_value(&format!("{}/{}", forecasts::PATH, latest.run.id))?;
     let refresh = header_value(&format!("<{}/{}>; rel=\"describedby\"", jobs::PATH, latest.job))?;
-    let mut response = runs::found(latest.run, format, &headers, forecasts::csv)?;
+    let mut response = runs::found(latest.run, form, &headers)?;
     let told = response.headers_mut();
     told.insert(header::CONTENT_LOCATION, place);
     told.insert("forecast-state", HeaderValue::from_static(latest.state.as_str()));

@@ -5,10 +5,11 @@ use axum::response::Response;
 use utoipa_axum::router::OpenApiRouter;
 use utoipa_axum::routes;
 
-use crate::api::extract::{IdempotencyKey, JsonBody, ResultFormat, network_name};
+use crate::api::extract::{ForecastForm, IdempotencyKey, JsonBody, ResultFormat, network_name};
 use crate::api::refusals::{BodyRefusals, FormRefusals, Refusals};
 use crate::api::requests::{NetworkFitBody, NetworkForecastBody, read_network_fit, read_network_forecast};
 use crate::api::{ApiError, AppState, Problem, examples, fits, forecasts, runs};
+use crate::report::ForecastPart;
 use crate::service::{FitRun, ForecastRun, NetworkEvidence};
 
 /// The routes of this resource.
@@ -28,6 +29,7 @@ pub fn routes() -> OpenApiRouter<AppState> {
     params(
         ("name" = String, Path, description = "The network"),
         ("format" = inline(Option<ResultFormat>), Query, description = "Goes before Accept"),
+        ("part" = inline(Option<ForecastPart>), Query, description = "Which table of CSV; `tail` when left out"),
         ("Idempotency-Key" = Option<String>, Header, min_length = 1, max_length = 255,
             description = "Requests with the same key and body for the same network are one and the same: the run is made \
                            once, from what was stored then."),
@@ -52,17 +54,19 @@ pub fn routes() -> OpenApiRouter<AppState> {
 async fn create_network_forecast(
     State(state): State<AppState>,
     Path(name): Path<String>,
-    format: ResultFormat,
+    form: ForecastForm,
     key: IdempotencyKey,
     body: JsonBody,
 ) -> Result<Response, ApiError> {
     let (name, limits) = (network_name(&name)?, state.limits);
     let claim = key.claim_for(&name, &body);
-    let NetworkEvidence { evidence, plan, origin, place: _place } = state.service.evidence(&name).await?;
-    let inputs =
-        body.read(move |raw, faults| read_network_forecast(raw, evidence, plan.as_ref(), &limits, faults)).await?;
+    let NetworkEvidence { evidence, plan, limits: kept, origin, place: _place, .. } =
+        state.service.evidence(&name).await?;
+    let inputs = body
+        .read(move |raw, faults| read_network_forecast(raw, evidence, (plan.as_ref(), kept), &limits, faults))
+        .await?;
     let run = state.service.create(inputs, Some(origin), claim).await?;
-    runs::created(forecasts::PATH, run, format, forecasts::csv)
+    runs::created(forecasts::PATH, run, form)
 }
 
 /// Fit a tracked network
@@ -108,5 +112,5 @@ async fn create_network_fit(
     let NetworkEvidence { evidence, origin, place: _place, .. } = state.service.evidence(&name).await?;
     let inputs = body.read(move |raw, faults| read_network_fit(raw, evidence, faults)).await?;
     let run = state.service.create(inputs, Some(origin), claim).await?;
-    runs::created(fits::PATH, run, format, fits::csv)
+    runs::created(fits::PATH, run, format)
 }

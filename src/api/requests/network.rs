@@ -4,12 +4,12 @@ use jiff::Timestamp;
 use serde_json::value::RawValue;
 
 use super::evidence::{degree_kind, entry_degrees};
-use super::{FIT_FIELDS, FORECAST_FIELDS, fit_request, label, outlook};
+use super::{FIT_FIELDS, FORECAST_FIELDS, fit_request, label, outlook, questions};
 use crate::api::decode::{
     At, Faults, Object, degree_counts, degree_counts_csv, link_events, moves, moves_csv, object, text,
 };
 use crate::config::LimitsConfig;
-use crate::model::{Evidence, LinkEvents, Snapshot, StandingPlan, Transitions, TransitionsFault};
+use crate::model::{Evidence, Limit, LinkEvents, Snapshot, StandingPlan, Transitions, TransitionsFault};
 use crate::service::{Description, FitInputs, ForecastInputs, NetworkSettings, OriginRequest};
 
 /// Fields of a network's settings.
@@ -117,11 +117,12 @@ pub fn read_network_fit(raw: &RawValue, evidence: Evidence, faults: &mut Faults)
     Some(FitInputs { label, evidence, fit: fit? })
 }
 
-/// Reads what is asked of a forecast of a tracked network; what is left out comes from its plan, if it has one.
+/// Reads what is asked of a forecast of a tracked network; what is left out comes from its plan, if it has one, and the limits
+/// from those kept with it.
 pub fn read_network_forecast(
     raw: &RawValue,
     evidence: Evidence,
-    standing: Option<&StandingPlan>,
+    (standing, kept): (Option<&StandingPlan>, Vec<Limit>),
     limits: &LimitsConfig,
     faults: &mut Faults,
 ) -> Option<ForecastInputs> {
@@ -132,7 +133,8 @@ pub fn read_network_forecast(
     let label = label(&body, faults);
     let arrivals = outlook::arrivals(&body, latest, standing, faults);
     let plan = outlook::plan(&body, latest, standing, limits, faults);
-    let request = OriginRequest { evidence, fit: fit?, arrivals, plan: plan?, questions: Default::default() };
+    let questions = questions::read(&body, latest, (plan.as_ref(), kept), limits, faults);
+    let request = OriginRequest { evidence, fit: fit?, arrivals, plan: plan?, questions: questions? };
     Some(ForecastInputs { label, request })
 }
 

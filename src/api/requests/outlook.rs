@@ -28,11 +28,20 @@ pub fn arrivals(
         let planned = standing?.arrivals.as_ref()?.at(latest?);
         return noted_plan(planned.map_err(|found| format!("forecast_plan: {}", in_words(&found))), faults);
     };
-    let root = At::ROOT;
-    let at = root.field("arrivals");
+    arrivals_at(raw, At::ROOT.field("arrivals"), latest, faults)
+}
+
+/// Arrivals that stand at `at`, from the newest snapshot on.
+pub(super) fn arrivals_at(
+    raw: &RawValue,
+    at: At<'_>,
+    latest: Option<Timestamp>,
+    faults: &mut Faults,
+) -> Option<ArrivalPlan> {
     let (given, segmented) = given_arrivals(raw, at, faults)?;
-    // Without a newest snapshot there is no day to count from; that is a fault of its own already.
-    let plan = given.at(latest?);
+    // Without a newest snapshot they are checked from their own start; that there is none is told elsewhere where it matters.
+    let from = latest.or(given.segments().first().and_then(|segment| segment.from));
+    let plan = given.at(from.unwrap_or(Timestamp::UNIX_EPOCH));
     plan.map_err(|found| note_arrivals(&found, at, segmented, faults)).ok()
 }
 
@@ -170,7 +179,7 @@ pub fn plan(
     Some(plan)
 }
 
-fn too_many_cells(plan: &ForecastPlan, limits: &LimitsConfig) -> Option<String> {
+pub(super) fn too_many_cells(plan: &ForecastPlan, limits: &LimitsConfig) -> Option<String> {
     let (thresholds, dates) = (plan.thresholds().len(), plan.dates().len());
     let cells = thresholds * dates;
     (cells > limits.cells).then(|| {

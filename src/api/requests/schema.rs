@@ -7,6 +7,7 @@ use utoipa::ToSchema;
 use utoipa::openapi::schema::{Array, ArrayBuilder, ArrayItems, ObjectBuilder, Schema, SchemaType, Type};
 use utoipa::openapi::{KnownFormat, SchemaFormat};
 
+use super::questions_schema::{BandBody, LimitBody, ScenarioBody, WatchBody};
 use crate::model::{DegreeKind, MAX_DEGREE};
 
 /// `[[degree, nodes], …]`
@@ -155,6 +156,30 @@ pub struct ForecastRequestBody {
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false, min_items = 1, max_items = 20)]
     pub levels: Option<Vec<f64>>,
+    /// Limits on the number of hubs to answer for.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, max_items = 50)]
+    pub limits: Option<Vec<LimitBody>>,
+    /// What nodes cost by their degree, in bands that do not overlap; a degree in none of them costs nothing.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, min_items = 1, max_items = 50)]
+    pub bands: Option<Vec<BandBody>>,
+    /// The unit of the bands' costs.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, min_length = 1, max_length = 200, examples("EUR/month"))]
+    pub cost_unit: Option<String>,
+    /// Nodes and classes of nodes to follow.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false)]
+    pub watch: Option<WatchBody>,
+    /// So many of the largest nodes' degrees.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, minimum = 1, maximum = 100)]
+    pub next_hubs: Option<u64>,
+    /// What-ifs, each set beside the forecast as it stands.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, max_items = 10)]
+    pub scenarios: Option<Vec<ScenarioBody>>,
     /// Seed of everything random, so far the samples behind the goodness of fit; 1 when left out.
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false, maximum = 9007199254740991u64)]

@@ -144,6 +144,12 @@ fn request(
         evidence: None,
         fixed: None,
         levels: None,
+        limits: None,
+        bands: None,
+        cost_unit: None,
+        watch: None,
+        next_hubs: None,
+        scenarios: None,
         seed: None,
         label: Some("Heronsgate demo".to_owned()),
     }

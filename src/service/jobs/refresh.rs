@@ -11,10 +11,11 @@ use super::outcome::{JobOutcome, JobProblem, RefreshResult};
 use super::{MOST_STARTS, persistently};
 use crate::evaluate::OriginRequest;
 use crate::fit::FitRequest;
-use crate::model::Evidence;
+use crate::model::{Evidence, Questions};
 use crate::service::accounts::{self, Accounts};
 use crate::service::evidence::{assemble, off_runtime};
 use crate::service::inputs::{DEFAULT_SEED, ForecastInputs};
+use crate::service::questions::limits_from;
 use crate::service::runs::compute;
 use crate::service::{NetworkName, RunOrigin, Service, ServiceError, plan};
 use crate::store::{JobState, NewRun, RefreshEnd, RefreshEnded, RefreshState, StoredJob, StoredOrigin};
@@ -92,11 +93,12 @@ impl Service {
 
     async fn refreshed(&self, job: &StoredJob, turn: &Turn) -> Result<Option<Came>, Halt> {
         let progress = turn.progress();
-        let Some(stored) = self.store.find_evidence(&job.network).await.map_err(ServiceError::from)? else {
+        let Some(mut stored) = self.store.find_evidence(&job.network).await.map_err(ServiceError::from)? else {
             return Ok(None);
         };
         let revision = stored.network.revision;
         let plan = stored.network.settings.forecast_plan.as_deref().map(plan::from_json).transpose()?;
+        let kept = std::mem::take(&mut stored.questions);
         let evidence = off_runtime(move || assemble::evidence(stored)).await?;
         let snapshots = evidence.as_ref().map(Evidence::snapshots).unwrap_or_default().to_vec();
         progress.note(0.02)?;
@@ -116,7 +118,8 @@ impl Service {
                     Err(why) => Err(NoForecast::Problem(JobProblem::refusal(&ServiceError::Impossible(why)))),
                     Ok((plan, arrivals)) => {
                         let fit = FitRequest { seed: DEFAULT_SEED, ..FitRequest::default() };
-                        let request = OriginRequest { evidence, fit, arrivals, plan, questions: Default::default() };
+                        let questions = Questions { limits: limits_from(&kept, latest)?, ..Questions::default() };
+                        let request = OriginRequest { evidence, fit, arrivals, plan, questions };
                         self.forecast(ForecastInputs { label: None, request }, origin, progress).await?
                     }
                 }
