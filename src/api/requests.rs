@@ -1,5 +1,6 @@
 //! Reading request bodies into validated inputs.
 
+mod arrivals;
 mod backtest;
 mod evidence;
 mod network;
@@ -18,8 +19,8 @@ pub use network_schema::{
     DegreeCountsBody, ForecastPlanBody, NetworkBody, NetworkFitBody, NetworkForecastBody, TransitionCountsBody,
 };
 pub use schema::{
-    ArrivalsBody, DegreeKindName, FitRequestBody, FixedBody, ForecastRequestBody, HorizonBody, LinkEventsBody,
-    ModelName, SegmentBody, SnapshotBody, TransitionsBody, WindowBody, degree_pairs, move_rows,
+    ArrivalsBody, CampaignBody, DegreeKindName, FitRequestBody, FixedBody, ForecastRequestBody, HorizonBody,
+    LinkEventsBody, ModelName, SegmentBody, SnapshotBody, TransitionsBody, WindowBody, degree_pairs, move_rows,
 };
 
 use super::decode::{At, Faults, Object, object, real, text, whole};
@@ -90,8 +91,8 @@ pub fn read_forecast(raw: &RawValue, limits: &LimitsConfig, faults: &mut Faults)
     let evidence = evidence::read(&body, limits, faults);
     let fit = fit_request(&body, faults);
     let label = label(&body, faults);
-    let arrivals = outlook::arrivals(&body, evidence.latest, None, faults);
     let plan = outlook::plan(&body, evidence.latest, None, limits, faults);
+    let arrivals = arrivals::arrivals(&body, evidence.latest, plan.as_ref(), None, faults);
     let request =
         OriginRequest { evidence: evidence.whole?, fit: fit?, arrivals, plan: plan?, questions: Default::default() };
     Some(ForecastInputs { label, request })

@@ -10,6 +10,7 @@ mod forecast;
 mod hostile;
 mod law;
 mod networks;
+mod plans;
 mod pool;
 mod quantiles;
 mod reference;

@@ -4,7 +4,7 @@ use jiff::Timestamp;
 use serde_json::value::RawValue;
 
 use super::evidence::{degree_kind, entry_degrees};
-use super::{FIT_FIELDS, FORECAST_FIELDS, fit_request, label, outlook};
+use super::{FIT_FIELDS, FORECAST_FIELDS, arrivals, fit_request, label, outlook};
 use crate::api::decode::{
     At, Faults, Object, degree_counts, degree_counts_csv, link_events, moves, moves_csv, object, text,
 };
@@ -130,8 +130,8 @@ pub fn read_network_forecast(
     let latest = Some(evidence.latest().as_of);
     let fit = fit_request(&body, faults);
     let label = label(&body, faults);
-    let arrivals = outlook::arrivals(&body, latest, standing, faults);
     let plan = outlook::plan(&body, latest, standing, limits, faults);
+    let arrivals = arrivals::arrivals(&body, latest, plan.as_ref(), standing, faults);
     let request = OriginRequest { evidence, fit: fit?, arrivals, plan: plan?, questions: Default::default() };
     Some(ForecastInputs { label, request })
 }
