@@ -42,9 +42,9 @@ pub use examples::forecast_request as example_request;
 pub use extract::read_json;
 pub use problem::Problem;
 pub use requests::{
-    ArrivalsBody, BacktestBody, CHANGE_FIELDS, DegreeKindName, EVIDENCE_FIELDS, FIT_FIELDS, FORECAST_FIELDS,
-    FitRequestBody, FixedBody, ForecastRequestBody, HorizonBody, LIMIT_FIELDS, LinkEventsBody, ModelName,
-    NETWORK_FIELDS, SegmentBody, SnapshotBody, TransitionsBody, WindowBody, read_fit, read_forecast,
+    ArrivalsBody, BacktestBody, CHANGE_FIELDS, CampaignBody, DegreeKindName, EVIDENCE_FIELDS, FIT_FIELDS,
+    FORECAST_FIELDS, FitRequestBody, FixedBody, ForecastRequestBody, HorizonBody, LIMIT_FIELDS, LinkEventsBody,
+    ModelName, NETWORK_FIELDS, SegmentBody, SnapshotBody, TransitionsBody, WindowBody, read_fit, read_forecast,
 };
 
 /// What handlers share.

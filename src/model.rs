@@ -3,6 +3,7 @@
 //! Every constructor parses; none of these types can be built with a non-finite number, an unsorted list or a sum
 //! that overflows. Times are kept as `jiff::Timestamp` at the edges and as days since an origin inside the core.
 
+mod arrival_spread;
 mod arrivals;
 mod counts;
 mod entry;
@@ -12,9 +13,12 @@ mod link_events;
 mod parameters;
 mod plan;
 mod questions;
+mod seasons;
+mod standing_arrivals;
 mod standing_plan;
 mod transitions;
 
+pub use arrival_spread::ArrivalSpread;
 pub use arrivals::{ArrivalFault, ArrivalPlan, ArrivalSegment};
 pub use counts::{CountsFault, CountsFaultKind, DegreeCounts, DegreeKind, MAX_DEGREE};
 pub use entry::{EntryDegrees, EntryFault};
@@ -29,7 +33,9 @@ pub use questions::{
     Band, Bands, Change, DegreeCap, Limit, MAX_BANDS, MAX_LIMITS, MAX_NEXT_HUBS, MAX_SCENARIOS, MAX_WATCHED,
     QuestionFault, Questions, RefusedLinks, Shift, Watch, WatchedClass, WatchedNode,
 };
-pub use standing_plan::{Horizon, HorizonEnd, StandingArrivals, StandingPlan, StandingSegment};
+pub use seasons::{Campaign, Seasons};
+pub use standing_arrivals::{StandingArrivals, StandingSegment};
+pub use standing_plan::{Horizon, HorizonEnd, StandingPlan};
 pub use transitions::{Move, Transitions, TransitionsFault};
 
 /// Days from `origin` to `time`, as a real number; negative when `time` is earlier.

@@ -11,6 +11,7 @@ mod link_events;
 mod number;
 mod object;
 mod rows;
+mod segments_csv;
 mod time;
 
 pub use counts::{degree_counts, moves};
@@ -18,7 +19,8 @@ pub use csv::{degree_counts_csv, moves_csv};
 pub use faults::{At, Fault, Faults, Place};
 pub use link_events::link_events;
 pub use number::{real, whole};
-pub use object::{Object, list, object, text, unknown_name};
+pub use object::{Object, fields, list, object, text, unknown_name};
+pub use segments_csv::segments_csv;
 pub use time::{every, every_of, instant, instant_of};
 
 use serde_json::value::RawValue;

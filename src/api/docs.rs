@@ -56,19 +56,19 @@ pub fn preamble() -> OpenApi {
 pub fn with_exclusive_fields(mut document: OpenApi) -> OpenApi {
     let Some(components) = document.components.as_mut() else { return document };
     let exclusive = [
-        ("ForecastRequestBody", "dates", "horizon"),
-        ("ArrivalsBody", "per_day", "segments"),
-        ("HorizonBody", "until", "ends_after"),
+        ("ForecastRequestBody", vec!["dates", "horizon"]),
+        ("ArrivalsBody", vec!["per_day", "segments", "csv"]),
+        ("HorizonBody", vec!["until", "ends_after"]),
     ];
     // Neither is required where a plan has dates.
     if let Some(RefOr::T(Schema::Object(body))) = components.schemas.get_mut("NetworkForecastBody") {
         let both = json!({"required": ["dates", "horizon"]});
         body.extensions.get_or_insert_default().insert("not".to_owned(), both);
     }
-    for (name, either, or) in exclusive {
+    for (name, fields) in exclusive {
         if let Some(RefOr::T(Schema::Object(body))) = components.schemas.get_mut(name) {
-            let one_of = json!([{"required": [either]}, {"required": [or]}]);
-            body.extensions.get_or_insert_default().insert("oneOf".to_owned(), one_of);
+            let one_of: Vec<_> = fields.iter().map(|field| json!({"required": [field]})).collect();
+            body.extensions.get_or_insert_default().insert("oneOf".to_owned(), one_of.into());
         }
     }
     document

@@ -1,5 +1,6 @@
 //! Reading request bodies into validated inputs.
 
+mod arrivals;
 mod backtest;
 mod comparison;
 mod evidence;
@@ -23,9 +24,11 @@ pub use network_schema::{
 };
 pub use questions_schema::{ChangeBody, KeptLimitBody};
 pub use schema::{
-    ArrivalsBody, DegreeKindName, FitRequestBody, FixedBody, ForecastRequestBody, HorizonBody, LinkEventsBody,
-    ModelName, SegmentBody, SnapshotBody, TransitionsBody, WindowBody, degree_pairs, move_rows,
+    ArrivalsBody, CampaignBody, DegreeKindName, FitRequestBody, FixedBody, ForecastRequestBody, HorizonBody,
+    LinkEventsBody, ModelName, SegmentBody, SnapshotBody, TransitionsBody, WindowBody, degree_pairs, move_rows,
 };
+
+use arrivals::Stretch;
 
 use super::decode::{At, Faults, Object, object, real, text, whole};
 use crate::config::LimitsConfig;
@@ -101,9 +104,10 @@ pub fn read_forecast(raw: &RawValue, limits: &LimitsConfig, faults: &mut Faults)
     let evidence = evidence::read(&body, limits, faults);
     let fit = fit_request(&body, faults);
     let label = label(&body, faults);
-    let arrivals = outlook::arrivals(&body, evidence.latest, None, faults);
     let plan = outlook::plan(&body, evidence.latest, None, limits, faults);
     let questions = questions::read(&body, evidence.latest, (plan.as_ref(), Vec::new()), limits, faults);
+    let stretch = Stretch::of(evidence.latest, plan.as_ref(), questions.as_ref().map_or(&[], |asked| &asked.limits));
+    let arrivals = arrivals::arrivals(&body, stretch, None, faults);
     let request = OriginRequest { evidence: evidence.whole?, fit: fit?, arrivals, plan: plan?, questions: questions? };
     Some(ForecastInputs { label, request })
 }

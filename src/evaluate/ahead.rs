@@ -52,7 +52,7 @@ impl Default for GivenRates {
 }
 
 /// The rates over `days` after the newest snapshot of `known`: those `given`, and for the others what is to be expected, with one of
-/// them at one standard deviation to either side; losses and entry degrees are those of `forces`. Empty where there is no period.
+/// them at one standard deviation to either side, given arrivals too where they are uncertain; losses and entry degrees are those of `forces`. Empty where there is no period.
 pub(super) fn expected_rates(
     known: &Evidence,
     forces: &GrowthParameters,
@@ -73,9 +73,13 @@ pub(super) fn expected_rates(
     };
     let all_given = given.arrivals.is_some() && given.links_per_arrival.is_some();
     let mut found = vec![(if all_given { Growth::Known } else { Growth::Expected }, rates(arrivals, links))];
-    if given.arrivals.is_none() {
-        found.push((Growth::Low(Rate::Arrivals), rates(&forecast.low, links)));
-        found.push((Growth::High(Rate::Arrivals), rates(&forecast.high, links)));
+    let sides = match &given.arrivals {
+        Some(plan) => plan.sides(),
+        None => Some((forecast.low.clone(), forecast.high.clone())),
+    };
+    if let Some((low, high)) = sides {
+        found.push((Growth::Low(Rate::Arrivals), rates(&low, links)));
+        found.push((Growth::High(Rate::Arrivals), rates(&high, links)));
     }
     if given.links_per_arrival.is_none() {
         found.push((Growth::Low(Rate::Links), rates(arrivals, links * (-deviation).exp())));

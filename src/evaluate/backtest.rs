@@ -124,9 +124,10 @@ pub(super) fn pooled_tail(record: &OriginRecord, outlook: &Outlook, weights: &Po
 }
 
 /// Variance that the uncertainty of arrivals and landings adds: for each the square of half of what one standard deviation to
-/// either side makes of the tail at index `j`; 0 where they are known.
+/// either side makes of the tail at index `j`; 0 where they came or are given as certain.
 fn of_growth(record: &OriginRecord, outlook: &Outlook, j: usize) -> f64 {
-    if outlook.target.growth == Growth::Known {
+    // Totals that came stand beside expected ones, whose sides are not theirs. Rates that are given bring their own sides.
+    if outlook.target.growth == Growth::Known && outlook.target.rates.is_none() {
         return 0.0;
     }
     let mix = record.models.iter().position(|&m| m == Model::Mix);

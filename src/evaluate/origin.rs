@@ -28,7 +28,7 @@ pub const CAUTIONS: [&str; 5] = [
     "A forecast assumes that growth goes on as the fitted mix and the given rates say; a launch, a policy change or a ranking \
      change breaks it.",
     "Intervals cover chance, the uncertainty of the estimates and a stated allowance for model error; rates that are given \
-     are taken as exact, and events without precedent in the data are not covered.",
+     without a range are taken as exact, and events without precedent in the data are not covered.",
     "Unless departures or link losses are given or read from transitions, nodes stay and links last; where they do not, the \
      largest hubs come out too many and too certain.",
     "Far thresholds and far dates rest on the fewest nodes: plan with the interval, not with its middle.",
@@ -267,9 +267,12 @@ fn scenario(request: &OriginRequest, fit: &Fit) -> Result<(Scenario, Option<Warn
         let factor = deviation.exp();
         excursions.push(Excursion { low: with(links / factor)?, high: with(links * factor)? });
     }
-    if let Some(forecast) = &forecast {
-        let with = |plan: &ArrivalPlan| forces.clone().with_arrivals(plan.clone());
-        excursions.push(Excursion { low: with(&forecast.low), high: with(&forecast.high) });
+    let sides = match forecast.as_ref() {
+        Some(forecast) => Some((forecast.low.clone(), forecast.high.clone())),
+        None => arrivals.sides(),
+    };
+    if let Some((low, high)) = sides {
+        excursions.push(Excursion { low: forces.clone().with_arrivals(low), high: forces.clone().with_arrivals(high) });
     }
     // A fit that misses the very flows it was made from will miss the next ones by no less.
     let flow_error = fit.goodness.and_then(|g| g.flow_error).unwrap_or(0.0);

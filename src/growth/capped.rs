@@ -1,9 +1,10 @@
 //! Nodes under a degree cap that may lose links again: no closed law, but a backward equation on few states.
 
-use super::mean_field::Course;
+use super::law::NodeLaw;
+use super::mean_field::{Course, GrowthError};
 use super::tails::{TailClass, TailParts};
 use crate::model::DegreeCounts;
-use crate::numerics::tolerances::{CAP_DAMPING_STEPS, CAP_TIME_STEPS};
+use crate::numerics::tolerances::{Accuracy, CAP_DAMPING_STEPS, CAP_TIME_STEPS};
 
 /// Largest cap whose states are gone through one by one; above it the cap's edge is narrow beside the degree.
 const MOST_STATES: u64 = 20_000;
@@ -19,12 +20,19 @@ pub(super) fn needs_states(course: &Course, threshold: u64) -> bool {
 ///
 /// Formula (Kolmogorov's backward equation), with u_k(s) = P(X_t ≥ j | X_s = k) for k = 0 … cap:
 /// `−du_k/ds = λ_k(s)·(u_{k+1} − u_k) + w·k·(u_{k−1} − u_k)`, λ_cap = 0, u_k(t) = 1 for k ≥ j and 0 below. One solution gives every
-/// present node (s = 0) and newcomers of every day. A node that starts past the cap is taken to stay at the cap or above.
+/// present node (s = 0) and newcomers of every day. A node that starts past the cap only loses links: that it may fall below and gain
+/// again is left out.
 ///
 /// # Numerical notes
 /// Crank–Nicolson in 240 steps that shorten towards t, the first four from there by backward Euler (Rannacher 1984, from memory),
 /// tridiagonal solves; against simulation within its error (`tests/core/questions/scenarios.rs`). Cost: cap × steps.
-pub(super) fn capped_parts(course: &Course, counts: &DegreeCounts, day: f64, threshold: u64, cap: u64) -> TailParts {
+pub(super) fn capped_parts(
+    course: &Course,
+    counts: &DegreeCounts,
+    day: f64,
+    threshold: u64,
+    cap: u64,
+) -> Result<TailParts, GrowthError> {
     let forces = course.parameters();
     let states = cap as usize + 1;
     let mut values: Vec<f64> = (0..states).map(|k| f64::from(k as u64 >= threshold)).collect();
@@ -45,12 +53,15 @@ pub(super) fn capped_parts(course: &Course, counts: &DegreeCounts, day: f64, thr
         newcomers += arrived * 0.5 * (before + entering(&values));
     }
     let survival = course.survival(day);
-    let class = |(degree, nodes): (u64, u64)| TailClass {
-        degree,
-        nodes: nodes as f64,
-        probability: survival * values[(degree as usize).min(states - 1)].clamp(0.0, 1.0),
+    let gainless = NodeLaw::gainless(course, 0.0, day);
+    let class = |(degree, nodes): (u64, u64)| {
+        let tail = match values.get(degree as usize) {
+            Some(value) => value.clamp(0.0, 1.0),
+            None => gainless.tail_within(degree, threshold, Accuracy::Working)?,
+        };
+        Ok(TailClass { degree, nodes: nodes as f64, probability: survival * tail })
     };
-    TailParts { present: counts.iter().rev().map(class).collect(), newcomers }
+    Ok(TailParts { present: counts.iter().rev().map(class).collect::<Result<_, GrowthError>>()?, newcomers })
 }
 
 /// Room for the steps of one birth and death equation.

@@ -130,7 +130,7 @@ impl<'a> NetworkLaw<'a> {
     /// Those of [`super::NodeLaw::tail`].
     pub fn parts(&self, threshold: u64, accuracy: Accuracy) -> Result<TailParts, GrowthError> {
         if let Some(cap) = self.course.cap().filter(|_| needs_states(self.course, threshold)) {
-            return Ok(capped_parts(self.course, self.counts, self.day, threshold, cap));
+            return capped_parts(self.course, self.counts, self.day, threshold, cap);
         }
         let mut parts = TailParts::default();
         match &self.nodes {

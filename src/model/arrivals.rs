@@ -6,6 +6,8 @@ use super::DAYS_PER_YEAR;
 
 /// The fastest growth accepted: a hundredfold a year.
 const MAX_GROWTH_PER_YEAR: f64 = 99.0;
+/// The largest standard deviation of ln of the rates: seven times more or less in either direction.
+const MAX_LOG_DEVIATION: f64 = 2.0;
 
 /// One stretch of an arrival plan: from `from_day` on, `per_day` arrivals a day at its start, growing (or shrinking)
 /// by the factor `1 + growth_per_year` a year, continuously compounded.
@@ -26,7 +28,8 @@ impl ArrivalSegment {
     }
 }
 
-/// A piecewise exponential arrival rate A(t), nodes a day; the last segment goes on for ever.
+/// A piecewise exponential arrival rate A(t), nodes a day; the last segment goes on for ever. Its rates may be uncertain: all of
+/// them together by one log-normal factor whose median is 1.
 ///
 /// ```
 /// use tailcast::model::ArrivalPlan;
@@ -37,14 +40,18 @@ impl ArrivalSegment {
 #[derive(Debug, Clone, PartialEq)]
 pub struct ArrivalPlan {
     segments: Vec<ArrivalSegment>,
+    log_deviation: f64,
 }
 
-/// What is wrong with an arrival plan, and in which segment.
+/// What is wrong with an arrival plan, and where.
 #[derive(Debug, Clone, PartialEq)]
 pub struct ArrivalFault {
-    /// Index of the offending segment; `None` for the whole plan.
+    /// The list at fault: `segments`, `months`, `weeks` or `campaigns`.
+    pub list: &'static str,
+    /// Index of the offending item, of `weeks` the ISO week itself; `None` for what is no item of a list.
     pub index: Option<usize>,
-    /// The field at fault within the segment: `from`, `per_day` or `growth_per_year`.
+    /// The field at fault within the item, such as `per_day`; empty where the item is a bare number. Without an index the field of
+    /// the plan.
     pub field: &'static str,
     /// What is wrong and how to mend it.
     pub detail: String,
@@ -53,6 +60,16 @@ pub struct ArrivalFault {
 impl fmt::Display for ArrivalFault {
     fn fmt(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
         f.write_str(&self.detail)
+    }
+}
+
+impl ArrivalFault {
+    pub(super) fn of_segment(index: Option<usize>, field: &'static str, detail: impl Into<String>) -> Self {
+        Self { list: "segments", index, field, detail: detail.into() }
+    }
+
+    pub(super) fn of_plan(field: &'static str, detail: impl Into<String>) -> Self {
+        Self::of_segment(None, field, detail)
     }
 }
 
@@ -70,7 +87,8 @@ impl ArrivalPlan {
 
     /// Nobody arrives.
     pub fn none() -> Self {
-        Self { segments: vec![ArrivalSegment { from_day: 0.0, per_day: 0.0, growth_per_year: 0.0 }] }
+        let segment = ArrivalSegment { from_day: 0.0, per_day: 0.0, growth_per_year: 0.0 };
+        Self { segments: vec![segment], log_deviation: 0.0 }
     }
 
     /// A plan of segments in ascending `from_day`; the first must start at or before day 0.
@@ -80,11 +98,10 @@ impl ArrivalPlan {
     pub fn from_segments(segments: &[ArrivalSegment]) -> Result<Self, Vec<ArrivalFault>> {
         let mut faults = Vec::new();
         if segments.is_empty() {
-            let detail = "the plan has no segment; give at least one".into();
-            faults.push(ArrivalFault { index: None, field: "segments", detail });
+            faults.push(ArrivalFault::of_plan("segments", "the plan has no segment; give at least one"));
         }
         for (i, s) in segments.iter().enumerate() {
-            let mut fault = |field, detail| faults.push(ArrivalFault { index: Some(i), field, detail });
+            let mut fault = |field, detail: String| faults.push(ArrivalFault::of_segment(Some(i), field, detail));
             if !(s.per_day.is_finite() && (0.0..=Self::MAX_PER_DAY).contains(&s.per_day)) {
                 let most = Self::MAX_PER_DAY;
                 fault("per_day", format!("arrivals per day must lie between 0 and {most:e}, not {}", s.per_day));
@@ -107,7 +124,37 @@ impl ArrivalPlan {
                 );
             }
         }
-        if faults.is_empty() { Ok(Self { segments: segments.to_vec() }) } else { Err(faults) }
+        if faults.is_empty() { Ok(Self { segments: segments.to_vec(), log_deviation: 0.0 }) } else { Err(faults) }
+    }
+
+    /// The same plan with rates that are uncertain by a common factor: `log_deviation` is the standard deviation of its ln; 0 for
+    /// rates that are certain. The rates of the plan are the medians.
+    ///
+    /// # Errors
+    /// When it does not lie between 0 and 2.
+    pub fn with_log_deviation(mut self, log_deviation: f64) -> Result<Self, ArrivalFault> {
+        if !(0.0..=MAX_LOG_DEVIATION).contains(&log_deviation) {
+            let detail = format!(
+                "the rates would be uncertain by a factor of {} at one standard deviation; at most {:.1} is taken: a plan this \
+                 vague tells nothing",
+                log_deviation.exp(),
+                MAX_LOG_DEVIATION.exp()
+            );
+            return Err(ArrivalFault::of_plan("log_deviation", detail));
+        }
+        self.log_deviation = log_deviation;
+        Ok(self)
+    }
+
+    /// Standard deviation of ln of the factor by which all rates are uncertain.
+    pub fn log_deviation(&self) -> f64 {
+        self.log_deviation
+    }
+
+    /// The plans at one standard deviation below and above; none where the rates are certain.
+    pub fn sides(&self) -> Option<(Self, Self)> {
+        let factor = self.log_deviation.exp();
+        (self.log_deviation > 0.0).then(|| (self.scaled(factor.recip()), self.scaled(factor)))
     }
 
     /// The segments, ascending.
@@ -143,7 +190,7 @@ impl ArrivalPlan {
     /// The same plan with every rate multiplied by `factor` (≥ 0).
     pub fn scaled(&self, factor: f64) -> Self {
         let segments = self.segments.iter().map(|s| ArrivalSegment { per_day: s.per_day * factor, ..*s }).collect();
-        Self { segments }
+        Self { segments, log_deviation: self.log_deviation }
     }
 
     fn segment_at(&self, day: f64) -> &ArrivalSegment {

@@ -2,7 +2,7 @@
 
 use jiff::{Span, Timestamp, tz::TimeZone};
 
-use super::{ArrivalFault, ArrivalPlan, ArrivalSegment, ForecastPlan, Levels, Thresholds, days_between};
+use super::{ArrivalPlan, ForecastPlan, Levels, Limit, StandingArrivals, Thresholds};
 
 /// Most dates a horizon is spread over before it is refused; one more than a plan takes, so that the plan says why.
 const MOST_STEPS: i64 = 4_001;
@@ -50,53 +50,6 @@ impl Horizon {
     }
 }
 
-/// One stretch of planned arrivals, as in [`ArrivalSegment`]; without a start it begins at the newest snapshot.
-#[derive(Debug, Clone, Copy, PartialEq)]
-pub struct StandingSegment {
-    /// Its start.
-    pub from: Option<Timestamp>,
-    /// Arrivals a day at its start.
-    pub per_day: f64,
-    /// Relative growth of the rate a year.
-    pub growth_per_year: f64,
-}
-
-/// Planned arrivals by the calendar.
-#[derive(Debug, Clone, PartialEq)]
-pub struct StandingArrivals {
-    segments: Vec<StandingSegment>,
-}
-
-impl StandingArrivals {
-    /// Planned arrivals whose segments are in order.
-    ///
-    /// # Errors
-    /// Every fault of every segment, but for a first one that starts too late: that shows at a snapshot.
-    pub fn new(segments: Vec<StandingSegment>) -> Result<Self, Vec<ArrivalFault>> {
-        let arrivals = Self { segments };
-        let first = arrivals.segments.first().and_then(|segment| segment.from);
-        arrivals.at(first.unwrap_or(Timestamp::UNIX_EPOCH)).map(|_| arrivals)
-    }
-
-    /// The plan from the newest snapshot on.
-    ///
-    /// # Errors
-    /// When the first segment starts later.
-    pub fn at(&self, latest: Timestamp) -> Result<ArrivalPlan, Vec<ArrivalFault>> {
-        let segment = |segment: &StandingSegment| ArrivalSegment {
-            from_day: segment.from.map_or(0.0, |from| days_between(latest, from)),
-            per_day: segment.per_day,
-            growth_per_year: segment.growth_per_year,
-        };
-        ArrivalPlan::from_segments(&self.segments.iter().map(segment).collect::<Vec<_>>())
-    }
-
-    /// The segments.
-    pub fn segments(&self) -> &[StandingSegment] {
-        &self.segments
-    }
-}
-
 /// What is asked of every forecast of a tracked network.
 #[derive(Debug, Clone)]
 pub struct StandingPlan {
@@ -111,11 +64,11 @@ pub struct StandingPlan {
 }
 
 impl StandingPlan {
-    /// What is asked of the forecast from a newest snapshot of this date.
+    /// What is asked of the forecast from a newest snapshot of this date, its arrivals up to the last date that it or a limit is for.
     ///
     /// # Errors
     /// When the horizon ended before its first step or has too many, or planned arrivals start later; in words.
-    pub fn at(&self, latest: Timestamp) -> Result<(ForecastPlan, Option<ArrivalPlan>), String> {
+    pub fn at(&self, latest: Timestamp, limits: &[Limit]) -> Result<(ForecastPlan, Option<ArrivalPlan>), String> {
         let dates = self.horizon.dates(latest);
         if dates.is_empty() {
             let end = match self.horizon.end {
@@ -130,7 +83,8 @@ impl StandingPlan {
         }
         let plan = ForecastPlan::new(latest, self.thresholds.clone(), &dates, self.levels.clone());
         let plan = plan.map_err(|faults| words("horizon", faults.iter().map(|fault| &fault.detail)))?;
-        let arrivals = self.arrivals.as_ref().map(|arrivals| arrivals.at(latest)).transpose();
+        let until = dates.iter().copied().chain(limits.iter().map(Limit::by)).max().unwrap_or(latest);
+        let arrivals = self.arrivals.as_ref().map(|arrivals| arrivals.at(latest, until)).transpose();
         let arrivals = arrivals.map_err(|faults| words("arrivals", faults.iter().map(|fault| &fault.detail)))?;
         Ok((plan, arrivals))
     }
@@ -163,18 +117,5 @@ mod tests {
             let horizon = Horizon { end, every: "PT1S".parse().unwrap() };
             assert_eq!(horizon.dates(at("2026-01-01T00:00:00Z")).len(), 4_001);
         }
-    }
-
-    #[test]
-    fn planned_arrivals_keep_their_dates_as_the_newest_snapshot_moves() {
-        let segment = |from: &str, per_day| StandingSegment { from: Some(at(from)), per_day, growth_per_year: 0.0 };
-        let arrivals =
-            StandingArrivals::new(vec![segment("2026-01-01T00:00:00Z", 4.0), segment("2026-02-01T00:00:00Z", 6.0)]);
-        let arrivals = arrivals.unwrap();
-        assert_eq!(arrivals.at(at("2026-01-31T00:00:00Z")).unwrap().arrivals_between(0.0, 2.0), 10.0);
-        assert_eq!(arrivals.at(at("2026-01-21T00:00:00Z")).unwrap().rate(10.0), 4.0);
-        assert!(arrivals.at(at("2025-12-31T00:00:00Z")).is_err());
-        let backwards = vec![segment("2026-02-01T00:00:00Z", 4.0), segment("2026-01-01T00:00:00Z", 6.0)];
-        assert_eq!(StandingArrivals::new(backwards).unwrap_err()[0].index, Some(1));
     }
 }

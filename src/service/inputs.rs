@@ -148,6 +148,9 @@ struct CanonicalCell(u64, u64, u64, Real, Real);
 struct CanonicalOutlook<'a> {
     /// `(days after the last snapshot, arrivals a day, growth a year)`
     arrivals: Option<Vec<(Real, Real, Real)>>,
+    // Left out when rates are certain, as in inputs from before they could be uncertain.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    arrivals_log_deviation: Option<Real>,
     thresholds: &'a [u64],
     dates: Vec<String>,
     levels: &'a [f64],
@@ -236,6 +239,9 @@ fn canonical_outlook(request: &OriginRequest) -> CanonicalOutlook<'_> {
     };
     CanonicalOutlook {
         arrivals: request.arrivals.as_ref().map(segments),
+        arrivals_log_deviation: (request.arrivals.as_ref().map(ArrivalPlan::log_deviation))
+            .filter(|&deviation| deviation > 0.0)
+            .map(Real),
         thresholds: plan.thresholds(),
         dates: plan.dates().iter().map(|&date| date_text(date)).collect(),
         levels: plan.levels(),
@@ -246,4 +252,37 @@ fn canonical_outlook(request: &OriginRequest) -> CanonicalOutlook<'_> {
 /// SHA-256 of `bytes` in lower-case hexadecimal.
 pub fn sha256_hex(bytes: &[u8]) -> String {
     Sha256::digest(bytes).iter().map(|byte| format!("{byte:02x}")).collect()
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::model::{DegreeCounts, DegreeKind, Levels, Snapshot, Thresholds};
+
+    /// What is left out of the form when it is not given keeps the digests of inputs from before it could be.
+    #[test]
+    fn the_canonical_form_of_plain_inputs_stays_what_it_was() {
+        let at = |text: &str| text.parse().unwrap();
+        let counts = DegreeCounts::from_pairs(&[(0, 5), (2, 10)]).unwrap();
+        let as_of = at("2026-06-01T00:00:00Z");
+        let evidence = Evidence::new(DegreeKind::Received, vec![Snapshot { as_of, counts }], None).unwrap();
+        let thresholds = Thresholds::new(&[10]).unwrap();
+        let plan = ForecastPlan::new(as_of, thresholds, &[at("2026-07-01T00:00:00Z")], Levels::default()).unwrap();
+        let inputs = |arrivals| {
+            let (evidence, plan) = (evidence.clone(), plan.clone());
+            let request =
+                OriginRequest { evidence, fit: FitRequest::default(), arrivals, plan, questions: Default::default() };
+            ForecastInputs { label: None, request }.canonical().unwrap()
+        };
+        let plain = ArrivalPlan::constant(50.0).unwrap();
+        assert_eq!(
+            inputs(Some(plain.clone())),
+            "{\"asked\":\"forecast\",\"degree_kind\":\"received\",\"snapshots\":[{\"as_of\":\"2026-06-01\",\"degree_counts\":\
+             [[0,5],[2,10]]}],\"entry_degrees\":null,\"model\":\"auto\",\"preferential_share\":null,\"links_per_arrival\":null,\
+             \"links_per_node_day\":0.0,\"departures_per_node_day\":0.0,\"link_losses_per_link_day\":0.0,\"arrivals\":\
+             [[0.0,50.0,0.0]],\"thresholds\":[10],\"dates\":[\"2026-07-01\"],\"levels\":[0.5,0.9]}"
+        );
+        let vague = inputs(Some(plain.with_log_deviation(0.25).unwrap()));
+        assert!(vague.contains("\"arrivals_log_deviation\":0.25"), "{vague}");
+    }
 }

@@ -4,4 +4,4 @@ mod costs;
 mod limits;
 mod nodes;
 mod scenarios;
-mod scene;
+pub mod scene;

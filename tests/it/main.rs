@@ -5,6 +5,7 @@
 mod any_json;
 mod any_links;
 mod architecture;
+mod arrival_plans;
 mod backtests;
 mod bad_input;
 mod command_line;

@@ -44,7 +44,7 @@ fn rows<const WIDTH: usize>(
     let bytes = bytes.strip_prefix(b"\xef\xbb\xbf").unwrap_or(bytes);
     let mut reader = ReaderBuilder::new().has_headers(false).flexible(true).from_reader(bytes);
     let mut record = ByteRecord::new();
-    let mut lines = Lines { bytes, counted: 0, line: 1 };
+    let mut lines = Lines::of(bytes);
     let (mut rows, mut sound, mut headed) = (Vec::new(), true, false);
     loop {
         match reader.read_byte_record(&mut record) {
@@ -78,15 +78,20 @@ fn rows<const WIDTH: usize>(
 }
 
 /// Counts lines. The reader's own count is behind after blank lines, which it passes over when it reads on.
-struct Lines<'b> {
+pub(super) struct Lines<'b> {
     bytes: &'b [u8],
     counted: usize,
     line: u64,
 }
 
-impl Lines<'_> {
+impl<'b> Lines<'b> {
+    /// Counts from the first line on.
+    pub(super) fn of(bytes: &'b [u8]) -> Self {
+        Self { bytes, counted: 0, line: 1 }
+    }
+
     /// The line of the record that is read from `offset` on; offsets never go back.
-    fn at(&mut self, offset: u64) -> u64 {
+    pub(super) fn at(&mut self, offset: u64) -> u64 {
         let rest = self.bytes.get(self.counted..).unwrap_or_default();
         let ahead = usize::try_from(offset).unwrap_or(usize::MAX).saturating_sub(self.counted).min(rest.len());
         let (before, from) = rest.split_at(ahead);

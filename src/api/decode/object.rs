@@ -41,17 +41,7 @@ impl<'r> Object<'r> {
 
 /// An object with the fields `known`; others, and repeated ones, are faults.
 pub fn object<'r>(raw: &'r RawValue, at: At<'_>, known: &[&str], faults: &mut Faults) -> Option<Object<'r>> {
-    if !raw.get().starts_with('{') {
-        faults.add(&at, format!("an object is wanted here, not {}", kind_of(raw)));
-        return None;
-    }
-    let fields = match serde_json::from_str::<Fields<'_>>(raw.get()) {
-        Ok(Fields(fields)) => fields,
-        Err(error) => {
-            faults.add(&at, error.to_string());
-            return None;
-        }
-    };
+    let fields = fields(raw, at, faults)?;
     for (i, (name, _)) in fields.iter().enumerate() {
         if !known.contains(&name.as_str()) {
             faults.add(&at.field(name), unknown_name("field", name, known));
@@ -60,6 +50,16 @@ pub fn object<'r>(raw: &'r RawValue, at: At<'_>, known: &[&str], faults: &mut Fa
         }
     }
     Some(Object { fields })
+}
+
+/// The fields of an object whose names are data, in the order they stand, repeated ones too.
+pub fn fields<'r>(raw: &'r RawValue, at: At<'_>, faults: &mut Faults) -> Option<Vec<(String, &'r RawValue)>> {
+    if !raw.get().starts_with('{') {
+        faults.add(&at, format!("an object is wanted here, not {}", kind_of(raw)));
+        return None;
+    }
+    let fields = serde_json::from_str::<Fields<'_>>(raw.get());
+    fields.map(|Fields(fields)| fields).map_err(|error| faults.add(&at, error.to_string())).ok()
 }
 
 /// What to say of a name that is not known.

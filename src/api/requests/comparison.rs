@@ -3,6 +3,7 @@
 use jiff::Timestamp;
 use serde_json::value::RawValue;
 
+use super::arrivals::Stretch;
 use super::outlook::too_many_cells;
 use super::questions::{limit, scenarios};
 use crate::api::decode::{At, Fault, Faults, Place, every_of, instant_of, object};
@@ -32,12 +33,12 @@ pub fn read_kept_change(raw: &RawValue, faults: &mut Faults) -> Option<String> {
             .add(&At::ROOT, format!("a scenario has at most {MAX_BODY_BYTES} bytes; give fewer segments of arrivals"));
         return None;
     }
-    read_change(raw, String::new(), None, faults).map(|_| raw.get().trim().to_owned())
+    read_change(raw, String::new(), Stretch::UNKNOWN, faults).map(|_| raw.get().trim().to_owned())
 }
 
-fn read_change(raw: &RawValue, name: String, latest: Option<Timestamp>, faults: &mut Faults) -> Option<Change> {
+fn read_change(raw: &RawValue, name: String, stretch: Stretch, faults: &mut Faults) -> Option<Change> {
     let given = object(raw, At::ROOT, &CHANGE_FIELDS, faults)?;
-    scenarios::change(&given, At::ROOT, name, latest, faults)
+    scenarios::change(&given, At::ROOT, name, stretch, faults)
 }
 
 /// What a comparison is asked for in its query; what is left out comes from the network's plan.
@@ -107,7 +108,8 @@ impl ComparisonQuery {
         // Where the query gives other dates, the planned arrivals still hold.
         let arrivals = match standing.and_then(|plan| plan.arrivals.as_ref()) {
             Some(planned) => {
-                let found = planned.at(latest).map_err(|found| {
+                let until = plan.dates().iter().copied().chain(limits.iter().map(Limit::by)).max().unwrap_or(latest);
+                let found = planned.at(latest, until).map_err(|found| {
                     let words: Vec<String> = found.iter().take(3).map(ToString::to_string).collect();
                     ServiceError::Impossible(format!("forecast_plan: {}", words.join("; ")))
                 });
@@ -115,7 +117,8 @@ impl ComparisonQuery {
             }
             None => None,
         };
-        let scenarios = kept.iter().map(|(name, body)| stored_change(name, body, latest));
+        let stretch = Stretch::of(Some(latest), Some(&plan), &limits);
+        let scenarios = kept.iter().map(|(name, body)| stored_change(name, body, stretch));
         let scenarios = scenarios.collect::<Result<Vec<_>, _>>()?;
         let questions = Questions { limits, scenarios, ..Questions::default() };
         let cells = too_many_cells(&plan, config);
@@ -179,11 +182,11 @@ fn plan(
 }
 
 /// A kept scenario, from the newest snapshot on.
-fn stored_change(name: &str, body: &str, latest: Timestamp) -> Result<Change, ServiceError> {
+fn stored_change(name: &str, body: &str, stretch: Stretch) -> Result<Change, ServiceError> {
     let raw: &RawValue = serde_json::from_str(body)
         .map_err(|error| ServiceError::Broken(format!("a scenario that was never kept: {error}")))?;
     let mut faults = Faults::default();
-    let change = read_change(raw, name.to_owned(), Some(latest), &mut faults);
+    let change = read_change(raw, name.to_owned(), stretch, &mut faults);
     change.ok_or_else(|| {
         let (found, _) = faults.into_parts();
         let words = found.first().map(|fault| fault.detail.clone()).unwrap_or_default();

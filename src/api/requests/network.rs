@@ -3,8 +3,9 @@
 use jiff::Timestamp;
 use serde_json::value::RawValue;
 
+use super::arrivals::Stretch;
 use super::evidence::{degree_kind, entry_degrees};
-use super::{FIT_FIELDS, FORECAST_FIELDS, fit_request, label, outlook, questions};
+use super::{FIT_FIELDS, FORECAST_FIELDS, arrivals, fit_request, label, outlook, questions};
 use crate::api::decode::{
     At, Faults, Object, degree_counts, degree_counts_csv, link_events, moves, moves_csv, object, text,
 };
@@ -131,9 +132,10 @@ pub fn read_network_forecast(
     let latest = Some(evidence.latest().as_of);
     let fit = fit_request(&body, faults);
     let label = label(&body, faults);
-    let arrivals = outlook::arrivals(&body, latest, standing, faults);
     let plan = outlook::plan(&body, latest, standing, limits, faults);
     let questions = questions::read(&body, latest, (plan.as_ref(), kept), limits, faults);
+    let stretch = Stretch::of(latest, plan.as_ref(), questions.as_ref().map_or(&[], |asked| &asked.limits));
+    let arrivals = arrivals::arrivals(&body, stretch, standing, faults);
     let request = OriginRequest { evidence, fit: fit?, arrivals, plan: plan?, questions: questions? };
     Some(ForecastInputs { label, request })
 }

@@ -1,14 +1,12 @@
-//! What is asked about the future: arrivals, thresholds, dates, levels; for one forecast, or as a network's standing plan.
+//! What is asked about the future: thresholds, dates, levels, and with them arrivals; for one forecast, or as a network's standing plan.
 
 use jiff::Timestamp;
 use serde_json::value::RawValue;
 
+use super::arrivals::given_arrivals;
 use crate::api::decode::{At, Faults, Object, every, instant, list, object, real, whole};
 use crate::config::LimitsConfig;
-use crate::model::{
-    ArrivalFault, ArrivalPlan, ForecastPlan, Horizon, HorizonEnd, Levels, MAX_DEGREE, PlanFault, StandingArrivals,
-    StandingPlan, StandingSegment, Thresholds,
-};
+use crate::model::{ForecastPlan, Horizon, HorizonEnd, Levels, MAX_DEGREE, PlanFault, StandingPlan, Thresholds};
 use crate::report::readable;
 
 /// Fields of a network's forecast plan.
@@ -16,38 +14,6 @@ pub const PLAN_FIELDS: [&str; 4] = ["thresholds", "horizon", "levels", "arrivals
 
 /// The snapshot that a plan's horizon is tried from before there is one: its first day of a leap year.
 const TRIAL_DATE: &str = "2000-01-01T00:00:00Z";
-
-/// Arrivals from the newest snapshot on; those of the network's plan, or none, when they were left out.
-pub fn arrivals(
-    body: &Object<'_>,
-    latest: Option<Timestamp>,
-    standing: Option<&StandingPlan>,
-    faults: &mut Faults,
-) -> Option<ArrivalPlan> {
-    let Some(raw) = body.get("arrivals") else {
-        let planned = standing?.arrivals.as_ref()?.at(latest?);
-        return noted_plan(planned.map_err(|found| format!("forecast_plan: {}", in_words(&found))), faults);
-    };
-    arrivals_at(raw, At::ROOT.field("arrivals"), latest, faults)
-}
-
-/// Arrivals that stand at `at`, from the newest snapshot on.
-pub(super) fn arrivals_at(
-    raw: &RawValue,
-    at: At<'_>,
-    latest: Option<Timestamp>,
-    faults: &mut Faults,
-) -> Option<ArrivalPlan> {
-    let (given, segmented) = given_arrivals(raw, at, faults)?;
-    // Without a newest snapshot they are checked from their own start; that there is none is told elsewhere where it matters.
-    let from = latest.or(given.segments().first().and_then(|segment| segment.from));
-    let plan = given.at(from.unwrap_or(Timestamp::UNIX_EPOCH));
-    plan.map_err(|found| note_arrivals(&found, at, segmented, faults)).ok()
-}
-
-fn in_words(found: &[ArrivalFault]) -> String {
-    found.iter().take(3).map(ToString::to_string).collect::<Vec<_>>().join("; ")
-}
 
 /// A network's plan.
 pub fn standing_plan(raw: &RawValue, at: At<'_>, limits: &LimitsConfig, faults: &mut Faults) -> Option<StandingPlan> {
@@ -61,10 +27,12 @@ pub fn standing_plan(raw: &RawValue, at: At<'_>, limits: &LimitsConfig, faults: 
     let horizon = given.required("horizon", &at, faults);
     let horizon = horizon.and_then(|raw| horizon_of(raw, at.field("horizon"), faults));
     let arrivals = match given.get("arrivals") {
-        Some(raw) => given_arrivals(raw, at.field("arrivals"), faults).map(|(arrivals, _)| Some(arrivals)),
+        Some(raw) => given_arrivals(raw, at.field("arrivals"), faults).map(Some),
         None => Some(None),
     };
-    let plan = StandingPlan { thresholds: thresholds?, levels: levels?, horizon: horizon?, arrivals: arrivals? };
+    let given = arrivals?;
+    let arrivals = given.as_ref().map(|given| given.arrivals.clone());
+    let plan = StandingPlan { thresholds: thresholds?, levels: levels?, horizon: horizon?, arrivals };
     // How many dates there are until a given one shows at a snapshot.
     if let HorizonEnd::After(_) = plan.horizon.end {
         let from = TRIAL_DATE.parse().ok()?;
@@ -82,57 +50,15 @@ pub fn standing_plan(raw: &RawValue, at: At<'_>, limits: &LimitsConfig, faults: 
             faults.add(&at.field("horizon"), detail);
             return None;
         }
-    }
-    Some(plan)
-}
-
-/// Arrivals as they are given, and whether in segments.
-fn given_arrivals(raw: &RawValue, at: At<'_>, faults: &mut Faults) -> Option<(StandingArrivals, bool)> {
-    let given = object(raw, at, &["per_day", "growth_per_year", "segments"], faults)?;
-    let segmented = given.get("segments");
-    if segmented.is_some() && (given.get("per_day").is_some() || given.get("growth_per_year").is_some()) {
-        faults.add(&at, "give either per_day (with growth_per_year) or segments, not both");
-        return None;
-    }
-    let segments = match segmented {
-        Some(raw) => segments(raw, at.field("segments"), faults)?,
-        None => vec![segment(&given, at, None, faults)?],
-    };
-    let arrivals = StandingArrivals::new(segments);
-    let segmented = segmented.is_some();
-    arrivals.map(|arrivals| (arrivals, segmented)).map_err(|found| note_arrivals(&found, at, segmented, faults)).ok()
-}
-
-fn note_arrivals(found: &[ArrivalFault], at: At<'_>, segmented: bool, faults: &mut Faults) {
-    for fault in found {
-        let detail = readable(&fault.detail);
-        match fault.index {
-            Some(index) if segmented => faults.add(&at.field("segments").item(index).field(fault.field), detail),
-            _ => faults.add(&at.field(fault.field), detail),
+        // So that seasons too many show now; a first segment that starts later shows at a snapshot.
+        if let Some(given) = given {
+            let first = given.arrivals.segments().first().and_then(|segment| segment.from);
+            let first = first.unwrap_or(from);
+            let until = plan.horizon.dates(first).last().copied();
+            given.plan(at.field("arrivals"), Some(first), until, faults)?;
         }
     }
-}
-
-fn segments(raw: &RawValue, at: At<'_>, faults: &mut Faults) -> Option<Vec<StandingSegment>> {
-    let mut segments = Vec::new();
-    let length = list(raw, at, faults, |index, item, faults| {
-        let at = at.item(index);
-        segments.extend(object(item, at, &["from", "per_day", "growth_per_year"], faults).and_then(|given| {
-            let from = given.required("from", &at, faults).and_then(|raw| instant(raw, at.field("from"), faults));
-            let segment = segment(&given, at, from, faults);
-            from.and(segment)
-        }));
-    })?;
-    (segments.len() == length).then_some(segments)
-}
-
-fn segment(given: &Object<'_>, at: At<'_>, from: Option<Timestamp>, faults: &mut Faults) -> Option<StandingSegment> {
-    let per_day = given.required("per_day", &at, faults).and_then(|raw| real(raw, at.field("per_day"), faults));
-    let growth_per_year = match given.get("growth_per_year") {
-        Some(raw) => real(raw, at.field("growth_per_year"), faults),
-        None => Some(0.0),
-    };
-    Some(StandingSegment { from, per_day: per_day?, growth_per_year: growth_per_year? })
+    Some(plan)
 }
 
 /// Thresholds, dates and levels; those of the network's plan where they were left out.
@@ -284,9 +210,4 @@ fn planned_dates(standing: &StandingPlan, latest: Option<Timestamp>, faults: &mu
         return None;
     }
     Some(dates)
-}
-
-fn noted_plan(plan: Result<ArrivalPlan, String>, faults: &mut Faults) -> Option<ArrivalPlan> {
-    let root = At::ROOT;
-    plan.map_err(|detail| faults.add(&root.field("arrivals"), detail)).ok()
 }

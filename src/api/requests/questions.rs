@@ -6,6 +6,7 @@ pub(super) mod work;
 use jiff::Timestamp;
 use serde_json::value::RawValue;
 
+use super::arrivals::Stretch;
 use super::outlook;
 use crate::api::decode::{At, Faults, Object, instant, list, object, real, text, whole};
 use crate::config::LimitsConfig;
@@ -31,8 +32,9 @@ pub fn read(
     let bands = bands(body, faults);
     let watch = asked(body, "watch", faults, |raw, at, faults| watch(raw, at, faults).map(Some));
     let next_hubs = asked(body, "next_hubs", faults, next_hubs);
-    let scenarios = asked(body, "scenarios", faults, |raw, at, faults| scenarios::read_list(raw, at, latest, faults));
     let limits = if body.get("limits").is_some() { limits } else { Some(kept) };
+    let stretch = Stretch::of(latest, plan, limits.as_deref().unwrap_or_default());
+    let scenarios = asked(body, "scenarios", faults, |raw, at, faults| scenarios::read_list(raw, at, stretch, faults));
     let questions =
         Questions { limits: limits?, bands: bands?, watch: watch?, next_hubs: next_hubs?, scenarios: scenarios? };
     work::within(&questions, plan?, config, faults).then_some(questions)

@@ -1,6 +1,8 @@
 //! Request bodies as they are documented, and as our own client writes them. Reading is done by hand, for the sake of
 //! every fault's place; a test holds the two lists of fields against each other.
 
+use std::collections::BTreeMap;
+
 use serde::Serialize;
 use serde_json::json;
 use utoipa::ToSchema;
@@ -318,7 +320,9 @@ pub struct WindowBody {
     pub cells: Vec<(u64, u64, u64, f64, f64)>,
 }
 
-/// How many nodes arrive: `per_day` (and `growth_per_year`), or `segments`.
+/// How many nodes arrive: `per_day` (and `growth_per_year`), `segments` or `csv`; seasons on top of it (where several hold, their
+/// factors multiply, in UTC) up to the last date asked; and how uncertain the rates are, in at most one way. The given rates stay the
+/// medians.
 #[derive(Debug, Clone, PartialEq, Default, Serialize, ToSchema)]
 #[serde(deny_unknown_fields)]
 pub struct ArrivalsBody {
@@ -334,6 +338,50 @@ pub struct ArrivalsBody {
     #[serde(skip_serializing_if = "Option::is_none")]
     #[schema(nullable = false, min_items = 1)]
     pub segments: Option<Vec<SegmentBody>>,
+    /// Segments as a table: columns `from`, `per_day` and, if wanted, `growth_per_year`, in any order below a header; separated by
+    /// commas, semicolons or tabs.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, examples("from,per_day\n2026-06-01,40\n2026-09-01,55\n"))]
+    pub csv: Option<String>,
+    /// Factors on the rate in the calendar months, January first.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, min_items = 12, max_items = 12)]
+    pub months: Option<Vec<f64>>,
+    /// Factors on the rate in ISO weeks, by number; 1 in the others. Week 53 holds in the years that have one.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, example = json!({"47": 3.0}))]
+    pub weeks: Option<BTreeMap<String, f64>>,
+    /// Campaigns, launches, pauses: a factor on the rate for a while.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, max_items = 200)]
+    pub campaigns: Option<Vec<CampaignBody>>,
+    /// Standard deviation of `per_day`, nodes a day.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, minimum = 0)]
+    pub standard_deviation: Option<f64>,
+    /// Central 90 % range about `per_day`, nodes a day: `[low, high]`.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, value_type = Option<Vec<f64>>, min_items = 2, max_items = 2)]
+    pub range: Option<(f64, f64)>,
+    /// Standard deviation over the rate, of any plan: 0.1 is 10 %.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    #[schema(nullable = false, minimum = 0)]
+    pub relative_deviation: Option<f64>,
+}
+
+/// A campaign, a launch or a pause.
+#[derive(Debug, Clone, PartialEq, Serialize, ToSchema)]
+#[serde(deny_unknown_fields)]
+pub struct CampaignBody {
+    /// Its start: RFC 3339, or a bare date for 00:00 UTC.
+    #[schema(examples("2026-11-20"))]
+    pub from: String,
+    /// Its end, not in it any more.
+    #[schema(examples("2026-12-01"))]
+    pub until: String,
+    /// On the rate: 2 doubles it, 0 stops it.
+    #[schema(minimum = 0, maximum = 1000)]
+    pub factor: f64,
 }
 
 /// One stretch of an arrival plan; the last goes on for ever.

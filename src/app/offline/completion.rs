@@ -1,6 +1,7 @@
 //! What the command line adds to a request: a file that tells of a network becomes one that asks of it.
 
 use std::fmt;
+use std::path::PathBuf;
 
 use clap::Args;
 use serde::de::{Deserialize, Deserializer, MapAccess, Visitor};
@@ -26,6 +27,9 @@ pub struct Completion {
     /// New nodes a day in place of the body's arrivals
     #[arg(long, value_name = "PER_DAY")]
     arrivals: Option<String>,
+    /// Table of planned arrivals in place of the body's: columns from, per_day and, if wanted, growth_per_year
+    #[arg(long, value_name = "FILE", conflicts_with = "arrivals")]
+    arrivals_csv: Option<PathBuf>,
 }
 
 impl Completion {
@@ -66,6 +70,12 @@ impl Completion {
         }
         if let Some(rate) = &self.arrivals {
             add("arrivals", "--arrivals", format!("{{\"per_day\":{rate}}}"), "42.5")?;
+        }
+        if let Some(file) = &self.arrivals_csv {
+            let refused = |error: &dyn fmt::Display| Stop::failed(&file.display().to_string(), error);
+            let table = std::fs::read(file).map_err(|error| refused(&error))?;
+            let table = String::from_utf8(table).map_err(|error| refused(&error))?;
+            add("arrivals", "--arrivals-csv", format!("{{\"csv\":{}}}", quoted(&table)), "")?;
         }
         match (&self.until, &self.every) {
             (Some(until), Some(every)) => {

@@ -114,11 +114,12 @@ impl Service {
                 let latest = evidence.latest().as_of;
                 let name = NetworkName::new(&job.network).map_err(|fault| ServiceError::Broken(fault.to_string()))?;
                 let origin = RunOrigin { network: name, stored: StoredOrigin { revision, as_of: latest } };
-                match plan.at(latest) {
+                let limits = limits_from(&kept, latest)?;
+                match plan.at(latest, &limits) {
                     Err(why) => Err(NoForecast::Problem(JobProblem::refusal(&ServiceError::Impossible(why)))),
                     Ok((plan, arrivals)) => {
                         let fit = FitRequest { seed: DEFAULT_SEED, ..FitRequest::default() };
-                        let questions = Questions { limits: limits_from(&kept, latest)?, ..Questions::default() };
+                        let questions = Questions { limits, ..Questions::default() };
                         let request = OriginRequest { evidence, fit, arrivals, plan, questions };
                         self.forecast(ForecastInputs { label: None, request }, origin, progress).await?
                     }

@@ -1,11 +1,10 @@
 //! What-ifs: what of the forces would be other than it is.
 
-use jiff::Timestamp;
 use serde_json::value::RawValue;
 
 use super::{named, noted, within_count};
 use crate::api::decode::{At, Faults, Object, list, object, real, text, whole};
-use crate::api::requests::outlook;
+use crate::api::requests::arrivals::{Stretch, arrivals_at};
 use crate::model::{AttachmentMix, Change, DegreeCap, MAX_DEGREE, MAX_SCENARIOS, RefusedLinks, Shift};
 use crate::report::readable;
 
@@ -21,7 +20,7 @@ pub const CHANGE_FIELDS: [&str; 7] = [
 ];
 
 /// What-ifs, each with a name of its own.
-pub fn read_list(raw: &RawValue, at: At<'_>, latest: Option<Timestamp>, faults: &mut Faults) -> Option<Vec<Change>> {
+pub fn read_list(raw: &RawValue, at: At<'_>, stretch: Stretch, faults: &mut Faults) -> Option<Vec<Change>> {
     let mut changes: Vec<Change> = Vec::new();
     let mut names: Vec<String> = Vec::new();
     let known: Vec<&str> = std::iter::once("name").chain(CHANGE_FIELDS).collect();
@@ -34,7 +33,7 @@ pub fn read_list(raw: &RawValue, at: At<'_>, latest: Option<Timestamp>, faults: 
                 faults.add(&at.field("name"), "another scenario has this name; name each one differently");
             }
             names.extend(name.clone());
-            let change = change(&given, at, name.clone().unwrap_or_default(), latest, faults);
+            let change = change(&given, at, name.clone().unwrap_or_default(), stretch, faults);
             name.filter(|_| !repeated).and(change)
         }));
     })?;
@@ -43,16 +42,10 @@ pub fn read_list(raw: &RawValue, at: At<'_>, latest: Option<Timestamp>, faults: 
 }
 
 /// One what-if; its arrivals count from the newest snapshot, or from where they start where there is none yet.
-pub fn change(
-    given: &Object<'_>,
-    at: At<'_>,
-    name: String,
-    latest: Option<Timestamp>,
-    faults: &mut Faults,
-) -> Option<Change> {
+pub fn change(given: &Object<'_>, at: At<'_>, name: String, stretch: Stretch, faults: &mut Faults) -> Option<Change> {
     let before = faults.count();
     let arrivals = shift(given, ["arrivals", "arrivals_factor"], at, faults, |raw, at, faults| {
-        outlook::arrivals_at(raw, at, latest, faults)
+        arrivals_at(raw, at, stretch, faults)
     });
     let links_per_arrival = shift(given, ["links_per_arrival", "links_factor"], at, faults, real);
     let share = given.get("preferential_share").and_then(|raw| real(raw, at.field("preferential_share"), faults));
