@@ -61,8 +61,10 @@ fn limit_lines(limit: &LimitAnswer) -> Vec<String> {
         crossing.join(", "),
         by_date(&limit.risk_reached)
     )));
-    for sustainable in [&limit.arrivals, &limit.links_per_arrival] {
-        lines.extend(paragraph(&sustainable.detail));
+    for (rate, found) in [("Arrivals", &limit.arrivals), ("Links per arrival", &limit.links_per_arrival)] {
+        if !found.detail.is_empty() {
+            lines.extend(paragraph(&format!("{rate}: {}.", found.detail.trim_end_matches('.'))));
+        }
     }
     let mut cells = vec![["date", "above the limit", "crossed by then"].map(str::to_owned).to_vec()];
     for at in &limit.dates {
@@ -216,11 +218,16 @@ fn chance(probability: f64) -> String {
 }
 
 fn reached(at: &DateAtAnswer) -> String {
-    at.date.clone().unwrap_or_else(|| "-".to_owned())
+    at.date.as_deref().map_or("-", day).to_owned()
 }
 
 fn by_date(at: &DateAtAnswer) -> String {
-    at.date.as_ref().map_or("at no date looked at".to_owned(), |date| format!("by {date}"))
+    at.date.as_ref().map_or("at no date looked at".to_owned(), |date| format!("by {}", day(date)))
+}
+
+/// The day of a date, whatever its time.
+fn day(date: &str) -> &str {
+    date.split('T').next().unwrap_or(date)
 }
 
 /// A caller's text on one short line.

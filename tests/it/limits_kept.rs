@@ -4,6 +4,7 @@ use reqwest::Method;
 use serde_json::{Value, json};
 
 use crate::harness::{Answer, COUNTS, Service, changed};
+use crate::questions::patient;
 use crate::tracking::{put_counts, settings, settled};
 
 const NETWORK: &str = "/v1/networks/heronsgate";
@@ -15,7 +16,7 @@ fn limit() -> Value {
 
 /// A network with a plan, a snapshot and a limit.
 async fn tracked() -> Service {
-    let service = Service::start().await;
+    let service = patient().await;
     service.put(NETWORK, &settings()).await.expect(201);
     put_counts(&service, "2026-06-01", &COUNTS[1]).await.expect(201);
     let put = service.put(LIMIT, &limit()).await.expect(201);

@@ -4,6 +4,7 @@ use reqwest::Method;
 use serde_json::{Value, json};
 
 use crate::harness::{COUNTS, Service, changed, json_text};
+use crate::questions::patient;
 use crate::tracking::{put_counts, settings, settled};
 
 const NETWORK: &str = "/v1/networks/heronsgate";
@@ -15,7 +16,7 @@ fn path(name: &str) -> String {
 
 /// A network with a plan, a snapshot, a limit and two scenarios.
 async fn tracked() -> Service {
-    let service = Service::start().await;
+    let service = patient().await;
     service.put(NETWORK, &settings()).await.expect(201);
     put_counts(&service, "2026-06-01", &COUNTS[1]).await.expect(201);
     let limit = json!({"threshold": 10, "max_nodes": 900, "by": "2026-08-15"});

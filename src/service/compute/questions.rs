@@ -1,5 +1,7 @@
 //! Answers to what is asked besides the tails, in the answers' words.
 
+use jiff::{Timestamp, Unit};
+
 use super::intervals;
 use crate::evaluate::{self, AmountForecast, DateAt};
 use crate::service::answers::{
@@ -47,7 +49,9 @@ impl From<&evaluate::LimitAtDate> for LimitAtDateAnswer {
 
 impl From<&DateAt> for DateAtAnswer {
     fn from(at: &DateAt) -> Self {
-        Self { probability: Real(at.probability), date: at.date.map(date_text) }
+        // Dates between those asked are interpolated: nanoseconds would say what nobody knows.
+        let moment = |time: Timestamp| date_text(time.round(Unit::Second).unwrap_or(time));
+        Self { probability: Real(at.probability), date: at.date.map(moment) }
     }
 }
 
