@@ -13,7 +13,7 @@ use crate::model::{Change, Limit, MAX_DEGREE};
 /// Even steps in which the way to a limit's date is looked at, where nodes in the tail stay in it.
 const STEPS: u32 = 24;
 /// The same where the tail can shrink: every step is one more dimension of the path's law, and between steps it is a bridge.
-pub(super) const PATH_STEPS: u32 = 12;
+pub(super) const PATH_STEPS: u32 = 32;
 /// Most steps beyond the limit's date.
 const MOST_BEYOND: f64 = 24.0;
 /// Days that dates may be rounded by.

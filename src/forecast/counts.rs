@@ -42,6 +42,23 @@ impl CountLaw {
         Self { floor, mean, variance, degrees_of_freedom: f64::INFINITY }
     }
 
+    /// A law of three cumulants: of a count that may fall as well as rise, so that nothing of it is certain.
+    ///
+    /// Formula: with ρ the variance of the rest over its mean, the third cumulant of each of these laws is variance·(2ρ − 1); the
+    /// floor, a whole number, is where ρ = (1 + κ₃/variance)/2.
+    ///
+    /// ```
+    /// use tailcast::forecast::CountLaw;
+    /// // As many nodes leave a tail of 100 as enter it: the count is symmetric about 100.
+    /// let law = CountLaw::of_cumulants(100.0, 8.0, 0.0);
+    /// assert!((law.at_most(99.0) + law.at_most(100.0) - 1.0).abs() < 1e-9);
+    /// ```
+    pub fn of_cumulants(mean: f64, variance: f64, third: f64) -> Self {
+        let skewed = 0.5 * (1.0 + third / variance);
+        let floor = (mean - variance / skewed).round();
+        if skewed > 0.0 && floor > 0.0 { Self::new(floor, mean - floor, variance) } else { Self::new(0.0, mean, variance) }
+    }
+
     /// The same, its variance known only as well as so many past misses tell it (at least 1): intervals are wider in the proportion
     /// of Student's quantile to the normal one, the more so the higher their level.
     pub fn with_degrees_of_freedom(self, degrees_of_freedom: f64) -> Self {

@@ -184,7 +184,7 @@ impl<'a> Outlook<'a> {
             return Err(ForecastError::Cancelled);
         }
         let now = self.counts.tail_size(threshold) as f64;
-        let TailSum { kept, mean: central, variance: chance, .. } = laws.central.tail(threshold, Accuracy::Full)?;
+        let TailSum { kept, mean: central, variance: chance, third_cumulant, .. } = laws.central.tail(threshold, Accuracy::Full)?;
         let (mean, disagreement) = pooled(laws, threshold, central)?;
         let beyond = excursion_variance(&laws.ends, |law| Ok(law.rough_tail(threshold)?.mean))?;
         // Nodes that come past the threshold and nodes that leave the tail are what the model can be wrong about; of a tail
@@ -192,8 +192,10 @@ impl<'a> Outlook<'a> {
         // And a threshold that nearly every node passes leaves little to be wrong about.
         let flow = ((mean - kept) + (now - kept).min(kept)) * (1.0 - mean / nodes).max(0.0);
         let variance = chance + beyond + disagreement + (self.model_error * flow).powi(2);
-        let certain = if self.central.parameters().has_losses() { 0.0 } else { kept };
-        let law = CountLaw::new(certain, mean - certain, variance);
+        let law = match self.central.parameters().has_losses() {
+            true => CountLaw::of_cumulants(mean, variance, third_cumulant),
+            false => CountLaw::new(kept, mean - kept, variance),
+        };
         Ok(TailLaw { threshold, now, law, chance })
     }
 

@@ -151,7 +151,8 @@ impl NodeLaw {
         if threshold == 0 {
             return Ok(1.0);
         }
-        if self.panels.is_empty() {
+        // Nothing lands: no panel, or panels of nothing.
+        if self.spread == 0.0 && self.mean_gain_from_uniform() == 0.0 {
             return Ok(starts.iter().map(|&(degree, share)| share * self.tail_of_losses(degree, threshold)).sum());
         }
         let open = if self.losses { starts.len() } else { starts.partition_point(|&(degree, _)| degree < threshold) };

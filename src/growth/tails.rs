@@ -19,6 +19,8 @@ pub struct TailSum {
     pub mean: f64,
     /// Its sampling variance, given the parameters.
     pub variance: f64,
+    /// Its third cumulant, given the parameters.
+    pub third_cumulant: f64,
     /// ln of the probability that no node at all is in the tail.
     pub log_none: f64,
 }
@@ -46,10 +48,12 @@ pub struct TailParts {
 impl TailParts {
     /// The tail size, and how many of those with `threshold` links or more at the start are in it still.
     pub fn sum(&self, threshold: u64) -> TailSum {
-        let mut sum = TailSum { kept: 0.0, mean: self.newcomers, variance: self.newcomers, log_none: -self.newcomers };
+        let new = self.newcomers;
+        let mut sum = TailSum { kept: 0.0, mean: new, variance: new, third_cumulant: new, log_none: -new };
         for &TailClass { degree, nodes, probability } in &self.present {
             sum.mean += nodes * probability;
             sum.variance += nodes * probability * (1.0 - probability);
+            sum.third_cumulant += nodes * probability * (1.0 - probability) * (1.0 - 2.0 * probability);
             sum.log_none += nodes * (-probability).ln_1p();
             if degree >= threshold {
                 sum.kept += nodes * probability;

@@ -5,7 +5,6 @@ mod account;
 mod arrivals;
 mod cap;
 mod census;
-mod dbg;
 mod fit;
 mod forces;
 mod forecast;
