@@ -1,5 +1,7 @@
 //! First passage of a tail size past a limit: from its laws at several days.
 
+use std::sync::Arc;
+
 use nalgebra::DMatrix;
 
 use super::OriginError;
@@ -26,13 +28,36 @@ pub(super) enum View {
     Known(f64),
 }
 
+/// Correlations by chance of a tail's sizes at some days; none where nodes in the tail stay in it.
+#[derive(Debug, Clone)]
+pub(super) struct Correlations(Option<Arc<Vec<Vec<f64>>>>);
+
+impl Correlations {
+    /// Those of the tail past `threshold` at `days` under `change`.
+    ///
+    /// # Errors
+    /// Growth that cannot be computed.
+    pub fn new(prospect: &Prospect, threshold: u64, days: &[f64], change: &Change) -> Result<Self, OriginError> {
+        if !prospect.forces(change)?.has_losses() {
+            return Ok(Self(None));
+        }
+        let course = prospect.course(change, days.last().copied().unwrap_or(0.0))?;
+        let found = tail_correlations(&course, prospect.counts, threshold, days).map_err(of_growth)?;
+        Ok(Self(Some(Arc::new(found))))
+    }
+
+    /// Whether nodes in the tail stay in it.
+    pub fn is_none(&self) -> bool {
+        self.0.is_none()
+    }
+}
+
 /// The size of one tail over some days.
 pub(super) struct TailCourse {
     days: Vec<f64>,
     laws: Vec<TailLaw>,
     now: f64,
-    /// Correlations by chance between the days; none where nodes in the tail stay in it.
-    correlations: Option<Vec<Vec<f64>>>,
+    correlations: Correlations,
 }
 
 impl TailCourse {
@@ -41,17 +66,24 @@ impl TailCourse {
     /// # Errors
     /// Cancellation; growth that cannot be computed.
     pub fn new(prospect: &Prospect, threshold: u64, days: &[f64], change: &Change) -> Result<Self, OriginError> {
+        let correlations = Correlations::new(prospect, threshold, days, change)?;
+        Self::correlated(prospect, threshold, days, change, correlations)
+    }
+
+    /// The same with the correlations by chance at hand, of nearly the same forces.
+    ///
+    /// # Errors
+    /// Those of [`Self::new`].
+    pub fn correlated(
+        prospect: &Prospect,
+        threshold: u64,
+        days: &[f64],
+        change: &Change,
+        correlations: Correlations,
+    ) -> Result<Self, OriginError> {
         let plan = prospect.plan(&[threshold], days)?;
         let laws = prospect.tails(&plan, change)?;
         let laws: Vec<TailLaw> = laws.into_iter().filter_map(|laws| laws.first().copied()).collect();
-        let horizon = plan.days().last().copied().unwrap_or(0.0);
-        let forces = prospect.forces(change)?;
-        let correlations = if forces.has_losses() {
-            let course = prospect.course(change, horizon)?;
-            Some(tail_correlations(&course, prospect.counts, threshold, plan.days()).map_err(of_growth)?)
-        } else {
-            None
-        };
         let now = prospect.counts.tail_size(threshold) as f64;
         Ok(Self { days: plan.days().to_vec(), laws, now, correlations })
     }
@@ -100,7 +132,7 @@ impl TailCourse {
         }
         let laws: Vec<CountLaw> = self.laws.iter().take(last + 1).map(|law| seen(law, view)).collect();
         let above = |law: &CountLaw| law.above(most);
-        let Some(correlations) = &self.correlations else {
+        let Some(correlations) = &self.correlations.0 else {
             return Ok(laws.iter().map(above).fold(0.0, f64::max));
         };
         let place = |law: &CountLaw, most: f64| deviations(law.at_most(most));

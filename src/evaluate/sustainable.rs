@@ -2,7 +2,7 @@
 
 use super::OriginError;
 use super::arrivals::figures;
-use super::crossing::{TailCourse, View};
+use super::crossing::{Correlations, TailCourse, View};
 use super::limits::{LEAST_RISK, PATH_STEPS, percent};
 use super::prospect::Prospect;
 use super::questions::Sustainable;
@@ -17,6 +17,12 @@ const LEVEL: f64 = 0.9;
 const RATE_TOLERANCE: f64 = 1e-11;
 /// Ends of its interval are found to this.
 const END_TOLERANCE: f64 = 1e-3;
+/// First step of a search, in the logarithm of the rate.
+const FIRST_STEP: f64 = 0.25;
+/// Rounds until a rate and the correlations of the way go together; each brings about a digit and a half.
+const MOST_ROUNDS: usize = 10;
+/// They do once the rate moves by less than this, relative.
+const SETTLED: f64 = 3e-8;
 /// Factors on the rate that are tried: up to this, and down to its inverse squared.
 const MOST_FACTOR: f64 = 64.0;
 
@@ -47,7 +53,8 @@ pub(super) fn sustainable(prospect: &Prospect, limit: &Limit, rate: Rate) -> Res
         return Ok(untold(format!("no {name} are expected, so there is nothing to hold down")));
     }
     let (risk, asked) = (limit.risk().max(LEAST_RISK), limit.risk());
-    let without = search.risk(0.0, View::Whole)?;
+    let standing_path = search.correlations(1.0)?;
+    let without = search.risk(0.0, View::Whole, &standing_path)?;
     if without > risk {
         return Ok(untold(format!(
             "no {name} are few enough: even with none the probability of crossing by the date is {}, and that is the nearest \
@@ -56,8 +63,8 @@ pub(super) fn sustainable(prospect: &Prospect, limit: &Limit, rate: Rate) -> Res
             percent(asked)
         )));
     }
-    let Some(factor) = search.largest(risk, View::Whole, 1.0, RATE_TOLERANCE)? else {
-        let most = search.risk(MOST_FACTOR, View::Whole)?;
+    let Some((factor, path)) = search.settled(risk, standing_path.clone())? else {
+        let most = search.risk(MOST_FACTOR, View::Whole, &standing_path)?;
         return Ok(untold(format!(
             "{name} do not bring the limit near: at {MOST_FACTOR} times the rate the probability of crossing by the date is {}",
             percent(most)
@@ -72,7 +79,8 @@ pub(super) fn sustainable(prospect: &Prospect, limit: &Limit, rate: Rate) -> Res
     }
     // The forces at the unlucky end cross soon, and allow less.
     let deviations = normal_quantile(0.5 + 0.5 * LEVEL);
-    let end = |deviations: f64| search.largest(risk, View::Known(deviations), factor, END_TOLERANCE);
+    let end =
+        |deviations: f64| search.largest(risk, View::Known(deviations), (factor, FIRST_STEP), END_TOLERANCE, &path);
     let ends = (end(deviations)?, end(-deviations)?);
     let interval = match ends {
         (Some(low), Some(high)) => {
@@ -120,21 +128,57 @@ impl<'a> Search<'a> {
     }
 
     /// Probability of a crossing by the limit's date with the rate held at a factor.
-    fn risk(&self, factor: f64, view: View) -> Result<f64, OriginError> {
+    fn risk(&self, factor: f64, view: View, path: &Correlations) -> Result<f64, OriginError> {
+        let (change, threshold) = (self.change(factor), self.limit.threshold());
+        let course = TailCourse::correlated(self.prospect, threshold, &self.days, &change, path.clone())?;
+        course.crossed_by(self.days.len() - 1, self.limit.max_nodes() as f64, view)
+    }
+
+    /// Correlations by chance of the tail on its way, with the rate held at a factor.
+    fn correlations(&self, factor: f64) -> Result<Correlations, OriginError> {
+        Correlations::new(self.prospect, self.limit.threshold(), &self.days, &self.change(factor))
+    }
+
+    /// The largest factor that keeps `risk`, and the correlations there. These hardly depend on the factor and cost much: the factor
+    /// is found for given ones, these are made anew there, and so on until it stands still.
+    fn settled(&self, risk: f64, mut path: Correlations) -> Result<Option<(f64, Correlations)>, OriginError> {
+        let (mut factor, mut step): (f64, f64) = (1.0, FIRST_STEP);
+        for _ in 0..MOST_ROUNDS {
+            let Some(found) = self.largest(risk, View::Whole, (factor, step), RATE_TOLERANCE, &path)? else {
+                return Ok(None);
+            };
+            let moved = (found / factor).ln().abs();
+            factor = found;
+            if path.is_none() || moved < SETTLED {
+                break;
+            }
+            step = 0.1 * moved;
+            path = self.correlations(factor)?;
+        }
+        Ok(Some((factor, path)))
+    }
+
+    fn change(&self, factor: f64) -> Change {
         let mut change = Change::none("");
         match self.rate {
             Rate::Arrivals => change.arrivals = Some(Shift::To(self.arrivals.scaled(factor))),
             Rate::Links => change.links_per_arrival = Some(Shift::To(self.links * factor)),
         }
-        let course = TailCourse::new(self.prospect, self.limit.threshold(), &self.days, &change)?;
-        course.crossed_by(self.days.len() - 1, self.limit.max_nodes() as f64, view)
+        change
     }
 
     /// The largest factor up to [`MOST_FACTOR`] that keeps `risk`, sought from `near` on, to `tolerance` in its logarithm; none where
     /// all do.
-    fn largest(&self, risk: f64, view: View, near: f64, tolerance: f64) -> Result<Option<f64>, OriginError> {
+    fn largest(
+        &self,
+        risk: f64,
+        view: View,
+        (near, first_step): (f64, f64),
+        tolerance: f64,
+        path: &Correlations,
+    ) -> Result<Option<f64>, OriginError> {
         let mut failure = None;
-        let mut excess = |log: f64| match self.risk(log.exp(), view) {
+        let mut excess = |log: f64| match self.risk(log.exp(), view, path) {
             Ok(found) => found - risk,
             // Growth beyond what can be computed crosses any limit.
             Err(OriginError::Forecast(ForecastError::Growth(_))) => 1.0,
@@ -145,7 +189,7 @@ impl<'a> Search<'a> {
         };
         let (farthest, nearest) = (MOST_FACTOR.ln(), -2.0 * MOST_FACTOR.ln());
         let (mut low, mut high) = (near.ln(), near.ln());
-        let mut step = 0.25;
+        let mut step = first_step;
         if excess(low) > 0.0 {
             while low > nearest {
                 high = low;

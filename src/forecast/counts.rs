@@ -56,7 +56,11 @@ impl CountLaw {
     pub fn of_cumulants(mean: f64, variance: f64, third: f64) -> Self {
         let skewed = 0.5 * (1.0 + third / variance);
         let floor = (mean - variance / skewed).round();
-        if skewed > 0.0 && floor > 0.0 { Self::new(floor, mean - floor, variance) } else { Self::new(0.0, mean, variance) }
+        if skewed > 0.0 && floor > 0.0 {
+            Self::new(floor, mean - floor, variance)
+        } else {
+            Self::new(0.0, mean, variance)
+        }
     }
 
     /// The same, its variance known only as well as so many past misses tell it (at least 1): intervals are wider in the proportion

@@ -184,7 +184,8 @@ impl<'a> Outlook<'a> {
             return Err(ForecastError::Cancelled);
         }
         let now = self.counts.tail_size(threshold) as f64;
-        let TailSum { kept, mean: central, variance: chance, third_cumulant, .. } = laws.central.tail(threshold, Accuracy::Full)?;
+        let TailSum { kept, mean: central, variance: chance, third_cumulant, .. } =
+            laws.central.tail(threshold, Accuracy::Full)?;
         let (mean, disagreement) = pooled(laws, threshold, central)?;
         let beyond = excursion_variance(&laws.ends, |law| Ok(law.rough_tail(threshold)?.mean))?;
         // Nodes that come past the threshold and nodes that leave the tail are what the model can be wrong about; of a tail

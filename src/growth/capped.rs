@@ -18,10 +18,10 @@ pub(super) fn needs_states(course: &Course, threshold: u64) -> bool {
 
 /// Whom the tail past `threshold` (at most the cap) is made of at `day`.
 ///
-/// Formula (Kolmogorov's backward equation), with u_k(s) = P(X_t ≥ j | X_s = k) for k = 0 … cap:
-/// `−du_k/ds = λ_k(s)·(u_{k+1} − u_k) + w·k·(u_{k−1} − u_k)`, λ_cap = 0, u_k(t) = 1 for k ≥ j and 0 below. One solution gives every
-/// present node (s = 0) and newcomers of every day. A node that starts past the cap only loses links: that it may fall below and gain
-/// again is left out.
+/// Formula (Kolmogorov's backward equation), with u_k(s) = P(X_t ≥ j | X_s = k) for k up to the cap and to the largest degree of today:
+/// `−du_k/ds = λ_k(s)·(u_{k+1} − u_k) + w·k·(u_{k−1} − u_k)`, λ_k = 0 from the cap on, u_k(t) = 1 for k ≥ j and 0 below. One solution gives every
+/// present node (s = 0) and newcomers of every day. Of a node that starts past the states, that it may fall below the cap and gain again
+/// is left out.
 ///
 /// # Numerical notes
 /// Crank–Nicolson in 240 steps that shorten towards t, the first four from there by backward Euler (Rannacher 1984, from memory),
@@ -34,7 +34,7 @@ pub(super) fn capped_parts(
     cap: u64,
 ) -> Result<TailParts, GrowthError> {
     let forces = course.parameters();
-    let states = cap as usize + 1;
+    let states = cap.max(counts.largest()).min(MOST_STATES) as usize + 1;
     let mut values: Vec<f64> = (0..states).map(|k| f64::from(k as u64 >= threshold)).collect();
     let entering = |values: &[f64]| -> f64 {
         forces.entry.shares().iter().map(|&(k, share)| share * values[(k as usize).min(states - 1)]).sum()
@@ -47,7 +47,7 @@ pub(super) fn capped_parts(
         let before = entering(&values);
         let hazards = course.hazards(0.5 * (from + to), 1.0);
         let implicit = if step < CAP_DAMPING_STEPS { 1.0 } else { 0.5 };
-        let gain = |k: usize| if k + 1 < states { hazards.uniform + hazards.preferential * k as f64 } else { 0.0 };
+        let gain = |k: usize| if (k as u64) < cap { hazards.uniform + hazards.preferential * k as f64 } else { 0.0 };
         system.step(&mut values, from - to, implicit, gain, |k| forces.end_loss_hazard() * k as f64);
         let arrived = forces.arrivals.arrivals_between(to, from) * course.survival(day - 0.5 * (from + to));
         newcomers += arrived * 0.5 * (before + entering(&values));

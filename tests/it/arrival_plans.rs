@@ -44,7 +44,7 @@ async fn seasons_and_campaigns_bring_their_arrivals() {
     }
     assert_ne!(seasonal["inputs_digest"], plain["inputs_digest"]);
     // What changes nothing is not another question.
-    let even = forecast(&service, json!({"per_day": 50.0, "months": [1; 12], "relative_deviation": 0})).await;
+    let even = forecast(&service, json!({"per_day": 50.0, "months": vec![1; 12], "relative_deviation": 0})).await;
     assert_eq!(even["inputs_digest"], plain["inputs_digest"]);
 }
 
