@@ -87,6 +87,6 @@ impl Members {
             left -= chance(node);
             left < 0.0
         });
-        found.or_else(|| open().last())
+        found.or_else(|| open().next_back())
     }
 }
