@@ -72,11 +72,19 @@ impl TailLaw {
         (self.law.rest().variance - self.chance).max(0.0).sqrt()
     }
 
-    /// The same tail, larger by a factor.
-    pub fn scaled(&self, factor: f64) -> Self {
+    /// The same tail, larger by a factor; `falls` where its nodes may leave it.
+    ///
+    /// Formula: a tail made smaller, or whose nodes may leave, keeps each of its nodes with the factor as probability, and nothing of it
+    /// is certain.
+    pub fn scaled(&self, factor: f64, falls: bool) -> Self {
         let (rest, doubt) = (self.law.rest(), self.doubt() * factor);
         let mean = self.mean() * factor;
-        let floor = self.law.floor().min(mean);
+        let floor = self.law.floor();
+        if falls || mean < floor {
+            let kept = factor.min(1.0);
+            let chance = factor * factor * self.chance + kept * (1.0 - kept) * self.mean();
+            return Self { law: self.law.with_moments(0.0, mean, chance + doubt * doubt), chance, ..*self };
+        }
         let chance = self.chance * if rest.mean > 0.0 { (mean - floor) / rest.mean } else { factor };
         let law = self.law.with_moments(floor, mean - floor, chance + doubt * doubt);
         Self { law, chance, ..*self }

@@ -3,9 +3,9 @@
 use super::OriginError;
 use super::prospect::{Prospect, of_growth};
 use super::questions::{AmountForecast, BandAmounts, BandsAnswer, BandsAtDate};
-use crate::forecast::{ForecastError, TailLaw};
+use crate::forecast::TailLaw;
 use crate::growth::{Course, Holding, Holdings, NetworkLaw, Piece};
-use crate::model::{Bands, Change, DegreeCounts, GrowthParameters, Interval};
+use crate::model::{Bands, Change, DegreeCounts, GrowthParameters, Interval, MAX_DEGREE};
 use crate::numerics::gamma::gamma_quantile;
 
 /// Costs of `bands` at every date of the forecast under `change`.
@@ -22,7 +22,12 @@ pub(super) fn costs(prospect: &Prospect, bands: &Bands, change: &Change) -> Resu
     let pieces: Vec<Piece> = bands
         .bands()
         .iter()
-        .map(|band| Piece { from: band.from, to: band.to, per_node: band.per_node, per_link: band.per_link })
+        .map(|band| Piece {
+            from: band.from,
+            to: band.to.filter(|&to| to < MAX_DEGREE),
+            per_node: band.per_node,
+            per_link: band.per_link,
+        })
         .collect();
     let plan = &prospect.request.plan;
     let mut edges: Vec<u64> = pieces.iter().flat_map(|p| [Some(p.from), p.to.map(|to| to + 1)]).flatten().collect();
@@ -39,10 +44,8 @@ pub(super) fn costs(prospect: &Prospect, bands: &Bands, change: &Change) -> Resu
     let landing = landing_pair(prospect, change, horizon)?;
     let mut dates = Vec::new();
     for ((&date, &day), tails) in plan.dates().iter().zip(plan.days()).zip(&tails) {
-        if (prospect.cancelled)() {
-            return Err(ForecastError::Cancelled.into());
-        }
         let held = |course: &Course| -> Result<Holdings, OriginError> {
+            prospect.check()?;
             let law = NetworkLaw::at(course, prospect.counts, day).map_err(of_growth)?;
             law.holdings(&pieces).map_err(of_growth)
         };

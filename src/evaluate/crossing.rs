@@ -142,7 +142,8 @@ impl TailCourse {
             laws.iter().zip(&bounds).map(|(law, bound)| 0.5 * (bound + place(law, most + 1.0))).collect();
         let doubt: Vec<f64> = self.laws.iter().map(|law| if view == View::Whole { law.doubt() } else { 0.0 }).collect();
         let chance: Vec<f64> = self.laws.iter().map(|law| law.chance.max(0.0).sqrt()).collect();
-        let total: Vec<f64> = chance.iter().zip(&doubt).map(|(c, d)| c.hypot(*d).max(f64::MIN_POSITIVE)).collect();
+        let total: Vec<f64> =
+            chance.iter().zip(&doubt).map(|(c, d)| c.hypot(*d).max(f64::MIN_POSITIVE.sqrt())).collect();
         let bridge = |i: usize| {
             let Some(before) = i.checked_sub(1) else {
                 let from = (most + 1.0 - self.now) / total[0];

@@ -41,7 +41,13 @@ fn answer(prospect: &Prospect, limit: &Limit, change: &Change, backwards: bool) 
     let mut asked: Vec<Timestamp> = plan.dates().iter().copied().chain(own_date).collect();
     asked.sort_unstable();
     let days: Vec<f64> = asked.iter().map(|&date| prospect.day(date)).collect();
-    let laws = prospect.tails(&prospect.plan(&[limit.threshold()], &days)?, change)?;
+    // The limit's own date in a plan of its own: a forecast may have as many dates as one takes.
+    let mut laws = prospect.tails(&prospect.plan(&[limit.threshold()], plan.days())?, change)?;
+    if let Some(own) = own_date {
+        let at = asked.iter().position(|&date| date == own).unwrap_or(laws.len()).min(laws.len());
+        let mut single = prospect.tails(&prospect.plan(&[limit.threshold()], &[by])?, change)?;
+        laws.splice(at..at, single.drain(..));
+    }
     let mut highest: f64 = 0.0;
     let at = |((date, day), laws): ((Timestamp, f64), Vec<TailLaw>)| {
         let exceeding = laws.first().map_or(0.0, |law| law.law.above(most));

@@ -168,7 +168,9 @@ impl<'a> PooledOutlook<'a> {
         let growth = growth_of(given);
         let at = |(&date, &day): (&Timestamp, &f64)| {
             let outlook = newest.outlooks.iter().find(|o| o.target.date == date && o.target.growth == growth);
-            let used = self.uses.iter().find(|used| used.ahead == periods_ahead(day, self.period));
+            let wanted = periods_ahead(day, self.period);
+            let away = |used: &&PoolUse| (used.ahead - wanted).abs();
+            let used = self.uses.iter().min_by(|a, b| away(a).total_cmp(&away(b)));
             let (Some(outlook), Some(used)) = (outlook, used) else { return Err(OriginError::NoPeriod) };
             Ok(tails_at(&newest, outlook, &used.pool, &self.replay))
         };

@@ -6,14 +6,18 @@ use super::ahead::GivenRates;
 use super::pooled::PooledOutlook;
 use super::record::OriginRecord;
 use super::{OriginError, OriginRequest, is_pooled};
-use crate::forecast::{Scenario, TailLaw, tail_laws};
+use crate::forecast::{ForecastError, Scenario, TailLaw, tail_laws};
 use crate::growth::{Course, GrowthError};
 use crate::model::{
-    Change, DegreeCounts, ForecastPlan, GrowthParameters, Levels, PlanFault, Shift, Thresholds, days_between,
+    Change, DegreeCounts, ForecastPlan, GrowthParameters, Levels, ParameterFault, PlanFault, Shift, Thresholds,
+    days_between,
 };
 
 /// Seconds of a day.
 const DAY_SECONDS: f64 = 86_400.0;
+
+/// Courses at both ends of each direction in which the forces are uncertain.
+pub(super) type Ends = Vec<(Course, Course)>;
 
 /// What is believed of the network from its newest snapshot on.
 pub(super) struct Prospect<'a> {
@@ -67,13 +71,20 @@ impl<'a> Prospect<'a> {
         if !change.is_of_mechanism() {
             return Ok(standing);
         }
-        let before = self.central_tails(plan, &change.of_rates())?;
-        let after = self.central_tails(plan, change)?;
+        let alike = self.takes_alike(change);
+        let before = self.central_tails(plan, &change.of_rates(), alike)?;
+        let after = self.central_tails(plan, change, alike)?;
+        let falls = self.forces(change)?.has_losses();
         let moved = standing.iter().zip(before.iter().zip(&after)).map(|(standing, (before, after))| {
             let pairs = before.iter().zip(after);
             let scaled = |(law, (before, after)): (&TailLaw, (&TailLaw, &TailLaw))| {
-                let mean = before.mean();
-                if mean > 0.0 { law.scaled(after.mean() / mean) } else { *law }
+                let (mean, standing) = (before.mean(), law.mean());
+                if mean <= 0.0 || standing <= 0.0 {
+                    return *law;
+                }
+                // Of next to nothing no ratio tells: no more than what the fitted law has coming is added.
+                let most = (standing + after.mean()) / standing;
+                law.scaled((after.mean() / mean).min(most), falls)
             };
             standing.iter().zip(pairs).map(scaled).collect()
         });
@@ -81,41 +92,85 @@ impl<'a> Prospect<'a> {
     }
 
     /// The same by the fitted forces alone, without what is uncertain of them.
-    fn central_tails(&self, plan: &ForecastPlan, change: &Change) -> Result<Vec<Vec<TailLaw>>, OriginError> {
-        let forces = self.forces(change)?;
+    fn central_tails(
+        &self,
+        plan: &ForecastPlan,
+        change: &Change,
+        alike: bool,
+    ) -> Result<Vec<Vec<TailLaw>>, OriginError> {
+        let forces = self.believed(change, alike)?.forces;
         let scenario = Scenario { forces, excursions: Vec::new(), alternatives: Vec::new(), model_error: 0.0 };
         Ok(tail_laws(self.counts, &scenario, plan, self.cancelled)?)
     }
 
-    /// The fitted forces under `change`; of a pooled forecast those of nodes that grow alike, where a cap needs that.
+    /// Whether what `change` would do is told by nodes that grow alike: a cap needs that, and a pool has such members.
+    pub fn takes_alike(&self, change: &Change) -> bool {
+        self.pooled.is_some() && change.degree_cap.is_some()
+    }
+
+    /// The fitted forces and how uncertain they are under `change`; those of nodes that grow `alike` where asked.
+    fn believed(&self, change: &Change, alike: bool) -> Result<Scenario, OriginError> {
+        let mut scenario = self.scenario.clone();
+        if alike {
+            let strip = |forces: &mut GrowthParameters| -> Result<(), ParameterFault> {
+                let plain = forces.clone().with_dormant_share(0.0)?.with_growth_variance(0.0)?;
+                *forces = plain.with_kernel_exponent(1.0)?;
+                Ok(())
+            };
+            let ends = scenario.excursions.iter_mut().flat_map(|e| [&mut e.low, &mut e.high]);
+            let all = std::iter::once(&mut scenario.forces).chain(ends);
+            all.map(strip).collect::<Result<(), _>>().map_err(OriginError::Rate)?;
+        }
+        scenario.under(change).map_err(OriginError::Rate)
+    }
+
+    /// The fitted forces under `change`.
     ///
     /// # Errors
     /// A rate out of range.
     pub fn forces(&self, change: &Change) -> Result<GrowthParameters, OriginError> {
-        let forces = change.apply(&self.scenario.forces).map_err(OriginError::Rate)?;
-        if self.pooled.is_none() || change.degree_cap.is_none() {
-            return Ok(forces);
-        }
-        let alike = forces.with_dormant_share(0.0).and_then(|f| f.with_growth_variance(0.0));
-        alike.and_then(|f| f.with_kernel_exponent(1.0)).map_err(OriginError::Rate)
+        Ok(self.believed(change, self.takes_alike(change))?.forces)
     }
 
     /// The course under `change` up to day `horizon`.
     ///
     /// # Errors
-    /// Growth that cannot be computed; a rate out of range.
+    /// Growth that cannot be computed; a rate out of range; cancellation.
     pub fn course(&self, change: &Change, horizon: f64) -> Result<Course, OriginError> {
-        Course::new(self.counts, self.forces(change)?, horizon).map_err(of_growth)
+        self.course_of(&self.forces(change)?, horizon)
     }
 
-    /// Courses at both ends of each direction in which the forces are uncertain, under `change`.
+    /// The course under `change`, and those at both ends of each direction in which the forces are uncertain; of nodes that grow
+    /// `alike` where asked.
     ///
     /// # Errors
-    /// Growth that cannot be computed; a rate out of range.
-    pub fn ends(&self, change: &Change, horizon: f64) -> Result<Vec<(Course, Course)>, OriginError> {
-        let scenario = self.scenario.under(change).map_err(OriginError::Rate)?;
-        let course = |forces: &GrowthParameters| Course::new(self.counts, forces.clone(), horizon).map_err(of_growth);
-        scenario.excursions.iter().map(|e| Ok((course(&e.low)?, course(&e.high)?))).collect()
+    /// Growth that cannot be computed; a rate out of range; cancellation.
+    pub fn courses(&self, change: &Change, horizon: f64, alike: bool) -> Result<(Course, Ends), OriginError> {
+        let scenario = self.believed(change, alike)?;
+        let course = |forces: &GrowthParameters| self.course_of(forces, horizon);
+        let ends = scenario.excursions.iter().map(|e| Ok((course(&e.low)?, course(&e.high)?)));
+        Ok((course(&scenario.forces)?, ends.collect::<Result<_, OriginError>>()?))
+    }
+
+    /// [`Self::courses`], the ends alone.
+    ///
+    /// # Errors
+    /// Those of [`Self::courses`].
+    pub fn ends(&self, change: &Change, horizon: f64) -> Result<Ends, OriginError> {
+        Ok(self.courses(change, horizon, self.takes_alike(change))?.1)
+    }
+
+    fn course_of(&self, forces: &GrowthParameters, horizon: f64) -> Result<Course, OriginError> {
+        self.check()?;
+        Course::new(self.counts, forces.clone(), horizon).map_err(of_growth)
+    }
+
+    /// Whether to go on.
+    ///
+    /// # Errors
+    /// Cancellation.
+    pub fn check(&self) -> Result<(), OriginError> {
+        if (self.cancelled)() { Err(ForecastError::Cancelled.into()) } else { Ok(()) }
     }
 
     /// Relative error of a flow `day` days ahead that no parameter accounts for.

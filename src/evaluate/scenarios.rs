@@ -5,7 +5,7 @@ use super::costs::costs;
 use super::limits::{limits, percent};
 use super::prospect::{Prospect, of_growth};
 use super::questions::{AmountForecast, ScenarioAnswer, ScenarioAtDate, TailDifference};
-use crate::forecast::{ForecastError, TailLaw};
+use crate::forecast::TailLaw;
 use crate::growth::{Course, NetworkLaw, TailParts};
 use crate::model::{Change, Interval};
 use crate::numerics::elementary::normal_quantile;
@@ -25,25 +25,23 @@ pub(super) fn compare(prospect: &Prospect, change: &Change) -> Result<ScenarioAn
     let plan = &prospect.request.plan;
     let standing = Change::none("");
     let horizon = plan.days().last().copied().unwrap_or(0.0);
-    let pair =
-        |change: &Change| Ok::<_, OriginError>((prospect.course(change, horizon)?, prospect.ends(change, horizon)?));
-    let (before, ends_before) = pair(&standing)?;
-    let (after, ends_after) = pair(change)?;
+    let alike = prospect.takes_alike(change);
+    let (before, ends_before) = prospect.courses(&standing, horizon, alike)?;
+    let (after, ends_after) = prospect.courses(change, horizon, alike)?;
     let laws = prospect.tails(plan, &standing)?.into_iter().zip(prospect.tails(plan, change)?);
     let mut dates = Vec::new();
     for ((&date, &day), (laws_before, laws_after)) in plan.dates().iter().zip(plan.days()).zip(laws) {
         let at = |course| NetworkLaw::at(course, prospect.counts, day).map_err(of_growth);
         let central = (at(&before)?, at(&after)?);
-        let ends = ends_before
-            .iter()
-            .zip(&ends_after)
-            .map(|(before, after)| Ok(((at(&before.0)?, at(&before.1)?), (at(&after.0)?, at(&after.1)?))));
+        // A direction that only the change has, such as a range of its own arrivals, leaves the forecast as it stands.
+        let ends = ends_after.iter().enumerate().map(|(i, after)| {
+            let (low, high) = ends_before.get(i).map_or((&before, &before), |ends| (&ends.0, &ends.1));
+            Ok(((at(low)?, at(high)?), (at(&after.0)?, at(&after.1)?)))
+        });
         let ends = ends.collect::<Result<Vec<_>, OriginError>>()?;
         let mut tail = Vec::new();
         for (law_before, law_after) in laws_before.iter().zip(&laws_after) {
-            if (prospect.cancelled)() {
-                return Err(ForecastError::Cancelled.into());
-            }
+            prospect.check()?;
             let threshold = law_before.threshold;
             let parts = |law: &NetworkLaw| law.parts(threshold, Accuracy::Working).map_err(of_growth);
             let mean = |law: &NetworkLaw| Ok::<_, OriginError>(law.rough_tail(threshold).map_err(of_growth)?.mean);

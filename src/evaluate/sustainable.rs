@@ -116,7 +116,15 @@ impl<'a> Search<'a> {
         let by = prospect.day(limit.by());
         let steps = if forces.has_losses() { PATH_STEPS } else { 1 };
         let days = (1..=steps).map(|i| by * f64::from(i) / f64::from(steps)).collect();
-        Self { prospect, limit, rate, by, days, arrivals: forces.arrivals.clone(), links: forces.links_per_arrival() }
+        Self {
+            prospect,
+            limit,
+            rate,
+            by,
+            days,
+            arrivals: forces.arrivals.clone().certain(),
+            links: forces.links_per_arrival(),
+        }
     }
 
     /// The rate that a factor stands for.
@@ -181,7 +189,7 @@ impl<'a> Search<'a> {
         let mut excess = |log: f64| match self.risk(log.exp(), view, path) {
             Ok(found) => found - risk,
             // Growth beyond what can be computed crosses any limit.
-            Err(OriginError::Forecast(ForecastError::Growth(_))) => 1.0,
+            Err(OriginError::Forecast(ForecastError::Growth(_)) | OriginError::NoPeriod | OriginError::Rate(_)) => 1.0,
             Err(error) => {
                 failure.get_or_insert(error);
                 0.0

@@ -7,7 +7,7 @@ use super::questions::{
     AmountForecast, ClassAnswer, ClassAtDate, ClassPassing, DateAt, DegreeAtDate, NodeAnswer, PassedAtDate, Passing,
     WatchAnswer,
 };
-use crate::forecast::{CountLaw, ForecastError, first_whole};
+use crate::forecast::{CountLaw, first_whole};
 use crate::growth::{Course, GrowthError, MixedLaw, Passage};
 use crate::model::{Change, Interval, MAX_DEGREE, Watch, WatchedClass, WatchedNode};
 use crate::numerics::elementary::normal_quantile;
@@ -15,6 +15,10 @@ use crate::numerics::tolerances::Accuracy;
 
 /// Days that the way to the last date is looked at for the dates of passing, besides those asked for.
 const STEPS: u32 = 24;
+/// A larger relative error of a node's hazard says no more.
+const MOST_ERROR: f64 = 3.0;
+/// With more dates than this first passages are worked out at even steps and read off between them.
+const MOST_DAYS: usize = 64;
 /// Probabilities whose dates are told.
 const TOLD: [f64; 3] = [0.05, 0.5, 0.95];
 
@@ -29,6 +33,9 @@ pub(super) fn watched(prospect: &Prospect, watch: &Watch) -> Result<WatchAnswer,
     let standing = Change::none("");
     let horizon = prospect.request.plan.days().last().copied().unwrap_or(0.0);
     let (central, ends) = (prospect.course(&standing, horizon)?, prospect.ends(&standing, horizon)?);
+    if central.parameters().kernel_exponent() != 1.0 {
+        return Err(of_growth(GrowthError::NoNodeLaw));
+    }
     let scene = Scene::new(prospect, watch, &central, &ends)?;
     let nodes = watch.nodes.iter().map(|node| scene.node(node)).collect::<Result<Vec<_>, _>>()?;
     let classes = watch.classes.iter().map(|class| scene.class(class)).collect::<Result<_, _>>()?;
@@ -87,14 +94,14 @@ impl<'a> Scene<'a> {
             factor,
             laws: days.iter().map(|&day| MixedLaw::of_present_growing(course, factor, day)).collect(),
         };
-        let factor = prospect.model_error(horizon).exp();
+        let factor = prospect.model_error(horizon).min(MOST_ERROR).exp();
         let mut sides = vec![(way(central, factor.recip()), way(central, factor))];
         sides.extend(ends.iter().map(|(low, high)| (way(low, 1.0), way(high, 1.0))));
         Ok(Self { prospect, central: way(central, 1.0), sides, ends, thresholds, days, asked })
     }
 
     fn check(&self) -> Result<(), OriginError> {
-        if (self.prospect.cancelled)() { Err(ForecastError::Cancelled.into()) } else { Ok(()) }
+        self.prospect.check()
     }
 
     fn node(&self, node: &WatchedNode) -> Result<NodeAnswer, OriginError> {
@@ -184,6 +191,7 @@ impl<'a> Scene<'a> {
 
     /// Probabilities of being past a threshold and of having been, at each day.
     fn along(&self, way: &Way, start: u64, threshold: u64) -> Result<(Vec<f64>, Vec<f64>), OriginError> {
+        self.check()?;
         let (course, forces) = (way.course, way.course.parameters());
         let at = |(law, &day): (&MixedLaw, &f64)| {
             let tail = law.tail(&[(start, 1.0)], threshold, Accuracy::Working).map_err(of_growth)?;
@@ -192,11 +200,30 @@ impl<'a> Scene<'a> {
         let at_least = way.laws.iter().zip(&self.days).map(at).collect::<Result<Vec<f64>, OriginError>>()?;
         // Without losses nobody comes back; nodes that do not grow alike are followed by where they stand.
         let passed = if forces.has_losses() && forces.grow_alike() {
-            Passage::of(course, way.factor, start, threshold, &self.days).map_err(of_growth)?
+            self.passed(way, start, threshold, &at_least)?
         } else {
             at_least.clone()
         };
         Ok((at_least, passed))
+    }
+
+    /// Probabilities of having been past a threshold, at each day; where they do not settle, of being past it.
+    fn passed(&self, way: &Way, start: u64, threshold: u64, at_least: &[f64]) -> Result<Vec<f64>, OriginError> {
+        let every = self.days.len().div_ceil(MOST_DAYS);
+        let last = self.days.len().saturating_sub(1);
+        let places: Vec<usize> = (0..=last).filter(|i| (last - i) % every == 0).collect();
+        let days: Vec<f64> = places.iter().map(|&i| self.days[i]).collect();
+        let found = match Passage::of(way.course, way.factor, start, threshold, &days) {
+            Err(GrowthError::Integration { .. }) => return Ok(at_least.to_vec()),
+            found => found.map_err(of_growth)?,
+        };
+        let at = |i: usize| {
+            let after = places.partition_point(|&place| place < i).min(places.len() - 1);
+            let (day, p) = (days[after], found[after]);
+            let (day_before, p_before) = after.checked_sub(1).map_or((0.0, 0.0), |b| (days[b], found[b]));
+            p_before + (p - p_before) * ((self.days[i] - day_before) / (day - day_before)).clamp(0.0, 1.0)
+        };
+        Ok((0..=last).map(at).collect())
     }
 
     fn class(&self, class: &WatchedClass) -> Result<ClassAnswer, OriginError> {

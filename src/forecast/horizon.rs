@@ -3,7 +3,7 @@
 use super::largest::{DegreeRange, largest_degree};
 use super::{CountForecast, CountLaw, DateForecast, ForecastError, TailForecast, TailLaw};
 use crate::growth::{Course, GrowthError, NetworkLaw, TailSum};
-use crate::model::{Change, DegreeCounts, ForecastPlan, GrowthParameters, ParameterFault};
+use crate::model::{Change, DegreeCounts, ForecastPlan, GrowthParameters, ParameterFault, Shift};
 use crate::numerics::tolerances::Accuracy;
 
 /// The forces one standard deviation below and above their estimates in one direction of uncertainty; directions are
@@ -50,9 +50,17 @@ impl Scenario {
     pub fn under(&self, change: &Change) -> Result<Self, ParameterFault> {
         let excursion = |e: &Excursion| Ok(Excursion { low: change.apply(&e.low)?, high: change.apply(&e.high)? });
         let alternative = |(forces, weight): &(GrowthParameters, f64)| Ok((change.apply(forces)?, *weight));
+        let forces = change.apply(&self.forces)?;
+        let mut excursions = self.excursions.iter().map(excursion).collect::<Result<Vec<_>, _>>()?;
+        if let Some(Shift::To(plan)) = &change.arrivals
+            && let Some((low, high)) = plan.sides()
+        {
+            let with = |plan| forces.clone().with_arrivals(plan);
+            excursions.push(Excursion { low: with(low), high: with(high) });
+        }
         Ok(Self {
-            forces: change.apply(&self.forces)?,
-            excursions: self.excursions.iter().map(excursion).collect::<Result<_, _>>()?,
+            forces,
+            excursions,
             alternatives: self.alternatives.iter().map(alternative).collect::<Result<_, _>>()?,
             model_error: self.model_error,
         })

@@ -141,11 +141,12 @@ fn convolve(law: &mut [f64], nodes: f64, probability: f64) {
         terms.push(1.0);
     } else {
         let odds = probability / (1.0 - probability);
-        let mut term = (nodes * (-probability).ln_1p()).exp();
+        // In logarithms: the first term of many nodes that are nearly certain is far below any double.
+        let mut log_term = nodes * (-probability).ln_1p();
         for i in 0..law.len() {
-            terms.push(term);
-            term *= (nodes - i as f64).max(0.0) / (i + 1) as f64 * odds;
-            if term < NEGLIGIBLE_TERM && i as f64 >= nodes * probability {
+            terms.push(log_term.exp());
+            log_term += ((nodes - i as f64).max(0.0) / (i + 1) as f64 * odds).ln();
+            if log_term < NEGLIGIBLE_TERM.ln() && i as f64 >= nodes * probability {
                 break;
             }
         }

@@ -7,7 +7,7 @@ use crate::model::DegreeCounts;
 use crate::numerics::tolerances::{Accuracy, CAP_DAMPING_STEPS, CAP_TIME_STEPS};
 
 /// Largest cap whose states are gone through one by one; above it the cap's edge is narrow beside the degree.
-const MOST_STATES: u64 = 20_000;
+const MOST_STATES: u64 = 2_000;
 
 /// Whether the tail past `threshold` under the course's cap needs the backward equation: links can be lost at the cap, and gained
 /// again.

@@ -217,7 +217,7 @@ impl Course {
         let (nodes, link_ends) = self.totals(day);
         let p = self.parameters.mix.preferential_share();
         let landing = self.landing(day, nodes) * self.refusals.boost(day);
-        let nodes = nodes * (1.0 - self.parameters.dormant_share());
+        let nodes = (nodes * (1.0 - self.parameters.dormant_share())).max(f64::MIN_POSITIVE);
         let attracting = link_ends * self.attraction.at(day);
         Hazards {
             uniform: factor * (1.0 - p) * landing / nodes,

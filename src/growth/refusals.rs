@@ -96,5 +96,5 @@ fn refused_share(course: &Course, counts: &DegreeCounts, cap: u64, day: f64) -> 
     let full_ends = cap as f64 * full + beyond * (-course.degree_loss() * day).exp();
     let p = course.parameters().mix.preferential_share();
     let by_degree = if link_ends > 0.0 { p * full_ends / link_ends } else { 0.0 };
-    Ok(((1.0 - p) * full / nodes + by_degree).clamp(0.0, MOST_REFUSED))
+    Ok(((1.0 - p) * full / nodes.max(f64::MIN_POSITIVE) + by_degree).clamp(0.0, MOST_REFUSED))
 }

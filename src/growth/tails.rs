@@ -208,7 +208,9 @@ impl<'a> NetworkLaw<'a> {
                 _ => tail(degree)?,
             };
             let probability = survival * probability;
-            if probability * below as f64 <= accuracy.negligible() * mean + TAIL_ZERO {
+            // A node at the cap gains nothing, and may reach less than one just below it.
+            let ordered = cap.is_none_or(|cap| degree < cap);
+            if ordered && probability * below as f64 <= accuracy.negligible() * mean + TAIL_ZERO {
                 break;
             }
             below -= nodes;

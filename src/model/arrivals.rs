@@ -187,6 +187,11 @@ impl ArrivalPlan {
         total
     }
 
+    /// The same rates, taken as exact.
+    pub fn certain(self) -> Self {
+        Self { log_deviation: 0.0, ..self }
+    }
+
     /// The same plan with every rate multiplied by `factor` (≥ 0).
     pub fn scaled(&self, factor: f64) -> Self {
         let segments = self.segments.iter().map(|s| ArrivalSegment { per_day: s.per_day * factor, ..*s }).collect();

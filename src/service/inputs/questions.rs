@@ -61,9 +61,12 @@ struct CanonicalChange<'a> {
     degree_cap: Option<(u64, &'static str)>,
 }
 
-/// `(days after the last snapshot, arrivals a day, growth a year)`
 #[derive(Serialize)]
-struct CanonicalArrivals(Vec<(Real, Real, Real)>);
+struct CanonicalArrivals {
+    /// `(days after the last snapshot, arrivals a day, growth a year)`
+    segments: Vec<(Real, Real, Real)>,
+    log_deviation: Real,
+}
 
 impl<'a> From<&'a Questions> for CanonicalQuestions<'a> {
     fn from(questions: &'a Questions) -> Self {
@@ -134,5 +137,6 @@ impl<T> CanonicalShift<T> {
 
 fn arrivals(plan: &ArrivalPlan) -> CanonicalArrivals {
     let segments = plan.segments().iter();
-    CanonicalArrivals(segments.map(|s| (Real(s.from_day), Real(s.per_day), Real(s.growth_per_year))).collect())
+    let segments = segments.map(|s| (Real(s.from_day), Real(s.per_day), Real(s.growth_per_year))).collect();
+    CanonicalArrivals { segments, log_deviation: Real(plan.log_deviation()) }
 }

@@ -119,3 +119,15 @@ fn impossible_limits_are_answered_with_what_comes_nearest() {
     let far = answer(&counts, &forces, 20, 1_000_000, 0.05);
     assert!(far.arrivals.rate.is_none() && far.arrivals.detail.contains("64 times"), "{:?}", far.arrivals);
 }
+
+/// A tail that is empty today, in a network that loses links, and arrivals that may stop.
+#[test]
+fn a_limit_past_the_largest_degree_is_answered() {
+    let counts = grown(&forces(0.7));
+    let forces = forces(0.7).with_losses(0.001, 0.002).unwrap();
+    let found = answer(&counts, &forces, counts.largest() + 200, 0, 0.05);
+    assert!(found.now == 0 && found.at_by.crossed < 0.05, "{found:?}");
+    let none = forces.with_arrivals(ArrivalPlan::none());
+    let still = answer(&counts, &none, counts.largest() + 200, 0, 0.05);
+    assert!(still.at_by.crossed < 1e-3 && still.arrivals.rate.is_none(), "{still:?}");
+}

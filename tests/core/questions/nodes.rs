@@ -174,3 +174,13 @@ fn the_next_hubs() {
         }
     }
 }
+
+/// Ranks beyond the nodes there are belong to nobody, also where every node is nearly certain to be past a degree.
+#[test]
+fn there_are_no_more_hubs_than_nodes() {
+    let counts = DegreeCounts::from_pairs(&[(1_000, 60)]).unwrap();
+    let still = forces(0.7).with_losses(0.0, 1e-6).unwrap().with_arrivals(ArrivalPlan::none());
+    let questions = Questions { next_hubs: 80, ..Questions::default() };
+    let ranks = ask(&counts, &still, &[60], &[1.0], questions).next_hubs.remove(0).ranks;
+    assert!(ranks[59].expected > 990.0 && ranks[60].expected == 0.0, "{:?} {:?}", ranks[59], ranks[60]);
+}
