@@ -118,8 +118,8 @@ impl<'a> Prospect<'a> {
                 Ok(())
             };
             let ends = scenario.excursions.iter_mut().flat_map(|e| [&mut e.low, &mut e.high]);
-            let all = std::iter::once(&mut scenario.forces).chain(ends);
-            all.map(strip).collect::<Result<(), _>>().map_err(OriginError::Rate)?;
+            let mut all = std::iter::once(&mut scenario.forces).chain(ends);
+            all.try_for_each(strip).map_err(OriginError::Rate)?;
         }
         scenario.under(change).map_err(OriginError::Rate)
     }

@@ -211,7 +211,7 @@ impl<'a> Scene<'a> {
     fn passed(&self, way: &Way, start: u64, threshold: u64, at_least: &[f64]) -> Result<Vec<f64>, OriginError> {
         let every = self.days.len().div_ceil(MOST_DAYS);
         let last = self.days.len().saturating_sub(1);
-        let places: Vec<usize> = (0..=last).filter(|i| (last - i) % every == 0).collect();
+        let places: Vec<usize> = (0..=last).filter(|i| (last - i).is_multiple_of(every)).collect();
         let days: Vec<f64> = places.iter().map(|&i| self.days[i]).collect();
         let found = match Passage::of(way.course, way.factor, start, threshold, &days) {
             Err(GrowthError::Integration { .. }) => return Ok(at_least.to_vec()),
