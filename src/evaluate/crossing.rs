@@ -137,13 +137,18 @@ impl TailCourse {
         };
         let place = |law: &CountLaw, most: f64| deviations(law.at_most(most));
         let bounds: Vec<f64> = laws.iter().map(|law| place(law, most)).collect();
-        // A path of whole numbers meets the limit at one more; the bound of a day lies half a node before.
-        let barriers: Vec<f64> =
-            laws.iter().zip(&bounds).map(|(law, bound)| 0.5 * (bound + place(law, most + 1.0))).collect();
         let doubt: Vec<f64> = self.laws.iter().map(|law| if view == View::Whole { law.doubt() } else { 0.0 }).collect();
         let chance: Vec<f64> = self.laws.iter().map(|law| law.chance.max(0.0).sqrt()).collect();
         let total: Vec<f64> =
             chance.iter().zip(&doubt).map(|(c, d)| c.hypot(*d).max(f64::MIN_POSITIVE.sqrt())).collect();
+        // A path of whole numbers meets the limit at one more; the bound of a day lies half a node before. Beyond what probabilities tell
+        // apart the distance itself stands in.
+        let barrier = |((law, &bound), total): ((&CountLaw, &f64), &f64)| {
+            let near = 0.5 * (bound + place(law, most + 1.0));
+            let far = (most + 1.0 - law.floor() - law.rest().mean) / total;
+            if bound < FARTHEST_DEVIATION { near } else { near.max(far) }
+        };
+        let barriers: Vec<f64> = laws.iter().zip(&bounds).zip(&total).map(barrier).collect();
         let bridge = |i: usize| {
             let Some(before) = i.checked_sub(1) else {
                 let from = (most + 1.0 - self.now) / total[0];

@@ -131,3 +131,14 @@ fn a_limit_past_the_largest_degree_is_answered() {
     let still = answer(&counts, &none, counts.largest() + 200, 0, 0.05);
     assert!(still.at_by.crossed < 1e-3 && still.arrivals.rate.is_none(), "{still:?}");
 }
+
+/// Hubs that hardly move at first, far below a limit: a path that starts in small steps does not leap.
+#[test]
+fn a_far_limit_is_not_crossed_by_the_scale_of_the_first_days() {
+    let mut pairs: Vec<(u64, u64)> = grown(&forces(0.7)).iter().filter(|&(k, _)| k < 30).collect();
+    pairs.extend([(200, 5), (400, 2)]);
+    let counts = DegreeCounts::from_pairs(&pairs).unwrap();
+    let forces = forces(0.7).with_losses(1e-5, 1e-5).unwrap();
+    let found = answer(&counts, &forces, 100, 12, 0.05);
+    assert!(found.now == 7 && found.at_by.crossed < 1e-3, "{found:?}");
+}
