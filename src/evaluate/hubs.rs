@@ -30,7 +30,7 @@ pub(super) fn hubs(prospect: &Prospect, ranks: usize) -> Result<Vec<HubsAtDate>,
             let now = prospect.counts.degree_of_rank(rank as u64);
             let median = law.quantile(rank, 0.5);
             let start = now.unwrap_or(median as u64);
-            let spread = log_spread(&ends, start, day).hypot(prospect.model_error(day) * log_gain(start, median));
+            let spread = log_spread(&ends, start, day).hypot(prospect.node_error(day) * log_gain(start, median));
             let side = |probability: f64| {
                 let own = (law.quantile(rank, probability).ln_1p() - median.ln_1p()).abs();
                 let reach = own.hypot(normal_quantile(probability).abs() * spread);

@@ -178,6 +178,11 @@ impl<'a> Prospect<'a> {
         self.pooled.as_ref().map_or(self.scenario.model_error, |pooled| pooled.flow_error(day))
     }
 
+    /// Relative error of one node's own growth: a record of flows tells that of many nodes together, and single ones go their own ways.
+    pub fn node_error(&self, day: f64) -> f64 {
+        self.model_error(day).max(self.scenario.model_error)
+    }
+
     /// A plan for one threshold.
     ///
     /// # Errors

@@ -16,8 +16,8 @@ use crate::numerics::tolerances::Accuracy;
 /// Formula of the paired variance: a node that is in the tail under one of the two with a probability larger by d is there under that
 /// one alone with probability d, so chance leaves Σ n_k·|d_k|·(1 − |d_k|), and of Poisson newcomers the difference of their means:
 /// the least that is left when both plans meet the same nodes and arrivals. To it come, for each direction in which the forces are
-/// uncertain, the square of half of what the difference differs by between its ends, and (model error × difference)². Two
-/// independent worlds would leave the sum of both variances.
+/// uncertain, the square of half of what the difference differs by between its ends, (model error × difference)², and under a pool the
+/// square of what its difference and that of the fitted law are apart. Two independent worlds would leave the sum of both variances.
 ///
 /// # Errors
 /// Cancellation; growth that cannot be computed; a rate out of range.
@@ -51,7 +51,13 @@ pub(super) fn compare(prospect: &Prospect, change: &Change) -> Result<ScenarioAn
                 let high = mean(high_after)? - mean(high_before)?;
                 beyond += (0.5 * (high - low)).powi(2);
             }
-            let paired = paired_variance(&parts(&central.0)?, &parts(&central.1)?);
+            let (own_before, own_after) = (parts(&central.0)?, parts(&central.1)?);
+            let paired = paired_variance(&own_before, &own_after);
+            if prospect.pooled.is_some() {
+                // What the pool's other members make of the change beside the fitted law.
+                let own = own_after.sum(threshold).mean - own_before.sum(threshold).mean;
+                beyond += (law_after.mean() - law_before.mean() - own).powi(2);
+            }
             let error = prospect.model_error(day);
             tail.push(difference(law_before, law_after, paired, beyond, error, plan.levels()));
         }

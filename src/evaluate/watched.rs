@@ -94,7 +94,7 @@ impl<'a> Scene<'a> {
             factor,
             laws: days.iter().map(|&day| MixedLaw::of_present_growing(course, factor, day)).collect(),
         };
-        let factor = prospect.model_error(horizon).min(MOST_ERROR).exp();
+        let factor = prospect.node_error(horizon).min(MOST_ERROR).exp();
         let mut sides = vec![(way(central, factor.recip()), way(central, factor))];
         sides.extend(ends.iter().map(|(low, high)| (way(low, 1.0), way(high, 1.0))));
         Ok(Self { prospect, central: way(central, 1.0), sides, ends, thresholds, days, asked })
@@ -151,7 +151,7 @@ impl<'a> Scene<'a> {
             failure.map_or(Ok(found), |error: GrowthError| Err(of_growth(error)))
         };
         let median = quantile(0.5)?;
-        let error = self.prospect.model_error(day) * log_gain(start, median);
+        let error = self.prospect.node_error(day) * log_gain(start, median);
         let spread = log_spread(self.ends, start, day).hypot(error);
         let side = |probability: f64| -> Result<f64, OriginError> {
             let own = (quantile(probability)?.ln_1p() - median.ln_1p()).abs();
