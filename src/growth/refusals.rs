@@ -91,9 +91,10 @@ impl Refusals {
 fn refused_share(course: &Course, counts: &DegreeCounts, cap: u64, day: f64) -> Result<f64, GrowthError> {
     let (nodes, link_ends) = (course.nodes(day), course.link_ends(day));
     let full = NetworkLaw::at(course, counts, day)?.tail(cap, Accuracy::Working)?.mean;
-    // Ends of today's nodes past the cap are more than `cap` each.
-    let beyond: f64 = counts.iter().filter(|(k, _)| *k > cap).map(|(k, n)| (k - cap) as f64 * n as f64).sum();
-    let full_ends = cap as f64 * full + beyond * (-course.degree_loss() * day).exp();
+    // Ends of today's nodes past the cap are more than `cap` each, as far as these links last.
+    let lasting = (-course.parameters().end_loss_hazard() * day).exp();
+    let past = |(k, n): (u64, u64)| (k as f64 * lasting - cap as f64).max(0.0) * n as f64;
+    let full_ends = cap as f64 * full + counts.iter().map(past).sum::<f64>() * course.survival(day);
     let p = course.parameters().mix.preferential_share();
     let by_degree = if link_ends > 0.0 { p * full_ends / link_ends } else { 0.0 };
     Ok(((1.0 - p) * full / nodes.max(f64::MIN_POSITIVE) + by_degree).clamp(0.0, MOST_REFUSED))
