@@ -82,7 +82,10 @@ impl TailCourse {
         correlations: Correlations,
     ) -> Result<Self, OriginError> {
         let plan = prospect.plan(&[threshold], days)?;
-        let laws = prospect.tails(&plan, change)?;
+        let laws = match correlations.is_none() {
+            true => prospect.tails(&plan, change)?,
+            false => prospect.fitted_tails(&plan, change)?,
+        };
         let laws: Vec<TailLaw> = laws.into_iter().filter_map(|laws| laws.first().copied()).collect();
         let now = prospect.counts.tail_size(threshold) as f64;
         Ok(Self { days: plan.days().to_vec(), laws, now, correlations })

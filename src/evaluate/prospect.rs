@@ -91,6 +91,16 @@ impl<'a> Prospect<'a> {
         Ok(moved.collect())
     }
 
+    /// The same by the fitted forces with what is uncertain of them, also under a pool: its members say where a tail stands at dates of
+    /// periods, and nothing of the way there.
+    ///
+    /// # Errors
+    /// Those of [`Self::tails`].
+    pub fn fitted_tails(&self, plan: &ForecastPlan, change: &Change) -> Result<Vec<Vec<TailLaw>>, OriginError> {
+        let scenario = self.believed(change, self.takes_alike(change))?;
+        Ok(tail_laws(self.counts, &scenario, plan, self.cancelled)?)
+    }
+
     /// The same by the fitted forces alone, without what is uncertain of them.
     fn central_tails(
         &self,

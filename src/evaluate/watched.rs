@@ -10,11 +10,13 @@ use super::questions::{
 use crate::forecast::{CountLaw, first_whole};
 use crate::growth::{Course, GrowthError, MixedLaw, Passage};
 use crate::model::{Change, Interval, MAX_DEGREE, Watch, WatchedClass, WatchedNode};
-use crate::numerics::elementary::normal_quantile;
+use crate::numerics::elementary::{normal_cdf, normal_quantile};
 use crate::numerics::tolerances::Accuracy;
 
 /// Days that the way to the last date is looked at for the dates of passing, besides those asked for.
 const STEPS: u32 = 24;
+/// Probabilities are told apart down to this many standard deviations.
+const FARTHEST_DEVIATION: f64 = 8.0;
 /// A larger relative error of a node's hazard says no more.
 const MOST_ERROR: f64 = 3.0;
 /// With more dates than this first passages are worked out at even steps and read off between them.
@@ -24,8 +26,8 @@ const TOLD: [f64; 3] = [0.05, 0.5, 0.95];
 
 /// Follows what `watch` names, by the fitted forces.
 ///
-/// Formula: the law of each node's degree, and its first passage past each threshold. Probabilities are means over what is uncertain:
-/// P + ½·Σ(P⁻ + P⁺ − 2P), the ends of each direction of the forces and a node's own hazard e^{±model error} times the fitted one.
+/// Formula: the law of each node's degree, and its first passage past each threshold. Probabilities are means over what is uncertain
+/// ([`blurred`]): the ends of each direction of the forces, and a node's own hazard e^{±model error} times the fitted one.
 ///
 /// # Errors
 /// Cancellation; growth that cannot be computed.
@@ -176,13 +178,12 @@ impl<'a> Scene<'a> {
         let mut found = Chances { at_least: Vec::new(), passed: Vec::new(), doubt: Vec::new() };
         let mut highest: f64 = 0.0;
         for i in 0..self.days.len() {
-            let bent = |own: f64, low: f64, high: f64| 0.5 * (low + high - 2.0 * own);
-            let now: f64 = sides.iter().map(|(low, high)| bent(at_least[i], low.0[i], high.0[i])).sum();
-            let ever: f64 = sides.iter().map(|(low, high)| bent(passed[i], low.1[i], high.1[i])).sum();
+            let now = blurred(at_least[i], sides.iter().map(|(low, high)| (low.0[i], high.0[i])));
+            let ever = blurred(passed[i], sides.iter().map(|(low, high)| (low.1[i], high.1[i])));
             let variance: f64 = sides.iter().map(|(low, high)| (0.5 * (high.1[i] - low.1[i])).powi(2)).sum();
-            highest = highest.max((passed[i] + ever).clamp(0.0, 1.0));
+            highest = highest.max(ever);
             // Being past a threshold may end where links are lost; having been cannot.
-            found.at_least.push((at_least[i] + now).clamp(0.0, highest));
+            found.at_least.push(now.min(highest));
             found.passed.push(highest);
             found.doubt.push(variance.sqrt());
         }
@@ -251,6 +252,14 @@ impl<'a> Scene<'a> {
         let nodes = members.iter().map(|(_, nodes)| nodes).sum();
         Ok(ClassAnswer { class: *class, nodes, passing })
     }
+}
+
+/// The mean of a probability over what is uncertain: on the scale of normal deviations z it moves by half of what its sides are
+/// apart, and E Φ(z + s·Z) = Φ(z/√(1 + s²)).
+fn blurred(own: f64, sides: impl Iterator<Item = (f64, f64)>) -> f64 {
+    let deviations = |p: f64| normal_quantile(p).clamp(-FARTHEST_DEVIATION, FARTHEST_DEVIATION);
+    let variance: f64 = sides.map(|(low, high)| (0.5 * (deviations(high) - deviations(low))).powi(2)).sum();
+    if variance == 0.0 { own } else { normal_cdf(deviations(own) / (1.0 + variance).sqrt()) }
 }
 
 /// A sum of chances, independent of each other were the forces known.

@@ -177,7 +177,9 @@ async fn what_is_kept_outlives_the_process_and_goes_with_its_network() {
     // Whether or not the refresh has ended.
     service.stop().await;
     let service = start().await;
-    assert_eq!(read(&service).await.json()["state"], "current");
+    while read(&service).await.json()["state"] != "current" {
+        tokio::time::sleep(std::time::Duration::from_millis(20)).await;
+    }
     assert_eq!(service.get(&scenario).await.expect(200).json()["change"], json!({"arrivals_factor": 1.2}));
     service.send(Method::DELETE, NETWORK).await.expect(204);
     service.put(NETWORK, &settings()).await.expect(201);
