@@ -15,6 +15,8 @@ use crate::numerics::roots::increasing_root;
 const LEVEL: f64 = 0.9;
 /// A rate is found to this, relative: the forecast by it has the risk to 10⁻⁶.
 const RATE_TOLERANCE: f64 = 1e-11;
+/// A rate whose risk is off by more than this was not found.
+const RISK_TOLERANCE: f64 = 1e-4;
 /// Ends of its interval are found to this.
 const END_TOLERANCE: f64 = 1e-3;
 /// First step of a search, in the logarithm of the rate.
@@ -70,6 +72,15 @@ pub(super) fn sustainable(prospect: &Prospect, limit: &Limit, rate: Rate) -> Res
             percent(most)
         )));
     };
+    let kept = search.risk(factor, View::Whole, &path)?;
+    if kept > risk + RISK_TOLERANCE {
+        return Ok(untold(format!(
+            "no {name} at all keep the risk of {}, but next to none do not: {} {unit} already bring {}",
+            percent(asked),
+            figures(search.rate(factor)),
+            percent(kept)
+        )));
+    }
     if asked < LEAST_RISK {
         return Ok(untold(format!(
             "no {name} above 0 keep a risk of {asked}; the nearest: {} {unit} keep a risk of {}",
