@@ -105,11 +105,12 @@ pub(super) fn pooled_tail(record: &OriginRecord, outlook: &Outlook, weights: &Po
     let mix = record.models.iter().position(|&m| m == Model::Mix).and_then(|i| outlook.laws.get(i)?.as_ref());
     let now = record.sizes.get(j)?.1;
     let kept = mix.and_then(|mix| mix.kept.get(j).copied()).unwrap_or(now).min(size);
-    // Chance is the mix's, for as many nodes as the pool has coming.
-    let by_mix = mix.and_then(|mix| Some((mix.mean.get(j)? - mix.kept.get(j)?, *mix.variance.get(j)?)));
+    // Chance is the mix's, for as many nodes as the pool has coming; where nodes may leave, those that stay are chance too.
+    let by_mix = mix.and_then(|mix| Some((*mix.mean.get(j)?, *mix.kept.get(j)?, *mix.variance.get(j)?)));
     let flow = size - kept;
     let chance = match by_mix {
-        Some((expected, variance)) if expected > 0.0 => variance * flow / expected,
+        Some((mean, _, variance)) if !record.lossless && mean > 0.0 => variance * size / mean,
+        Some((mean, kept, variance)) if mean > kept => variance * flow / (mean - kept),
         _ => flow,
     };
     let between: f64 = weights
@@ -148,4 +149,35 @@ pub(super) fn law(record: &OriginRecord, tail: &PooledTail, spread: &Spread) -> 
     let certain = if record.lossless { tail.kept } else { 0.0 };
     let law = CountLaw::new(certain, tail.size - certain, spread.variance(tail));
     law.with_degrees_of_freedom(spread.degrees_of_freedom)
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::evaluate::{LawSizes, PoolShare, Target, Totals, Trend};
+
+    /// A trend that foresees fewer nodes than the mix takes to stay leaves the chance that these nodes' departures are.
+    #[test]
+    fn nodes_that_may_leave_are_chance_also_where_none_come() {
+        let as_of: Timestamp = "2026-01-01T00:00:00Z".parse().unwrap();
+        let date = "2026-02-01T00:00:00Z".parse().unwrap();
+        let totals = |day, nodes| Totals { day, nodes, link_ends: nodes };
+        let law = LawSizes { mean: vec![12.0], kept: vec![11.9], variance: vec![1.0] };
+        let target = Target { date, ahead: 1.0, growth: Growth::Known, totals: (120.0, 120.0), rates: None };
+        let outlook = Outlook { target, laws: vec![Some(law)] };
+        let record = OriginRecord {
+            as_of,
+            thresholds: vec![5],
+            totals: (totals(-31.0, 100.0), totals(0.0, 110.0)),
+            sizes: vec![(15.0, 13.0)],
+            lossless: false,
+            models: vec![Model::Mix],
+            hindsight: vec![None],
+            outlooks: Vec::new(),
+        };
+        let shares = vec![PoolShare { member: Member::Trend(Trend::PerArrival), score: 1.0, weight: 1.0 }];
+        let tail = pooled_tail(&record, &outlook, &Pool { scored: 1, shares }, 0).unwrap();
+        assert_eq!(tail.size, 11.0);
+        assert!((tail.chance - 11.0 / 12.0).abs() < 1e-12, "{tail:?}");
+    }
 }
