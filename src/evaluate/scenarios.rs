@@ -11,6 +11,9 @@ use crate::model::{Change, Interval};
 use crate::numerics::elementary::normal_quantile;
 use crate::numerics::tolerances::Accuracy;
 
+/// Relative rounding of a tail's expectation.
+const ROUNDING: f64 = 1e-9;
+
 /// What `change` would make of the tails, limits and costs.
 ///
 /// Formula of the paired variance: a node that is in the tail under one of the two with a probability larger by d is there under that
@@ -76,8 +79,11 @@ fn difference(
     error: f64,
     levels: &[f64],
 ) -> TailDifference {
-    let expected = after.mean() - before.mean();
-    let variance = paired + beyond + (error * expected).powi(2);
+    let apart = after.mean() - before.mean();
+    // Before a change takes hold the two differ by rounding.
+    let same = apart.abs() <= ROUNDING * before.mean();
+    let expected = if same { 0.0 } else { apart };
+    let variance = if same { 0.0 } else { paired + beyond + (error * expected).powi(2) };
     let interval = |&level: &f64| {
         let reach = normal_quantile(0.5 + 0.5 * level) * variance.sqrt();
         Interval { level, low: expected - reach, high: expected + reach }

@@ -107,7 +107,15 @@ impl Service {
     /// When there is no such network or limit, or the database fails.
     pub async fn limit(&self, network: &NetworkName, name: &QuestionName) -> Result<LimitStanding, ServiceError> {
         let question = self.question(network, QuestionKind::Limit, name).await?;
-        self.standings(network).await?.of(&question)
+        self.standing(network, &question).await
+    }
+
+    /// A kept limit that is at hand and how it fares by the network's latest forecast.
+    ///
+    /// # Errors
+    /// When there is no such network, or the database fails.
+    pub async fn standing(&self, network: &NetworkName, limit: &StoredQuestion) -> Result<LimitStanding, ServiceError> {
+        self.standings(network).await?.of(limit)
     }
 
     /// Kept limits whose name comes after `after`, and whether more follow.

@@ -106,8 +106,9 @@ async fn put_limit(
     let told = name.as_str().to_owned();
     let limit = body.read(move |raw, faults| read_kept_limit(raw, told, faults)).await?;
     let allows = move |tag: Option<&str>| conditions.hold(tag);
-    let (_, made) = state.service.put_limit(network.clone(), name.clone(), &limit, allows).await?;
-    let standing = state.service.limit(&network, &name).await?;
+    let (stored, made) = state.service.put_limit(network.clone(), name.clone(), &limit, allows).await?;
+    // Of what this call stored, whatever another has made of the limit since.
+    let standing = state.service.standing(&network, &stored).await?;
     let location = format!("{}/limits/{}", address(&network), name.as_str());
     written(StoredLimitAnswer::from(standing), made, &location)
 }
