@@ -2,6 +2,7 @@
 
 mod accuracy;
 mod backtest;
+mod charts;
 mod csv;
 mod questions_csv;
 mod questions_table;
@@ -11,6 +12,7 @@ mod text;
 
 pub use accuracy::accuracy_csv;
 pub use backtest::backtest_csv;
+pub use charts::{Chart, ChartError, FitChart, ForecastChart, Theme, backtest_chart, fit_chart, forecast_chart};
 pub use csv::{ForecastPart, fit_csv, part_csv};
 pub use rows::{degree_counts_csv, transitions_csv};
 pub use table::{align, forecast_table, mix_in_words};
