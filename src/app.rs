@@ -3,6 +3,7 @@
 mod check;
 mod connections;
 mod demo;
+mod follow;
 mod offline;
 mod serve;
 mod tally;
@@ -59,6 +60,11 @@ enum Command {
         /// What of the answer --format csv tells; tail when left out
         #[arg(long, value_enum, value_name = "PART")]
         part: Option<ForecastPart>,
+    },
+    /// Follow a job of the service at `bind` to its end, then print its result
+    Follow {
+        /// The job's id, or its address as a 202 gives it
+        job: String,
     },
     /// Ask the service at `bind` whether it is ready; ends with 0 when it is
     Check,
@@ -121,6 +127,7 @@ fn dispatch(line: CommandLine) -> Result<(), Stop> {
             offline::forecast(&config, &file, &completion, (format, part))
         }
         Command::Openapi => Ok(()),
+        Command::Follow { job } => follow::follow(config.bind, &job),
         Command::Check => check::ready(config.bind),
         Command::Migrate => {
             runtime()?.block_on(Service::migrate(&config.database)).map_err(|error| Stop::failed("migration", error))

@@ -26,7 +26,7 @@ pub fn ready(bind: SocketAddr) -> Result<(), Stop> {
 }
 
 /// Where to reach a service that listens on `bind`: one that listens everywhere is reached over loopback.
-fn reachable(bind: SocketAddr) -> SocketAddr {
+pub fn reachable(bind: SocketAddr) -> SocketAddr {
     let ip = match bind.ip() {
         IpAddr::V4(ip) if ip.is_unspecified() => Ipv4Addr::LOCALHOST.into(),
         IpAddr::V6(ip) if ip.is_unspecified() => Ipv6Addr::LOCALHOST.into(),

@@ -14,7 +14,7 @@ use tailcast::ingest::{FaultPolicy, LinkListPlan, count_links};
 use tailcast::model::{DegreeKind, LinkEvents};
 
 use crate::harness::{Answer, Service, answered, json_text, pairs};
-use crate::process::serve;
+use crate::process::{command, serve};
 
 const LINKS: &str = "/v1/networks/h/links";
 
@@ -179,6 +179,39 @@ async fn a_job_is_followed_by_reading_it_again_or_by_its_events() {
     answered(again.header("last-event-id", "end")).await.expect(204);
     service.send(Method::DELETE, &location).await.expect(204);
     service.get(&location).await.expect_problem(404, "not_found");
+}
+
+/// What `tailcast follow` says of a job of the service, and whether all was well.
+async fn followed(service: &Service, job: &str) -> (bool, String, String) {
+    let (bind, job) = (service.address().to_string(), job.to_owned());
+    let follow = move || {
+        let folder = tempfile::tempdir().unwrap();
+        let mut follow = command(folder.path());
+        follow.args(["follow", &job]).env("TAILCAST_BIND", bind).output().unwrap()
+    };
+    let output = tokio::task::spawn_blocking(follow).await.unwrap();
+    let text = |bytes: &[u8]| String::from_utf8(bytes.to_vec()).unwrap();
+    (output.status.success(), text(&output.stdout), text(&output.stderr))
+}
+
+#[tokio::test]
+async fn the_command_line_follows_a_job_to_its_end() {
+    let service = tracking().await;
+    let location = long_job(&service, "h").await;
+    let (done, result, told) = followed(&service, &location).await;
+    assert!(done, "{told}");
+    let result: Value = serde_json::from_str(&result).unwrap();
+    assert_eq!(result, service.get(&location).await.expect(200).json()["result"]);
+    let location = long_job(&service, "h").await;
+    let following = followed(&service, location.rsplit('/').next().unwrap());
+    let called_off = async {
+        tokio::time::sleep(Duration::from_millis(300)).await;
+        service.send(Method::DELETE, &location).await.expect(204);
+    };
+    let ((done, result, told), ()) = tokio::join!(following, called_off);
+    assert!(!done && result.is_empty() && told.contains("called off"), "{told}");
+    let (done, _, told) = followed(&service, "/v1/jobs/01234567-89ab-7def-8123-456789abcdef").await;
+    assert!(!done && told.contains("not_found"), "{told}");
 }
 
 #[tokio::test]

@@ -10,6 +10,7 @@ mod backtests;
 mod bad_input;
 mod command_line;
 mod coverage;
+mod documents;
 mod durability;
 mod fits;
 mod forecasts;
