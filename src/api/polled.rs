@@ -147,11 +147,11 @@ impl Inner {
         if size > self.most_bytes {
             return;
         }
-        let mut taken: usize = copies.values().map(|copy| copy.size()).sum();
-        while taken + size > self.most_bytes {
-            let oldest = copies.iter().min_by_key(|(_, copy)| copy.used.load(Ordering::Relaxed));
-            let Some(oldest) = oldest.map(|(name, _)| name.clone()) else { break };
-            taken -= copies.remove(&oldest).map_or(0, |copy| copy.size());
+        let taken: usize = copies.values().map(|copy| copy.size()).sum();
+        let excess = (taken + size).saturating_sub(self.most_bytes);
+        let uses = copies.iter().map(|(name, copy)| (name.clone(), copy.size(), copy.used.load(Ordering::Relaxed)));
+        for name in longest_unused(uses.collect(), excess) {
+            copies.remove(&name);
         }
         copies.insert(network.to_owned(), copy);
     }
@@ -229,6 +229,17 @@ impl PolledCopy {
     }
 }
 
+/// Which copies (name, size, last use) to let go of for `excess` bytes.
+fn longest_unused(mut copies: Vec<(String, usize, u64)>, mut excess: usize) -> Vec<String> {
+    copies.sort_by_key(|(_, _, used)| *used);
+    let needed = copies.into_iter().take_while(|(_, size, _)| {
+        let needed = excess > 0;
+        excess = excess.saturating_sub(*size);
+        needed
+    });
+    needed.map(|(name, _, _)| name).collect()
+}
+
 /// Whether a client takes JSON rather than anything else, told without weighing what it likes: most say so.
 fn takes_json(headers: &HeaderMap) -> bool {
     let mut accepted = headers.get_all(header::ACCEPT).iter();
@@ -250,6 +261,14 @@ fn cache_control(state: RefreshState, unasked: Duration) -> Result<HeaderValue, 
 #[cfg(test)]
 mod tests {
     use super::*;
+
+    #[test]
+    fn what_was_not_asked_for_longest_makes_room() {
+        let copies = || vec![("a".to_owned(), 10, 3), ("b".to_owned(), 10, 1), ("c".to_owned(), 10, 2)];
+        for (excess, gone) in [(0, &[][..]), (1, &["b"]), (10, &["b"]), (11, &["b", "c"]), (99, &["b", "c", "a"])] {
+            assert_eq!(longest_unused(copies(), excess), gone, "{excess}");
+        }
+    }
 
     #[test]
     fn what_a_plain_client_accepts_is_seen_at_once() {

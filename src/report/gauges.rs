@@ -2,7 +2,9 @@
 
 use std::fmt::{Display, Write};
 
-use crate::service::{ForecastGauges, NetworkGauges, RefreshState, TailAnswer, TailGauges};
+use crate::service::{
+    ForecastGauges, IntervalAnswer, LimitGauges, NetworkGauges, RefreshState, TailAnswer, TailGauges,
+};
 
 const STATES: [RefreshState; 3] = [RefreshState::Refreshing, RefreshState::Current, RefreshState::Outdated];
 
@@ -70,23 +72,21 @@ fn tails(text: &mut Families, networks: &[NetworkGauges]) {
             text.sample(name, labels, at.expected.0);
         }
     }
-    let ends: [(&str, &str, fn(&TailAnswer) -> Option<f64>); 2] = [
-        ("tailcast_forecast_hubs_low", "Lower end of the interval with the greatest level", |tail| {
-            Some(tail.intervals.last()?.low.0)
-        }),
-        ("tailcast_forecast_hubs_high", "Upper end of the interval with the greatest level", |tail| {
-            Some(tail.intervals.last()?.high.0)
+    let ends: [Family<IntervalAnswer>; 2] = [
+        ("tailcast_forecast_hubs_low", "Lower end of the interval with the greatest level", |interval| interval.low.0),
+        ("tailcast_forecast_hubs_high", "Upper end of the interval with the greatest level", |interval| {
+            interval.high.0
         }),
     ];
     for (name, help, end) in ends {
         text.family(name, help);
         for (network, tail) in all() {
             for (date, at) in dates(tail) {
-                let (Some(value), Some(interval)) = (end(at), at.intervals.last()) else { continue };
-                let (threshold, level) = (&tail.threshold, &interval.level.0);
+                let Some(widest) = at.intervals.last() else { continue };
+                let (threshold, level) = (&tail.threshold, &widest.level.0);
                 let labels: Labels =
                     &[("network", network), ("threshold", threshold), ("date", &date), ("level", level)];
-                text.sample(name, labels, value);
+                text.sample(name, labels, end(widest));
             }
         }
     }
@@ -97,7 +97,7 @@ fn dates(tail: &TailGauges) -> impl Iterator<Item = (&'static str, &TailAnswer)>
 }
 
 fn limits(text: &mut Families, networks: &[NetworkGauges]) {
-    let families: [(&str, &str, fn(&crate::service::LimitGauges) -> f64); 3] = [
+    let families: [Family<LimitGauges>; 3] = [
         ("tailcast_limit_risk", "Probability that a limit is passed by its date, 0 to 1", |limit| limit.risk),
         ("tailcast_limit_risk_allowed", "Probability of passing a limit that is put up with, 0 to 1", |limit| {
             limit.allowed
@@ -115,6 +115,9 @@ fn limits(text: &mut Families, networks: &[NetworkGauges]) {
         }
     }
 }
+
+/// Name and help of a family, and what its samples tell of a thing.
+type Family<T> = (&'static str, &'static str, fn(&T) -> f64);
 
 type Labels<'a> = &'a [(&'static str, &'a dyn Display)];
 
