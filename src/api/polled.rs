@@ -16,7 +16,7 @@ use tokio::sync::watch;
 
 use super::extract::{ForecastForm, ResultFormat};
 use super::networks::{LATEST_ROUTE, polled_network};
-use super::observe::Observation;
+use super::observe::{Observation, leave_room};
 use super::representation::{self, Validator, entity_tag, header_value, is_unmodified};
 use super::{ApiError, forecasts, jobs, runs};
 use crate::service::{LatestStamp, NetworkName, PolledForecast, RefreshState, Service, StoredRun};
@@ -181,6 +181,7 @@ impl PolledCopy {
         let represented = representation::represented(validator, ResultFormat::Json, Body::empty())?;
         let mut with_json = represented.headers().clone();
         with_json.extend(beside.clone());
+        leave_room(&mut with_json);
         let mut without = with_json.clone();
         without.remove(header::CONTENT_TYPE);
         Ok(Self {
