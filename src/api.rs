@@ -15,16 +15,19 @@ mod jobs;
 mod networks;
 mod observe;
 mod pages;
+mod polled;
 mod probes;
 mod problem;
 mod refusals;
 mod representation;
 mod requests;
 mod runs;
+mod streams;
 
 use std::sync::Arc;
 
 use axum::extract::{Request, State};
+use axum::http::{HeaderMap, Method, Uri};
 use axum::middleware::{self, Next};
 use axum::response::{IntoResponse, Response};
 use axum::{Extension, Router};
@@ -34,8 +37,10 @@ use tower_http::catch_panic::CatchPanicLayer;
 use utoipa::openapi::OpenApi;
 use utoipa_axum::router::OpenApiRouter;
 
-use crate::config::{HttpConfig, JobsConfig, LimitsConfig};
-use crate::service::Service;
+use crate::config::{Config, HttpConfig, JobsConfig, LimitsConfig};
+use crate::service::{GaugeCaps, Service};
+use polled::Polled;
+use streams::Streams;
 
 pub use error::ApiError;
 pub use examples::forecast_request as example_request;
@@ -60,10 +65,57 @@ pub struct AppState {
     pub jobs: JobsConfig,
     /// The process's metrics.
     pub metrics: PrometheusHandle,
+    /// How much is told of forecasts among them.
+    pub gauges: GaugeCaps,
+    /// Places for streams of events.
+    pub streams: Streams,
+    /// Copies of latest forecasts.
+    pub polled: Polled,
+}
+
+impl AppState {
+    /// What handlers share, by the settings.
+    pub fn new(service: Service, config: &Config, metrics: PrometheusHandle) -> Self {
+        let told = config.metrics;
+        Self {
+            polled: Polled::new(service.clone(), config.http.polled_bytes),
+            service,
+            http: Arc::new(config.http.clone()),
+            limits: config.limits,
+            jobs: config.jobs,
+            metrics,
+            gauges: GaugeCaps { networks: told.networks, thresholds: told.thresholds, limits: told.limits },
+            streams: Streams::new(&config.http),
+        }
+    }
+}
+
+/// All that is served: polls of latest forecasts from memory, and everything else by its route.
+#[derive(Clone)]
+pub struct Front {
+    polled: Polled,
+    router: Router,
+}
+
+impl Front {
+    /// The whole of the service.
+    pub fn new(state: AppState) -> Self {
+        Self { polled: state.polled.clone(), router: router(state) }
+    }
+
+    /// The answer to a request that can be answered without waiting for anything; it takes no place of `http.max_in_flight`.
+    pub fn at_once(&self, method: &Method, uri: &Uri, headers: &HeaderMap) -> Option<Response> {
+        self.polled.at_once(method, uri, headers)
+    }
+
+    /// The routes, for what is not answered at once.
+    pub fn router(&self) -> Router {
+        self.router.clone()
+    }
 }
 
 /// Every route with every layer around it.
-pub fn router(state: AppState) -> Router {
+fn router(state: AppState) -> Router {
     let places = Arc::new(Semaphore::new(state.http.max_in_flight.min(Semaphore::MAX_PERMITS)));
     let (work, _) = work_routes().split_for_parts();
     let work = work.layer(middleware::from_fn_with_state(places, admit));

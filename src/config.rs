@@ -16,6 +16,8 @@ const MOST_THREADS: u64 = 1024;
 const DAY_SECONDS: u64 = 86_400;
 /// Most of anything counted or measured in bytes.
 const MOST_THINGS: u64 = 1 << 40;
+/// Most values of one label among the metrics.
+const MOST_SERIES: u64 = 100_000;
 const VARIABLE_PREFIX: &str = "TAILCAST_";
 
 /// All settings.
@@ -35,6 +37,8 @@ pub struct Config {
     pub jobs: JobsConfig,
     /// Limits of one request's content.
     pub limits: LimitsConfig,
+    /// What is told of forecasts among the metrics.
+    pub metrics: MetricsConfig,
     /// Logging.
     pub log: LogConfig,
 }
@@ -65,6 +69,12 @@ pub struct HttpConfig {
     pub body_timeout_seconds: u64,
     /// Requests served at the same time.
     pub max_in_flight: usize,
+    /// Streams of events open at the same time.
+    pub max_streams: usize,
+    /// Time between two signs of life on a stream of events, seconds.
+    pub stream_keep_alive_seconds: u64,
+    /// Memory for copies of latest forecasts, bytes.
+    pub polled_bytes: usize,
     /// Time to finish after a stop signal, seconds.
     pub shutdown_grace_seconds: u64,
 }
@@ -78,6 +88,11 @@ impl HttpConfig {
     /// Longest time to send a body.
     pub fn body_timeout(&self) -> Duration {
         Duration::from_secs(self.body_timeout_seconds)
+    }
+
+    /// Time between two signs of life on a stream of events.
+    pub fn stream_keep_alive(&self) -> Duration {
+        Duration::from_secs(self.stream_keep_alive_seconds)
     }
 
     /// Time to finish after a stop signal.
@@ -158,6 +173,18 @@ pub struct LimitsConfig {
     pub network_rows: usize,
     /// Thresholds times dates in one forecast; times origins in one backtest.
     pub cells: usize,
+}
+
+/// What is told of forecasts among the metrics.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Deserialize)]
+#[serde(deny_unknown_fields)]
+pub struct MetricsConfig {
+    /// Networks.
+    pub networks: u32,
+    /// Thresholds of each.
+    pub thresholds: usize,
+    /// Limits of each.
+    pub limits: usize,
 }
 
 /// Logging.
@@ -282,7 +309,7 @@ impl Config {
 
     fn checked(self) -> Result<Self, SettingsError> {
         let (database, http, compute, limits) = (&self.database, &self.http, &self.compute, &self.limits);
-        let jobs = &self.jobs;
+        let (jobs, metrics) = (&self.jobs, &self.metrics);
         let ranges = [
             ("database.readers", u64::from(database.readers), 1, MOST_THREADS),
             ("database.busy_timeout_ms", database.busy_timeout_ms, 0, DAY_SECONDS * 1000),
@@ -290,6 +317,9 @@ impl Config {
             ("http.head_timeout_seconds", http.head_timeout_seconds, 1, DAY_SECONDS),
             ("http.body_timeout_seconds", http.body_timeout_seconds, 1, DAY_SECONDS),
             ("http.max_in_flight", http.max_in_flight as u64, 1, MOST_THINGS),
+            ("http.max_streams", http.max_streams as u64, 0, MOST_THINGS),
+            ("http.stream_keep_alive_seconds", http.stream_keep_alive_seconds, 1, DAY_SECONDS),
+            ("http.polled_bytes", http.polled_bytes as u64, 0, MOST_THINGS),
             ("http.shutdown_grace_seconds", http.shutdown_grace_seconds, 0, DAY_SECONDS),
             ("compute.workers", compute.workers as u64, 0, MOST_THREADS),
             ("compute.queue", compute.queue as u64, 0, MOST_THINGS),
@@ -302,6 +332,9 @@ impl Config {
             ("jobs.link_list_bytes", jobs.link_list_bytes, 1, MOST_THINGS),
             ("jobs.link_list_seconds", jobs.link_list_seconds, 1, DAY_SECONDS),
             ("jobs.link_list_nodes", jobs.link_list_nodes, 1, MOST_THINGS),
+            ("metrics.networks", u64::from(metrics.networks), 0, MOST_SERIES),
+            ("metrics.thresholds", metrics.thresholds as u64, 0, MOST_SERIES),
+            ("metrics.limits", metrics.limits as u64, 0, MOST_SERIES),
             ("limits.degree_counts", limits.degree_counts as u64, 1, MOST_THINGS),
             ("limits.transitions", limits.transitions as u64, 1, MOST_THINGS),
             ("limits.link_events", limits.link_events as u64, 1, MOST_THINGS),

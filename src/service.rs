@@ -8,11 +8,13 @@ mod compute;
 mod cpu;
 mod error;
 mod evidence;
+mod gauges;
 mod inputs;
 mod jobs;
 mod latest;
 mod network;
 mod networks;
+mod news;
 mod numbers;
 mod plan;
 mod questions;
@@ -27,16 +29,17 @@ use tracing::Instrument;
 use crate::config::{Config, DatabaseConfig};
 use crate::model::MAX_SNAPSHOTS;
 use crate::store::{Caps, Store, StoreError};
+use gauges::Briefs;
 use jobs::Board;
 
 pub use crate::evaluate::OriginRequest;
 pub use crate::fit::{FitRequest, Fixed, Model, ModelChoice, Rung};
 pub use crate::ingest::FaultPolicy;
 pub use crate::store::{
-    BacktestSummary, Clash, JobFilter, JobKind, JobState, KeyClaim, LatestForecast, NetworkSummary, NewNetwork,
-    QuestionKind, RefreshState, RefreshStatus, RunFilter, RunKind, RunSummary, SnapshotSummary, StoredBacktest,
-    StoredJob, StoredLinkEvents, StoredNetwork, StoredQuestion, StoredRun, StoredSnapshot, StoredTransitions,
-    TransitionsSummary, Upload,
+    BacktestSummary, Clash, JobFilter, JobKind, JobState, KeyClaim, LatestForecast, LatestStamp, NetworkSummary,
+    NewNetwork, QuestionKind, RefreshState, RefreshStatus, RunFilter, RunKind, RunSummary, SnapshotSummary,
+    StoredBacktest, StoredJob, StoredLinkEvents, StoredNetwork, StoredQuestion, StoredRun, StoredSnapshot,
+    StoredTransitions, TransitionsSummary, Upload,
 };
 pub use accounts::{DateOutcome, IntervalOutcome, OutcomeAnswer, TailOutcome};
 pub use accuracy::{
@@ -60,12 +63,15 @@ pub use compute::{Question, answer_at_once};
 pub use cpu::CpuPool;
 pub use error::{ServiceError, Thing};
 pub use evidence::{NetworkEvidence, RunOrigin, Written};
+pub use gauges::{ForecastGauges, GaugeCaps, LeftOut, LimitGauges, NetworkGauges, TailGauges};
 pub use inputs::{DEFAULT_RISK, DEFAULT_SEED, FitInputs, ForecastInputs, Label, MAX_SEED, TextFault, sha256_hex};
 pub use jobs::{
     BacktestResult, JobFailure, JobFault, JobOutcome, JobProblem, JobView, LinkListResult, LinkListTask, PassedOver,
     RefreshResult, SkippedLines,
 };
+pub use latest::PolledForecast;
 pub use network::{Description, NameFault, NetworkName, NetworkSettings, kind_name};
+pub use news::{LimitNews, NetworkNews, NewsKind, NewsPlace};
 pub use numbers::{Count, Real, date_text};
 pub use questions::{KeptLimitAnswer, LimitStanding, LimitState, QuestionName};
 
@@ -79,6 +85,8 @@ pub struct Service {
     cpu: CpuPool,
     caps: Caps,
     jobs: Board,
+    /// What the gauges tell of forecasts, read once each.
+    briefs: Briefs,
     /// Stored evidence may be large: no more runs hold some at once than can be computed at once.
     evidence_places: Arc<Semaphore>,
 }
@@ -96,7 +104,7 @@ impl Service {
         let caps = Caps { dates: MAX_SNAPSHOTS as u64, rows: config.limits.network_rows as u64 };
         let cpu = CpuPool::new(&config.compute);
         let evidence_places = Arc::new(Semaphore::new(cpu.workers()));
-        Ok(Self { store, cpu, caps, jobs: Board::new(config.jobs), evidence_places })
+        Ok(Self { store, cpu, caps, jobs: Board::new(config.jobs), briefs: Briefs::default(), evidence_places })
     }
 
     /// Brings the database's tables up to date and closes it.

@@ -14,6 +14,7 @@ mod jobs;
 mod latest;
 mod link_events;
 mod networks;
+mod news;
 mod questions;
 mod refreshes;
 mod runs;
@@ -23,17 +24,20 @@ mod transitions;
 mod writes;
 
 use std::path::PathBuf;
+use std::sync::Arc;
 
 use file::DatabaseFile;
 use sqlx::SqlitePool;
+use tokio::sync::watch;
 
 pub use accounts::{AccountKey, IssuedRun, NewAccount, StoredAccount};
 pub use backtests::{BacktestSummary, BacktestWrite, NewBacktest, StoredBacktest};
 pub use derived::DerivedEvidence;
 pub use jobs::{CalledOff, JobFilter, JobKind, JobState, StoredJob};
-pub use latest::LatestForecast;
+pub use latest::{LatestForecast, LatestLine, LatestStamp, LatestWithCadence};
 pub use link_events::StoredLinkEvents;
 pub use networks::{NetworkSummary, NewNetwork, StoredEvidence, StoredNetwork};
+pub use news::{IssuedForecast, RefreshNews};
 pub use questions::{QuestionKind, StoredQuestion};
 pub use refreshes::{Change, RefreshEnd, RefreshEnded, RefreshState, RefreshStatus};
 pub use runs::{Inserted, KeyClaim, NewRun, RunFilter, RunKind, RunSummary, StoredOrigin, StoredRun};
@@ -55,6 +59,8 @@ pub struct Store {
     write: SqlitePool,
     read: SqlitePool,
     file: DatabaseFile,
+    /// Writes of this process that have ended.
+    commits: Arc<watch::Sender<u64>>,
 }
 
 /// Why the database did not do as asked.

@@ -76,6 +76,8 @@ pub enum ApiError {
     },
     /// As many requests as configured are being served.
     Full,
+    /// As many streams of events as configured are open.
+    TooManyStreams,
     /// A use case failed.
     Service(ServiceError),
     /// An invariant of this layer does not hold.
@@ -155,6 +157,11 @@ impl ApiError {
             Self::Full => {
                 let detail = "As many requests as this service takes at once are being served; try again shortly.";
                 Problem::new(S::SERVICE_UNAVAILABLE, "overloaded", detail).retry_after(BUSY_RETRY)
+            }
+            Self::TooManyStreams => {
+                let detail = "As many streams of events as this service keeps open are open; read the thing itself now and then, \
+                              try again later, or raise http.max_streams.";
+                Problem::new(S::SERVICE_UNAVAILABLE, "too_many_streams", detail).retry_after(MENDING_RETRY)
             }
             Self::Service(error) => service_problem(error),
             Self::Broken(cause) => broken(cause),

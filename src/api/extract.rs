@@ -10,7 +10,7 @@ mod patience;
 mod place;
 
 pub use body::{JsonBody, OptionalJsonBody, RowsBody, read_json};
-pub use format::{ResultFormat, prefers_events};
+pub use format::{ResultFormat, accepts_events, prefers_events};
 pub use key::IdempotencyKey;
 pub use link_list::LinkListBody;
 pub use listing::Listing;

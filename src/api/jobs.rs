@@ -194,7 +194,7 @@ async fn get_job(
     let (id, events) = (job_id(&id)?, prefers_events(&headers)?);
     let view = state.service.job(id).await?;
     if events {
-        return Ok(events::stream(state.service, view, &headers));
+        return events::stream(state.service, &state.streams, view, &headers);
     }
     let text = serde_json::to_string(&JobAnswer::from(view)).map_err(|error| ApiError::Broken(error.to_string()))?;
     let validator = Validator { tag: &sha256_hex(text.as_bytes()), modified: None };

@@ -4,6 +4,7 @@ mod accuracy;
 mod answers;
 mod backtests;
 mod comparison;
+mod events;
 mod latest;
 mod limits;
 mod link_events;
@@ -30,6 +31,8 @@ use super::{ApiError, AppState, Problem, examples};
 use crate::service::NetworkName;
 use answers::{NetworkAnswer, NetworkLine, NetworkPage, StoredNetworkAnswer};
 
+pub use latest::{ROUTE as LATEST_ROUTE, polled_network};
+
 const PATH: &str = "/v1/networks";
 
 /// The routes of this resource and of those under it.
@@ -42,6 +45,7 @@ pub fn routes() -> OpenApiRouter<AppState> {
         .merge(link_events::routes())
         .merge(links::routes())
         .merge(latest::routes())
+        .merge(events::routes())
         .merge(accuracy::routes())
         .merge(runs::routes())
         .merge(backtests::routes())

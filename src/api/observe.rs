@@ -1,14 +1,16 @@
 //! The outermost layer: request id, span, metrics, and problem documents for whatever went wrong inside.
 
-use std::time::Instant;
+mod tally;
+
+use std::time::{Instant, SystemTime, UNIX_EPOCH};
 
 use axum::extract::{MatchedPath, Request};
 use axum::http::{HeaderMap, HeaderName, HeaderValue, Method, StatusCode, header};
 use axum::middleware::Next;
 use axum::response::Response;
-use metrics::{counter, histogram};
 use tracing::{Instrument, Span, field, info_span};
-use uuid::Uuid;
+use uuid::Builder;
+use uuid::fmt::Hyphenated;
 
 use super::problem::{Pending, Problem};
 
@@ -22,27 +24,53 @@ pub const PROBLEM_JSON: HeaderValue = HeaderValue::from_static("application/prob
 /// Wraps every request.
 pub async fn observe(request: Request, next: Next) -> Response {
     let started = Instant::now();
-    let id = request_id(request.headers());
-    let method = method_label(request.method());
     // The matched path, never the raw one: a label must not take whatever a client types.
-    let route = request.extensions().get::<MatchedPath>().map_or("unmatched", MatchedPath::as_str).to_owned();
-    let path = request.uri().path().to_owned();
-    let span = request_span(&id, method, &path, request.headers());
-    let mut response = next.run(request).instrument(span.clone()).await;
-    let _entered = span.enter();
-    span.record("status", response.status().as_u16());
-    complete_problem(&mut response, &id, &path);
-    let headers = response.headers_mut();
-    if let Ok(value) = HeaderValue::from_str(&id) {
-        headers.insert(REQUEST_ID, value);
-    }
-    headers.insert(header::X_CONTENT_TYPE_OPTIONS, HeaderValue::from_static("nosniff"));
-    let status = response.status().as_u16().to_string();
-    counter!("tailcast_http_requests_total", "method" => method, "route" => route.clone(), "status" => status)
-        .increment(1);
-    histogram!("tailcast_http_request_seconds", "method" => method, "route" => route).record(started.elapsed());
-    tracing::info!(elapsed_us = started.elapsed().as_micros(), "served");
+    let route = request.extensions().get::<MatchedPath>().cloned();
+    let route = route.as_ref().map_or("unmatched", MatchedPath::as_str);
+    let uri = request.uri().clone();
+    let observation = Observation::begin(started, request.method(), route, uri.path(), request.headers());
+    let mut response = next.run(request).instrument(observation.span.clone()).await;
+    observation.finish(&mut response);
     response
+}
+
+/// A request that is being answered.
+pub struct Observation<'a> {
+    started: Instant,
+    id: HeaderValue,
+    method: &'static str,
+    route: &'a str,
+    path: &'a str,
+    span: Span,
+}
+
+impl<'a> Observation<'a> {
+    /// A request that came at `started`.
+    pub fn begin(started: Instant, method: &Method, route: &'a str, path: &'a str, headers: &HeaderMap) -> Self {
+        let (id, method) = (request_id(headers), method_label(method));
+        let span = request_span(id_text(&id), method, path, headers);
+        Self { started, id, method, route, path, span }
+    }
+
+    /// Completes the answer, counts it and writes it to the log.
+    pub fn finish(self, response: &mut Response) {
+        let _entered = self.span.enter();
+        let status = response.status().as_u16();
+        self.span.record("status", status);
+        complete_problem(response, id_text(&self.id), self.path);
+        let elapsed = self.started.elapsed();
+        let headers = response.headers_mut();
+        headers.insert(REQUEST_ID, self.id);
+        headers.insert(header::X_CONTENT_TYPE_OPTIONS, HeaderValue::from_static("nosniff"));
+        tally::count((self.method, status), self.route, elapsed);
+        tracing::info!(elapsed_us = elapsed.as_micros(), "served");
+    }
+}
+
+/// Makes room in headers that are kept for what every answer gets: a map that grows anew each time costs more than setting it.
+pub fn leave_room(headers: &mut HeaderMap) {
+    headers.insert(REQUEST_ID, HeaderValue::from_static(""));
+    headers.insert(header::X_CONTENT_TYPE_OPTIONS, HeaderValue::from_static("nosniff"));
 }
 
 /// Turns an error of any layer into a problem document, and logs what the client is not told.
@@ -72,13 +100,28 @@ fn complete_problem(response: &mut Response, id: &str, path: &str) {
 }
 
 /// The client's id when it is short and plain, a new one otherwise.
-fn request_id(headers: &HeaderMap) -> String {
+fn request_id(headers: &HeaderMap) -> HeaderValue {
     let plain = |byte: u8| byte.is_ascii_alphanumeric() || b"-_.:".contains(&byte);
-    let given = headers.get(REQUEST_ID).and_then(|value| value.to_str().ok());
-    match given {
-        Some(id) if (1..=MAX_REQUEST_ID_CHARS).contains(&id.len()) && id.bytes().all(plain) => id.to_owned(),
-        _ => Uuid::now_v7().to_string(),
+    match headers.get(REQUEST_ID) {
+        Some(id) if (1..=MAX_REQUEST_ID_CHARS).contains(&id.len()) && id.as_bytes().iter().all(|&byte| plain(byte)) => {
+            id.clone()
+        }
+        _ => new_id(),
     }
+}
+
+/// A version 7 UUID, its random part from the thread's generator: asking the system each time costs more than the rest of it.
+fn new_id() -> HeaderValue {
+    let millis = SystemTime::now().duration_since(UNIX_EPOCH).unwrap_or_default().as_millis();
+    // A time in milliseconds takes 48 bits of an id.
+    let id = Builder::from_unix_timestamp_millis(millis as u64, &rand::random()).into_uuid();
+    let mut text = [0; Hyphenated::LENGTH];
+    HeaderValue::from_str(id.hyphenated().encode_lower(&mut text)).unwrap_or(HeaderValue::from_static("none"))
+}
+
+/// An id as text: it is plain.
+fn id_text(id: &HeaderValue) -> &str {
+    id.to_str().unwrap_or_default()
 }
 
 fn request_span(id: &str, method: &'static str, path: &str, headers: &HeaderMap) -> Span {
@@ -151,10 +194,13 @@ mod tests {
 
     #[test]
     fn a_request_id_is_kept_when_plain() {
+        let request_id = |headers: &HeaderMap| id_text(&request_id(headers)).to_owned();
         let with = |id: &str| HeaderMap::from_iter([(REQUEST_ID, HeaderValue::from_str(id).unwrap())]);
         assert_eq!(request_id(&with("batch-7.a")), "batch-7.a");
         assert_ne!(request_id(&with("a b")), "a b");
         assert_ne!(request_id(&with(&"x".repeat(200))), "x".repeat(200));
-        assert_eq!(request_id(&HeaderMap::new()).len(), 36);
+        let made = request_id(&HeaderMap::new());
+        assert_eq!(uuid::Uuid::parse_str(&made).unwrap().get_version_num(), 7);
+        assert_ne!(request_id(&HeaderMap::new()), made);
     }
 }

@@ -3,11 +3,13 @@
 use axum::extract::State;
 use axum::http::{HeaderValue, header};
 use axum::response::{IntoResponse, Response};
+use jiff::Timestamp;
 use utoipa_axum::router::OpenApiRouter;
 use utoipa_axum::routes;
 
 use super::problem::Problem;
 use super::{ApiError, AppState};
+use crate::report::gauges_text;
 
 /// The routes of this resource.
 pub fn routes() -> OpenApiRouter<AppState> {
@@ -36,13 +38,18 @@ async fn readyz(State(state): State<AppState>) -> Result<Response, ApiError> {
 
 /// Metrics
 ///
-/// Prometheus text exposition.
+/// Prometheus text exposition: of the process, and of each network's latest forecast and limits, within the bounds of the settings
+/// under `metrics`. `tailcast_forecast_gauges_up` is 0 when the database could not be read, and those of forecasts are missing.
 #[utoipa::path(get, path = "/metrics", tag = "operation", responses(
     (status = 200, description = "The metrics", body = String, content_type = "text/plain; version=0.0.4"),
 ))]
 async fn metrics(State(state): State<AppState>) -> Response {
+    let gauges = state.service.forecast_gauges(state.gauges, Timestamp::now()).await;
+    if let Err(error) = &gauges {
+        tracing::warn!(%error, "the metrics are told without those of forecasts");
+    }
     let mut response = plain("");
-    *response.body_mut() = state.metrics.render().into();
+    *response.body_mut() = (state.metrics.render() + &gauges_text(gauges.ok().as_ref())).into();
     let kind = HeaderValue::from_static("text/plain; version=0.0.4; charset=utf-8");
     response.headers_mut().insert(header::CONTENT_TYPE, kind);
     response

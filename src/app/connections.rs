@@ -4,7 +4,6 @@ use std::sync::Arc;
 use std::sync::atomic::{AtomicUsize, Ordering};
 use std::time::Duration;
 
-use axum::Router;
 use axum::serve::Listener;
 use hyper::body::Incoming;
 use hyper::server::conn::http1;
@@ -15,18 +14,20 @@ use tokio::net::{TcpListener, TcpStream};
 use tokio::sync::watch;
 use tokio::task::JoinSet;
 
+use crate::api::Front;
+
 /// How long a connection without a request in work is kept after the stop: the time to flush its last answer.
 const FLUSH: Duration = Duration::from_millis(500);
 
 /// Serves until told to stop; returns when every connection has ended.
-pub async fn serve(mut listener: TcpListener, router: Router, head_timeout: Duration, mut stop: watch::Receiver<bool>) {
+pub async fn serve(mut listener: TcpListener, front: Front, head_timeout: Duration, mut stop: watch::Receiver<bool>) {
     let mut open = JoinSet::new();
     loop {
         tokio::select! {
             _ = stopped(&mut stop) => break,
             // Waits and goes on when the system has no more connections to give.
             (stream, _) = Listener::accept(&mut listener) => {
-                open.spawn(connection(stream, router.clone(), head_timeout, stop.clone()));
+                open.spawn(connection(stream, front.clone(), head_timeout, stop.clone()));
             }
             Some(_) = open.join_next() => {}
         }
@@ -37,16 +38,26 @@ pub async fn serve(mut listener: TcpListener, router: Router, head_timeout: Dura
 
 /// Serves one connection. After the stop its request in work is finished; a request that has not come in full by then
 /// is not waited for.
-async fn connection(stream: TcpStream, router: Router, head_timeout: Duration, mut stop: watch::Receiver<bool>) {
+async fn connection(stream: TcpStream, front: Front, head_timeout: Duration, mut stop: watch::Receiver<bool>) {
     let in_work = Arc::new(AtomicUsize::new(0));
     let counted = in_work.clone();
     let service = service_fn(move |request: hyper::Request<Incoming>| {
-        counted.fetch_add(1, Ordering::Relaxed);
-        let (answer, counted) = (TowerToHyperService::new(router.clone()).call(request), counted.clone());
+        let work = match front.at_once(request.method(), request.uri(), request.headers()) {
+            Some(answer) => Err(answer),
+            None => {
+                counted.fetch_add(1, Ordering::Relaxed);
+                Ok((TowerToHyperService::new(front.router()).call(request), counted.clone()))
+            }
+        };
         async move {
-            let answer = answer.await;
-            counted.fetch_sub(1, Ordering::Relaxed);
-            answer
+            match work {
+                Err(answer) => Ok(answer),
+                Ok((answer, counted)) => {
+                    let answer = answer.await;
+                    counted.fetch_sub(1, Ordering::Relaxed);
+                    answer
+                }
+            }
         }
     });
     let serving = http1::Builder::new()

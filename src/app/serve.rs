@@ -1,7 +1,6 @@
 //! `serve`: listen, answer, stop in good order.
 
 use std::net::SocketAddr;
-use std::sync::Arc;
 use std::time::Duration;
 
 use tokio::net::TcpListener;
@@ -11,7 +10,7 @@ use tokio::task::JoinHandle;
 use tokio::time::timeout;
 
 use super::{Stop, connections};
-use crate::api::{AppState, router};
+use crate::api::{AppState, Front};
 use crate::config::Config;
 use crate::service::Service;
 use crate::telemetry;
@@ -66,10 +65,9 @@ pub async fn start(config: Config) -> Result<Running, Stop> {
     }
     let upkeep = tokio::spawn(telemetry::keep_metrics_small(metrics.clone()));
     let (grace, head_timeout) = (config.http.shutdown_grace(), config.http.head_timeout());
-    let (limits, jobs) = (config.limits, config.jobs);
-    let state = AppState { service: service.clone(), http: Arc::new(config.http), limits, jobs, metrics };
+    let front = Front::new(AppState::new(service.clone(), &config, metrics));
     let (stop, stopped) = watch::channel(false);
-    let server = tokio::spawn(connections::serve(listener, router(state), head_timeout, stopped));
+    let server = tokio::spawn(connections::serve(listener, front, head_timeout, stopped));
     tracing::info!(%address, "serving");
     if !address.ip().is_loopback() {
         tracing::warn!("reachable from other machines, and there is no access control: put a gateway in front");

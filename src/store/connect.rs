@@ -1,11 +1,13 @@
 //! The one way to a database, for the service and for tests alike.
 
 use std::str::FromStr;
+use std::sync::Arc;
 use std::time::Duration;
 
 use sqlx::Connection;
 use sqlx::migrate::Migrator;
 use sqlx::sqlite::{SqliteConnectOptions, SqliteJournalMode, SqlitePoolOptions, SqliteSynchronous};
+use tokio::sync::watch;
 use tokio::time::timeout;
 
 use super::file::DatabaseFile;
@@ -42,7 +44,7 @@ impl Store {
         let write = pool(1).connect_with(writing).await.map_err(|error| address_fault(error.to_string()))?;
         // Opened after the writer, which creates the file and its write-ahead log.
         let read = pool(config.readers).connect_with(options.create_if_missing(false).read_only(true)).await?;
-        Ok(Self { write, read, file: DatabaseFile::at(&path)? })
+        Ok(Self { write, read, file: DatabaseFile::at(&path)?, commits: Arc::new(watch::Sender::new(0)) })
     }
 
     /// Brings the tables up to date.

@@ -4,13 +4,17 @@ use jiff::Timestamp;
 use sqlx::{FromRow, SqliteConnection};
 use uuid::Uuid;
 
-use super::columns::{time, uuid};
+use super::columns::{date, time, unsigned, uuid};
 use super::refreshes::RefreshState;
 use super::runs::{NewRun, StoredRun};
 use super::{Store, StoreError};
 
 /// The read of the latest forecast: by the table's key, one row and nothing else.
 const FIND: &str = "SELECT run_id, state, job, created_at, tag, document FROM latest_forecasts WHERE network = $1";
+
+/// Of the same row, what stands before the forecast.
+const STAMP: &str = "SELECT run_id, state, job, revision FROM latest_forecasts JOIN networks ON name = network \
+                     WHERE network = $1";
 
 /// A network's latest forecast.
 #[derive(Debug, Clone, PartialEq, Eq)]
@@ -21,6 +25,41 @@ pub struct LatestForecast {
     pub state: RefreshState,
     /// The refresh that says so.
     pub job: Uuid,
+}
+
+/// A network's latest forecast and what tells how often it changes, at one moment.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct LatestWithCadence {
+    /// The forecast.
+    pub forecast: LatestForecast,
+    /// What tells this state from another.
+    pub stamp: LatestStamp,
+    /// Dates of the newest snapshots, newest first, at most four.
+    pub newest: Vec<Timestamp>,
+    /// The network's plan, JSON.
+    pub plan: Option<String>,
+}
+
+/// What tells one state of a network's latest forecast from another: run, state, refresh, and the network's revision.
+#[derive(Debug, Clone, PartialEq, Eq, FromRow)]
+pub struct LatestStamp {
+    run_id: String,
+    state: String,
+    job: String,
+    revision: i64,
+}
+
+/// A network's latest forecast but for the forecast.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct LatestLine {
+    /// The network.
+    pub network: String,
+    /// The run.
+    pub run: Uuid,
+    /// How it stands to what is stored of the network.
+    pub state: RefreshState,
+    /// When it was made.
+    pub created_at: Timestamp,
 }
 
 #[derive(FromRow)]
@@ -42,6 +81,61 @@ impl Store {
         self.file.check()?;
         let row: Option<LatestRow> = sqlx::query_as(FIND).bind(network).fetch_optional(&self.read).await?;
         row.map(LatestForecast::try_from).transpose()
+    }
+
+    /// The latest forecast of a network, if there is one, with what tells how often it changes.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn find_latest_with_cadence(&self, network: &str) -> Result<Option<LatestWithCadence>, StoreError> {
+        self.file.check()?;
+        // One transaction reads one state, whatever is written meanwhile.
+        let mut transaction = self.read.begin().await?;
+        let row: Option<LatestRow> = sqlx::query_as(FIND).bind(network).fetch_optional(&mut *transaction).await?;
+        let stamp: Option<LatestStamp> = sqlx::query_as(STAMP).bind(network).fetch_optional(&mut *transaction).await?;
+        let (Some(row), Some(stamp)) = (row, stamp) else { return Ok(None) };
+        let newest: Vec<String> =
+            sqlx::query_scalar("SELECT as_of FROM snapshots WHERE network = $1 ORDER BY as_of DESC LIMIT 4")
+                .bind(network)
+                .fetch_all(&mut *transaction)
+                .await?;
+        let plan: Option<String> = sqlx::query_scalar("SELECT forecast_plan FROM networks WHERE name = $1")
+            .bind(network)
+            .fetch_one(&mut *transaction)
+            .await?;
+        let newest = newest.iter().map(|text| date(text)).collect::<Result<_, _>>()?;
+        Ok(Some(LatestWithCadence { forecast: row.try_into()?, stamp, newest, plan }))
+    }
+
+    /// What tells the present state of a network's latest forecast from another; none when there is none. The forecast itself
+    /// is not read.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn latest_stamp(&self, network: &str) -> Result<Option<LatestStamp>, StoreError> {
+        self.file.check()?;
+        Ok(sqlx::query_as(STAMP).bind(network).fetch_optional(&self.read).await?)
+    }
+
+    /// Latest forecasts in the order of their networks' names, at most `limit`, and how many there are in all. No forecast itself
+    /// is read.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn list_latest(&self, limit: u32) -> Result<(Vec<LatestLine>, u64), StoreError> {
+        self.file.check()?;
+        let mut transaction = self.read.begin().await?;
+        let rows: Vec<(String, String, String, i64)> =
+            sqlx::query_as("SELECT network, run_id, state, created_at FROM latest_forecasts ORDER BY network LIMIT $1")
+                .bind(i64::from(limit))
+                .fetch_all(&mut *transaction)
+                .await?;
+        let all: i64 = sqlx::query_scalar("SELECT count(*) FROM latest_forecasts").fetch_one(&mut *transaction).await?;
+        let line = |(network, run, state, created_at): (String, String, String, i64)| {
+            let (run, state) = (uuid(&run)?, RefreshState::named(&state)?);
+            Ok(LatestLine { network, run, state, created_at: time(created_at)? })
+        };
+        Ok((rows.into_iter().map(line).collect::<Result<_, StoreError>>()?, unsigned("count", all)?))
     }
 }
 

@@ -256,12 +256,13 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn delete_run(&self, kind: RunKind, id: Uuid) -> Result<bool, StoreError> {
-        self.file.check()?;
+        let mut transaction = self.begin().await?;
         let done = sqlx::query("DELETE FROM runs WHERE id = $1 AND kind = $2")
             .bind(id.to_string())
             .bind(kind.as_str())
-            .execute(&self.write)
+            .execute(&mut *transaction)
             .await?;
+        self.commit(transaction).await?;
         Ok(done.rows_affected() > 0)
     }
 }

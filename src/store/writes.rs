@@ -2,6 +2,7 @@
 
 use jiff::Timestamp;
 use sqlx::{Sqlite, SqliteConnection, Transaction};
+use tokio::sync::watch;
 use uuid::Uuid;
 
 use super::columns::unsigned;
@@ -110,9 +111,18 @@ impl Store {
 
     /// Ends a write: on disk when this returns.
     pub(super) async fn commit(&self, transaction: Transaction<'static, Sqlite>) -> Result<(), StoreError> {
-        transaction.commit().await?;
+        let committed = transaction.commit().await;
+        // Whatever came of it: who holds a copy of what is stored looks again.
+        self.commits.send_modify(|count| *count += 1);
+        committed?;
         // The file may have gone in between.
         self.file.check()
+    }
+
+    /// Counts the writes of this process, each before it is acknowledged: what was read at one count is what is stored as long
+    /// as the count stands, but for what other processes write.
+    pub fn commits(&self) -> watch::Receiver<u64> {
+        self.commits.subscribe()
     }
 }
 

@@ -156,7 +156,7 @@ async fn a_landing_snapshot_makes_the_latest_forecast_anew() {
     assert_eq!(first.json()["forecast"][0]["date"], "2026-06-02");
     let kept = service.get(first.header("content-location")).await.expect(200);
     assert_eq!((&kept.text, kept.header("etag")), (&first.text, first.header("etag")));
-    assert_eq!(first.header("cache-control"), "private, no-cache");
+    assert_eq!(first.header("cache-control"), "private, max-age=3600, must-revalidate", "a month's hundredth is more");
     assert!(!first.header("last-modified").is_empty());
     let unchanged = service.get_with(LATEST, "if-none-match", first.header("etag")).await.expect(304);
     assert_eq!(unchanged.header("forecast-state"), "current");

@@ -82,6 +82,11 @@ pub fn prefers_events(headers: &HeaderMap) -> Result<bool, ApiError> {
         .ok_or(ApiError::NotAcceptable { offered: "application/json and text/event-stream" })
 }
 
+/// Checks that the client takes a stream of events.
+pub fn accepts_events(headers: &HeaderMap) -> Result<(), ApiError> {
+    best(headers, &[((), ("text", "event-stream"))]).ok_or(ApiError::NotAcceptable { offered: "text/event-stream" })
+}
+
 /// What the client likes best of what is on offer, the default first; none when it takes nothing of it.
 fn best<T: Copy>(headers: &HeaderMap, offers: &[(T, (&str, &str))]) -> Option<T> {
     let ranges: Vec<Range> = headers

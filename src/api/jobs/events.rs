@@ -4,13 +4,15 @@ use std::convert::Infallible;
 use std::time::Duration;
 
 use axum::http::{HeaderMap, StatusCode};
-use axum::response::sse::{Event, KeepAlive, Sse};
+use axum::response::sse::Event;
 use axum::response::{IntoResponse, Response};
 use futures_util::stream;
 use tokio::sync::watch;
 use tokio::time::sleep;
 
 use super::JobAnswer;
+use crate::api::ApiError;
+use crate::api::streams::Streams;
 use crate::service::{JobView, Service};
 
 /// Shortest time between two events.
@@ -31,15 +33,19 @@ enum Next {
 }
 
 /// The stream of a job that stands as `view` says.
-pub fn stream(service: Service, view: JobView, headers: &HeaderMap) -> Response {
+///
+/// # Errors
+/// When as many streams as configured are open.
+pub fn stream(service: Service, streams: &Streams, view: JobView, headers: &HeaderMap) -> Result<Response, ApiError> {
     let read_before = headers.get("last-event-id").is_some_and(|id| id.as_bytes() == END.as_bytes());
     if read_before && !view.job.state.is_live() {
         // The answer that tells a client not to connect again.
-        return StatusCode::NO_CONTENT.into_response();
+        return Ok(StatusCode::NO_CONTENT.into_response());
     }
+    let place = streams.place()?;
     let (id, pulse) = (view.job.id, service.job_pulse(view.job.id));
-    let start = (service, pulse, Next::Tell(Box::new(view)));
-    let events = stream::unfold(start, move |(service, mut pulse, next)| async move {
+    let start = (service, place, pulse, Next::Tell(Box::new(view)));
+    let events = stream::unfold(start, move |(service, place, mut pulse, next)| async move {
         let view = match next {
             Next::Tell(view) => *view,
             Next::End => return None,
@@ -53,9 +59,9 @@ pub fn stream(service: Service, view: JobView, headers: &HeaderMap) -> Response 
         let live = view.job.state.is_live();
         let event = Event::default().json_data(JobAnswer::from(view)).ok()?;
         let event = if live { event } else { event.id(END) };
-        Some((Ok::<_, Infallible>(event), (service, pulse, if live { Next::Wait } else { Next::End })))
+        Some((Ok::<_, Infallible>(event), (service, place, pulse, if live { Next::Wait } else { Next::End })))
     });
-    Sse::new(events).keep_alive(KeepAlive::default()).into_response()
+    Ok(streams.answer(events))
 }
 
 /// Returns when the job has come on or ended.

@@ -1,17 +1,19 @@
 //! `/v1/networks/{name}/forecasts/latest`
 
 use axum::extract::{Path, State};
-use axum::http::{HeaderMap, HeaderValue, header};
+use axum::http::HeaderMap;
 use axum::response::Response;
 use utoipa_axum::router::OpenApiRouter;
 use utoipa_axum::routes;
 
 use crate::api::extract::{ForecastForm, ResultFormat, network_name};
 use crate::api::refusals::{FormRefusals, Refusals};
-use crate::api::representation::header_value;
-use crate::api::{ApiError, AppState, forecasts, jobs, runs};
+use crate::api::{ApiError, AppState};
 use crate::report::ForecastPart;
 use crate::service::ForecastRun;
+
+/// Where a network's latest forecast is.
+pub const ROUTE: &str = "/v1/networks/{name}/forecasts/latest";
 
 /// The routes of this resource.
 pub fn routes() -> OpenApiRouter<AppState> {
@@ -37,6 +39,8 @@ pub fn routes() -> OpenApiRouter<AppState> {
         (status = 200, description = "The latest forecast", headers(
             ("ETag" = String, description = "Strong validator of this form of the run"),
             ("Last-Modified" = String, description = "When the run was made"),
+            ("Cache-Control" = String, description = "For how long it may be used without asking: a hundredth of the time between the \
+                network's newest snapshots (or else of the plan's `every`), at most an hour; not at all while `refreshing`"),
             ("Content-Location" = String, description = "Where this very run stays"),
             ("Forecast-State" = String, description = "`current`: it stands on all that is stored; `refreshing`: another is being \
                 made; `outdated`: no newer one could be made"),
@@ -55,13 +59,30 @@ async fn get_latest_forecast(
     form: ForecastForm,
     headers: HeaderMap,
 ) -> Result<Response, ApiError> {
-    let latest = state.service.latest_forecast(&network_name(&name)?).await?;
-    let place = header_value(&format!("{}/{}", forecasts::PATH, latest.run.id))?;
-    let refresh = header_value(&format!("<{}/{}>; rel=\"describedby\"", jobs::PATH, latest.job))?;
-    let mut response = runs::found(latest.run, form, &headers)?;
-    let told = response.headers_mut();
-    told.insert(header::CONTENT_LOCATION, place);
-    told.insert("forecast-state", HeaderValue::from_static(latest.state.as_str()));
-    told.insert(header::LINK, refresh);
-    Ok(response)
+    state.polled.copy(&network_name(&name)?).await?.answer(form, &headers)
+}
+
+/// The network whose latest forecast a path leads to, as it stands there; none when it leads elsewhere.
+pub fn polled_network(path: &str) -> Option<&str> {
+    let (before, after) = ROUTE.split_once("{name}")?;
+    path.strip_prefix(before)?.strip_suffix(after).filter(|name| !name.contains('/'))
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn the_path_of_a_latest_forecast_is_told_from_others() {
+        for (path, network) in [
+            ("/v1/networks/heronsgate/forecasts/latest", Some("heronsgate")),
+            ("/v1/networks//forecasts/latest", Some("")),
+            ("/v1/networks/a/b/forecasts/latest", None),
+            ("/v1/networks/forecasts/latest", None),
+            ("/v1/networks/heronsgate/forecasts", None),
+            ("/v1/forecasts/latest", None),
+        ] {
+            assert_eq!(polled_network(path), network, "{path}");
+        }
+    }
 }
