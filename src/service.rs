@@ -13,6 +13,7 @@ mod jobs;
 mod latest;
 mod network;
 mod networks;
+mod notices;
 mod numbers;
 mod plan;
 mod questions;
@@ -28,16 +29,18 @@ use crate::config::{Config, DatabaseConfig};
 use crate::model::MAX_SNAPSHOTS;
 use crate::store::{Caps, Store, StoreError};
 use jobs::Board;
+use notices::Notices;
 
 pub use crate::evaluate::OriginRequest;
 pub use crate::fit::{FitRequest, Fixed, Model, ModelChoice, Rung};
 pub use crate::ingest::FaultPolicy;
 pub use crate::store::{
     BacktestSummary, Clash, JobFilter, JobKind, JobState, KeyClaim, LatestForecast, NetworkSummary, NewNetwork,
-    QuestionKind, RefreshState, RefreshStatus, RunFilter, RunKind, RunSummary, SnapshotSummary, StoredBacktest,
-    StoredJob, StoredLinkEvents, StoredNetwork, StoredQuestion, StoredRun, StoredSnapshot, StoredTransitions,
-    TransitionsSummary, Upload,
+    NoticeKind, QuestionKind, RefreshState, RefreshStatus, RunFilter, RunKind, RunSummary, SnapshotSummary,
+    StoredBacktest, StoredJob, StoredLinkEvents, StoredNetwork, StoredQuestion, StoredRun, StoredSnapshot,
+    StoredTransitions, TransitionsSummary, Upload,
 };
+pub use crate::webhook::{AddressFault, Target};
 pub use accounts::{DateOutcome, IntervalOutcome, OutcomeAnswer, TailOutcome};
 pub use accuracy::{
     AccuracyAnswer, CoverageAnswer, DateAccount, DriftAnswer, DriftCauseName, ForecastAccounts, SummaryAnswer,
@@ -66,6 +69,10 @@ pub use jobs::{
     RefreshResult, SkippedLines,
 };
 pub use network::{Description, NameFault, NetworkName, NetworkSettings, kind_name};
+pub use notices::{
+    DeliveriesAnswer, DeliveryState, DriftNews, EventAnswer, EventType, LimitNews, NewsAnswer, NoticeAnswer,
+    NoticeKindName, NoticeStanding, NoticeTerms, ToldLimit,
+};
 pub use numbers::{Count, Real, date_text};
 pub use questions::{KeptLimitAnswer, LimitStanding, LimitState, QuestionName};
 
@@ -79,6 +86,7 @@ pub struct Service {
     cpu: CpuPool,
     caps: Caps,
     jobs: Board,
+    notices: Notices,
     /// Stored evidence may be large: no more runs hold some at once than can be computed at once.
     evidence_places: Arc<Semaphore>,
 }
@@ -96,7 +104,8 @@ impl Service {
         let caps = Caps { dates: MAX_SNAPSHOTS as u64, rows: config.limits.network_rows as u64 };
         let cpu = CpuPool::new(&config.compute);
         let evidence_places = Arc::new(Semaphore::new(cpu.workers()));
-        Ok(Self { store, cpu, caps, jobs: Board::new(config.jobs), evidence_places })
+        let (jobs, notices) = (Board::new(config.jobs), Notices::new(&config.notices));
+        Ok(Self { store, cpu, caps, jobs, notices, evidence_places })
     }
 
     /// Brings the database's tables up to date and closes it.
