@@ -23,6 +23,7 @@ mod representation;
 mod requests;
 mod runs;
 mod streams;
+mod webhooks;
 
 use std::sync::Arc;
 
@@ -49,7 +50,8 @@ pub use problem::Problem;
 pub use requests::{
     ArrivalsBody, BacktestBody, CHANGE_FIELDS, CampaignBody, DegreeKindName, EVIDENCE_FIELDS, FIT_FIELDS,
     FORECAST_FIELDS, FitRequestBody, FixedBody, ForecastRequestBody, HorizonBody, LIMIT_FIELDS, LinkEventsBody,
-    ModelName, NETWORK_FIELDS, SegmentBody, SnapshotBody, TransitionsBody, WindowBody, read_fit, read_forecast,
+    ModelName, NETWORK_FIELDS, NOTICE_FIELDS, SegmentBody, SnapshotBody, TransitionsBody, WindowBody, read_fit,
+    read_forecast,
 };
 
 /// What handlers share.
@@ -132,7 +134,7 @@ fn observed<S: Clone + Send + Sync + 'static>(routes: Router<S>) -> Router<S> {
 /// The OpenAPI document; needs no database and no configuration.
 pub fn openapi() -> OpenApi {
     let routes = OpenApiRouter::with_openapi(docs::preamble()).merge(work_routes()).merge(around_routes());
-    docs::with_exclusive_fields(routes.into_openapi())
+    webhooks::with_webhooks(docs::with_exclusive_fields(routes.into_openapi()))
 }
 
 /// The OpenAPI document as it is served and committed.

@@ -1,19 +1,28 @@
 //! Settings: the compiled-in defaults, then a file, then `TAILCAST_*` variables; one small struct a concern.
 
+mod fault;
+mod notices;
+
 use std::collections::BTreeMap;
 use std::net::SocketAddr;
 use std::path::Path;
 use std::time::Duration;
 
-use config::{ConfigError, File, FileFormat, Value, ValueKind};
+use config::{File, FileFormat, Value, ValueKind};
 use serde::de::Error as _;
 use serde::{Deserialize, Deserializer};
+
+pub use fault::SettingsError;
+pub use notices::NoticesConfig;
+
+use crate::webhook::SecretFault;
 
 const DEFAULTS: &str = include_str!("../config/default.toml");
 /// Most threads or connections: more only wait for each other.
 const MOST_THREADS: u64 = 1024;
 /// Longest time, seconds: what runs for longer than a day is no request.
 const DAY_SECONDS: u64 = 86_400;
+const YEAR_HOURS: u64 = 8_766;
 /// Most of anything counted or measured in bytes.
 const MOST_THINGS: u64 = 1 << 40;
 /// Most values of one label among the metrics.
@@ -39,6 +48,8 @@ pub struct Config {
     pub limits: LimitsConfig,
     /// What is told of forecasts among the metrics.
     pub metrics: MetricsConfig,
+    /// Calls to other machines.
+    pub notices: NoticesConfig,
     /// Logging.
     pub log: LogConfig,
 }
@@ -226,44 +237,6 @@ fn socket_address<'de, D: Deserializer<'de>>(deserializer: D) -> Result<SocketAd
     })
 }
 
-/// Why the settings cannot be used.
-#[derive(Debug, thiserror::Error)]
-pub enum SettingsError {
-    /// A file or value is unreadable.
-    #[error("{0}")]
-    Unreadable(#[from] ConfigError),
-    /// A variable belongs to no key.
-    #[error("{name} is not a setting; the known ones are {known}")]
-    UnknownVariable {
-        /// The variable.
-        name: String,
-        /// The variables that are known.
-        known: String,
-    },
-    /// Keys in a file that are none of ours.
-    #[error("{file} has keys that are no settings: {}; the known ones are {known}", keys.join(", "))]
-    UnknownKeys {
-        /// The file.
-        file: String,
-        /// The keys.
-        keys: Vec<String>,
-        /// The keys that are known.
-        known: String,
-    },
-    /// A value is outside its range.
-    #[error("{key} must lie between {least} and {most}, not at {value}")]
-    OutOfRange {
-        /// The key.
-        key: &'static str,
-        /// The value given.
-        value: u64,
-        /// The smallest taken.
-        least: u64,
-        /// The largest taken.
-        most: u64,
-    },
-}
-
 impl Config {
     /// Reads the settings for this process.
     ///
@@ -309,7 +282,11 @@ impl Config {
 
     fn checked(self) -> Result<Self, SettingsError> {
         let (database, http, compute, limits) = (&self.database, &self.http, &self.compute, &self.limits);
-        let (jobs, metrics) = (&self.jobs, &self.metrics);
+        let (jobs, metrics, notices) = (&self.jobs, &self.metrics, &self.notices);
+        if !notices.destinations.is_empty() && notices.secret.is_none() {
+            let (key, with) = ("notices.secret", "notices.destinations");
+            return Err(SettingsError::Missing { key, with, why: SecretFault.to_string() });
+        }
         let ranges = [
             ("database.readers", u64::from(database.readers), 1, MOST_THREADS),
             ("database.busy_timeout_ms", database.busy_timeout_ms, 0, DAY_SECONDS * 1000),
@@ -340,6 +317,10 @@ impl Config {
             ("limits.link_events", limits.link_events as u64, 1, MOST_THINGS),
             ("limits.network_rows", limits.network_rows as u64, 1, MOST_THINGS),
             ("limits.cells", limits.cells as u64, 1, MOST_THINGS),
+            ("notices.attempts_for_hours", notices.attempts_for_hours, 1, YEAR_HOURS),
+            ("notices.timeout_seconds", notices.timeout_seconds, 1, 300),
+            ("notices.first_pause_ms", notices.first_pause_ms, 1, DAY_SECONDS * 1000),
+            ("notices.longest_pause_seconds", notices.longest_pause_seconds, 1, DAY_SECONDS),
         ];
         match ranges.into_iter().find(|&(_, value, least, most)| !(least..=most).contains(&value)) {
             Some((key, value, least, most)) => Err(SettingsError::OutOfRange { key, value, least, most }),

@@ -2,7 +2,7 @@
 //! it means for capacity.
 //!
 //! The core (`numerics`, `model`, `census`, `growth`, `fit`, `forecast`, `evaluate`) is plain, synchronous and
-//! deterministic. The boundary (`ingest`, `store`, `service`, `api`, `report`, `app`) needs the feature `server`.
+//! deterministic. The boundary (`ingest`, `webhook`, `store`, `service`, `api`, `report`, `app`) needs the feature `server`.
 //! DEVELOPERS.md has the map.
 
 pub mod census;
@@ -29,3 +29,5 @@ pub mod service;
 pub mod store;
 #[cfg(feature = "server")]
 pub mod telemetry;
+#[cfg(feature = "server")]
+pub mod webhook;

@@ -15,6 +15,7 @@ mod latest;
 mod network;
 mod networks;
 mod news;
+mod notices;
 mod numbers;
 mod plan;
 mod questions;
@@ -31,16 +32,18 @@ use crate::model::MAX_SNAPSHOTS;
 use crate::store::{Caps, Store, StoreError};
 use gauges::Briefs;
 use jobs::Board;
+use notices::Notices;
 
 pub use crate::evaluate::OriginRequest;
 pub use crate::fit::{FitRequest, Fixed, Model, ModelChoice, Rung};
 pub use crate::ingest::FaultPolicy;
 pub use crate::store::{
     BacktestSummary, Clash, JobFilter, JobKind, JobState, KeyClaim, LatestForecast, LatestStamp, NetworkSummary,
-    NewNetwork, QuestionKind, RefreshState, RefreshStatus, RunFilter, RunKind, RunSummary, SnapshotSummary,
+    NewNetwork, NoticeKind, QuestionKind, RefreshState, RefreshStatus, RunFilter, RunKind, RunSummary, SnapshotSummary,
     StoredBacktest, StoredJob, StoredLinkEvents, StoredNetwork, StoredQuestion, StoredRun, StoredSnapshot,
     StoredTransitions, TransitionsSummary, Upload,
 };
+pub use crate::webhook::{AddressFault, Target};
 pub use accounts::{DateOutcome, IntervalOutcome, OutcomeAnswer, TailOutcome};
 pub use accuracy::{
     AccuracyAnswer, CoverageAnswer, DateAccount, DriftAnswer, DriftCauseName, ForecastAccounts, SummaryAnswer,
@@ -72,6 +75,10 @@ pub use jobs::{
 pub use latest::PolledForecast;
 pub use network::{Description, NameFault, NetworkName, NetworkSettings, kind_name};
 pub use news::{LimitNews, NetworkNews, NewsKind, NewsPlace};
+pub use notices::{
+    DeliveriesAnswer, DeliveryState, DriftNotice, EventAnswer, EventType, LimitNotice, NoticeAnswer, NoticeData,
+    NoticeKindName, NoticeStanding, NoticeTerms, ToldLimit,
+};
 pub use numbers::{Count, Real, date_text};
 pub use questions::{KeptLimitAnswer, LimitStanding, LimitState, QuestionName};
 
@@ -87,6 +94,7 @@ pub struct Service {
     jobs: Board,
     /// What the gauges tell of forecasts, read once each.
     briefs: Briefs,
+    notices: Notices,
     /// Stored evidence may be large: no more runs hold some at once than can be computed at once.
     evidence_places: Arc<Semaphore>,
 }
@@ -104,7 +112,8 @@ impl Service {
         let caps = Caps { dates: MAX_SNAPSHOTS as u64, rows: config.limits.network_rows as u64 };
         let cpu = CpuPool::new(&config.compute);
         let evidence_places = Arc::new(Semaphore::new(cpu.workers()));
-        Ok(Self { store, cpu, caps, jobs: Board::new(config.jobs), briefs: Briefs::default(), evidence_places })
+        let (jobs, notices) = (Board::new(config.jobs), Notices::new(&config.notices));
+        Ok(Self { store, cpu, caps, jobs, briefs: Briefs::default(), notices, evidence_places })
     }
 
     /// Brings the database's tables up to date and closes it.

@@ -59,6 +59,10 @@ fn install() -> Result<PrometheusHandle, BuildError> {
     describe_histogram!("tailcast_compute_seconds", Unit::Seconds, "Time on a worker");
     describe_histogram!("tailcast_compute_wait_seconds", Unit::Seconds, "Time spent waiting for a worker");
     describe_gauge!("tailcast_compute_busy", "Computations that run or wait");
+    describe_counter!(
+        "tailcast_notices_total",
+        "Attempts to send a notice's event, by outcome: delivered, failed, given_up"
+    );
     describe_gauge!("tailcast_build_info", "1, with the version as a label");
     gauge!("tailcast_build_info", "version" => env!("CARGO_PKG_VERSION")).set(1.0);
     Ok(handle)

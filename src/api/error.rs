@@ -209,6 +209,7 @@ fn service_problem(error: ServiceError) -> Problem {
         ServiceError::NoForecast(why) => {
             Problem::new(S::NOT_FOUND, "no_forecast", format!("The network has no forecast yet: {}.", readable(&why)))
         }
+        error @ (ServiceError::NoticesOff | ServiceError::NotListed) => notice_refused(&error),
         ServiceError::Busy => {
             let detail = "Every worker is taken and the queue is full; try again shortly.";
             Problem::new(S::SERVICE_UNAVAILABLE, "overloaded", detail).retry_after(BUSY_RETRY)
@@ -260,6 +261,20 @@ fn service_problem(error: ServiceError) -> Problem {
     }
 }
 
+/// A notice that would not be sent.
+fn notice_refused(why: &ServiceError) -> Problem {
+    let (code, remedy) = match why {
+        ServiceError::NoticesOff => {
+            ("notices_off", "Ask them to list the address, or poll the network's limits and accuracy report")
+        }
+        _ => ("address_not_listed", "Take one that is, or ask them to list this one"),
+    };
+    let mut faults = Faults::default();
+    faults.add(&At::ROOT.field("url"), why.to_string());
+    let detail = format!("{}. {remedy}.", readable(&why.to_string()));
+    Problem::new(StatusCode::UNPROCESSABLE_ENTITY, code, detail).with_faults(faults)
+}
+
 fn missing(thing: Thing) -> &'static str {
     match thing {
         Thing::Run => "There is no such run: it was never made, or was deleted.",
@@ -272,6 +287,7 @@ fn missing(thing: Thing) -> &'static str {
         Thing::Backtest => "There is no such backtest: it was never made, or was deleted.",
         Thing::Limit => "The network keeps no limit of this name; its list of limits has the names.",
         Thing::Scenario => "The network keeps no scenario of this name; its list of scenarios has the names.",
+        Thing::Notice => "The network keeps no notice of this name; its list of notices has the names.",
         Thing::LinkEvents => "The network has no link events; PUT them, or a link list to derive them from.",
     }
 }

@@ -9,6 +9,7 @@ mod latest;
 mod limits;
 mod link_events;
 mod links;
+mod notices;
 mod runs;
 mod scenarios;
 mod snapshots;
@@ -52,6 +53,7 @@ pub fn routes() -> OpenApiRouter<AppState> {
         .merge(limits::routes())
         .merge(scenarios::routes())
         .merge(comparison::routes())
+        .merge(notices::routes())
 }
 
 /// Track a network

@@ -6,6 +6,7 @@ mod comparison;
 mod evidence;
 mod network;
 mod network_schema;
+mod notice;
 mod outlook;
 mod questions;
 mod questions_schema;
@@ -22,6 +23,7 @@ pub use network::{
 pub use network_schema::{
     DegreeCountsBody, ForecastPlanBody, NetworkBody, NetworkFitBody, NetworkForecastBody, TransitionCountsBody,
 };
+pub use notice::{NOTICE_FIELDS, NoticeBody, read_notice};
 pub use questions_schema::{ChangeBody, KeptLimitBody};
 pub use schema::{
     ArrivalsBody, CampaignBody, DegreeKindName, FitRequestBody, FixedBody, ForecastRequestBody, HorizonBody,

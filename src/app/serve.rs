@@ -26,6 +26,7 @@ pub struct Running {
     stop: watch::Sender<bool>,
     server: JoinHandle<()>,
     upkeep: JoinHandle<()>,
+    sender: JoinHandle<()>,
     grace: Duration,
 }
 
@@ -37,12 +38,15 @@ impl Running {
 
     /// Stops listening, finishes what was accepted, within the configured grace, and closes the database.
     pub async fn stop(self) {
-        let Self { service, stop, server, upkeep, grace, .. } = self;
+        let Self { service, stop, server, upkeep, sender, grace, .. } = self;
+        let aborted = sender.abort_handle();
         // Nobody listening means the server is gone already.
         let _ = stop.send(true);
-        if timeout(grace, server).await.is_err() {
+        // The sender finishes the calls that are under way; what it does not is sent by the next process.
+        if timeout(grace, async { tokio::join!(server, sender) }).await.is_err() {
             tracing::warn!(grace_seconds = grace.as_secs(), "some requests were not finished in time");
         }
+        aborted.abort();
         upkeep.abort();
         service.cancel_all();
         service.close().await;
@@ -67,12 +71,13 @@ pub async fn start(config: Config) -> Result<Running, Stop> {
     let (grace, head_timeout) = (config.http.shutdown_grace(), config.http.head_timeout());
     let front = Front::new(AppState::new(service.clone(), &config, metrics));
     let (stop, stopped) = watch::channel(false);
+    let sender = tokio::spawn(service.clone().send_notices(stopped.clone()));
     let server = tokio::spawn(connections::serve(listener, front, head_timeout, stopped));
     tracing::info!(%address, "serving");
     if !address.ip().is_loopback() {
         tracing::warn!("reachable from other machines, and there is no access control: put a gateway in front");
     }
-    Ok(Running { address, service, stop, server, upkeep, grace })
+    Ok(Running { address, service, stop, server, upkeep, sender, grace })
 }
 
 /// Serves until SIGINT or SIGTERM.

@@ -2,7 +2,8 @@
 
 use std::collections::BTreeMap;
 
-use serde::Serialize;
+use jiff::Timestamp;
+use serde::{Deserialize, Serialize};
 use utoipa::ToSchema;
 use uuid::Uuid;
 
@@ -67,7 +68,7 @@ pub struct DriftAnswer {
 }
 
 /// A likely cause of drift.
-#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, ToSchema)]
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, Deserialize, ToSchema)]
 #[serde(rename_all = "snake_case")]
 pub enum DriftCauseName {
     /// The share of links that go by degree moved.
@@ -163,8 +164,9 @@ impl Service {
     }
 }
 
-fn newest_fit(document: &str) -> Result<FitRecord, ServiceError> {
-    #[derive(serde::Deserialize)]
+/// The fit of a kept forecast.
+pub(super) fn newest_fit(document: &str) -> Result<FitRecord, ServiceError> {
+    #[derive(Deserialize)]
     struct Run {
         fit: FitReport,
     }
@@ -182,7 +184,7 @@ fn report(
     let mut forecasts: Vec<ForecastAccounts> = Vec::new();
     for found in stored {
         let kept: KeptAccount = serde_json::from_str(&found.account).map_err(|error| never_kept(&error))?;
-        accounts.push(issued_account(&found, &kept)?);
+        accounts.push(issued_account(found.as_of, &kept)?);
         let date = DateAccount { as_of: date_text(found.as_of), outcome: kept.date };
         match forecasts.last_mut() {
             Some(last) if last.id == found.run => last.dates.push(date),
@@ -226,13 +228,14 @@ fn tail(found: &DateOutcome) -> impl Iterator<Item = Outcome> {
     found.tail.iter().map(|row| row.outcome.to_core())
 }
 
-fn issued_account(found: &StoredAccount, kept: &KeptAccount) -> Result<IssuedAccount, ServiceError> {
+/// A kept account as the core has it.
+pub(super) fn issued_account(as_of: Timestamp, kept: &KeptAccount) -> Result<IssuedAccount, ServiceError> {
     let date = &kept.date;
     Ok(IssuedAccount {
         origin: date_of(&kept.origin).ok_or_else(|| never_kept(&kept.origin))?,
         fit: record(&kept.preferential_share, &kept.links_per_arrival),
         account: Account {
-            as_of: found.as_of,
+            as_of,
             days_ahead: date.days_ahead.0,
             nodes: date.nodes.to_core(),
             links: date.links.to_core(),
@@ -282,7 +285,8 @@ fn verdict(planned: bool, forecasts: usize, summary: Option<&OutcomeSummary>, dr
     )
 }
 
-fn drift_in_words(drift: &DriftTest) -> String {
+/// What the test of recent outcomes says.
+pub(super) fn drift_in_words(drift: &DriftTest) -> String {
     let seen = format!(
         "Of the {} newest dates, {} missed: at least half of the thresholds lay outside their {:.0} % intervals",
         drift.dates,

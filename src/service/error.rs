@@ -38,6 +38,12 @@ pub enum ServiceError {
     /// The network has no forecast yet, for this reason.
     #[error("the network has no forecast yet: {0}")]
     NoForecast(String),
+    /// The operator has listed no address that notices may go to.
+    #[error("this service sends no notices: whoever runs it lists no address in notices.destinations")]
+    NoticesOff,
+    /// The operator has not listed the address.
+    #[error("its address is not among those that whoever runs this service lists in notices.destinations")]
+    NotListed,
     /// Every worker is taken and the queue is full.
     #[error("every worker is taken and the queue is full")]
     Busy,
@@ -97,6 +103,8 @@ pub enum Thing {
     Limit,
     /// A scenario kept with a network.
     Scenario,
+    /// A notice kept with a network.
+    Notice,
 }
 
 impl From<StoreError> for ServiceError {

@@ -157,7 +157,7 @@ impl Service {
 }
 
 /// Writes again, with growing pauses, while the database fails.
-async fn persistently<T, F: Future<Output = Result<T, StoreError>>>(
+pub(in crate::service) async fn persistently<T, F: Future<Output = Result<T, StoreError>>>(
     mut write: impl FnMut() -> F,
 ) -> Result<T, StoreError> {
     for round in 0..WRITE_TRIES {

@@ -9,7 +9,7 @@ use super::columns::{corrupt, signed, unsigned, uuid};
 use super::jobs::{JobKind, JobState, end, insert};
 use super::latest;
 use super::runs::{NewRun, insert_run};
-use super::{Store, StoreError, backtests};
+use super::{Signal, Store, StoreError, backtests, outbox};
 
 /// Ended refreshes whose records are kept of one network: a network that is fed for years does not fill the list of jobs.
 const KEPT_REFRESHES: i64 = 100;
@@ -81,6 +81,8 @@ pub struct RefreshEnd<'a> {
     pub accounts: &'a [NewAccount],
     /// Accounts against counts that are stored no more.
     pub withdrawn: &'a [(Uuid, Timestamp)],
+    /// How things stand that notices tell of.
+    pub signals: &'a [Signal],
     /// How the job ends, and its outcome.
     pub end: (JobState, &'a str),
 }
@@ -145,6 +147,7 @@ impl Store {
             }
             None => note(&mut transaction, ended.network, RefreshState::Outdated, ended.job, ended.reason).await?,
         }
+        outbox::note(&mut transaction, ended.network, ended.job, ended.signals, ended.forecast.is_some()).await?;
         let redo = backtests::redo(&mut transaction, ended.network).await?;
         prune(&mut transaction, ended.network).await?;
         self.commit(transaction).await?;

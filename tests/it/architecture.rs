@@ -4,7 +4,7 @@ use std::collections::{BTreeMap, BTreeSet};
 use std::path::{Path, PathBuf};
 
 /// Every module with the modules it may name.
-const ARROWS: [(&str, &[&str]); 15] = [
+const ARROWS: [(&str, &[&str]); 16] = [
     ("numerics", &[]),
     ("model", &["numerics"]),
     ("census", &["model"]),
@@ -13,11 +13,13 @@ const ARROWS: [(&str, &[&str]); 15] = [
     ("forecast", &["growth", "model", "numerics"]),
     ("evaluate", &["fit", "forecast", "growth", "model", "numerics"]),
     ("ingest", &["census", "model"]),
-    ("config", &[]),
+    // What the operator lists is read into what calls are held against.
+    ("config", &["webhook"]),
+    ("webhook", &[]),
     ("telemetry", &["config"]),
     ("store", &["config", "model"]),
     // fit, forecast and growth: the words of evaluate's requests, answers and errors.
-    ("service", &["census", "config", "evaluate", "fit", "forecast", "growth", "ingest", "model", "store"]),
+    ("service", &["census", "config", "evaluate", "fit", "forecast", "growth", "ingest", "model", "store", "webhook"]),
     ("report", &["service"]),
     ("api", &["config", "model", "report", "service"]),
     // growth: the demo grows its network with the simulator, so that what comes true is known.
@@ -27,7 +29,7 @@ const ARROWS: [(&str, &[&str]); 15] = [
 const CORE: [&str; 7] = ["numerics", "model", "census", "growth", "fit", "forecast", "evaluate"];
 
 /// Crates that the core must not know.
-const BOUNDARY_CRATES: [&str; 16] = [
+const BOUNDARY_CRATES: [&str; 18] = [
     "axum",
     "clap",
     "config",
@@ -43,6 +45,8 @@ const BOUNDARY_CRATES: [&str; 16] = [
     "tower_http",
     "tracing",
     "utoipa",
+    "ureq",
+    "url",
     "uuid",
 ];
 

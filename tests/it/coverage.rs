@@ -5,9 +5,10 @@ use std::collections::BTreeSet;
 use serde_json::json;
 
 use crate::harness::{DOCUMENT, Service, answered, csv, fit_body, forecast_body, json_text};
+use crate::notices::sends;
 
 /// Every operation with the status its plain use is answered with, in an order in which all of them work.
-const CALLS: [(&str, &str, u16); 49] = [
+const CALLS: [(&str, &str, u16); 53] = [
     ("get", "/livez", 200),
     ("get", "/readyz", 200),
     ("get", "/metrics", 200),
@@ -43,6 +44,10 @@ const CALLS: [(&str, &str, u16); 49] = [
     ("put", "/v1/networks/{name}/scenarios/{scenario}", 201),
     ("get", "/v1/networks/{name}/scenarios/{scenario}", 200),
     ("get", "/v1/networks/{name}/scenarios", 200),
+    ("put", "/v1/networks/{name}/notices/{notice}", 201),
+    ("get", "/v1/networks/{name}/notices/{notice}", 200),
+    ("get", "/v1/networks/{name}/notices", 200),
+    ("delete", "/v1/networks/{name}/notices/{notice}", 204),
     // The network has no plan.
     ("get", "/v1/networks/{name}/comparison", 422),
     ("delete", "/v1/networks/{name}/limits/{limit}", 204),
@@ -79,6 +84,7 @@ fn body(method: &str, path: &str) -> Option<(&'static str, String)> {
         ("backtests", _) => json!({"thresholds": [1]}),
         ("limits", _) => json!({"threshold": 3, "max_nodes": 20, "by": "2027-01-01"}),
         ("scenarios", _) => json!({"arrivals_factor": 1.2}),
+        ("notices", _) => json!({"url": "https://hooks.example.org/tailcast"}),
         ("networks", _) => json!({"degree_kind": "received"}),
         ("snapshots", _) => json!({"degree_counts": [[0, 48], [1, 30], [2, 17], [5, 5]]}),
         ("transitions", _) => {
@@ -101,12 +107,13 @@ fn the_calls_are_the_documents_operations() {
 
 #[tokio::test]
 async fn every_operation_works() {
-    let service = Service::start().await;
+    let service = Service::start_with(|config| sends(config, &["https://hooks.example.org"])).await;
     let mut made = String::new();
     for (method, path, status) in CALLS {
         let address = path.replace("{id}", &made).replace("{name}", "heronsgate").replace("{as_of}", "2026-06-01");
         let address = address.replace("{from}", "2026-05-01").replace("{to}", "2026-06-01");
         let address = address.replace("{limit}", "fan-out").replace("{scenario}", "campaign");
+        let address = address.replace("{notice}", "on-call");
         let request = service.request(method.to_uppercase().parse().unwrap(), &address);
         let request = if path.ends_with("/events") { request.header("accept", "text/csv") } else { request };
         let answer = match body(method, path) {

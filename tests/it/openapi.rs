@@ -4,8 +4,8 @@ use std::collections::BTreeSet;
 
 use serde_json::{Value, json};
 use tailcast::api::{
-    CHANGE_FIELDS, EVIDENCE_FIELDS, FIT_FIELDS, FORECAST_FIELDS, LIMIT_FIELDS, NETWORK_FIELDS, example_request,
-    openapi_text,
+    CHANGE_FIELDS, EVIDENCE_FIELDS, FIT_FIELDS, FORECAST_FIELDS, LIMIT_FIELDS, NETWORK_FIELDS, NOTICE_FIELDS,
+    example_request, openapi_text,
 };
 
 use crate::harness::{DOCUMENT, Service};
@@ -37,6 +37,7 @@ fn documented_fields_are_the_fields_that_are_read() {
     assert_eq!(documented("NetworkBody"), read(&NETWORK_FIELDS));
     assert_eq!(documented("KeptLimitBody"), read(&LIMIT_FIELDS));
     assert_eq!(documented("ChangeBody"), read(&CHANGE_FIELDS));
+    assert_eq!(documented("NoticeBody"), read(&NOTICE_FIELDS));
     for (inline, kept) in [("LimitBody", "KeptLimitBody"), ("ScenarioBody", "ChangeBody")] {
         assert_eq!(&documented(inline) - &documented(kept), read(&["name"]));
     }

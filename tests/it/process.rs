@@ -4,6 +4,7 @@ use std::io::{BufRead, BufReader, Write};
 use std::net::SocketAddr;
 use std::path::Path;
 use std::process::{Child, Command, Output, Stdio};
+use std::sync::{Arc, Mutex};
 
 const BINARY: &str = env!("CARGO_BIN_EXE_tailcast");
 
@@ -11,6 +12,8 @@ const BINARY: &str = env!("CARGO_BIN_EXE_tailcast");
 pub struct Served {
     pub child: Child,
     pub address: SocketAddr,
+    /// What it has logged.
+    pub log: Arc<Mutex<Vec<String>>>,
 }
 
 /// The binary with no settings but those of the test.
@@ -35,10 +38,16 @@ pub fn run(mut command: Command, input: &str) -> Output {
 
 /// Serves the database in `folder` on a free port.
 pub fn serve(folder: &Path) -> Served {
+    serve_with(folder, &[])
+}
+
+/// The same with these variables besides.
+pub fn serve_with(folder: &Path, variables: &[(&str, &str)]) -> Served {
     let mut child = command(folder)
         .arg("serve")
         .env("TAILCAST_BIND", "127.0.0.1:0")
         .env("TAILCAST_LOG_FILTER", "warn,tailcast::app=info")
+        .envs(variables.iter().copied())
         .stderr(Stdio::piped())
         .spawn()
         .unwrap();
@@ -47,8 +56,15 @@ pub fn serve(folder: &Path) -> Served {
         .find_map(|line| line.unwrap().split_once("serving address=")?.1.trim().parse().ok())
         .expect("the service says where it listens");
     // Read on, so that a full pipe never blocks the service.
-    std::thread::spawn(move || lines.map_while(Result::ok).for_each(|line| eprintln!("service: {line}")));
-    Served { child, address }
+    let log = Arc::new(Mutex::new(Vec::new()));
+    let kept = log.clone();
+    std::thread::spawn(move || {
+        lines.map_while(Result::ok).for_each(|line| {
+            eprintln!("service: {line}");
+            kept.lock().unwrap().push(line);
+        });
+    });
+    Served { child, address, log }
 }
 
 impl Served {

@@ -214,3 +214,45 @@ async fn a_network_of_the_fifth_version_keeps_its_forecast_and_takes_limits() {
     assert_eq!(service.get(path).await.expect(200).json()["state"], "waiting", "nothing is stored to start from");
     service.stop().await;
 }
+
+/// A network of the sixth version, which knew no notices, with a limit that waits for its first forecast: both are kept, and what the
+/// forecast says of the limit is told.
+#[tokio::test]
+async fn a_network_of_the_sixth_version_keeps_its_limit_and_takes_notices() {
+    let folder = tempfile::tempdir().unwrap();
+    let migrations = [
+        "0001_runs.sql",
+        "0002_networks.sql",
+        "0003_jobs.sql",
+        "0004_tracking.sql",
+        "0005_backtests.sql",
+        "0006_questions.sql",
+    ];
+    let (mut database, url) = database(folder.path(), &migrations).await;
+    let tag = tailcast::service::sha256_hex(b"anything");
+    for statement in [
+        "INSERT INTO networks (name, degree_kind, tag, created_at, updated_at, revision) VALUES ('heronsgate', 'received', $1, 5, 6, 3)",
+        "INSERT INTO kept_questions (network, kind, name, created_at, updated_at, tag, body) VALUES ('heronsgate', 'limit', 'fan-out', \
+         5, 6, $1, '{\"threshold\":10,\"max_nodes\":1,\"by\":\"2026-08-01\",\"risk\":0.1}')",
+    ] {
+        sqlx::query(statement).bind(&tag).execute(&mut database).await.unwrap();
+    }
+    database.close().await.unwrap();
+
+    let receiver = crate::notice_receiver::Receiver::start().await;
+    let service = Service::start_with(|config| {
+        config.database.url = url.clone();
+        crate::notices::sends(config, &[&receiver.origin()]);
+    })
+    .await;
+    assert_eq!(service.get("/v1/networks/heronsgate/notices").await.expect(200).json()["items"], json!([]));
+    service.put("/v1/networks/heronsgate/notices/on-call", &json!({"url": receiver.hook()})).await.expect(201);
+    crate::tracking::put_counts(&service, "2026-06-01", &COUNTS[1]).await;
+    service.put("/v1/networks/heronsgate", &crate::tracking::settings()).await.expect(200);
+    let event = receiver.wait_for(1).await[0].event();
+    assert_eq!(
+        (&event["type"], &event["data"]["limit"]["name"]),
+        (&json!("tailcast.limit.risk_passed"), &json!("fan-out"))
+    );
+    service.stop().await;
+}

@@ -18,7 +18,7 @@ use crate::service::inputs::{DEFAULT_SEED, ForecastInputs};
 use crate::service::questions::limits_from;
 use crate::service::runs::compute;
 use crate::service::{NetworkName, RunOrigin, Service, ServiceError, plan};
-use crate::store::{JobState, NewRun, RefreshEnd, RefreshEnded, RefreshState, StoredJob, StoredOrigin};
+use crate::store::{JobState, NewRun, RefreshEnd, RefreshEnded, RefreshState, Signal, StoredJob, StoredOrigin};
 
 /// Why a refresh came to nothing although nothing went wrong.
 const SUPERSEDED: &str = "what is stored changed while it was at work; a later refresh stands for all of it";
@@ -32,6 +32,8 @@ const ACCOUNTED: f64 = 0.2;
 struct Came {
     revision: u64,
     accounts: Accounts,
+    /// How the network stands then, for notices.
+    signals: Vec<Signal>,
     /// The forecast with the last of its dates.
     forecast: Result<(NewRun, Timestamp), NoForecast>,
 }
@@ -126,7 +128,9 @@ impl Service {
                 }
             }
         };
-        Ok(Some(Came { revision, accounts, forecast }))
+        let run = forecast.as_ref().ok().map(|(run, _)| run);
+        let signals = self.signals(&job.network, &accounts, run).await?;
+        Ok(Some(Came { revision, accounts, signals, forecast }))
     }
 
     async fn forecast(
@@ -156,7 +160,7 @@ impl Service {
     }
 
     async fn store_refresh(&self, job: &StoredJob, came: Came) -> Result<(), ServiceError> {
-        let Came { revision, accounts, forecast } = came;
+        let Came { revision, accounts, signals, forecast } = came;
         let made = accounts.made.len() as u64;
         let result = |forecast: Option<Uuid>, reason: Option<&str>| {
             let reason = reason.map(str::to_owned);
@@ -177,10 +181,12 @@ impl Service {
             reason: reason.as_deref(),
             accounts: &accounts.made,
             withdrawn: &accounts.withdrawn,
+            signals: &signals,
             end: (state, &outcome),
         };
         match persistently(|| self.store.finish_refresh(&end)).await? {
             RefreshEnded::Stored(redo) => {
+                self.wake_sender();
                 self.start_backtest(redo);
                 Ok(())
             }

@@ -1,0 +1,51 @@
+//! Why settings cannot be used.
+
+use config::ConfigError;
+
+/// Why the settings cannot be used.
+#[derive(Debug, thiserror::Error)]
+pub enum SettingsError {
+    /// A file or value is unreadable.
+    #[error("{0}")]
+    Unreadable(#[from] ConfigError),
+    /// A variable belongs to no key.
+    #[error("{name} is not a setting; the known ones are {known}")]
+    UnknownVariable {
+        /// The variable.
+        name: String,
+        /// The variables that are known.
+        known: String,
+    },
+    /// Keys in a file that are none of ours.
+    #[error("{file} has keys that are no settings: {}; the known ones are {known}", keys.join(", "))]
+    UnknownKeys {
+        /// The file.
+        file: String,
+        /// The keys.
+        keys: Vec<String>,
+        /// The keys that are known.
+        known: String,
+    },
+    /// A value is outside its range.
+    #[error("{key} must lie between {least} and {most}, not at {value}")]
+    OutOfRange {
+        /// The key.
+        key: &'static str,
+        /// The value given.
+        value: u64,
+        /// The smallest taken.
+        least: u64,
+        /// The largest taken.
+        most: u64,
+    },
+    /// A key that another one needs.
+    #[error("{key} is needed with {with}: {why}")]
+    Missing {
+        /// The key.
+        key: &'static str,
+        /// The one that needs it.
+        with: &'static str,
+        /// What it must be.
+        why: String,
+    },
+}

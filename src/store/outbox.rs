@@ -1,0 +1,363 @@
+//! The outbox: events are written with the refresh that finds them, and wait until they are taken or given up.
+
+use std::collections::HashMap;
+
+use jiff::Timestamp;
+use sqlx::{FromRow, SqliteConnection};
+use uuid::Uuid;
+
+use super::columns::{time, unsigned, uuid};
+use super::notices::{NoticeKind, telling};
+use super::{Store, StoreError};
+
+/// Events of one notice that are kept after they were taken or given up.
+const KEPT_EVENTS: i64 = 100;
+
+/// How something stands that notices may tell of.
+#[derive(Debug, Clone, PartialEq)]
+pub struct Signal {
+    /// What kind of thing it is.
+    pub kind: NoticeKind,
+    /// The limit's name; empty for drift.
+    pub about: String,
+    /// Whether it is what notices warn of.
+    pub raised: bool,
+    /// The probability behind it.
+    pub figure: f64,
+    /// What was asked, as text: an answer to something else is no news of this.
+    pub terms: String,
+    /// What an event says of it, JSON.
+    pub details: String,
+}
+
+/// A notice that has an event to send, and when.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub struct DueNotice {
+    /// The notice.
+    pub notice: Uuid,
+    /// When its oldest event is to be tried.
+    pub due_at: Timestamp,
+}
+
+/// The oldest event of a notice that waits.
+#[derive(Debug, Clone, PartialEq)]
+pub struct PendingEvent {
+    /// Its id, for good.
+    pub id: Uuid,
+    /// Name of the notice.
+    pub name: String,
+    /// The notice's network.
+    pub network: String,
+    /// Where it goes.
+    pub url: String,
+    /// Attempts on the notice that failed since the last that did not.
+    pub failures: u64,
+    /// What kind of event it is.
+    pub kind: NoticeKind,
+    /// The limit's name; empty for drift.
+    pub about: String,
+    /// Whether it warns, or tells of a warning's end.
+    pub raised: bool,
+    /// The probability by the forecast before, if that had an answer to it.
+    pub figure_before: Option<f64>,
+    /// When it came to be.
+    pub created_at: Timestamp,
+    /// What it says, JSON.
+    pub details: String,
+}
+
+#[derive(FromRow)]
+struct StandingRow {
+    about: String,
+    raised: bool,
+    figure: f64,
+    terms: String,
+}
+
+#[derive(FromRow)]
+struct EventRow {
+    id: String,
+    name: String,
+    network: String,
+    url: String,
+    failures: i64,
+    kind: String,
+    about: String,
+    raised: bool,
+    figure_before: Option<f64>,
+    created_at: i64,
+    details: String,
+}
+
+impl Store {
+    /// Notices that have an event to send, the first due first.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn due_notices(&self, limit: u32) -> Result<Vec<DueNotice>, StoreError> {
+        self.file.check()?;
+        let rows: Vec<(String, i64)> =
+            sqlx::query_as("SELECT id, due_at FROM notices WHERE due_at IS NOT NULL ORDER BY due_at, id LIMIT $1")
+                .bind(i64::from(limit))
+                .fetch_all(&self.read)
+                .await?;
+        rows.into_iter().map(|(id, at)| Ok(DueNotice { notice: uuid(&id)?, due_at: time(at)? })).collect()
+    }
+
+    /// The oldest event of a notice that waits: each notice's events are sent in the order in which they came.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn pending_event(&self, notice: Uuid) -> Result<Option<PendingEvent>, StoreError> {
+        self.file.check()?;
+        let row: Option<EventRow> = sqlx::query_as(
+            "SELECT e.id, n.name, n.network, n.url, n.failures, e.kind, e.about, e.raised, e.figure_before, e.created_at, \
+             e.details FROM notice_events e JOIN notices n ON n.id = e.notice WHERE e.notice = $1 AND e.state = 'pending' \
+             ORDER BY e.id LIMIT 1",
+        )
+        .bind(notice.to_string())
+        .fetch_optional(&self.read)
+        .await?;
+        row.map(PendingEvent::try_from).transpose()
+    }
+
+    /// Notes that an event was taken; the notice's next one is due at once.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn event_delivered(&self, notice: Uuid, event: Uuid, at: Timestamp) -> Result<(), StoreError> {
+        let mut transaction = self.begin().await?;
+        if end(&mut transaction, event, "delivered").await? {
+            sqlx::query(
+                "UPDATE notices SET delivered = delivered + 1, delivered_at = $2, failures = 0, due_at = CASE WHEN EXISTS \
+                 (SELECT 1 FROM notice_events WHERE notice = $1 AND state = 'pending') THEN $2 END WHERE id = $1",
+            )
+            .bind(notice.to_string())
+            .bind(at.as_microsecond())
+            .execute(&mut *transaction)
+            .await?;
+            prune(&mut transaction, notice).await?;
+        }
+        self.commit(transaction).await
+    }
+
+    /// Notes that an attempt failed, why, and when the next is due; `give_up` ends the event.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn event_failed(
+        &self,
+        (notice, event): (Uuid, Uuid),
+        (at, why): (Timestamp, &str),
+        next_at: Timestamp,
+        give_up: bool,
+    ) -> Result<(), StoreError> {
+        let mut transaction = self.begin().await?;
+        sqlx::query("UPDATE notice_events SET attempts = attempts + 1 WHERE id = $1 AND state = 'pending'")
+            .bind(event.to_string())
+            .execute(&mut *transaction)
+            .await?;
+        sqlx::query("UPDATE notices SET failures = failures + 1, failed_at = $2, failure = $3 WHERE id = $1")
+            .bind(notice.to_string())
+            .bind(at.as_microsecond())
+            .bind(why)
+            .execute(&mut *transaction)
+            .await?;
+        if give_up && end(&mut transaction, event, "given_up").await? {
+            sqlx::query("UPDATE notices SET given_up = given_up + 1, given_up_at = $2 WHERE id = $1")
+                .bind(notice.to_string())
+                .bind(at.as_microsecond())
+                .execute(&mut *transaction)
+                .await?;
+            prune(&mut transaction, notice).await?;
+        }
+        sqlx::query(
+            "UPDATE notices SET due_at = CASE WHEN EXISTS (SELECT 1 FROM notice_events WHERE notice = $1 AND state = 'pending') \
+             THEN $2 END WHERE id = $1",
+        )
+        .bind(notice.to_string())
+        .bind(next_at.as_microsecond())
+        .execute(&mut *transaction)
+        .await?;
+        self.commit(transaction).await
+    }
+}
+
+/// Holds how things stand against what each notice of the network last had to tell, and puts an event into the outbox for every
+/// difference. `answered` says whether the limits among the signals are all that are answered now: of others nothing is known any more.
+pub(super) async fn note(
+    connection: &mut SqliteConnection,
+    network: &str,
+    refresh: Uuid,
+    signals: &[Signal],
+    answered: bool,
+) -> Result<(), StoreError> {
+    for kind in [NoticeKind::LimitRisk, NoticeKind::Drift] {
+        let signals: Vec<&Signal> = signals.iter().filter(|signal| signal.kind == kind).collect();
+        for notice in telling(connection, network, kind).await? {
+            let told = standings(connection, notice, kind).await?;
+            for signal in &signals {
+                let before = told.get(&signal.about);
+                let same = before.filter(|before| before.terms == signal.terms);
+                if is_news(before.map(|before| before.raised), same.is_some(), signal.raised) {
+                    insert(connection, notice, refresh, signal, same.map(|before| before.figure)).await?;
+                }
+                keep(connection, notice, signal).await?;
+            }
+            if kind == NoticeKind::LimitRisk && answered {
+                for about in told.keys().filter(|about| !signals.iter().any(|signal| signal.about == **about)) {
+                    forget(connection, notice, kind, about).await?;
+                }
+            }
+        }
+    }
+    Ok(())
+}
+
+/// Whether there is something to tell: a warning begins or ends, or goes on under other terms.
+fn is_news(before: Option<bool>, same_terms: bool, raised: bool) -> bool {
+    let warned = before.unwrap_or(false);
+    warned != raised || (raised && !same_terms)
+}
+
+async fn standings(
+    connection: &mut SqliteConnection,
+    notice: Uuid,
+    kind: NoticeKind,
+) -> Result<HashMap<String, StandingRow>, StoreError> {
+    let rows: Vec<StandingRow> =
+        sqlx::query_as("SELECT about, raised, figure, terms FROM notice_standings WHERE notice = $1 AND kind = $2")
+            .bind(notice.to_string())
+            .bind(kind.as_str())
+            .fetch_all(connection)
+            .await?;
+    Ok(rows.into_iter().map(|row| (row.about.clone(), row)).collect())
+}
+
+async fn insert(
+    connection: &mut SqliteConnection,
+    notice: Uuid,
+    refresh: Uuid,
+    signal: &Signal,
+    figure_before: Option<f64>,
+) -> Result<(), StoreError> {
+    let now = Timestamp::now().as_microsecond();
+    sqlx::query(
+        "INSERT INTO notice_events (id, notice, refresh, kind, about, raised, figure_before, created_at, state, details) \
+         VALUES ($1, $2, $3, $4, $5, $6, $7, $8, 'pending', $9)",
+    )
+    .bind(Uuid::now_v7().to_string())
+    .bind(notice.to_string())
+    .bind(refresh.to_string())
+    .bind(signal.kind.as_str())
+    .bind(signal.about.as_str())
+    .bind(signal.raised)
+    .bind(figure_before)
+    .bind(now)
+    .bind(signal.details.as_str())
+    .execute(&mut *connection)
+    .await?;
+    sqlx::query("UPDATE notices SET due_at = coalesce(due_at, $2) WHERE id = $1")
+        .bind(notice.to_string())
+        .bind(now)
+        .execute(connection)
+        .await?;
+    Ok(())
+}
+
+async fn keep(connection: &mut SqliteConnection, notice: Uuid, signal: &Signal) -> Result<(), StoreError> {
+    sqlx::query(
+        "INSERT INTO notice_standings (notice, kind, about, raised, figure, terms) VALUES ($1, $2, $3, $4, $5, $6) \
+         ON CONFLICT (notice, kind, about) DO UPDATE SET raised = excluded.raised, figure = excluded.figure, \
+         terms = excluded.terms",
+    )
+    .bind(notice.to_string())
+    .bind(signal.kind.as_str())
+    .bind(signal.about.as_str())
+    .bind(signal.raised)
+    .bind(signal.figure)
+    .bind(signal.terms.as_str())
+    .execute(connection)
+    .await?;
+    Ok(())
+}
+
+async fn forget(
+    connection: &mut SqliteConnection,
+    notice: Uuid,
+    kind: NoticeKind,
+    about: &str,
+) -> Result<(), StoreError> {
+    sqlx::query("DELETE FROM notice_standings WHERE notice = $1 AND kind = $2 AND about = $3")
+        .bind(notice.to_string())
+        .bind(kind.as_str())
+        .bind(about)
+        .execute(connection)
+        .await?;
+    Ok(())
+}
+
+/// Ends an event that waits; false when it does not.
+async fn end(connection: &mut SqliteConnection, event: Uuid, state: &'static str) -> Result<bool, StoreError> {
+    let done = sqlx::query("UPDATE notice_events SET state = $2 WHERE id = $1 AND state = 'pending'")
+        .bind(event.to_string())
+        .bind(state)
+        .execute(connection)
+        .await?;
+    Ok(done.rows_affected() > 0)
+}
+
+async fn prune(connection: &mut SqliteConnection, notice: Uuid) -> Result<(), StoreError> {
+    sqlx::query(
+        "DELETE FROM notice_events WHERE notice = $1 AND state <> 'pending' AND id NOT IN \
+         (SELECT id FROM notice_events WHERE notice = $1 AND state <> 'pending' ORDER BY id DESC LIMIT $2)",
+    )
+    .bind(notice.to_string())
+    .bind(KEPT_EVENTS)
+    .execute(connection)
+    .await?;
+    Ok(())
+}
+
+impl TryFrom<EventRow> for PendingEvent {
+    type Error = StoreError;
+
+    fn try_from(row: EventRow) -> Result<Self, StoreError> {
+        Ok(Self {
+            id: uuid(&row.id)?,
+            name: row.name,
+            network: row.network,
+            url: row.url,
+            failures: unsigned("failures", row.failures)?,
+            kind: NoticeKind::named(&row.kind)?,
+            about: row.about,
+            raised: row.raised,
+            figure_before: row.figure_before,
+            created_at: time(row.created_at)?,
+            details: row.details,
+        })
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn news_is_what_begins_ends_or_goes_on_under_other_terms() {
+        // What was told before, whether under the same terms, how it stands, whether that is news.
+        for (before, same, raised, news) in [
+            (None, false, false, false),
+            (None, false, true, true),
+            (Some(false), true, false, false),
+            (Some(false), true, true, true),
+            (Some(false), false, true, true),
+            (Some(true), true, true, false),
+            (Some(true), false, true, true),
+            (Some(true), true, false, true),
+            (Some(true), false, false, true),
+        ] {
+            assert_eq!(is_news(before, same, raised), news, "{before:?} {same} {raised}");
+        }
+    }
+}
