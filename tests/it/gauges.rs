@@ -215,7 +215,7 @@ async fn what_is_told_is_bounded_and_what_is_left_out_counted() {
         "WITH RECURSIVE n (i) AS (SELECT 1 UNION ALL SELECT i + 1 FROM n WHERE i < 10000) INSERT INTO networks (name, \
          degree_kind, tag, created_at, updated_at) SELECT 'x' || i, 'received', (SELECT tag FROM networks LIMIT 1), 1, 1 FROM n",
         "INSERT INTO runs (id, kind, network, created_at, engine, seed, inputs_digest, tag, document, inputs) SELECT \
-         substr(x.name || r.id, 1, 36), r.kind, x.name, r.created_at, r.engine, r.seed, r.inputs_digest, r.tag, r.document, '{}' \
+         substr(x.name || r.id, 1, 36), r.kind, x.name, r.created_at, r.engine, r.seed, r.inputs_digest, r.tag, '{}', '{}' \
          FROM networks x, (SELECT * FROM runs LIMIT 1) r WHERE x.name LIKE 'x%'",
         "INSERT INTO latest_forecasts (network, run_id, state, job, created_at, tag, document) SELECT network, id, 'current', \
          '', created_at, tag, document FROM runs WHERE network LIKE 'x%'",

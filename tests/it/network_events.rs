@@ -99,6 +99,8 @@ async fn a_stream_tells_what_becomes_of_refreshes() {
     let first = stream.next().await.unwrap();
     assert_eq!(first.kind, "failed", "there is no snapshot yet: {first:?}");
     assert!(first.data["reason"].as_str().unwrap().contains("no snapshot"), "{first:?}");
+    // The stream waits by now, and so sees the refresh before it ends.
+    tokio::time::sleep(Duration::from_millis(400)).await;
     put_counts(&service, "2026-06-01", &COUNTS[1]).await;
     let told = stream.until("forecast").await;
     assert_eq!(kinds(&told), ["refreshing", "forecast"]);
