@@ -11,6 +11,8 @@ mod growth;
 mod panel;
 mod scenarios;
 mod tail;
+#[cfg(test)]
+mod tests;
 mod words;
 
 use clap::ValueEnum;

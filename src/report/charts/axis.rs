@@ -95,15 +95,6 @@ impl Axis {
         place.clamp(self.ends.0, self.ends.1)
     }
 
-    /// Whether a number lies between the axis's ends.
-    pub(super) fn holds(&self, value: f64) -> bool {
-        match self.scale {
-            Scale::Linear => (self.ends.0..=self.ends.1).contains(&value),
-            Scale::Log if value > 0.0 => (self.ends.0 - 1e-9..=self.ends.1 + 1e-9).contains(&value.log10()),
-            Scale::Log => self.ticks.first().is_some_and(|(at, _)| *at == 0.0),
-        }
-    }
-
     fn linear(ends: (f64, f64), least_step: f64, title: &str) -> Self {
         let (low, high) = ends;
         let raw = (high - low) / TICKS;
@@ -216,19 +207,16 @@ mod tests {
         assert_eq!(texts(&Axis::log(&[12.0, 70.0], "")), ["10", "20", "50", "100"]);
         assert_eq!(
             texts(&Axis::log(&[0.0, 4.0, 1e15], "")),
-            ["0", "10", "1,000", "100,000", "10,000,000", "10⁹", "10¹¹", "10¹³", "10¹⁵"]
+            ["0", "100", "10,000", "1,000,000", "100,000,000", "10¹⁰", "10¹²", "10¹⁴"]
         );
-        assert_eq!(
-            texts(&Axis::amounts(&[0.031], "")),
-            ["0.00", "0.01", "0.02", "0.03"].map(|t| if t == "0.00" { "0" } else { t })
-        );
+        assert_eq!(texts(&Axis::amounts(&[0.031], "")), ["0", "0.01", "0.02", "0.03"]);
     }
 
     #[test]
     fn zero_lies_at_the_foot_of_a_log_axis() {
         let axis = Axis::log(&[0.0, 1.0, 100.0], "");
-        assert!(axis.place(0.0) < axis.place(1.0) && axis.holds(0.0));
-        assert!(!Axis::log(&[1.0, 100.0], "").holds(0.0));
+        assert!(axis.place(0.0) < axis.place(1.0));
+        assert_eq!(texts(&axis), ["0", "1", "2", "5", "10", "20", "50", "100"]);
     }
 
     #[test]

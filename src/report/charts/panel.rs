@@ -25,7 +25,7 @@ pub(super) struct Room {
 
 impl Room {
     /// A single panel, with labels on its right.
-    pub(super) const WHOLE: Self = Self { left: 88.0, right: 730.0, top: 122.0, bottom: 432.0 };
+    pub(super) const WHOLE: Self = Self { left: 88.0, right: 730.0, top: 116.0, bottom: 432.0 };
 }
 
 /// A panel on its canvas.

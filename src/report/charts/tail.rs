@@ -39,7 +39,7 @@ pub(super) fn forecast_tail(
     let name = answer.label.as_deref().map(|label| format!("{}. ", clean(label, 2 * NAME))).unwrap_or_default();
     let rows = courses.iter().filter_map(|course| Some(format!("{}: {}.", hubs(course.threshold), words(course)?)));
     let frame = Frame {
-        title: format!("Tail on {date}: {} hubs with {}", words(told).unwrap_or_default(), at_least(told.threshold)),
+        title: format!("{} on {date}: {}", hubs(told.threshold), words(told).unwrap_or_default()),
         key: format!("{name}Nodes that have at least so many links; both axes logarithmic."),
         caution: CAUTION.to_owned(),
         description: format!(
