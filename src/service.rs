@@ -53,10 +53,10 @@ pub use answers::{
     AmountAnswer, AttachmentAnswer, AttachmentModel, BandAnswer, BandsAnswer, BandsAtDateAnswer, CandidateAnswer,
     ClassPassedAnswer, ClassPassingAnswer, CountAnswer, CurvePointAnswer, DateAnswer, DateAtAnswer, DegreeAnswer,
     EstimateAnswer, EvidenceKind, FitAnswer, FitReport, FitRun, ForecastAnswer, ForecastRun, GoodnessAnswer,
-    HubRankAnswer, IntervalAnswer, LimitAnswer, LimitAtDateAnswer, NextHubsAnswer, OutlierClassAnswer, PassedAnswer,
-    PassingAnswer, PeriodRatesAnswer, PoolAnswer, PoolMemberAnswer, ScenarioAnswer, ScenarioAtDateAnswer,
-    SustainableAnswer, TailAnswer, TailDifferenceAnswer, TailPointAnswer, TransitionsAnswer, WarningAnswer,
-    WatchAnswer, WatchedClassAnswer, WatchedDegreeAnswer, WatchedNodeAnswer,
+    HistoryAnswer, HubRankAnswer, IntervalAnswer, LimitAnswer, LimitAtDateAnswer, NextHubsAnswer, OutlierClassAnswer,
+    PassedAnswer, PassingAnswer, PeriodRatesAnswer, PoolAnswer, PoolMemberAnswer, ScenarioAnswer, ScenarioAtDateAnswer,
+    SustainableAnswer, TailAnswer, TailCountAnswer, TailDifferenceAnswer, TailPointAnswer, TransitionsAnswer,
+    WarningAnswer, WatchAnswer, WatchedClassAnswer, WatchedDegreeAnswer, WatchedNodeAnswer,
 };
 pub use backtests::{
     BacktestRequest, BacktestRun, CoverageRow, DEFAULT_AHEAD, ErrorsAnswer, MOST_AHEAD, MemberErrors, PooledErrors,
@@ -79,7 +79,7 @@ pub use notices::{
     DeliveriesAnswer, DeliveryState, DriftNotice, EventAnswer, EventType, LimitNotice, NoticeAnswer, NoticeData,
     NoticeKindName, NoticeStanding, NoticeTerms, ToldLimit,
 };
-pub use numbers::{Count, Real, date_text};
+pub use numbers::{Count, Real, date_of, date_text};
 pub use questions::{KeptLimitAnswer, LimitStanding, LimitState, QuestionName};
 
 /// The name and version every run carries.
