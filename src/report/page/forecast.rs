@@ -1,6 +1,6 @@
 //! A forecast's report.
 
-use super::figures::figures;
+use super::figures::{Figure, figures};
 use super::grid::{Cell, crossed};
 use super::growth::growth;
 use super::questions::questions;
@@ -48,14 +48,15 @@ fn page(
 ) -> Result<String, ReportError> {
     facts.extend(makers(&answer.engine, answer.seed, &answer.inputs_digest));
     let (finding, lead) = finding(answer);
-    let charts = [ForecastChart::Growth, ForecastChart::Tail];
-    let charts = charts.map(|chart| forecast_chart(answer, chart, None, theme));
     let mut hubs = Section::new("Hubs at each date");
-    hubs.figures = figures(charts.into())?;
+    hubs.figures = figures(vec![forecast_chart(answer, ForecastChart::Growth, None, theme)])?;
     hubs.grids = tails(answer);
     let mut sections = vec![hubs];
     sections.extend(questions(answer, theme)?);
-    sections.push(growth(&answer.fit, &answer.pools));
+    let mut drivers = growth(&answer.fit, &answer.pools);
+    let tail = figures(vec![forecast_chart(answer, ForecastChart::Tail, None, theme)])?;
+    drivers.figures = tail.into_iter().map(Figure::on_screen).collect();
+    sections.push(drivers);
     sections.retain(|section| !section.is_empty());
     let (warnings, cautions) = (answer.warnings.clone(), answer.cautions.clone());
     Report { theme, subject, finding, lead, facts, sections, warnings, cautions, again }.html()
