@@ -47,10 +47,10 @@ pub use answers::{
     AmountAnswer, AttachmentAnswer, AttachmentModel, BandAnswer, BandsAnswer, BandsAtDateAnswer, CandidateAnswer,
     ClassPassedAnswer, ClassPassingAnswer, CountAnswer, CurvePointAnswer, DateAnswer, DateAtAnswer, DegreeAnswer,
     EstimateAnswer, EvidenceKind, FitAnswer, FitReport, FitRun, ForecastAnswer, ForecastRun, GoodnessAnswer,
-    HubRankAnswer, IntervalAnswer, LimitAnswer, LimitAtDateAnswer, NextHubsAnswer, OutlierClassAnswer, PassedAnswer,
-    PassingAnswer, PeriodRatesAnswer, PoolAnswer, PoolMemberAnswer, ScenarioAnswer, ScenarioAtDateAnswer,
-    SustainableAnswer, TailAnswer, TailDifferenceAnswer, TailPointAnswer, TransitionsAnswer, WarningAnswer,
-    WatchAnswer, WatchedClassAnswer, WatchedDegreeAnswer, WatchedNodeAnswer,
+    HistoryAnswer, HubRankAnswer, IntervalAnswer, LimitAnswer, LimitAtDateAnswer, NextHubsAnswer, OutlierClassAnswer,
+    PassedAnswer, PassingAnswer, PeriodRatesAnswer, PoolAnswer, PoolMemberAnswer, ScenarioAnswer, ScenarioAtDateAnswer,
+    SustainableAnswer, TailAnswer, TailCountAnswer, TailDifferenceAnswer, TailPointAnswer, TransitionsAnswer,
+    WarningAnswer, WatchAnswer, WatchedClassAnswer, WatchedDegreeAnswer, WatchedNodeAnswer,
 };
 pub use backtests::{
     BacktestRequest, BacktestRun, CoverageRow, DEFAULT_AHEAD, ErrorsAnswer, MOST_AHEAD, MemberErrors, PooledErrors,
