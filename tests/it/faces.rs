@@ -167,7 +167,7 @@ async fn a_backtest_comes_in_every_form() {
     let location = made.expect(201).header("location").to_owned();
     check_forms(&service, &location).await;
     let run = service.get(&location).await.expect(200).json();
-    let page = service.get(&format!("{location}?format=html")).await.expect(200).text;
+    let page = service.get(&format!("{location}?format=html")).await.expect(200).text.replace('\u{a0}', " ");
     let error = run["given"][0]["pooled"]["mean_log_error"].as_f64().unwrap();
     for words in [run["verdict"].as_str().unwrap(), &format!("missed by {:.1} % one period ahead", 100.0 * error)] {
         assert!(page.contains(words), "{words}: {page}");
@@ -288,7 +288,7 @@ async fn a_report_has_the_figures_and_words_of_the_run() {
     let service = patient().await;
     let run = service.post("/v1/forecasts", &changed(asked(), "/label", json!("spring plan"))).await.expect(201);
     let (location, document) = (run.header("location").to_owned(), run.json());
-    let page = service.get(&format!("{location}?format=html")).await.expect(200).text;
+    let page = service.get(&format!("{location}?format=html")).await.expect(200).text.replace('\u{a0}', " ");
     check_figures(&document, &page);
     let list = |field: &str| document[field].as_array().unwrap().clone();
     let mut words: Vec<String> = list("cautions").iter().map(|caution| caution.as_str().unwrap().to_owned()).collect();

@@ -102,12 +102,13 @@ fn tail_finding(answer: &ForecastAnswer) -> Option<String> {
 /// Dates down, thresholds across, all nodes and the largest degree last.
 fn tails(answer: &ForecastAnswer) -> Vec<super::Grid> {
     let Some(first) = answer.forecast.first() else { return Vec::new() };
-    let level = first.nodes.intervals.last().map(|i| format!(", {} % interval below", percent(i.level.0)));
+    let level = first.nodes.intervals.last().map(|i| format!(" with its {} % interval", percent(i.level.0)));
     let caption = format!("Nodes with at least so many links: expected{}", level.unwrap_or_default());
-    let mut columns: Vec<String> = first.tail.iter().map(|tail| figure(tail.threshold as f64)).collect();
+    let mut columns: Vec<String> =
+        first.tail.iter().map(|tail| format!("≥ {}", figure(tail.threshold as f64))).collect();
     columns.extend(["all nodes", "largest degree (median)"].map(str::to_owned));
-    let rows: Vec<String> =
-        ["now".to_owned()].into_iter().chain(answer.forecast.iter().map(|at| at.date.clone())).collect();
+    let now = answer.history.last().map_or_else(|| "now".to_owned(), |last| format!("{} (now)", last.as_of));
+    let rows: Vec<String> = [now].into_iter().chain(answer.forecast.iter().map(|at| at.date.clone())).collect();
     let cell = |row: usize, column: usize| {
         let Some(at) = answer.forecast.get(row.saturating_sub(1)) else { return Cell::default() };
         let (now, middle, intervals) = match at.tail.get(column) {
