@@ -200,7 +200,7 @@ mod tests {
             "<caption>x</caption>",
             "<th scope=\"col\">x</th>",
             "<th scope=\"row\">x</th>",
-            "<figure class=\"screen\"><svg></svg></figure>",
+            " class=\"screen\"><svg></svg></figure>",
         ] {
             assert!(page.contains(markup), "{markup}: {page}");
         }
