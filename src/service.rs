@@ -66,7 +66,7 @@ pub use jobs::{
     RefreshResult, SkippedLines,
 };
 pub use network::{Description, NameFault, NetworkName, NetworkSettings, kind_name};
-pub use numbers::{Count, Real, date_text};
+pub use numbers::{Count, Real, date_of, date_text};
 pub use questions::{KeptLimitAnswer, LimitStanding, LimitState, QuestionName};
 
 /// The name and version every run carries.
