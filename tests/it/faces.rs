@@ -194,7 +194,6 @@ async fn an_option_that_does_nothing_is_refused() {
         (&forecast, "format=svg&chart=pie", "chart"),
         (&forecast, "format=svg&threshold=0", "threshold"),
         (&forecast, "format=svg&threshold=ten", "threshold"),
-        (&forecast, "format=svg&chart=tail&threshold=10", "threshold"),
         (&forecast, "format=svg&theme=blue", "theme"),
         (&fit, "format=svg&chart=growth", "chart"),
         (&fit, "format=svg&threshold=10", "threshold"),
@@ -222,6 +221,7 @@ async fn each_chart_is_a_representation_of_its_own() {
         "&chart=growth&threshold=10",
         "&threshold=50",
         "&chart=tail",
+        "&chart=tail&threshold=10",
         "&chart=scenarios",
         "&chart=scenarios&threshold=10",
         "&theme=dark",
@@ -311,7 +311,7 @@ async fn a_report_has_the_figures_and_words_of_the_run() {
     assert_eq!(page.matches("<table>").count(), page.matches("<caption>").count());
     let ids: Vec<&str> = page.split(" id=\"").skip(1).map(|rest| rest.split('"').next().unwrap()).collect();
     assert_eq!(ids.iter().collect::<BTreeSet<_>>().len(), ids.len(), "{ids:?}");
-    assert_eq!(page.matches("<svg").count(), 3, "growth, tail and scenarios");
+    assert_eq!(page.matches("<svg").count(), 4, "growth under the limit and of all, tail, scenarios");
     let behind = service.request(Method::GET, &format!("{location}?format=html")).header("x-forwarded-proto", "https");
     assert!(answered(behind).await.text.contains(&format!("https://{}{location}", service.address())));
 }
@@ -356,7 +356,6 @@ fn the_command_line_writes_charts_and_reports() {
         (&["--format", "csv", "--theme", "dark"], "--theme goes with --format svg or html"),
         (&["--format", "html", "--threshold", "50"], "--threshold goes with --format svg"),
         (&["--format", "svg", "--part", "tail"], "--part goes with --format csv"),
-        (&["--format", "svg", "--chart", "tail", "--threshold", "50"], "leave --threshold out"),
         (&["--format", "svg", "--threshold", "7"], "no chart: "),
         (&["--format", "svg", "--threshold", "0"], "--threshold"),
     ] {

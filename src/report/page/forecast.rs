@@ -49,7 +49,7 @@ fn page(
     facts.extend(makers(&answer.engine, answer.seed, &answer.inputs_digest));
     let (finding, lead) = finding(answer);
     let mut hubs = Section::new("Hubs at each date");
-    hubs.figures = figures(vec![forecast_chart(answer, ForecastChart::Growth, None, theme)])?;
+    hubs.figures = courses(answer, theme)?;
     hubs.grids = tails(answer);
     let mut sections = vec![hubs];
     sections.extend(questions(answer, theme)?);
@@ -62,11 +62,27 @@ fn page(
     Report { theme, subject, finding, lead, facts, sections, warnings, cautions, again }.html()
 }
 
+/// How hubs grow: past the threshold of the limit most at risk, and past every threshold.
+fn courses(answer: &ForecastAnswer, theme: Theme) -> Result<Vec<Figure>, ReportError> {
+    let chart = |threshold| forecast_chart(answer, ForecastChart::Growth, threshold, theme);
+    let all = figures(vec![chart(None)])?;
+    let Some(limit) = pressing(answer) else { return Ok(all) };
+    let mut shown = figures(vec![chart(Some(limit.threshold))])?;
+    let others = all.into_iter().filter(|figure| !shown.contains(figure)).map(Figure::on_screen).collect::<Vec<_>>();
+    shown.extend(others);
+    Ok(shown)
+}
+
+/// The limit most at risk.
+fn pressing(answer: &ForecastAnswer) -> Option<&LimitAnswer> {
+    let at_risk = |limit: &LimitAnswer| if limit.now > limit.max_nodes { 2.0 } else { limit.at_by.crossed.0 };
+    answer.limits.iter().max_by(|a, b| at_risk(a).total_cmp(&at_risk(b)))
+}
+
 /// The heading, and what else is to be known at a glance.
 fn finding(answer: &ForecastAnswer) -> (String, Vec<String>) {
     let tail = tail_finding(answer).unwrap_or_else(|| "A forecast without a date".to_owned());
-    let pressing = |limit: &&LimitAnswer| if limit.now > limit.max_nodes { 2.0 } else { limit.at_by.crossed.0 };
-    match answer.limits.iter().max_by(|a, b| pressing(a).total_cmp(&pressing(b))) {
+    match pressing(answer) {
         Some(limit) => (limit_finding(limit), vec![tail]),
         None => (tail, Vec::new()),
     }
