@@ -17,10 +17,9 @@ use clap::{Parser, Subcommand, ValueEnum};
 use tokio::runtime::Runtime;
 
 use crate::config::{Config, LogConfig};
-use crate::report::ForecastPart;
 use crate::service::Service;
 use crate::{api, telemetry};
-use offline::Completion;
+use offline::{Completion, Look};
 use tally::TallyOptions;
 
 pub use serve::{Running, start};
@@ -57,9 +56,8 @@ enum Command {
         /// Form of the answer
         #[arg(long, value_enum, default_value_t = OutputFormat::Table)]
         format: OutputFormat,
-        /// What of the answer --format csv tells; tail when left out
-        #[arg(long, value_enum, value_name = "PART")]
-        part: Option<ForecastPart>,
+        #[command(flatten)]
+        look: Look,
     },
     /// Follow a job of the service at `bind` to its end, then print its result
     Follow {
@@ -83,6 +81,10 @@ pub enum OutputFormat {
     Json,
     /// One table (RFC 4180), that of the tails or of --part
     Csv,
+    /// A chart, that of growth or of --chart
+    Svg,
+    /// A report of one page
+    Html,
 }
 
 /// Why a command ended without doing its work.
@@ -123,8 +125,8 @@ fn dispatch(line: CommandLine) -> Result<(), Stop> {
     let config = Config::load(line.config.as_deref()).map_err(|error| Stop::failed("settings", error))?;
     match line.command {
         Command::Tally(options) => tally::tally(&options),
-        Command::Forecast { file, completion, format, part } => {
-            offline::forecast(&config, &file, &completion, (format, part))
+        Command::Forecast { file, completion, format, look } => {
+            offline::forecast(&config, &file, &completion, &look.of(format)?)
         }
         Command::Openapi => Ok(()),
         Command::Follow { job } => follow::follow(config.bind, &job),

@@ -12,6 +12,7 @@ mod command_line;
 mod coverage;
 mod documents;
 mod durability;
+mod faces;
 mod fits;
 mod forecasts;
 mod gauges;

@@ -196,7 +196,7 @@ proptest! {
         label in "\\PC{0,60}",
         past in any::<bool>(),
     ) {
-        let dates: Vec<String> = dates.iter().map(|day| super::words::date_at(*day as f64).to_string()).collect();
+        let dates: Vec<String> = dates.iter().map(|day| date_at(*day as f64).to_string()).collect();
         let tails: Vec<Tail> = rows.iter().map(|(k, now, a, b)| (*k, *now as f64, a.midpoint(*b), a.min(*b), a.max(*b))).collect();
         let counted: Vec<(u64, u64)> = rows.iter().map(|(k, now, ..)| (*k, *now)).collect();
         let ahead: Vec<(&str, &[Tail])> = dates.iter().map(|date| (date.as_str(), tails.as_slice())).collect();
