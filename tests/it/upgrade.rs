@@ -250,6 +250,9 @@ async fn a_network_of_the_sixth_version_keeps_its_limit_and_takes_notices() {
     crate::tracking::put_counts(&service, "2026-06-01", &COUNTS[1]).await;
     service.put("/v1/networks/heronsgate", &crate::tracking::settings()).await.expect(200);
     let event = receiver.wait_for(1).await[0].event();
-    assert_eq!((&event["type"], &event["data"]["limit"]["name"]), (&json!("tailcast.limit.risk_passed"), &json!("fan-out")));
+    assert_eq!(
+        (&event["type"], &event["data"]["limit"]["name"]),
+        (&json!("tailcast.limit.risk_passed"), &json!("fan-out"))
+    );
     service.stop().await;
 }
