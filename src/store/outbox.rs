@@ -121,6 +121,22 @@ impl Store {
         row.map(PendingEvent::try_from).transpose()
     }
 
+    /// Notes that a notice has nothing to send, unless an event waits.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn nothing_due(&self, notice: Uuid) -> Result<(), StoreError> {
+        let mut transaction = self.begin().await?;
+        sqlx::query(
+            "UPDATE notices SET due_at = NULL WHERE id = $1 AND NOT EXISTS (SELECT 1 FROM notice_events WHERE notice = $1 \
+             AND state = 'pending')",
+        )
+        .bind(notice.to_string())
+        .execute(&mut *transaction)
+        .await?;
+        self.commit(transaction).await
+    }
+
     /// Notes that an event was taken; the notice's next one is due at once.
     ///
     /// # Errors

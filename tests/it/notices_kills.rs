@@ -65,21 +65,19 @@ async fn no_kill_loses_an_event_or_makes_one_twice() {
         let served = start(folder.path(), &receiver, "warn,tailcast::app=info");
         // Some are not taken at first.
         receiver.will_answer(if round % 3 == 0 { &[500] } else { &[] });
-        assert!(put(&client, &served, "", &growing(round % 2 == 0)).await);
-        // At a different moment each round: while it computes, stores, sends, notes that it was taken.
-        let pause = match round % 4 {
-            // As soon as the event has come, before that can be noted.
-            3 => {
-                let had = receiver.calls().len();
-                let begun = Instant::now();
-                while receiver.calls().len() == had && begun.elapsed() < Duration::from_secs(20) {
-                    tokio::time::sleep(Duration::from_micros(200)).await;
-                }
-                0
+        // What has been told last is to end, or to begin again.
+        let told = receiver.events().len();
+        assert!(put(&client, &served, "", &growing(told % 2 == 0)).await);
+        if round % 2 == 0 {
+            // As soon as the next event has come, before that can be noted.
+            let begun = Instant::now();
+            while receiver.events().len() == told && begun.elapsed() < Duration::from_secs(30) {
+                tokio::time::sleep(Duration::from_millis(1)).await;
             }
-            _ => 41 * round * round % 700,
-        };
-        tokio::time::sleep(Duration::from_millis(pause)).await;
+        } else {
+            // At a different moment each round: while it computes, stores, sends, notes that an event was taken.
+            tokio::time::sleep(Duration::from_millis(41 * round * round % 700)).await;
+        }
         served.kill();
     }
     let served = start(folder.path(), &receiver, "warn,tailcast::app=info");

@@ -35,6 +35,8 @@ impl Service {
         while !*stop.borrow() {
             let pause = match self.start_calls(&mut calls, &mut called).await {
                 Ok(pause) => pause,
+                // Until somebody runs the migrate command.
+                Err(ServiceError::TablesOutdated) => LONGEST_SLEEP,
                 Err(error) => {
                     tracing::warn!(%error, "events that wait cannot be read; it is tried again");
                     STORE_PAUSE
@@ -92,7 +94,9 @@ impl Service {
 
     async fn send_oldest(&self, notice: Uuid) -> Result<(), ServiceError> {
         // Deleted meanwhile, or sent.
-        let Some(event) = self.store.pending_event(notice).await? else { return Ok(()) };
+        let Some(event) = self.store.pending_event(notice).await? else {
+            return Ok(self.store.nothing_due(notice).await?);
+        };
         let sent = self.send(&event).await;
         let now = Timestamp::now();
         let Err(why) = sent else {
@@ -100,7 +104,9 @@ impl Service {
             return Ok(persistently(|| self.store.event_delivered(notice, event.id, now)).await?);
         };
         let config = &self.notices.config;
-        let give_up = now.duration_since(event.created_at).unsigned_abs() >= config.attempts_for();
+        // A clock that was set back makes no event old.
+        let age = now.duration_since(event.created_at);
+        let give_up = !age.is_negative() && age.unsigned_abs() >= config.attempts_for();
         let next_at = later(now, pause(config, event.failures.saturating_add(1)));
         counter!("tailcast_notices_total", "outcome" => if give_up { "given_up" } else { "failed" }).increment(1);
         tracing::warn!(network = %event.network, notice = %event.name, event = %event.id, give_up, "a notice was not taken: {why}");
