@@ -203,7 +203,7 @@ impl PolledCopy {
     /// # Errors
     /// When the form cannot be made of the kept document.
     pub fn answer(&self, form: ForecastForm, asked: &HeaderMap) -> Result<Response, ApiError> {
-        if form.format == ResultFormat::Json {
+        if form.format() == ResultFormat::Json {
             return Ok(self.json(asked));
         }
         let mut response = runs::found((*self.run).clone(), form, asked)?;

@@ -1,5 +1,6 @@
 //! `/v1/networks/{name}/notices`
 
+use axum::body::Body;
 use axum::extract::{Path, State};
 use axum::http::{HeaderMap, StatusCode};
 use axum::response::Response;
@@ -118,7 +119,9 @@ async fn get_notice(
     let NoticeStanding { answer, tag, .. } = state.service.notice(&network_name(&network)?, &name).await?;
     let text = serde_json::to_string(&answer).map_err(|error| ApiError::Broken(error.to_string()))?;
     let tag = format!("{tag}-{}", sha256_hex(text.as_bytes()));
-    representation::found(Validator { tag: &tag, modified: None }, ResultFormat::Json, &headers, || Ok(text.into()))
+    representation::found(Validator { tag: &tag, modified: None }, ResultFormat::Json, &headers, || {
+        Ok(Body::from(text))
+    })
 }
 
 /// List notices

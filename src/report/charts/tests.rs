@@ -5,7 +5,7 @@ use roxmltree::{Document, Node};
 use serde_json::{Value, json};
 
 use super::canvas::{FINE, HEIGHT, WIDTH};
-use super::words::days;
+use super::words::{date_at, days};
 use super::*;
 
 /// A tail at a date: threshold, now, median, low and high of a 90 % interval.
