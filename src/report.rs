@@ -9,6 +9,7 @@ mod questions_table;
 mod rows;
 mod table;
 mod text;
+mod web;
 
 pub use accuracy::accuracy_csv;
 pub use backtest::backtest_csv;
@@ -17,6 +18,4 @@ pub use csv::{ForecastPart, fit_csv, part_csv};
 pub use rows::{degree_counts_csv, transitions_csv};
 pub use table::{align, forecast_table, mix_in_words};
 pub use text::{figure, readable, wrap};
-
-/// A plain page of links.
-pub const INDEX_PAGE: &str = include_str!("report/index.html");
+pub use web::{WebFile, web_files};

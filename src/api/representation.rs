@@ -65,7 +65,7 @@ fn validators(validator: Validator<'_>, format: ResultFormat) -> Result<HeaderMa
 }
 
 /// If-None-Match decides; If-Modified-Since only where the former is absent (RFC 9110, section 13.2.2).
-fn is_unmodified(asked: &HeaderMap, entity_tag: &str, modified: Option<Timestamp>) -> bool {
+pub fn is_unmodified(asked: &HeaderMap, entity_tag: &str, modified: Option<Timestamp>) -> bool {
     let mut tags = asked.get_all(header::IF_NONE_MATCH).iter().peekable();
     if tags.peek().is_some() {
         return tags.any(|value| names(value, |opaque| opaque == entity_tag, true));
