@@ -16,10 +16,9 @@ use clap::{Parser, Subcommand, ValueEnum};
 use tokio::runtime::Runtime;
 
 use crate::config::{Config, LogConfig};
-use crate::report::ForecastPart;
 use crate::service::Service;
 use crate::{api, telemetry};
-use offline::Completion;
+use offline::{Completion, Look};
 use tally::TallyOptions;
 
 pub use serve::{Running, start};
@@ -56,9 +55,8 @@ enum Command {
         /// Form of the answer
         #[arg(long, value_enum, default_value_t = OutputFormat::Table)]
         format: OutputFormat,
-        /// What of the answer --format csv tells; tail when left out
-        #[arg(long, value_enum, value_name = "PART")]
-        part: Option<ForecastPart>,
+        #[command(flatten)]
+        look: Look,
     },
     /// Ask the service at `bind` whether it is ready; ends with 0 when it is
     Check,
@@ -77,6 +75,10 @@ pub enum OutputFormat {
     Json,
     /// One table (RFC 4180), that of the tails or of --part
     Csv,
+    /// A chart, that of growth or of --chart
+    Svg,
+    /// A report of one page
+    Html,
 }
 
 /// Why a command ended without doing its work.
@@ -117,8 +119,8 @@ fn dispatch(line: CommandLine) -> Result<(), Stop> {
     let config = Config::load(line.config.as_deref()).map_err(|error| Stop::failed("settings", error))?;
     match line.command {
         Command::Tally(options) => tally::tally(&options),
-        Command::Forecast { file, completion, format, part } => {
-            offline::forecast(&config, &file, &completion, (format, part))
+        Command::Forecast { file, completion, format, look } => {
+            offline::forecast(&config, &file, &completion, &look.of(format)?)
         }
         Command::Openapi => Ok(()),
         Command::Check => check::ready(config.bind),

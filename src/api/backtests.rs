@@ -8,10 +8,10 @@ use utoipa_axum::router::OpenApiRouter;
 use utoipa_axum::routes;
 use uuid::Uuid;
 
-use super::extract::{NoQuery, ResultFormat};
-use super::refusals::{ConditionRefusals, FormRefusals, Refusals};
-use super::representation::{self, Conditions, Validator, header_value};
-use super::{ApiError, AppState};
+use super::extract::{BacktestForm, BacktestFormQuery, NoQuery, ResultFormat};
+use super::refusals::{ChartRefusals, ConditionRefusals, FormRefusals, Refusals};
+use super::representation::{self, Conditions, Content, Validator, header_value};
+use super::{ApiError, AppState, runs};
 use crate::report;
 use crate::service::{BacktestRun, ServiceError, StoredBacktest, Thing};
 
@@ -44,7 +44,7 @@ pub fn created(made: StoredBacktest) -> Result<Response, ApiError> {
     tag = "backtests",
     params(
         ("id" = String, Path, description = "Id of the backtest"),
-        ("format" = inline(Option<ResultFormat>), Query, description = "Goes before Accept"),
+        BacktestFormQuery,
         ("If-None-Match" = Option<String>, Header, description = "Answer 304 when the backtest has this ETag"),
     ),
     responses(
@@ -56,22 +56,23 @@ pub fn created(made: StoredBacktest) -> Result<Response, ApiError> {
         ), content(
             (BacktestRun = "application/json"),
             (String = "text/csv"),
+            (String = "image/svg+xml"),
+            (String = "text/html"),
         )),
         (status = 304, description = "The client has it already"),
-        Refusals, FormRefusals,
+        Refusals, FormRefusals, ChartRefusals,
     )
 )]
 async fn get_backtest(
     State(state): State<AppState>,
     Path(id): Path<String>,
-    format: ResultFormat,
+    form: BacktestForm,
     headers: HeaderMap,
 ) -> Result<Response, ApiError> {
     let made = state.service.backtest_run(backtest_id(&id)?).await?;
-    let mut response = representation::found(validator(&made), format, &headers, || match format {
-        ResultFormat::Json => Ok(Body::from(made.document.clone())),
-        ResultFormat::Csv => csv(&made.document).map(Body::from),
-    })?;
+    let tag = form.tag(&made.tag);
+    let validator = Validator { tag: &tag, ..validator(&made) };
+    let mut response = representation::found(validator, form.format(), &headers, || content(&made, &form))?;
     response.headers_mut().insert("backtest-state", state_of(&made));
     Ok(response)
 }
@@ -110,7 +111,15 @@ fn state_of(made: &StoredBacktest) -> HeaderValue {
     HeaderValue::from_static(if made.summary.outdated { "outdated" } else { "current" })
 }
 
-fn csv(document: &str) -> Result<String, ApiError> {
-    let run: BacktestRun = serde_json::from_str(document).map_err(|error| ApiError::Broken(error.to_string()))?;
-    report::backtest_csv(&run).map_err(|error| ApiError::Broken(error.to_string()))
+fn content(made: &StoredBacktest, form: &BacktestForm) -> Result<Content, ApiError> {
+    let read = || -> Result<BacktestRun, ApiError> { runs::read(&made.document) };
+    Ok(match form {
+        BacktestForm::Json => Content::json(made.document.clone()),
+        BacktestForm::Csv => Content::csv(report::backtest_csv(&read()?))?,
+        BacktestForm::Svg(theme) => Content::markup(report::backtest_chart(&read()?, *theme)?.svg),
+        BacktestForm::Html(form) => {
+            let again = format!("{}{PATH}/{}", form.service, made.summary.id);
+            Content::markup(report::backtest_page(&read()?, &again, form.theme)?)
+        }
+    })
 }

@@ -5,13 +5,13 @@ mod job;
 
 use std::time::Duration;
 
-use axum::http::header::ACCEPT_ENCODING;
+use axum::http::header::{ACCEPT_ENCODING, LOCATION};
 use axum::http::{HeaderName, HeaderValue, StatusCode};
 use axum::response::{IntoResponse, Response};
 
 use super::decode::{At, Fault, Faults, Place};
 use super::problem::Problem;
-use crate::report::readable;
+use crate::report::{ChartError, ReportError, readable};
 use crate::service::{JobProblem, ServiceError, Thing};
 
 /// After how long to try again when all places are taken.
@@ -74,6 +74,13 @@ pub enum ApiError {
         /// Those we have.
         offered: &'static str,
     },
+    /// The answer has nothing of what the chart shows.
+    NoChart {
+        /// What it lacks, and what would help.
+        why: String,
+        /// Where the answer is kept, when the request made it.
+        kept: Option<String>,
+    },
     /// As many requests as configured are being served.
     Full,
     /// A use case failed.
@@ -88,12 +95,35 @@ impl From<ServiceError> for ApiError {
     }
 }
 
+impl From<ChartError> for ApiError {
+    fn from(error: ChartError) -> Self {
+        match error {
+            ChartError::Absent(why) => Self::NoChart { why, kept: None },
+            ChartError::Drawing(_) => Self::Broken(error.to_string()),
+        }
+    }
+}
+
+impl From<ReportError> for ApiError {
+    fn from(error: ReportError) -> Self {
+        Self::Broken(error.to_string())
+    }
+}
+
 impl ApiError {
     /// A single fault.
     pub fn fault(place: Place, detail: impl Into<String>) -> Self {
         let mut faults = Faults::default();
         faults.push(Fault { place, detail: detail.into() });
         Self::Invalid(faults)
+    }
+
+    /// The same, of an answer that is kept here all the same.
+    pub fn of_kept(self, place: String) -> Self {
+        match self {
+            Self::NoChart { why, .. } => Self::NoChart { why, kept: Some(place) },
+            other => other,
+        }
     }
 
     /// The error as a problem document: the table.
@@ -152,6 +182,7 @@ impl ApiError {
                 let detail = format!("What was asked for is offered as {offered}; name one of them in Accept.");
                 Problem::new(S::NOT_ACCEPTABLE, "not_acceptable", detail)
             }
+            Self::NoChart { why, kept } => no_chart(&why, kept),
             Self::Full => {
                 let detail = "As many requests as this service takes at once are being served; try again shortly.";
                 Problem::new(S::SERVICE_UNAVAILABLE, "overloaded", detail).retry_after(BUSY_RETRY)
@@ -250,6 +281,18 @@ fn service_problem(error: ServiceError) -> Problem {
         }
         error @ ServiceError::Store(_) => broken(error.to_string()),
         ServiceError::Broken(cause) => broken(cause),
+    }
+}
+
+/// What was computed is kept: the client is told where, and is not to compute it again.
+fn no_chart(why: &str, kept: Option<String>) -> Problem {
+    let why = readable(why);
+    let Some(place) = kept else { return Problem::new(StatusCode::UNPROCESSABLE_ENTITY, "no_chart", why) };
+    let detail = format!("{why} The run itself was made and is kept under {place}.");
+    let problem = Problem::new(StatusCode::UNPROCESSABLE_ENTITY, "no_chart", detail);
+    match HeaderValue::from_str(&place) {
+        Ok(place) => problem.with_header((LOCATION, place)),
+        Err(_) => problem,
     }
 }
 

@@ -2,19 +2,22 @@
 
 mod body;
 mod format;
+mod forms;
 mod key;
 mod link_list;
 mod listing;
-mod part;
 mod patience;
 mod place;
 
 pub use body::{JsonBody, OptionalJsonBody, RowsBody, read_json};
-pub use format::{ResultFormat, prefers_events};
+pub use format::{ResultFormat, TableFormat, prefers_events};
+pub use forms::{
+    BacktestForm, BacktestFormQuery, ComparisonForm, ComparisonFormQuery, FitForm, FitFormQuery, ForecastForm,
+    ForecastFormQuery,
+};
 pub use key::IdempotencyKey;
 pub use link_list::LinkListBody;
 pub use listing::Listing;
-pub use part::ForecastForm;
 pub use patience::Patience;
 pub use place::{date, network_name, question_name};
 

@@ -6,14 +6,14 @@ use axum::response::Response;
 use utoipa_axum::router::OpenApiRouter;
 use utoipa_axum::routes;
 
-use super::extract::{IdempotencyKey, JsonBody, Listing, ResultFormat, run_id};
+use super::extract::{FitForm, FitFormQuery, IdempotencyKey, JsonBody, Listing, ResultFormat, run_id};
 use super::problem::Problem;
-use super::representation::Conditions;
+use super::representation::{Conditions, Content};
 use super::requests::{FitRequestBody, read_fit};
 use super::runs::{self, RunForm, RunPage};
 use super::{ApiError, AppState, examples};
 use crate::report;
-use crate::service::{FitRun, RunKind};
+use crate::service::{FitRun, RunKind, StoredRun};
 
 /// Where these runs are kept.
 pub const PATH: &str = "/v1/fits";
@@ -31,7 +31,7 @@ pub fn routes() -> OpenApiRouter<AppState> {
     path = "/v1/fits",
     tag = "fits",
     params(
-        ("format" = inline(Option<ResultFormat>), Query, description = "Goes before Accept"),
+        FitFormQuery,
         ("Idempotency-Key" = Option<String>, Header,
             min_length = 1, max_length = 255,
             description = "Requests with the same key and body are one and the same: the run is made once. Bodies are \
@@ -46,6 +46,8 @@ pub fn routes() -> OpenApiRouter<AppState> {
         ), content(
             (FitRun = "application/json"),
             (String = "text/csv"),
+            (String = "image/svg+xml"),
+            (String = "text/html"),
         )),
         (status = 400, description = "Not JSON, or parts of it are wrong", body = Problem,
             content_type = "application/problem+json"),
@@ -56,7 +58,8 @@ pub fn routes() -> OpenApiRouter<AppState> {
         (status = 413, description = "The body is too large", body = Problem, content_type = "application/problem+json"),
         (status = 415, description = "The body is not announced as JSON, or is compressed", body = Problem,
             content_type = "application/problem+json"),
-        (status = 422, description = "Well formed, but no fit follows from it; the detail says what would help",
+        (status = 422, description = "Well formed, but no fit follows from it, or none of what the chart shows; the detail says what \
+            would help",
             body = Problem, content_type = "application/problem+json"),
         (status = 500, description = "A fault of ours", body = Problem, content_type = "application/problem+json"),
         (status = 503, description = "Too busy or too slow; Retry-After says when to try again", body = Problem,
@@ -65,7 +68,7 @@ pub fn routes() -> OpenApiRouter<AppState> {
 )]
 async fn create_fit(
     State(state): State<AppState>,
-    format: ResultFormat,
+    form: FitForm,
     key: IdempotencyKey,
     body: JsonBody,
 ) -> Result<Response, ApiError> {
@@ -73,7 +76,7 @@ async fn create_fit(
     let limits = state.limits;
     let inputs = body.read(move |raw, faults| read_fit(raw, &limits, faults)).await?;
     let run = state.service.create(inputs, None, claim).await?;
-    runs::created(PATH, run, format)
+    runs::created(PATH, run, form)
 }
 
 /// Read a fit
@@ -85,7 +88,7 @@ async fn create_fit(
     tag = "fits",
     params(
         ("id" = String, Path, description = "Id of the run"),
-        ("format" = inline(Option<ResultFormat>), Query, description = "Goes before Accept"),
+        FitFormQuery,
         ("If-None-Match" = Option<String>, Header, description = "Answer 304 when the run still has this ETag"),
     ),
     responses(
@@ -96,11 +99,15 @@ async fn create_fit(
         ), content(
             (FitRun = "application/json"),
             (String = "text/csv"),
+            (String = "image/svg+xml"),
+            (String = "text/html"),
         )),
         (status = 304, description = "The client has it already"),
         (status = 400, description = "A parameter is wrong", body = Problem, content_type = "application/problem+json"),
         (status = 404, description = "No such run", body = Problem, content_type = "application/problem+json"),
         (status = 406, description = "No acceptable form", body = Problem, content_type = "application/problem+json"),
+        (status = 422, description = "The run has nothing of what the chart shows; the detail says what would help", body = Problem,
+            content_type = "application/problem+json"),
         (status = 500, description = "A fault of ours", body = Problem, content_type = "application/problem+json"),
         (status = 503, description = "Too busy", body = Problem, content_type = "application/problem+json"),
     )
@@ -108,11 +115,11 @@ async fn create_fit(
 async fn get_fit(
     State(state): State<AppState>,
     Path(id): Path<String>,
-    format: ResultFormat,
+    form: FitForm,
     headers: HeaderMap,
 ) -> Result<Response, ApiError> {
     let run = state.service.run(RunKind::Fit, run_id(&id)?).await?;
-    runs::found(run, format, &headers)
+    runs::found(run, form, &headers)
 }
 
 /// List fits
@@ -171,18 +178,26 @@ async fn delete_fit(
     Ok(StatusCode::NO_CONTENT)
 }
 
-/// Fits have one table.
-impl RunForm for ResultFormat {
-    fn format(self) -> ResultFormat {
-        self
+impl RunForm for FitForm {
+    fn format(&self) -> ResultFormat {
+        Self::format(self)
     }
 
-    fn tag(self, tag: &str) -> String {
-        tag.to_owned()
+    fn tag(&self, tag: &str) -> String {
+        Self::tag(self, tag)
     }
 
-    fn csv(self, document: &str) -> Result<String, ApiError> {
-        let run: FitRun = serde_json::from_str(document).map_err(|error| ApiError::Broken(error.to_string()))?;
-        report::fit_csv(&run.answer).map_err(|error| ApiError::Broken(error.to_string()))
+    fn content(&self, run: &StoredRun) -> Result<Content, ApiError> {
+        let document = &run.document;
+        let read = || -> Result<FitRun, ApiError> { runs::read(document) };
+        Ok(match self {
+            Self::Json => Content::json(document.clone()),
+            Self::Csv => Content::csv(report::fit_csv(&read()?.answer))?,
+            Self::Svg(chart, theme) => Content::markup(report::fit_chart(&read()?.answer, *chart, *theme)?.svg),
+            Self::Html(form) => {
+                let again = format!("{}{PATH}/{}", form.service, run.id);
+                Content::markup(report::fit_page(&read()?, &again, form.theme)?)
+            }
+        })
     }
 }

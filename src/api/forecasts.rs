@@ -6,14 +6,14 @@ use axum::response::Response;
 use utoipa_axum::router::OpenApiRouter;
 use utoipa_axum::routes;
 
-use super::extract::{ForecastForm, IdempotencyKey, JsonBody, Listing, ResultFormat, run_id};
+use super::extract::{ForecastForm, ForecastFormQuery, IdempotencyKey, JsonBody, Listing, ResultFormat, run_id};
 use super::problem::Problem;
-use super::representation::Conditions;
+use super::representation::{Conditions, Content};
 use super::requests::{ForecastRequestBody, read_forecast};
 use super::runs::{self, RunForm, RunPage};
 use super::{ApiError, AppState, examples};
-use crate::report::{self, ForecastPart};
-use crate::service::{ForecastRun, RunKind};
+use crate::report;
+use crate::service::{ForecastRun, RunKind, StoredRun};
 
 /// Where these runs are kept.
 pub const PATH: &str = "/v1/forecasts";
@@ -31,8 +31,7 @@ pub fn routes() -> OpenApiRouter<AppState> {
     path = "/v1/forecasts",
     tag = "forecasts",
     params(
-        ("format" = inline(Option<ResultFormat>), Query, description = "Goes before Accept"),
-        ("part" = inline(Option<ForecastPart>), Query, description = "Which table of CSV; `tail` when left out"),
+        ForecastFormQuery,
         ("Idempotency-Key" = Option<String>, Header,
             min_length = 1, max_length = 255,
             description = "Requests with the same key and body are one and the same: the run is made once. Bodies are \
@@ -47,6 +46,8 @@ pub fn routes() -> OpenApiRouter<AppState> {
         ), content(
             (ForecastRun = "application/json"),
             (String = "text/csv"),
+            (String = "image/svg+xml"),
+            (String = "text/html"),
         )),
         (status = 400, description = "Not JSON, or parts of it are wrong", body = Problem,
             content_type = "application/problem+json"),
@@ -57,7 +58,8 @@ pub fn routes() -> OpenApiRouter<AppState> {
         (status = 413, description = "The body is too large", body = Problem, content_type = "application/problem+json"),
         (status = 415, description = "The body is not announced as JSON, or is compressed", body = Problem,
             content_type = "application/problem+json"),
-        (status = 422, description = "Well formed, but no forecast follows from it; the detail says what would help",
+        (status = 422, description = "Well formed, but no forecast follows from it, or none of what the chart shows; the detail says \
+            what would help",
             body = Problem, content_type = "application/problem+json"),
         (status = 500, description = "A fault of ours", body = Problem, content_type = "application/problem+json"),
         (status = 503, description = "Too busy or too slow; Retry-After says when to try again", body = Problem,
@@ -86,8 +88,7 @@ async fn create_forecast(
     tag = "forecasts",
     params(
         ("id" = String, Path, description = "Id of the run"),
-        ("format" = inline(Option<ResultFormat>), Query, description = "Goes before Accept"),
-        ("part" = inline(Option<ForecastPart>), Query, description = "Which table of CSV; `tail` when left out"),
+        ForecastFormQuery,
         ("If-None-Match" = Option<String>, Header, description = "Answer 304 when the run still has this ETag"),
     ),
     responses(
@@ -98,11 +99,15 @@ async fn create_forecast(
         ), content(
             (ForecastRun = "application/json"),
             (String = "text/csv"),
+            (String = "image/svg+xml"),
+            (String = "text/html"),
         )),
         (status = 304, description = "The client has it already"),
         (status = 400, description = "A parameter is wrong", body = Problem, content_type = "application/problem+json"),
         (status = 404, description = "No such run", body = Problem, content_type = "application/problem+json"),
         (status = 406, description = "No acceptable form", body = Problem, content_type = "application/problem+json"),
+        (status = 422, description = "The run has nothing of what the chart shows; the detail says what would help", body = Problem,
+            content_type = "application/problem+json"),
         (status = 500, description = "A fault of ours", body = Problem, content_type = "application/problem+json"),
         (status = 503, description = "Too busy", body = Problem, content_type = "application/problem+json"),
     )
@@ -174,16 +179,27 @@ async fn delete_forecast(
 }
 
 impl RunForm for ForecastForm {
-    fn format(self) -> ResultFormat {
-        self.format
+    fn format(&self) -> ResultFormat {
+        Self::format(self)
     }
 
-    fn tag(self, tag: &str) -> String {
+    fn tag(&self, tag: &str) -> String {
         Self::tag(self, tag)
     }
 
-    fn csv(self, document: &str) -> Result<String, ApiError> {
-        let run: ForecastRun = serde_json::from_str(document).map_err(|error| ApiError::Broken(error.to_string()))?;
-        report::part_csv(&run.answer, self.part).map_err(|error| ApiError::Broken(error.to_string()))
+    fn content(&self, run: &StoredRun) -> Result<Content, ApiError> {
+        let document = &run.document;
+        let read = || -> Result<ForecastRun, ApiError> { runs::read(document) };
+        Ok(match self {
+            Self::Json => Content::json(document.clone()),
+            Self::Csv(part) => Content::csv(report::part_csv(&read()?.answer, *part))?,
+            Self::Svg(chart, threshold, theme) => {
+                Content::markup(report::forecast_chart(&read()?.answer, *chart, *threshold, *theme)?.svg)
+            }
+            Self::Html(form) => {
+                let again = format!("{}{PATH}/{}", form.service, run.id);
+                Content::markup(report::forecast_page(&read()?, &again, form.theme)?)
+            }
+        })
     }
 }

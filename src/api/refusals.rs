@@ -13,6 +13,9 @@ pub struct Refusals;
 /// How reading a representation can fail besides.
 pub struct FormRefusals;
 
+/// How reading a chart can fail besides.
+pub struct ChartRefusals;
+
 /// How reading a body can fail besides.
 pub struct BodyRefusals;
 
@@ -33,6 +36,12 @@ impl IntoResponses for Refusals {
 impl IntoResponses for FormRefusals {
     fn responses() -> Responses {
         problems(&[(406, "No acceptable form")])
+    }
+}
+
+impl IntoResponses for ChartRefusals {
+    fn responses() -> Responses {
+        problems(&[(422, "It has nothing of what the chart shows; the detail says what would help")])
     }
 }
 

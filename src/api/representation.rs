@@ -1,5 +1,7 @@
 //! Representations of what is kept, with their validators (RFC 9110, sections 8.8 and 13).
 
+use std::fmt::Display;
+
 use axum::body::Body;
 use axum::extract::FromRequestParts;
 use axum::http::request::Parts;
@@ -9,6 +11,7 @@ use jiff::Timestamp;
 
 use super::extract::ResultFormat;
 use super::{ApiError, AppState};
+use crate::report::content_policy;
 
 /// What tells one state of something kept from another.
 #[derive(Debug, Clone, Copy)]
@@ -19,36 +22,78 @@ pub struct Validator<'a> {
     pub modified: Option<Timestamp>,
 }
 
+/// What a representation holds, and what a browser may load for it.
+pub struct Content {
+    body: Body,
+    policy: Option<String>,
+}
+
+impl From<Body> for Content {
+    fn from(body: Body) -> Self {
+        Self { body, policy: None }
+    }
+}
+
+impl Content {
+    /// A document as it is kept.
+    pub fn json(document: String) -> Self {
+        Body::from(document).into()
+    }
+
+    /// A table.
+    pub fn csv<E: Display>(table: Result<String, E>) -> Result<Self, ApiError> {
+        table.map(|text| Body::from(text).into()).map_err(|error| ApiError::Broken(format!("writing CSV: {error}")))
+    }
+
+    /// SVG or HTML, which may load nothing and style itself by nothing but what it has within.
+    pub fn markup(text: String) -> Self {
+        Self { policy: Some(content_policy(&text)), body: Body::from(text) }
+    }
+
+    /// A response in a form, without validators.
+    pub fn into_response(self, format: ResultFormat) -> Result<Response, ApiError> {
+        let mut response = Response::new(self.body);
+        let headers = response.headers_mut();
+        headers.insert(header::CONTENT_TYPE, HeaderValue::from_static(format.content_type()));
+        if let Some(policy) = &self.policy {
+            headers.insert(header::CONTENT_SECURITY_POLICY, header_value(policy)?);
+        }
+        Ok(response)
+    }
+}
+
 /// 200 with a representation, or 304 when the client has it already.
-pub fn found(
+pub fn found<C: Into<Content>>(
     validator: Validator<'_>,
     format: ResultFormat,
     asked: &HeaderMap,
-    body: impl FnOnce() -> Result<Body, ApiError>,
+    content: impl FnOnce() -> Result<C, ApiError>,
 ) -> Result<Response, ApiError> {
     if is_unmodified(asked, &entity_tag(validator.tag, format), validator.modified) {
         let mut response = StatusCode::NOT_MODIFIED.into_response();
         *response.headers_mut() = validators(validator, format)?;
         return Ok(response);
     }
-    represented(validator, format, body()?)
+    represented(validator, format, content()?)
 }
 
 /// A representation with its validators.
-pub fn represented(validator: Validator<'_>, format: ResultFormat, body: Body) -> Result<Response, ApiError> {
-    let mut headers = validators(validator, format)?;
-    headers.insert(header::CONTENT_TYPE, HeaderValue::from_static(format.content_type()));
-    let mut response = Response::new(body);
-    *response.headers_mut() = headers;
+pub fn represented(
+    validator: Validator<'_>,
+    format: ResultFormat,
+    content: impl Into<Content>,
+) -> Result<Response, ApiError> {
+    let mut response = content.into().into_response(format)?;
+    response.headers_mut().extend(validators(validator, format)?);
     Ok(response)
 }
 
-/// Strong validator of one form of something kept. The CSV is made anew by each version, so the version is part of its
-/// validator.
+/// Strong validator of one form of something kept. All forms but JSON are made anew by each version, so the version is part of
+/// their validator.
 pub fn entity_tag(tag: &str, format: ResultFormat) -> String {
     match format {
         ResultFormat::Json => format!("\"{tag}\""),
-        ResultFormat::Csv => format!("\"{tag}-csv-{}\"", env!("CARGO_PKG_VERSION")),
+        made => format!("\"{tag}-{}-{}\"", made.name(), env!("CARGO_PKG_VERSION")),
     }
 }
 

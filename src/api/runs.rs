@@ -1,14 +1,14 @@
-//! Answers about kept runs: their two forms, lists.
+//! Answers about kept runs: their forms, lists.
 
-use axum::body::Body;
 use axum::http::{HeaderMap, StatusCode, header};
 use axum::response::{IntoResponse, Response};
 use serde::Serialize;
+use serde::de::DeserializeOwned;
 use utoipa::ToSchema;
 use uuid::Uuid;
 
 use super::extract::{Listing, ResultFormat};
-use super::representation::{self, Validator, header_value};
+use super::representation::{self, Content, Validator, header_value};
 use super::{ApiError, pages};
 use crate::service::{RunSummary, StoredRun};
 
@@ -61,25 +61,35 @@ impl From<RunSummary> for RunLine {
 }
 
 /// The form that a kind of run is answered in.
-pub trait RunForm: Copy {
-    /// JSON or CSV.
-    fn format(self) -> ResultFormat;
+pub trait RunForm {
+    /// The form.
+    fn format(&self) -> ResultFormat;
 
-    /// The run's validator in this form, but for what JSON and CSV add.
-    fn tag(self, tag: &str) -> String;
+    /// The run's validator in this form, but for what [`representation::entity_tag`] adds.
+    fn tag(&self, tag: &str) -> String;
 
-    /// A kept document as CSV.
+    /// A kept run in this form.
     ///
     /// # Errors
-    /// When the document is none that was kept.
-    fn csv(self, document: &str) -> Result<String, ApiError>;
+    /// When the run has nothing of what is to be shown, or its document is none that was kept.
+    fn content(&self, run: &StoredRun) -> Result<Content, ApiError>;
+}
+
+/// A document as it was kept.
+///
+/// # Errors
+/// When it is none of these.
+pub fn read<T: DeserializeOwned>(document: &str) -> Result<T, ApiError> {
+    serde_json::from_str(document).map_err(|error| ApiError::Broken(format!("a document that was kept: {error}")))
 }
 
 /// 201 with the run and where it is kept.
 pub fn created(path: &str, run: StoredRun, form: impl RunForm) -> Result<Response, ApiError> {
-    let location = header_value(&format!("{path}/{}", run.id))?;
+    let place = format!("{path}/{}", run.id);
+    let location = header_value(&place)?;
+    let content = form.content(&run).map_err(|error| error.of_kept(place))?;
     let tag = form.tag(&run.tag);
-    let represented = representation::represented(validator(&tag, &run), form.format(), body(&run, form)?)?;
+    let represented = representation::represented(validator(&tag, &run), form.format(), content)?;
     let mut response = (StatusCode::CREATED, represented).into_response();
     response.headers_mut().insert(header::LOCATION, location);
     Ok(response)
@@ -88,7 +98,7 @@ pub fn created(path: &str, run: StoredRun, form: impl RunForm) -> Result<Respons
 /// 200 with the run, or 304 when the client has it already.
 pub fn found(run: StoredRun, form: impl RunForm, asked: &HeaderMap) -> Result<Response, ApiError> {
     let tag = form.tag(&run.tag);
-    representation::found(validator(&tag, &run), form.format(), asked, || body(&run, form))
+    representation::found(validator(&tag, &run), form.format(), asked, || form.content(&run))
 }
 
 /// A page of runs with a Link to the next one.
@@ -100,13 +110,6 @@ pub fn page(path: &str, listing: &Listing, runs: Vec<RunSummary>, more: bool) ->
 /// A run never changes.
 fn validator<'a>(tag: &'a str, run: &StoredRun) -> Validator<'a> {
     Validator { tag, modified: Some(run.created_at) }
-}
-
-fn body(run: &StoredRun, form: impl RunForm) -> Result<Body, ApiError> {
-    Ok(match form.format() {
-        ResultFormat::Json => Body::from(run.document.clone()),
-        ResultFormat::Csv => Body::from(form.csv(&run.document)?),
-    })
 }
 
 fn next_page(path: &str, listing: &Listing, last: Uuid) -> String {

@@ -1,29 +1,25 @@
 //! `forecast`: the same request body and the same answer as over HTTP, with no server and no database.
 
 mod completion;
+mod look;
 
 use std::fmt::Write as _;
 use std::io::Read;
 use std::path::Path;
 
-use super::{OutputFormat, Stop, print};
+use super::{Stop, print};
 use crate::api::{self, ApiError, Problem};
 use crate::config::Config;
-use crate::report::{self, ForecastPart};
+use crate::report::{self, ChartError};
 use crate::service::{self, ServiceError};
 
+use completion::shell_word;
+
 pub use completion::Completion;
+pub use look::{Form, Look};
 
 /// Answers the request in `file`, with what `completion` puts over its fields.
-pub fn forecast(
-    config: &Config,
-    file: &Path,
-    completion: &Completion,
-    (format, part): (OutputFormat, Option<ForecastPart>),
-) -> Result<(), Stop> {
-    if part.is_some() && format != OutputFormat::Csv {
-        return Err(Stop::Refused("tailcast: --part goes with --format csv; the other forms tell everything\n".into()));
-    }
+pub fn forecast(config: &Config, file: &Path, completion: &Completion, form: &Form) -> Result<(), Stop> {
     let bytes = completion.over(read(file)?)?;
     let refused = |error: ApiError| Stop::Refused(in_words(&error.into_problem()));
     let inputs =
@@ -32,15 +28,30 @@ pub fn forecast(
         ServiceError::TooSlow { .. } => Stop::Failed(ApiError::from(error).into_problem().detail().to_owned()),
         other => refused(other.into()),
     })?;
-    let text = match format {
-        OutputFormat::Table => report::forecast_table(&answer),
-        OutputFormat::Csv => report::part_csv(&answer, part.unwrap_or(ForecastPart::Tail))
-            .map_err(|error| Stop::failed("writing CSV", error))?,
-        OutputFormat::Json => {
+    let text = match form {
+        Form::Table => report::forecast_table(&answer),
+        Form::Csv(part) => report::part_csv(&answer, *part).map_err(|error| Stop::failed("writing CSV", error))?,
+        Form::Json => {
             serde_json::to_string_pretty(&answer).map_err(|error| Stop::failed("writing JSON", error))? + "\n"
+        }
+        Form::Svg(chart, threshold, theme) => {
+            report::forecast_chart(&answer, *chart, *threshold, *theme).map_err(undrawn)?.svg + "\n"
+        }
+        Form::Html(theme) => {
+            let command =
+                format!("tailcast forecast {}{}", shell_word(&file.display().to_string()), completion.options());
+            report::inline_page(&answer, &command, *theme).map_err(|error| Stop::failed("the report", error))?
         }
     };
     print(&text)
+}
+
+/// A chart of what the answer lacks is asked for in vain; a drawing that fails is a fault of ours.
+fn undrawn(error: ChartError) -> Stop {
+    match error {
+        ChartError::Absent(why) => Stop::Refused(format!("tailcast: no chart: {why}\n")),
+        error @ ChartError::Drawing(_) => Stop::failed("the chart", error),
+    }
 }
 
 fn read(file: &Path) -> Result<Vec<u8>, Stop> {

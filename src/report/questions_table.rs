@@ -3,9 +3,13 @@
 use super::csv::percent;
 use super::table::align;
 use super::text::{figure, wrap};
+use super::words::{
+    band_range, bands_title, chance, crossing_words, ends, limit_title, rate_words, reached, scenario_costs, short,
+    signed, watch_words,
+};
 use crate::service::{
-    AmountAnswer, BandsAnswer, DateAtAnswer, ForecastAnswer, IntervalAnswer, LimitAnswer, NextHubsAnswer,
-    ScenarioAnswer, TailDifferenceAnswer, WatchAnswer,
+    AmountAnswer, BandsAnswer, ForecastAnswer, IntervalAnswer, LimitAnswer, NextHubsAnswer, ScenarioAnswer,
+    TailDifferenceAnswer, WatchAnswer,
 };
 
 /// Widest line of prose.
@@ -22,10 +26,10 @@ pub fn question_lines(answer: &ForecastAnswer) -> Vec<String> {
         lines.extend(inside);
     };
     for limit in &answer.limits {
-        block(limit_title(limit), limit_lines(limit));
+        block(limit_title(limit, NAME_CHARS), limit_lines(limit));
     }
     if let Some(bands) = &answer.bands {
-        block(bands_title(bands), bands_lines(bands));
+        block(bands_title(bands, NAME_CHARS), bands_lines(bands));
     }
     if let Some(watch) = &answer.watch {
         block("Watched nodes, and their chance to pass each threshold".to_owned(), watch_lines(watch));
@@ -34,38 +38,14 @@ pub fn question_lines(answer: &ForecastAnswer) -> Vec<String> {
         block("Largest nodes".to_owned(), hub_lines(&answer.next_hubs));
     }
     for scenario in &answer.scenarios {
-        block(format!("What if: {}", short(&scenario.name)), scenario_lines(scenario));
+        block(format!("What if: {}", short(&scenario.name, NAME_CHARS)), scenario_lines(scenario));
     }
     lines
 }
 
-fn limit_title(limit: &LimitAnswer) -> String {
-    let name = limit.name.as_deref().map(|name| format!(" {}", short(name))).unwrap_or_default();
-    format!(
-        "Limit{name}: at most {} nodes with >= {} links until {}, at a risk of {}",
-        figure(limit.max_nodes as f64),
-        figure(limit.threshold as f64),
-        limit.by,
-        chance(limit.risk.0)
-    )
-}
-
 fn limit_lines(limit: &LimitAnswer) -> Vec<String> {
-    let mut lines = paragraph(&limit.verdict);
-    let crossing: Vec<String> =
-        limit.crossing.iter().map(|at| format!("{} {}", chance(at.probability.0), by_date(at))).collect();
-    let left = limit.days_left.map(|days| format!(", in {} days", figure(days.0.round()))).unwrap_or_default();
-    lines.extend(paragraph(&format!(
-        "{} such nodes today. Crossed with probability {}; the risk is reached {}{left}.",
-        figure(limit.now as f64),
-        crossing.join(", "),
-        by_date(&limit.risk_reached)
-    )));
-    for (rate, found) in [("Arrivals", &limit.arrivals), ("Links per arrival", &limit.links_per_arrival)] {
-        if !found.detail.is_empty() {
-            lines.extend(paragraph(&format!("{rate}: {}.", found.detail.trim_end_matches('.'))));
-        }
-    }
+    let words = [limit.verdict.clone(), crossing_words(limit)].into_iter().chain(rate_words(limit));
+    let mut lines: Vec<String> = words.flat_map(|text| paragraph(&text)).collect();
     let mut cells = vec![["date", "above the limit", "crossed by then"].map(str::to_owned).to_vec()];
     for at in &limit.dates {
         cells.push(vec![at.date.clone(), chance(at.exceeding.0), chance(at.crossed.0)]);
@@ -74,23 +54,13 @@ fn limit_lines(limit: &LimitAnswer) -> Vec<String> {
     lines
 }
 
-fn bands_title(bands: &BandsAnswer) -> String {
-    let unit = bands.cost_unit.as_deref().map(|unit| format!(" in {}", short(unit))).unwrap_or_default();
-    let peak = bands.peak.as_deref().map(|date| format!("; highest at {date}")).unwrap_or_default();
-    format!("Costs{unit}: now {}{peak}", figure(bands.now.0))
-}
-
 fn bands_lines(bands: &BandsAnswer) -> Vec<String> {
     let first = bands.dates.first().map(|at| at.total.intervals.as_slice()).unwrap_or_default();
     let mut cells = vec![["date", "links", "nodes", "expected"].map(str::to_owned).to_vec()];
     add_interval_title(&mut cells, first);
     for at in &bands.dates {
         for band in &at.bands {
-            let range = match band.to {
-                Some(to) => format!("{} to {}", figure(band.from as f64), figure(to as f64)),
-                None => format!(">= {}", figure(band.from as f64)),
-            };
-            cells.push(amount_row(vec![String::new(), range, figure(band.nodes.0)], &band.cost));
+            cells.push(amount_row(vec![String::new(), band_range(band), figure(band.nodes.0)], &band.cost));
         }
         let total = amount_row(vec![at.date.clone(), "total".to_owned(), String::new()], &at.total);
         cells.push(total);
@@ -104,7 +74,7 @@ fn watch_lines(watch: &WatchAnswer) -> Vec<String> {
     ];
     for node in &watch.nodes {
         let expected = node.dates.last().map(|at| figure(at.expected.0)).unwrap_or_default();
-        let own = vec![short(&node.name), figure(node.degree as f64), expected];
+        let own = vec![short(&node.name, NAME_CHARS), figure(node.degree as f64), expected];
         if node.passing.is_empty() {
             cells.push([own.clone(), vec!["past all".to_owned()]].concat());
         }
@@ -116,24 +86,7 @@ fn watch_lines(watch: &WatchAnswer) -> Vec<String> {
         }
     }
     let mut lines = if watch.nodes.is_empty() { Vec::new() } else { indented(&cells) };
-    if !watch.likeliest.is_empty() {
-        let names: Vec<String> = watch.likeliest.iter().take(5).map(|name| short(name)).collect();
-        lines.extend(paragraph(&format!("Likeliest to be past the highest threshold: {}.", names.join(", "))));
-    }
-    for class in &watch.classes {
-        let range = format!("{} to {} links", figure(class.from as f64), figure(class.to as f64));
-        for passing in &class.passing {
-            let Some(last) = passing.dates.last() else { continue };
-            let widest = last.passed.intervals.last().map(interval_in_words).unwrap_or_default();
-            lines.extend(paragraph(&format!(
-                "Of {} nodes with {range}, {} are expected to pass {} by {}{widest}.",
-                figure(class.nodes as f64),
-                figure(last.passed.expected.0),
-                figure(passing.threshold as f64),
-                last.date
-            )));
-        }
-    }
+    lines.extend(watch_words(watch, NAME_CHARS).iter().flat_map(|text| paragraph(text)));
     lines
 }
 
@@ -173,12 +126,9 @@ fn scenario_lines(scenario: &ScenarioAnswer) -> Vec<String> {
     }
     lines.extend(indented(&cells));
     for limit in &scenario.limits {
-        lines.extend(paragraph(&format!("{}: {}", limit_title(limit), limit.verdict)));
+        lines.extend(paragraph(&format!("{}: {}", limit_title(limit, NAME_CHARS), limit.verdict)));
     }
-    if let Some((bands, last)) = scenario.bands.as_ref().and_then(|bands| Some((bands, bands.dates.last()?))) {
-        let unit = bands.cost_unit.as_deref().map(|unit| format!(" {}", short(unit))).unwrap_or_default();
-        lines.extend(paragraph(&format!("Costs at {}: {}{unit}.", last.date, figure(last.total.expected.0))));
-    }
+    lines.extend(scenario_costs(scenario, NAME_CHARS).iter().flat_map(|text| paragraph(text)));
     lines
 }
 
@@ -195,50 +145,6 @@ fn amount_row(mut row: Vec<String>, amount: &AmountAnswer) -> Vec<String> {
     row
 }
 
-fn ends(interval: &IntervalAnswer) -> String {
-    format!("{} to {}", figure(interval.low.0), figure(interval.high.0))
-}
-
-fn interval_in_words(interval: &IntervalAnswer) -> String {
-    format!(" ({} % interval {})", percent(interval.level.0), ends(interval))
-}
-
-/// A difference with its sign.
-fn signed(value: f64) -> String {
-    if value < 0.0 { format!("-{}", figure(-value)) } else { format!("+{}", figure(value)) }
-}
-
-/// A probability as a percentage; what rounds to certainty and is not certain says so.
-fn chance(probability: f64) -> String {
-    match 100.0 * probability {
-        p if p > 0.0 && p < 0.1 => "<0.1 %".to_owned(),
-        p if p > 99.9 && p < 100.0 => ">99.9 %".to_owned(),
-        p => format!("{} %", percent((p * 10.0).round() / 1000.0)),
-    }
-}
-
-fn reached(at: &DateAtAnswer) -> String {
-    at.date.as_deref().map_or("-", day).to_owned()
-}
-
-fn by_date(at: &DateAtAnswer) -> String {
-    at.date.as_ref().map_or("at no date looked at".to_owned(), |date| format!("by {}", day(date)))
-}
-
-/// The day of a date, whatever its time.
-fn day(date: &str) -> &str {
-    date.split('T').next().unwrap_or(date)
-}
-
-/// A caller's text on one short line.
-fn short(name: &str) -> String {
-    let plain: String = name.chars().map(|c| if c.is_control() { ' ' } else { c }).collect();
-    match plain.char_indices().nth(NAME_CHARS) {
-        Some((end, _)) => format!("{}…", plain.get(..end).unwrap_or_default()),
-        None => plain,
-    }
-}
-
 fn paragraph(text: &str) -> Vec<String> {
     if text.is_empty() {
         return Vec::new();
@@ -248,24 +154,4 @@ fn paragraph(text: &str) -> Vec<String> {
 
 fn indented(cells: &[Vec<String>]) -> Vec<String> {
     align(cells).into_iter().map(|line| format!("  {line}")).collect()
-}
-
-#[cfg(test)]
-mod tests {
-    use super::*;
-
-    #[test]
-    fn chances_are_never_rounded_to_certainty() {
-        for (probability, text) in
-            [(0.0, "0 %"), (1e-9, "<0.1 %"), (0.05, "5 %"), (0.1234, "12.3 %"), (0.99999, ">99.9 %"), (1.0, "100 %")]
-        {
-            assert_eq!(chance(probability), text);
-        }
-    }
-
-    #[test]
-    fn a_callers_name_stays_on_its_line() {
-        assert_eq!(short("fan-out\nshards"), "fan-out shards");
-        assert_eq!(short(&"ä".repeat(30)).chars().count(), NAME_CHARS + 1);
-    }
 }

@@ -17,17 +17,64 @@ pub enum ResultFormat {
     Json,
     /// A table, RFC 4180.
     Csv,
+    /// A chart.
+    Svg,
+    /// A report of one page.
+    Html,
 }
 
+/// The form of what is rows and nothing else.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, ToSchema)]
+#[schema(rename_all = "snake_case")]
+pub enum TableFormat {
+    /// JSON.
+    Json,
+    /// A table, RFC 4180.
+    Csv,
+}
+
+/// The forms that something comes in, the default first.
+#[derive(Debug)]
+pub struct Offer {
+    formats: &'static [ResultFormat],
+    /// Their names in a query, in words.
+    names: &'static str,
+    /// Their media types, in words.
+    media_types: &'static str,
+}
+
+/// What a result comes in.
+pub const FACES: Offer = Offer {
+    formats: &[ResultFormat::Json, ResultFormat::Csv, ResultFormat::Svg, ResultFormat::Html],
+    names: "json, csv, svg and html",
+    media_types: "application/json, text/csv, image/svg+xml and text/html",
+};
+
+/// What rows come in.
+pub const TABLES: Offer = Offer {
+    formats: &[ResultFormat::Json, ResultFormat::Csv],
+    names: "json and csv",
+    media_types: "application/json and text/csv",
+};
+
 impl ResultFormat {
-    /// Every form, the default first.
-    const ALL: [Self; 2] = [Self::Json, Self::Csv];
+    /// Its name in a query.
+    pub fn name(self) -> &'static str {
+        match self {
+            Self::Json => "json",
+            Self::Csv => "csv",
+            Self::Svg => "svg",
+            Self::Html => "html",
+        }
+    }
 
     /// The media type in a Content-Type header.
     pub fn content_type(self) -> &'static str {
         match self {
             Self::Json => "application/json",
             Self::Csv => "text/csv; charset=utf-8; header=present",
+            Self::Svg => "image/svg+xml",
+            Self::Html => "text/html; charset=utf-8",
         }
     }
 
@@ -35,45 +82,58 @@ impl ResultFormat {
         match self {
             Self::Json => ("application", "json"),
             Self::Csv => ("text", "csv"),
+            Self::Svg => ("image", "svg+xml"),
+            Self::Html => ("text", "html"),
+        }
+    }
+
+    /// The form that the query, or else the client's headers, ask for of those on offer; `faults` are those of the query so far.
+    pub fn of(
+        given: &[(String, String)],
+        headers: &HeaderMap,
+        offer: &Offer,
+        mut faults: Faults,
+    ) -> Result<Self, ApiError> {
+        let asked = given.iter().find(|(name, _)| name == "format");
+        let format = asked.map(|(_, value)| offer.formats.iter().copied().find(|format| format.name() == value));
+        if format == Some(None) {
+            let detail = format!("the forms are {}", offer.names);
+            faults.push(Fault { place: Place::Query("format".into()), detail });
+        }
+        if !faults.is_empty() {
+            return Err(ApiError::Invalid(faults));
+        }
+        let refused = ApiError::NotAcceptable { offered: offer.media_types };
+        format.flatten().or_else(|| accepted(headers, offer)).ok_or(refused)
+    }
+}
+
+impl From<TableFormat> for ResultFormat {
+    fn from(format: TableFormat) -> Self {
+        match format {
+            TableFormat::Json => Self::Json,
+            TableFormat::Csv => Self::Csv,
         }
     }
 }
 
-impl FromRequestParts<AppState> for ResultFormat {
+impl FromRequestParts<AppState> for TableFormat {
     type Rejection = ApiError;
 
     async fn from_request_parts(parts: &mut Parts, _state: &AppState) -> Result<Self, ApiError> {
         let mut faults = Faults::default();
         let given = parameters(&parts.uri, &["format"], &mut faults);
-        Self::of(&given, &parts.headers, faults)
-    }
-}
-
-impl ResultFormat {
-    /// The form that the query, or else the client's headers, ask for; `faults` are those of the query so far.
-    pub fn of(given: &[(String, String)], headers: &HeaderMap, mut faults: Faults) -> Result<Self, ApiError> {
-        let asked = given.iter().find(|(name, _)| name == "format");
-        let format = match asked.map(|(_, value)| value.as_str()) {
-            None => None,
-            Some("json") => Some(Self::Json),
-            Some("csv") => Some(Self::Csv),
-            Some(_) => {
-                let detail = "the forms are json and csv".into();
-                faults.push(Fault { place: Place::Query("format".into()), detail });
-                None
-            }
-        };
-        if !faults.is_empty() {
-            return Err(ApiError::Invalid(faults));
+        match ResultFormat::of(&given, &parts.headers, &TABLES, faults)? {
+            ResultFormat::Csv => Ok(Self::Csv),
+            _ => Ok(Self::Json),
         }
-        let offered = "application/json and text/csv";
-        format.or_else(|| accepted(headers)).ok_or(ApiError::NotAcceptable { offered })
     }
 }
 
-/// The form the client likes best of those we have; none when it takes none of them.
-fn accepted(headers: &HeaderMap) -> Option<ResultFormat> {
-    best(headers, &ResultFormat::ALL.map(|format| (format, format.media_type())))
+/// The form the client likes best of those on offer; none when it takes none of them.
+fn accepted(headers: &HeaderMap, offer: &Offer) -> Option<ResultFormat> {
+    let offers: Vec<_> = offer.formats.iter().map(|&format| (format, format.media_type())).collect();
+    best(headers, &offers)
 }
 
 /// Whether the client likes a stream of events better than one answer in JSON.
@@ -148,22 +208,42 @@ mod tests {
 
     #[test]
     fn the_best_liked_form_wins() {
-        use ResultFormat::{Csv, Json};
+        use ResultFormat::{Csv, Html, Json, Svg};
+        // What browsers send from their address bar and for an <img>, as three of them do: from memory.
+        let page = "text/html,application/xhtml+xml,application/xml;q=0.9,image/avif,image/webp,image/apng,*/*;q=0.8";
+        let picture = "image/avif,image/webp,image/apng,image/svg+xml,image/*,*/*;q=0.8";
         for (accept, expected) in [
             ("*/*", Some(Json)),
             ("text/csv", Some(Csv)),
             ("application/json;q=0.5, text/csv", Some(Csv)),
             ("text/*, application/json;q=0.1", Some(Csv)),
-            ("text/html, application/xhtml+xml, */*;q=0.8", Some(Json)),
+            (page, Some(Html)),
+            (picture, Some(Svg)),
+            ("image/*", Some(Svg)),
+            ("text/html", Some(Html)),
+            ("image/svg+xml;q=0.2, text/html;q=0.3, */*;q=0.1", Some(Html)),
             ("*/*, application/json;q=0", Some(Csv)),
             ("image/png", None),
             ("application/json;q=0", None),
             ("nonsense", Some(Json)),
         ] {
             let headers = HeaderMap::from_iter([(header::ACCEPT, HeaderValue::from_static(accept))]);
-            assert_eq!(accepted(&headers), expected, "{accept}");
+            assert_eq!(accepted(&headers, &FACES), expected, "{accept}");
         }
-        assert_eq!(accepted(&HeaderMap::new()), Some(Json));
+        assert_eq!(accepted(&HeaderMap::new(), &FACES), Some(Json));
+    }
+
+    #[test]
+    fn rows_have_no_pictures() {
+        for (accept, expected) in [
+            ("image/svg+xml", None),
+            ("text/html", None),
+            ("text/html, */*;q=0.8", Some(ResultFormat::Json)),
+            ("text/*", Some(ResultFormat::Csv)),
+        ] {
+            let headers = HeaderMap::from_iter([(header::ACCEPT, HeaderValue::from_static(accept))]);
+            assert_eq!(accepted(&headers, &TABLES), expected, "{accept}");
+        }
     }
 
     #[test]

@@ -7,7 +7,7 @@ use axum::response::Response;
 use utoipa_axum::router::OpenApiRouter;
 use utoipa_axum::routes;
 
-use crate::api::extract::{ResultFormat, network_name};
+use crate::api::extract::{TableFormat, network_name};
 use crate::api::refusals::{FormRefusals, Refusals};
 use crate::api::representation::{self, Validator};
 use crate::api::{ApiError, AppState};
@@ -30,7 +30,7 @@ pub fn routes() -> OpenApiRouter<AppState> {
     tag = "networks",
     params(
         ("name" = String, Path, description = "The network"),
-        ("format" = inline(Option<ResultFormat>), Query, description = "Goes before Accept"),
+        ("format" = inline(Option<TableFormat>), Query, description = "Goes before Accept"),
         ("If-None-Match" = Option<String>, Header, description = "Answer 304 when the report still has this ETag"),
     ),
     responses(
@@ -47,15 +47,15 @@ pub fn routes() -> OpenApiRouter<AppState> {
 async fn get_accuracy(
     State(state): State<AppState>,
     Path(name): Path<String>,
-    format: ResultFormat,
+    format: TableFormat,
     headers: HeaderMap,
 ) -> Result<Response, ApiError> {
     let report = state.service.accuracy(&network_name(&name)?).await?;
     let text = serde_json::to_string(&report).map_err(|error| ApiError::Broken(error.to_string()))?;
     let validator = Validator { tag: &sha256_hex(text.as_bytes()), modified: None };
-    representation::found(validator, format, &headers, || match format {
-        ResultFormat::Json => Ok(Body::from(text)),
-        ResultFormat::Csv => {
+    representation::found(validator, format.into(), &headers, || match format {
+        TableFormat::Json => Ok(Body::from(text)),
+        TableFormat::Csv => {
             report::accuracy_csv(&report).map(Body::from).map_err(|error| ApiError::Broken(error.to_string()))
         }
     })

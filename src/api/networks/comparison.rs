@@ -1,6 +1,5 @@
 //! `/v1/networks/{name}/comparison`
 
-use axum::body::Body;
 use axum::extract::{FromRequestParts, Path, State};
 use axum::http::request::Parts;
 use axum::http::{HeaderValue, header};
@@ -12,11 +11,13 @@ use utoipa_axum::routes;
 
 use super::json_body;
 use crate::api::decode::Faults;
-use crate::api::extract::{ResultFormat, network_name, parameters};
+use crate::api::extract::{ComparisonForm, ComparisonFormQuery, ResultFormat, network_name, parameters};
+use crate::api::pages::escaped;
 use crate::api::refusals::{FormRefusals, Refusals};
+use crate::api::representation::Content;
 use crate::api::requests::ComparisonQuery;
 use crate::api::{ApiError, AppState, Problem};
-use crate::report::{self, ForecastPart};
+use crate::report::{self, ForecastChart, ForecastPart};
 use crate::service::{
     DateAnswer, ForecastAnswer, LimitAnswer, NetworkEvidence, ScenarioAnswer, WarningAnswer, date_text,
 };
@@ -55,7 +56,9 @@ pub struct ComparisonAnswer {
 #[derive(Debug, Clone)]
 struct Asked {
     query: ComparisonQuery,
-    format: ResultFormat,
+    form: ComparisonForm,
+    /// The address that was asked, without what is said of the form.
+    address: String,
 }
 
 impl FromRequestParts<AppState> for Asked {
@@ -63,9 +66,14 @@ impl FromRequestParts<AppState> for Asked {
 
     async fn from_request_parts(parts: &mut Parts, _state: &AppState) -> Result<Self, ApiError> {
         let mut faults = Faults::default();
-        let given = parameters(&parts.uri, &["scenarios", "thresholds", "until", "every", "format"], &mut faults);
+        let known = [&["scenarios", "thresholds", "until", "every"][..], &ComparisonForm::KNOWN].concat();
+        let given = parameters(&parts.uri, &known, &mut faults);
         let query = ComparisonQuery::read(&given, &mut faults);
-        Ok(Self { query, format: ResultFormat::of(&given, &parts.headers, faults)? })
+        let form = ComparisonForm::of(&given, &parts.headers, faults)?;
+        let asked = given.iter().filter(|(name, _)| !ComparisonForm::KNOWN.contains(&name.as_str()));
+        let asked: Vec<String> = asked.map(|(name, value)| format!("{name}={}", escaped(value))).collect();
+        let separator = if asked.is_empty() { "" } else { "?" };
+        Ok(Self { query, form, address: format!("{}{separator}{}", parts.uri.path(), asked.join("&")) })
     }
 }
 
@@ -85,12 +93,14 @@ impl FromRequestParts<AppState> for Asked {
         ("until" = Option<String>, Query, description = "The date to compare at, or with `every` the last of several; the plan's \
             dates when left out"),
         ("every" = Option<String>, Query, description = "The step of dates up to `until`, an ISO 8601 duration"),
-        ("format" = inline(Option<ResultFormat>), Query, description = "Goes before Accept"),
+        ComparisonFormQuery,
     ),
     responses(
         (status = 200, description = "The comparison; as CSV one row a scenario, date and threshold", content(
             (ComparisonAnswer = "application/json"),
             (String = "text/csv"),
+            (String = "image/svg+xml"),
+            (String = "text/html"),
         )),
         (status = 422, description = "There is no scenario, no snapshot, neither a plan nor thresholds and until, or no forecast \
             follows; the detail says what would help", body = Problem, content_type = "application/problem+json"),
@@ -100,7 +110,7 @@ impl FromRequestParts<AppState> for Asked {
 async fn get_comparison(
     State(state): State<AppState>,
     Path(name): Path<String>,
-    Asked { query, format }: Asked,
+    Asked { query, form, address }: Asked,
 ) -> Result<Response, ApiError> {
     let (name, mut faults) = (network_name(&name)?, Faults::default());
     let NetworkEvidence { evidence, plan, limits, scenarios, place: _place, .. } =
@@ -109,22 +119,24 @@ async fn get_comparison(
     let inputs = query.inputs(evidence, plan.as_ref(), (limits, scenarios), &state.limits, &mut faults)?;
     let inputs = inputs.ok_or(ApiError::Invalid(faults))?;
     let answer = state.service.answer(inputs).await?;
-    respond(
-        format,
-        match format {
-            ResultFormat::Json => json_body(&ComparisonAnswer::new(name.as_str(), as_of, answer))?,
-            ResultFormat::Csv => report::part_csv(&answer, ForecastPart::Scenarios)
-                .map(Body::from)
-                .map_err(|error| ApiError::Broken(error.to_string()))?,
-        },
-    )
+    let content = match &form {
+        ComparisonForm::Json => json_body(&ComparisonAnswer::new(name.as_str(), as_of, answer))?.into(),
+        ComparisonForm::Csv => Content::csv(report::part_csv(&answer, ForecastPart::Scenarios))?,
+        ComparisonForm::Svg(threshold, theme) => {
+            Content::markup(report::forecast_chart(&answer, ForecastChart::Scenarios, *threshold, *theme)?.svg)
+        }
+        ComparisonForm::Html(form) => {
+            let again = format!("{}{address}", form.service);
+            Content::markup(report::comparison_page(&answer, (name.as_str(), &as_of), &again, form.theme)?)
+        }
+    };
+    respond(form.format(), content)
 }
 
 /// A comparison has no validator: to have one it would have to be computed.
-fn respond(format: ResultFormat, body: Body) -> Result<Response, ApiError> {
-    let mut response = Response::new(body);
+fn respond(format: ResultFormat, content: Content) -> Result<Response, ApiError> {
+    let mut response = content.into_response(format)?;
     let headers = response.headers_mut();
-    headers.insert(header::CONTENT_TYPE, HeaderValue::from_static(format.content_type()));
     headers.insert(header::CACHE_CONTROL, HeaderValue::from_static("no-store"));
     headers.insert(header::VARY, HeaderValue::from_static("accept"));
     Ok(response)

@@ -6,11 +6,10 @@ use axum::response::Response;
 use utoipa_axum::router::OpenApiRouter;
 use utoipa_axum::routes;
 
-use crate::api::extract::{ForecastForm, ResultFormat, network_name};
-use crate::api::refusals::{FormRefusals, Refusals};
+use crate::api::extract::{ForecastForm, ForecastFormQuery, network_name};
+use crate::api::refusals::{ChartRefusals, FormRefusals, Refusals};
 use crate::api::representation::header_value;
 use crate::api::{ApiError, AppState, forecasts, jobs, runs};
-use crate::report::ForecastPart;
 use crate::service::ForecastRun;
 
 /// The routes of this resource.
@@ -29,8 +28,7 @@ pub fn routes() -> OpenApiRouter<AppState> {
     tag = "networks",
     params(
         ("name" = String, Path, description = "The network"),
-        ("format" = inline(Option<ResultFormat>), Query, description = "Goes before Accept"),
-        ("part" = inline(Option<ForecastPart>), Query, description = "Which table of CSV; `tail` when left out"),
+        ForecastFormQuery,
         ("If-None-Match" = Option<String>, Header, description = "Answer 304 when this ETag is still the latest"),
     ),
     responses(
@@ -44,9 +42,11 @@ pub fn routes() -> OpenApiRouter<AppState> {
         ), content(
             (ForecastRun = "application/json"),
             (String = "text/csv"),
+            (String = "image/svg+xml"),
+            (String = "text/html"),
         )),
         (status = 304, description = "The client has it already"),
-        Refusals, FormRefusals,
+        Refusals, FormRefusals, ChartRefusals,
     )
 )]
 async fn get_latest_forecast(

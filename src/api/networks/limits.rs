@@ -13,7 +13,7 @@ use super::{address, written};
 use crate::api::extract::{JsonBody, NoQuery, ResultFormat, network_name, question_name};
 use crate::api::pages::{self, Paging};
 use crate::api::refusals::{BodyRefusals, ConditionRefusals, Refusals};
-use crate::api::representation::{self, Conditions, Validator};
+use crate::api::representation::{self, Conditions, Content, Validator};
 use crate::api::requests::{KeptLimitBody, read_kept_limit};
 use crate::api::{ApiError, AppState, Problem};
 use crate::service::{KeptLimitAnswer, LimitStanding, LimitState, QuestionKind, QuestionName, sha256_hex};
@@ -145,7 +145,7 @@ async fn get_limit(
     let LimitStanding { answer, tag, modified, .. } = state.service.limit(&network_name(&network)?, &name).await?;
     let text = serde_json::to_string(&answer).map_err(|error| ApiError::Broken(error.to_string()))?;
     let tag = format!("{tag}-{}", sha256_hex(text.as_bytes()));
-    representation::found(Validator { tag: &tag, modified }, ResultFormat::Json, &headers, || Ok(text.into()))
+    representation::found(Validator { tag: &tag, modified }, ResultFormat::Json, &headers, || Ok(Content::json(text)))
 }
 
 /// List limits

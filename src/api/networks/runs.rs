@@ -5,11 +5,12 @@ use axum::response::Response;
 use utoipa_axum::router::OpenApiRouter;
 use utoipa_axum::routes;
 
-use crate::api::extract::{ForecastForm, IdempotencyKey, JsonBody, ResultFormat, network_name};
+use crate::api::extract::{
+    FitForm, FitFormQuery, ForecastForm, ForecastFormQuery, IdempotencyKey, JsonBody, network_name,
+};
 use crate::api::refusals::{BodyRefusals, FormRefusals, Refusals};
 use crate::api::requests::{NetworkFitBody, NetworkForecastBody, read_network_fit, read_network_forecast};
 use crate::api::{ApiError, AppState, Problem, examples, fits, forecasts, runs};
-use crate::report::ForecastPart;
 use crate::service::{FitRun, ForecastRun, NetworkEvidence};
 
 /// The routes of this resource.
@@ -28,8 +29,7 @@ pub fn routes() -> OpenApiRouter<AppState> {
     tag = "networks",
     params(
         ("name" = String, Path, description = "The network"),
-        ("format" = inline(Option<ResultFormat>), Query, description = "Goes before Accept"),
-        ("part" = inline(Option<ForecastPart>), Query, description = "Which table of CSV; `tail` when left out"),
+        ForecastFormQuery,
         ("Idempotency-Key" = Option<String>, Header, min_length = 1, max_length = 255,
             description = "Requests with the same key and body for the same network are one and the same: the run is made \
                            once, from what was stored then."),
@@ -43,11 +43,13 @@ pub fn routes() -> OpenApiRouter<AppState> {
         ), content(
             (ForecastRun = "application/json"),
             (String = "text/csv"),
+            (String = "image/svg+xml"),
+            (String = "text/html"),
         )),
         (status = 409, description = "The key came before with another body", body = Problem,
             content_type = "application/problem+json"),
-        (status = 422, description = "Nothing is stored to start from, or no forecast follows from it; the detail says what \
-            would help", body = Problem, content_type = "application/problem+json"),
+        (status = 422, description = "Nothing is stored to start from, no forecast follows from it, or none of what the chart shows; \
+            the detail says what would help", body = Problem, content_type = "application/problem+json"),
         Refusals, FormRefusals, BodyRefusals,
     )
 )]
@@ -78,7 +80,7 @@ async fn create_network_forecast(
     tag = "networks",
     params(
         ("name" = String, Path, description = "The network"),
-        ("format" = inline(Option<ResultFormat>), Query, description = "Goes before Accept"),
+        FitFormQuery,
         ("Idempotency-Key" = Option<String>, Header, min_length = 1, max_length = 255,
             description = "Requests with the same key and body for the same network are one and the same: the run is made \
                            once, from what was stored then."),
@@ -92,10 +94,13 @@ async fn create_network_forecast(
         ), content(
             (FitRun = "application/json"),
             (String = "text/csv"),
+            (String = "image/svg+xml"),
+            (String = "text/html"),
         )),
         (status = 409, description = "The key came before with another body", body = Problem,
             content_type = "application/problem+json"),
-        (status = 422, description = "Nothing is stored to fit, or no fit follows from it; the detail says what would help",
+        (status = 422, description = "Nothing is stored to fit, no fit follows from it, or none of what the chart shows; the detail \
+            says what would help",
             body = Problem, content_type = "application/problem+json"),
         Refusals, FormRefusals, BodyRefusals,
     )
@@ -103,7 +108,7 @@ async fn create_network_forecast(
 async fn create_network_fit(
     State(state): State<AppState>,
     Path(name): Path<String>,
-    format: ResultFormat,
+    form: FitForm,
     key: IdempotencyKey,
     body: JsonBody,
 ) -> Result<Response, ApiError> {
@@ -112,5 +117,5 @@ async fn create_network_fit(
     let NetworkEvidence { evidence, origin, place: _place, .. } = state.service.evidence(&name).await?;
     let inputs = body.read(move |raw, faults| read_network_fit(raw, evidence, faults)).await?;
     let run = state.service.create(inputs, Some(origin), claim).await?;
-    runs::created(fits::PATH, run, format)
+    runs::created(fits::PATH, run, form)
 }

@@ -10,7 +10,7 @@ use utoipa_axum::routes;
 use super::answers::{SnapshotAnswer, SnapshotLine, SnapshotPage};
 use super::{address, json_body, written};
 use crate::api::decode::instant_of;
-use crate::api::extract::{NoQuery, ResultFormat, RowsBody, date, network_name};
+use crate::api::extract::{NoQuery, RowsBody, TableFormat, date, network_name};
 use crate::api::pages::{self, Paging};
 use crate::api::refusals::{BodyRefusals, ConditionRefusals, FormRefusals, Refusals};
 use crate::api::representation::{self, Conditions, Validator};
@@ -78,7 +78,7 @@ async fn put_snapshot(
     params(
         ("name" = String, Path, description = "The network"),
         ("as_of" = String, Path, description = "The date"),
-        ("format" = inline(Option<ResultFormat>), Query, description = "Goes before Accept"),
+        ("format" = inline(Option<TableFormat>), Query, description = "Goes before Accept"),
         ("If-None-Match" = Option<String>, Header, description = "Answer 304 when the snapshot still has this ETag"),
     ),
     responses(
@@ -96,14 +96,14 @@ async fn put_snapshot(
 async fn get_snapshot(
     State(state): State<AppState>,
     Path((name, as_of)): Path<(String, String)>,
-    format: ResultFormat,
+    format: TableFormat,
     headers: HeaderMap,
 ) -> Result<Response, ApiError> {
     let stored = state.service.snapshot(&network_name(&name)?, date("as_of", &as_of)?).await?;
     let (tag, modified) = (stored.summary.tag.clone(), Some(stored.summary.updated_at));
-    representation::found(Validator { tag: &tag, modified }, format, &headers, || match format {
-        ResultFormat::Json => json_body(&SnapshotAnswer::try_from(stored)?),
-        ResultFormat::Csv => csv(&stored),
+    representation::found(Validator { tag: &tag, modified }, format.into(), &headers, || match format {
+        TableFormat::Json => json_body(&SnapshotAnswer::try_from(stored)?),
+        TableFormat::Csv => csv(&stored),
     })
 }
 

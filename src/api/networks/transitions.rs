@@ -11,7 +11,7 @@ use utoipa_axum::routes;
 use super::answers::{TransitionTableAnswer, TransitionsLine, TransitionsPage};
 use super::{address, json_body, written};
 use crate::api::decode::instant_of;
-use crate::api::extract::{NoQuery, ResultFormat, RowsBody, date, network_name};
+use crate::api::extract::{NoQuery, RowsBody, TableFormat, date, network_name};
 use crate::api::pages::{self, Paging};
 use crate::api::refusals::{BodyRefusals, ConditionRefusals, FormRefusals, Refusals};
 use crate::api::representation::{self, Conditions, Validator};
@@ -90,7 +90,7 @@ async fn put_transitions(
         ("name" = String, Path, description = "The network"),
         ("from" = String, Path, description = "The earlier date"),
         ("to" = String, Path, description = "The later date"),
-        ("format" = inline(Option<ResultFormat>), Query, description = "Goes before Accept"),
+        ("format" = inline(Option<TableFormat>), Query, description = "Goes before Accept"),
         ("If-None-Match" = Option<String>, Header, description = "Answer 304 when the transitions still have this ETag"),
     ),
     responses(
@@ -108,15 +108,15 @@ async fn put_transitions(
 async fn get_transitions(
     State(state): State<AppState>,
     path: TablePath,
-    format: ResultFormat,
+    format: TableFormat,
     headers: HeaderMap,
 ) -> Result<Response, ApiError> {
     let (name, dates) = table(path)?;
     let stored = state.service.transitions(&name, dates).await?;
     let (tag, modified) = (stored.summary.tag.clone(), Some(stored.summary.updated_at));
-    representation::found(Validator { tag: &tag, modified }, format, &headers, || match format {
-        ResultFormat::Json => json_body(&TransitionTableAnswer::try_from(stored)?),
-        ResultFormat::Csv => csv(&stored),
+    representation::found(Validator { tag: &tag, modified }, format.into(), &headers, || match format {
+        TableFormat::Json => json_body(&TransitionTableAnswer::try_from(stored)?),
+        TableFormat::Csv => csv(&stored),
     })
 }
 

@@ -52,6 +52,21 @@ impl Completion {
         Ok(format!("{{{}}}", fields.join(",")).into_bytes())
     }
 
+    /// The options given, each after a space, as a shell takes them.
+    pub fn options(&self) -> String {
+        let table = self.arrivals_csv.as_ref().map(|file| file.display().to_string());
+        let given = [
+            ("--thresholds", &self.thresholds),
+            ("--until", &self.until),
+            ("--every", &self.every),
+            ("--levels", &self.levels),
+            ("--arrivals", &self.arrivals),
+            ("--arrivals-csv", &table),
+        ];
+        let given = given.into_iter().filter_map(|(option, value)| Some((option, value.as_ref()?)));
+        given.map(|(option, value)| format!(" {option} {}", shell_word(value))).collect()
+    }
+
     /// The fields given. Whether their values make sense is told by whoever reads the body.
     fn fields(&self) -> Result<Vec<(&'static str, Box<RawValue>)>, Stop> {
         let mut fields = Vec::new();
@@ -86,6 +101,16 @@ impl Completion {
             (None, _) => {}
         }
         Ok(fields)
+    }
+}
+
+/// A text as one word of a shell's command line (POSIX).
+pub fn shell_word(text: &str) -> String {
+    let plain = |c: char| c.is_ascii_alphanumeric() || "-_./,:+=@%".contains(c);
+    if !text.is_empty() && text.chars().all(plain) {
+        text.to_owned()
+    } else {
+        format!("'{}'", text.replace('\'', "'\\''"))
     }
 }
 
