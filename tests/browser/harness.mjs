@@ -25,7 +25,8 @@ export async function startService(settings = {}) {
   const binary = process.env.TAILCAST_BIN ?? join(ROOT, "target/debug/tailcast");
   const child = spawn(binary, ["serve"], {
     env: {
-      ...process.env,
+      // The service refuses variables of its name that are no settings.
+      ...Object.fromEntries(Object.entries(process.env).filter(([name]) => !name.startsWith("TAILCAST_"))),
       TAILCAST_BIND: `127.0.0.1:${port}`,
       TAILCAST_DATABASE_URL: `sqlite://${join(folder, "page.db")}`,
       TAILCAST_LOG_FILTER: "warn",
@@ -103,7 +104,8 @@ export async function openPage(browser, base, { width = 1280, height = 900, them
   const asked = [];
   page.on("request", (request) => {
     asked.push({ method: request.method(), url: request.url() });
-    const own = request.url().startsWith(`${base}/`) || request.url().startsWith(`blob:${base}/`);
+    // The browser's own marks on fields of dates are data addresses.
+    const own = [`${base}/`, `blob:${base}/`, "data:"].some((start) => request.url().startsWith(start));
     if (!own) troubles.push(`a request left the origin: ${request.url().slice(0, 200)}`);
   });
   await page.setViewport({ width, height, isMobile: width < 500, hasTouch: width < 500 });

@@ -13,6 +13,7 @@ export function columnStyle(texts) {
 // A separator splits thousands when every group after it has three digits: counts have no fractions. But where every
 // single text ends in three zeros, as in 0.000, 1.000, 2.000, a program wrote decimals.
 function separatorStyle(texts, mark) {
+  if (!texts.some((text) => text.includes(mark))) return "thousands";
   let numbers = 0;
   let zeros = 0;
   for (const text of texts) {

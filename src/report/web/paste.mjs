@@ -47,7 +47,7 @@ function collector() {
 }
 
 function readColumns(text) {
-  const lines = text.split(/\r\n|\n|\r/);
+  const lines = (text.includes("\r") ? text.replace(/\r\n?/g, "\n") : text).split("\n");
   const filled = lines.filter((line) => line.trim() !== "");
   const separator = separatorOf(filled.slice(0, LOOKED_AT));
   const rows = [];

@@ -42,7 +42,8 @@ export function showProblem(box, problem, { fieldOf = () => null, placeOf = () =
 
 // The place as a link that leads to its field, or in words.
 function faultPlace(fault, fieldOf, placeOf) {
-  const pointer = fault.pointer ?? "";
+  const missing = /^the field "(\w+)" is missing/.exec(fault.detail);
+  const pointer = (fault.pointer ?? "") + (missing ? `/${missing[1]}` : "");
   const words = placeOf(pointer);
   const field = fieldOf(pointer);
   if (field) {
