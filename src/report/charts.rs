@@ -1,10 +1,27 @@
 //! Charts of answers, as SVG (W3C SVG 1.1) that any `<img src>` shows.
 
+mod attachment;
+mod axis;
+mod calendar;
+mod calibration;
+mod canvas;
+mod colours;
+mod course;
+mod growth;
+mod panel;
+mod scenarios;
+mod tail;
+mod words;
+
 use clap::ValueEnum;
 use thiserror::Error;
 use utoipa::ToSchema;
 
 use crate::service::{BacktestRun, FitAnswer, ForecastAnswer};
+
+/// What a reader of a forecast must bear in mind.
+const CAUTION: &str = "Intervals aim at holding the share of outcomes that they name, and only while growth goes on as described. \
+                       Where a capacity failure could harm people, your own engineering practice and its margins come first.";
 
 /// The colours of a chart.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Default, ToSchema, ValueEnum)]
@@ -78,8 +95,11 @@ pub fn forecast_chart(
     threshold: Option<u64>,
     theme: Theme,
 ) -> Result<Chart, ChartError> {
-    let _ = (answer, chart, threshold, theme);
-    Err(ChartError::Absent("charts are not drawn yet".to_owned()))
+    match chart {
+        ForecastChart::Growth => growth::growth(answer, threshold, theme),
+        ForecastChart::Tail => tail::forecast_tail(answer, threshold, theme),
+        ForecastChart::Scenarios => scenarios::scenarios(answer, threshold, theme),
+    }
 }
 
 /// A chart of a fit.
@@ -87,8 +107,10 @@ pub fn forecast_chart(
 /// # Errors
 /// When the answer has nothing of the kind.
 pub fn fit_chart(answer: &FitAnswer, chart: FitChart, theme: Theme) -> Result<Chart, ChartError> {
-    let _ = (answer, chart, theme);
-    Err(ChartError::Absent("charts are not drawn yet".to_owned()))
+    match chart {
+        FitChart::Tail => tail::fitted_tail(answer, theme),
+        FitChart::Attachment => attachment::attachment(answer, theme),
+    }
 }
 
 /// How often intervals of past forecasts held what came, and their errors, by horizon.
@@ -96,6 +118,5 @@ pub fn fit_chart(answer: &FitAnswer, chart: FitChart, theme: Theme) -> Result<Ch
 /// # Errors
 /// When the backtest has no case.
 pub fn backtest_chart(run: &BacktestRun, theme: Theme) -> Result<Chart, ChartError> {
-    let _ = (run, theme);
-    Err(ChartError::Absent("charts are not drawn yet".to_owned()))
+    calibration::calibration(run, theme)
 }

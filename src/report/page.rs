@@ -97,7 +97,10 @@ impl Report {
         self.theme.to_possible_value().map(|value| value.get_name().to_owned()).unwrap_or_default()
     }
 
-    fn html(&self) -> Result<String, ReportError> {
+    fn html(mut self) -> Result<String, ReportError> {
+        let prose = self.sections.iter_mut().flat_map(|section| &mut section.paragraphs);
+        let prose = prose.chain(&mut self.lead).chain(&mut self.cautions).chain([&mut self.finding]);
+        prose.chain(self.warnings.iter_mut().map(|warning| &mut warning.detail)).for_each(|text| *text = tied(text));
         Ok(self.render()?)
     }
 }
@@ -120,9 +123,14 @@ fn reading(address: &str, tables: &str) -> Vec<Fact> {
     };
     vec![
         fact("All figures, JSON", form("json")),
-        Fact { name: "A table, CSV", text: form(&format!("csv{tables}")) },
+        fact("A table, CSV", form(&format!("csv{tables}"))),
         fact("This report", form("html")),
     ]
+}
+
+/// A text whose percent signs stay with their figures at the ends of lines.
+fn tied(text: &str) -> String {
+    text.replace(" %", "\u{a0}%")
 }
 
 /// A caller's text as a page shows it.
@@ -136,8 +144,72 @@ fn subject(kind: &str, network: Option<&str>, label: Option<&str>) -> String {
     [kind.to_owned()].into_iter().chain(names).collect::<Vec<_>>().join(" · ")
 }
 
-/// The newest snapshot's date, and what stands on it.
+/// What a forecast counts from; older runs do not say.
 fn newest(answer: &ForecastAnswer) -> Option<Fact> {
-    let _ = answer;
-    None
+    let last = answer.history.last()?;
+    let (as_of, nodes) = (&last.as_of, super::text::figure(last.nodes as f64));
+    Some(fact("Newest snapshot", format!("{as_of}, {nodes} nodes")))
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::report::content_policy;
+
+    fn report(text: &str, theme: Theme) -> Report {
+        let grid = Grid {
+            caption: text.to_owned(),
+            corner: text.to_owned(),
+            columns: vec![text.to_owned()],
+            rows: vec![grid::Row::new(text, vec![grid::Cell::new(text, text)])],
+        };
+        let section = Section {
+            heading: text.to_owned(),
+            paragraphs: vec![text.to_owned()],
+            figures: vec![Figure { svg: "<svg></svg>".to_owned(), on_screen_only: true }],
+            facts: vec![fact("Seed", text)],
+            grids: vec![grid],
+        };
+        Report {
+            theme,
+            subject: text.to_owned(),
+            finding: text.to_owned(),
+            lead: vec![text.to_owned()],
+            facts: vec![fact("Run", text)],
+            sections: vec![section],
+            warnings: vec![WarningAnswer { code: "few_hubs".to_owned(), detail: text.to_owned() }],
+            cautions: vec![text.to_owned()],
+            again: vec![fact("JSON", text)],
+        }
+    }
+
+    #[test]
+    fn every_text_is_escaped_wherever_it_stands() {
+        let page = report("</style><script>\"'&", Theme::Auto).html().unwrap();
+        assert!(!page.contains("<script") && page.matches("</style>").count() == 1, "{page}");
+        assert_eq!(page.matches("&#60;/style&#62;&#60;script&#62;&#34;&#39;&#38;").count(), 19, "{page}");
+        assert!(content_policy(&page).contains("'sha256-"), "the style of the page itself is let in");
+    }
+
+    #[test]
+    fn a_page_says_its_language_its_colours_and_what_is_for_screens() {
+        let page = report("x", Theme::Dark).html().unwrap();
+        for markup in [
+            "<html lang=\"en\" class=\"dark\">",
+            "<h1>x</h1>",
+            "<caption>x</caption>",
+            "<th scope=\"col\">x</th>",
+            "<th scope=\"row\">x</th>",
+            " class=\"screen\"><svg></svg></figure>",
+        ] {
+            assert!(page.contains(markup), "{markup}: {page}");
+        }
+    }
+
+    #[test]
+    fn commands_are_one_word_a_text() {
+        let commands = reading("http://h/v1/x?a='b", "&part=tail");
+        assert_eq!(commands[1].text, "curl -s 'http://h/v1/x?a=%27b&format=csv&part=tail'");
+        assert_eq!(reading("http://h/x", "")[0].text, "curl -s 'http://h/x?format=json'");
+    }
 }

@@ -46,6 +46,14 @@ pub struct ForecastAnswer {
     pub inputs_digest: String,
     /// The fitted attachment mix.
     pub fit: FitReport,
+    /// What past snapshots counted, oldest first; at most 120 of them, evenly spread, the newest among them.
+    #[serde(default)]
+    #[schema(required = true)]
+    pub history: Vec<HistoryAnswer>,
+    /// Observed against fitted tail of the newest snapshot, at most 40 degrees; empty where no law was fitted.
+    #[serde(default)]
+    #[schema(required = true)]
+    pub curve: Vec<TailPointAnswer>,
     /// One entry a date, in ascending order.
     pub forecast: Vec<DateAnswer>,
     /// How candidates and plain trends were weighed for the tails, by periods ahead; empty where the forecast is by one candidate.
@@ -74,6 +82,27 @@ pub struct ForecastAnswer {
     pub warnings: Vec<WarningAnswer>,
     /// What holds for every forecast.
     pub cautions: Vec<String>,
+}
+
+/// What a snapshot counted.
+#[derive(Debug, Clone, PartialEq, Eq, Serialize, Deserialize, ToSchema)]
+pub struct HistoryAnswer {
+    /// Its date.
+    #[schema(examples("2026-06-01"))]
+    pub as_of: String,
+    /// Nodes.
+    pub nodes: u64,
+    /// Tail sizes at the thresholds asked about, those of limits among them, ascending.
+    pub tail: Vec<TailCountAnswer>,
+}
+
+/// How many nodes had at least `threshold` links.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, Deserialize, ToSchema)]
+pub struct TailCountAnswer {
+    /// The threshold.
+    pub threshold: u64,
+    /// Nodes at or above it.
+    pub nodes: u64,
 }
 
 /// How the members of a pooled forecast were weighed.

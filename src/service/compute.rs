@@ -1,5 +1,6 @@
 //! From validated inputs to an answer: the core's results in the answers' words. No I/O.
 
+mod history;
 mod questions;
 
 use std::time::{Duration, Instant};
@@ -109,6 +110,8 @@ impl Question for ForecastInputs {
             seed: self.seed(),
             inputs_digest,
             fit: FitReport::from(&found.fit),
+            history: history::history(&self.request),
+            curve: history::curve(&found.fit.tail),
             forecast: found.forecast.iter().map(DateAnswer::from).collect(),
             pools: found.pools.iter().map(PoolAnswer::from).collect(),
             limits: each(&found.answers.limits),

@@ -34,7 +34,7 @@ fn monthly(snapshots: usize) -> Vec<DegreeCounts> {
     grown(&days, |_| (20.0, 3.0))
 }
 
-async fn with_snapshots(service: &Service, network: &Value, snapshots: usize) {
+pub async fn with_snapshots(service: &Service, network: &Value, snapshots: usize) {
     service.put(NETWORK, network).await.expect(201);
     for (date, counts) in DATES.iter().zip(monthly(snapshots)) {
         put_counts(service, date, &counts).await;

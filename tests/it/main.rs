@@ -11,6 +11,7 @@ mod bad_input;
 mod command_line;
 mod coverage;
 mod durability;
+mod faces;
 mod fits;
 mod forecasts;
 mod harness;

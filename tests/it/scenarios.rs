@@ -15,7 +15,7 @@ fn path(name: &str) -> String {
 }
 
 /// A network with a plan, a snapshot, a limit and two scenarios.
-async fn tracked() -> Service {
+pub async fn tracked() -> Service {
     let service = patient().await;
     service.put(NETWORK, &settings()).await.expect(201);
     put_counts(&service, "2026-06-01", &COUNTS[1]).await.expect(201);

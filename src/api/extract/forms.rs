@@ -88,7 +88,7 @@ pub struct ForecastFormQuery {
     /// Which chart of SVG; `growth` when left out
     #[param(inline)]
     chart: Option<ForecastChart>,
-    /// The one threshold that the chart `growth` or `scenarios` shows
+    /// The one threshold that the chart is about: `growth` and `scenarios` show it alone, `tail` names it
     #[param(minimum = 1)]
     threshold: Option<u64>,
     /// Colours of SVG and HTML; `auto` when left out
@@ -216,10 +216,6 @@ impl FromRequestParts<AppState> for ForecastForm {
         let query = Query { given: &given, headers: &parts.headers };
         let (part, chart) = (query.choice("part", &mut faults), query.choice("chart", &mut faults));
         let (threshold, theme) = (query.threshold(&mut faults), query.choice("theme", &mut faults));
-        if chart == Some(ForecastChart::Tail) && threshold.is_some() {
-            let detail = "the chart tail shows every threshold; leave threshold out, or ask for chart=growth";
-            faults.push(Fault { place: Place::Query("threshold".into()), detail: detail.into() });
-        }
         Ok(match query.format(faults)? {
             ResultFormat::Json => Self::Json,
             ResultFormat::Csv => Self::Csv(part.unwrap_or(ForecastPart::Tail)),

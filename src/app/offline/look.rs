@@ -14,7 +14,7 @@ pub struct Look {
     /// Which chart --format svg draws; growth when left out
     #[arg(long, value_enum, value_name = "CHART")]
     chart: Option<ForecastChart>,
-    /// The one threshold that the chart shows
+    /// The one threshold that the chart is about
     #[arg(long, value_name = "LINKS", value_parser = clap::value_parser!(u64).range(1..))]
     threshold: Option<u64>,
     /// Colours of --format svg and html; auto when left out
@@ -48,11 +48,8 @@ impl Look {
             ("--theme", self.theme.is_some(), &[F::Svg, F::Html], "svg or html"),
         ];
         let unused = given.iter().filter(|(_, given, forms, _)| *given && !forms.contains(&format));
-        let mut refusals: Vec<String> =
+        let refusals: Vec<String> =
             unused.map(|(option, _, _, forms)| format!("tailcast: {option} goes with --format {forms}\n")).collect();
-        if self.chart == Some(ForecastChart::Tail) && self.threshold.is_some() {
-            refusals.push("tailcast: the chart tail shows every threshold; leave --threshold out\n".to_owned());
-        }
         if !refusals.is_empty() {
             return Err(Stop::Refused(refusals.concat()));
         }

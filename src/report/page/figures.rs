@@ -8,6 +8,15 @@ use crate::report::charts::{Chart, ChartError};
 pub struct Figure {
     /// The picture; its marks have ids of their own on the page.
     pub svg: String,
+    /// Whether paper, which is short, does without it.
+    pub on_screen_only: bool,
+}
+
+impl Figure {
+    /// The same, left out on paper.
+    pub fn on_screen(self) -> Self {
+        Self { on_screen_only: true, ..self }
+    }
 }
 
 /// Charts drawn for a page, those there is nothing for left out.
@@ -15,7 +24,7 @@ pub fn figures(charts: Vec<Result<Chart, ChartError>>) -> Result<Vec<Figure>, Re
     let mut drawn = Vec::new();
     for chart in charts {
         match chart {
-            Ok(chart) => drawn.push(Figure { svg: chart.svg }),
+            Ok(chart) => drawn.push(Figure { svg: chart.svg, on_screen_only: false }),
             Err(ChartError::Absent(_)) => {}
             Err(error @ ChartError::Drawing(_)) => return Err(ReportError(error.to_string())),
         }

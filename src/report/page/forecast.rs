@@ -1,6 +1,6 @@
 //! A forecast's report.
 
-use super::figures::figures;
+use super::figures::{Figure, figures};
 use super::grid::{Cell, crossed};
 use super::growth::growth;
 use super::questions::questions;
@@ -48,24 +48,41 @@ fn page(
 ) -> Result<String, ReportError> {
     facts.extend(makers(&answer.engine, answer.seed, &answer.inputs_digest));
     let (finding, lead) = finding(answer);
-    let charts = [ForecastChart::Growth, ForecastChart::Tail];
-    let charts = charts.map(|chart| forecast_chart(answer, chart, None, theme));
     let mut hubs = Section::new("Hubs at each date");
-    hubs.figures = figures(charts.into())?;
+    hubs.figures = courses(answer, theme)?;
     hubs.grids = tails(answer);
     let mut sections = vec![hubs];
     sections.extend(questions(answer, theme)?);
-    sections.push(growth(&answer.fit, &answer.pools));
+    let mut drivers = growth(&answer.fit, &answer.pools);
+    let tail = figures(vec![forecast_chart(answer, ForecastChart::Tail, None, theme)])?;
+    drivers.figures = tail.into_iter().map(Figure::on_screen).collect();
+    sections.push(drivers);
     sections.retain(|section| !section.is_empty());
     let (warnings, cautions) = (answer.warnings.clone(), answer.cautions.clone());
     Report { theme, subject, finding, lead, facts, sections, warnings, cautions, again }.html()
 }
 
+/// How hubs grow: past the threshold of the limit most at risk, and past every threshold.
+fn courses(answer: &ForecastAnswer, theme: Theme) -> Result<Vec<Figure>, ReportError> {
+    let chart = |threshold| forecast_chart(answer, ForecastChart::Growth, threshold, theme);
+    let all = figures(vec![chart(None)])?;
+    let Some(limit) = pressing(answer) else { return Ok(all) };
+    let mut shown = figures(vec![chart(Some(limit.threshold))])?;
+    let others = all.into_iter().filter(|figure| !shown.contains(figure)).map(Figure::on_screen).collect::<Vec<_>>();
+    shown.extend(others);
+    Ok(shown)
+}
+
+/// The limit most at risk.
+fn pressing(answer: &ForecastAnswer) -> Option<&LimitAnswer> {
+    let at_risk = |limit: &LimitAnswer| if limit.now > limit.max_nodes { 2.0 } else { limit.at_by.crossed.0 };
+    answer.limits.iter().max_by(|a, b| at_risk(a).total_cmp(&at_risk(b)))
+}
+
 /// The heading, and what else is to be known at a glance.
 fn finding(answer: &ForecastAnswer) -> (String, Vec<String>) {
     let tail = tail_finding(answer).unwrap_or_else(|| "A forecast without a date".to_owned());
-    let pressing = |limit: &&LimitAnswer| if limit.now > limit.max_nodes { 2.0 } else { limit.at_by.crossed.0 };
-    match answer.limits.iter().max_by(|a, b| pressing(a).total_cmp(&pressing(b))) {
+    match pressing(answer) {
         Some(limit) => (limit_finding(limit), vec![tail]),
         None => (tail, Vec::new()),
     }
@@ -101,12 +118,13 @@ fn tail_finding(answer: &ForecastAnswer) -> Option<String> {
 /// Dates down, thresholds across, all nodes and the largest degree last.
 fn tails(answer: &ForecastAnswer) -> Vec<super::Grid> {
     let Some(first) = answer.forecast.first() else { return Vec::new() };
-    let level = first.nodes.intervals.last().map(|i| format!(", {} % interval below", percent(i.level.0)));
+    let level = first.nodes.intervals.last().map(|i| format!(" with its {} % interval", percent(i.level.0)));
     let caption = format!("Nodes with at least so many links: expected{}", level.unwrap_or_default());
-    let mut columns: Vec<String> = first.tail.iter().map(|tail| figure(tail.threshold as f64)).collect();
+    let mut columns: Vec<String> =
+        first.tail.iter().map(|tail| format!("≥ {}", figure(tail.threshold as f64))).collect();
     columns.extend(["all nodes", "largest degree (median)"].map(str::to_owned));
-    let rows: Vec<String> =
-        ["now".to_owned()].into_iter().chain(answer.forecast.iter().map(|at| at.date.clone())).collect();
+    let now = answer.history.last().map_or_else(|| "now".to_owned(), |last| format!("{} (now)", last.as_of));
+    let rows: Vec<String> = [now].into_iter().chain(answer.forecast.iter().map(|at| at.date.clone())).collect();
     let cell = |row: usize, column: usize| {
         let Some(at) = answer.forecast.get(row.saturating_sub(1)) else { return Cell::default() };
         let (now, middle, intervals) = match at.tail.get(column) {

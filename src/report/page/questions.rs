@@ -7,10 +7,7 @@ use super::{NAME_CHARS, ReportError, Section, shown};
 use crate::report::charts::{ForecastChart, Theme, forecast_chart};
 use crate::report::csv::percent;
 use crate::report::text::figure;
-use crate::report::words::{
-    band_range, bands_title, chance, crossing_words, limit_title, rate_words, reached, scenario_costs, signed,
-    watch_words,
-};
+use crate::report::words::{band_range, bands_title, chance, rate_words, reached, scenario_costs, signed, watch_words};
 use crate::service::{
     BandsAnswer, ForecastAnswer, IntervalAnswer, LimitAnswer, NextHubsAnswer, ScenarioAnswer, WatchAnswer,
 };
@@ -32,14 +29,8 @@ pub fn limits(limits: &[LimitAnswer]) -> Section {
         return section;
     }
     for limit in limits {
-        section.paragraphs.push(format!(
-            "{}. {}.",
-            limit_title(limit, NAME_CHARS),
-            limit.verdict.trim_end_matches('.')
-        ));
-        section
-            .paragraphs
-            .push([crossing_words(limit)].into_iter().chain(rate_words(limit)).collect::<Vec<_>>().join(" "));
+        let verdict = format!("{}.", limit.verdict.trim_end_matches('.'));
+        section.paragraphs.push([verdict].into_iter().chain(rate_words(limit)).collect::<Vec<_>>().join(" "));
     }
     let crossing = |limit: &LimitAnswer| limit.crossing.iter().map(|at| reached(at).into()).collect::<Vec<Cell>>();
     let rows = limits.iter().map(|limit| {
@@ -48,7 +39,7 @@ pub fn limits(limits: &[LimitAnswer]) -> Section {
         let mut cells =
             vec![figure(limit.now as f64).into(), Cell::new(chance(limit.at_by.crossed.0), format!("by {}", limit.by))];
         cells.extend(crossing(limit));
-        cells.push(Cell::new(reached(&limit.risk_reached), chance(limit.risk.0)));
+        cells.push(Cell::new(reached(&limit.risk_reached), format!("risk of {}", chance(limit.risk.0))));
         Row::new(Cell::new(name, what), cells)
     });
     let mut columns = vec!["now".to_owned(), "crossed by then".to_owned()];
@@ -64,7 +55,9 @@ fn costs(bands: &BandsAnswer) -> Section {
     let mut section = Section::new(bands_title(bands, NAME_CHARS));
     let first = bands.dates.first();
     let mut columns = vec!["total".to_owned()];
-    columns.extend(first.into_iter().flat_map(|at| &at.bands).map(|band| format!("{} links", band_range(band))));
+    columns.extend(
+        first.into_iter().flat_map(|at| &at.bands).map(|band| format!("{} links", band_range(band).replace(">=", "≥"))),
+    );
     let dates: Vec<String> = bands.dates.iter().map(|at| at.date.clone()).collect();
     let cell = |row: usize, column: usize| {
         let Some(at) = bands.dates.get(row) else { return Cell::default() };
@@ -74,7 +67,7 @@ fn costs(bands: &BandsAnswer) -> Section {
         };
         amount.map(|amount| with_interval(figure(amount.expected.0), &amount.intervals)).unwrap_or_default()
     };
-    let level = first.and_then(|at| at.total.intervals.last()).map(below).unwrap_or_default();
+    let level = first.and_then(|at| at.total.intervals.last()).map(beside).unwrap_or_default();
     section.grids = crossed(&format!("Costs by degree: expected{level}"), ("date", &dates), ("band", &columns), &cell);
     section
 }
@@ -128,7 +121,7 @@ fn largest(dates: &[NextHubsAnswer]) -> Section {
         }
     };
     if !ranks.is_empty() {
-        let level = ranks.first().and_then(|hub| hub.intervals.last()).map(below).unwrap_or_default();
+        let level = ranks.first().and_then(|hub| hub.intervals.last()).map(beside).unwrap_or_default();
         let caption = format!("Links of the node of each rank: expected{level}");
         section.grids = crossed(&caption, ("rank", &names), ("date", &columns), &cell);
     }
@@ -146,7 +139,7 @@ pub fn what_ifs(answer: &ForecastAnswer, theme: Theme) -> Result<Section, Report
         section.paragraphs.push(format!("{}.", scenario.verdict.trim_end_matches('.')));
         section.paragraphs.extend(scenario_costs(scenario, NAME_CHARS));
         for limit in &scenario.limits {
-            section.paragraphs.push(format!("{}: {}.", limit_title(limit, NAME_CHARS), limit.verdict));
+            section.paragraphs.push(format!("{}: {}.", shown(&scenario.name), limit.verdict.trim_end_matches('.')));
         }
         section.grids.extend(differences(scenario));
     }
@@ -155,7 +148,7 @@ pub fn what_ifs(answer: &ForecastAnswer, theme: Theme) -> Result<Section, Report
 
 fn differences(scenario: &ScenarioAnswer) -> Vec<Grid> {
     let tails = scenario.dates.first().map(|at| at.tail.as_slice()).unwrap_or_default();
-    let columns: Vec<String> = tails.iter().map(|tail| figure(tail.threshold as f64)).collect();
+    let columns: Vec<String> = tails.iter().map(|tail| format!("≥ {}", figure(tail.threshold as f64))).collect();
     let dates: Vec<String> = scenario.dates.iter().map(|at| at.date.clone()).collect();
     let cell = |row: usize, column: usize| {
         let Some(tail) = scenario.dates.get(row).and_then(|at| at.tail.get(column)) else { return Cell::default() };
@@ -166,13 +159,13 @@ fn differences(scenario: &ScenarioAnswer) -> Vec<Grid> {
     let level = tails.first().and_then(|tail| tail.difference.intervals.last());
     let level = level.map(|i| format!(" (its {} % interval)", percent(i.level.0))).unwrap_or_default();
     let caption = format!(
-        "{}: nodes with at least so many links, and below how many more or fewer than as it stands{level}",
+        "{}: nodes with at least so many links, and how many more or fewer than as it stands{level}",
         shown(&scenario.name)
     );
     crossed(&caption, ("date", &dates), ("links", &columns), &cell)
 }
 
-/// What stands below a figure.
-fn below(widest: &IntervalAnswer) -> String {
-    format!(", {} % interval below", percent(widest.level.0))
+/// What stands with a figure.
+fn beside(widest: &IntervalAnswer) -> String {
+    format!(" with its {} % interval", percent(widest.level.0))
 }
