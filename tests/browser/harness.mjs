@@ -30,6 +30,8 @@ export async function startService(settings = {}) {
       TAILCAST_BIND: `127.0.0.1:${port}`,
       TAILCAST_DATABASE_URL: `sqlite://${join(folder, "page.db")}`,
       TAILCAST_LOG_FILTER: "warn",
+      // A machine that is shared is slow at times; what is slow is measured, not refused.
+      TAILCAST_COMPUTE_BUDGET_SECONDS: "120",
       ...settings,
     },
     stdio: ["ignore", "ignore", "inherit"],

@@ -73,7 +73,7 @@ test("a network is listed with its limits in words, and opened", async () => {
       await page.click("#view-networks .card a");
       const finding = await textOf(page, "#view-network .finding");
       const tail = latest.forecast.at(-1).tail.at(-1);
-      assert.match(finding, new RegExp(`^${tail.now} nodes with at least 50 links at the last count; ${Math.round(tail.median)} by 1 February 2027`));
+      assert.match(finding, new RegExp(`^${tail.now} nodes with at least 50 links on 1 August 2026; ${Math.round(tail.median)} by 1 February 2027`));
       assert.match(await textOf(page, "#view-network .limit"), /^pools/);
       const all = await textLike(page, "#view-network", /50 % more arrivals.*as it stands/s);
       assert.ok(all.includes(accuracy.verdict), accuracy.verdict);
@@ -101,8 +101,8 @@ test("limits and what-ifs are kept and taken away, and the forecast follows", as
       await page.waitForFunction(() => [...document.querySelectorAll("#view-network .limit h4")].some((one) => one.textContent === "shards"), { polling: 100 });
       const stored = await service(base, "GET", `${path}/limits/shards`);
       assert.deepEqual([stored.threshold, stored.max_nodes, stored.risk], [20, 300, 0.1]);
-      await page.evaluate(() => document.querySelector('[aria-label="Take limit shards away"]').click());
-      await page.waitForFunction(() => !document.querySelector('[aria-label="Take limit shards away"]'), { polling: 50 });
+      await page.evaluate(() => document.querySelector('[aria-label="Take away limit shards"]').click());
+      await page.waitForFunction(() => !document.querySelector('[aria-label="Take away limit shards"]'), { polling: 50 });
       assert.equal((await service(base, "GET", `${path}/limits`)).items.length, 1);
     },
     { hash: "#network/followed" },
@@ -119,7 +119,7 @@ test("a kept network answers other questions", async () => {
       await page.select('.other [data-pointer="/horizon/every"]', "P1Y");
       await enter(page, '.other [data-pointer="/arrivals/per_day"]', "80");
       await page.click(".other form button[type=submit]");
-      assert.match(await textOf(page, ".other .finding"), /with at least (15|40) links at the last count; [\d,]+ by 1 August 2028/);
+      assert.match(await textOf(page, ".other .finding"), /with at least (15|40) links on 1 August 2026; [\d,]+ by 1 August 2028/);
       const line = await page.$eval(".other textarea.line", (field) => field.value);
       assert.match(line, /networks\/asked\/forecasts' .*"thresholds":\[15,40\],"horizon":\{"until":"2028-08-01","every":"P1Y"\},"arrivals":\{"per_day":80\}/);
     },

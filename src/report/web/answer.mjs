@@ -8,12 +8,15 @@ import { dateTable, limitCard, scenarioTable, thresholdTable } from "./tables.mj
 import { count, finding, percent, sentence } from "./words.mjs";
 
 /**
- * Shows a run; `request` is the call that made it, `{method, path, body}`. `asOf` the day of
- * its counts. `quiet` neither moves nor tells anything. */
-export function showAnswer(box, run, request, { quiet = false, title = "What will come", asOf } = {}) {
+ * Shows a run; `request` is the call that made it, `{method, path, body}`. `quiet` neither
+ * moves nor tells anything.
+ */
+export function showAnswer(box, run, request, { quiet = false, title = "What will come" } = {}) {
   const thresholds = run.forecast[0].tail.map((tail) => tail.threshold);
   const before = Number(box.dataset.threshold);
   const now = (threshold) => run.forecast[0].tail.find((tail) => tail.threshold === threshold).now;
+  // Runs made by earlier versions do not tell the day of their counts.
+  const asOf = run.history?.at(-1)?.as_of;
   let shown = thresholds.includes(before) ? before : pickShown(thresholds, now);
   const body = el("div", {});
   const render = () => {

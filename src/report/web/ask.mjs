@@ -241,8 +241,7 @@ async function send(body, box) {
 function show(run, request) {
   busy("");
   byId("answer").dataset.run = run.id;
-  const { snapshots } = JSON.parse(request.body);
-  showAnswer(byId("answer"), run, request, { asOf: snapshots[snapshots.length - 1].as_of });
+  showAnswer(byId("answer"), run, request);
 }
 
 function busy(text) {

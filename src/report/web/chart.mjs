@@ -41,6 +41,6 @@ async function draw(figure, run, chart, threshold) {
     image.width = width;
     image.height = height;
   }
-  fill(figure, el("div", { class: "picture" }, image));
+  fill(figure, el("div", { class: "picture", tabindex: "0", role: "group", "aria-label": text("title") }, image));
   figure.hidden = false;
 }

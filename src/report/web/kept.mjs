@@ -59,7 +59,7 @@ function showKept(box, spec) {
   }
 
   function line(item) {
-    const drop = el("button", { type: "button", "aria-label": `Take ${spec.noun} ${item.name} away`, onclick: () => remove(item.name) }, "Take away");
+    const drop = el("button", { type: "button", "aria-label": `Take away ${spec.noun} ${item.name}`, onclick: () => remove(item.name) }, "Take away");
     return el("li", {}, el("span", {}, spec.words(item)), " ", drop);
   }
 
