@@ -260,7 +260,8 @@ function placeOf(pointer) {
     return line === undefined ? `Pair ${row + 1} of the counts` : `Line ${line} of the counts`;
   }
   if (at) return `Pair ${Number(at[2]) + 1} of the counts of ${day(evidence.base.snapshots[at[1]].as_of)}`;
-  return null;
+  const whole = /^\/(limits|scenarios)\/(\d+)$/.exec(pointer);
+  return whole ? `${whole[1] === "limits" ? "Limit" : "What-if"} ${Number(whole[2]) + 1}` : null;
 }
 
 function fieldOf(pointer) {
