@@ -9,7 +9,7 @@ const PICTURE = fileURLToPath(new URL("../../examples/pictures/page.png", import
 await mkdir(fileURLToPath(new URL("../../examples/pictures", import.meta.url)), { recursive: true });
 const [browser, running] = await Promise.all([startBrowser(), startService()]);
 try {
-  const { page, close } = await openPage(browser, running.base, { width: 1180, height: 900 });
+  const { page, close } = await openPage(browser, running.base, { width: 1040, height: 760 });
   await loadDemo(page);
   await page.evaluate(() => {
     document.activeElement.blur();

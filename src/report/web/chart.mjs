@@ -31,16 +31,21 @@ async function draw(figure, run, chart, threshold) {
     fill(figure, el("p", { class: "help" }, `The chart could not be drawn: ${problem.detail}`));
     return;
   }
-  const drawn = new DOMParser().parseFromString(svg, "image/svg+xml").documentElement;
-  const text = (name) => drawn.querySelector(name)?.textContent.trim() ?? "";
+  const text = (name) => plainText(new RegExp(`<${name}[^>]*>([^<]*)</${name}>`).exec(svg)?.[1] ?? "");
   const address = URL.createObjectURL(new Blob([svg], { type: "image/svg+xml" }));
   // As a picture the drawing can run nothing, whatever is in it.
   const image = el("img", { src: address, alt: text("desc") || text("title"), onload: () => URL.revokeObjectURL(address) });
-  const [, , width, height] = (drawn.getAttribute("viewBox") ?? "").split(/[\s,]+/).map(Number);
+  const [, , width, height] = (/viewBox="([^"]*)"/.exec(svg)?.[1] ?? "").split(/[\s,]+/).map(Number);
   if (width > 0 && height > 0) {
     image.width = width;
     image.height = height;
   }
   fill(figure, el("div", { class: "picture", tabindex: "0", role: "group", "aria-label": text("title") }, image));
   figure.hidden = false;
+}
+
+// Parsed into a document, the drawing's styles would come under this page's policy, which refuses them.
+function plainText(markup) {
+  const named = { amp: "&", lt: "<", gt: ">", quot: '"', apos: "'" };
+  return markup.replace(/&(?:#(\d+)|(\w+));/g, (all, code, name) => (code ? String.fromCodePoint(code) : named[name] ?? all)).trim();
 }
