@@ -23,6 +23,7 @@ mod representation;
 mod requests;
 mod runs;
 mod streams;
+mod web;
 mod webhooks;
 
 use std::sync::Arc;
@@ -123,7 +124,7 @@ fn router(state: AppState) -> Router {
     let work = work.layer(middleware::from_fn_with_state(places, admit));
     let (around, _) = around_routes().split_for_parts();
     let document = docs::DocumentText(openapi_text().into());
-    observed(work.merge(around).merge(docs::pages()).layer(Extension(document))).with_state(state)
+    observed(work.merge(around).merge(docs::pages()).merge(web::routes()).layer(Extension(document))).with_state(state)
 }
 
 /// Routes with the outermost layers: whatever happens inside, a response leaves, and an error leaves as a problem.

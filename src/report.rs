@@ -12,6 +12,7 @@ mod questions_table;
 mod rows;
 mod table;
 mod text;
+mod web;
 mod words;
 
 pub use accuracy::accuracy_csv;
@@ -24,6 +25,4 @@ pub use policy::content_policy;
 pub use rows::{degree_counts_csv, transitions_csv};
 pub use table::{align, forecast_table, mix_in_words};
 pub use text::{figure, readable, wrap};
-
-/// A plain page of links.
-pub const INDEX_PAGE: &str = include_str!("report/index.html");
+pub use web::{WebFile, web_files};

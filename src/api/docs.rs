@@ -1,12 +1,11 @@
-//! The OpenAPI document, a viewer for it, and an index page; nothing of them loads from a network.
+//! The OpenAPI document and a viewer for it; neither loads anything from a network.
 
 use std::sync::Arc;
 
 use axum::extract::Request;
 use axum::http::{HeaderValue, header};
 use axum::middleware::{self, Next};
-use axum::response::{Html, IntoResponse, Response};
-use axum::routing::get;
+use axum::response::{IntoResponse, Response};
 use axum::{Extension, Router};
 use serde_json::json;
 use utoipa::OpenApi as _;
@@ -16,7 +15,6 @@ use utoipa_axum::routes;
 use utoipa_swagger_ui::{Config, SwaggerUi};
 
 use super::AppState;
-use crate::report;
 
 /// What the pages may load: themselves alone. The viewer styles inline and draws images from data addresses.
 const PAGE_POLICY: &str = "default-src 'self'; style-src 'self' 'unsafe-inline'; img-src 'self' data:; \
@@ -79,13 +77,10 @@ pub fn routes() -> OpenApiRouter<AppState> {
     OpenApiRouter::new().routes(routes!(openapi_json))
 }
 
-/// The pages, which the document does not list.
+/// The viewer, which the document does not list.
 pub fn pages() -> Router<AppState> {
     let viewer = Config::from("/openapi.json").validator_url("none").try_it_out_enabled(true);
-    Router::new()
-        .route("/", get(index))
-        .merge(SwaggerUi::new("/docs").config(viewer))
-        .route_layer(middleware::from_fn(with_page_policy))
+    Router::new().merge(SwaggerUi::new("/docs").config(viewer)).route_layer(middleware::from_fn(with_page_policy))
 }
 
 /// The document's text, made once.
@@ -99,10 +94,6 @@ pub struct DocumentText(pub Arc<str>);
 async fn openapi_json(Extension(DocumentText(text)): Extension<DocumentText>) -> Response {
     ([(header::CONTENT_TYPE, "application/json"), (header::CACHE_CONTROL, "no-cache")], text.to_string())
         .into_response()
-}
-
-async fn index() -> Html<&'static str> {
-    Html(report::INDEX_PAGE)
 }
 
 async fn with_page_policy(request: Request, next: Next) -> Response {

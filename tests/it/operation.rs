@@ -49,9 +49,11 @@ async fn metrics_name_routes_not_paths() {
 #[tokio::test]
 async fn pages_load_nothing_from_elsewhere() {
     let service = Service::start().await;
-    for path in ["/", "/docs/"] {
+    for (path, policy) in
+        [("/", "default-src 'none'; script-src 'self'; style-src 'self'"), ("/docs/", "default-src 'self'")]
+    {
         let page = service.get(path).await.expect(200);
-        assert!(page.header("content-security-policy").starts_with("default-src 'self'"), "{path}");
+        assert!(page.header("content-security-policy").starts_with(policy), "{path}");
         assert!(!page.text.contains("//cdn") && !page.text.contains("src=\"http"), "{path}: {}", page.text);
     }
     let settings = service.get("/docs/swagger-initializer.js").await.expect(200);
@@ -60,6 +62,33 @@ async fn pages_load_nothing_from_elsewhere() {
         "{}",
         settings.text
     );
+}
+
+#[tokio::test]
+async fn the_files_of_the_page_are_asked_about_and_not_sent_again() {
+    let service = Service::start().await;
+    let page = service.get("/").await.expect(200);
+    assert!(page.header("content-type").starts_with("text/html"));
+    let mut served = 0;
+    for name in page
+        .text
+        .split('"')
+        .filter(|part| part.starts_with("/assets/"))
+        .chain(["/assets/ask.mjs", "/assets/heronsgate.csv"])
+    {
+        let file = service.get(name).await.expect(200);
+        let kind = if name.ends_with(".mjs") { "text/javascript" } else { "" };
+        assert!(
+            file.header("content-type").starts_with(kind) && file.header("x-content-type-options") == "nosniff",
+            "{name}"
+        );
+        assert_eq!(file.header("cache-control"), "no-cache", "{name}");
+        let again = service.get_with(name, "if-none-match", file.header("etag")).await.expect(304);
+        assert!(again.text.is_empty() && again.header("etag") == file.header("etag"), "{name}");
+        served += 1;
+    }
+    assert_eq!(served, 5, "icon, style, start, and two that those name");
+    service.get("/assets/nothing.mjs").await.expect_problem(404, "no_such_route");
 }
 
 #[tokio::test]
