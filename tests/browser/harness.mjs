@@ -22,7 +22,7 @@ export async function startService(settings = {}) {
   const folder = await mkdtemp(join(tmpdir(), "tailcast-page-"));
   const port = await freePort();
   const base = `http://127.0.0.1:${port}`;
-  const binary = process.env.TAILCAST_BIN ?? join(ROOT, "target/debug/tailcast");
+  const binary = process.env.SERVICE_BINARY ?? join(ROOT, "target/debug/tailcast");
   const child = spawn(binary, ["serve"], {
     env: {
       // The service refuses variables of its name that are no settings.
@@ -37,7 +37,7 @@ export async function startService(settings = {}) {
     stdio: ["ignore", "ignore", "inherit"],
   });
   const failed = new Promise((_, reject) => {
-    child.once("error", (error) => reject(new Error(`${binary}: ${error.message}; build it, or name it in TAILCAST_BIN`)));
+    child.once("error", (error) => reject(new Error(`${binary}: ${error.message}; build it, or name it in SERVICE_BINARY`)));
     child.once("exit", (code) => reject(new Error(`the service stopped with ${code}`)));
   });
   failed.catch(() => {});
