@@ -1,16 +1,29 @@
 //! Every curl line of the documents, run in their order against a service of its own by the shell that a reader would use.
 
 use std::fmt::Write as _;
+use std::os::unix::fs::symlink;
 use std::path::Path;
 use std::process::Command;
 
-use crate::process::serve;
+use crate::process::serve_with;
 
 /// Where the documents say the service is.
 const DOCUMENTED: &str = "http://127.0.0.1:8080";
-/// What a shell is told before the lines of a document: a refused call fails, as a reader would see that it has.
-const PREAMBLE: &str =
-    "set -euo pipefail\ncurl() { command curl --noproxy '*' --max-time 60 --fail-with-body \"$@\"; }\n";
+/// What a shell is told before the lines of a document: a refused call fails, as a reader would see that it has, and a stream is
+/// left after a while.
+const PREAMBLE: &str = r#"set -euo pipefail
+curl() {
+    case " $* " in
+    *" -sN "*) command curl --noproxy '*' --max-time 3 --fail "$@" || [ $? -eq 28 ] ;;
+    *) command curl --noproxy '*' --max-time 60 --fail-with-body "$@" ;;
+    esac
+}
+"#;
+/// What the documents have the service set to.
+const SETTINGS: [(&str, &str); 2] = [
+    ("TAILCAST_NOTICES_DESTINATIONS", "https://hooks.example.org"),
+    ("TAILCAST_NOTICES_SECRET", "bm90IGEgc2VjcmV0LCBidXQgbG9uZyBlbm91Z2g="),
+];
 
 /// A piece of a document between marks of code.
 #[derive(Debug, PartialEq)]
@@ -65,7 +78,9 @@ fn follow(name: &str) {
     let pieces = pieces(&markdown);
     assert!(pieces.iter().any(|piece| matches!(piece, Piece::Script(_))), "{name} calls nothing");
     let folder = tempfile::tempdir().unwrap();
-    let service = serve(folder.path());
+    // What the lines write lies beside the database; what they read is the project's own.
+    symlink(root.join("examples"), folder.path().join("examples")).unwrap();
+    let service = serve_with(folder.path(), &SETTINGS);
     let mut text = PREAMBLE.to_owned();
     for (i, piece) in pieces.iter().enumerate() {
         if let Piece::Script(lines) = piece {
@@ -75,7 +90,7 @@ fn follow(name: &str) {
     }
     let script = folder.path().join("script");
     std::fs::write(&script, text.replace(DOCUMENTED, &format!("http://{}", service.address))).unwrap();
-    let run = Command::new("bash").arg(&script).current_dir(root).output().unwrap();
+    let run = Command::new("bash").arg(&script).current_dir(folder.path()).output().unwrap();
     let printed = |i: usize| std::fs::read_to_string(folder.path().join(i.to_string())).unwrap_or_default();
     let last = (0..pieces.len()).rev().map(printed).find(|text| !text.is_empty()).unwrap_or_default();
     assert!(run.status.success(), "{name}: {}\n{last}", String::from_utf8_lossy(&run.stderr));

@@ -99,7 +99,7 @@ impl Plot<'_> {
         }
         let newest = self.courses.iter().filter_map(|course| course.counted.last()).map(|(day, _)| *day).next_back();
         if let Some(day) = newest {
-            panel.upright(day, "newest snapshot", Dash::Dots, 0)?;
+            panel.upright(day, "newest snapshot", Dash::Dots)?;
         }
         let mut labels: Vec<Label> =
             self.courses.iter().enumerate().filter_map(|(series, course)| self.label(series, course)).collect();
@@ -141,7 +141,7 @@ impl Plot<'_> {
     /// The limit as a line, when it is crossed, and the date up to which it must hold.
     fn draw_limit(&self, panel: &Panel, row: usize, limit: &LimitAnswer, newest: Option<f64>) -> Drawn {
         if let Some(by) = days(&limit.by).filter(|_| self.alone()) {
-            panel.upright(by, &format!("by {}", short_day(by)), Dash::Short, row + 1)?;
+            panel.upright_from_foot(by, &format!("by {}", short_day(by)), Dash::Short, row)?;
         }
         if !self.in_sight(limit) {
             return Ok(());

@@ -108,12 +108,20 @@ impl<'c, 'a> Panel<'c, 'a> {
     }
 
     /// An upright line across the panel with a word at its head, on the side where there is room.
-    pub(super) fn upright(&self, x: f64, text: &str, dash: Dash, row: usize) -> Drawn {
+    pub(super) fn upright(&self, x: f64, text: &str, dash: Dash) -> Drawn {
+        self.upright_with(x, text, dash, self.room.top + 8.0)
+    }
+
+    /// The same with the word at its foot, as many rows above the axis: lines that have notes at their head.
+    pub(super) fn upright_from_foot(&self, x: f64, text: &str, dash: Dash, row: usize) -> Drawn {
+        self.upright_with(x, text, dash, self.room.bottom - 8.0 - LINE * row as f64)
+    }
+
+    fn upright_with(&self, x: f64, text: &str, dash: Dash, y: f64) -> Drawn {
         let (at, _) = self.place(x, 0.0);
         self.canvas.line(&[(at, self.room.top), (at, self.room.bottom)], Colour::Muted, 1.0, dash)?;
         let fits = at + text_width(text, 11.5) + 6.0 < self.room.right;
         let (place, side) = if fits { (at + 5.0, Side::Left) } else { (at - 5.0, Side::Right) };
-        let y = self.room.top + 8.0 + LINE * row as f64;
         self.canvas.text((place, y), text, Letters { size: 11.5, ..Letters::NOTE.at(side) })
     }
 
