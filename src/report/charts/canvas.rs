@@ -24,8 +24,8 @@ pub(super) const FINE: f64 = 10.0;
 const TEXT_FACTOR: f64 = 1.24;
 /// Margin on the left and right.
 const MARGIN: f64 = 24.0;
-const TITLE_SIZE: f64 = 17.0;
-const NOTE_SIZE: f64 = 12.0;
+const TITLE_SIZE: f64 = 18.0;
+const NOTE_SIZE: f64 = 13.5;
 
 /// The outcome of drawing.
 pub(super) type Drawn = Result<(), ChartError>;
@@ -199,7 +199,9 @@ impl Canvas<'_> {
             self.text((MARGIN, y), &line, title)?;
             y += 22.0;
         }
-        self.text((MARGIN, y), &frame.key, Letters::NOTE)?;
+        for line in lines(&frame.key, NOTE_SIZE, room, 1) {
+            self.text((MARGIN, y), &line, Letters::NOTE)?;
+        }
         for (line, y) in lines(&frame.caution, NOTE_SIZE, room, 2).iter().zip([505.0, 522.0]) {
             self.text((MARGIN, y), line, Letters::NOTE)?;
         }

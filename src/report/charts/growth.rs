@@ -162,7 +162,7 @@ impl Plot<'_> {
         // Three words side by side would run into each other: they step upwards.
         crossings.iter().enumerate().try_for_each(|(i, (day, probability))| {
             let text = format!("crossed by {}: {}", short_day(*day), share(*probability));
-            panel.note((*day, at), &text, Side::Right, (-7.0, -12.0 - 15.0 * i as f64))
+            panel.note((*day, at), &text, Side::Right, (-7.0, -12.0 - 17.0 * i as f64))
         })
     }
 

@@ -10,7 +10,7 @@ use super::colours::Colour;
 use super::words::text_width;
 
 /// Height of a line of a label.
-const LINE: f64 = 14.0;
+const LINE: f64 = 16.0;
 /// Gap between a panel and the labels beside it.
 const GAP: f64 = 12.0;
 
@@ -120,21 +120,21 @@ impl<'c, 'a> Panel<'c, 'a> {
     fn upright_with(&self, x: f64, text: &str, dash: Dash, y: f64) -> Drawn {
         let (at, _) = self.place(x, 0.0);
         self.canvas.line(&[(at, self.room.top), (at, self.room.bottom)], Colour::Muted, 1.0, dash)?;
-        let fits = at + text_width(text, 11.5) + 6.0 < self.room.right;
+        let fits = at + text_width(text, 13.0) + 6.0 < self.room.right;
         let (place, side) = if fits { (at + 5.0, Side::Left) } else { (at - 5.0, Side::Right) };
-        self.canvas.text((place, y), text, Letters { size: 11.5, ..Letters::NOTE.at(side) })
+        self.canvas.text((place, y), text, Letters { size: 13.0, ..Letters::NOTE.at(side) })
     }
 
     /// A note within the panel, from its left edge at the height of a value.
     pub(super) fn note(&self, (x, y): (f64, f64), text: &str, side: Side, aside: Place) -> Drawn {
         let (across, up) = self.place(x, y);
-        let half = text_width(text, 11.5);
+        let half = text_width(text, 13.0);
         let across = match side {
             Side::Left => (across + aside.0).min(self.room.right - half),
             Side::Right => (across + aside.0).max(self.room.left + half),
             Side::Middle => (across + aside.0).clamp(self.room.left + half / 2.0, self.room.right - half / 2.0),
         };
-        self.canvas.text((across, up + aside.1), text, Letters { size: 11.5, ..Letters::LABEL.at(side) })
+        self.canvas.text((across, up + aside.1), text, Letters { size: 13.0, ..Letters::LABEL.at(side) })
     }
 
     /// Labels on the right, moved apart where they would overlap and then tied to their lines.
