@@ -192,19 +192,6 @@ impl Store {
         rows.into_iter().map(StoredNotice::try_from).collect()
     }
 
-    /// Whether a network has any notice: without one nobody need be told.
-    ///
-    /// # Errors
-    /// When the database fails.
-    pub async fn has_notices(&self, network: &str) -> Result<bool, StoreError> {
-        self.file.check()?;
-        let found: i64 = sqlx::query_scalar("SELECT EXISTS (SELECT 1 FROM notices WHERE network = $1)")
-            .bind(network)
-            .fetch_one(&self.read)
-            .await?;
-        Ok(found != 0)
-    }
-
     /// Deletes a notice and its events, those that wait too. `allows` is asked about its validator.
     ///
     /// # Errors

@@ -50,6 +50,8 @@ pub struct PendingEvent {
     pub network: String,
     /// Where it goes.
     pub url: String,
+    /// When it was due; storing the notice anew makes that another time.
+    pub due_at: Timestamp,
     /// Attempts on the notice that failed since the last that did not.
     pub failures: u64,
     /// What kind of event it is.
@@ -80,6 +82,7 @@ struct EventRow {
     name: String,
     network: String,
     url: String,
+    due_at: i64,
     failures: i64,
     kind: String,
     about: String,
@@ -111,9 +114,9 @@ impl Store {
     pub async fn pending_event(&self, notice: Uuid) -> Result<Option<PendingEvent>, StoreError> {
         self.file.check()?;
         let row: Option<EventRow> = sqlx::query_as(
-            "SELECT e.id, n.name, n.network, n.url, n.failures, e.kind, e.about, e.raised, e.figure_before, e.created_at, \
+            "SELECT e.id, n.name, n.network, n.url, n.due_at, n.failures, e.kind, e.about, e.raised, e.figure_before, e.created_at, \
              e.details FROM notice_events e JOIN notices n ON n.id = e.notice WHERE e.notice = $1 AND e.state = 'pending' \
-             ORDER BY e.id LIMIT 1",
+             AND n.due_at IS NOT NULL ORDER BY e.id LIMIT 1",
         )
         .bind(notice.to_string())
         .fetch_optional(&self.read)
@@ -143,7 +146,7 @@ impl Store {
     /// When the database fails.
     pub async fn event_delivered(&self, notice: Uuid, event: Uuid, at: Timestamp) -> Result<(), StoreError> {
         let mut transaction = self.begin().await?;
-        if end(&mut transaction, event, "delivered").await? {
+        if take(&mut transaction, event).await? {
             sqlx::query(
                 "UPDATE notices SET delivered = delivered + 1, delivered_at = $2, failures = 0, due_at = CASE WHEN EXISTS \
                  (SELECT 1 FROM notice_events WHERE notice = $1 AND state = 'pending') THEN $2 END WHERE id = $1",
@@ -157,46 +160,74 @@ impl Store {
         self.commit(transaction).await
     }
 
-    /// Notes that an attempt failed, why, and when the next is due; `give_up` ends the event.
+    /// Notes that an attempt failed, why, and when the next is due. Events of the notice from before `too_old` are given up, for where
+    /// they go takes nothing: how many. A notice that was stored anew meanwhile keeps its own time: it was not tried as it is now.
     ///
     /// # Errors
     /// When the database fails.
     pub async fn event_failed(
         &self,
-        (notice, event): (Uuid, Uuid),
+        notice: Uuid,
+        event: &PendingEvent,
         (at, why): (Timestamp, &str),
-        next_at: Timestamp,
-        give_up: bool,
-    ) -> Result<(), StoreError> {
+        (next_at, too_old): (Timestamp, Timestamp),
+    ) -> Result<u64, StoreError> {
         let mut transaction = self.begin().await?;
         sqlx::query("UPDATE notice_events SET attempts = attempts + 1 WHERE id = $1 AND state = 'pending'")
-            .bind(event.to_string())
+            .bind(event.id.to_string())
             .execute(&mut *transaction)
             .await?;
-        sqlx::query("UPDATE notices SET failures = failures + 1, failed_at = $2, failure = $3 WHERE id = $1")
-            .bind(notice.to_string())
-            .bind(at.as_microsecond())
-            .bind(why)
-            .execute(&mut *transaction)
-            .await?;
-        if give_up && end(&mut transaction, event, "given_up").await? {
-            sqlx::query("UPDATE notices SET given_up = given_up + 1, given_up_at = $2 WHERE id = $1")
-                .bind(notice.to_string())
-                .bind(at.as_microsecond())
-                .execute(&mut *transaction)
-                .await?;
-            prune(&mut transaction, notice).await?;
-        }
-        sqlx::query(
-            "UPDATE notices SET due_at = CASE WHEN EXISTS (SELECT 1 FROM notice_events WHERE notice = $1 AND state = 'pending') \
-             THEN $2 END WHERE id = $1",
+        let noted = sqlx::query(
+            "UPDATE notices SET failures = failures + 1, failed_at = $2, failure = $3 WHERE id = $1 AND due_at = $4",
         )
         .bind(notice.to_string())
-        .bind(next_at.as_microsecond())
+        .bind(at.as_microsecond())
+        .bind(why)
+        .bind(event.due_at.as_microsecond())
         .execute(&mut *transaction)
         .await?;
-        self.commit(transaction).await
+        let mut given_up = 0;
+        if noted.rows_affected() > 0 {
+            given_up = give_up(&mut transaction, notice, at, too_old).await?;
+            sqlx::query(
+                "UPDATE notices SET due_at = CASE WHEN EXISTS (SELECT 1 FROM notice_events WHERE notice = $1 AND \
+                 state = 'pending') THEN $2 END WHERE id = $1",
+            )
+            .bind(notice.to_string())
+            .bind(next_at.as_microsecond())
+            .execute(&mut *transaction)
+            .await?;
+        }
+        self.commit(transaction).await?;
+        Ok(given_up)
     }
+}
+
+/// Ends the events of a notice that are too old; how many.
+async fn give_up(
+    connection: &mut SqliteConnection,
+    notice: Uuid,
+    at: Timestamp,
+    too_old: Timestamp,
+) -> Result<u64, StoreError> {
+    let ended = sqlx::query(
+        "UPDATE notice_events SET state = 'given_up' WHERE notice = $1 AND state = 'pending' AND created_at <= $2",
+    )
+    .bind(notice.to_string())
+    .bind(too_old.as_microsecond())
+    .execute(&mut *connection)
+    .await?
+    .rows_affected();
+    if ended > 0 {
+        sqlx::query("UPDATE notices SET given_up = given_up + $3, given_up_at = $2 WHERE id = $1")
+            .bind(notice.to_string())
+            .bind(at.as_microsecond())
+            .bind(i64::try_from(ended).unwrap_or(i64::MAX))
+            .execute(&mut *connection)
+            .await?;
+        prune(connection, notice).await?;
+    }
+    Ok(ended)
 }
 
 /// Holds how things stand against what each notice of the network last had to tell, and puts an event into the outbox for every
@@ -313,11 +344,10 @@ async fn forget(
     Ok(())
 }
 
-/// Ends an event that waits; false when it does not.
-async fn end(connection: &mut SqliteConnection, event: Uuid, state: &'static str) -> Result<bool, StoreError> {
-    let done = sqlx::query("UPDATE notice_events SET state = $2 WHERE id = $1 AND state = 'pending'")
+/// Notes that an event that waits was taken; false when it does not wait.
+async fn take(connection: &mut SqliteConnection, event: Uuid) -> Result<bool, StoreError> {
+    let done = sqlx::query("UPDATE notice_events SET state = 'delivered' WHERE id = $1 AND state = 'pending'")
         .bind(event.to_string())
-        .bind(state)
         .execute(connection)
         .await?;
     Ok(done.rows_affected() > 0)
@@ -344,6 +374,7 @@ impl TryFrom<EventRow> for PendingEvent {
             name: row.name,
             network: row.network,
             url: row.url,
+            due_at: time(row.due_at)?,
             failures: unsigned("failures", row.failures)?,
             kind: NoticeKind::named(&row.kind)?,
             about: row.about,

@@ -49,9 +49,11 @@ pub enum Undelivered {
     /// Nobody listens.
     #[error("no connection: {0}")]
     NoConnection(String),
-    /// The encryption cannot be agreed on.
-    #[error("no secure connection: {0}")]
-    NotSecure(String),
+    /// The encryption cannot be agreed on, or its certificate does not hold. What the other side showed is not repeated.
+    #[error(
+        "no secure connection: its certificate is not trusted, is of another name, or has expired, or it speaks no TLS"
+    )]
+    NotSecure,
     /// Too slow.
     #[error("no answer within {} s", .0.as_secs_f64())]
     TooSlow(Duration),
@@ -129,11 +131,10 @@ fn failure(error: &ureq::Error, patience: Duration) -> Undelivered {
             }
             ErrorKind::TimedOut => Undelivered::TooSlow(patience),
             // The errors of the encryption come wrapped into those of the connection.
-            _ if error.get_ref().is_some() => Undelivered::NotSecure(error.to_string()),
+            _ if error.get_ref().is_some() => Undelivered::NotSecure,
             kind => Undelivered::NoConnection(kind.to_string()),
         },
-        ureq::Error::Rustls(error) => Undelivered::NotSecure(error.to_string()),
-        ureq::Error::Tls(error) => Undelivered::NotSecure((*error).to_owned()),
+        ureq::Error::Rustls(_) | ureq::Error::Tls(_) => Undelivered::NotSecure,
         ureq::Error::Protocol(_) => Undelivered::NoConnection("the answer is not HTTP".to_owned()),
         other => Undelivered::NoConnection(other.to_string()),
     }

@@ -279,6 +279,49 @@ async fn an_event_that_is_never_taken_is_given_up_and_says_so() {
 }
 
 #[tokio::test]
+async fn what_is_too_old_is_given_up_together() {
+    let receiver = Receiver::start().await;
+    let change = |config: &mut Config| {
+        sends(config, &[&receiver.origin()]);
+        config.notices.attempts_for_hours = 0;
+    };
+    let service = Service::start_with(change).await;
+    told(&service, &receiver.hook()).await;
+    service.put(&format!("{NETWORK}/limits/shards"), &limit()).await.expect(201);
+    settled(&service).await;
+    receiver.will_answer(&[500]);
+    grow(&service, true).await;
+    let fares = when(&service, |now| now["given_up"] == 2).await;
+    assert_eq!(fares["pending"], 0);
+    assert_eq!(receiver.calls().len(), 1, "the other one is not waited for");
+    service.stop().await;
+}
+
+#[tokio::test]
+async fn an_address_that_is_mended_during_an_attempt_is_tried_at_once() {
+    let hanging = std::net::TcpListener::bind("127.0.0.1:0").unwrap();
+    let hanging_origin = format!("http://{}", hanging.local_addr().unwrap());
+    let receiver = Receiver::start().await;
+    let origins = [hanging_origin.clone(), receiver.origin()];
+    let service = Service::start_with(|config| {
+        sends(config, &origins.each_ref().map(String::as_str));
+        config.notices.timeout_seconds = 3;
+        config.notices.first_pause_ms = 300_000;
+    })
+    .await;
+    told(&service, &hanging_origin).await;
+    grow(&service, true).await;
+    let call = tokio::task::spawn_blocking(move || hanging.accept().map(|(call, _)| (hanging, call)));
+    let held = call.await.unwrap().unwrap();
+    service.put(NOTICE, &json!({"url": receiver.hook()})).await.expect(200);
+    receiver.wait_for(1).await;
+    let fares = when(&service, |now| now["delivered"] == 1).await;
+    assert_eq!(fares["state"], "idle");
+    drop(held);
+    service.stop().await;
+}
+
+#[tokio::test]
 async fn a_redirection_is_not_followed() {
     let receiver = Receiver::start().await;
     let service = sending_to(&[&receiver.origin()]).await;

@@ -104,13 +104,12 @@ impl Service {
             return Ok(persistently(|| self.store.event_delivered(notice, event.id, now)).await?);
         };
         let config = &self.notices.config;
-        // A clock that was set back makes no event old.
-        let age = now.duration_since(event.created_at);
-        let give_up = !age.is_negative() && age.unsigned_abs() >= config.attempts_for();
-        let next_at = later(now, pause(config, event.failures.saturating_add(1)));
-        counter!("tailcast_notices_total", "outcome" => if give_up { "given_up" } else { "failed" }).increment(1);
-        tracing::warn!(network = %event.network, notice = %event.name, event = %event.id, give_up, "a notice was not taken: {why}");
-        Ok(persistently(|| self.store.event_failed((notice, event.id), (now, &why), next_at, give_up)).await?)
+        let times = (later(now, pause(config, event.failures.saturating_add(1))), earlier(now, config.attempts_for()));
+        let given_up = persistently(|| self.store.event_failed(notice, &event, (now, &why), times)).await?;
+        counter!("tailcast_notices_total", "outcome" => "failed").increment(1);
+        counter!("tailcast_notices_total", "outcome" => "given_up").increment(given_up);
+        tracing::warn!(network = %event.network, notice = %event.name, event = %event.id, given_up, "a notice was not taken: {why}");
+        Ok(())
     }
 
     /// Sends an event; otherwise says why not.
@@ -139,4 +138,9 @@ fn pause(config: &NoticesConfig, failures: u64) -> Duration {
 /// So much later; the end of time at most.
 fn later(now: Timestamp, pause: Duration) -> Timestamp {
     now.checked_add(pause).unwrap_or(Timestamp::MAX)
+}
+
+/// So much earlier; the beginning of time at least.
+fn earlier(now: Timestamp, age: Duration) -> Timestamp {
+    now.checked_sub(age).unwrap_or(Timestamp::MIN)
 }

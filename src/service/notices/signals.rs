@@ -25,16 +25,14 @@ const CAUTIONS: [&str; 2] = [
 const MIDDLE: f64 = 0.5;
 
 impl Service {
-    /// How a network stands with these accounts and this forecast; nothing where nobody is to be told.
+    /// How a network stands with these accounts and this forecast; also where nobody is to be told, for a notice may be stored before
+    /// the refresh ends.
     pub(in crate::service) async fn signals(
         &self,
         network: &str,
         accounts: &Accounts,
         run: Option<&NewRun>,
     ) -> Result<Vec<Signal>, ServiceError> {
-        if !self.store.has_notices(network).await? {
-            return Ok(Vec::new());
-        }
         // As many more as withdrawn accounts may take away.
         let withdrawn: BTreeSet<Uuid> = accounts.withdrawn.iter().map(|(run, _)| *run).collect();
         let most = MOST_FORECASTS.saturating_add(withdrawn.len());
