@@ -173,7 +173,7 @@ async fn delete_forecast(
     Path(id): Path<String>,
     conditions: Conditions,
 ) -> Result<StatusCode, ApiError> {
-    let matches = |tag: &str| conditions.hold(Some(tag));
+    let matches = move |tag: &str| conditions.hold(Some(tag));
     state.service.delete(RunKind::Forecast, run_id(&id)?, matches).await?;
     Ok(StatusCode::NO_CONTENT)
 }

@@ -105,6 +105,7 @@ impl Polled {
         {
             copy.commits.store(commits, Ordering::Relaxed);
             copy.checked.store(now, Ordering::Relaxed);
+            copy.used.store(now, Ordering::Relaxed);
             return Ok(copy);
         }
         match inner.service.polled_forecast(name).await {

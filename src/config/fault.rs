@@ -6,7 +6,7 @@ use config::ConfigError;
 #[derive(Debug, thiserror::Error)]
 pub enum SettingsError {
     /// A file or value is unreadable.
-    #[error("{0}")]
+    #[error("{}", without_excerpt(.0))]
     Unreadable(#[from] ConfigError),
     /// A variable belongs to no key.
     #[error("{name} is not a setting; the known ones are {known}")]
@@ -48,4 +48,15 @@ pub enum SettingsError {
         /// What it must be.
         why: String,
     },
+}
+
+/// A fault in a file without the line that it is in, which may hold a secret: its place and what was expected.
+fn without_excerpt(error: &ConfigError) -> String {
+    let ConfigError::FileParse { uri, cause } = error else { return error.to_string() };
+    let told = cause.to_string();
+    let excerpt = |line: &&str| {
+        line.split_once('|').is_some_and(|(number, _)| number.trim().parse::<u64>().is_ok() || number.trim().is_empty())
+    };
+    let words: Vec<&str> = told.lines().filter(|line| !excerpt(line) && !line.trim().is_empty()).collect();
+    format!("{}: {}", uri.as_deref().unwrap_or("the settings"), words.join(": "))
 }

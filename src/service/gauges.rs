@@ -7,6 +7,7 @@ use jiff::Timestamp;
 use serde::Deserialize;
 use uuid::Uuid;
 
+use super::evidence::off_runtime;
 use super::numbers::date_of;
 use super::{DateAnswer, LimitAnswer, RefreshState, Service, ServiceError, TailAnswer};
 use crate::store::LatestForecast;
@@ -115,7 +116,12 @@ impl Service {
             let brief = match known.get(&line.run) {
                 Some(brief) => brief.clone(),
                 None => match self.store.find_latest(&line.network).await? {
-                    Some(latest) if latest.run.id == line.run => Arc::new(Brief::read(&latest, caps)?),
+                    Some(latest) if latest.run.id == line.run => {
+                        let brief = Arc::new(off_runtime(move || Brief::read(&latest, caps)).await??);
+                        // At once: a scraper that has no more patience finds it the next time.
+                        self.briefs.add(line.run, brief.clone());
+                        brief
+                    }
                     // Another forecast came meanwhile, or the network went: the next scrape tells.
                     _ => continue,
                 },
@@ -133,6 +139,10 @@ impl Service {
 impl Briefs {
     fn all(&self) -> HashMap<Uuid, Arc<Brief>> {
         self.0.lock().unwrap_or_else(PoisonError::into_inner).clone()
+    }
+
+    fn add(&self, run: Uuid, brief: Arc<Brief>) {
+        self.0.lock().unwrap_or_else(PoisonError::into_inner).insert(run, brief);
     }
 
     fn put(&self, kept: HashMap<Uuid, Arc<Brief>>) {

@@ -105,14 +105,18 @@ impl Service {
         &self,
         kind: RunKind,
         id: Uuid,
-        matches: impl FnOnce(&str) -> bool,
+        matches: impl FnOnce(&str) -> bool + Send + 'static,
     ) -> Result<(), ServiceError> {
         // A run never changes, so nothing can come between looking at its validator and deleting it but its deletion.
         let tag = self.store.find_tag(kind, id).await?.ok_or(ServiceError::NotFound(Thing::Run))?;
         if !matches(&tag) {
             return Err(ServiceError::TagMismatch);
         }
-        if self.store.delete_run(kind, id).await? { Ok(()) } else { Err(ServiceError::NotFound(Thing::Run)) }
+        let store = self.store.clone();
+        in_own_task(async move {
+            if store.delete_run(kind, id).await? { Ok(()) } else { Err(ServiceError::NotFound(Thing::Run)) }
+        })
+        .await
     }
 }
 

@@ -77,6 +77,8 @@ impl Store {
              OR EXISTS (SELECT 1 FROM transitions) OR EXISTS (SELECT 1 FROM link_events) \
              OR EXISTS (SELECT 1 FROM jobs) OR EXISTS (SELECT 1 FROM network_runs) \
              OR EXISTS (SELECT 1 FROM latest_forecasts) OR EXISTS (SELECT 1 FROM accounts) \
+             OR EXISTS (SELECT 1 FROM backtests) OR EXISTS (SELECT 1 FROM backtest_records) \
+             OR EXISTS (SELECT 1 FROM kept_questions) OR EXISTS (SELECT 1 FROM notice_standings) \
              OR EXISTS (SELECT 1 FROM notices) OR EXISTS (SELECT 1 FROM notice_events)",
         )
         .fetch_optional(&mut *connection)

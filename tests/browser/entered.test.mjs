@@ -22,7 +22,7 @@ for (const [name, text] of [
   ["semicolons and decimal commas", "Grad;Knoten\n0,0;6387,0\n1,0;2236,0\n12,0;1035,0\n"],
   ["semicolons, thousands and decimals at once", "0;6.387,00\n1;2.236,00\n12;1.035,00\n"],
   ["floats as programs write them", "0.0,6387.0\n1.0,2236.0\n12.0,1035.0"],
-  ["three decimals throughout", "0.000;6387.000\n1.000;2236.000\n12.000;1035.000"],
+  ["decimals throughout", "0.000;6387.00\n1.000;2236.00\n12.000;1035.00"],
   ["columns the other way round, by their names", "nodes,degree\n6387,0\n2236,1\n1035,12"],
   ["columns among others, by their names", "day;degree;nodes\n1;0;6387\n1;1;2236\n1;12;1035"],
   ["a table drawn with bars", "| degree | nodes |\n| 0 | 6387 |\n| 1 | 2236 |\n| 12 | 1035 |"],
@@ -40,6 +40,7 @@ for (const [name, text] of [
 for (const [name, text, place, words] of [
   ["nothing", " \n ", {}, /nothing in it/],
   ["a word", "0,5\n1,many\n2,3", { line: 2 }, /“many” is not a number/],
+  ["what may be thousands or decimals", "1.000\t3\n2.000\t4\n5.000\t1", { line: 1 }, /two ways/],
   ["a fraction", "0;5\n1;2,5\n2;3", { line: 2 }, /“2,5” is not a whole number/],
   ["a negative number", "0,5\n1,-3", { line: 2 }, /“-3” is negative/],
   ["a missing number", "0\t5\n1\t\n2\t3", { line: 2 }, /number of nodes is empty/],
@@ -91,7 +92,8 @@ test("what a request lacks is said before it is sent", () => {
 });
 
 test("thresholds are read in any order, and refused where they can be read in two ways", () => {
-  assert.deepEqual(readThresholds("100; 10, 1000 10").thresholds, [10, 100, 1000]);
+  assert.deepEqual(readThresholds("100; 10, 1000 12").thresholds, [10, 12, 100, 1000]);
+  assert.match(readThresholds("1 000").fault, /two ways/);
   assert.deepEqual(readThresholds("").thresholds, []);
   assert.match(readThresholds("1,000").fault, /two ways/);
   assert.match(readThresholds("ten").fault, /“ten” is not a whole number/);

@@ -140,7 +140,8 @@ impl Plot<'_> {
 
     /// The limit as a line, when it is crossed, and the date up to which it must hold.
     fn draw_limit(&self, panel: &Panel, row: usize, limit: &LimitAnswer, newest: Option<f64>) -> Drawn {
-        if let Some(by) = days(&limit.by).filter(|_| self.alone()) {
+        let end = self.dates().ends.1;
+        if let Some(by) = days(&limit.by).filter(|by| self.alone() && *by <= end) {
             panel.upright_from_foot(by, &format!("by {}", short_day(by)), Dash::Short, row)?;
         }
         if !self.in_sight(limit) {
@@ -151,7 +152,8 @@ impl Plot<'_> {
         panel.line(&[(axis.ends.0, at), (axis.ends.1, at)], Colour::Ink, 1.4, Dash::Short)?;
         let crossings: Vec<(f64, f64)> = (limit.crossing.iter())
             .filter_map(|crossing| Some((days(crossing.date.as_deref()?)?, crossing.probability.0)))
-            .filter(|(day, _)| newest.is_none_or(|newest| *day >= newest))
+            // One beyond the axis would be drawn at its end, at a wrong date.
+            .filter(|(day, _)| *day <= end && newest.is_none_or(|newest| *day >= newest))
             .collect();
         let points: Vec<(f64, f64)> = crossings.iter().map(|(day, _)| (*day, at)).collect();
         panel.line(&points, Colour::Ink, 3.0, Dash::Solid)?;

@@ -50,13 +50,17 @@ pub fn backtest_page(run: &BacktestRun, address: &str, theme: Theme) -> Result<S
 
 /// How far the pool missed at the nearest horizon, beside the best plain trend.
 fn finding(run: &BacktestRun) -> String {
-    let nearest = run.given.iter().find(|row| row.threshold.is_none());
-    let Some(row) = nearest else { return "Nothing was scored".to_owned() };
+    let overall = |rows: &[ScoreAnswer]| rows.iter().find(|row| row.threshold.is_none()).cloned();
+    let (row, hindsight) = match (overall(&run.expected), overall(&run.given)) {
+        (Some(row), _) => (row, ""),
+        (None, Some(row)) => (row, ", given the arrivals that came"),
+        (None, None) => return "Nothing was scored".to_owned(),
+    };
     let error = |error: f64| format!("{:.1} %", 100.0 * error);
     let trend = row.best_trend.as_ref().and_then(|best| row.members.iter().find(|member| member.member == *best));
     let trend = trend.map(|trend| format!(", the best plain trend by {}", error(trend.errors.mean_log_error.0)));
     format!(
-        "Past forecasts missed by {} {} ahead{}",
+        "Past forecasts missed by {} {} ahead{}{hindsight}",
         error(row.pooled.errors.mean_log_error.0),
         if row.periods_ahead == 1 { "one period".to_owned() } else { format!("{} periods", row.periods_ahead) },
         trend.unwrap_or_default()

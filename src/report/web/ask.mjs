@@ -3,7 +3,7 @@
 import { showAnswer } from "./answer.mjs";
 import { pickThresholds, totals } from "./defaults.mjs";
 import { demo } from "./demo.mjs";
-import { announce, byId, el, fill, keep, kept } from "./dom.mjs";
+import { announce, byId, el, fill, keep, kept, readable } from "./dom.mjs";
 import { formOf, propose } from "./fields.mjs";
 import { call, idempotencyKey, patiently } from "./http.mjs";
 import { readPaste } from "./paste.mjs";
@@ -45,7 +45,7 @@ export function startAsk() {
   byId("empty").addEventListener("click", startAfresh);
   byId("ask").addEventListener("submit", (event) => {
     event.preventDefault();
-    submit();
+    if (readable(byId("ask"))) submit();
   });
   watchDrops(byId("drop"));
 }
@@ -88,11 +88,17 @@ function watchDrops(zone) {
 async function takeFile(file) {
   if (!file) return;
   if (file.size > MOST_READ) {
+    byId("file").value = "";
     refuse([{ detail: `${file.name} has ${count(file.size / 1e6)} MB; the page reads up to ${MOST_READ / 1e6} MB. Send larger counts with the calls.` }], 0);
     return;
   }
-  take(await file.text());
-  byId("file").value = "";
+  try {
+    take(await file.text());
+  } catch (fault) {
+    refuse([{ detail: `${file.name} cannot be read: ${fault.message}` }], 0);
+  } finally {
+    byId("file").value = "";
+  }
 }
 
 // Reads counts, says what was read, and asks for the forecast at once when nothing more is needed.
@@ -113,7 +119,14 @@ function take(text) {
   evidence = { counts: read.counts, lines: read.lines };
   const notes = [...read.notes];
   if (read.body) {
-    const { entered, base, taken } = fromBody(read.body);
+    let pasted;
+    try {
+      pasted = fromBody(read.body);
+    } catch {
+      refuse([{ detail: "This request has a limit or a what-if that is not written as one." }], 0);
+      return;
+    }
+    const { entered, base, taken } = pasted;
     evidence.base = base;
     form.write(entered);
     if (taken.length > 0) notes.push(`A whole request was read. It goes on with ${taken.map((key) => key.replaceAll("_", " ")).join(", ")} as pasted.`);
@@ -246,7 +259,8 @@ function show(run, request) {
 
 function busy(text) {
   byId("changed").textContent = text;
-  byId("submit").toggleAttribute("aria-busy", text !== "");
+  if (text !== "") byId("submit").setAttribute("aria-busy", "true");
+  else byId("submit").removeAttribute("aria-busy");
   if (text !== "") announce(text);
 }
 

@@ -19,6 +19,13 @@ export function fill(node, ...children) {
   return node;
 }
 
+/** Whether the browser could read every number in a form; the first that it could not is shown, with the browser's own words. */
+export function readable(form) {
+  const wrong = [...form.querySelectorAll("input")].find((input) => input.validity.badInput);
+  wrong?.reportValidity();
+  return wrong === undefined;
+}
+
 /** The element of an id; the page has it. */
 export function byId(id) {
   return document.getElementById(id);

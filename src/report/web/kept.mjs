@@ -1,6 +1,6 @@
 // Limits and what-ifs kept with a network: read, added, taken away, compared.
 
-import { announce, el, fill, freshId } from "./dom.mjs";
+import { announce, el, fill, freshId, readable } from "./dom.mjs";
 import { call } from "./http.mjs";
 import { limitInWords } from "./networks.mjs";
 import { clearProblem, fieldFinder, showProblem } from "./problem.mjs";
@@ -65,6 +65,7 @@ function showKept(box, spec) {
 
   async function store(event) {
     event.preventDefault();
+    if (!readable(event.currentTarget)) return;
     clearProblem(problem, form);
     const values = rowValues(row);
     const { name, ...body } = spec.body(values);

@@ -14,8 +14,10 @@ function route({ first = false } = {}) {
   const [view, name] = location.hash.slice(1).split("/").map(decoded);
   const shown = view === "networks" || (view === "network" && name) ? view : "ask";
   for (const one of ["ask", "networks", "network"]) byId(`view-${one}`).hidden = one !== shown;
-  byId("to-ask").toggleAttribute("aria-current", shown === "ask");
-  byId("to-networks").toggleAttribute("aria-current", shown !== "ask");
+  for (const [id, here] of [["to-ask", shown === "ask"], ["to-networks", shown !== "ask"]]) {
+    if (here) byId(id).setAttribute("aria-current", "page");
+    else byId(id).removeAttribute("aria-current");
+  }
   if (shown === "networks") leave = showNetworks(byId("view-networks"));
   if (shown === "network") leave = showNetwork(byId("view-network"), name);
   document.title = { ask: "tailcast", networks: "Networks kept here · tailcast", network: `${name} · tailcast` }[shown];
@@ -31,6 +33,12 @@ function decoded(part) {
     return part;
   }
 }
+
+// The view stays as it is: its address is not that of its content.
+document.querySelector(".skip").addEventListener("click", (event) => {
+  event.preventDefault();
+  byId("main").focus();
+});
 
 startAsk();
 addEventListener("hashchange", () => route());

@@ -1,7 +1,7 @@
 // One network that is kept: what will come of it by its plan, its limits and what-ifs, how its forecasts have done.
 
 import { showAnswer } from "./answer.mjs";
-import { announce, el, fill, freshId } from "./dom.mjs";
+import { announce, el, fill, freshId, readable } from "./dom.mjs";
 import { call, idempotencyKey, patiently } from "./http.mjs";
 import { watchJobs } from "./jobs.mjs";
 import { showLimits, showScenarios } from "./kept.mjs";
@@ -184,6 +184,7 @@ function otherQuestion(view, plan) {
 
   async function ask(event) {
     event.preventDefault();
+    if (!readable(event.currentTarget)) return;
     clearProblem(problem, form);
     const asked = readThresholds(value(thresholds));
     const fieldOf = fieldFinder(form);

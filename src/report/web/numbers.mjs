@@ -5,13 +5,13 @@ export const MOST = Number.MAX_SAFE_INTEGER;
 const SPACES = /[\s\u00a0\u2007\u2009\u202f'’_]/g;
 const PLAIN = /^\d+$/;
 
-/** What "." and "," stand for in a column: "thousands" or "decimals", each judged by all of the column's texts. */
+/** What "." and "," stand for in a column: "thousands", "decimals" or "unclear", each judged by all of the column's texts. */
 export function columnStyle(texts) {
   return { ".": separatorStyle(texts, "."), ",": separatorStyle(texts, ",") };
 }
 
-// A separator splits thousands when every group after it has three digits: counts have no fractions. But where every
-// single text ends in three zeros, as in 0.000, 1.000, 2.000, a program wrote decimals.
+// A separator splits thousands when every group after it has three digits: counts have no fractions. Where every single text
+// ends in three zeros a program wrote decimals, as in 0.000, 1.000, 2.000; without a 0.000 these may be round thousands.
 function separatorStyle(texts, mark) {
   if (!texts.some((text) => text.includes(mark))) return "thousands";
   let numbers = 0;
@@ -25,7 +25,7 @@ function separatorStyle(texts, mark) {
     if (groups[0] === "0" || groups[0] === "") return "decimals";
     if (groups.slice(1).some((group) => !/^\d{3}([.,].*)?$/.test(group))) return "decimals";
   }
-  return numbers > 1 && zeros === numbers ? "decimals" : "thousands";
+  return numbers > 1 && zeros === numbers ? "unclear" : "thousands";
 }
 
 /** The number a text stands for, or what is wrong with it: `{value, grouped}` or `{fault}`. */
@@ -37,6 +37,9 @@ export function readWhole(text, style) {
   let digits = bare.replace(/^\+/, "");
   const grouped = digits !== text.trim();
   for (const mark of [".", ","]) {
+    if (style[mark] === "unclear" && digits.includes(mark)) {
+      return { fault: `can be read in two ways, as thousands or as decimals; write digits only` };
+    }
     if (style[mark] === "thousands") digits = digits.split(mark).join("");
   }
   digits = digits.replace(/[.,]0*$/, "");

@@ -6,8 +6,8 @@ const STEPS = ["P1W", "P1M", "P3M", "P1Y"];
 
 /** Thresholds as they were typed, or what is wrong with them: `{thresholds}` or `{fault}`. */
 export function readThresholds(text) {
-  if (/\d,\d{3}(?!\d)/.test(text)) {
-    return { fault: `“${text}” can be read in two ways; put a space after each comma, and none into a number.` };
+  if (/\d[,\s]\d{3}(?!\d)/.test(text)) {
+    return { fault: `“${text}” can be read in two ways; put a comma and a space between thresholds, and nothing into a number.` };
   }
   const parts = text.split(/[\s,;]+/).filter((part) => part !== "");
   const wrong = parts.find((part) => !/^\d+$/.test(part));

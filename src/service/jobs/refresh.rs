@@ -191,7 +191,11 @@ impl Service {
                 Ok(())
             }
             RefreshEnded::CalledOff => Ok(()),
-            RefreshEnded::Superseded => self.end_without(job, revision, SUPERSEDED, None).await,
+            // Where a later refresh stands for it, it is that one that says how things stand; without a plan none follows.
+            RefreshEnded::Superseded => {
+                let stands = Some((RefreshState::Outdated, Some(NO_PLAN)));
+                self.end_without(job, revision, SUPERSEDED, stands).await
+            }
             RefreshEnded::Done => self.end_without(job, revision, DONE, Some((RefreshState::Current, None))).await,
         }
     }
