@@ -123,6 +123,16 @@ mod tests {
     }
 
     #[test]
+    fn a_fault_in_a_file_is_told_without_the_line_it_is_in() {
+        let folder = tempfile::tempdir().unwrap();
+        let path = folder.path().join("settings.toml");
+        std::fs::write(&path, format!("[notices]\nsecret = \"{SECRET}\n")).unwrap();
+        let error = Config::from_sources(Some(&path), std::iter::empty()).unwrap_err().to_string();
+        assert!(error.contains("settings.toml") && error.contains("line 2"), "{error}");
+        assert!(!error.contains("MfKQ"), "{error}");
+    }
+
+    #[test]
     fn pauses_double_up_to_the_longest() {
         let notices = with(&[("FIRST_PAUSE_MS", "1000"), ("LONGEST_PAUSE_SECONDS", "60")]).unwrap().notices;
         let seconds = |failures| notices.pause(failures).as_secs();

@@ -3,7 +3,10 @@
 use std::time::Duration;
 
 use reqwest::Method;
+use serde_json::json;
 use sqlx::{Connection, Executor, SqliteConnection};
+
+use tokio::io::{AsyncReadExt, AsyncWriteExt};
 
 use crate::harness::{Service, answered, fit_body, forecast_body};
 
@@ -128,6 +131,30 @@ async fn a_stop_finishes_what_was_accepted() {
     }
     assert!(answered > 0, "some were accepted before the stop");
     assert!(tokio::net::TcpStream::connect(address).await.is_err(), "nobody listens any more");
+}
+
+/// Reads slowly over a connection that holds little, so that most of the answer is still to be sent when the service stops.
+#[tokio::test]
+async fn a_stop_finishes_an_answer_that_is_being_sent() {
+    let service = Service::start().await;
+    service.put("/v1/networks/heronsgate", &json!({"degree_kind": "received"})).await.expect(201);
+    let path = "/v1/networks/heronsgate/snapshots/2026-06-01";
+    let pairs: Vec<[u64; 2]> = (0..800_000).map(|degree| [degree, 1]).collect();
+    service.put(path, &json!({"degree_counts": pairs})).await.expect(201);
+    let socket = tokio::net::TcpSocket::new_v4().unwrap();
+    socket.set_recv_buffer_size(4096).unwrap();
+    let mut connection = socket.connect(service.address()).await.unwrap();
+    connection.write_all(format!("GET {path} HTTP/1.1\r\nhost: x\r\n\r\n").as_bytes()).await.unwrap();
+    let mut answer = vec![0; 1024];
+    connection.read_exact(&mut answer).await.unwrap();
+    let stop = tokio::spawn(service.stop());
+    tokio::time::sleep(Duration::from_secs(2)).await;
+    connection.read_to_end(&mut answer).await.unwrap();
+    stop.await.unwrap();
+    let text = String::from_utf8(answer).unwrap();
+    let (head, body) = text.split_once("\r\n\r\n").unwrap();
+    assert!(head.to_ascii_lowercase().contains(&format!("content-length: {}", body.len())), "{head} {}", body.len());
+    assert!(body.len() > 8_000_000 && body.contains("[799999,1]"), "{}", body.len());
 }
 
 #[tokio::test]

@@ -182,6 +182,16 @@ async fn a_landing_snapshot_makes_the_latest_forecast_anew() {
 }
 
 #[tokio::test]
+async fn a_plan_that_is_taken_away_during_a_refresh_leaves_none_at_work() {
+    let service = Service::start().await;
+    service.put(NETWORK, &settings()).await.expect(201);
+    put_counts(&service, "2026-05-02", &COUNTS[0]).await;
+    service.put(NETWORK, &json!({"degree_kind": "received"})).await.expect(200);
+    let line = settled(&service).await;
+    assert!(["outdated", "current"].contains(&line["refresh"]["state"].as_str().unwrap()), "{line}");
+}
+
+#[tokio::test]
 async fn a_burst_of_changes_is_one_forecast() {
     let service = Service::start().await;
     service.put(NETWORK, &settings()).await.expect(201);
