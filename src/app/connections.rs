@@ -1,20 +1,19 @@
 //! Connections: accept, serve, and let go of those that ask for nothing.
 
+use std::io::{self, IoSlice};
 use std::pin::Pin;
 use std::sync::Arc;
-use std::sync::atomic::{AtomicUsize, Ordering};
+use std::sync::atomic::{AtomicBool, AtomicUsize, Ordering};
 use std::task::{Context, Poll};
 use std::time::Duration;
 
-use axum::body::{Body, Bytes};
-use axum::response::Response;
 use axum::serve::Listener;
-use hyper::body::{Frame, Incoming, SizeHint};
-use hyper::header::CONTENT_TYPE;
+use hyper::body::Incoming;
 use hyper::server::conn::http1;
 use hyper::service::{Service, service_fn};
 use hyper_util::rt::{TokioIo, TokioTimer};
 use hyper_util::service::TowerToHyperService;
+use tokio::io::{AsyncRead, AsyncWrite, ReadBuf};
 use tokio::net::{TcpListener, TcpStream};
 use tokio::sync::watch;
 use tokio::task::JoinSet;
@@ -41,24 +40,32 @@ pub async fn serve(mut listener: TcpListener, front: Front, head_timeout: Durati
     while open.join_next().await.is_some() {}
 }
 
-/// Serves one connection. After the stop its request in work is finished; a request that has not come in full by then
-/// is not waited for.
+/// Serves one connection. After the stop its request in work is finished, and its answer sent to a client that reads; a request
+/// that has not come in full by then is not waited for.
 async fn connection(stream: TcpStream, front: Front, head_timeout: Duration, mut stop: watch::Receiver<bool>) {
     let in_work = Arc::new(AtomicUsize::new(0));
     let counted = in_work.clone();
     let service = service_fn(move |request: hyper::Request<Incoming>| {
-        let in_work = InWork::new(counted.clone());
         let work = match front.at_once(request.method(), request.uri(), request.headers()) {
             Some(answer) => Err(answer),
-            None => Ok(TowerToHyperService::new(front.router()).call(request)),
+            None => {
+                counted.fetch_add(1, Ordering::Relaxed);
+                Ok((TowerToHyperService::new(front.router()).call(request), counted.clone()))
+            }
         };
         async move {
             match work {
-                Err(answer) => Ok(in_work.until_sent(answer)),
-                Ok(answer) => answer.await.map(|answer| in_work.until_sent(answer)),
+                Err(answer) => Ok(answer),
+                Ok((answer, counted)) => {
+                    let answer = answer.await;
+                    counted.fetch_sub(1, Ordering::Relaxed);
+                    answer
+                }
             }
         }
     });
+    let sending = Arc::new(AtomicBool::new(false));
+    let stream = Watched { stream, sending: sending.clone() };
     let serving = http1::Builder::new()
         .timer(TokioTimer::new())
         .header_read_timeout(head_timeout)
@@ -72,58 +79,63 @@ async fn connection(stream: TcpStream, front: Front, head_timeout: Duration, mut
     loop {
         tokio::select! {
             _ = serving.as_mut() => return,
-            () = tokio::time::sleep(FLUSH) => if in_work.load(Ordering::Relaxed) == 0 { return },
+            () = tokio::time::sleep(FLUSH) => {
+                if in_work.load(Ordering::Relaxed) == 0 && !sending.load(Ordering::Relaxed) {
+                    return;
+                }
+            }
         }
     }
 }
 
-/// A request that counts as in work until it is dropped.
-struct InWork(Arc<AtomicUsize>);
+/// A connection that tells whether more is to be sent than the client has taken yet.
+struct Watched {
+    stream: TcpStream,
+    sending: Arc<AtomicBool>,
+}
 
-impl InWork {
-    fn new(count: Arc<AtomicUsize>) -> Self {
-        count.fetch_add(1, Ordering::Relaxed);
-        Self(count)
-    }
-
-    /// The answer, in work until its body is sent. A stream of events has no end to wait for.
-    fn until_sent(self, answer: Response) -> Response {
-        match answer.headers().get(CONTENT_TYPE).is_some_and(|kind| kind == "text/event-stream") {
-            true => answer,
-            false => answer.map(|body| Body::new(Sending { body, _in_work: self })),
-        }
+impl Watched {
+    fn written(&self, outcome: Poll<io::Result<usize>>) -> Poll<io::Result<usize>> {
+        self.sending.store(outcome.is_pending(), Ordering::Relaxed);
+        outcome
     }
 }
 
-impl Drop for InWork {
-    fn drop(&mut self) {
-        self.0.fetch_sub(1, Ordering::Relaxed);
-    }
-}
-
-/// A body on its way.
-struct Sending {
-    body: Body,
-    _in_work: InWork,
-}
-
-impl hyper::body::Body for Sending {
-    type Data = Bytes;
-    type Error = axum::Error;
-
-    fn poll_frame(
+impl AsyncRead for Watched {
+    fn poll_read(
         mut self: Pin<&mut Self>,
         context: &mut Context<'_>,
-    ) -> Poll<Option<Result<Frame<Bytes>, axum::Error>>> {
-        Pin::new(&mut self.body).poll_frame(context)
+        buffer: &mut ReadBuf<'_>,
+    ) -> Poll<io::Result<()>> {
+        Pin::new(&mut self.stream).poll_read(context, buffer)
+    }
+}
+
+impl AsyncWrite for Watched {
+    fn poll_write(mut self: Pin<&mut Self>, context: &mut Context<'_>, bytes: &[u8]) -> Poll<io::Result<usize>> {
+        let outcome = Pin::new(&mut self.stream).poll_write(context, bytes);
+        self.written(outcome)
     }
 
-    fn is_end_stream(&self) -> bool {
-        self.body.is_end_stream()
+    fn poll_write_vectored(
+        mut self: Pin<&mut Self>,
+        context: &mut Context<'_>,
+        pieces: &[IoSlice<'_>],
+    ) -> Poll<io::Result<usize>> {
+        let outcome = Pin::new(&mut self.stream).poll_write_vectored(context, pieces);
+        self.written(outcome)
     }
 
-    fn size_hint(&self) -> SizeHint {
-        self.body.size_hint()
+    fn is_write_vectored(&self) -> bool {
+        self.stream.is_write_vectored()
+    }
+
+    fn poll_flush(mut self: Pin<&mut Self>, context: &mut Context<'_>) -> Poll<io::Result<()>> {
+        Pin::new(&mut self.stream).poll_flush(context)
+    }
+
+    fn poll_shutdown(mut self: Pin<&mut Self>, context: &mut Context<'_>) -> Poll<io::Result<()>> {
+        Pin::new(&mut self.stream).poll_shutdown(context)
     }
 }
 

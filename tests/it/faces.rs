@@ -168,7 +168,7 @@ async fn a_backtest_comes_in_every_form() {
     check_forms(&service, &location).await;
     let run = service.get(&location).await.expect(200).json();
     let page = service.get(&format!("{location}?format=html")).await.expect(200).text.replace('\u{a0}', " ");
-    let error = run["given"][0]["pooled"]["mean_log_error"].as_f64().unwrap();
+    let error = run["expected"][0]["pooled"]["mean_log_error"].as_f64().unwrap();
     for words in [run["verdict"].as_str().unwrap(), &format!("missed by {:.1} % one period ahead", 100.0 * error)] {
         assert!(page.contains(words), "{words}: {page}");
     }
