@@ -12,6 +12,8 @@ use tailcast::growth::Simulation;
 use tailcast::model::{ArrivalPlan, AttachmentMix, DegreeCounts, DegreeKind, EntryDegrees, GrowthParameters};
 use tempfile::TempDir;
 
+use crate::schemas;
+
 /// The OpenAPI document.
 pub static DOCUMENT: LazyLock<Value> = LazyLock::new(|| serde_json::from_str(&tailcast::api::openapi_text()).unwrap());
 
@@ -142,6 +144,11 @@ fn check_promises(method: &Method, path: &str, answer: &Answer) {
             .map(|(name, _)| name.split(';').next().unwrap())
             .collect();
         assert!(listed.is_empty() || listed.contains(&media_type.as_str()), "undocumented media type: {context}");
+        let schema = &documented["content"][&media_type]["schema"];
+        if media_type.ends_with("json") && schema.is_object() && !answer.text.is_empty() {
+            let faults = schemas::faults(schema, &answer.json());
+            assert!(faults.is_empty(), "not as documented: {faults:?} {context}");
+        }
     }
 }
 

@@ -34,6 +34,7 @@ mod polled;
 mod process;
 mod questions;
 mod scenarios;
+mod schemas;
 mod stored_evidence;
 mod tracking;
 mod tracking_kills;
