@@ -1,20 +1,23 @@
-# Build: needs nothing from the network but the two base images and the crates of Cargo.lock.
-FROM rust:1.95-slim-bookworm AS build
+# Build: needs nothing from the network but the base image and the crates of Cargo.lock. packaging/prove makes the same steps without
+# a container engine.
+FROM rust:1.95.0-slim-bookworm AS build
 WORKDIR /src
 COPY . .
 RUN cargo build --release --locked --bin tailcast
+RUN packaging/rootfs target/release/tailcast /rootfs
 
-# Run: the binary, a user of its own, a folder for the database.
-FROM debian:bookworm-slim
-RUN useradd --system --uid 10001 --create-home --home-dir /var/lib/tailcast tailcast
-COPY --from=build /src/target/release/tailcast /usr/local/bin/tailcast
-USER tailcast
+# Run: the program, the libraries it names, and a folder for data; no shell, no package manager.
+FROM scratch
+COPY --from=build /rootfs /
+USER 10001:10001
 WORKDIR /var/lib/tailcast
+# All that is written. The root may be read-only: docker run --read-only -v tailcast:/var/lib/tailcast …
 VOLUME /var/lib/tailcast
-# Inside a container loopback is reachable from nowhere. Publish the port to the host's loopback, or put a gateway with
-# access control in front: docker run -p 127.0.0.1:8080:8080 …
+# Inside a container loopback is reachable from nowhere. Publish the port to the host's loopback, or put a gateway in front:
+# docker run -p 127.0.0.1:8080:8080 …
 ENV TAILCAST_BIND=0.0.0.0:8080
 EXPOSE 8080
-HEALTHCHECK --interval=10s --timeout=5s --start-period=5s CMD ["tailcast", "check"]
-ENTRYPOINT ["tailcast"]
+STOPSIGNAL SIGTERM
+HEALTHCHECK --interval=10s --timeout=5s --start-period=10s CMD ["/usr/local/bin/tailcast", "check"]
+ENTRYPOINT ["/usr/local/bin/tailcast"]
 CMD ["serve"]

@@ -137,12 +137,18 @@ fn dispatch(line: CommandLine) -> Result<(), Stop> {
         Command::Demo { once } => {
             // The demo's own output is what counts; requests are not logged into it.
             let quiet = LogConfig { filter: "warn".to_owned(), ..config.log.clone() };
-            telemetry::start_logs(&quiet).map_err(|error| Stop::failed("log.filter", error))?;
-            runtime()?.block_on(demo::show(config, once))
+            let traces =
+                telemetry::start(&quiet, &config.telemetry).map_err(|error| Stop::failed("settings", error))?;
+            let shown = runtime()?.block_on(demo::show(config, once));
+            traces.end();
+            shown
         }
         Command::Serve => {
-            telemetry::start_logs(&config.log).map_err(|error| Stop::failed("log.filter", error))?;
-            serve::until_stopped(runtime()?, config)
+            let traces =
+                telemetry::start(&config.log, &config.telemetry).map_err(|error| Stop::failed("settings", error))?;
+            let served = serve::until_stopped(runtime()?, config);
+            traces.end();
+            served
         }
     }
 }

@@ -2,6 +2,7 @@
 
 mod fault;
 mod notices;
+mod telemetry;
 
 use std::collections::BTreeMap;
 use std::net::SocketAddr;
@@ -14,6 +15,7 @@ use serde::{Deserialize, Deserializer};
 
 pub use fault::SettingsError;
 pub use notices::NoticesConfig;
+pub use telemetry::TelemetryConfig;
 
 use crate::webhook::SecretFault;
 
@@ -52,6 +54,8 @@ pub struct Config {
     pub notices: NoticesConfig,
     /// Logging.
     pub log: LogConfig,
+    /// Traces.
+    pub telemetry: TelemetryConfig,
 }
 
 /// Where runs are kept and how.
@@ -86,7 +90,9 @@ pub struct HttpConfig {
     pub stream_keep_alive_seconds: u64,
     /// Memory for copies of latest forecasts, bytes.
     pub polled_bytes: usize,
-    /// Time to finish after a stop signal, seconds.
+    /// Time after a stop signal in which everything is still served while `/readyz` says no, seconds.
+    pub drain_seconds: u64,
+    /// Time to finish after that, seconds.
     pub shutdown_grace_seconds: u64,
 }
 
@@ -106,7 +112,12 @@ impl HttpConfig {
         Duration::from_secs(self.stream_keep_alive_seconds)
     }
 
-    /// Time to finish after a stop signal.
+    /// Time after a stop signal in which everything is still served while `/readyz` says no.
+    pub fn drain(&self) -> Duration {
+        Duration::from_secs(self.drain_seconds)
+    }
+
+    /// Time to finish after that.
     pub fn shutdown_grace(&self) -> Duration {
         Duration::from_secs(self.shutdown_grace_seconds)
     }
@@ -270,7 +281,11 @@ impl Config {
             }
             builder = builder.add_source(given);
         }
-        for (name, value) in variables.filter(|(name, _)| name.starts_with(VARIABLE_PREFIX)) {
+        let (own, others): (Vec<_>, Vec<_>) = variables.partition(|(name, _)| name.starts_with(VARIABLE_PREFIX));
+        for (key, value) in telemetry::by_standard_variables(&others) {
+            builder = builder.set_override(key, value)?;
+        }
+        for (name, value) in own {
             let Some(key) = keys.get(&name) else {
                 let known = keys.keys().cloned().collect::<Vec<_>>().join(", ");
                 return Err(SettingsError::UnknownVariable { name, known });
@@ -297,6 +312,7 @@ impl Config {
             ("http.max_streams", http.max_streams as u64, 0, MOST_THINGS),
             ("http.stream_keep_alive_seconds", http.stream_keep_alive_seconds, 1, DAY_SECONDS),
             ("http.polled_bytes", http.polled_bytes as u64, 0, MOST_THINGS),
+            ("http.drain_seconds", http.drain_seconds, 0, DAY_SECONDS),
             ("http.shutdown_grace_seconds", http.shutdown_grace_seconds, 0, DAY_SECONDS),
             ("compute.workers", compute.workers as u64, 0, MOST_THREADS),
             ("compute.queue", compute.queue as u64, 0, MOST_THINGS),
@@ -317,6 +333,7 @@ impl Config {
             ("limits.link_events", limits.link_events as u64, 1, MOST_THINGS),
             ("limits.network_rows", limits.network_rows as u64, 1, MOST_THINGS),
             ("limits.cells", limits.cells as u64, 1, MOST_THINGS),
+            ("telemetry.timeout_seconds", self.telemetry.timeout_seconds, 1, 300),
             ("notices.attempts_for_hours", notices.attempts_for_hours, 1, YEAR_HOURS),
             ("notices.timeout_seconds", notices.timeout_seconds, 1, 300),
             ("notices.first_pause_ms", notices.first_pause_ms, 1, DAY_SECONDS * 1000),

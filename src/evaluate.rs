@@ -31,7 +31,9 @@ pub use arrivals::{ArrivalForecast, arrival_periods, forecast_arrivals, forecast
 pub use backtest::{Case, Observed, Replay, replay};
 pub use drift::{DRIFT_TEST_LEVEL, DriftCause, DriftTest, FitRecord, IssuedAccount, drift_test};
 pub use member::{Member, Step, Totals, Trend};
-pub use origin::{OriginAnswer, OriginError, OriginRequest, answer, answer_by, is_pooled};
+pub use origin::{
+    OriginAnswer, OriginError, OriginRequest, answer, answer_by, fit_origin, forecast_by, is_pooled, past_records_of,
+};
 pub use pool::{Pool, PoolShare, pooled_size};
 pub use pooled::{PoolUse, SCORED_AHEAD, past_records, scored_origins};
 pub use questions::{

@@ -23,9 +23,10 @@ mod runs;
 
 use std::future::Future;
 use std::sync::Arc;
+use std::sync::atomic::{AtomicBool, Ordering};
 
 use tokio::sync::Semaphore;
-use tracing::Instrument;
+use tracing::{Instrument, info_span};
 
 use crate::config::{Config, DatabaseConfig};
 use crate::model::MAX_SNAPSHOTS;
@@ -85,6 +86,9 @@ pub use questions::{KeptLimitAnswer, LimitStanding, LimitState, QuestionName};
 /// The name and version every run carries.
 pub const ENGINE: &str = concat!(env!("CARGO_PKG_NAME"), " ", env!("CARGO_PKG_VERSION"));
 
+/// Target of the spans that traces are made of; log lines do not show them.
+const TRACES: &str = "tailcast::traces";
+
 /// The use cases over one database.
 #[derive(Debug, Clone)]
 pub struct Service {
@@ -97,6 +101,8 @@ pub struct Service {
     notices: Notices,
     /// Stored evidence may be large: no more runs hold some at once than can be computed at once.
     evidence_places: Arc<Semaphore>,
+    /// Whether the process is about to stop.
+    stopping: Arc<AtomicBool>,
 }
 
 impl Service {
@@ -113,7 +119,16 @@ impl Service {
         let cpu = CpuPool::new(&config.compute);
         let evidence_places = Arc::new(Semaphore::new(cpu.workers()));
         let (jobs, notices) = (Board::new(config.jobs), Notices::new(&config.notices));
-        Ok(Self { store, cpu, caps, jobs, briefs: Briefs::default(), notices, evidence_places })
+        Ok(Self {
+            store,
+            cpu,
+            caps,
+            jobs,
+            briefs: Briefs::default(),
+            notices,
+            evidence_places,
+            stopping: Arc::default(),
+        })
     }
 
     /// Brings the database's tables up to date and closes it.
@@ -130,9 +145,12 @@ impl Service {
     /// Whether requests can be served: the database answers, its tables are current, and it can be written.
     ///
     /// # Errors
-    /// [`ServiceError::TablesOutdated`], [`ServiceError::StoreBusy`] or [`ServiceError::StoreUnavailable`]: whatever
+    /// [`ServiceError::Stopping`], [`ServiceError::TablesOutdated`], [`ServiceError::StoreBusy`] or [`ServiceError::StoreUnavailable`]: whatever
     /// the database's fault, the service is not ready and nothing of the service is broken.
     pub async fn check_ready(&self) -> Result<(), ServiceError> {
+        if self.stopping.load(Ordering::Relaxed) {
+            return Err(ServiceError::Stopping);
+        }
         let ready = async {
             self.check_tables().await?;
             Ok(self.store.try_write().await?)
@@ -146,6 +164,11 @@ impl Service {
     /// Whether the database answers and its tables are current.
     async fn check_tables(&self) -> Result<(), ServiceError> {
         if self.store.is_current().await? { Ok(()) } else { Err(ServiceError::TablesOutdated) }
+    }
+
+    /// From here on [`Self::check_ready`] says no, while everything is still served.
+    pub fn announce_stop(&self) {
+        self.stopping.store(true, Ordering::Relaxed);
     }
 
     /// Tells running computations and jobs to stop at their next step.
@@ -164,7 +187,7 @@ impl Service {
 async fn in_own_task<T: Send + 'static>(
     write: impl Future<Output = Result<T, ServiceError>> + Send + 'static,
 ) -> Result<T, ServiceError> {
-    match tokio::spawn(write.in_current_span()).await {
+    match tokio::spawn(write.instrument(info_span!(target: TRACES, "write"))).await {
         Ok(outcome) => outcome,
         Err(error) => Err(ServiceError::Broken(format!("a write stopped short: {error}"))),
     }

@@ -1,4 +1,6 @@
-//! Logs and metrics of the process.
+//! Logs, traces and metrics of the process.
+
+mod traces;
 
 use std::io::IsTerminal;
 use std::sync::OnceLock;
@@ -6,10 +8,14 @@ use std::time::Duration;
 
 use metrics::{Unit, describe_counter, describe_gauge, describe_histogram, gauge};
 use metrics_exporter_prometheus::{BuildError, PrometheusBuilder, PrometheusHandle};
-use tracing_subscriber::EnvFilter;
-use tracing_subscriber::filter::ParseError;
+use opentelemetry_otlp::ExporterBuildError;
+use tracing_subscriber::filter::{EnvFilter, LevelFilter, ParseError, Targets};
+use tracing_subscriber::layer::SubscriberExt;
+use tracing_subscriber::util::SubscriberInitExt;
+use tracing_subscriber::{Layer, Registry, fmt, registry};
 
-use crate::config::{LogConfig, LogFormat};
+use crate::config::{LogConfig, LogFormat, TelemetryConfig};
+pub use traces::{SPANS, Traces};
 
 /// Bounds of the time buckets, seconds: a polled read takes under a millisecond, a large forecast seconds.
 const SECONDS_BUCKETS: [f64; 13] = [0.0005, 0.001, 0.0025, 0.005, 0.01, 0.025, 0.05, 0.1, 0.25, 0.5, 1.0, 5.0, 30.0];
@@ -18,21 +24,55 @@ const UPKEEP_INTERVAL: Duration = Duration::from_secs(5);
 
 static METRICS: OnceLock<Result<PrometheusHandle, String>> = OnceLock::new();
 
-/// Sends logs to the standard error stream. A second call in one process changes nothing.
+/// Why logs or traces cannot be written as configured.
+#[derive(Debug, thiserror::Error)]
+pub enum StartError {
+    /// The filter cannot be read.
+    #[error("log.filter: {0}")]
+    Filter(#[from] ParseError),
+    /// Traces cannot be sent as configured.
+    #[error("telemetry.otlp_endpoint, or a variable OTEL_*: {0}")]
+    Traces(#[from] ExporterBuildError),
+}
+
+/// Sends logs to the standard error stream, and traces to the collector where one is configured. A second call in one process changes
+/// nothing.
 ///
 /// # Errors
-/// When the filter cannot be read.
-pub fn start_logs(config: &LogConfig) -> Result<(), ParseError> {
-    let filter = EnvFilter::builder().parse(&config.filter)?;
-    let builder = tracing_subscriber::fmt()
-        .with_env_filter(filter)
-        .with_writer(std::io::stderr)
-        .with_ansi(std::io::stderr().is_terminal());
-    let _already_started = match config.format {
-        LogFormat::Text => builder.try_init(),
-        LogFormat::Json => builder.json().flatten_event(true).try_init(),
+/// When the filter or the collector's address cannot be read.
+pub fn start(log: &LogConfig, telemetry: &TelemetryConfig) -> Result<Traces, StartError> {
+    let filter = EnvFilter::builder().parse(&log.filter)?.add_directive(format!("{SPANS}=off").parse()?);
+    let traces = Traces::new(telemetry)?;
+    let colours = std::io::stderr().is_terminal();
+    let _already_started = match traces.tracer() {
+        // One filter over everything costs less than one a layer, and polls would pay for it.
+        None => {
+            let lines = fmt().with_env_filter(filter).with_writer(std::io::stderr).with_ansi(colours);
+            match log.format {
+                LogFormat::Text => lines.try_init(),
+                LogFormat::Json => lines.json().flatten_event(true).try_init(),
+            }
+            .is_ok()
+        }
+        Some(tracer) => {
+            let lines = fmt::layer().with_writer(std::io::stderr).with_ansi(colours);
+            let lines: Box<dyn Layer<Registry> + Send + Sync> = match log.format {
+                LogFormat::Text => lines.boxed(),
+                LogFormat::Json => lines.json().flatten_event(true).boxed(),
+            };
+            let spans = tracing_opentelemetry::layer()
+                .with_tracer(tracer)
+                .with_location(false)
+                .with_threads(false)
+                .with_tracked_inactivity(false)
+                .with_target(false)
+                .with_level(false)
+                .with_context_activation(false)
+                .with_filter(Targets::new().with_target(SPANS, LevelFilter::INFO));
+            registry().with(lines.with_filter(filter)).with(spans).try_init().is_ok()
+        }
     };
-    Ok(())
+    Ok(traces)
 }
 
 /// The process's metrics; the first call starts collecting.
@@ -62,6 +102,10 @@ fn install() -> Result<PrometheusHandle, BuildError> {
     describe_counter!(
         "tailcast_notices_total",
         "Attempts to send a notice's event, by outcome: delivered, failed, given_up"
+    );
+    describe_counter!(
+        "tailcast_trace_exports_total",
+        "Batches of spans sent to the collector, by outcome: delivered, failed"
     );
     describe_gauge!("tailcast_build_info", "1, with the version as a label");
     gauge!("tailcast_build_info", "version" => env!("CARGO_PKG_VERSION")).set(1.0);

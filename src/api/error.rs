@@ -274,6 +274,11 @@ fn service_problem(error: ServiceError) -> Problem {
             let detail = "The database's tables are not those of this version; run the migrate command.";
             Problem::new(S::SERVICE_UNAVAILABLE, "not_ready", detail).retry_after(BUSY_RETRY)
         }
+        ServiceError::Stopping => {
+            let detail =
+                "This process is about to stop; what it has accepted is finished. Send new requests to another one.";
+            Problem::new(S::SERVICE_UNAVAILABLE, "stopping", detail).retry_after(BUSY_RETRY)
+        }
         error @ ServiceError::StoreBusy(_) => {
             let detail = "The database is busy; try again shortly.";
             Problem::new(S::SERVICE_UNAVAILABLE, "store_busy", detail)

@@ -1,6 +1,7 @@
 //! The outermost layer: request id, span, metrics, and problem documents for whatever went wrong inside.
 
 mod tally;
+mod trace;
 
 use std::time::{Instant, SystemTime, UNIX_EPOCH};
 
@@ -13,6 +14,9 @@ use uuid::Builder;
 use uuid::fmt::Hyphenated;
 
 use super::problem::{Pending, Problem};
+use trace::Trace;
+
+pub use trace::TRACES;
 
 const REQUEST_ID: HeaderName = HeaderName::from_static("x-request-id");
 /// Longest incoming request id that is kept.
@@ -29,8 +33,10 @@ pub async fn observe(request: Request, next: Next) -> Response {
     let route = route.as_ref().map_or("unmatched", MatchedPath::as_str);
     let uri = request.uri().clone();
     let observation = Observation::begin(started, request.method(), route, uri.path(), request.headers());
-    let mut response = next.run(request).instrument(observation.span.clone()).await;
+    let trace = Trace::begin(&observation, request.headers());
+    let mut response = next.run(request).instrument(trace.span()).instrument(observation.span.clone()).await;
     observation.finish(&mut response);
+    trace.finish(&response);
     response
 }
 
@@ -134,16 +140,19 @@ fn request_span(id: &str, method: &'static str, path: &str, headers: &HeaderMap)
         trace_id = field::Empty,
         parent_id = field::Empty
     );
-    let traceparent = headers.get("traceparent").and_then(|value| value.to_str().ok());
-    if let Some((trace_id, parent_id)) = traceparent.and_then(parse_traceparent) {
+    if let Some((trace_id, parent_id, _)) = header_text(headers, "traceparent").and_then(parse_traceparent) {
         span.record("trace_id", trace_id);
         span.record("parent_id", parent_id);
     }
     span
 }
 
-/// Trace and parent ids of a W3C traceparent header of version 00 (or of a later one that begins like it).
-fn parse_traceparent(text: &str) -> Option<(&str, &str)> {
+fn header_text<'a>(headers: &'a HeaderMap, name: &str) -> Option<&'a str> {
+    headers.get(name).and_then(|value| value.to_str().ok())
+}
+
+/// Trace id, parent id and flags of a W3C traceparent header of version 00 (or of a later one that begins like it).
+fn parse_traceparent(text: &str) -> Option<(&str, &str, &str)> {
     let lower_hex = |part: &str, length: usize| {
         part.len() == length && part.bytes().all(|byte| byte.is_ascii_digit() || (b'a'..=b'f').contains(&byte))
     };
@@ -156,7 +165,7 @@ fn parse_traceparent(text: &str) -> Option<(&str, &str)> {
         && lower_hex(parent_id, 16)
         && lower_hex(flags, 2);
     let present = |id: &str| id.bytes().any(|byte| byte != b'0');
-    (well_formed && present(trace_id) && present(parent_id)).then_some((trace_id, parent_id))
+    (well_formed && present(trace_id) && present(parent_id)).then_some((trace_id, parent_id, flags))
 }
 
 fn method_label(method: &Method) -> &'static str {
@@ -179,7 +188,7 @@ mod tests {
     #[test]
     fn traceparent_is_taken_when_well_formed() {
         let good = "00-4bf92f3577b34da6a3ce929d0e0e4736-00f067aa0ba902b7-01";
-        assert_eq!(parse_traceparent(good), Some(("4bf92f3577b34da6a3ce929d0e0e4736", "00f067aa0ba902b7")));
+        assert_eq!(parse_traceparent(good), Some(("4bf92f3577b34da6a3ce929d0e0e4736", "00f067aa0ba902b7", "01")));
         for bad in [
             "",
             "00-4bf92f3577b34da6a3ce929d0e0e4736-00f067aa0ba902b7",

@@ -26,10 +26,10 @@ async fn livez() -> Response {
 
 /// Can it serve requests?
 ///
-/// The database answers, its tables are those of this version, and it can be written.
+/// The database answers, its tables are those of this version, it can be written, and the process is not about to stop.
 #[utoipa::path(get, path = "/readyz", tag = "operation", responses(
     (status = 200, description = "It can", body = String, content_type = "text/plain"),
-    (status = 503, description = "Not now: the database cannot be read or written, or its tables are not those of this version", body = Problem, content_type = "application/problem+json"),
+    (status = 503, description = "Not now: the database cannot be read or written, its tables are not those of this version, or the process is about to stop", body = Problem, content_type = "application/problem+json"),
 ))]
 async fn readyz(State(state): State<AppState>) -> Result<Response, ApiError> {
     state.service.check_ready().await?;

@@ -3,6 +3,7 @@
 use std::net::SocketAddr;
 use std::time::Duration;
 
+use sd_notify::NotifyState;
 use tokio::net::TcpListener;
 use tokio::runtime::Runtime;
 use tokio::sync::watch;
@@ -27,6 +28,7 @@ pub struct Running {
     server: JoinHandle<()>,
     upkeep: JoinHandle<()>,
     sender: JoinHandle<()>,
+    drain: Duration,
     grace: Duration,
 }
 
@@ -36,9 +38,17 @@ impl Running {
         self.address
     }
 
-    /// Stops listening, finishes what was accepted, within the configured grace, and closes the database.
+    /// Says at `/readyz` that it stops, serves on for the configured time, then stops listening, finishes what was accepted, within the configured grace, and closes the database.
     pub async fn stop(self) {
-        let Self { service, stop, server, upkeep, sender, grace, .. } = self;
+        let Self { service, stop, server, upkeep, sender, drain, grace, .. } = self;
+        service.announce_stop();
+        if !drain.is_zero() {
+            tracing::info!(
+                drain_seconds = drain.as_secs(),
+                "not ready any more; serving on until no more is sent here"
+            );
+            tokio::time::sleep(drain).await;
+        }
         let aborted = sender.abort_handle();
         // Nobody listening means the server is gone already.
         let _ = stop.send(true);
@@ -68,7 +78,8 @@ pub async fn start(config: Config) -> Result<Running, Stop> {
         tracing::warn!(%error, "jobs of the last process are not taken up before the next start");
     }
     let upkeep = tokio::spawn(telemetry::keep_metrics_small(metrics.clone()));
-    let (grace, head_timeout) = (config.http.shutdown_grace(), config.http.head_timeout());
+    let (drain, grace) = (config.http.drain(), config.http.shutdown_grace());
+    let head_timeout = config.http.head_timeout();
     let front = Front::new(AppState::new(service.clone(), &config, metrics));
     let (stop, stopped) = watch::channel(false);
     let sender = tokio::spawn(service.clone().send_notices(stopped.clone()));
@@ -77,19 +88,28 @@ pub async fn start(config: Config) -> Result<Running, Stop> {
     if !address.ip().is_loopback() {
         tracing::warn!("reachable from other machines, and there is no access control: put a gateway in front");
     }
-    Ok(Running { address, service, stop, server, upkeep, sender, grace })
+    Ok(Running { address, service, stop, server, upkeep, sender, drain, grace })
 }
 
 /// Serves until SIGINT or SIGTERM.
 pub fn until_stopped(runtime: Runtime, config: Config) -> Result<(), Stop> {
     let outcome = runtime.block_on(async {
         let running = start(config).await?;
+        tell_manager(&NotifyState::Ready);
         stop_signal().await.map_err(|error| Stop::failed("stop signals", error))?;
+        tell_manager(&NotifyState::Stopping);
         running.stop().await;
         Ok(())
     });
     runtime.shutdown_timeout(LAST_STEP);
     outcome
+}
+
+/// Tells the service manager how the process stands, where it asked to be told (sd_notify, variable NOTIFY_SOCKET).
+fn tell_manager(state: &NotifyState<'_>) {
+    if let Err(error) = sd_notify::notify(std::slice::from_ref(state)) {
+        tracing::warn!(%error, "the service manager could not be told");
+    }
 }
 
 /// Returns when the process is asked to stop.

@@ -101,8 +101,19 @@ pub enum OriginError {
 /// # Errors
 /// When the evidence does not tell the mix, or nothing can be forecast from it.
 pub fn answer(request: &OriginRequest, cancelled: &dyn Fn() -> bool) -> Result<OriginAnswer, OriginError> {
-    let past = if is_pooled(request) { past_records(request, cancelled)? } else { Vec::new() };
+    let past = past_records_of(request, cancelled)?;
     answer_by(request, &past, cancelled)
+}
+
+/// The records that weigh a forecast's members; none where it is no pooled one.
+///
+/// # Errors
+/// Cancellation.
+pub fn past_records_of(
+    request: &OriginRequest,
+    cancelled: &dyn Fn() -> bool,
+) -> Result<Vec<OriginRecord>, OriginError> {
+    if is_pooled(request) { past_records(request, cancelled) } else { Ok(Vec::new()) }
 }
 
 /// Whether a request asks for the pooled forecast: nothing is fixed, no candidate or evidence is asked for, and there is a period.
@@ -125,6 +136,15 @@ pub fn answer_by(
     past: &[OriginRecord],
     cancelled: &dyn Fn() -> bool,
 ) -> Result<OriginAnswer, OriginError> {
+    let fit = fit_origin(request, cancelled)?;
+    forecast_by(request, fit, past, cancelled)
+}
+
+/// The first half of [`answer_by`]: the fit.
+///
+/// # Errors
+/// Those of [`answer`].
+pub fn fit_origin(request: &OriginRequest, cancelled: &dyn Fn() -> bool) -> Result<Fit, OriginError> {
     if cancelled() {
         return Err(ForecastError::Cancelled.into());
     }
@@ -132,7 +152,19 @@ pub fn answer_by(
     if request.arrivals.is_none() && !estimable {
         return Err(OriginError::ArrivalsRequired);
     }
-    let fit = fit(&request.evidence, &request.fit, cancelled)?;
+    Ok(fit(&request.evidence, &request.fit, cancelled)?)
+}
+
+/// The second half of [`answer_by`]: the forecast by a fit.
+///
+/// # Errors
+/// Those of [`answer`].
+pub fn forecast_by(
+    request: &OriginRequest,
+    fit: Fit,
+    past: &[OriginRecord],
+    cancelled: &dyn Fn() -> bool,
+) -> Result<OriginAnswer, OriginError> {
     let (scenario, expected) = scenario(request, &fit)?;
     let counts = &request.evidence.latest().counts;
     let mut warnings = fit.warnings.clone();

@@ -7,6 +7,7 @@ use std::time::{Duration, Instant};
 
 use serde::Serialize;
 use serde::de::DeserializeOwned;
+use tracing::info_span;
 
 use super::answers::{
     AttachmentAnswer, AttachmentModel, BandsAnswer, CandidateAnswer, CountAnswer, CurvePointAnswer, DateAnswer,
@@ -16,7 +17,7 @@ use super::answers::{
 };
 use super::inputs::{FitInputs, ForecastInputs, Label, sha256_hex};
 use super::numbers::{Count, Real, date_text};
-use super::{ENGINE, ServiceError};
+use super::{ENGINE, ServiceError, TRACES};
 use crate::evaluate::{self, OriginError, PoolShare, PoolUse};
 use crate::fit::{
     Attachment, Candidate, CurvePoint, Fit, Force, Goodness, Model, OutlierClass, PeriodRates, Rung, TailPoint,
@@ -103,7 +104,7 @@ impl Question for ForecastInputs {
     }
 
     fn answer(&self, inputs_digest: String, cancelled: &dyn Fn() -> bool) -> Result<ForecastAnswer, OriginError> {
-        let found = evaluate::answer(&self.request, cancelled)?;
+        let found = self.found(cancelled)?;
         Ok(ForecastAnswer {
             label: self.label.as_ref().map(|label| label.as_str().to_owned()),
             engine: ENGINE.to_owned(),
@@ -125,6 +126,21 @@ impl Question for ForecastInputs {
     }
 }
 
+impl ForecastInputs {
+    /// The forecast, each of its stages in a span of its own.
+    fn found(&self, cancelled: &dyn Fn() -> bool) -> Result<evaluate::OriginAnswer, OriginError> {
+        let request = &self.request;
+        let snapshots = request.evidence.snapshots().len() as u64;
+        let (dates, thresholds) = (request.plan.dates().len() as u64, request.plan.thresholds().len() as u64);
+        let past = info_span!(target: TRACES, "past records", snapshots);
+        let past = past.in_scope(|| evaluate::past_records_of(request, cancelled))?;
+        let fitted =
+            info_span!(target: TRACES, "fit", snapshots).in_scope(|| evaluate::fit_origin(request, cancelled))?;
+        let forecast = info_span!(target: TRACES, "forecast", dates, thresholds);
+        forecast.in_scope(|| evaluate::forecast_by(request, fitted, &past, cancelled))
+    }
+}
+
 impl Question for FitInputs {
     type Answer = FitAnswer;
     const KIND: RunKind = RunKind::Fit;
@@ -142,7 +158,8 @@ impl Question for FitInputs {
     }
 
     fn answer(&self, inputs_digest: String, cancelled: &dyn Fn() -> bool) -> Result<FitAnswer, OriginError> {
-        let fit = fit(&self.evidence, &self.fit, cancelled)?;
+        let span = info_span!(target: TRACES, "fit", snapshots = self.evidence.snapshots().len() as u64);
+        let fit = span.in_scope(|| fit(&self.evidence, &self.fit, cancelled))?;
         Ok(FitAnswer {
             label: self.label.as_ref().map(|label| label.as_str().to_owned()),
             engine: ENGINE.to_owned(),

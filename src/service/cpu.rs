@@ -9,9 +9,9 @@ use metrics::{gauge, histogram};
 use tokio::sync::Semaphore;
 use tokio::task::spawn_blocking;
 use tokio::time::timeout_at;
-use tracing::Span;
+use tracing::{Instrument, Span, info_span};
 
-use super::ServiceError;
+use super::{ServiceError, TRACES};
 use crate::config::ComputeConfig;
 
 /// Workers for computations.
@@ -79,7 +79,8 @@ impl CpuPool {
         let place = self.places.clone().try_acquire_owned().map_err(|_| ServiceError::Busy)?;
         let (asked, deadline) = (Instant::now(), far_enough(self.budget));
         let busy = Gauged::new();
-        let worker = match timeout_at(deadline.into(), self.workers.clone().acquire_owned()).await {
+        let waiting = self.workers.clone().acquire_owned().instrument(info_span!(target: TRACES, "wait for a worker"));
+        let worker = match timeout_at(deadline.into(), waiting).await {
             Ok(Ok(worker)) => worker,
             Ok(Err(_)) => return Err(ServiceError::Busy),
             Err(_) => return Err(too_slow()),
@@ -89,13 +90,14 @@ impl CpuPool {
         let guard = CancelOnDrop(given_up.clone());
         let stopping = self.stopping.clone();
         let span = Span::current();
+        let computing = info_span!(target: TRACES, parent: &span, "compute");
         let task = spawn_blocking(move || {
             // Held until the work has really stopped, so that abandoned work still counts against the cores.
             let _held = (place, worker, busy);
             let begun = Instant::now();
             let cancelled =
                 || given_up.load(Ordering::Relaxed) || stopping.load(Ordering::Relaxed) || Instant::now() >= deadline;
-            let outcome = span.in_scope(|| work(&cancelled));
+            let outcome = span.in_scope(|| computing.in_scope(|| work(&cancelled)));
             histogram!("tailcast_compute_seconds").record(begun.elapsed());
             outcome
         });

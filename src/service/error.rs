@@ -68,6 +68,9 @@ pub enum ServiceError {
     /// The database's tables are not those of this version.
     #[error("the database's tables are not those of this version")]
     TablesOutdated,
+    /// The process is about to stop.
+    #[error("the process is about to stop")]
+    Stopping,
     /// Another process holds the database for too long.
     #[error(transparent)]
     StoreBusy(StoreError),

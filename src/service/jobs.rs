@@ -12,11 +12,11 @@ use std::time::Duration;
 
 use tokio::sync::watch;
 use tokio::time::{sleep, timeout};
-use tracing::{Instrument, info_span};
+use tracing::{Instrument, Span, field, info_span};
 use uuid::Uuid;
 
 use super::networks::cut;
-use super::{Service, ServiceError, Thing, in_own_task};
+use super::{Service, ServiceError, TRACES, Thing, in_own_task};
 use crate::store::{CalledOff, JobFilter, JobKind, JobState, StoreError, StoredJob, WriteError};
 pub use board::Board;
 use board::Turn;
@@ -128,7 +128,15 @@ impl Service {
                 tracing::error!(%error, "the job's end could not be written; it is taken up again at the next start");
             }
         };
-        tokio::spawn(work.instrument(info_span!("job", %id)));
+        let traced = info_span!(
+            target: TRACES,
+            "job",
+            kind = kind.as_str(),
+            id = %id,
+            otel.status_code = field::Empty,
+            error.type = field::Empty
+        );
+        tokio::spawn(work.instrument(traced).instrument(info_span!("job", %id)));
     }
 
     /// Works a job to its end, or until the process stops.
@@ -150,6 +158,7 @@ impl Service {
     }
 
     async fn fail(&self, job: &StoredJob, problem: JobProblem) -> Result<(), ServiceError> {
+        trace_failure(&problem);
         let outcome = JobOutcome::Problem(problem).to_json()?;
         persistently(|| self.store.fail_job(job.id, &outcome)).await?;
         Ok(())
@@ -179,6 +188,14 @@ fn view(job: StoredJob, live: Option<f64>) -> Result<JobView, ServiceError> {
         JobState::Failed | JobState::Cancelled => None,
     };
     Ok(JobView { job, progress, outcome })
+}
+
+/// Marks the job's span as failed.
+fn trace_failure(problem: &JobProblem) {
+    let span = Span::current();
+    span.record("otel.status_code", "ERROR");
+    let code = serde_json::to_value(problem.code).unwrap_or_default();
+    span.record("error.type", code.as_str().unwrap_or_default());
 }
 
 fn refused(error: WriteError) -> ServiceError {

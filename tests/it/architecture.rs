@@ -29,7 +29,7 @@ const ARROWS: [(&str, &[&str]); 16] = [
 const CORE: [&str; 7] = ["numerics", "model", "census", "growth", "fit", "forecast", "evaluate"];
 
 /// Crates that the core must not know.
-const BOUNDARY_CRATES: [&str; 18] = [
+const BOUNDARY_CRATES: [&str; 20] = [
     "axum",
     "clap",
     "config",
@@ -37,6 +37,7 @@ const BOUNDARY_CRATES: [&str; 18] = [
     "httpdate",
     "metrics",
     "metrics_exporter_prometheus",
+    "opentelemetry",
     "serde",
     "serde_json",
     "sha2",
@@ -44,6 +45,7 @@ const BOUNDARY_CRATES: [&str; 18] = [
     "tokio",
     "tower_http",
     "tracing",
+    "tracing_opentelemetry",
     "utoipa",
     "ureq",
     "url",

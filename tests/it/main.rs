@@ -36,6 +36,7 @@ mod questions;
 mod scenarios;
 mod schemas;
 mod stored_evidence;
+mod traces;
 mod tracking;
 mod tracking_kills;
 mod upgrade;

@@ -20,7 +20,7 @@ pub struct Served {
 pub fn command(folder: &Path) -> Command {
     let mut command = Command::new(BINARY);
     for (name, _) in std::env::vars_os() {
-        if name.to_string_lossy().starts_with("TAILCAST_") {
+        if ["TAILCAST_", "OTEL_"].iter().any(|prefix| name.to_string_lossy().starts_with(prefix)) {
             command.env_remove(name);
         }
     }

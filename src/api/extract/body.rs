@@ -6,8 +6,10 @@ use axum::http::{HeaderMap, header};
 use serde_json::value::RawValue;
 use tokio::task::spawn_blocking;
 use tokio::time::timeout;
+use tracing::{Instrument, Span, info_span};
 
 use crate::api::decode::Faults;
+use crate::api::observe::TRACES;
 use crate::api::{ApiError, AppState};
 
 /// Bodies above this many bytes are read off the async runtime: below, handing over costs more than reading.
@@ -28,10 +30,11 @@ impl JsonBody {
         self,
         read: impl FnOnce(&RawValue, &mut Faults) -> Option<T> + Send + 'static,
     ) -> Result<T, ApiError> {
+        let span = parsing("json", &self.0);
         if self.0.len() <= OFFLOAD_BYTES {
-            return read_json(&self.0, read);
+            return span.in_scope(|| read_json(&self.0, read));
         }
-        let reading = spawn_blocking(move || read_json(&self.0, read)).await;
+        let reading = spawn_blocking(move || span.in_scope(|| read_json(&self.0, read))).await;
         reading.unwrap_or_else(|error| Err(ApiError::Broken(format!("reading a body stopped short: {error}"))))
     }
 }
@@ -83,9 +86,12 @@ impl RowsBody {
     ) -> Result<T, ApiError> {
         match self {
             Self::Json(body) => body.read(json).await,
-            Self::Csv(bytes) if bytes.len() <= OFFLOAD_BYTES => faultless(|faults| csv(&bytes, faults)),
+            Self::Csv(bytes) if bytes.len() <= OFFLOAD_BYTES => {
+                parsing("csv", &bytes).in_scope(|| faultless(|faults| csv(&bytes, faults)))
+            }
             Self::Csv(bytes) => {
-                let reading = spawn_blocking(move || faultless(|faults| csv(&bytes, faults))).await;
+                let span = parsing("csv", &bytes);
+                let reading = spawn_blocking(move || span.in_scope(|| faultless(|faults| csv(&bytes, faults)))).await;
                 reading.unwrap_or_else(|error| Err(ApiError::Broken(format!("reading a body stopped short: {error}"))))
             }
         }
@@ -106,6 +112,11 @@ impl FromRequest<AppState> for RowsBody {
     }
 }
 
+/// The span of reading a body.
+fn parsing(form: &'static str, bytes: &Bytes) -> Span {
+    info_span!(target: TRACES, "parse", form, bytes = bytes.len() as u64)
+}
+
 /// The whole body, when it comes as it is, in time and within the size limit.
 async fn complete(request: Request, state: &AppState) -> Result<Bytes, ApiError> {
     let (limit, time) = (state.http.body_limit_bytes, state.http.body_timeout());
@@ -115,7 +126,8 @@ async fn complete(request: Request, state: &AppState) -> Result<Bytes, ApiError>
     if announced_length(request.headers()).is_some_and(|length| length > limit as u64) {
         return Err(ApiError::TooLarge { limit });
     }
-    match timeout(time, to_bytes(request.into_body(), limit)).await {
+    let receiving = to_bytes(request.into_body(), limit).instrument(info_span!(target: TRACES, "receive"));
+    match timeout(time, receiving).await {
         Ok(Ok(bytes)) => Ok(bytes),
         Ok(Err(error)) if is_length_limit(&error) => Err(ApiError::TooLarge { limit }),
         Ok(Err(_)) => Err(ApiError::BodyBroken),

@@ -4,11 +4,12 @@ use std::time::Instant;
 
 use jiff::Timestamp;
 use tokio::task::spawn_blocking;
+use tracing::info_span;
 use uuid::Uuid;
 
 use super::board::{Progress, Stop, Turn};
 use super::outcome::{JobOutcome, JobProblem, RefreshResult};
-use super::{MOST_STARTS, persistently};
+use super::{MOST_STARTS, persistently, trace_failure};
 use crate::evaluate::OriginRequest;
 use crate::fit::FitRequest;
 use crate::model::{Evidence, Questions};
@@ -17,7 +18,7 @@ use crate::service::evidence::{assemble, off_runtime};
 use crate::service::inputs::{DEFAULT_SEED, ForecastInputs};
 use crate::service::questions::limits_from;
 use crate::service::runs::compute;
-use crate::service::{NetworkName, RunOrigin, Service, ServiceError, plan};
+use crate::service::{NetworkName, RunOrigin, Service, ServiceError, TRACES, plan};
 use crate::store::{JobState, NewRun, RefreshEnd, RefreshEnded, RefreshState, Signal, StoredJob, StoredOrigin};
 
 /// Why a refresh came to nothing although nothing went wrong.
@@ -141,10 +142,11 @@ impl Service {
     ) -> Result<Result<(NewRun, Timestamp), NoForecast>, Halt> {
         let time = self.jobs.config().refresh_time();
         let issued_to = inputs.request.plan.dates().last().copied().unwrap_or(origin.stored.as_of);
+        let span = info_span!(target: TRACES, "compute");
         let work = spawn_blocking(move || {
             let begun = Instant::now();
             let cancelled = || progress.stop().is_some() || begun.elapsed() >= time;
-            let run = compute(&inputs, Some(origin), &cancelled);
+            let run = span.in_scope(|| compute(&inputs, Some(origin), &cancelled));
             (run, progress.stop())
         });
         let (run, stop) =
@@ -170,6 +172,7 @@ impl Service {
             Ok((run, _)) => (result(Some(run.id), None)?, JobState::Succeeded, None),
             Err(NoForecast::NoPlan) => (result(None, Some(NO_PLAN))?, JobState::Succeeded, Some(NO_PLAN.to_owned())),
             Err(NoForecast::Problem(problem)) => {
+                trace_failure(problem);
                 (JobOutcome::Problem(problem.clone()).to_json()?, JobState::Failed, Some(problem.detail.clone()))
             }
         };
@@ -218,6 +221,7 @@ impl Service {
 
     /// Ends a refresh that could not be done; the forecast before stays the latest.
     async fn give_up(&self, job: &StoredJob, problem: JobProblem) -> Result<(), ServiceError> {
+        trace_failure(&problem);
         let reason = problem.detail.clone();
         let outcome = JobOutcome::Problem(problem).to_json()?;
         let end = (JobState::Failed, outcome.as_str());
