@@ -82,11 +82,7 @@ pub struct Store {
 #[derive(Debug, Clone)]
 enum Home {
     /// A file, of this process alone: one connection writes.
-    Sqlite {
-        write: SqlitePool,
-        read: SqlitePool,
-        file: DatabaseFile,
-    },
+    Sqlite { write: SqlitePool, read: SqlitePool, file: DatabaseFile },
     /// A server, shared with other processes.
     Postgres { pool: PgPool },
 }

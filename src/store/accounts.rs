@@ -4,8 +4,8 @@ use jiff::Timestamp;
 use sqlx::FromRow;
 use uuid::Uuid;
 
-use super::statement::{Connection, query};
 use super::columns::{date, date_key, time, uuid};
+use super::statement::{Connection, query};
 use super::{Store, StoreError};
 
 /// A forecast that a refresh issued.
@@ -118,11 +118,7 @@ impl Store {
 }
 
 /// Keeps an account in place of the one of its forecast and date; not when its forecast was deleted meanwhile.
-pub(super) async fn insert(
-    connection: &mut Connection,
-    network: &str,
-    account: &NewAccount,
-) -> Result<(), StoreError> {
+pub(super) async fn insert(connection: &mut Connection, network: &str, account: &NewAccount) -> Result<(), StoreError> {
     query(
         "INSERT INTO accounts (run_id, as_of, network, snapshot_tag, created_at, account) \
          SELECT run_id, $2, $3, $4, $5, $6 FROM network_runs WHERE run_id = $1 ON CONFLICT (run_id, as_of) DO UPDATE SET \

@@ -5,9 +5,9 @@ use sha2::{Digest, Sha256};
 use sqlx::FromRow;
 use uuid::Uuid;
 
-use super::statement::{Connection, query, query_scalar};
 use super::columns::{signed, time, unsigned, uuid};
 use super::jobs::{JobKind, JobState, end, insert, live_job};
+use super::statement::{Connection, query, query_scalar};
 use super::writes::Scope;
 use super::{Store, StoreError};
 
@@ -277,19 +277,13 @@ pub(super) async fn drop_records(connection: &mut Connection, job: Uuid) -> Resu
 }
 
 /// Marks the backtests of a network that stand on counts of `revision`, which are replaced now.
-pub(super) async fn corrected(
-    connection: &mut Connection,
-    network: &str,
-    revision: u64,
-) -> Result<(), StoreError> {
-    query(
-        "UPDATE backtests SET evidence_corrected_at = $3, redo_due = TRUE WHERE network = $1 AND revision >= $2",
-    )
-    .bind(network)
-    .bind(signed("revision", revision)?)
-    .bind(Timestamp::now().as_microsecond())
-    .execute(connection)
-    .await?;
+pub(super) async fn corrected(connection: &mut Connection, network: &str, revision: u64) -> Result<(), StoreError> {
+    query("UPDATE backtests SET evidence_corrected_at = $3, redo_due = TRUE WHERE network = $1 AND revision >= $2")
+        .bind(network)
+        .bind(signed("revision", revision)?)
+        .bind(Timestamp::now().as_microsecond())
+        .execute(connection)
+        .await?;
     Ok(())
 }
 

@@ -21,8 +21,9 @@ use crate::config::DatabaseConfig;
 
 static MIGRATOR: Migrator = sqlx::migrate!("./migrations");
 
-/// Longest wait for a free connection.
+/// Longest wait for a free connection to a file, and to a server, which may be away: callers are told so before they give up.
 const ACQUIRE_TIMEOUT: Duration = Duration::from_secs(10);
+const CONNECT_TIMEOUT: Duration = Duration::from_secs(4);
 /// Longest wait of a trial write: a probe that waits for a lock is no use as a probe.
 const TRIAL_TIMEOUT: Duration = Duration::from_secs(1);
 /// What a server is told of our sessions, milliseconds: it ends what a process that was cut off has left behind, so that nobody
@@ -103,10 +104,13 @@ impl Store {
                     writer.begin_with("BEGIN IMMEDIATE").await?.rollback().await?;
                 }
                 Home::Postgres { .. } => {
-                    let text = "SELECT pg_is_in_recovery() OR CAST(current_setting('transaction_read_only') AS BOOLEAN)";
+                    let text =
+                        "SELECT pg_is_in_recovery() OR CAST(current_setting('transaction_read_only') AS BOOLEAN)";
                     let read_only: bool = query_scalar(text).fetch_one(&mut self.reader().await?).await?;
                     if read_only {
-                        return Err(StoreError::Unusable(sqlx::Error::Io(std::io::ErrorKind::ReadOnlyFilesystem.into())));
+                        return Err(StoreError::Unusable(sqlx::Error::Io(
+                            std::io::ErrorKind::ReadOnlyFilesystem.into(),
+                        )));
                     }
                 }
             }
@@ -169,13 +173,15 @@ fn server(config: &DatabaseConfig) -> Result<Home, StoreError> {
     let options = PgConnectOptions::from_str(&config.url).map_err(|error| address_fault(config, error.to_string()))?;
     let options = options.application_name("tailcast").options(SESSION);
     // Connected to when it is first needed: a server that is away now may be back then.
-    let pool = pool_options::<sqlx::Postgres>(config.connections).max_lifetime(MOST_AGE);
+    let pool =
+        pool_options::<sqlx::Postgres>(config.connections).acquire_timeout(CONNECT_TIMEOUT).max_lifetime(MOST_AGE);
     Ok(Home::Postgres { pool: pool.connect_lazy_with(options) })
 }
 
 async fn file(config: &DatabaseConfig) -> Result<Home, StoreError> {
     if !config.url.starts_with("sqlite:") || config.url.contains(":memory:") {
-        let either = "it must name a file, as in sqlite://tailcast.db, or a server, as in postgres://user@host/tailcast";
+        let either =
+            "it must name a file, as in sqlite://tailcast.db, or a server, as in postgres://user@host/tailcast";
         return Err(address_fault(config, either.into()));
     }
     let options = SqliteConnectOptions::from_str(&config.url)
@@ -191,8 +197,7 @@ async fn file(config: &DatabaseConfig) -> Result<Home, StoreError> {
     let writing = options.clone().create_if_missing(true).journal_mode(SqliteJournalMode::Wal);
     // No idle or age limit: a local file's connections do not go stale.
     let pool = |size| -> SqlitePoolOptions { pool_options(size).idle_timeout(None).max_lifetime(None) };
-    let write =
-        pool(1).connect_with(writing).await.map_err(|error| address_fault(config, error.to_string()))?;
+    let write = pool(1).connect_with(writing).await.map_err(|error| address_fault(config, error.to_string()))?;
     // Opened after the writer, which creates the file and its write-ahead log.
     let read = pool(config.readers).connect_with(options.create_if_missing(false).read_only(true)).await?;
     Ok(Home::Sqlite { write, read, file: DatabaseFile::at(&path)? })

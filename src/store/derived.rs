@@ -6,11 +6,11 @@ use jiff::Timestamp;
 
 use uuid::Uuid;
 
-use super::statement::{Connection, query};
 use super::columns::{date, unsigned};
 use super::jobs::{JobState, end};
 use super::refreshes::{changed, corrected};
-use super::writes::{Scope, Caps, Clash, WriteError};
+use super::statement::{Connection, query};
+use super::writes::{Caps, Clash, Scope, WriteError};
 use super::{
     EndTags, Store, StoreError, StoredLinkEvents, StoredSnapshot, StoredTransitions, link_events, snapshots,
     transitions,

@@ -4,9 +4,9 @@ use jiff::Timestamp;
 use sqlx::FromRow;
 use uuid::Uuid;
 
-use super::statement::{Connection, query, query_scalar};
 use super::columns::{corrupt, time, unsigned, uuid};
-use super::writes::{Scope, Clash, WriteError, network_exists};
+use super::statement::{Connection, query, query_scalar};
+use super::writes::{Clash, Scope, WriteError, network_exists};
 use super::{RefreshState, Store, StoreError, backtests, refreshes};
 
 /// How long a claim on a job holds unless it is prolonged, microseconds: several times what passes between two prolongations.
@@ -387,11 +387,10 @@ pub(super) async fn insert(
 
 /// Calls every live job of a network off.
 pub(super) async fn call_off_of(connection: &mut Connection, network: &str) -> Result<Vec<Uuid>, StoreError> {
-    let ids: Vec<String> =
-        query_scalar("SELECT id FROM jobs WHERE network = $1 AND state IN ('waiting', 'running')")
-            .bind(network)
-            .fetch_all(&mut *connection)
-            .await?;
+    let ids: Vec<String> = query_scalar("SELECT id FROM jobs WHERE network = $1 AND state IN ('waiting', 'running')")
+        .bind(network)
+        .fetch_all(&mut *connection)
+        .await?;
     let jobs = ids.iter().map(|id| uuid(id)).collect::<Result<Vec<_>, _>>()?;
     for &job in &jobs {
         end(connection, job, JobState::Cancelled, None).await?;

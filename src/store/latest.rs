@@ -4,10 +4,10 @@ use jiff::Timestamp;
 use sqlx::FromRow;
 use uuid::Uuid;
 
-use super::statement::{Connection, query, query_scalar};
 use super::columns::{date, time, unsigned, uuid};
 use super::refreshes::RefreshState;
 use super::runs::{NewRun, StoredRun};
+use super::statement::{Connection, query, query_scalar};
 use super::{Store, StoreError};
 
 /// The read of the latest forecast: by the table's key, one row and nothing else.

@@ -4,10 +4,10 @@ use jiff::Timestamp;
 use sqlx::FromRow;
 use uuid::Uuid;
 
-use super::statement::{Connection, query};
 use super::columns::{signed, time, total, unsigned};
 use super::refreshes::{Change, changed};
-use super::writes::{Scope, Caps, WriteError, network_exists, room_for_rows};
+use super::statement::{Connection, query};
+use super::writes::{Caps, Scope, WriteError, network_exists, room_for_rows};
 use super::{Store, StoreError};
 
 /// Attachment statistics as stored.
@@ -71,12 +71,11 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn find_link_events(&self, network: &str) -> Result<Option<StoredLinkEvents>, StoreError> {
-        let row: Option<LinkEventsRow> = query(
-            "SELECT landings, row_count, tag, updated_at, statistics FROM link_events WHERE network = $1",
-        )
-        .bind(network)
-        .fetch_optional(&mut self.reader().await?)
-        .await?;
+        let row: Option<LinkEventsRow> =
+            query("SELECT landings, row_count, tag, updated_at, statistics FROM link_events WHERE network = $1")
+                .bind(network)
+                .fetch_optional(&mut self.reader().await?)
+                .await?;
         row.map(StoredLinkEvents::try_from).transpose()
     }
 
@@ -103,10 +102,7 @@ impl Store {
 }
 
 /// Digest, rows and time of what is stored.
-async fn stored_tag(
-    connection: &mut Connection,
-    network: &str,
-) -> Result<Option<(String, i64, i64)>, StoreError> {
+async fn stored_tag(connection: &mut Connection, network: &str) -> Result<Option<(String, i64, i64)>, StoreError> {
     let row = query("SELECT tag, row_count, updated_at FROM link_events WHERE network = $1").bind(network);
     Ok(row.fetch_optional(connection).await?)
 }

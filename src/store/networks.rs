@@ -4,11 +4,11 @@ use jiff::Timestamp;
 use sqlx::FromRow;
 use uuid::Uuid;
 
-use super::statement::{Connection, query, query_scalar};
 use super::columns::{date, kind, kind_name, time, unsigned, uuid};
 use super::jobs::call_off_of;
 use super::refreshes::{Change, RefreshState, RefreshStatus, changed, enqueue};
-use super::writes::{Scope, Clash, WriteError};
+use super::statement::{Connection, query, query_scalar};
+use super::writes::{Clash, Scope, WriteError};
 use super::{Store, StoreError, StoredQuestion, backtests, questions};
 use crate::model::DegreeKind;
 

@@ -3,9 +3,9 @@
 use jiff::Timestamp;
 use uuid::Uuid;
 
-use super::statement::{query, query_scalar};
 use super::columns::{time, unsigned, uuid};
 use super::networks::find;
+use super::statement::{query, query_scalar};
 use super::{Store, StoreError, StoredNetwork};
 
 /// Most issued forecasts told at one look; the next look tells the next ones.

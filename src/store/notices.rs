@@ -4,9 +4,9 @@ use jiff::Timestamp;
 use sqlx::FromRow;
 use uuid::Uuid;
 
-use super::statement::{Connection, query, query_scalar};
 use super::columns::{corrupt, time, unsigned, uuid};
-use super::writes::{Scope, Caps, WriteError, network_exists, room_for_one};
+use super::statement::{Connection, query, query_scalar};
+use super::writes::{Caps, Scope, WriteError, network_exists, room_for_one};
 use super::{Store, StoreError};
 
 /// What can be told.
@@ -116,12 +116,11 @@ impl Store {
     ) -> Result<bool, WriteError> {
         let mut transaction = self.begin(Scope::Network(network)).await?;
         network_exists(&mut transaction, network).await?;
-        let stored: Option<(String, String)> =
-            query("SELECT id, tag FROM notices WHERE network = $1 AND name = $2")
-                .bind(network)
-                .bind(notice.name.as_str())
-                .fetch_optional(&mut transaction)
-                .await?;
+        let stored: Option<(String, String)> = query("SELECT id, tag FROM notices WHERE network = $1 AND name = $2")
+            .bind(network)
+            .bind(notice.name.as_str())
+            .fetch_optional(&mut transaction)
+            .await?;
         if !allows(stored.as_ref().map(|(_, tag)| tag.as_str())) {
             return Err(WriteError::Mismatch);
         }

@@ -6,9 +6,9 @@ use jiff::Timestamp;
 use sqlx::FromRow;
 use uuid::Uuid;
 
-use super::statement::{Connection, query};
 use super::columns::{time, unsigned, uuid};
 use super::notices::{NoticeKind, telling};
+use super::statement::{Connection, query};
 use super::writes::Scope;
 use super::{Store, StoreError};
 
@@ -140,6 +140,29 @@ impl Store {
         self.commit(transaction).await
     }
 
+    /// Claims a notice's oldest event until `until`, for as long as another process has not: both saw it due at the same time. The event
+    /// is due then, if nothing comes of this claim.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn claim_event(
+        &self,
+        notice: Uuid,
+        event: &mut PendingEvent,
+        until: Timestamp,
+    ) -> Result<bool, StoreError> {
+        let mut transaction = self.begin(Scope::OfNotice(notice)).await?;
+        let claimed = query("UPDATE notices SET due_at = $3 WHERE id = $1 AND due_at = $2")
+            .bind(notice.to_string())
+            .bind(event.due_at.as_microsecond())
+            .bind(until.as_microsecond())
+            .execute(&mut transaction)
+            .await?;
+        self.commit(transaction).await?;
+        event.due_at = until;
+        Ok(claimed > 0)
+    }
+
     /// Notes that an event was taken; the notice's next one is due at once.
     ///
     /// # Errors
@@ -216,8 +239,7 @@ async fn give_up(
     .bind(notice.to_string())
     .bind(too_old.as_microsecond())
     .execute(&mut *connection)
-    .await?
-    ;
+    .await?;
     if ended > 0 {
         query("UPDATE notices SET given_up = given_up + $3, given_up_at = $2 WHERE id = $1")
             .bind(notice.to_string())
@@ -329,12 +351,7 @@ async fn keep(connection: &mut Connection, notice: Uuid, signal: &Signal) -> Res
     Ok(())
 }
 
-async fn forget(
-    connection: &mut Connection,
-    notice: Uuid,
-    kind: NoticeKind,
-    about: &str,
-) -> Result<(), StoreError> {
+async fn forget(connection: &mut Connection, notice: Uuid, kind: NoticeKind, about: &str) -> Result<(), StoreError> {
     query("DELETE FROM notice_standings WHERE notice = $1 AND kind = $2 AND about = $3")
         .bind(notice.to_string())
         .bind(kind.as_str())

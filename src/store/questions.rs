@@ -4,10 +4,10 @@ use jiff::Timestamp;
 use sqlx::FromRow;
 use uuid::Uuid;
 
-use super::statement::{Connection, query, query_scalar};
 use super::columns::{corrupt, time};
 use super::refreshes::{Change, changed};
-use super::writes::{Scope, Caps, WriteError, network_exists, room_for_one};
+use super::statement::{Connection, query, query_scalar};
+use super::writes::{Caps, Scope, WriteError, network_exists, room_for_one};
 use super::{Store, StoreError};
 
 /// What kind of question is kept.
@@ -105,7 +105,8 @@ impl Store {
         query(
             "INSERT INTO kept_questions (network, kind, name, created_at, updated_at, tag, body) \
              VALUES ($1, $2, $3, $4, $4, $5, $6) ON CONFLICT (network, kind, name) DO UPDATE SET \
-             updated_at = CASE WHEN excluded.updated_at > created_at THEN excluded.updated_at ELSE created_at END, \
+             updated_at = CASE WHEN excluded.updated_at > kept_questions.created_at THEN \
+             excluded.updated_at ELSE kept_questions.created_at END, \
              tag = excluded.tag, body = excluded.body",
         )
         .bind(network)
@@ -218,21 +219,16 @@ impl Store {
 
 /// All questions of a network, in the order of their names.
 pub(super) async fn all(connection: &mut Connection, network: &str) -> Result<Vec<StoredQuestion>, StoreError> {
-    let rows: Vec<QuestionRow> = query(
-        "SELECT kind, name, tag, body, updated_at FROM kept_questions WHERE network = $1 ORDER BY kind, name",
-    )
-    .bind(network)
-    .fetch_all(connection)
-    .await?;
+    let rows: Vec<QuestionRow> =
+        query("SELECT kind, name, tag, body, updated_at FROM kept_questions WHERE network = $1 ORDER BY kind, name")
+            .bind(network)
+            .fetch_all(connection)
+            .await?;
     rows.into_iter().map(StoredQuestion::try_from).collect()
 }
 
 /// The refresh that follows a change: limits are part of what a forecast answers, scenarios are not.
-async fn followed(
-    connection: &mut Connection,
-    network: &str,
-    kind: QuestionKind,
-) -> Result<Option<Uuid>, StoreError> {
+async fn followed(connection: &mut Connection, network: &str, kind: QuestionKind) -> Result<Option<Uuid>, StoreError> {
     match kind {
         QuestionKind::Limit => Ok(changed(connection, network).await?.1),
         QuestionKind::Scenario => Ok(None),

@@ -4,12 +4,12 @@ use jiff::Timestamp;
 
 use uuid::Uuid;
 
-use super::statement::{Connection, query, query_scalar};
 use super::accounts::{self, NewAccount};
 use super::columns::{corrupt, signed, unsigned, uuid};
 use super::jobs::{JobKind, JobState, end, insert};
 use super::latest;
 use super::runs::{NewRun, insert_run};
+use super::statement::{Connection, query, query_scalar};
 use super::writes::Scope;
 use super::{Signal, Store, StoreError, backtests, outbox};
 
@@ -185,15 +185,11 @@ impl Store {
 }
 
 /// Notes that a network's evidence or plan changes: its next revision, and the refresh to be started, if one is taken on.
-pub(super) async fn changed(
-    connection: &mut Connection,
-    network: &str,
-) -> Result<(u64, Option<Uuid>), StoreError> {
-    let revision: i64 =
-        query_scalar("UPDATE networks SET revision = revision + 1 WHERE name = $1 RETURNING revision")
-            .bind(network)
-            .fetch_one(&mut *connection)
-            .await?;
+pub(super) async fn changed(connection: &mut Connection, network: &str) -> Result<(u64, Option<Uuid>), StoreError> {
+    let revision: i64 = query_scalar("UPDATE networks SET revision = revision + 1 WHERE name = $1 RETURNING revision")
+        .bind(network)
+        .fetch_one(&mut *connection)
+        .await?;
     Ok((unsigned("revision", revision)?, enqueue(connection, network).await?))
 }
 
@@ -227,11 +223,7 @@ pub(super) async fn enqueue(connection: &mut Connection, network: &str) -> Resul
 }
 
 /// Marks the runs and backtests of a network that stand on counts of `revision`, which are replaced now.
-pub(super) async fn corrected(
-    connection: &mut Connection,
-    network: &str,
-    revision: u64,
-) -> Result<(), StoreError> {
+pub(super) async fn corrected(connection: &mut Connection, network: &str, revision: u64) -> Result<(), StoreError> {
     query("UPDATE network_runs SET evidence_corrected_at = $3 WHERE network = $1 AND revision >= $2")
         .bind(network)
         .bind(signed("revision", revision)?)

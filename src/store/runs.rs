@@ -4,8 +4,8 @@ use jiff::Timestamp;
 use sqlx::FromRow;
 use uuid::Uuid;
 
-use super::statement::{Connection, query, query_scalar};
 use super::columns::{date_key, signed, time, unsigned, uuid};
+use super::statement::{Connection, query, query_scalar};
 use super::writes::Scope;
 use super::{Store, StoreError};
 
@@ -203,12 +203,11 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn find_run(&self, kind: RunKind, id: Uuid) -> Result<Option<StoredRun>, StoreError> {
-        let row: Option<RunRow> =
-            query("SELECT id, created_at, tag, document FROM runs WHERE id = $1 AND kind = $2")
-                .bind(id.to_string())
-                .bind(kind.as_str())
-                .fetch_optional(&mut self.reader().await?)
-                .await?;
+        let row: Option<RunRow> = query("SELECT id, created_at, tag, document FROM runs WHERE id = $1 AND kind = $2")
+            .bind(id.to_string())
+            .bind(kind.as_str())
+            .fetch_optional(&mut self.reader().await?)
+            .await?;
         row.map(StoredRun::try_from).transpose()
     }
 
@@ -299,11 +298,7 @@ pub(super) async fn insert_run(
     Ok(())
 }
 
-async fn claimed(
-    connection: &mut Connection,
-    kind: RunKind,
-    claim: &KeyClaim,
-) -> Result<Option<Inserted>, StoreError> {
+async fn claimed(connection: &mut Connection, kind: RunKind, claim: &KeyClaim) -> Result<Option<Inserted>, StoreError> {
     let row: Option<KeyedRunRow> = query(
         "SELECT k.body_digest, r.id, r.created_at, r.tag, r.document \
          FROM idempotency_keys k JOIN runs r ON r.id = k.run_id WHERE k.kind = $1 AND k.key = $2",

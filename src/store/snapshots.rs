@@ -4,10 +4,10 @@ use jiff::Timestamp;
 use sqlx::FromRow;
 use uuid::Uuid;
 
-use super::statement::{Connection, query, query_scalar};
 use super::columns::{date, date_key, signed, time, total, unsigned};
 use super::refreshes::{Change, changed, corrected};
-use super::writes::{Scope, Caps, Clash, WriteError, network_exists, room_for_one, room_for_rows};
+use super::statement::{Connection, query, query_scalar};
+use super::writes::{Caps, Clash, Scope, WriteError, network_exists, room_for_one, room_for_rows};
 use super::{Store, StoreError};
 
 /// A snapshot's line in a list: everything but the counts themselves.
@@ -73,13 +73,12 @@ impl Store {
         let summary = &snapshot.summary;
         let mut transaction = self.begin(Scope::Network(network)).await?;
         network_exists(&mut transaction, network).await?;
-        let stored: Option<(String, i64, i64, i64)> = query(
-            "SELECT tag, row_count, updated_at, revision FROM snapshots WHERE network = $1 AND as_of = $2",
-        )
-        .bind(network)
-        .bind(date_key(summary.as_of))
-        .fetch_optional(&mut transaction)
-        .await?;
+        let stored: Option<(String, i64, i64, i64)> =
+            query("SELECT tag, row_count, updated_at, revision FROM snapshots WHERE network = $1 AND as_of = $2")
+                .bind(network)
+                .bind(date_key(summary.as_of))
+                .fetch_optional(&mut transaction)
+                .await?;
         if !allows(stored.as_ref().map(|(tag, ..)| tag.as_str())) {
             return Err(WriteError::Mismatch);
         }

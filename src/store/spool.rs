@@ -203,12 +203,10 @@ impl Store {
     /// Drops the body of a job; what cannot be dropped now is swept away later.
     pub async fn drop_spooled(&self, job: Uuid) {
         let dropped = match &self.home {
-            Home::Sqlite { file, .. } => {
-                match tokio::fs::remove_file(file_of(&spool_folder(file.path()), job)).await {
-                    Err(error) if error.kind() != io::ErrorKind::NotFound => Err(unusable(error)),
-                    _ => Ok(()),
-                }
-            }
+            Home::Sqlite { file, .. } => match tokio::fs::remove_file(file_of(&spool_folder(file.path()), job)).await {
+                Err(error) if error.kind() != io::ErrorKind::NotFound => Err(unusable(error)),
+                _ => Ok(()),
+            },
             Home::Postgres { .. } => self.drop_parts(job).await,
         };
         if let Err(error) = dropped {
@@ -240,7 +238,8 @@ impl Store {
     }
 
     async fn sweep_parts(&self, age: Duration) -> Result<(), StoreError> {
-        let before = Timestamp::now().as_microsecond().saturating_sub(i64::try_from(age.as_micros()).unwrap_or(i64::MAX));
+        let before =
+            Timestamp::now().as_microsecond().saturating_sub(i64::try_from(age.as_micros()).unwrap_or(i64::MAX));
         let mut transaction = self.begin(Scope::Own).await?;
         query(
             "DELETE FROM spooled_parts WHERE created_at < $1 AND upload NOT IN \

@@ -4,10 +4,10 @@ use jiff::Timestamp;
 use sqlx::FromRow;
 use uuid::Uuid;
 
-use super::statement::{Connection, query, query_scalar};
 use super::columns::{date, date_key, signed, time, total, unsigned};
 use super::refreshes::{Change, changed, corrected};
-use super::writes::{Scope, Caps, Clash, WriteError, network_exists, room_for_one, room_for_rows};
+use super::statement::{Connection, query, query_scalar};
+use super::writes::{Caps, Clash, Scope, WriteError, network_exists, room_for_one, room_for_rows};
 use super::{Store, StoreError};
 
 /// A table's line in a list: everything but its rows.
@@ -177,14 +177,13 @@ impl Store {
     ) -> Result<Option<Uuid>, WriteError> {
         let mut transaction = self.begin(Scope::Network(network)).await?;
         network_exists(&mut transaction, network).await?;
-        let stored: Option<(String, i64)> = query(
-            "SELECT tag, revision FROM transitions WHERE network = $1 AND starts_at = $2 AND ends_at = $3",
-        )
-        .bind(network)
-        .bind(date_key(from))
-        .bind(date_key(to))
-        .fetch_optional(&mut transaction)
-        .await?;
+        let stored: Option<(String, i64)> =
+            query("SELECT tag, revision FROM transitions WHERE network = $1 AND starts_at = $2 AND ends_at = $3")
+                .bind(network)
+                .bind(date_key(from))
+                .bind(date_key(to))
+                .fetch_optional(&mut transaction)
+                .await?;
         let (tag, revision) = stored.ok_or(WriteError::Missing)?;
         if !allows(Some(&tag)) {
             return Err(WriteError::Mismatch);

@@ -4,8 +4,8 @@ use jiff::Timestamp;
 use tokio::sync::watch;
 use uuid::Uuid;
 
-use super::statement::{Connection, Held, Statement, in_time, query, query_scalar};
 use super::columns::unsigned;
+use super::statement::{Connection, Held, Statement, in_time, query, query_scalar};
 use super::{Home, Store, StoreError};
 use crate::model::DegreeKind;
 
@@ -169,18 +169,18 @@ impl<'a> Scope<'a> {
             Self::Network(name) => {
                 query("SELECT pg_advisory_xact_lock(hashtextextended('network ' || $1, 0))").bind(name)
             }
-            Self::OfJob(id) => {
-                query("SELECT pg_advisory_xact_lock(hashtextextended('network ' || network, 0)) FROM jobs WHERE id = $1")
-                    .bind(id.to_string())
-            }
-            Self::OfNotice(id) => {
-                query("SELECT pg_advisory_xact_lock(hashtextextended('network ' || network, 0)) FROM notices WHERE id = $1")
-                    .bind(id.to_string())
-            }
-            Self::OfBacktest(id) => {
-                query("SELECT pg_advisory_xact_lock(hashtextextended('network ' || network, 0)) FROM backtests WHERE id = $1")
-                    .bind(id.to_string())
-            }
+            Self::OfJob(id) => query(
+                "SELECT pg_advisory_xact_lock(hashtextextended('network ' || network, 0)) FROM jobs WHERE id = $1",
+            )
+            .bind(id.to_string()),
+            Self::OfNotice(id) => query(
+                "SELECT pg_advisory_xact_lock(hashtextextended('network ' || network, 0)) FROM notices WHERE id = $1",
+            )
+            .bind(id.to_string()),
+            Self::OfBacktest(id) => query(
+                "SELECT pg_advisory_xact_lock(hashtextextended('network ' || network, 0)) FROM backtests WHERE id = $1",
+            )
+            .bind(id.to_string()),
             Self::OfRun(id) => query(
                 "SELECT pg_advisory_xact_lock(hashtextextended('network ' || network, 0)) FROM runs WHERE id = $1 \
                  AND network IS NOT NULL",

@@ -31,6 +31,7 @@ mod notices_kills;
 mod openapi;
 mod operation;
 mod polled;
+mod postgres;
 mod process;
 mod questions;
 mod scenarios;
