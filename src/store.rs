@@ -3,7 +3,7 @@
 //! Of a file, one connection writes and a pool of read-only ones reads. A run and its key are one `BEGIN IMMEDIATE` transaction, and so
 //! is every other write that looks before it leaps, each at `synchronous = FULL`: what was acknowledged is on disk, through a killed process
 //! and through a power cut. A write into a file that no longer stands at its path is never acknowledged. On a server, which
-//! replicas share, a write is alone among those of its scope (see [`writes`]), and its server's own settings say when it is on disk.
+//! replicas share, a write is alone among those of its scope (see `writes`), and its server's own settings say when it is on disk.
 
 mod accounts;
 mod backtests;
