@@ -58,10 +58,12 @@ pub struct Config {
 #[derive(Debug, Clone, PartialEq, Deserialize)]
 #[serde(deny_unknown_fields)]
 pub struct DatabaseConfig {
-    /// `sqlite://FILE`.
+    /// `sqlite://FILE` or `postgres://USER@HOST/DATABASE`.
     pub url: String,
-    /// Connections that read at the same time.
+    /// Connections that read a file at the same time.
     pub readers: u32,
+    /// Connections to a server.
+    pub connections: u32,
     /// Longest wait for another process's lock, milliseconds.
     pub busy_timeout_ms: u64,
     /// Whether `serve` brings the tables up to date.

@@ -23,8 +23,10 @@ mod runs;
 
 use std::future::Future;
 use std::sync::Arc;
+use std::time::Duration;
 
 use tokio::sync::Semaphore;
+use tokio::time::timeout;
 use tracing::Instrument;
 
 use crate::config::{Config, DatabaseConfig};
@@ -156,9 +158,16 @@ impl Service {
 
     /// Closes the database.
     pub async fn close(&self) {
+        // What is not given up now is anybody's when the claim runs out.
+        if self.store.is_shared() && !matches!(timeout(RELEASE_TIME, self.store.release_claims()).await, Ok(Ok(()))) {
+            tracing::warn!("claims on jobs could not be given up; others wait until they run out");
+        }
         self.store.close().await;
     }
 }
+
+/// Longest wait for claims on jobs to be given up at the stop.
+const RELEASE_TIME: Duration = Duration::from_secs(2);
 
 /// Runs a write in a task of its own: a caller that goes away in the middle cannot leave it half done.
 async fn in_own_task<T: Send + 'static>(

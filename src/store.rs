@@ -1,8 +1,9 @@
-//! The only SQL: runs and their idempotency keys, tracked networks and what is known of them, jobs, in SQLite.
+//! The only SQL: runs and their idempotency keys, tracked networks and what is known of them, jobs, in SQLite or PostgreSQL.
 //!
-//! One connection writes, a pool of read-only ones reads. A run and its key are one `BEGIN IMMEDIATE` transaction, and so
+//! Of a file, one connection writes and a pool of read-only ones reads. A run and its key are one `BEGIN IMMEDIATE` transaction, and so
 //! is every other write that looks before it leaps, each at `synchronous = FULL`: what was acknowledged is on disk, through a killed process
-//! and through a power cut. A write into a file that no longer stands at its path is never acknowledged.
+//! and through a power cut. A write into a file that no longer stands at its path is never acknowledged. On a server, which
+//! replicas share, a write is alone among those of its scope (see `writes`), and its server's own settings say when it is on disk.
 
 mod accounts;
 mod backtests;
@@ -22,6 +23,7 @@ mod refreshes;
 mod runs;
 mod snapshots;
 mod spool;
+mod statement;
 mod transitions;
 mod writes;
 
@@ -29,13 +31,15 @@ use std::path::PathBuf;
 use std::sync::Arc;
 
 use file::DatabaseFile;
-use sqlx::SqlitePool;
+use sqlx::postgres::PgDatabaseError;
+use sqlx::{PgPool, SqlitePool};
 use tokio::sync::watch;
+use uuid::Uuid;
 
 pub use accounts::{AccountKey, IssuedRun, NewAccount, StoredAccount};
 pub use backtests::{BacktestSummary, BacktestWrite, NewBacktest, StoredBacktest};
 pub use derived::DerivedEvidence;
-pub use jobs::{CalledOff, JobFilter, JobKind, JobState, StoredJob};
+pub use jobs::{CalledOff, JobFilter, JobKind, JobStart, JobState, StoredJob};
 pub use latest::{LatestForecast, LatestLine, LatestStamp, LatestWithCadence};
 pub use link_events::StoredLinkEvents;
 pub use networks::{NetworkSummary, NewNetwork, StoredEvidence, StoredNetwork};
@@ -46,7 +50,7 @@ pub use questions::{QuestionKind, StoredQuestion};
 pub use refreshes::{Change, RefreshEnd, RefreshEnded, RefreshState, RefreshStatus};
 pub use runs::{Inserted, KeyClaim, NewRun, RunFilter, RunKind, RunSummary, StoredOrigin, StoredRun};
 pub use snapshots::{SnapshotSummary, StoredSnapshot};
-pub use spool::Upload;
+pub use spool::{Spooled, Upload};
 pub use transitions::{EndTags, StoredTransitions, TransitionsSummary};
 pub use writes::{Caps, Clash, WriteError};
 
@@ -57,14 +61,30 @@ const SQLITE_IOERR: u32 = 10;
 const SQLITE_FULL: u32 = 13;
 const SQLITE_CANTOPEN: u32 = 14;
 
+// SQLSTATEs: https://www.postgresql.org/docs/15/errcodes-appendix.html
+/// Serialisation failure, deadlock, lock not available, too many connections, a statement's time is over.
+const POSTGRES_BUSY: [&str; 5] = ["40001", "40P01", "55P03", "53300", "57014"];
+/// Connection lost, out of disk or memory, read-only, shut down or starting, a failing system, no such database, not allowed in.
+const POSTGRES_UNUSABLE: [&str; 8] = ["08", "53", "25006", "57P", "58", "3D000", "28", "25P03"];
+const POSTGRES_NO_TABLE: &str = "42P01";
+
 /// The database.
 #[derive(Debug, Clone)]
 pub struct Store {
-    write: SqlitePool,
-    read: SqlitePool,
-    file: DatabaseFile,
+    home: Home,
+    /// Tells this process from others on the same database.
+    process: Uuid,
     /// Writes of this process that have ended.
     commits: Arc<watch::Sender<u64>>,
+}
+
+/// Where rows live.
+#[derive(Debug, Clone)]
+enum Home {
+    /// A file, of this process alone: one connection writes.
+    Sqlite { write: SqlitePool, read: SqlitePool, file: DatabaseFile },
+    /// A server, shared with other processes.
+    Postgres { pool: PgPool },
 }
 
 /// Why the database did not do as asked.
@@ -109,10 +129,18 @@ impl From<sqlx::Error> for StoreError {
         let sqlx::Error::Database(inner) = &error else {
             return match error {
                 sqlx::Error::PoolTimedOut => Self::Busy(error),
-                sqlx::Error::Io(_) => Self::Unusable(error),
+                sqlx::Error::Io(_) | sqlx::Error::Tls(_) => Self::Unusable(error),
                 _ => Self::Failed(error),
             };
         };
+        if let Some(inner) = inner.try_downcast_ref::<PgDatabaseError>() {
+            return match inner.code() {
+                code if POSTGRES_BUSY.contains(&code) => Self::Busy(error),
+                code if POSTGRES_UNUSABLE.iter().any(|class| code.starts_with(class)) => Self::Unusable(error),
+                POSTGRES_NO_TABLE => Self::NoTable(error),
+                _ => Self::Failed(error),
+            };
+        }
         // Extended result codes carry the primary one in the low byte.
         match inner.code().and_then(|code| code.parse::<u32>().ok()).map(|code| code & 0xff) {
             Some(SQLITE_BUSY) => Self::Busy(error),

@@ -59,6 +59,29 @@ pub fn network_fit() -> Value {
     json!({"model": "mix", "label": "Heronsgate followers"})
 }
 
+/// What is asked of a backtest.
+pub fn backtest() -> Value {
+    json!({"thresholds": [5, 10, 50], "ahead": 3})
+}
+
+/// Degree counts at a date.
+pub fn snapshot() -> Value {
+    json!({"degree_counts": COUNTS})
+}
+
+/// Where degrees went between two dates.
+pub fn transitions() -> Value {
+    json!({"counts": [[0, 0, 4900], [0, 1, 300], [1, 2, 90], [null, 0, 1200], [7, null, 2]]})
+}
+
+/// What a link list tells of attachment.
+pub fn link_events() -> Value {
+    json!({
+        "ratios": [[0.5, 0.001, 20], [1.0, 0.002, 15], [8.0, 0.05, 7]],
+        "windows": [{"cells": [[0, 0, 12, 54000.0, 0.0], [1, 3, 30, 22000.0, 41000.0]]}]
+    })
+}
+
 /// A problem with two faults.
 pub fn problem() -> Value {
     json!({

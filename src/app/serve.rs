@@ -27,6 +27,7 @@ pub struct Running {
     server: JoinHandle<()>,
     upkeep: JoinHandle<()>,
     sender: JoinHandle<()>,
+    sharing: JoinHandle<()>,
     grace: Duration,
 }
 
@@ -38,7 +39,7 @@ impl Running {
 
     /// Stops listening, finishes what was accepted, within the configured grace, and closes the database.
     pub async fn stop(self) {
-        let Self { service, stop, server, upkeep, sender, grace, .. } = self;
+        let Self { service, stop, server, upkeep, sender, sharing, grace, .. } = self;
         let aborted = sender.abort_handle();
         // Nobody listening means the server is gone already.
         let _ = stop.send(true);
@@ -48,6 +49,7 @@ impl Running {
         }
         aborted.abort();
         upkeep.abort();
+        sharing.abort();
         service.cancel_all();
         service.close().await;
         tracing::info!("stopped");
@@ -64,20 +66,22 @@ pub async fn start(config: Config) -> Result<Running, Stop> {
     let address = listener.local_addr().map_err(|error| Stop::failed("the listening address", error))?;
     let metrics = telemetry::start_metrics().map_err(|error| Stop::failed("metrics", error))?;
     let service = Service::open(&config).await.map_err(|error| Stop::failed("the database", error))?;
-    if let Err(error) = service.resume_jobs().await {
-        tracing::warn!(%error, "jobs of the last process are not taken up before the next start");
+    let resumed = service.resume_jobs().await;
+    if let Err(error) = &resumed {
+        tracing::warn!(%error, "jobs of the last process cannot be taken up yet; it is tried again");
     }
     let upkeep = tokio::spawn(telemetry::keep_metrics_small(metrics.clone()));
     let (grace, head_timeout) = (config.http.shutdown_grace(), config.http.head_timeout());
     let front = Front::new(AppState::new(service.clone(), &config, metrics));
     let (stop, stopped) = watch::channel(false);
     let sender = tokio::spawn(service.clone().send_notices(stopped.clone()));
+    let sharing = tokio::spawn(service.clone().share_jobs(resumed.is_ok(), stopped.clone()));
     let server = tokio::spawn(connections::serve(listener, front, head_timeout, stopped));
     tracing::info!(%address, "serving");
     if !address.ip().is_loopback() {
         tracing::warn!("reachable from other machines, and there is no access control: put a gateway in front");
     }
-    Ok(Running { address, service, stop, server, upkeep, sender, grace })
+    Ok(Running { address, service, stop, server, upkeep, sender, sharing, grace })
 }
 
 /// Serves until SIGINT or SIGTERM.

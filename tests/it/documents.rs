@@ -118,3 +118,8 @@ fn code_is_found_where_markdown_has_it() {
 fn every_curl_line_of_the_readme_runs() {
     follow("README.md");
 }
+
+#[test]
+fn every_curl_line_of_the_examples_runs() {
+    follow("examples/README.md");
+}

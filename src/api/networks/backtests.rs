@@ -13,7 +13,7 @@ use crate::api::jobs::JobAnswer;
 use crate::api::pages::{self, Paging};
 use crate::api::refusals::{BodyRefusals, Refusals};
 use crate::api::requests::{BacktestBody, read_backtest};
-use crate::api::{ApiError, AppState, Problem, backtests, jobs};
+use crate::api::{ApiError, AppState, Problem, backtests, examples, jobs};
 use crate::service::{BacktestRequest, BacktestRun, BacktestSummary, JobState, NetworkEvidence, Real, Service};
 
 /// The routes of this resource.
@@ -82,7 +82,7 @@ impl TryFrom<BacktestSummary> for BacktestLine {
         ("Prefer" = Option<String>, Header, example = "respond-async", description = "RFC 7240: `respond-async` to be \
             answered at once, `wait=N` to be answered within N seconds, but never later than configured"),
     ),
-    request_body(content = Option<BacktestBody>, content_type = "application/json"),
+    request_body(content = Option<BacktestBody>, content_type = "application/json", example = examples::backtest),
     responses(
         (status = 201, description = "The backtest, kept", body = BacktestRun, headers(
             ("Location" = String, description = "Where the backtest is kept"),

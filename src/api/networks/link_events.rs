@@ -13,7 +13,7 @@ use crate::api::extract::{JsonBody, NoQuery, ResultFormat, network_name};
 use crate::api::refusals::{BodyRefusals, ConditionRefusals, Refusals};
 use crate::api::representation::{self, Conditions, Validator};
 use crate::api::requests::{LinkEventsBody, read_link_events};
-use crate::api::{ApiError, AppState, Problem};
+use crate::api::{ApiError, AppState, Problem, examples};
 
 /// The routes of this resource.
 pub fn routes() -> OpenApiRouter<AppState> {
@@ -32,7 +32,7 @@ pub fn routes() -> OpenApiRouter<AppState> {
         ("If-Match" = Option<String>, Header, description = "Only when the link events have this ETag"),
         ("If-None-Match" = Option<String>, Header, description = "`*`: only when the network has none"),
     ),
-    request_body(content = LinkEventsBody, content_type = "application/json"),
+    request_body(content = LinkEventsBody, content_type = "application/json", example = examples::link_events),
     responses(
         (status = 200, description = "What is stored now in place of others", body = LinkEventsLine),
         (status = 201, description = "What is stored now", body = LinkEventsLine,

@@ -15,7 +15,7 @@ use crate::api::pages::{self, Paging};
 use crate::api::refusals::{BodyRefusals, ConditionRefusals, FormRefusals, Refusals};
 use crate::api::representation::{self, Conditions, Validator};
 use crate::api::requests::{DegreeCountsBody, read_snapshot, read_snapshot_csv};
-use crate::api::{ApiError, AppState, Problem};
+use crate::api::{ApiError, AppState, Problem, examples};
 use crate::report;
 use crate::service::{StoredSnapshot, date_text};
 
@@ -39,7 +39,7 @@ pub fn routes() -> OpenApiRouter<AppState> {
         ("If-None-Match" = Option<String>, Header, description = "`*`: only when the date has no snapshot"),
     ),
     request_body(content(
-        (DegreeCountsBody = "application/json"),
+        (DegreeCountsBody = "application/json", example = examples::snapshot),
         (String = "text/csv", example = "degree,nodes\n0,5400\n1,1075\n40,3\n"),
     )),
     responses(

@@ -16,7 +16,7 @@ use crate::api::pages::{self, Paging};
 use crate::api::refusals::{BodyRefusals, ConditionRefusals, FormRefusals, Refusals};
 use crate::api::representation::{self, Conditions, Validator};
 use crate::api::requests::{TransitionCountsBody, read_transitions, read_transitions_csv};
-use crate::api::{ApiError, AppState, Problem};
+use crate::api::{ApiError, AppState, Problem, examples};
 use crate::report;
 use crate::service::{NetworkName, StoredTransitions, date_text};
 
@@ -49,7 +49,7 @@ pub fn routes() -> OpenApiRouter<AppState> {
         ("If-None-Match" = Option<String>, Header, description = "`*`: only when none are stored between these dates"),
     ),
     request_body(content(
-        (TransitionCountsBody = "application/json"),
+        (TransitionCountsBody = "application/json", example = examples::transitions),
         (String = "text/csv", example = "degree_before,degree_after,nodes\n0,0,4900\n0,1,300\n,0,1200\n7,,2\n"),
     )),
     responses(

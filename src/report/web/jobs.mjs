@@ -8,6 +8,8 @@ const KINDS = { link_list: "Counting a link list", refresh: "Making the latest f
 const ENDED = { succeeded: "done", failed: "failed", cancelled: "called off" };
 /** Jobs that have ended and are still told. */
 const ENDED_SHOWN = 3;
+/** Time between two looks at a job that has no stream, milliseconds. */
+const AGAIN = 3_000;
 
 /** Shows jobs of a network, newest first; `onEnd` is told when a live one ends. Answers how to stop watching. */
 export function watchJobs(box, jobs, onEnd) {
@@ -68,18 +70,35 @@ async function cancel(item, job) {
   }
 }
 
-// Server-Sent Events, each a job as JSON. The browser connects again by itself until the job has ended.
+// Server-Sent Events, each a job as JSON. The browser connects again by itself until the job has ended; where the service has no
+// place for another stream the job is asked for now and then.
 function stream(box, job, onEnd) {
-  const events = new EventSource(`/v1/jobs/${encodeURIComponent(job.id)}`);
-  events.addEventListener("message", (event) => {
-    const told = JSON.parse(event.data);
-    const item = box.querySelector(`[data-job="${CSS.escape(told.id)}"]`);
-    if (item) show(item, told);
-    if (!isLive(told)) {
-      events.close();
-      announce(`${KINDS[told.kind] ?? told.kind}: ${ENDED[told.state] ?? told.state}.`);
-      onEnd(told);
+  const path = `/v1/jobs/${encodeURIComponent(job.id)}`;
+  const events = new EventSource(path);
+  let timer;
+  const close = () => {
+    events.close();
+    clearTimeout(timer);
+  };
+  const told = (now) => {
+    const item = box.querySelector(`[data-job="${CSS.escape(now.id)}"]`);
+    if (item) show(item, now);
+    if (isLive(now)) return;
+    close();
+    announce(`${KINDS[now.kind] ?? now.kind}: ${ENDED[now.state] ?? now.state}.`);
+    onEnd(now);
+  };
+  const ask = async () => {
+    timer = setTimeout(ask, AGAIN);
+    try {
+      told((await call(path)).data);
+    } catch {
+      // It is asked again.
     }
+  };
+  events.addEventListener("message", (event) => told(JSON.parse(event.data)));
+  events.addEventListener("error", () => {
+    if (events.readyState === EventSource.CLOSED && timer === undefined) timer = setTimeout(ask, AGAIN);
   });
-  return events;
+  return { close };
 }

@@ -39,7 +39,7 @@ impl Service {
             let job = (JobKind::LinkList, name.as_str());
             let taken = service.store.insert_job(id, job, &task, service.jobs.most_live()).await;
             if let Err(error) = taken {
-                service.drop_list(id).await;
+                service.store.drop_spooled(id).await;
                 return Err(refused(error));
             }
             service.launch(id, JobKind::LinkList);
@@ -56,7 +56,7 @@ impl Service {
             Err(Stopped::CalledOff) => {}
             Err(Stopped::Failed(problem)) => self.fail(job, problem).await?,
         }
-        self.drop_list(job.id).await;
+        self.store.drop_spooled(job.id).await;
         Ok(())
     }
 
@@ -65,9 +65,10 @@ impl Service {
         if job.starts > MOST_STARTS {
             return Err(Stopped::Failed(JobProblem::interrupted(job.starts - 1, "send the list again")));
         }
-        let (path, task, progress) = (self.store.spooled(job.id), job.task.clone(), turn.progress());
+        let list = self.store.spooled(job.id).await.map_err(|error| Stopped::broken(error.to_string()))?;
+        let (task, progress) = (job.task.clone(), turn.progress());
         let most_nodes = self.jobs.config().link_list_nodes;
-        let counting = tokio::task::spawn_blocking(move || count(&path, &task, most_nodes, &progress));
+        let counting = tokio::task::spawn_blocking(move || count(list.path(), &task, most_nodes, &progress));
         match counting.await {
             Ok(told) => told,
             Err(error) => Err(Stopped::broken(format!("counting stopped short: {error}"))),
@@ -91,15 +92,6 @@ impl Service {
         match written.await? {
             Some(problem) => self.fail(job, problem).await,
             None => Ok(()),
-        }
-    }
-
-    pub(super) async fn drop_list(&self, id: Uuid) {
-        let path = self.store.spooled(id);
-        if let Err(error) = tokio::fs::remove_file(&path).await
-            && error.kind() != std::io::ErrorKind::NotFound
-        {
-            tracing::warn!(path = %path.display(), %error, "a link list that is needed no more could not be removed");
         }
     }
 }
