@@ -3,6 +3,7 @@
 mod accounts;
 mod accuracy;
 mod answers;
+mod background;
 mod backtests;
 mod compute;
 mod cpu;
@@ -23,6 +24,7 @@ mod runs;
 
 use std::future::Future;
 use std::sync::Arc;
+use std::time::Duration;
 
 use tokio::sync::Semaphore;
 use tracing::Instrument;
@@ -32,6 +34,7 @@ use crate::model::MAX_SNAPSHOTS;
 use crate::store::{Caps, Store, StoreError};
 use gauges::Briefs;
 use jobs::Board;
+use news::TellingCache;
 use notices::Notices;
 
 pub use crate::evaluate::OriginRequest;
@@ -58,6 +61,7 @@ pub use answers::{
     SustainableAnswer, TailAnswer, TailCountAnswer, TailDifferenceAnswer, TailPointAnswer, TransitionsAnswer,
     WarningAnswer, WatchAnswer, WatchedClassAnswer, WatchedDegreeAnswer, WatchedNodeAnswer,
 };
+pub use background::{Unfinished, converted};
 pub use backtests::{
     BacktestRequest, BacktestRun, CoverageRow, DEFAULT_AHEAD, ErrorsAnswer, MOST_AHEAD, MemberErrors, PooledErrors,
     ScoreAnswer,
@@ -94,6 +98,8 @@ pub struct Service {
     jobs: Board,
     /// What the gauges tell of forecasts, read once each.
     briefs: Briefs,
+    /// What followers of networks are told of forecasts, read once for all of them.
+    told: TellingCache,
     notices: Notices,
     /// Stored evidence may be large: no more runs hold some at once than can be computed at once.
     evidence_places: Arc<Semaphore>,
@@ -113,7 +119,16 @@ impl Service {
         let cpu = CpuPool::new(&config.compute);
         let evidence_places = Arc::new(Semaphore::new(cpu.workers()));
         let (jobs, notices) = (Board::new(config.jobs), Notices::new(&config.notices));
-        Ok(Self { store, cpu, caps, jobs, briefs: Briefs::default(), notices, evidence_places })
+        Ok(Self {
+            store,
+            cpu,
+            caps,
+            jobs,
+            briefs: Briefs::default(),
+            told: TellingCache::default(),
+            notices,
+            evidence_places,
+        })
     }
 
     /// Brings the database's tables up to date and closes it.
@@ -146,6 +161,11 @@ impl Service {
     /// Whether the database answers and its tables are current.
     async fn check_tables(&self) -> Result<(), ServiceError> {
         if self.store.is_current().await? { Ok(()) } else { Err(ServiceError::TablesOutdated) }
+    }
+
+    /// About how long it takes until the computations that wait are done.
+    pub fn backlog(&self) -> Duration {
+        self.cpu.backlog()
     }
 
     /// Tells running computations and jobs to stop at their next step.
