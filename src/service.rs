@@ -103,6 +103,8 @@ pub struct Service {
     notices: Notices,
     /// Stored evidence may be large: no more runs hold some at once than can be computed at once.
     evidence_places: Arc<Semaphore>,
+    /// Those that wait for it: as many as computations at work and waiting.
+    evidence_queue: Arc<Semaphore>,
 }
 
 impl Service {
@@ -118,6 +120,7 @@ impl Service {
         let caps = Caps { dates: MAX_SNAPSHOTS as u64, rows: config.limits.network_rows as u64 };
         let cpu = CpuPool::new(&config.compute);
         let evidence_places = Arc::new(Semaphore::new(cpu.workers()));
+        let evidence_queue = Arc::new(Semaphore::new(cpu.most()));
         let (jobs, notices) = (Board::new(config.jobs), Notices::new(&config.notices));
         Ok(Self {
             store,
@@ -128,6 +131,7 @@ impl Service {
             told: TellingCache::default(),
             notices,
             evidence_places,
+            evidence_queue,
         })
     }
 

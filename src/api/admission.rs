@@ -23,7 +23,9 @@ const SMALL_ANSWER: u64 = 64 * 1024;
 /// Places for requests, and memory for what they bring and take.
 #[derive(Clone)]
 pub struct Admission {
-    places: Arc<Semaphore>,
+    /// Reads have places of their own: those who compute do not keep out those who look.
+    reads: Arc<Semaphore>,
+    others: Arc<Semaphore>,
     bodies: Budget,
     answers: Budget,
     service: Service,
@@ -46,9 +48,9 @@ pub struct Held {
 impl Admission {
     /// As configured.
     pub fn new(config: &HttpConfig, service: Service) -> Self {
-        let places = Arc::new(Semaphore::new(config.max_in_flight.min(Semaphore::MAX_PERMITS)));
+        let places = || Arc::new(Semaphore::new(config.max_in_flight.min(Semaphore::MAX_PERMITS)));
         let (bodies, answers) = (Budget::of(config.bodies_bytes), Budget::of(config.answers_bytes));
-        Self { places, bodies, answers, service }
+        Self { reads: places(), others: places(), bodies, answers, service }
     }
 
     /// The refusal of what there is no room for.
@@ -59,10 +61,11 @@ impl Admission {
 
 /// Turns a request away at once when all places are taken.
 pub async fn admit(State(admission): State<Admission>, mut request: Request, next: Next) -> Response {
-    let Ok(_place) = admission.places.try_acquire() else { return admission.full().into_response() };
+    let repeatable = request.method().is_safe();
+    let places = if repeatable { &admission.reads } else { &admission.others };
+    let Ok(_place) = places.try_acquire() else { return admission.full().into_response() };
     let held = Held { taken: Arc::default(), admission: admission.clone() };
     request.extensions_mut().insert(held.clone());
-    let repeatable = request.method().is_safe();
     let response = next.run(request).await;
     drop(held);
     let size = response.body().size_hint().exact().unwrap_or_default();

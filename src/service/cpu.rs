@@ -134,6 +134,11 @@ impl CpuPool {
         self.size
     }
 
+    /// Computations at work and waiting.
+    pub fn most(&self) -> usize {
+        self.most
+    }
+
     /// The time one request may wait and compute.
     pub fn budget(&self) -> Duration {
         self.budget

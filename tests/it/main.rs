@@ -17,6 +17,7 @@ mod fits;
 mod forecasts;
 mod gauges;
 mod harness;
+mod hostile_clients;
 mod jobs;
 mod limits;
 mod limits_kept;
