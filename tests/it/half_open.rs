@@ -53,7 +53,9 @@ fn a_client_whose_machine_is_gone_is_let_go_while_it_still_thinks_itself_connect
     .map(|(name, value)| (name, value.to_owned()));
     let mut inside = Command::new("unshare");
     inside.args(namespace).args(["timeout", "60", "bash", "-c", SCRIPT]).current_dir(folder.path()).envs(variables);
-    command.get_envs().filter(|(_, value)| value.is_none()).for_each(|(name, _)| drop(inside.env_remove(name)));
+    for (name, _) in command.get_envs().filter(|(_, value)| value.is_none()) {
+        inside.env_remove(name);
+    }
     let output = inside.output().unwrap();
     let told = String::from_utf8_lossy(&output.stdout);
     let lines: Vec<&str> = told.lines().collect();
