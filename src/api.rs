@@ -3,6 +3,7 @@
 //! A handler takes apart a request, makes one service call and puts together a response; everything that can go wrong
 //! is an [`ApiError`], which the outermost layer answers as a problem document.
 
+mod admission;
 mod backtests;
 mod decode;
 mod docs;
@@ -27,20 +28,21 @@ mod web;
 mod webhooks;
 
 use std::sync::Arc;
+use std::time::Instant;
 
-use axum::extract::{Request, State};
 use axum::http::{HeaderMap, Method, Uri};
-use axum::middleware::{self, Next};
+use axum::middleware;
 use axum::response::{IntoResponse, Response};
 use axum::{Extension, Router};
 use metrics_exporter_prometheus::PrometheusHandle;
-use tokio::sync::Semaphore;
 use tower_http::catch_panic::CatchPanicLayer;
 use utoipa::openapi::OpenApi;
 use utoipa_axum::router::OpenApiRouter;
 
 use crate::config::{Config, HttpConfig, JobsConfig, LimitsConfig};
 use crate::service::{GaugeCaps, Service};
+use admission::Admission;
+use observe::Observation;
 use polled::Polled;
 use streams::Streams;
 
@@ -111,6 +113,18 @@ impl Front {
         self.polled.at_once(method, uri, headers)
     }
 
+    /// The refusal of a request that comes by a connection more than there may be, unless whoever runs the service asks how it is:
+    /// what stands outside of /v1 is always answered.
+    pub fn refused(&self, method: &Method, uri: &Uri, headers: &HeaderMap) -> Option<Response> {
+        if !uri.path().starts_with("/v1/") {
+            return None;
+        }
+        let started = Instant::now();
+        let mut refusal = ApiError::TooManyConnections.into_response();
+        Observation::begin(started, method, "unmatched", uri.path(), headers).finish(&mut refusal);
+        Some(refusal)
+    }
+
     /// The routes, for what is not answered at once.
     pub fn router(&self) -> Router {
         self.router.clone()
@@ -119,9 +133,9 @@ impl Front {
 
 /// Every route with every layer around it.
 fn router(state: AppState) -> Router {
-    let places = Arc::new(Semaphore::new(state.http.max_in_flight.min(Semaphore::MAX_PERMITS)));
+    let admission = Admission::new(&state.http, state.service.clone());
     let (work, _) = work_routes().split_for_parts();
-    let work = work.layer(middleware::from_fn_with_state(places, admit));
+    let work = work.layer(middleware::from_fn_with_state(admission, admission::admit));
     let (around, _) = around_routes().split_for_parts();
     let document = docs::DocumentText(openapi_text().into());
     observed(work.merge(around).merge(docs::pages()).merge(web::routes()).layer(Extension(document))).with_state(state)
@@ -157,14 +171,6 @@ fn work_routes() -> OpenApiRouter<AppState> {
 /// Routes that must answer however busy the others are.
 fn around_routes() -> OpenApiRouter<AppState> {
     OpenApiRouter::new().merge(probes::routes()).merge(docs::routes())
-}
-
-/// Turns a request away at once when all places are taken.
-async fn admit(State(places): State<Arc<Semaphore>>, request: Request, next: Next) -> Response {
-    match places.try_acquire() {
-        Ok(_place) => next.run(request).await,
-        Err(_) => ApiError::Full.into_response(),
-    }
 }
 
 #[cfg(test)]

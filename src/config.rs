@@ -22,6 +22,8 @@ const DEFAULTS: &str = include_str!("../config/default.toml");
 const MOST_THREADS: u64 = 1024;
 /// Longest time, seconds: what runs for longer than a day is no request.
 const DAY_SECONDS: u64 = 86_400;
+/// Most connections: a number below what systems give a process of descriptors at most.
+const MOST_CONNECTIONS: u64 = 1_000_000;
 const YEAR_HOURS: u64 = 8_766;
 /// Most of anything counted or measured in bytes.
 const MOST_THINGS: u64 = 1 << 40;
@@ -74,8 +76,16 @@ pub struct DatabaseConfig {
 #[derive(Debug, Clone, PartialEq, Deserialize)]
 #[serde(deny_unknown_fields)]
 pub struct HttpConfig {
+    /// Connections open at the same time.
+    pub max_connections: usize,
     /// Largest request body, bytes.
     pub body_limit_bytes: usize,
+    /// Memory for the bodies of all requests in work, bytes.
+    pub bodies_bytes: usize,
+    /// Memory for all answers on their way, bytes.
+    pub answers_bytes: usize,
+    /// Longest time in which a client takes nothing of an answer worth speaking of, seconds.
+    pub answer_pause_seconds: u64,
     /// Longest time to send a request's head, seconds.
     pub head_timeout_seconds: u64,
     /// Longest time to send a body, seconds.
@@ -101,6 +111,11 @@ impl HttpConfig {
     /// Longest time to send a body.
     pub fn body_timeout(&self) -> Duration {
         Duration::from_secs(self.body_timeout_seconds)
+    }
+
+    /// Longest time in which a client takes nothing of an answer worth speaking of.
+    pub fn answer_pause(&self) -> Duration {
+        Duration::from_secs(self.answer_pause_seconds)
     }
 
     /// Time between two signs of life on a stream of events.
@@ -292,7 +307,12 @@ impl Config {
         let ranges = [
             ("database.readers", u64::from(database.readers), 1, MOST_THREADS),
             ("database.busy_timeout_ms", database.busy_timeout_ms, 0, DAY_SECONDS * 1000),
+            ("http.max_connections", http.max_connections as u64, 1, MOST_CONNECTIONS),
             ("http.body_limit_bytes", http.body_limit_bytes as u64, 1, MOST_THINGS),
+            // A body as large as may be must fit into it, with the room in which it grows.
+            ("http.bodies_bytes", http.bodies_bytes as u64, 2 * http.body_limit_bytes as u64, MOST_THINGS),
+            ("http.answers_bytes", http.answers_bytes as u64, 1, MOST_THINGS),
+            ("http.answer_pause_seconds", http.answer_pause_seconds, 1, DAY_SECONDS),
             ("http.head_timeout_seconds", http.head_timeout_seconds, 1, DAY_SECONDS),
             ("http.body_timeout_seconds", http.body_timeout_seconds, 1, DAY_SECONDS),
             ("http.max_in_flight", http.max_in_flight as u64, 1, MOST_THINGS),

@@ -3,6 +3,7 @@
 mod accounts;
 mod accuracy;
 mod answers;
+mod background;
 mod backtests;
 mod compute;
 mod cpu;
@@ -34,6 +35,7 @@ use crate::model::MAX_SNAPSHOTS;
 use crate::store::{Caps, Store, StoreError};
 use gauges::Briefs;
 use jobs::Board;
+use news::TellingCache;
 use notices::Notices;
 
 pub use crate::evaluate::OriginRequest;
@@ -60,6 +62,7 @@ pub use answers::{
     SustainableAnswer, TailAnswer, TailCountAnswer, TailDifferenceAnswer, TailPointAnswer, TransitionsAnswer,
     WarningAnswer, WatchAnswer, WatchedClassAnswer, WatchedDegreeAnswer, WatchedNodeAnswer,
 };
+pub use background::{Unfinished, converted};
 pub use backtests::{
     BacktestRequest, BacktestRun, CoverageRow, DEFAULT_AHEAD, ErrorsAnswer, MOST_AHEAD, MemberErrors, PooledErrors,
     ScoreAnswer,
@@ -96,9 +99,13 @@ pub struct Service {
     jobs: Board,
     /// What the gauges tell of forecasts, read once each.
     briefs: Briefs,
+    /// What followers of networks are told of forecasts, read once for all of them.
+    told: TellingCache,
     notices: Notices,
     /// Stored evidence may be large: no more runs hold some at once than can be computed at once.
     evidence_places: Arc<Semaphore>,
+    /// Those that wait for it: as many as computations at work and waiting.
+    evidence_queue: Arc<Semaphore>,
 }
 
 impl Service {
@@ -114,8 +121,19 @@ impl Service {
         let caps = Caps { dates: MAX_SNAPSHOTS as u64, rows: config.limits.network_rows as u64 };
         let cpu = CpuPool::new(&config.compute);
         let evidence_places = Arc::new(Semaphore::new(cpu.workers()));
+        let evidence_queue = Arc::new(Semaphore::new(cpu.most()));
         let (jobs, notices) = (Board::new(config.jobs), Notices::new(&config.notices));
-        Ok(Self { store, cpu, caps, jobs, briefs: Briefs::default(), notices, evidence_places })
+        Ok(Self {
+            store,
+            cpu,
+            caps,
+            jobs,
+            briefs: Briefs::default(),
+            told: TellingCache::default(),
+            notices,
+            evidence_places,
+            evidence_queue,
+        })
     }
 
     /// Brings the database's tables up to date and closes it.
@@ -148,6 +166,11 @@ impl Service {
     /// Whether the database answers and its tables are current.
     async fn check_tables(&self) -> Result<(), ServiceError> {
         if self.store.is_current().await? { Ok(()) } else { Err(ServiceError::TablesOutdated) }
+    }
+
+    /// About how long it takes until the computations that wait are done.
+    pub fn backlog(&self) -> Duration {
+        self.cpu.backlog()
     }
 
     /// Tells running computations and jobs to stop at their next step.

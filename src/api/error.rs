@@ -81,8 +81,13 @@ pub enum ApiError {
         /// Where the answer is kept, when the request made it.
         kept: Option<String>,
     },
-    /// As many requests as configured are being served.
-    Full,
+    /// As many requests as configured are being served, or their bodies and answers take all the memory there is for them.
+    Full {
+        /// About how long it takes until what waits is done.
+        wait: Duration,
+    },
+    /// As many connections as configured are open, and none of them rests.
+    TooManyConnections,
     /// As many streams of events as configured are open.
     TooManyStreams,
     /// A use case failed.
@@ -185,8 +190,14 @@ impl ApiError {
                 Problem::new(S::NOT_ACCEPTABLE, "not_acceptable", detail)
             }
             Self::NoChart { why, kept } => no_chart(&why, kept),
-            Self::Full => {
-                let detail = "As many requests as this service takes at once are being served; try again shortly.";
+            Self::Full { wait } => {
+                let detail = "As many requests as this service takes at once are being served, or as much memory as it has for bodies \
+                              and answers is taken; try again when Retry-After says.";
+                Problem::new(S::SERVICE_UNAVAILABLE, "overloaded", detail).retry_after(wait)
+            }
+            Self::TooManyConnections => {
+                let detail = "As many connections as this service keeps are open and at work; close some, use them for several \
+                              requests each, or raise http.max_connections.";
                 Problem::new(S::SERVICE_UNAVAILABLE, "overloaded", detail).retry_after(BUSY_RETRY)
             }
             Self::TooManyStreams => {
@@ -241,9 +252,9 @@ fn service_problem(error: ServiceError) -> Problem {
             Problem::new(S::NOT_FOUND, "no_forecast", format!("The network has no forecast yet: {}.", readable(&why)))
         }
         error @ (ServiceError::NoticesOff | ServiceError::NotListed) => notice_refused(&error),
-        ServiceError::Busy => {
-            let detail = "Every worker is taken and the queue is full; try again shortly.";
-            Problem::new(S::SERVICE_UNAVAILABLE, "overloaded", detail).retry_after(BUSY_RETRY)
+        ServiceError::Busy { wait } => {
+            let detail = "Every worker is taken and the queue is full; try again when Retry-After says.";
+            Problem::new(S::SERVICE_UNAVAILABLE, "overloaded", detail).retry_after(wait)
         }
         ServiceError::TooSlow { budget } => {
             let detail = format!(

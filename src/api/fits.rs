@@ -76,7 +76,7 @@ async fn create_fit(
     let limits = state.limits;
     let inputs = body.read(move |raw, faults| read_fit(raw, &limits, faults)).await?;
     let run = state.service.create(inputs, None, claim).await?;
-    runs::created(PATH, run, form)
+    runs::created(PATH, run, form).await
 }
 
 /// Read a fit
@@ -119,7 +119,7 @@ async fn get_fit(
     headers: HeaderMap,
 ) -> Result<Response, ApiError> {
     let run = state.service.run(RunKind::Fit, run_id(&id)?).await?;
-    runs::found(run, form, &headers)
+    runs::found(run, form, &headers).await
 }
 
 /// List fits

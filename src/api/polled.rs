@@ -203,11 +203,11 @@ impl PolledCopy {
     ///
     /// # Errors
     /// When the form cannot be made of the kept document.
-    pub fn answer(&self, form: ForecastForm, asked: &HeaderMap) -> Result<Response, ApiError> {
+    pub async fn answer(&self, form: ForecastForm, asked: &HeaderMap) -> Result<Response, ApiError> {
         if form.format() == ResultFormat::Json {
             return Ok(self.json(asked));
         }
-        let mut response = runs::found((*self.run).clone(), form, asked)?;
+        let mut response = runs::found((*self.run).clone(), form, asked).await?;
         response.headers_mut().extend(self.beside.clone());
         Ok(response)
     }

@@ -9,7 +9,8 @@ use tokio::sync::watch;
 use tokio::task::JoinHandle;
 use tokio::time::timeout;
 
-use super::{Stop, connections};
+use super::Stop;
+use super::connections::{self, Terms, room_for};
 use crate::api::{AppState, Front};
 use crate::config::Config;
 use crate::service::Service;
@@ -71,12 +72,14 @@ pub async fn start(config: Config) -> Result<Running, Stop> {
         tracing::warn!(%error, "jobs of the last process cannot be taken up yet; it is tried again");
     }
     let upkeep = tokio::spawn(telemetry::keep_metrics_small(metrics.clone()));
-    let (grace, head_timeout) = (config.http.shutdown_grace(), config.http.head_timeout());
+    let mut terms = Terms::from(&config.http);
+    terms.most = room_for(terms.most);
+    let grace = config.http.shutdown_grace();
     let front = Front::new(AppState::new(service.clone(), &config, metrics));
     let (stop, stopped) = watch::channel(false);
     let sender = tokio::spawn(service.clone().send_notices(stopped.clone()));
     let sharing = tokio::spawn(service.clone().share_jobs(resumed.is_ok(), stopped.clone()));
-    let server = tokio::spawn(connections::serve(listener, front, head_timeout, stopped));
+    let server = tokio::spawn(connections::serve(listener, front, terms, stopped));
     tracing::info!(%address, "serving");
     if !address.ip().is_loopback() {
         tracing::warn!("reachable from other machines, and there is no access control: put a gateway in front");

@@ -46,7 +46,10 @@ pub enum ServiceError {
     NotListed,
     /// Every worker is taken and the queue is full.
     #[error("every worker is taken and the queue is full")]
-    Busy,
+    Busy {
+        /// About how long it takes until what waits is done.
+        wait: Duration,
+    },
     /// The time budget ran out.
     #[error("the answer took longer than {} s", budget.as_secs())]
     TooSlow {
@@ -145,6 +148,7 @@ impl ServiceError {
             }
             OriginError::Fit(FitError::Growth(growth)) | OriginError::Forecast(ForecastError::Growth(growth)) => {
                 match growth {
+                    GrowthError::Cancelled => Self::TooSlow { budget },
                     GrowthError::NobodyStarts
                     | GrowthError::TooFast { .. }
                     | GrowthError::TooLarge { .. }

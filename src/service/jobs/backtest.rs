@@ -5,7 +5,6 @@ use std::sync::Arc;
 use std::time::Duration;
 
 use jiff::Timestamp;
-use tokio::task::spawn_blocking;
 use uuid::Uuid;
 
 use super::board::{Stop, Turn};
@@ -15,6 +14,7 @@ use crate::evaluate::{OriginError, RecordPlan, record};
 use crate::fit::{FitError, FitRequest};
 use crate::forecast::ForecastError;
 use crate::model::Evidence;
+use crate::service::background::in_background;
 use crate::service::backtests::{document, record_from_json, record_to_json, too_few};
 use crate::service::evidence::{assemble, off_runtime};
 use crate::service::{BacktestRequest, DEFAULT_SEED, NetworkName, Service, ServiceError, in_own_task, sha256_hex};
@@ -128,7 +128,7 @@ impl Service {
                 continue;
             }
             let (shared, progress) = (shared.clone(), turn.progress());
-            let made = spawn_blocking(move || {
+            let made = in_background(move || {
                 let (evidence, plan) = &*shared;
                 record(evidence, origin, plan, &|| progress.stop().is_some())
             });
@@ -141,11 +141,12 @@ impl Service {
         let records = self.store.list_backtest_records(job.id, &digest).await?;
         let (name, id, created_at) = (job.network.clone(), job.id, Timestamp::now());
         let origins = records.len() as u64;
-        let document = off_runtime(move || {
+        // It may take minutes, so it takes no place from short conversions.
+        let document = in_background(move || {
             let records = records.iter().map(|text| record_from_json(text)).collect::<Result<Vec<_>, _>>()?;
             document(id, &name, created_at, &request, &shared.0, &records)
         });
-        let document = document.await??;
+        let document = document.await.map_err(|error| stopped_short(&error))??;
         progress.note(RECORDED)?;
         let outcome = JobOutcome::Backtest(BacktestResult { backtest: id, origins }).to_json()?;
         let made = NewBacktest {

@@ -6,6 +6,7 @@ use super::board::Turn;
 use super::link_list::{LinkListTask, Stopped, Told, count};
 use super::outcome::{JobOutcome, JobProblem};
 use super::{MOST_STARTS, persistently, refused};
+use crate::service::background::in_background;
 use crate::service::{NetworkName, Service, ServiceError, in_own_task};
 use crate::store::{JobKind, StoredJob, Upload, WriteError};
 
@@ -68,7 +69,7 @@ impl Service {
         let list = self.store.spooled(job.id).await.map_err(|error| Stopped::broken(error.to_string()))?;
         let (task, progress) = (job.task.clone(), turn.progress());
         let most_nodes = self.jobs.config().link_list_nodes;
-        let counting = tokio::task::spawn_blocking(move || count(list.path(), &task, most_nodes, &progress));
+        let counting = in_background(move || count(list.path(), &task, most_nodes, &progress));
         match counting.await {
             Ok(told) => told,
             Err(error) => Err(Stopped::broken(format!("counting stopped short: {error}"))),

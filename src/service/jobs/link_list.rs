@@ -141,7 +141,9 @@ fn failure(error: IngestError) -> Stopped {
         IngestError::Census { error: CensusError::Unnumbered(_) | CensusError::Inconsistent(_), .. } => {
             return Stopped::broken(error.to_string());
         }
-        IngestError::Gzip { .. } => JobProblem::invalid(format!("{error}."), Vec::new()),
+        IngestError::Gzip { .. } | IngestError::Expanding { .. } => {
+            JobProblem::invalid(format!("{error}."), Vec::new())
+        }
         IngestError::Header { line, reason } => JobProblem::invalid(WRONG, vec![JobFault::in_line(line, reason)]),
         IngestError::Faulty { line, reason, .. } => {
             let detail = "The link list has a faulty line; errors says which. Mend it, or send the list with faults=skip to \
