@@ -27,6 +27,7 @@ pub struct Running {
     server: JoinHandle<()>,
     upkeep: JoinHandle<()>,
     sender: JoinHandle<()>,
+    keeper: JoinHandle<()>,
     grace: Duration,
 }
 
@@ -38,7 +39,7 @@ impl Running {
 
     /// Stops listening, finishes what was accepted, within the configured grace, and closes the database.
     pub async fn stop(self) {
-        let Self { service, stop, server, upkeep, sender, grace, .. } = self;
+        let Self { service, stop, server, upkeep, sender, keeper, grace, .. } = self;
         let aborted = sender.abort_handle();
         // Nobody listening means the server is gone already.
         let _ = stop.send(true);
@@ -48,6 +49,8 @@ impl Running {
         }
         aborted.abort();
         upkeep.abort();
+        // A transaction that it is in the middle of is undone.
+        keeper.abort();
         service.cancel_all();
         service.close().await;
         tracing::info!("stopped");
@@ -72,12 +75,13 @@ pub async fn start(config: Config) -> Result<Running, Stop> {
     let front = Front::new(AppState::new(service.clone(), &config, metrics));
     let (stop, stopped) = watch::channel(false);
     let sender = tokio::spawn(service.clone().send_notices(stopped.clone()));
+    let keeper = tokio::spawn(service.clone().keep_up(stopped.clone()));
     let server = tokio::spawn(connections::serve(listener, front, head_timeout, stopped));
     tracing::info!(%address, "serving");
     if !address.ip().is_loopback() {
         tracing::warn!("reachable from other machines, and there is no access control: put a gateway in front");
     }
-    Ok(Running { address, service, stop, server, upkeep, sender, grace })
+    Ok(Running { address, service, stop, server, upkeep, sender, keeper, grace })
 }
 
 /// Serves until SIGINT or SIGTERM.

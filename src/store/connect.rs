@@ -11,6 +11,7 @@ use tokio::sync::watch;
 use tokio::time::timeout;
 
 use super::file::DatabaseFile;
+use super::health::Health;
 use super::{Store, StoreError};
 use crate::config::DatabaseConfig;
 
@@ -41,10 +42,11 @@ impl Store {
             return Err(address_fault(format!("the folder {} does not exist; make it first", folder.display())));
         }
         let writing = options.clone().create_if_missing(true).journal_mode(SqliteJournalMode::Wal);
-        let write = pool(1).connect_with(writing).await.map_err(|error| address_fault(error.to_string()))?;
+        let write = pool(1).connect_with(writing).await.map_err(|error| opening_fault(error, address_fault))?;
         // Opened after the writer, which creates the file and its write-ahead log.
         let read = pool(config.readers).connect_with(options.create_if_missing(false).read_only(true)).await?;
-        Ok(Self { write, read, file: DatabaseFile::at(&path)?, commits: Arc::new(watch::Sender::new(0)) })
+        let (file, health) = (DatabaseFile::at(&path)?, Health::default());
+        Ok(Self { write, read, file, health, commits: Arc::new(watch::Sender::new(0)) })
     }
 
     /// Brings the tables up to date.
@@ -94,9 +96,21 @@ impl Store {
     pub async fn try_write(&self) -> Result<(), StoreError> {
         // The writer is at work: proof enough.
         let Some(mut writer) = self.write.try_acquire() else { return Ok(()) };
-        let trial = async { writer.begin_with("BEGIN IMMEDIATE").await?.rollback().await };
+        let trial = async {
+            let mut transaction = writer.begin_with("BEGIN IMMEDIATE").await?;
+            if !self.health.needs_proof() {
+                return Ok(transaction.rollback().await?);
+            }
+            // A full disk gives the lock and refuses the write: this one changes nothing, and is on disk when it succeeds.
+            sqlx::query("PRAGMA user_version = 0").execute(&mut *transaction).await?;
+            transaction.commit().await?;
+            self.check_room()
+        };
         match timeout(TRIAL_TIMEOUT, trial).await {
-            Ok(outcome) => Ok(outcome?),
+            Ok(outcome) => {
+                self.health.note_write(outcome.as_ref().map_err(StoreError::fault).copied());
+                outcome
+            }
             Err(_) => Err(StoreError::Busy(sqlx::Error::PoolTimedOut)),
         }
     }
@@ -105,6 +119,26 @@ impl Store {
     pub async fn close(&self) {
         self.read.close().await;
         self.write.close().await;
+    }
+}
+
+/// The migrations of this version: their numbers and checksums.
+pub(super) fn known_migrations() -> impl Iterator<Item = (i64, &'static [u8])> {
+    MIGRATOR.iter().map(|migration| (migration.version, migration.checksum.as_ref()))
+}
+
+/// Why the file could not be opened, with what to do.
+fn opening_fault(error: sqlx::Error, address_fault: impl Fn(String) -> StoreError) -> StoreError {
+    match StoreError::from(error) {
+        damaged @ StoreError::Damaged(_) => damaged,
+        StoreError::Busy(error) => {
+            address_fault(format!("another process holds its lock ({error}); stop that process, then start again"))
+        }
+        StoreError::ReadOnly(error) => {
+            let remedy = "give this user leave to write the file and its folder, and mount the disk for writing";
+            address_fault(format!("it can only be read ({error}); {remedy}"))
+        }
+        other => address_fault(other.to_string()),
     }
 }
 

@@ -89,7 +89,7 @@ impl Store {
         swept.await.map_err(io::Error::other).and_then(|outcome| outcome).map_err(unusable)
     }
 
-    fn spool_folder(&self) -> PathBuf {
+    pub(super) fn spool_folder(&self) -> PathBuf {
         let mut name = self.file.path().as_os_str().to_owned();
         name.push("-jobs");
         name.into()
@@ -118,5 +118,5 @@ fn file_of(folder: &Path, job: Uuid) -> PathBuf {
 }
 
 fn unusable(error: io::Error) -> StoreError {
-    StoreError::Unusable(sqlx::Error::Io(error))
+    sqlx::Error::Io(error).into()
 }

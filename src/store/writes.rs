@@ -106,6 +106,7 @@ impl Store {
     /// Begins a write.
     pub(super) async fn begin(&self) -> Result<Transaction<'static, Sqlite>, StoreError> {
         self.file.check()?;
+        self.health.check()?;
         Ok(self.write.begin_with("BEGIN IMMEDIATE").await?)
     }
 
@@ -114,6 +115,8 @@ impl Store {
         let committed = transaction.commit().await;
         // Whatever came of it: who holds a copy of what is stored looks again.
         self.commits.send_modify(|count| *count += 1);
+        let committed = committed.map_err(StoreError::from);
+        self.health.note_write(committed.as_ref().map_err(StoreError::fault).copied());
         committed?;
         // The file may have gone in between.
         self.file.check()
