@@ -142,6 +142,7 @@ pub async fn restore(config: &DatabaseConfig, backup: &Path) -> Result<RestoreRe
         BackupError::NotSound(_, found) => BackupError::NotSound(backup.to_owned(), found),
         other => other,
     })?;
+    take_owner(&database, &part)?;
     sync(&part)?;
     // Held until the new file stands in its place: a service that is started meanwhile waits for it.
     let (lock, was_damaged) = lock(&options).await?;
@@ -152,11 +153,16 @@ pub async fn restore(config: &DatabaseConfig, backup: &Path) -> Result<RestoreRe
         aside = Some(kept);
     }
     // A log that could not be folded into its file belongs to that file, and would be read into the new one.
-    for suffix in ["-wal", "-shm"] {
-        let left = beside(&database, suffix);
-        if let (true, Some(kept)) = (left.exists(), &aside) {
-            std::fs::rename(&left, beside(kept, suffix)).map_err(|error| BackupError::File(left, error))?;
+    let log = beside(&database, "-wal");
+    if let (true, Some(kept)) = (log.exists(), &aside) {
+        std::fs::rename(&log, beside(kept, "-wal")).map_err(|error| BackupError::File(log, error))?;
+    }
+    // What tells processes where in the log they are; made anew from it.
+    match std::fs::remove_file(beside(&database, "-shm")) {
+        Err(error) if error.kind() != io::ErrorKind::NotFound => {
+            return Err(BackupError::File(beside(&database, "-shm"), error));
         }
+        _ => {}
     }
     part.persist(&database).map_err(|error| BackupError::File(database.clone(), error.error))?;
     sync(folder_of(&database))?;
@@ -164,6 +170,18 @@ pub async fn restore(config: &DatabaseConfig, backup: &Path) -> Result<RestoreRe
         let _ = lock.close().await;
     }
     Ok(RestoreReport { holds, aside, was_damaged })
+}
+
+/// Gives a file the owner and the permissions of the one it is to replace: the service may run as another user than this command.
+fn take_owner(replaced: &Path, file: &Path) -> Result<(), BackupError> {
+    let Ok(found) = std::fs::metadata(replaced) else { return Ok(()) };
+    let given = std::fs::set_permissions(file, found.permissions());
+    #[cfg(unix)]
+    let given = given.and_then(|()| {
+        use std::os::unix::fs::{MetadataExt, chown};
+        chown(file, Some(found.uid()), Some(found.gid()))
+    });
+    given.map_err(|error| BackupError::File(replaced.to_owned(), error))
 }
 
 /// Where the database lies; nothing is made there.

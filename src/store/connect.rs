@@ -134,9 +134,10 @@ fn opening_fault(error: sqlx::Error, address_fault: impl Fn(String) -> StoreErro
         StoreError::Busy(error) => {
             address_fault(format!("another process holds its lock ({error}); stop that process, then start again"))
         }
-        StoreError::ReadOnly(error) => {
-            let remedy = "give this user leave to write the file and its folder, and mount the disk for writing";
-            address_fault(format!("it can only be read ({error}); {remedy}"))
+        StoreError::ReadOnly(error) | StoreError::Unusable(error) => {
+            let remedy =
+                "give this user leave to read and write the file and its folder, and mount the disk for writing";
+            address_fault(format!("it cannot be opened for writing ({error}); {remedy}"))
         }
         other => address_fault(other.to_string()),
     }
@@ -149,4 +150,7 @@ fn pool(size: u32) -> SqlitePoolOptions {
         .acquire_timeout(ACQUIRE_TIMEOUT)
         .idle_timeout(None)
         .max_lifetime(None)
+        // A write that fails at its end, on a full disk for one, leaves its transaction to the driver as begun and to SQLite as ended:
+        // such a connection would refuse every later one.
+        .before_acquire(|connection, _| Box::pin(async { Ok(!connection.is_in_transaction()) }))
 }

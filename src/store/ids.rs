@@ -18,9 +18,9 @@ static ORDER: Mutex<ContextV7> = Mutex::new(ContextV7::new());
 /// An id above every one that this process made or found stored: lists, cursors and streams of events go by the order of ids.
 pub fn next_id() -> Uuid {
     let now = SystemTime::now().duration_since(UNIX_EPOCH).unwrap_or_default();
-    let floor = FLOOR.load(Ordering::Relaxed);
-    let millis = u64::try_from(now.as_millis()).unwrap_or(floor);
-    let (seconds, nanos) = if millis > floor {
+    let millis = u64::try_from(now.as_millis()).unwrap_or_default();
+    let floor = FLOOR.fetch_max(millis, Ordering::Relaxed);
+    let (seconds, nanos) = if millis >= floor {
         (now.as_secs(), now.subsec_nanos())
     } else {
         (floor / 1000, (floor % 1000) as u32 * 1_000_000)

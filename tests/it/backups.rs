@@ -51,7 +51,8 @@ async fn all_that_was_acknowledged_before_a_backup_is_in_it() {
                     let response = client().post(&url).json(&body).send().await.unwrap();
                     assert_eq!(response.status().as_u16(), 201);
                     let location = response.headers()["location"].to_str().unwrap().to_owned();
-                    acknowledged.lock().unwrap().push((location, response.text().await.unwrap()));
+                    let text = response.text().await.unwrap();
+                    acknowledged.lock().unwrap().push((location, text));
                 }
             })
         })

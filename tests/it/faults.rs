@@ -104,6 +104,16 @@ fn spoil(path: &Path) {
     std::fs::write(path, bytes).unwrap();
 }
 
+/// Spoils the page that holds the beginning of a run's document.
+fn spoil_page_of(path: &Path, run: &str) {
+    const PAGE: usize = 4096;
+    let mut bytes = std::fs::read(path).unwrap();
+    let document = format!("{{\"id\":\"{run}\"");
+    let place = bytes.windows(document.len()).position(|window| window == document.as_bytes()).unwrap();
+    bytes[place / PAGE * PAGE..][..PAGE].fill(0xA5);
+    std::fs::write(path, bytes).unwrap();
+}
+
 /// Runs kept, and the service stopped in good order: all of it lies in the one file.
 async fn with_runs(folder: &Path, runs: usize) -> Vec<(String, String)> {
     let mut served = serve(folder);
@@ -221,7 +231,8 @@ async fn a_damaged_file_is_not_served_and_the_remedy_is_told() {
 async fn damage_found_later_stops_writes_and_leaves_sound_parts_readable() {
     let folder = tempfile::tempdir().unwrap();
     let kept = with_runs(folder.path(), 30).await;
-    spoil(&folder.path().join("tailcast.db"));
+    let spoilt = kept[10].0.rsplit('/').next().unwrap();
+    spoil_page_of(&folder.path().join("tailcast.db"), spoilt);
     // The start looks at nothing, and the rest is looked at while the service runs.
     let served = serve_with(folder.path(), &[("TAILCAST_DATABASE_CHECK_ON_START_MS", "0")]);
     let caller = Caller::of(&served);
@@ -239,7 +250,6 @@ async fn damage_found_later_stops_writes_and_leaves_sound_parts_readable() {
                 assert_eq!(&read.text().await.unwrap(), text);
                 sound += 1;
             }
-            // Bytes within a document are not checked by the file's format; a broken page is.
             _ => assert_eq!(code(read).await, is(503, "store_corrupt"), "{place}"),
         }
     }
