@@ -94,22 +94,32 @@ impl Store {
     /// # Errors
     /// When the file cannot be written, or another process holds the lock.
     pub async fn try_write(&self) -> Result<(), StoreError> {
-        // The writer is at work: proof enough.
-        let Some(mut writer) = self.write.try_acquire() else { return Ok(()) };
+        let writer = self.write.try_acquire();
+        // The writer is at work: proof enough where the last write did not fail.
+        if writer.is_none() && !self.health.has_failed() {
+            return Ok(());
+        }
         let trial = async {
+            let mut writer = match writer {
+                Some(writer) => writer,
+                None => self.write.acquire().await?,
+            };
             let mut transaction = writer.begin_with("BEGIN IMMEDIATE").await?;
             if !self.health.needs_proof() {
-                return Ok(transaction.rollback().await?);
+                return transaction.rollback().await.map_err(StoreError::from);
             }
             // A full disk gives the lock and refuses the write: this one changes nothing, and is on disk when it succeeds.
             sqlx::query("PRAGMA user_version = 0").execute(&mut *transaction).await?;
             transaction.commit().await?;
-            self.check_room()
+            self.check_room()?;
+            self.health.note_write(Ok(()));
+            Ok(())
         };
         match timeout(TRIAL_TIMEOUT, trial).await {
-            Ok(outcome) => {
-                self.health.note_write(outcome.as_ref().map_err(StoreError::fault).copied());
-                outcome
+            Ok(Ok(())) => Ok(()),
+            Ok(Err(error)) => {
+                self.health.note_write(Err(error.fault()));
+                Err(error)
             }
             Err(_) => Err(StoreError::Busy(sqlx::Error::PoolTimedOut)),
         }
@@ -152,5 +162,13 @@ fn pool(size: u32) -> SqlitePoolOptions {
         .max_lifetime(None)
         // A write that fails at its end, on a full disk for one, leaves its transaction to the driver as begun and to SQLite as ended:
         // such a connection would refuse every later one.
-        .before_acquire(|connection, _| Box::pin(async { Ok(!connection.is_in_transaction()) }))
+        .after_release(|connection, _| {
+            Box::pin(async {
+                if connection.is_in_transaction() {
+                    // Whatever undoing is under way ends first.
+                    connection.ping().await?;
+                }
+                Ok(!connection.is_in_transaction())
+            })
+        })
 }

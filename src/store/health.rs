@@ -80,6 +80,11 @@ impl Health {
         self.with(|known| known.written_at.is_none_or(|at| at.elapsed() > PROOF_LASTS))
     }
 
+    /// Whether the last write failed.
+    pub(super) fn has_failed(&self) -> bool {
+        self.with(|known| known.failed.is_some())
+    }
+
     /// Whether the last write found the disk full.
     pub(super) fn was_full(&self) -> bool {
         self.with(|known| known.failed == Some(StoreFault::Full))

@@ -89,7 +89,8 @@ async fn look(connection: &mut SqliteConnection, depth: Depth) -> Result<Vec<Str
         Depth::Full => "PRAGMA integrity_check(5)",
     };
     let told: Vec<String> = sqlx::query_scalar(text).fetch_all(&mut *connection).await?;
-    let faults: Vec<String> = told.into_iter().filter(|line| line != "ok").take(MOST_FAULTS).collect();
+    let faults: Vec<String> =
+        told.into_iter().filter(|line| line != "ok").map(|line| line.replace('\n', " ")).take(MOST_FAULTS).collect();
     if !faults.is_empty() {
         return Ok(faults);
     }
