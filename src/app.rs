@@ -1,5 +1,6 @@
 //! The program: its commands, and how the parts are put together for each.
 
+mod backup;
 mod check;
 mod connections;
 mod demo;
@@ -70,6 +71,19 @@ enum Command {
     Openapi,
     /// Bring the database's tables up to date
     Migrate,
+    /// Copy the database into FILE, also while the service runs; the copy is checked
+    Backup {
+        /// Where the copy goes
+        file: PathBuf,
+        /// Put it in the place of a file that is there already
+        #[arg(long)]
+        replace: bool,
+    },
+    /// Put a backup in the database's place, with the service stopped; what stood there is kept beside it
+    Restore {
+        /// The backup
+        file: PathBuf,
+    },
 }
 
 /// Form of an answer on the standard output.
@@ -134,6 +148,8 @@ fn dispatch(line: CommandLine) -> Result<(), Stop> {
         Command::Migrate => {
             runtime()?.block_on(Service::migrate(&config.database)).map_err(|error| Stop::failed("migration", error))
         }
+        Command::Backup { file, replace } => backup::make(&config.database, &file, replace),
+        Command::Restore { file } => backup::put_back(&config.database, &file),
         Command::Demo { once } => {
             // The demo's own output is what counts; requests are not logged into it.
             let quiet = LogConfig { filter: "warn".to_owned(), ..config.log.clone() };

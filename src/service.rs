@@ -21,6 +21,7 @@ mod numbers;
 mod plan;
 mod questions;
 mod runs;
+mod upkeep;
 
 use std::future::Future;
 use std::sync::Arc;
@@ -30,7 +31,7 @@ use tokio::sync::Semaphore;
 use tokio::time::timeout;
 use tracing::Instrument;
 
-use crate::config::{Config, DatabaseConfig};
+use crate::config::{Config, DatabaseConfig, RetentionConfig};
 use crate::model::MAX_SNAPSHOTS;
 use crate::store::{Caps, Store, StoreError};
 use gauges::Briefs;
@@ -42,10 +43,11 @@ pub use crate::evaluate::OriginRequest;
 pub use crate::fit::{FitRequest, Fixed, Model, ModelChoice, Rung};
 pub use crate::ingest::FaultPolicy;
 pub use crate::store::{
-    BacktestSummary, Clash, JobFilter, JobKind, JobState, KeyClaim, LatestForecast, LatestStamp, NetworkSummary,
-    NewNetwork, NoticeKind, QuestionKind, RefreshState, RefreshStatus, RunFilter, RunKind, RunSummary, SnapshotSummary,
-    StoredBacktest, StoredJob, StoredLinkEvents, StoredNetwork, StoredQuestion, StoredRun, StoredSnapshot,
-    StoredTransitions, TransitionsSummary, Upload,
+    BacktestSummary, BackupError, BackupReport, Clash, JobFilter, JobKind, JobState, KeyClaim, LatestForecast,
+    LatestStamp, NetworkSummary, NewNetwork, NoticeKind, QuestionKind, RefreshState, RefreshStatus, RestoreReport,
+    RunFilter, RunKind, RunSummary, SnapshotSummary, StoreFault, StoredBacktest, StoredJob, StoredLinkEvents,
+    StoredNetwork, StoredQuestion, StoredRun, StoredSnapshot, StoredTransitions, TransitionsSummary, Upload, back_up,
+    restore,
 };
 pub use crate::webhook::{AddressFault, Target};
 pub use accounts::{DateOutcome, IntervalOutcome, OutcomeAnswer, TailOutcome};
@@ -102,6 +104,9 @@ pub struct Service {
     /// What followers of networks are told of forecasts, read once for all of them.
     told: TellingCache,
     notices: Notices,
+    retention: RetentionConfig,
+    /// Whether the start looked at all of the database file.
+    checked_at_start: bool,
     /// Stored evidence may be large: no more runs hold some at once than can be computed at once.
     evidence_places: Arc<Semaphore>,
     /// Those that wait for it: as many as computations at work and waiting.
@@ -115,8 +120,14 @@ impl Service {
     /// When the database cannot be opened or migrated.
     pub async fn open(config: &Config) -> Result<Self, StoreError> {
         let store = Store::connect(&config.database).await?;
+        let checked_at_start = Self::check_at_start(&store, config.database.check_on_start()).await?;
         if config.database.migrate_on_start {
             store.migrate().await?;
+        }
+        match store.raise_ids().await {
+            // Nothing is stored yet.
+            Err(StoreError::NoTable(_)) => {}
+            raised => raised?,
         }
         let caps = Caps { dates: MAX_SNAPSHOTS as u64, rows: config.limits.network_rows as u64 };
         let cpu = CpuPool::new(&config.compute);
@@ -131,6 +142,8 @@ impl Service {
             briefs: Briefs::default(),
             told: TellingCache::default(),
             notices,
+            retention: config.retention,
+            checked_at_start,
             evidence_places,
             evidence_queue,
         })
@@ -154,6 +167,7 @@ impl Service {
     /// the database's fault, the service is not ready and nothing of the service is broken.
     pub async fn check_ready(&self) -> Result<(), ServiceError> {
         let ready = async {
+            self.store.check_sound()?;
             self.check_tables().await?;
             Ok(self.store.try_write().await?)
         };

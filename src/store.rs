@@ -7,10 +7,14 @@
 
 mod accounts;
 mod backtests;
+mod backup;
 mod columns;
 mod connect;
 mod derived;
 mod file;
+mod health;
+mod ids;
+mod integrity;
 mod jobs;
 mod latest;
 mod link_events;
@@ -20,17 +24,21 @@ mod notices;
 mod outbox;
 mod questions;
 mod refreshes;
+mod retention;
 mod runs;
+mod sizes;
 mod snapshots;
 mod spool;
 mod statement;
 mod transitions;
 mod writes;
 
+use std::io::ErrorKind;
 use std::path::PathBuf;
 use std::sync::Arc;
 
 use file::DatabaseFile;
+use health::Health;
 use sqlx::postgres::PgDatabaseError;
 use sqlx::{PgPool, SqlitePool};
 use tokio::sync::watch;
@@ -38,7 +46,11 @@ use uuid::Uuid;
 
 pub use accounts::{AccountKey, IssuedRun, NewAccount, StoredAccount};
 pub use backtests::{BacktestSummary, BacktestWrite, NewBacktest, StoredBacktest};
+pub use backup::{BackupError, BackupReport, RestoreReport, back_up, restore};
 pub use derived::DerivedEvidence;
+pub use health::StoreFault;
+pub use ids::next_id;
+pub use integrity::Checked;
 pub use jobs::{CalledOff, JobFilter, JobKind, JobStart, JobState, StoredJob};
 pub use latest::{LatestForecast, LatestLine, LatestStamp, LatestWithCadence};
 pub use link_events::StoredLinkEvents;
@@ -48,7 +60,9 @@ pub use notices::{Deliveries, NewNotice, NoticeKind, StoredNotice};
 pub use outbox::{DueNotice, PendingEvent, Signal};
 pub use questions::{QuestionKind, StoredQuestion};
 pub use refreshes::{Change, RefreshEnd, RefreshEnded, RefreshState, RefreshStatus};
+pub use retention::{RetentionKind, RetentionRules};
 pub use runs::{Inserted, KeyClaim, NewRun, RunFilter, RunKind, RunSummary, StoredOrigin, StoredRun};
+pub use sizes::Sizes;
 pub use snapshots::{SnapshotSummary, StoredSnapshot};
 pub use spool::{Spooled, Upload};
 pub use transitions::{EndTags, StoredTransitions, TransitionsSummary};
@@ -58,14 +72,18 @@ pub use writes::{Caps, Clash, WriteError};
 const SQLITE_BUSY: u32 = 5;
 const SQLITE_READONLY: u32 = 8;
 const SQLITE_IOERR: u32 = 10;
+const SQLITE_CORRUPT: u32 = 11;
 const SQLITE_FULL: u32 = 13;
 const SQLITE_CANTOPEN: u32 = 14;
+const SQLITE_NOTADB: u32 = 26;
 
 // SQLSTATEs: https://www.postgresql.org/docs/15/errcodes-appendix.html
 /// Serialisation failure, deadlock, lock not available, too many connections, a statement's time is over.
 const POSTGRES_BUSY: [&str; 5] = ["40001", "40P01", "55P03", "53300", "57014"];
-/// Connection lost, out of disk or memory, read-only, shut down or starting, a failing system, no such database, not allowed in.
-const POSTGRES_UNUSABLE: [&str; 8] = ["08", "53", "25006", "57P", "58", "3D000", "28", "25P03"];
+/// Connection lost, out of memory, shut down or starting, a failing system, no such database, not allowed in, idle for too long.
+const POSTGRES_UNUSABLE: [&str; 7] = ["08", "53", "57P", "58", "3D000", "28", "25P03"];
+const POSTGRES_FULL: &str = "53100";
+const POSTGRES_READ_ONLY: &str = "25006";
 const POSTGRES_NO_TABLE: &str = "42P01";
 
 /// The database.
@@ -74,6 +92,7 @@ pub struct Store {
     home: Home,
     /// Tells this process from others on the same database.
     process: Uuid,
+    health: Health,
     /// Writes of this process that have ended.
     commits: Arc<watch::Sender<u64>>,
 }
@@ -107,7 +126,19 @@ pub enum StoreError {
         /// Where it stood.
         path: PathBuf,
     },
-    /// The file can be neither read nor written as it stands: read-only, a full disk, a failing one.
+    /// The disk is full.
+    #[error("the disk that the database lies on is full: {0}")]
+    Full(#[source] sqlx::Error),
+    /// The file, or the file system it lies on, takes no writes.
+    #[error("the database can only be read: {0}")]
+    ReadOnly(#[source] sqlx::Error),
+    /// The file is damaged; what was found.
+    #[error(
+        "the database file is damaged ({0}); stop the service, keep the file aside, and put a backup in its place with \
+         `tailcast restore FILE`"
+    )]
+    Damaged(String),
+    /// The file can be neither read nor written as it stands: a failing disk, a lost mount.
     #[error("the database cannot be used: {0}")]
     Unusable(#[source] sqlx::Error),
     /// A table of this version is missing.
@@ -129,13 +160,20 @@ impl From<sqlx::Error> for StoreError {
         let sqlx::Error::Database(inner) = &error else {
             return match error {
                 sqlx::Error::PoolTimedOut => Self::Busy(error),
-                sqlx::Error::Io(_) | sqlx::Error::Tls(_) => Self::Unusable(error),
+                sqlx::Error::Io(ref io) => match io.kind() {
+                    ErrorKind::StorageFull | ErrorKind::QuotaExceeded | ErrorKind::FileTooLarge => Self::Full(error),
+                    ErrorKind::ReadOnlyFilesystem => Self::ReadOnly(error),
+                    _ => Self::Unusable(error),
+                },
+                sqlx::Error::Tls(_) => Self::Unusable(error),
                 _ => Self::Failed(error),
             };
         };
         if let Some(inner) = inner.try_downcast_ref::<PgDatabaseError>() {
             return match inner.code() {
                 code if POSTGRES_BUSY.contains(&code) => Self::Busy(error),
+                POSTGRES_FULL => Self::Full(error),
+                POSTGRES_READ_ONLY => Self::ReadOnly(error),
                 code if POSTGRES_UNUSABLE.iter().any(|class| code.starts_with(class)) => Self::Unusable(error),
                 POSTGRES_NO_TABLE => Self::NoTable(error),
                 _ => Self::Failed(error),
@@ -144,7 +182,10 @@ impl From<sqlx::Error> for StoreError {
         // Extended result codes carry the primary one in the low byte.
         match inner.code().and_then(|code| code.parse::<u32>().ok()).map(|code| code & 0xff) {
             Some(SQLITE_BUSY) => Self::Busy(error),
-            Some(SQLITE_READONLY | SQLITE_IOERR | SQLITE_FULL | SQLITE_CANTOPEN) => Self::Unusable(error),
+            Some(SQLITE_FULL) => Self::Full(error),
+            Some(SQLITE_READONLY) => Self::ReadOnly(error),
+            Some(SQLITE_CORRUPT | SQLITE_NOTADB) => Self::Damaged(error.to_string()),
+            Some(SQLITE_IOERR | SQLITE_CANTOPEN) => Self::Unusable(error),
             // The general code: the words alone tell a missing table from a mistake of ours.
             _ if inner.message().contains("no such table") => Self::NoTable(error),
             _ => Self::Failed(error),

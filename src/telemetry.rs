@@ -63,6 +63,13 @@ fn install() -> Result<PrometheusHandle, BuildError> {
         "tailcast_notices_total",
         "Attempts to send a notice's event, by outcome: delivered, failed, given_up"
     );
+    describe_gauge!("tailcast_database_bytes", Unit::Bytes, "The database file");
+    describe_gauge!("tailcast_database_log_bytes", Unit::Bytes, "The database's write-ahead log");
+    describe_gauge!("tailcast_database_free_bytes", Unit::Bytes, "Pages of the database file that hold nothing");
+    describe_gauge!("tailcast_database_rows", "Rows of the main tables");
+    describe_gauge!("tailcast_spool_bytes", Unit::Bytes, "Link lists that wait to be counted");
+    describe_gauge!("tailcast_disk_free_bytes", Unit::Bytes, "Free space on the database's disk");
+    describe_counter!("tailcast_retention_removed_total", "What retention removed, by kind");
     describe_gauge!("tailcast_build_info", "1, with the version as a label");
     gauge!("tailcast_build_info", "version" => env!("CARGO_PKG_VERSION")).set(1.0);
     Ok(handle)

@@ -12,7 +12,7 @@ use axum::response::{IntoResponse, Response};
 use super::decode::{At, Fault, Faults, Place};
 use super::problem::Problem;
 use crate::report::{ChartError, ReportError, readable};
-use crate::service::{JobProblem, ServiceError, Thing};
+use crate::service::{JobProblem, ServiceError, StoreFault, Thing};
 
 /// After how long to try again when all places are taken.
 const BUSY_RETRY: Duration = Duration::from_secs(1);
@@ -291,16 +291,42 @@ fn service_problem(error: ServiceError) -> Problem {
                 .retry_after(BUSY_RETRY)
                 .because(error.to_string())
         }
-        error @ ServiceError::StoreUnavailable(_) => {
-            let detail = "The database cannot be used as it stands, so nothing can be kept; the log has the cause \
-                          under this request id. Try again when whoever runs this service has mended it.";
-            Problem::new(S::SERVICE_UNAVAILABLE, "store_unavailable", detail)
-                .retry_after(MENDING_RETRY)
-                .because(error.to_string())
-        }
+        ServiceError::StoreUnavailable(error) => store_problem(error.fault(), error.to_string()),
         error @ ServiceError::Store(_) => broken(error.to_string()),
         ServiceError::Broken(cause) => broken(cause),
     }
+}
+
+/// A database that is to be mended.
+fn store_problem(fault: StoreFault, cause: String) -> Problem {
+    let (code, detail) = match fault {
+        StoreFault::Full => (
+            "store_full",
+            "The disk that the database lies on is full, so nothing was kept; reading goes on. Try again when whoever runs this \
+             service has made room.",
+        ),
+        StoreFault::ReadOnly => (
+            "store_read_only",
+            "The database takes no writes as it stands, so nothing was kept; reading goes on. Try again when whoever runs this \
+             service has given leave to write its file.",
+        ),
+        StoreFault::Missing => (
+            "store_missing",
+            "The database file was removed or replaced, so nothing can be kept or read. Try again when whoever runs this service \
+             has put it back, or has started the service again on what stands there now.",
+        ),
+        StoreFault::Corrupt => (
+            "store_corrupt",
+            "The database file is damaged, so nothing is written to it; what can be read still is. Try again when whoever runs this \
+             service has put a backup in its place.",
+        ),
+        StoreFault::Busy | StoreFault::Unavailable => (
+            "store_unavailable",
+            "The database cannot be used as it stands, so nothing can be kept; the log has the cause under this request id. Try \
+             again when whoever runs this service has mended it.",
+        ),
+    };
+    Problem::new(StatusCode::SERVICE_UNAVAILABLE, code, detail).retry_after(MENDING_RETRY).because(cause)
 }
 
 /// A notice that would not be sent.

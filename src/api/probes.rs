@@ -26,7 +26,8 @@ async fn livez() -> Response {
 
 /// Can it serve requests?
 ///
-/// The database answers, its tables are those of this version, and it can be written.
+/// The database answers, its tables are those of this version, and it can be written. Otherwise `code` says what is wrong:
+/// `store_full`, `store_read_only`, `store_missing`, `store_corrupt`, `store_busy`, `store_unavailable` or `not_ready` (tables).
 #[utoipa::path(get, path = "/readyz", tag = "operation", responses(
     (status = 200, description = "It can", body = String, content_type = "text/plain"),
     (status = 503, description = "Not now: the database cannot be read or written, or its tables are not those of this version", body = Problem, content_type = "application/problem+json"),

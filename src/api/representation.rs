@@ -141,6 +141,8 @@ fn validators(validator: Validator<'_>, format: ResultFormat) -> Result<HeaderMa
     let mut headers = HeaderMap::new();
     headers.insert(header::ETAG, header_value(&entity_tag(validator.tag, format))?);
     if let Some(modified) = validator.modified {
+        // Not ahead of the clock (RFC 9110, section 8.8.2.1), which may have gone back.
+        let modified = modified.min(Timestamp::now());
         headers.insert(header::LAST_MODIFIED, header_value(&httpdate::fmt_http_date(modified.into()))?);
     }
     headers.insert(header::CACHE_CONTROL, HeaderValue::from_static("private, no-cache"));

@@ -29,6 +29,7 @@ pub struct Running {
     upkeep: JoinHandle<()>,
     sender: JoinHandle<()>,
     sharing: JoinHandle<()>,
+    keeper: JoinHandle<()>,
     grace: Duration,
 }
 
@@ -40,7 +41,7 @@ impl Running {
 
     /// Stops listening, finishes what was accepted, within the configured grace, and closes the database.
     pub async fn stop(self) {
-        let Self { service, stop, server, upkeep, sender, sharing, grace, .. } = self;
+        let Self { service, stop, server, upkeep, sender, sharing, keeper, grace, .. } = self;
         let aborted = sender.abort_handle();
         // Nobody listening means the server is gone already.
         let _ = stop.send(true);
@@ -51,6 +52,8 @@ impl Running {
         aborted.abort();
         upkeep.abort();
         sharing.abort();
+        // A transaction that it is in the middle of is undone.
+        keeper.abort();
         service.cancel_all();
         service.close().await;
         tracing::info!("stopped");
@@ -79,12 +82,13 @@ pub async fn start(config: Config) -> Result<Running, Stop> {
     let (stop, stopped) = watch::channel(false);
     let sender = tokio::spawn(service.clone().send_notices(stopped.clone()));
     let sharing = tokio::spawn(service.clone().share_jobs(resumed.is_ok(), stopped.clone()));
+    let keeper = tokio::spawn(service.clone().keep_up(stopped.clone()));
     let server = tokio::spawn(connections::serve(listener, front, terms, stopped));
     tracing::info!(%address, "serving");
     if !address.ip().is_loopback() {
         tracing::warn!("reachable from other machines, and there is no access control: put a gateway in front");
     }
-    Ok(Running { address, service, stop, server, upkeep, sender, sharing, grace })
+    Ok(Running { address, service, stop, server, upkeep, sender, sharing, keeper, grace })
 }
 
 /// Serves until SIGINT or SIGTERM.

@@ -115,7 +115,11 @@ impl From<StoreError> for ServiceError {
         match error {
             StoreError::Busy(_) => Self::StoreBusy(error),
             StoreError::NoTable(_) => Self::TablesOutdated,
-            StoreError::Gone { .. } | StoreError::Unusable(_) => Self::StoreUnavailable(error),
+            StoreError::Gone { .. }
+            | StoreError::Full(_)
+            | StoreError::ReadOnly(_)
+            | StoreError::Damaged(_)
+            | StoreError::Unusable(_) => Self::StoreUnavailable(error),
             _ => Self::Store(error),
         }
     }

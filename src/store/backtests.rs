@@ -6,6 +6,7 @@ use sqlx::FromRow;
 use uuid::Uuid;
 
 use super::columns::{signed, time, unsigned, uuid};
+use super::ids::next_id;
 use super::jobs::{JobKind, JobState, end, insert, live_job};
 use super::statement::{Connection, query, query_scalar};
 use super::writes::Scope;
@@ -299,7 +300,7 @@ pub(super) async fn redo(connection: &mut Connection, network: &str) -> Result<O
     if live_job(connection, network, JobKind::Backtest).await?.is_some() {
         return Ok(None);
     }
-    let id = Uuid::now_v7();
+    let id = next_id();
     insert(connection, id, JobKind::Backtest, network, &task).await?;
     // Once a correction: a redo that fails or is called off is not taken on at every change that follows.
     query("UPDATE backtests SET redo_due = FALSE WHERE id = $1").bind(newest).execute(connection).await?;

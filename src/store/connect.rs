@@ -8,13 +8,14 @@ use std::time::Duration;
 use sqlx::migrate::Migrator;
 use sqlx::pool::PoolOptions;
 use sqlx::postgres::PgConnectOptions;
-use sqlx::sqlite::{SqliteConnectOptions, SqliteJournalMode, SqlitePoolOptions, SqliteSynchronous};
+use sqlx::sqlite::{SqliteConnectOptions, SqliteConnection, SqliteJournalMode, SqlitePoolOptions, SqliteSynchronous};
 use sqlx::{Connection as _, Database};
 use tokio::sync::watch;
 use tokio::time::timeout;
 use uuid::Uuid;
 
 use super::file::DatabaseFile;
+use super::health::Health;
 use super::statement::{Connection, Held, in_time, query, query_scalar};
 use super::{Home, Store, StoreError};
 use crate::config::DatabaseConfig;
@@ -44,7 +45,7 @@ impl Store {
     /// When the address is neither SQLite's nor PostgreSQL's, or what it names cannot be opened.
     pub async fn connect(config: &DatabaseConfig) -> Result<Self, StoreError> {
         let home = if is_server(&config.url) { server(config)? } else { file(config).await? };
-        Ok(Self { home, process: Uuid::now_v7(), commits: Arc::new(watch::Sender::new(0)) })
+        Ok(Self { home, process: Uuid::now_v7(), health: Health::default(), commits: Arc::new(watch::Sender::new(0)) })
     }
 
     /// Brings the tables up to date; one process at a time.
@@ -98,17 +99,29 @@ impl Store {
     pub async fn try_write(&self) -> Result<(), StoreError> {
         let trial = async {
             match &self.home {
-                Home::Sqlite { write, .. } => {
-                    // The writer is at work: proof enough.
-                    let Some(mut writer) = write.try_acquire() else { return Ok(()) };
-                    writer.begin_with("BEGIN IMMEDIATE").await?.rollback().await?;
+                Home::Sqlite { write, file, .. } => {
+                    let mut writer = match write.try_acquire() {
+                        Some(writer) => writer,
+                        // The writer is at work: proof enough where the last write did not fail.
+                        None if !self.health.has_failed() => return Ok(()),
+                        None => write.acquire().await?,
+                    };
+                    let mut transaction = writer.begin_with("BEGIN IMMEDIATE").await?;
+                    if !self.health.needs_proof() {
+                        return transaction.rollback().await.map_err(StoreError::from);
+                    }
+                    // A full disk gives the lock and refuses the write: this one changes nothing, and is on disk when it succeeds.
+                    sqlx::query("PRAGMA user_version = 0").execute(&mut *transaction).await?;
+                    transaction.commit().await?;
+                    self.health.check_room(file)?;
+                    self.health.note_write(Ok(()));
                 }
                 Home::Postgres { .. } => {
                     let text =
                         "SELECT pg_is_in_recovery() OR CAST(current_setting('transaction_read_only') AS BOOLEAN)";
                     let read_only: bool = query_scalar(text).fetch_one(&mut self.reader().await?).await?;
                     if read_only {
-                        return Err(StoreError::Unusable(sqlx::Error::Io(
+                        return Err(StoreError::ReadOnly(sqlx::Error::Io(
                             std::io::ErrorKind::ReadOnlyFilesystem.into(),
                         )));
                     }
@@ -117,7 +130,11 @@ impl Store {
             Ok(())
         };
         match timeout(TRIAL_TIMEOUT, trial).await {
-            Ok(outcome) => outcome,
+            Ok(Ok(())) => Ok(()),
+            Ok(Err(error)) => {
+                self.health.note_write(Err(error.fault()));
+                Err(error)
+            }
             Err(_) => Err(StoreError::Busy(sqlx::Error::PoolTimedOut)),
         }
     }
@@ -164,6 +181,27 @@ impl Store {
     }
 }
 
+/// The migrations of this version: their numbers and checksums.
+pub(super) fn known_migrations() -> impl Iterator<Item = (i64, &'static [u8])> {
+    MIGRATOR.iter().map(|migration| (migration.version, migration.checksum.as_ref()))
+}
+
+/// Why the file could not be opened, with what to do.
+fn opening_fault(error: sqlx::Error, address_fault: impl Fn(String) -> StoreError) -> StoreError {
+    match StoreError::from(error) {
+        damaged @ StoreError::Damaged(_) => damaged,
+        StoreError::Busy(error) => {
+            address_fault(format!("another process holds its lock ({error}); stop that process, then start again"))
+        }
+        StoreError::ReadOnly(error) | StoreError::Unusable(error) => {
+            let remedy =
+                "give this user leave to read and write the file and its folder, and mount the disk for writing";
+            address_fault(format!("it cannot be opened for writing ({error}); {remedy}"))
+        }
+        other => address_fault(other.to_string()),
+    }
+}
+
 /// Whether an address is that of a PostgreSQL server.
 fn is_server(url: &str) -> bool {
     url.starts_with("postgres:") || url.starts_with("postgresql:")
@@ -196,8 +234,23 @@ async fn file(config: &DatabaseConfig) -> Result<Home, StoreError> {
     }
     let writing = options.clone().create_if_missing(true).journal_mode(SqliteJournalMode::Wal);
     // No idle or age limit: a local file's connections do not go stale.
-    let pool = |size| -> SqlitePoolOptions { pool_options(size).idle_timeout(None).max_lifetime(None) };
-    let write = pool(1).connect_with(writing).await.map_err(|error| address_fault(config, error.to_string()))?;
+    let pool = |size| -> SqlitePoolOptions {
+        // A write that fails at its end, on a full disk for one, leaves its transaction to the driver as begun and to SQLite as
+        // ended: such a connection would refuse every later one.
+        pool_options(size).idle_timeout(None).max_lifetime(None).after_release(
+            |connection: &mut SqliteConnection, _| {
+                Box::pin(async {
+                    if connection.is_in_transaction() {
+                        // Whatever undoing is under way ends first.
+                        connection.ping().await?;
+                    }
+                    Ok(!connection.is_in_transaction())
+                })
+            },
+        )
+    };
+    let write =
+        pool(1).connect_with(writing).await.map_err(|error| opening_fault(error, |why| address_fault(config, why)))?;
     // Opened after the writer, which creates the file and its write-ahead log.
     let read = pool(config.readers).connect_with(options.create_if_missing(false).read_only(true)).await?;
     Ok(Home::Sqlite { write, read, file: DatabaseFile::at(&path)? })

@@ -5,6 +5,7 @@ use sqlx::FromRow;
 use uuid::Uuid;
 
 use super::columns::{corrupt, time, unsigned, uuid};
+use super::ids::next_id;
 use super::statement::{Connection, query, query_scalar};
 use super::writes::{Caps, Scope, WriteError, network_exists, room_for_one};
 use super::{Store, StoreError};
@@ -224,7 +225,7 @@ async fn insert(connection: &mut Connection, network: &str, notice: &NewNotice) 
         "INSERT INTO notices (id, network, name, created_at, updated_at, tag, limit_risk, drift, url) \
          VALUES ($1, $2, $3, $4, $4, $5, $6, $7, $8)",
     )
-    .bind(Uuid::now_v7().to_string())
+    .bind(next_id().to_string())
     .bind(network)
     .bind(notice.name.as_str())
     .bind(notice.updated_at.as_microsecond())

@@ -7,6 +7,7 @@ use sqlx::FromRow;
 use uuid::Uuid;
 
 use super::columns::{time, unsigned, uuid};
+use super::ids::next_id;
 use super::notices::{NoticeKind, telling};
 use super::statement::{Connection, query};
 use super::writes::Scope;
@@ -315,7 +316,7 @@ async fn insert(
         "INSERT INTO notice_events (id, notice, refresh, kind, about, raised, figure_before, created_at, state, details) \
          VALUES ($1, $2, $3, $4, $5, $6, $7, $8, 'pending', $9)",
     )
-    .bind(Uuid::now_v7().to_string())
+    .bind(next_id().to_string())
     .bind(notice.to_string())
     .bind(refresh.to_string())
     .bind(signal.kind.as_str())

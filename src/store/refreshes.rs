@@ -6,6 +6,7 @@ use uuid::Uuid;
 
 use super::accounts::{self, NewAccount};
 use super::columns::{corrupt, signed, unsigned, uuid};
+use super::ids::next_id;
 use super::jobs::{JobKind, JobState, end, insert};
 use super::latest;
 use super::runs::{NewRun, insert_run};
@@ -213,7 +214,7 @@ pub(super) async fn enqueue(connection: &mut Connection, network: &str) -> Resul
     let job = match waiting {
         Some(id) => uuid(&id)?,
         None => {
-            let id = Uuid::now_v7();
+            let id = next_id();
             insert(connection, id, JobKind::Refresh, network, "{}").await?;
             id
         }

@@ -252,7 +252,7 @@ impl Store {
     }
 }
 
-fn spool_folder(database: &Path) -> PathBuf {
+pub(super) fn spool_folder(database: &Path) -> PathBuf {
     let mut name = database.as_os_str().to_owned();
     name.push("-jobs");
     name.into()
@@ -280,5 +280,5 @@ fn file_of(folder: &Path, job: Uuid) -> PathBuf {
 }
 
 fn unusable(error: io::Error) -> StoreError {
-    StoreError::Unusable(sqlx::Error::Io(error))
+    sqlx::Error::Io(error).into()
 }

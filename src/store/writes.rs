@@ -128,6 +128,7 @@ impl Store {
         match &self.home {
             Home::Sqlite { write, file, .. } => {
                 file.check()?;
+                self.health.check()?;
                 Ok(Connection::Sqlite(Held::Transaction(write.begin_with("BEGIN IMMEDIATE").await?)))
             }
             Home::Postgres { pool } => {
@@ -146,6 +147,8 @@ impl Store {
         let committed = transaction.commit().await;
         // Whatever came of it: who holds a copy of what is stored looks again.
         self.commits.send_modify(|count| *count += 1);
+        let committed = committed.map_err(StoreError::from);
+        self.health.note_write(committed.as_ref().map_err(StoreError::fault).copied());
         committed?;
         match &self.home {
             // The file may have gone in between.

@@ -18,7 +18,7 @@ use crate::service::background::in_background;
 use crate::service::backtests::{document, record_from_json, record_to_json, too_few};
 use crate::service::evidence::{assemble, off_runtime};
 use crate::service::{BacktestRequest, DEFAULT_SEED, NetworkName, Service, ServiceError, in_own_task, sha256_hex};
-use crate::store::{BacktestWrite, JobKind, NewBacktest, StoreError, StoredJob};
+use crate::store::{BacktestWrite, JobKind, NewBacktest, StoreError, StoredJob, next_id};
 
 /// How often a backtest begins anew because the evidence changed; after that it ends on the evidence it has, and is outdated.
 const MOST_ANEW: usize = 3;
@@ -61,7 +61,7 @@ impl Service {
     pub async fn take_backtest(&self, name: NetworkName, request: &BacktestRequest) -> Result<Uuid, ServiceError> {
         let (service, task) = (self.clone(), request.to_json()?);
         in_own_task(async move {
-            let id = Uuid::now_v7();
+            let id = next_id();
             let job = (JobKind::Backtest, name.as_str());
             service.store.insert_job(id, job, &task, service.jobs.most_live()).await.map_err(refused)?;
             service.launch(id, JobKind::Backtest);

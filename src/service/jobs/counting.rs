@@ -8,7 +8,7 @@ use super::outcome::{JobOutcome, JobProblem};
 use super::{MOST_STARTS, persistently, refused};
 use crate::service::background::in_background;
 use crate::service::{NetworkName, Service, ServiceError, in_own_task};
-use crate::store::{JobKind, StoredJob, Upload, WriteError};
+use crate::store::{JobKind, StoredJob, Upload, WriteError, next_id};
 
 impl Service {
     /// Begins to receive a network's link list.
@@ -35,7 +35,7 @@ impl Service {
         in_own_task(async move {
             let kind = service.network(&name).await?.settings.degree_kind;
             let task = task.to_json(kind, list.bytes())?;
-            let id = Uuid::now_v7();
+            let id = next_id();
             list.keep(id).await?;
             let job = (JobKind::LinkList, name.as_str());
             let taken = service.store.insert_job(id, job, &task, service.jobs.most_live()).await;

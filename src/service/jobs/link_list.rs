@@ -2,6 +2,7 @@
 
 use std::cell::Cell;
 use std::fs::File;
+use std::io::ErrorKind;
 use std::ops::ControlFlow;
 use std::path::Path;
 
@@ -89,7 +90,10 @@ pub fn count(path: &Path, task: &str, most_nodes: u64, progress: &Progress) -> R
         every: every.map_err(|error: jiff::Error| broken(&error))?,
         faults: if task.skip_faults { FaultPolicy::Skip } else { FaultPolicy::Refuse },
     };
-    let file = File::open(path).map_err(|error| broken(&format!("{}: {error}", path.display())))?;
+    let file = File::open(path).map_err(|error| match error.kind() {
+        ErrorKind::NotFound => Stopped::Failed(JobProblem::list_missing()),
+        _ => broken(&format!("{}: {error}", path.display())),
+    })?;
     let stop = Cell::new(None);
     let counted = count_links(file, &plan, &mut |read| {
         if read.nodes > most_nodes {

@@ -66,12 +66,14 @@ impl Service {
         // Those that are called stand among the first due.
         let wanted = u32::try_from(called.len().saturating_add(MOST_AT_ONCE)).unwrap_or(u32::MAX);
         let due = self.store.due_notices(wanted).await?;
+        let longest = self.notices.config.longest_pause().mul_f64(1.0 + JITTER) + LONGEST_SLEEP;
         for next in due {
             if called.values().any(|&notice| notice == next.notice) {
                 continue;
             }
             let wait = next.due_at.duration_since(Timestamp::now());
-            if wait.is_positive() {
+            // Further ahead than any pause: the clock went back, and the event would wait for it.
+            if wait.is_positive() && wait.unsigned_abs() <= longest {
                 return Ok(wait.unsigned_abs().min(LONGEST_SLEEP));
             }
             if called.len() >= MOST_AT_ONCE {
