@@ -201,7 +201,7 @@ pub struct FitReport {
     /// Exponent of the degree law's tail; null when the tail falls faster than any power.
     pub tail_exponent: Option<EstimateAnswer>,
     /// `[degree, share]` pairs: the degrees newcomers arrive with.
-    #[schema(value_type = Vec<Vec<f64>>, examples(json!([[0, 0.9], [2, 0.1]])))]
+    #[schema(value_type = Vec<Vec<f64>>)]
     pub entry_degrees: Vec<(u64, Real)>,
     /// Every candidate's record on the evidence that the mix was read from.
     pub candidates: Vec<CandidateAnswer>,
