@@ -5,12 +5,14 @@
 //! and through a power cut. A write into a file that no longer stands at its path is never acknowledged.
 
 mod accounts;
+mod audit;
 mod backtests;
 mod columns;
 mod connect;
 mod derived;
 mod file;
 mod jobs;
+mod keys;
 mod latest;
 mod link_events;
 mod networks;
@@ -33,9 +35,11 @@ use sqlx::SqlitePool;
 use tokio::sync::watch;
 
 pub use accounts::{AccountKey, IssuedRun, NewAccount, StoredAccount};
+pub use audit::{AuditFilter, AuditLine, Authorship, author, authored, authored_on};
 pub use backtests::{BacktestSummary, BacktestWrite, NewBacktest, StoredBacktest};
 pub use derived::DerivedEvidence;
 pub use jobs::{CalledOff, JobFilter, JobKind, JobState, StoredJob};
+pub use keys::{Belonging, KeyScope, KeyUse, StoredKey};
 pub use latest::{LatestForecast, LatestLine, LatestStamp, LatestWithCadence};
 pub use link_events::StoredLinkEvents;
 pub use networks::{NetworkSummary, NewNetwork, StoredEvidence, StoredNetwork};

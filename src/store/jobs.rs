@@ -6,7 +6,7 @@ use uuid::Uuid;
 
 use super::columns::{corrupt, time, unsigned, uuid};
 use super::writes::{Clash, WriteError, network_exists};
-use super::{RefreshState, Store, StoreError, backtests, refreshes};
+use super::{RefreshState, Store, StoreError, audit, backtests, refreshes};
 
 /// Why a network has no newer forecast when its refresh was called off.
 const CALLED_OFF: &str =
@@ -105,6 +105,8 @@ pub struct StoredJob {
 pub struct JobFilter {
     /// Only of this network.
     pub network: Option<String>,
+    /// Only what belongs to a network that the key with this id is bound to.
+    pub seen_by: Option<String>,
     /// Only older than this one.
     pub before: Option<Uuid>,
     /// At most this many.
@@ -163,6 +165,7 @@ impl Store {
             return Err(Clash::TooManyJobs.into());
         }
         insert(&mut transaction, id, kind, network, task).await?;
+        audit::makes(id);
         Ok(self.commit(transaction).await?)
     }
 
@@ -226,7 +229,8 @@ impl Store {
         } else {
             let removed = sqlx::query("DELETE FROM jobs WHERE id = $1").bind(id.to_string());
             match removed.execute(&mut *transaction).await?.rows_affected() {
-                0 => CalledOff::Missing,
+                // Nothing is written, so nothing is told of it.
+                0 => return Ok(CalledOff::Missing),
                 _ => CalledOff::Removed,
             }
         };
@@ -256,6 +260,12 @@ impl Store {
         );
         if let Some(network) = &filter.network {
             query.push(" AND network = ").push_bind(network.as_str());
+        }
+        if let Some(key) = &filter.seen_by {
+            query.push(
+                " AND network IN (SELECT bound.network FROM access_key_networks AS bound WHERE bound.access_key = ",
+            );
+            query.push_bind(key.as_str()).push(")");
         }
         if let Some(before) = filter.before {
             query.push(" AND id < ").push_bind(before.to_string());

@@ -5,7 +5,7 @@ use sqlx::{FromRow, QueryBuilder, Sqlite, SqliteConnection};
 use uuid::Uuid;
 
 use super::columns::{date_key, signed, time, unsigned, uuid};
-use super::{Store, StoreError};
+use super::{Store, StoreError, audit};
 
 /// What a run answered.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
@@ -115,6 +115,8 @@ pub struct RunFilter {
     pub label: Option<String>,
     /// Only this network.
     pub network: Option<String>,
+    /// Only what belongs to a network that the key with this id is bound to.
+    pub seen_by: Option<String>,
     /// Only runs older than this one.
     pub before: Option<Uuid>,
     /// At most this many.
@@ -173,6 +175,7 @@ impl Store {
             return Ok(earlier);
         }
         insert_run(&mut transaction, run, None).await?;
+        audit::makes(run.id);
         if let Some(claim) = claim {
             sqlx::query("INSERT INTO idempotency_keys (kind, key, body_digest, run_id) VALUES ($1, $2, $3, $4)")
                 .bind(run.kind.as_str())
@@ -242,6 +245,10 @@ impl Store {
         }
         if let Some(network) = &filter.network {
             query.push(" AND runs.network = ").push_bind(network.as_str());
+        }
+        if let Some(key) = &filter.seen_by {
+            query.push(" AND runs.network IN (SELECT network FROM access_key_networks WHERE access_key = ");
+            query.push_bind(key.as_str()).push(")");
         }
         if let Some(before) = filter.before {
             query.push(" AND id < ").push_bind(before.to_string());

@@ -6,7 +6,7 @@ use tokio::sync::watch;
 use uuid::Uuid;
 
 use super::columns::unsigned;
-use super::{Store, StoreError};
+use super::{Store, StoreError, audit};
 use crate::model::DegreeKind;
 
 /// Why a write was not done. Nothing was changed then.
@@ -109,12 +109,16 @@ impl Store {
         Ok(self.write.begin_with("BEGIN IMMEDIATE").await?)
     }
 
-    /// Ends a write: on disk when this returns.
-    pub(super) async fn commit(&self, transaction: Transaction<'static, Sqlite>) -> Result<(), StoreError> {
+    /// Ends a write, with its line in the trail: on disk when this returns.
+    pub(super) async fn commit(&self, mut transaction: Transaction<'static, Sqlite>) -> Result<(), StoreError> {
+        let author = audit::note(&mut transaction).await?;
         let committed = transaction.commit().await;
         // Whatever came of it: who holds a copy of what is stored looks again.
         self.commits.send_modify(|count| *count += 1);
         committed?;
+        if let Some(author) = author {
+            author.is_noted();
+        }
         // The file may have gone in between.
         self.file.check()
     }
