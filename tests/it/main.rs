@@ -2,6 +2,7 @@
 
 #![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic)]
 
+mod access;
 mod any_json;
 mod any_links;
 mod architecture;

@@ -35,6 +35,27 @@ pub struct Rule {
     pub need: Need,
 }
 
+impl Rule {
+    /// The scope that a key needs; none where the operation is open.
+    pub fn scope(&self) -> Option<KeyScope> {
+        match self.need {
+            Need::Open => None,
+            Need::Key(scope, _) => Some(scope),
+        }
+    }
+
+    /// What it opens to a key that is bound to networks.
+    pub fn reach(&self) -> &'static str {
+        match self.need {
+            Need::Open => "open",
+            Need::Key(_, Reach::Network) => "its network",
+            Need::Key(_, Reach::Thing(_)) => "what belongs to its networks",
+            Need::Key(_, Reach::Listed) => "lists what belongs to its networks",
+            Need::Key(_, Reach::Beyond) => "not for bound keys",
+        }
+    }
+}
+
 const fn rule(method: &'static str, path: &'static str, need: Need) -> Rule {
     Rule { method, path, need }
 }
