@@ -2,6 +2,7 @@
 
 mod tally;
 
+use std::borrow::Cow;
 use std::time::{Instant, SystemTime, UNIX_EPOCH};
 
 use axum::extract::{MatchedPath, Request};
@@ -13,6 +14,7 @@ use uuid::Builder;
 use uuid::fmt::Hyphenated;
 
 use super::problem::{Pending, Problem};
+use crate::credential::masked;
 
 const REQUEST_ID: HeaderName = HeaderName::from_static("x-request-id");
 /// Longest incoming request id that is kept.
@@ -108,7 +110,12 @@ fn complete_problem(response: &mut Response, id: &str, path: &str) {
 fn request_id(headers: &HeaderMap) -> HeaderValue {
     let plain = |byte: u8| byte.is_ascii_alphanumeric() || b"-_.:".contains(&byte);
     match headers.get(REQUEST_ID) {
-        Some(id) if (1..=MAX_REQUEST_ID_CHARS).contains(&id.len()) && id.as_bytes().iter().all(|&byte| plain(byte)) => {
+        Some(id)
+            if (1..=MAX_REQUEST_ID_CHARS).contains(&id.len())
+                && id.as_bytes().iter().all(|&byte| plain(byte))
+                // An access key is no id.
+                && matches!(masked(id_text(id)), Cow::Borrowed(_)) =>
+        {
             id.clone()
         }
         _ => new_id(),

@@ -112,6 +112,31 @@ fn the_document_tells_the_rules() {
     }
 }
 
+/// DEVELOPERS.md has the rules as a table: a row a scope and reach, a path with its methods.
+#[test]
+fn the_access_table_is_the_rules() {
+    let mut rows: Vec<(String, Vec<(String, Vec<&str>)>)> = Vec::new();
+    for rule in ACCESS_RULES {
+        let row = format!("| {} | {} |", rule.scope().map_or("none", KeyScope::as_str), rule.reach());
+        let at = rows.iter().position(|(known, _)| *known == row).unwrap_or_else(|| {
+            rows.push((row, Vec::new()));
+            rows.len() - 1
+        });
+        let path = rule.path.replace("/v1/networks/{name}", "…");
+        match rows[at].1.iter_mut().find(|(known, _)| *known == path) {
+            Some((_, methods)) => methods.push(rule.method),
+            None => rows[at].1.push((path, vec![rule.method])),
+        }
+    }
+    let text = include_str!("../../DEVELOPERS.md");
+    for (row, operations) in rows {
+        let told: Vec<String> =
+            operations.iter().map(|(path, methods)| format!("`{} {path}`", methods.join(" "))).collect();
+        let line = format!("{row} {} |", told.join(", "));
+        assert!(text.contains(&line), "the access table lacks the row\n{line}");
+    }
+}
+
 /// What a key that is bound to other networks is answered, by the rule.
 fn beyond(rule: &str) -> &'static [(u16, &'static str)] {
     match rule {
