@@ -234,13 +234,15 @@ async fn a_bound_key_sees_its_networks_alone() {
     for network in ["ashford", "heronsgate", "thornbury", "wexcombe", "zeal"] {
         let path = format!("/v1/networks/{network}");
         world.put(&all, &path, &json!({"degree_kind": "received"})).await.expect(201);
-        let list = csv("time,source,target\n2020-01-01,ana,ben\n2020-01-02,cai,ben\n2020-01-03,ana,cai\n");
-        let job = world.send(&all, "put", &format!("{path}/links?every=P1D"), Some(list)).await.expect(200).json();
+        let counts = json!({"degree_counts": [[0, 48], [1, 30], [2, 17], [5, 5]]});
+        world.put(&all, &format!("{path}/snapshots/2026-06-01"), &counts).await.expect(201);
         let asked = json!({"arrivals": {"per_day": 1}, "thresholds": [3], "dates": ["2027-01-01"], "fixed": {"preferential_share": 0.5}});
         let run =
             world.send(&all, "post", &format!("{path}/forecasts"), Some(json_text(&asked))).await.expect(201).json();
         let asked = json!({"fixed": {"preferential_share": 0.5}});
         let fit = world.send(&all, "post", &format!("{path}/fits"), Some(json_text(&asked))).await.expect(201).json();
+        let list = csv("time,source,target\n2020-01-01,ana,ben\n2020-01-02,cai,ben\n");
+        let job = world.send(&all, "put", &format!("{path}/links"), Some(list)).await.expect(200).json();
         let id = |answer: &Value| answer["id"].as_str().unwrap().to_owned();
         ids.push((network, [("jobs", id(&job)), ("forecasts", id(&run)), ("fits", id(&fit))]));
     }

@@ -31,7 +31,10 @@ async fn a_key_is_made_used_listed_and_revoked_while_the_service_runs() {
     let folder = tempfile::tempdir().unwrap();
     let served = serve_with(folder.path(), &[REQUIRED]);
     let url = |path: &str| format!("http://{}{path}", served.address);
-    let made = keys(folder.path(), &["create", "loader", "--scope", "write", "--network", "heronsgate", "--per-minute", "600"]);
+    let made = keys(
+        folder.path(),
+        &["create", "loader", "--scope", "write", "--network", "heronsgate", "--per-minute", "600"],
+    );
     let key = printed(&made);
     assert!(key.starts_with("tailcast_") && key.len() == 90, "{key}");
     assert!(String::from_utf8_lossy(&made.stderr).contains("not shown again"));
@@ -75,10 +78,17 @@ async fn a_key_is_made_used_listed_and_revoked_while_the_service_runs() {
     printed(&keys(folder.path(), &["create", "loader"]));
     let trail = client().get(url("/v1/audit")).bearer_auth(admin["key"].as_str().unwrap()).send().await.unwrap();
     let trail: Value = serde_json::from_str(&trail.text().await.unwrap()).unwrap();
-    let paths: Vec<&str> = trail["items"].as_array().unwrap().iter().map(|line| line["path"].as_str().unwrap()).collect();
+    let paths: Vec<&str> =
+        trail["items"].as_array().unwrap().iter().map(|line| line["path"].as_str().unwrap()).collect();
     assert_eq!(
         paths,
-        ["keys create loader", "keys revoke loader", "keys create chief", "/v1/networks/heronsgate", "keys create loader"]
+        [
+            "keys create loader",
+            "keys revoke loader",
+            "keys create chief",
+            "/v1/networks/heronsgate",
+            "keys create loader"
+        ]
     );
 }
 
@@ -136,7 +146,8 @@ async fn a_key_reaches_no_log_problem_or_trail() {
         assert_eq!(sent.status(), 400);
         told.push(sent.text().await.unwrap());
     }
-    let broken = client.put(url("/v1/networks/heronsgate")).bearer_auth(&key).header("content-type", "application/json");
+    let broken =
+        client.put(url("/v1/networks/heronsgate")).bearer_auth(&key).header("content-type", "application/json");
     told.push(broken.body(format!("{{{key}")).send().await.unwrap().text().await.unwrap());
     // A write that is done, under a request id that is a key.
     let put = client.put(url("/v1/networks/heronsgate")).bearer_auth(&key).json(&json!({"degree_kind": "received"}));
