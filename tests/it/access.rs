@@ -115,7 +115,8 @@ fn the_document_tells_the_rules() {
 /// DEVELOPERS.md has the rules as a table: a row a scope and reach, a path with its methods.
 #[test]
 fn the_access_table_is_the_rules() {
-    let mut rows: Vec<(String, Vec<(String, Vec<&str>)>)> = Vec::new();
+    type Operations = Vec<(String, Vec<&'static str>)>;
+    let mut rows: Vec<(String, Operations)> = Vec::new();
     for rule in ACCESS_RULES {
         let row = format!("| {} | {} |", rule.scope().map_or("none", KeyScope::as_str), rule.reach());
         let at = rows.iter().position(|(known, _)| *known == row).unwrap_or_else(|| {
