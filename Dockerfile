@@ -11,9 +11,8 @@ COPY --from=build /src/target/release/tailcast /usr/local/bin/tailcast
 USER tailcast
 WORKDIR /var/lib/tailcast
 VOLUME /var/lib/tailcast
-# Inside a container loopback is reachable from nowhere. Publish the port to the host's loopback, or put a gateway with
-# access control in front: docker run -p 127.0.0.1:8080:8080 …
-ENV TAILCAST_BIND=0.0.0.0:8080
+# Inside a container loopback is reachable from nowhere, and elsewhere keys are asked for: docker exec … tailcast keys create NAME
+ENV TAILCAST_BIND=0.0.0.0:8080 TAILCAST_ACCESS_KEYS=required
 EXPOSE 8080
 HEALTHCHECK --interval=10s --timeout=5s --start-period=5s CMD ["tailcast", "check"]
 ENTRYPOINT ["tailcast"]

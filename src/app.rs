@@ -1,10 +1,12 @@
 //! The program: its commands, and how the parts are put together for each.
 
 mod backup;
+mod bookkeeping;
 mod check;
 mod connections;
 mod demo;
 mod follow;
+mod keys;
 mod offline;
 mod serve;
 mod tally;
@@ -20,6 +22,7 @@ use tokio::runtime::Runtime;
 use crate::config::{Config, LogConfig};
 use crate::service::Service;
 use crate::{api, telemetry};
+use keys::KeysCommand;
 use offline::{Completion, Look};
 use tally::TallyOptions;
 
@@ -64,6 +67,11 @@ enum Command {
     Follow {
         /// The job's id, or its address as a 202 gives it
         job: String,
+    },
+    /// Make, list and revoke access keys
+    Keys {
+        #[command(subcommand)]
+        command: KeysCommand,
     },
     /// Ask the service at `bind` whether it is ready; ends with 0 when it is
     Check,
@@ -143,7 +151,8 @@ fn dispatch(line: CommandLine) -> Result<(), Stop> {
             offline::forecast(&config, &file, &completion, &look.of(format)?)
         }
         Command::Openapi => Ok(()),
-        Command::Follow { job } => follow::follow(config.bind, &job),
+        Command::Follow { job } => follow::follow(&config, &job),
+        Command::Keys { command } => runtime()?.block_on(keys::run(&config.database, command)),
         Command::Check => check::ready(config.bind),
         Command::Migrate => {
             runtime()?.block_on(Service::migrate(&config.database)).map_err(|error| Stop::failed("migration", error))

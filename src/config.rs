@@ -1,5 +1,6 @@
 //! Settings: the compiled-in defaults, then a file, then `TAILCAST_*` variables; one small struct a concern.
 
+mod access;
 mod fault;
 mod kinds;
 mod notices;
@@ -14,6 +15,7 @@ use config::{File, FileFormat, Value, ValueKind};
 use serde::de::Error as _;
 use serde::{Deserialize, Deserializer};
 
+pub use access::{AccessConfig, KeysNeeded};
 pub use fault::SettingsError;
 pub use notices::NoticesConfig;
 pub use retention::RetentionConfig;
@@ -45,6 +47,8 @@ pub struct Config {
     pub bind: SocketAddr,
     /// Where runs are kept.
     pub database: DatabaseConfig,
+    /// Who may ask.
+    pub access: AccessConfig,
     /// Limits of the HTTP side.
     pub http: HttpConfig,
     /// Limits of the computing side.
@@ -116,6 +120,9 @@ pub struct HttpConfig {
     pub polled_bytes: usize,
     /// Time to finish after a stop signal, seconds.
     pub shutdown_grace_seconds: u64,
+    /// Origins whose pages may ask.
+    #[serde(deserialize_with = "access::origins")]
+    pub allowed_origins: Vec<String>,
 }
 
 impl HttpConfig {
@@ -342,6 +349,7 @@ impl Config {
             ("compute.workers", compute.workers as u64, 0, MOST_THREADS),
             ("compute.queue", compute.queue as u64, 0, MOST_THINGS),
             ("compute.budget_seconds", compute.budget_seconds, 1, DAY_SECONDS),
+            ("access.audit_days", self.access.audit_days, 1, MOST_THINGS / DAY_SECONDS),
             ("jobs.workers", jobs.workers as u64, 1, MOST_THREADS),
             ("jobs.refresh_workers", jobs.refresh_workers as u64, 1, MOST_THREADS),
             ("jobs.refresh_seconds", jobs.refresh_seconds, 1, DAY_SECONDS),

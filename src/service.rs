@@ -1,5 +1,6 @@
 //! Use cases: check, compute off the runtime within a time budget, keep the run, answer with what was kept.
 
+mod access;
 mod accounts;
 mod accuracy;
 mod answers;
@@ -33,7 +34,7 @@ use tracing::Instrument;
 
 use crate::config::{Config, DatabaseConfig, RetentionConfig};
 use crate::model::MAX_SNAPSHOTS;
-use crate::store::{Caps, Store, StoreError};
+use crate::store::{Caps, Store, StoreError, author, authored_on};
 use gauges::Briefs;
 use jobs::Board;
 use news::TellingCache;
@@ -43,13 +44,14 @@ pub use crate::evaluate::OriginRequest;
 pub use crate::fit::{FitRequest, Fixed, Model, ModelChoice, Rung};
 pub use crate::ingest::FaultPolicy;
 pub use crate::store::{
-    BacktestSummary, BackupError, BackupReport, Clash, JobFilter, JobKind, JobState, KeyClaim, LatestForecast,
-    LatestStamp, NetworkSummary, NewNetwork, NoticeKind, QuestionKind, RefreshState, RefreshStatus, RestoreReport,
-    RunFilter, RunKind, RunSummary, SnapshotSummary, StoreFault, StoredBacktest, StoredJob, StoredLinkEvents,
-    StoredNetwork, StoredQuestion, StoredRun, StoredSnapshot, StoredTransitions, TransitionsSummary, Upload, back_up,
-    restore,
+    AuditFilter, AuditLine, Authorship, BacktestSummary, BackupError, BackupReport, Belonging, Clash, JobFilter,
+    JobKind, JobState, KeyClaim, KeyScope, LatestForecast, LatestStamp, NetworkSummary, NewNetwork, NoticeKind,
+    QuestionKind, RefreshState, RefreshStatus, RestoreReport, RunFilter, RunKind, RunSummary, SnapshotSummary,
+    StoreFault, StoredBacktest, StoredJob, StoredKey, StoredLinkEvents, StoredNetwork, StoredQuestion, StoredRun,
+    StoredSnapshot, StoredTransitions, TransitionsSummary, Upload, authored, back_up, restore,
 };
 pub use crate::webhook::{AddressFault, Target};
+pub use access::{Allowance, KeyCabinet, KeyError, KeyFault, KeyRing, KeyTerms, LiveKey, Meter, Spent, Standing};
 pub use accounts::{DateOutcome, IntervalOutcome, OutcomeAnswer, TailOutcome};
 pub use accuracy::{
     AccuracyAnswer, CoverageAnswer, DateAccount, DriftAnswer, DriftCauseName, ForecastAccounts, SummaryAnswer,
@@ -97,6 +99,7 @@ pub const ENGINE: &str = concat!(env!("CARGO_PKG_NAME"), " ", env!("CARGO_PKG_VE
 pub struct Service {
     store: Store,
     cpu: CpuPool,
+    keys: KeyRing,
     caps: Caps,
     jobs: Board,
     /// What the gauges tell of forecasts, read once each.
@@ -135,6 +138,7 @@ impl Service {
         let evidence_queue = Arc::new(Semaphore::new(cpu.most()));
         let (jobs, notices) = (Board::new(config.jobs), Notices::new(&config.notices));
         Ok(Self {
+            keys: KeyRing::new(store.clone()),
             store,
             cpu,
             caps,
@@ -210,7 +214,8 @@ const RELEASE_TIME: Duration = Duration::from_secs(2);
 async fn in_own_task<T: Send + 'static>(
     write: impl Future<Output = Result<T, ServiceError>> + Send + 'static,
 ) -> Result<T, ServiceError> {
-    match tokio::spawn(write.in_current_span()).await {
+    // Whose write it is goes with it.
+    match tokio::spawn(authored_on(author(), write).in_current_span()).await {
         Ok(outcome) => outcome,
         Err(error) => Err(ServiceError::Broken(format!("a write stopped short: {error}"))),
     }

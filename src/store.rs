@@ -6,6 +6,7 @@
 //! replicas share, a write is alone among those of its scope (see `writes`), and its server's own settings say when it is on disk.
 
 mod accounts;
+mod audit;
 mod backtests;
 mod backup;
 mod columns;
@@ -16,6 +17,7 @@ mod health;
 mod ids;
 mod integrity;
 mod jobs;
+mod keys;
 mod latest;
 mod link_events;
 mod networks;
@@ -45,6 +47,7 @@ use tokio::sync::watch;
 use uuid::Uuid;
 
 pub use accounts::{AccountKey, IssuedRun, NewAccount, StoredAccount};
+pub use audit::{AuditFilter, AuditLine, Authorship, author, authored, authored_on};
 pub use backtests::{BacktestSummary, BacktestWrite, NewBacktest, StoredBacktest};
 pub use backup::{BackupError, BackupReport, RestoreReport, back_up, restore};
 pub use derived::DerivedEvidence;
@@ -52,6 +55,7 @@ pub use health::StoreFault;
 pub use ids::next_id;
 pub use integrity::Checked;
 pub use jobs::{CalledOff, JobFilter, JobKind, JobStart, JobState, StoredJob};
+pub use keys::{Belonging, KeyScope, KeyUse, StoredKey};
 pub use latest::{LatestForecast, LatestLine, LatestStamp, LatestWithCadence};
 pub use link_events::StoredLinkEvents;
 pub use networks::{NetworkSummary, NewNetwork, StoredEvidence, StoredNetwork};

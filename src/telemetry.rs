@@ -1,6 +1,7 @@
 //! Logs and metrics of the process.
 
-use std::io::IsTerminal;
+use std::borrow::Cow;
+use std::io::{self, IsTerminal, Write};
 use std::sync::OnceLock;
 use std::time::Duration;
 
@@ -10,6 +11,7 @@ use tracing_subscriber::EnvFilter;
 use tracing_subscriber::filter::ParseError;
 
 use crate::config::{LogConfig, LogFormat};
+use crate::credential::masked;
 
 /// Bounds of the time buckets, seconds: a polled read takes under a millisecond, a large forecast seconds.
 const SECONDS_BUCKETS: [f64; 13] = [0.0005, 0.001, 0.0025, 0.005, 0.01, 0.025, 0.05, 0.1, 0.25, 0.5, 1.0, 5.0, 30.0];
@@ -26,8 +28,8 @@ pub fn start_logs(config: &LogConfig) -> Result<(), ParseError> {
     let filter = EnvFilter::builder().parse(&config.filter)?;
     let builder = tracing_subscriber::fmt()
         .with_env_filter(filter)
-        .with_writer(std::io::stderr)
-        .with_ansi(std::io::stderr().is_terminal());
+        .with_writer(|| Masking(io::stderr()))
+        .with_ansi(io::stderr().is_terminal());
     let _already_started = match config.format {
         LogFormat::Text => builder.try_init(),
         LogFormat::Json => builder.json().flatten_event(true).try_init(),
@@ -49,6 +51,23 @@ pub async fn keep_metrics_small(handle: PrometheusHandle) {
     loop {
         interval.tick().await;
         handle.run_upkeep();
+    }
+}
+
+/// Writes a line of the log, with the secret part of every access key in it left out, whoever put it there.
+struct Masking<W>(W);
+
+impl<W: Write> Write for Masking<W> {
+    fn write(&mut self, line: &[u8]) -> io::Result<usize> {
+        match std::str::from_utf8(line).map(masked) {
+            Ok(Cow::Owned(safe)) => self.0.write_all(safe.as_bytes())?,
+            _ => self.0.write_all(line)?,
+        }
+        Ok(line.len())
+    }
+
+    fn flush(&mut self) -> io::Result<()> {
+        self.0.flush()
     }
 }
 

@@ -90,6 +90,8 @@ pub enum ApiError {
     TooManyConnections,
     /// As many streams of events as configured are open.
     TooManyStreams,
+    /// Whoever asks may not.
+    Denied(Box<Problem>),
     /// A use case failed.
     Service(ServiceError),
     /// An invariant of this layer does not hold.
@@ -205,6 +207,7 @@ impl ApiError {
                               try again later, or raise http.max_streams.";
                 Problem::new(S::SERVICE_UNAVAILABLE, "too_many_streams", detail).retry_after(MENDING_RETRY)
             }
+            Self::Denied(problem) => *problem,
             Self::Service(error) => service_problem(error),
             Self::Broken(cause) => broken(cause),
         }

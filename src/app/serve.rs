@@ -9,10 +9,10 @@ use tokio::sync::watch;
 use tokio::task::JoinHandle;
 use tokio::time::timeout;
 
-use super::Stop;
 use super::connections::{self, Terms, room_for};
+use super::{Stop, bookkeeping};
 use crate::api::{AppState, Front};
-use crate::config::Config;
+use crate::config::{Config, KeysNeeded};
 use crate::service::Service;
 use crate::telemetry;
 
@@ -30,6 +30,7 @@ pub struct Running {
     sender: JoinHandle<()>,
     sharing: JoinHandle<()>,
     keeper: JoinHandle<()>,
+    bookkeeping: JoinHandle<()>,
     grace: Duration,
 }
 
@@ -41,7 +42,7 @@ impl Running {
 
     /// Stops listening, finishes what was accepted, within the configured grace, and closes the database.
     pub async fn stop(self) {
-        let Self { service, stop, server, upkeep, sender, sharing, keeper, grace, .. } = self;
+        let Self { service, stop, server, upkeep, sender, sharing, keeper, bookkeeping, grace, .. } = self;
         let aborted = sender.abort_handle();
         // Nobody listening means the server is gone already.
         let _ = stop.send(true);
@@ -54,7 +55,11 @@ impl Running {
         sharing.abort();
         // A transaction that it is in the middle of is undone.
         keeper.abort();
+        bookkeeping.abort();
         service.cancel_all();
+        if let Err(error) = service.keys().save_uses().await {
+            tracing::warn!(%error, "what access keys have used since it was last stored is not counted");
+        }
         service.close().await;
         tracing::info!("stopped");
     }
@@ -65,6 +70,9 @@ impl Running {
 /// # Errors
 /// When the database cannot be opened or the address is taken.
 pub async fn start(config: Config) -> Result<Running, Stop> {
+    if let Some(why) = config.access.refusal(config.bind) {
+        return Err(Stop::Failed(why));
+    }
     // Listening first: when the port is taken, no database file is made.
     let listener = TcpListener::bind(config.bind).await.map_err(|error| address_fault(config.bind, &error))?;
     let address = listener.local_addr().map_err(|error| Stop::failed("the listening address", error))?;
@@ -83,12 +91,13 @@ pub async fn start(config: Config) -> Result<Running, Stop> {
     let sender = tokio::spawn(service.clone().send_notices(stopped.clone()));
     let sharing = tokio::spawn(service.clone().share_jobs(resumed.is_ok(), stopped.clone()));
     let keeper = tokio::spawn(service.clone().keep_up(stopped.clone()));
+    let bookkeeping = tokio::spawn(bookkeeping::keep_books(service.clone(), config.access.audit_time()));
     let server = tokio::spawn(connections::serve(listener, front, terms, stopped));
     tracing::info!(%address, "serving");
-    if !address.ip().is_loopback() {
-        tracing::warn!("reachable from other machines, and there is no access control: put a gateway in front");
+    if config.access.keys == KeysNeeded::AnyoneMayReadAndWrite {
+        tracing::warn!(%address, "NO ACCESS KEYS ARE ASKED FOR: whoever reaches this address can read and change everything, unless a gateway in front decides who may");
     }
-    Ok(Running { address, service, stop, server, upkeep, sender, sharing, keeper, grace })
+    Ok(Running { address, service, stop, server, upkeep, sender, sharing, keeper, bookkeeping, grace })
 }
 
 /// Serves until SIGINT or SIGTERM.

@@ -7,7 +7,7 @@ use uuid::Uuid;
 use super::columns::{corrupt, time, unsigned, uuid};
 use super::statement::{Connection, query, query_scalar};
 use super::writes::{Clash, Scope, WriteError, network_exists};
-use super::{RefreshState, Store, StoreError, backtests, refreshes};
+use super::{RefreshState, Store, StoreError, audit, backtests, refreshes};
 
 /// How long a claim on a job holds unless it is prolonged, microseconds: several times what passes between two prolongations.
 const CLAIM_MICROS: i64 = 20_000_000;
@@ -111,6 +111,8 @@ pub struct StoredJob {
 pub struct JobFilter {
     /// Only of this network.
     pub network: Option<String>,
+    /// Only what belongs to a network that the key with this id is bound to.
+    pub seen_by: Option<String>,
     /// Only older than this one.
     pub before: Option<Uuid>,
     /// At most this many.
@@ -181,6 +183,7 @@ impl Store {
             return Err(Clash::TooManyJobs.into());
         }
         insert(&mut transaction, id, kind, network, task).await?;
+        audit::makes(id);
         Ok(self.commit(transaction).await?)
     }
 
@@ -290,7 +293,8 @@ impl Store {
         } else {
             let removed = query("DELETE FROM jobs WHERE id = $1").bind(id.to_string());
             match removed.execute(&mut transaction).await? {
-                0 => CalledOff::Missing,
+                // Nothing is written, so nothing is told of it.
+                0 => return Ok(CalledOff::Missing),
                 _ => CalledOff::Removed,
             }
         };
@@ -316,8 +320,12 @@ impl Store {
             "SELECT id, kind, network, state, starts, created_at, started_at, ended_at, progress, task, outcome FROM jobs \
              WHERE true",
         )
-        .bind_where("network =", filter.network.as_deref())
-        .bind_where("id <", filter.before.map(|id| id.to_string()))
+        .bind_where("network = ?", filter.network.as_deref())
+        .bind_where(
+            "network IN (SELECT bound.network FROM access_key_networks AS bound WHERE bound.access_key = ?)",
+            filter.seen_by.as_deref(),
+        )
+        .bind_where("id < ?", filter.before.map(|id| id.to_string()))
         .order_by_limit("id DESC", filter.limit)
         .fetch_all(&mut self.reader().await?)
         .await?;

@@ -154,21 +154,29 @@ impl Store {
         find(&mut connection, name).await
     }
 
-    /// Networks whose name comes after `after`, in the order of their names.
+    /// Networks whose name comes after `after`, in the order of their names; only those that the key `seen_by` is bound to.
     ///
     /// # Errors
     /// When the database fails.
-    pub async fn list_networks(&self, after: Option<&str>, limit: u32) -> Result<Vec<NetworkSummary>, StoreError> {
+    pub async fn list_networks(
+        &self,
+        after: Option<&str>,
+        limit: u32,
+        seen_by: Option<&str>,
+    ) -> Result<Vec<NetworkSummary>, StoreError> {
         let rows: Vec<SummaryRow> = query(
             "SELECT name, degree_kind, description, tag, created_at, updated_at, entry_degrees, forecast_plan, revision, \
              refresh_state, refresh_job, refresh_reason, (SELECT count(*) FROM snapshots WHERE network = name) AS snapshots, \
              (SELECT max(as_of) FROM snapshots WHERE network = name) AS newest, \
              (SELECT count(*) FROM transitions WHERE network = name) AS transitions, \
              (SELECT count(*) FROM link_events WHERE network = name) AS link_events \
-             FROM networks WHERE name > $1 ORDER BY name LIMIT $2",
+             FROM networks WHERE name > $1 \
+             AND ($3 = '' OR name IN (SELECT bound.network FROM access_key_networks AS bound WHERE bound.access_key = $3)) \
+             ORDER BY name LIMIT $2",
         )
         .bind(after.unwrap_or_default())
         .bind(i64::from(limit))
+        .bind(seen_by.unwrap_or_default())
         .fetch_all(&mut self.reader().await?)
         .await?;
         rows.into_iter().map(NetworkSummary::try_from).collect()

@@ -7,7 +7,7 @@ use uuid::Uuid;
 use super::columns::{date_key, signed, time, unsigned, uuid};
 use super::statement::{Connection, query, query_scalar};
 use super::writes::Scope;
-use super::{Store, StoreError};
+use super::{Store, StoreError, audit};
 
 /// What a run answered.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
@@ -117,6 +117,8 @@ pub struct RunFilter {
     pub label: Option<String>,
     /// Only this network.
     pub network: Option<String>,
+    /// Only what belongs to a network that the key with this id is bound to.
+    pub seen_by: Option<String>,
     /// Only runs older than this one.
     pub before: Option<Uuid>,
     /// At most this many.
@@ -176,6 +178,7 @@ impl Store {
             return Ok(earlier);
         }
         insert_run(&mut transaction, run, None).await?;
+        audit::makes(run.id);
         if let Some(claim) = claim {
             query("INSERT INTO idempotency_keys (kind, key, body_digest, run_id) VALUES ($1, $2, $3, $4)")
                 .bind(run.kind.as_str())
@@ -234,9 +237,13 @@ impl Store {
              evidence_corrected_at FROM runs LEFT JOIN network_runs ON run_id = id WHERE kind = $1",
         )
         .bind(kind.as_str())
-        .bind_where("label =", filter.label.as_deref())
-        .bind_where("runs.network =", filter.network.as_deref())
-        .bind_where("id <", filter.before.map(|id| id.to_string()))
+        .bind_where("label = ?", filter.label.as_deref())
+        .bind_where("runs.network = ?", filter.network.as_deref())
+        .bind_where(
+            "runs.network IN (SELECT bound.network FROM access_key_networks AS bound WHERE bound.access_key = ?)",
+            filter.seen_by.as_deref(),
+        )
+        .bind_where("id < ?", filter.before.map(|id| id.to_string()))
         .order_by_limit("id DESC", filter.limit)
         .fetch_all(&mut self.reader().await?)
         .await?;

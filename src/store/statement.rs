@@ -100,15 +100,15 @@ impl<'a> Statement<'a> {
         self
     }
 
-    /// Adds a condition on the next placeholder, where there is a value for it: one text a combination, so that each finds its
-    /// index.
+    /// Adds a condition whose `?` is the next placeholder, where there is a value for it: one text a combination, so that each
+    /// finds its index.
     pub fn bind_where(self, condition: &str, value: Option<impl Into<Value<'a>>>) -> Self {
         match value {
             None => self,
             Some(value) => {
                 let mut bound = self.bind(value);
                 let place = bound.bound.len();
-                bound.text.to_mut().push_str(&format!(" AND {condition} ${place}"));
+                bound.text.to_mut().push_str(&format!(" AND {}", condition.replace('?', &format!("${place}"))));
                 bound
             }
         }

@@ -6,7 +6,7 @@ use uuid::Uuid;
 
 use super::columns::unsigned;
 use super::statement::{Connection, Held, Statement, in_time, query, query_scalar};
-use super::{Home, Store, StoreError};
+use super::{Home, Store, StoreError, audit};
 use crate::model::DegreeKind;
 
 /// Why a write was not done. Nothing was changed then.
@@ -142,14 +142,18 @@ impl Store {
         }
     }
 
-    /// Ends a write: on disk when this returns.
-    pub(super) async fn commit(&self, transaction: Connection) -> Result<(), StoreError> {
+    /// Ends a write, with its line in the trail: on disk when this returns.
+    pub(super) async fn commit(&self, mut transaction: Connection) -> Result<(), StoreError> {
+        let author = audit::note(&mut transaction).await?;
         let committed = transaction.commit().await;
         // Whatever came of it: who holds a copy of what is stored looks again.
         self.commits.send_modify(|count| *count += 1);
         let committed = committed.map_err(StoreError::from);
         self.health.note_write(committed.as_ref().map_err(StoreError::fault).copied());
         committed?;
+        if let Some(author) = author {
+            author.is_noted();
+        }
         match &self.home {
             // The file may have gone in between.
             Home::Sqlite { file, .. } => file.check(),

@@ -59,6 +59,12 @@ impl Service {
         self.running.stop().await;
     }
 
+    /// Stops it, and keeps its folder.
+    pub async fn stop_and_keep(self) -> TempDir {
+        self.running.stop().await;
+        self._folder
+    }
+
     pub fn request(&self, method: Method, path: &str) -> RequestBuilder {
         self.client.request(method, format!("http://{}{path}", self.address()))
     }

@@ -2,10 +2,12 @@
 
 #![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic)]
 
+mod access;
 mod any_json;
 mod any_links;
 mod architecture;
 mod arrival_plans;
+mod audit;
 mod backtests;
 mod backups;
 mod bad_input;
@@ -22,6 +24,7 @@ mod half_open;
 mod harness;
 mod hostile_clients;
 mod jobs;
+mod keys;
 mod limits;
 mod limits_kept;
 mod link_lists;
