@@ -13,9 +13,8 @@ USER 10001:10001
 WORKDIR /var/lib/tailcast
 # All that is written. The root may be read-only: docker run --read-only -v tailcast:/var/lib/tailcast …
 VOLUME /var/lib/tailcast
-# Inside a container loopback is reachable from nowhere. Publish the port to the host's loopback, or put a gateway in front:
-# docker run -p 127.0.0.1:8080:8080 …
-ENV TAILCAST_BIND=0.0.0.0:8080
+# Inside a container loopback is reachable from nowhere, and elsewhere keys are asked for: docker exec … tailcast keys create NAME
+ENV TAILCAST_BIND=0.0.0.0:8080 TAILCAST_ACCESS_KEYS=required
 EXPOSE 8080
 STOPSIGNAL SIGTERM
 HEALTHCHECK --interval=10s --timeout=5s --start-period=10s CMD ["/usr/local/bin/tailcast", "check"]

@@ -50,7 +50,7 @@ fn compare(filter: &str) {
         ("TAILCAST_LOG_FILTER", filter.to_owned()),
     ];
     let config = Config::from_sources(None, variables.map(|(k, v)| (k.to_owned(), v)).into_iter()).unwrap();
-    tailcast::telemetry::start_logs(&config.log).unwrap();
+    tailcast::telemetry::start(&config.log, &config.telemetry).unwrap();
     let runtime = runtime("polled");
     let running = runtime.block_on(tailcast::app::start(config)).unwrap_or_else(|stop| panic!("{stop:?}"));
     let polled = running.address();

@@ -3,6 +3,9 @@
 //! A handler takes apart a request, makes one service call and puts together a response; everything that can go wrong
 //! is an [`ApiError`], which the outermost layer answers as a problem document.
 
+mod access;
+mod admission;
+mod audit;
 mod backtests;
 mod decode;
 mod docs;
@@ -27,23 +30,26 @@ mod web;
 mod webhooks;
 
 use std::sync::Arc;
+use std::time::Instant;
 
-use axum::extract::{Request, State};
 use axum::http::{HeaderMap, Method, Uri};
-use axum::middleware::{self, Next};
+use axum::middleware;
 use axum::response::{IntoResponse, Response};
 use axum::{Extension, Router};
 use metrics_exporter_prometheus::PrometheusHandle;
-use tokio::sync::Semaphore;
 use tower_http::catch_panic::CatchPanicLayer;
 use utoipa::openapi::OpenApi;
 use utoipa_axum::router::OpenApiRouter;
 
 use crate::config::{Config, HttpConfig, JobsConfig, LimitsConfig};
 use crate::service::{GaugeCaps, Service};
+use access::Access;
+use admission::Admission;
+use observe::Observation;
 use polled::Polled;
 use streams::Streams;
 
+pub use access::{RULES as ACCESS_RULES, Rule as AccessRule};
 pub use error::ApiError;
 pub use examples::forecast_request as example_request;
 pub use extract::read_json;
@@ -74,6 +80,8 @@ pub struct AppState {
     pub streams: Streams,
     /// Copies of latest forecasts.
     pub polled: Polled,
+    /// Who may ask for what.
+    pub access: Access,
 }
 
 impl AppState {
@@ -81,6 +89,7 @@ impl AppState {
     pub fn new(service: Service, config: &Config, metrics: PrometheusHandle) -> Self {
         let told = config.metrics;
         Self {
+            access: Access::new(service.clone(), config),
             polled: Polled::new(service.clone(), config.http.polled_bytes),
             service,
             http: Arc::new(config.http.clone()),
@@ -97,18 +106,31 @@ impl AppState {
 #[derive(Clone)]
 pub struct Front {
     polled: Polled,
+    access: Access,
     router: Router,
 }
 
 impl Front {
     /// The whole of the service.
     pub fn new(state: AppState) -> Self {
-        Self { polled: state.polled.clone(), router: router(state) }
+        Self { polled: state.polled.clone(), access: state.access.clone(), router: router(state) }
     }
 
     /// The answer to a request that can be answered without waiting for anything; it takes no place of `http.max_in_flight`.
     pub fn at_once(&self, method: &Method, uri: &Uri, headers: &HeaderMap) -> Option<Response> {
-        self.polled.at_once(method, uri, headers)
+        self.polled.at_once(method, uri, headers, &self.access)
+    }
+
+    /// The refusal of a request that comes by a connection more than there may be, unless whoever runs the service asks how it is:
+    /// what stands outside of /v1 is always answered.
+    pub fn refused(&self, method: &Method, uri: &Uri, headers: &HeaderMap) -> Option<Response> {
+        if !uri.path().starts_with("/v1/") {
+            return None;
+        }
+        let started = Instant::now();
+        let mut refusal = ApiError::TooManyConnections.into_response();
+        Observation::begin(started, method, "unmatched", uri.path(), headers).finish(&mut refusal);
+        Some(refusal)
     }
 
     /// The routes, for what is not answered at once.
@@ -119,12 +141,19 @@ impl Front {
 
 /// Every route with every layer around it.
 fn router(state: AppState) -> Router {
-    let places = Arc::new(Semaphore::new(state.http.max_in_flight.min(Semaphore::MAX_PERMITS)));
+    let admission = Admission::new(&state.http, state.service.clone());
     let (work, _) = work_routes().split_for_parts();
-    let work = work.layer(middleware::from_fn_with_state(places, admit));
+    let work = work.layer(middleware::from_fn_with_state(admission, admission::admit));
     let (around, _) = around_routes().split_for_parts();
     let document = docs::DocumentText(openapi_text().into());
-    observed(work.merge(around).merge(docs::pages()).merge(web::routes()).layer(Extension(document))).with_state(state)
+    let routes = work.merge(around).merge(docs::pages()).merge(web::routes()).layer(Extension(document));
+    // Whoever may not ask takes no place, and whoever asks first what is allowed needs no key.
+    let routes = routes.layer(middleware::from_fn_with_state(state.access.clone(), access::guard));
+    let routes = match access::cors(&state.http.allowed_origins) {
+        Some(cors) => routes.layer(cors),
+        None => routes,
+    };
+    observed(routes).with_state(state)
 }
 
 /// Routes with the outermost layers: whatever happens inside, a response leaves, and an error leaves as a problem.
@@ -135,7 +164,7 @@ fn observed<S: Clone + Send + Sync + 'static>(routes: Router<S>) -> Router<S> {
 /// The OpenAPI document; needs no database and no configuration.
 pub fn openapi() -> OpenApi {
     let routes = OpenApiRouter::with_openapi(docs::preamble()).merge(work_routes()).merge(around_routes());
-    webhooks::with_webhooks(docs::with_exclusive_fields(routes.into_openapi()))
+    access::with_access(webhooks::with_webhooks(docs::with_exclusive_fields(routes.into_openapi())))
 }
 
 /// The OpenAPI document as it is served and committed.
@@ -152,19 +181,12 @@ fn work_routes() -> OpenApiRouter<AppState> {
         .merge(networks::routes())
         .merge(backtests::routes())
         .merge(jobs::routes())
+        .merge(audit::routes())
 }
 
 /// Routes that must answer however busy the others are.
 fn around_routes() -> OpenApiRouter<AppState> {
     OpenApiRouter::new().merge(probes::routes()).merge(docs::routes())
-}
-
-/// Turns a request away at once when all places are taken.
-async fn admit(State(places): State<Arc<Semaphore>>, request: Request, next: Next) -> Response {
-    match places.try_acquire() {
-        Ok(_place) => next.run(request).await,
-        Err(_) => ApiError::Full.into_response(),
-    }
 }
 
 #[cfg(test)]

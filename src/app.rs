@@ -1,9 +1,12 @@
 //! The program: its commands, and how the parts are put together for each.
 
+mod backup;
+mod bookkeeping;
 mod check;
 mod connections;
 mod demo;
 mod follow;
+mod keys;
 mod offline;
 mod serve;
 mod tally;
@@ -19,6 +22,7 @@ use tokio::runtime::Runtime;
 use crate::config::{Config, LogConfig};
 use crate::service::Service;
 use crate::{api, telemetry};
+use keys::KeysCommand;
 use offline::{Completion, Look};
 use tally::TallyOptions;
 
@@ -64,12 +68,30 @@ enum Command {
         /// The job's id, or its address as a 202 gives it
         job: String,
     },
+    /// Make, list and revoke access keys
+    Keys {
+        #[command(subcommand)]
+        command: KeysCommand,
+    },
     /// Ask the service at `bind` whether it is ready; ends with 0 when it is
     Check,
     /// Print the OpenAPI document
     Openapi,
     /// Bring the database's tables up to date
     Migrate,
+    /// Copy the database into FILE, also while the service runs; the copy is checked
+    Backup {
+        /// Where the copy goes
+        file: PathBuf,
+        /// Put it in the place of a file that is there already
+        #[arg(long)]
+        replace: bool,
+    },
+    /// Put a backup in the database's place, with the service stopped; what stood there is kept beside it
+    Restore {
+        /// The backup
+        file: PathBuf,
+    },
 }
 
 /// Form of an answer on the standard output.
@@ -129,11 +151,14 @@ fn dispatch(line: CommandLine) -> Result<(), Stop> {
             offline::forecast(&config, &file, &completion, &look.of(format)?)
         }
         Command::Openapi => Ok(()),
-        Command::Follow { job } => follow::follow(config.bind, &job),
+        Command::Follow { job } => follow::follow(&config, &job),
+        Command::Keys { command } => runtime()?.block_on(keys::run(&config.database, command)),
         Command::Check => check::ready(config.bind),
         Command::Migrate => {
             runtime()?.block_on(Service::migrate(&config.database)).map_err(|error| Stop::failed("migration", error))
         }
+        Command::Backup { file, replace } => backup::make(&config.database, &file, replace),
+        Command::Restore { file } => backup::put_back(&config.database, &file),
         Command::Demo { once } => {
             // The demo's own output is what counts; requests are not logged into it.
             let quiet = LogConfig { filter: "warn".to_owned(), ..config.log.clone() };

@@ -1,7 +1,10 @@
 //! Settings: the compiled-in defaults, then a file, then `TAILCAST_*` variables; one small struct a concern.
 
+mod access;
 mod fault;
+mod kinds;
 mod notices;
+mod retention;
 mod telemetry;
 
 use std::collections::BTreeMap;
@@ -13,8 +16,10 @@ use config::{File, FileFormat, Value, ValueKind};
 use serde::de::Error as _;
 use serde::{Deserialize, Deserializer};
 
+pub use access::{AccessConfig, KeysNeeded};
 pub use fault::SettingsError;
 pub use notices::NoticesConfig;
+pub use retention::RetentionConfig;
 pub use telemetry::TelemetryConfig;
 
 use crate::webhook::SecretFault;
@@ -24,7 +29,11 @@ const DEFAULTS: &str = include_str!("../config/default.toml");
 const MOST_THREADS: u64 = 1024;
 /// Longest time, seconds: what runs for longer than a day is no request.
 const DAY_SECONDS: u64 = 86_400;
+/// Most connections: a number below what systems give a process of descriptors at most.
+const MOST_CONNECTIONS: u64 = 1_000_000;
 const YEAR_HOURS: u64 = 8_766;
+/// Longest age that anything is kept to, days: ten years.
+const MOST_DAYS: u64 = 3_653;
 /// Most of anything counted or measured in bytes.
 const MOST_THINGS: u64 = 1 << 40;
 /// Most values of one label among the metrics.
@@ -40,6 +49,8 @@ pub struct Config {
     pub bind: SocketAddr,
     /// Where runs are kept.
     pub database: DatabaseConfig,
+    /// Who may ask.
+    pub access: AccessConfig,
     /// Limits of the HTTP side.
     pub http: HttpConfig,
     /// Limits of the computing side.
@@ -52,6 +63,8 @@ pub struct Config {
     pub metrics: MetricsConfig,
     /// Calls to other machines.
     pub notices: NoticesConfig,
+    /// How long what is stored is kept.
+    pub retention: RetentionConfig,
     /// Logging.
     pub log: LogConfig,
     /// Traces.
@@ -62,22 +75,41 @@ pub struct Config {
 #[derive(Debug, Clone, PartialEq, Deserialize)]
 #[serde(deny_unknown_fields)]
 pub struct DatabaseConfig {
-    /// `sqlite://FILE`.
+    /// `sqlite://FILE` or `postgres://USER@HOST/DATABASE`.
     pub url: String,
-    /// Connections that read at the same time.
+    /// Connections that read a file at the same time.
     pub readers: u32,
+    /// Connections to a server.
+    pub connections: u32,
     /// Longest wait for another process's lock, milliseconds.
     pub busy_timeout_ms: u64,
+    /// Longest time that the start spends on looking for damage, milliseconds.
+    pub check_on_start_ms: u64,
     /// Whether `serve` brings the tables up to date.
     pub migrate_on_start: bool,
+}
+
+impl DatabaseConfig {
+    /// Longest time that the start spends on looking for damage.
+    pub fn check_on_start(&self) -> Duration {
+        Duration::from_millis(self.check_on_start_ms)
+    }
 }
 
 /// Limits of the HTTP side.
 #[derive(Debug, Clone, PartialEq, Deserialize)]
 #[serde(deny_unknown_fields)]
 pub struct HttpConfig {
+    /// Connections open at the same time.
+    pub max_connections: usize,
     /// Largest request body, bytes.
     pub body_limit_bytes: usize,
+    /// Memory for the bodies of all requests in work, bytes.
+    pub bodies_bytes: usize,
+    /// Memory for all answers on their way, bytes.
+    pub answers_bytes: usize,
+    /// Longest time in which a client takes nothing of an answer worth speaking of, seconds.
+    pub answer_pause_seconds: u64,
     /// Longest time to send a request's head, seconds.
     pub head_timeout_seconds: u64,
     /// Longest time to send a body, seconds.
@@ -94,6 +126,9 @@ pub struct HttpConfig {
     pub drain_seconds: u64,
     /// Time to finish after that, seconds.
     pub shutdown_grace_seconds: u64,
+    /// Origins whose pages may ask.
+    #[serde(deserialize_with = "access::origins")]
+    pub allowed_origins: Vec<String>,
 }
 
 impl HttpConfig {
@@ -105,6 +140,11 @@ impl HttpConfig {
     /// Longest time to send a body.
     pub fn body_timeout(&self) -> Duration {
         Duration::from_secs(self.body_timeout_seconds)
+    }
+
+    /// Longest time in which a client takes nothing of an answer worth speaking of.
+    pub fn answer_pause(&self) -> Duration {
+        Duration::from_secs(self.answer_pause_seconds)
     }
 
     /// Time between two signs of life on a stream of events.
@@ -270,7 +310,7 @@ impl Config {
     ) -> Result<Self, SettingsError> {
         let defaults = config::Config::builder().add_source(File::from_str(DEFAULTS, FileFormat::Toml)).build()?;
         let keys = variable_keys(&defaults);
-        let mut builder = config::Config::builder().add_source(defaults);
+        let mut builder = config::Config::builder().add_source(defaults.clone());
         if let Some(path) = file {
             let given = config::Config::builder().add_source(File::from(path).format(FileFormat::Toml)).build()?;
             let unknown: Vec<String> =
@@ -279,6 +319,7 @@ impl Config {
                 let known = keys.values().cloned().collect::<Vec<_>>().join(", ");
                 return Err(SettingsError::UnknownKeys { file: path.display().to_string(), keys: unknown, known });
             }
+            kinds::check_file(&defaults.cache, &given.cache, "")?;
             builder = builder.add_source(given);
         }
         let (own, others): (Vec<_>, Vec<_>) = variables.partition(|(name, _)| name.starts_with(VARIABLE_PREFIX));
@@ -290,6 +331,7 @@ impl Config {
                 let known = keys.keys().cloned().collect::<Vec<_>>().join(", ");
                 return Err(SettingsError::UnknownVariable { name, known });
             };
+            kinds::check_text(&defaults.cache, key, &value)?;
             builder = builder.set_override(key, value)?;
         }
         builder.build()?.try_deserialize::<Self>()?.checked()
@@ -297,7 +339,7 @@ impl Config {
 
     fn checked(self) -> Result<Self, SettingsError> {
         let (database, http, compute, limits) = (&self.database, &self.http, &self.compute, &self.limits);
-        let (jobs, metrics, notices) = (&self.jobs, &self.metrics, &self.notices);
+        let (jobs, metrics, notices, retention) = (&self.jobs, &self.metrics, &self.notices, &self.retention);
         if !notices.destinations.is_empty() && notices.secret.is_none() {
             let (key, with) = ("notices.secret", "notices.destinations");
             return Err(SettingsError::Missing { key, with, why: SecretFault.to_string() });
@@ -305,7 +347,13 @@ impl Config {
         let ranges = [
             ("database.readers", u64::from(database.readers), 1, MOST_THREADS),
             ("database.busy_timeout_ms", database.busy_timeout_ms, 0, DAY_SECONDS * 1000),
+            ("http.max_connections", http.max_connections as u64, 1, MOST_CONNECTIONS),
+            ("database.check_on_start_ms", database.check_on_start_ms, 0, DAY_SECONDS * 1000),
             ("http.body_limit_bytes", http.body_limit_bytes as u64, 1, MOST_THINGS),
+            // A body as large as may be must fit into it, with the room in which it grows.
+            ("http.bodies_bytes", http.bodies_bytes as u64, 2 * http.body_limit_bytes as u64, MOST_THINGS),
+            ("http.answers_bytes", http.answers_bytes as u64, 1, MOST_THINGS),
+            ("http.answer_pause_seconds", http.answer_pause_seconds, 1, DAY_SECONDS),
             ("http.head_timeout_seconds", http.head_timeout_seconds, 1, DAY_SECONDS),
             ("http.body_timeout_seconds", http.body_timeout_seconds, 1, DAY_SECONDS),
             ("http.max_in_flight", http.max_in_flight as u64, 1, MOST_THINGS),
@@ -317,6 +365,7 @@ impl Config {
             ("compute.workers", compute.workers as u64, 0, MOST_THREADS),
             ("compute.queue", compute.queue as u64, 0, MOST_THINGS),
             ("compute.budget_seconds", compute.budget_seconds, 1, DAY_SECONDS),
+            ("access.audit_days", self.access.audit_days, 1, MOST_THINGS / DAY_SECONDS),
             ("jobs.workers", jobs.workers as u64, 1, MOST_THREADS),
             ("jobs.refresh_workers", jobs.refresh_workers as u64, 1, MOST_THREADS),
             ("jobs.refresh_seconds", jobs.refresh_seconds, 1, DAY_SECONDS),
@@ -334,6 +383,17 @@ impl Config {
             ("limits.network_rows", limits.network_rows as u64, 1, MOST_THINGS),
             ("limits.cells", limits.cells as u64, 1, MOST_THINGS),
             ("telemetry.timeout_seconds", self.telemetry.timeout_seconds, 1, 300),
+            ("retention.forecasts_days", retention.forecasts_days, 0, MOST_DAYS),
+            ("retention.forecasts_most", retention.forecasts_most, 0, MOST_THINGS),
+            ("retention.fits_days", retention.fits_days, 0, MOST_DAYS),
+            ("retention.fits_most", retention.fits_most, 0, MOST_THINGS),
+            ("retention.issued_days", retention.issued_days, 0, MOST_DAYS),
+            ("retention.backtests_days", retention.backtests_days, 0, MOST_DAYS),
+            ("retention.backtests_most", retention.backtests_most, 0, MOST_THINGS),
+            ("retention.jobs_days", retention.jobs_days, 0, MOST_DAYS),
+            ("retention.jobs_most", retention.jobs_most, 0, MOST_THINGS),
+            ("retention.keys_hours", retention.keys_hours, 1, YEAR_HOURS),
+            ("retention.every_seconds", retention.every_seconds, 1, DAY_SECONDS),
             ("notices.attempts_for_hours", notices.attempts_for_hours, 1, YEAR_HOURS),
             ("notices.timeout_seconds", notices.timeout_seconds, 1, 300),
             ("notices.first_pause_ms", notices.first_pause_ms, 1, DAY_SECONDS * 1000),
@@ -408,6 +468,35 @@ mod tests {
         std::fs::write(&path, "colour = 1\n[http]\nmax_inflight = 3\n").unwrap();
         let error = Config::from_sources(Some(&path), std::iter::empty()).unwrap_err().to_string();
         assert!(error.contains("colour, http.max_inflight;"), "{error}");
+    }
+
+    #[test]
+    fn a_value_of_another_kind_is_refused_not_cast() {
+        let folder = tempfile::tempdir().unwrap();
+        let path = folder.path().join("settings.toml");
+        for (line, words) in [
+            ("wait_seconds = -3.0", "jobs.wait_seconds must be a whole number that is not negative, not -3"),
+            ("wait_seconds = 3.7", "not 3.7"),
+            ("wait_seconds = true", "not true"),
+            ("wait_seconds = -3", "not -3"),
+            ("wait_seconds = \"7\"", "not 7"),
+        ] {
+            std::fs::write(&path, format!("[jobs]\n{line}\n")).unwrap();
+            let error = Config::from_sources(Some(&path), std::iter::empty()).unwrap_err().to_string();
+            assert!(error.contains(words), "{line}: {error}");
+        }
+        std::fs::write(&path, "[database]\nmigrate_on_start = 1\n").unwrap();
+        let error = Config::from_sources(Some(&path), std::iter::empty()).unwrap_err().to_string();
+        assert!(error.contains("database.migrate_on_start must be true or false, not 1"), "{error}");
+        for (name, value) in [
+            ("TAILCAST_JOBS_WAIT_SECONDS", "3.7"),
+            ("TAILCAST_JOBS_WAIT_SECONDS", "true"),
+            ("TAILCAST_JOBS_WAIT_SECONDS", ""),
+            ("TAILCAST_DATABASE_MIGRATE_ON_START", "2"),
+        ] {
+            let error = with(&[(name, value)]).unwrap_err().to_string();
+            assert!(error.contains("must be"), "{name} = {value}: {error}");
+        }
     }
 
     #[test]

@@ -391,5 +391,11 @@ pub enum FitError {
     Cancelled,
     /// Growth between two snapshots cannot be computed.
     #[error(transparent)]
-    Growth(#[from] GrowthError),
+    Growth(GrowthError),
+}
+
+impl From<GrowthError> for FitError {
+    fn from(error: GrowthError) -> Self {
+        if error == GrowthError::Cancelled { Self::Cancelled } else { Self::Growth(error) }
+    }
 }

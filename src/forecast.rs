@@ -122,8 +122,14 @@ pub struct DateForecast {
 pub enum ForecastError {
     /// Growth to a date cannot be computed.
     #[error(transparent)]
-    Growth(#[from] GrowthError),
+    Growth(GrowthError),
     /// The caller asked to stop.
     #[error("the forecast was cancelled")]
     Cancelled,
+}
+
+impl From<GrowthError> for ForecastError {
+    fn from(error: GrowthError) -> Self {
+        if error == GrowthError::Cancelled { Self::Cancelled } else { Self::Growth(error) }
+    }
 }

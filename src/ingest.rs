@@ -83,6 +83,15 @@ pub enum IngestError {
         /// Why.
         error: io::Error,
     },
+    /// The compressed bytes expand beyond all measure.
+    #[error(
+        "the gzip data expand to more than {} times their size after line {line}, which no list of links does; send the list as it is",
+        source::MOST_EXPANSION
+    )]
+    Expanding {
+        /// Last line read.
+        line: u64,
+    },
     /// The columns are not told.
     #[error("line {line}: {reason}")]
     Header {

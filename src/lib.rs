@@ -2,7 +2,7 @@
 //! it means for capacity.
 //!
 //! The core (`numerics`, `model`, `census`, `growth`, `fit`, `forecast`, `evaluate`) is plain, synchronous and
-//! deterministic. The boundary (`ingest`, `webhook`, `store`, `service`, `api`, `report`, `app`) needs the feature `server`.
+//! deterministic. The boundary (`credential`, `ingest`, `webhook`, `store`, `service`, `api`, `report`, `app`) needs the feature `server`.
 //! DEVELOPERS.md has the map.
 
 pub mod census;
@@ -19,6 +19,8 @@ pub mod api;
 pub mod app;
 #[cfg(feature = "server")]
 pub mod config;
+#[cfg(feature = "server")]
+pub mod credential;
 #[cfg(feature = "server")]
 pub mod ingest;
 #[cfg(feature = "server")]

@@ -1,8 +1,10 @@
 //! Use cases: check, compute off the runtime within a time budget, keep the run, answer with what was kept.
 
+mod access;
 mod accounts;
 mod accuracy;
 mod answers;
+mod background;
 mod backtests;
 mod compute;
 mod cpu;
@@ -20,31 +22,37 @@ mod numbers;
 mod plan;
 mod questions;
 mod runs;
+mod upkeep;
 
 use std::future::Future;
 use std::sync::Arc;
 use std::sync::atomic::{AtomicBool, Ordering};
+use std::time::Duration;
 
 use tokio::sync::Semaphore;
+use tokio::time::timeout;
 use tracing::{Instrument, info_span};
 
-use crate::config::{Config, DatabaseConfig};
+use crate::config::{Config, DatabaseConfig, RetentionConfig};
 use crate::model::MAX_SNAPSHOTS;
-use crate::store::{Caps, Store, StoreError};
+use crate::store::{Caps, Store, StoreError, author, authored_on};
 use gauges::Briefs;
 use jobs::Board;
+use news::TellingCache;
 use notices::Notices;
 
 pub use crate::evaluate::OriginRequest;
 pub use crate::fit::{FitRequest, Fixed, Model, ModelChoice, Rung};
 pub use crate::ingest::FaultPolicy;
 pub use crate::store::{
-    BacktestSummary, Clash, JobFilter, JobKind, JobState, KeyClaim, LatestForecast, LatestStamp, NetworkSummary,
-    NewNetwork, NoticeKind, QuestionKind, RefreshState, RefreshStatus, RunFilter, RunKind, RunSummary, SnapshotSummary,
-    StoredBacktest, StoredJob, StoredLinkEvents, StoredNetwork, StoredQuestion, StoredRun, StoredSnapshot,
-    StoredTransitions, TransitionsSummary, Upload,
+    AuditFilter, AuditLine, Authorship, BacktestSummary, BackupError, BackupReport, Belonging, Clash, JobFilter,
+    JobKind, JobState, KeyClaim, KeyScope, LatestForecast, LatestStamp, NetworkSummary, NewNetwork, NoticeKind,
+    QuestionKind, RefreshState, RefreshStatus, RestoreReport, RunFilter, RunKind, RunSummary, SnapshotSummary,
+    StoreFault, StoredBacktest, StoredJob, StoredKey, StoredLinkEvents, StoredNetwork, StoredQuestion, StoredRun,
+    StoredSnapshot, StoredTransitions, TransitionsSummary, Upload, authored, back_up, restore,
 };
 pub use crate::webhook::{AddressFault, Target};
+pub use access::{Allowance, KeyCabinet, KeyError, KeyFault, KeyRing, KeyTerms, LiveKey, Meter, Spent, Standing};
 pub use accounts::{DateOutcome, IntervalOutcome, OutcomeAnswer, TailOutcome};
 pub use accuracy::{
     AccuracyAnswer, CoverageAnswer, DateAccount, DriftAnswer, DriftCauseName, ForecastAccounts, SummaryAnswer,
@@ -59,6 +67,7 @@ pub use answers::{
     SustainableAnswer, TailAnswer, TailCountAnswer, TailDifferenceAnswer, TailPointAnswer, TransitionsAnswer,
     WarningAnswer, WatchAnswer, WatchedClassAnswer, WatchedDegreeAnswer, WatchedNodeAnswer,
 };
+pub use background::{Unfinished, converted};
 pub use backtests::{
     BacktestRequest, BacktestRun, CoverageRow, DEFAULT_AHEAD, ErrorsAnswer, MOST_AHEAD, MemberErrors, PooledErrors,
     ScoreAnswer,
@@ -94,15 +103,23 @@ const TRACES: &str = "tailcast::traces";
 pub struct Service {
     store: Store,
     cpu: CpuPool,
+    keys: KeyRing,
     caps: Caps,
     jobs: Board,
     /// What the gauges tell of forecasts, read once each.
     briefs: Briefs,
+    /// What followers of networks are told of forecasts, read once for all of them.
+    told: TellingCache,
     notices: Notices,
+    retention: RetentionConfig,
+    /// Whether the start looked at all of the database file.
+    checked_at_start: bool,
     /// Stored evidence may be large: no more runs hold some at once than can be computed at once.
     evidence_places: Arc<Semaphore>,
     /// Whether the process is about to stop.
     stopping: Arc<AtomicBool>,
+    /// Those that wait for it: as many as computations at work and waiting.
+    evidence_queue: Arc<Semaphore>,
 }
 
 impl Service {
@@ -112,21 +129,33 @@ impl Service {
     /// When the database cannot be opened or migrated.
     pub async fn open(config: &Config) -> Result<Self, StoreError> {
         let store = Store::connect(&config.database).await?;
+        let checked_at_start = Self::check_at_start(&store, config.database.check_on_start()).await?;
         if config.database.migrate_on_start {
             store.migrate().await?;
+        }
+        match store.raise_ids().await {
+            // Nothing is stored yet.
+            Err(StoreError::NoTable(_)) => {}
+            raised => raised?,
         }
         let caps = Caps { dates: MAX_SNAPSHOTS as u64, rows: config.limits.network_rows as u64 };
         let cpu = CpuPool::new(&config.compute);
         let evidence_places = Arc::new(Semaphore::new(cpu.workers()));
+        let evidence_queue = Arc::new(Semaphore::new(cpu.most()));
         let (jobs, notices) = (Board::new(config.jobs), Notices::new(&config.notices));
         Ok(Self {
+            keys: KeyRing::new(store.clone()),
             store,
             cpu,
             caps,
             jobs,
             briefs: Briefs::default(),
+            told: TellingCache::default(),
             notices,
+            retention: config.retention,
+            checked_at_start,
             evidence_places,
+            evidence_queue,
             stopping: Arc::default(),
         })
     }
@@ -152,6 +181,7 @@ impl Service {
             return Err(ServiceError::Stopping);
         }
         let ready = async {
+            self.store.check_sound()?;
             self.check_tables().await?;
             Ok(self.store.try_write().await?)
         };
@@ -171,6 +201,11 @@ impl Service {
         self.stopping.store(true, Ordering::Relaxed);
     }
 
+    /// About how long it takes until the computations that wait are done.
+    pub fn backlog(&self) -> Duration {
+        self.cpu.backlog()
+    }
+
     /// Tells running computations and jobs to stop at their next step.
     pub fn cancel_all(&self) {
         self.cpu.stop();
@@ -179,15 +214,23 @@ impl Service {
 
     /// Closes the database.
     pub async fn close(&self) {
+        // What is not given up now is anybody's when the claim runs out.
+        if self.store.is_shared() && !matches!(timeout(RELEASE_TIME, self.store.release_claims()).await, Ok(Ok(()))) {
+            tracing::warn!("claims on jobs could not be given up; others wait until they run out");
+        }
         self.store.close().await;
     }
 }
+
+/// Longest wait for claims on jobs to be given up at the stop.
+const RELEASE_TIME: Duration = Duration::from_secs(2);
 
 /// Runs a write in a task of its own: a caller that goes away in the middle cannot leave it half done.
 async fn in_own_task<T: Send + 'static>(
     write: impl Future<Output = Result<T, ServiceError>> + Send + 'static,
 ) -> Result<T, ServiceError> {
-    match tokio::spawn(write.instrument(info_span!(target: TRACES, "write"))).await {
+    // Whose write it is goes with it.
+    match tokio::spawn(authored_on(author(), write).instrument(info_span!(target: TRACES, "write"))).await {
         Ok(outcome) => outcome,
         Err(error) => Err(ServiceError::Broken(format!("a write stopped short: {error}"))),
     }

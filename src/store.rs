@@ -1,16 +1,23 @@
-//! The only SQL: runs and their idempotency keys, tracked networks and what is known of them, jobs, in SQLite.
+//! The only SQL: runs and their idempotency keys, tracked networks and what is known of them, jobs, in SQLite or PostgreSQL.
 //!
-//! One connection writes, a pool of read-only ones reads. A run and its key are one `BEGIN IMMEDIATE` transaction, and so
+//! Of a file, one connection writes and a pool of read-only ones reads. A run and its key are one `BEGIN IMMEDIATE` transaction, and so
 //! is every other write that looks before it leaps, each at `synchronous = FULL`: what was acknowledged is on disk, through a killed process
-//! and through a power cut. A write into a file that no longer stands at its path is never acknowledged.
+//! and through a power cut. A write into a file that no longer stands at its path is never acknowledged. On a server, which
+//! replicas share, a write is alone among those of its scope (see `writes`), and its server's own settings say when it is on disk.
 
 mod accounts;
+mod audit;
 mod backtests;
+mod backup;
 mod columns;
 mod connect;
 mod derived;
 mod file;
+mod health;
+mod ids;
+mod integrity;
 mod jobs;
+mod keys;
 mod latest;
 mod link_events;
 mod networks;
@@ -19,23 +26,36 @@ mod notices;
 mod outbox;
 mod questions;
 mod refreshes;
+mod retention;
 mod runs;
+mod sizes;
 mod snapshots;
 mod spool;
+mod statement;
 mod transitions;
 mod writes;
 
+use std::io::ErrorKind;
 use std::path::PathBuf;
 use std::sync::Arc;
 
 use file::DatabaseFile;
-use sqlx::SqlitePool;
+use health::Health;
+use sqlx::postgres::PgDatabaseError;
+use sqlx::{PgPool, SqlitePool};
 use tokio::sync::watch;
+use uuid::Uuid;
 
 pub use accounts::{AccountKey, IssuedRun, NewAccount, StoredAccount};
+pub use audit::{AuditFilter, AuditLine, Authorship, author, authored, authored_on};
 pub use backtests::{BacktestSummary, BacktestWrite, NewBacktest, StoredBacktest};
+pub use backup::{BackupError, BackupReport, RestoreReport, back_up, restore};
 pub use derived::DerivedEvidence;
-pub use jobs::{CalledOff, JobFilter, JobKind, JobState, StoredJob};
+pub use health::StoreFault;
+pub use ids::next_id;
+pub use integrity::Checked;
+pub use jobs::{CalledOff, JobFilter, JobKind, JobStart, JobState, StoredJob};
+pub use keys::{Belonging, KeyScope, KeyUse, StoredKey};
 pub use latest::{LatestForecast, LatestLine, LatestStamp, LatestWithCadence};
 pub use link_events::StoredLinkEvents;
 pub use networks::{NetworkSummary, NewNetwork, StoredEvidence, StoredNetwork};
@@ -44,9 +64,11 @@ pub use notices::{Deliveries, NewNotice, NoticeKind, StoredNotice};
 pub use outbox::{DueNotice, PendingEvent, Signal};
 pub use questions::{QuestionKind, StoredQuestion};
 pub use refreshes::{Change, RefreshEnd, RefreshEnded, RefreshState, RefreshStatus};
+pub use retention::{RetentionKind, RetentionRules};
 pub use runs::{Inserted, KeyClaim, NewRun, RunFilter, RunKind, RunSummary, StoredOrigin, StoredRun};
+pub use sizes::Sizes;
 pub use snapshots::{SnapshotSummary, StoredSnapshot};
-pub use spool::Upload;
+pub use spool::{Spooled, Upload};
 pub use transitions::{EndTags, StoredTransitions, TransitionsSummary};
 pub use writes::{Caps, Clash, WriteError};
 
@@ -54,17 +76,38 @@ pub use writes::{Caps, Clash, WriteError};
 const SQLITE_BUSY: u32 = 5;
 const SQLITE_READONLY: u32 = 8;
 const SQLITE_IOERR: u32 = 10;
+const SQLITE_CORRUPT: u32 = 11;
 const SQLITE_FULL: u32 = 13;
 const SQLITE_CANTOPEN: u32 = 14;
+const SQLITE_NOTADB: u32 = 26;
+
+// SQLSTATEs: https://www.postgresql.org/docs/15/errcodes-appendix.html
+/// Serialisation failure, deadlock, lock not available, too many connections, a statement's time is over.
+const POSTGRES_BUSY: [&str; 5] = ["40001", "40P01", "55P03", "53300", "57014"];
+/// Connection lost, out of memory, shut down or starting, a failing system, no such database, not allowed in, idle for too long.
+const POSTGRES_UNUSABLE: [&str; 7] = ["08", "53", "57P", "58", "3D000", "28", "25P03"];
+const POSTGRES_FULL: &str = "53100";
+const POSTGRES_READ_ONLY: &str = "25006";
+const POSTGRES_NO_TABLE: &str = "42P01";
 
 /// The database.
 #[derive(Debug, Clone)]
 pub struct Store {
-    write: SqlitePool,
-    read: SqlitePool,
-    file: DatabaseFile,
+    home: Home,
+    /// Tells this process from others on the same database.
+    process: Uuid,
+    health: Health,
     /// Writes of this process that have ended.
     commits: Arc<watch::Sender<u64>>,
+}
+
+/// Where rows live.
+#[derive(Debug, Clone)]
+enum Home {
+    /// A file, of this process alone: one connection writes.
+    Sqlite { write: SqlitePool, read: SqlitePool, file: DatabaseFile },
+    /// A server, shared with other processes.
+    Postgres { pool: PgPool },
 }
 
 /// Why the database did not do as asked.
@@ -87,7 +130,19 @@ pub enum StoreError {
         /// Where it stood.
         path: PathBuf,
     },
-    /// The file can be neither read nor written as it stands: read-only, a full disk, a failing one.
+    /// The disk is full.
+    #[error("the disk that the database lies on is full: {0}")]
+    Full(#[source] sqlx::Error),
+    /// The file, or the file system it lies on, takes no writes.
+    #[error("the database can only be read: {0}")]
+    ReadOnly(#[source] sqlx::Error),
+    /// The file is damaged; what was found.
+    #[error(
+        "the database file is damaged ({0}); stop the service, keep the file aside, and put a backup in its place with \
+         `tailcast restore FILE`"
+    )]
+    Damaged(String),
+    /// The file can be neither read nor written as it stands: a failing disk, a lost mount.
     #[error("the database cannot be used: {0}")]
     Unusable(#[source] sqlx::Error),
     /// A table of this version is missing.
@@ -109,14 +164,32 @@ impl From<sqlx::Error> for StoreError {
         let sqlx::Error::Database(inner) = &error else {
             return match error {
                 sqlx::Error::PoolTimedOut => Self::Busy(error),
-                sqlx::Error::Io(_) => Self::Unusable(error),
+                sqlx::Error::Io(ref io) => match io.kind() {
+                    ErrorKind::StorageFull | ErrorKind::QuotaExceeded | ErrorKind::FileTooLarge => Self::Full(error),
+                    ErrorKind::ReadOnlyFilesystem => Self::ReadOnly(error),
+                    _ => Self::Unusable(error),
+                },
+                sqlx::Error::Tls(_) => Self::Unusable(error),
                 _ => Self::Failed(error),
             };
         };
+        if let Some(inner) = inner.try_downcast_ref::<PgDatabaseError>() {
+            return match inner.code() {
+                code if POSTGRES_BUSY.contains(&code) => Self::Busy(error),
+                POSTGRES_FULL => Self::Full(error),
+                POSTGRES_READ_ONLY => Self::ReadOnly(error),
+                code if POSTGRES_UNUSABLE.iter().any(|class| code.starts_with(class)) => Self::Unusable(error),
+                POSTGRES_NO_TABLE => Self::NoTable(error),
+                _ => Self::Failed(error),
+            };
+        }
         // Extended result codes carry the primary one in the low byte.
         match inner.code().and_then(|code| code.parse::<u32>().ok()).map(|code| code & 0xff) {
             Some(SQLITE_BUSY) => Self::Busy(error),
-            Some(SQLITE_READONLY | SQLITE_IOERR | SQLITE_FULL | SQLITE_CANTOPEN) => Self::Unusable(error),
+            Some(SQLITE_FULL) => Self::Full(error),
+            Some(SQLITE_READONLY) => Self::ReadOnly(error),
+            Some(SQLITE_CORRUPT | SQLITE_NOTADB) => Self::Damaged(error.to_string()),
+            Some(SQLITE_IOERR | SQLITE_CANTOPEN) => Self::Unusable(error),
             // The general code: the words alone tell a missing table from a mistake of ours.
             _ if inner.message().contains("no such table") => Self::NoTable(error),
             _ => Self::Failed(error),

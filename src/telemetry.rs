@@ -2,7 +2,8 @@
 
 mod traces;
 
-use std::io::IsTerminal;
+use std::borrow::Cow;
+use std::io::{self, IsTerminal, Write};
 use std::sync::OnceLock;
 use std::time::Duration;
 
@@ -15,6 +16,7 @@ use tracing_subscriber::util::SubscriberInitExt;
 use tracing_subscriber::{Layer, Registry, fmt, registry};
 
 use crate::config::{LogConfig, LogFormat, TelemetryConfig};
+use crate::credential::masked;
 pub use traces::{SPANS, Traces};
 
 /// Bounds of the time buckets, seconds: a polled read takes under a millisecond, a large forecast seconds.
@@ -43,11 +45,11 @@ pub enum StartError {
 pub fn start(log: &LogConfig, telemetry: &TelemetryConfig) -> Result<Traces, StartError> {
     let filter = EnvFilter::builder().parse(&log.filter)?.add_directive(format!("{SPANS}=off").parse()?);
     let traces = Traces::new(telemetry)?;
-    let colours = std::io::stderr().is_terminal();
+    let colours = io::stderr().is_terminal();
     let _already_started = match traces.tracer() {
         // One filter over everything costs less than one a layer, and polls would pay for it.
         None => {
-            let lines = fmt().with_env_filter(filter).with_writer(std::io::stderr).with_ansi(colours);
+            let lines = fmt().with_env_filter(filter).with_writer(|| Masking(io::stderr())).with_ansi(colours);
             match log.format {
                 LogFormat::Text => lines.try_init(),
                 LogFormat::Json => lines.json().flatten_event(true).try_init(),
@@ -55,7 +57,7 @@ pub fn start(log: &LogConfig, telemetry: &TelemetryConfig) -> Result<Traces, Sta
             .is_ok()
         }
         Some(tracer) => {
-            let lines = fmt::layer().with_writer(std::io::stderr).with_ansi(colours);
+            let lines = fmt::layer().with_writer(|| Masking(io::stderr())).with_ansi(colours);
             let lines: Box<dyn Layer<Registry> + Send + Sync> = match log.format {
                 LogFormat::Text => lines.boxed(),
                 LogFormat::Json => lines.json().flatten_event(true).boxed(),
@@ -92,6 +94,23 @@ pub async fn keep_metrics_small(handle: PrometheusHandle) {
     }
 }
 
+/// Writes a line of the log, with the secret part of every access key in it left out, whoever put it there.
+struct Masking<W>(W);
+
+impl<W: Write> Write for Masking<W> {
+    fn write(&mut self, line: &[u8]) -> io::Result<usize> {
+        match std::str::from_utf8(line).map(masked) {
+            Ok(Cow::Owned(safe)) => self.0.write_all(safe.as_bytes())?,
+            _ => self.0.write_all(line)?,
+        }
+        Ok(line.len())
+    }
+
+    fn flush(&mut self) -> io::Result<()> {
+        self.0.flush()
+    }
+}
+
 fn install() -> Result<PrometheusHandle, BuildError> {
     let handle = PrometheusBuilder::new().set_buckets(&SECONDS_BUCKETS)?.install_recorder()?;
     describe_counter!("tailcast_http_requests_total", "Requests answered, by method, route and status");
@@ -107,6 +126,13 @@ fn install() -> Result<PrometheusHandle, BuildError> {
         "tailcast_trace_exports_total",
         "Batches of spans sent to the collector, by outcome: delivered, failed"
     );
+    describe_gauge!("tailcast_database_bytes", Unit::Bytes, "The database file");
+    describe_gauge!("tailcast_database_log_bytes", Unit::Bytes, "The database's write-ahead log");
+    describe_gauge!("tailcast_database_free_bytes", Unit::Bytes, "Pages of the database file that hold nothing");
+    describe_gauge!("tailcast_database_rows", "Rows of the main tables");
+    describe_gauge!("tailcast_spool_bytes", Unit::Bytes, "Link lists that wait to be counted");
+    describe_gauge!("tailcast_disk_free_bytes", Unit::Bytes, "Free space on the database's disk");
+    describe_counter!("tailcast_retention_removed_total", "What retention removed, by kind");
     describe_gauge!("tailcast_build_info", "1, with the version as a label");
     gauge!("tailcast_build_info", "version" => env!("CARGO_PKG_VERSION")).set(1.0);
     Ok(handle)

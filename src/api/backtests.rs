@@ -71,9 +71,12 @@ async fn get_backtest(
 ) -> Result<Response, ApiError> {
     let made = state.service.backtest_run(backtest_id(&id)?).await?;
     let tag = form.tag(&made.tag);
-    let validator = Validator { tag: &tag, ..validator(&made) };
-    let mut response = representation::found(validator, form.format(), &headers, || content(&made, &form))?;
-    response.headers_mut().insert("backtest-state", state_of(&made));
+    let validator = Validator { tag: &tag, modified: Some(made.summary.created_at) };
+    let (format, state) = (form.format(), state_of(&made));
+    let light = format == ResultFormat::Json;
+    let drawn = representation::found_drawn(validator, format, &headers, light, move || content(&made, &form));
+    let mut response = drawn.await?;
+    response.headers_mut().insert("backtest-state", state);
     Ok(response)
 }
 

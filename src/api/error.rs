@@ -12,7 +12,7 @@ use axum::response::{IntoResponse, Response};
 use super::decode::{At, Fault, Faults, Place};
 use super::problem::Problem;
 use crate::report::{ChartError, ReportError, readable};
-use crate::service::{JobProblem, ServiceError, Thing};
+use crate::service::{JobProblem, ServiceError, StoreFault, Thing};
 
 /// After how long to try again when all places are taken.
 const BUSY_RETRY: Duration = Duration::from_secs(1);
@@ -81,10 +81,17 @@ pub enum ApiError {
         /// Where the answer is kept, when the request made it.
         kept: Option<String>,
     },
-    /// As many requests as configured are being served.
-    Full,
+    /// As many requests as configured are being served, or their bodies and answers take all the memory there is for them.
+    Full {
+        /// About how long it takes until what waits is done.
+        wait: Duration,
+    },
+    /// As many connections as configured are open, and none of them rests.
+    TooManyConnections,
     /// As many streams of events as configured are open.
     TooManyStreams,
+    /// Whoever asks may not.
+    Denied(Box<Problem>),
     /// A use case failed.
     Service(ServiceError),
     /// An invariant of this layer does not hold.
@@ -185,8 +192,14 @@ impl ApiError {
                 Problem::new(S::NOT_ACCEPTABLE, "not_acceptable", detail)
             }
             Self::NoChart { why, kept } => no_chart(&why, kept),
-            Self::Full => {
-                let detail = "As many requests as this service takes at once are being served; try again shortly.";
+            Self::Full { wait } => {
+                let detail = "As many requests as this service takes at once are being served, or as much memory as it has for bodies \
+                              and answers is taken; try again when Retry-After says.";
+                Problem::new(S::SERVICE_UNAVAILABLE, "overloaded", detail).retry_after(wait)
+            }
+            Self::TooManyConnections => {
+                let detail = "As many connections as this service keeps are open and at work; close some, use them for several \
+                              requests each, or raise http.max_connections.";
                 Problem::new(S::SERVICE_UNAVAILABLE, "overloaded", detail).retry_after(BUSY_RETRY)
             }
             Self::TooManyStreams => {
@@ -194,6 +207,7 @@ impl ApiError {
                               try again later, or raise http.max_streams.";
                 Problem::new(S::SERVICE_UNAVAILABLE, "too_many_streams", detail).retry_after(MENDING_RETRY)
             }
+            Self::Denied(problem) => *problem,
             Self::Service(error) => service_problem(error),
             Self::Broken(cause) => broken(cause),
         }
@@ -241,9 +255,9 @@ fn service_problem(error: ServiceError) -> Problem {
             Problem::new(S::NOT_FOUND, "no_forecast", format!("The network has no forecast yet: {}.", readable(&why)))
         }
         error @ (ServiceError::NoticesOff | ServiceError::NotListed) => notice_refused(&error),
-        ServiceError::Busy => {
-            let detail = "Every worker is taken and the queue is full; try again shortly.";
-            Problem::new(S::SERVICE_UNAVAILABLE, "overloaded", detail).retry_after(BUSY_RETRY)
+        ServiceError::Busy { wait } => {
+            let detail = "Every worker is taken and the queue is full; try again when Retry-After says.";
+            Problem::new(S::SERVICE_UNAVAILABLE, "overloaded", detail).retry_after(wait)
         }
         ServiceError::TooSlow { budget } => {
             let detail = format!(
@@ -285,16 +299,42 @@ fn service_problem(error: ServiceError) -> Problem {
                 .retry_after(BUSY_RETRY)
                 .because(error.to_string())
         }
-        error @ ServiceError::StoreUnavailable(_) => {
-            let detail = "The database cannot be used as it stands, so nothing can be kept; the log has the cause \
-                          under this request id. Try again when whoever runs this service has mended it.";
-            Problem::new(S::SERVICE_UNAVAILABLE, "store_unavailable", detail)
-                .retry_after(MENDING_RETRY)
-                .because(error.to_string())
-        }
+        ServiceError::StoreUnavailable(error) => store_problem(error.fault(), error.to_string()),
         error @ ServiceError::Store(_) => broken(error.to_string()),
         ServiceError::Broken(cause) => broken(cause),
     }
+}
+
+/// A database that is to be mended.
+fn store_problem(fault: StoreFault, cause: String) -> Problem {
+    let (code, detail) = match fault {
+        StoreFault::Full => (
+            "store_full",
+            "The disk that the database lies on is full, so nothing was kept; reading goes on. Try again when whoever runs this \
+             service has made room.",
+        ),
+        StoreFault::ReadOnly => (
+            "store_read_only",
+            "The database takes no writes as it stands, so nothing was kept; reading goes on. Try again when whoever runs this \
+             service has given leave to write its file.",
+        ),
+        StoreFault::Missing => (
+            "store_missing",
+            "The database file was removed or replaced, so nothing can be kept or read. Try again when whoever runs this service \
+             has put it back, or has started the service again on what stands there now.",
+        ),
+        StoreFault::Corrupt => (
+            "store_corrupt",
+            "The database file is damaged, so nothing is written to it; what can be read still is. Try again when whoever runs this \
+             service has put a backup in its place.",
+        ),
+        StoreFault::Busy | StoreFault::Unavailable => (
+            "store_unavailable",
+            "The database cannot be used as it stands, so nothing can be kept; the log has the cause under this request id. Try \
+             again when whoever runs this service has mended it.",
+        ),
+    };
+    Problem::new(StatusCode::SERVICE_UNAVAILABLE, code, detail).retry_after(MENDING_RETRY).because(cause)
 }
 
 /// A notice that would not be sent.

@@ -6,6 +6,7 @@ use axum::response::Response;
 use utoipa_axum::router::OpenApiRouter;
 use utoipa_axum::routes;
 
+use super::access::Sight;
 use super::extract::{ForecastForm, ForecastFormQuery, IdempotencyKey, JsonBody, Listing, ResultFormat, run_id};
 use super::problem::Problem;
 use super::representation::{Conditions, Content};
@@ -13,7 +14,7 @@ use super::requests::{ForecastRequestBody, read_forecast};
 use super::runs::{self, RunForm, RunPage};
 use super::{ApiError, AppState, examples};
 use crate::report;
-use crate::service::{ForecastRun, RunKind, StoredRun};
+use crate::service::{ForecastRun, RunFilter, RunKind, StoredRun};
 
 /// Where these runs are kept.
 pub const PATH: &str = "/v1/forecasts";
@@ -76,7 +77,7 @@ async fn create_forecast(
     let limits = state.limits;
     let inputs = body.read(move |raw, faults| read_forecast(raw, &limits, faults)).await?;
     let run = state.service.create(inputs, None, claim).await?;
-    runs::created(PATH, run, form)
+    runs::created(PATH, run, form).await
 }
 
 /// Read a forecast
@@ -119,7 +120,7 @@ async fn get_forecast(
     headers: HeaderMap,
 ) -> Result<Response, ApiError> {
     let run = state.service.run(RunKind::Forecast, run_id(&id)?).await?;
-    runs::found(run, form, &headers)
+    runs::found(run, form, &headers).await
 }
 
 /// List forecasts
@@ -144,8 +145,9 @@ async fn get_forecast(
         (status = 503, description = "Too busy", body = Problem, content_type = "application/problem+json"),
     )
 )]
-async fn list_forecasts(State(state): State<AppState>, listing: Listing) -> Result<Response, ApiError> {
-    let (found, more) = state.service.list(RunKind::Forecast, listing.filter.clone()).await?;
+async fn list_forecasts(State(state): State<AppState>, sight: Sight, listing: Listing) -> Result<Response, ApiError> {
+    let (found, more) =
+        state.service.list(RunKind::Forecast, RunFilter { seen_by: sight.0, ..listing.filter.clone() }).await?;
     runs::page(PATH, &listing, found, more)
 }
 

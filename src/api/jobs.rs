@@ -14,6 +14,7 @@ use utoipa_axum::router::OpenApiRouter;
 use utoipa_axum::routes;
 use uuid::Uuid;
 
+use super::access::Sight;
 use super::decode::{Fault, Faults, Place};
 use super::extract::{NoQuery, ResultFormat, parameters, prefers_events};
 use super::pages::{self, NO_CURSOR, escaped};
@@ -220,8 +221,8 @@ async fn get_job(
         Refusals,
     )
 )]
-async fn list_jobs(State(state): State<AppState>, listing: JobListing) -> Result<Response, ApiError> {
-    let (found, more) = state.service.list_jobs(listing.filter.clone()).await?;
+async fn list_jobs(State(state): State<AppState>, sight: Sight, listing: JobListing) -> Result<Response, ApiError> {
+    let (found, more) = state.service.list_jobs(JobFilter { seen_by: sight.0, ..listing.filter.clone() }).await?;
     let next = found.last().filter(|_| more).map(|last| {
         let network = listing.filter.network.as_deref().map(|name| format!("&network={}", escaped(name)));
         format!("{PATH}?cursor={}&limit={}{}", last.job.id, listing.filter.limit, network.unwrap_or_default())

@@ -23,6 +23,7 @@ use axum::response::{IntoResponse, Response};
 use utoipa_axum::router::OpenApiRouter;
 use utoipa_axum::routes;
 
+use super::access::Sight;
 use super::extract::{JsonBody, NoQuery, ResultFormat, network_name};
 use super::pages::{self, Paging};
 use super::refusals::{BodyRefusals, ConditionRefusals, Refusals};
@@ -142,9 +143,9 @@ async fn get_network(
         Refusals,
     )
 )]
-async fn list_networks(State(state): State<AppState>, paging: Paging) -> Result<Response, ApiError> {
+async fn list_networks(State(state): State<AppState>, sight: Sight, paging: Paging) -> Result<Response, ApiError> {
     let after = paging.after(|cursor| NetworkName::new(cursor).ok())?;
-    let (found, more) = state.service.networks(after, paging.limit).await?;
+    let (found, more) = state.service.networks(after, paging.limit, sight.0).await?;
     let next = found.last().filter(|_| more).map(|last| paging.next(PATH, &last.network.settings.name));
     let items = found.into_iter().map(NetworkLine::try_from).collect::<Result<_, _>>()?;
     pages::page(NetworkPage { items }, next)

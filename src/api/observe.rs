@@ -3,6 +3,7 @@
 mod tally;
 mod trace;
 
+use std::borrow::Cow;
 use std::time::{Instant, SystemTime, UNIX_EPOCH};
 
 use axum::extract::{MatchedPath, Request};
@@ -14,6 +15,7 @@ use uuid::Builder;
 use uuid::fmt::Hyphenated;
 
 use super::problem::{Pending, Problem};
+use crate::credential::masked;
 use trace::Trace;
 
 pub use trace::TRACES;
@@ -22,17 +24,22 @@ const REQUEST_ID: HeaderName = HeaderName::from_static("x-request-id");
 /// Longest incoming request id that is kept.
 const MAX_REQUEST_ID_CHARS: usize = 128;
 
+/// The request's id, for what is stored with it.
+#[derive(Debug, Clone)]
+pub struct RequestId(pub String);
+
 /// Media type of problem documents.
 pub const PROBLEM_JSON: HeaderValue = HeaderValue::from_static("application/problem+json");
 
 /// Wraps every request.
-pub async fn observe(request: Request, next: Next) -> Response {
+pub async fn observe(mut request: Request, next: Next) -> Response {
     let started = Instant::now();
     // The matched path, never the raw one: a label must not take whatever a client types.
     let route = request.extensions().get::<MatchedPath>().cloned();
     let route = route.as_ref().map_or("unmatched", MatchedPath::as_str);
     let uri = request.uri().clone();
     let observation = Observation::begin(started, request.method(), route, uri.path(), request.headers());
+    request.extensions_mut().insert(RequestId(id_text(&observation.id).to_owned()));
     let trace = Trace::begin(&observation, request.headers());
     let mut response = next.run(request).instrument(trace.span()).instrument(observation.span.clone()).await;
     observation.finish(&mut response);
@@ -109,7 +116,12 @@ fn complete_problem(response: &mut Response, id: &str, path: &str) {
 fn request_id(headers: &HeaderMap) -> HeaderValue {
     let plain = |byte: u8| byte.is_ascii_alphanumeric() || b"-_.:".contains(&byte);
     match headers.get(REQUEST_ID) {
-        Some(id) if (1..=MAX_REQUEST_ID_CHARS).contains(&id.len()) && id.as_bytes().iter().all(|&byte| plain(byte)) => {
+        Some(id)
+            if (1..=MAX_REQUEST_ID_CHARS).contains(&id.len())
+                && id.as_bytes().iter().all(|&byte| plain(byte))
+                // An access key is no id.
+                && matches!(masked(id_text(id)), Cow::Borrowed(_)) =>
+        {
             id.clone()
         }
         _ => new_id(),

@@ -14,6 +14,7 @@ use axum::http::{HeaderMap, HeaderValue, Method, StatusCode, Uri, header};
 use axum::response::Response;
 use tokio::sync::watch;
 
+use super::access::{self, Access};
 use super::extract::{ForecastForm, ResultFormat};
 use super::networks::{LATEST_ROUTE, polled_network};
 use super::observe::{Observation, leave_room};
@@ -75,16 +76,19 @@ impl Polled {
         Self { inner: Arc::new(Inner { service, commits, copies: RwLock::default(), most_bytes, begun }) }
     }
 
-    /// The whole answer to a poll of a copy that holds: no route is looked for, nothing is read and nothing is computed. None when the
+    /// The whole answer to a poll of a copy that holds by somebody who may read it: no route is looked for, nothing is read and nothing is computed. None when the
     /// request is another one, or the copy must be looked up first.
-    pub fn at_once(&self, method: &Method, uri: &Uri, headers: &HeaderMap) -> Option<Response> {
+    pub fn at_once(&self, method: &Method, uri: &Uri, headers: &HeaderMap, access: &Access) -> Option<Response> {
         if *method != Method::GET || uri.query().is_some() || !takes_json(headers) {
             return None;
         }
         let network = polled_network(uri.path())?;
         let started = Instant::now();
         let copy = self.inner.holding(network, started)?;
+        // Last, for it counts.
+        let standing = access.at_once(network, headers)?;
         let mut response = copy.json(headers);
+        access::tell_standing(&standing, &mut response);
         Observation::begin(started, method, LATEST_ROUTE, uri.path(), headers).finish(&mut response);
         Some(response)
     }
@@ -203,11 +207,11 @@ impl PolledCopy {
     ///
     /// # Errors
     /// When the form cannot be made of the kept document.
-    pub fn answer(&self, form: ForecastForm, asked: &HeaderMap) -> Result<Response, ApiError> {
+    pub async fn answer(&self, form: ForecastForm, asked: &HeaderMap) -> Result<Response, ApiError> {
         if form.format() == ResultFormat::Json {
             return Ok(self.json(asked));
         }
-        let mut response = runs::found((*self.run).clone(), form, asked)?;
+        let mut response = runs::found((*self.run).clone(), form, asked).await?;
         response.headers_mut().extend(self.beside.clone());
         Ok(response)
     }

@@ -26,7 +26,9 @@ async fn livez() -> Response {
 
 /// Can it serve requests?
 ///
-/// The database answers, its tables are those of this version, it can be written, and the process is not about to stop.
+/// The database answers, its tables are those of this version, it can be written, and the process is not about to stop. Otherwise
+/// `code` says what is wrong: `store_full`, `store_read_only`, `store_missing`, `store_corrupt`, `store_busy`, `store_unavailable`,
+/// `not_ready` (tables), or `stopping`.
 #[utoipa::path(get, path = "/readyz", tag = "operation", responses(
     (status = 200, description = "It can", body = String, content_type = "text/plain"),
     (status = 503, description = "Not now: the database cannot be read or written, its tables are not those of this version, or the process is about to stop", body = Problem, content_type = "application/problem+json"),

@@ -10,6 +10,7 @@ use serde::Serialize;
 use utoipa::ToSchema;
 
 use super::decode::{Faults, Place};
+use crate::credential::masked;
 
 /// A problem document: what was wrong, where, and what to do.
 #[derive(Debug, Clone, PartialEq, Serialize, ToSchema)]
@@ -140,7 +141,16 @@ impl Problem {
 
     /// Adds the request's id and path.
     pub fn completed(&self, request_id: &str, path: &str) -> Self {
-        Self { request_id: request_id.to_owned(), instance: Some(path.to_owned()), ..self.clone() }
+        // What a client sends may hold a key, and is told back here and there.
+        let safe = |text: &str| masked(text).into_owned();
+        let mut problem = Self { request_id: safe(request_id), instance: Some(safe(path)), ..self.clone() };
+        problem.detail = safe(&problem.detail);
+        for note in &mut problem.errors {
+            note.detail = safe(&note.detail);
+            note.pointer = note.pointer.as_deref().map(safe);
+            note.parameter = note.parameter.as_deref().map(safe);
+        }
+        problem
     }
 
     /// The stable name.

@@ -12,6 +12,10 @@ use jiff::Timestamp;
 use super::extract::ResultFormat;
 use super::{ApiError, AppState};
 use crate::report::content_policy;
+use crate::service::converted;
+
+/// Documents up to this size are read and written as fast as handed to another thread.
+pub const LIGHT_BYTES: usize = 64 * 1024;
 
 /// What tells one state of something kept from another.
 #[derive(Debug, Clone, Copy)]
@@ -69,12 +73,47 @@ pub fn found<C: Into<Content>>(
     asked: &HeaderMap,
     content: impl FnOnce() -> Result<C, ApiError>,
 ) -> Result<Response, ApiError> {
-    if is_unmodified(asked, &entity_tag(validator.tag, format), validator.modified) {
-        let mut response = StatusCode::NOT_MODIFIED.into_response();
-        *response.headers_mut() = validators(validator, format)?;
-        return Ok(response);
+    match unmodified(validator, format, asked)? {
+        Some(response) => Ok(response),
+        None => represented(validator, format, content()?),
     }
-    represented(validator, format, content()?)
+}
+
+/// The same of content that takes time to make: it is made off the async runtime, unless it is `light`.
+pub async fn found_drawn<C: Into<Content> + Send + 'static>(
+    validator: Validator<'_>,
+    format: ResultFormat,
+    asked: &HeaderMap,
+    light: bool,
+    content: impl FnOnce() -> Result<C, ApiError> + Send + 'static,
+) -> Result<Response, ApiError> {
+    match unmodified(validator, format, asked)? {
+        Some(response) => Ok(response),
+        None => represented(validator, format, drawn(light, content).await?),
+    }
+}
+
+/// What `make` makes, off the async runtime unless it is `light`.
+pub async fn drawn<T: Send + 'static>(
+    light: bool,
+    make: impl FnOnce() -> Result<T, ApiError> + Send + 'static,
+) -> Result<T, ApiError> {
+    if light {
+        return make();
+    }
+    converted(make)
+        .await
+        .unwrap_or_else(|error| Err(ApiError::Broken(format!("drawing an answer stopped short: {error}"))))
+}
+
+/// 304, when the client has the representation already.
+fn unmodified(validator: Validator<'_>, format: ResultFormat, asked: &HeaderMap) -> Result<Option<Response>, ApiError> {
+    if !is_unmodified(asked, &entity_tag(validator.tag, format), validator.modified) {
+        return Ok(None);
+    }
+    let mut response = StatusCode::NOT_MODIFIED.into_response();
+    *response.headers_mut() = validators(validator, format)?;
+    Ok(Some(response))
 }
 
 /// A representation with its validators.
@@ -102,6 +141,8 @@ fn validators(validator: Validator<'_>, format: ResultFormat) -> Result<HeaderMa
     let mut headers = HeaderMap::new();
     headers.insert(header::ETAG, header_value(&entity_tag(validator.tag, format))?);
     if let Some(modified) = validator.modified {
+        // Not ahead of the clock (RFC 9110, section 8.8.2.1), which may have gone back.
+        let modified = modified.min(Timestamp::now());
         headers.insert(header::LAST_MODIFIED, header_value(&httpdate::fmt_http_date(modified.into()))?);
     }
     headers.insert(header::CACHE_CONTROL, HeaderValue::from_static("private, no-cache"));

@@ -61,7 +61,7 @@ impl From<RunSummary> for RunLine {
 }
 
 /// The form that a kind of run is answered in.
-pub trait RunForm {
+pub trait RunForm: Clone + Send + 'static {
     /// The form.
     fn format(&self) -> ResultFormat;
 
@@ -84,32 +84,30 @@ pub fn read<T: DeserializeOwned>(document: &str) -> Result<T, ApiError> {
 }
 
 /// 201 with the run and where it is kept.
-pub fn created(path: &str, run: StoredRun, form: impl RunForm) -> Result<Response, ApiError> {
+pub async fn created(path: &str, run: StoredRun, form: impl RunForm) -> Result<Response, ApiError> {
     let place = format!("{path}/{}", run.id);
     let location = header_value(&place)?;
-    let content = form.content(&run).map_err(|error| error.of_kept(place))?;
-    let tag = form.tag(&run.tag);
-    let represented = representation::represented(validator(&tag, &run), form.format(), content)?;
+    let (tag, modified, format) = (form.tag(&run.tag), Some(run.created_at), form.format());
+    let content = representation::drawn(format == ResultFormat::Json, move || form.content(&run)).await;
+    let content = content.map_err(|error| error.of_kept(place))?;
+    let represented = representation::represented(Validator { tag: &tag, modified }, format, content)?;
     let mut response = (StatusCode::CREATED, represented).into_response();
     response.headers_mut().insert(header::LOCATION, location);
     Ok(response)
 }
 
 /// 200 with the run, or 304 when the client has it already.
-pub fn found(run: StoredRun, form: impl RunForm, asked: &HeaderMap) -> Result<Response, ApiError> {
-    let tag = form.tag(&run.tag);
-    representation::found(validator(&tag, &run), form.format(), asked, || form.content(&run))
+pub async fn found(run: StoredRun, form: impl RunForm, asked: &HeaderMap) -> Result<Response, ApiError> {
+    // A run never changes.
+    let (tag, modified, format) = (form.tag(&run.tag), Some(run.created_at), form.format());
+    let (validator, light) = (Validator { tag: &tag, modified }, format == ResultFormat::Json);
+    representation::found_drawn(validator, format, asked, light, move || form.content(&run)).await
 }
 
 /// A page of runs with a Link to the next one.
 pub fn page(path: &str, listing: &Listing, runs: Vec<RunSummary>, more: bool) -> Result<Response, ApiError> {
     let next = runs.last().filter(|_| more).map(|last| next_page(path, listing, last.id));
     pages::page(RunPage { items: runs.into_iter().map(RunLine::from).collect() }, next)
-}
-
-/// A run never changes.
-fn validator<'a>(tag: &'a str, run: &StoredRun) -> Validator<'a> {
-    Validator { tag, modified: Some(run.created_at) }
 }
 
 fn next_page(path: &str, listing: &Listing, last: Uuid) -> String {

@@ -4,6 +4,7 @@ use std::net::{IpAddr, Ipv4Addr, Ipv6Addr, SocketAddr};
 use std::time::Duration;
 
 use super::Stop;
+use crate::credential::Credential;
 
 const TIMEOUT: Duration = Duration::from_secs(3);
 
@@ -11,6 +12,14 @@ const TIMEOUT: Duration = Duration::from_secs(3);
 pub fn local_client(timeout: Option<Duration>) -> ureq::Agent {
     let settings = ureq::Agent::config_builder().proxy(None).http_status_as_error(false).timeout_global(timeout);
     ureq::Agent::new_with_config(settings.build())
+}
+
+/// A request with the key of the settings, where they have one (access.key, TAILCAST_ACCESS_KEY).
+pub fn with_key<B>(request: ureq::RequestBuilder<B>, key: Option<&Credential>) -> ureq::RequestBuilder<B> {
+    match key {
+        Some(key) => request.header("Authorization", format!("Bearer {}", key.reveal())),
+        None => request,
+    }
 }
 
 /// Asks the service that listens on `bind`.

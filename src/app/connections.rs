@@ -1,10 +1,8 @@
-//! Connections: accept, serve, and let go of those that ask for nothing.
+//! Connections: accept, serve, and let go of those that ask for nothing, take nothing or are too many.
 
-use std::io::{self, IoSlice};
-use std::pin::Pin;
-use std::sync::Arc;
-use std::sync::atomic::{AtomicBool, AtomicUsize, Ordering};
-use std::task::{Context, Poll};
+mod crowd;
+mod watched;
+
 use std::time::Duration;
 
 use axum::serve::Listener;
@@ -13,25 +11,60 @@ use hyper::server::conn::http1;
 use hyper::service::{Service, service_fn};
 use hyper_util::rt::{TokioIo, TokioTimer};
 use hyper_util::service::TowerToHyperService;
-use tokio::io::{AsyncRead, AsyncWrite, ReadBuf};
+use socket2::{SockRef, TcpKeepalive};
 use tokio::net::{TcpListener, TcpStream};
 use tokio::sync::watch;
 use tokio::task::JoinSet;
+use tokio::time::timeout;
 
 use crate::api::Front;
+use crate::config::HttpConfig;
+use crowd::{Crowd, Member};
+use watched::Watched;
 
 /// How long a connection without a request in work is kept after the stop: the time to flush its last answer.
 const FLUSH: Duration = Duration::from_millis(500);
+/// Most bytes of a request's head; also what is read of a body at a time.
+const HEAD_BYTES: usize = 64 * 1024;
+/// Connections beyond the most on which clients are told so, and probes answered; those beyond these are closed at once.
+const SPARE: usize = 64;
+/// How long such a connection may last.
+const SPARE_TIME: Duration = Duration::from_secs(5);
+/// Unanswered signs of life after which the other end is taken to be gone.
+const SIGNS: u32 = 3;
+
+/// How connections are held.
+#[derive(Debug, Clone, Copy)]
+pub struct Terms {
+    /// Open at the same time.
+    pub most: usize,
+    /// Longest time to send a request's head.
+    pub head: Duration,
+    /// Longest time in which nothing of an answer is taken.
+    pub pause: Duration,
+}
+
+impl From<&HttpConfig> for Terms {
+    fn from(config: &HttpConfig) -> Self {
+        Self { most: config.max_connections, head: config.head_timeout(), pause: config.answer_pause() }
+    }
+}
 
 /// Serves until told to stop; returns when every connection has ended.
-pub async fn serve(mut listener: TcpListener, front: Front, head_timeout: Duration, mut stop: watch::Receiver<bool>) {
+pub async fn serve(mut listener: TcpListener, front: Front, terms: Terms, mut stop: watch::Receiver<bool>) {
+    let crowd = Crowd::default();
     let mut open = JoinSet::new();
     loop {
         tokio::select! {
             _ = stopped(&mut stop) => break,
             // Waits and goes on when the system has no more connections to give.
             (stream, _) = Listener::accept(&mut listener) => {
-                open.spawn(connection(stream, front.clone(), head_timeout, stop.clone()));
+                mind(&stream, terms.pause);
+                if crowd.len() < terms.most || crowd.let_one_go() {
+                    open.spawn(connection(stream, front.clone(), terms, crowd.join(), stop.clone()));
+                } else if let Some(member) = crowd.join_spare(SPARE) {
+                    open.spawn(spare(stream, front.clone(), member));
+                }
             }
             Some(_) = open.join_next() => {}
         }
@@ -40,47 +73,68 @@ pub async fn serve(mut listener: TcpListener, front: Front, head_timeout: Durati
     while open.join_next().await.is_some() {}
 }
 
+/// Has the system tell when the other end is gone without a word: what was sent is not acknowledged, or nothing comes back while all is
+/// quiet.
+fn mind(stream: &TcpStream, pause: Duration) {
+    let socket = SockRef::from(stream);
+    let quiet = TcpKeepalive::new().with_time(pause);
+    #[cfg(target_os = "linux")]
+    let quiet = quiet.with_interval((pause / SIGNS).max(Duration::from_secs(1))).with_retries(SIGNS);
+    // Where a system does not take these, time limits of our own still hold.
+    let _ = socket.set_tcp_keepalive(&quiet);
+    #[cfg(target_os = "linux")]
+    let _ = socket.set_tcp_user_timeout(Some(pause));
+}
+
 /// Serves one connection. After the stop its request in work is finished, and its answer sent to a client that reads; a request
 /// that has not come in full by then is not waited for.
-async fn connection(stream: TcpStream, front: Front, head_timeout: Duration, mut stop: watch::Receiver<bool>) {
-    let in_work = Arc::new(AtomicUsize::new(0));
-    let counted = in_work.clone();
+async fn connection(stream: TcpStream, front: Front, terms: Terms, member: Member, mut stop: watch::Receiver<bool>) {
+    let activity = member.activity().clone();
+    let counted = activity.clone();
     let service = service_fn(move |request: hyper::Request<Incoming>| {
         let work = match front.at_once(request.method(), request.uri(), request.headers()) {
             Some(answer) => Err(answer),
-            None => {
-                counted.fetch_add(1, Ordering::Relaxed);
-                Ok((TowerToHyperService::new(front.router()).call(request), counted.clone()))
-            }
+            None => Ok((TowerToHyperService::new(front.router()).call(request), counted.begin())),
         };
         async move {
             match work {
                 Err(answer) => Ok(answer),
-                Ok((answer, counted)) => {
+                Ok((answer, in_work)) => {
                     let answer = answer.await;
-                    counted.fetch_sub(1, Ordering::Relaxed);
+                    drop(in_work);
                     answer
                 }
             }
         }
     });
-    let sending = Arc::new(AtomicBool::new(false));
-    let stream = Watched { stream, sending: sending.clone() };
+    let stream = Watched::new(stream, activity.clone(), terms.pause);
     let serving = http1::Builder::new()
         .timer(TokioTimer::new())
-        .header_read_timeout(head_timeout)
+        .header_read_timeout(terms.head)
+        .max_buf_size(HEAD_BYTES)
         .serve_connection(TokioIo::new(stream), service);
     tokio::pin!(serving);
-    tokio::select! {
-        // A connection that breaks is the client's affair.
-        _ = serving.as_mut() => return,
-        _ = stopped(&mut stop) => serving.as_mut().graceful_shutdown(),
+    loop {
+        tokio::select! {
+            biased;
+            // A connection that breaks is the client's affair.
+            _ = serving.as_mut() => return,
+            () = activity.asked_to_go() => {
+                if activity.rests() {
+                    return;
+                }
+                // A request has come meanwhile; it is the last.
+                serving.as_mut().graceful_shutdown();
+            }
+            _ = stopped(&mut stop) => break,
+        }
     }
+    serving.as_mut().graceful_shutdown();
     loop {
         tokio::select! {
             _ = serving.as_mut() => return,
             () = tokio::time::sleep(FLUSH) => {
-                if in_work.load(Ordering::Relaxed) == 0 && !sending.load(Ordering::Relaxed) {
+                if activity.rests() {
                     return;
                 }
             }
@@ -88,58 +142,76 @@ async fn connection(stream: TcpStream, front: Front, head_timeout: Duration, mut
     }
 }
 
-/// A connection that tells whether more is to be sent than the client has taken yet.
-struct Watched {
-    stream: TcpStream,
-    sending: Arc<AtomicBool>,
-}
-
-impl Watched {
-    fn written(&self, outcome: Poll<io::Result<usize>>) -> Poll<io::Result<usize>> {
-        self.sending.store(outcome.is_pending(), Ordering::Relaxed);
-        outcome
-    }
-}
-
-impl AsyncRead for Watched {
-    fn poll_read(
-        mut self: Pin<&mut Self>,
-        context: &mut Context<'_>,
-        buffer: &mut ReadBuf<'_>,
-    ) -> Poll<io::Result<()>> {
-        Pin::new(&mut self.stream).poll_read(context, buffer)
-    }
-}
-
-impl AsyncWrite for Watched {
-    fn poll_write(mut self: Pin<&mut Self>, context: &mut Context<'_>, bytes: &[u8]) -> Poll<io::Result<usize>> {
-        let outcome = Pin::new(&mut self.stream).poll_write(context, bytes);
-        self.written(outcome)
-    }
-
-    fn poll_write_vectored(
-        mut self: Pin<&mut Self>,
-        context: &mut Context<'_>,
-        pieces: &[IoSlice<'_>],
-    ) -> Poll<io::Result<usize>> {
-        let outcome = Pin::new(&mut self.stream).poll_write_vectored(context, pieces);
-        self.written(outcome)
-    }
-
-    fn is_write_vectored(&self) -> bool {
-        self.stream.is_write_vectored()
-    }
-
-    fn poll_flush(mut self: Pin<&mut Self>, context: &mut Context<'_>) -> Poll<io::Result<()>> {
-        Pin::new(&mut self.stream).poll_flush(context)
-    }
-
-    fn poll_shutdown(mut self: Pin<&mut Self>, context: &mut Context<'_>) -> Poll<io::Result<()>> {
-        Pin::new(&mut self.stream).poll_shutdown(context)
-    }
+/// Answers one request of a connection that is one too many: probes as ever, what is under /v1 with a refusal.
+async fn spare(stream: TcpStream, front: Front, member: Member) {
+    let service = service_fn(move |request: hyper::Request<Incoming>| {
+        let refusal = front.refused(request.method(), request.uri(), request.headers());
+        let router = front.router();
+        async move {
+            match refusal {
+                Some(refusal) => Ok(refusal),
+                None => TowerToHyperService::new(router).call(request).await,
+            }
+        }
+    });
+    let serving = http1::Builder::new()
+        .timer(TokioTimer::new())
+        .header_read_timeout(SPARE_TIME)
+        .max_buf_size(HEAD_BYTES)
+        .keep_alive(false)
+        .serve_connection(TokioIo::new(stream), service);
+    // Whoever is slower is not told.
+    let _ = timeout(SPARE_TIME, serving).await;
+    drop(member);
 }
 
 async fn stopped(stop: &mut watch::Receiver<bool>) {
     // An error means that the sender is gone, which is a stop as well.
     let _ = stop.wait_for(|&stop| stop).await;
+}
+
+/// As many connections as the system's limit of open files leaves room for, at most `wanted`. The limit is raised where that is needed
+/// and allowed.
+pub fn room_for(wanted: usize) -> usize {
+    /// Files besides: the database's, those of link lists, connections to receivers of notices.
+    #[cfg(unix)]
+    const OTHERS: usize = 256;
+    #[cfg(unix)]
+    {
+        use rustix::process::{Resource, Rlimit, getrlimit, setrlimit};
+        let needed = (wanted + SPARE + OTHERS) as u64;
+        let limit = getrlimit(Resource::Nofile);
+        let (current, most) = (limit.current.unwrap_or(u64::MAX), limit.maximum.unwrap_or(u64::MAX));
+        let mut allowed = current;
+        if current < needed {
+            let raised = Rlimit { current: Some(needed.min(most)), maximum: limit.maximum };
+            if setrlimit(Resource::Nofile, raised).is_ok() {
+                allowed = needed.min(most);
+            }
+        }
+        let room = usize::try_from(allowed).unwrap_or(usize::MAX).saturating_sub(SPARE + OTHERS).max(1);
+        if room < wanted {
+            tracing::warn!(
+                connections = room,
+                open_files = allowed,
+                "the limit of open files leaves room for fewer connections"
+            );
+        }
+        room.min(wanted)
+    }
+    #[cfg(not(unix))]
+    wanted
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[cfg(unix)]
+    #[test]
+    fn more_connections_than_open_files_are_not_promised() {
+        assert_eq!(room_for(10), 10);
+        let room = room_for(usize::MAX / 2);
+        assert!((1..usize::MAX / 2).contains(&room), "{room}");
+    }
 }

@@ -7,11 +7,12 @@ use std::net::SocketAddr;
 
 use tokio::task::spawn_blocking;
 
-use super::check::local_client;
+use super::check::{local_client, with_key};
 use super::serve::{Running, start, stop_signal};
 use super::{Stop, print};
 use crate::api;
-use crate::config::Config;
+use crate::config::{Config, KeysNeeded};
+use crate::credential::Credential;
 use crate::report::{align, figure, forecast_table, mix_in_words, wrap};
 use crate::service::{ForecastRun, IntervalAnswer};
 use heronsgate::{Outcome, Story, TRUE_SHARE};
@@ -24,10 +25,13 @@ pub async fn show(mut config: Config, once: bool) -> Result<(), Stop> {
     let folder = tempfile::tempdir().map_err(|error| Stop::failed("a folder for the demo", error))?;
     if once {
         config.bind = SocketAddr::from(([127, 0, 0, 1], 0));
+        // Its database has no keys.
+        config.access.keys = KeysNeeded::Off;
         config.database.url = format!("sqlite://{}", folder.path().join("demo.db").display());
     }
+    let key = config.access.key.clone();
     let running = start(config).await?;
-    let outcome = tell(running.address(), once).await;
+    let outcome = tell(running.address(), key, once).await;
     if outcome.is_ok() && !once {
         stop_signal().await.map_err(|error| Stop::failed("stop signals", error))?;
     }
@@ -35,10 +39,10 @@ pub async fn show(mut config: Config, once: bool) -> Result<(), Stop> {
     outcome
 }
 
-async fn tell(address: SocketAddr, once: bool) -> Result<(), Stop> {
+async fn tell(address: SocketAddr, key: Option<Credential>, once: bool) -> Result<(), Stop> {
     let told = spawn_blocking(move || {
         let story = Story::grow()?;
-        let run = forecast(address, &story)?;
+        let run = forecast(address, key.as_ref(), &story)?;
         let introduction = story.introduction();
         let came = story.what_came()?;
         print(&text(address, &introduction, &run, &came, once))
@@ -47,10 +51,9 @@ async fn tell(address: SocketAddr, once: bool) -> Result<(), Stop> {
 }
 
 /// Asks for the forecast as any client would.
-fn forecast(address: SocketAddr, story: &Story) -> Result<ForecastRun, Stop> {
+fn forecast(address: SocketAddr, key: Option<&Credential>, story: &Story) -> Result<ForecastRun, Stop> {
     let doing = "the demo's own call";
-    let mut response = local_client(None)
-        .post(format!("http://{address}/v1/forecasts"))
+    let mut response = with_key(local_client(None).post(format!("http://{address}/v1/forecasts")), key)
         .send_json(&story.request)
         .map_err(|error| Stop::failed(doing, error))?;
     let text = response.body_mut().read_to_string().map_err(|error| Stop::failed(doing, error))?;

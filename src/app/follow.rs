@@ -1,7 +1,6 @@
 //! `follow`: a job of the service at `bind`, until it ends.
 
 use std::io::{self, IsTerminal};
-use std::net::SocketAddr;
 use std::thread::sleep;
 use std::time::Duration;
 
@@ -10,8 +9,10 @@ use serde::Deserialize;
 use serde_json::value::RawValue;
 use uuid::Uuid;
 
-use super::check::{local_client, reachable};
+use super::check::{local_client, reachable, with_key};
 use super::{Stop, print};
+use crate::config::Config;
+use crate::credential::Credential;
 
 /// Time between two looks at the job.
 const LOOK: Duration = Duration::from_millis(500);
@@ -39,16 +40,16 @@ struct Problem {
 }
 
 /// Shows a bar with the time left while the job is at work, then prints its result, JSON on one line.
-pub fn follow(bind: SocketAddr, job: &str) -> Result<(), Stop> {
+pub fn follow(config: &Config, job: &str) -> Result<(), Stop> {
     let id = id_of(job)?;
-    let url = format!("http://{}/v1/jobs/{id}", reachable(bind));
+    let url = format!("http://{}/v1/jobs/{id}", reachable(config.bind));
     let bar = if io::stderr().is_terminal() { ProgressBar::new(STEPS) } else { ProgressBar::hidden() };
     // The template is sound; the plain bar is there all the same.
     let style = ProgressStyle::with_template("{msg} {bar:40} {percent} %, {elapsed} gone, {eta} left");
     let bar = bar.with_style(style.unwrap_or_else(|_| ProgressStyle::default_bar()));
     let mut failed_looks = 0;
     loop {
-        match look(&url) {
+        match look(&url, config.access.key.as_ref()) {
             Ok(job) => {
                 failed_looks = 0;
                 bar.set_message(format!("{} of {}, {}", job.kind.replace('_', " "), job.network, job.state));
@@ -80,10 +81,10 @@ fn end(job: &Job) -> Option<Result<String, Stop>> {
 }
 
 /// One look. A service that cannot be reached may be back soon; an answer that is no job will stay one.
-fn look(url: &str) -> Result<Job, Stop> {
+fn look(url: &str, key: Option<&Credential>) -> Result<Job, Stop> {
     let doing = format!("asking {url}");
     let failed = |error: ureq::Error| Stop::failed(&doing, error);
-    let mut response = local_client(Some(TIMEOUT)).get(url).call().map_err(failed)?;
+    let mut response = with_key(local_client(Some(TIMEOUT)).get(url), key).call().map_err(failed)?;
     let text = response.body_mut().read_to_string().map_err(failed)?;
     match response.status().as_u16() {
         200 => serde_json::from_str(&text).map_err(|error| Stop::Refused(format!("tailcast: {doing}: {error}\n"))),

@@ -10,9 +10,10 @@ use tokio::sync::watch;
 use tokio::task::JoinHandle;
 use tokio::time::timeout;
 
-use super::{Stop, connections};
+use super::connections::{self, Terms, room_for};
+use super::{Stop, bookkeeping};
 use crate::api::{AppState, Front};
-use crate::config::Config;
+use crate::config::{Config, KeysNeeded};
 use crate::service::Service;
 use crate::telemetry;
 
@@ -28,6 +29,9 @@ pub struct Running {
     server: JoinHandle<()>,
     upkeep: JoinHandle<()>,
     sender: JoinHandle<()>,
+    sharing: JoinHandle<()>,
+    keeper: JoinHandle<()>,
+    bookkeeping: JoinHandle<()>,
     drain: Duration,
     grace: Duration,
 }
@@ -40,7 +44,7 @@ impl Running {
 
     /// Says at `/readyz` that it stops, serves on for the configured time, then stops listening, finishes what was accepted, within the configured grace, and closes the database.
     pub async fn stop(self) {
-        let Self { service, stop, server, upkeep, sender, drain, grace, .. } = self;
+        let Self { service, stop, server, upkeep, sender, sharing, keeper, bookkeeping, drain, grace, .. } = self;
         service.announce_stop();
         if !drain.is_zero() {
             tracing::info!(
@@ -58,7 +62,14 @@ impl Running {
         }
         aborted.abort();
         upkeep.abort();
+        sharing.abort();
+        // A transaction that it is in the middle of is undone.
+        keeper.abort();
+        bookkeeping.abort();
         service.cancel_all();
+        if let Err(error) = service.keys().save_uses().await {
+            tracing::warn!(%error, "what access keys have used since it was last stored is not counted");
+        }
         service.close().await;
         tracing::info!("stopped");
     }
@@ -69,26 +80,34 @@ impl Running {
 /// # Errors
 /// When the database cannot be opened or the address is taken.
 pub async fn start(config: Config) -> Result<Running, Stop> {
+    if let Some(why) = config.access.refusal(config.bind) {
+        return Err(Stop::Failed(why));
+    }
     // Listening first: when the port is taken, no database file is made.
     let listener = TcpListener::bind(config.bind).await.map_err(|error| address_fault(config.bind, &error))?;
     let address = listener.local_addr().map_err(|error| Stop::failed("the listening address", error))?;
     let metrics = telemetry::start_metrics().map_err(|error| Stop::failed("metrics", error))?;
     let service = Service::open(&config).await.map_err(|error| Stop::failed("the database", error))?;
-    if let Err(error) = service.resume_jobs().await {
-        tracing::warn!(%error, "jobs of the last process are not taken up before the next start");
+    let resumed = service.resume_jobs().await;
+    if let Err(error) = &resumed {
+        tracing::warn!(%error, "jobs of the last process cannot be taken up yet; it is tried again");
     }
     let upkeep = tokio::spawn(telemetry::keep_metrics_small(metrics.clone()));
+    let mut terms = Terms::from(&config.http);
+    terms.most = room_for(terms.most);
     let (drain, grace) = (config.http.drain(), config.http.shutdown_grace());
-    let head_timeout = config.http.head_timeout();
     let front = Front::new(AppState::new(service.clone(), &config, metrics));
     let (stop, stopped) = watch::channel(false);
     let sender = tokio::spawn(service.clone().send_notices(stopped.clone()));
-    let server = tokio::spawn(connections::serve(listener, front, head_timeout, stopped));
+    let sharing = tokio::spawn(service.clone().share_jobs(resumed.is_ok(), stopped.clone()));
+    let keeper = tokio::spawn(service.clone().keep_up(stopped.clone()));
+    let bookkeeping = tokio::spawn(bookkeeping::keep_books(service.clone(), config.access.audit_time()));
+    let server = tokio::spawn(connections::serve(listener, front, terms, stopped));
     tracing::info!(%address, "serving");
-    if !address.ip().is_loopback() {
-        tracing::warn!("reachable from other machines, and there is no access control: put a gateway in front");
+    if config.access.keys == KeysNeeded::AnyoneMayReadAndWrite {
+        tracing::warn!(%address, "NO ACCESS KEYS ARE ASKED FOR: whoever reaches this address can read and change everything, unless a gateway in front decides who may");
     }
-    Ok(Running { address, service, stop, server, upkeep, sender, drain, grace })
+    Ok(Running { address, service, stop, server, upkeep, sender, sharing, keeper, bookkeeping, drain, grace })
 }
 
 /// Serves until SIGINT or SIGTERM.

@@ -38,6 +38,16 @@ pub enum SettingsError {
         /// The largest taken.
         most: u64,
     },
+    /// A value is of the wrong kind.
+    #[error("{key} must be {wanted}, not {given}")]
+    WrongKind {
+        /// The key.
+        key: String,
+        /// What it takes.
+        wanted: &'static str,
+        /// The value given.
+        given: String,
+    },
     /// A key that another one needs.
     #[error("{key} is needed with {with}: {why}")]
     Missing {

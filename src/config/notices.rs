@@ -43,7 +43,12 @@ impl NoticesConfig {
         let doublings = u32::try_from(failures.saturating_sub(1)).unwrap_or(u32::MAX);
         let factor = 1_u64.checked_shl(doublings).unwrap_or(u64::MAX);
         let pause = Duration::from_millis(self.first_pause_ms.saturating_mul(factor));
-        pause.min(Duration::from_secs(self.longest_pause_seconds))
+        pause.min(self.longest_pause())
+    }
+
+    /// Longest pause, without jitter.
+    pub fn longest_pause(&self) -> Duration {
+        Duration::from_secs(self.longest_pause_seconds)
     }
 }
 

@@ -46,7 +46,7 @@ pub(super) fn costs(prospect: &Prospect, bands: &Bands, change: &Change) -> Resu
     for ((&date, &day), tails) in plan.dates().iter().zip(plan.days()).zip(&tails) {
         let held = |course: &Course| -> Result<Holdings, OriginError> {
             prospect.check()?;
-            let law = NetworkLaw::at(course, prospect.counts, day).map_err(of_growth)?;
+            let law = NetworkLaw::at(course, prospect.counts, day).map_err(of_growth)?.until(prospect.cancelled);
             law.holdings(&pieces).map_err(of_growth)
         };
         let own = held(&central)?;

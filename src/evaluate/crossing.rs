@@ -42,7 +42,8 @@ impl Correlations {
             return Ok(Self(None));
         }
         let course = prospect.course(change, days.last().copied().unwrap_or(0.0))?;
-        let found = tail_correlations(&course, prospect.counts, threshold, days).map_err(of_growth)?;
+        let found =
+            tail_correlations(&course, prospect.counts, threshold, days, prospect.cancelled).map_err(of_growth)?;
         Ok(Self(Some(Arc::new(found))))
     }
 

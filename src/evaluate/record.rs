@@ -7,7 +7,7 @@ use super::ahead::{GivenRates, Rates, expected_rates};
 use super::member::{HALF_A_NODE, Member, Step, Totals, Trend};
 use crate::fit::{FitError, FitRequest, Mechanism, Model, mechanisms};
 use crate::forecast::ForecastError;
-use crate::growth::{Course, NetworkLaw};
+use crate::growth::{Course, GrowthError, NetworkLaw};
 use crate::model::{ArrivalPlan, Evidence, GrowthParameters, Snapshot, days_between};
 
 /// Snapshots of the newest period alone tell today's mix; so many more are looked at when it shows no growth.
@@ -296,9 +296,15 @@ impl<'a> Scene<'a> {
         }
         let Some(Ok(course)) = forces.map(|forces| Course::new(&from.counts, forces, days)) else { return Ok(None) };
         let Ok(law) = NetworkLaw::at(&course, &from.counts, days) else { return Ok(None) };
+        let law = law.until(self.cancelled);
         let mut sizes = LawSizes::default();
         for &threshold in thresholds {
-            let Ok(sum) = law.rough_tail(threshold) else { return Ok(None) };
+            let sum = match law.rough_tail(threshold) {
+                Ok(sum) => sum,
+                // A tail that was not waited for is not one that cannot be computed.
+                Err(GrowthError::Cancelled) => return Err(ForecastError::Cancelled.into()),
+                Err(_) => return Ok(None),
+            };
             sizes.mean.push(sum.mean);
             sizes.kept.push(sum.kept);
             sizes.variance.push(sum.variance);

@@ -34,7 +34,10 @@ pub(super) fn compare(prospect: &Prospect, change: &Change) -> Result<ScenarioAn
     let laws = prospect.tails(plan, &standing)?.into_iter().zip(prospect.tails(plan, change)?);
     let mut dates = Vec::new();
     for ((&date, &day), (laws_before, laws_after)) in plan.dates().iter().zip(plan.days()).zip(laws) {
-        let at = |course| NetworkLaw::at(course, prospect.counts, day).map_err(of_growth);
+        let at = |course| {
+            let law = NetworkLaw::at(course, prospect.counts, day).map_err(of_growth)?;
+            Ok::<_, OriginError>(law.until(prospect.cancelled))
+        };
         let central = (at(&before)?, at(&after)?);
         // A direction that only the change has, such as a range of its own arrivals, leaves the forecast as it stands.
         let ends = ends_after.iter().enumerate().map(|(i, after)| {

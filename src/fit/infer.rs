@@ -60,7 +60,7 @@ pub fn fit(evidence: &Evidence, request: &FitRequest, cancelled: &dyn Fn() -> bo
         Rung::Given => (given(request.fixed.mix.unwrap_or(AttachmentMix::UNIFORM)), Vec::new(), None),
         Rung::SuccessiveSnapshots => {
             let fit = fit_successive(&periods, choice, cancelled)?;
-            let tail = newest_tail(&periods, fit.profile.share.value)?;
+            let tail = newest_tail(&periods, fit.profile.share.value, cancelled)?;
             let goodness = flow_goodness(&tail, counts.nodes(), fit.dispersion, fit.flow_error);
             (fit.profile, tail, Some(goodness))
         }
@@ -74,7 +74,7 @@ pub fn fit(evidence: &Evidence, request: &FitRequest, cancelled: &dyn Fn() -> bo
         }
         Rung::Transitions | Rung::LinkEvents => {
             let share = chosen.share.unwrap_or(Force::given(0.0));
-            let tail = newest_tail(&periods, share.value())?;
+            let tail = newest_tail(&periods, share.value(), cancelled)?;
             (Profile { share: share.estimate, excursion: share.excursion, ..given(AttachmentMix::UNIFORM) }, tail, None)
         }
     };
@@ -283,10 +283,10 @@ fn past_links_per_arrival(evidence: &Evidence, entry: &EntryDegrees, forces: &Fo
     Ok(past)
 }
 
-fn newest_tail(periods: &[Period], share: f64) -> Result<Vec<TailPoint>, FitError> {
+fn newest_tail(periods: &[Period], share: f64, cancelled: &dyn Fn() -> bool) -> Result<Vec<TailPoint>, FitError> {
     let Some(newest) = periods.last() else { return Ok(Vec::new()) };
     let point = |(degree, observed, fitted)| TailPoint { degree, observed, fitted };
-    Ok(newest.fitted_tail(share)?.into_iter().map(point).collect())
+    Ok(newest.fitted_tail(share, cancelled)?.into_iter().map(point).collect())
 }
 
 /// A warning when tails shrank although nothing is said to leave or to be lost.

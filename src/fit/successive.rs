@@ -111,7 +111,8 @@ pub(super) fn fit_successive(
         let (mut misfits, mut errors) = (Vec::new(), Vec::new());
         for period in periods {
             let (low, high) = ((p - SHARE_STEP).max(0.0), (p + SHARE_STEP).min(1.0));
-            let (below, here, above) = (period.flows(low)?, period.flows(p)?, period.flows(high)?);
+            let (below, here, above) =
+                (period.flows(low, cancelled)?, period.flows(p, cancelled)?, period.flows(high, cancelled)?);
             let slope: Vec<f64> = above.iter().zip(&below).map(|(a, b)| (a.mean - b.mean) / (high - low)).collect();
             let weights: Vec<f64> = slope.iter().zip(&here).map(|(s, m)| s / (m.mean + UNEXPLAINED)).collect();
             let covariance = period.covariance(p)?;
@@ -166,7 +167,7 @@ fn flow_log_likelihood(periods: &[Period], p: f64, cancelled: &dyn Fn() -> bool)
     }
     let mut sum = 0.0;
     for period in periods {
-        let flows = period.flows(p)?;
+        let flows = period.flows(p, cancelled)?;
         for (observed, expected) in period.observed(&flows).iter().zip(&flows) {
             let (observed, expected) = ((observed + UNEXPLAINED).max(0.0), expected.mean + UNEXPLAINED);
             sum += period.weight * (observed * expected.ln() - expected);
@@ -256,13 +257,13 @@ impl<'a> Period<'a> {
         Course::new(self.before, self.forces(p), self.days)
     }
 
-    fn flows(&self, p: f64) -> Result<Vec<Flow>, FitError> {
+    fn flows(&self, p: f64, cancelled: &dyn Fn() -> bool) -> Result<Vec<Flow>, FitError> {
         let course = match self.course(p) {
             // So preferential a mix gives no node its first link: nothing flows.
             Err(GrowthError::NobodyStarts) => return Ok(vec![Flow { mean: 0.0, kept: 0.0 }; self.thresholds.len()]),
             course => course?,
         };
-        let law = NetworkLaw::at(&course, self.before, self.days)?;
+        let law = NetworkLaw::at(&course, self.before, self.days)?.until(cancelled);
         let flow = |&threshold: &u64| {
             let sum = law.rough_tail(threshold)?;
             Ok(Flow { mean: sum.mean - sum.kept, kept: sum.kept })
@@ -283,8 +284,8 @@ impl<'a> Period<'a> {
     }
 
     /// Expected tail sizes at the period's end, with the observed ones: the picture of the fit.
-    pub fn fitted_tail(&self, p: f64) -> Result<Vec<(u64, u64, f64)>, FitError> {
-        let flows = self.flows(p)?;
+    pub fn fitted_tail(&self, p: f64, cancelled: &dyn Fn() -> bool) -> Result<Vec<(u64, u64, f64)>, FitError> {
+        let flows = self.flows(p, cancelled)?;
         let row =
             |(&threshold, flow): (&u64, &Flow)| (threshold, self.after.tail_size(threshold), flow.mean + flow.kept);
         Ok(self.thresholds.iter().zip(&flows).map(row).collect())

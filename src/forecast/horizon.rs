@@ -67,7 +67,8 @@ impl Scenario {
     }
 }
 
-/// Forecasts the network with `counts` today at every date of `plan`; `cancelled` is asked before each threshold.
+/// Forecasts the network with `counts` today at every date of `plan`; `cancelled` is asked before each threshold and
+/// within its tails.
 ///
 /// Formula: the variance of a count is its sampling variance under the central forces, plus for each excursion the square
 /// of half the difference between its two ends' expectations (sigma points; exact for expectations that are quadratic in
@@ -163,7 +164,7 @@ impl<'a> Outlook<'a> {
     }
 
     fn laws(&self, day: f64) -> Result<Laws<'_>, ForecastError> {
-        let law = |course| NetworkLaw::at(course, self.counts, day);
+        let law = |course| Ok::<_, GrowthError>(NetworkLaw::at(course, self.counts, day)?.until(self.cancelled));
         let ends = self.ends.iter().map(|(low, high)| Ok((law(low)?, law(high)?)));
         let ends = ends.collect::<Result<_, GrowthError>>()?;
         let alternatives = self.alternatives.iter().map(|(course, weight)| Ok((law(course)?, *weight)));

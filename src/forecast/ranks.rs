@@ -42,7 +42,7 @@ impl RankLaw {
         ranks: usize,
         cancelled: &dyn Fn() -> bool,
     ) -> Result<Self, ForecastError> {
-        let law = NetworkLaw::at(course, counts, day)?;
+        let law = NetworkLaw::at(course, counts, day)?.until(cancelled);
         let at = |degree: f64| -> Result<Vec<f64>, GrowthError> {
             Ok(at_least(&law.parts(degree.max(1.0) as u64, Accuracy::Working)?, ranks))
         };

@@ -65,6 +65,9 @@ pub enum GrowthError {
          preferential"
     )]
     CapNeedsAlike,
+    /// The caller asked to stop.
+    #[error("the growth law was cancelled")]
+    Cancelled,
     /// The share of refused links could not be found.
     #[error("the share of links that the degree cap refuses did not settle; ask for nearer dates or a higher cap")]
     CapUnsettled,

@@ -22,18 +22,19 @@ const NEGLIGIBLE_CLASS: f64 = 1e-6;
 /// two moments: within about 1 % of the correlation. Cost: days × classes tails of the network, days² × classes tails of a node.
 ///
 /// # Errors
-/// Those of [`NetworkLaw::tail`].
+/// Those of [`NetworkLaw::tail`]; cancellation.
 pub fn tail_correlations(
     course: &Course,
     counts: &DegreeCounts,
     threshold: u64,
     days: &[f64],
+    cancelled: &dyn Fn() -> bool,
 ) -> Result<Vec<Vec<f64>>, GrowthError> {
     let edges = class_edges(threshold);
     let mut parts: Vec<TailParts> = Vec::new();
     let mut classes: Vec<Vec<(u64, f64)>> = Vec::new();
     for &day in days {
-        let law = NetworkLaw::at(course, counts, day)?;
+        let law = NetworkLaw::at(course, counts, day)?.until(cancelled);
         let tail = law.parts(threshold, Accuracy::Working)?;
         let whole = tail.sum(threshold).mean;
         let (mut from, mut held) = ((threshold, whole), Vec::new());

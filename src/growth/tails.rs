@@ -95,6 +95,7 @@ pub struct NetworkLaw<'a> {
     counts: &'a DegreeCounts,
     day: f64,
     nodes: NodeLaws,
+    cancelled: &'a dyn Fn() -> bool,
 }
 
 /// The laws of the network's nodes.
@@ -117,13 +118,20 @@ impl<'a> NetworkLaw<'a> {
         } else {
             NodeLaws::Moments(MomentLaw::solve(course, counts, day)?)
         };
-        Ok(Self { course, counts, day, nodes })
+        Ok(Self { course, counts, day, nodes, cancelled: &|| false })
+    }
+
+    /// The same law, whose tails ask `cancelled` before each node law they are made of: one takes microseconds to a few milliseconds,
+    /// while a whole tail of an extreme network may take minutes.
+    #[must_use]
+    pub fn until(self, cancelled: &'a dyn Fn() -> bool) -> Self {
+        Self { cancelled, ..self }
     }
 
     /// The tail size S_j.
     ///
     /// # Errors
-    /// Those of [`super::NodeLaw::tail`].
+    /// Those of [`super::NodeLaw::tail`]; cancellation.
     pub fn tail(&self, threshold: u64, accuracy: Accuracy) -> Result<TailSum, GrowthError> {
         Ok(self.parts(threshold, accuracy)?.sum(threshold))
     }
@@ -131,7 +139,7 @@ impl<'a> NetworkLaw<'a> {
     /// Whom the tail is made of.
     ///
     /// # Errors
-    /// Those of [`super::NodeLaw::tail`].
+    /// Those of [`super::NodeLaw::tail`]; cancellation.
     pub fn parts(&self, threshold: u64, accuracy: Accuracy) -> Result<TailParts, GrowthError> {
         if let Some(cap) = self.course.cap().filter(|_| needs_states(self.course, threshold)) {
             return capped_parts(self.course, self.counts, self.day, threshold, cap);
@@ -159,7 +167,7 @@ impl<'a> NetworkLaw<'a> {
     /// variance by two moments of each node's law, else [`Self::tail`] at working accuracy.
     ///
     /// # Errors
-    /// Those of [`super::NodeLaw::tail`].
+    /// Those of [`super::NodeLaw::tail`]; cancellation.
     pub fn rough_tail(&self, threshold: u64) -> Result<TailSum, GrowthError> {
         let present = match &self.nodes {
             NodeLaws::Exact { present, .. } if present.is_mixed() => present,
@@ -176,6 +184,7 @@ impl<'a> NetworkLaw<'a> {
             parameters.arrivals.rate(arrival) * course.survival(day - arrival) * share
         };
         let edges = course.arrival_edges(day);
+        self.check()?;
         parts.newcomers = edges.windows(2).map(|pair| PANEL.integrate(pair[0], pair[1], in_tail)).sum();
         Ok(parts.sum(threshold))
     }
@@ -187,6 +196,10 @@ impl<'a> NetworkLaw<'a> {
     pub fn holdings(&self, pieces: &[Piece]) -> Result<Holdings, GrowthError> {
         let NodeLaws::Exact { present, .. } = &self.nodes else { return Err(GrowthError::NoNodeLaw) };
         Ok(holdings(self.course, self.counts, self.day, present, pieces))
+    }
+
+    fn check(&self) -> Result<(), GrowthError> {
+        if (self.cancelled)() { Err(GrowthError::Cancelled) } else { Ok(()) }
     }
 
     fn add_present(
@@ -202,6 +215,7 @@ impl<'a> NetworkLaw<'a> {
         let mut below = self.counts.nodes();
         let mut mean = 0.0;
         for (degree, nodes) in self.counts.iter().rev() {
+            self.check()?;
             let probability = match (cap, &gainless) {
                 (Some(cap), Some(law)) if degree >= cap => law.tail_within(degree, threshold, accuracy)?,
                 (Some(cap), _) if threshold > cap => 0.0,
@@ -242,6 +256,7 @@ impl<'a> NetworkLaw<'a> {
             return Ok(0.0);
         }
         let mut in_tail = |arrival: f64| -> Result<f64, GrowthError> {
+            self.check()?;
             let mut share = MixedLaw::of_newcomer(course, arrival, day).tail(open, threshold, accuracy)?;
             if !full.is_empty() {
                 share += NodeLaw::gainless(course, arrival, day).mixture_tail(full, threshold, accuracy)?;

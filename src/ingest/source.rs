@@ -13,11 +13,17 @@ const GZIP: [u8; 2] = [0x1f, 0x8b];
 /// Bytes of compressed input read at a time.
 const BLOCK: usize = 1 << 16;
 
+/// A list may expand to so many times its compressed bytes; lists of links expand to some 5 to 20 times, and deflate reaches 1,032.
+pub(super) const MOST_EXPANSION: u64 = 200;
+/// Bytes that any list may expand to: a short one of one line over and over is no attack.
+const SPARED: u64 = 64 << 20;
+
 /// A list's bytes.
 pub struct Source<'r> {
     input: Box<dyn Read + 'r>,
     bytes: Rc<Cell<u64>>,
     compressed: bool,
+    expanded: u64,
 }
 
 impl<'r> Source<'r> {
@@ -33,7 +39,7 @@ impl<'r> Source<'r> {
             true => Box::new(MultiGzDecoder::new(BufReader::with_capacity(BLOCK, whole))),
             false => Box::new(whole),
         };
-        Ok(Self { input, bytes, compressed })
+        Ok(Self { input, bytes, compressed, expanded: 0 })
     }
 
     /// Bytes read so far, as they came.
@@ -41,9 +47,15 @@ impl<'r> Source<'r> {
         self.bytes.get()
     }
 
+    /// Whether it goes on and on out of next to nothing.
+    fn is_bomb(&self) -> bool {
+        self.compressed && self.expanded > SPARED && self.expanded / MOST_EXPANSION > self.bytes()
+    }
+
     /// A failure to read on after `line`, in the words that fit.
     pub fn fault(&self, line: u64, error: io::Error) -> IngestError {
         match self.compressed {
+            true if self.is_bomb() => IngestError::Expanding { line },
             true => IngestError::Gzip { line, error },
             false => IngestError::Read { line, error },
         }
@@ -52,7 +64,9 @@ impl<'r> Source<'r> {
 
 impl Read for Source<'_> {
     fn read(&mut self, buffer: &mut [u8]) -> io::Result<usize> {
-        self.input.read(buffer)
+        let read = self.input.read(buffer)?;
+        self.expanded += read as u64;
+        if self.is_bomb() { Err(io::ErrorKind::InvalidData.into()) } else { Ok(read) }
     }
 }
 

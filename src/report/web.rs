@@ -40,6 +40,7 @@ static FILES: LazyLock<Vec<WebFile>> = LazyLock::new(|| {
         web!("http.mjs", SCRIPT),
         web!("jobs.mjs", SCRIPT),
         web!("kept.mjs", SCRIPT),
+        web!("key.mjs", SCRIPT),
         web!("main.mjs", SCRIPT),
         web!("network.mjs", SCRIPT),
         web!("networks.mjs", SCRIPT),

@@ -1,16 +1,16 @@
 //! Computing off the async runtime: a fixed number of workers, a bounded queue, a time budget.
 
 use std::sync::Arc;
-use std::sync::atomic::{AtomicBool, Ordering};
+use std::sync::atomic::{AtomicBool, AtomicU64, Ordering};
 use std::thread::available_parallelism;
 use std::time::{Duration, Instant};
 
 use metrics::{gauge, histogram};
 use tokio::sync::Semaphore;
-use tokio::task::spawn_blocking;
 use tokio::time::timeout_at;
 use tracing::{Instrument, Span, info_span};
 
+use super::background::in_background;
 use super::{ServiceError, TRACES};
 use crate::config::ComputeConfig;
 
@@ -18,11 +18,15 @@ use crate::config::ComputeConfig;
 #[derive(Debug, Clone)]
 pub struct CpuPool {
     size: usize,
+    /// Workers and queue.
+    most: usize,
     workers: Arc<Semaphore>,
     /// Workers and queue together: who finds no place here is turned away at once.
     places: Arc<Semaphore>,
     budget: Duration,
     stopping: Arc<AtomicBool>,
+    /// What a computation takes, microseconds: a mean in which each one counts an eighth.
+    usual: Arc<AtomicU64>,
 }
 
 /// Raises its flag when the caller stops waiting.
@@ -56,12 +60,15 @@ impl CpuPool {
         let cores = available_parallelism().map_or(1, usize::from);
         let workers = if config.workers == 0 { cores } else { config.workers };
         let size = workers.min(Semaphore::MAX_PERMITS);
+        let most = workers.saturating_add(config.queue).min(Semaphore::MAX_PERMITS);
         Self {
             size,
+            most,
             workers: Arc::new(Semaphore::new(size)),
-            places: Arc::new(Semaphore::new(workers.saturating_add(config.queue).min(Semaphore::MAX_PERMITS))),
+            places: Arc::new(Semaphore::new(most)),
             budget: config.budget(),
             stopping: Arc::new(AtomicBool::new(false)),
+            usual: Arc::default(),
         }
     }
 
@@ -76,22 +83,22 @@ impl CpuPool {
         work: impl FnOnce(&dyn Fn() -> bool) -> T + Send + 'static,
     ) -> Result<T, ServiceError> {
         let too_slow = || ServiceError::TooSlow { budget: self.budget };
-        let place = self.places.clone().try_acquire_owned().map_err(|_| ServiceError::Busy)?;
+        let place = self.places.clone().try_acquire_owned().map_err(|_| self.busy())?;
         let (asked, deadline) = (Instant::now(), far_enough(self.budget));
         let busy = Gauged::new();
         let waiting = self.workers.clone().acquire_owned().instrument(info_span!(target: TRACES, "wait for a worker"));
         let worker = match timeout_at(deadline.into(), waiting).await {
             Ok(Ok(worker)) => worker,
-            Ok(Err(_)) => return Err(ServiceError::Busy),
+            Ok(Err(_)) => return Err(self.busy()),
             Err(_) => return Err(too_slow()),
         };
         histogram!("tailcast_compute_wait_seconds").record(asked.elapsed());
         let given_up = Arc::new(AtomicBool::new(false));
         let guard = CancelOnDrop(given_up.clone());
-        let stopping = self.stopping.clone();
+        let (stopping, usual) = (self.stopping.clone(), self.usual.clone());
         let span = Span::current();
         let computing = info_span!(target: TRACES, parent: &span, "compute");
-        let task = spawn_blocking(move || {
+        let task = in_background(move || {
             // Held until the work has really stopped, so that abandoned work still counts against the cores.
             let _held = (place, worker, busy);
             let begun = Instant::now();
@@ -99,6 +106,7 @@ impl CpuPool {
                 || given_up.load(Ordering::Relaxed) || stopping.load(Ordering::Relaxed) || Instant::now() >= deadline;
             let outcome = span.in_scope(|| computing.in_scope(|| work(&cancelled)));
             histogram!("tailcast_compute_seconds").record(begun.elapsed());
+            note_usual(&usual, begun.elapsed());
             outcome
         });
         let outcome = timeout_at(deadline.into(), task).await;
@@ -110,9 +118,27 @@ impl CpuPool {
         }
     }
 
+    /// About how long it takes until what waits now is done: when to try again, whole seconds, at least one and at most the budget.
+    pub fn backlog(&self) -> Duration {
+        let free = self.places.available_permits().min(self.most);
+        let usual = Duration::from_micros(self.usual.load(Ordering::Relaxed));
+        let rounds = (self.most - free).div_ceil(self.size);
+        let seconds = usual.saturating_mul(u32::try_from(rounds).unwrap_or(u32::MAX)).as_secs_f64().ceil();
+        Duration::from_secs(seconds as u64).clamp(Duration::from_secs(1), self.budget.max(Duration::from_secs(1)))
+    }
+
+    fn busy(&self) -> ServiceError {
+        ServiceError::Busy { wait: self.backlog() }
+    }
+
     /// Computations at the same time.
     pub fn workers(&self) -> usize {
         self.size
+    }
+
+    /// Computations at work and waiting.
+    pub fn most(&self) -> usize {
+        self.most
     }
 
     /// The time one request may wait and compute.
@@ -124,6 +150,13 @@ impl CpuPool {
     pub fn stop(&self) {
         self.stopping.store(true, Ordering::Relaxed);
     }
+}
+
+fn note_usual(usual: &AtomicU64, taken: Duration) {
+    let taken = u64::try_from(taken.as_micros()).unwrap_or(u64::MAX);
+    // Two at once may count as one: it is an estimate.
+    let before = usual.load(Ordering::Relaxed);
+    usual.store(if before == 0 { taken } else { before - before / 8 + taken / 8 }, Ordering::Relaxed);
 }
 
 /// The moment `budget` from now; a budget beyond what a clock can say is a year.
@@ -160,7 +193,7 @@ mod tests {
             async move { pool.run(until_cancelled).await }
         });
         tokio::time::sleep(Duration::from_millis(50)).await;
-        assert!(matches!(pool.run(until_cancelled).await, Err(ServiceError::Busy)));
+        assert!(matches!(pool.run(until_cancelled).await, Err(ServiceError::Busy { .. })));
         assert!(matches!(running.await.unwrap(), Err(ServiceError::TooSlow { .. }) | Ok(())));
         assert!(matches!(waiting.await.unwrap(), Err(ServiceError::TooSlow { .. }) | Ok(())));
         assert!(pool.run(|_| 7).await.is_ok_and(|value| value == 7), "a place is free again");

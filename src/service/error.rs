@@ -46,7 +46,10 @@ pub enum ServiceError {
     NotListed,
     /// Every worker is taken and the queue is full.
     #[error("every worker is taken and the queue is full")]
-    Busy,
+    Busy {
+        /// About how long it takes until what waits is done.
+        wait: Duration,
+    },
     /// The time budget ran out.
     #[error("the answer took longer than {} s", budget.as_secs())]
     TooSlow {
@@ -115,7 +118,11 @@ impl From<StoreError> for ServiceError {
         match error {
             StoreError::Busy(_) => Self::StoreBusy(error),
             StoreError::NoTable(_) => Self::TablesOutdated,
-            StoreError::Gone { .. } | StoreError::Unusable(_) => Self::StoreUnavailable(error),
+            StoreError::Gone { .. }
+            | StoreError::Full(_)
+            | StoreError::ReadOnly(_)
+            | StoreError::Damaged(_)
+            | StoreError::Unusable(_) => Self::StoreUnavailable(error),
             _ => Self::Store(error),
         }
     }
@@ -148,6 +155,7 @@ impl ServiceError {
             }
             OriginError::Fit(FitError::Growth(growth)) | OriginError::Forecast(ForecastError::Growth(growth)) => {
                 match growth {
+                    GrowthError::Cancelled => Self::TooSlow { budget },
                     GrowthError::NobodyStarts
                     | GrowthError::TooFast { .. }
                     | GrowthError::TooLarge { .. }

@@ -240,10 +240,12 @@ impl Service {
     /// budget, or the database fails.
     pub async fn evidence(&self, name: &NetworkName) -> Result<NetworkEvidence, ServiceError> {
         self.network(name).await?;
+        let busy = || ServiceError::Busy { wait: self.cpu.backlog() };
+        let _waiting = self.evidence_queue.clone().try_acquire_owned().map_err(|_| busy())?;
         let budget = self.cpu.budget();
         let place = match timeout(budget, self.evidence_places.clone().acquire_owned()).await {
             Ok(Ok(place)) => place,
-            Ok(Err(_)) => return Err(ServiceError::Busy),
+            Ok(Err(_)) => return Err(busy()),
             Err(_) => return Err(ServiceError::TooSlow { budget }),
         };
         let found = self.store.find_evidence(name.as_str()).await?;
@@ -283,6 +285,6 @@ async fn encoded<T: Send + 'static>(
 pub(super) async fn off_runtime<T: Send + 'static>(
     work: impl FnOnce() -> T + Send + 'static,
 ) -> Result<T, ServiceError> {
-    let done = tokio::task::spawn_blocking(work).await;
+    let done = super::background::converted(work).await;
     done.map_err(|error| ServiceError::Broken(format!("a conversion stopped short: {error}")))
 }

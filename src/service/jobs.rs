@@ -7,8 +7,9 @@ mod link_list;
 mod outcome;
 mod refresh;
 
+use std::convert::Infallible;
 use std::future::Future;
-use std::time::Duration;
+use std::time::{Duration, Instant};
 
 use tokio::sync::watch;
 use tokio::time::{sleep, timeout};
@@ -17,7 +18,7 @@ use uuid::Uuid;
 
 use super::networks::cut;
 use super::{Service, ServiceError, TRACES, Thing, in_own_task};
-use crate::store::{CalledOff, JobFilter, JobKind, JobState, StoreError, StoredJob, WriteError};
+use crate::store::{CalledOff, JobFilter, JobKind, JobStart, JobState, StoreError, StoredJob, WriteError};
 pub use board::Board;
 use board::Turn;
 pub use link_list::LinkListTask;
@@ -31,6 +32,12 @@ const MOST_STARTS: u64 = 3;
 /// How often, and after how long at first, the end of a job is written again when the database fails.
 const WRITE_TRIES: u32 = 6;
 const WRITE_PAUSE: Duration = Duration::from_secs(1);
+/// Time between two looks at jobs that other processes took on or are at.
+const LOOK_PAUSE: Duration = Duration::from_secs(1);
+/// Time between two prolongations of a claim.
+const CLAIM_PAUSE: Duration = Duration::from_secs(5);
+/// Most jobs taken up at one look; the next look takes up more.
+const MOST_TAKEN_UP: u32 = 10_000;
 
 /// A job as it stands.
 #[derive(Debug, Clone, PartialEq)]
@@ -59,9 +66,14 @@ impl Service {
     /// # Errors
     /// As [`Self::job`].
     pub async fn job_after(&self, id: Uuid, patience: Duration) -> Result<JobView, ServiceError> {
+        let asked = Instant::now();
         if let Some(mut pulse) = self.jobs.watch(id) {
             // Changes until the job ends; running out of patience is no failure.
             let _ = timeout(patience, async { while pulse.changed().await.is_ok() {} }).await;
+        }
+        // Another process may be at it.
+        while self.store.is_shared() && asked.elapsed() < patience && self.job(id).await?.job.state.is_live() {
+            sleep(LOOK_PAUSE.min(patience.saturating_sub(asked.elapsed()))).await;
         }
         self.job(id).await
     }
@@ -114,10 +126,36 @@ impl Service {
         self.check_tables().await?;
         // What is younger than an upload may take may belong to one.
         self.store.sweep_spool(self.jobs.config().link_list_time()).await?;
-        for (id, kind) in self.store.live_jobs().await? {
+        if !self.store.is_shared() {
+            self.store.release_claims().await?;
+        }
+        self.take_up_jobs().await
+    }
+
+    async fn take_up_jobs(&self) -> Result<(), ServiceError> {
+        // Of a file every job is this process's; of a server the next look takes up more.
+        let most = if self.store.is_shared() { MOST_TAKEN_UP } else { u32::MAX };
+        for (id, kind) in self.store.claimable_jobs(most).await? {
             self.launch(id, kind);
         }
         Ok(())
+    }
+
+    /// Takes up jobs until it is told to stop: those of the last process if that is yet to be done, and now and then those that other
+    /// processes on the same database took on or left.
+    pub async fn share_jobs(self, mut resumed: bool, mut stop: watch::Receiver<bool>) {
+        while !*stop.borrow() && (self.store.is_shared() || !resumed) {
+            tokio::select! {
+                told = stop.changed() => if told.is_err() { break },
+                () = sleep(LOOK_PAUSE) => {
+                    let taken = if resumed { self.take_up_jobs().await } else { self.resume_jobs().await };
+                    match taken {
+                        Ok(()) => resumed = true,
+                        Err(error) => tracing::debug!(%error, "jobs that wait cannot be read; it is tried again"),
+                    }
+                }
+            }
+        }
     }
 
     fn launch(&self, id: Uuid, kind: JobKind) {
@@ -139,21 +177,46 @@ impl Service {
         tokio::spawn(work.instrument(traced).instrument(info_span!("job", %id)));
     }
 
-    /// Works a job to its end, or until the process stops.
+    /// Works a job to its end, or until the process stops, unless another process is at it.
     async fn work(&self, id: Uuid, kind: JobKind, turn: &Turn) -> Result<(), ServiceError> {
         let _worker = turn.come(kind).await;
         if turn.is_stopping() {
             return Ok(());
         }
-        let Some(job) = self.store.start_job(id).await? else {
-            // A list that was received in vain.
-            self.drop_list(id).await;
-            return Ok(());
+        let job = match self.store.start_job(id).await? {
+            JobStart::Begun(job) => job,
+            JobStart::Elsewhere => return Ok(()),
+            JobStart::Over => {
+                // A list that was received in vain.
+                self.store.drop_spooled(id).await;
+                return Ok(());
+            }
         };
-        match job.kind {
-            JobKind::LinkList => self.count_link_list(&job, turn).await,
-            JobKind::Refresh => self.refresh(&job, turn).await,
-            JobKind::Backtest => self.backtest(&job, turn).await,
+        let work = async {
+            match job.kind {
+                JobKind::LinkList => self.count_link_list(&job, turn).await,
+                JobKind::Refresh => self.refresh(&job, turn).await,
+                JobKind::Backtest => self.backtest(&job, turn).await,
+            }
+        };
+        tokio::select! {
+            outcome = work => outcome,
+            never = self.hold_claim(id, turn) => match never {},
+        }
+    }
+
+    /// Prolongs the claim on a job for as long as it is at work, and tells it to stop when the claim is lost.
+    async fn hold_claim(&self, id: Uuid, turn: &Turn) -> Infallible {
+        loop {
+            sleep(CLAIM_PAUSE).await;
+            if !self.store.is_shared() {
+                continue;
+            }
+            match self.store.prolong_claim(id, turn.so_far()).await {
+                Ok(true) => {}
+                Ok(false) => self.jobs.call_off(id),
+                Err(error) => tracing::warn!(%error, "the claim on a job could not be prolonged; it is tried again"),
+            }
         }
     }
 
@@ -183,7 +246,7 @@ fn view(job: StoredJob, live: Option<f64>) -> Result<JobView, ServiceError> {
     let outcome = job.outcome.as_deref().map(JobOutcome::from_json).transpose()?;
     let progress = match job.state {
         JobState::Waiting => Some(0.0),
-        JobState::Running => Some(live.unwrap_or(0.0)),
+        JobState::Running => Some(live.or(job.progress).unwrap_or(0.0)),
         JobState::Succeeded => Some(1.0),
         JobState::Failed | JobState::Cancelled => None,
     };

@@ -35,7 +35,7 @@ impl Service {
         self.store.find_network(name.as_str()).await?.ok_or(ServiceError::NotFound(Thing::Network))
     }
 
-    /// Networks whose name comes after `after`, and whether more follow.
+    /// Networks whose name comes after `after`, and whether more follow; for a key that is bound to networks, `seen_by`, only those.
     ///
     /// # Errors
     /// When the database fails.
@@ -43,9 +43,10 @@ impl Service {
         &self,
         after: Option<NetworkName>,
         limit: u32,
+        seen_by: Option<String>,
     ) -> Result<(Vec<NetworkSummary>, bool), ServiceError> {
         let after = after.as_ref().map(NetworkName::as_str);
-        let found = self.store.list_networks(after, limit.saturating_add(1)).await?;
+        let found = self.store.list_networks(after, limit.saturating_add(1), seen_by.as_deref()).await?;
         Ok(cut(found, limit))
     }
 

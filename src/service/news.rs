@@ -1,12 +1,15 @@
 //! What becomes of a network's refreshes, for those who follow it.
 
+use std::collections::HashMap;
 use std::str::FromStr;
+use std::sync::{Arc, Mutex, PoisonError};
 
 use jiff::Timestamp;
 use serde::{Deserialize, Serialize};
+use tokio::sync::OnceCell;
 use uuid::Uuid;
 
-use super::{Count, LimitAnswer, NetworkName, Real, RefreshState, Service, ServiceError, Thing};
+use super::{Count, LimitAnswer, NetworkName, Real, RefreshState, Service, ServiceError, Thing, converted};
 use crate::store::{IssuedForecast, RefreshNews, RunKind};
 
 /// Something that became of a network's refreshes.
@@ -30,7 +33,7 @@ pub struct NetworkNews {
     pub forecast: Option<Uuid>,
     /// How limits fare by the forecast.
     #[serde(skip_serializing_if = "Option::is_none")]
-    pub limits: Option<Vec<LimitNews>>,
+    pub limits: Option<Arc<Vec<LimitNews>>>,
     /// Why there is no forecast, in words.
     #[serde(skip_serializing_if = "Option::is_none")]
     pub reason: Option<String>,
@@ -114,8 +117,10 @@ impl Service {
         let mut forecasts = 0;
         for issued in &news.issued {
             // One that was deleted meanwhile is told no more.
-            if let Some(run) = self.store.find_run(RunKind::Forecast, issued.run).await? {
-                told.forecast(issued, limits_in(&run.document)?);
+            if self.store.find_tag(RunKind::Forecast, issued.run).await?.is_some()
+                && let Some(limits) = self.limits_told(issued.run).await?
+            {
+                told.forecast(issued, limits);
                 forecasts += 1;
             }
             told.place.run = Some(issued.run);
@@ -124,6 +129,55 @@ impl Service {
             told.state(&news, forecasts > 0);
         }
         Ok((told.news, told.place, news.more))
+    }
+}
+
+impl Service {
+    /// How limits fare by a forecast; none when it was deleted. Whoever asks while it is read waits for that reading.
+    async fn limits_told(&self, run: Uuid) -> Result<Option<Arc<Vec<LimitNews>>>, ServiceError> {
+        let cell = self.told.of(run);
+        let read = cell.get_or_try_init(|| async {
+            let found = self.store.find_run(RunKind::Forecast, run).await?;
+            let read = converted(move || found.map(|found| limits_in(&found.document)).transpose()).await;
+            let read = read.map_err(|error| ServiceError::Broken(format!("reading a forecast: {error}")))?;
+            Ok::<_, ServiceError>(read?.map(Arc::new))
+        });
+        read.await.cloned()
+    }
+}
+
+/// Limits of the forecasts that were told last.
+#[derive(Debug, Clone, Default)]
+pub(super) struct TellingCache(Arc<Mutex<Tellings>>);
+
+/// What is told of a forecast, and since when by the count of forecasts told.
+type Telling = (u64, Arc<OnceCell<Option<Arc<Vec<LimitNews>>>>>);
+
+#[derive(Debug, Default)]
+struct Tellings {
+    kept: HashMap<Uuid, Telling>,
+    count: u64,
+}
+
+impl TellingCache {
+    /// Forecasts kept: those that many networks' followers are told of at the same time.
+    const MOST: usize = 256;
+
+    fn of(&self, run: Uuid) -> Arc<OnceCell<Option<Arc<Vec<LimitNews>>>>> {
+        let mut tellings = self.0.lock().unwrap_or_else(PoisonError::into_inner);
+        if let Some((_, cell)) = tellings.kept.get(&run) {
+            return cell.clone();
+        }
+        if tellings.kept.len() >= Self::MOST
+            && let Some(oldest) = tellings.kept.iter().min_by_key(|(_, (since, _))| *since).map(|(&run, _)| run)
+        {
+            tellings.kept.remove(&oldest);
+        }
+        tellings.count += 1;
+        let cell = Arc::new(OnceCell::new());
+        let since = tellings.count;
+        tellings.kept.insert(run, (since, cell.clone()));
+        cell
     }
 }
 
@@ -147,7 +201,7 @@ impl Told<'_> {
         }
     }
 
-    fn forecast(&mut self, issued: &IssuedForecast, limits: Vec<LimitNews>) {
+    fn forecast(&mut self, issued: &IssuedForecast, limits: Arc<Vec<LimitNews>>) {
         self.place.run = Some(issued.run);
         let item = self.item(NewsKind::Forecast, issued.revision);
         self.news.push(NetworkNews { forecast: Some(issued.run), limits: Some(limits), ..item });
@@ -242,6 +296,16 @@ impl FromStr for NewsPlace {
 #[cfg(test)]
 mod tests {
     use super::*;
+
+    #[test]
+    fn followers_share_what_is_told_of_a_forecast() {
+        let (cache, run) = (TellingCache::default(), Uuid::now_v7());
+        let first = cache.of(run);
+        assert!(Arc::ptr_eq(&first, &cache.of(run)));
+        (0..TellingCache::MOST).for_each(|_| drop(cache.of(Uuid::now_v7())));
+        assert!(!Arc::ptr_eq(&first, &cache.of(run)), "the oldest makes room");
+        assert_eq!(cache.0.lock().unwrap().kept.len(), TellingCache::MOST);
+    }
 
     #[test]
     fn a_place_is_read_as_it_is_written_and_nothing_else_is() {

@@ -10,7 +10,7 @@ use super::{
     ENGINE, KeyClaim, RunFilter, RunKind, RunOrigin, RunSummary, Service, ServiceError, StoredRun, Thing, in_own_task,
 };
 use crate::evaluate::OriginError;
-use crate::store::{Inserted, NewRun};
+use crate::store::{Inserted, NewRun, next_id};
 
 /// A run's document: its head in front of its answer.
 #[derive(Serialize)]
@@ -144,15 +144,17 @@ pub(super) fn compute<Q: Question>(
     let inputs = question.canonical().map_err(|error| Failure::Unwritable(error.to_string()))?;
     let digest = inputs_digest(&inputs);
     let answer = question.answer(digest.clone(), cancelled).map_err(Failure::Unanswered)?;
-    let id = Uuid::now_v7();
-    // Read back from the id, so that the order of ids and the order of times are one.
-    let created_at = id
+    let id = next_id();
+    // Read back from the id, so that the order of ids and the order of times are one. The clock where it went back since: ids
+    // stay above earlier ones.
+    let made_at = id
         .get_timestamp()
         .and_then(|time| {
             let (seconds, nanoseconds) = time.to_unix();
             Timestamp::new(i64::try_from(seconds).ok()?, i32::try_from(nanoseconds).ok()?).ok()
         })
         .unwrap_or_else(Timestamp::now);
+    let created_at = made_at.min(Timestamp::now());
     let document = Document {
         id,
         created_at: created_at.to_string(),

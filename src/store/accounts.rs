@@ -1,10 +1,11 @@
 //! Issued forecasts, and the accounts of what later snapshots showed of them.
 
 use jiff::Timestamp;
-use sqlx::{FromRow, SqliteConnection};
+use sqlx::FromRow;
 use uuid::Uuid;
 
 use super::columns::{date, date_key, time, uuid};
+use super::statement::{Connection, query};
 use super::{Store, StoreError};
 
 /// A forecast that a refresh issued.
@@ -68,13 +69,12 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn list_issued(&self, network: &str) -> Result<Vec<IssuedRun>, StoreError> {
-        self.file.check()?;
-        let rows: Vec<(String, String, String)> = sqlx::query_as(
+        let rows: Vec<(String, String, String)> = query(
             "SELECT run_id, origin, issued_to FROM network_runs WHERE network = $1 AND issued_to IS NOT NULL \
              ORDER BY run_id DESC",
         )
         .bind(network)
-        .fetch_all(&self.read)
+        .fetch_all(&mut self.reader().await?)
         .await?;
         let issued = |(id, origin, issued_to): (String, String, String)| {
             Ok(IssuedRun { id: uuid(&id)?, origin: date(&origin)?, issued_to: date(&issued_to)? })
@@ -87,11 +87,10 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn list_account_keys(&self, network: &str) -> Result<Vec<AccountKey>, StoreError> {
-        self.file.check()?;
         let rows: Vec<(String, String, String)> =
-            sqlx::query_as("SELECT run_id, as_of, snapshot_tag FROM accounts WHERE network = $1")
+            query("SELECT run_id, as_of, snapshot_tag FROM accounts WHERE network = $1")
                 .bind(network)
-                .fetch_all(&self.read)
+                .fetch_all(&mut self.reader().await?)
                 .await?;
         let key = |(run, as_of, snapshot_tag): (String, String, String)| {
             Ok(AccountKey { run: uuid(&run)?, as_of: date(&as_of)?, snapshot_tag })
@@ -104,8 +103,7 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn list_accounts(&self, network: &str, forecasts: u32) -> Result<Vec<StoredAccount>, StoreError> {
-        self.file.check()?;
-        let rows: Vec<AccountRow> = sqlx::query_as(
+        let rows: Vec<AccountRow> = query(
             "SELECT a.run_id, r.created_at AS issued_at, n.evidence_corrected_at, a.as_of, a.account FROM accounts a \
              JOIN runs r ON r.id = a.run_id JOIN network_runs n ON n.run_id = a.run_id WHERE a.network = $1 AND a.run_id IN \
              (SELECT DISTINCT run_id FROM accounts WHERE network = $1 ORDER BY run_id DESC LIMIT $2) \
@@ -113,19 +111,15 @@ impl Store {
         )
         .bind(network)
         .bind(i64::from(forecasts))
-        .fetch_all(&self.read)
+        .fetch_all(&mut self.reader().await?)
         .await?;
         rows.into_iter().map(StoredAccount::try_from).collect()
     }
 }
 
 /// Keeps an account in place of the one of its forecast and date; not when its forecast was deleted meanwhile.
-pub(super) async fn insert(
-    connection: &mut SqliteConnection,
-    network: &str,
-    account: &NewAccount,
-) -> Result<(), StoreError> {
-    sqlx::query(
+pub(super) async fn insert(connection: &mut Connection, network: &str, account: &NewAccount) -> Result<(), StoreError> {
+    query(
         "INSERT INTO accounts (run_id, as_of, network, snapshot_tag, created_at, account) \
          SELECT run_id, $2, $3, $4, $5, $6 FROM network_runs WHERE run_id = $1 ON CONFLICT (run_id, as_of) DO UPDATE SET \
          snapshot_tag = excluded.snapshot_tag, created_at = excluded.created_at, account = excluded.account",
@@ -142,8 +136,8 @@ pub(super) async fn insert(
 }
 
 /// Takes an account away.
-pub(super) async fn withdraw(connection: &mut SqliteConnection, run: Uuid, as_of: Timestamp) -> Result<(), StoreError> {
-    sqlx::query("DELETE FROM accounts WHERE run_id = $1 AND as_of = $2")
+pub(super) async fn withdraw(connection: &mut Connection, run: Uuid, as_of: Timestamp) -> Result<(), StoreError> {
+    query("DELETE FROM accounts WHERE run_id = $1 AND as_of = $2")
         .bind(run.to_string())
         .bind(date_key(as_of))
         .execute(connection)

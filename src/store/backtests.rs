@@ -2,11 +2,14 @@
 
 use jiff::Timestamp;
 use sha2::{Digest, Sha256};
-use sqlx::{FromRow, SqliteConnection};
+use sqlx::FromRow;
 use uuid::Uuid;
 
 use super::columns::{signed, time, unsigned, uuid};
+use super::ids::next_id;
 use super::jobs::{JobKind, JobState, end, insert, live_job};
+use super::statement::{Connection, query, query_scalar};
+use super::writes::Scope;
 use super::{Store, StoreError};
 
 /// A backtest to keep, and the end of its job.
@@ -100,17 +103,17 @@ impl Store {
         evidence: &str,
         only_current: bool,
     ) -> Result<BacktestWrite, StoreError> {
-        let mut transaction = self.begin().await?;
+        let mut transaction = self.begin(Scope::OfJob(job)).await?;
         let network: Option<String> =
-            sqlx::query_scalar("SELECT network FROM jobs WHERE id = $1 AND state IN ('waiting', 'running')")
+            query_scalar("SELECT network FROM jobs WHERE id = $1 AND state IN ('waiting', 'running')")
                 .bind(job.to_string())
-                .fetch_optional(&mut *transaction)
+                .fetch_optional(&mut transaction)
                 .await?;
         let Some(network) = network else { return Ok(BacktestWrite::CalledOff) };
         if only_current && digest(&mut transaction, &network).await? != evidence {
             return Ok(BacktestWrite::Superseded);
         }
-        sqlx::query(
+        query(
             "INSERT INTO backtest_records (job, origin, evidence, record) VALUES ($1, $2, $3, $4) \
              ON CONFLICT (job, origin) DO UPDATE SET evidence = excluded.evidence, record = excluded.record",
         )
@@ -118,7 +121,7 @@ impl Store {
         .bind(signed("origin", origin)?)
         .bind(evidence)
         .bind(record)
-        .execute(&mut *transaction)
+        .execute(&mut transaction)
         .await?;
         self.commit(transaction).await?;
         Ok(BacktestWrite::Stored)
@@ -129,11 +132,10 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn list_backtest_origins(&self, job: Uuid) -> Result<Vec<(u64, String)>, StoreError> {
-        self.file.check()?;
         let rows: Vec<(i64, String)> =
-            sqlx::query_as("SELECT origin, evidence FROM backtest_records WHERE job = $1 ORDER BY origin")
+            query("SELECT origin, evidence FROM backtest_records WHERE job = $1 ORDER BY origin")
                 .bind(job.to_string())
-                .fetch_all(&self.read)
+                .fetch_all(&mut self.reader().await?)
                 .await?;
         rows.into_iter().map(|(origin, evidence)| Ok((unsigned("origin", origin)?, evidence))).collect()
     }
@@ -143,12 +145,11 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn list_backtest_records(&self, job: Uuid, evidence: &str) -> Result<Vec<String>, StoreError> {
-        self.file.check()?;
         let records =
-            sqlx::query_scalar("SELECT record FROM backtest_records WHERE job = $1 AND evidence = $2 ORDER BY origin")
+            query_scalar("SELECT record FROM backtest_records WHERE job = $1 AND evidence = $2 ORDER BY origin")
                 .bind(job.to_string())
                 .bind(evidence)
-                .fetch_all(&self.read)
+                .fetch_all(&mut self.reader().await?)
                 .await?;
         Ok(records)
     }
@@ -164,7 +165,7 @@ impl Store {
         outcome: &str,
         only_current: bool,
     ) -> Result<BacktestWrite, StoreError> {
-        let mut transaction = self.begin().await?;
+        let mut transaction = self.begin(Scope::OfJob(made.id)).await?;
         if only_current && digest(&mut transaction, &made.network).await? != made.evidence {
             return Ok(BacktestWrite::Superseded);
         }
@@ -172,7 +173,7 @@ impl Store {
         if !end(&mut transaction, made.id, JobState::Succeeded, Some(outcome)).await? {
             return Ok(BacktestWrite::CalledOff);
         }
-        sqlx::query(
+        query(
             "INSERT INTO backtests (id, network, created_at, revision, evidence, task, tag, document) \
              VALUES ($1, $2, $3, $4, $5, $6, $7, $8)",
         )
@@ -184,7 +185,7 @@ impl Store {
         .bind(made.task.as_str())
         .bind(made.tag.as_str())
         .bind(made.document.as_str())
-        .execute(&mut *transaction)
+        .execute(&mut transaction)
         .await?;
         self.commit(transaction).await?;
         Ok(BacktestWrite::Stored)
@@ -195,14 +196,13 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn find_backtest(&self, id: Uuid) -> Result<Option<StoredBacktest>, StoreError> {
-        self.file.check()?;
-        let mut transaction = self.read.begin().await?;
-        let row: Option<BacktestRow> = sqlx::query_as(
+        let mut transaction = self.begin_read().await?;
+        let row: Option<BacktestRow> = query(
             "SELECT id, network, created_at, evidence, evidence_corrected_at, task, tag, document FROM backtests \
              WHERE id = $1",
         )
         .bind(id.to_string())
-        .fetch_optional(&mut *transaction)
+        .fetch_optional(&mut transaction)
         .await?;
         let Some(BacktestRow { summary, tag, document }) = row else { return Ok(None) };
         let current = digest(&mut transaction, &summary.network).await?;
@@ -219,16 +219,15 @@ impl Store {
         before: Option<Uuid>,
         limit: u32,
     ) -> Result<Vec<BacktestSummary>, StoreError> {
-        self.file.check()?;
-        let mut transaction = self.read.begin().await?;
-        let rows: Vec<SummaryRow> = sqlx::query_as(
+        let mut transaction = self.begin_read().await?;
+        let rows: Vec<SummaryRow> = query(
             "SELECT id, network, created_at, evidence, evidence_corrected_at, task FROM backtests \
              WHERE network = $1 AND ($2 IS NULL OR id < $2) ORDER BY id DESC LIMIT $3",
         )
         .bind(network)
         .bind(before.map(|id| id.to_string()))
         .bind(i64::from(limit))
-        .fetch_all(&mut *transaction)
+        .fetch_all(&mut transaction)
         .await?;
         let current = digest(&mut transaction, network).await?;
         rows.into_iter().map(|row| row.against(&current)).collect()
@@ -243,24 +242,24 @@ impl Store {
         id: Uuid,
         allows: impl FnOnce(&str) -> bool,
     ) -> Result<Option<bool>, StoreError> {
-        let mut transaction = self.begin().await?;
-        let tag: Option<String> = sqlx::query_scalar("SELECT tag FROM backtests WHERE id = $1")
+        let mut transaction = self.begin(Scope::OfBacktest(id)).await?;
+        let tag: Option<String> = query_scalar("SELECT tag FROM backtests WHERE id = $1")
             .bind(id.to_string())
-            .fetch_optional(&mut *transaction)
+            .fetch_optional(&mut transaction)
             .await?;
         let Some(tag) = tag else { return Ok(Some(false)) };
         if !allows(&tag) {
             return Ok(None);
         }
-        sqlx::query("DELETE FROM backtests WHERE id = $1").bind(id.to_string()).execute(&mut *transaction).await?;
+        query("DELETE FROM backtests WHERE id = $1").bind(id.to_string()).execute(&mut transaction).await?;
         self.commit(transaction).await?;
         Ok(Some(true))
     }
 }
 
 /// SHA-256 of all evidence that is stored of a network: the same for the same evidence, whatever its plan.
-pub(super) async fn digest(connection: &mut SqliteConnection, network: &str) -> Result<String, StoreError> {
-    let parts: Vec<String> = sqlx::query_scalar(
+pub(super) async fn digest(connection: &mut Connection, network: &str) -> Result<String, StoreError> {
+    let parts: Vec<String> = query_scalar(
         "SELECT part FROM (SELECT 1 AS place, degree_kind || ' ' || coalesce(entry_degrees, '') AS part FROM networks \
          WHERE name = $1 UNION ALL SELECT 2, as_of || ' ' || tag FROM snapshots WHERE network = $1 \
          UNION ALL SELECT 3, starts_at || ' ' || ends_at || ' ' || tag FROM transitions WHERE network = $1 \
@@ -273,33 +272,27 @@ pub(super) async fn digest(connection: &mut SqliteConnection, network: &str) -> 
 }
 
 /// Drops the records of a job.
-pub(super) async fn drop_records(connection: &mut SqliteConnection, job: Uuid) -> Result<(), StoreError> {
-    sqlx::query("DELETE FROM backtest_records WHERE job = $1").bind(job.to_string()).execute(connection).await?;
+pub(super) async fn drop_records(connection: &mut Connection, job: Uuid) -> Result<(), StoreError> {
+    query("DELETE FROM backtest_records WHERE job = $1").bind(job.to_string()).execute(connection).await?;
     Ok(())
 }
 
 /// Marks the backtests of a network that stand on counts of `revision`, which are replaced now.
-pub(super) async fn corrected(
-    connection: &mut SqliteConnection,
-    network: &str,
-    revision: u64,
-) -> Result<(), StoreError> {
-    sqlx::query(
-        "UPDATE backtests SET evidence_corrected_at = $3, redo_due = TRUE WHERE network = $1 AND revision >= $2",
-    )
-    .bind(network)
-    .bind(signed("revision", revision)?)
-    .bind(Timestamp::now().as_microsecond())
-    .execute(connection)
-    .await?;
+pub(super) async fn corrected(connection: &mut Connection, network: &str, revision: u64) -> Result<(), StoreError> {
+    query("UPDATE backtests SET evidence_corrected_at = $3, redo_due = TRUE WHERE network = $1 AND revision >= $2")
+        .bind(network)
+        .bind(signed("revision", revision)?)
+        .bind(Timestamp::now().as_microsecond())
+        .execute(connection)
+        .await?;
     Ok(())
 }
 
 /// Takes the newest backtest of a network on anew where counts it stands on were replaced; not while one is at work, which
 /// sees the change itself.
-pub(super) async fn redo(connection: &mut SqliteConnection, network: &str) -> Result<Option<Uuid>, StoreError> {
+pub(super) async fn redo(connection: &mut Connection, network: &str) -> Result<Option<Uuid>, StoreError> {
     let newest: Option<(String, bool, String)> =
-        sqlx::query_as("SELECT id, redo_due, task FROM backtests WHERE network = $1 ORDER BY id DESC LIMIT 1")
+        query("SELECT id, redo_due, task FROM backtests WHERE network = $1 ORDER BY id DESC LIMIT 1")
             .bind(network)
             .fetch_optional(&mut *connection)
             .await?;
@@ -307,10 +300,10 @@ pub(super) async fn redo(connection: &mut SqliteConnection, network: &str) -> Re
     if live_job(connection, network, JobKind::Backtest).await?.is_some() {
         return Ok(None);
     }
-    let id = Uuid::now_v7();
+    let id = next_id();
     insert(connection, id, JobKind::Backtest, network, &task).await?;
     // Once a correction: a redo that fails or is called off is not taken on at every change that follows.
-    sqlx::query("UPDATE backtests SET redo_due = FALSE WHERE id = $1").bind(newest).execute(connection).await?;
+    query("UPDATE backtests SET redo_due = FALSE WHERE id = $1").bind(newest).execute(connection).await?;
     Ok(Some(id))
 }
 

@@ -3,13 +3,14 @@
 use std::collections::HashSet;
 
 use jiff::Timestamp;
-use sqlx::SqliteConnection;
+
 use uuid::Uuid;
 
 use super::columns::{date, unsigned};
 use super::jobs::{JobState, end};
 use super::refreshes::{changed, corrected};
-use super::writes::{Caps, Clash, WriteError};
+use super::statement::{Connection, query};
+use super::writes::{Caps, Clash, Scope, WriteError};
 use super::{
     EndTags, Store, StoreError, StoredLinkEvents, StoredSnapshot, StoredTransitions, link_events, snapshots,
     transitions,
@@ -64,7 +65,7 @@ impl Store {
         if derived.rows() > caps.rows {
             return Err(Clash::TooManyRows { total: derived.rows(), most: caps.rows }.into());
         }
-        let mut transaction = self.begin().await?;
+        let mut transaction = self.begin(Scope::Network(network)).await?;
         // First: a job that was called off, by itself or with its network, must not touch anything.
         if !end(&mut transaction, job, JobState::Succeeded, Some(outcome)).await? {
             return Ok(None);
@@ -87,7 +88,7 @@ impl Store {
             "DELETE FROM transitions WHERE network = $1",
             "DELETE FROM link_events WHERE network = $1",
         ] {
-            sqlx::query(delete).bind(network).execute(&mut *transaction).await?;
+            query(delete).bind(network).execute(&mut transaction).await?;
         }
         for snapshot in &derived.snapshots {
             let since = since(snapshot.summary.as_of, &snapshot.summary.tag);
@@ -112,8 +113,8 @@ struct Standing {
     revision: u64,
 }
 
-async fn standing(connection: &mut SqliteConnection, network: &str) -> Result<Vec<Standing>, StoreError> {
-    let rows: Vec<(String, String, i64)> = sqlx::query_as(
+async fn standing(connection: &mut Connection, network: &str) -> Result<Vec<Standing>, StoreError> {
+    let rows: Vec<(String, String, i64)> = query(
         "SELECT as_of, tag, revision FROM snapshots WHERE network = $1 \
          UNION ALL SELECT starts_at, tag, revision FROM transitions WHERE network = $1",
     )

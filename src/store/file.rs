@@ -45,6 +45,19 @@ impl DatabaseFile {
     }
 }
 
+impl DatabaseFile {
+    /// Bytes free to this process on the file's disk, where that can be told.
+    pub fn free_bytes(&self) -> Option<u64> {
+        #[cfg(unix)]
+        {
+            let told = rustix::fs::statvfs(self.path.parent()?).ok()?;
+            Some(told.f_bavail.saturating_mul(told.f_frsize))
+        }
+        #[cfg(not(unix))]
+        None
+    }
+}
+
 #[cfg(unix)]
 fn identity(found: &Metadata) -> Identity {
     use std::os::unix::fs::MetadataExt;

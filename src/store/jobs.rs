@@ -1,12 +1,16 @@
 //! Jobs: work that outlasts its request and the process.
 
 use jiff::Timestamp;
-use sqlx::{FromRow, QueryBuilder, Sqlite, SqliteConnection};
+use sqlx::FromRow;
 use uuid::Uuid;
 
 use super::columns::{corrupt, time, unsigned, uuid};
-use super::writes::{Clash, WriteError, network_exists};
-use super::{RefreshState, Store, StoreError, backtests, refreshes};
+use super::statement::{Connection, query, query_scalar};
+use super::writes::{Clash, Scope, WriteError, network_exists};
+use super::{RefreshState, Store, StoreError, audit, backtests, refreshes};
+
+/// How long a claim on a job holds unless it is prolonged, microseconds: several times what passes between two prolongations.
+const CLAIM_MICROS: i64 = 20_000_000;
 
 /// Why a network has no newer forecast when its refresh was called off.
 const CALLED_OFF: &str =
@@ -76,7 +80,7 @@ impl JobKind {
 }
 
 /// A job as stored.
-#[derive(Debug, Clone, PartialEq, Eq)]
+#[derive(Debug, Clone, PartialEq)]
 pub struct StoredJob {
     /// Its id, ordered by time.
     pub id: Uuid,
@@ -94,6 +98,8 @@ pub struct StoredJob {
     pub started_at: Option<Timestamp>,
     /// When it ended.
     pub ended_at: Option<Timestamp>,
+    /// How far it had come when its process last said so, 0 to 1.
+    pub progress: Option<f64>,
     /// What is to be done, JSON.
     pub task: String,
     /// What came of it, or why nothing did, JSON.
@@ -105,6 +111,8 @@ pub struct StoredJob {
 pub struct JobFilter {
     /// Only of this network.
     pub network: Option<String>,
+    /// Only what belongs to a network that the key with this id is bound to.
+    pub seen_by: Option<String>,
     /// Only older than this one.
     pub before: Option<Uuid>,
     /// At most this many.
@@ -122,6 +130,17 @@ pub enum CalledOff {
     Missing,
 }
 
+/// What came of beginning a job.
+#[derive(Debug, Clone, PartialEq)]
+pub enum JobStart {
+    /// It begins.
+    Begun(StoredJob),
+    /// Another process is at it.
+    Elsewhere,
+    /// It has ended, or is gone.
+    Over,
+}
+
 #[derive(FromRow)]
 struct JobRow {
     id: String,
@@ -132,6 +151,7 @@ struct JobRow {
     created_at: i64,
     started_at: Option<i64>,
     ended_at: Option<i64>,
+    progress: Option<f64>,
     task: String,
     outcome: Option<String>,
 }
@@ -149,20 +169,21 @@ impl Store {
         task: &str,
         most_live: u64,
     ) -> Result<(), WriteError> {
-        let mut transaction = self.begin().await?;
+        let mut transaction = self.begin(Scope::Network(network)).await?;
         network_exists(&mut transaction, network).await?;
         if let Some(job) = live_job(&mut transaction, network, kind).await? {
             return Err(Clash::JobLive { job }.into());
         }
         // Refreshes are the service's own: a network has at most one that waits.
         let live: i64 =
-            sqlx::query_scalar("SELECT count(*) FROM jobs WHERE state IN ('waiting', 'running') AND kind <> 'refresh'")
-                .fetch_one(&mut *transaction)
+            query_scalar("SELECT count(*) FROM jobs WHERE state IN ('waiting', 'running') AND kind <> 'refresh'")
+                .fetch_one(&mut transaction)
                 .await?;
         if unsigned("live", live)? >= most_live {
             return Err(Clash::TooManyJobs.into());
         }
         insert(&mut transaction, id, kind, network, task).await?;
+        audit::makes(id);
         Ok(self.commit(transaction).await?)
     }
 
@@ -171,8 +192,7 @@ impl Store {
     /// # Errors
     /// When it is not, or it has one, or the database fails.
     pub async fn check_idle(&self, network: &str, kind: JobKind) -> Result<(), WriteError> {
-        self.file.check()?;
-        let mut connection = self.read.acquire().await.map_err(StoreError::from)?;
+        let mut connection = self.reader().await?;
         network_exists(&mut connection, network).await?;
         match live_job(&mut connection, network, kind).await? {
             Some(job) => Err(Clash::JobLive { job }.into()),
@@ -180,23 +200,70 @@ impl Store {
         }
     }
 
-    /// Notes that a live job begins; none when it was called off.
+    /// Claims a live job for this process and notes that it begins. While it is claimed no other process begins it; a claim that is
+    /// not prolonged in time is anybody's.
     ///
     /// # Errors
     /// When the database fails.
-    pub async fn start_job(&self, id: Uuid) -> Result<Option<StoredJob>, StoreError> {
-        let mut transaction = self.begin().await?;
-        let done = sqlx::query(
-            "UPDATE jobs SET state = 'running', starts = starts + 1, started_at = $2 \
-             WHERE id = $1 AND state IN ('waiting', 'running')",
+    pub async fn start_job(&self, id: Uuid) -> Result<JobStart, StoreError> {
+        let mut transaction = self.begin(Scope::Own).await?;
+        let now = transaction.now().await?;
+        let skip = transaction.skip_locked();
+        let claimed = query(
+            "UPDATE jobs SET state = 'running', starts = starts + 1, started_at = $2, claimed_by = $3, claimed_until = $4, \
+             progress = 0.0 WHERE id = (SELECT id FROM jobs WHERE id = $1 AND (state = 'waiting' OR state = 'running' AND \
+             (claimed_by IS NULL OR claimed_by = $3 OR claimed_until < $2))",
         )
         .bind(id.to_string())
-        .bind(Timestamp::now().as_microsecond())
-        .execute(&mut *transaction)
+        .bind(now)
+        .bind(self.process.to_string())
+        .bind(now.saturating_add(CLAIM_MICROS))
+        .push(skip)
+        .push(")")
+        .execute(&mut transaction)
         .await?;
-        let job = if done.rows_affected() > 0 { find(&mut transaction, id).await? } else { None };
+        let job = find(&mut transaction, id).await?;
         self.commit(transaction).await?;
-        Ok(job)
+        Ok(match job {
+            Some(job) if claimed > 0 => JobStart::Begun(job),
+            Some(job) if job.state.is_live() => JobStart::Elsewhere,
+            _ => JobStart::Over,
+        })
+    }
+
+    /// Prolongs this process's claim on a job and notes how far it has come, 0 to 1; false when it is no longer its own, for it was
+    /// called off or claimed by another.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn prolong_claim(&self, id: Uuid, progress: f64) -> Result<bool, StoreError> {
+        let mut transaction = self.begin(Scope::Own).await?;
+        let now = transaction.now().await?;
+        let kept = query(
+            "UPDATE jobs SET claimed_until = $3, progress = $4 WHERE id = $1 AND claimed_by = $2 AND state = 'running'",
+        )
+        .bind(id.to_string())
+        .bind(self.process.to_string())
+        .bind(now.saturating_add(CLAIM_MICROS))
+        .bind(progress)
+        .execute(&mut transaction)
+        .await?;
+        self.commit(transaction).await?;
+        Ok(kept > 0)
+    }
+
+    /// Gives up claims: those of this process, or, of a file, those that the process before has left.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn release_claims(&self) -> Result<(), StoreError> {
+        let mut transaction = self.begin(Scope::Own).await?;
+        query("UPDATE jobs SET claimed_by = NULL, claimed_until = NULL WHERE state = 'running' AND (claimed_by = $1 OR $2)")
+            .bind(self.process.to_string())
+            .bind(!self.is_shared())
+            .execute(&mut transaction)
+            .await?;
+        self.commit(transaction).await
     }
 
     /// Notes that a live job failed; false when it was called off before.
@@ -204,7 +271,7 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn fail_job(&self, id: Uuid, outcome: &str) -> Result<bool, StoreError> {
-        let mut transaction = self.begin().await?;
+        let mut transaction = self.begin(Scope::OfJob(id)).await?;
         let ended = end(&mut transaction, id, JobState::Failed, Some(outcome)).await?;
         self.commit(transaction).await?;
         Ok(ended)
@@ -215,7 +282,7 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn call_off(&self, id: Uuid) -> Result<CalledOff, StoreError> {
-        let mut transaction = self.begin().await?;
+        let mut transaction = self.begin(Scope::OfJob(id)).await?;
         let job = find(&mut transaction, id).await?;
         let done = if end(&mut transaction, id, JobState::Cancelled, None).await? {
             if let Some(job) = job.filter(|job| job.kind == JobKind::Refresh) {
@@ -224,9 +291,10 @@ impl Store {
             }
             CalledOff::Cancelled
         } else {
-            let removed = sqlx::query("DELETE FROM jobs WHERE id = $1").bind(id.to_string());
-            match removed.execute(&mut *transaction).await?.rows_affected() {
-                0 => CalledOff::Missing,
+            let removed = query("DELETE FROM jobs WHERE id = $1").bind(id.to_string());
+            match removed.execute(&mut transaction).await? {
+                // Nothing is written, so nothing is told of it.
+                0 => return Ok(CalledOff::Missing),
                 _ => CalledOff::Removed,
             }
         };
@@ -239,8 +307,7 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn find_job(&self, id: Uuid) -> Result<Option<StoredJob>, StoreError> {
-        self.file.check()?;
-        let mut connection = self.read.acquire().await?;
+        let mut connection = self.reader().await?;
         find(&mut connection, id).await
     }
 
@@ -249,44 +316,50 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn list_jobs(&self, filter: &JobFilter) -> Result<Vec<StoredJob>, StoreError> {
-        self.file.check()?;
-        let mut query = QueryBuilder::<Sqlite>::new(
-            "SELECT id, kind, network, state, starts, created_at, started_at, ended_at, task, outcome FROM jobs WHERE \
-             true",
-        );
-        if let Some(network) = &filter.network {
-            query.push(" AND network = ").push_bind(network.as_str());
-        }
-        if let Some(before) = filter.before {
-            query.push(" AND id < ").push_bind(before.to_string());
-        }
-        query.push(" ORDER BY id DESC LIMIT ").push_bind(i64::from(filter.limit));
-        let rows: Vec<JobRow> = query.build_query_as().fetch_all(&self.read).await?;
+        let rows: Vec<JobRow> = query(
+            "SELECT id, kind, network, state, starts, created_at, started_at, ended_at, progress, task, outcome FROM jobs \
+             WHERE true",
+        )
+        .bind_where("network = ?", filter.network.as_deref())
+        .bind_where(
+            "network IN (SELECT bound.network FROM access_key_networks AS bound WHERE bound.access_key = ?)",
+            filter.seen_by.as_deref(),
+        )
+        .bind_where("id < ?", filter.before.map(|id| id.to_string()))
+        .order_by_limit("id DESC", filter.limit)
+        .fetch_all(&mut self.reader().await?)
+        .await?;
         rows.into_iter().map(StoredJob::try_from).collect()
     }
 
-    /// Every job that has not ended, oldest first.
+    /// The oldest jobs that this process may begin, at most `limit`.
     ///
     /// # Errors
     /// When the database fails.
-    pub async fn live_jobs(&self) -> Result<Vec<(Uuid, JobKind)>, StoreError> {
-        self.file.check()?;
-        let jobs: Vec<(String, String)> =
-            sqlx::query_as("SELECT id, kind FROM jobs WHERE state IN ('waiting', 'running') ORDER BY id")
-                .fetch_all(&self.read)
-                .await?;
+    pub async fn claimable_jobs(&self, limit: u32) -> Result<Vec<(Uuid, JobKind)>, StoreError> {
+        let mut connection = self.reader().await?;
+        let now = connection.now().await?;
+        let jobs: Vec<(String, String)> = query(
+            "SELECT id, kind FROM jobs WHERE state = 'waiting' OR state = 'running' AND (claimed_by IS NULL OR claimed_by = $1 \
+             OR claimed_until < $2) ORDER BY id LIMIT $3",
+        )
+        .bind(self.process.to_string())
+        .bind(now)
+        .bind(i64::from(limit))
+        .fetch_all(&mut connection)
+        .await?;
         jobs.iter().map(|(id, kind)| Ok((uuid(id)?, JobKind::named(kind)?))).collect()
     }
 }
 
 /// Ends a live job, and drops what it had so far; false when it has ended.
 pub(super) async fn end(
-    connection: &mut SqliteConnection,
+    connection: &mut Connection,
     id: Uuid,
     state: JobState,
     outcome: Option<&str>,
 ) -> Result<bool, StoreError> {
-    let done = sqlx::query(
+    let done = query(
         "UPDATE jobs SET state = $2, outcome = $3, ended_at = $4 WHERE id = $1 AND state IN ('waiting', 'running')",
     )
     .bind(id.to_string())
@@ -296,18 +369,18 @@ pub(super) async fn end(
     .execute(&mut *connection)
     .await?;
     backtests::drop_records(connection, id).await?;
-    Ok(done.rows_affected() > 0)
+    Ok(done > 0)
 }
 
 /// Stores a waiting job.
 pub(super) async fn insert(
-    connection: &mut SqliteConnection,
+    connection: &mut Connection,
     id: Uuid,
     kind: JobKind,
     network: &str,
     task: &str,
 ) -> Result<(), StoreError> {
-    sqlx::query(
+    query(
         "INSERT INTO jobs (id, kind, network, state, starts, created_at, task) VALUES ($1, $2, $3, 'waiting', 0, $4, $5)",
     )
     .bind(id.to_string())
@@ -321,12 +394,11 @@ pub(super) async fn insert(
 }
 
 /// Calls every live job of a network off.
-pub(super) async fn call_off_of(connection: &mut SqliteConnection, network: &str) -> Result<Vec<Uuid>, StoreError> {
-    let ids: Vec<String> =
-        sqlx::query_scalar("SELECT id FROM jobs WHERE network = $1 AND state IN ('waiting', 'running')")
-            .bind(network)
-            .fetch_all(&mut *connection)
-            .await?;
+pub(super) async fn call_off_of(connection: &mut Connection, network: &str) -> Result<Vec<Uuid>, StoreError> {
+    let ids: Vec<String> = query_scalar("SELECT id FROM jobs WHERE network = $1 AND state IN ('waiting', 'running')")
+        .bind(network)
+        .fetch_all(&mut *connection)
+        .await?;
     let jobs = ids.iter().map(|id| uuid(id)).collect::<Result<Vec<_>, _>>()?;
     for &job in &jobs {
         end(connection, job, JobState::Cancelled, None).await?;
@@ -335,12 +407,12 @@ pub(super) async fn call_off_of(connection: &mut SqliteConnection, network: &str
 }
 
 pub(super) async fn live_job(
-    connection: &mut SqliteConnection,
+    connection: &mut Connection,
     network: &str,
     kind: JobKind,
 ) -> Result<Option<Uuid>, StoreError> {
     let id: Option<String> =
-        sqlx::query_scalar("SELECT id FROM jobs WHERE network = $1 AND kind = $2 AND state IN ('waiting', 'running')")
+        query_scalar("SELECT id FROM jobs WHERE network = $1 AND kind = $2 AND state IN ('waiting', 'running')")
             .bind(network)
             .bind(kind.as_str())
             .fetch_optional(connection)
@@ -348,9 +420,9 @@ pub(super) async fn live_job(
     id.as_deref().map(uuid).transpose()
 }
 
-async fn find(connection: &mut SqliteConnection, id: Uuid) -> Result<Option<StoredJob>, StoreError> {
-    let row: Option<JobRow> = sqlx::query_as(
-        "SELECT id, kind, network, state, starts, created_at, started_at, ended_at, task, outcome FROM jobs WHERE id = $1",
+async fn find(connection: &mut Connection, id: Uuid) -> Result<Option<StoredJob>, StoreError> {
+    let row: Option<JobRow> = query(
+        "SELECT id, kind, network, state, starts, created_at, started_at, ended_at, progress, task, outcome FROM jobs WHERE id = $1",
     )
     .bind(id.to_string())
     .fetch_optional(connection)
@@ -371,6 +443,7 @@ impl TryFrom<JobRow> for StoredJob {
             starts: unsigned("starts", row.starts)?,
             created_at: time(row.created_at)?,
             started_at: row.started_at.map(time).transpose()?,
+            progress: row.progress,
             ended_at: row.ended_at.map(time).transpose()?,
             task: row.task,
             outcome: row.outcome,

@@ -1,12 +1,13 @@
 //! A network's latest forecast: a copy of its run in one row, for it is read far more often than it is made.
 
 use jiff::Timestamp;
-use sqlx::{FromRow, SqliteConnection};
+use sqlx::FromRow;
 use uuid::Uuid;
 
 use super::columns::{date, time, unsigned, uuid};
 use super::refreshes::RefreshState;
 use super::runs::{NewRun, StoredRun};
+use super::statement::{Connection, query, query_scalar};
 use super::{Store, StoreError};
 
 /// The read of the latest forecast: by the table's key, one row and nothing else.
@@ -78,8 +79,7 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn find_latest(&self, network: &str) -> Result<Option<LatestForecast>, StoreError> {
-        self.file.check()?;
-        let row: Option<LatestRow> = sqlx::query_as(FIND).bind(network).fetch_optional(&self.read).await?;
+        let row: Option<LatestRow> = query(FIND).bind(network).fetch_optional(&mut self.reader().await?).await?;
         row.map(LatestForecast::try_from).transpose()
     }
 
@@ -88,20 +88,19 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn find_latest_with_cadence(&self, network: &str) -> Result<Option<LatestWithCadence>, StoreError> {
-        self.file.check()?;
         // One transaction reads one state, whatever is written meanwhile.
-        let mut transaction = self.read.begin().await?;
-        let row: Option<LatestRow> = sqlx::query_as(FIND).bind(network).fetch_optional(&mut *transaction).await?;
-        let stamp: Option<LatestStamp> = sqlx::query_as(STAMP).bind(network).fetch_optional(&mut *transaction).await?;
+        let mut transaction = self.begin_read().await?;
+        let row: Option<LatestRow> = query(FIND).bind(network).fetch_optional(&mut transaction).await?;
+        let stamp: Option<LatestStamp> = query(STAMP).bind(network).fetch_optional(&mut transaction).await?;
         let (Some(row), Some(stamp)) = (row, stamp) else { return Ok(None) };
         let newest: Vec<String> =
-            sqlx::query_scalar("SELECT as_of FROM snapshots WHERE network = $1 ORDER BY as_of DESC LIMIT 4")
+            query_scalar("SELECT as_of FROM snapshots WHERE network = $1 ORDER BY as_of DESC LIMIT 4")
                 .bind(network)
-                .fetch_all(&mut *transaction)
+                .fetch_all(&mut transaction)
                 .await?;
-        let plan: Option<String> = sqlx::query_scalar("SELECT forecast_plan FROM networks WHERE name = $1")
+        let plan: Option<String> = query_scalar("SELECT forecast_plan FROM networks WHERE name = $1")
             .bind(network)
-            .fetch_one(&mut *transaction)
+            .fetch_one(&mut transaction)
             .await?;
         let newest = newest.iter().map(|text| date(text)).collect::<Result<_, _>>()?;
         Ok(Some(LatestWithCadence { forecast: row.try_into()?, stamp, newest, plan }))
@@ -113,8 +112,7 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn latest_stamp(&self, network: &str) -> Result<Option<LatestStamp>, StoreError> {
-        self.file.check()?;
-        Ok(sqlx::query_as(STAMP).bind(network).fetch_optional(&self.read).await?)
+        Ok(query(STAMP).bind(network).fetch_optional(&mut self.reader().await?).await?)
     }
 
     /// Latest forecasts in the order of their networks' names, at most `limit`, and how many there are in all. No forecast itself
@@ -123,14 +121,13 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn list_latest(&self, limit: u32) -> Result<(Vec<LatestLine>, u64), StoreError> {
-        self.file.check()?;
-        let mut transaction = self.read.begin().await?;
+        let mut transaction = self.begin_read().await?;
         let rows: Vec<(String, String, String, i64)> =
-            sqlx::query_as("SELECT network, run_id, state, created_at FROM latest_forecasts ORDER BY network LIMIT $1")
+            query("SELECT network, run_id, state, created_at FROM latest_forecasts ORDER BY network LIMIT $1")
                 .bind(i64::from(limit))
-                .fetch_all(&mut *transaction)
+                .fetch_all(&mut transaction)
                 .await?;
-        let all: i64 = sqlx::query_scalar("SELECT count(*) FROM latest_forecasts").fetch_one(&mut *transaction).await?;
+        let all: i64 = query_scalar("SELECT count(*) FROM latest_forecasts").fetch_one(&mut transaction).await?;
         let line = |(network, run, state, created_at): (String, String, String, i64)| {
             let (run, state) = (uuid(&run)?, RefreshState::named(&state)?);
             Ok(LatestLine { network, run, state, created_at: time(created_at)? })
@@ -141,12 +138,12 @@ impl Store {
 
 /// Puts a run in the place of the latest forecast.
 pub(super) async fn replace(
-    connection: &mut SqliteConnection,
+    connection: &mut Connection,
     network: &str,
     run: &NewRun,
     job: Uuid,
 ) -> Result<(), StoreError> {
-    sqlx::query(
+    query(
         "INSERT INTO latest_forecasts (network, run_id, state, job, created_at, tag, document) \
          VALUES ($1, $2, 'current', $3, $4, $5, $6) ON CONFLICT (network) DO UPDATE SET run_id = excluded.run_id, \
          state = excluded.state, job = excluded.job, created_at = excluded.created_at, tag = excluded.tag, \
@@ -165,12 +162,12 @@ pub(super) async fn replace(
 
 /// Notes how the latest forecast stands, if there is one.
 pub(super) async fn note(
-    connection: &mut SqliteConnection,
+    connection: &mut Connection,
     network: &str,
     state: RefreshState,
     job: Uuid,
 ) -> Result<(), StoreError> {
-    sqlx::query("UPDATE latest_forecasts SET state = $2, job = $3 WHERE network = $1")
+    query("UPDATE latest_forecasts SET state = $2, job = $3 WHERE network = $1")
         .bind(network)
         .bind(state.as_str())
         .bind(job.to_string())
@@ -194,6 +191,7 @@ impl TryFrom<LatestRow> for LatestForecast {
 
 #[cfg(test)]
 mod tests {
+    use super::super::Home;
     use super::*;
     use crate::config::Config;
 
@@ -204,10 +202,11 @@ mod tests {
         config.database.url = format!("sqlite://{}", folder.path().join("plan.db").display());
         let store = Store::connect(&config.database).await.unwrap();
         store.migrate().await.unwrap();
+        let Home::Sqlite { read, .. } = &store.home else { unreachable!() };
         let steps: Vec<(i64, i64, i64, String)> =
             sqlx::query_as(sqlx::AssertSqlSafe(format!("EXPLAIN QUERY PLAN {FIND}")))
                 .bind("heronsgate")
-                .fetch_all(&store.read)
+                .fetch_all(read)
                 .await
                 .unwrap();
         let steps: Vec<&str> = steps.iter().map(|step| step.3.as_str()).collect();

@@ -1,12 +1,13 @@
 //! Attachment statistics of tracked networks: at most one a network.
 
 use jiff::Timestamp;
-use sqlx::{FromRow, SqliteConnection};
+use sqlx::FromRow;
 use uuid::Uuid;
 
 use super::columns::{signed, time, total, unsigned};
 use super::refreshes::{Change, changed};
-use super::writes::{Caps, WriteError, network_exists, room_for_rows};
+use super::statement::{Connection, query};
+use super::writes::{Caps, Scope, WriteError, network_exists, room_for_rows};
 use super::{Store, StoreError};
 
 /// Attachment statistics as stored.
@@ -46,7 +47,7 @@ impl Store {
         caps: &Caps,
         allows: impl FnOnce(Option<&str>) -> bool,
     ) -> Result<Change, WriteError> {
-        let mut transaction = self.begin().await?;
+        let mut transaction = self.begin(Scope::Network(network)).await?;
         network_exists(&mut transaction, network).await?;
         let stored = stored_tag(&mut transaction, network).await?;
         if !allows(stored.as_ref().map(|(tag, ..)| tag.as_str())) {
@@ -70,13 +71,11 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn find_link_events(&self, network: &str) -> Result<Option<StoredLinkEvents>, StoreError> {
-        self.file.check()?;
-        let row: Option<LinkEventsRow> = sqlx::query_as(
-            "SELECT landings, row_count, tag, updated_at, statistics FROM link_events WHERE network = $1",
-        )
-        .bind(network)
-        .fetch_optional(&self.read)
-        .await?;
+        let row: Option<LinkEventsRow> =
+            query("SELECT landings, row_count, tag, updated_at, statistics FROM link_events WHERE network = $1")
+                .bind(network)
+                .fetch_optional(&mut self.reader().await?)
+                .await?;
         row.map(StoredLinkEvents::try_from).transpose()
     }
 
@@ -89,13 +88,13 @@ impl Store {
         network: &str,
         allows: impl FnOnce(Option<&str>) -> bool,
     ) -> Result<Option<Uuid>, WriteError> {
-        let mut transaction = self.begin().await?;
+        let mut transaction = self.begin(Scope::Network(network)).await?;
         network_exists(&mut transaction, network).await?;
         let (tag, ..) = stored_tag(&mut transaction, network).await?.ok_or(WriteError::Missing)?;
         if !allows(Some(&tag)) {
             return Err(WriteError::Mismatch);
         }
-        sqlx::query("DELETE FROM link_events WHERE network = $1").bind(network).execute(&mut *transaction).await?;
+        query("DELETE FROM link_events WHERE network = $1").bind(network).execute(&mut transaction).await?;
         let (_, refresh) = changed(&mut transaction, network).await?;
         self.commit(transaction).await?;
         Ok(refresh)
@@ -103,21 +102,18 @@ impl Store {
 }
 
 /// Digest, rows and time of what is stored.
-async fn stored_tag(
-    connection: &mut SqliteConnection,
-    network: &str,
-) -> Result<Option<(String, i64, i64)>, StoreError> {
-    let row = sqlx::query_as("SELECT tag, row_count, updated_at FROM link_events WHERE network = $1").bind(network);
+async fn stored_tag(connection: &mut Connection, network: &str) -> Result<Option<(String, i64, i64)>, StoreError> {
+    let row = query("SELECT tag, row_count, updated_at FROM link_events WHERE network = $1").bind(network);
     Ok(row.fetch_optional(connection).await?)
 }
 
 /// Stores statistics in place of those the network has, if any.
 pub(super) async fn insert(
-    connection: &mut SqliteConnection,
+    connection: &mut Connection,
     network: &str,
     events: &StoredLinkEvents,
 ) -> Result<(), StoreError> {
-    sqlx::query(
+    query(
         "INSERT INTO link_events (network, landings, row_count, tag, updated_at, statistics) \
          VALUES ($1, $2, $3, $4, $5, $6) ON CONFLICT (network) DO UPDATE SET landings = excluded.landings, \
          row_count = excluded.row_count, tag = excluded.tag, updated_at = excluded.updated_at, \

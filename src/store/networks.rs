@@ -1,13 +1,14 @@
 //! Tracked networks: their settings, and everything that is known of one.
 
 use jiff::Timestamp;
-use sqlx::{FromRow, SqliteConnection};
+use sqlx::FromRow;
 use uuid::Uuid;
 
 use super::columns::{date, kind, kind_name, time, unsigned, uuid};
 use super::jobs::call_off_of;
 use super::refreshes::{Change, RefreshState, RefreshStatus, changed, enqueue};
-use super::writes::{Clash, WriteError};
+use super::statement::{Connection, query, query_scalar};
+use super::writes::{Clash, Scope, WriteError};
 use super::{Store, StoreError, StoredQuestion, backtests, questions};
 use crate::model::DegreeKind;
 
@@ -112,7 +113,7 @@ impl Store {
         network: &NewNetwork,
         allows: impl FnOnce(Option<&str>) -> bool,
     ) -> Result<Change, WriteError> {
-        let mut transaction = self.begin().await?;
+        let mut transaction = self.begin(Scope::Network(&network.name)).await?;
         let stored = find(&mut transaction, &network.name).await?;
         if !allows(stored.as_ref().map(|stored| stored.settings.tag.as_str())) {
             return Err(WriteError::Mismatch);
@@ -123,7 +124,7 @@ impl Store {
         {
             return Err(Clash::DegreeKind { stored: stored.settings.degree_kind }.into());
         }
-        sqlx::query(
+        query(
             "INSERT INTO networks (name, degree_kind, description, tag, created_at, updated_at, entry_degrees, \
              forecast_plan) VALUES ($1, $2, $3, $4, $5, $5, $6, $7) ON CONFLICT (name) DO UPDATE SET \
              degree_kind = excluded.degree_kind, description = excluded.description, tag = excluded.tag, \
@@ -137,7 +138,7 @@ impl Store {
         .bind(Timestamp::now().as_microsecond())
         .bind(network.entry_degrees.as_deref())
         .bind(network.forecast_plan.as_deref())
-        .execute(&mut *transaction)
+        .execute(&mut transaction)
         .await?;
         let refresh = follow(&mut transaction, network, stored.as_ref()).await?;
         self.commit(transaction).await?;
@@ -149,28 +150,34 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn find_network(&self, name: &str) -> Result<Option<StoredNetwork>, StoreError> {
-        self.file.check()?;
-        let mut connection = self.read.acquire().await?;
+        let mut connection = self.reader().await?;
         find(&mut connection, name).await
     }
 
-    /// Networks whose name comes after `after`, in the order of their names.
+    /// Networks whose name comes after `after`, in the order of their names; only those that the key `seen_by` is bound to.
     ///
     /// # Errors
     /// When the database fails.
-    pub async fn list_networks(&self, after: Option<&str>, limit: u32) -> Result<Vec<NetworkSummary>, StoreError> {
-        self.file.check()?;
-        let rows: Vec<SummaryRow> = sqlx::query_as(
+    pub async fn list_networks(
+        &self,
+        after: Option<&str>,
+        limit: u32,
+        seen_by: Option<&str>,
+    ) -> Result<Vec<NetworkSummary>, StoreError> {
+        let rows: Vec<SummaryRow> = query(
             "SELECT name, degree_kind, description, tag, created_at, updated_at, entry_degrees, forecast_plan, revision, \
              refresh_state, refresh_job, refresh_reason, (SELECT count(*) FROM snapshots WHERE network = name) AS snapshots, \
              (SELECT max(as_of) FROM snapshots WHERE network = name) AS newest, \
              (SELECT count(*) FROM transitions WHERE network = name) AS transitions, \
              (SELECT count(*) FROM link_events WHERE network = name) AS link_events \
-             FROM networks WHERE name > $1 ORDER BY name LIMIT $2",
+             FROM networks WHERE name > $1 \
+             AND ($3 = '' OR name IN (SELECT bound.network FROM access_key_networks AS bound WHERE bound.access_key = $3)) \
+             ORDER BY name LIMIT $2",
         )
         .bind(after.unwrap_or_default())
         .bind(i64::from(limit))
-        .fetch_all(&self.read)
+        .bind(seen_by.unwrap_or_default())
+        .fetch_all(&mut self.reader().await?)
         .await?;
         rows.into_iter().map(NetworkSummary::try_from).collect()
     }
@@ -184,13 +191,13 @@ impl Store {
         name: &str,
         allows: impl FnOnce(Option<&str>) -> bool,
     ) -> Result<Vec<Uuid>, WriteError> {
-        let mut transaction = self.begin().await?;
+        let mut transaction = self.begin(Scope::Network(name)).await?;
         let stored = find(&mut transaction, name).await?.ok_or(WriteError::NoNetwork)?;
         if !allows(Some(&stored.settings.tag)) {
             return Err(WriteError::Mismatch);
         }
         let jobs = call_off_of(&mut transaction, name).await?;
-        sqlx::query("DELETE FROM networks WHERE name = $1").bind(name).execute(&mut *transaction).await?;
+        query("DELETE FROM networks WHERE name = $1").bind(name).execute(&mut transaction).await?;
         self.commit(transaction).await?;
         Ok(jobs)
     }
@@ -200,23 +207,22 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn find_evidence(&self, name: &str) -> Result<Option<StoredEvidence>, StoreError> {
-        self.file.check()?;
         // One transaction reads one state, whatever is written meanwhile.
-        let mut transaction = self.read.begin().await?;
+        let mut transaction = self.begin_read().await?;
         let Some(network) = find(&mut transaction, name).await? else { return Ok(None) };
         let snapshots: Vec<(String, String)> =
-            sqlx::query_as("SELECT as_of, degree_counts FROM snapshots WHERE network = $1 ORDER BY as_of")
+            query("SELECT as_of, degree_counts FROM snapshots WHERE network = $1 ORDER BY as_of")
                 .bind(name)
-                .fetch_all(&mut *transaction)
+                .fetch_all(&mut transaction)
                 .await?;
         let transitions: Vec<(String, String, String)> =
-            sqlx::query_as("SELECT starts_at, ends_at, counts FROM transitions WHERE network = $1 ORDER BY starts_at")
+            query("SELECT starts_at, ends_at, counts FROM transitions WHERE network = $1 ORDER BY starts_at")
                 .bind(name)
-                .fetch_all(&mut *transaction)
+                .fetch_all(&mut transaction)
                 .await?;
-        let link_events = sqlx::query_scalar("SELECT statistics FROM link_events WHERE network = $1")
+        let link_events = query_scalar("SELECT statistics FROM link_events WHERE network = $1")
             .bind(name)
-            .fetch_optional(&mut *transaction)
+            .fetch_optional(&mut transaction)
             .await?;
         let digest = backtests::digest(&mut transaction, name).await?;
         let questions = questions::all(&mut transaction, name).await?;
@@ -234,8 +240,8 @@ impl Store {
 }
 
 /// The settings of a network, if it is tracked.
-pub(super) async fn find(connection: &mut SqliteConnection, name: &str) -> Result<Option<StoredNetwork>, StoreError> {
-    let row: Option<NetworkRow> = sqlx::query_as(
+pub(super) async fn find(connection: &mut Connection, name: &str) -> Result<Option<StoredNetwork>, StoreError> {
+    let row: Option<NetworkRow> = query(
         "SELECT name, degree_kind, description, tag, created_at, updated_at, entry_degrees, forecast_plan, revision, \
          refresh_state, refresh_job, refresh_reason FROM networks WHERE name = $1",
     )
@@ -247,7 +253,7 @@ pub(super) async fn find(connection: &mut SqliteConnection, name: &str) -> Resul
 
 /// The refresh that follows from new settings, if one does.
 async fn follow(
-    connection: &mut SqliteConnection,
+    connection: &mut Connection,
     network: &NewNetwork,
     stored: Option<&StoredNetwork>,
 ) -> Result<Option<Uuid>, StoreError> {
@@ -256,18 +262,18 @@ async fn follow(
     if stored.is_none_or(|stored| read(&stored.settings) != read(network)) {
         return Ok(changed(connection, &network.name).await?.1);
     }
-    let pending: i64 = sqlx::query_scalar(
+    let pending: bool = query_scalar(
         "SELECT EXISTS (SELECT 1 FROM networks WHERE name = $1 AND forecast_plan IS NOT NULL AND (refresh_state = 'outdated' \
          OR refresh_state = 'current' AND NOT EXISTS (SELECT 1 FROM latest_forecasts WHERE network = $1)))",
     )
     .bind(network.name.as_str())
     .fetch_one(&mut *connection)
     .await?;
-    if pending != 0 { enqueue(connection, &network.name).await } else { Ok(None) }
+    if pending { enqueue(connection, &network.name).await } else { Ok(None) }
 }
 
-async fn has_evidence(connection: &mut SqliteConnection, name: &str) -> Result<bool, StoreError> {
-    let found: i64 = sqlx::query_scalar(
+async fn has_evidence(connection: &mut Connection, name: &str) -> Result<bool, StoreError> {
+    let found: bool = query_scalar(
         "SELECT EXISTS (SELECT 1 FROM snapshots WHERE network = $1) \
          OR EXISTS (SELECT 1 FROM transitions WHERE network = $1) \
          OR EXISTS (SELECT 1 FROM link_events WHERE network = $1)",
@@ -275,7 +281,7 @@ async fn has_evidence(connection: &mut SqliteConnection, name: &str) -> Result<b
     .bind(name)
     .fetch_one(connection)
     .await?;
-    Ok(found != 0)
+    Ok(found)
 }
 
 impl TryFrom<NetworkRow> for StoredNetwork {

@@ -5,6 +5,7 @@ use uuid::Uuid;
 
 use super::columns::{time, unsigned, uuid};
 use super::networks::find;
+use super::statement::{query, query_scalar};
 use super::{Store, StoreError, StoredNetwork};
 
 /// Most issued forecasts told at one look; the next look tells the next ones.
@@ -43,12 +44,11 @@ impl Store {
         network: &str,
         after: Option<Option<Uuid>>,
     ) -> Result<Option<RefreshNews>, StoreError> {
-        self.file.check()?;
         // One transaction reads one state, whatever is written meanwhile.
-        let mut transaction = self.read.begin().await?;
+        let mut transaction = self.begin_read().await?;
         let Some(stands) = find(&mut transaction, network).await? else { return Ok(None) };
         // Ids sort as the times they were made at.
-        let query = match after {
+        let text = match after {
             Some(_) => {
                 "SELECT run_id, revision FROM network_runs WHERE network = $1 AND issued_to IS NOT NULL AND run_id > $2 \
                  ORDER BY run_id LIMIT $3"
@@ -59,17 +59,17 @@ impl Store {
             }
         };
         let limit = if after.is_some() { MOST_AT_ONCE } else { 1 };
-        let rows: Vec<(String, i64)> = sqlx::query_as(query)
+        let rows: Vec<(String, i64)> = query(text)
             .bind(network)
             .bind(after.flatten().map(|run| run.to_string()).unwrap_or_default())
             .bind(limit)
-            .fetch_all(&mut *transaction)
+            .fetch_all(&mut transaction)
             .await?;
-        let corrected_at: Option<i64> = sqlx::query_scalar(
+        let corrected_at: Option<i64> = query_scalar(
             "SELECT max(evidence_corrected_at) FROM network_runs WHERE network = $1 AND issued_to IS NOT NULL",
         )
         .bind(network)
-        .fetch_one(&mut *transaction)
+        .fetch_one(&mut transaction)
         .await?;
         let more = after.is_some() && rows.len() as i64 >= MOST_AT_ONCE;
         let issued = |(run, revision): (String, i64)| {

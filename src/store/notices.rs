@@ -1,11 +1,13 @@
 //! Notices: who is told of what, and how that fares.
 
 use jiff::Timestamp;
-use sqlx::{FromRow, SqliteConnection};
+use sqlx::FromRow;
 use uuid::Uuid;
 
 use super::columns::{corrupt, time, unsigned, uuid};
-use super::writes::{Caps, WriteError, network_exists, room_for_one};
+use super::ids::next_id;
+use super::statement::{Connection, query, query_scalar};
+use super::writes::{Caps, Scope, WriteError, network_exists, room_for_one};
 use super::{Store, StoreError};
 
 /// What can be told.
@@ -113,22 +115,21 @@ impl Store {
         most: u64,
         allows: impl FnOnce(Option<&str>) -> bool,
     ) -> Result<bool, WriteError> {
-        let mut transaction = self.begin().await?;
+        let mut transaction = self.begin(Scope::Network(network)).await?;
         network_exists(&mut transaction, network).await?;
-        let stored: Option<(String, String)> =
-            sqlx::query_as("SELECT id, tag FROM notices WHERE network = $1 AND name = $2")
-                .bind(network)
-                .bind(notice.name.as_str())
-                .fetch_optional(&mut *transaction)
-                .await?;
+        let stored: Option<(String, String)> = query("SELECT id, tag FROM notices WHERE network = $1 AND name = $2")
+            .bind(network)
+            .bind(notice.name.as_str())
+            .fetch_optional(&mut transaction)
+            .await?;
         if !allows(stored.as_ref().map(|(_, tag)| tag.as_str())) {
             return Err(WriteError::Mismatch);
         }
         let made = stored.is_none();
         match stored {
             None => {
-                let count = sqlx::query_scalar("SELECT count(*) FROM notices WHERE network = $1");
-                let count = count.bind(network).fetch_one(&mut *transaction).await?;
+                let count = query_scalar("SELECT count(*) FROM notices WHERE network = $1");
+                let count = count.bind(network).fetch_one(&mut transaction).await?;
                 room_for_one("notices", count, &Caps { dates: most, rows: 0 })?;
                 insert(&mut transaction, network, notice).await?;
             }
@@ -136,13 +137,13 @@ impl Store {
                 if tag != notice.tag {
                     replace(&mut transaction, &id, notice).await?;
                 }
-                sqlx::query(
+                query(
                     "UPDATE notices SET failures = 0, due_at = CASE WHEN EXISTS (SELECT 1 FROM notice_events \
                      WHERE notice = $1 AND state = 'pending') THEN $2 END WHERE id = $1",
                 )
                 .bind(&id)
                 .bind(notice.updated_at.as_microsecond())
-                .execute(&mut *transaction)
+                .execute(&mut transaction)
                 .await?;
             }
         }
@@ -155,15 +156,14 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn find_notice(&self, network: &str, name: &str) -> Result<Option<StoredNotice>, StoreError> {
-        self.file.check()?;
-        let row: Option<NoticeRow> = sqlx::query_as(
+        let row: Option<NoticeRow> = query(
             "SELECT name, tag, url, limit_risk, drift, updated_at, (SELECT count(*) FROM notice_events \
              WHERE notice = notices.id AND state = 'pending') AS pending, delivered, delivered_at, given_up, given_up_at, \
              failures, failed_at, failure, due_at FROM notices WHERE network = $1 AND name = $2",
         )
         .bind(network)
         .bind(name)
-        .fetch_optional(&self.read)
+        .fetch_optional(&mut self.reader().await?)
         .await?;
         row.map(StoredNotice::try_from).transpose()
     }
@@ -178,8 +178,7 @@ impl Store {
         after: Option<&str>,
         limit: u32,
     ) -> Result<Vec<StoredNotice>, StoreError> {
-        self.file.check()?;
-        let rows: Vec<NoticeRow> = sqlx::query_as(
+        let rows: Vec<NoticeRow> = query(
             "SELECT name, tag, url, limit_risk, drift, updated_at, (SELECT count(*) FROM notice_events \
              WHERE notice = notices.id AND state = 'pending') AS pending, delivered, delivered_at, given_up, given_up_at, \
              failures, failed_at, failure, due_at FROM notices WHERE network = $1 AND name > $2 ORDER BY name LIMIT $3",
@@ -187,7 +186,7 @@ impl Store {
         .bind(network)
         .bind(after.unwrap_or_default())
         .bind(i64::from(limit))
-        .fetch_all(&self.read)
+        .fetch_all(&mut self.reader().await?)
         .await?;
         rows.into_iter().map(StoredNotice::try_from).collect()
     }
@@ -202,31 +201,31 @@ impl Store {
         name: &str,
         allows: impl FnOnce(Option<&str>) -> bool,
     ) -> Result<(), WriteError> {
-        let mut transaction = self.begin().await?;
+        let mut transaction = self.begin(Scope::Network(network)).await?;
         network_exists(&mut transaction, network).await?;
-        let stored: Option<String> = sqlx::query_scalar("SELECT tag FROM notices WHERE network = $1 AND name = $2")
+        let stored: Option<String> = query_scalar("SELECT tag FROM notices WHERE network = $1 AND name = $2")
             .bind(network)
             .bind(name)
-            .fetch_optional(&mut *transaction)
+            .fetch_optional(&mut transaction)
             .await?;
         if !allows(Some(&stored.ok_or(WriteError::Missing)?)) {
             return Err(WriteError::Mismatch);
         }
-        sqlx::query("DELETE FROM notices WHERE network = $1 AND name = $2")
+        query("DELETE FROM notices WHERE network = $1 AND name = $2")
             .bind(network)
             .bind(name)
-            .execute(&mut *transaction)
+            .execute(&mut transaction)
             .await?;
         Ok(self.commit(transaction).await?)
     }
 }
 
-async fn insert(connection: &mut SqliteConnection, network: &str, notice: &NewNotice) -> Result<(), StoreError> {
-    sqlx::query(
+async fn insert(connection: &mut Connection, network: &str, notice: &NewNotice) -> Result<(), StoreError> {
+    query(
         "INSERT INTO notices (id, network, name, created_at, updated_at, tag, limit_risk, drift, url) \
          VALUES ($1, $2, $3, $4, $4, $5, $6, $7, $8)",
     )
-    .bind(Uuid::now_v7().to_string())
+    .bind(next_id().to_string())
     .bind(network)
     .bind(notice.name.as_str())
     .bind(notice.updated_at.as_microsecond())
@@ -239,8 +238,8 @@ async fn insert(connection: &mut SqliteConnection, network: &str, notice: &NewNo
     Ok(())
 }
 
-async fn replace(connection: &mut SqliteConnection, id: &str, notice: &NewNotice) -> Result<(), StoreError> {
-    sqlx::query(
+async fn replace(connection: &mut Connection, id: &str, notice: &NewNotice) -> Result<(), StoreError> {
+    query(
         "UPDATE notices SET updated_at = CASE WHEN $2 > created_at THEN $2 ELSE created_at END, tag = $3, limit_risk = $4, \
          drift = $5, url = $6 WHERE id = $1",
     )
@@ -255,7 +254,7 @@ async fn replace(connection: &mut SqliteConnection, id: &str, notice: &NewNotice
     // What it does not tell any more it begins anew with when it does again.
     for kind in [NoticeKind::LimitRisk, NoticeKind::Drift] {
         if !notice.kinds.contains(&kind) {
-            sqlx::query("DELETE FROM notice_standings WHERE notice = $1 AND kind = $2")
+            query("DELETE FROM notice_standings WHERE notice = $1 AND kind = $2")
                 .bind(id)
                 .bind(kind.as_str())
                 .execute(&mut *connection)
@@ -296,11 +295,11 @@ impl TryFrom<NoticeRow> for StoredNotice {
 
 /// The ids of a network's notices that tell of a kind.
 pub(super) async fn telling(
-    connection: &mut SqliteConnection,
+    connection: &mut Connection,
     network: &str,
     kind: NoticeKind,
 ) -> Result<Vec<Uuid>, StoreError> {
-    let ids: Vec<String> = sqlx::query_scalar(
+    let ids: Vec<String> = query_scalar(
         "SELECT id FROM notices WHERE network = $1 AND ($2 = 'limit_risk' AND limit_risk OR $2 = 'drift' AND drift) ORDER BY id",
     )
     .bind(network)

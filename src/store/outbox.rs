@@ -3,11 +3,14 @@
 use std::collections::HashMap;
 
 use jiff::Timestamp;
-use sqlx::{FromRow, SqliteConnection};
+use sqlx::FromRow;
 use uuid::Uuid;
 
 use super::columns::{time, unsigned, uuid};
+use super::ids::next_id;
 use super::notices::{NoticeKind, telling};
+use super::statement::{Connection, query};
+use super::writes::Scope;
 use super::{Store, StoreError};
 
 /// Events of one notice that are kept after they were taken or given up.
@@ -98,11 +101,10 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn due_notices(&self, limit: u32) -> Result<Vec<DueNotice>, StoreError> {
-        self.file.check()?;
         let rows: Vec<(String, i64)> =
-            sqlx::query_as("SELECT id, due_at FROM notices WHERE due_at IS NOT NULL ORDER BY due_at, id LIMIT $1")
+            query("SELECT id, due_at FROM notices WHERE due_at IS NOT NULL ORDER BY due_at, id LIMIT $1")
                 .bind(i64::from(limit))
-                .fetch_all(&self.read)
+                .fetch_all(&mut self.reader().await?)
                 .await?;
         rows.into_iter().map(|(id, at)| Ok(DueNotice { notice: uuid(&id)?, due_at: time(at)? })).collect()
     }
@@ -112,14 +114,13 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn pending_event(&self, notice: Uuid) -> Result<Option<PendingEvent>, StoreError> {
-        self.file.check()?;
-        let row: Option<EventRow> = sqlx::query_as(
+        let row: Option<EventRow> = query(
             "SELECT e.id, n.name, n.network, n.url, n.due_at, n.failures, e.kind, e.about, e.raised, e.figure_before, e.created_at, \
              e.details FROM notice_events e JOIN notices n ON n.id = e.notice WHERE e.notice = $1 AND e.state = 'pending' \
              AND n.due_at IS NOT NULL ORDER BY e.id LIMIT 1",
         )
         .bind(notice.to_string())
-        .fetch_optional(&self.read)
+        .fetch_optional(&mut self.reader().await?)
         .await?;
         row.map(PendingEvent::try_from).transpose()
     }
@@ -129,15 +130,38 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn nothing_due(&self, notice: Uuid) -> Result<(), StoreError> {
-        let mut transaction = self.begin().await?;
-        sqlx::query(
+        let mut transaction = self.begin(Scope::OfNotice(notice)).await?;
+        query(
             "UPDATE notices SET due_at = NULL WHERE id = $1 AND NOT EXISTS (SELECT 1 FROM notice_events WHERE notice = $1 \
              AND state = 'pending')",
         )
         .bind(notice.to_string())
-        .execute(&mut *transaction)
+        .execute(&mut transaction)
         .await?;
         self.commit(transaction).await
+    }
+
+    /// Claims a notice's oldest event until `until`, for as long as another process has not: both saw it due at the same time. The event
+    /// is due then, if nothing comes of this claim.
+    ///
+    /// # Errors
+    /// When the database fails.
+    pub async fn claim_event(
+        &self,
+        notice: Uuid,
+        event: &mut PendingEvent,
+        until: Timestamp,
+    ) -> Result<bool, StoreError> {
+        let mut transaction = self.begin(Scope::OfNotice(notice)).await?;
+        let claimed = query("UPDATE notices SET due_at = $3 WHERE id = $1 AND due_at = $2")
+            .bind(notice.to_string())
+            .bind(event.due_at.as_microsecond())
+            .bind(until.as_microsecond())
+            .execute(&mut transaction)
+            .await?;
+        self.commit(transaction).await?;
+        event.due_at = until;
+        Ok(claimed > 0)
     }
 
     /// Notes that an event was taken; the notice's next one is due at once.
@@ -145,15 +169,15 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn event_delivered(&self, notice: Uuid, event: Uuid, at: Timestamp) -> Result<(), StoreError> {
-        let mut transaction = self.begin().await?;
+        let mut transaction = self.begin(Scope::OfNotice(notice)).await?;
         if take(&mut transaction, event).await? {
-            sqlx::query(
+            query(
                 "UPDATE notices SET delivered = delivered + 1, delivered_at = $2, failures = 0, due_at = CASE WHEN EXISTS \
                  (SELECT 1 FROM notice_events WHERE notice = $1 AND state = 'pending') THEN $2 END WHERE id = $1",
             )
             .bind(notice.to_string())
             .bind(at.as_microsecond())
-            .execute(&mut *transaction)
+            .execute(&mut transaction)
             .await?;
             prune(&mut transaction, notice).await?;
         }
@@ -172,30 +196,30 @@ impl Store {
         (at, why): (Timestamp, &str),
         (next_at, too_old): (Timestamp, Timestamp),
     ) -> Result<u64, StoreError> {
-        let mut transaction = self.begin().await?;
-        sqlx::query("UPDATE notice_events SET attempts = attempts + 1 WHERE id = $1 AND state = 'pending'")
+        let mut transaction = self.begin(Scope::OfNotice(notice)).await?;
+        query("UPDATE notice_events SET attempts = attempts + 1 WHERE id = $1 AND state = 'pending'")
             .bind(event.id.to_string())
-            .execute(&mut *transaction)
+            .execute(&mut transaction)
             .await?;
-        let noted = sqlx::query(
+        let noted = query(
             "UPDATE notices SET failures = failures + 1, failed_at = $2, failure = $3 WHERE id = $1 AND due_at = $4",
         )
         .bind(notice.to_string())
         .bind(at.as_microsecond())
         .bind(why)
         .bind(event.due_at.as_microsecond())
-        .execute(&mut *transaction)
+        .execute(&mut transaction)
         .await?;
         let mut given_up = 0;
-        if noted.rows_affected() > 0 {
+        if noted > 0 {
             given_up = give_up(&mut transaction, notice, at, too_old).await?;
-            sqlx::query(
+            query(
                 "UPDATE notices SET due_at = CASE WHEN EXISTS (SELECT 1 FROM notice_events WHERE notice = $1 AND \
                  state = 'pending') THEN $2 END WHERE id = $1",
             )
             .bind(notice.to_string())
             .bind(next_at.as_microsecond())
-            .execute(&mut *transaction)
+            .execute(&mut transaction)
             .await?;
         }
         self.commit(transaction).await?;
@@ -205,21 +229,20 @@ impl Store {
 
 /// Ends the events of a notice that are too old; how many.
 async fn give_up(
-    connection: &mut SqliteConnection,
+    connection: &mut Connection,
     notice: Uuid,
     at: Timestamp,
     too_old: Timestamp,
 ) -> Result<u64, StoreError> {
-    let ended = sqlx::query(
+    let ended = query(
         "UPDATE notice_events SET state = 'given_up' WHERE notice = $1 AND state = 'pending' AND created_at <= $2",
     )
     .bind(notice.to_string())
     .bind(too_old.as_microsecond())
     .execute(&mut *connection)
-    .await?
-    .rows_affected();
+    .await?;
     if ended > 0 {
-        sqlx::query("UPDATE notices SET given_up = given_up + $3, given_up_at = $2 WHERE id = $1")
+        query("UPDATE notices SET given_up = given_up + $3, given_up_at = $2 WHERE id = $1")
             .bind(notice.to_string())
             .bind(at.as_microsecond())
             .bind(i64::try_from(ended).unwrap_or(i64::MAX))
@@ -233,7 +256,7 @@ async fn give_up(
 /// Holds how things stand against what each notice of the network last had to tell, and puts an event into the outbox for every
 /// difference. `answered` says whether the limits among the signals are all that are answered now: of others nothing is known any more.
 pub(super) async fn note(
-    connection: &mut SqliteConnection,
+    connection: &mut Connection,
     network: &str,
     refresh: Uuid,
     signals: &[Signal],
@@ -268,12 +291,12 @@ fn is_news(before: Option<bool>, same_terms: bool, raised: bool) -> bool {
 }
 
 async fn standings(
-    connection: &mut SqliteConnection,
+    connection: &mut Connection,
     notice: Uuid,
     kind: NoticeKind,
 ) -> Result<HashMap<String, StandingRow>, StoreError> {
     let rows: Vec<StandingRow> =
-        sqlx::query_as("SELECT about, raised, figure, terms FROM notice_standings WHERE notice = $1 AND kind = $2")
+        query("SELECT about, raised, figure, terms FROM notice_standings WHERE notice = $1 AND kind = $2")
             .bind(notice.to_string())
             .bind(kind.as_str())
             .fetch_all(connection)
@@ -282,18 +305,18 @@ async fn standings(
 }
 
 async fn insert(
-    connection: &mut SqliteConnection,
+    connection: &mut Connection,
     notice: Uuid,
     refresh: Uuid,
     signal: &Signal,
     figure_before: Option<f64>,
 ) -> Result<(), StoreError> {
     let now = Timestamp::now().as_microsecond();
-    sqlx::query(
+    query(
         "INSERT INTO notice_events (id, notice, refresh, kind, about, raised, figure_before, created_at, state, details) \
          VALUES ($1, $2, $3, $4, $5, $6, $7, $8, 'pending', $9)",
     )
-    .bind(Uuid::now_v7().to_string())
+    .bind(next_id().to_string())
     .bind(notice.to_string())
     .bind(refresh.to_string())
     .bind(signal.kind.as_str())
@@ -304,7 +327,7 @@ async fn insert(
     .bind(signal.details.as_str())
     .execute(&mut *connection)
     .await?;
-    sqlx::query("UPDATE notices SET due_at = coalesce(due_at, $2) WHERE id = $1")
+    query("UPDATE notices SET due_at = coalesce(due_at, $2) WHERE id = $1")
         .bind(notice.to_string())
         .bind(now)
         .execute(connection)
@@ -312,8 +335,8 @@ async fn insert(
     Ok(())
 }
 
-async fn keep(connection: &mut SqliteConnection, notice: Uuid, signal: &Signal) -> Result<(), StoreError> {
-    sqlx::query(
+async fn keep(connection: &mut Connection, notice: Uuid, signal: &Signal) -> Result<(), StoreError> {
+    query(
         "INSERT INTO notice_standings (notice, kind, about, raised, figure, terms) VALUES ($1, $2, $3, $4, $5, $6) \
          ON CONFLICT (notice, kind, about) DO UPDATE SET raised = excluded.raised, figure = excluded.figure, \
          terms = excluded.terms",
@@ -329,13 +352,8 @@ async fn keep(connection: &mut SqliteConnection, notice: Uuid, signal: &Signal) 
     Ok(())
 }
 
-async fn forget(
-    connection: &mut SqliteConnection,
-    notice: Uuid,
-    kind: NoticeKind,
-    about: &str,
-) -> Result<(), StoreError> {
-    sqlx::query("DELETE FROM notice_standings WHERE notice = $1 AND kind = $2 AND about = $3")
+async fn forget(connection: &mut Connection, notice: Uuid, kind: NoticeKind, about: &str) -> Result<(), StoreError> {
+    query("DELETE FROM notice_standings WHERE notice = $1 AND kind = $2 AND about = $3")
         .bind(notice.to_string())
         .bind(kind.as_str())
         .bind(about)
@@ -345,16 +363,16 @@ async fn forget(
 }
 
 /// Notes that an event that waits was taken; false when it does not wait.
-async fn take(connection: &mut SqliteConnection, event: Uuid) -> Result<bool, StoreError> {
-    let done = sqlx::query("UPDATE notice_events SET state = 'delivered' WHERE id = $1 AND state = 'pending'")
+async fn take(connection: &mut Connection, event: Uuid) -> Result<bool, StoreError> {
+    let done = query("UPDATE notice_events SET state = 'delivered' WHERE id = $1 AND state = 'pending'")
         .bind(event.to_string())
         .execute(connection)
         .await?;
-    Ok(done.rows_affected() > 0)
+    Ok(done > 0)
 }
 
-async fn prune(connection: &mut SqliteConnection, notice: Uuid) -> Result<(), StoreError> {
-    sqlx::query(
+async fn prune(connection: &mut Connection, notice: Uuid) -> Result<(), StoreError> {
+    query(
         "DELETE FROM notice_events WHERE notice = $1 AND state <> 'pending' AND id NOT IN \
          (SELECT id FROM notice_events WHERE notice = $1 AND state <> 'pending' ORDER BY id DESC LIMIT $2)",
     )

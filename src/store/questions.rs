@@ -1,12 +1,13 @@
 //! Limits and scenarios that are kept with a network.
 
 use jiff::Timestamp;
-use sqlx::{FromRow, SqliteConnection};
+use sqlx::FromRow;
 use uuid::Uuid;
 
 use super::columns::{corrupt, time};
 use super::refreshes::{Change, changed};
-use super::writes::{Caps, WriteError, network_exists, room_for_one};
+use super::statement::{Connection, query, query_scalar};
+use super::writes::{Caps, Scope, WriteError, network_exists, room_for_one};
 use super::{Store, StoreError};
 
 /// What kind of question is kept.
@@ -79,14 +80,14 @@ impl Store {
         allows: impl FnOnce(Option<&str>) -> bool,
     ) -> Result<Change, WriteError> {
         let kind = question.kind;
-        let mut transaction = self.begin().await?;
+        let mut transaction = self.begin(Scope::Network(network)).await?;
         network_exists(&mut transaction, network).await?;
         let stored: Option<(String, i64)> =
-            sqlx::query_as("SELECT tag, updated_at FROM kept_questions WHERE network = $1 AND kind = $2 AND name = $3")
+            query("SELECT tag, updated_at FROM kept_questions WHERE network = $1 AND kind = $2 AND name = $3")
                 .bind(network)
                 .bind(kind.as_str())
                 .bind(question.name.as_str())
-                .fetch_optional(&mut *transaction)
+                .fetch_optional(&mut transaction)
                 .await?;
         if !allows(stored.as_ref().map(|(tag, _)| tag.as_str())) {
             return Err(WriteError::Mismatch);
@@ -97,14 +98,15 @@ impl Store {
             return Ok(Change { stands_since: Some(time(*updated_at)?), ..Change::default() });
         }
         if stored.is_none() {
-            let count = sqlx::query_scalar("SELECT count(*) FROM kept_questions WHERE network = $1 AND kind = $2");
-            let count = count.bind(network).bind(kind.as_str()).fetch_one(&mut *transaction).await?;
+            let count = query_scalar("SELECT count(*) FROM kept_questions WHERE network = $1 AND kind = $2");
+            let count = count.bind(network).bind(kind.as_str()).fetch_one(&mut transaction).await?;
             room_for_one(kind.plural(), count, &Caps { dates: most, rows: 0 })?;
         }
-        sqlx::query(
+        query(
             "INSERT INTO kept_questions (network, kind, name, created_at, updated_at, tag, body) \
              VALUES ($1, $2, $3, $4, $4, $5, $6) ON CONFLICT (network, kind, name) DO UPDATE SET \
-             updated_at = CASE WHEN excluded.updated_at > created_at THEN excluded.updated_at ELSE created_at END, \
+             updated_at = CASE WHEN excluded.updated_at > kept_questions.created_at THEN \
+             excluded.updated_at ELSE kept_questions.created_at END, \
              tag = excluded.tag, body = excluded.body",
         )
         .bind(network)
@@ -113,7 +115,7 @@ impl Store {
         .bind(question.updated_at.as_microsecond())
         .bind(question.tag.as_str())
         .bind(question.body.as_str())
-        .execute(&mut *transaction)
+        .execute(&mut transaction)
         .await?;
         let refresh = followed(&mut transaction, network, kind).await?;
         self.commit(transaction).await?;
@@ -130,14 +132,13 @@ impl Store {
         kind: QuestionKind,
         name: &str,
     ) -> Result<Option<StoredQuestion>, StoreError> {
-        self.file.check()?;
-        let row: Option<QuestionRow> = sqlx::query_as(
+        let row: Option<QuestionRow> = query(
             "SELECT kind, name, tag, body, updated_at FROM kept_questions WHERE network = $1 AND kind = $2 AND name = $3",
         )
         .bind(network)
         .bind(kind.as_str())
         .bind(name)
-        .fetch_optional(&self.read)
+        .fetch_optional(&mut self.reader().await?)
         .await?;
         row.map(StoredQuestion::try_from).transpose()
     }
@@ -153,8 +154,7 @@ impl Store {
         after: Option<&str>,
         limit: u32,
     ) -> Result<Vec<StoredQuestion>, StoreError> {
-        self.file.check()?;
-        let rows: Vec<QuestionRow> = sqlx::query_as(
+        let rows: Vec<QuestionRow> = query(
             "SELECT kind, name, tag, body, updated_at FROM kept_questions \
              WHERE network = $1 AND kind = $2 AND name > $3 ORDER BY name LIMIT $4",
         )
@@ -162,7 +162,7 @@ impl Store {
         .bind(kind.as_str())
         .bind(after.unwrap_or_default())
         .bind(i64::from(limit))
-        .fetch_all(&self.read)
+        .fetch_all(&mut self.reader().await?)
         .await?;
         rows.into_iter().map(StoredQuestion::try_from).collect()
     }
@@ -178,23 +178,23 @@ impl Store {
         name: &str,
         allows: impl FnOnce(Option<&str>) -> bool,
     ) -> Result<Option<Uuid>, WriteError> {
-        let mut transaction = self.begin().await?;
+        let mut transaction = self.begin(Scope::Network(network)).await?;
         network_exists(&mut transaction, network).await?;
         let stored: Option<String> =
-            sqlx::query_scalar("SELECT tag FROM kept_questions WHERE network = $1 AND kind = $2 AND name = $3")
+            query_scalar("SELECT tag FROM kept_questions WHERE network = $1 AND kind = $2 AND name = $3")
                 .bind(network)
                 .bind(kind.as_str())
                 .bind(name)
-                .fetch_optional(&mut *transaction)
+                .fetch_optional(&mut transaction)
                 .await?;
         if !allows(Some(&stored.ok_or(WriteError::Missing)?)) {
             return Err(WriteError::Mismatch);
         }
-        sqlx::query("DELETE FROM kept_questions WHERE network = $1 AND kind = $2 AND name = $3")
+        query("DELETE FROM kept_questions WHERE network = $1 AND kind = $2 AND name = $3")
             .bind(network)
             .bind(kind.as_str())
             .bind(name)
-            .execute(&mut *transaction)
+            .execute(&mut transaction)
             .await?;
         let refresh = followed(&mut transaction, network, kind).await?;
         self.commit(transaction).await?;
@@ -206,35 +206,29 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn newest_date(&self, network: &str) -> Result<Option<Timestamp>, StoreError> {
-        self.file.check()?;
-        let newest: Option<String> = sqlx::query_scalar(
+        let newest: Option<String> = query_scalar(
             "SELECT max(newest) FROM (SELECT max(as_of) AS newest FROM snapshots WHERE network = $1 \
              UNION ALL SELECT max(ends_at) AS newest FROM transitions WHERE network = $1) AS dates",
         )
         .bind(network)
-        .fetch_one(&self.read)
+        .fetch_one(&mut self.reader().await?)
         .await?;
         newest.as_deref().map(super::columns::date).transpose()
     }
 }
 
 /// All questions of a network, in the order of their names.
-pub(super) async fn all(connection: &mut SqliteConnection, network: &str) -> Result<Vec<StoredQuestion>, StoreError> {
-    let rows: Vec<QuestionRow> = sqlx::query_as(
-        "SELECT kind, name, tag, body, updated_at FROM kept_questions WHERE network = $1 ORDER BY kind, name",
-    )
-    .bind(network)
-    .fetch_all(connection)
-    .await?;
+pub(super) async fn all(connection: &mut Connection, network: &str) -> Result<Vec<StoredQuestion>, StoreError> {
+    let rows: Vec<QuestionRow> =
+        query("SELECT kind, name, tag, body, updated_at FROM kept_questions WHERE network = $1 ORDER BY kind, name")
+            .bind(network)
+            .fetch_all(connection)
+            .await?;
     rows.into_iter().map(StoredQuestion::try_from).collect()
 }
 
 /// The refresh that follows a change: limits are part of what a forecast answers, scenarios are not.
-async fn followed(
-    connection: &mut SqliteConnection,
-    network: &str,
-    kind: QuestionKind,
-) -> Result<Option<Uuid>, StoreError> {
+async fn followed(connection: &mut Connection, network: &str, kind: QuestionKind) -> Result<Option<Uuid>, StoreError> {
     match kind {
         QuestionKind::Limit => Ok(changed(connection, network).await?.1),
         QuestionKind::Scenario => Ok(None),

@@ -1,14 +1,17 @@
 //! Refreshes: every change of a network's evidence or plan is noted in its own transaction, with the job that follows it.
 
 use jiff::Timestamp;
-use sqlx::SqliteConnection;
+
 use uuid::Uuid;
 
 use super::accounts::{self, NewAccount};
 use super::columns::{corrupt, signed, unsigned, uuid};
+use super::ids::next_id;
 use super::jobs::{JobKind, JobState, end, insert};
 use super::latest;
 use super::runs::{NewRun, insert_run};
+use super::statement::{Connection, query, query_scalar};
+use super::writes::Scope;
 use super::{Signal, Store, StoreError, backtests, outbox};
 
 /// Ended refreshes whose records are kept of one network: a network that is fed for years does not fill the list of jobs.
@@ -107,14 +110,14 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn finish_refresh(&self, ended: &RefreshEnd<'_>) -> Result<RefreshEnded, StoreError> {
-        let mut transaction = self.begin().await?;
+        let mut transaction = self.begin(Scope::Network(ended.network)).await?;
         // A latest forecast that was deleted is made again.
-        let stands: Option<(i64, Option<i64>)> = sqlx::query_as(
+        let stands: Option<(i64, Option<i64>)> = query(
             "SELECT revision, CASE WHEN EXISTS (SELECT 1 FROM latest_forecasts WHERE network = name) THEN refreshed END \
              FROM networks WHERE name = $1",
         )
         .bind(ended.network)
-        .fetch_optional(&mut *transaction)
+        .fetch_optional(&mut transaction)
         .await?;
         let Some((revision, refreshed)) = stands else { return Ok(RefreshEnded::CalledOff) };
         if unsigned("revision", revision)? != ended.revision {
@@ -138,10 +141,10 @@ impl Store {
             Some((run, issued_to)) => {
                 insert_run(&mut transaction, run, Some(issued_to)).await?;
                 latest::replace(&mut transaction, ended.network, run, ended.job).await?;
-                sqlx::query("UPDATE networks SET refreshed = $2 WHERE name = $1")
+                query("UPDATE networks SET refreshed = $2 WHERE name = $1")
                     .bind(ended.network)
                     .bind(revision)
-                    .execute(&mut *transaction)
+                    .execute(&mut transaction)
                     .await?;
                 note(&mut transaction, ended.network, RefreshState::Current, ended.job, None).await?;
             }
@@ -167,7 +170,7 @@ impl Store {
         (state, outcome): (JobState, &str),
         stands: Option<(RefreshState, Option<&str>)>,
     ) -> Result<Option<Uuid>, StoreError> {
-        let mut transaction = self.begin().await?;
+        let mut transaction = self.begin(Scope::Network(network)).await?;
         if !end(&mut transaction, job, state, Some(outcome)).await? {
             return Ok(None);
         }
@@ -183,39 +186,35 @@ impl Store {
 }
 
 /// Notes that a network's evidence or plan changes: its next revision, and the refresh to be started, if one is taken on.
-pub(super) async fn changed(
-    connection: &mut SqliteConnection,
-    network: &str,
-) -> Result<(u64, Option<Uuid>), StoreError> {
-    let revision: i64 =
-        sqlx::query_scalar("UPDATE networks SET revision = revision + 1 WHERE name = $1 RETURNING revision")
-            .bind(network)
-            .fetch_one(&mut *connection)
-            .await?;
+pub(super) async fn changed(connection: &mut Connection, network: &str) -> Result<(u64, Option<Uuid>), StoreError> {
+    let revision: i64 = query_scalar("UPDATE networks SET revision = revision + 1 WHERE name = $1 RETURNING revision")
+        .bind(network)
+        .fetch_one(&mut *connection)
+        .await?;
     Ok((unsigned("revision", revision)?, enqueue(connection, network).await?))
 }
 
 /// Takes on a refresh of a network that has a plan, or forecasts to account for; the one that waits already stands for it.
-pub(super) async fn enqueue(connection: &mut SqliteConnection, network: &str) -> Result<Option<Uuid>, StoreError> {
-    let tracked: i64 = sqlx::query_scalar(
+pub(super) async fn enqueue(connection: &mut Connection, network: &str) -> Result<Option<Uuid>, StoreError> {
+    let tracked: bool = query_scalar(
         "SELECT EXISTS (SELECT 1 FROM networks WHERE name = $1 AND forecast_plan IS NOT NULL) \
          OR EXISTS (SELECT 1 FROM network_runs WHERE network = $1 AND issued_to IS NOT NULL)",
     )
     .bind(network)
     .fetch_one(&mut *connection)
     .await?;
-    if tracked == 0 {
+    if !tracked {
         return Ok(None);
     }
     let waiting: Option<String> =
-        sqlx::query_scalar("SELECT id FROM jobs WHERE network = $1 AND kind = 'refresh' AND state = 'waiting'")
+        query_scalar("SELECT id FROM jobs WHERE network = $1 AND kind = 'refresh' AND state = 'waiting'")
             .bind(network)
             .fetch_optional(&mut *connection)
             .await?;
     let job = match waiting {
         Some(id) => uuid(&id)?,
         None => {
-            let id = Uuid::now_v7();
+            let id = next_id();
             insert(connection, id, JobKind::Refresh, network, "{}").await?;
             id
         }
@@ -225,12 +224,8 @@ pub(super) async fn enqueue(connection: &mut SqliteConnection, network: &str) ->
 }
 
 /// Marks the runs and backtests of a network that stand on counts of `revision`, which are replaced now.
-pub(super) async fn corrected(
-    connection: &mut SqliteConnection,
-    network: &str,
-    revision: u64,
-) -> Result<(), StoreError> {
-    sqlx::query("UPDATE network_runs SET evidence_corrected_at = $3 WHERE network = $1 AND revision >= $2")
+pub(super) async fn corrected(connection: &mut Connection, network: &str, revision: u64) -> Result<(), StoreError> {
+    query("UPDATE network_runs SET evidence_corrected_at = $3 WHERE network = $1 AND revision >= $2")
         .bind(network)
         .bind(signed("revision", revision)?)
         .bind(Timestamp::now().as_microsecond())
@@ -241,12 +236,12 @@ pub(super) async fn corrected(
 
 /// Notes how the latest forecast stands and why, where `job` is the newest refresh.
 pub(super) async fn note_of(
-    connection: &mut SqliteConnection,
+    connection: &mut Connection,
     network: &str,
     job: Uuid,
     (state, reason): (RefreshState, Option<&str>),
 ) -> Result<(), StoreError> {
-    let newest: Option<i64> = sqlx::query_scalar("SELECT 1 FROM networks WHERE name = $1 AND refresh_job = $2")
+    let newest: Option<i32> = query_scalar("SELECT 1 FROM networks WHERE name = $1 AND refresh_job = $2")
         .bind(network)
         .bind(job.to_string())
         .fetch_optional(&mut *connection)
@@ -258,13 +253,13 @@ pub(super) async fn note_of(
 }
 
 async fn note(
-    connection: &mut SqliteConnection,
+    connection: &mut Connection,
     network: &str,
     state: RefreshState,
     job: Uuid,
     reason: Option<&str>,
 ) -> Result<(), StoreError> {
-    sqlx::query("UPDATE networks SET refresh_state = $2, refresh_job = $3, refresh_reason = $4 WHERE name = $1")
+    query("UPDATE networks SET refresh_state = $2, refresh_job = $3, refresh_reason = $4 WHERE name = $1")
         .bind(network)
         .bind(state.as_str())
         .bind(job.to_string())
@@ -274,8 +269,8 @@ async fn note(
     latest::note(connection, network, state, job).await
 }
 
-async fn prune(connection: &mut SqliteConnection, network: &str) -> Result<(), StoreError> {
-    sqlx::query(
+async fn prune(connection: &mut Connection, network: &str) -> Result<(), StoreError> {
+    query(
         "DELETE FROM jobs WHERE network = $1 AND kind = 'refresh' AND state NOT IN ('waiting', 'running') AND id NOT IN \
          (SELECT id FROM jobs WHERE network = $1 AND kind = 'refresh' ORDER BY id DESC LIMIT $2)",
     )

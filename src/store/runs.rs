@@ -1,11 +1,13 @@
 //! Runs, and the idempotency keys that lead to them.
 
 use jiff::Timestamp;
-use sqlx::{FromRow, QueryBuilder, Sqlite, SqliteConnection};
+use sqlx::FromRow;
 use uuid::Uuid;
 
 use super::columns::{date_key, signed, time, unsigned, uuid};
-use super::{Store, StoreError};
+use super::statement::{Connection, query, query_scalar};
+use super::writes::Scope;
+use super::{Store, StoreError, audit};
 
 /// What a run answered.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
@@ -115,6 +117,8 @@ pub struct RunFilter {
     pub label: Option<String>,
     /// Only this network.
     pub network: Option<String>,
+    /// Only what belongs to a network that the key with this id is bound to.
+    pub seen_by: Option<String>,
     /// Only runs older than this one.
     pub before: Option<Uuid>,
     /// At most this many.
@@ -156,7 +160,7 @@ struct SummaryRow {
     engine: String,
     seed: i64,
     inputs_digest: String,
-    issued: i64,
+    issued: bool,
     evidence_corrected_at: Option<i64>,
 }
 
@@ -166,20 +170,22 @@ impl Store {
     /// # Errors
     /// When the database fails; then nothing was kept. When its file is gone; then nothing is where anybody finds it.
     pub async fn insert_run(&self, run: &NewRun, claim: Option<&KeyClaim>) -> Result<Inserted, StoreError> {
-        let mut transaction = self.begin().await?;
+        let scope = claim.map_or(Scope::Own, |claim| Scope::Key(&claim.key));
+        let mut transaction = self.begin(scope).await?;
         if let Some(claim) = claim
             && let Some(earlier) = claimed(&mut transaction, run.kind, claim).await?
         {
             return Ok(earlier);
         }
         insert_run(&mut transaction, run, None).await?;
+        audit::makes(run.id);
         if let Some(claim) = claim {
-            sqlx::query("INSERT INTO idempotency_keys (kind, key, body_digest, run_id) VALUES ($1, $2, $3, $4)")
+            query("INSERT INTO idempotency_keys (kind, key, body_digest, run_id) VALUES ($1, $2, $3, $4)")
                 .bind(run.kind.as_str())
                 .bind(claim.key.as_str())
                 .bind(claim.body_digest.as_str())
                 .bind(run.id.to_string())
-                .execute(&mut *transaction)
+                .execute(&mut transaction)
                 .await?;
         }
         self.commit(transaction).await?;
@@ -191,8 +197,7 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn find_claim(&self, kind: RunKind, claim: &KeyClaim) -> Result<Option<Inserted>, StoreError> {
-        self.file.check()?;
-        let mut connection = self.read.acquire().await?;
+        let mut connection = self.reader().await?;
         claimed(&mut connection, kind, claim).await
     }
 
@@ -201,13 +206,11 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn find_run(&self, kind: RunKind, id: Uuid) -> Result<Option<StoredRun>, StoreError> {
-        self.file.check()?;
-        let row: Option<RunRow> =
-            sqlx::query_as("SELECT id, created_at, tag, document FROM runs WHERE id = $1 AND kind = $2")
-                .bind(id.to_string())
-                .bind(kind.as_str())
-                .fetch_optional(&self.read)
-                .await?;
+        let row: Option<RunRow> = query("SELECT id, created_at, tag, document FROM runs WHERE id = $1 AND kind = $2")
+            .bind(id.to_string())
+            .bind(kind.as_str())
+            .fetch_optional(&mut self.reader().await?)
+            .await?;
         row.map(StoredRun::try_from).transpose()
     }
 
@@ -216,11 +219,10 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn find_tag(&self, kind: RunKind, id: Uuid) -> Result<Option<String>, StoreError> {
-        self.file.check()?;
-        let tag = sqlx::query_scalar("SELECT tag FROM runs WHERE id = $1 AND kind = $2")
+        let tag = query_scalar("SELECT tag FROM runs WHERE id = $1 AND kind = $2")
             .bind(id.to_string())
             .bind(kind.as_str())
-            .fetch_optional(&self.read)
+            .fetch_optional(&mut self.reader().await?)
             .await?;
         Ok(tag)
     }
@@ -230,24 +232,21 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn list_runs(&self, kind: RunKind, filter: &RunFilter) -> Result<Vec<RunSummary>, StoreError> {
-        self.file.check()?;
-        // One text a combination, so that each finds its index.
-        let mut query = QueryBuilder::<Sqlite>::new(
+        let rows: Vec<SummaryRow> = query(
             "SELECT id, runs.network, label, created_at, engine, seed, inputs_digest, issued_to IS NOT NULL AS issued, \
-             evidence_corrected_at FROM runs LEFT JOIN network_runs ON run_id = id WHERE kind = ",
-        );
-        query.push_bind(kind.as_str());
-        if let Some(label) = &filter.label {
-            query.push(" AND label = ").push_bind(label.as_str());
-        }
-        if let Some(network) = &filter.network {
-            query.push(" AND runs.network = ").push_bind(network.as_str());
-        }
-        if let Some(before) = filter.before {
-            query.push(" AND id < ").push_bind(before.to_string());
-        }
-        query.push(" ORDER BY id DESC LIMIT ").push_bind(i64::from(filter.limit));
-        let rows: Vec<SummaryRow> = query.build_query_as().fetch_all(&self.read).await?;
+             evidence_corrected_at FROM runs LEFT JOIN network_runs ON run_id = id WHERE kind = $1",
+        )
+        .bind(kind.as_str())
+        .bind_where("label = ?", filter.label.as_deref())
+        .bind_where("runs.network = ?", filter.network.as_deref())
+        .bind_where(
+            "runs.network IN (SELECT bound.network FROM access_key_networks AS bound WHERE bound.access_key = ?)",
+            filter.seen_by.as_deref(),
+        )
+        .bind_where("id < ?", filter.before.map(|id| id.to_string()))
+        .order_by_limit("id DESC", filter.limit)
+        .fetch_all(&mut self.reader().await?)
+        .await?;
         rows.into_iter().map(RunSummary::try_from).collect()
     }
 
@@ -256,24 +255,24 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn delete_run(&self, kind: RunKind, id: Uuid) -> Result<bool, StoreError> {
-        let mut transaction = self.begin().await?;
-        let done = sqlx::query("DELETE FROM runs WHERE id = $1 AND kind = $2")
+        let mut transaction = self.begin(Scope::OfRun(id)).await?;
+        let done = query("DELETE FROM runs WHERE id = $1 AND kind = $2")
             .bind(id.to_string())
             .bind(kind.as_str())
-            .execute(&mut *transaction)
+            .execute(&mut transaction)
             .await?;
         self.commit(transaction).await?;
-        Ok(done.rows_affected() > 0)
+        Ok(done > 0)
     }
 }
 
 /// Stores a run and what it stands on; `issued_to` is the last date of a forecast that a refresh issues.
 pub(super) async fn insert_run(
-    connection: &mut SqliteConnection,
+    connection: &mut Connection,
     run: &NewRun,
     issued_to: Option<Timestamp>,
 ) -> Result<(), StoreError> {
-    sqlx::query(
+    query(
         "INSERT INTO runs (id, kind, network, label, created_at, engine, seed, inputs_digest, tag, document, inputs) \
          VALUES ($1, $2, $3, $4, $5, $6, $7, $8, $9, $10, $11)",
     )
@@ -292,7 +291,7 @@ pub(super) async fn insert_run(
     .await?;
     let Some(stored) = run.stored else { return Ok(()) };
     // The network may have gone since the evidence was read.
-    sqlx::query(
+    query(
         "INSERT INTO network_runs (run_id, network, revision, origin, issued_to) \
          VALUES ($1, (SELECT name FROM networks WHERE name = $2), $3, $4, $5)",
     )
@@ -306,12 +305,8 @@ pub(super) async fn insert_run(
     Ok(())
 }
 
-async fn claimed(
-    connection: &mut SqliteConnection,
-    kind: RunKind,
-    claim: &KeyClaim,
-) -> Result<Option<Inserted>, StoreError> {
-    let row: Option<KeyedRunRow> = sqlx::query_as(
+async fn claimed(connection: &mut Connection, kind: RunKind, claim: &KeyClaim) -> Result<Option<Inserted>, StoreError> {
+    let row: Option<KeyedRunRow> = query(
         "SELECT k.body_digest, r.id, r.created_at, r.tag, r.document \
          FROM idempotency_keys k JOIN runs r ON r.id = k.run_id WHERE k.kind = $1 AND k.key = $2",
     )
@@ -347,7 +342,7 @@ impl TryFrom<SummaryRow> for RunSummary {
             engine: row.engine,
             seed: unsigned("seed", row.seed)?,
             inputs_digest: row.inputs_digest,
-            issued: row.issued != 0,
+            issued: row.issued,
             evidence_corrected_at: row.evidence_corrected_at.map(time).transpose()?,
         })
     }

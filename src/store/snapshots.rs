@@ -1,12 +1,13 @@
 //! Snapshots of tracked networks.
 
 use jiff::Timestamp;
-use sqlx::{FromRow, SqliteConnection};
+use sqlx::FromRow;
 use uuid::Uuid;
 
 use super::columns::{date, date_key, signed, time, total, unsigned};
 use super::refreshes::{Change, changed, corrected};
-use super::writes::{Caps, Clash, WriteError, network_exists, room_for_one, room_for_rows};
+use super::statement::{Connection, query, query_scalar};
+use super::writes::{Caps, Clash, Scope, WriteError, network_exists, room_for_one, room_for_rows};
 use super::{Store, StoreError};
 
 /// A snapshot's line in a list: everything but the counts themselves.
@@ -70,15 +71,14 @@ impl Store {
         allows: impl FnOnce(Option<&str>) -> bool,
     ) -> Result<Change, WriteError> {
         let summary = &snapshot.summary;
-        let mut transaction = self.begin().await?;
+        let mut transaction = self.begin(Scope::Network(network)).await?;
         network_exists(&mut transaction, network).await?;
-        let stored: Option<(String, i64, i64, i64)> = sqlx::query_as(
-            "SELECT tag, row_count, updated_at, revision FROM snapshots WHERE network = $1 AND as_of = $2",
-        )
-        .bind(network)
-        .bind(date_key(summary.as_of))
-        .fetch_optional(&mut *transaction)
-        .await?;
+        let stored: Option<(String, i64, i64, i64)> =
+            query("SELECT tag, row_count, updated_at, revision FROM snapshots WHERE network = $1 AND as_of = $2")
+                .bind(network)
+                .bind(date_key(summary.as_of))
+                .fetch_optional(&mut transaction)
+                .await?;
         if !allows(stored.as_ref().map(|(tag, ..)| tag.as_str())) {
             return Err(WriteError::Mismatch);
         }
@@ -91,8 +91,8 @@ impl Store {
         let replaced = stored.as_ref().map_or(Ok(0), |&(_, rows, ..)| unsigned("row_count", rows))?;
         room_for_rows(&mut transaction, network, (summary.rows, replaced), caps).await?;
         if stored.is_none() {
-            let count = sqlx::query_scalar("SELECT count(*) FROM snapshots WHERE network = $1");
-            room_for_one("snapshots", count.bind(network).fetch_one(&mut *transaction).await?, caps)?;
+            let count = query_scalar("SELECT count(*) FROM snapshots WHERE network = $1");
+            room_for_one("snapshots", count.bind(network).fetch_one(&mut transaction).await?, caps)?;
         }
         if let Some((.., revision)) = stored {
             corrected(&mut transaction, network, unsigned("revision", revision)?).await?;
@@ -108,14 +108,13 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn find_snapshot(&self, network: &str, as_of: Timestamp) -> Result<Option<StoredSnapshot>, StoreError> {
-        self.file.check()?;
-        let row: Option<CountsRow> = sqlx::query_as(
+        let row: Option<CountsRow> = query(
             "SELECT as_of, nodes, link_ends, largest_degree, row_count, tag, updated_at, degree_counts FROM snapshots \
              WHERE network = $1 AND as_of = $2",
         )
         .bind(network)
         .bind(date_key(as_of))
-        .fetch_optional(&self.read)
+        .fetch_optional(&mut self.reader().await?)
         .await?;
         row.map(|row| Ok(StoredSnapshot { summary: row.summary.try_into()?, degree_counts: row.degree_counts }))
             .transpose()
@@ -131,15 +130,14 @@ impl Store {
         after: Option<Timestamp>,
         limit: u32,
     ) -> Result<Vec<SnapshotSummary>, StoreError> {
-        self.file.check()?;
-        let rows: Vec<SnapshotRow> = sqlx::query_as(
+        let rows: Vec<SnapshotRow> = query(
             "SELECT as_of, nodes, link_ends, largest_degree, row_count, tag, updated_at FROM snapshots \
              WHERE network = $1 AND as_of > $2 ORDER BY as_of LIMIT $3",
         )
         .bind(network)
         .bind(after.map(date_key).unwrap_or_default())
         .bind(i64::from(limit))
-        .fetch_all(&self.read)
+        .fetch_all(&mut self.reader().await?)
         .await?;
         rows.into_iter().map(SnapshotSummary::try_from).collect()
     }
@@ -154,23 +152,23 @@ impl Store {
         as_of: Timestamp,
         allows: impl FnOnce(Option<&str>) -> bool,
     ) -> Result<Option<Uuid>, WriteError> {
-        let mut transaction = self.begin().await?;
+        let mut transaction = self.begin(Scope::Network(network)).await?;
         network_exists(&mut transaction, network).await?;
         let stored: Option<(String, i64)> =
-            sqlx::query_as("SELECT tag, revision FROM snapshots WHERE network = $1 AND as_of = $2")
+            query("SELECT tag, revision FROM snapshots WHERE network = $1 AND as_of = $2")
                 .bind(network)
                 .bind(date_key(as_of))
-                .fetch_optional(&mut *transaction)
+                .fetch_optional(&mut transaction)
                 .await?;
         let (tag, revision) = stored.ok_or(WriteError::Missing)?;
         if !allows(Some(&tag)) {
             return Err(WriteError::Mismatch);
         }
         corrected(&mut transaction, network, unsigned("revision", revision)?).await?;
-        sqlx::query("DELETE FROM snapshots WHERE network = $1 AND as_of = $2")
+        query("DELETE FROM snapshots WHERE network = $1 AND as_of = $2")
             .bind(network)
             .bind(date_key(as_of))
-            .execute(&mut *transaction)
+            .execute(&mut transaction)
             .await?;
         let (_, refresh) = changed(&mut transaction, network).await?;
         self.commit(transaction).await?;
@@ -180,11 +178,11 @@ impl Store {
 
 /// Checks that transitions that start or end at the snapshot's date have its counts.
 async fn fits_transitions(
-    connection: &mut SqliteConnection,
+    connection: &mut Connection,
     network: &str,
     snapshot: &SnapshotSummary,
 ) -> Result<(), WriteError> {
-    let clash: Option<(String, String, String, String, String)> = sqlx::query_as(
+    let clash: Option<(String, String, String, String, String)> = query(
         "SELECT starts_at, ends_at, stayed, arrived, departed FROM transitions WHERE network = $1 \
          AND ((starts_at = $2 AND before_tag <> $3) OR (ends_at = $2 AND after_tag IS DISTINCT FROM $3)) \
          ORDER BY starts_at LIMIT 1",
@@ -203,13 +201,13 @@ async fn fits_transitions(
 
 /// Stores a snapshot in place of the one of its date, if there is one.
 pub(super) async fn insert(
-    connection: &mut SqliteConnection,
+    connection: &mut Connection,
     network: &str,
     snapshot: &StoredSnapshot,
     revision: u64,
 ) -> Result<(), StoreError> {
     let summary = &snapshot.summary;
-    sqlx::query(
+    query(
         "INSERT INTO snapshots (network, as_of, nodes, link_ends, largest_degree, row_count, tag, updated_at, \
          degree_counts, revision) VALUES ($1, $2, $3, $4, $5, $6, $7, $8, $9, $10) ON CONFLICT (network, as_of) DO UPDATE SET \
          nodes = excluded.nodes, link_ends = excluded.link_ends, largest_degree = excluded.largest_degree, \

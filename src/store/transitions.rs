@@ -1,12 +1,13 @@
 //! Tables of transitions of tracked networks.
 
 use jiff::Timestamp;
-use sqlx::{FromRow, SqliteConnection};
+use sqlx::FromRow;
 use uuid::Uuid;
 
 use super::columns::{date, date_key, signed, time, total, unsigned};
 use super::refreshes::{Change, changed, corrected};
-use super::writes::{Caps, Clash, WriteError, network_exists, room_for_one, room_for_rows};
+use super::statement::{Connection, query, query_scalar};
+use super::writes::{Caps, Clash, Scope, WriteError, network_exists, room_for_one, room_for_rows};
 use super::{Store, StoreError};
 
 /// A table's line in a list: everything but its rows.
@@ -83,16 +84,16 @@ impl Store {
         allows: impl FnOnce(Option<&str>) -> bool,
     ) -> Result<Change, WriteError> {
         let summary = &table.summary;
-        let mut transaction = self.begin().await?;
+        let mut transaction = self.begin(Scope::Network(network)).await?;
         network_exists(&mut transaction, network).await?;
-        let stored: Option<(String, i64, i64, i64)> = sqlx::query_as(
+        let stored: Option<(String, i64, i64, i64)> = query(
             "SELECT tag, row_count, updated_at, revision FROM transitions \
              WHERE network = $1 AND starts_at = $2 AND ends_at = $3",
         )
         .bind(network)
         .bind(date_key(summary.from))
         .bind(date_key(summary.to))
-        .fetch_optional(&mut *transaction)
+        .fetch_optional(&mut transaction)
         .await?;
         if !allows(stored.as_ref().map(|(tag, ..)| tag.as_str())) {
             return Err(WriteError::Mismatch);
@@ -108,8 +109,8 @@ impl Store {
         let replaced = stored.as_ref().map_or(Ok(0), |&(_, rows, ..)| unsigned("row_count", rows))?;
         room_for_rows(&mut transaction, network, (summary.rows, replaced), caps).await?;
         if stored.is_none() {
-            let count = sqlx::query_scalar("SELECT count(*) FROM transitions WHERE network = $1");
-            room_for_one("tables of transitions", count.bind(network).fetch_one(&mut *transaction).await?, caps)?;
+            let count = query_scalar("SELECT count(*) FROM transitions WHERE network = $1");
+            room_for_one("tables of transitions", count.bind(network).fetch_one(&mut transaction).await?, caps)?;
         }
         if let Some((.., revision)) = stored {
             corrected(&mut transaction, network, unsigned("revision", revision)?).await?;
@@ -130,15 +131,14 @@ impl Store {
         from: Timestamp,
         to: Timestamp,
     ) -> Result<Option<StoredTransitions>, StoreError> {
-        self.file.check()?;
-        let row: Option<CountsRow> = sqlx::query_as(
+        let row: Option<CountsRow> = query(
             "SELECT starts_at, ends_at, stayed, arrived, departed, row_count, tag, updated_at, counts FROM transitions \
              WHERE network = $1 AND starts_at = $2 AND ends_at = $3",
         )
         .bind(network)
         .bind(date_key(from))
         .bind(date_key(to))
-        .fetch_optional(&self.read)
+        .fetch_optional(&mut self.reader().await?)
         .await?;
         row.map(|row| Ok(StoredTransitions { summary: row.summary.try_into()?, counts: row.counts })).transpose()
     }
@@ -153,15 +153,14 @@ impl Store {
         after: Option<Timestamp>,
         limit: u32,
     ) -> Result<Vec<TransitionsSummary>, StoreError> {
-        self.file.check()?;
-        let rows: Vec<TransitionsRow> = sqlx::query_as(
+        let rows: Vec<TransitionsRow> = query(
             "SELECT starts_at, ends_at, stayed, arrived, departed, row_count, tag, updated_at FROM transitions \
              WHERE network = $1 AND starts_at > $2 ORDER BY starts_at LIMIT $3",
         )
         .bind(network)
         .bind(after.map(date_key).unwrap_or_default())
         .bind(i64::from(limit))
-        .fetch_all(&self.read)
+        .fetch_all(&mut self.reader().await?)
         .await?;
         rows.into_iter().map(TransitionsSummary::try_from).collect()
     }
@@ -176,25 +175,24 @@ impl Store {
         (from, to): (Timestamp, Timestamp),
         allows: impl FnOnce(Option<&str>) -> bool,
     ) -> Result<Option<Uuid>, WriteError> {
-        let mut transaction = self.begin().await?;
+        let mut transaction = self.begin(Scope::Network(network)).await?;
         network_exists(&mut transaction, network).await?;
-        let stored: Option<(String, i64)> = sqlx::query_as(
-            "SELECT tag, revision FROM transitions WHERE network = $1 AND starts_at = $2 AND ends_at = $3",
-        )
-        .bind(network)
-        .bind(date_key(from))
-        .bind(date_key(to))
-        .fetch_optional(&mut *transaction)
-        .await?;
+        let stored: Option<(String, i64)> =
+            query("SELECT tag, revision FROM transitions WHERE network = $1 AND starts_at = $2 AND ends_at = $3")
+                .bind(network)
+                .bind(date_key(from))
+                .bind(date_key(to))
+                .fetch_optional(&mut transaction)
+                .await?;
         let (tag, revision) = stored.ok_or(WriteError::Missing)?;
         if !allows(Some(&tag)) {
             return Err(WriteError::Mismatch);
         }
         corrected(&mut transaction, network, unsigned("revision", revision)?).await?;
-        sqlx::query("DELETE FROM transitions WHERE network = $1 AND starts_at = $2")
+        query("DELETE FROM transitions WHERE network = $1 AND starts_at = $2")
             .bind(network)
             .bind(date_key(from))
-            .execute(&mut *transaction)
+            .execute(&mut transaction)
             .await?;
         let (_, refresh) = changed(&mut transaction, network).await?;
         self.commit(transaction).await?;
@@ -204,11 +202,11 @@ impl Store {
 
 /// Checks that no stored table but the one of the very same dates shares time with `table`.
 async fn overlaps_none(
-    connection: &mut SqliteConnection,
+    connection: &mut Connection,
     network: &str,
     table: &TransitionsSummary,
 ) -> Result<(), WriteError> {
-    let clash: Option<(String, String)> = sqlx::query_as(
+    let clash: Option<(String, String)> = query(
         "SELECT starts_at, ends_at FROM transitions WHERE network = $1 AND starts_at < $3 AND ends_at > $2 \
          AND NOT (starts_at = $2 AND ends_at = $3) ORDER BY starts_at LIMIT 1",
     )
@@ -225,12 +223,12 @@ async fn overlaps_none(
 
 /// Checks that stored tables that end where `table` starts, or start where it ends, have its counts there.
 async fn fits_neighbours(
-    connection: &mut SqliteConnection,
+    connection: &mut Connection,
     network: &str,
     table: &TransitionsSummary,
     ends: &EndTags,
 ) -> Result<(), WriteError> {
-    let clash: Option<(String, String)> = sqlx::query_as(
+    let clash: Option<(String, String)> = query(
         "SELECT starts_at, ends_at FROM transitions WHERE network = $1 \
          AND ((ends_at = $2 AND after_tag IS DISTINCT FROM $3) OR (starts_at = $4 AND before_tag IS DISTINCT FROM $5)) \
          ORDER BY starts_at LIMIT 1",
@@ -250,13 +248,13 @@ async fn fits_neighbours(
 
 /// Checks that the stored snapshots of its two dates have its counts.
 async fn fits_snapshots(
-    connection: &mut SqliteConnection,
+    connection: &mut Connection,
     network: &str,
     table: &TransitionsSummary,
     ends: &EndTags,
 ) -> Result<(), WriteError> {
     let (before, after) = (table.stayed.saturating_add(table.departed), table.stayed.saturating_add(table.arrived));
-    let clash: Option<(String, String)> = sqlx::query_as(
+    let clash: Option<(String, String)> = query(
         "SELECT as_of, nodes FROM snapshots WHERE network = $1 \
          AND ((as_of = $2 AND tag <> $3) OR (as_of = $4 AND tag IS DISTINCT FROM $5)) ORDER BY as_of LIMIT 1",
     )
@@ -276,13 +274,13 @@ async fn fits_snapshots(
 
 /// Stores a table in place of the one that starts at the same date, if there is one.
 pub(super) async fn insert(
-    connection: &mut SqliteConnection,
+    connection: &mut Connection,
     network: &str,
     (table, ends): (&StoredTransitions, &EndTags),
     revision: u64,
 ) -> Result<(), StoreError> {
     let summary = &table.summary;
-    sqlx::query(
+    query(
         "INSERT INTO transitions (network, starts_at, ends_at, stayed, arrived, departed, row_count, tag, before_tag, \
          after_tag, updated_at, counts, revision) VALUES ($1, $2, $3, $4, $5, $6, $7, $8, $9, $10, $11, $12, $13) \
          ON CONFLICT (network, starts_at) DO UPDATE SET ends_at = excluded.ends_at, stayed = excluded.stayed, \

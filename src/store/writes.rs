@@ -1,12 +1,12 @@
 //! Writes that look before they leap: one transaction each, refused with data that says why.
 
 use jiff::Timestamp;
-use sqlx::{Sqlite, SqliteConnection, Transaction};
 use tokio::sync::watch;
 use uuid::Uuid;
 
 use super::columns::unsigned;
-use super::{Store, StoreError};
+use super::statement::{Connection, Held, Statement, in_time, query, query_scalar};
+use super::{Home, Store, StoreError, audit};
 use crate::model::DegreeKind;
 
 /// Why a write was not done. Nothing was changed then.
@@ -102,21 +102,63 @@ impl From<Clash> for WriteError {
     }
 }
 
+/// What a write touches: on a server it is alone among the writes of the same scope, in whatever process, from its first look
+/// to its end. A file has one writer, so that a write is always alone.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub(super) enum Scope<'a> {
+    /// Rows that nobody else writes.
+    Own,
+    /// A network and all that hangs on it.
+    Network(&'a str),
+    /// The network of a job.
+    OfJob(Uuid),
+    /// The network of a notice.
+    OfNotice(Uuid),
+    /// The network of a backtest.
+    OfBacktest(Uuid),
+    /// The network of a run, where it has one.
+    OfRun(Uuid),
+    /// An idempotency key.
+    Key(&'a str),
+}
+
 impl Store {
     /// Begins a write.
-    pub(super) async fn begin(&self) -> Result<Transaction<'static, Sqlite>, StoreError> {
-        self.file.check()?;
-        Ok(self.write.begin_with("BEGIN IMMEDIATE").await?)
+    pub(super) async fn begin(&self, scope: Scope<'_>) -> Result<Connection, StoreError> {
+        match &self.home {
+            Home::Sqlite { write, file, .. } => {
+                file.check()?;
+                self.health.check()?;
+                Ok(Connection::Sqlite(Held::Transaction(write.begin_with("BEGIN IMMEDIATE").await?)))
+            }
+            Home::Postgres { pool } => {
+                let mut transaction = Connection::Postgres(Held::Transaction(in_time(pool.begin()).await?));
+                // Given up with the transaction. What is read after this is what the one before has written.
+                if let Some(lock) = scope.lock() {
+                    lock.execute(&mut transaction).await?;
+                }
+                Ok(transaction)
+            }
+        }
     }
 
-    /// Ends a write: on disk when this returns.
-    pub(super) async fn commit(&self, transaction: Transaction<'static, Sqlite>) -> Result<(), StoreError> {
+    /// Ends a write, with its line in the trail: on disk when this returns.
+    pub(super) async fn commit(&self, mut transaction: Connection) -> Result<(), StoreError> {
+        let author = audit::note(&mut transaction).await?;
         let committed = transaction.commit().await;
         // Whatever came of it: who holds a copy of what is stored looks again.
         self.commits.send_modify(|count| *count += 1);
+        let committed = committed.map_err(StoreError::from);
+        self.health.note_write(committed.as_ref().map_err(StoreError::fault).copied());
         committed?;
-        // The file may have gone in between.
-        self.file.check()
+        if let Some(author) = author {
+            author.is_noted();
+        }
+        match &self.home {
+            // The file may have gone in between.
+            Home::Sqlite { file, .. } => file.check(),
+            Home::Postgres { .. } => Ok(()),
+        }
     }
 
     /// Counts the writes of this process, each before it is acknowledged: what was read at one count is what is stored as long
@@ -126,21 +168,51 @@ impl Store {
     }
 }
 
+impl<'a> Scope<'a> {
+    /// What takes PostgreSQL's advisory lock: unlike a row's, it can be had for what is yet to be written.
+    fn lock(self) -> Option<Statement<'a>> {
+        Some(match self {
+            Self::Own => return None,
+            Self::Network(name) => {
+                query("SELECT pg_advisory_xact_lock(hashtextextended('network ' || $1, 0))").bind(name)
+            }
+            Self::OfJob(id) => query(
+                "SELECT pg_advisory_xact_lock(hashtextextended('network ' || network, 0)) FROM jobs WHERE id = $1",
+            )
+            .bind(id.to_string()),
+            Self::OfNotice(id) => query(
+                "SELECT pg_advisory_xact_lock(hashtextextended('network ' || network, 0)) FROM notices WHERE id = $1",
+            )
+            .bind(id.to_string()),
+            Self::OfBacktest(id) => query(
+                "SELECT pg_advisory_xact_lock(hashtextextended('network ' || network, 0)) FROM backtests WHERE id = $1",
+            )
+            .bind(id.to_string()),
+            Self::OfRun(id) => query(
+                "SELECT pg_advisory_xact_lock(hashtextextended('network ' || network, 0)) FROM runs WHERE id = $1 \
+                 AND network IS NOT NULL",
+            )
+            .bind(id.to_string()),
+            Self::Key(key) => query("SELECT pg_advisory_xact_lock(hashtextextended('key ' || $1, 0))").bind(key),
+        })
+    }
+}
+
 /// Checks that there is such a network.
-pub(super) async fn network_exists(connection: &mut SqliteConnection, network: &str) -> Result<(), WriteError> {
-    let found: Option<i64> =
-        sqlx::query_scalar("SELECT 1 FROM networks WHERE name = $1").bind(network).fetch_optional(connection).await?;
+pub(super) async fn network_exists(connection: &mut Connection, network: &str) -> Result<(), WriteError> {
+    let found: Option<i32> =
+        query_scalar("SELECT 1 FROM networks WHERE name = $1").bind(network).fetch_optional(connection).await?;
     found.map(drop).ok_or(WriteError::NoNetwork)
 }
 
 /// Checks that `rows` rows in place of `replaced` ones leave the network within its cap.
 pub(super) async fn room_for_rows(
-    connection: &mut SqliteConnection,
+    connection: &mut Connection,
     network: &str,
     (rows, replaced): (u64, u64),
     caps: &Caps,
 ) -> Result<(), WriteError> {
-    let stored: i64 = sqlx::query_scalar(
+    let stored: i64 = query_scalar(
         "SELECT CAST((SELECT coalesce(sum(row_count), 0) FROM snapshots WHERE network = $1) \
          + (SELECT coalesce(sum(row_count), 0) FROM transitions WHERE network = $1) \
          + (SELECT coalesce(sum(row_count), 0) FROM link_events WHERE network = $1) AS BIGINT)",

@@ -23,12 +23,13 @@ export async function startService(settings = {}) {
   const port = await freePort();
   const base = `http://127.0.0.1:${port}`;
   const binary = process.env.SERVICE_BINARY ?? join(ROOT, "target/debug/tailcast");
+  const database = { TAILCAST_DATABASE_URL: `sqlite://${join(folder, "page.db")}` };
   const child = spawn(binary, ["serve"], {
     env: {
       // The service refuses variables of its name that are no settings.
       ...Object.fromEntries(Object.entries(process.env).filter(([name]) => !name.startsWith("TAILCAST_"))),
       TAILCAST_BIND: `127.0.0.1:${port}`,
-      TAILCAST_DATABASE_URL: `sqlite://${join(folder, "page.db")}`,
+      ...database,
       TAILCAST_LOG_FILTER: "warn",
       // A machine that is shared is slow at times; what is slow is measured, not refused.
       TAILCAST_COMPUTE_BUDGET_SECONDS: "120",
@@ -44,6 +45,8 @@ export async function startService(settings = {}) {
   await Promise.race([ready(base), failed]);
   return {
     base,
+    binary,
+    settings: { ...database, ...settings },
     async stop() {
       const gone = new Promise((resolve) => child.once("exit", resolve));
       child.kill("SIGTERM");

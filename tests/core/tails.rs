@@ -1,5 +1,7 @@
 //! Tail sizes: conservation, monotonicity, consistency over time, closed mean-field cases.
 
+use std::cell::Cell;
+
 use proptest::prelude::*;
 use tailcast::growth::{Course, GrowthError, NetworkLaw, NodeLaw, TailSum};
 use tailcast::model::{ArrivalPlan, AttachmentMix, DegreeCounts, DegreeKind, EntryDegrees, GrowthParameters};
@@ -188,5 +190,31 @@ fn rare_gains_are_as_exact_as_common_ones() {
                 );
             }
         }
+    }
+}
+
+/// What an extreme network costs is not known beforehand, so whoever waits for a tail must be able to stop it in the middle.
+#[test]
+fn a_tail_stops_between_two_of_its_node_laws_when_it_is_cancelled() {
+    const ASKED: usize = 10;
+    let counts: Vec<(u64, u64)> = (0..2_000).map(|degree| (degree, 2)).collect();
+    let counts = DegreeCounts::from_pairs(&counts).unwrap();
+    let arrivals = ArrivalPlan::constant(50.0).unwrap();
+    let mix = AttachmentMix::new(0.7).unwrap();
+    let forces = GrowthParameters::new(DegreeKind::Received, mix, arrivals, EntryDegrees::single(0), 3.0).unwrap();
+    for forces in [forces.clone(), forces.with_dormant_share(0.3).unwrap()] {
+        let course = Course::new(&counts, forces, 300.0).unwrap();
+        let asked = Cell::new(0);
+        let cancelled = || {
+            asked.set(asked.get() + 1);
+            asked.get() == ASKED
+        };
+        let law = NetworkLaw::at(&course, &counts, 300.0).unwrap().until(&cancelled);
+        assert_eq!(law.tail(1_500, Accuracy::Full), Err(GrowthError::Cancelled));
+        assert_eq!(asked.get(), ASKED, "nothing is computed after the answer");
+        assert!(
+            law.tail(1_500, Accuracy::Working).is_ok_and(|tail| tail.mean > 0.0),
+            "asked again, it goes on to the end"
+        );
     }
 }

@@ -4,7 +4,7 @@ use std::collections::{BTreeMap, BTreeSet};
 use std::path::{Path, PathBuf};
 
 /// Every module with the modules it may name.
-const ARROWS: [(&str, &[&str]); 16] = [
+const ARROWS: [(&str, &[&str]); 17] = [
     ("numerics", &[]),
     ("model", &["numerics"]),
     ("census", &["model"]),
@@ -14,16 +14,32 @@ const ARROWS: [(&str, &[&str]); 16] = [
     ("evaluate", &["fit", "forecast", "growth", "model", "numerics"]),
     ("ingest", &["census", "model"]),
     // What the operator lists is read into what calls are held against.
-    ("config", &["webhook"]),
+    ("config", &["credential", "webhook"]),
+    ("credential", &[]),
     ("webhook", &[]),
-    ("telemetry", &["config"]),
+    ("telemetry", &["config", "credential"]),
     ("store", &["config", "model"]),
     // fit, forecast and growth: the words of evaluate's requests, answers and errors.
-    ("service", &["census", "config", "evaluate", "fit", "forecast", "growth", "ingest", "model", "store", "webhook"]),
+    (
+        "service",
+        &[
+            "census",
+            "config",
+            "credential",
+            "evaluate",
+            "fit",
+            "forecast",
+            "growth",
+            "ingest",
+            "model",
+            "store",
+            "webhook",
+        ],
+    ),
     ("report", &["service"]),
-    ("api", &["config", "model", "report", "service"]),
+    ("api", &["config", "credential", "model", "report", "service"]),
     // growth: the demo grows its network with the simulator, so that what comes true is known.
-    ("app", &["api", "census", "config", "growth", "ingest", "model", "report", "service", "telemetry"]),
+    ("app", &["api", "census", "config", "credential", "growth", "ingest", "model", "report", "service", "telemetry"]),
 ];
 
 const CORE: [&str; 7] = ["numerics", "model", "census", "growth", "fit", "forecast", "evaluate"];

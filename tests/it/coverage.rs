@@ -8,11 +8,12 @@ use crate::harness::{DOCUMENT, Service, answered, csv, fit_body, forecast_body, 
 use crate::notices::sends;
 
 /// Every operation with the status its plain use is answered with, in an order in which all of them work.
-const CALLS: [(&str, &str, u16); 53] = [
+pub const CALLS: [(&str, &str, u16); 54] = [
     ("get", "/livez", 200),
     ("get", "/readyz", 200),
     ("get", "/metrics", 200),
     ("get", "/openapi.json", 200),
+    ("get", "/v1/audit", 200),
     ("post", "/v1/forecasts", 201),
     ("get", "/v1/forecasts", 200),
     ("get", "/v1/forecasts/{id}", 200),
@@ -67,8 +68,16 @@ const CALLS: [(&str, &str, u16); 53] = [
     ("delete", "/v1/networks/{name}", 204),
 ];
 
+/// Where a call leads, `made` being the run or job that was made last.
+pub fn address(path: &str, made: &str) -> String {
+    let address = path.replace("{id}", made).replace("{name}", "heronsgate").replace("{as_of}", "2026-06-01");
+    let address = address.replace("{from}", "2026-05-01").replace("{to}", "2026-06-01");
+    let address = address.replace("{limit}", "fan-out").replace("{scenario}", "campaign");
+    address.replace("{notice}", "on-call")
+}
+
 /// The body that a call is made with.
-fn body(method: &str, path: &str) -> Option<(&'static str, String)> {
+pub fn body(method: &str, path: &str) -> Option<(&'static str, String)> {
     if !["post", "put"].contains(&method) {
         return None;
     }
@@ -110,10 +119,7 @@ async fn every_operation_works() {
     let service = Service::start_with(|config| sends(config, &["https://hooks.example.org"])).await;
     let mut made = String::new();
     for (method, path, status) in CALLS {
-        let address = path.replace("{id}", &made).replace("{name}", "heronsgate").replace("{as_of}", "2026-06-01");
-        let address = address.replace("{from}", "2026-05-01").replace("{to}", "2026-06-01");
-        let address = address.replace("{limit}", "fan-out").replace("{scenario}", "campaign");
-        let address = address.replace("{notice}", "on-call");
+        let address = address(path, &made);
         let request = service.request(method.to_uppercase().parse().unwrap(), &address);
         let request = if path.ends_with("/events") { request.header("accept", "text/csv") } else { request };
         let answer = match body(method, path) {

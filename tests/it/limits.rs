@@ -130,3 +130,22 @@ async fn a_large_body_within_the_limit_is_read() {
     let answer = service.post("/v1/fits", &body).await.expect_problem(400, "invalid_request");
     assert_eq!(answer.places(), ["/snapshots/0/degree_counts/49999/1"]);
 }
+
+/// So that `limits.cells` bounds the memory of an answer, whatever the network.
+#[tokio::test]
+async fn an_answer_takes_a_bounded_number_of_bytes_for_each_threshold_and_date() {
+    let service = Service::start().await;
+    let thresholds: Vec<u64> = (1..=20).collect();
+    for (levels, most) in [(2, 300), (20, 1_600)] {
+        let levels: Vec<f64> = (1..=levels).map(|i| f64::from(i) / f64::from(levels + 1)).collect();
+        let mut lengths = Vec::new();
+        for dates in [5, 15] {
+            let dates: Vec<String> = (1..=dates).map(|day| format!("2026-07-{day:02}T12:34:56.789Z")).collect();
+            let body = changed(forecast_body(), "/thresholds", json!(thresholds));
+            let body = changed(changed(body, "/dates", json!(dates)), "/levels", json!(levels));
+            lengths.push(service.post("/v1/forecasts", &body).await.expect(201).text.len());
+        }
+        let each = (lengths[1] - lengths[0]) / (10 * thresholds.len());
+        assert!(each < most, "{each} bytes with {} levels", levels.len());
+    }
+}

@@ -298,6 +298,22 @@ fn broken_compression_is_said() {
     assert!(refused(&bytes).contains("gzip") || refused(&bytes).contains("line"));
 }
 
+/// 96 MiB out of about 100 kB: one endless line, a line over and over, and empty lines.
+#[test]
+fn a_bomb_is_refused_long_before_it_has_gone_off() {
+    let most = 80 << 20;
+    let header = "time,source,target\n";
+    for piece in ["x", "2026-01-01,ana,ben\n", "\n"] {
+        let list = gzip(format!("{header}{}", piece.repeat((96 << 20) / piece.len())).as_bytes());
+        assert!(list.len() < most / 200, "{}", list.len());
+        let error = count(list.as_slice(), FaultPolicy::Skip).unwrap_err().to_string();
+        assert!(error.contains("more than 200 times") && error.contains("send the list as it is"), "{error}");
+    }
+    // What is merely regular, and short, is counted.
+    let list = gzip(format!("{header}{}", "2026-01-01,ana,ben\n".repeat(1_000_000)).as_bytes());
+    assert_eq!(count(list.as_slice(), FaultPolicy::Skip).unwrap().1.links, 1);
+}
+
 #[test]
 fn the_watcher_sees_every_byte_and_can_stop() {
     let list = format!("{LIST}{}", "\n".repeat(1 << 20));

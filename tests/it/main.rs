@@ -2,22 +2,29 @@
 
 #![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic)]
 
+mod access;
 mod any_json;
 mod any_links;
 mod architecture;
 mod arrival_plans;
+mod audit;
 mod backtests;
+mod backups;
 mod bad_input;
 mod command_line;
 mod coverage;
 mod documents;
 mod durability;
 mod faces;
+mod faults;
 mod fits;
 mod forecasts;
 mod gauges;
+mod half_open;
 mod harness;
+mod hostile_clients;
 mod jobs;
+mod keys;
 mod limits;
 mod limits_kept;
 mod link_lists;
@@ -30,9 +37,12 @@ mod notices;
 mod notices_kills;
 mod openapi;
 mod operation;
+mod overload;
 mod polled;
+mod postgres;
 mod process;
 mod questions;
+mod retention;
 mod scenarios;
 mod schemas;
 mod stored_evidence;
@@ -40,3 +50,4 @@ mod traces;
 mod tracking;
 mod tracking_kills;
 mod upgrade;
+mod upgrade_each;

@@ -183,6 +183,6 @@ async fn a_database_with_runs_alone_is_brought_up_to_date() {
     .unwrap();
     old.close().await.unwrap();
     let service = Service::start_with(|config| config.database.url = url.clone()).await;
-    assert_eq!(service.get(&format!("/v1/fits/{id}")).await.expect(200).text, "{\"kept\":true}");
+    assert_eq!(service.get_older(&format!("/v1/fits/{id}")).await.expect(200).text, "{\"kept\":true}");
     service.put("/v1/networks/heronsgate", &settings()).await.expect(201);
 }

@@ -183,9 +183,9 @@ async fn a_database_that_was_removed_or_replaced_takes_no_run() {
     let service = Service::start_with(|config| config.database.url = format!("sqlite://{}", path.display())).await;
     let kept = service.post("/v1/fits", &fit_body()).await.expect(201);
     let refused = async || {
-        service.get("/readyz").await.expect_problem(503, "store_unavailable");
-        service.post("/v1/fits", &fit_body()).await.expect_problem(503, "store_unavailable");
-        service.send(Method::DELETE, kept.header("location")).await.expect_problem(503, "store_unavailable");
+        service.get("/readyz").await.expect_problem(503, "store_missing");
+        service.post("/v1/fits", &fit_body()).await.expect_problem(503, "store_missing");
+        service.send(Method::DELETE, kept.header("location")).await.expect_problem(503, "store_missing");
         service.get("/livez").await.expect(200);
     };
     let aside = folder.path().join("aside.db");

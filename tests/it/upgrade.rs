@@ -49,7 +49,7 @@ async fn a_run_of_the_first_version_is_read_in_every_form() {
     database.close().await.unwrap();
 
     let service = Service::start_with(|config| config.database.url = url.clone()).await;
-    let run = service.get(&format!("/v1/fits/{ID}")).await;
+    let run = service.get_older(&format!("/v1/fits/{ID}")).await;
     assert_eq!((run.status, run.text.as_str()), (200, DOCUMENT));
     let table = service.get(&format!("/v1/fits/{ID}?format=csv")).await;
     assert_eq!(table.status, 200, "{}", table.text);
@@ -110,7 +110,7 @@ async fn a_network_of_the_third_version_keeps_its_evidence_and_jobs() {
     assert_eq!(snapshot.json()["degree_counts"], pairs(&COUNTS[1]));
     service.put("/v1/networks/heronsgate", &crate::tracking::settings()).await.expect(200);
     assert_eq!(crate::tracking::settled(&service).await["refresh"]["state"], "current");
-    service.get("/v1/networks/heronsgate/forecasts/latest").await.expect(200);
+    service.get_older("/v1/networks/heronsgate/forecasts/latest").await.expect(200);
     service.stop().await;
 }
 
@@ -201,7 +201,7 @@ async fn a_network_of_the_fifth_version_keeps_its_forecast_and_takes_limits() {
     database.close().await.unwrap();
 
     let service = Service::start_with(|config| config.database.url = url.clone()).await;
-    let latest = service.get("/v1/networks/heronsgate/forecasts/latest").await.expect(200);
+    let latest = service.get_older("/v1/networks/heronsgate/forecasts/latest").await.expect(200);
     assert_eq!(latest.text, document);
     for part in ["tail", "limits", "bands", "scenarios"] {
         let table = service.get(&format!("/v1/forecasts/{id}?format=csv&part={part}")).await.expect(200);

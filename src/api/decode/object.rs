@@ -9,6 +9,8 @@ use super::{At, Faults, kind_of};
 
 /// Most fields of one object that are looked at; no object asked for here has a tenth of it.
 const MOST_FIELDS: usize = 1_000;
+/// Longest name that is told in full, bytes: the names asked for here have a fifth of it.
+const LONGEST_NAME: usize = 200;
 /// How alike a refused name and a known one must be for the known one to be suggested (Jaro–Winkler, 0 to 1).
 const ALIKE: f64 = 0.8;
 
@@ -43,7 +45,10 @@ impl<'r> Object<'r> {
 pub fn object<'r>(raw: &'r RawValue, at: At<'_>, known: &[&str], faults: &mut Faults) -> Option<Object<'r>> {
     let fields = fields(raw, at, faults)?;
     for (i, (name, _)) in fields.iter().enumerate() {
-        if !known.contains(&name.as_str()) {
+        if name.len() > LONGEST_NAME {
+            // Its pointer would be as long: it is told by its beginning, at the object that it stands in.
+            faults.add(&at, unknown_name("field", name, known));
+        } else if !known.contains(&name.as_str()) {
             faults.add(&at.field(name), unknown_name("field", name, known));
         } else if fields[..i].iter().any(|(earlier, _)| earlier == name) {
             faults.add(&at.field(name), format!("the field {name:?} is given twice"));

@@ -35,6 +35,7 @@ pub fn job_problem(problem: JobProblem) -> Problem {
         JobFailure::Impossible => told(S::UNPROCESSABLE_ENTITY, "impossible"),
         JobFailure::NotConverged => told(S::UNPROCESSABLE_ENTITY, "not_converged"),
         JobFailure::TooSlow => told(S::SERVICE_UNAVAILABLE, "too_slow").retry_after(RETRY),
+        JobFailure::ListMissing => told(S::SERVICE_UNAVAILABLE, "list_missing").retry_after(RETRY),
         JobFailure::Interrupted => told(S::SERVICE_UNAVAILABLE, "interrupted").retry_after(RETRY),
         JobFailure::Internal => told(S::INTERNAL_SERVER_ERROR, "internal"),
     }

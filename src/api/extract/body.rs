@@ -1,16 +1,18 @@
 //! A JSON body.
 
-use axum::body::{Bytes, to_bytes};
+use axum::body::Bytes;
 use axum::extract::{FromRequest, Request};
 use axum::http::{HeaderMap, header};
+use futures_util::StreamExt;
 use serde_json::value::RawValue;
-use tokio::task::spawn_blocking;
 use tokio::time::timeout;
 use tracing::{Instrument, Span, info_span};
 
+use crate::api::admission::Held;
 use crate::api::decode::Faults;
 use crate::api::observe::TRACES;
 use crate::api::{ApiError, AppState};
+use crate::service::{Unfinished, converted};
 
 /// Bodies above this many bytes are read off the async runtime: below, handing over costs more than reading.
 const OFFLOAD_BYTES: usize = 64 * 1024;
@@ -34,8 +36,7 @@ impl JsonBody {
         if self.0.len() <= OFFLOAD_BYTES {
             return span.in_scope(|| read_json(&self.0, read));
         }
-        let reading = spawn_blocking(move || span.in_scope(|| read_json(&self.0, read))).await;
-        reading.unwrap_or_else(|error| Err(ApiError::Broken(format!("reading a body stopped short: {error}"))))
+        converted(move || span.in_scope(|| read_json(&self.0, read))).await.unwrap_or_else(unread)
     }
 }
 
@@ -91,8 +92,9 @@ impl RowsBody {
             }
             Self::Csv(bytes) => {
                 let span = parsing("csv", &bytes);
-                let reading = spawn_blocking(move || span.in_scope(|| faultless(|faults| csv(&bytes, faults)))).await;
-                reading.unwrap_or_else(|error| Err(ApiError::Broken(format!("reading a body stopped short: {error}"))))
+                converted(move || span.in_scope(|| faultless(|faults| csv(&bytes, faults))))
+                    .await
+                    .unwrap_or_else(unread)
             }
         }
     }
@@ -126,13 +128,32 @@ async fn complete(request: Request, state: &AppState) -> Result<Bytes, ApiError>
     if announced_length(request.headers()).is_some_and(|length| length > limit as u64) {
         return Err(ApiError::TooLarge { limit });
     }
-    let receiving = to_bytes(request.into_body(), limit).instrument(info_span!(target: TRACES, "receive"));
-    match timeout(time, receiving).await {
-        Ok(Ok(bytes)) => Ok(bytes),
-        Ok(Err(error)) if is_length_limit(&error) => Err(ApiError::TooLarge { limit }),
-        Ok(Err(_)) => Err(ApiError::BodyBroken),
-        Err(_) => Err(ApiError::BodyTooSlow { limit: time }),
+    timeout(time, received(request, limit).instrument(info_span!(target: TRACES, "receive")))
+        .await
+        .unwrap_or(Err(ApiError::BodyTooSlow { limit: time }))
+}
+
+/// The bytes as they come. They count against `http.bodies_bytes` as far as they have come, whatever length was announced, and until
+/// the request is answered: what is read from them is as large.
+async fn received(request: Request, limit: usize) -> Result<Bytes, ApiError> {
+    let held = request.extensions().get::<Held>().cloned();
+    let mut pieces = request.into_body().into_data_stream();
+    let mut bytes = Vec::new();
+    while let Some(piece) = pieces.next().await {
+        let piece = piece.map_err(|_| ApiError::BodyBroken)?;
+        if bytes.len() + piece.len() > limit {
+            return Err(ApiError::TooLarge { limit });
+        }
+        bytes.extend_from_slice(&piece);
+        if let Some(held) = &held {
+            held.grow_to(bytes.capacity())?;
+        }
     }
+    Ok(bytes.into())
+}
+
+fn unread<T>(why: Unfinished) -> Result<T, ApiError> {
+    Err(ApiError::Broken(format!("reading a body stopped short: {why}")))
 }
 
 /// Reads JSON text with `read`; the outcome is what it gives, unless it noted a fault.
@@ -201,16 +222,4 @@ pub(super) fn encodings(headers: &HeaderMap) -> impl Iterator<Item = &[u8]> {
 /// The length that the body is announced with.
 pub(super) fn announced_length(headers: &HeaderMap) -> Option<u64> {
     headers.get(header::CONTENT_LENGTH)?.to_str().ok()?.parse().ok()
-}
-
-fn is_length_limit(error: &axum::Error) -> bool {
-    let mut cause: Option<&(dyn std::error::Error + 'static)> = Some(error);
-    while let Some(inner) = cause {
-        // The limiting body's own error; its type is in a crate we do not depend on.
-        if inner.to_string() == "length limit exceeded" {
-            return true;
-        }
-        cause = inner.source();
-    }
-    false
 }

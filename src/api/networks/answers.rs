@@ -24,7 +24,7 @@ pub struct NetworkAnswer {
     /// Words for people.
     description: Option<String>,
     /// `[degree, share]` pairs: the degrees newcomers arrive with; null when they are read from the data.
-    #[schema(value_type = Option<Vec<Vec<f64>>>, examples(json!([[0, 0.9], [2, 0.1]])))]
+    #[schema(value_type = Option<Vec<Vec<f64>>>)]
     entry_degrees: Option<Box<RawValue>>,
     /// What is asked of its forecasts; null when none are made.
     #[schema(value_type = Option<ForecastPlanBody>)]

@@ -14,7 +14,7 @@ use crate::api::decode::Faults;
 use crate::api::extract::{ComparisonForm, ComparisonFormQuery, ResultFormat, network_name, parameters};
 use crate::api::pages::escaped;
 use crate::api::refusals::{FormRefusals, Refusals};
-use crate::api::representation::Content;
+use crate::api::representation::{self, Content};
 use crate::api::requests::ComparisonQuery;
 use crate::api::{ApiError, AppState, Problem};
 use crate::report::{self, ForecastChart, ForecastPart};
@@ -119,18 +119,28 @@ async fn get_comparison(
     let inputs = query.inputs(evidence, plan.as_ref(), (limits, scenarios), &state.limits, &mut faults)?;
     let inputs = inputs.ok_or(ApiError::Invalid(faults))?;
     let answer = state.service.answer(inputs).await?;
-    let content = match &form {
-        ComparisonForm::Json => json_body(&ComparisonAnswer::new(name.as_str(), as_of, answer))?.into(),
+    let format = form.format();
+    let draw = move || draw(answer, &form, (name.as_str(), as_of), &address);
+    respond(format, representation::drawn(format == ResultFormat::Json, draw).await?)
+}
+
+fn draw(
+    answer: ForecastAnswer,
+    form: &ComparisonForm,
+    (network, as_of): (&str, String),
+    address: &str,
+) -> Result<Content, ApiError> {
+    Ok(match form {
+        ComparisonForm::Json => json_body(&ComparisonAnswer::new(network, as_of, answer))?.into(),
         ComparisonForm::Csv => Content::csv(report::part_csv(&answer, ForecastPart::Scenarios))?,
         ComparisonForm::Svg(threshold, theme) => {
             Content::markup(report::forecast_chart(&answer, ForecastChart::Scenarios, *threshold, *theme)?.svg)
         }
         ComparisonForm::Html(form) => {
             let again = format!("{}{address}", form.service);
-            Content::markup(report::comparison_page(&answer, (name.as_str(), &as_of), &again, form.theme)?)
+            Content::markup(report::comparison_page(&answer, (network, &as_of), &again, form.theme)?)
         }
-    };
-    respond(form.format(), content)
+    })
 }
 
 /// A comparison has no validator: to have one it would have to be computed.

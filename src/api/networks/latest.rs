@@ -59,7 +59,7 @@ async fn get_latest_forecast(
     form: ForecastForm,
     headers: HeaderMap,
 ) -> Result<Response, ApiError> {
-    state.polled.copy(&network_name(&name)?).await?.answer(form, &headers)
+    state.polled.copy(&network_name(&name)?).await?.answer(form, &headers).await
 }
 
 /// The network whose latest forecast a path leads to, as it stands there; none when it leads elsewhere.

@@ -68,7 +68,7 @@ async fn create_network_forecast(
         .read(move |raw, faults| read_network_forecast(raw, evidence, (plan.as_ref(), kept), &limits, faults))
         .await?;
     let run = state.service.create(inputs, Some(origin), claim).await?;
-    runs::created(forecasts::PATH, run, form)
+    runs::created(forecasts::PATH, run, form).await
 }
 
 /// Fit a tracked network
@@ -117,5 +117,5 @@ async fn create_network_fit(
     let NetworkEvidence { evidence, origin, place: _place, .. } = state.service.evidence(&name).await?;
     let inputs = body.read(move |raw, faults| read_network_fit(raw, evidence, faults)).await?;
     let run = state.service.create(inputs, Some(origin), claim).await?;
-    runs::created(fits::PATH, run, form)
+    runs::created(fits::PATH, run, form).await
 }

@@ -13,7 +13,7 @@ use crate::api::decode::instant_of;
 use crate::api::extract::{NoQuery, RowsBody, TableFormat, date, network_name};
 use crate::api::pages::{self, Paging};
 use crate::api::refusals::{BodyRefusals, ConditionRefusals, FormRefusals, Refusals};
-use crate::api::representation::{self, Conditions, Validator};
+use crate::api::representation::{self, Conditions, LIGHT_BYTES, Validator};
 use crate::api::requests::{DegreeCountsBody, read_snapshot, read_snapshot_csv};
 use crate::api::{ApiError, AppState, Problem, examples};
 use crate::report;
@@ -101,10 +101,12 @@ async fn get_snapshot(
 ) -> Result<Response, ApiError> {
     let stored = state.service.snapshot(&network_name(&name)?, date("as_of", &as_of)?).await?;
     let (tag, modified) = (stored.summary.tag.clone(), Some(stored.summary.updated_at));
-    representation::found(Validator { tag: &tag, modified }, format.into(), &headers, || match format {
+    let (validator, light) = (Validator { tag: &tag, modified }, stored.degree_counts.len() <= LIGHT_BYTES);
+    let content = move || match format {
         TableFormat::Json => json_body(&SnapshotAnswer::try_from(stored)?),
         TableFormat::Csv => csv(&stored),
-    })
+    };
+    representation::found_drawn(validator, format.into(), &headers, light, content).await
 }
 
 /// List snapshots

@@ -14,7 +14,7 @@ use crate::api::decode::instant_of;
 use crate::api::extract::{NoQuery, RowsBody, TableFormat, date, network_name};
 use crate::api::pages::{self, Paging};
 use crate::api::refusals::{BodyRefusals, ConditionRefusals, FormRefusals, Refusals};
-use crate::api::representation::{self, Conditions, Validator};
+use crate::api::representation::{self, Conditions, LIGHT_BYTES, Validator};
 use crate::api::requests::{TransitionCountsBody, read_transitions, read_transitions_csv};
 use crate::api::{ApiError, AppState, Problem, examples};
 use crate::report;
@@ -114,10 +114,12 @@ async fn get_transitions(
     let (name, dates) = table(path)?;
     let stored = state.service.transitions(&name, dates).await?;
     let (tag, modified) = (stored.summary.tag.clone(), Some(stored.summary.updated_at));
-    representation::found(Validator { tag: &tag, modified }, format.into(), &headers, || match format {
+    let (validator, light) = (Validator { tag: &tag, modified }, stored.counts.len() <= LIGHT_BYTES);
+    let content = move || match format {
         TableFormat::Json => json_body(&TransitionTableAnswer::try_from(stored)?),
         TableFormat::Csv => csv(&stored),
-    })
+    };
+    representation::found_drawn(validator, format.into(), &headers, light, content).await
 }
 
 /// List transitions

@@ -1,5 +1,8 @@
 // Calls of the service that serves this page, and of nothing else.
 
+import { el } from "./dom.mjs";
+import { accessKey, askForKey, keyHeaders } from "./key.mjs";
+
 /** Times that a call is made again by itself when the service says it is busy. */
 const RETRIES = 3;
 /** Longest wait before a call is made again by itself, seconds. */
@@ -18,9 +21,23 @@ export class Problem extends Error {
   }
 }
 
-/** One call; answers `{data, headers, status}`, `data` an object for JSON and text for all else. */
-export async function call(path, { method = "GET", body, headers = {}, signal } = {}) {
-  const sent = body === undefined ? headers : { "Content-Type": "application/json", ...headers };
+/** One call, with the access key where there is one; asks for a key where the service does. Answers `{data, text, headers, status}`,
+ * `data` an object for JSON and text for all else. */
+export async function call(path, options = {}) {
+  for (;;) {
+    const used = accessKey();
+    try {
+      return await callOnce(path, options);
+    } catch (problem) {
+      if (problem.status !== 401) throw problem;
+      // Another call may have been given one meanwhile.
+      if (accessKey() === used && !(await askForKey(problem.detail))) throw problem;
+    }
+  }
+}
+
+async function callOnce(path, { method = "GET", body, headers = {}, signal } = {}) {
+  const sent = { ...(body === undefined ? {} : { "Content-Type": "application/json" }), ...headers, ...keyHeaders() };
   let response;
   let text;
   try {
@@ -36,7 +53,7 @@ export async function call(path, { method = "GET", body, headers = {}, signal } 
   const type = response.headers.get("Content-Type") ?? "";
   const data = /json/.test(type) ? parsed(text) : text;
   if (!response.ok) throw problemOf(response, data);
-  return { data, headers: response.headers, status: response.status };
+  return { data, text, headers: response.headers, status: response.status };
 }
 
 /** The same, made again a few times while the service is busy; `onWait(seconds)` is told before each wait. */
@@ -46,12 +63,23 @@ export async function patiently(path, options, onWait) {
       return await call(path, options);
     } catch (problem) {
       const wait = problem.retryAfter;
-      const again = problem.status === 503 && wait !== null && wait <= LONGEST_WAIT && tried < RETRIES;
+      const again = (problem.status === 503 || problem.status === 429) && wait !== null && wait <= LONGEST_WAIT && tried < RETRIES;
       if (!again) throw problem;
       onWait(wait);
       await pause(1000 * wait, options.signal);
     }
   }
+}
+
+/** Follows a link to an answer of the service. A browser sends no key with a link, so where there is one the answer is fetched, and saved. */
+export async function followWithKey(event) {
+  const link = event.target.closest?.('a[href^="/v1/"]');
+  if (!link || !accessKey()) return;
+  event.preventDefault();
+  const { text, headers } = await call(link.getAttribute("href"));
+  const address = URL.createObjectURL(new Blob([text], { type: headers.get("Content-Type") ?? "" }));
+  el("a", { href: address, download: link.getAttribute("download") ?? "tailcast-report.html" }).click();
+  setTimeout(() => URL.revokeObjectURL(address), 60_000);
 }
 
 /** A key that makes a call safe to repeat. */

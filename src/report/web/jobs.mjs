@@ -2,6 +2,7 @@
 
 import { announce, el, fill } from "./dom.mjs";
 import { call } from "./http.mjs";
+import { accessKey } from "./key.mjs";
 import { moment, percent } from "./words.mjs";
 
 const KINDS = { link_list: "Counting a link list", refresh: "Making the latest forecast", backtest: "Replaying past forecasts" };
@@ -71,13 +72,15 @@ async function cancel(item, job) {
 }
 
 // Server-Sent Events, each a job as JSON. The browser connects again by itself until the job has ended; where the service has no
-// place for another stream the job is asked for now and then.
+// place for another stream, or asks for a key, which a browser sends with no stream, the job is asked for now and then.
 function stream(box, job, onEnd) {
   const path = `/v1/jobs/${encodeURIComponent(job.id)}`;
-  const events = new EventSource(path);
+  const events = accessKey() ? null : new EventSource(path);
   let timer;
+  let ended = false;
   const close = () => {
-    events.close();
+    events?.close();
+    ended = true;
     clearTimeout(timer);
   };
   const told = (now) => {
@@ -91,11 +94,16 @@ function stream(box, job, onEnd) {
   const ask = async () => {
     timer = setTimeout(ask, AGAIN);
     try {
-      told((await call(path)).data);
+      const { data } = await call(path);
+      if (!ended) told(data);
     } catch {
       // It is asked again.
     }
   };
+  if (events === null) {
+    timer = setTimeout(ask, AGAIN);
+    return { close };
+  }
   events.addEventListener("message", (event) => told(JSON.parse(event.data)));
   events.addEventListener("error", () => {
     if (events.readyState === EventSource.CLOSED && timer === undefined) timer = setTimeout(ask, AGAIN);

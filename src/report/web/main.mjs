@@ -1,7 +1,9 @@
 // Which view is shown; the part of the address after # says so.
 
 import { startAsk } from "./ask.mjs";
-import { byId } from "./dom.mjs";
+import { announce, byId } from "./dom.mjs";
+import { followWithKey } from "./http.mjs";
+import { showKey } from "./key.mjs";
 import { showNetwork } from "./network.mjs";
 import { showNetworks } from "./networks.mjs";
 
@@ -40,6 +42,11 @@ document.querySelector(".skip").addEventListener("click", (event) => {
   byId("main").focus();
 });
 
+document.addEventListener("click", (event) => {
+  followWithKey(event).catch((problem) => announce(`It could not be fetched: ${problem.detail}`));
+});
+
+showKey();
 startAsk();
 addEventListener("hashchange", () => route());
 route({ first: true });

@@ -8,12 +8,15 @@ const TOLD = 10;
 const TITLES = {
   0: "The service cannot be reached",
   400: "Something in the request is wrong",
+  401: "The service asks for an access key",
+  403: "The access key does not allow this",
   404: "There is no such thing here",
   408: "The request came too slowly",
   409: "This contradicts what is stored",
   412: "Somebody changed it meanwhile",
   413: "That is more than is taken at once",
   422: "No forecast follows from this",
+  429: "The access key has asked too often",
   500: "The service has a fault",
   503: "The service is busy",
 };

@@ -5,7 +5,6 @@ use std::sync::Arc;
 use std::time::Duration;
 
 use jiff::Timestamp;
-use tokio::task::spawn_blocking;
 use uuid::Uuid;
 
 use super::board::{Stop, Turn};
@@ -15,10 +14,11 @@ use crate::evaluate::{OriginError, RecordPlan, record};
 use crate::fit::{FitError, FitRequest};
 use crate::forecast::ForecastError;
 use crate::model::Evidence;
+use crate::service::background::in_background;
 use crate::service::backtests::{document, record_from_json, record_to_json, too_few};
 use crate::service::evidence::{assemble, off_runtime};
 use crate::service::{BacktestRequest, DEFAULT_SEED, NetworkName, Service, ServiceError, in_own_task, sha256_hex};
-use crate::store::{BacktestWrite, JobKind, NewBacktest, StoreError, StoredJob};
+use crate::store::{BacktestWrite, JobKind, NewBacktest, StoreError, StoredJob, next_id};
 
 /// How often a backtest begins anew because the evidence changed; after that it ends on the evidence it has, and is outdated.
 const MOST_ANEW: usize = 3;
@@ -61,7 +61,7 @@ impl Service {
     pub async fn take_backtest(&self, name: NetworkName, request: &BacktestRequest) -> Result<Uuid, ServiceError> {
         let (service, task) = (self.clone(), request.to_json()?);
         in_own_task(async move {
-            let id = Uuid::now_v7();
+            let id = next_id();
             let job = (JobKind::Backtest, name.as_str());
             service.store.insert_job(id, job, &task, service.jobs.most_live()).await.map_err(refused)?;
             service.launch(id, JobKind::Backtest);
@@ -128,7 +128,7 @@ impl Service {
                 continue;
             }
             let (shared, progress) = (shared.clone(), turn.progress());
-            let made = spawn_blocking(move || {
+            let made = in_background(move || {
                 let (evidence, plan) = &*shared;
                 record(evidence, origin, plan, &|| progress.stop().is_some())
             });
@@ -141,11 +141,12 @@ impl Service {
         let records = self.store.list_backtest_records(job.id, &digest).await?;
         let (name, id, created_at) = (job.network.clone(), job.id, Timestamp::now());
         let origins = records.len() as u64;
-        let document = off_runtime(move || {
+        // It may take minutes, so it takes no place from short conversions.
+        let document = in_background(move || {
             let records = records.iter().map(|text| record_from_json(text)).collect::<Result<Vec<_>, _>>()?;
             document(id, &name, created_at, &request, &shared.0, &records)
         });
-        let document = document.await??;
+        let document = document.await.map_err(|error| stopped_short(&error))??;
         progress.note(RECORDED)?;
         let outcome = JobOutcome::Backtest(BacktestResult { backtest: id, origins }).to_json()?;
         let made = NewBacktest {

@@ -137,6 +137,11 @@ impl Turn {
         }
     }
 
+    /// How far the job has come, 0 to 1.
+    pub fn so_far(&self) -> f64 {
+        *self.live.progress.borrow()
+    }
+
     /// Whether the process stops.
     pub fn is_stopping(&self) -> bool {
         self.board.stopping.load(Ordering::Relaxed)

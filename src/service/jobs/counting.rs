@@ -6,8 +6,9 @@ use super::board::Turn;
 use super::link_list::{LinkListTask, Stopped, Told, count};
 use super::outcome::{JobOutcome, JobProblem};
 use super::{MOST_STARTS, persistently, refused};
+use crate::service::background::in_background;
 use crate::service::{NetworkName, Service, ServiceError, in_own_task};
-use crate::store::{JobKind, StoredJob, Upload, WriteError};
+use crate::store::{JobKind, StoredJob, Upload, WriteError, next_id};
 
 impl Service {
     /// Begins to receive a network's link list.
@@ -34,12 +35,12 @@ impl Service {
         in_own_task(async move {
             let kind = service.network(&name).await?.settings.degree_kind;
             let task = task.to_json(kind, list.bytes())?;
-            let id = Uuid::now_v7();
+            let id = next_id();
             list.keep(id).await?;
             let job = (JobKind::LinkList, name.as_str());
             let taken = service.store.insert_job(id, job, &task, service.jobs.most_live()).await;
             if let Err(error) = taken {
-                service.drop_list(id).await;
+                service.store.drop_spooled(id).await;
                 return Err(refused(error));
             }
             service.launch(id, JobKind::LinkList);
@@ -56,7 +57,7 @@ impl Service {
             Err(Stopped::CalledOff) => {}
             Err(Stopped::Failed(problem)) => self.fail(job, problem).await?,
         }
-        self.drop_list(job.id).await;
+        self.store.drop_spooled(job.id).await;
         Ok(())
     }
 
@@ -65,9 +66,10 @@ impl Service {
         if job.starts > MOST_STARTS {
             return Err(Stopped::Failed(JobProblem::interrupted(job.starts - 1, "send the list again")));
         }
-        let (path, task, progress) = (self.store.spooled(job.id), job.task.clone(), turn.progress());
+        let list = self.store.spooled(job.id).await.map_err(|error| Stopped::broken(error.to_string()))?;
+        let (task, progress) = (job.task.clone(), turn.progress());
         let most_nodes = self.jobs.config().link_list_nodes;
-        let counting = tokio::task::spawn_blocking(move || count(&path, &task, most_nodes, &progress));
+        let counting = in_background(move || count(list.path(), &task, most_nodes, &progress));
         match counting.await {
             Ok(told) => told,
             Err(error) => Err(Stopped::broken(format!("counting stopped short: {error}"))),
@@ -91,15 +93,6 @@ impl Service {
         match written.await? {
             Some(problem) => self.fail(job, problem).await,
             None => Ok(()),
-        }
-    }
-
-    pub(super) async fn drop_list(&self, id: Uuid) {
-        let path = self.store.spooled(id);
-        if let Err(error) = tokio::fs::remove_file(&path).await
-            && error.kind() != std::io::ErrorKind::NotFound
-        {
-            tracing::warn!(path = %path.display(), %error, "a link list that is needed no more could not be removed");
         }
     }
 }

@@ -2,6 +2,7 @@
 
 use std::cell::Cell;
 use std::fs::File;
+use std::io::ErrorKind;
 use std::ops::ControlFlow;
 use std::path::Path;
 
@@ -89,7 +90,10 @@ pub fn count(path: &Path, task: &str, most_nodes: u64, progress: &Progress) -> R
         every: every.map_err(|error: jiff::Error| broken(&error))?,
         faults: if task.skip_faults { FaultPolicy::Skip } else { FaultPolicy::Refuse },
     };
-    let file = File::open(path).map_err(|error| broken(&format!("{}: {error}", path.display())))?;
+    let file = File::open(path).map_err(|error| match error.kind() {
+        ErrorKind::NotFound => Stopped::Failed(JobProblem::list_missing()),
+        _ => broken(&format!("{}: {error}", path.display())),
+    })?;
     let stop = Cell::new(None);
     let counted = count_links(file, &plan, &mut |read| {
         if read.nodes > most_nodes {
@@ -141,7 +145,9 @@ fn failure(error: IngestError) -> Stopped {
         IngestError::Census { error: CensusError::Unnumbered(_) | CensusError::Inconsistent(_), .. } => {
             return Stopped::broken(error.to_string());
         }
-        IngestError::Gzip { .. } => JobProblem::invalid(format!("{error}."), Vec::new()),
+        IngestError::Gzip { .. } | IngestError::Expanding { .. } => {
+            JobProblem::invalid(format!("{error}."), Vec::new())
+        }
         IngestError::Header { line, reason } => JobProblem::invalid(WRONG, vec![JobFault::in_line(line, reason)]),
         IngestError::Faulty { line, reason, .. } => {
             let detail = "The link list has a faulty line; errors says which. Mend it, or send the list with faults=skip to \

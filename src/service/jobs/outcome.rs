@@ -124,6 +124,8 @@ pub enum JobFailure {
     NotConverged,
     /// It took longer than configured.
     TooSlow,
+    /// The list lies here no more.
+    ListMissing,
     /// The process stopped each time the job was at work.
     Interrupted,
     /// A fault of ours.
@@ -191,6 +193,13 @@ impl JobProblem {
              the service has, then {again}."
         );
         Self { code: JobFailure::Interrupted, detail, errors: Vec::new() }
+    }
+
+    /// The list is not where it was put, as after a restore of an older database.
+    pub fn list_missing() -> Self {
+        let detail = "The list lies here no more: the database was restored from a backup, which holds no lists, or somebody removed \
+                      it. Send it again.";
+        Self { code: JobFailure::ListMissing, detail: detail.to_owned(), errors: Vec::new() }
     }
 
     /// What is stored by now, or may be stored, does not take what was derived.

@@ -3,7 +3,6 @@
 use std::time::Instant;
 
 use jiff::Timestamp;
-use tokio::task::spawn_blocking;
 use tracing::info_span;
 use uuid::Uuid;
 
@@ -14,6 +13,7 @@ use crate::evaluate::OriginRequest;
 use crate::fit::FitRequest;
 use crate::model::{Evidence, Questions};
 use crate::service::accounts::{self, Accounts};
+use crate::service::background::in_background;
 use crate::service::evidence::{assemble, off_runtime};
 use crate::service::inputs::{DEFAULT_SEED, ForecastInputs};
 use crate::service::questions::limits_from;
@@ -143,7 +143,7 @@ impl Service {
         let time = self.jobs.config().refresh_time();
         let issued_to = inputs.request.plan.dates().last().copied().unwrap_or(origin.stored.as_of);
         let span = info_span!(target: TRACES, "compute");
-        let work = spawn_blocking(move || {
+        let work = in_background(move || {
             let begun = Instant::now();
             let cancelled = || progress.stop().is_some() || begun.elapsed() >= time;
             let run = span.in_scope(|| compute(&inputs, Some(origin), &cancelled));

@@ -23,6 +23,8 @@ const MOST_AT_ONCE: usize = 8;
 const LONGEST_SLEEP: Duration = Duration::from_secs(60);
 /// Pause when the database fails.
 const STORE_PAUSE: Duration = Duration::from_secs(2);
+/// How much longer than an attempt the claim on an event holds: to note how it went.
+const CLAIM_MARGIN: Duration = Duration::from_secs(60);
 /// Pauses are between 1 − this and 1 + this of what doubling says, so that many notices do not come back at one moment
 /// (Brooker, "Exponential Backoff And Jitter", 2015), and each is still longer than the one before.
 const JITTER: f64 = 0.25;
@@ -64,12 +66,14 @@ impl Service {
         // Those that are called stand among the first due.
         let wanted = u32::try_from(called.len().saturating_add(MOST_AT_ONCE)).unwrap_or(u32::MAX);
         let due = self.store.due_notices(wanted).await?;
+        let longest = self.notices.config.longest_pause().mul_f64(1.0 + JITTER) + LONGEST_SLEEP;
         for next in due {
             if called.values().any(|&notice| notice == next.notice) {
                 continue;
             }
             let wait = next.due_at.duration_since(Timestamp::now());
-            if wait.is_positive() {
+            // Further ahead than any pause: the clock went back, and the event would wait for it.
+            if wait.is_positive() && wait.unsigned_abs() <= longest {
                 return Ok(wait.unsigned_abs().min(LONGEST_SLEEP));
             }
             if called.len() >= MOST_AT_ONCE {
@@ -94,9 +98,14 @@ impl Service {
 
     async fn send_oldest(&self, notice: Uuid) -> Result<(), ServiceError> {
         // Deleted meanwhile, or sent.
-        let Some(event) = self.store.pending_event(notice).await? else {
+        let Some(mut event) = self.store.pending_event(notice).await? else {
             return Ok(self.store.nothing_due(notice).await?);
         };
+        let until = later(Timestamp::now(), self.notices.config.timeout().saturating_add(CLAIM_MARGIN));
+        if self.store.is_shared() && !self.store.claim_event(notice, &mut event, until).await? {
+            // Another process sends it.
+            return Ok(());
+        }
         let sent = self.send(&event).await;
         let now = Timestamp::now();
         let Err(why) = sent else {

@@ -1,0 +1,213 @@
+//! All open connections: how many, which are at work, and which has rested longest.
+
+use std::collections::HashMap;
+use std::sync::atomic::{AtomicBool, AtomicU64, AtomicUsize, Ordering};
+use std::sync::{Arc, Mutex, MutexGuard, PoisonError};
+use std::time::Instant;
+
+use metrics::gauge;
+use tokio::sync::Notify;
+
+/// The open connections.
+#[derive(Debug, Clone)]
+pub struct Crowd {
+    inner: Arc<Inner>,
+}
+
+#[derive(Debug)]
+struct Inner {
+    open: Mutex<HashMap<u64, Arc<Activity>>>,
+    spare: AtomicUsize,
+    next: AtomicU64,
+    begun: Instant,
+}
+
+/// What a connection is doing.
+#[derive(Debug)]
+pub struct Activity {
+    begun: Instant,
+    requests: AtomicUsize,
+    sending: AtomicBool,
+    /// When it was opened or something was last sent by it, milliseconds.
+    active: AtomicU64,
+    /// Whether it was asked to go: once is enough.
+    asked: AtomicBool,
+    go: Notify,
+}
+
+/// A connection's place among all, given back when dropped.
+#[derive(Debug)]
+pub struct Member {
+    crowd: Arc<Inner>,
+    /// None: a spare one.
+    id: Option<u64>,
+    activity: Arc<Activity>,
+}
+
+/// A request in work, until dropped.
+#[derive(Debug)]
+pub struct InWork(Arc<Activity>);
+
+impl Default for Crowd {
+    fn default() -> Self {
+        let (spare, next) = (AtomicUsize::new(0), AtomicU64::new(0));
+        Self { inner: Arc::new(Inner { open: Mutex::default(), spare, next, begun: Instant::now() }) }
+    }
+}
+
+impl Crowd {
+    /// Connections that are not spare ones.
+    pub fn len(&self) -> usize {
+        self.inner.open().len()
+    }
+
+    /// Asks the connection to go that has rested longest; false when all are at work. One that sends heads or bodies slowly, but has
+    /// no request in work, rests.
+    pub fn let_one_go(&self) -> bool {
+        let mut open = self.inner.open();
+        let resting = open.iter().filter(|(_, activity)| activity.rests() && !activity.asked.load(Ordering::Relaxed));
+        let Some((&id, _)) = resting.min_by_key(|(_, activity)| activity.active.load(Ordering::Relaxed)) else {
+            return false;
+        };
+        // Its place is another's at once: it is closed when its task runs next.
+        if let Some(activity) = open.remove(&id) {
+            activity.asked.store(true, Ordering::Relaxed);
+            activity.go.notify_one();
+        }
+        true
+    }
+
+    /// A place for a connection.
+    pub fn join(&self) -> Member {
+        let id = self.inner.next.fetch_add(1, Ordering::Relaxed);
+        let activity = Arc::new(Activity::new(self.inner.begun));
+        self.inner.open().insert(id, activity.clone());
+        Member::new(self.inner.clone(), Some(id), activity)
+    }
+
+    /// A place beyond all places, of which there are `most`.
+    pub fn join_spare(&self, most: usize) -> Option<Member> {
+        if self.inner.spare.fetch_add(1, Ordering::Relaxed) >= most {
+            self.inner.spare.fetch_sub(1, Ordering::Relaxed);
+            return None;
+        }
+        Some(Member::new(self.inner.clone(), None, Arc::new(Activity::new(self.inner.begun))))
+    }
+}
+
+impl Inner {
+    fn open(&self) -> MutexGuard<'_, HashMap<u64, Arc<Activity>>> {
+        // The map is whole between any two statements, whoever panicked in between.
+        self.open.lock().unwrap_or_else(PoisonError::into_inner)
+    }
+}
+
+impl Member {
+    fn new(crowd: Arc<Inner>, id: Option<u64>, activity: Arc<Activity>) -> Self {
+        gauge!("tailcast_http_connections").increment(1.0);
+        Self { crowd, id, activity }
+    }
+
+    /// What the connection is doing.
+    pub fn activity(&self) -> &Arc<Activity> {
+        &self.activity
+    }
+}
+
+impl Drop for Member {
+    fn drop(&mut self) {
+        match self.id {
+            Some(id) => drop(self.crowd.open().remove(&id)),
+            None => drop(self.crowd.spare.fetch_sub(1, Ordering::Relaxed)),
+        }
+        gauge!("tailcast_http_connections").decrement(1.0);
+    }
+}
+
+impl Activity {
+    fn new(begun: Instant) -> Self {
+        let activity = Self {
+            begun,
+            requests: AtomicUsize::new(0),
+            sending: AtomicBool::new(false),
+            active: AtomicU64::new(0),
+            asked: AtomicBool::new(false),
+            go: Notify::new(),
+        };
+        activity.note_sent();
+        activity
+    }
+
+    /// Begins a request.
+    pub fn begin(self: &Arc<Self>) -> InWork {
+        self.requests.fetch_add(1, Ordering::Relaxed);
+        InWork(self.clone())
+    }
+
+    /// Notes that something was sent.
+    pub fn note_sent(&self) {
+        self.active.store(self.begun.elapsed().as_millis() as u64, Ordering::Relaxed); // 2^64 ms are 584 million years
+    }
+
+    /// Notes whether more is to be sent than the client has taken yet.
+    pub fn note_sending(&self, sending: bool) {
+        self.sending.store(sending, Ordering::Relaxed);
+    }
+
+    /// Whether it has no request in work and nothing to send.
+    pub fn rests(&self) -> bool {
+        self.requests.load(Ordering::Relaxed) == 0 && !self.sending.load(Ordering::Relaxed)
+    }
+
+    /// Returns when the connection is asked to go.
+    pub async fn asked_to_go(&self) {
+        self.go.notified().await;
+    }
+}
+
+impl Drop for InWork {
+    fn drop(&mut self) {
+        self.0.requests.fetch_sub(1, Ordering::Relaxed);
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use std::thread::sleep;
+    use std::time::Duration;
+
+    use super::*;
+
+    #[test]
+    fn the_one_that_rested_longest_goes_and_none_that_is_at_work() {
+        let crowd = Crowd::default();
+        let members: Vec<Member> = (0..4)
+            .map(|_| {
+                sleep(Duration::from_millis(3));
+                crowd.join()
+            })
+            .collect();
+        let at_work = members[0].activity().begin();
+        members[1].activity().note_sending(true);
+        sleep(Duration::from_millis(3));
+        members[2].activity().note_sent();
+        for gone in [3, 2] {
+            assert!(crowd.let_one_go());
+            assert!(members[gone].activity().asked.load(Ordering::Relaxed), "{gone}");
+        }
+        assert!(!crowd.let_one_go() && crowd.len() == 2);
+        drop(at_work);
+        assert!(crowd.let_one_go() && !crowd.let_one_go());
+        members[1].activity().note_sending(false);
+        assert!(crowd.let_one_go() && crowd.len() == 0);
+    }
+
+    #[test]
+    fn spare_places_are_counted() {
+        let crowd = Crowd::default();
+        let first = crowd.join_spare(1).unwrap();
+        assert!(crowd.join_spare(1).is_none() && crowd.len() == 0);
+        drop(first);
+        assert!(crowd.join_spare(1).is_some());
+    }
+}

@@ -1,0 +1,93 @@
+//! Work that takes processor time, off the async runtime: on threads of lower priority, so that whatever answers at once goes before it.
+
+use std::sync::LazyLock;
+use std::thread::{Builder, available_parallelism};
+
+use tokio::sync::{Semaphore, oneshot};
+
+/// How far the threads step back, as the system counts niceness (0 to 19). Each step is worth about a quarter of a processor's share
+/// beside a thread that does not step back; with nothing beside them they have it all.
+#[cfg(target_os = "linux")]
+const NICENESS: i32 = 10;
+
+/// Conversions at the same time, in the whole process: more than there are cores only takes more memory.
+static CONVERSIONS: LazyLock<Semaphore> =
+    LazyLock::new(|| Semaphore::new(available_parallelism().map_or(1, usize::from)));
+
+/// Work that came to no end.
+#[derive(Debug, thiserror::Error)]
+pub enum Unfinished {
+    /// The system has no thread to give.
+    #[error("no thread could be started: {0}")]
+    NoThread(std::io::Error),
+    /// It panicked.
+    #[error("it panicked")]
+    Panicked,
+}
+
+/// Runs `work` on a thread of its own. It goes on to its end when the caller goes away.
+///
+/// # Errors
+/// When there is no thread, or `work` panics.
+pub async fn in_background<T: Send + 'static>(work: impl FnOnce() -> T + Send + 'static) -> Result<T, Unfinished> {
+    let (tell, told) = oneshot::channel();
+    // A thread that stepped back may not step forward again, so none is lent by a pool that others share. Starting one takes tens of
+    // microseconds.
+    let thread = Builder::new().name("compute".to_owned()).spawn(move || {
+        step_back();
+        // Nobody listens when the caller went away.
+        let _ = tell.send(work());
+    });
+    thread.map_err(Unfinished::NoThread)?;
+    told.await.map_err(|_| Unfinished::Panicked)
+}
+
+/// The same for what takes milliseconds and is asked for by many at once (bodies read, documents drawn): as many at a time as there
+/// are cores.
+///
+/// # Errors
+/// Those of [`in_background`].
+pub async fn converted<T: Send + 'static>(work: impl FnOnce() -> T + Send + 'static) -> Result<T, Unfinished> {
+    // It is never closed.
+    let place = CONVERSIONS.acquire().await.ok();
+    in_background(move || {
+        // Given back when the work has ended, whether or not its caller waited.
+        let _place = place;
+        work()
+    })
+    .await
+}
+
+#[cfg(target_os = "linux")]
+fn step_back() {
+    // Of this thread alone: Linux keeps a niceness a thread. Where it is refused, the work is done all the same.
+    let _ = rustix::process::setpriority_process(None, NICENESS);
+}
+
+/// Elsewhere niceness is the whole process's.
+#[cfg(not(target_os = "linux"))]
+fn step_back() {}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[tokio::test]
+    async fn a_panic_is_told_and_takes_nothing_along() {
+        let panics = || -> u8 { std::panic::resume_unwind(Box::new("broken")) };
+        assert!(matches!(in_background(panics).await, Err(Unfinished::Panicked)));
+        for _ in 0..100 {
+            assert!(matches!(converted(panics).await, Err(Unfinished::Panicked)));
+        }
+        assert_eq!(converted(|| 7).await.unwrap(), 7);
+    }
+
+    #[cfg(target_os = "linux")]
+    #[tokio::test]
+    async fn the_work_steps_back_and_the_runtime_does_not() {
+        let niceness = || rustix::process::getpriority_process(None).unwrap();
+        let before = niceness();
+        assert_eq!(in_background(niceness).await.unwrap(), before.max(NICENESS));
+        assert_eq!(niceness(), before);
+    }
+}
