@@ -101,17 +101,17 @@ async fn a_reader_who_takes_nothing_or_next_to_nothing_is_let_go() {
         assert!(client.await.unwrap() < asked * document / 2, "the rest was never sent");
     }
     // Somebody who reads slowly but reads is served to the end.
-    let mut stream = narrow(&service);
+    let mut stream = connect(&service);
     send(&mut stream, &get("/openapi.json").repeat(19));
     send(&mut stream, &get("/openapi.json").replace("\r\n\r\n", "\r\nconnection: close\r\n\r\n"));
     let taken = spawn_blocking(move || {
-        let (mut taken, mut part) = (0, vec![0; 1 << 20]);
+        let (mut taken, mut part) = (0, vec![0; 1 << 16]);
         loop {
             match stream.read(&mut part).unwrap() {
                 0 => return taken,
                 read => taken += read,
             }
-            sleep(Duration::from_millis(5));
+            sleep(Duration::from_millis(20));
         }
     });
     assert!(taken.await.unwrap() > 20 * document);
@@ -132,8 +132,7 @@ async fn answers_that_wait_for_their_readers_take_bounded_memory() {
     assert_eq!(refused.header("retry-after"), "1");
     // An answer to a write is not taken back: it waits.
     let begun = Instant::now();
-    let bands: Vec<Value> = (1..300).map(|n| json!({"threshold": n, "max_nodes": 1, "by": "2026-09-01"})).collect();
-    let body = changed(forecast_body(), "/limits", json!(bands));
+    let body = changed(forecast_body(), "/thresholds", json!((1..200).collect::<Vec<_>>()));
     let answer = service.post("/v1/forecasts", &body).await.expect(201);
     assert!(answer.text.len() > 64 * 1024, "{}", answer.text.len());
     assert!(begun.elapsed() > Duration::from_secs(1), "until the first reader was let go");
@@ -149,25 +148,27 @@ async fn bodies_that_wait_for_their_ends_take_bounded_memory() {
         config.http.body_timeout_seconds = 3;
     })
     .await;
+    // One of these fits for certain, and three do not, however the memory of each grows.
     let filler = " ".repeat(900_000);
-    let mut streams =
-        [format!("content-length: {}\r\n", 1_000_000), "transfer-encoding: chunked\r\n".to_owned()].map(|length| {
+    let mut streams = ["content-length: 1000000\r\n", "transfer-encoding: chunked\r\n", "content-length: 999999\r\n"]
+        .map(|length| {
             let mut stream = connect(&service);
-            send(&mut stream, &post(&length));
+            send(&mut stream, &post(length));
             if length.starts_with('t') {
                 send(&mut stream, "f4240\r\n");
             }
             send(&mut stream, &filler);
+            sleep(Duration::from_millis(200));
             stream
         });
-    sleep(Duration::from_millis(500));
-    let text = format!("{}{}", " ".repeat(100_000), fit_body());
-    service.post_text("/v1/fits", text.clone()).await.expect_problem(503, "overloaded");
-    for stream in &mut streams {
+    let statuses = streams.each_mut().map(|stream| {
         let mut part = [0; 1000];
         let read = stream.read(&mut part).unwrap();
-        assert!(String::from_utf8_lossy(&part[..read]).contains(" 408 "));
-    }
+        String::from_utf8_lossy(&part[..read]).split(' ').nth(1).unwrap_or_default().to_owned()
+    });
+    assert_eq!((statuses[0].as_str(), statuses[2].as_str()), ("408", "503"), "{statuses:?}");
+    assert!(["408", "503"].contains(&statuses[1].as_str()), "{statuses:?}");
+    let text = format!("{}{}", " ".repeat(900_000), fit_body());
     service.post_text("/v1/fits", text).await.expect(201);
 }
 
@@ -218,15 +219,15 @@ async fn heads_without_measure_and_what_is_no_http_are_refused() {
         ("GET /livez HTTP/1.1\nhost: it\nconnection: close\n\n".to_owned(), "200 400"),
         ("GET /livez HTTP/1.0\r\n\r\n".to_owned(), "200"),
         ("GET /livez\r\n\r\n".to_owned(), "400"),
-        ("PRI * HTTP/2.0\r\n\r\nSM\r\n\r\n".to_owned(), "400"),
+        ("PRI * HTTP/2.0\r\n\r\nSM\r\n\r\n".to_owned(), "400 closed"),
         ("GET http://it/livez HTTP/1.1\r\nhost: it\r\nconnection: close\r\n\r\n".to_owned(), "200"),
         ("OPTIONS * HTTP/1.1\r\nhost: it\r\nconnection: close\r\n\r\n".to_owned(), "400 404 405"),
         ("CONNECT it:443 HTTP/1.1\r\nhost: it:443\r\nconnection: close\r\n\r\n".to_owned(), "400 404 405"),
         ("\u{16}\u{3}\u{1}\u{2}\u{0}hello over TLS\r\n\r\n".to_owned(), "400"),
     ] {
         let answer = told(&service, request.clone()).await;
-        let status = answer.split(' ').nth(1).unwrap_or_default();
-        assert!(!status.is_empty() && statuses.contains(status), "{:.80}: {answer:.200}", request);
+        let status = answer.split(' ').nth(1).unwrap_or("closed");
+        assert!(statuses.contains(status), "{:.80}: {answer:.200}", request);
     }
     // A chunked body whose length is announced besides goes by its chunks, and what follows it is no second request.
     let body = fit_body().to_string();

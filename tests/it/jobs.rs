@@ -452,7 +452,7 @@ async fn a_job_without_its_list_fails() {
     std::fs::remove_file(folder.path().join(format!("jobs.db-jobs/{id}.links"))).unwrap();
     service.send(Method::DELETE, &at_work).await.expect(204);
     let job = ended(&service, location).await;
-    assert_eq!((&job["state"], &job["problem"]["code"]), (&json!("failed"), &json!("internal")));
+    assert_eq!((&job["state"], &job["problem"]["code"]), (&json!("failed"), &json!("list_missing")));
     send(&service, LINKS, link_list(10), &[]).await.expect(200);
 }
 

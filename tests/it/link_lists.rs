@@ -37,7 +37,7 @@ fn refused(text: &[u8]) -> String {
 }
 
 fn gzip(bytes: &[u8]) -> Vec<u8> {
-    let mut encoder = GzEncoder::new(Vec::new(), Compression::fast());
+    let mut encoder = GzEncoder::new(Vec::new(), Compression::best());
     encoder.write_all(bytes).unwrap();
     encoder.finish().unwrap()
 }

@@ -115,7 +115,7 @@ fn traceparent(flags: &str) -> String {
     format!("00-{TRACE}-{PARENT}-{flags}")
 }
 
-#[tokio::test]
+#[tokio::test(flavor = "multi_thread")]
 async fn spans_nest_below_the_callers_and_name_nothing_that_a_caller_named() {
     let folder = tempfile::tempdir().unwrap();
     let (collector, endpoint) = Collector::start().await;
@@ -193,7 +193,7 @@ async fn spans_nest_below_the_callers_and_name_nothing_that_a_caller_named() {
     }
 }
 
-#[tokio::test]
+#[tokio::test(flavor = "multi_thread")]
 async fn polls_from_memory_make_no_span_and_nothing_is_sent_when_off() {
     let (collector, endpoint) = Collector::start().await;
     let folder = tempfile::tempdir().unwrap();
@@ -231,7 +231,7 @@ async fn polls_from_memory_make_no_span_and_nothing_is_sent_when_off() {
     assert!((1..50.min(looked_up)).contains(&polls), "{polls}");
 }
 
-#[tokio::test]
+#[tokio::test(flavor = "multi_thread")]
 async fn a_share_of_new_traces_is_kept_and_a_callers_decision_followed() {
     let (collector, endpoint) = Collector::start().await;
     let folder = tempfile::tempdir().unwrap();
@@ -251,7 +251,7 @@ async fn a_share_of_new_traces_is_kept_and_a_callers_decision_followed() {
     assert_eq!(attributes(&resource.attributes)["service.name"], "forecasts");
 }
 
-#[tokio::test]
+#[tokio::test(flavor = "multi_thread")]
 async fn a_collector_that_never_answers_costs_no_request_and_bounds_the_stop() {
     let listener = TcpListener::bind("127.0.0.1:0").unwrap();
     let endpoint = format!("http://{}", listener.local_addr().unwrap());
@@ -286,7 +286,7 @@ async fn a_collector_that_never_answers_costs_no_request_and_bounds_the_stop() {
     assert!(*called.lock().unwrap() > 0);
 }
 
-#[tokio::test]
+#[tokio::test(flavor = "multi_thread")]
 async fn a_line_of_the_log_leads_to_the_trace_that_began_with_it() {
     let (collector, endpoint) = Collector::start().await;
     let folder = tempfile::tempdir().unwrap();

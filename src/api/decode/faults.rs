@@ -4,6 +4,8 @@ use std::fmt::Write as _;
 
 /// Most faults one answer lists.
 const MOST_FAULTS: usize = 100;
+/// Most characters of a name that a place shows; longer ones are told by their beginning.
+const MOST_NAME_CHARS: usize = 200;
 
 /// Where a value stands: a path from the root, built without allocation until a fault needs it.
 #[derive(Debug, Clone, Copy)]
@@ -69,8 +71,13 @@ impl<'p> At<'p> {
         match self.step {
             Step::Root => {}
             Step::Field(name) => {
+                let shown =
+                    name.char_indices().nth(MOST_NAME_CHARS).map_or(name, |(end, _)| name.get(..end).unwrap_or(name));
                 text.push('/');
-                text.push_str(&name.replace('~', "~0").replace('/', "~1"));
+                text.push_str(&shown.replace('~', "~0").replace('/', "~1"));
+                if shown.len() < name.len() {
+                    text.push('…');
+                }
             }
             Step::Item(index) => {
                 // Writing to a String cannot fail.
