@@ -107,13 +107,15 @@ impl AppState {
 pub struct Front {
     polled: Polled,
     access: Access,
+    service: Service,
     router: Router,
 }
 
 impl Front {
     /// The whole of the service.
     pub fn new(state: AppState) -> Self {
-        Self { polled: state.polled.clone(), access: state.access.clone(), router: router(state) }
+        let (polled, access, service) = (state.polled.clone(), state.access.clone(), state.service.clone());
+        Self { polled, access, service, router: router(state) }
     }
 
     /// The answer to a request that can be answered without waiting for anything; it takes no place of `http.max_in_flight`.
@@ -131,6 +133,11 @@ impl Front {
         let mut refusal = ApiError::TooManyConnections.into_response();
         Observation::begin(started, method, "unmatched", uri.path(), headers).finish(&mut refusal);
         Some(refusal)
+    }
+
+    /// Whether the process is about to stop: answers ask clients to connect anew.
+    pub fn is_parting(&self) -> bool {
+        self.service.is_stopping()
     }
 
     /// The routes, for what is not answered at once.

@@ -177,7 +177,7 @@ impl Service {
     /// [`ServiceError::Stopping`], [`ServiceError::TablesOutdated`], [`ServiceError::StoreBusy`] or [`ServiceError::StoreUnavailable`]: whatever
     /// the database's fault, the service is not ready and nothing of the service is broken.
     pub async fn check_ready(&self) -> Result<(), ServiceError> {
-        if self.stopping.load(Ordering::Relaxed) {
+        if self.is_stopping() {
             return Err(ServiceError::Stopping);
         }
         let ready = async {
@@ -199,6 +199,11 @@ impl Service {
     /// From here on [`Self::check_ready`] says no, while everything is still served.
     pub fn announce_stop(&self) {
         self.stopping.store(true, Ordering::Relaxed);
+    }
+
+    /// Whether a stop was announced.
+    pub fn is_stopping(&self) -> bool {
+        self.stopping.load(Ordering::Relaxed)
     }
 
     /// About how long it takes until the computations that wait are done.

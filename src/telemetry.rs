@@ -115,6 +115,7 @@ fn install() -> Result<PrometheusHandle, BuildError> {
     let handle = PrometheusBuilder::new().set_buckets(&SECONDS_BUCKETS)?.install_recorder()?;
     describe_counter!("tailcast_http_requests_total", "Requests answered, by method, route and status");
     describe_histogram!("tailcast_http_request_seconds", Unit::Seconds, "Time from request to response");
+    describe_gauge!("tailcast_http_connections", "Open connections");
     describe_histogram!("tailcast_compute_seconds", Unit::Seconds, "Time on a worker");
     describe_histogram!("tailcast_compute_wait_seconds", Unit::Seconds, "Time spent waiting for a worker");
     describe_gauge!("tailcast_compute_busy", "Computations that run or wait");

@@ -4,6 +4,7 @@ use std::convert::Infallible;
 use std::sync::Arc;
 use std::time::Duration;
 
+use axum::http::{HeaderName, HeaderValue};
 use axum::response::sse::{Event, KeepAlive, Sse};
 use axum::response::{IntoResponse, Response};
 use futures_util::Stream;
@@ -11,6 +12,9 @@ use tokio::sync::{OwnedSemaphorePermit, Semaphore};
 
 use super::ApiError;
 use crate::config::HttpConfig;
+
+/// Tells nginx, and proxies that follow it, to pass events on as they come.
+const UNBUFFERED: HeaderName = HeaderName::from_static("x-accel-buffering");
 
 /// The places for streams of events. A stream stays open for as long as its client likes, so it does not count against
 /// `http.max_in_flight`, whose places are given back when an answer begins.
@@ -38,6 +42,7 @@ impl Streams {
     /// The answer that is a stream, with a comment whenever nothing was told for a while: it shows proxies that there is somebody, and
     /// us when there is nobody any more.
     pub fn answer(&self, events: impl Stream<Item = Result<Event, Infallible>> + Send + 'static) -> Response {
-        Sse::new(events).keep_alive(KeepAlive::new().interval(self.keep_alive)).into_response()
+        let stream = Sse::new(events).keep_alive(KeepAlive::new().interval(self.keep_alive));
+        ([(UNBUFFERED, HeaderValue::from_static("no"))], stream).into_response()
     }
 }

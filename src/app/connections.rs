@@ -5,6 +5,9 @@ mod watched;
 
 use std::time::Duration;
 
+use axum::http::HeaderValue;
+use axum::http::header::CONNECTION;
+use axum::response::Response;
 use axum::serve::Listener;
 use hyper::body::Incoming;
 use hyper::server::conn::http1;
@@ -22,7 +25,8 @@ use crate::config::HttpConfig;
 use crowd::{Crowd, Member};
 use watched::Watched;
 
-/// How long a connection without a request in work is kept after the stop: the time to flush its last answer.
+/// How long a connection without a request in work is kept after the stop: the time to flush its last answer, or for the first
+/// request of one that was just opened to come.
 const FLUSH: Duration = Duration::from_millis(500);
 /// Most bytes of a request's head; also what is read of a body at a time.
 const HEAD_BYTES: usize = 64 * 1024;
@@ -69,8 +73,23 @@ pub async fn serve(mut listener: TcpListener, front: Front, terms: Terms, mut st
             Some(_) = open.join_next() => {}
         }
     }
-    drop(listener);
+    for stream in waiting(listener).take(terms.most) {
+        mind(&stream, terms.pause);
+        open.spawn(connection(stream, front.clone(), terms, crowd.join(), stop.clone()));
+    }
     while open.join_next().await.is_some() {}
+}
+
+/// Connections that the system has taken on and nobody has accepted: closed with the listener, they would be reset, with the requests
+/// that their clients have sent.
+fn waiting(listener: TcpListener) -> impl Iterator<Item = TcpStream> {
+    // It does not block: it was the runtime's.
+    let listener = listener.into_std().ok();
+    let next = move || listener.as_ref().and_then(|listener| listener.accept().ok());
+    std::iter::from_fn(next).filter_map(|(stream, _)| {
+        stream.set_nonblocking(true).ok()?;
+        TcpStream::from_std(stream).ok()
+    })
 }
 
 /// Has the system tell when the other end is gone without a word: what was sent is not acknowledged, or nothing comes back while all is
@@ -92,19 +111,28 @@ async fn connection(stream: TcpStream, front: Front, terms: Terms, member: Membe
     let activity = member.activity().clone();
     let counted = activity.clone();
     let service = service_fn(move |request: hyper::Request<Incoming>| {
+        counted.note_heard();
+        // Whoever sends the next request over a connection of its own finds the one who serves it.
+        let parting = front.is_parting();
         let work = match front.at_once(request.method(), request.uri(), request.headers()) {
             Some(answer) => Err(answer),
             None => Ok((TowerToHyperService::new(front.router()).call(request), counted.begin())),
         };
         async move {
-            match work {
+            let answer = match work {
                 Err(answer) => Ok(answer),
                 Ok((answer, in_work)) => {
                     let answer = answer.await;
                     drop(in_work);
                     answer
                 }
-            }
+            };
+            answer.map(|mut answer: Response| {
+                if parting {
+                    answer.headers_mut().insert(CONNECTION, HeaderValue::from_static("close"));
+                }
+                answer
+            })
         }
     });
     let stream = Watched::new(stream, activity.clone(), terms.pause);
@@ -127,6 +155,12 @@ async fn connection(stream: TcpStream, front: Front, terms: Terms, member: Membe
                 serving.as_mut().graceful_shutdown();
             }
             _ = stopped(&mut stop) => break,
+        }
+    }
+    if activity.is_new() {
+        tokio::select! {
+            _ = serving.as_mut() => return,
+            () = tokio::time::sleep(FLUSH) => {}
         }
     }
     serving.as_mut().graceful_shutdown();

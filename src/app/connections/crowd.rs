@@ -28,6 +28,8 @@ pub struct Activity {
     begun: Instant,
     requests: AtomicUsize,
     sending: AtomicBool,
+    /// Whether a request has ever come.
+    heard: AtomicBool,
     /// When it was opened or something was last sent by it, milliseconds.
     active: AtomicU64,
     /// Whether it was asked to go: once is enough.
@@ -130,6 +132,7 @@ impl Activity {
             begun,
             requests: AtomicUsize::new(0),
             sending: AtomicBool::new(false),
+            heard: AtomicBool::new(false),
             active: AtomicU64::new(0),
             asked: AtomicBool::new(false),
             go: Notify::new(),
@@ -142,6 +145,16 @@ impl Activity {
     pub fn begin(self: &Arc<Self>) -> InWork {
         self.requests.fetch_add(1, Ordering::Relaxed);
         InWork(self.clone())
+    }
+
+    /// Notes that a request has come.
+    pub fn note_heard(&self) {
+        self.heard.store(true, Ordering::Relaxed);
+    }
+
+    /// Whether no request has come yet.
+    pub fn is_new(&self) -> bool {
+        !self.heard.load(Ordering::Relaxed)
     }
 
     /// Notes that something was sent.
