@@ -42,6 +42,7 @@ mod polled;
 mod postgres;
 mod process;
 mod questions;
+mod replicas;
 mod retention;
 mod scenarios;
 mod schemas;
