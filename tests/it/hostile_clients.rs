@@ -6,7 +6,7 @@ use std::net::TcpStream;
 use std::thread::sleep;
 use std::time::{Duration, Instant};
 
-use serde_json::{Value, json};
+use serde_json::json;
 use socket2::SockRef;
 use tokio::task::spawn_blocking;
 

@@ -43,6 +43,7 @@ mod polled;
 mod postgres;
 mod process;
 mod questions;
+mod replicas;
 mod retention;
 mod rolling;
 mod scenarios;

@@ -2,7 +2,7 @@
 //! lost, neither by a client that follows /readyz nor by one that only goes on to the next process where nobody listens.
 
 use std::net::SocketAddr;
-use std::path::{Path, PathBuf};
+use std::path::Path;
 use std::process::Command;
 use std::sync::atomic::{AtomicBool, Ordering};
 use std::sync::{Arc, Mutex};
@@ -10,42 +10,13 @@ use std::time::{Duration, Instant};
 
 use reqwest::Client;
 use serde_json::{Value, json};
-use uuid::Uuid;
 
 use crate::harness::{changed, fit_body, forecast_body};
-use crate::postgres;
+use crate::postgres::Server;
 use crate::process::{Served, serve_with};
 
 /// Time between two looks at /readyz: a third of `http.drain_seconds`.
 const LOOK_EVERY: Duration = Duration::from_millis(330);
-
-/// A PostgreSQL of this test's own; none where the harness has one.
-struct Server(Option<PathBuf>);
-
-impl Server {
-    /// Its address; none where PostgreSQL is not installed.
-    fn start() -> Option<(Self, String)> {
-        if let Some(address) = postgres::server() {
-            return Some((Self(None), address));
-        }
-        if !Path::new("/usr/lib/postgresql").is_dir() {
-            return None;
-        }
-        // Not within a folder that only this user may enter: the server has a user of its own.
-        let folder = std::env::temp_dir().join(format!("rolling-{}", Uuid::now_v7()));
-        let started = Command::new("tests/postgres").arg("start").arg(&folder).output().unwrap();
-        assert!(started.status.success(), "{started:?}");
-        Some((Self(Some(folder)), String::from_utf8(started.stdout).unwrap().trim().to_owned()))
-    }
-}
-
-impl Drop for Server {
-    fn drop(&mut self) {
-        if let Some(folder) = &self.0 {
-            let _ = Command::new("tests/postgres").arg("stop").arg(folder).status();
-        }
-    }
-}
 
 /// What clients share.
 struct Scene {
@@ -159,11 +130,8 @@ async fn seen(scene: &Scene, which: usize, ready: bool) {
 
 #[tokio::test(flavor = "multi_thread", worker_threads = 2)]
 async fn no_request_is_lost_while_two_processes_are_started_anew_in_turn() {
-    let Some((_server, address)) = Server::start() else {
-        eprintln!("NOT TESTED: a rolling restart takes PostgreSQL, which is not installed here (see tests/postgres)");
-        return;
-    };
-    let database = postgres::fresh_on(&address).await;
+    let Some(server) = Server::given_or_own() else { return };
+    let database = server.fresh().await;
     let folder = tempfile::tempdir().unwrap();
     // At the same time: one makes the tables, and the other waits for them.
     let mut processes = std::thread::scope(|scope| {
