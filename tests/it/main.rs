@@ -45,6 +45,7 @@ mod questions;
 mod retention;
 mod scenarios;
 mod schemas;
+mod sources;
 mod stored_evidence;
 mod traces;
 mod tracking;
