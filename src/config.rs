@@ -5,6 +5,7 @@ mod fault;
 mod kinds;
 mod notices;
 mod retention;
+mod sources;
 mod telemetry;
 
 use std::collections::BTreeMap;
@@ -20,6 +21,7 @@ pub use access::{AccessConfig, KeysNeeded};
 pub use fault::SettingsError;
 pub use notices::NoticesConfig;
 pub use retention::RetentionConfig;
+pub use sources::SourcesConfig;
 pub use telemetry::TelemetryConfig;
 
 use crate::webhook::SecretFault;
@@ -63,6 +65,8 @@ pub struct Config {
     pub metrics: MetricsConfig,
     /// Calls to other machines.
     pub notices: NoticesConfig,
+    /// Queries in databases of the operator's.
+    pub sources: SourcesConfig,
     /// How long what is stored is kept.
     pub retention: RetentionConfig,
     /// Logging.
@@ -394,6 +398,10 @@ impl Config {
             ("retention.jobs_most", retention.jobs_most, 0, MOST_THINGS),
             ("retention.keys_hours", retention.keys_hours, 1, YEAR_HOURS),
             ("retention.every_seconds", retention.every_seconds, 1, DAY_SECONDS),
+            ("sources.least_every_seconds", self.sources.least_every_seconds, 1, DAY_SECONDS),
+            ("sources.longest_timeout_seconds", self.sources.longest_timeout_seconds, 1, DAY_SECONDS),
+            ("sources.first_pause_ms", self.sources.first_pause_ms, 1, DAY_SECONDS * 1000),
+            ("sources.longest_pause_seconds", self.sources.longest_pause_seconds, 1, DAY_SECONDS),
             ("notices.attempts_for_hours", notices.attempts_for_hours, 1, YEAR_HOURS),
             ("notices.timeout_seconds", notices.timeout_seconds, 1, 300),
             ("notices.first_pause_ms", notices.first_pause_ms, 1, DAY_SECONDS * 1000),

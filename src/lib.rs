@@ -2,7 +2,7 @@
 //! it means for capacity.
 //!
 //! The core (`numerics`, `model`, `census`, `growth`, `fit`, `forecast`, `evaluate`) is plain, synchronous and
-//! deterministic. The boundary (`credential`, `ingest`, `webhook`, `store`, `service`, `api`, `report`, `app`) needs the feature `server`.
+//! deterministic. The boundary (`credential`, `ingest`, `webhook`, `sources`, `store`, `service`, `api`, `report`, `app`) needs the feature `server`.
 //! DEVELOPERS.md has the map.
 
 pub mod census;
@@ -27,6 +27,8 @@ pub mod ingest;
 pub mod report;
 #[cfg(feature = "server")]
 pub mod service;
+#[cfg(feature = "server")]
+pub mod sources;
 #[cfg(feature = "server")]
 pub mod store;
 #[cfg(feature = "server")]

@@ -22,6 +22,7 @@ mod numbers;
 mod plan;
 mod questions;
 mod runs;
+mod sources;
 mod upkeep;
 
 use std::future::Future;
@@ -40,6 +41,7 @@ use gauges::Briefs;
 use jobs::Board;
 use news::TellingCache;
 use notices::Notices;
+use sources::Sources;
 
 pub use crate::evaluate::OriginRequest;
 pub use crate::fit::{FitRequest, Fixed, Model, ModelChoice, Rung};
@@ -91,6 +93,10 @@ pub use notices::{
 };
 pub use numbers::{Count, Real, date_of, date_text};
 pub use questions::{KeptLimitAnswer, LimitStanding, LimitState, QuestionName};
+pub use sources::{
+    AskedRun, DEFAULT_TIMEOUT_SECONDS, MAX_QUERY_CHARS, SourceAnswer, SourceFailure, SourceStanding, SourceState,
+    SourceSuccess, SourceTerms,
+};
 
 /// The name and version every run carries.
 pub const ENGINE: &str = concat!(env!("CARGO_PKG_NAME"), " ", env!("CARGO_PKG_VERSION"));
@@ -111,6 +117,7 @@ pub struct Service {
     /// What followers of networks are told of forecasts, read once for all of them.
     told: TellingCache,
     notices: Notices,
+    sources: Sources,
     retention: RetentionConfig,
     /// Whether the start looked at all of the database file.
     checked_at_start: bool,
@@ -152,6 +159,7 @@ impl Service {
             briefs: Briefs::default(),
             told: TellingCache::default(),
             notices,
+            sources: Sources::new(&config.sources, &config.limits),
             retention: config.retention,
             checked_at_start,
             evidence_places,

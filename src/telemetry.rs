@@ -123,6 +123,7 @@ fn install() -> Result<PrometheusHandle, BuildError> {
         "tailcast_notices_total",
         "Attempts to send a notice's event, by outcome: delivered, failed, given_up"
     );
+    describe_counter!("tailcast_source_runs_total", "Runs of sources, by outcome: succeeded, failed");
     describe_counter!(
         "tailcast_trace_exports_total",
         "Batches of spans sent to the collector, by outcome: delivered, failed"

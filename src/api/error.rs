@@ -2,6 +2,7 @@
 
 mod clash;
 mod job;
+mod source;
 
 use std::time::Duration;
 
@@ -255,6 +256,10 @@ fn service_problem(error: ServiceError) -> Problem {
             Problem::new(S::NOT_FOUND, "no_forecast", format!("The network has no forecast yet: {}.", readable(&why)))
         }
         error @ (ServiceError::NoticesOff | ServiceError::NotListed) => notice_refused(&error),
+        error @ (ServiceError::SourcesOff
+        | ServiceError::NoDatabase { .. }
+        | ServiceError::SourceBounds { .. }
+        | ServiceError::SourceFailed(_)) => source::source_refused(&error),
         ServiceError::Busy { wait } => {
             let detail = "Every worker is taken and the queue is full; try again when Retry-After says.";
             Problem::new(S::SERVICE_UNAVAILABLE, "overloaded", detail).retry_after(wait)
@@ -376,6 +381,7 @@ fn missing(thing: Thing) -> &'static str {
         Thing::Limit => "The network keeps no limit of this name; its list of limits has the names.",
         Thing::Scenario => "The network keeps no scenario of this name; its list of scenarios has the names.",
         Thing::Notice => "The network keeps no notice of this name; its list of notices has the names.",
+        Thing::Source => "The network has no source; PUT one under /v1/networks/{name}/source.",
         Thing::LinkEvents => "The network has no link events; PUT them, or a link list to derive them from.",
     }
 }

@@ -13,6 +13,7 @@ mod notices;
 mod runs;
 mod scenarios;
 mod snapshots;
+mod source;
 mod transitions;
 
 use axum::Json;
@@ -55,6 +56,7 @@ pub fn routes() -> OpenApiRouter<AppState> {
         .merge(scenarios::routes())
         .merge(comparison::routes())
         .merge(notices::routes())
+        .merge(source::routes())
 }
 
 /// Track a network

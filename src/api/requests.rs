@@ -11,6 +11,7 @@ mod outlook;
 mod questions;
 mod questions_schema;
 mod schema;
+mod source;
 
 use serde_json::value::RawValue;
 
@@ -29,6 +30,7 @@ pub use schema::{
     ArrivalsBody, CampaignBody, DegreeKindName, FitRequestBody, FixedBody, ForecastRequestBody, HorizonBody,
     LinkEventsBody, ModelName, SegmentBody, SnapshotBody, TransitionsBody, WindowBody, degree_pairs, move_rows,
 };
+pub use source::{SourceBody, read_source};
 
 use arrivals::Stretch;
 

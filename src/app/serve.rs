@@ -29,6 +29,7 @@ pub struct Running {
     server: JoinHandle<()>,
     upkeep: JoinHandle<()>,
     sender: JoinHandle<()>,
+    runner: JoinHandle<()>,
     sharing: JoinHandle<()>,
     keeper: JoinHandle<()>,
     bookkeeping: JoinHandle<()>,
@@ -44,7 +45,8 @@ impl Running {
 
     /// Says at `/readyz` that it stops, serves on for the configured time, then stops listening, finishes what was accepted, within the configured grace, and closes the database.
     pub async fn stop(self) {
-        let Self { service, stop, server, upkeep, sender, sharing, keeper, bookkeeping, drain, grace, .. } = self;
+        let Self { service, stop, server, upkeep, sender, runner, sharing, keeper, bookkeeping, drain, grace, .. } =
+            self;
         service.announce_stop();
         if !drain.is_zero() {
             tracing::info!(
@@ -57,7 +59,7 @@ impl Running {
         // Nobody listening means the server is gone already.
         let _ = stop.send(true);
         // The sender finishes the calls that are under way; what it does not is sent by the next process.
-        if timeout(grace, async { tokio::join!(server, sender) }).await.is_err() {
+        if timeout(grace, async { tokio::join!(server, sender, runner) }).await.is_err() {
             tracing::warn!(grace_seconds = grace.as_secs(), "some requests were not finished in time");
         }
         aborted.abort();
@@ -99,6 +101,7 @@ pub async fn start(config: Config) -> Result<Running, Stop> {
     let front = Front::new(AppState::new(service.clone(), &config, metrics));
     let (stop, stopped) = watch::channel(false);
     let sender = tokio::spawn(service.clone().send_notices(stopped.clone()));
+    let runner = tokio::spawn(service.clone().run_sources(stopped.clone()));
     let sharing = tokio::spawn(service.clone().share_jobs(resumed.is_ok(), stopped.clone()));
     let keeper = tokio::spawn(service.clone().keep_up(stopped.clone()));
     let bookkeeping = tokio::spawn(bookkeeping::keep_books(service.clone(), config.access.audit_time()));
@@ -107,7 +110,7 @@ pub async fn start(config: Config) -> Result<Running, Stop> {
     if config.access.keys == KeysNeeded::AnyoneMayReadAndWrite {
         tracing::warn!(%address, "NO ACCESS KEYS ARE ASKED FOR: whoever reaches this address can read and change everything, unless a gateway in front decides who may");
     }
-    Ok(Running { address, service, stop, server, upkeep, sender, sharing, keeper, bookkeeping, drain, grace })
+    Ok(Running { address, service, stop, server, upkeep, sender, runner, sharing, keeper, bookkeeping, drain, grace })
 }
 
 /// Serves until SIGINT or SIGTERM.

@@ -52,25 +52,29 @@ impl NoticesConfig {
     }
 }
 
-/// A list, or one text with commas between, as a variable has it.
 fn destinations<'de, D: Deserializer<'de>>(deserializer: D) -> Result<Vec<Destination>, D::Error> {
+    let given = one_or_many(deserializer)?;
+    let read = |text: &String| {
+        let fault = |why| D::Error::custom(format!("notices.destinations has {text:?}: {why}"));
+        Destination::new(text).map_err(fault)
+    };
+    given.iter().map(read).collect()
+}
+
+/// A list, or one text with commas between, as a variable has it.
+pub(super) fn one_or_many<'de, D: Deserializer<'de>>(deserializer: D) -> Result<Vec<String>, D::Error> {
     #[derive(Deserialize)]
     #[serde(untagged)]
     enum Given {
         One(String),
         List(Vec<String>),
     }
-    let given = match Given::deserialize(deserializer)? {
+    Ok(match Given::deserialize(deserializer)? {
         Given::One(text) => {
             text.split(',').map(|part| part.trim().to_owned()).filter(|part| !part.is_empty()).collect()
         }
         Given::List(list) => list,
-    };
-    let read = |text: &String| {
-        let fault = |why| D::Error::custom(format!("notices.destinations has {text:?}: {why}"));
-        Destination::new(text).map_err(fault)
-    };
-    given.iter().map(read).collect()
+    })
 }
 
 /// The secret, never repeated in an error.

@@ -44,6 +44,26 @@ pub enum ServiceError {
     /// The operator has not listed the address.
     #[error("its address is not among those that whoever runs this service lists in notices.destinations")]
     NotListed,
+    /// The operator has listed no database that sources may count in.
+    #[error("this service runs no sources: whoever runs it lists no database in sources.databases")]
+    SourcesOff,
+    /// The operator has not listed the database.
+    #[error("its database is not among those that whoever runs this service lists in sources.databases")]
+    NoDatabase {
+        /// The names of those that are.
+        known: Vec<String>,
+    },
+    /// The operator's bounds do not allow what a source asks for.
+    #[error("{detail}")]
+    SourceBounds {
+        /// The field that asks for it.
+        field: &'static str,
+        /// What they allow.
+        detail: String,
+    },
+    /// The run of a source that was asked for has failed.
+    #[error("{0}")]
+    SourceFailed(String),
     /// Every worker is taken and the queue is full.
     #[error("every worker is taken and the queue is full")]
     Busy {
@@ -111,6 +131,8 @@ pub enum Thing {
     Scenario,
     /// A notice kept with a network.
     Notice,
+    /// A network's source.
+    Source,
 }
 
 impl From<StoreError> for ServiceError {

@@ -84,7 +84,7 @@ impl Store {
              OR EXISTS (SELECT 1 FROM backtests) OR EXISTS (SELECT 1 FROM backtest_records) \
              OR EXISTS (SELECT 1 FROM kept_questions) OR EXISTS (SELECT 1 FROM notice_standings) \
              OR EXISTS (SELECT 1 FROM notices) OR EXISTS (SELECT 1 FROM notice_events) \
-             OR EXISTS (SELECT 1 FROM spooled_parts) \
+             OR EXISTS (SELECT 1 FROM spooled_parts) OR EXISTS (SELECT 1 FROM sources) \
              OR EXISTS (SELECT 1 FROM access_keys) OR EXISTS (SELECT 1 FROM access_key_networks) \
              OR EXISTS (SELECT 1 FROM access_key_days) OR EXISTS (SELECT 1 FROM audit)",
         )

@@ -6,9 +6,10 @@ use serde_json::json;
 
 use crate::harness::{DOCUMENT, Service, answered, csv, fit_body, forecast_body, json_text};
 use crate::notices::sends;
+use crate::sources::{NOBODY, counts_in};
 
 /// Every operation with the status its plain use is answered with, in an order in which all of them work.
-pub const CALLS: [(&str, &str, u16); 54] = [
+pub const CALLS: [(&str, &str, u16); 58] = [
     ("get", "/livez", 200),
     ("get", "/readyz", 200),
     ("get", "/metrics", 200),
@@ -49,6 +50,11 @@ pub const CALLS: [(&str, &str, u16); 54] = [
     ("get", "/v1/networks/{name}/notices/{notice}", 200),
     ("get", "/v1/networks/{name}/notices", 200),
     ("delete", "/v1/networks/{name}/notices/{notice}", 204),
+    ("put", "/v1/networks/{name}/source", 201),
+    ("get", "/v1/networks/{name}/source", 200),
+    // Nobody listens at its database's address.
+    ("post", "/v1/networks/{name}/source/runs", 422),
+    ("delete", "/v1/networks/{name}/source", 204),
     // The network has no plan.
     ("get", "/v1/networks/{name}/comparison", 422),
     ("delete", "/v1/networks/{name}/limits/{limit}", 204),
@@ -82,6 +88,9 @@ pub fn body(method: &str, path: &str) -> Option<(&'static str, String)> {
         return None;
     }
     let resource = path.split('/').rfind(|part| !part.starts_with('{')).unwrap();
+    if resource == "runs" {
+        return None;
+    }
     if resource == "links" {
         return Some(csv("time,source,target\n2020-01-01,ana,ben\n"));
     }
@@ -94,6 +103,7 @@ pub fn body(method: &str, path: &str) -> Option<(&'static str, String)> {
         ("limits", _) => json!({"threshold": 3, "max_nodes": 20, "by": "2027-01-01"}),
         ("scenarios", _) => json!({"arrivals_factor": 1.2}),
         ("notices", _) => json!({"url": "https://hooks.example.org/tailcast"}),
+        ("source", _) => json!({"database": "links", "query": "SELECT 0 AS degree, 1 AS nodes", "every": "P1D"}),
         ("networks", _) => json!({"degree_kind": "received"}),
         ("snapshots", _) => json!({"degree_counts": [[0, 48], [1, 30], [2, 17], [5, 5]]}),
         ("transitions", _) => {
@@ -116,7 +126,11 @@ fn the_calls_are_the_documents_operations() {
 
 #[tokio::test]
 async fn every_operation_works() {
-    let service = Service::start_with(|config| sends(config, &["https://hooks.example.org"])).await;
+    let service = Service::start_with(|config| {
+        sends(config, &["https://hooks.example.org"]);
+        counts_in(config, NOBODY);
+    })
+    .await;
     let mut made = String::new();
     for (method, path, status) in CALLS {
         let address = address(path, &made);
@@ -126,7 +140,7 @@ async fn every_operation_works() {
             Some((kind, body)) => answered(request.header("content-type", kind).body(body)).await.expect(status),
             None => answered(request).await.expect(status),
         };
-        if method == "post" || path.ends_with("/links") {
+        if status == 201 && method == "post" || path.ends_with("/links") {
             made = answer.json()["id"].as_str().unwrap().to_owned();
         }
     }

@@ -48,6 +48,7 @@ mod retention;
 mod rolling;
 mod scenarios;
 mod schemas;
+mod sources;
 mod stored_evidence;
 mod traces;
 mod tracking;

@@ -131,6 +131,10 @@ pub const RULES: &[Rule] = &[
     rule("PUT", "/v1/networks/{name}/notices/{notice}", WRITES),
     rule("GET", "/v1/networks/{name}/notices/{notice}", READS),
     rule("DELETE", "/v1/networks/{name}/notices/{notice}", WRITES),
+    rule("PUT", "/v1/networks/{name}/source", WRITES),
+    rule("GET", "/v1/networks/{name}/source", READS),
+    rule("DELETE", "/v1/networks/{name}/source", WRITES),
+    rule("POST", "/v1/networks/{name}/source/runs", WRITES),
 ];
 
 /// Whether a route is of the page or the document's viewer, which tell nothing of what is kept.
