@@ -11,10 +11,14 @@ pub fn server() -> Option<String> {
 
 /// The address of a schema of its own, where there is a server.
 pub async fn fresh() -> Option<String> {
-    let server = server()?;
+    Some(fresh_on(&server()?).await)
+}
+
+/// The address of a schema of its own on a server.
+pub async fn fresh_on(server: &str) -> String {
     let schema = format!("s{}", Uuid::now_v7().simple());
-    let mut connection = PgConnection::connect(&server).await.unwrap();
+    let mut connection = PgConnection::connect(server).await.unwrap();
     sqlx::query(AssertSqlSafe(format!("CREATE SCHEMA {schema}"))).execute(&mut connection).await.unwrap();
     connection.close().await.unwrap();
-    Some(format!("{server}?options=-c%20search_path%3D{schema}"))
+    format!("{server}?options=-c%20search_path%3D{schema}")
 }

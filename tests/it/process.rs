@@ -5,6 +5,7 @@ use std::net::SocketAddr;
 use std::path::Path;
 use std::process::{Child, Command, Output, Stdio};
 use std::sync::{Arc, Mutex};
+use std::thread::JoinHandle;
 
 const BINARY: &str = env!("CARGO_BIN_EXE_tailcast");
 
@@ -14,6 +15,7 @@ pub struct Served {
     pub address: SocketAddr,
     /// What it has logged.
     pub log: Arc<Mutex<Vec<String>>>,
+    reader: Option<JoinHandle<()>>,
 }
 
 /// The binary with no settings but those of the test.
@@ -52,22 +54,51 @@ pub fn serve_with(folder: &Path, variables: &[(&str, &str)]) -> Served {
         .spawn()
         .unwrap();
     let mut lines = BufReader::new(child.stderr.take().unwrap()).lines();
-    let address = lines
-        .find_map(|line| line.unwrap().split_once("serving address=")?.1.trim().parse().ok())
-        .expect("the service says where it listens");
+    let mut begun = Vec::new();
+    let address = loop {
+        begun.push(lines.next().expect("the service says where it listens").unwrap());
+        if let Some(address) = begun.last().and_then(|line| listening(line)) {
+            break address;
+        }
+    };
     // Read on, so that a full pipe never blocks the service.
-    let log = Arc::new(Mutex::new(Vec::new()));
+    let log = Arc::new(Mutex::new(begun));
     let kept = log.clone();
-    std::thread::spawn(move || {
+    let reader = std::thread::spawn(move || {
         lines.map_while(Result::ok).for_each(|line| {
             eprintln!("service: {line}");
             kept.lock().unwrap().push(line);
         });
     });
-    Served { child, address, log }
+    Served { child, address, log, reader: Some(reader) }
+}
+
+/// The address in the line that says where a service listens, in either form.
+fn listening(line: &str) -> Option<SocketAddr> {
+    let (_, text) = line.split_once("serving address=").or_else(|| line.split_once("\"serving\",\"address\":\""))?;
+    text.split('"').next()?.trim().parse().ok()
 }
 
 impl Served {
+    /// Asks it to stop, waits until it has in good order, and tells all that it logged.
+    pub fn stopped(self) -> Vec<String> {
+        self.ask_to_stop();
+        self.ended()
+    }
+
+    /// Waits until it has ended in good order, and tells all that it logged.
+    pub fn ended(mut self) -> Vec<String> {
+        assert!(self.child.wait().unwrap().success());
+        self.reader.take().unwrap().join().unwrap();
+        std::mem::take(&mut *self.log.lock().unwrap())
+    }
+
+    /// Sends it SIGTERM.
+    pub fn ask_to_stop(&self) {
+        let asked = Command::new("kill").args(["-TERM", &self.child.id().to_string()]).status().unwrap();
+        assert!(asked.success());
+    }
+
     /// Kills it hard, as a crash would.
     pub fn kill(mut self) {
         self.child.kill().unwrap();
