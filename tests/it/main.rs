@@ -42,7 +42,6 @@ mod polled;
 mod postgres;
 mod process;
 mod questions;
-mod replicas;
 mod retention;
 mod scenarios;
 mod schemas;
