@@ -12,7 +12,7 @@ use tempfile::TempDir;
 use crate::harness::{changed, fit_body, pairs};
 use crate::jobs::{is_live, link_list};
 use crate::postgres::Server;
-use crate::process::{Served, command, serve_with};
+use crate::process::{Served, serve_with};
 use crate::tracking::{grown, settings};
 
 const NETWORK: &str = "/v1/networks/heronsgate";
@@ -195,27 +195,4 @@ async fn a_job_called_off_at_the_other_ends_and_makes_way() {
     assert_eq!(ended["state"], "succeeded", "{ended}");
     assert_eq!(pair.count("SELECT count(*) FROM backtests").await, 1);
     assert_eq!(pair.read(&pair.first, &format!("/v1/jobs/{job}")).await["state"], "cancelled");
-}
-
-/// The kill loop in small; `studies/kills.txt` has the long one.
-#[test]
-fn ten_kills_lose_nothing_and_double_nothing_on_either_database() {
-    let program = concat!(env!("CARGO_MANIFEST_DIR"), "/tests/kills.py");
-    let folder = tempfile::tempdir().unwrap();
-    let service = command(folder.path());
-    for database in [&[][..], &["--postgres"][..]] {
-        let needed: &[&str] = if database.is_empty() { &["python3"] } else { &["python3", "psql", "pg_ctlcluster"] };
-        let has = |name: &&str| Command::new("which").arg(name).output().is_ok_and(|found| found.status.success());
-        if let Some(missing) = needed.iter().find(|name| !has(name)) {
-            eprintln!(
-                "NOT RUN: the kill loop {database:?} needs {missing} (Debian: apt-get install python3 postgresql)"
-            );
-            continue;
-        }
-        let mut kills = Command::new("python3");
-        kills.arg(program).arg(service.get_program()).args(["--kills", "10"]).args(database);
-        let told = kills.output().unwrap();
-        let text = [told.stdout, told.stderr].map(|bytes| String::from_utf8_lossy(&bytes).into_owned()).concat();
-        assert!(told.status.success(), "{text}");
-    }
 }
