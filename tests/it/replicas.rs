@@ -1,7 +1,6 @@
 //! Two processes on one PostgreSQL: what one is told the other knows, and what one leaves the other ends, once.
 
 use std::collections::BTreeSet;
-use std::process::Command;
 use std::time::{Duration, Instant};
 
 use reqwest::{Client, Response};
