@@ -51,6 +51,7 @@ pub use accounts::{AccountKey, IssuedRun, NewAccount, StoredAccount};
 pub use audit::{AuditFilter, AuditLine, Authorship, author, authored, authored_on};
 pub use backtests::{BacktestSummary, BacktestWrite, NewBacktest, StoredBacktest};
 pub use backup::{BackupError, BackupReport, RestoreReport, back_up, restore};
+pub use columns::kept_now;
 pub use derived::DerivedEvidence;
 pub use health::StoreFault;
 pub use ids::next_id;

@@ -7,7 +7,6 @@ mod standing;
 
 use std::sync::Arc;
 
-use jiff::Timestamp;
 use serde::Serialize;
 use tokio::sync::Notify;
 
@@ -15,7 +14,7 @@ use super::networks::cut;
 use super::questions::QuestionName;
 use super::{NetworkName, Service, ServiceError, Thing, in_own_task, sha256_hex};
 use crate::config::NoticesConfig;
-use crate::store::{NewNotice, NoticeKind};
+use crate::store::{NewNotice, NoticeKind, kept_now};
 use crate::webhook::Target;
 
 pub use event::{DriftNotice, EventAnswer, EventType, LimitNotice, NoticeData, ToldLimit};
@@ -151,6 +150,6 @@ fn to_store(name: &QuestionName, terms: &NoticeTerms) -> Result<NewNotice, Servi
         tag: sha256_hex(&text),
         url: url.to_owned(),
         kinds,
-        updated_at: Timestamp::now(),
+        updated_at: kept_now(),
     })
 }

@@ -10,7 +10,7 @@ use super::{
     ENGINE, KeyClaim, RunFilter, RunKind, RunOrigin, RunSummary, Service, ServiceError, StoredRun, Thing, in_own_task,
 };
 use crate::evaluate::OriginError;
-use crate::store::{Inserted, NewRun, next_id};
+use crate::store::{Inserted, NewRun, kept_now, next_id};
 
 /// A run's document: its head in front of its answer.
 #[derive(Serialize)]
@@ -153,8 +153,8 @@ pub(super) fn compute<Q: Question>(
             let (seconds, nanoseconds) = time.to_unix();
             Timestamp::new(i64::try_from(seconds).ok()?, i32::try_from(nanoseconds).ok()?).ok()
         })
-        .unwrap_or_else(Timestamp::now);
-    let created_at = made_at.min(Timestamp::now());
+        .unwrap_or_else(kept_now);
+    let created_at = made_at.min(kept_now());
     let document = Document {
         id,
         created_at: created_at.to_string(),

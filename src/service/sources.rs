@@ -14,7 +14,7 @@ use tokio::time::{Instant, sleep};
 
 use super::{NetworkName, Service, ServiceError, Thing, in_own_task, sha256_hex};
 use crate::config::{LimitsConfig, SourcesConfig};
-use crate::store::NewSource;
+use crate::store::{NewSource, kept_now};
 
 pub use standing::{SourceAnswer, SourceFailure, SourceStanding, SourceState, SourceSuccess};
 
@@ -121,7 +121,7 @@ impl Service {
         if let Some(refusal) = self.sources.refusal(&terms.database) {
             return Err(refusal);
         }
-        let now = Timestamp::now();
+        let now = kept_now();
         self.sources.bounds(terms, now)?;
         let source = to_store(terms, now)?;
         let due_at = match terms.starts_at {

@@ -9,6 +9,12 @@ use uuid::Uuid;
 use super::StoreError;
 use crate::model::DegreeKind;
 
+/// Now, as finely as times are kept: what an answer tells of a thing that was just stored is what is read of it later.
+pub fn kept_now() -> Timestamp {
+    let now = Timestamp::now();
+    Timestamp::from_microsecond(now.as_microsecond()).unwrap_or(now)
+}
+
 /// A date in the one form that sorts as time does: RFC 3339 in UTC with nine decimals, 30 characters.
 pub fn date_key(time: Timestamp) -> String {
     format!("{time:.9}")

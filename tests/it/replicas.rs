@@ -138,7 +138,7 @@ async fn one_key_sent_to_both_at_once_makes_one_run() {
         let body = changed(body, "/label", json!(format!("round {round}")));
         let send = async |served: &Served| {
             let post = pair.client.post(format!("http://{}/v1/fits", served.address)).json(&body);
-            let answer = post.header("idempotency-key", format!("round {round}")).send().await.unwrap();
+            let answer = post.header("idempotency-key", format!("round-{round}")).send().await.unwrap();
             (answer.status().as_u16(), answer.text().await.unwrap())
         };
         let (one, other) = tokio::join!(send(&pair.first), send(&pair.second));

@@ -96,7 +96,7 @@ impl Scene {
         match answer {
             Ok((201, text)) => {
                 let run: Value = serde_json::from_str(&text).unwrap();
-                let kind = if round % 5 == 0 { "fits" } else { "forecasts" };
+                let kind = if round.is_multiple_of(5) { "fits" } else { "forecasts" };
                 self.kept.lock().unwrap().push(format!("/v1/{kind}/{}", run["id"].as_str().unwrap()));
             }
             Ok((200, _)) => {}

@@ -1,11 +1,12 @@
 //! Evidence as it is stored: compact JSON with its digest and totals beside it.
 
-use jiff::Timestamp;
 use serde::Serialize;
 
 use crate::model::{AttachmentCell, DegreeCounts, LinkEvents, Snapshot, Transitions};
 use crate::service::{Real, sha256_hex};
-use crate::store::{EndTags, SnapshotSummary, StoredLinkEvents, StoredSnapshot, StoredTransitions, TransitionsSummary};
+use crate::store::{
+    EndTags, SnapshotSummary, StoredLinkEvents, StoredSnapshot, StoredTransitions, TransitionsSummary, kept_now,
+};
 
 /// A snapshot as stored.
 pub fn snapshot(snapshot: &Snapshot) -> Result<StoredSnapshot, serde_json::Error> {
@@ -18,7 +19,7 @@ pub fn snapshot(snapshot: &Snapshot) -> Result<StoredSnapshot, serde_json::Error
         largest_degree: counts.largest(),
         rows: counts.degrees().len() as u64,
         tag: sha256_hex(degree_counts.as_bytes()),
-        updated_at: now(),
+        updated_at: kept_now(),
     };
     Ok(StoredSnapshot { summary, degree_counts })
 }
@@ -38,7 +39,7 @@ pub fn transitions(table: &Transitions) -> Result<(StoredTransitions, EndTags), 
         departed: table.departed(),
         rows: rows.len() as u64,
         tag: sha256_hex(counts.as_bytes()),
-        updated_at: now(),
+        updated_at: kept_now(),
     };
     Ok((StoredTransitions { summary, counts }, ends))
 }
@@ -65,7 +66,7 @@ pub fn link_events(events: &LinkEvents) -> Result<StoredLinkEvents, serde_json::
         landings: events.landings(),
         rows: (events.ratios().len() + cells) as u64,
         tag: sha256_hex(statistics.as_bytes()),
-        updated_at: now(),
+        updated_at: kept_now(),
         statistics,
     })
 }
@@ -77,10 +78,4 @@ pub fn counts_tag(counts: &DegreeCounts) -> Result<String, serde_json::Error> {
 
 fn pairs(counts: &DegreeCounts) -> Result<String, serde_json::Error> {
     serde_json::to_string(&counts.iter().collect::<Vec<_>>())
-}
-
-/// Now, as finely as it is kept.
-fn now() -> Timestamp {
-    let now = Timestamp::now();
-    Timestamp::from_microsecond(now.as_microsecond()).unwrap_or(now)
 }

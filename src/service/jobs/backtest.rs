@@ -4,7 +4,6 @@ use std::collections::HashSet;
 use std::sync::Arc;
 use std::time::Duration;
 
-use jiff::Timestamp;
 use uuid::Uuid;
 
 use super::board::{Stop, Turn};
@@ -18,7 +17,7 @@ use crate::service::background::in_background;
 use crate::service::backtests::{document, record_from_json, record_to_json, too_few};
 use crate::service::evidence::{assemble, off_runtime};
 use crate::service::{BacktestRequest, DEFAULT_SEED, NetworkName, Service, ServiceError, in_own_task, sha256_hex};
-use crate::store::{BacktestWrite, JobKind, NewBacktest, StoreError, StoredJob, next_id};
+use crate::store::{BacktestWrite, JobKind, NewBacktest, StoreError, StoredJob, kept_now, next_id};
 
 /// How often a backtest begins anew because the evidence changed; after that it ends on the evidence it has, and is outdated.
 const MOST_ANEW: usize = 3;
@@ -139,7 +138,7 @@ impl Service {
             stored_or_halt(persistently(write).await?)?;
         }
         let records = self.store.list_backtest_records(job.id, &digest).await?;
-        let (name, id, created_at) = (job.network.clone(), job.id, Timestamp::now());
+        let (name, id, created_at) = (job.network.clone(), job.id, kept_now());
         let origins = records.len() as u64;
         // It may take minutes, so it takes no place from short conversions.
         let document = in_background(move || {
