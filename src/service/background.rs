@@ -46,7 +46,7 @@ pub async fn in_background<T: Send + 'static>(work: impl FnOnce() -> T + Send + 
 /// are cores.
 ///
 /// # Errors
-/// Those of [`in_background`].
+/// Those of `in_background`.
 pub async fn converted<T: Send + 'static>(work: impl FnOnce() -> T + Send + 'static) -> Result<T, Unfinished> {
     // It is never closed.
     let place = CONVERSIONS.acquire().await.ok();
