@@ -108,15 +108,12 @@ impl Store {
                         None if !self.health.has_failed() => return Ok(()),
                         None => write.acquire().await?,
                     };
-                    let mut transaction = writer.begin_with("BEGIN IMMEDIATE").await?;
-                    if !self.health.needs_proof() {
-                        return transaction.rollback().await.map_err(StoreError::from);
+                    let tried = self.try_lock(&mut writer, file).await;
+                    if matches!(tried, Err(StoreError::ReadOnly(_))) {
+                        // Opened while the file could only be read, it would stay so: the next is opened anew.
+                        let _ = writer.close().await;
                     }
-                    // A full disk gives the lock and refuses the write: this one changes nothing, and is on disk when it succeeds.
-                    sqlx::query("PRAGMA user_version = 0").execute(&mut *transaction).await?;
-                    transaction.commit().await?;
-                    self.health.check_room(file)?;
-                    self.health.note_write(Ok(()));
+                    tried?;
                 }
                 Home::Postgres { .. } => {
                     let text =
@@ -139,6 +136,20 @@ impl Store {
             }
             Err(_) => Err(StoreError::Busy(sqlx::Error::PoolTimedOut)),
         }
+    }
+
+    /// Takes the lock for writing, and where the last write failed proves by one that changes nothing that it is over.
+    async fn try_lock(&self, writer: &mut SqliteConnection, file: &DatabaseFile) -> Result<(), StoreError> {
+        let mut transaction = writer.begin_with("BEGIN IMMEDIATE").await?;
+        if !self.health.needs_proof() {
+            return transaction.rollback().await.map_err(StoreError::from);
+        }
+        // A full disk gives the lock and refuses the write; this one is on disk when it succeeds.
+        sqlx::query("PRAGMA user_version = 0").execute(&mut *transaction).await?;
+        transaction.commit().await?;
+        self.health.check_room(file)?;
+        self.health.note_write(Ok(()));
+        Ok(())
     }
 
     /// Whether other processes may be at work on it.
