@@ -4,7 +4,7 @@ use std::time::Duration;
 
 use sqlx::postgres::{PgDatabaseError, PgErrorPosition};
 
-use crate::model::CountsFault;
+use crate::model::{CountsFault, CountsFaultKind};
 
 /// Longest message of a database that is repeated, characters.
 const LONGEST_MESSAGE: usize = 300;
@@ -78,8 +78,8 @@ impl SourceFault {
         })
     }
 
-    /// A query that failed, `offset` characters into what was sent, within `time`.
-    pub(super) fn asking(error: &sqlx::Error, (query, offset): (&str, usize), time: Duration) -> Self {
+    /// A failure to ask within `time`; a place that the server names is one of `alone`, the query where it was sent by itself.
+    pub(super) fn asking(error: &sqlx::Error, alone: Option<&str>, time: Duration) -> Self {
         let Some(inner) = error.as_database_error() else {
             return Self::BrokenOff(match error {
                 sqlx::Error::Io(error) => error.kind().to_string(),
@@ -93,8 +93,8 @@ impl SourceFault {
             CANCELLED => Self::TooSlow(time),
             _ => {
                 let position = inner.try_downcast_ref::<PgDatabaseError>().and_then(PgDatabaseError::position);
-                let place = match position {
-                    Some(PgErrorPosition::Original(at)) => place(query, at.saturating_sub(offset)),
+                let place = match (alone, position) {
+                    (Some(query), Some(PgErrorPosition::Original(at))) => place(query, at),
                     _ => None,
                 };
                 // Of the columns that were asked for around the query.
@@ -125,7 +125,7 @@ impl SourceFault {
 /// A fault of a row in the words of tables.
 fn in_rows(fault: &CountsFault) -> String {
     match fault.kind {
-        crate::model::CountsFaultKind::Repeated { degree, first } => {
+        CountsFaultKind::Repeated { degree, first } => {
             format!("degree {degree} stands in row {} too; GROUP BY degree", first + 1)
         }
         _ => fault.to_string(),
@@ -173,6 +173,6 @@ mod tests {
         assert!(SourceFault::connecting(&refused).to_string().contains("nothing listens"));
         let other = sqlx::Error::Protocol("postgres://hunter2@db".to_owned());
         assert!(!SourceFault::connecting(&other).to_string().contains("hunter2"));
-        assert!(!SourceFault::asking(&other, ("", 0), Duration::ZERO).to_string().contains("hunter2"));
+        assert!(!SourceFault::asking(&other, None, Duration::ZERO).to_string().contains("hunter2"));
     }
 }

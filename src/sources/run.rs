@@ -4,7 +4,7 @@ use std::time::Duration;
 
 use futures_util::TryStreamExt;
 use jiff::Timestamp;
-use sqlx::{AssertSqlSafe, ConnectOptions, Connection, PgConnection, SqlSafeStr};
+use sqlx::{AssertSqlSafe, ConnectOptions, Connection, Executor, PgConnection, SqlSafeStr};
 use tokio::time::timeout;
 
 use super::answer::{Row, counts};
@@ -41,16 +41,9 @@ pub async fn count(database: &Database, counting: Counting<'_>) -> Result<Snapsh
         Ok(connected) => connected.map_err(|error| SourceFault::connecting(&error))?,
         Err(_) => return Err(SourceFault::connecting(&sqlx::Error::Io(std::io::ErrorKind::TimedOut.into()))),
     };
+    // When it is dropped for its time, so are the connection and the transaction.
     let asked = timeout(counting.time + PATIENCE, rows(&mut connection, counting)).await;
-    let (began, rows) = match asked {
-        Ok(Ok(found)) => found,
-        Ok(Err(error)) => {
-            let query = (counting.query, BEFORE.chars().count());
-            return Err(SourceFault::asking(&error, query, counting.time));
-        }
-        // The connection is dropped, and with it the transaction.
-        Err(_) => return Err(SourceFault::TooSlow(counting.time)),
-    };
+    let (began, rows) = asked.unwrap_or(Err(SourceFault::TooSlow(counting.time)))?;
     // What was read is read: how the session ends does not matter.
     let _ = timeout(PATIENCE, connection.close()).await;
     if rows.len() > counting.most_rows {
@@ -62,17 +55,24 @@ pub async fn count(database: &Database, counting: Counting<'_>) -> Result<Snapsh
 async fn rows(
     connection: &mut PgConnection,
     Counting { query, time, most_rows }: Counting<'_>,
-) -> Result<(Timestamp, Vec<Row>), sqlx::Error> {
-    let mut transaction = connection.begin_with("BEGIN ISOLATION LEVEL REPEATABLE READ READ ONLY").await?;
+) -> Result<(Timestamp, Vec<Row>), SourceFault> {
+    let fault = |error: sqlx::Error| SourceFault::asking(&error, None, time);
+    let begin = connection.begin_with("BEGIN ISOLATION LEVEL REPEATABLE READ READ ONLY");
+    let mut transaction = begin.await.map_err(fault)?;
     let limits = format!("SET LOCAL statement_timeout = {}", time.as_millis());
-    sqlx::query(AssertSqlSafe(limits).into_sql_str()).persistent(false).execute(&mut *transaction).await?;
+    let limited = sqlx::query(AssertSqlSafe(limits).into_sql_str()).persistent(false).execute(&mut *transaction);
+    limited.await.map_err(fault)?;
+    // It must be a statement by itself: one that closes the parenthesis it is put into would leave the bounds around it.
+    let alone = AssertSqlSafe(without_end(query).to_owned()).into_sql_str();
+    let prepared = transaction.prepare(alone).await;
+    prepared.map_err(|error| SourceFault::asking(&error, Some(query), time))?;
     // One row more than may be tells that there are too many.
     let text = format!("{BEFORE}{}\n) AS counted LIMIT {}", without_end(query), most_rows.saturating_add(1));
     let began = Timestamp::now();
     // Whoever runs the service lets callers ask this database; a statement with its parameters apart is a single one.
     let asked = sqlx::query_as::<_, Row>(AssertSqlSafe(text).into_sql_str()).persistent(false);
-    let rows = asked.fetch(&mut *transaction).try_collect().await?;
-    transaction.rollback().await?;
+    let rows = asked.fetch(&mut *transaction).try_collect().await.map_err(fault)?;
+    transaction.rollback().await.map_err(fault)?;
     Ok((whole_second(began), rows))
 }
 

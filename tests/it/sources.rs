@@ -1,5 +1,5 @@
-//! Sources: queries in databases of the operator's. Runs that count need a PostgreSQL server (`TEST_POSTGRES`); without one, all that
-//! can be seen without counting is.
+//! Sources: queries in databases of the operator's. Runs that count need a PostgreSQL server; where there is none, only what can be
+//! seen without counting is tested, and the rest says loudly that it was not.
 
 use std::time::Duration;
 
@@ -9,7 +9,7 @@ use tailcast::config::Config;
 use tailcast::sources::Database;
 
 use crate::harness::{Answer, Service, changed};
-use crate::postgres;
+use crate::postgres::Server;
 
 const NETWORK: &str = "/v1/networks/heronsgate";
 const SOURCE: &str = "/v1/networks/heronsgate/source";
@@ -33,10 +33,11 @@ pub fn counts_in(config: &mut Config, address: &str) {
 }
 
 /// A schema with links in it, where there is a server: its address.
-async fn links() -> Option<String> {
-    let address = postgres::fresh().await?;
+async fn links() -> Option<(Server, String)> {
+    let server = Server::given_or_own()?;
+    let address = server.fresh().await;
     change(&address, LINKS).await;
-    Some(address)
+    Some((server, address))
 }
 
 async fn change(address: &str, text: &str) {
@@ -77,7 +78,7 @@ async fn run(service: &Service) -> Answer {
 
 #[tokio::test]
 async fn a_source_is_run_when_it_is_stored_and_when_it_is_asked_for() {
-    let Some(address) = links().await else { return };
+    let Some((_server, address)) = links().await else { return };
     let service = counting_in(&address).await;
     let made = service.put(SOURCE, &source()).await.expect(201);
     assert_eq!(made.header("location"), SOURCE);
@@ -119,7 +120,7 @@ fn instant(value: &Value) -> jiff::Timestamp {
 
 #[tokio::test]
 async fn a_schedule_goes_on_and_missed_runs_are_made_up_for_by_one() {
-    let Some(address) = links().await else { return };
+    let Some((_server, address)) = links().await else { return };
     let folder = tempfile::tempdir().unwrap();
     let file = format!("sqlite://{}", folder.path().join("sources.db").display());
     let start = async || {
@@ -160,7 +161,7 @@ async fn a_schedule_goes_on_and_missed_runs_are_made_up_for_by_one() {
 
 #[tokio::test]
 async fn what_goes_wrong_is_told_in_words_and_nothing_is_stored() {
-    let Some(address) = links().await else { return };
+    let Some((_server, address)) = links().await else { return };
     let service = counting_in(&address).await;
     let later = changed(source(), "/starts_at", json!("2100-01-01"));
     for (query, words) in [
@@ -173,7 +174,11 @@ async fn what_goes_wrong_is_told_in_words_and_nothing_is_stored() {
         ("SELECT degree FROM", "syntax error"),
         ("DELETE FROM links RETURNING 1 AS degree, 1 AS nodes", "syntax error"),
         ("SELECT 1 AS degree, 1 AS nodes; DELETE FROM links", "syntax error"),
-        ("SELECT 1 AS degree, 1 AS nodes) AS counted; DELETE FROM links; SELECT (1", "cannot insert multiple commands"),
+        ("SELECT 1 AS degree, 1 AS nodes) AS counted; DELETE FROM links; SELECT (1", "syntax error at or near \")\""),
+        (
+            "SELECT 1 AS degree, 1 AS nodes) AS counted UNION ALL SELECT repeat('9', 9000000), '1' FROM (SELECT 1 AS degree",
+            "syntax error at or near \")\"",
+        ),
         (
             "WITH gone AS (DELETE FROM links RETURNING 1) SELECT 1 AS degree, count(*) AS nodes FROM gone",
             "at the top level",
@@ -219,7 +224,8 @@ async fn what_goes_wrong_is_told_in_words_and_nothing_is_stored() {
 
 #[tokio::test]
 async fn exactly_one_of_two_processes_takes_each_run() {
-    let (Some(address), Some(shared)) = (links().await, postgres::fresh().await) else { return };
+    let Some((server, address)) = links().await else { return };
+    let shared = server.fresh().await;
     let start = async || {
         Service::start_with(|config| {
             config.database.url = shared.clone();
