@@ -53,6 +53,7 @@ async fn used(folder: &Path) -> (Served, String) {
             ("TAILCAST_NOTICES_DESTINATIONS", NOWHERE),
             ("TAILCAST_NOTICES_SECRET", SECRET),
             ("TAILCAST_TELEMETRY_OTLP_ENDPOINT", NOWHERE),
+            ("TAILCAST_SOURCES_DATABASES", "links=postgres://127.0.0.1:9/links"),
             ("TAILCAST_HTTP_MAX_STREAMS", "0"),
             ("TAILCAST_HTTP_DRAIN_SECONDS", "1"),
             ("OTEL_BSP_SCHEDULE_DELAY", "50"),
@@ -74,7 +75,15 @@ async fn used(folder: &Path) -> (Served, String) {
     assert_eq!(ask(&served, Method::PUT, network, growing(true)).await.0, 200);
     forecast(&served, network).await;
     assert_eq!(ask(&served, Method::GET, &format!("{network}/events"), Value::Null).await.0, 503);
-    let wanted = ["tailcast_notices_total", "tailcast_retention_removed_total", "tailcast_trace_exports_total"];
+    let query = "SELECT 1 AS degree, 1 AS nodes";
+    let source = json!({"database": "links", "query": query, "every": "P1D"});
+    assert_eq!(ask(&served, Method::PUT, &format!("{network}/source"), source).await.0, 201);
+    let wanted = [
+        "tailcast_notices_total",
+        "tailcast_retention_removed_total",
+        "tailcast_source_runs_total",
+        "tailcast_trace_exports_total",
+    ];
     let begun = Instant::now();
     loop {
         let text = scrape(&served).await;
