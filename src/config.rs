@@ -2,11 +2,13 @@
 
 mod access;
 mod fault;
+mod http;
 mod kinds;
 mod notices;
 mod retention;
 mod sources;
 mod telemetry;
+mod work;
 
 use std::collections::BTreeMap;
 use std::net::SocketAddr;
@@ -19,10 +21,12 @@ use serde::{Deserialize, Deserializer};
 
 pub use access::{AccessConfig, KeysNeeded};
 pub use fault::SettingsError;
+pub use http::HttpConfig;
 pub use notices::NoticesConfig;
 pub use retention::RetentionConfig;
 pub use sources::SourcesConfig;
 pub use telemetry::TelemetryConfig;
+pub use work::{ComputeConfig, JobsConfig};
 
 use crate::webhook::SecretFault;
 
@@ -97,131 +101,6 @@ impl DatabaseConfig {
     /// Longest time that the start spends on looking for damage.
     pub fn check_on_start(&self) -> Duration {
         Duration::from_millis(self.check_on_start_ms)
-    }
-}
-
-/// Limits of the HTTP side.
-#[derive(Debug, Clone, PartialEq, Deserialize)]
-#[serde(deny_unknown_fields)]
-pub struct HttpConfig {
-    /// Connections open at the same time.
-    pub max_connections: usize,
-    /// Largest request body, bytes.
-    pub body_limit_bytes: usize,
-    /// Memory for the bodies of all requests in work, bytes.
-    pub bodies_bytes: usize,
-    /// Memory for all answers on their way, bytes.
-    pub answers_bytes: usize,
-    /// Longest time in which a client takes nothing of an answer worth speaking of, seconds.
-    pub answer_pause_seconds: u64,
-    /// Longest time to send a request's head, seconds.
-    pub head_timeout_seconds: u64,
-    /// Longest time to send a body, seconds.
-    pub body_timeout_seconds: u64,
-    /// Requests served at the same time.
-    pub max_in_flight: usize,
-    /// Streams of events open at the same time.
-    pub max_streams: usize,
-    /// Time between two signs of life on a stream of events, seconds.
-    pub stream_keep_alive_seconds: u64,
-    /// Memory for copies of latest forecasts, bytes.
-    pub polled_bytes: usize,
-    /// Time after a stop signal in which everything is still served while `/readyz` says no, seconds.
-    pub drain_seconds: u64,
-    /// Time to finish after that, seconds.
-    pub shutdown_grace_seconds: u64,
-    /// Origins whose pages may ask.
-    #[serde(deserialize_with = "access::origins")]
-    pub allowed_origins: Vec<String>,
-}
-
-impl HttpConfig {
-    /// Longest time to send a request's head.
-    pub fn head_timeout(&self) -> Duration {
-        Duration::from_secs(self.head_timeout_seconds)
-    }
-
-    /// Longest time to send a body.
-    pub fn body_timeout(&self) -> Duration {
-        Duration::from_secs(self.body_timeout_seconds)
-    }
-
-    /// Longest time in which a client takes nothing of an answer worth speaking of.
-    pub fn answer_pause(&self) -> Duration {
-        Duration::from_secs(self.answer_pause_seconds)
-    }
-
-    /// Time between two signs of life on a stream of events.
-    pub fn stream_keep_alive(&self) -> Duration {
-        Duration::from_secs(self.stream_keep_alive_seconds)
-    }
-
-    /// Time after a stop signal in which everything is still served while `/readyz` says no.
-    pub fn drain(&self) -> Duration {
-        Duration::from_secs(self.drain_seconds)
-    }
-
-    /// Time to finish after that.
-    pub fn shutdown_grace(&self) -> Duration {
-        Duration::from_secs(self.shutdown_grace_seconds)
-    }
-}
-
-/// Limits of the computing side.
-#[derive(Debug, Clone, PartialEq, Deserialize)]
-#[serde(deny_unknown_fields)]
-pub struct ComputeConfig {
-    /// Computations at the same time; 0: one a core.
-    pub workers: usize,
-    /// Computations that may wait.
-    pub queue: usize,
-    /// Longest wait and computation of one request, seconds.
-    pub budget_seconds: u64,
-}
-
-impl ComputeConfig {
-    /// Longest wait and computation of one request.
-    pub fn budget(&self) -> Duration {
-        Duration::from_secs(self.budget_seconds)
-    }
-}
-
-/// Work that outlasts its request.
-#[derive(Debug, Clone, Copy, PartialEq, Eq, Deserialize)]
-#[serde(deny_unknown_fields)]
-pub struct JobsConfig {
-    /// Jobs that callers ask for, at work at the same time.
-    pub workers: usize,
-    /// Refreshes of tracked networks at work at the same time.
-    pub refresh_workers: usize,
-    /// Longest time that a refresh computes, seconds.
-    pub refresh_seconds: u64,
-    /// Jobs that may wait.
-    pub queue: usize,
-    /// Longest time that a request waits for its job, seconds.
-    pub wait_seconds: u64,
-    /// Largest link list, bytes as it is sent.
-    pub link_list_bytes: u64,
-    /// Longest time to send a link list, seconds.
-    pub link_list_seconds: u64,
-    /// Most nodes of a link list.
-    pub link_list_nodes: u64,
-}
-
-impl JobsConfig {
-    /// Longest time that a request waits for its job.
-    pub fn wait(&self) -> Duration {
-        Duration::from_secs(self.wait_seconds)
-    }
-
-    /// Longest time that a refresh computes.
-    pub fn refresh_time(&self) -> Duration {
-        Duration::from_secs(self.refresh_seconds)
-    }
-
-    /// Longest time to send a link list.
-    pub fn link_list_time(&self) -> Duration {
-        Duration::from_secs(self.link_list_seconds)
     }
 }
 
