@@ -171,7 +171,8 @@ fn observed<S: Clone + Send + Sync + 'static>(routes: Router<S>) -> Router<S> {
 /// The OpenAPI document; needs no database and no configuration.
 pub fn openapi() -> OpenApi {
     let routes = OpenApiRouter::with_openapi(docs::preamble()).merge(work_routes()).merge(around_routes());
-    access::with_access(webhooks::with_webhooks(docs::with_exclusive_fields(routes.into_openapi())))
+    let document = docs::with_name_forms(docs::with_exclusive_fields(routes.into_openapi()));
+    access::with_access(webhooks::with_webhooks(document))
 }
 
 /// The OpenAPI document as it is served and committed.

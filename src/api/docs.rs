@@ -9,6 +9,7 @@ use axum::response::{IntoResponse, Response};
 use axum::{Extension, Router};
 use serde_json::json;
 use utoipa::OpenApi as _;
+use utoipa::openapi::path::ParameterIn;
 use utoipa::openapi::{OpenApi, RefOr, Schema};
 use utoipa_axum::router::OpenApiRouter;
 use utoipa_axum::routes;
@@ -19,6 +20,12 @@ use super::AppState;
 /// What the pages may load: themselves alone. The viewer styles inline and draws images from data addresses.
 const PAGE_POLICY: &str = "default-src 'self'; style-src 'self' 'unsafe-inline'; img-src 'self' data:; \
                            frame-ancestors 'none'; base-uri 'none'";
+
+/// Parts of a path that callers name.
+const NAMES: [&str; 4] = ["name", "limit", "scenario", "notice"];
+/// What such a name looks like; `NetworkName` and its like read it.
+const NAME_PATTERN: &str = "^[A-Za-z0-9][A-Za-z0-9._~-]*$";
+const MOST_NAME_CHARS: usize = 100;
 
 /// Title, version and preamble of the document.
 #[derive(utoipa::OpenApi)]
@@ -67,6 +74,21 @@ pub fn with_exclusive_fields(mut document: OpenApi) -> OpenApi {
         if let Some(RefOr::T(Schema::Object(body))) = components.schemas.get_mut(name) {
             let one_of: Vec<_> = fields.iter().map(|field| json!({"required": [field]})).collect();
             body.extensions.get_or_insert_default().insert("oneOf".to_owned(), one_of.into());
+        }
+    }
+    document
+}
+
+/// Says of what form the names in a path are, wherever they stand.
+pub fn with_name_forms(mut document: OpenApi) -> OpenApi {
+    let operations = document.paths.paths.values_mut().flat_map(|item| {
+        [&mut item.get, &mut item.put, &mut item.post, &mut item.delete].into_iter().filter_map(Option::as_mut)
+    });
+    for parameter in operations.flat_map(|operation| operation.parameters.iter_mut().flatten()) {
+        let RefOr::T(parameter) = parameter else { continue };
+        let named = parameter.parameter_in == ParameterIn::Path && NAMES.contains(&parameter.name.as_str());
+        if let (true, Some(RefOr::T(Schema::Object(form)))) = (named, parameter.schema.as_mut()) {
+            (form.max_length, form.pattern) = (Some(MOST_NAME_CHARS), Some(NAME_PATTERN.to_owned()));
         }
     }
     document

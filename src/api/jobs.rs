@@ -179,7 +179,7 @@ pub fn taken_on(view: JobView, at_once: bool) -> Result<Response, ApiError> {
             ("ETag" = String, description = "Strong validator of how it stands, but for a stream"),
         ), content(
             (JobAnswer = "application/json"),
-            (String = "text/event-stream"),
+            (serde_json::Value = "text/event-stream"),
         )),
         (status = 204, description = "The stream was read to its end before"),
         (status = 304, description = "The client knows already"),

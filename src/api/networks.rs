@@ -68,7 +68,7 @@ pub fn routes() -> OpenApiRouter<AppState> {
     path = "/v1/networks/{name}",
     tag = "networks",
     params(
-        ("name" = String, Path, max_length = 100, pattern = "^[A-Za-z0-9][A-Za-z0-9._~-]*$", description = "The network"),
+        ("name" = String, Path, description = "The network"),
         ("If-Match" = Option<String>, Header, description = "Only when the settings have this ETag"),
         ("If-None-Match" = Option<String>, Header, description = "`*`: only when there is no such network"),
     ),

@@ -47,7 +47,7 @@ pub fn routes() -> OpenApiRouter<AppState> {
             counts as none"),
     ),
     responses(
-        (status = 200, description = "The stream", content((String = "text/event-stream"))),
+        (status = 200, description = "The stream", content((serde_json::Value = "text/event-stream"))),
         Refusals, FormRefusals,
     )
 )]

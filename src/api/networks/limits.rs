@@ -80,7 +80,7 @@ pub struct LimitPage {
     tag = "networks",
     params(
         ("name" = String, Path, description = "The network"),
-        ("limit" = String, Path, max_length = 100, pattern = "^[A-Za-z0-9][A-Za-z0-9._~-]*$", description = "The limit"),
+        ("limit" = String, Path, description = "The limit"),
         ("If-Match" = Option<String>, Header, description = "Only when the limit has this ETag; its answer does not matter"),
         ("If-None-Match" = Option<String>, Header, description = "`*`: only when there is no such limit"),
     ),

@@ -57,7 +57,7 @@ pub struct NoticePage {
     tag = "networks",
     params(
         ("name" = String, Path, description = "The network"),
-        ("notice" = String, Path, max_length = 100, pattern = "^[A-Za-z0-9][A-Za-z0-9._~-]*$", description = "The notice"),
+        ("notice" = String, Path, description = "The notice"),
         ("If-Match" = Option<String>, Header, description = "Only when the notice has this ETag; its deliveries do not matter"),
         ("If-None-Match" = Option<String>, Header, description = "`*`: only when there is no such notice"),
     ),

@@ -64,7 +64,7 @@ pub struct ScenarioPage {
     tag = "networks",
     params(
         ("name" = String, Path, description = "The network"),
-        ("scenario" = String, Path, max_length = 100, pattern = "^[A-Za-z0-9][A-Za-z0-9._~-]*$", description = "The scenario"),
+        ("scenario" = String, Path, description = "The scenario"),
         ("If-Match" = Option<String>, Header, description = "Only when the scenario has this ETag"),
         ("If-None-Match" = Option<String>, Header, description = "`*`: only when there is no such scenario"),
     ),
