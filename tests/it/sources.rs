@@ -50,6 +50,7 @@ async fn counting_in(address: &str) -> Service {
     let service = Service::start_with(|config| {
         counts_in(config, address);
         config.sources.least_every_seconds = 1;
+        config.limits.degree_counts = 1000;
     })
     .await;
     service.put(NETWORK, &json!({"degree_kind": "received"})).await.expect(201);
