@@ -1,6 +1,7 @@
 //! Two processes on one PostgreSQL: what one is told the other knows, and what one leaves the other ends, once.
 
 use std::collections::BTreeSet;
+use std::process::Command;
 use std::time::{Duration, Instant};
 
 use reqwest::{Client, Response};
@@ -11,7 +12,7 @@ use tempfile::TempDir;
 use crate::harness::{changed, fit_body, pairs};
 use crate::jobs::{is_live, link_list};
 use crate::postgres::Server;
-use crate::process::{Served, serve_with};
+use crate::process::{Served, command, serve_with};
 use crate::tracking::{grown, settings};
 
 const NETWORK: &str = "/v1/networks/heronsgate";
@@ -194,4 +195,32 @@ async fn a_job_called_off_at_the_other_ends_and_makes_way() {
     assert_eq!(ended["state"], "succeeded", "{ended}");
     assert_eq!(pair.count("SELECT count(*) FROM backtests").await, 1);
     assert_eq!(pair.read(&pair.first, &format!("/v1/jobs/{job}")).await["state"], "cancelled");
+}
+
+/// The kill loop in small; `studies/kills.txt` has the long one.
+fn killed_ten_times(database: &[&str]) {
+    let folder = tempfile::tempdir().unwrap();
+    let mut kills = Command::new("python3");
+    kills.arg(concat!(env!("CARGO_MANIFEST_DIR"), "/tests/kills.py")).arg(command(folder.path()).get_program());
+    match kills.args(["--kills", "10"]).args(database).output() {
+        Ok(told) => {
+            let text = [told.stdout, told.stderr].map(|bytes| String::from_utf8_lossy(&bytes).into_owned()).concat();
+            assert!(told.status.success() && text.contains("10 kills"), "{text}");
+        }
+        Err(error) => eprintln!("NOT RUN: the kill loop {database:?} needs python3: {error}"),
+    }
+}
+
+#[test]
+fn ten_kills_lose_and_double_nothing_on_a_file() {
+    killed_ten_times(&[]);
+}
+
+#[test]
+fn ten_kills_of_three_replicas_lose_and_double_nothing() {
+    if Server::given_or_own().is_some() && Command::new("psql").arg("--version").output().is_ok() {
+        killed_ten_times(&["--postgres"]);
+    } else {
+        eprintln!("NOT RUN: the kill loop of replicas needs PostgreSQL's server and psql");
+    }
 }
