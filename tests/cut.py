@@ -88,7 +88,8 @@ class Far:
         return answer
 
     def limit(self, count):
-        path = f"/v1/networks/heronsgate/limits/shards-{count % 50}"
+        # A few: each is answered anew with every forecast, which takes seconds.
+        path = f"/v1/networks/heronsgate/limits/shards-{count % 3}"
         answer = self.replicas.send("PUT", path, {"threshold": 10, "max_nodes": 1000 + count, "by": "2026-11-01", "risk": 0.1})
         if answer and answer[0] < 300:
             self.kept[path] = 1000 + count
@@ -196,7 +197,8 @@ def run(asked, near, far):
             faults.append(f"{what} is not well two seconds after recovery: {late}")
     if not ill or min(ill) - cut > MOST_PROBE:
         faults.append("/readyz did not tell in time")
-    if codes != ["store_unavailable"]:
+    # Until connections that say nothing have been waited for, all of them seem to be at work.
+    if "store_unavailable" not in codes or not set(codes) <= {"store_busy", "store_unavailable"}:
         faults.append(f"/readyz told {codes}")
     if not well:
         faults.append("/readyz did not come back")
