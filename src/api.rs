@@ -52,13 +52,15 @@ use streams::Streams;
 pub use access::{RULES as ACCESS_RULES, Rule as AccessRule};
 pub use error::ApiError;
 pub use examples::forecast_request as example_request;
-pub use extract::read_json;
+pub use extract::{faultless, read_json};
 pub use problem::Problem;
 pub use requests::{
     ArrivalsBody, BacktestBody, CHANGE_FIELDS, CampaignBody, DegreeKindName, EVIDENCE_FIELDS, FIT_FIELDS,
     FORECAST_FIELDS, FitRequestBody, FixedBody, ForecastRequestBody, HorizonBody, LIMIT_FIELDS, LinkEventsBody,
-    ModelName, NETWORK_FIELDS, NOTICE_FIELDS, SegmentBody, SnapshotBody, TransitionsBody, WindowBody, read_fit,
-    read_forecast,
+    ModelName, NETWORK_FIELDS, NOTICE_FIELDS, SegmentBody, SnapshotBody, TransitionsBody, WindowBody, read_backtest,
+    read_fit, read_forecast, read_kept_change, read_kept_limit, read_link_events, read_network, read_network_fit,
+    read_network_forecast, read_notice, read_snapshot, read_snapshot_csv, read_source, read_transitions,
+    read_transitions_csv,
 };
 
 /// What handlers share.
@@ -171,7 +173,7 @@ fn observed<S: Clone + Send + Sync + 'static>(routes: Router<S>) -> Router<S> {
 /// The OpenAPI document; needs no database and no configuration.
 pub fn openapi() -> OpenApi {
     let routes = OpenApiRouter::with_openapi(docs::preamble()).merge(work_routes()).merge(around_routes());
-    let document = docs::with_name_forms(docs::with_exclusive_fields(routes.into_openapi()));
+    let document = docs::with_constraints(routes.into_openapi());
     access::with_access(webhooks::with_webhooks(document))
 }
 

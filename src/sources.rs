@@ -5,6 +5,7 @@ mod database;
 mod fault;
 mod run;
 
+pub use answer::{Row, counts};
 pub use database::{Database, DatabaseFault};
 pub use fault::SourceFault;
 pub use run::{Counting, count};

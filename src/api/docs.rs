@@ -1,5 +1,7 @@
 //! The OpenAPI document and a viewer for it; neither loads anything from a network.
 
+mod constraints;
+
 use std::sync::Arc;
 
 use axum::extract::Request;
@@ -7,25 +9,19 @@ use axum::http::{HeaderValue, header};
 use axum::middleware::{self, Next};
 use axum::response::{IntoResponse, Response};
 use axum::{Extension, Router};
-use serde_json::json;
 use utoipa::OpenApi as _;
-use utoipa::openapi::path::ParameterIn;
-use utoipa::openapi::{OpenApi, RefOr, Schema};
+use utoipa::openapi::OpenApi;
 use utoipa_axum::router::OpenApiRouter;
 use utoipa_axum::routes;
 use utoipa_swagger_ui::{Config, SwaggerUi};
 
 use super::AppState;
 
+pub use constraints::with_constraints;
+
 /// What the pages may load: themselves alone. The viewer styles inline and draws images from data addresses.
 const PAGE_POLICY: &str = "default-src 'self'; style-src 'self' 'unsafe-inline'; img-src 'self' data:; \
                            frame-ancestors 'none'; base-uri 'none'";
-
-/// Parts of a path that callers name.
-const NAMES: [&str; 4] = ["name", "limit", "scenario", "notice"];
-/// What such a name looks like; `NetworkName` and its like read it.
-const NAME_PATTERN: &str = "^[A-Za-z0-9][A-Za-z0-9._~-]*$";
-const MOST_NAME_CHARS: usize = 100;
 
 /// Title, version and preamble of the document.
 #[derive(utoipa::OpenApi)]
@@ -54,44 +50,6 @@ struct Preamble;
 /// The document before any route adds itself.
 pub fn preamble() -> OpenApi {
     Preamble::openapi()
-}
-
-/// Says which fields exclude each other, in the one form that can be put beside properties: exactly one of them is
-/// required.
-pub fn with_exclusive_fields(mut document: OpenApi) -> OpenApi {
-    let Some(components) = document.components.as_mut() else { return document };
-    let exclusive = [
-        ("ForecastRequestBody", vec!["dates", "horizon"]),
-        ("ArrivalsBody", vec!["per_day", "segments", "csv"]),
-        ("HorizonBody", vec!["until", "ends_after"]),
-    ];
-    // Neither is required where a plan has dates.
-    if let Some(RefOr::T(Schema::Object(body))) = components.schemas.get_mut("NetworkForecastBody") {
-        let both = json!({"required": ["dates", "horizon"]});
-        body.extensions.get_or_insert_default().insert("not".to_owned(), both);
-    }
-    for (name, fields) in exclusive {
-        if let Some(RefOr::T(Schema::Object(body))) = components.schemas.get_mut(name) {
-            let one_of: Vec<_> = fields.iter().map(|field| json!({"required": [field]})).collect();
-            body.extensions.get_or_insert_default().insert("oneOf".to_owned(), one_of.into());
-        }
-    }
-    document
-}
-
-/// Says of what form the names in a path are, wherever they stand.
-pub fn with_name_forms(mut document: OpenApi) -> OpenApi {
-    let operations = document.paths.paths.values_mut().flat_map(|item| {
-        [&mut item.get, &mut item.put, &mut item.post, &mut item.delete].into_iter().filter_map(Option::as_mut)
-    });
-    for parameter in operations.flat_map(|operation| operation.parameters.iter_mut().flatten()) {
-        let RefOr::T(parameter) = parameter else { continue };
-        let named = parameter.parameter_in == ParameterIn::Path && NAMES.contains(&parameter.name.as_str());
-        if let (true, Some(RefOr::T(Schema::Object(form)))) = (named, parameter.schema.as_mut()) {
-            (form.max_length, form.pattern) = (Some(MOST_NAME_CHARS), Some(NAME_PATTERN.to_owned()));
-        }
-    }
-    document
 }
 
 /// The routes of this resource that the document lists.

@@ -9,7 +9,7 @@ mod listing;
 mod patience;
 mod place;
 
-pub use body::{JsonBody, OptionalJsonBody, RowsBody, read_json};
+pub use body::{JsonBody, OptionalJsonBody, RowsBody, faultless, read_json};
 pub use format::{ResultFormat, TableFormat, accepts_events, prefers_events};
 pub use forms::{
     BacktestForm, BacktestFormQuery, ComparisonForm, ComparisonFormQuery, FitForm, FitFormQuery, ForecastForm,

@@ -176,7 +176,7 @@ pub fn read_json<T>(bytes: &[u8], read: impl FnOnce(&RawValue, &mut Faults) -> O
 }
 
 /// What `read` gives, unless it noted a fault.
-fn faultless<T>(read: impl FnOnce(&mut Faults) -> Option<T>) -> Result<T, ApiError> {
+pub fn faultless<T>(read: impl FnOnce(&mut Faults) -> Option<T>) -> Result<T, ApiError> {
     let mut faults = Faults::default();
     match read(&mut faults) {
         Some(value) if faults.is_empty() => Ok(value),

@@ -5,7 +5,7 @@ use serde_json::value::RawValue;
 use utoipa::ToSchema;
 
 use super::outlook::{levels_of, thresholds_of};
-use super::schema::thresholds;
+use super::schema::{levels, thresholds};
 use crate::api::decode::{At, Faults, object, whole};
 use crate::config::LimitsConfig;
 use crate::model::{Levels, StandingPlan};
@@ -25,7 +25,7 @@ pub struct BacktestBody {
     pub ahead: Option<u64>,
     /// Levels of the intervals, each above 0 and at most 0.9999; 0.5 and 0.9 when left out.
     #[serde(skip_serializing_if = "Option::is_none")]
-    #[schema(nullable = false, min_items = 1, max_items = 20)]
+    #[schema(schema_with = levels, required = false)]
     pub levels: Option<Vec<f64>>,
 }
 

@@ -8,7 +8,7 @@ use utoipa::{PartialSchema, ToSchema};
 
 use super::network::EVIDENCE_FIELDS;
 use super::schema::{
-    ArrivalsBody, DegreeKindName, FitRequestBody, ForecastRequestBody, HorizonBody, degree_pairs, move_rows,
+    ArrivalsBody, DegreeKindName, FitRequestBody, ForecastRequestBody, HorizonBody, degree_pairs, levels, move_rows,
     share_pairs, thresholds,
 };
 
@@ -44,7 +44,7 @@ pub struct ForecastPlanBody {
     pub horizon: HorizonBody,
     /// Levels of the intervals, each above 0 and at most 0.9999; 0.5 and 0.9 when left out.
     #[serde(skip_serializing_if = "Option::is_none")]
-    #[schema(nullable = false, min_items = 1, max_items = 20)]
+    #[schema(schema_with = levels, required = false)]
     pub levels: Option<Vec<f64>>,
     /// New nodes; estimated from the snapshots when left out, which takes two of them.
     #[serde(skip_serializing_if = "Option::is_none")]

@@ -38,6 +38,16 @@ pub(super) fn thresholds() -> Array {
     ArrayBuilder::new().items(item).min_items(Some(1)).max_items(Some(1000)).description(Some(says)).build()
 }
 
+/// Levels of intervals.
+pub(super) fn levels() -> Array {
+    let says = "Levels of the intervals, each above 0 and at most 0.9999; 0.5 and 0.9 when left out.";
+    let item = ObjectBuilder::new()
+        .schema_type(SchemaType::Type(Type::Number))
+        .exclusive_minimum(Some(0))
+        .maximum(Some(0.9999));
+    ArrayBuilder::new().items(item).min_items(Some(1)).max_items(Some(20)).description(Some(says)).build()
+}
+
 fn whole(least: u32) -> ObjectBuilder {
     ObjectBuilder::new()
         .schema_type(SchemaType::Type(Type::Integer))
@@ -156,7 +166,7 @@ pub struct ForecastRequestBody {
     pub fixed: Option<FixedBody>,
     /// Levels of the intervals, each above 0 and at most 0.9999; 0.5 and 0.9 when left out.
     #[serde(skip_serializing_if = "Option::is_none")]
-    #[schema(nullable = false, min_items = 1, max_items = 20)]
+    #[schema(schema_with = levels, required = false)]
     pub levels: Option<Vec<f64>>,
     /// Limits on the number of hubs to answer for.
     #[serde(skip_serializing_if = "Option::is_none")]
