@@ -3,8 +3,8 @@
 
 use std::time::Instant;
 
+use arbitrary::Arbitrary;
 use jiff::{SignedDuration, Timestamp};
-use libfuzzer_sys::arbitrary::Arbitrary;
 use libfuzzer_sys::fuzz_target;
 use tailcast::evaluate::{OriginRequest, answer};
 use tailcast::fit::{FitRequest, Fixed, Rung};

@@ -3,7 +3,7 @@
 
 use std::time::Instant;
 
-use libfuzzer_sys::arbitrary::Arbitrary;
+use arbitrary::Arbitrary;
 use libfuzzer_sys::fuzz_target;
 use tailcast::growth::{Course, GrowthError, NetworkLaw};
 use tailcast::model::{
