@@ -52,7 +52,7 @@ FORECAST = {
 
 def request(method, path, body=None):
     text = json.dumps(body).encode() if body is not None else b""
-    head = f"{method} {path} HTTP/1.1\r\nhost: bench\r\ncontent-type: application/json\r\ncontent-length: {len(text)}\r\n\r\n"
+    head = f"{method} {path} HTTP/1.1\r\nhost: localhost\r\ncontent-type: application/json\r\ncontent-length: {len(text)}\r\n\r\n"
     return head.encode() + text
 
 

@@ -44,7 +44,7 @@ use utoipa_axum::router::OpenApiRouter;
 use crate::config::{Config, HttpConfig, JobsConfig, LimitsConfig};
 use crate::service::{GaugeCaps, Service};
 use access::Access;
-use admission::Admission;
+use admission::{Admission, Uploads};
 use observe::Observation;
 use polled::Polled;
 use streams::Streams;
@@ -80,6 +80,8 @@ pub struct AppState {
     pub gauges: GaugeCaps,
     /// Places for streams of events.
     pub streams: Streams,
+    /// Places for link lists under way.
+    pub uploads: Uploads,
     /// Copies of latest forecasts.
     pub polled: Polled,
     /// Who may ask for what.
@@ -93,6 +95,7 @@ impl AppState {
         Self {
             access: Access::new(service.clone(), config),
             polled: Polled::new(service.clone(), config.http.polled_bytes),
+            uploads: Uploads::new(&config.jobs, service.clone()),
             service,
             http: Arc::new(config.http.clone()),
             limits: config.limits,

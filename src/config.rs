@@ -229,12 +229,18 @@ impl Config {
         }
         let ranges = [
             ("database.readers", u64::from(database.readers), 1, MOST_THREADS),
+            ("database.connections", u64::from(database.connections), 1, MOST_THREADS),
             ("database.busy_timeout_ms", database.busy_timeout_ms, 0, DAY_SECONDS * 1000),
             ("http.max_connections", http.max_connections as u64, 1, MOST_CONNECTIONS),
             ("database.check_on_start_ms", database.check_on_start_ms, 0, DAY_SECONDS * 1000),
             ("http.body_limit_bytes", http.body_limit_bytes as u64, 1, MOST_THINGS),
             // A body as large as may be must fit into it, with the room in which it grows.
-            ("http.bodies_bytes", http.bodies_bytes as u64, 2 * http.body_limit_bytes as u64, MOST_THINGS),
+            (
+                "http.bodies_bytes",
+                http.bodies_bytes as u64,
+                (http.body_limit_bytes as u64).saturating_mul(2),
+                MOST_THINGS,
+            ),
             ("http.answers_bytes", http.answers_bytes as u64, 1, MOST_THINGS),
             ("http.answer_pause_seconds", http.answer_pause_seconds, 1, DAY_SECONDS),
             ("http.head_timeout_seconds", http.head_timeout_seconds, 1, DAY_SECONDS),

@@ -3,6 +3,7 @@
 use std::borrow::Cow;
 use std::fmt;
 
+use percent_encoding::percent_decode_str;
 use sha2::{Digest, Sha256};
 use subtle::ConstantTimeEq;
 
@@ -85,6 +86,18 @@ pub fn masked(text: &str) -> Cow<'_, str> {
     }
     safe.push_str(rest);
     Cow::Owned(safe)
+}
+
+/// A path with the secret part of every key in it left out, also of one whose characters are percent-encoded.
+pub fn masked_path(path: &str) -> Cow<'_, str> {
+    let plain = masked(path);
+    if !path.contains('%') {
+        return plain;
+    }
+    match masked(&percent_decode_str(path).decode_utf8_lossy()) {
+        Cow::Borrowed(_) => plain,
+        Cow::Owned(safe) => Cow::Owned(safe),
+    }
 }
 
 fn is_digit(byte: u8) -> bool {

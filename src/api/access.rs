@@ -5,6 +5,7 @@ mod document;
 mod fields;
 mod refusal;
 mod rules;
+mod site;
 
 use std::sync::Arc;
 use std::time::Duration;
@@ -12,7 +13,7 @@ use std::time::Duration;
 use axum::body::Body;
 use axum::extract::{FromRequestParts, MatchedPath, Request, State};
 use axum::http::request::Parts;
-use axum::http::{HeaderMap, HeaderValue, Method, StatusCode, header};
+use axum::http::{HeaderMap, HeaderValue, Method, StatusCode, Uri, header};
 use axum::middleware::Next;
 use axum::response::{IntoResponse, Response};
 use futures_util::StreamExt;
@@ -22,13 +23,14 @@ use super::observe::RequestId;
 use super::problem::Problem;
 use super::{ApiError, AppState};
 use crate::config::{Config, KeysNeeded};
-use crate::credential::{Credential, masked};
+use crate::credential::{Credential, masked_path};
 use crate::service::{
     Authorship, Belonging, KeyRing, KeyScope, LiveKey, Service, ServiceError, Spent, Standing, Thing, authored,
 };
 use fields::{Brought, brought, tell};
 use refusal::Refusal;
 use rules::{Need, Reach, is_page, methods_of, rule_of};
+use site::Site;
 
 pub use cors::cors;
 pub use document::with_access;
@@ -42,6 +44,8 @@ const STREAM_CHECK: Duration = Duration::from_secs(1);
 pub struct Access {
     service: Service,
     required: bool,
+    /// What is asked instead where no keys are.
+    site: Option<Site>,
     /// Whether pages of other origins are told what they may.
     cors: bool,
 }
@@ -54,13 +58,16 @@ impl Access {
     /// By the settings.
     pub fn new(service: Service, config: &Config) -> Self {
         let required = config.access.keys == KeysNeeded::Required;
-        Self { service, required, cors: !config.http.allowed_origins.is_empty() }
+        Self { service, required, site: Site::new(config), cors: !config.http.allowed_origins.is_empty() }
     }
 
     /// Whether a poll of a network's latest forecast may be answered without waiting for anything, and how its key's limits stand
     /// then. None where it must be looked at in full; nothing is counted then.
-    pub fn at_once(&self, network: &str, headers: &HeaderMap) -> Option<Standing> {
+    pub fn at_once(&self, network: &str, uri: &Uri, headers: &HeaderMap) -> Option<Standing> {
         if self.cors && headers.contains_key(header::ORIGIN) {
+            return None;
+        }
+        if self.site.as_ref().is_some_and(|site| site.refusal(&Method::GET, uri, headers).is_some()) {
             return None;
         }
         if !self.required {
@@ -83,9 +90,12 @@ impl Access {
         &self,
         need: Need,
         (route, path): (&str, &str),
-        headers: &HeaderMap,
+        (method, uri, headers): (&Method, &Uri, &HeaderMap),
     ) -> Result<Option<(Credential, Arc<LiveKey>, Standing)>, Denied> {
         let Need::Key(scope, reach) = need else { return Ok(None) };
+        if let Some(refusal) = self.site.as_ref().and_then(|site| site.refusal(method, uri, headers)) {
+            return Err(refusal.into());
+        }
         if !self.required {
             return Ok(None);
         }
@@ -164,7 +174,7 @@ impl Access {
             key: live.map(|live| (live.key.id.clone(), live.key.name.clone())),
             method: method.to_string(),
             route: route.to_owned(),
-            path: masked(path).into_owned(),
+            path: masked_path(path).into_owned(),
             network,
             request_id,
         })
@@ -180,9 +190,9 @@ pub async fn guard(State(access): State<Access>, mut request: Request, next: Nex
         return next.run(request).await;
     }
     let Some(rule) = rule_of(request.method().as_str(), route) else { return without_rule(route) };
-    let (path, method, headers) =
-        (request.uri().path().to_owned(), request.method().clone(), request.headers().clone());
-    let checked = access.check(rule.need, (route, &path), &headers).await;
+    let (uri, method, headers) = (request.uri().clone(), request.method().clone(), request.headers().clone());
+    let path = uri.path().to_owned();
+    let checked = access.check(rule.need, (route, &path), (&method, &uri, &headers)).await;
     let key = match checked {
         Ok(key) => key,
         Err(denied) => return denied.into_response(),
@@ -282,9 +292,14 @@ impl From<Refusal> for ApiError {
     }
 }
 
-/// Says how a key's limits stand in an answer that came at once.
-pub fn tell_standing(standing: &Standing, response: &mut Response) {
-    tell(standing, response.headers_mut());
+impl Access {
+    /// Says in an answer that came at once how its key's limits stand, and that another origin may be answered otherwise.
+    pub fn tell_at_once(&self, standing: &Standing, response: &mut Response) {
+        tell(standing, response.headers_mut());
+        if self.cors {
+            response.headers_mut().append(header::VARY, HeaderValue::from_static("origin"));
+        }
+    }
 }
 
 impl FromRequestParts<AppState> for Sight {

@@ -1,8 +1,10 @@
 //! Admission: which requests are served, and how much memory their bodies and answers may take meanwhile.
 
+use std::collections::HashSet;
 use std::pin::Pin;
-use std::sync::{Arc, Mutex, PoisonError};
+use std::sync::{Arc, Mutex, MutexGuard, PoisonError};
 use std::task::{Context, Poll, ready};
+use std::time::Duration;
 
 use axum::body::{Body, Bytes, HttpBody};
 use axum::extract::{Request, State};
@@ -11,8 +13,10 @@ use axum::response::{IntoResponse, Response};
 use hyper::body::{Frame, SizeHint};
 use tokio::sync::{OwnedSemaphorePermit, Semaphore};
 
+use tokio::time::timeout;
+
 use super::ApiError;
-use crate::config::HttpConfig;
+use crate::config::{HttpConfig, JobsConfig};
 use crate::service::Service;
 
 /// What budgets are counted in, bytes.
@@ -28,8 +32,31 @@ pub struct Admission {
     others: Arc<Semaphore>,
     bodies: Budget,
     answers: Budget,
+    /// How long an answer that must be given may wait for memory.
+    patience: Duration,
     service: Service,
 }
+
+/// Places for link lists under way: as many as may be at work and wait, and one a network. They are received for as long as
+/// `jobs.link_list_seconds`, which would keep other writes out of their places.
+#[derive(Debug, Clone)]
+pub struct Uploads {
+    free: Arc<Semaphore>,
+    networks: Arc<Mutex<HashSet<String>>>,
+    service: Service,
+}
+
+/// A list's place until dropped.
+#[derive(Debug)]
+pub struct Upload {
+    network: String,
+    uploads: Uploads,
+    _free: OwnedSemaphorePermit,
+}
+
+/// A request's place, which it may leave before it is answered.
+#[derive(Debug, Clone)]
+pub struct Place(Arc<Mutex<Option<OwnedSemaphorePermit>>>);
 
 /// A bounded number of bytes.
 #[derive(Debug, Clone)]
@@ -50,7 +77,7 @@ impl Admission {
     pub fn new(config: &HttpConfig, service: Service) -> Self {
         let places = || Arc::new(Semaphore::new(config.max_in_flight.min(Semaphore::MAX_PERMITS)));
         let (bodies, answers) = (Budget::of(config.bodies_bytes), Budget::of(config.answers_bytes));
-        Self { reads: places(), others: places(), bodies, answers, service }
+        Self { reads: places(), others: places(), bodies, answers, patience: config.answer_pause(), service }
     }
 
     /// The refusal of what there is no room for.
@@ -59,11 +86,52 @@ impl Admission {
     }
 }
 
+impl Uploads {
+    /// As configured.
+    pub fn new(config: &JobsConfig, service: Service) -> Self {
+        let most = config.workers.saturating_add(config.queue).clamp(1, Semaphore::MAX_PERMITS);
+        Self { free: Arc::new(Semaphore::new(most)), networks: Arc::default(), service }
+    }
+
+    /// A place for a network's list.
+    ///
+    /// # Errors
+    /// When all are taken, or another list of the network is under way.
+    pub fn begin(&self, network: &str) -> Result<Upload, ApiError> {
+        let full = || ApiError::Full { wait: self.service.backlog() };
+        let free = self.free.clone().try_acquire_owned().map_err(|_| full())?;
+        if !self.networks().insert(network.to_owned()) {
+            return Err(full());
+        }
+        Ok(Upload { network: network.to_owned(), uploads: self.clone(), _free: free })
+    }
+
+    fn networks(&self) -> MutexGuard<'_, HashSet<String>> {
+        // The set is whole between any two statements, whoever panicked in between.
+        self.networks.lock().unwrap_or_else(PoisonError::into_inner)
+    }
+}
+
+impl Drop for Upload {
+    fn drop(&mut self) {
+        self.uploads.networks().remove(&self.network);
+    }
+}
+
+impl Place {
+    /// Gives the place to others.
+    pub fn leave(&self) {
+        self.0.lock().unwrap_or_else(PoisonError::into_inner).take();
+    }
+}
+
 /// Turns a request away at once when all places are taken.
 pub async fn admit(State(admission): State<Admission>, mut request: Request, next: Next) -> Response {
     let repeatable = request.method().is_safe();
     let places = if repeatable { &admission.reads } else { &admission.others };
-    let Ok(_place) = places.try_acquire() else { return admission.full().into_response() };
+    let Ok(place) = places.clone().try_acquire_owned() else { return admission.full().into_response() };
+    let place = Place(Arc::new(Mutex::new(Some(place))));
+    request.extensions_mut().insert(place.clone());
     let held = Held { taken: Arc::default(), admission: admission.clone() };
     request.extensions_mut().insert(held.clone());
     let response = next.run(request).await;
@@ -77,12 +145,15 @@ pub async fn admit(State(admission): State<Admission>, mut request: Request, nex
     match free.clone().try_acquire_many_owned(pages) {
         Ok(memory) => response.map(|body| Body::new(Counted { body, memory: Arc::new(memory) })),
         Err(_) if repeatable => admission.full().into_response(),
-        // What it tells of is done, and not to be asked for again. It waits in its place until clients have taken other answers or
-        // have been given up; the budget is never closed.
-        Err(_) => match free.acquire_many_owned(pages).await {
-            Ok(memory) => response.map(|body| Body::new(Counted { body, memory: Arc::new(memory) })),
-            Err(_) => response,
-        },
+        // What it tells of is done, and not to be asked for again. It lets others into its place and waits for as long as a slow reader
+        // may be quiet; then it leaves all the same: it is in memory already.
+        Err(_) => {
+            place.leave();
+            match timeout(admission.patience, free.acquire_many_owned(pages)).await {
+                Ok(Ok(memory)) => response.map(|body| Body::new(Counted { body, memory: Arc::new(memory) })),
+                _ => response,
+            }
+        }
     }
 }
 

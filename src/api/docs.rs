@@ -2,8 +2,7 @@
 
 mod constraints;
 
-use std::sync::Arc;
-
+use axum::body::Bytes;
 use axum::extract::Request;
 use axum::http::{HeaderValue, header};
 use axum::middleware::{self, Next};
@@ -65,15 +64,14 @@ pub fn pages() -> Router<AppState> {
 
 /// The document's text, made once.
 #[derive(Clone)]
-pub struct DocumentText(pub Arc<str>);
+pub struct DocumentText(pub Bytes);
 
 /// This document
 #[utoipa::path(get, path = "/openapi.json", tag = "operation", responses(
     (status = 200, description = "OpenAPI 3.1", body = Object, content_type = "application/json"),
 ))]
 async fn openapi_json(Extension(DocumentText(text)): Extension<DocumentText>) -> Response {
-    ([(header::CONTENT_TYPE, "application/json"), (header::CACHE_CONTROL, "no-cache")], text.to_string())
-        .into_response()
+    ([(header::CONTENT_TYPE, "application/json"), (header::CACHE_CONTROL, "no-cache")], text).into_response()
 }
 
 async fn with_page_policy(request: Request, next: Next) -> Response {

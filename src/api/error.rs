@@ -170,7 +170,7 @@ impl ApiError {
                 Problem::new(S::REQUEST_TIMEOUT, "body_too_slow", detail)
             }
             Self::BodyPaused { limit } => {
-                let detail = format!("Nothing more of the body came for {} s; send it again.", limit.as_secs());
+                let detail = format!("Less than 16 KiB of the list came in {} s; send it again.", limit.as_secs());
                 Problem::new(S::REQUEST_TIMEOUT, "body_too_slow", detail)
             }
             Self::ListTooLarge { limit } => {

@@ -15,7 +15,7 @@ use uuid::Builder;
 use uuid::fmt::Hyphenated;
 
 use super::problem::{Pending, Problem};
-use crate::credential::masked;
+use crate::credential::{masked, masked_path};
 use trace::Trace;
 
 pub use trace::TRACES;
@@ -53,7 +53,7 @@ pub struct Observation<'a> {
     id: HeaderValue,
     method: &'static str,
     route: &'a str,
-    path: &'a str,
+    path: Cow<'a, str>,
     span: Span,
 }
 
@@ -61,7 +61,8 @@ impl<'a> Observation<'a> {
     /// A request that came at `started`.
     pub fn begin(started: Instant, method: &Method, route: &'a str, path: &'a str, headers: &HeaderMap) -> Self {
         let (id, method) = (request_id(headers), method_label(method));
-        let span = request_span(id_text(&id), method, path, headers);
+        let path = masked_path(path);
+        let span = request_span(id_text(&id), method, &path, headers);
         Self { started, id, method, route, path, span }
     }
 
@@ -70,7 +71,7 @@ impl<'a> Observation<'a> {
         let _entered = self.span.enter();
         let status = response.status().as_u16();
         self.span.record("status", status);
-        complete_problem(response, id_text(&self.id), self.path);
+        complete_problem(response, id_text(&self.id), &self.path);
         let elapsed = self.started.elapsed();
         let headers = response.headers_mut();
         headers.insert(REQUEST_ID, self.id);

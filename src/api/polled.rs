@@ -14,7 +14,7 @@ use axum::http::{HeaderMap, HeaderValue, Method, StatusCode, Uri, header};
 use axum::response::Response;
 use tokio::sync::watch;
 
-use super::access::{self, Access};
+use super::access::Access;
 use super::extract::{ForecastForm, ResultFormat};
 use super::networks::{LATEST_ROUTE, polled_network};
 use super::observe::{Observation, leave_room};
@@ -86,9 +86,9 @@ impl Polled {
         let started = Instant::now();
         let copy = self.inner.holding(network, started)?;
         // Last, for it counts.
-        let standing = access.at_once(network, headers)?;
+        let standing = access.at_once(network, uri, headers)?;
         let mut response = copy.json(headers);
-        access::tell_standing(&standing, &mut response);
+        access.tell_at_once(&standing, &mut response);
         Observation::begin(started, method, LATEST_ROUTE, uri.path(), headers).finish(&mut response);
         Some(response)
     }

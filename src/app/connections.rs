@@ -32,8 +32,13 @@ const FLUSH: Duration = Duration::from_millis(500);
 const HEAD_BYTES: usize = 64 * 1024;
 /// Connections beyond the most on which clients are told so, and probes answered; those beyond these are closed at once.
 const SPARE: usize = 64;
-/// How long such a connection may last.
+/// How long such a connection may last, and take to send its request's head.
 const SPARE_TIME: Duration = Duration::from_secs(5);
+const SPARE_HEAD: Duration = Duration::from_secs(1);
+/// Most bytes that the system takes of an answer before the client has room for them. Of its own accord it takes megabytes, and then
+/// nothing until a third of them has left: somebody who reads slowly would be taken for one who reads nothing.
+#[cfg(target_os = "linux")]
+const UNSENT_BYTES: u32 = 32 * 1024;
 /// Unanswered signs of life after which the other end is taken to be gone.
 const SIGNS: u32 = 3;
 
@@ -102,7 +107,10 @@ fn mind(stream: &TcpStream, pause: Duration) {
     // Where a system does not take these, time limits of our own still hold.
     let _ = socket.set_tcp_keepalive(&quiet);
     #[cfg(target_os = "linux")]
-    let _ = socket.set_tcp_user_timeout(Some(pause));
+    {
+        let _ = socket.set_tcp_user_timeout(Some(pause));
+        let _ = socket.set_tcp_notsent_lowat(UNSENT_BYTES);
+    }
 }
 
 /// Serves one connection. After the stop its request in work is finished, and its answer sent to a client that reads; a request
@@ -178,7 +186,10 @@ async fn connection(stream: TcpStream, front: Front, terms: Terms, member: Membe
 
 /// Answers one request of a connection that is one too many: probes as ever, what is under /v1 with a refusal.
 async fn spare(stream: TcpStream, front: Front, member: Member) {
+    let activity = member.activity().clone();
+    let heard = activity.clone();
     let service = service_fn(move |request: hyper::Request<Incoming>| {
+        heard.note_heard();
         let refusal = front.refused(request.method(), request.uri(), request.headers());
         let router = front.router();
         async move {
@@ -190,12 +201,16 @@ async fn spare(stream: TcpStream, front: Front, member: Member) {
     });
     let serving = http1::Builder::new()
         .timer(TokioTimer::new())
-        .header_read_timeout(SPARE_TIME)
+        .header_read_timeout(SPARE_HEAD)
         .max_buf_size(HEAD_BYTES)
         .keep_alive(false)
         .serve_connection(TokioIo::new(stream), service);
-    // Whoever is slower is not told.
-    let _ = timeout(SPARE_TIME, serving).await;
+    tokio::select! {
+        // Whoever is slower is not told.
+        _ = timeout(SPARE_TIME, serving) => {}
+        // Others ask while it says nothing.
+        () = activity.asked_to_go() => {}
+    }
     drop(member);
 }
 

@@ -1,6 +1,6 @@
 //! Work that takes processor time, off the async runtime: on threads of lower priority, so that whatever answers at once goes before it.
 
-use std::sync::LazyLock;
+use std::sync::{LazyLock, Once};
 use std::thread::{Builder, available_parallelism};
 
 use tokio::sync::{Semaphore, oneshot};
@@ -60,8 +60,13 @@ pub async fn converted<T: Send + 'static>(work: impl FnOnce() -> T + Send + 'sta
 
 #[cfg(target_os = "linux")]
 fn step_back() {
+    static TOLD: Once = Once::new();
     // Of this thread alone: Linux keeps a niceness a thread. Where it is refused, the work is done all the same.
-    let _ = rustix::process::setpriority_process(None, NICENESS);
+    if let Err(error) = rustix::process::setpriority_process(None, NICENESS) {
+        TOLD.call_once(|| {
+            tracing::warn!(%error, "computing threads may not take a lower priority (setpriority); probes and polls may wait for them");
+        });
+    }
 }
 
 /// Elsewhere niceness is the whole process's.

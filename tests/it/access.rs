@@ -140,6 +140,24 @@ fn the_access_table_is_the_rules() {
     }
 }
 
+/// Where no keys are asked for, a page that a browser shows can neither reach the service by a name of its own nor write.
+#[tokio::test]
+async fn without_keys_pages_of_other_origins_are_turned_away() {
+    let service = Service::start().await;
+    let send = async |method: Method, path: &str, header: &str, value: &str| {
+        answered(service.request(method, path).header(header, value)).await
+    };
+    for path in ["/v1/networks", "/v1/networks/heronsgate/forecasts/latest", "/metrics"] {
+        send(Method::GET, path, "host", "evil.example").await.expect_problem(403, "host_not_allowed");
+    }
+    for (method, path) in [(Method::POST, "/v1/networks/a/source/runs"), (Method::DELETE, "/v1/networks/a")] {
+        send(method.clone(), path, "origin", "https://evil.example").await.expect_problem(403, "origin_not_allowed");
+        let own = format!("http://{}", service.address());
+        send(method, path, "origin", &own).await.expect_problem(404, "not_found");
+    }
+    send(Method::GET, "/livez", "host", "evil.example").await.expect(200);
+}
+
 /// What a key that is bound to other networks is answered, by the rule.
 fn beyond(rule: &str) -> &'static [(u16, &'static str)] {
     match rule {

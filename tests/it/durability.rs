@@ -203,7 +203,7 @@ async fn a_hundred_million_pairs_are_refused_in_little_memory() {
 }
 
 #[cfg(target_os = "linux")]
-const HEAD: &str = "POST /v1/fits HTTP/1.1\r\nHost: t\r\nContent-Type: application/json\r\n";
+const HEAD: &str = "POST /v1/fits HTTP/1.1\r\nHost: localhost\r\nContent-Type: application/json\r\n";
 
 #[cfg(target_os = "linux")]
 fn peak_memory_kb(process: u32) -> u64 {

@@ -270,7 +270,7 @@ async fn what_is_no_link_list_is_refused() {
     let announced = send(&service, LINKS, large.clone(), &[]).await.expect_problem(413, "body_too_large");
     assert!(announced.text.contains("link_list_bytes"), "{}", announced.text);
     let mut chunked = std::net::TcpStream::connect(service.address()).unwrap();
-    let head = "HTTP/1.1\r\nHost: t\r\nContent-Type: text/csv\r\nTransfer-Encoding: chunked\r\n\r\n";
+    let head = "HTTP/1.1\r\nHost: localhost\r\nContent-Type: text/csv\r\nTransfer-Encoding: chunked\r\n\r\n";
     write!(chunked, "PUT {LINKS} {head}{:x}\r\n{large}\r\n", large.len()).unwrap();
     let mut answer = [0; 4096];
     let read = chunked.read(&mut answer).unwrap();

@@ -63,7 +63,8 @@ async fn an_answer_that_takes_too_long_is_given_up() {
 /// The head of a request whose body never comes to an end.
 fn hanging_post(service: &Service) -> TcpStream {
     let mut stream = TcpStream::connect(service.address()).unwrap();
-    let head = "POST /v1/fits HTTP/1.1\r\nHost: t\r\nContent-Type: application/json\r\nContent-Length: 100\r\n\r\n{";
+    let head =
+        "POST /v1/fits HTTP/1.1\r\nHost: localhost\r\nContent-Type: application/json\r\nContent-Length: 100\r\n\r\n{";
     stream.write_all(head.as_bytes()).unwrap();
     stream
 }

@@ -111,7 +111,7 @@ async fn a_run_needs_something_to_start_from_and_takes_no_evidence() {
 }
 
 #[tokio::test]
-async fn a_key_is_for_one_network() {
+async fn keys_of_one_network_are_not_those_of_another() {
     let service = tracking().await;
     service.put("/v1/networks/other", &json!({"degree_kind": "received"})).await.expect(201);
     put_counts(&service, "2026-06-01", pairs(&COUNTS[1])).await;
@@ -128,5 +128,9 @@ async fn a_key_is_for_one_network() {
     // What is stored may change meanwhile: the run was made from what was stored then.
     put_counts(&service, "2026-06-01", pairs(&COUNTS[0])).await;
     assert_eq!(post(&format!("{NETWORK}/fits")).await.expect(201).text, first.text);
-    post("/v1/networks/other/fits").await.expect_problem(409, "idempotency_key_reused");
+    let other = post("/v1/networks/other/fits").await.expect(201);
+    assert_ne!(other.json()["id"], first.json()["id"]);
+    assert_eq!(post("/v1/networks/other/fits").await.expect(201).text, other.text);
+    let request = service.request(Method::POST, &format!("{NETWORK}/fits")).header("idempotency-key", "nightly");
+    answered(request.json(&json!({"label": "another"}))).await.expect_problem(409, "idempotency_key_reused");
 }

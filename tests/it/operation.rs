@@ -144,7 +144,7 @@ async fn a_stop_finishes_an_answer_that_is_being_sent() {
     let socket = tokio::net::TcpSocket::new_v4().unwrap();
     socket.set_recv_buffer_size(4096).unwrap();
     let mut connection = socket.connect(service.address()).await.unwrap();
-    connection.write_all(format!("GET {path} HTTP/1.1\r\nhost: x\r\n\r\n").as_bytes()).await.unwrap();
+    connection.write_all(format!("GET {path} HTTP/1.1\r\nhost: localhost\r\n\r\n").as_bytes()).await.unwrap();
     let mut answer = vec![0; 1024];
     connection.read_exact(&mut answer).await.unwrap();
     let stop = tokio::spawn(service.stop());

@@ -22,6 +22,10 @@ pub enum Refusal {
     Network,
     /// Its key is bound to networks, and this belongs to all or none.
     Bound,
+    /// It was sent to a name that is not the machine's own.
+    Host,
+    /// A page of another origin had it sent.
+    Origin,
     /// The minute's requests are used up.
     TooFast(Duration),
     /// The day's requests are used up.
@@ -67,6 +71,17 @@ impl Refusal {
                               /v1/networks/{name}, or take a key that is not bound."
                         .to_owned();
                 (S::FORBIDDEN, "beyond_networks", detail, Some("error=\"insufficient_scope\""))
+            }
+            Self::Host => {
+                let detail = "The request was sent to a name that is not this machine's own, and no access keys are asked for here. \
+                              Send it to 127.0.0.1 or localhost; or, where others reach the service by a name, have keys asked for \
+                              (access.keys).";
+                return Problem::new(S::FORBIDDEN, "host_not_allowed", detail);
+            }
+            Self::Origin => {
+                let detail = "A web page of another origin sent this, and no access keys are asked for here. Whoever runs this service \
+                              may list the page's origin in http.allowed_origins; a gateway in between passes Host on as it came.";
+                return Problem::new(S::FORBIDDEN, "origin_not_allowed", detail);
             }
             Self::TooFast(wait) => {
                 let detail =

@@ -21,11 +21,10 @@ impl IdempotencyKey {
         self.0.map(|key| KeyClaim { key, body_digest: sha256_hex(body.bytes()) })
     }
 
-    /// The key's claim on a body that is meant for a network: the same body for another network is another request.
+    /// The key's claim on a body that is meant for a network: keys of different networks have nothing to do with each other.
     pub fn claim_for(self, network: &NetworkName, body: &JsonBody) -> Option<KeyClaim> {
-        // A name holds no NUL.
-        let meant = [network.as_str().as_bytes(), b"\0", body.bytes()].concat();
-        self.0.map(|key| KeyClaim { key, body_digest: sha256_hex(&meant) })
+        // Neither a name nor a key holds a space.
+        self.0.map(|key| KeyClaim { key: format!("{} {key}", network.as_str()), body_digest: sha256_hex(body.bytes()) })
     }
 }
 

@@ -63,8 +63,10 @@ async fn put_links(
     list: LinkListBody,
 ) -> Result<Response, ApiError> {
     let name = network_name(&name)?;
+    let under_way = state.uploads.begin(name.as_str())?;
     let mut upload = state.service.begin_link_list(&name).await?;
     list.receive(&mut upload, &state).await?;
+    drop(under_way);
     let id = state.service.take_link_list(name, asked.task, upload).await?;
     let job = state.service.job_after(id, patience.wait).await?;
     jobs::taken_on(job, patience.at_once)

@@ -17,7 +17,7 @@ pub struct Crowd {
 #[derive(Debug)]
 struct Inner {
     open: Mutex<HashMap<u64, Arc<Activity>>>,
-    spare: AtomicUsize,
+    spare: Mutex<HashMap<u64, Arc<Activity>>>,
     next: AtomicU64,
     begun: Instant,
 }
@@ -41,8 +41,8 @@ pub struct Activity {
 #[derive(Debug)]
 pub struct Member {
     crowd: Arc<Inner>,
-    /// None: a spare one.
-    id: Option<u64>,
+    id: u64,
+    spare: bool,
     activity: Arc<Activity>,
 }
 
@@ -52,62 +52,62 @@ pub struct InWork(Arc<Activity>);
 
 impl Default for Crowd {
     fn default() -> Self {
-        let (spare, next) = (AtomicUsize::new(0), AtomicU64::new(0));
-        Self { inner: Arc::new(Inner { open: Mutex::default(), spare, next, begun: Instant::now() }) }
+        let (open, spare) = (Mutex::default(), Mutex::default());
+        Self { inner: Arc::new(Inner { open, spare, next: AtomicU64::new(0), begun: Instant::now() }) }
     }
 }
 
 impl Crowd {
     /// Connections that are not spare ones.
     pub fn len(&self) -> usize {
-        self.inner.open().len()
+        locked(&self.inner.open).len()
     }
 
-    /// Asks the connection to go that has rested longest; false when all are at work. One that sends heads or bodies slowly, but has
-    /// no request in work, rests.
+    /// Asks the connection to go that has rested longest, those before all others that have never asked for anything; false when all
+    /// are at work. One that sends heads or bodies slowly, but has no request in work, rests.
     pub fn let_one_go(&self) -> bool {
-        let mut open = self.inner.open();
+        let mut open = locked(&self.inner.open);
         let resting = open.iter().filter(|(_, activity)| activity.rests() && !activity.asked.load(Ordering::Relaxed));
-        let Some((&id, _)) = resting.min_by_key(|(_, activity)| activity.active.load(Ordering::Relaxed)) else {
+        let Some((&id, _)) = resting.min_by_key(|(_, activity)| (!activity.is_new(), activity.since())) else {
             return false;
         };
         // Its place is another's at once: it is closed when its task runs next.
         if let Some(activity) = open.remove(&id) {
-            activity.asked.store(true, Ordering::Relaxed);
-            activity.go.notify_one();
+            activity.ask_to_go();
         }
         true
     }
 
     /// A place for a connection.
     pub fn join(&self) -> Member {
-        let id = self.inner.next.fetch_add(1, Ordering::Relaxed);
-        let activity = Arc::new(Activity::new(self.inner.begun));
-        self.inner.open().insert(id, activity.clone());
-        Member::new(self.inner.clone(), Some(id), activity)
+        Member::new(self.inner.clone(), false, &mut locked(&self.inner.open))
     }
 
-    /// A place beyond all places, of which there are `most`.
+    /// A place beyond all places, of which there are `most`. Who has held one longest without asking for anything gives it up.
     pub fn join_spare(&self, most: usize) -> Option<Member> {
-        if self.inner.spare.fetch_add(1, Ordering::Relaxed) >= most {
-            self.inner.spare.fetch_sub(1, Ordering::Relaxed);
-            return None;
+        let mut spare = locked(&self.inner.spare);
+        if spare.len() >= most {
+            let silent = spare.iter().filter(|(_, activity)| activity.is_new());
+            let (&id, _) = silent.min_by_key(|(_, activity)| activity.since())?;
+            if let Some(activity) = spare.remove(&id) {
+                activity.ask_to_go();
+            }
         }
-        Some(Member::new(self.inner.clone(), None, Arc::new(Activity::new(self.inner.begun))))
+        Some(Member::new(self.inner.clone(), true, &mut spare))
     }
 }
 
-impl Inner {
-    fn open(&self) -> MutexGuard<'_, HashMap<u64, Arc<Activity>>> {
-        // The map is whole between any two statements, whoever panicked in between.
-        self.open.lock().unwrap_or_else(PoisonError::into_inner)
-    }
+fn locked<T>(map: &Mutex<T>) -> MutexGuard<'_, T> {
+    // A map is whole between any two statements, whoever panicked in between.
+    map.lock().unwrap_or_else(PoisonError::into_inner)
 }
 
 impl Member {
-    fn new(crowd: Arc<Inner>, id: Option<u64>, activity: Arc<Activity>) -> Self {
+    fn new(crowd: Arc<Inner>, spare: bool, places: &mut HashMap<u64, Arc<Activity>>) -> Self {
         gauge!("tailcast_http_connections").increment(1.0);
-        Self { crowd, id, activity }
+        let (id, activity) = (crowd.next.fetch_add(1, Ordering::Relaxed), Arc::new(Activity::new(crowd.begun)));
+        places.insert(id, activity.clone());
+        Self { crowd, id, spare, activity }
     }
 
     /// What the connection is doing.
@@ -118,10 +118,8 @@ impl Member {
 
 impl Drop for Member {
     fn drop(&mut self) {
-        match self.id {
-            Some(id) => drop(self.crowd.open().remove(&id)),
-            None => drop(self.crowd.spare.fetch_sub(1, Ordering::Relaxed)),
-        }
+        let places = if self.spare { &self.crowd.spare } else { &self.crowd.open };
+        locked(places).remove(&self.id);
         gauge!("tailcast_http_connections").decrement(1.0);
     }
 }
@@ -172,6 +170,16 @@ impl Activity {
         self.requests.load(Ordering::Relaxed) == 0 && !self.sending.load(Ordering::Relaxed)
     }
 
+    /// When it was opened or last sent something.
+    fn since(&self) -> u64 {
+        self.active.load(Ordering::Relaxed)
+    }
+
+    fn ask_to_go(&self) {
+        self.asked.store(true, Ordering::Relaxed);
+        self.go.notify_one();
+    }
+
     /// Returns when the connection is asked to go.
     pub async fn asked_to_go(&self) {
         self.go.notified().await;
@@ -219,8 +227,24 @@ mod tests {
     fn spare_places_are_counted() {
         let crowd = Crowd::default();
         let first = crowd.join_spare(1).unwrap();
+        first.activity().note_heard();
         assert!(crowd.join_spare(1).is_none() && crowd.len() == 0);
         drop(first);
-        assert!(crowd.join_spare(1).is_some());
+        let silent = crowd.join_spare(1).unwrap();
+        let next = crowd.join_spare(1).unwrap();
+        assert!(silent.activity().asked.load(Ordering::Relaxed) && !next.activity().asked.load(Ordering::Relaxed));
+        drop(silent);
+        assert_eq!(locked(&crowd.inner.spare).len(), 1);
+    }
+
+    #[test]
+    fn who_never_asked_goes_before_who_did() {
+        let crowd = Crowd::default();
+        let asked = crowd.join();
+        asked.activity().note_heard();
+        sleep(Duration::from_millis(3));
+        let silent = crowd.join();
+        assert!(crowd.let_one_go());
+        assert!(silent.activity().asked.load(Ordering::Relaxed) && !asked.activity().asked.load(Ordering::Relaxed));
     }
 }
