@@ -225,10 +225,18 @@ impl Service {
         self.jobs.stop();
     }
 
+    /// Keeps other services off a database file, until the answer is dropped; nothing on a server, which they share.
+    ///
+    /// # Errors
+    /// When another service has the file.
+    pub fn keep_alone(&self) -> Result<Option<std::fs::File>, StoreError> {
+        self.store.keep_alone()
+    }
+
     /// Closes the database.
     pub async fn close(&self) {
         // What is not given up now is anybody's when the claim runs out.
-        if self.store.is_shared() && !matches!(timeout(RELEASE_TIME, self.store.release_claims()).await, Ok(Ok(()))) {
+        if !matches!(timeout(RELEASE_TIME, self.store.release_claims()).await, Ok(Ok(()))) {
             tracing::warn!("claims on jobs could not be given up; others wait until they run out");
         }
         self.store.close().await;

@@ -85,8 +85,8 @@ const SQLITE_CANTOPEN: u32 = 14;
 const SQLITE_NOTADB: u32 = 26;
 
 // SQLSTATEs: https://www.postgresql.org/docs/15/errcodes-appendix.html
-/// Serialisation failure, deadlock, lock not available, too many connections, a statement's time is over.
-const POSTGRES_BUSY: [&str; 5] = ["40001", "40P01", "55P03", "53300", "57014"];
+/// Serialisation failure, deadlock, lock not available, too many connections, a statement's time is over, what was referred to went meanwhile.
+const POSTGRES_BUSY: [&str; 6] = ["40001", "40P01", "55P03", "53300", "57014", "23503"];
 /// Connection lost, out of memory, shut down or starting, a failing system, no such database, not allowed in, idle for too long.
 const POSTGRES_UNUSABLE: [&str; 7] = ["08", "53", "57P", "58", "3D000", "28", "25P03"];
 const POSTGRES_FULL: &str = "53100";

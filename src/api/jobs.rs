@@ -270,6 +270,7 @@ impl FromRequestParts<AppState> for JobListing {
                 faults.push(Fault { place: Place::Query(name.clone()), detail: detail.to_owned() });
             };
             match name.as_str() {
+                "network" if value.contains('\0') => fault("holds a NUL character"),
                 "network" => filter.network = Some(value),
                 "limit" => match pages::limit(Some(&value)) {
                     Ok(limit) => filter.limit = limit,

@@ -1,5 +1,6 @@
 //! `serve`: listen, answer, stop in good order.
 
+use std::fs::File;
 use std::net::SocketAddr;
 use std::time::Duration;
 
@@ -35,6 +36,8 @@ pub struct Running {
     bookkeeping: JoinHandle<()>,
     drain: Duration,
     grace: Duration,
+    /// Held to the end.
+    _alone: Option<File>,
 }
 
 impl Running {
@@ -90,6 +93,7 @@ pub async fn start(config: Config) -> Result<Running, Stop> {
     let address = listener.local_addr().map_err(|error| Stop::failed("the listening address", error))?;
     let metrics = telemetry::start_metrics().map_err(|error| Stop::failed("metrics", error))?;
     let service = Service::open(&config).await.map_err(|error| Stop::failed("the database", error))?;
+    let alone = service.keep_alone().map_err(|error| Stop::failed("the database", error))?;
     let resumed = service.resume_jobs().await;
     if let Err(error) = &resumed {
         tracing::warn!(%error, "jobs of the last process cannot be taken up yet; it is tried again");
@@ -110,7 +114,21 @@ pub async fn start(config: Config) -> Result<Running, Stop> {
     if config.access.keys == KeysNeeded::AnyoneMayReadAndWrite {
         tracing::warn!(%address, "NO ACCESS KEYS ARE ASKED FOR: whoever reaches this address can read and change everything, unless a gateway in front decides who may");
     }
-    Ok(Running { address, service, stop, server, upkeep, sender, runner, sharing, keeper, bookkeeping, drain, grace })
+    Ok(Running {
+        address,
+        service,
+        stop,
+        server,
+        upkeep,
+        sender,
+        runner,
+        sharing,
+        keeper,
+        bookkeeping,
+        drain,
+        grace,
+        _alone: alone,
+    })
 }
 
 /// Serves until SIGINT or SIGTERM.

@@ -221,7 +221,8 @@ impl<'a> NetworkLaw<'a> {
                 (Some(cap), _) if threshold > cap => 0.0,
                 _ => tail(degree)?,
             };
-            let probability = survival * probability;
+            // An inversion may round to a hair above one.
+            let probability = (survival * probability).min(1.0);
             // A node at the cap gains nothing, and may reach less than one just below it.
             let ordered = cap.is_none_or(|cap| degree < cap);
             if ordered && probability * below as f64 <= accuracy.negligible() * mean + TAIL_ZERO {

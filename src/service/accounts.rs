@@ -9,6 +9,7 @@ use uuid::Uuid;
 
 use super::answers::{CountAnswer, DateAnswer, EstimateAnswer, ForecastRun, IntervalAnswer, TailAnswer};
 use super::evidence::{encode, off_runtime};
+use super::jobs::persistently;
 use super::numbers::{Count, Real, date_of, date_text};
 use super::{RunKind, ServiceError};
 use crate::evaluate::{Account, Outcome, account};
@@ -100,8 +101,8 @@ pub struct IntervalOutcome {
 
 /// The accounts that `snapshots`, oldest first, call for and that are not kept yet.
 pub async fn due(store: &Store, network: &str, snapshots: Vec<Snapshot>) -> Result<Accounts, ServiceError> {
-    let issued = store.list_issued(network).await?;
-    let keys = store.list_account_keys(network).await?;
+    let issued = persistently(|| store.list_issued(network)).await?;
+    let keys = persistently(|| store.list_account_keys(network)).await?;
     if issued.is_empty() {
         return Ok(Accounts::default());
     }

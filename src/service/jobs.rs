@@ -228,14 +228,14 @@ impl Service {
     }
 }
 
-/// Writes again, with growing pauses, while the database fails.
+/// Reads or writes again, with growing pauses, while the database fails.
 pub(in crate::service) async fn persistently<T, F: Future<Output = Result<T, StoreError>>>(
     mut write: impl FnMut() -> F,
 ) -> Result<T, StoreError> {
     for round in 0..WRITE_TRIES {
         match write().await {
             Ok(done) => return Ok(done),
-            Err(error) => tracing::warn!(%error, "the end of a job could not be written; it is tried again"),
+            Err(error) => tracing::warn!(%error, "the database failed a job; it is tried again"),
         }
         sleep(WRITE_PAUSE * 2u32.pow(round)).await;
     }

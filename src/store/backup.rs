@@ -13,7 +13,7 @@ use sqlx::sqlite::{SqliteConnectOptions, SqliteConnection, SqliteJournalMode, Sq
 use tempfile::{NamedTempFile, TempPath};
 
 use super::StoreError;
-use super::connect::known_migrations;
+use super::connect::{address_fault, known_migrations};
 use super::integrity::{Depth, check_file};
 use crate::config::DatabaseConfig;
 
@@ -72,7 +72,11 @@ impl fmt::Display for BackupError {
                  pg_dump --format=custom --file=FILE \"$TAILCAST_DATABASE_URL\"\nand restore, with every replica stopped, with\n  \
                  pg_restore --clean --if-exists --single-transaction --dbname=\"$TAILCAST_DATABASE_URL\" FILE"
             ),
-            Self::Taken(path) => write!(f, "{} is there already; name another file, or add --replace", path.display()),
+            Self::Taken(path) => write!(
+                f,
+                "{} is there already, or belongs to the database itself; name another file, or add --replace where an older backup is to go",
+                path.display()
+            ),
             Self::NoFile(path) => write!(f, "{} is not there, or is no file", path.display()),
             Self::NotSound(path, found) => write!(f, "{} cannot be used: {found}", path.display()),
             Self::InUse(path) => {
@@ -101,8 +105,11 @@ pub async fn back_up(config: &DatabaseConfig, target: &Path, replace: bool) -> R
     if !database.is_file() {
         return Err(BackupError::NoFile(database.to_owned()));
     }
-    let taken = target.exists();
-    if taken && (!replace || same_file(database, target)) {
+    // Nothing but a plain file is replaced, and none of those that the database consists of.
+    let companion = |suffix: &str| same_place(&beside(database, suffix), target);
+    let own = same_file(database, target) || ["-wal", "-shm", "-journal"].into_iter().any(companion);
+    let plain = std::fs::symlink_metadata(target).map_or(true, |found| found.is_file());
+    if own || !plain || (target.exists() && !replace) {
         return Err(BackupError::Taken(target.to_owned()));
     }
     let part = part_beside(target)?;
@@ -189,9 +196,8 @@ fn source(config: &DatabaseConfig) -> Result<SqliteConnectOptions, BackupError> 
     if config.url.starts_with("postgres:") || config.url.starts_with("postgresql:") {
         return Err(BackupError::Server);
     }
-    let options = SqliteConnectOptions::from_str(&config.url).map_err(|error| {
-        BackupError::Store(StoreError::Address { url: config.url.clone(), reason: error.to_string() })
-    })?;
+    let options = SqliteConnectOptions::from_str(&config.url)
+        .map_err(|error| BackupError::Store(address_fault(config, error.to_string())))?;
     Ok(options.create_if_missing(false).busy_timeout(Duration::from_millis(config.busy_timeout_ms)))
 }
 
@@ -271,6 +277,11 @@ fn beside(path: &Path, suffix: &str) -> PathBuf {
 
 fn same_file(a: &Path, b: &Path) -> bool {
     matches!((a.canonicalize(), b.canonicalize()), (Ok(a), Ok(b)) if a == b)
+}
+
+/// Whether two paths lead to the same name in the same folder, there or not.
+fn same_place(a: &Path, b: &Path) -> bool {
+    a.file_name() == b.file_name() && same_file(folder_of(a), folder_of(b))
 }
 
 fn text(path: &Path) -> Result<&str, BackupError> {

@@ -182,6 +182,17 @@ impl Store {
         })
     }
 
+    /// Keeps other services off a file, until the answer is dropped; nothing on a server, which they share.
+    ///
+    /// # Errors
+    /// When another service has the file.
+    pub fn keep_alone(&self) -> Result<Option<std::fs::File>, StoreError> {
+        match &self.home {
+            Home::Sqlite { file, .. } => file.keep_alone().map(Some),
+            Home::Postgres { .. } => Ok(None),
+        }
+    }
+
     /// Closes every connection, the writer last, so that the write-ahead log is folded into the file.
     pub async fn close(&self) {
         match &self.home {
@@ -274,10 +285,10 @@ fn pool_options<DB: Database>(size: u32) -> PoolOptions<DB> {
 }
 
 /// A fault of `database.url`, without its password.
-fn address_fault(config: &DatabaseConfig, reason: String) -> StoreError {
+pub(super) fn address_fault(config: &DatabaseConfig, reason: String) -> StoreError {
     // Without user, password and options, which may hold another password.
     let url = match url::Url::parse(&config.url) {
-        _ if !is_server(&config.url) => config.url.clone(),
+        _ if config.url.starts_with("sqlite:") => config.url.clone(),
         Ok(url) => format!("{}://…{}", url.scheme(), url.path()),
         Err(_) => "(not shown)".into(),
     };

@@ -1,7 +1,7 @@
 //! The database's file, watched: rows written into a file that was removed or replaced are on no disk anybody can find,
 //! and a connection opened later would read whatever stands in its place.
 
-use std::fs::Metadata;
+use std::fs::{File, Metadata, TryLockError};
 use std::path::{Path, PathBuf};
 
 use super::StoreError;
@@ -31,6 +31,28 @@ impl DatabaseFile {
     /// Where it stands.
     pub fn path(&self) -> &Path {
         &self.path
+    }
+
+    /// Keeps other services off the file until the answer is dropped, or the process ends however it ends: one would take the jobs
+    /// of the other for those of a process that is gone.
+    ///
+    /// # Errors
+    /// When a service has it; when no file can be made beside it.
+    pub fn keep_alone(&self) -> Result<File, StoreError> {
+        let mut name = self.path.as_os_str().to_owned();
+        name.push("-serving");
+        let fault = |reason: String| StoreError::Address { url: self.path.display().to_string(), reason };
+        let held = File::options().create(true).truncate(false).write(true).open(PathBuf::from(name));
+        let held = held.map_err(|error| fault(format!("no file can be made beside it: {error}")))?;
+        match held.try_lock() {
+            Err(TryLockError::WouldBlock) => Err(fault(
+                "another service has this file; stop it, or give this one a file of its own. Several services share a PostgreSQL \
+                 database (postgres://…)"
+                    .to_owned(),
+            )),
+            // Where the file system knows no locks there is nothing to go by.
+            _ => Ok(held),
+        }
     }
 
     /// Checks that the file still stands at its path.

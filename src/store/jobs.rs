@@ -206,7 +206,8 @@ impl Store {
     /// # Errors
     /// When the database fails.
     pub async fn start_job(&self, id: Uuid) -> Result<JobStart, StoreError> {
-        let mut transaction = self.begin(Scope::Own).await?;
+        // After a change that is being written and counts on the job while it waits: what it changes is read then.
+        let mut transaction = self.begin(Scope::OfJob(id)).await?;
         let now = transaction.now().await?;
         let skip = transaction.skip_locked();
         let claimed = query(
@@ -252,29 +253,43 @@ impl Store {
         Ok(kept > 0)
     }
 
-    /// Gives up claims: those of this process, or, of a file, those that the process before has left.
+    /// Gives up claims: those of this process, whose jobs have not been begun in vain, or, of a file, those that the process before
+    /// has left.
     ///
     /// # Errors
     /// When the database fails.
     pub async fn release_claims(&self) -> Result<(), StoreError> {
         let mut transaction = self.begin(Scope::Own).await?;
-        query("UPDATE jobs SET claimed_by = NULL, claimed_until = NULL WHERE state = 'running' AND (claimed_by = $1 OR $2)")
-            .bind(self.process.to_string())
-            .bind(!self.is_shared())
-            .execute(&mut transaction)
-            .await?;
+        query(
+            "UPDATE jobs SET starts = CASE WHEN claimed_by = $1 THEN starts - 1 ELSE starts END, claimed_by = NULL, \
+             claimed_until = NULL WHERE state = 'running' AND (claimed_by = $1 OR $2)",
+        )
+        .bind(self.process.to_string())
+        .bind(!self.is_shared())
+        .execute(&mut transaction)
+        .await?;
         self.commit(transaction).await
     }
 
-    /// Notes that a live job failed; false when it was called off before.
+    /// Notes that a job of this process failed; false when it is no longer its own: called off before, or claimed by another.
     ///
     /// # Errors
     /// When the database fails.
     pub async fn fail_job(&self, id: Uuid, outcome: &str) -> Result<bool, StoreError> {
         let mut transaction = self.begin(Scope::OfJob(id)).await?;
+        if !self.holds(&mut transaction, id).await? {
+            return Ok(false);
+        }
         let ended = end(&mut transaction, id, JobState::Failed, Some(outcome)).await?;
         self.commit(transaction).await?;
         Ok(ended)
+    }
+
+    /// Whether a job is this process's own: whoever has lost it has no say in how it ended.
+    pub(super) async fn holds(&self, connection: &mut Connection, id: Uuid) -> Result<bool, StoreError> {
+        let held =
+            query_scalar("SELECT EXISTS (SELECT 1 FROM jobs WHERE id = $1 AND state = 'running' AND claimed_by = $2)");
+        Ok(held.bind(id.to_string()).bind(self.process.to_string()).fetch_one(connection).await?)
     }
 
     /// Calls a live job off, or removes the record of one that has ended.

@@ -266,10 +266,12 @@ async fn find(connection: &mut Connection, id: &str) -> Result<Option<StoredKey>
 }
 
 async fn stored(connection: &mut Connection, row: KeyRow) -> Result<StoredKey, StoreError> {
-    let networks = query_scalar("SELECT network FROM access_key_networks WHERE access_key = $1 ORDER BY network")
+    let mut networks: Vec<String> = query_scalar("SELECT network FROM access_key_networks WHERE access_key = $1")
         .bind(row.id.as_str())
         .fetch_all(connection)
         .await?;
+    // By bytes, as they are looked up; a database may sort otherwise.
+    networks.sort_unstable();
     let per_minute = row.per_minute.map(|most| u32::try_from(most).map_err(|_| corrupt("per_minute", most)));
     Ok(StoredKey {
         scope: row.scope.parse()?,

@@ -157,7 +157,7 @@ impl Store {
         Ok(RefreshEnded::Stored(redo))
     }
 
-    /// Ends a refresh that has nothing to store, unless it was called off before. `stands` is how the latest forecast stands
+    /// Ends a refresh of this process that has nothing to store, unless it was called off or claimed by another before. `stands` is how the latest forecast stands
     /// then, and why; it is noted where no newer refresh has a say, and a backtest whose counts were replaced is taken on anew
     /// and returned.
     ///
@@ -171,7 +171,7 @@ impl Store {
         stands: Option<(RefreshState, Option<&str>)>,
     ) -> Result<Option<Uuid>, StoreError> {
         let mut transaction = self.begin(Scope::Network(network)).await?;
-        if !end(&mut transaction, job, state, Some(outcome)).await? {
+        if !self.holds(&mut transaction, job).await? || !end(&mut transaction, job, state, Some(outcome)).await? {
             return Ok(None);
         }
         let mut redo = None;

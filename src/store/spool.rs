@@ -200,7 +200,7 @@ impl Store {
         Ok(Spooled { path: path.to_path_buf(), _copy: Some(path) })
     }
 
-    /// Drops the body of a job; what cannot be dropped now is swept away later.
+    /// Drops the body of a job that has ended or was never taken on; what cannot be dropped now is swept away later.
     pub async fn drop_spooled(&self, job: Uuid) {
         let dropped = match &self.home {
             Home::Sqlite { file, .. } => match tokio::fs::remove_file(file_of(&spool_folder(file.path()), job)).await {
@@ -216,7 +216,14 @@ impl Store {
 
     async fn drop_parts(&self, job: Uuid) -> Result<(), StoreError> {
         let mut transaction = self.begin(Scope::Own).await?;
-        query("DELETE FROM spooled_parts WHERE upload = $1").bind(job.to_string()).execute(&mut transaction).await?;
+        // Whoever was slower than the claim may have lost the job to another process, which reads the list now.
+        query(
+            "DELETE FROM spooled_parts WHERE upload = $1 \
+             AND NOT EXISTS (SELECT 1 FROM jobs WHERE id = $1 AND state IN ('waiting', 'running'))",
+        )
+        .bind(job.to_string())
+        .execute(&mut transaction)
+        .await?;
         self.commit(transaction).await
     }
 

@@ -77,9 +77,20 @@ async fn all_that_was_acknowledged_before_a_backup_is_in_it() {
     let all = acknowledged.lock().unwrap().clone();
 
     // Nothing is put over a file without being told, or under a service that runs.
-    refused(&tailcast(folder.path(), &["backup", "first.db"]), "is there already; name another file, or add --replace");
-    refused(&tailcast(folder.path(), &["backup", "tailcast.db", "--replace"]), "is there already");
+    refused(
+        &tailcast(folder.path(), &["backup", "first.db"]),
+        "is there already, or belongs to the database itself; name another file, or add --replace",
+    );
+    for own in ["tailcast.db", "tailcast.db-wal", "tailcast.db-shm", "tailcast.db-journal", "."] {
+        refused(
+            &tailcast(folder.path(), &["backup", own, "--replace"]),
+            "is there already, or belongs to the database",
+        );
+    }
     refused(&tailcast(folder.path(), &["restore", "third.db"]), "is in use; stop the service");
+    // Another service would take its jobs for those of one that is gone.
+    let second = command(folder.path()).arg("serve").env("TAILCAST_BIND", "127.0.0.1:0").output().unwrap();
+    refused(&second, "another service has this file");
     let read = client().get(format!("http://{}{}", served.address, all[0].0)).send().await.unwrap();
     assert_eq!(read.status().as_u16(), 200, "the service goes on");
     assert!(tailcast(folder.path(), &["backup", "first.db", "--replace"]).status.success());

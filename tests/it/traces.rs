@@ -200,9 +200,9 @@ async fn polls_from_memory_make_no_span_and_nothing_is_sent_when_off() {
     let served =
         traced(folder.path(), &endpoint, &[("OTEL_SDK_DISABLED", "true"), ("TAILCAST_TELEMETRY_OTLP_ENDPOINT", "")]);
     assert_eq!(send(request(&served, Method::POST, "/v1/forecasts"), &forecast_body()).await, 201);
+    stop(served);
     let off = serve_with(folder.path(), &[("OTEL_EXPORTER_OTLP_ENDPOINT", &endpoint), ("OTEL_SDK_DISABLED", "true")]);
     assert_eq!(request(&off, Method::GET, "/livez").send().await.unwrap().status(), 200);
-    stop(served);
     stop(off);
     assert!(collector.batches.lock().unwrap().is_empty());
 

@@ -105,7 +105,9 @@ impl Service {
     async fn backtested(&self, job: &StoredJob, turn: &Turn, only_current: bool) -> Result<(), Halt> {
         let progress = turn.progress();
         let request = BacktestRequest::from_json(&job.task)?;
-        let Some(stored) = self.store.find_evidence(&job.network).await? else { return Err(Halt::Stop) };
+        let Some(stored) = persistently(|| self.store.find_evidence(&job.network)).await? else {
+            return Err(Halt::Stop);
+        };
         let (revision, digest) = (stored.network.revision, stored.digest.clone());
         let evidence = off_runtime(move || assemble::evidence(stored)).await??;
         let snapshots = evidence.snapshots().len();

@@ -66,7 +66,8 @@ impl Service {
         if job.starts > MOST_STARTS {
             return Err(Stopped::Failed(JobProblem::interrupted(job.starts - 1, "send the list again")));
         }
-        let list = self.store.spooled(job.id).await.map_err(|error| Stopped::broken(error.to_string()))?;
+        let list = persistently(|| self.store.spooled(job.id)).await;
+        let list = list.map_err(|error| Stopped::broken(error.to_string()))?;
         let (task, progress) = (job.task.clone(), turn.progress());
         let most_nodes = self.jobs.config().link_list_nodes;
         let counting = in_background(move || count(list.path(), &task, most_nodes, &progress));

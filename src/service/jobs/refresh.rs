@@ -77,7 +77,8 @@ impl Service {
 
     /// Works a refresh to its end, or until the process stops.
     pub(super) async fn refresh(&self, job: &StoredJob, turn: &Turn) -> Result<(), ServiceError> {
-        let Some(network) = self.store.find_network(&job.network).await? else { return Ok(()) };
+        let found = persistently(|| self.store.find_network(&job.network)).await?;
+        let Some(network) = found else { return Ok(()) };
         // Taken up again after a kill while another waits: that one stands for all of it.
         if network.refresh.is_some_and(|newest| newest.job != job.id) {
             return self.end_without(job, network.revision, SUPERSEDED, None).await;
@@ -96,9 +97,10 @@ impl Service {
 
     async fn refreshed(&self, job: &StoredJob, turn: &Turn) -> Result<Option<Came>, Halt> {
         let progress = turn.progress();
-        let Some(mut stored) = self.store.find_evidence(&job.network).await.map_err(ServiceError::from)? else {
-            return Ok(None);
-        };
+        // What it stores goes after all that was stored before, whichever process made that, by whatever clock.
+        persistently(|| self.store.raise_ids()).await.map_err(ServiceError::from)?;
+        let found = persistently(|| self.store.find_evidence(&job.network)).await.map_err(ServiceError::from)?;
+        let Some(mut stored) = found else { return Ok(None) };
         let revision = stored.network.revision;
         let plan = stored.network.settings.forecast_plan.as_deref().map(plan::from_json).transpose()?;
         let kept = std::mem::take(&mut stored.questions);

@@ -98,7 +98,8 @@ impl Service {
         let label = if ended.is_ok() { "succeeded" } else { "failed" };
         counter!("tailcast_source_runs_total", "outcome" => label).increment(1);
         let now = Timestamp::now();
-        let due_at = self.due_after(&claimed, ended.is_ok(), now);
+        // Its time has come by the database's clock; this machine's may be behind that.
+        let due_at = self.due_after(&claimed, ended.is_ok(), now.max(claimed.source.due_at));
         if let Err(error) = persistently(|| self.store.end_run(&claimed, now, ended, due_at)).await {
             tracing::error!(%error, %network, "how a source's run went could not be noted; it is run again");
         }
