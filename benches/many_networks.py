@@ -80,7 +80,7 @@ with tempfile.TemporaryDirectory() as folder:
     plan = {"thresholds": [5, 10, 20], "horizon": {"ends_after": "P2M", "every": "P1M"}, "arrivals": {"per_day": 50.0}}
     call(port, "PUT", network, {"degree_kind": "received", "forecast_plan": plan})
     for _ in range(300):
-        if json.loads(get(port, network)[0])["refresh"]["state"] == "current":
+        if (json.loads(get(port, network)[0]).get("refresh") or {}).get("state") == "current":
             break
         time.sleep(0.1)
     stop(process)
@@ -150,5 +150,6 @@ with tempfile.TemporaryDirectory() as folder:
     subprocess.run([BINARY, "backup", "copy.db"], cwd=folder, check=True, capture_output=True)
     tell("tailcast backup, checked", time.monotonic() - begun)
     status = open(f"/proc/{process.pid}/status").read()
-    print(f"peak memory of the service: {int(re.search(r'VmHWM:\s+(\d+)', status)[1]) >> 10} MiB")
+    peak = int(re.search(r"VmHWM:\s+(\d+)", status)[1]) >> 10
+    print(f"peak memory of the service: {peak} MiB")
     stop(process)

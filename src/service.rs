@@ -51,7 +51,7 @@ pub use crate::store::{
     JobKind, JobState, KeyClaim, KeyScope, LatestForecast, LatestStamp, NetworkSummary, NewNetwork, NoticeKind,
     QuestionKind, RefreshState, RefreshStatus, RestoreReport, RunFilter, RunKind, RunSummary, SnapshotSummary,
     StoreFault, StoredBacktest, StoredJob, StoredKey, StoredLinkEvents, StoredNetwork, StoredQuestion, StoredRun,
-    StoredSnapshot, StoredTransitions, TransitionsSummary, Upload, authored, back_up, restore,
+    StoredSnapshot, StoredTransitions, TransitionsSummary, Upload, WriteCounts, authored, back_up, restore,
 };
 pub use crate::webhook::{AddressFault, Target};
 pub use access::{Allowance, KeyCabinet, KeyError, KeyFault, KeyRing, KeyTerms, LiveKey, Meter, Spent, Standing};

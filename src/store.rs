@@ -42,6 +42,7 @@ use std::sync::Arc;
 
 use file::DatabaseFile;
 use health::Health;
+use sqlx::migrate::MigrateError;
 use sqlx::postgres::PgDatabaseError;
 use sqlx::{PgPool, SqlitePool};
 use tokio::sync::watch;
@@ -73,7 +74,7 @@ pub use snapshots::{SnapshotSummary, StoredSnapshot};
 pub use sources::{ClaimedRun, NewSource, RunEnd, StoredSource};
 pub use spool::{Spooled, Upload};
 pub use transitions::{EndTags, StoredTransitions, TransitionsSummary};
-pub use writes::{Caps, Clash, WriteError};
+pub use writes::{Caps, Clash, WriteCounts, WriteError};
 
 // Primary result codes: https://www.sqlite.org/rescode.html
 const SQLITE_BUSY: u32 = 5;
@@ -102,6 +103,7 @@ pub struct Store {
     health: Health,
     /// Writes of this process that have ended.
     commits: Arc<watch::Sender<u64>>,
+    counts: Arc<WriteCounts>,
 }
 
 /// Where rows live.
@@ -153,13 +155,23 @@ pub enum StoreError {
     NoTable(#[source] sqlx::Error),
     /// The tables are not those of this version.
     #[error("the database's tables do not fit this version: {0}")]
-    Migration(#[from] sqlx::migrate::MigrateError),
+    Migration(#[source] MigrateError),
     /// A row does not hold what was written.
     #[error("the database holds a value that was never written: {0}")]
     Corrupt(String),
     /// Anything else.
     #[error("the database failed: {0}")]
     Failed(#[source] sqlx::Error),
+}
+
+impl From<MigrateError> for StoreError {
+    fn from(error: MigrateError) -> Self {
+        match error {
+            // The database failed, whatever was asked of it.
+            MigrateError::Execute(error) => error.into(),
+            error => Self::Migration(error),
+        }
+    }
 }
 
 impl From<sqlx::Error> for StoreError {

@@ -1,6 +1,6 @@
 //! Copies of the latest forecasts that are polled, in the form in which they leave.
 //!
-//! A copy is used as it is while this process has written nothing since it was looked up, for at most [`UNCHECKED`]; then one row
+//! A copy is used as it is while this process has written nothing of its network since it was looked up, for at most [`UNCHECKED`]; then one row
 //! of the database says whether it still holds. So a change is seen by the first read after it is acknowledged, and a change by another
 //! process within that time.
 
@@ -12,7 +12,6 @@ use std::time::{Duration, Instant};
 use axum::body::{Body, Bytes};
 use axum::http::{HeaderMap, HeaderValue, Method, StatusCode, Uri, header};
 use axum::response::Response;
-use tokio::sync::watch;
 
 use super::access::Access;
 use super::extract::{ForecastForm, ResultFormat};
@@ -20,7 +19,7 @@ use super::networks::{LATEST_ROUTE, polled_network};
 use super::observe::{Observation, leave_room};
 use super::representation::{self, Validator, entity_tag, header_value, is_unmodified};
 use super::{ApiError, forecasts, jobs, runs};
-use crate::service::{LatestStamp, NetworkName, PolledForecast, RefreshState, Service, StoredRun};
+use crate::service::{LatestStamp, NetworkName, PolledForecast, RefreshState, Service, StoredRun, WriteCounts};
 
 /// Longest time for which a copy is used without asking the database.
 const UNCHECKED: Duration = Duration::from_secs(1);
@@ -36,7 +35,7 @@ pub struct Polled {
 #[derive(Debug)]
 struct Inner {
     service: Service,
-    commits: watch::Receiver<u64>,
+    counts: Arc<WriteCounts>,
     copies: RwLock<HashMap<String, Arc<PolledCopy>>>,
     most_bytes: usize,
     begun: Instant,
@@ -72,8 +71,8 @@ impl AsRef<[u8]> for Document {
 impl Polled {
     /// No copies yet, and at most `most_bytes` of them.
     pub fn new(service: Service, most_bytes: usize) -> Self {
-        let (commits, begun) = (service.commits(), Instant::now());
-        Self { inner: Arc::new(Inner { service, commits, copies: RwLock::default(), most_bytes, begun }) }
+        let (counts, begun) = (service.write_counts(), Instant::now());
+        Self { inner: Arc::new(Inner { service, counts, copies: RwLock::default(), most_bytes, begun }) }
     }
 
     /// The whole answer to a poll of a copy that holds by somebody who may read it: no route is looked for, nothing is read and nothing is computed. None when the
@@ -103,7 +102,7 @@ impl Polled {
             return Ok(copy);
         }
         // Before the look: what is written meanwhile makes the copy one to be looked up again.
-        let (commits, now) = (*inner.commits.borrow(), inner.now(Instant::now()));
+        let (commits, now) = (inner.counts.of(name.as_str()), inner.now(Instant::now()));
         if let Some(copy) = inner.find(name.as_str())
             && inner.service.latest_stamp(name).await?.as_ref() == Some(&copy.stamp)
         {
@@ -133,7 +132,7 @@ impl Inner {
         let now = self.now(at);
         let age = now.saturating_sub(copy.checked.load(Ordering::Relaxed));
         // First the count, which is raised after the write: a copy of this count was read after it.
-        if copy.commits.load(Ordering::Relaxed) != *self.commits.borrow() || age >= UNCHECKED.as_millis() as u64 {
+        if copy.commits.load(Ordering::Relaxed) != self.counts.of(network) || age >= UNCHECKED.as_millis() as u64 {
             return None;
         }
         copy.used.store(now, Ordering::Relaxed);

@@ -10,6 +10,7 @@ use serde::Serialize;
 
 use super::{Stop, print_with};
 use crate::config::DatabaseConfig;
+use crate::credential::masked;
 use crate::report::align;
 use crate::service::{Authorship, KeyCabinet, KeyError, KeyScope, KeyTerms, StoredKey, authored};
 
@@ -26,7 +27,7 @@ pub enum KeysCommand {
     },
     /// Revoke a key; a service that runs refuses it within two seconds
     Revoke {
-        /// Its name or id
+        /// Its name or id, or the key itself
         key: String,
         /// Form of the answer
         #[arg(long, value_enum, default_value_t = KeysFormat::Text)]
@@ -175,7 +176,8 @@ fn list(keys: &[StoredKey], format: KeysFormat) -> Result<(), Stop> {
 
 /// The line of a command in the trail of writes.
 fn by_command(command: &str, key: &str) -> Option<Authorship> {
-    let (method, route, path) = ("COMMAND".to_owned(), command.to_owned(), format!("{command} {key}"));
+    let path = format!("{command} {}", masked(key));
+    let (method, route) = ("COMMAND".to_owned(), command.to_owned());
     Some(Authorship { method, route, path, ..Authorship::default() })
 }
 

@@ -7,7 +7,7 @@ use jiff::Timestamp;
 
 use super::{NetworkName, Service, ServiceError, in_own_task};
 use crate::config::DatabaseConfig;
-use crate::credential::Credential;
+use crate::credential::{Credential, masked};
 use crate::store::{AuditFilter, AuditLine, Belonging, KeyScope, Store, StoreError, StoredKey};
 pub use meter::{Allowance, Meter, Spent, Standing};
 pub use ring::{KeyFault, KeyRing, LiveKey};
@@ -78,11 +78,13 @@ impl KeyCabinet {
         if self.store.insert_key(&key).await? { Ok((credential, key)) } else { Err(KeyError::NameTaken(key.name)) }
     }
 
-    /// Revokes the key of this id or name.
+    /// Revokes the key of this id or name, or this key.
     ///
     /// # Errors
     /// When there is none, or the database fails.
     pub async fn revoke(&self, which: &str) -> Result<StoredKey, KeyError> {
+        let credential = Credential::parse(which);
+        let which = credential.as_ref().map_or(which, Credential::id);
         let missing = || KeyError::Missing(which.to_owned());
         self.store.revoke_key(which, Timestamp::now()).await?.ok_or_else(missing)
     }
@@ -109,6 +111,14 @@ fn stored(terms: KeyTerms, credential: &Credential) -> Result<StoredKey, KeyErro
     NetworkName::new(&name).map_err(|_| {
         refused("a key's name is 1 to 100 letters, digits and . _ ~ - and begins with a letter or digit")
     })?;
+    if masked(&name) != name {
+        return Err(refused(
+            "that is a key, not a name for one: keep keys out of sight, and name them for who uses them",
+        ));
+    }
+    if per_day.is_some_and(|most| i64::try_from(most).is_err()) {
+        return Err(refused("a limit of requests a day is at most 9223372036854775807; leave it out for none"));
+    }
     for network in &networks {
         NetworkName::new(network).map_err(|fault| refused(&format!("{network:?}: {fault}")))?;
     }

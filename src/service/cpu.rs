@@ -10,7 +10,7 @@ use tokio::sync::Semaphore;
 use tokio::time::timeout_at;
 use tracing::{Instrument, Span, info_span};
 
-use super::background::in_background;
+use super::background::{give_way, in_background};
 use super::{ServiceError, TRACES};
 use crate::config::ComputeConfig;
 
@@ -102,8 +102,10 @@ impl CpuPool {
             // Held until the work has really stopped, so that abandoned work still counts against the cores.
             let _held = (place, worker, busy);
             let begun = Instant::now();
-            let cancelled =
-                || given_up.load(Ordering::Relaxed) || stopping.load(Ordering::Relaxed) || Instant::now() >= deadline;
+            let cancelled = || {
+                give_way();
+                given_up.load(Ordering::Relaxed) || stopping.load(Ordering::Relaxed) || Instant::now() >= deadline
+            };
             let outcome = span.in_scope(|| computing.in_scope(|| work(&cancelled)));
             histogram!("tailcast_compute_seconds").record(begun.elapsed());
             note_usual(&usual, begun.elapsed());

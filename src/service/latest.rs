@@ -1,12 +1,13 @@
 //! A network's latest forecast.
 
+use std::sync::Arc;
 use std::time::Duration;
 
 use jiff::{SignedDuration, Timestamp, Unit, tz::TimeZone};
 use tokio::sync::watch;
 
 use super::{NetworkName, RefreshState, Service, ServiceError, plan};
-use crate::store::{LatestForecast, LatestStamp};
+use crate::store::{LatestForecast, LatestStamp, WriteCounts};
 
 /// Share of the time between two snapshots for which a forecast may be used without asking: what is polled is late by no more.
 const SHARE_OF_CADENCE: u32 = 100;
@@ -25,8 +26,13 @@ pub struct PolledForecast {
 }
 
 impl Service {
-    /// Counts the writes of this process: as long as the count stands, nothing that is stored has changed, but for what other
-    /// processes write.
+    /// The writes of this process by network: as long as a network's count stands, its latest forecast has not changed, but for what
+    /// other processes write.
+    pub fn write_counts(&self) -> Arc<WriteCounts> {
+        self.store.counts()
+    }
+
+    /// Counts the writes of this process.
     pub fn commits(&self) -> watch::Receiver<u64> {
         self.store.commits()
     }

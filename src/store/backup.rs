@@ -236,6 +236,9 @@ async fn examine(path: &Path) -> Result<BackupReport, BackupError> {
             .fetch_all(&mut connection)
             .await;
     let Ok(migrations) = migrations else { return Err(unsound("it is no database of this service".into())) };
+    if migrations.iter().zip(known_migrations()).any(|(found, (known, _))| found.0 < known) || migrations.is_empty() {
+        return Err(unsound("its record of migrations has gaps, so its tables are those of no version".into()));
+    }
     for (version, success, checksum) in &migrations {
         match known_migrations().find(|&(known, _)| known == *version) {
             None => return Err(unsound(format!("it was written by a newer version (tables of version {version})"))),

@@ -7,7 +7,7 @@ use std::time::Duration;
 
 use sqlx::migrate::Migrator;
 use sqlx::pool::PoolOptions;
-use sqlx::postgres::PgConnectOptions;
+use sqlx::postgres::{PgConnectOptions, PgConnection};
 use sqlx::sqlite::{SqliteConnectOptions, SqliteConnection, SqliteJournalMode, SqlitePoolOptions, SqliteSynchronous};
 use sqlx::{Connection as _, Database};
 use tokio::sync::watch;
@@ -45,7 +45,13 @@ impl Store {
     /// When the address is neither SQLite's nor PostgreSQL's, or what it names cannot be opened.
     pub async fn connect(config: &DatabaseConfig) -> Result<Self, StoreError> {
         let home = if is_server(&config.url) { server(config)? } else { file(config).await? };
-        Ok(Self { home, process: Uuid::now_v7(), health: Health::default(), commits: Arc::new(watch::Sender::new(0)) })
+        Ok(Self {
+            home,
+            process: Uuid::now_v7(),
+            health: Health::default(),
+            commits: Arc::new(watch::Sender::new(0)),
+            counts: Arc::default(),
+        })
     }
 
     /// Brings the tables up to date; one process at a time.
@@ -55,7 +61,12 @@ impl Store {
     pub async fn migrate(&self) -> Result<(), StoreError> {
         match &self.home {
             Home::Sqlite { write, .. } => MIGRATOR.run(write).await?,
-            Home::Postgres { pool } => MIGRATOR.run(pool).await?,
+            Home::Postgres { pool } => {
+                // A pool that gets no connection says only that it waited; one connection by itself says why.
+                let first = timeout(CONNECT_TIMEOUT, PgConnection::connect_with(&pool.connect_options())).await;
+                first.unwrap_or(Err(sqlx::Error::PoolTimedOut))?.close().await?;
+                MIGRATOR.run(pool).await?;
+            }
         }
         Ok(())
     }

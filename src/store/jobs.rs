@@ -6,7 +6,7 @@ use uuid::Uuid;
 
 use super::columns::{corrupt, time, unsigned, uuid};
 use super::statement::{Connection, query, query_scalar};
-use super::writes::{Clash, Scope, WriteError, network_exists};
+use super::writes::{Clash, Scope, Touched, WriteError, network_exists};
 use super::{RefreshState, Store, StoreError, audit, backtests, refreshes};
 
 /// How long a claim on a job holds unless it is prolonged, microseconds: several times what passes between two prolongations.
@@ -224,7 +224,7 @@ impl Store {
         .execute(&mut transaction)
         .await?;
         let job = find(&mut transaction, id).await?;
-        self.commit(transaction).await?;
+        self.commit_of(transaction, Touched::Nothing).await?;
         Ok(match job {
             Some(job) if claimed > 0 => JobStart::Begun(job),
             Some(job) if job.state.is_live() => JobStart::Elsewhere,
@@ -249,7 +249,7 @@ impl Store {
         .bind(progress)
         .execute(&mut transaction)
         .await?;
-        self.commit(transaction).await?;
+        self.commit_of(transaction, Touched::Nothing).await?;
         Ok(kept > 0)
     }
 

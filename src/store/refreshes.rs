@@ -11,7 +11,7 @@ use super::jobs::{JobKind, JobState, end, insert};
 use super::latest;
 use super::runs::{NewRun, insert_run};
 use super::statement::{Connection, query, query_scalar};
-use super::writes::Scope;
+use super::writes::{Scope, Touched};
 use super::{Signal, Store, StoreError, backtests, outbox};
 
 /// Ended refreshes whose records are kept of one network: a network that is fed for years does not fill the list of jobs.
@@ -153,7 +153,7 @@ impl Store {
         outbox::note(&mut transaction, ended.network, ended.job, ended.signals, ended.forecast.is_some()).await?;
         let redo = backtests::redo(&mut transaction, ended.network).await?;
         prune(&mut transaction, ended.network).await?;
-        self.commit(transaction).await?;
+        self.commit_of(transaction, Touched::Network(ended.network)).await?;
         Ok(RefreshEnded::Stored(redo))
     }
 
@@ -180,7 +180,7 @@ impl Store {
             redo = backtests::redo(&mut transaction, network).await?;
         }
         prune(&mut transaction, network).await?;
-        self.commit(transaction).await?;
+        self.commit_of(transaction, Touched::Network(network)).await?;
         Ok(redo)
     }
 }

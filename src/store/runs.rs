@@ -6,7 +6,7 @@ use uuid::Uuid;
 
 use super::columns::{date_key, signed, time, unsigned, uuid};
 use super::statement::{Connection, query, query_scalar};
-use super::writes::Scope;
+use super::writes::{Scope, Touched};
 use super::{Store, StoreError, audit};
 
 /// What a run answered.
@@ -188,7 +188,7 @@ impl Store {
                 .execute(&mut transaction)
                 .await?;
         }
-        self.commit(transaction).await?;
+        self.commit_of(transaction, Touched::Nothing).await?;
         Ok(Inserted::Kept)
     }
 

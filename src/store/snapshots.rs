@@ -7,7 +7,7 @@ use uuid::Uuid;
 use super::columns::{date, date_key, signed, time, total, unsigned};
 use super::refreshes::{Change, changed, corrected};
 use super::statement::{Connection, query, query_scalar};
-use super::writes::{Caps, Clash, Scope, WriteError, network_exists, room_for_one, room_for_rows};
+use super::writes::{Caps, Clash, Scope, Touched, WriteError, network_exists, room_for_one, room_for_rows};
 use super::{Store, StoreError};
 
 /// A snapshot's line in a list: everything but the counts themselves.
@@ -99,7 +99,7 @@ impl Store {
         }
         let (revision, refresh) = changed(&mut transaction, network).await?;
         insert(&mut transaction, network, snapshot, revision).await?;
-        self.commit(transaction).await?;
+        self.commit_of(transaction, Touched::Network(network)).await?;
         Ok(Change { made: stored.is_none(), stands_since: None, refresh })
     }
 
@@ -171,7 +171,7 @@ impl Store {
             .execute(&mut transaction)
             .await?;
         let (_, refresh) = changed(&mut transaction, network).await?;
-        self.commit(transaction).await?;
+        self.commit_of(transaction, Touched::Network(network)).await?;
         Ok(refresh)
     }
 }

@@ -1,5 +1,9 @@
 //! Writes that look before they leap: one transaction each, refused with data that says why.
 
+use std::hash::{DefaultHasher, Hash, Hasher};
+use std::sync::Arc;
+use std::sync::atomic::{AtomicU64, Ordering};
+
 use jiff::Timestamp;
 use tokio::sync::watch;
 use uuid::Uuid;
@@ -122,6 +126,55 @@ pub(super) enum Scope<'a> {
     Key(&'a str),
 }
 
+/// The networks whose latest forecasts a write may have changed.
+#[derive(Debug, Clone, Copy)]
+pub(super) enum Touched<'a> {
+    Everything,
+    Network(&'a str),
+    Nothing,
+}
+
+/// Writes of this process by network. Networks share counts, so that all of it is a few kilobytes: a network's count is raised by each
+/// of its own writes, and now and then by others'.
+#[derive(Debug)]
+pub struct WriteCounts {
+    everything: AtomicU64,
+    networks: [AtomicU64; SHARED_COUNTS],
+}
+
+const SHARED_COUNTS: usize = 1024;
+
+impl Default for WriteCounts {
+    fn default() -> Self {
+        Self { everything: AtomicU64::default(), networks: [const { AtomicU64::new(0) }; SHARED_COUNTS] }
+    }
+}
+
+impl WriteCounts {
+    /// A network's count; it only rises.
+    pub fn of(&self, network: &str) -> u64 {
+        let own = self.shared(network).map_or(0, |count| count.load(Ordering::SeqCst));
+        self.everything.load(Ordering::SeqCst) + own
+    }
+
+    fn raise(&self, touched: Touched<'_>) {
+        let count = match touched {
+            Touched::Everything => Some(&self.everything),
+            Touched::Network(network) => self.shared(network),
+            Touched::Nothing => None,
+        };
+        if let Some(count) = count {
+            count.fetch_add(1, Ordering::SeqCst);
+        }
+    }
+
+    fn shared(&self, network: &str) -> Option<&AtomicU64> {
+        let mut hasher = DefaultHasher::new();
+        network.hash(&mut hasher);
+        self.networks.get(hasher.finish() as usize % SHARED_COUNTS)
+    }
+}
+
 impl Store {
     /// Begins a write.
     pub(super) async fn begin(&self, scope: Scope<'_>) -> Result<Connection, StoreError> {
@@ -143,10 +196,16 @@ impl Store {
     }
 
     /// Ends a write, with its line in the trail: on disk when this returns.
-    pub(super) async fn commit(&self, mut transaction: Connection) -> Result<(), StoreError> {
+    pub(super) async fn commit(&self, transaction: Connection) -> Result<(), StoreError> {
+        self.commit_of(transaction, Touched::Everything).await
+    }
+
+    /// The same of a write that changes the latest forecasts of no more than it says.
+    pub(super) async fn commit_of(&self, mut transaction: Connection, touched: Touched<'_>) -> Result<(), StoreError> {
         let author = audit::note(&mut transaction).await?;
         let committed = transaction.commit().await;
         // Whatever came of it: who holds a copy of what is stored looks again.
+        self.counts.raise(touched);
         self.commits.send_modify(|count| *count += 1);
         let committed = committed.map_err(StoreError::from);
         self.health.note_write(committed.as_ref().map_err(StoreError::fault).copied());
@@ -161,8 +220,13 @@ impl Store {
         }
     }
 
-    /// Counts the writes of this process, each before it is acknowledged: what was read at one count is what is stored as long
-    /// as the count stands, but for what other processes write.
+    /// The writes of this process by the networks whose latest forecasts they may have changed, each counted before it is acknowledged:
+    /// what was read at one count is what is stored as long as the count stands, but for what other processes write.
+    pub fn counts(&self) -> Arc<WriteCounts> {
+        self.counts.clone()
+    }
+
+    /// Counts all writes of this process.
     pub fn commits(&self) -> watch::Receiver<u64> {
         self.commits.subscribe()
     }

@@ -48,6 +48,8 @@ async fn a_key_is_made_used_listed_and_revoked_while_the_service_runs() {
         &["create", "a b"][..],
         &["create", "x", "--scope", "admin", "--network", "heronsgate"],
         &["create", "x", "--per-day", "0"],
+        &["create", "x", "--per-day", "9223372036854775808"],
+        &["create", &key],
         &["create", "x", "--expires", "2020-01-01"],
         &["create", "x", "--expires", "soon"],
         &["revoke", "nobody"],
@@ -74,15 +76,18 @@ async fn a_key_is_made_used_listed_and_revoked_while_the_service_runs() {
     while client().get(url("/v1/networks")).bearer_auth(&key).send().await.unwrap().status() != 401 {
         assert!(begun.elapsed() < Duration::from_secs(2), "the key still opens");
     }
-    // The name is free again, and the trail has all of it.
-    printed(&keys(folder.path(), &["create", "loader"]));
+    // The name is free again, a key revokes itself, and the trail has all of it.
+    let again = printed(&keys(folder.path(), &["create", "loader"]));
+    assert!(printed(&keys(folder.path(), &["revoke", &again])).contains("revoked loader"));
     let trail = client().get(url("/v1/audit")).bearer_auth(admin["key"].as_str().unwrap()).send().await.unwrap();
     let trail: Value = serde_json::from_str(&trail.text().await.unwrap()).unwrap();
     let paths: Vec<&str> =
         trail["items"].as_array().unwrap().iter().map(|line| line["path"].as_str().unwrap()).collect();
+    let id = &again[..again.rfind('_').unwrap()];
     assert_eq!(
         paths,
         [
+            &format!("keys revoke {id}_…"),
             "keys create loader",
             "keys revoke loader",
             "keys create chief",

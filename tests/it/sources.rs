@@ -259,6 +259,24 @@ async fn exactly_one_of_two_processes_takes_each_run() {
 }
 
 #[tokio::test]
+async fn a_run_whose_source_is_replaced_gives_its_place_back() {
+    let Some((_server, address)) = links().await else { return };
+    let service = counting_in(&address).await;
+    // More of them than may run at once, each far slower than this test.
+    for seconds in 41..46 {
+        let slow =
+            format!("SELECT degree, nodes FROM (VALUES (0, 3), (2, 1)) AS v (degree, nodes), pg_sleep({seconds})");
+        let source = changed(changed(source(), "/query", json!(slow)), "/timeout_seconds", json!(60));
+        assert!(matches!(service.put(SOURCE, &source).await.status, 200 | 201));
+        when(&service, |now| now["state"] == "running").await;
+    }
+    service.put(SOURCE, &source()).await.expect(200);
+    when(&service, |now| now["last_success"].is_object()).await;
+    assert_eq!(snapshots(&service).await.len(), 1, "what was replaced stored nothing");
+    service.stop().await;
+}
+
+#[tokio::test]
 async fn a_database_that_is_away_is_tried_again_after_a_pause_that_grows_and_its_address_is_not_told() {
     // Nobody listens there.
     let service = Service::start_with(|config| {

@@ -104,6 +104,8 @@ impl KeyRing {
                 uses.push(KeyUse { id: live.key.id.clone(), day, requests, last_used_at });
             }
         }
+        // In one order: two processes that store theirs wait for one another, never both.
+        uses.sort_unstable_by(|a, b| a.id.cmp(&b.id));
         if uses.is_empty() {
             return Ok(());
         }

@@ -9,6 +9,7 @@ use tokio::sync::{Notify, OwnedSemaphorePermit, Semaphore, watch};
 use uuid::Uuid;
 
 use crate::config::JobsConfig;
+use crate::service::background::give_way;
 use crate::store::JobKind;
 
 /// Smallest step of progress that is told.
@@ -178,6 +179,7 @@ impl Progress {
 
     /// Why the work is to stop, if it is.
     pub fn stop(&self) -> Option<Stop> {
+        give_way();
         if self.live.called_off.load(Ordering::Relaxed) {
             return Some(Stop::CalledOff);
         }

@@ -23,6 +23,8 @@ const LONGEST_SLEEP: Duration = Duration::from_secs(60);
 const SHARED_SLEEP: Duration = Duration::from_secs(1);
 /// Pause when the database fails.
 const STORE_PAUSE: Duration = Duration::from_secs(2);
+/// Time between two looks whether a run that is at work is still its source's.
+const LOOK: Duration = Duration::from_secs(2);
 /// How much longer than the query's own time a claim holds, seconds: to connect, to store, and to note how it went.
 const CLAIM_MARGIN_SECONDS: u64 = 120;
 
@@ -132,8 +134,23 @@ impl Service {
             time: Duration::from_secs(source.timeout_seconds),
             most_rows: self.sources.most_rows,
         };
-        let snapshot = count(database, counting).await.map_err(|fault| fault.to_string())?;
+        let snapshot = tokio::select! {
+            counted = count(database, counting) => counted.map_err(|fault| fault.to_string())?,
+            // Its place is another's: a source that is put again and again would hold them all.
+            () = self.until_replaced(claimed) => return Ok(None),
+        };
         self.store_counted(claimed, name, snapshot).await.map_err(|error| in_words(&error))
+    }
+
+    /// Returns when a run is no longer its source's.
+    async fn until_replaced(&self, claimed: &ClaimedRun) {
+        loop {
+            sleep(LOOK).await;
+            // Whoever cannot tell goes on; it is asked again before anything is stored.
+            if matches!(self.store.run_stands(&claimed.network, claimed.run).await, Ok(false)) {
+                return;
+            }
+        }
     }
 
     async fn store_counted(
