@@ -236,7 +236,7 @@ async fn examine(path: &Path) -> Result<BackupReport, BackupError> {
             .fetch_all(&mut connection)
             .await;
     let Ok(migrations) = migrations else { return Err(unsound("it is no database of this service".into())) };
-    if migrations.iter().zip(known_migrations()).any(|(found, (known, _))| found.0 < known) || migrations.is_empty() {
+    if migrations.iter().zip(known_migrations()).any(|(found, (known, _))| found.0 > known) || migrations.is_empty() {
         return Err(unsound("its record of migrations has gaps, so its tables are those of no version".into()));
     }
     for (version, success, checksum) in &migrations {
