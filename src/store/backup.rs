@@ -107,7 +107,7 @@ pub async fn back_up(config: &DatabaseConfig, target: &Path, replace: bool) -> R
     }
     // Nothing but a plain file is replaced, and none of those that the database consists of.
     let companion = |suffix: &str| same_place(&beside(database, suffix), target);
-    let own = same_file(database, target) || ["-wal", "-shm", "-journal"].into_iter().any(companion);
+    let own = same_file(database, target) || ["-wal", "-shm", "-journal", "-serving"].into_iter().any(companion);
     let plain = std::fs::symlink_metadata(target).map_or(true, |found| found.is_file());
     if own || !plain || (target.exists() && !replace) {
         return Err(BackupError::Taken(target.to_owned()));
@@ -235,13 +235,16 @@ async fn examine(path: &Path) -> Result<BackupReport, BackupError> {
         sqlx::query_as("SELECT version, success, checksum FROM _sqlx_migrations ORDER BY version")
             .fetch_all(&mut connection)
             .await;
-    let Ok(migrations) = migrations else { return Err(unsound("it is no database of this service".into())) };
-    if migrations.iter().zip(known_migrations()).any(|(found, (known, _))| found.0 > known) || migrations.is_empty() {
-        return Err(unsound("its record of migrations has gaps, so its tables are those of no version".into()));
-    }
+    let Some(migrations) = migrations.ok().filter(|found| !found.is_empty()) else {
+        return Err(unsound("it is no database of this service".into()));
+    };
+    let mut known = known_migrations();
     for (version, success, checksum) in &migrations {
-        match known_migrations().find(|&(known, _)| known == *version) {
+        match known.next() {
             None => return Err(unsound(format!("it was written by a newer version (tables of version {version})"))),
+            Some((next, _)) if next != *version => {
+                return Err(unsound(format!("its record of migrations has gaps ({version} where {next} comes next)")));
+            }
             Some((_, known)) if !success || known != checksum.as_slice() => {
                 return Err(unsound(format!("its tables are none of a released version (at {version})")));
             }

@@ -81,7 +81,8 @@ async fn all_that_was_acknowledged_before_a_backup_is_in_it() {
         &tailcast(folder.path(), &["backup", "first.db"]),
         "is there already, or belongs to the database itself; name another file, or add --replace",
     );
-    for own in ["tailcast.db", "tailcast.db-wal", "tailcast.db-shm", "tailcast.db-journal", "."] {
+    for own in ["tailcast.db", "tailcast.db-wal", "tailcast.db-shm", "tailcast.db-journal", "tailcast.db-serving", "."]
+    {
         refused(
             &tailcast(folder.path(), &["backup", own, "--replace"]),
             "is there already, or belongs to the database",
