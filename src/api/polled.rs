@@ -1,8 +1,8 @@
 //! Copies of the latest forecasts that are polled, in the form in which they leave.
 //!
-//! A copy is used as it is while this process has written nothing of its network since it was looked up, for at most [`UNCHECKED`]; then one row
-//! of the database says whether it still holds. So a change is seen by the first read after it is acknowledged, and a change by another
-//! process within that time.
+//! A copy is used as it is while this process has written nothing of its network since it was looked up, for at most
+//! [`UNCHECKED`]; then one row of the database says whether it still holds. So a change is seen by the first read after it is
+//! acknowledged, and a change by another process within that time.
 
 use std::collections::HashMap;
 use std::sync::atomic::{AtomicU64, Ordering};
@@ -53,8 +53,8 @@ pub struct PolledCopy {
     with_json: HeaderMap,
     without: HeaderMap,
     beside: HeaderMap,
-    /// The count of writes, and when, at the last look.
-    commits: AtomicU64,
+    /// The network's count of writes, and when, at the last look.
+    writes: AtomicU64,
     checked: AtomicU64,
     used: AtomicU64,
 }
@@ -102,18 +102,18 @@ impl Polled {
             return Ok(copy);
         }
         // Before the look: what is written meanwhile makes the copy one to be looked up again.
-        let (commits, now) = (inner.counts.of(name.as_str()), inner.now(Instant::now()));
+        let (writes, now) = (inner.counts.of(name.as_str()), inner.now(Instant::now()));
         if let Some(copy) = inner.find(name.as_str())
             && inner.service.latest_stamp(name).await?.as_ref() == Some(&copy.stamp)
         {
-            copy.commits.store(commits, Ordering::Relaxed);
+            copy.writes.store(writes, Ordering::Relaxed);
             copy.checked.store(now, Ordering::Relaxed);
             copy.used.store(now, Ordering::Relaxed);
             return Ok(copy);
         }
         match inner.service.polled_forecast(name).await {
             Ok(found) => {
-                let copy = Arc::new(PolledCopy::new(found, commits, now)?);
+                let copy = Arc::new(PolledCopy::new(found, writes, now)?);
                 inner.keep(name.as_str(), copy.clone());
                 Ok(copy)
             }
@@ -132,7 +132,7 @@ impl Inner {
         let now = self.now(at);
         let age = now.saturating_sub(copy.checked.load(Ordering::Relaxed));
         // First the count, which is raised after the write: a copy of this count was read after it.
-        if copy.commits.load(Ordering::Relaxed) != self.counts.of(network) || age >= UNCHECKED.as_millis() as u64 {
+        if copy.writes.load(Ordering::Relaxed) != self.counts.of(network) || age >= UNCHECKED.as_millis() as u64 {
             return None;
         }
         copy.used.store(now, Ordering::Relaxed);
@@ -171,7 +171,7 @@ impl Inner {
 }
 
 impl PolledCopy {
-    fn new(found: PolledForecast, commits: u64, now: u64) -> Result<Self, ApiError> {
+    fn new(found: PolledForecast, writes: u64, now: u64) -> Result<Self, ApiError> {
         let PolledForecast { forecast, stamp, unasked } = found;
         let mut beside = HeaderMap::new();
         let place = header_value(&format!("{}/{}", forecasts::PATH, forecast.run.id))?;
@@ -196,7 +196,7 @@ impl PolledCopy {
             with_json,
             without,
             beside,
-            commits: commits.into(),
+            writes: writes.into(),
             checked: now.into(),
             used: now.into(),
         })

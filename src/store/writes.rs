@@ -295,3 +295,24 @@ pub(super) fn room_for_one(what: &'static str, stored: i64, caps: &Caps) -> Resu
     }
     Ok(())
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn a_write_raises_the_counts_of_what_it_may_have_changed() {
+        let counts = WriteCounts::default();
+        // Of so many names only a few share a count with the first.
+        let others: Vec<String> = (0..100).map(|i| format!("heronsgate-{i}")).collect();
+        let of_others = || others.iter().map(|name| counts.of(name)).sum::<u64>();
+        counts.raise(Touched::Network("heronsgate"));
+        assert_eq!(counts.of("heronsgate"), 1);
+        assert!(of_others() < 5);
+        let before = of_others();
+        counts.raise(Touched::Nothing);
+        assert_eq!((counts.of("heronsgate"), of_others()), (1, before));
+        counts.raise(Touched::Everything);
+        assert_eq!((counts.of("heronsgate"), of_others()), (2, before + 100));
+    }
+}
