@@ -117,7 +117,7 @@ fn stored(terms: KeyTerms, credential: &Credential) -> Result<StoredKey, KeyErro
         ));
     }
     if per_day.is_some_and(|most| i64::try_from(most).is_err()) {
-        return Err(refused("a limit of requests a day is at most 9223372036854775807; leave it out for none"));
+        return Err(refused(&format!("a limit of requests a day is at most {}; leave it out for none", i64::MAX)));
     }
     for network in &networks {
         NetworkName::new(network).map_err(|fault| refused(&format!("{network:?}: {fault}")))?;

@@ -8,8 +8,7 @@ use std::time::{Duration, Instant};
 use tokio::sync::{Semaphore, oneshot};
 
 /// How far the threads step back, as the system counts niceness (0 to 19). With nothing beside them they have a processor all the
-/// same; beside a thread that does not step back, a seventieth of one. A thread that wakes takes a processor from them the sooner the
-/// less they count: beside ten steps a poll waited up to a tick of 4 ms, beside nineteen hardly at all.
+/// same; beside a thread that does not step back, a seventieth of one.
 #[cfg(target_os = "linux")]
 const NICENESS: i32 = 19;
 

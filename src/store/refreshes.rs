@@ -157,9 +157,9 @@ impl Store {
         Ok(RefreshEnded::Stored(redo))
     }
 
-    /// Ends a refresh of this process that has nothing to store, unless it was called off or claimed by another before. `stands` is how the latest forecast stands
-    /// then, and why; it is noted where no newer refresh has a say, and a backtest whose counts were replaced is taken on anew
-    /// and returned.
+    /// Ends a refresh of this process that has nothing to store, unless it was called off or claimed by another before. `stands` is
+    /// how the latest forecast stands then, and why; it is noted where no newer refresh has a say, and a backtest whose counts were
+    /// replaced is taken on anew and returned.
     ///
     /// # Errors
     /// When the database fails.

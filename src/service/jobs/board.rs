@@ -177,7 +177,7 @@ impl Progress {
         Ok(())
     }
 
-    /// Why the work is to stop, if it is.
+    /// Why the work is to stop, if it is. Long work asks often, so this is where its thread gives way.
     pub fn stop(&self) -> Option<Stop> {
         give_way();
         if self.live.called_off.load(Ordering::Relaxed) {
