@@ -105,7 +105,7 @@ def measure(children, ports, postmaster, url, tag):
 
 
 def main():
-    folder, pg_folder = tempfile.mkdtemp(), tempfile.mktemp(prefix="bench-pg-", dir="/tmp")
+    folder, pg_folder = tempfile.mkdtemp(), tempfile.mktemp(prefix="bench-pg-")
     server = os.path.join(ROOT, "tests", "postgres")
     url = subprocess.run([server, "start", pg_folder], check=True, stdout=subprocess.PIPE, text=True).stdout.strip()
     postmaster = int(open(os.path.join(pg_folder, "data", "postmaster.pid")).readline())

@@ -122,7 +122,7 @@ def main():
         sys.exit("a network namespace cannot be made here: run it as root")
     sh("ip", "link", "set", "lo", "up")
     holder = subprocess.Popen(["unshare", "--net", "sleep", "600"])
-    folder, pg_folder = tempfile.mkdtemp(), tempfile.mktemp(prefix="cut-pg-", dir="/tmp")
+    folder, pg_folder = tempfile.mkdtemp(), tempfile.mktemp(prefix="cut-pg-")
     server = os.path.join(os.path.dirname(os.path.abspath(__file__)), "postgres")
     children = [holder]
     try:

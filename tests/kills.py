@@ -121,7 +121,7 @@ def main():
     folder = asked.keep or tempfile.mkdtemp()
     os.makedirs(folder, exist_ok=True)
     server = os.path.join(os.path.dirname(os.path.abspath(__file__)), "postgres")
-    pg_folder = tempfile.mktemp(prefix="kills-pg-", dir="/tmp") if asked.postgres else None
+    pg_folder = tempfile.mktemp(prefix="kills-pg-") if asked.postgres else None
     try:
         if pg_folder:
             url = subprocess.run([server, "start", pg_folder], check=True, stdout=subprocess.PIPE, text=True).stdout.strip()
