@@ -62,9 +62,7 @@ impl Store {
         match &self.home {
             Home::Sqlite { write, .. } => MIGRATOR.run(write).await?,
             Home::Postgres { pool } => {
-                // A pool that gets no connection says only that it waited; one connection by itself says why.
-                let first = timeout(CONNECT_TIMEOUT, PgConnection::connect_with(&pool.connect_options())).await;
-                first.unwrap_or(Err(sqlx::Error::PoolTimedOut))?.close().await?;
+                reach(&pool.connect_options()).await?;
                 MIGRATOR.run(pool).await?;
             }
         }
@@ -249,6 +247,24 @@ fn server(config: &DatabaseConfig) -> Result<Home, StoreError> {
     let pool =
         pool_options::<sqlx::Postgres>(config.connections).acquire_timeout(CONNECT_TIMEOUT).max_lifetime(MOST_AGE);
     Ok(Home::Postgres { pool: pool.connect_lazy_with(options) })
+}
+
+/// Connects once, by itself: a pool that gets no connection says only that it waited.
+async fn reach(options: &PgConnectOptions) -> Result<(), StoreError> {
+    let fault = |reason: String| {
+        let (host, port, database) =
+            (options.get_host(), options.get_port(), options.get_database().unwrap_or_default());
+        let remedy = "see that the server is up, can be reached from here, and lets this user in";
+        StoreError::Address {
+            url: format!("postgres://…{host}:{port}/{database}"),
+            reason: format!("{reason}; {remedy}"),
+        }
+    };
+    match timeout(CONNECT_TIMEOUT, PgConnection::connect_with(options)).await {
+        Ok(Ok(connection)) => Ok(connection.close().await?),
+        Ok(Err(error)) => Err(fault(error.to_string())),
+        Err(_) => Err(fault(format!("no answer within {} s", CONNECT_TIMEOUT.as_secs()))),
+    }
 }
 
 async fn file(config: &DatabaseConfig) -> Result<Home, StoreError> {

@@ -132,7 +132,8 @@ fn a_server_that_is_away_is_said_in_its_own_words() {
     let output = run(serve, "");
     let said = text(&output.stderr);
     assert_eq!(output.status.code(), Some(1), "{said}");
-    assert!(said.contains("refused") && !said.contains("hidden") && !said.contains("do not fit"), "{said}");
+    assert!(said.contains("127.0.0.1:9/tailcast cannot be used") && said.contains("refused"), "{said}");
+    assert!(said.contains("see that the server is up") && !said.contains("hidden"), "{said}");
 }
 
 #[test]
