@@ -190,22 +190,20 @@ async fn sizes_are_told_in_bytes_and_rows() {
         let text = second.get("/metrics").await.expect(200).text;
         text.lines().find_map(|line| line.strip_prefix(name)?.trim().parse().ok())
     };
-    // Other services of this process tell theirs under the same names: each value is of some database of a test.
-    for name in [
-        "tailcast_database_bytes",
-        "tailcast_database_log_bytes",
-        "tailcast_database_free_bytes",
-        "tailcast_spool_bytes",
-        "tailcast_disk_free_bytes",
-        "tailcast_database_rows{table=\"runs\"}",
-        "tailcast_database_rows{table=\"networks\"}",
+    // Other services of this process tell theirs under the same names, some of them of a file that is yet to be filled.
+    for (name, least) in [
+        ("tailcast_database_bytes", 4097.0),
+        ("tailcast_database_log_bytes", 0.0),
+        ("tailcast_database_free_bytes", 0.0),
+        ("tailcast_spool_bytes", 0.0),
+        ("tailcast_disk_free_bytes", 1.0),
+        ("tailcast_database_rows{table=\"runs\"}", 0.0),
+        ("tailcast_database_rows{table=\"networks\"}", 0.0),
     ] {
-        while value(name).await.is_none_or(|value| value < 0.0) {
-            assert!(begun.elapsed() < Duration::from_secs(10), "{name}");
+        while value(name).await.is_none_or(|value| value < least) {
+            assert!(begun.elapsed() < Duration::from_secs(40), "{name}");
             tokio::time::sleep(Duration::from_millis(30)).await;
         }
     }
-    assert!(value("tailcast_database_bytes").await.unwrap() > 4096.0);
-    assert!(value("tailcast_disk_free_bytes").await.unwrap() > 0.0);
     second.stop().await;
 }
