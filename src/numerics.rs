@@ -2,6 +2,7 @@
 //!
 //! Every tolerance and every iteration cap of the core stands in [`tolerances`].
 
+pub mod binomial;
 pub mod elementary;
 pub mod gamma;
 pub mod intervals;

@@ -1,13 +1,16 @@
 //! The law of one node's degree: the exact distribution of where a node stands after some days.
 
+mod classes;
 mod gain;
 mod mixed;
 mod panel;
+mod steady;
 
 pub(crate) use mixed::MixedLaw;
 
 use gain::GainLaw;
 use panel::{LawPanel, barycentric_weights};
+pub(crate) use steady::SteadyLaw;
 use statrs::function::beta::checked_beta_reg;
 
 use super::mean_field::{Course, GrowthError};
@@ -20,6 +23,8 @@ use crate::numerics::two_moments::TwoMoments;
 const NEVER: f64 = 1e-280;
 /// Below this shape (u/v, for a node without links) nearly all of the law lies at no gain, and the rest is a logarithmic series.
 const RARE_SHAPE: f64 = 0.01;
+/// Relative drift of u/v below which it is constant: the closed form is then as exact as the inversion.
+const CONSTANT: f64 = 1e-12;
 /// Once a link's expected descendants are fewer than e^{−50}, what came before leaves no trace in double precision.
 const FORGOTTEN: f64 = -50.0;
 
@@ -63,6 +68,8 @@ pub struct NodeLaw {
     shortfall: f64,
     losses: bool,
     panels: Vec<LawPanel>,
+    /// The closed form, where there is one.
+    steady: Option<SteadyLaw>,
 }
 
 impl NodeLaw {
@@ -88,6 +95,7 @@ impl NodeLaw {
             shortfall: -dormant_expansion,
             losses: loss > 0.0,
             panels: Vec::with_capacity(edges.len()),
+            steady: None,
         };
         let mut exponent = -loss * (to - until); // R at the end of the panel in hand
         for pair in edges.windows(2).rev() {
@@ -121,6 +129,7 @@ impl NodeLaw {
             }
         }
         law.expansion = exponent.exp();
+        law.steady = law.closed_form();
         law
     }
 
@@ -151,8 +160,7 @@ impl NodeLaw {
         if threshold == 0 {
             return Ok(1.0);
         }
-        // Nothing lands: no panel, or panels of nothing.
-        if self.spread == 0.0 && self.mean_gain_from_uniform() == 0.0 {
+        if self.is_still() {
             return Ok(starts.iter().map(|&(degree, share)| share * self.tail_of_losses(degree, threshold)).sum());
         }
         let open = if self.losses { starts.len() } else { starts.partition_point(|&(degree, _)| degree < threshold) };
@@ -163,18 +171,47 @@ impl NodeLaw {
         if self.mean_gain_from_uniform() + reference as f64 * offspring < NEVER {
             return Ok(certain);
         }
+        if let Some(steady) = self.steady {
+            let mut tail = certain;
+            let degrees = starts[..open].iter().map(|&(degree, _)| degree);
+            steady.tails(degrees, threshold, |place, own| tail += starts[place].1 * own);
+            return Ok(tail);
+        }
         let share: f64 = starts[..open].iter().map(|&(_, share)| share).sum();
         let below = |&(degree, weight): &(u64, f64)| ((reference - degree) as f64, weight / share);
         let below: Vec<(f64, f64)> = starts[..open].iter().rev().map(below).collect();
         let law = GainLaw { law: self, reference: reference as f64, below: &below };
         let gain = threshold as f64 - reference as f64;
-        // Without losses and from one degree the gain starts at 0; its mean over the spread is the law's shape.
-        let gained = self.mean(reference) - reference as f64;
-        let rare = !self.losses && below.len() == 1 && gained < RARE_SHAPE * self.spread;
+        let rare = below.len() == 1 && self.gains_seldom(reference);
         // A network that starts without any link bends u/v too much for the rare form; the common one serves it.
         let rare = if rare { rare_upper_tail(&law, gain, accuracy).ok() } else { None };
         let tail = rare.map_or_else(|| upper_tail(&law, gain, accuracy), Ok);
         Ok(certain + share * tail?)
+    }
+
+    /// Whether nothing lands: there is no panel, or panels of nothing.
+    fn is_still(&self) -> bool {
+        self.spread == 0.0 && self.mean_gain_from_uniform() == 0.0
+    }
+
+    /// Whether nearly all of the law of a node of degree `degree` lies at no gain. Without losses the gain starts at 0, and its mean over
+    /// the spread is the law's shape.
+    fn gains_seldom(&self, degree: u64) -> bool {
+        !self.losses && self.mean(degree) - (degree as f64) < RARE_SHAPE * self.spread
+    }
+
+    /// The closed form, where no link is lost and u/v is constant, or every link lands uniformly.
+    fn closed_form(&self) -> Option<SteadyLaw> {
+        let law = SteadyLaw { uniform: self.mean_gain_from_uniform(), spread: self.spread };
+        let constant = law.uniform / law.spread;
+        let drifts = |&ratio: &f64| (ratio - constant).abs() > CONSTANT * constant;
+        let steady = law.spread == 0.0 || !self.panels.iter().flat_map(|panel| &panel.ratio).any(drifts);
+        (steady && !self.losses).then_some(law)
+    }
+
+    /// See [`SteadyLaw`]; none where the law has no closed form.
+    pub(crate) fn steady(&self) -> Option<SteadyLaw> {
+        self.steady
     }
 
     /// P(at least `threshold` of `degree` links are kept), for a node that gains none: binomial.

@@ -1,8 +1,12 @@
 //! Tail sizes: how many nodes will have at least a threshold of links.
 
+use std::cell::RefCell;
+use std::collections::HashMap;
+use std::rc::Rc;
+
 use super::capped::{capped_parts, needs_states};
 use super::holdings::{Holdings, Piece, holdings};
-use super::law::{MixedLaw, NodeLaw};
+use super::law::{MixedLaw, NodeLaw, SteadyLaw};
 use super::mean_field::{Course, GrowthError};
 use super::moments::MomentLaw;
 use crate::model::DegreeCounts;
@@ -48,22 +52,37 @@ pub struct TailParts {
 impl TailParts {
     /// The tail size, and how many of those with `threshold` links or more at the start are in it still.
     pub fn sum(&self, threshold: u64) -> TailSum {
-        let new = self.newcomers;
-        let mut sum = TailSum { kept: 0.0, mean: new, variance: new, third_cumulant: new, log_none: -new };
-        for &TailClass { degree, nodes, probability } in &self.present {
-            sum.mean += nodes * probability;
-            sum.variance += nodes * probability * (1.0 - probability);
-            sum.third_cumulant += nodes * probability * (1.0 - probability) * (1.0 - 2.0 * probability);
-            sum.log_none += nodes * (-probability).ln_1p();
-            if degree >= threshold {
-                sum.kept += nodes * probability;
-            }
-        }
-        sum
+        let mut sum = TailSum::default();
+        self.present.iter().for_each(|&class| sum.add(class, threshold));
+        sum.with_newcomers(self.newcomers)
     }
 
     fn present_mean(&self) -> f64 {
         self.present.iter().map(|class| class.nodes * class.probability).sum()
+    }
+}
+
+impl TailSum {
+    fn add(&mut self, TailClass { degree, nodes, probability }: TailClass, threshold: u64) {
+        let (mean, missing) = (nodes * probability, 1.0 - probability);
+        self.mean += mean;
+        self.variance += mean * missing;
+        self.third_cumulant += mean * missing * (1.0 - 2.0 * probability);
+        self.log_none += nodes * (-probability).ln_1p();
+        if degree >= threshold {
+            self.kept += mean;
+        }
+    }
+
+    /// With so many newcomers expected, whose number is Poisson.
+    fn with_newcomers(self, expected: f64) -> Self {
+        Self {
+            mean: self.mean + expected,
+            variance: self.variance + expected,
+            third_cumulant: self.third_cumulant + expected,
+            log_none: self.log_none - expected,
+            ..self
+        }
     }
 }
 
@@ -95,7 +114,16 @@ pub struct NetworkLaw<'a> {
     counts: &'a DegreeCounts,
     day: f64,
     nodes: NodeLaws,
+    /// What newcomers of a day are like, by the bits of that day: every threshold asks for the same days.
+    cohorts: RefCell<HashMap<u64, Rc<Cohort>>>,
     cancelled: &'a dyn Fn() -> bool,
+}
+
+/// Newcomers of one day.
+struct Cohort {
+    /// How many a day are expected to be present still.
+    present: f64,
+    law: MixedLaw,
 }
 
 /// The laws of the network's nodes.
@@ -118,7 +146,7 @@ impl<'a> NetworkLaw<'a> {
         } else {
             NodeLaws::Moments(MomentLaw::solve(course, counts, day)?)
         };
-        Ok(Self { course, counts, day, nodes, cancelled: &|| false })
+        Ok(Self { course, counts, day, nodes, cohorts: RefCell::default(), cancelled: &|| false })
     }
 
     /// The same law, whose tails ask `cancelled` before each node law they are made of: one takes microseconds to a few milliseconds,
@@ -133,7 +161,19 @@ impl<'a> NetworkLaw<'a> {
     /// # Errors
     /// Those of [`super::NodeLaw::tail`]; cancellation.
     pub fn tail(&self, threshold: u64, accuracy: Accuracy) -> Result<TailSum, GrowthError> {
-        Ok(self.parts(threshold, accuracy)?.sum(threshold))
+        let Some((steady, earliest)) = self.steady() else {
+            return Ok(self.parts(threshold, accuracy)?.sum(threshold));
+        };
+        let mut sum = TailSum::default();
+        let kept = self.counts.tail_size(threshold);
+        if kept > 0 {
+            // Links last: whoever is in the tail and stays is in it still, whatever its degree.
+            let probability = self.course.survival(self.day);
+            sum.add(TailClass { degree: threshold, nodes: kept as f64, probability }, threshold);
+        }
+        self.risers(steady, threshold, accuracy, |class| sum.add(class, threshold))?;
+        let newcomers = self.newcomers(earliest, threshold, accuracy, sum.mean)?;
+        Ok(sum.with_newcomers(newcomers))
     }
 
     /// Whom the tail is made of.
@@ -145,9 +185,19 @@ impl<'a> NetworkLaw<'a> {
             return capped_parts(self.course, self.counts, self.day, threshold, cap);
         }
         let mut parts = TailParts::default();
+        if let Some((steady, earliest)) = self.steady() {
+            self.risers(steady, threshold, accuracy, |class| parts.present.push(class))?;
+            let probability = self.course.survival(self.day);
+            let kept = self.counts.iter().skip_while(|&(degree, _)| degree < threshold);
+            parts.present.extend(kept.map(|(degree, nodes)| TailClass { degree, nodes: nodes as f64, probability }));
+            parts.present.reverse();
+            parts.newcomers = self.newcomers(earliest, threshold, accuracy, parts.present_mean())?;
+            return Ok(parts);
+        }
         match &self.nodes {
             NodeLaws::Exact { present, earliest } => {
-                self.add_present(&mut parts, threshold, accuracy, |k| present.tail(&[(k, 1.0)], threshold, accuracy))?;
+                let mut tails = present.class_tails(threshold, accuracy);
+                self.add_present(&mut parts, threshold, accuracy, |k| tails.of(k))?;
                 parts.newcomers = self.newcomers(earliest, threshold, accuracy, parts.present_mean())?;
             }
             NodeLaws::Moments(laws) => {
@@ -202,12 +252,45 @@ impl<'a> NetworkLaw<'a> {
         if (self.cancelled)() { Err(GrowthError::Cancelled) } else { Ok(()) }
     }
 
+    /// The closed form of a present node's law, where it has one, and the law of the earliest newcomers.
+    fn steady(&self) -> Option<(SteadyLaw, &MixedLaw)> {
+        match &self.nodes {
+            NodeLaws::Exact { present, earliest } if self.course.cap().is_none() => Some((present.steady()?, earliest)),
+            _ => None,
+        }
+    }
+
+    /// The present nodes below the threshold that may come past it, from the smallest degree up; those that by a bound cannot matter
+    /// are left out.
+    fn risers(
+        &self,
+        law: SteadyLaw,
+        threshold: u64,
+        accuracy: Accuracy,
+        mut each: impl FnMut(TailClass),
+    ) -> Result<(), GrowthError> {
+        self.check()?;
+        let counts = self.counts;
+        let below = &counts.degrees()[..counts.degrees().partition_point(|&degree| degree < threshold)];
+        let (Some(&highest), nodes) = (below.last(), counts.nodes_by_degree()) else { return Ok(()) };
+        let survival = self.course.survival(self.day);
+        let least = counts.tail_size(threshold) as f64 + nodes[below.len() - 1] as f64 * law.tail(highest, threshold);
+        let negligible = accuracy.negligible() * least + TAIL_ZERO / survival;
+        let up_to = |degree: u64| (counts.nodes() - counts.tail_size(degree + 1)) as f64;
+        let first = below.partition_point(|&degree| law.most(degree, threshold) * up_to(degree) <= negligible);
+        law.tails(below[first..].iter().copied(), threshold, |place, probability| {
+            let (degree, nodes) = (below[first + place], nodes[first + place] as f64);
+            each(TailClass { degree, nodes, probability: survival * probability });
+        });
+        Ok(())
+    }
+
     fn add_present(
         &self,
         parts: &mut TailParts,
         threshold: u64,
         accuracy: Accuracy,
-        tail: impl Fn(u64) -> Result<f64, GrowthError>,
+        mut tail: impl FnMut(u64) -> Result<f64, GrowthError>,
     ) -> Result<(), GrowthError> {
         let survival = self.course.survival(self.day);
         let cap = self.course.cap();
@@ -236,6 +319,14 @@ impl<'a> NetworkLaw<'a> {
         Ok(())
     }
 
+    fn cohort(&self, arrival: f64) -> Rc<Cohort> {
+        let make = || {
+            let present = self.course.parameters().arrivals.rate(arrival) * self.course.survival(self.day - arrival);
+            Rc::new(Cohort { present, law: MixedLaw::of_newcomer(self.course, arrival, self.day) })
+        };
+        self.cohorts.borrow_mut().entry(arrival.to_bits()).or_insert_with(make).clone()
+    }
+
     fn newcomers(
         &self,
         earliest: &MixedLaw,
@@ -258,11 +349,12 @@ impl<'a> NetworkLaw<'a> {
         }
         let mut in_tail = |arrival: f64| -> Result<f64, GrowthError> {
             self.check()?;
-            let mut share = MixedLaw::of_newcomer(course, arrival, day).tail(open, threshold, accuracy)?;
+            let cohort = self.cohort(arrival);
+            let mut share = cohort.law.tail(open, threshold, accuracy)?;
             if !full.is_empty() {
                 share += NodeLaw::gainless(course, arrival, day).mixture_tail(full, threshold, accuracy)?;
             }
-            Ok(parameters.arrivals.rate(arrival) * course.survival(day - arrival) * share)
+            Ok(cohort.present * share)
         };
         let mut mean = 0.0;
         for pair in course.arrival_edges(day).windows(2) {

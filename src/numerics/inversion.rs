@@ -1,5 +1,7 @@
 //! Tail probabilities of a counting variable from its generating function, far tails included.
 
+mod shared;
+
 use std::f64::consts::PI;
 
 use num_complex::Complex64;
@@ -8,6 +10,8 @@ use super::elementary::complex_exp_m1;
 use super::tolerances::{
     Accuracy, CONTOUR_AGREEMENT, CONTOUR_MAX_POINTS, CONTOUR_NEGLIGIBLE, SADDLE_CLOSENESS, SADDLE_MAX_STEPS,
 };
+
+pub use shared::{GeneratingFamily, SharedContour};
 
 /// The generating function of a whole-number variable G, on the logarithmic plane z = e^ζ.
 ///
@@ -36,7 +40,7 @@ const SMALL_TAIL: f64 = 1e-8;
 pub struct InversionError;
 
 /// Which side of the pole at z = 1 the contour crosses the real axis.
-#[derive(Clone, Copy, PartialEq)]
+#[derive(Debug, Clone, Copy, PartialEq)]
 enum Side {
     /// r > 1: the sum is P(G ≥ g).
     Upper,
@@ -46,6 +50,7 @@ enum Side {
 
 /// Where a contour crosses the real axis, and the shape of the integrand there.
 struct Saddle {
+    side: Side,
     zeta: f64,
     /// Second derivative of the exponent: 1/width².
     curvature: f64,
@@ -73,26 +78,51 @@ struct Saddle {
 /// # Errors
 /// [`InversionError`] when the sums do not settle.
 pub fn upper_tail(gf: &impl GeneratingFunction, g: f64, accuracy: Accuracy) -> Result<f64, InversionError> {
+    let Crossing::At(saddle) = crossing(gf, g) else { return Ok(0.0) };
+    let from_below = |saddle: &Saddle| {
+        contour_integral(gf, g, saddle, accuracy).and_then(|below| probability(1.0 - below))
+    };
+    match saddle.side {
+        Side::Lower => from_below(&saddle),
+        Side::Upper => match contour_integral(gf, g, &saddle, accuracy) {
+            Err(InversionError) if !saddle.is_small() => {
+                let [_, mean, variance] = gf.log_real(0.0);
+                from_below(&find_saddle(gf, g, mean, variance, Side::Lower))
+            }
+            settled => settled.and_then(probability),
+        },
+    }
+}
+
+/// Where the contour of P(G ≥ g) had best cross the real axis.
+enum Crossing {
+    At(Saddle),
+    /// Nowhere: the tail is zero in double precision.
+    Nowhere,
+}
+
+fn crossing(gf: &impl GeneratingFunction, g: f64) -> Crossing {
     let [_, mean, variance] = gf.log_real(0.0);
     if g > mean {
         let saddle = find_saddle(gf, g, mean, variance, Side::Upper);
+        if saddle.height < UNDERFLOW {
+            return Crossing::Nowhere;
+        }
         // Far below the law's own scale the contour is squeezed between the pole and the singularity. A tail that is not
         // small is then better had as 1 − P(G < g).
-        if saddle.height < UNDERFLOW {
-            return Ok(0.0);
-        }
-        let small = saddle.height < SMALL_TAIL.ln();
         let squeezed = g > 0.0 && g * gf.singularity() < SQUEEZED;
         let pressed = (gf.singularity() - saddle.zeta) * saddle.curvature.sqrt() < PRESSED;
-        if small || !(squeezed || pressed) {
-            match contour_integral(gf, g, &saddle, accuracy) {
-                Err(InversionError) if !small => {}
-                settled => return settled.and_then(probability),
-            }
+        if saddle.is_small() || !(squeezed || pressed) {
+            return Crossing::At(saddle);
         }
     }
-    let saddle = find_saddle(gf, g, mean, variance, Side::Lower);
-    contour_integral(gf, g, &saddle, accuracy).and_then(|below| probability(1.0 - below))
+    Crossing::At(find_saddle(gf, g, mean, variance, Side::Lower))
+}
+
+impl Saddle {
+    fn is_small(&self) -> bool {
+        self.height < SMALL_TAIL.ln()
+    }
 }
 
 /// Computes P(G ≥ g), g ≥ 1, of a variable on 0, 1, 2, … that is seldom above 0.
@@ -183,7 +213,7 @@ fn find_saddle(gf: &impl GeneratingFunction, g: f64, mean: f64, variance: f64, s
         zeta += newton;
     }
     let (reference, pole) = (gf.log_real(zeta)[0] - (g - 1.0) * zeta, zeta.exp_m1());
-    Saddle { zeta, curvature, pole, reference, height: reference - pole.abs().ln() }
+    Saddle { side, zeta, curvature, pole, reference, height: reference - pole.abs().ln() }
 }
 
 /// The integral over the contour through `saddle`.

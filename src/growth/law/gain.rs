@@ -4,10 +4,13 @@ use num_complex::Complex64;
 
 use super::NodeLaw;
 use crate::numerics::elementary::{complex_exp_m1, complex_ln_1p};
-use crate::numerics::inversion::GeneratingFunction;
+use crate::numerics::inversion::{GeneratingFamily, GeneratingFunction};
 
 /// Exponents beyond this would over- or underflow.
 const LARGE_EXPONENT: f64 = 600.0;
+
+/// One starting degree.
+const ALONE: &[(f64, f64)] = &[(0.0, 1.0)];
 
 /// The gain X − k₀ of a node that starts at degree k₀ − b with weight w_b; weights add up to one.
 ///
@@ -63,15 +66,11 @@ impl GainLaw<'_> {
 
 impl GeneratingFunction for GainLaw<'_> {
     fn log_at(&self, zeta: Complex64) -> Complex64 {
-        let y = -complex_exp_m1(zeta);
-        let immigration: Complex64 = self.law.panels.iter().map(|panel| panel.integral(y)).sum();
+        let (absent, gained) = self.law.logs_at(zeta);
         if self.reference == 0.0 {
-            return -immigration;
+            return absent;
         }
-        // ln f = ζ + gained; without losses the ζ never enters, and nothing cancels.
-        let kept = if self.law.losses { complex_ln_1p(y * self.law.shortfall) - zeta } else { Complex64::ZERO };
-        let gained = kept - complex_ln_1p(y * self.law.spread);
-        self.reference * gained + self.log_mixture(zeta + gained) - immigration
+        self.reference * gained + self.log_mixture(zeta + gained) + absent
     }
 
     fn log_real(&self, zeta: f64) -> [f64; 3] {
@@ -108,5 +107,21 @@ impl GeneratingFunction for GainLaw<'_> {
 
     fn singularity(&self) -> f64 {
         if self.law.spread > 0.0 { (1.0 / self.law.spread).ln_1p() } else { f64::INFINITY }
+    }
+}
+
+/// The gains X − k of nodes that start at degree k.
+impl GeneratingFamily for NodeLaw {
+    fn member(&self, k: u64) -> impl GeneratingFunction {
+        GainLaw { law: self, reference: k as f64, below: ALONE }
+    }
+
+    /// −immigration, and ln f − ζ.
+    fn logs_at(&self, zeta: Complex64) -> (Complex64, Complex64) {
+        let y = -complex_exp_m1(zeta);
+        let immigration: Complex64 = self.panels.iter().map(|panel| panel.integral(y)).sum();
+        // Without losses the ζ never enters, and nothing cancels.
+        let kept = if self.losses { complex_ln_1p(y * self.shortfall) - zeta } else { Complex64::ZERO };
+        (-immigration, kept - complex_ln_1p(y * self.spread))
     }
 }

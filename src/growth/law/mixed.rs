@@ -1,10 +1,23 @@
 //! The law of a node drawn from a network whose nodes differ: dormant or active, slow or fast.
 
-use super::NodeLaw;
+use super::classes::ClassTails;
+use super::{NodeLaw, SteadyLaw};
 use crate::growth::mean_field::{Course, GrowthError};
 use crate::numerics::quadrature::PANEL;
 use crate::numerics::tolerances::Accuracy;
 use crate::numerics::two_moments::TwoMoments;
+
+/// The tails of nodes of one class after the other.
+pub(crate) struct MixedTails<'a> {
+    parts: Vec<(f64, ClassTails<'a>)>,
+}
+
+impl MixedTails<'_> {
+    /// Probability that a node of degree `degree` has at least the threshold at the end, given that it stays.
+    pub fn of(&mut self, degree: u64) -> Result<f64, GrowthError> {
+        self.parts.iter_mut().map(|(share, tails)| Ok(*share * tails.of(degree)?)).sum()
+    }
+}
 
 /// A mixture of node laws, over growth factors and over the day at which a node falls dormant.
 ///
@@ -69,6 +82,20 @@ impl MixedLaw {
         }
         let tail = |(share, law): &(f64, NodeLaw)| Ok(share * law.mixture_tail(starts, threshold, accuracy)?);
         self.parts.iter().map(tail).sum()
+    }
+
+    /// [`Self::tail`] of one starting degree after the other.
+    pub fn class_tails(&self, threshold: u64, accuracy: Accuracy) -> MixedTails<'_> {
+        let parts = self.parts.iter().map(|(share, law)| (*share, ClassTails::new(law, threshold, accuracy)));
+        MixedTails { parts: parts.collect() }
+    }
+
+    /// The closed form, where all nodes have one law and it has one.
+    pub fn steady(&self) -> Option<SteadyLaw> {
+        match self.parts.as_slice() {
+            [(_, only)] => only.steady(),
+            _ => None,
+        }
     }
 
     /// Whether [`Self::rough_tail`] is cheaper than [`Self::tail`].
