@@ -1,5 +1,6 @@
 //! Infers the attachment mix from degree counts; the answer says which rung of the evidence ladder it stands on.
 
+mod condensed;
 mod diagnostics;
 mod entry;
 mod infer;

@@ -65,8 +65,13 @@ pub(super) fn profile_share(
         let mut side = |end: f64| {
             let direction = (end - at).signum();
             // In square roots a parabola is straight, and the secant lands at once.
-            let excess =
-                |distance: f64| (2.0 * scale * (top - value(at + direction * distance))).max(0.0).sqrt() - fall.sqrt();
+            let excess = |distance: f64| {
+                // The likelihood there is known at the maximum and at the ends.
+                let share = at + direction * distance;
+                let known = ends.iter().find(|&&(_, end, _)| end == share).map(|&(_, _, value)| value);
+                let value = if distance == 0.0 { top } else { known.unwrap_or_else(|| value(share)) };
+                (2.0 * scale * (top - value)).max(0.0).sqrt() - fall.sqrt()
+            };
             at + direction * increasing_root(0.0, (end - at).abs(), tolerance, excess)
         };
         (if at > 0.0 { side(0.0) } else { 0.0 }, if at < 1.0 { side(1.0) } else { 1.0 })

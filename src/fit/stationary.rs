@@ -46,22 +46,13 @@ impl StationaryLaw {
 
     /// ln P_k at ascending `degrees`; −∞ below the smallest entry degree.
     pub fn log_pmf(&self, degrees: &[u64]) -> Vec<f64> {
-        let mut entries = self.entry.shares().iter().copied().peekable();
-        let mut carried: Option<(u64, f64)> = None;
-        let mut logs = Vec::with_capacity(degrees.len());
-        for &degree in degrees {
-            while let Some(&(entry, share)) = entries.peek().filter(|&&(entry, _)| entry <= degree) {
-                // e_m/(1 + α + βm) joins what the growth law carried up to m.
-                let joining = share.ln() - (1.0 + self.gain(entry as f64)).ln();
-                let so_far = carried.map_or(f64::NEG_INFINITY, |(from, log)| log + self.log_ratio(from, entry));
-                let (large, small) = (joining.max(so_far), joining.min(so_far));
-                carried = Some((entry, large + (small - large).exp().ln_1p()));
-                entries.next();
-            }
-            carried = carried.map(|(from, log)| (degree, log + self.log_ratio(from, degree)));
-            logs.push(carried.map_or(f64::NEG_INFINITY, |(_, log)| log));
-        }
-        logs
+        let mut logs = self.log_pmf_from_below();
+        degrees.iter().map(|&degree| logs.at(degree as f64)).collect()
+    }
+
+    /// ln P_k, continued to degrees that are no whole numbers above the largest entry degree: ask in ascending order.
+    pub(super) fn log_pmf_from_below(&self) -> LogPmf<'_> {
+        LogPmf { law: self, entries: self.entry.shares(), carried: None, last: None }
     }
 
     /// Tail P(degree ≥ k) at ascending `degrees`, from the balance of flows: `(α + β(k−1))·P_{k−1} + Σ_{m≥k} e_m`.
@@ -79,9 +70,10 @@ impl StationaryLaw {
         degrees.iter().zip(logs).map(crossing).collect()
     }
 
-    /// ln of P_to/P_from without entries in between: Σ ln((α + β(i−1))/(1 + α + βi)) over from < i ≤ to.
-    fn log_ratio(&self, from: u64, to: u64) -> f64 {
-        let steps = (to - from) as f64;
+    /// ln of P_to/P_from without entries in between: Σ ln((α + β(i−1))/(1 + α + βi)) over from < i ≤ to; `last` is the rising factorial
+    /// that the one before ended with, under its argument.
+    fn log_ratio(&self, from: f64, to: f64, last: &mut Option<(f64, f64)>) -> f64 {
+        let steps = to - from;
         if steps == 0.0 {
             return 0.0;
         }
@@ -89,15 +81,57 @@ impl StationaryLaw {
             return steps * (self.alpha / (1.0 + self.alpha)).ln();
         }
         let (a, b) = (self.alpha / self.beta, (1.0 + self.alpha) / self.beta);
-        if from == 0 && a == 0.0 {
+        if from == 0.0 && a == 0.0 {
             return f64::NEG_INFINITY; // p = 1: a node without links never gains one
         }
-        // Γ(to+a)·Γ(from+a+δ) / (Γ(from+a)·Γ(to+a+δ)) with δ = 1 + b − a, in whichever form has the smaller logarithms.
-        let (low, high, shift) = (from as f64 + a, to as f64 + a, 1.0 + 1.0 / self.beta);
-        if shift < steps {
-            ln_rising(low, shift) - ln_rising(high, shift)
-        } else {
-            ln_rising(low, steps) - ln_rising(from as f64 + 1.0 + b, steps)
+        if steps == 1.0 {
+            return (-(1.0 + self.beta) / (1.0 + self.gain(to))).ln_1p();
         }
+        // Γ(to+a)·Γ(from+a+δ) / (Γ(from+a)·Γ(to+a+δ)) with δ = 1 + b − a, in whichever form has the smaller logarithms.
+        let (low, high, shift) = (from + a, to + a, 1.0 + 1.0 / self.beta);
+        if shift < steps {
+            // What the last step ended with, this one starts with.
+            let started = last.filter(|last| last.0 == low).map_or_else(|| ln_rising(low, shift), |last| last.1);
+            let ended = ln_rising(high, shift);
+            *last = Some((high, ended));
+            started - ended
+        } else {
+            ln_rising(low, steps) - ln_rising(from + 1.0 + b, steps)
+        }
+    }
+}
+
+/// ln P_k of one degree after the other.
+pub(super) struct LogPmf<'a> {
+    law: &'a StationaryLaw,
+    /// Entry degrees that have not been passed.
+    entries: &'a [(u64, f64)],
+    /// The degree last reached and its ln P.
+    carried: Option<(f64, f64)>,
+    /// See [`StationaryLaw::log_ratio`].
+    last: Option<(f64, f64)>,
+}
+
+impl LogPmf<'_> {
+    /// ln P at `degree`, which is not below the last one asked for.
+    pub fn at(&mut self, degree: f64) -> f64 {
+        while let [(entry, share), rest @ ..] = self.entries
+            && *entry as f64 <= degree
+        {
+            let entry = *entry as f64;
+            // e_m/(1 + α + βm) joins what the growth law carried up to m.
+            let joining = share.ln() - (1.0 + self.law.gain(entry)).ln();
+            let so_far = self.carry(entry);
+            let (large, small) = (joining.max(so_far), joining.min(so_far));
+            self.carried = Some((entry, large + (small - large).exp().ln_1p()));
+            self.entries = rest;
+        }
+        let log = self.carry(degree);
+        self.carried = self.carried.map(|_| (degree, log));
+        log
+    }
+
+    fn carry(&mut self, to: f64) -> f64 {
+        self.carried.map_or(f64::NEG_INFINITY, |(from, log)| log + self.law.log_ratio(from, to, &mut self.last))
     }
 }

@@ -12,8 +12,8 @@ use crate::numerics::two_moments::TwoMoments;
 const CONTINUOUS_ABOVE: f64 = 1e5;
 /// Standard deviation of the uncertain rate over the mean beyond which a law says nothing more.
 const WIDEST_SPREAD: f64 = 3.0;
-/// A quantile is sought up to this: 2^63.
-const FARTHEST: f64 = 9.3e18;
+/// A quantile is sought up to this, 2^52: above, counts no longer step by one.
+const FARTHEST: f64 = (1_u64 << 52) as f64;
 
 /// A count `floor + R`, R a whole number ≥ 0 with the given mean and variance: negative binomial when the variance exceeds
 /// the mean (a Poisson count whose rate is uncertain), Poisson when they agree, binomial below (present nodes that may or
@@ -125,7 +125,7 @@ impl CountLaw {
     /// Smallest count x with P(count ≤ x) ≥ `probability`, for a probability in (0, 1).
     ///
     /// # Numerical notes
-    /// Bisection on the distribution function (incomplete beta and gamma), exact to the unit against scipy where checked
+    /// From a Cornish–Fisher guess by the probabilities of the counts in between, exact to the unit against scipy where checked
     /// (means to 5,000); above means of 10⁵ the quantile of a gamma law, by root finding or, once the standard deviation is
     /// a third of the mean or less, the Wilson–Hilferty approximation, within 0.1 % of scipy's negative binomial.
     pub fn quantile(&self, probability: f64) -> f64 {
@@ -135,7 +135,7 @@ impl CountLaw {
         if self.mean > CONTINUOUS_ABOVE {
             return self.floor + gamma_quantile(self.mean, self.variance, probability).round();
         }
-        self.floor + self.first(|x| self.distribution(x) >= probability)
+        self.floor + self.first(probability, |at| at.at_most >= probability)
     }
 
     /// Central intervals at `levels`, whole nodes, the median always inside.
@@ -168,27 +168,100 @@ impl CountLaw {
         if self.mean == 0.0 || self.variance == 0.0 || self.mean > CONTINUOUS_ABOVE {
             return (self.quantile(low), self.quantile(high));
         }
-        let twice_mid = |x: f64| self.distribution(x) + if x > 0.0 { self.distribution(x - 1.0) } else { 0.0 };
-        let from = self.first(|x| twice_mid(x) >= 2.0 * low);
-        (self.floor + from, self.floor + self.first(|x| twice_mid(x) > 2.0 * high) - 1.0)
+        let from = self.first(low, |at| at.twice_mid() >= 2.0 * low);
+        (self.floor + from, self.floor + self.first(high, |at| at.twice_mid() > 2.0 * high) - 1.0)
     }
 
-    /// Smallest whole x ≥ 0 from which on the increasing condition holds, by bisection.
-    fn first(&self, holds: impl Fn(f64) -> bool) -> f64 {
-        let (mut below, mut reach) = (-1.0, self.mean + 8.0 * self.variance.sqrt() + 8.0);
-        while !holds(reach) && reach < FARTHEST {
-            (below, reach) = (reach, 2.0 * reach);
-        }
-        let mut reach = reach.ceil();
-        while reach - below > 1.0 {
+    /// Smallest whole x ≥ 0 from which on the increasing condition holds, near the quantile of `probability`.
+    fn first(&self, probability: f64, holds: impl Fn(&Standing) -> bool) -> f64 {
+        let (mut below, mut reach, mut stride) = (-1.0, f64::INFINITY, STEPS);
+        let mut from = self.cornish_fisher(probability).clamp(0.0, FARTHEST).floor();
+        loop {
+            let mut at = Standing::new(self.rest(), from);
+            if holds(&at) {
+                while from - at.count < STEPS {
+                    reach = at.count;
+                    if reach - below <= 1.0 {
+                        return reach;
+                    }
+                    at.step_down();
+                    if !holds(&at) {
+                        return reach;
+                    }
+                }
+                reach = at.count;
+            } else {
+                while at.count - from < STEPS {
+                    at.step_up();
+                    if holds(&at) || at.count >= reach || at.count >= FARTHEST {
+                        return at.count;
+                    }
+                }
+                below = at.count;
+            }
+            // The guess was far off: leap, and halve what lies between.
+            stride *= 4.0;
+            let leap = if reach.is_finite() { (reach - stride).max(below + 1.0) } else { below + stride };
             let middle = (0.5 * (below + reach)).floor();
-            if holds(middle) { reach = middle } else { below = middle }
+            from = if reach.is_finite() && below >= 0.0 { middle } else { leap };
         }
-        reach
     }
 
-    fn distribution(&self, x: f64) -> f64 {
-        self.rest().at_most(x)
+    /// The quantile by four cumulants (Cornish & Fisher 1938), within a few counts unless the law is very skewed.
+    fn cornish_fisher(&self, probability: f64) -> f64 {
+        let (z, deviation) = (normal_quantile(probability), self.variance.sqrt());
+        let ratio = self.variance / self.mean;
+        let skewness = (2.0 * ratio - 1.0) / deviation;
+        let excess = (1.0 + 6.0 * ratio * (ratio - 1.0)) / self.variance;
+        let square = z * z;
+        let bent = z + (square - 1.0) * skewness / 6.0 + z * (square - 3.0) * excess / 24.0
+            - z * (2.0 * square - 5.0) * skewness * skewness / 36.0;
+        let guess = self.mean + deviation * bent - 0.5;
+        if guess.is_finite() { guess } else { self.mean }
+    }
+}
+
+/// Counts that are reached one by one before the distribution function is computed anew.
+const STEPS: f64 = 64.0;
+
+/// A count with its probabilities, moved one by one.
+struct Standing {
+    law: TwoMoments,
+    count: f64,
+    at_most: f64,
+    exactly: f64,
+}
+
+impl Standing {
+    fn new(law: TwoMoments, count: f64) -> Self {
+        Self { law, count, at_most: law.at_most(count), exactly: law.probability(count) }
+    }
+
+    /// Twice the mid-distribution function.
+    fn twice_mid(&self) -> f64 {
+        2.0 * self.at_most - self.exactly
+    }
+
+    fn step_up(&mut self) {
+        if self.law.next_over(self.count + 1.0) <= 0.0 {
+            // The last count of a binomial law.
+            *self = Self::new(self.law, self.count + 1.0);
+            return;
+        }
+        self.exactly = (self.exactly * self.law.next_over(self.count)).max(0.0);
+        self.count += 1.0;
+        self.at_most = (self.at_most + self.exactly).min(1.0);
+    }
+
+    /// Not below 0.
+    fn step_down(&mut self) {
+        if self.law.next_over(self.count) <= 0.0 {
+            *self = Self::new(self.law, self.count - 1.0);
+            return;
+        }
+        self.at_most -= self.exactly;
+        self.count -= 1.0;
+        self.exactly /= self.law.next_over(self.count);
     }
 }
 

@@ -1,6 +1,6 @@
 //! Forecasts at each date of a plan.
 
-use super::largest::{DegreeRange, largest_degree};
+use super::largest::{DegreeRange, LargestLaw, largest_degree};
 use super::{CountForecast, CountLaw, DateForecast, ForecastError, TailForecast, TailLaw};
 use crate::growth::{Course, GrowthError, NetworkLaw, TailSum};
 use crate::model::{Change, DegreeCounts, ForecastPlan, GrowthParameters, ParameterFault, Shift};
@@ -241,11 +241,12 @@ impl<'a> Outlook<'a> {
             return Err(ForecastError::Cancelled);
         }
         let range = DegreeRange::of(self.counts, self.central.parameters().has_losses());
-        let median = range.quantile(&laws.central, 0.5)?;
+        let mut largest = LargestLaw::new(&laws.central, &range);
+        let median = largest.quantile(0.5)?;
         let gain = (median.ln_1p() - (self.counts.largest() as f64).ln_1p()).abs();
         let shift = range.shift(&laws.central, median)?;
         let variance = excursion_variance(&laws.ends, shift)? + (self.model_error * gain).powi(2);
-        largest_degree(&laws.central, &range, median, self.plan.levels(), variance.sqrt(), self.cancelled)
+        largest_degree(&mut largest, median, self.plan.levels(), variance.sqrt(), self.cancelled)
     }
 
     fn count(&self, now: f64, certain: f64, mean: f64, variance: f64) -> CountForecast {

@@ -10,8 +10,8 @@ pub(crate) use mixed::MixedLaw;
 
 use gain::GainLaw;
 use panel::{LawPanel, barycentric_weights};
-pub(crate) use steady::SteadyLaw;
 use statrs::function::beta::checked_beta_reg;
+pub(crate) use steady::SteadyLaw;
 
 use super::mean_field::{Course, GrowthError};
 use crate::numerics::inversion::{rare_upper_tail, upper_tail};
@@ -173,8 +173,8 @@ impl NodeLaw {
         }
         if let Some(steady) = self.steady {
             let mut tail = certain;
-            let degrees = starts[..open].iter().map(|&(degree, _)| degree);
-            steady.tails(degrees, threshold, |place, own| tail += starts[place].1 * own);
+            let degrees: Vec<u64> = starts[..open].iter().map(|&(degree, _)| degree).collect();
+            steady.tails(&degrees, threshold, |place, own| tail += starts[place].1 * own);
             return Ok(tail);
         }
         let share: f64 = starts[..open].iter().map(|&(_, share)| share).sum();

@@ -229,6 +229,24 @@ impl Course {
         }
     }
 
+    /// What a node that loses no link is exposed to over [from, to], where u/v is constant: both hazards are in proportion to it. ∫ L/N, or
+    /// for p = 1, where N may not keep pace with K, ∫ L/K but for a factor; none where that has no closed form.
+    pub(super) fn exposure(&self, from: f64, to: f64) -> Option<f64> {
+        let (parameters, days) = (&self.parameters, to - from);
+        let per_node_day = parameters.links_per_node_day();
+        if parameters.mix.preferential_share() < 1.0 {
+            return Some(parameters.links_per_arrival() * self.arrived_per_node(from, to) + per_node_day * days);
+        }
+        // K grows by what lands and leaves with its nodes.
+        let exposure = (self.link_ends(to) / self.link_ends(from)).ln() + self.degree_loss() * days;
+        (per_node_day == 0.0 && exposure.is_finite()).then_some(exposure)
+    }
+
+    /// ∫ A/N: what arrives is growth plus replacement.
+    fn arrived_per_node(&self, from: f64, to: f64) -> f64 {
+        (self.nodes(to) / self.nodes(from)).ln() + self.parameters.departure_hazard() * (to - from)
+    }
+
     /// L = ℓ·A + ι·N, link ends landing on present nodes a day.
     pub(super) fn landing(&self, day: f64, nodes: f64) -> f64 {
         self.parameters.links_per_arrival() * self.parameters.arrivals.rate(day)
@@ -246,9 +264,7 @@ impl Course {
         if kappa == 0.0 {
             return 1.0;
         }
-        // ∫κ·A/N = κ·(ln N + δt): what arrives is growth plus replacement.
-        let arrived = (self.nodes(to) / self.nodes(from)).ln() + self.parameters.departure_hazard() * (to - from);
-        (-kappa * arrived).exp()
+        (-kappa * self.arrived_per_node(from, to)).exp()
     }
 
     /// Edges of the mesh within [from, to], both included. Where the course starts without links, the first, vanishing

@@ -1,5 +1,6 @@
 //! Exact event-by-event simulation of the same network, seeded.
 
+mod batch;
 mod members;
 mod streams;
 
@@ -7,6 +8,7 @@ use rand::rngs::SmallRng;
 use rand::{RngExt, SeedableRng};
 use rand_distr::{Distribution, Poisson};
 
+use batch::{BATCH, Batch, Pick};
 use members::Members;
 use streams::{Part, Streams};
 
@@ -113,10 +115,19 @@ impl Simulation {
     /// # Errors
     /// When every node has departed.
     pub fn degree_counts(&self) -> Result<DegreeCounts, Vec<CountsFault>> {
-        let mut sorted = self.members.degrees.clone();
-        sorted.sort_unstable();
-        let pairs: Vec<(u64, u64)> = sorted.chunk_by(|a, b| a == b).map(|run| (run[0], run.len() as u64)).collect();
-        DegreeCounts::from_pairs(&pairs)
+        /// Degrees below this are counted in place; the others are few, and sorted.
+        const COUNTED: usize = 1 << 12;
+        let (mut counted, mut large) = (vec![0; COUNTED], Vec::new());
+        for &degree in &self.members.degrees {
+            match counted.get_mut(degree as usize) {
+                Some(nodes) => *nodes += 1,
+                None => large.push(degree),
+            }
+        }
+        large.sort_unstable();
+        let counted = (0..).zip(counted).filter(|&(_, nodes)| nodes > 0);
+        let large = large.chunk_by(|a, b| a == b).map(|run| (run[0], run.len() as u64));
+        DegreeCounts::from_pairs(&counted.chain(large).collect::<Vec<_>>())
     }
 
     /// Nodes with at least `threshold` links today.
@@ -132,8 +143,8 @@ impl Simulation {
 
     /// How many nodes went from which degree at the last mark (the start, when there was none) to which today.
     pub fn moves(&self) -> Vec<Move> {
-        let present =
-            self.members.marked.iter().zip(&self.members.degrees).map(|(&before, &after)| (before, Some(after)));
+        let marked = self.members.marked.iter().copied().chain(std::iter::repeat(None));
+        let present = marked.zip(&self.members.degrees).map(|(before, &after)| (before, Some(after)));
         let departed = self.members.departed.iter().map(|&before| (Some(before), None));
         let mut sorted: Vec<_> = present.chain(departed).collect();
         sorted.sort_unstable();
@@ -209,7 +220,37 @@ impl Simulation {
     /// # Errors
     /// When the network outgrows memory.
     pub fn arrive_many(&mut self, arrivals: u64) -> Result<(), SimulationError> {
-        (0..arrivals).try_for_each(|_| self.arrive())
+        if self.streams.is_some() || self.cap.is_some() || self.members.ends().is_none() {
+            return (0..arrivals).try_for_each(|_| self.arrive());
+        }
+        let (mut batch, mut left) = (Batch::default(), arrivals);
+        while left > 0 {
+            let drawn = (0..left.min(BATCH)).try_fold((), |(), _| self.draw_into(&mut batch));
+            left -= left.min(BATCH);
+            self.members.come(&mut batch);
+            drawn?;
+        }
+        Ok(())
+    }
+
+    /// The draws of [`Self::arrive`] for the arrival after those of `batch`, in the same order.
+    fn draw_into(&mut self, batch: &mut Batch) -> Result<(), SimulationError> {
+        let drawn: u64 = batch.arrivals.iter().map(|(landing, entry)| landing + entry).sum();
+        let (nodes, ends) = (self.members.degrees.len() + batch.arrivals.len(), self.members.link_ends + drawn);
+        let landing = self.draw_landing();
+        check_held(landing, nodes, ends)?;
+        let share = self.parameters.mix.preferential_share();
+        let before = batch.picks.len();
+        batch.picks.extend((0..landing).map(|_| Pick::draw(nodes, ends as usize, share, &mut self.rng)));
+        let entry = self.draw_entry();
+        check_held(entry, nodes, ends + landing).inspect_err(|_| batch.picks.truncate(before))?;
+        batch.arrivals.push((landing, entry));
+        Ok(())
+    }
+
+    fn draw_landing(&mut self) -> u64 {
+        let mean = self.parameters.links_per_arrival();
+        mean.floor() as u64 + u64::from(self.rng.random::<f64>() < mean.fract())
     }
 
     /// One arrival: its landing ends pick among the nodes present, in the state before the arrival; then it joins.
@@ -218,8 +259,7 @@ impl Simulation {
             streams.count_arrival();
         }
         self.draw_from(Part::Landing);
-        let mean = self.parameters.links_per_arrival();
-        let landing = mean.floor() as u64 + u64::from(self.rng.random::<f64>() < mean.fract());
+        let landing = self.draw_landing();
         self.land(landing)?;
         self.draw_from(Part::Joining);
         let entry = self.draw_entry();
@@ -318,9 +358,13 @@ impl Simulation {
     }
 
     fn check_room(&self, more: u64) -> Result<(), SimulationError> {
-        let held = u128::from(more) + u128::from(self.members.link_ends).max(self.members.degrees.len() as u128);
-        if held > u128::from(MAX_HELD) { Err(SimulationError::TooLarge { held }) } else { Ok(()) }
+        check_held(more, self.members.degrees.len(), self.members.link_ends)
     }
+}
+
+fn check_held(more: u64, nodes: usize, ends: u64) -> Result<(), SimulationError> {
+    let held = u128::from(more) + u128::from(ends).max(nodes as u128);
+    if held > u128::from(MAX_HELD) { Err(SimulationError::TooLarge { held }) } else { Ok(()) }
 }
 
 fn draw_poisson(mean: f64, rng: &mut SmallRng) -> u64 {

@@ -68,7 +68,7 @@ impl TailSum {
         self.mean += mean;
         self.variance += mean * missing;
         self.third_cumulant += mean * missing * (1.0 - 2.0 * probability);
-        self.log_none += nodes * (-probability).ln_1p();
+        self.log_none += nodes * ln_complement(probability);
         if degree >= threshold {
             self.kept += mean;
         }
@@ -84,6 +84,12 @@ impl TailSum {
             ..self
         }
     }
+}
+
+/// ln(1 − p): most classes of a tail are far from it, and there four terms of the series are exact.
+fn ln_complement(p: f64) -> f64 {
+    const SMALL: f64 = 1e-4;
+    if p < SMALL { -p * (1.0 + p * (1.0 / 2.0 + p * (1.0 / 3.0 + p / 4.0))) } else { (-p).ln_1p() }
 }
 
 /// The law of a whole network at one day: of every present node's degree and of the newcomers'.
@@ -161,7 +167,7 @@ impl<'a> NetworkLaw<'a> {
     /// # Errors
     /// Those of [`super::NodeLaw::tail`]; cancellation.
     pub fn tail(&self, threshold: u64, accuracy: Accuracy) -> Result<TailSum, GrowthError> {
-        let Some((steady, earliest)) = self.steady() else {
+        let Some(steady) = self.steady() else {
             return Ok(self.parts(threshold, accuracy)?.sum(threshold));
         };
         let mut sum = TailSum::default();
@@ -172,7 +178,7 @@ impl<'a> NetworkLaw<'a> {
             sum.add(TailClass { degree: threshold, nodes: kept as f64, probability }, threshold);
         }
         self.risers(steady, threshold, accuracy, |class| sum.add(class, threshold))?;
-        let newcomers = self.newcomers(earliest, threshold, accuracy, sum.mean)?;
+        let newcomers = self.steady_newcomers(steady, threshold, accuracy, sum.mean)?;
         Ok(sum.with_newcomers(newcomers))
     }
 
@@ -185,13 +191,13 @@ impl<'a> NetworkLaw<'a> {
             return capped_parts(self.course, self.counts, self.day, threshold, cap);
         }
         let mut parts = TailParts::default();
-        if let Some((steady, earliest)) = self.steady() {
+        if let Some(steady) = self.steady() {
             self.risers(steady, threshold, accuracy, |class| parts.present.push(class))?;
             let probability = self.course.survival(self.day);
             let kept = self.counts.iter().skip_while(|&(degree, _)| degree < threshold);
             parts.present.extend(kept.map(|(degree, nodes)| TailClass { degree, nodes: nodes as f64, probability }));
             parts.present.reverse();
-            parts.newcomers = self.newcomers(earliest, threshold, accuracy, parts.present_mean())?;
+            parts.newcomers = self.steady_newcomers(steady, threshold, accuracy, parts.present_mean())?;
             return Ok(parts);
         }
         match &self.nodes {
@@ -206,6 +212,14 @@ impl<'a> NetworkLaw<'a> {
             }
         }
         Ok(parts)
+    }
+
+    /// Expected degree of today's largest node, given that it stays; 0 under a kernel whose nodes have no exact law.
+    pub(crate) fn mean_of_largest(&self) -> f64 {
+        match &self.nodes {
+            NodeLaws::Exact { present, .. } => present.moments(self.counts.largest()).0,
+            NodeLaws::Moments(_) => 0.0,
+        }
     }
 
     /// Whether [`Self::rough_tail`] is cheaper than [`Self::tail`].
@@ -252,10 +266,10 @@ impl<'a> NetworkLaw<'a> {
         if (self.cancelled)() { Err(GrowthError::Cancelled) } else { Ok(()) }
     }
 
-    /// The closed form of a present node's law, where it has one, and the law of the earliest newcomers.
-    fn steady(&self) -> Option<(SteadyLaw, &MixedLaw)> {
+    /// The closed form of a present node's law, where it has one.
+    fn steady(&self) -> Option<SteadyLaw> {
         match &self.nodes {
-            NodeLaws::Exact { present, earliest } if self.course.cap().is_none() => Some((present.steady()?, earliest)),
+            NodeLaws::Exact { present, .. } if self.course.cap().is_none() => present.steady(),
             _ => None,
         }
     }
@@ -274,11 +288,19 @@ impl<'a> NetworkLaw<'a> {
         let below = &counts.degrees()[..counts.degrees().partition_point(|&degree| degree < threshold)];
         let (Some(&highest), nodes) = (below.last(), counts.nodes_by_degree()) else { return Ok(()) };
         let survival = self.course.survival(self.day);
-        let least = counts.tail_size(threshold) as f64 + nodes[below.len() - 1] as f64 * law.tail(highest, threshold);
+        let least = match counts.tail_size(threshold) {
+            0 => nodes[below.len() - 1] as f64 * law.tail(highest, threshold),
+            kept => kept as f64,
+        };
         let negligible = accuracy.negligible() * least + TAIL_ZERO / survival;
         let up_to = |degree: u64| (counts.nodes() - counts.tail_size(degree + 1)) as f64;
-        let first = below.partition_point(|&degree| law.most(degree, threshold) * up_to(degree) <= negligible);
-        law.tails(below[first..].iter().copied(), threshold, |place, probability| {
+        let mut first = below.partition_point(|&degree| law.most(degree, threshold) * up_to(degree) <= negligible);
+        // A bound for all below is a loose one: of the rest, those go that by themselves are no more than an even share.
+        let even_share = negligible / below.len() as f64;
+        while first < below.len() && nodes[first] as f64 * law.most(below[first], threshold) <= even_share {
+            first += 1;
+        }
+        law.tails(&below[first..], threshold, |place, probability| {
             let (degree, nodes) = (below[first + place], nodes[first + place] as f64);
             each(TailClass { degree, nodes, probability: survival * probability });
         });
@@ -325,6 +347,43 @@ impl<'a> NetworkLaw<'a> {
             Rc::new(Cohort { present, law: MixedLaw::of_newcomer(self.course, arrival, self.day) })
         };
         self.cohorts.borrow_mut().entry(arrival.to_bits()).or_insert_with(make).clone()
+    }
+
+    /// [`Self::newcomers`] where their laws have the closed form of the present nodes' law, for what lands after their arrival.
+    fn steady_newcomers(
+        &self,
+        present: SteadyLaw,
+        threshold: u64,
+        accuracy: Accuracy,
+        others: f64,
+    ) -> Result<f64, GrowthError> {
+        let (course, day) = (self.course, self.day);
+        let parameters = course.parameters();
+        let arrivals = parameters.arrivals.arrivals_between(0.0, day);
+        let entry = parameters.entry.shares();
+        let in_tail =
+            |law: SteadyLaw| -> f64 { entry.iter().map(|&(degree, share)| share * law.tail(degree, threshold)).sum() };
+        // The earliest newcomers bound the later ones, and have the law of the present.
+        let negligible = |share: f64| arrivals * share <= accuracy.negligible() * others + TAIL_ZERO;
+        let most = |&(degree, share): &(u64, f64)| share * present.most(degree, threshold);
+        if arrivals == 0.0 || negligible(entry.iter().map(most).sum()) || negligible(in_tail(present)) {
+            return Ok(0.0);
+        }
+        let NodeLaws::Exact { earliest, .. } = &self.nodes else { return Err(GrowthError::NoNodeLaw) };
+        let Some(whole) = course.exposure(0.0, day) else {
+            return self.newcomers(earliest, threshold, accuracy, others);
+        };
+        let mut of_day = |arrival: f64| -> Result<f64, GrowthError> {
+            self.check()?;
+            let rate = parameters.arrivals.rate(arrival) * course.survival(day - arrival);
+            let share = course.exposure(arrival, day).filter(|_| whole > 0.0).map_or(0.0, |exposure| exposure / whole);
+            Ok(rate * in_tail(present.of_last(share)))
+        };
+        let mut mean = 0.0;
+        for pair in course.arrival_edges(day).windows(2) {
+            mean += integrate_adaptively(pair[0], pair[1], others + mean, accuracy, &mut of_day)?;
+        }
+        Ok(mean)
     }
 
     fn newcomers(

@@ -60,7 +60,8 @@ pub fn density(x: f64, n: f64, p: f64, q: f64) -> f64 {
     if rest <= 0.0 || q == 0.0 {
         return if rest > 0.0 { 0.0 } else { (n * (-q).ln_1p()).exp() };
     }
-    let exponent = stirling_error(n) - stirling_error(x) - stirling_error(rest) - deviance(x, n * p) - deviance(rest, n * q);
+    let exponent =
+        stirling_error(n) - stirling_error(x) - stirling_error(rest) - deviance(x, n * p) - deviance(rest, n * q);
     exponent.exp() * (n / (2.0 * PI * x * rest)).sqrt()
 }
 
@@ -92,25 +93,30 @@ pub fn incomplete_beta(a: f64, b: f64, x: f64, y: f64) -> f64 {
 }
 
 fn lower_beta(a: f64, b: f64, x: f64, y: f64) -> f64 {
-    const TINY: f64 = 1e-300;
+    /// Terms between two looks at how far the fraction has settled: divisions are what costs.
+    const STRETCH: u32 = 4;
     let front = b / (a + b) * density(a, a + b, x, y);
     if front == 0.0 {
         return 0.0;
     }
-    // Modified Lentz.
-    let guard = |value: f64| if value.abs() < TINY { TINY } else { value };
-    let mut d = 1.0 / guard(1.0 - (a + b) * x / (a + 1.0));
-    let (mut c, mut fraction) = (1.0, d);
-    for m in (1..MOST_TERMS).map(f64::from) {
-        let twice = a + 2.0 * m;
-        for numerator in [m * (b - m) * x / ((twice - 1.0) * twice), -(a + m) * (a + b + m) * x / (twice * (twice + 1.0))] {
-            d = 1.0 / guard(1.0 + numerator * d);
-            c = guard(1.0 + numerator / c);
-            fraction *= d * c;
+    // Numerators and denominators of two successive convergents, the last denominator brought to one after each stretch.
+    let (mut before, mut last) = ((1.0, 1.0), (1.0, 1.0 - (a + b) * x / (a + 1.0)));
+    let (mut settled, mut m) = (last.0 / last.1, 0.0);
+    for _ in 0..MOST_TERMS / STRETCH {
+        for _ in 0..STRETCH {
+            m += 1.0;
+            let twice = a + 2.0 * m;
+            let even = m * (b - m) * x / ((twice - 1.0) * twice);
+            let odd = -(a + m) * (a + b + m) * x / (twice * (twice + 1.0));
+            before = (last.0 + even * before.0, last.1 + even * before.1);
+            last = (before.0 + odd * last.0, before.1 + odd * last.1);
         }
-        if (d * c - 1.0).abs() < f64::EPSILON {
+        let scale = last.1.recip();
+        (before, last) = ((before.0 * scale, before.1 * scale), (last.0 * scale, 1.0));
+        if (last.0 - settled).abs() <= f64::EPSILON * last.0.abs() {
             break;
         }
+        settled = last.0;
     }
-    front * fraction
+    front * last.0
 }

@@ -79,9 +79,8 @@ struct Saddle {
 /// [`InversionError`] when the sums do not settle.
 pub fn upper_tail(gf: &impl GeneratingFunction, g: f64, accuracy: Accuracy) -> Result<f64, InversionError> {
     let Crossing::At(saddle) = crossing(gf, g) else { return Ok(0.0) };
-    let from_below = |saddle: &Saddle| {
-        contour_integral(gf, g, saddle, accuracy).and_then(|below| probability(1.0 - below))
-    };
+    let from_below =
+        |saddle: &Saddle| contour_integral(gf, g, saddle, accuracy).and_then(|below| probability(1.0 - below));
     match saddle.side {
         Side::Lower => from_below(&saddle),
         Side::Upper => match contour_integral(gf, g, &saddle, accuracy) {

@@ -1,7 +1,8 @@
 //! Counting laws fitted to a mean and a variance.
 
-use statrs::function::beta::checked_beta_reg;
 use statrs::function::gamma::{checked_gamma_lr, checked_gamma_ur};
+
+use super::binomial::{density, incomplete_beta, poisson_density};
 
 /// Variance within this of the mean, relative: Poisson.
 const POISSON_WITHIN: f64 = 1e-6;
@@ -37,11 +38,38 @@ impl TwoMoments {
         if self.is_poisson() {
             checked_gamma_ur(x + 1.0, self.mean).unwrap_or(1.0)
         } else if ratio > 1.0 {
-            checked_beta_reg(self.mean / (ratio - 1.0), x + 1.0, 1.0 / ratio).unwrap_or(1.0)
+            incomplete_beta(self.mean / (ratio - 1.0), x + 1.0, 1.0 / ratio, 1.0 - 1.0 / ratio)
         } else {
             let trials = self.mean / (1.0 - ratio);
-            if x >= trials { 1.0 } else { checked_beta_reg(trials - x, x + 1.0, ratio).unwrap_or(1.0) }
+            if x >= trials { 1.0 } else { incomplete_beta(trials - x, x + 1.0, ratio, 1.0 - ratio) }
         }
+    }
+
+    /// P(R ≤ x) − P(R ≤ x − 1) for whole x ≥ 0.
+    ///
+    /// ```
+    /// use tailcast::numerics::two_moments::TwoMoments;
+    /// let law = TwoMoments { mean: 2.0, variance: 3.0 };
+    /// assert!((law.probability(4.0) - (law.at_most(4.0) - law.at_most(3.0))).abs() < 1e-15);
+    /// ```
+    pub fn probability(&self, x: f64) -> f64 {
+        let ratio = self.variance / self.mean;
+        if self.is_poisson() {
+            return poisson_density(x, self.mean);
+        }
+        if ratio > 1.0 {
+            let failures = self.mean / (ratio - 1.0);
+            return failures / (failures + x) * density(x, failures + x, 1.0 - 1.0 / ratio, 1.0 / ratio);
+        }
+        let trials = self.mean / (1.0 - ratio);
+        // Trials are no whole number: what the last step lacks to one is its own.
+        if x < trials { density(x, trials, 1.0 - ratio, ratio) } else { 1.0 - self.at_most((x - 1.0).max(0.0)) }
+    }
+
+    /// P(R = x + 1)/P(R = x), where neither is 0: Panjer's recurrence, the same for the three laws.
+    pub fn next_over(&self, x: f64) -> f64 {
+        let ratio = if self.is_poisson() { 1.0 } else { self.variance / self.mean };
+        (self.mean + (ratio - 1.0) * x) / (ratio * (x + 1.0))
     }
 
     /// P(R > x) for whole x ≥ 0, exact in the far tail.
@@ -50,10 +78,10 @@ impl TwoMoments {
         if self.is_poisson() {
             checked_gamma_lr(x + 1.0, self.mean).unwrap_or(0.0)
         } else if ratio > 1.0 {
-            checked_beta_reg(x + 1.0, self.mean / (ratio - 1.0), 1.0 - 1.0 / ratio).unwrap_or(0.0)
+            incomplete_beta(x + 1.0, self.mean / (ratio - 1.0), 1.0 - 1.0 / ratio, 1.0 / ratio)
         } else {
             let trials = self.mean / (1.0 - ratio);
-            if x >= trials { 0.0 } else { checked_beta_reg(x + 1.0, trials - x, 1.0 - ratio).unwrap_or(0.0) }
+            if x >= trials { 0.0 } else { incomplete_beta(x + 1.0, trials - x, 1.0 - ratio, ratio) }
         }
     }
 

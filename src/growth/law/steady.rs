@@ -4,7 +4,8 @@ use statrs::function::gamma::checked_gamma_lr;
 
 use crate::numerics::binomial::{density, incomplete_beta, poisson_density};
 
-/// Degrees this far apart are stepped over one by one; farther ones are taken anew.
+/// Degrees this far apart, and by the root of the threshold more, are stepped over one by one; farther ones are taken anew, which costs
+/// the more the larger the numbers.
 const MOST_STEPS: u64 = 64;
 
 /// The degree after some days of a node that loses no link and whose u/v is constant: from degree k it gains a negative binomial
@@ -22,6 +23,15 @@ pub(crate) struct SteadyLaw {
 }
 
 impl SteadyLaw {
+    /// The law of a node that is there for the last `share` of the landings per node that this one sees.
+    pub fn of_last(&self, share: f64) -> Self {
+        if self.spread == 0.0 {
+            return Self { uniform: share * self.uniform, spread: 0.0 };
+        }
+        let spread = (share * self.spread.ln_1p()).exp_m1();
+        Self { uniform: self.uniform / self.spread * spread, spread }
+    }
+
     /// P(at least `threshold` links) from `degree`.
     pub fn tail(&self, degree: u64, threshold: u64) -> f64 {
         let Some(gain) = threshold.checked_sub(degree).filter(|&gain| gain > 0) else { return 1.0 };
@@ -48,25 +58,35 @@ impl SteadyLaw {
             gain * (gain / mean).ln() - (gain - mean)
         } else {
             let shape = mean / spread;
-            gain * (gain * (1.0 + spread) / (spread * gain + mean)).ln() - shape * ((gain / shape).ln_1p() - spread.ln_1p())
+            gain * (gain * (1.0 + spread) / (spread * gain + mean)).ln()
+                - shape * ((gain / shape).ln_1p() - spread.ln_1p())
         };
         (-rate).exp()
     }
 
     /// [`Self::tail`] from each of `degrees`, ascending and below `threshold`, handed to `each` with its place in the list.
-    pub fn tails(&self, degrees: impl Iterator<Item = u64>, threshold: u64, mut each: impl FnMut(usize, f64)) {
-        let (mut at, mut tail, mut step) = (0, 0.0, 0.0);
-        for (place, degree) in degrees.enumerate() {
-            if place == 0 || degree - at > MOST_STEPS || step == 0.0 {
-                (tail, step) = (self.tail(degree, threshold), self.step(degree, threshold));
-            } else {
-                for from in at..degree {
-                    tail += step;
-                    step *= (threshold - from - 1) as f64 / (self.uniform + self.spread * (from + 1) as f64);
+    pub fn tails(&self, degrees: &[u64], threshold: u64, mut each: impl FnMut(usize, f64)) {
+        let near = MOST_STEPS + threshold.isqrt();
+        // P and T of the degree before, T only where it was needed.
+        let (mut tail, mut step) = (0.0, None);
+        for (place, &degree) in degrees.iter().enumerate() {
+            let before = place.checked_sub(1).map(|i| degrees[i]).filter(|before| degree - before <= near);
+            if let (Some(before), Some(mut moved)) = (before, step) {
+                for from in before..degree {
+                    tail += moved;
+                    moved *= (threshold - from - 1) as f64 / (self.uniform + self.spread * (from + 1) as f64);
                 }
+                step = Some(moved).filter(|&moved| moved > 0.0);
+            } else {
+                tail = self.tail(degree, threshold);
+                step = None;
             }
-            at = degree;
             each(place, tail.min(1.0));
+            let goes_on = degrees.get(place + 1).is_some_and(|next| next - degree <= near);
+            step = step
+                .filter(|_| goes_on)
+                .or_else(|| goes_on.then(|| self.step(degree, threshold)))
+                .filter(|&step| step > 0.0);
         }
     }
 

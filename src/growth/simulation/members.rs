@@ -6,6 +6,7 @@ use rand::RngExt;
 use rand::rngs::SmallRng;
 use rand_distr::{Distribution, Gamma};
 
+use super::batch::{Batch, Pick};
 use crate::growth::power_kernel;
 use crate::model::{DegreeCounts, GrowthParameters};
 use crate::numerics::sum_tree::SumTree;
@@ -13,7 +14,7 @@ use crate::numerics::sum_tree::SumTree;
 /// The nodes present.
 pub(super) struct Members {
     pub degrees: Vec<u64>,
-    /// Degree of each node at the last mark; none for later newcomers.
+    /// Degree of each node at the last mark; none for later newcomers, who where links last are not listed at all.
     pub marked: Vec<Option<u64>>,
     /// Degrees at the last mark of nodes that have departed since.
     pub departed: Vec<u64>,
@@ -74,7 +75,6 @@ impl Members {
     pub fn join(&mut self, degree: u64, active: bool, rng: &mut SmallRng) {
         let node = self.degrees.len();
         self.degrees.push(degree);
-        self.marked.push(None);
         self.link_ends += degree;
         if let Some(peaks) = &mut self.peaks {
             peaks.push(degree);
@@ -82,11 +82,28 @@ impl Members {
         match &mut self.picks {
             Picks::Ends(ends) => ends.extend(std::iter::repeat_n(node as u32, degree as usize)),
             Picks::Weighed(weights) => {
+                self.marked.push(None);
                 let factor = weights.factor_law.map_or(1.0, |law| law.sample(rng));
                 weights.factors.push(if active { factor } else { 0.0 });
                 weights.active += u64::from(active);
                 weights.weigh(node, degree);
             }
+        }
+    }
+
+    /// The node at each link end, where ends pick by them.
+    pub fn ends(&self) -> Option<&[u32]> {
+        match &self.picks {
+            Picks::Ends(ends) => Some(ends),
+            Picks::Weighed(_) => None,
+        }
+    }
+
+    /// A whole batch arrives, where ends pick by earlier ones.
+    pub fn come(&mut self, batch: &mut Batch) {
+        if let Picks::Ends(ends) = &mut self.picks {
+            batch.come(&mut self.degrees, ends);
+            self.link_ends = ends.len() as u64;
         }
     }
 
@@ -104,11 +121,7 @@ impl Members {
             Picks::Ends(ends) => {
                 let (nodes, before) = (self.degrees.len(), ends.len());
                 for _ in 0..count {
-                    let preferential = before > 0 && rng.random::<f64>() < share;
-                    let node = match preferential {
-                        true => ends[rng.random_range(0..before)],
-                        false => rng.random_range(0..nodes) as u32,
-                    };
+                    let node = Pick::draw(nodes, before, share, rng).node(ends);
                     self.degrees[node as usize] += 1;
                     self.link_ends += 1;
                     ends.push(node);
