@@ -9,6 +9,7 @@ mod batch;
 mod clock;
 mod counter;
 mod csv;
+mod intake;
 mod lines;
 mod names;
 mod ndjson;
@@ -17,12 +18,16 @@ mod source;
 
 use std::io::{self, Read};
 use std::ops::ControlFlow;
+use std::sync::atomic::Ordering;
+use std::sync::mpsc::{channel, sync_channel};
+use std::thread;
 
 use jiff::Span;
 
 use crate::census::{CensusError, Tally};
 use crate::model::DegreeKind;
-use counter::Counter;
+use counter::{Counter, Counts};
+use intake::Intake;
 use lines::Lines;
 use source::Source;
 
@@ -126,7 +131,10 @@ pub enum IngestError {
     Cancelled,
 }
 
-/// Reads and counts a list. `watch` is called after each block of bytes, and stops the counting if it says so.
+/// Batches of lines that may wait to be counted.
+const WAITING: usize = 32;
+
+/// Reads and counts a list: lines are read on this thread, and counted on one beside it. `watch` is called after each block of bytes, and stops the counting if it says so.
 ///
 /// ```
 /// use std::ops::ControlFlow;
@@ -147,28 +155,46 @@ pub fn count_links(
     plan: &LinkListPlan,
     watch: &mut dyn FnMut(Progress) -> ControlFlow<()>,
 ) -> Result<(Tally, LinkReport), IngestError> {
-    let mut counter = Counter::new(plan);
+    let (counter, counts) = (Counter::new(plan), Counts::default());
+    thread::scope(|scope| {
+        let ((full, batches), (emptied, empty)) = (sync_channel(WAITING), channel());
+        let intake = Intake::new(counter.hasher(), full, empty);
+        let counting = scope.spawn(|| counter.run(batches, emptied, &counts));
+        let read = read_all(input, intake, &counts, watch);
+        // What stopped the counting is in an earlier line than what stopped the reading.
+        let counter = counting.join().unwrap_or_else(|panic| std::panic::resume_unwind(panic))?;
+        counter.finish(read?)
+    })
+}
+
+/// Reads a list to its end; returns the number of its last line.
+fn read_all(
+    input: impl Read,
+    mut intake: Intake,
+    counts: &Counts,
+    watch: &mut dyn FnMut(Progress) -> ControlFlow<()>,
+) -> Result<u64, IngestError> {
     let source = Source::open(input).map_err(|error| IngestError::Read { line: 0, error })?;
     let mut lines = Lines::new(source);
     let mut format = None;
     loop {
-        let more = lines.fill().map_err(|error| lines.source().fault(counter.line(), error))?;
-        let progress = Progress { bytes: lines.source().bytes(), links: counter.links(), nodes: counter.nodes() };
-        if watch(progress).is_break() {
+        let more = lines.fill().map_err(|error| lines.source().fault(intake.line(), error))?;
+        let (links, nodes) = (counts.links.load(Ordering::Relaxed), counts.nodes.load(Ordering::Relaxed));
+        if watch(Progress { bytes: lines.source().bytes(), links, nodes }).is_break() {
             return Err(IngestError::Cancelled);
         }
         let format = format.get_or_insert_with(|| Format::of(lines.unread()));
-        let read = format.read(lines.unread(), !more, &mut counter)?;
+        let read = format.read(lines.unread(), !more, &mut intake)?;
         if read == 0 && lines.is_full() {
-            counter.pass(1);
-            counter.malformed(|| format!("it is longer than {MAX_LINE_BYTES} bytes"))?;
+            intake.pass(1);
+            intake.malformed(|| format!("it is longer than {MAX_LINE_BYTES} bytes"))?;
             lines.skip_line();
         } else {
             lines.consume(read);
         }
-        counter.settle()?;
+        intake.send()?;
         if !more {
-            return counter.finish();
+            return Ok(intake.line());
         }
     }
 }
@@ -189,10 +215,10 @@ impl Format {
     }
 
     /// Counts the complete lines of a block; returns how many bytes they take.
-    fn read(&mut self, block: &[u8], last: bool, counter: &mut Counter) -> Result<usize, IngestError> {
+    fn read(&mut self, block: &[u8], last: bool, intake: &mut Intake) -> Result<usize, IngestError> {
         match self {
-            Self::Csv(columns) => columns.read(block, last, counter),
-            Self::Ndjson => ndjson::read(block, last, counter),
+            Self::Csv(columns) => columns.read(block, last, intake),
+            Self::Ndjson => ndjson::read(block, last, intake),
         }
     }
 }

@@ -16,3 +16,4 @@ pub mod scoring;
 pub mod sum_tree;
 pub mod tolerances;
 pub mod two_moments;
+pub mod work;

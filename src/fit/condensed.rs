@@ -41,7 +41,7 @@ impl CondensedCounts {
     }
 
     /// (x, w) in ascending x.
-    pub fn points(&self) -> impl Iterator<Item = (f64, f64)> {
+    pub fn points(&self) -> impl ExactSizeIterator<Item = (f64, f64)> {
         self.points.iter().copied()
     }
 }

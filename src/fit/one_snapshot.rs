@@ -6,6 +6,7 @@ use super::score_variance::information_over_variance;
 use super::stationary::StationaryLaw;
 use super::{FitError, FitRequest, Model, ModelChoice};
 use crate::model::{AttachmentMix, DegreeCounts, EntryDegrees};
+use crate::numerics::work::{Work, did};
 
 /// The preferential share is found to this, well under the standard error of 10⁹ nodes.
 const SHARE_TOLERANCE: f64 = 1e-9;
@@ -34,6 +35,7 @@ pub(super) fn fit_one_snapshot(
             links_per_arrival,
             entry.clone(),
         );
+        did(Work::LikelihoodTerms, condensed.points().len() as u64);
         let mut logs = law.log_pmf_from_below();
         let terms = condensed.points().map(|(degree, weight)| (logs.at(degree), weight));
         // A degree that cannot come about rules the law out, whatever the sign of its weight.

@@ -3,9 +3,10 @@
 //! Nearly all the time of counting is spent waiting for memory, where each identifier is looked up. The look-ups of a
 //! batch do not depend on each other, so the processor waits for many of them at once.
 
+use foldhash::fast::RandomState;
 use jiff::Timestamp;
 
-use super::names::Names;
+use super::names::{Names, hash};
 
 /// Links of one batch.
 const LINKS: usize = 256;
@@ -75,23 +76,50 @@ struct Found {
     known: Option<u32>,
 }
 
-/// Links that wait.
+/// A line that cannot be read.
+#[derive(Debug)]
+pub struct Malformed {
+    /// Links of the batch that come before it.
+    pub after: usize,
+    /// Number of the line.
+    pub line: u64,
+    /// What is wrong; empty where nobody will be told.
+    pub reason: String,
+}
+
+/// Links that wait, and lines among them that are none.
 #[derive(Debug, Default)]
 pub struct Batch {
     lines: Vec<Line>,
+    malformed: Vec<Malformed>,
     text: Vec<u8>,
 }
 
 impl Batch {
-    /// Adds a link; whether the batch is full now.
+    /// Adds a link.
     #[inline]
-    pub fn push(&mut self, line: u64, time: Timestamp, source: &[u8], target: &[u8], names: &Names) -> bool {
+    pub fn push(&mut self, line: u64, time: Timestamp, source: &[u8], target: &[u8], hasher: &RandomState) {
         let ends = [source, target].map(|name| {
             self.text.extend_from_slice(name);
-            Found { end: self.text.len(), hash: names.hash(name), known: None }
+            Found { end: self.text.len(), hash: hash(hasher, name), known: None }
         });
         self.lines.push(Line { line, time, ends });
-        self.lines.len() >= LINKS
+    }
+
+    /// Adds a line that cannot be read.
+    pub fn push_malformed(&mut self, line: u64, reason: String) {
+        self.malformed.push(Malformed { after: self.lines.len(), line, reason });
+    }
+
+    /// Whether nothing waits.
+    pub fn is_empty(&self) -> bool {
+        self.lines.is_empty() && self.malformed.is_empty()
+    }
+
+    /// Whether it is time to count them.
+    #[inline]
+    pub fn is_full(&self) -> bool {
+        self.lines.len() + self.malformed.len() >= LINKS
     }
 
     /// Looks up the identifiers that have a number. Each pass waits for one kind of memory only.
@@ -127,9 +155,15 @@ impl Batch {
         })
     }
 
-    /// Forgets the links.
+    /// The lines that cannot be read, in their order.
+    pub fn malformed(&self) -> &[Malformed] {
+        &self.malformed
+    }
+
+    /// Forgets everything.
     pub fn clear(&mut self) {
         self.lines.clear();
+        self.malformed.clear();
         self.text.clear();
     }
 }

@@ -1,97 +1,73 @@
-//! Takes links line by line to the census, and notes what is faulty.
+//! Takes links batch by batch to the census, and notes what is faulty.
 
-use jiff::Timestamp;
+use std::sync::atomic::{AtomicU64, Ordering};
+use std::sync::mpsc::{Receiver, Sender};
+
+use foldhash::fast::RandomState;
 
 use super::batch::{Batch, Link, bring_near};
-use super::clock::{Clock, why_no_time};
 use super::names::Names;
 use super::report::{LinkFault, LinkReport, shown};
-use super::{FaultPolicy, IngestError, LinkListPlan, MAX_IDENTIFIER_BYTES};
+use super::{FaultPolicy, IngestError, LinkListPlan};
 use crate::census::{Census, CensusError, Tally, Verdict};
+
+/// How far counting has come, for another thread to read.
+#[derive(Debug, Default)]
+pub struct Counts {
+    /// Links counted, but for those that wait.
+    pub links: AtomicU64,
+    /// Nodes met.
+    pub nodes: AtomicU64,
+}
 
 /// A list as far as it was counted.
 pub struct Counter {
     census: Census,
     names: Names,
-    clock: Clock,
-    batch: Batch,
     policy: FaultPolicy,
     report: LinkReport,
-    line: u64,
 }
 
 impl Counter {
-    /// A list of which nothing was read.
+    /// A list of which nothing was counted.
     pub fn new(plan: &LinkListPlan) -> Self {
         Self {
             census: Census::new(plan.kind, plan.every),
             names: Names::default(),
-            clock: Clock::default(),
-            batch: Batch::default(),
             policy: plan.faults,
             report: LinkReport::default(),
-            line: 0,
         }
     }
 
-    /// The current line, from 1 on.
-    pub fn line(&self) -> u64 {
-        self.line
+    /// What identifiers are hashed with.
+    pub fn hasher(&self) -> RandomState {
+        self.names.hasher()
     }
 
-    /// Links counted, but for those that wait.
-    pub fn links(&self) -> u64 {
-        self.report.links
-    }
-
-    /// Nodes met.
-    pub fn nodes(&self) -> u64 {
-        self.census.nodes() as u64
-    }
-
-    /// Goes on by so many lines.
-    #[inline]
-    pub fn pass(&mut self, lines: u64) {
-        self.line += lines;
-    }
-
-    /// Counts a link that the current line gives as texts.
-    #[inline]
-    pub fn link(&mut self, time: &[u8], source: &[u8], target: &[u8]) -> Result<(), IngestError> {
-        match self.clock.read(time) {
-            Some(time) => self.link_at(time, source, target),
-            None => self.malformed(|| why_no_time(time)),
+    /// Counts batches until no more come, and hands each back to be filled again.
+    pub fn run(mut self, full: Receiver<Batch>, empty: Sender<Batch>, counts: &Counts) -> Result<Self, IngestError> {
+        for mut batch in full {
+            self.take(&mut batch)?;
+            counts.links.store(self.report.links, Ordering::Relaxed);
+            counts.nodes.store(self.census.nodes() as u64, Ordering::Relaxed);
+            batch.clear();
+            // At the end of a list nobody fills it again.
+            let _ = empty.send(batch);
         }
+        Ok(self)
     }
 
-    /// Counts a link of the current line.
-    #[inline]
-    pub fn link_at(&mut self, time: Timestamp, source: &[u8], target: &[u8]) -> Result<(), IngestError> {
-        for (what, name) in [("source", source), ("target", target)] {
-            if name.is_empty() || name.len() > MAX_IDENTIFIER_BYTES {
-                return self.malformed(|| why_no_identifier(what, name));
-            }
-        }
-        if self.batch.push(self.line, time, source, target, &self.names) { self.settle() } else { Ok(()) }
-    }
-
-    /// The current line cannot be read.
-    #[cold]
-    pub fn malformed(&mut self, reason: impl FnOnce() -> String) -> Result<(), IngestError> {
-        // Those that wait come first; one of them may stop the counting.
-        self.settle()?;
-        self.fault(LinkFault::Malformed, self.line, reason)
-    }
-
-    /// Takes the links that wait to the census.
-    pub fn settle(&mut self) -> Result<(), IngestError> {
-        let mut batch = std::mem::take(&mut self.batch);
+    fn take(&mut self, batch: &mut Batch) -> Result<(), IngestError> {
         batch.look_up(&self.names);
         bring_near(batch.targets().map(|target| self.census.degree(target)));
-        batch.links().try_for_each(|link| self.count(&link))?;
-        batch.clear();
-        self.batch = batch;
-        Ok(())
+        let mut malformed = batch.malformed().iter().peekable();
+        for (place, link) in batch.links().enumerate() {
+            while let Some(fault) = malformed.next_if(|fault| fault.after <= place) {
+                self.fault(LinkFault::Malformed, fault.line, || fault.reason.clone())?;
+            }
+            self.count(&link)?;
+        }
+        malformed.try_for_each(|fault| self.fault(LinkFault::Malformed, fault.line, || fault.reason.clone()))
     }
 
     /// A link that will not be counted must not number its nodes, so that numbers stay in order of arrival.
@@ -140,26 +116,14 @@ impl Counter {
         Ok(())
     }
 
-    /// What the whole list tells.
-    pub fn finish(mut self) -> Result<(Tally, LinkReport), IngestError> {
-        self.settle()?;
-        let Self { census, mut report, line, .. } = self;
+    /// What the whole list tells, whose last line is `line`.
+    pub fn finish(self, line: u64) -> Result<(Tally, LinkReport), IngestError> {
+        let Self { census, mut report, .. } = self;
         report.repeats_unchecked = census.repeats_unchecked();
         match census.finish() {
             Ok(tally) => Ok((tally, report)),
             Err(CensusError::NoLink) => Err(IngestError::NoLink(Box::new(report))),
             Err(error) => Err(IngestError::Census { line, error }),
         }
-    }
-}
-
-fn why_no_identifier(what: &str, name: &[u8]) -> String {
-    match name {
-        [] => format!("its {what} is empty"),
-        _ => format!(
-            "its {what}, {}, has {} bytes; an identifier has at most {MAX_IDENTIFIER_BYTES}",
-            shown(name),
-            name.len()
-        ),
     }
 }

@@ -3,7 +3,7 @@
 use csv_core::{ReadRecordResult, Reader, ReaderBuilder, Terminator};
 use memchr::{memchr, memchr_iter, memchr3_iter};
 
-use super::counter::Counter;
+use super::intake::Intake;
 use super::report::shown;
 use super::{IngestError, MAX_LINE_BYTES};
 
@@ -43,20 +43,20 @@ enum End {
 
 impl Columns {
     /// Counts the complete lines of `block`; returns how many bytes they take.
-    pub fn read(&mut self, block: &[u8], last: bool, counter: &mut Counter) -> Result<usize, IngestError> {
+    pub fn read(&mut self, block: &[u8], last: bool, intake: &mut Intake) -> Result<usize, IngestError> {
         let mut at = 0;
         while let Some(rest) = block.get(at..).filter(|rest| !rest.is_empty()) {
             let full = at == 0 && block.len() >= MAX_LINE_BYTES;
             at += match self.end(rest, last, full) {
                 End::Plain(text, line) => {
-                    counter.pass(1);
-                    self.plain(rest.get(..text).unwrap_or_default(), counter)?;
+                    intake.pass(1);
+                    self.plain(rest.get(..text).unwrap_or_default(), intake)?;
                     line
                 }
-                End::Quoted(text, line) => self.quoted(rest, text, line, counter)?,
+                End::Quoted(text, line) => self.quoted(rest, text, line, intake)?,
                 End::Open => {
-                    counter.pass(1);
-                    counter.malformed(|| "a double quote opens a field and none closes it".into())?;
+                    intake.pass(1);
+                    intake.malformed(|| "a double quote opens a field and none closes it".into())?;
                     memchr(b'\n', rest).map_or(rest.len(), |line_end| line_end + 1)
                 }
                 End::Beyond => return Ok(at),
@@ -80,18 +80,18 @@ impl Columns {
     }
 
     #[inline]
-    fn plain(&mut self, line: &[u8], counter: &mut Counter) -> Result<(), IngestError> {
+    fn plain(&mut self, line: &[u8], intake: &mut Intake) -> Result<(), IngestError> {
         let line = line.strip_suffix(b"\r").unwrap_or(line);
         let Some(header) = &self.header else {
             let line = line.strip_prefix(BYTE_ORDER_MARK).unwrap_or(line);
-            self.header = Header::read(line.split(|&byte| byte == b','), line.is_empty(), counter.line())?;
+            self.header = Header::read(line.split(|&byte| byte == b','), line.is_empty(), intake.line())?;
             return Ok(());
         };
         if line.is_empty() {
             return Ok(());
         }
         if self.commas.len() + 1 != header.width {
-            return counter.malformed(|| wrong_width(self.commas.len() + 1, header.width));
+            return intake.malformed(|| wrong_width(self.commas.len() + 1, header.width));
         }
         let field = |column: usize| {
             let start = column.checked_sub(1).and_then(|before| self.commas.get(before)).map_or(0, |comma| comma + 1);
@@ -99,28 +99,28 @@ impl Columns {
             line.get(start..end).unwrap_or_default()
         };
         let [time, source, target] = header.places.map(field);
-        counter.link(time, source, target)
+        intake.link(time, source, target)
     }
 
     /// Counts a record with quotes; returns how many bytes it takes.
-    fn quoted(&mut self, rest: &[u8], text: usize, line: usize, counter: &mut Counter) -> Result<usize, IngestError> {
-        counter.pass(1);
+    fn quoted(&mut self, rest: &[u8], text: usize, line: usize, intake: &mut Intake) -> Result<usize, IngestError> {
+        intake.pass(1);
         let record = rest.get(..text).unwrap_or_default();
         let fields = self.unquoted.read(record.strip_prefix(BYTE_ORDER_MARK).unwrap_or(record));
         let Some(header) = &self.header else {
             let fields: Vec<&[u8]> = fields.collect();
-            self.header = Header::read(fields.into_iter(), false, counter.line())?;
+            self.header = Header::read(fields.into_iter(), false, intake.line())?;
             return Ok(line);
         };
         let width = fields.clone().count();
         if width != header.width {
-            counter.malformed(|| wrong_width(width, header.width))?;
+            intake.malformed(|| wrong_width(width, header.width))?;
             // A quote too many has swallowed the lines that follow; they may be sound.
             return Ok(memchr(b'\n', record).map_or(line, |line_end| line_end + 1));
         }
         let [time, source, target] = header.places.map(|column| fields.clone().nth(column).unwrap_or_default());
-        counter.link(time, source, target)?;
-        counter.pass(memchr_iter(b'\n', record).count() as u64);
+        intake.link(time, source, target)?;
+        intake.pass(memchr_iter(b'\n', record).count() as u64);
         Ok(line)
     }
 }

@@ -34,6 +34,14 @@ pub struct Names {
     count: u32,
 }
 
+/// The hash of an identifier.
+#[inline]
+pub fn hash(hasher: &RandomState, name: &[u8]) -> u32 {
+    let mut hasher = hasher.build_hasher();
+    hasher.write(name);
+    (hasher.finish() >> 32) as u32
+}
+
 /// The hash by which the table places and tells entries: its low bits and its highest seven.
 #[inline]
 fn spread(hash: u32) -> u64 {
@@ -41,12 +49,9 @@ fn spread(hash: u32) -> u64 {
 }
 
 impl Names {
-    /// The hash of an identifier.
-    #[inline]
-    pub fn hash(&self, name: &[u8]) -> u32 {
-        let mut hasher = self.hasher.build_hasher();
-        hasher.write(name);
-        (hasher.finish() >> 32) as u32
+    /// What hashes identifiers, for [`hash`].
+    pub fn hasher(&self) -> RandomState {
+        self.hasher.clone()
     }
 
     /// Where the identifier with this hash is kept, if any is.
@@ -147,7 +152,7 @@ mod tests {
         for round in 0..2 {
             for i in 0..5_000 {
                 let text = text(i);
-                let hash = names.hash(text.as_bytes());
+                let hash = hash(&names.hasher, text.as_bytes());
                 let found = names.candidate(hash).and_then(|place| names.confirm(place, text.as_bytes()));
                 assert_eq!(found, (round == 1).then_some(i));
                 assert_eq!(names.number(text.as_bytes(), hash), Some(i));

@@ -8,14 +8,14 @@ use serde::de::{Deserialize, Deserializer, Error, Visitor};
 
 use super::IngestError;
 use super::clock::from_seconds;
-use super::counter::Counter;
+use super::intake::Intake;
 use super::report::shown;
 
 /// What a line should be.
 const EXAMPLE: &str = "a line is an object like {\"time\":\"2026-12-01\",\"source\":1,\"target\":2}";
 
 /// Counts the complete lines of `block`; returns how many bytes they take.
-pub fn read(block: &[u8], last: bool, counter: &mut Counter) -> Result<usize, IngestError> {
+pub fn read(block: &[u8], last: bool, intake: &mut Intake) -> Result<usize, IngestError> {
     let mut at = 0;
     while let Some(rest) = block.get(at..).filter(|rest| !rest.is_empty()) {
         let (text, line) = match memchr(b'\n', rest) {
@@ -23,32 +23,32 @@ pub fn read(block: &[u8], last: bool, counter: &mut Counter) -> Result<usize, In
             None if last => (rest.len(), rest.len()),
             None => break,
         };
-        counter.pass(1);
+        intake.pass(1);
         let text = rest.get(..text).unwrap_or_default().trim_ascii();
         if !text.is_empty() {
-            object(text, counter)?;
+            object(text, intake)?;
         }
         at += line;
     }
     Ok(at)
 }
 
-fn object(text: &[u8], counter: &mut Counter) -> Result<(), IngestError> {
+fn object(text: &[u8], intake: &mut Intake) -> Result<(), IngestError> {
     // The fields alone, in an array, would be taken too.
     if !text.starts_with(b"{") {
-        return counter.malformed(|| format!("{} is no JSON object; {EXAMPLE}", shown(text)));
+        return intake.malformed(|| format!("{} is no JSON object; {EXAMPLE}", shown(text)));
     }
     let link: Link<'_> = match serde_json::from_slice(text) {
         Ok(link) => link,
-        Err(error) => return counter.malformed(|| why_no_link(&error)),
+        Err(error) => return intake.malformed(|| why_no_link(&error)),
     };
     let (source, target) = (link.source.text(), link.target.text());
     match link.time {
-        Value::Text(time) => counter.link(time.as_bytes(), source.as_bytes(), target.as_bytes()),
-        Value::Whole(seconds) => counter.link(seconds.to_string().as_bytes(), source.as_bytes(), target.as_bytes()),
+        Value::Text(time) => intake.link(time.as_bytes(), source.as_bytes(), target.as_bytes()),
+        Value::Whole(seconds) => intake.link(seconds.to_string().as_bytes(), source.as_bytes(), target.as_bytes()),
         Value::Real(seconds) => match from_seconds(seconds) {
-            Some(time) => counter.link_at(time, source.as_bytes(), target.as_bytes()),
-            None => counter.malformed(|| format!("the time {seconds} is out of range: it is in seconds since 1970")),
+            Some(time) => intake.link_at(time, source.as_bytes(), target.as_bytes()),
+            None => intake.malformed(|| format!("the time {seconds} is out of range: it is in seconds since 1970")),
         },
     }
 }

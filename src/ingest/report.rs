@@ -1,7 +1,7 @@
 //! What was found in a list.
 
 /// Line numbers listed of each kind of fault.
-const LISTED: usize = 5;
+pub(super) const LISTED: usize = 5;
 
 /// Kinds of faulty lines.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]

@@ -4,6 +4,8 @@ use std::f64::consts::PI;
 
 use statrs::function::gamma::ln_gamma;
 
+use super::work::{Work, did};
+
 /// From here on the Stirling series serves; its first omitted term is then under 10⁻¹⁶.
 const STIRLING_FROM: f64 = 16.0;
 /// Relative distance from the mean below which the deviance is a series.
@@ -89,6 +91,7 @@ pub fn poisson_density(x: f64, m: f64) -> f64 {
 /// assert!((incomplete_beta(2.0, 3.0, 0.5, 0.5) - 11.0 / 16.0).abs() < 1e-14);
 /// ```
 pub fn incomplete_beta(a: f64, b: f64, x: f64, y: f64) -> f64 {
+    did(Work::BetaFunctions, 1);
     if x > (a + 1.0) / (a + b + 2.0) { 1.0 - lower_beta(b, a, y, x) } else { lower_beta(a, b, x, y) }
 }
 

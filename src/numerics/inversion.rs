@@ -10,6 +10,7 @@ use super::elementary::complex_exp_m1;
 use super::tolerances::{
     Accuracy, CONTOUR_AGREEMENT, CONTOUR_MAX_POINTS, CONTOUR_NEGLIGIBLE, SADDLE_CLOSENESS, SADDLE_MAX_STEPS,
 };
+use super::work::{Work, did};
 
 pub use shared::{GeneratingFamily, SharedContour};
 
@@ -300,6 +301,7 @@ impl<G: GeneratingFunction> Contour<'_, G> {
     /// The integrand at x, relative to its value at the saddle.
     fn term(&mut self, x: f64) -> Complex64 {
         self.evaluations += 1;
+        did(Work::ContourPoints, 1);
         let zeta = Complex64::new(self.saddle.zeta + self.bend * x * x, x);
         let exponent = self.gf.log_at(zeta) - (self.g - 1.0) * zeta - self.saddle.reference;
         let tilt = Complex64::new(1.0, -2.0 * self.bend * x);

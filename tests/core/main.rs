@@ -23,6 +23,7 @@ mod simulation;
 mod stationary;
 mod tails;
 mod transitions;
+mod work;
 
 #[path = "../../studies/real/mod.rs"]
 mod real;

@@ -3,6 +3,7 @@
 use statrs::function::gamma::checked_gamma_lr;
 
 use crate::numerics::binomial::{density, incomplete_beta, poisson_density};
+use crate::numerics::work::{Work, did};
 
 /// Degrees this far apart, and by the root of the threshold more, are stepped over one by one; farther ones are taken anew, which costs
 /// the more the larger the numbers.
@@ -72,6 +73,7 @@ impl SteadyLaw {
         for (place, &degree) in degrees.iter().enumerate() {
             let before = place.checked_sub(1).map(|i| degrees[i]).filter(|before| degree - before <= near);
             if let (Some(before), Some(mut moved)) = (before, step) {
+                did(Work::RecurrenceSteps, degree - before);
                 for from in before..degree {
                     tail += moved;
                     moved *= (threshold - from - 1) as f64 / (self.uniform + self.spread * (from + 1) as f64);

@@ -7,6 +7,7 @@ use num_complex::Complex64;
 use super::{Crossing, GeneratingFunction, PRESSED, Saddle, Side};
 use crate::numerics::elementary::complex_exp_m1;
 use crate::numerics::tolerances::{Accuracy, CONTOUR_AGREEMENT};
+use crate::numerics::work::{Work, did};
 
 /// Variables G_k, k a whole number, with `ln E[e^{ζ·G_k}] = common(ζ) + k·unit(ζ)`.
 pub trait GeneratingFamily {
@@ -120,6 +121,7 @@ impl SharedContour {
             return None; // It leaves the strip alive.
         }
         let count = terms.len();
+        did(Work::ContourPoints, count as u64);
         Some(Self {
             side: saddle.side,
             member: k,
@@ -143,6 +145,7 @@ impl SharedContour {
         }
         self.terms.iter_mut().zip(&self.factors).for_each(|(term, factor)| *term *= factor);
         self.products += 1;
+        did(Work::ContourPoints, self.terms.len() as u64);
         self.log_scale += step as f64 * self.slope;
         self.member = k;
     }
