@@ -1,4 +1,5 @@
-//! What a forecast costs in terms, steps and allocations: a change that makes it dearer fails here, whatever the machine.
+//! What a forecast costs in terms, steps and allocations: a change that makes it dearer fails here, whatever the machine. Limits are the
+//! figures read off when they were set, and a quarter more.
 
 use tailcast::evaluate::{OriginAnswer, OriginRequest, answer};
 use tailcast::fit::FitRequest;
@@ -48,7 +49,6 @@ fn work(request: &OriginRequest) -> (OriginAnswer, WorkDone) {
     counted(|| answer(request, &|| false).unwrap())
 }
 
-/// The figures were read off, and a quarter added.
 fn within(done: &WorkDone, most: &[(Work, u64)]) {
     for &(kind, most) in most {
         let count = done.of(kind);
@@ -68,6 +68,19 @@ fn a_forecast_takes_no_more_terms_than_it_did() {
 fn a_forecast_with_drifting_hazards_takes_no_more_points_than_it_did() {
     let (_, done) = work(&request(counts(1), Some(1.5)));
     within(&done, &[(Work::ContourPoints, 180_000)]);
+}
+
+#[test]
+fn a_forecast_asks_for_memory_no_more_often_than_it_did() {
+    const MOST_ALLOCATIONS: u64 = 3_200;
+    const MOST_BYTES: u64 = 48_000;
+    let request = request(counts(1), None);
+    // The first forecast of a process makes tables that last.
+    answer(&request, &|| false).unwrap();
+    let used = allocation_counter::measure(|| drop(answer(&request, &|| false).unwrap()));
+    println!("{} allocations, {} bytes at once", used.count_total, used.bytes_max);
+    assert!(used.count_total <= MOST_ALLOCATIONS && used.bytes_max <= MOST_BYTES, "{used:?}");
+    assert_eq!(used.count_current, 0, "all is given back");
 }
 
 #[test]
