@@ -26,6 +26,9 @@ impl SumTree {
             self.grow((item + 1).next_power_of_two());
         }
         let mut at = self.leaves() + item;
+        if self.sums[at] == weight {
+            return;
+        }
         self.sums[at] = weight;
         while at > 1 {
             at /= 2;

@@ -126,7 +126,7 @@ fn row() -> impl Strategy<Value = (Option<u64>, Option<u64>, u64)> {
 }
 
 proptest! {
-    #![proptest_config(ProptestConfig { rng_seed: RngSeed::Fixed(20_260_602), ..ProptestConfig::with_cases(20) })]
+    #![proptest_config(ProptestConfig { rng_seed: RngSeed::Fixed(20_260_602), ..ProptestConfig::with_cases(12) })]
     #[test]
     fn any_table_of_transitions_gets_finite_estimates_or_words(
         rows in prop::collection::vec(row(), 1..60),
