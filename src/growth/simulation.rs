@@ -223,6 +223,9 @@ impl Simulation {
         if self.streams.is_some() || self.cap.is_some() || self.members.ends().is_none() {
             return (0..arrivals).try_for_each(|_| self.arrive());
         }
+        // Room for what is expected, but never for more than fits.
+        let expected = arrivals as f64 * (self.parameters.links_per_arrival() + self.parameters.entry.mean());
+        self.members.reserve(arrivals.min(MAX_HELD) as usize, expected.min(MAX_HELD as f64) as usize);
         let (mut batch, mut left) = (Batch::default(), arrivals);
         while left > 0 {
             let drawn = (0..left.min(BATCH)).try_fold((), |(), _| self.draw_into(&mut batch));

@@ -288,10 +288,10 @@ impl<'a> NetworkLaw<'a> {
         let below = &counts.degrees()[..counts.degrees().partition_point(|&degree| degree < threshold)];
         let (Some(&highest), nodes) = (below.last(), counts.nodes_by_degree()) else { return Ok(()) };
         let survival = self.course.survival(self.day);
-        let least = match counts.tail_size(threshold) {
-            0 => nodes[below.len() - 1] as f64 * law.tail(highest, threshold),
-            kept => kept as f64,
-        };
+        // Where nobody is in the tail yet, the likeliest tell the scale.
+        let kept = counts.tail_size(threshold);
+        let likeliest = (kept == 0).then(|| law.tail(highest, threshold));
+        let least = likeliest.map_or(kept as f64, |tail| nodes[below.len() - 1] as f64 * tail);
         let negligible = accuracy.negligible() * least + TAIL_ZERO / survival;
         let up_to = |degree: u64| (counts.nodes() - counts.tail_size(degree + 1)) as f64;
         let mut first = below.partition_point(|&degree| law.most(degree, threshold) * up_to(degree) <= negligible);
@@ -300,10 +300,15 @@ impl<'a> NetworkLaw<'a> {
         while first < below.len() && nodes[first] as f64 * law.most(below[first], threshold) <= even_share {
             first += 1;
         }
-        law.tails(&below[first..], threshold, |place, probability| {
-            let (degree, nodes) = (below[first + place], nodes[first + place] as f64);
-            each(TailClass { degree, nodes, probability: survival * probability });
-        });
+        let mut rise = |place: usize, probability: f64| {
+            each(TailClass { degree: below[place], nodes: nodes[place] as f64, probability: survival * probability });
+        };
+        let rest = below.len() - usize::from(likeliest.is_some());
+        let first = first.min(rest);
+        law.tails(&below[first..rest], threshold, |place, probability| rise(first + place, probability));
+        if let Some(probability) = likeliest {
+            rise(rest, probability);
+        }
         Ok(())
     }
 

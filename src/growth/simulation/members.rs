@@ -99,6 +99,14 @@ impl Members {
         }
     }
 
+    /// Makes room for so many more nodes and ends, where ends pick by earlier ones.
+    pub fn reserve(&mut self, nodes: usize, ends: usize) {
+        if let Picks::Ends(held) = &mut self.picks {
+            self.degrees.reserve(nodes);
+            held.reserve(ends);
+        }
+    }
+
     /// A whole batch arrives, where ends pick by earlier ones.
     pub fn come(&mut self, batch: &mut Batch) {
         if let Picks::Ends(ends) = &mut self.picks {
