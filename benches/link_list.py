@@ -1,12 +1,12 @@
 """Counting a link list beside DuckDB: time and peak memory, as ratios.
 
-usage: python3 benches/link_list.py [--links N] [--rounds N]      (needs duckdb; cargo build --release first)
+usage: python3 benches/link_list.py [--links N] [--rounds N] [--cores N]      (needs duckdb; cargo build --release first)
 
 The list: about N/10 accounts, N links in order of time. Each link comes from a newcomer with probability 0.1 and lands in
 proportion to links received with probability 0.7, on any account alike otherwise.
 
-`tailcast tally` makes degree counts and every attachment statistic in one pass; DuckDB, on one thread, makes degree counts
-alone: of the targets, and of all accounts, those that are only sources as degree 0, by two queries of which either may be
+`tailcast tally` makes degree counts and every attachment statistic in one pass; DuckDB makes degree counts alone, on as many threads
+as there are cores, to which all are held: of the targets, and of all accounts, those that are only sources as degree 0, by two queries of which either may be
 the quicker. Runs take turns. DuckDB's time is that of the query without starting Python or connecting; tailcast's is that
 of the whole process. Memory is the largest that a process had.
 """
@@ -37,7 +37,7 @@ QUERIES = {
 CHILD = """
 import duckdb, json, sys, time
 connection = duckdb.connect()
-connection.execute("SET threads = 1; SET enable_progress_bar = false")
+connection.execute(f"SET threads = {sys.argv[2]}; SET enable_progress_bar = false")
 start = time.perf_counter()
 rows = connection.execute(sys.argv[1]).fetchall()
 took = time.perf_counter() - start
@@ -102,7 +102,9 @@ def main():
     options = argparse.ArgumentParser()
     options.add_argument("--links", type=int, default=10_000_000)
     options.add_argument("--rounds", type=int, default=7)
+    options.add_argument("--cores", type=int, default=2)
     options = options.parse_args()
+    os.sched_setaffinity(0, sorted(os.sched_getaffinity(0))[: options.cores])
     seconds, peaks, counts, version = {}, {}, {}, ""
     with tempfile.TemporaryDirectory() as folder:
         path = os.path.join(folder, "links.csv")
@@ -114,8 +116,9 @@ def main():
                 seconds.setdefault(name, []).append(took)
                 peaks[name] = max(peak, peaks.get(name, 0))
                 counts[name] = degree_counts(text)
+            seconds.setdefault("wc -l", []).append(run(["wc", "-l", path])[0])
             for name, query in QUERIES.items():
-                _, peak, text = run([sys.executable, "-c", CHILD, query.format(list=path)])
+                _, peak, text = run([sys.executable, "-c", CHILD, query.format(list=path), str(options.cores)])
                 answer = json.loads(text)
                 version = answer["version"]
                 seconds.setdefault(name, []).append(answer["seconds"])
@@ -127,12 +130,13 @@ def main():
         expected = [pair for pair in whole if pair[0] > 0] if "targets" in name else whole
         assert found == expected, f"{name} counts otherwise"
 
-    print(f"{options.links} links, {accounts} accounts, {size / 1e6:.0f} MB of CSV; {options.rounds} rounds; DuckDB {version}, 1 thread")
+    print(f"{options.links} links, {accounts} accounts, {size / 1e6:.0f} MB of CSV; {options.rounds} rounds; DuckDB {version}, "
+          f"{options.cores} cores")
     print("All degree counts agree.\n")
     print(f"{'':34}{'median':>9}   {'to DuckDB: targets alone':>24}{'all accounts (quicker query)':>30}")
     everyone = [name for name in QUERIES if "all" in name]
     quickest = min(everyone, key=lambda name: statistics.median(seconds[name]))
-    for name in [*FORMS, *QUERIES]:
+    for name in [*FORMS, *QUERIES, "wc -l"]:
         line = f"{name:34}{statistics.median(seconds[name]):7.2f} s"
         if name in FORMS:
             for other in ("DuckDB, targets alone", quickest):

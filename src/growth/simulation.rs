@@ -126,25 +126,25 @@ impl Simulation {
         }
         large.sort_unstable();
         let counted = (0..).zip(counted).filter(|&(_, nodes)| nodes > 0);
-        let large = large.chunk_by(|a, b| a == b).map(|run| (run[0], run.len() as u64));
+        let large = large.chunk_by(|a, b| a == b).map(|run| (u64::from(run[0]), run.len() as u64));
         DegreeCounts::from_pairs(&counted.chain(large).collect::<Vec<_>>())
     }
 
     /// Nodes with at least `threshold` links today.
     pub fn tail_size(&self, threshold: u64) -> u64 {
-        self.members.degrees.iter().filter(|&&degree| degree >= threshold).count() as u64
+        self.members.degrees.iter().filter(|&&degree| u64::from(degree) >= threshold).count() as u64
     }
 
     /// Remembers every node's degree of today, for [`Self::moves`].
     pub fn mark(&mut self) {
-        self.members.marked = self.members.degrees.iter().copied().map(Some).collect();
+        self.members.marked = self.members.degrees.iter().map(|&degree| Some(degree.into())).collect();
         self.members.departed.clear();
     }
 
     /// How many nodes went from which degree at the last mark (the start, when there was none) to which today.
     pub fn moves(&self) -> Vec<Move> {
         let marked = self.members.marked.iter().copied().chain(std::iter::repeat(None));
-        let present = marked.zip(&self.members.degrees).map(|(before, &after)| (before, Some(after)));
+        let present = marked.zip(&self.members.degrees).map(|(before, &after)| (before, Some(u64::from(after))));
         let departed = self.members.departed.iter().map(|&before| (Some(before), None));
         let mut sorted: Vec<_> = present.chain(departed).collect();
         sorted.sort_unstable();
@@ -155,7 +155,7 @@ impl Simulation {
     /// Watches the highest degree of every node from today on, for [`Self::peaks`]; marks too.
     pub fn watch_peaks(&mut self) {
         self.mark();
-        self.members.peaks = Some(self.members.degrees.clone());
+        self.members.peaks = Some(self.members.degrees.iter().map(|&degree| degree.into()).collect());
         self.members.departed_peaks.clear();
     }
 

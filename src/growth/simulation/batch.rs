@@ -48,7 +48,7 @@ pub(super) struct Batch {
 
 impl Batch {
     /// Lands and joins them all in order, and is empty then.
-    pub fn come(&mut self, degrees: &mut Vec<u64>, ends: &mut Vec<u32>) {
+    pub fn come(&mut self, degrees: &mut Vec<u32>, ends: &mut Vec<u32>) {
         self.picks.iter_mut().for_each(|pick| pick.read_ahead(ends));
         let mut picks = self.picks.drain(..);
         for (landing, entry) in self.arrivals.drain(..) {
@@ -58,7 +58,7 @@ impl Batch {
                 ends.push(node);
             }
             let node = degrees.len() as u32;
-            degrees.push(entry);
+            degrees.push(entry as u32);
             ends.extend(std::iter::repeat_n(node, entry as usize));
         }
     }

@@ -13,7 +13,8 @@ use crate::numerics::sum_tree::SumTree;
 
 /// The nodes present.
 pub(super) struct Members {
-    pub degrees: Vec<u64>,
+    /// As many as 32 bits hold: the network's room is checked.
+    pub degrees: Vec<u32>,
     /// Degree of each node at the last mark; none for later newcomers, who where links last are not listed at all.
     pub marked: Vec<Option<u64>>,
     /// Degrees at the last mark of nodes that have departed since.
@@ -74,7 +75,7 @@ impl Members {
 
     pub fn join(&mut self, degree: u64, active: bool, rng: &mut SmallRng) {
         let node = self.degrees.len();
-        self.degrees.push(degree);
+        self.degrees.push(degree as u32);
         self.link_ends += degree;
         if let Some(peaks) = &mut self.peaks {
             peaks.push(degree);
@@ -146,9 +147,9 @@ impl Members {
                 for node in picks {
                     self.degrees[node] += 1;
                     self.link_ends += 1;
-                    weights.weigh(node, self.degrees[node]);
+                    weights.weigh(node, u64::from(self.degrees[node]));
                     if let Some(peaks) = &mut self.peaks {
-                        peaks[node] = peaks[node].max(self.degrees[node]);
+                        peaks[node] = peaks[node].max(u64::from(self.degrees[node]));
                     }
                 }
             }
@@ -161,7 +162,7 @@ impl Members {
             Picks::Ends(_) => None,
             Picks::Weighed(_) => self.peaks.as_ref(),
         };
-        watched.map_or(self.degrees[node], |peaks| peaks[node])
+        watched.map_or(u64::from(self.degrees[node]), |peaks| peaks[node])
     }
 
     /// An active node, any of them alike, falls dormant.
@@ -179,7 +180,7 @@ impl Members {
         };
         weights.factors[node] = 0.0;
         weights.active -= 1;
-        weights.weigh(node, self.degrees[node]);
+        weights.weigh(node, u64::from(self.degrees[node]));
     }
 
     /// A node, any of them alike, departs with its ends.
@@ -190,7 +191,7 @@ impl Members {
         }
         let node = rng.random_range(0..self.degrees.len());
         let last = self.degrees.len() - 1;
-        self.link_ends -= self.degrees.swap_remove(node);
+        self.link_ends -= u64::from(self.degrees.swap_remove(node));
         let before = self.marked.swap_remove(node);
         self.departed.extend(before);
         if let Some(peaks) = &mut self.peaks {
@@ -202,7 +203,7 @@ impl Members {
             tree.set(last, 0.0);
         }
         if node < last {
-            weights.weigh(node, self.degrees[node]);
+            weights.weigh(node, u64::from(self.degrees[node]));
         }
     }
 
@@ -212,7 +213,7 @@ impl Members {
         if let Some(node) = weights.by_end.pick(rng.random::<f64>()) {
             self.degrees[node] -= 1;
             self.link_ends -= 1;
-            weights.weigh(node, self.degrees[node]);
+            weights.weigh(node, u64::from(self.degrees[node]));
         }
     }
 }

@@ -15,7 +15,7 @@ impl Members {
         let mut landed = Vec::new();
         for _ in 0..count {
             let node = self.pick(share, rng).and_then(|node| match cap.refused() {
-                _ if self.degrees[node] < cap.links() => Some(node),
+                _ if u64::from(self.degrees[node]) < cap.links() => Some(node),
                 RefusedLinks::Lost => None,
                 RefusedLinks::Spread => self.pick_below(share, cap.links(), rng),
             });
@@ -29,10 +29,10 @@ impl Members {
         for node in landed {
             match &mut self.picks {
                 Picks::Ends(ends) => ends.push(node as u32),
-                Picks::Weighed(weights) => weights.weigh(node, self.degrees[node]),
+                Picks::Weighed(weights) => weights.weigh(node, u64::from(self.degrees[node])),
             }
             if let Some(peaks) = &mut self.peaks {
-                peaks[node] = peaks[node].max(self.degrees[node]);
+                peaks[node] = peaks[node].max(u64::from(self.degrees[node]));
             }
         }
     }
@@ -63,7 +63,7 @@ impl Members {
     fn pick_below(&self, share: f64, cap: u64, rng: &mut SmallRng) -> Option<usize> {
         for _ in 0..CAP_MAX_PICKS {
             let node = self.pick(share, rng)?;
-            if self.degrees[node] < cap {
+            if u64::from(self.degrees[node]) < cap {
                 return Some(node);
             }
         }
@@ -74,14 +74,14 @@ impl Members {
         let preferential = if by_degree > 0.0 { share / by_degree } else { 0.0 };
         let uniform = if by_degree > 0.0 { (1.0 - share) / by_node } else { by_node.recip() };
         let chance = |node: usize| -> f64 {
-            let k = self.degrees[node] as f64;
+            let k = f64::from(self.degrees[node]);
             let (factor, kernel) = match &self.picks {
                 Picks::Ends(_) => (1.0, k),
                 Picks::Weighed(weights) => (weights.factors[node], power_kernel(k, weights.exponent)),
             };
             factor * (uniform + preferential * kernel)
         };
-        let open = || (0..self.degrees.len()).filter(|&node| self.degrees[node] < cap && chance(node) > 0.0);
+        let open = || (0..self.degrees.len()).filter(|&node| u64::from(self.degrees[node]) < cap && chance(node) > 0.0);
         let mut left = rng.random::<f64>() * open().map(chance).sum::<f64>();
         let found = open().find(|&node| {
             left -= chance(node);
