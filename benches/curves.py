@@ -58,7 +58,7 @@ class Service:
         answer = connection.getresponse()
         text = answer.read().decode()
         assert answer.status < 300, f"{method} {path}: {answer.status} {text}"
-        return json.loads(text)
+        return json.loads(text) if text.startswith("{") else text
 
     def least(self, method, path, body=None):
         def once():
