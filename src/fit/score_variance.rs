@@ -6,8 +6,8 @@
 use super::stationary::StationaryLaw;
 use crate::model::{AttachmentMix, EntryDegrees};
 
-/// Degrees up to the smallest plus this are kept one by one, for each link an arrival brings and one more; above, cells grow by
-/// [`CELL_GROWTH`].
+/// Degrees up to the largest entry degree plus this are kept one by one, for each link an arrival brings and one more; above, cells grow
+/// by [`CELL_GROWTH`].
 const SINGLE_DEGREES: f64 = 40.0;
 const MOST_SINGLE_DEGREES: f64 = 300.0;
 const CELL_GROWTH: f64 = 1.08;
@@ -30,8 +30,8 @@ const SHARE_STEP: f64 = 1e-4;
 /// `dh/dτ = (α + βk)·(h(k+1) − h(k))`.
 ///
 /// # Numerical notes
-/// Implicit Euler on a grid of single degrees, then cells; within 1 % of ten times as fine a grid at 0.5 to 20 links an arrival (2.5 % in
-/// the geometric limit at 20), which is more than an interval needs.
+/// Implicit Euler on a grid of single degrees, then cells: within 1.1 % of the same on 1,000 single degrees, cells that grow by 2 % and
+/// steps that grow by 1 % from 0.005, at 0.5 to 20 links an arrival and shares from 0.02 to 0.95.
 /// Checked by coverage on grown networks (`studies/mix_coverage.rs`).
 pub(super) fn information_over_variance(share: f64, links_per_arrival: f64, entry: &EntryDegrees) -> f64 {
     let law = |p: f64| {
@@ -45,7 +45,8 @@ pub(super) fn information_over_variance(share: f64, links_per_arrival: f64, entr
     let toward = |end: f64| share + (0.5 * (end - share)).clamp(-SHARE_STEP, SHARE_STEP);
     let (low, high) = (toward(0.0), toward(1.0));
     let here = law(share);
-    let single = (SINGLE_DEGREES * (1.0 + links_per_arrival)).min(MOST_SINGLE_DEGREES) as u64;
+    let entered = entry.shares().last().map_or(0, |&(degree, _)| degree - entry.smallest()) as f64;
+    let single = (SINGLE_DEGREES * (1.0 + links_per_arrival) + entered).min(MOST_SINGLE_DEGREES) as u64;
     let grid = degree_grid(&here, entry.smallest(), single);
     let cells = grid.len() - 1;
     let tails = here.tail(&grid);

@@ -3,6 +3,7 @@
 
 mod account;
 mod arrivals;
+mod binomial;
 mod cap;
 mod census;
 mod fit;
