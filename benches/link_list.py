@@ -5,7 +5,7 @@ usage: python3 benches/link_list.py [--links N] [--rounds N] [--cores N]      (n
 The list: about N/10 accounts, N links in order of time. Each link comes from a newcomer with probability 0.1 and lands in
 proportion to links received with probability 0.7, on any account alike otherwise.
 
-`tailcast tally` makes degree counts and every attachment statistic in one pass; DuckDB makes degree counts alone, on as many threads
+`tailcast tally` makes degree counts, or with them every attachment statistic in the same pass; DuckDB makes degree counts alone, on as many threads
 as there are cores, to which all are held: of the targets, and of all accounts, those that are only sources as degree 0, by two queries of which either may be
 the quicker. Runs take turns. DuckDB's time is that of the query without starting Python or connecting; tailcast's is that
 of the whole process. Memory is the largest that a process had.

@@ -48,7 +48,7 @@ pub struct Census {
     now: Option<Timestamp>,
     links: u64,
     pairs: Pairs,
-    attachment: Attachment,
+    attachment: Option<Attachment>,
     cadence: Option<Cadence>,
 }
 
@@ -106,7 +106,7 @@ pub struct Tally {
     pub snapshots: Vec<Snapshot>,
     /// The moves between each snapshot and the next.
     pub transitions: Vec<Transitions>,
-    /// Attachment statistics; none when no link landed on a node that was there before.
+    /// Attachment statistics; none when no link landed on a node that was there before, or none were asked for.
     pub link_events: Option<LinkEvents>,
 }
 
@@ -138,9 +138,14 @@ impl Census {
             now: None,
             links: 0,
             pairs: Pairs::default(),
-            attachment: Attachment::default(),
+            attachment: Some(Attachment::default()),
             cadence: every.map(Cadence::new),
         }
+    }
+
+    /// The same without attachment statistics, which take about as long as the counts.
+    pub fn without_link_events(self) -> Self {
+        Self { attachment: None, ..self }
     }
 
     /// Number of nodes so far: the number that the next newcomer gets.
@@ -207,7 +212,7 @@ impl Census {
             Some(cadence) => cadence.finish(end, &self.degrees)?,
             None => (vec![cadence::snapshot(end, &self.degrees)?], Vec::new()),
         };
-        let link_events = self.attachment.finish()?;
+        let link_events = self.attachment.map_or(Ok(None), Attachment::finish)?;
         Ok(Tally { kind: self.kind, links: self.links, snapshots, transitions, link_events })
     }
 
@@ -231,22 +236,24 @@ impl Census {
     }
 
     fn join(&mut self) {
+        let Some(attachment) = &mut self.attachment else { return };
         let newcomers = self.degrees.get(self.present..).unwrap_or_default();
         for &degree in newcomers {
             self.ends += u64::from(degree);
-            self.attachment.join(degree);
+            attachment.join(degree);
         }
         self.present = self.degrees.len();
-        self.attachment.grown(self.present as u64, self.ends);
+        attachment.grown(self.present as u64, self.ends);
     }
 
     /// One more end for a node.
     #[inline]
     fn gain(&mut self, id: u32) -> Result<(), CensusError> {
-        let present = (id as usize) < self.present;
         let degree = self.degrees.get_mut(id as usize).ok_or(CensusError::Unnumbered(id))?;
-        if present {
-            self.attachment.land(*degree, self.present as u64, self.ends);
+        if let Some(attachment) = &mut self.attachment
+            && (id as usize) < self.present
+        {
+            attachment.land(*degree, self.present as u64, self.ends);
             self.ends += 1;
         }
         *degree = degree.checked_add(1).ok_or(CensusError::TooMany("ends of one node"))?;

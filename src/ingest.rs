@@ -6,20 +6,21 @@
 //! (00:00 UTC) or seconds since 1970.
 
 mod batch;
+mod blocks;
 mod clock;
 mod counter;
 mod csv;
 mod intake;
-mod lines;
 mod names;
 mod ndjson;
+mod order;
+mod reading;
 mod report;
 mod source;
 
 use std::io::{self, Read};
 use std::ops::ControlFlow;
-use std::sync::atomic::Ordering;
-use std::sync::mpsc::{channel, sync_channel};
+use std::sync::{Mutex, PoisonError, RwLock};
 use std::thread;
 
 use jiff::Span;
@@ -28,7 +29,9 @@ use crate::census::{CensusError, Tally};
 use crate::model::DegreeKind;
 use counter::{Counter, Counts};
 use intake::Intake;
-use lines::Lines;
+use names::Names;
+use order::Order;
+use reading::{Reader, Reading};
 use source::Source;
 
 pub use report::{FaultyLines, LinkFault, LinkReport};
@@ -56,6 +59,8 @@ pub struct LinkListPlan {
     pub every: Option<Span>,
     /// What to do with faulty lines.
     pub faults: FaultPolicy,
+    /// Whether attachment statistics are wanted besides the counts.
+    pub link_events: bool,
 }
 
 /// How far the reading has come.
@@ -131,17 +136,34 @@ pub enum IngestError {
     Cancelled,
 }
 
-/// Batches of lines that may wait to be counted.
-const WAITING: usize = 32;
+impl IngestError {
+    /// The same in a block that `lines` come before.
+    fn after(self, lines: u64) -> Self {
+        match self {
+            Self::Read { line, error } => Self::Read { line: lines + line, error },
+            Self::Gzip { line, error } => Self::Gzip { line: lines + line, error },
+            Self::Expanding { line } => Self::Expanding { line: lines + line },
+            Self::Header { line, reason } => Self::Header { line: lines + line, reason },
+            other => other,
+        }
+    }
+}
 
-/// Reads and counts a list: lines are read on this thread, and counted on one beside it. `watch` is called after each block of bytes, and stops the counting if it says so.
+/// Most threads that read and look up lines: so many keep one busy that counts.
+const MOST_READERS: usize = 4;
+
+/// Reads and counts a list. `watch` is called after each block of bytes, and stops the counting if it says so.
+///
+/// Blocks are read, and their identifiers looked up, on as many threads as there are cores, up to four; they are counted
+/// in order.
 ///
 /// ```
 /// use std::ops::ControlFlow;
 /// use tailcast::ingest::{FaultPolicy, LinkListPlan, count_links};
 /// use tailcast::model::DegreeKind;
 /// let list = "time,source,target\n2026-01-01,ana,ben\n2026-01-02,cai,ben\n";
-/// let plan = LinkListPlan { kind: DegreeKind::Received, every: None, faults: FaultPolicy::Refuse };
+/// let plan =
+///     LinkListPlan { kind: DegreeKind::Received, every: None, faults: FaultPolicy::Refuse, link_events: true };
 /// let (tally, report) = count_links(list.as_bytes(), &plan, &mut |_| ControlFlow::Continue(())).unwrap();
 /// assert_eq!(report.links, 2);
 /// assert_eq!(tally.snapshots[0].counts.iter().collect::<Vec<_>>(), [(0, 2), (2, 1)]);
@@ -151,74 +173,62 @@ const WAITING: usize = 32;
 /// Bytes that cannot be read, a header without the columns, no link at all, `watch` saying stop; with
 /// [`FaultPolicy::Refuse`] the first faulty line.
 pub fn count_links(
-    input: impl Read,
+    input: impl Read + Send,
     plan: &LinkListPlan,
-    watch: &mut dyn FnMut(Progress) -> ControlFlow<()>,
+    watch: &mut (dyn FnMut(Progress) -> ControlFlow<()> + Send),
 ) -> Result<(Tally, LinkReport), IngestError> {
-    let (counter, counts) = (Counter::new(plan), Counts::default());
-    thread::scope(|scope| {
-        let ((full, batches), (emptied, empty)) = (sync_channel(WAITING), channel());
-        let intake = Intake::new(counter.hasher(), full, empty);
-        let counting = scope.spawn(|| counter.run(batches, emptied, &counts));
-        let read = read_all(input, intake, &counts, watch);
-        // What stopped the counting is in an earlier line than what stopped the reading.
-        let counter = counting.join().unwrap_or_else(|panic| std::panic::resume_unwind(panic))?;
-        counter.finish(read?)
-    })
-}
-
-/// Reads a list to its end; returns the number of its last line.
-fn read_all(
-    input: impl Read,
-    mut intake: Intake,
-    counts: &Counts,
-    watch: &mut dyn FnMut(Progress) -> ControlFlow<()>,
-) -> Result<u64, IngestError> {
     let source = Source::open(input).map_err(|error| IngestError::Read { line: 0, error })?;
-    let mut lines = Lines::new(source);
-    let mut format = None;
-    loop {
-        let more = lines.fill().map_err(|error| lines.source().fault(intake.line(), error))?;
-        let (links, nodes) = (counts.links.load(Ordering::Relaxed), counts.nodes.load(Ordering::Relaxed));
-        if watch(Progress { bytes: lines.source().bytes(), links, nodes }).is_break() {
-            return Err(IngestError::Cancelled);
+    let (names, counts) = (Names::default(), Counts::default());
+    let hasher = names.hasher();
+    let mut watch = watch;
+    let crew = Crew {
+        reading: Mutex::new(Reading::new(source, &mut watch, &counts)),
+        names: RwLock::new(names),
+        order: Order::new(Counter::new(plan), &counts),
+    };
+    let readers = thread::available_parallelism().map_or(1, usize::from).min(MOST_READERS);
+    thread::scope(|scope| {
+        let work = || crew.work(Reader::new(Intake::new(hasher.clone())));
+        for _ in 1..readers {
+            scope.spawn(work);
         }
-        let format = format.get_or_insert_with(|| Format::of(lines.unread()));
-        let read = format.read(lines.unread(), !more, &mut intake)?;
-        if read == 0 && lines.is_full() {
-            intake.pass(1);
-            intake.malformed(|| format!("it is longer than {MAX_LINE_BYTES} bytes"))?;
-            lines.skip_line();
-        } else {
-            lines.consume(read);
-        }
-        intake.send()?;
-        if !more {
-            return Ok(intake.line());
+        work();
+    });
+    crew.order.finish()?.finish()
+}
+
+/// What the threads share.
+struct Crew<'l> {
+    reading: Mutex<Reading<'l>>,
+    names: RwLock<Names>,
+    order: Order<'l>,
+}
+
+impl Crew<'_> {
+    /// Reads blocks until there are no more.
+    fn work(&self, mut reader: Reader) {
+        let _leaving = Leaving(&self.order);
+        loop {
+            let place = self.reading.lock().unwrap_or_else(PoisonError::into_inner).hand_out(&mut reader);
+            let Some(place) = place else { return };
+            reader.read_block();
+            let mut batch = std::mem::take(&mut reader.intake.batch);
+            batch.look_up(&self.names.read().unwrap_or_else(PoisonError::into_inner));
+            match self.order.take(place, batch, &self.names) {
+                Some(spare) => reader.intake.batch = spare,
+                None => return,
+            }
         }
     }
 }
 
-/// How the lines are written.
-enum Format {
-    Csv(Box<csv::Columns>),
-    Ndjson,
-}
+/// Tells the others when one dies, so that they do not wait for ever.
+struct Leaving<'c>(&'c Order<'c>);
 
-impl Format {
-    /// The format of a list that begins so: a header does not start with a brace.
-    fn of(start: &[u8]) -> Self {
-        match start.trim_ascii_start().first() {
-            Some(b'{') => Self::Ndjson,
-            _ => Self::Csv(Box::default()),
-        }
-    }
-
-    /// Counts the complete lines of a block; returns how many bytes they take.
-    fn read(&mut self, block: &[u8], last: bool, intake: &mut Intake) -> Result<usize, IngestError> {
-        match self {
-            Self::Csv(columns) => columns.read(block, last, intake),
-            Self::Ndjson => ndjson::read(block, last, intake),
+impl Drop for Leaving<'_> {
+    fn drop(&mut self) {
+        if thread::panicking() {
+            self.0.give_up();
         }
     }
 }

@@ -13,7 +13,7 @@ const MOST_BLOCKS: usize = 64;
 pub fn check(list: impl Read + Clone) {
     for kind in [DegreeKind::Received, DegreeKind::Total] {
         for every in [None, "PT1H".parse().ok()] {
-            let plan = LinkListPlan { kind, every, faults: FaultPolicy::Skip };
+            let plan = LinkListPlan { kind, every, faults: FaultPolicy::Skip, link_events: true };
             let mut blocks = 0;
             let counted = count_links(list.clone(), &plan, &mut |_| {
                 blocks += 1;

@@ -92,8 +92,8 @@ pub fn tally(options: &TallyOptions) -> Result<(), Stop> {
 fn count(options: &TallyOptions) -> Result<(Tally, LinkReport), Stop> {
     let name = options.links.display();
     let unreadable = |error: io::Error| Stop::failed(&name.to_string(), error);
-    let (input, size): (Box<dyn Read>, Option<u64>) = if options.links == Path::new("-") {
-        (Box::new(io::stdin().lock()), None)
+    let (input, size): (Box<dyn Read + Send>, Option<u64>) = if options.links == Path::new("-") {
+        (Box::new(io::stdin()), None)
     } else {
         let file = File::open(&options.links).map_err(unreadable)?;
         let size = file.metadata().ok().filter(|about| about.is_file()).map(|about| about.len());
@@ -109,6 +109,7 @@ fn count(options: &TallyOptions) -> Result<(Tally, LinkReport), Stop> {
             Faults::Refuse => FaultPolicy::Refuse,
             Faults::Skip => FaultPolicy::Skip,
         },
+        link_events: options.format == Form::Json,
     };
     let bar = if options.quiet || !io::stderr().is_terminal() { ProgressBar::hidden() } else { progress_bar(size) };
     let counted = count_links(input, &plan, &mut |progress| {

@@ -2,7 +2,7 @@
 
 use std::io::{self, Read};
 
-use memchr::memchr;
+use memchr::{memchr, memrchr};
 
 use super::MAX_LINE_BYTES;
 use super::source::Source;
@@ -11,7 +11,7 @@ use super::source::Source;
 const BLOCK: usize = 1 << 18;
 
 /// A stream with what of it was read and not yet used.
-pub struct Lines<'r> {
+pub struct Blocks<'r> {
     source: Source<'r>,
     buffer: Vec<u8>,
     /// The unread part of the buffer.
@@ -21,7 +21,7 @@ pub struct Lines<'r> {
     skipping: bool,
 }
 
-impl<'r> Lines<'r> {
+impl<'r> Blocks<'r> {
     /// A stream from its beginning.
     pub fn new(source: Source<'r>) -> Self {
         Self { source, buffer: vec![0; BLOCK], start: 0, end: 0, skipping: false }
@@ -72,6 +72,20 @@ impl<'r> Lines<'r> {
     /// What was read and not yet used.
     pub fn unread(&self) -> &[u8] {
         self.buffer.get(self.start..self.end).unwrap_or_default()
+    }
+
+    /// Right after [`Self::fill`]: takes the complete lines out of the buffer, and at the end of the stream all of it,
+    /// in exchange for another buffer.
+    pub fn take(&mut self, last: bool, block: &mut Vec<u8>) {
+        let whole = if last { self.end } else { memrchr(b'\n', self.unread()).map_or(0, |line_end| line_end + 1) };
+        block.resize(self.buffer.len(), 0);
+        let rest = self.buffer.get(whole..self.end).unwrap_or_default();
+        if let Some(room) = block.get_mut(..rest.len()) {
+            room.copy_from_slice(rest);
+        }
+        self.end = rest.len();
+        std::mem::swap(&mut self.buffer, block);
+        block.truncate(whole);
     }
 
     /// Whether the buffer is as large as it gets and has no room left.

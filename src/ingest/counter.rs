@@ -1,11 +1,9 @@
 //! Takes links batch by batch to the census, and notes what is faulty.
 
 use std::sync::atomic::{AtomicU64, Ordering};
-use std::sync::mpsc::{Receiver, Sender};
+use std::sync::{PoisonError, RwLock};
 
-use foldhash::fast::RandomState;
-
-use super::batch::{Batch, Link, bring_near};
+use super::batch::{Batch, Link, Name, bring_near};
 use super::names::Names;
 use super::report::{LinkFault, LinkReport, shown};
 use super::{FaultPolicy, IngestError, LinkListPlan};
@@ -23,72 +21,82 @@ pub struct Counts {
 /// A list as far as it was counted.
 pub struct Counter {
     census: Census,
-    names: Names,
     policy: FaultPolicy,
     report: LinkReport,
+    /// Lines of the blocks counted.
+    lines: u64,
+    /// What becomes of each link of a batch.
+    ends: Vec<Result<(u32, u32), LinkFault>>,
 }
 
 impl Counter {
     /// A list of which nothing was counted.
     pub fn new(plan: &LinkListPlan) -> Self {
+        let census = Census::new(plan.kind, plan.every);
         Self {
-            census: Census::new(plan.kind, plan.every),
-            names: Names::default(),
+            census: if plan.link_events { census } else { census.without_link_events() },
             policy: plan.faults,
             report: LinkReport::default(),
+            lines: 0,
+            ends: Vec::new(),
         }
     }
 
-    /// What identifiers are hashed with.
-    pub fn hasher(&self) -> RandomState {
-        self.names.hasher()
-    }
-
-    /// Counts batches until no more come, and hands each back to be filled again.
-    pub fn run(mut self, full: Receiver<Batch>, empty: Sender<Batch>, counts: &Counts) -> Result<Self, IngestError> {
-        for mut batch in full {
-            self.take(&mut batch)?;
-            counts.links.store(self.report.links, Ordering::Relaxed);
-            counts.nodes.store(self.census.nodes() as u64, Ordering::Relaxed);
-            batch.clear();
-            // At the end of a list nobody fills it again.
-            let _ = empty.send(batch);
-        }
-        Ok(self)
-    }
-
-    fn take(&mut self, batch: &mut Batch) -> Result<(), IngestError> {
-        batch.look_up(&self.names);
+    /// Counts the next batch.
+    pub fn take(&mut self, batch: &mut Batch, names: &RwLock<Names>, counts: &Counts) -> Result<(), IngestError> {
+        self.number(batch, names)?;
         bring_near(batch.targets().map(|target| self.census.degree(target)));
         let mut malformed = batch.malformed().iter().peekable();
-        for (place, link) in batch.links().enumerate() {
+        let ends = std::mem::take(&mut self.ends);
+        for (place, (link, &ends)) in batch.links().zip(&ends).enumerate() {
             while let Some(fault) = malformed.next_if(|fault| fault.after <= place) {
                 self.fault(LinkFault::Malformed, fault.line, || fault.reason.clone())?;
             }
-            self.count(&link)?;
+            self.count(&link, ends)?;
         }
-        malformed.try_for_each(|fault| self.fault(LinkFault::Malformed, fault.line, || fault.reason.clone()))
+        self.ends = ends;
+        malformed.try_for_each(|fault| self.fault(LinkFault::Malformed, fault.line, || fault.reason.clone()))?;
+        if let Some(error) = batch.end.take() {
+            return Err(error.after(self.lines));
+        }
+        self.lines += u64::from(batch.lines);
+        counts.links.store(self.report.links, Ordering::Relaxed);
+        counts.nodes.store(self.census.nodes() as u64, Ordering::Relaxed);
+        Ok(())
     }
 
-    /// A link that will not be counted must not number its nodes, so that numbers stay in order of arrival.
+    /// Gives newcomers their numbers. A link that will not be counted must not number its nodes, so that numbers stay in
+    /// order of arrival; a repeated one has none that are new.
+    fn number(&mut self, batch: &Batch, names: &RwLock<Names>) -> Result<(), IngestError> {
+        let mut names = names.write().unwrap_or_else(PoisonError::into_inner);
+        let mut now = self.census.now();
+        self.ends.clear();
+        for Link { line, time, source, target } in batch.links() {
+            let ends = if now.is_some_and(|now| time < now) {
+                Err(LinkFault::OutOfOrder)
+            } else if source.is(&target) {
+                Err(LinkFault::SelfLink)
+            } else {
+                now = Some(time);
+                let mut number = |name: Name<'_>| name.number.or_else(|| names.number(name.text, name.hash));
+                Ok(number(source).zip(number(target)).ok_or(IngestError::Census {
+                    line: self.lines + u64::from(line),
+                    error: CensusError::TooMany("nodes or bytes of identifiers"),
+                })?)
+            };
+            self.ends.push(ends);
+        }
+        Ok(())
+    }
+
     #[inline]
-    fn count(&mut self, link: &Link<'_>) -> Result<(), IngestError> {
+    fn count(&mut self, link: &Link<'_>, ends: Result<(u32, u32), LinkFault>) -> Result<(), IngestError> {
         let Link { line, time, source, target } = *link;
-        if let Some(now) = self.census.now().filter(|&now| time < now) {
-            let reason =
-                || format!("its time, {time}, is before that of an earlier line, {now}; sort the list by time");
-            return self.fault(LinkFault::OutOfOrder, line, reason);
-        }
-        if source.is(&target) {
-            let reason = || format!("it links {} to itself; drop it", shown(source.text));
-            return self.fault(LinkFault::SelfLink, line, reason);
-        }
-        let verdict = source
-            .number(&mut self.names)
-            .zip(target.number(&mut self.names))
-            .map_or(Err(CensusError::TooMany("nodes or bytes of identifiers")), |(source, target)| {
-                self.census.record(time, source, target)
-            });
+        let verdict = match ends {
+            Ok((source, target)) => self.census.record(time, source, target),
+            Err(LinkFault::SelfLink) => Ok(Verdict::SelfLink),
+            Err(_) => Ok(Verdict::OutOfOrder),
+        };
         match verdict {
             Ok(Verdict::Counted) => {
                 self.report.lines += 1;
@@ -99,15 +107,22 @@ impl Counter {
                 let (source, target) = (shown(source.text), shown(target.text));
                 format!("it repeats the link from {source} to {target} at {time}; drop it")
             }),
-            // Both were looked for above.
-            Ok(Verdict::OutOfOrder) => self.fault(LinkFault::OutOfOrder, line, String::new),
-            Ok(Verdict::SelfLink) => self.fault(LinkFault::SelfLink, line, String::new),
-            Err(error) => Err(IngestError::Census { line, error }),
+            Ok(Verdict::OutOfOrder) => {
+                let now = self.census.now().unwrap_or(time);
+                self.fault(LinkFault::OutOfOrder, line, || {
+                    format!("its time, {time}, is before that of an earlier line, {now}; sort the list by time")
+                })
+            }
+            Ok(Verdict::SelfLink) => {
+                self.fault(LinkFault::SelfLink, line, || format!("it links {} to itself; drop it", shown(source.text)))
+            }
+            Err(error) => Err(IngestError::Census { line: self.lines + u64::from(line), error }),
         }
     }
 
     #[cold]
-    fn fault(&mut self, fault: LinkFault, line: u64, reason: impl FnOnce() -> String) -> Result<(), IngestError> {
+    fn fault(&mut self, fault: LinkFault, line: u32, reason: impl FnOnce() -> String) -> Result<(), IngestError> {
+        let line = self.lines + u64::from(line);
         if self.policy == FaultPolicy::Refuse {
             return Err(IngestError::Faulty { line, fault, reason: reason() });
         }
@@ -116,14 +131,14 @@ impl Counter {
         Ok(())
     }
 
-    /// What the whole list tells, whose last line is `line`.
-    pub fn finish(self, line: u64) -> Result<(Tally, LinkReport), IngestError> {
-        let Self { census, mut report, .. } = self;
+    /// What the whole list tells.
+    pub fn finish(self) -> Result<(Tally, LinkReport), IngestError> {
+        let Self { census, mut report, lines, .. } = self;
         report.repeats_unchecked = census.repeats_unchecked();
         match census.finish() {
             Ok(tally) => Ok((tally, report)),
             Err(CensusError::NoLink) => Err(IngestError::NoLink(Box::new(report))),
-            Err(error) => Err(IngestError::Census { line, error }),
+            Err(error) => Err(IngestError::Census { line: lines, error }),
         }
     }
 }

@@ -17,13 +17,16 @@ const MOST_COLUMNS: usize = 1_000;
 /// Reads lines by columns; the first line says which is which.
 #[derive(Default)]
 pub struct Columns {
-    header: Option<Header>,
+    /// Once it was read.
+    pub header: Option<Header>,
     /// Places of the commas of the current line.
     commas: Vec<usize>,
     unquoted: Unquoted,
 }
 
-struct Header {
+/// Which column is which.
+#[derive(Debug, Clone, Copy)]
+pub struct Header {
     /// Columns of time, source and target.
     places: [usize; 3],
     width: usize,
@@ -42,7 +45,7 @@ enum End {
 }
 
 impl Columns {
-    /// Counts the complete lines of `block`; returns how many bytes they take.
+    /// Takes the complete lines of `block`; returns how many bytes they are.
     pub fn read(&mut self, block: &[u8], last: bool, intake: &mut Intake) -> Result<usize, IngestError> {
         let mut at = 0;
         while let Some(rest) = block.get(at..).filter(|rest| !rest.is_empty()) {
@@ -56,7 +59,7 @@ impl Columns {
                 End::Quoted(text, line) => self.quoted(rest, text, line, intake)?,
                 End::Open => {
                     intake.pass(1);
-                    intake.malformed(|| "a double quote opens a field and none closes it".into())?;
+                    intake.malformed(|| "a double quote opens a field and none closes it".into());
                     memchr(b'\n', rest).map_or(rest.len(), |line_end| line_end + 1)
                 }
                 End::Beyond => return Ok(at),
@@ -84,14 +87,15 @@ impl Columns {
         let line = line.strip_suffix(b"\r").unwrap_or(line);
         let Some(header) = &self.header else {
             let line = line.strip_prefix(BYTE_ORDER_MARK).unwrap_or(line);
-            self.header = Header::read(line.split(|&byte| byte == b','), line.is_empty(), intake.line())?;
+            self.header = Header::read(line.split(|&byte| byte == b','), line.is_empty(), intake.batch.lines)?;
             return Ok(());
         };
         if line.is_empty() {
             return Ok(());
         }
         if self.commas.len() + 1 != header.width {
-            return intake.malformed(|| wrong_width(self.commas.len() + 1, header.width));
+            intake.malformed(|| wrong_width(self.commas.len() + 1, header.width));
+            return Ok(());
         }
         let field = |column: usize| {
             let start = column.checked_sub(1).and_then(|before| self.commas.get(before)).map_or(0, |comma| comma + 1);
@@ -99,28 +103,29 @@ impl Columns {
             line.get(start..end).unwrap_or_default()
         };
         let [time, source, target] = header.places.map(field);
-        intake.link(time, source, target)
+        intake.link(time, source, target);
+        Ok(())
     }
 
-    /// Counts a record with quotes; returns how many bytes it takes.
+    /// Takes a record with quotes; returns how many bytes it is.
     fn quoted(&mut self, rest: &[u8], text: usize, line: usize, intake: &mut Intake) -> Result<usize, IngestError> {
         intake.pass(1);
         let record = rest.get(..text).unwrap_or_default();
         let fields = self.unquoted.read(record.strip_prefix(BYTE_ORDER_MARK).unwrap_or(record));
         let Some(header) = &self.header else {
             let fields: Vec<&[u8]> = fields.collect();
-            self.header = Header::read(fields.into_iter(), false, intake.line())?;
+            self.header = Header::read(fields.into_iter(), false, intake.batch.lines)?;
             return Ok(line);
         };
         let width = fields.clone().count();
         if width != header.width {
-            intake.malformed(|| wrong_width(width, header.width))?;
+            intake.malformed(|| wrong_width(width, header.width));
             // A quote too many has swallowed the lines that follow; they may be sound.
             return Ok(memchr(b'\n', record).map_or(line, |line_end| line_end + 1));
         }
         let [time, source, target] = header.places.map(|column| fields.clone().nth(column).unwrap_or_default());
-        intake.link(time, source, target)?;
-        intake.pass(memchr_iter(b'\n', record).count() as u64);
+        intake.link(time, source, target);
+        intake.pass(memchr_iter(b'\n', record).count() as u32);
         Ok(line)
     }
 }
@@ -153,12 +158,12 @@ impl Header {
     fn read<'f>(
         fields: impl Iterator<Item = &'f [u8]> + Clone,
         empty: bool,
-        line: u64,
+        line: u32,
     ) -> Result<Option<Self>, IngestError> {
         if empty {
             return Ok(None);
         }
-        let wrong = |reason: String| Err(IngestError::Header { line, reason });
+        let wrong = |reason: String| Err(IngestError::Header { line: line.into(), reason });
         let width = fields.clone().count();
         if width > MOST_COLUMNS {
             return wrong(format!("the header has {width} columns; at most {MOST_COLUMNS} are taken"));

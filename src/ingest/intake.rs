@@ -1,46 +1,37 @@
-//! Takes lines, batch by batch, to the thread that counts them.
-
-use std::sync::mpsc::{Receiver, SyncSender};
+//! Takes what lines say into a batch.
 
 use foldhash::fast::RandomState;
 use jiff::Timestamp;
 
+use super::MAX_IDENTIFIER_BYTES;
 use super::batch::Batch;
 use super::clock::{Clock, why_no_time};
 use super::report::{LISTED, shown};
-use super::{IngestError, MAX_IDENTIFIER_BYTES};
 
 /// The lines of a list on their way to the [`super::counter::Counter`].
 pub struct Intake {
+    /// What they make.
+    pub batch: Batch,
     clock: Clock,
     hasher: RandomState,
-    batch: Batch,
-    line: u64,
     malformed: usize,
-    full: SyncSender<Batch>,
-    empty: Receiver<Batch>,
 }
 
 impl Intake {
-    /// A list of which nothing was read. Batches leave by `full`, and come back by `empty` to be filled again.
-    pub fn new(hasher: RandomState, full: SyncSender<Batch>, empty: Receiver<Batch>) -> Self {
-        Self { clock: Clock::default(), hasher, batch: Batch::default(), line: 0, malformed: 0, full, empty }
-    }
-
-    /// The current line, from 1 on.
-    pub fn line(&self) -> u64 {
-        self.line
+    /// Nothing was read.
+    pub fn new(hasher: RandomState) -> Self {
+        Self { batch: Batch::default(), clock: Clock::default(), hasher, malformed: 0 }
     }
 
     /// Goes on by so many lines.
     #[inline]
-    pub fn pass(&mut self, lines: u64) {
-        self.line += lines;
+    pub fn pass(&mut self, lines: u32) {
+        self.batch.lines += lines;
     }
 
     /// Takes a link that the current line gives as texts.
     #[inline]
-    pub fn link(&mut self, time: &[u8], source: &[u8], target: &[u8]) -> Result<(), IngestError> {
+    pub fn link(&mut self, time: &[u8], source: &[u8], target: &[u8]) {
         match self.clock.read(time) {
             Some(time) => self.link_at(time, source, target),
             None => self.malformed(|| why_no_time(time)),
@@ -49,37 +40,22 @@ impl Intake {
 
     /// Takes a link of the current line.
     #[inline]
-    pub fn link_at(&mut self, time: Timestamp, source: &[u8], target: &[u8]) -> Result<(), IngestError> {
+    pub fn link_at(&mut self, time: Timestamp, source: &[u8], target: &[u8]) {
         for (what, name) in [("source", source), ("target", target)] {
             if name.is_empty() || name.len() > MAX_IDENTIFIER_BYTES {
                 return self.malformed(|| why_no_identifier(what, name));
             }
         }
-        self.batch.push(self.line, time, source, target, &self.hasher);
-        if self.batch.is_full() { self.send() } else { Ok(()) }
+        self.batch.push(time, source, target, &self.hasher);
     }
 
     /// The current line cannot be read.
     #[cold]
-    pub fn malformed(&mut self, reason: impl FnOnce() -> String) -> Result<(), IngestError> {
+    pub fn malformed(&mut self, reason: impl FnOnce() -> String) {
         // No more reasons are told than are listed.
         let reason = if self.malformed < LISTED { reason() } else { String::new() };
         self.malformed += 1;
-        self.batch.push_malformed(self.line, reason);
-        if self.batch.is_full() { self.send() } else { Ok(()) }
-    }
-
-    /// Hands on what waits.
-    ///
-    /// # Errors
-    /// When counting has stopped; why is the counter's to tell.
-    pub fn send(&mut self) -> Result<(), IngestError> {
-        if self.batch.is_empty() {
-            return Ok(());
-        }
-        let next = self.empty.try_recv().unwrap_or_default();
-        let batch = std::mem::replace(&mut self.batch, next);
-        self.full.send(batch).map_err(|_| IngestError::Cancelled)
+        self.batch.push_malformed(reason);
     }
 }
 

@@ -6,7 +6,6 @@ use std::fmt;
 use memchr::memchr;
 use serde::de::{Deserialize, Deserializer, Error, Visitor};
 
-use super::IngestError;
 use super::clock::from_seconds;
 use super::intake::Intake;
 use super::report::shown;
@@ -14,8 +13,8 @@ use super::report::shown;
 /// What a line should be.
 const EXAMPLE: &str = "a line is an object like {\"time\":\"2026-12-01\",\"source\":1,\"target\":2}";
 
-/// Counts the complete lines of `block`; returns how many bytes they take.
-pub fn read(block: &[u8], last: bool, intake: &mut Intake) -> Result<usize, IngestError> {
+/// Takes the complete lines of `block`; returns how many bytes they are.
+pub fn read(block: &[u8], last: bool, intake: &mut Intake) -> usize {
     let mut at = 0;
     while let Some(rest) = block.get(at..).filter(|rest| !rest.is_empty()) {
         let (text, line) = match memchr(b'\n', rest) {
@@ -26,14 +25,14 @@ pub fn read(block: &[u8], last: bool, intake: &mut Intake) -> Result<usize, Inge
         intake.pass(1);
         let text = rest.get(..text).unwrap_or_default().trim_ascii();
         if !text.is_empty() {
-            object(text, intake)?;
+            object(text, intake);
         }
         at += line;
     }
-    Ok(at)
+    at
 }
 
-fn object(text: &[u8], intake: &mut Intake) -> Result<(), IngestError> {
+fn object(text: &[u8], intake: &mut Intake) {
     // The fields alone, in an array, would be taken too.
     if !text.starts_with(b"{") {
         return intake.malformed(|| format!("{} is no JSON object; {EXAMPLE}", shown(text)));

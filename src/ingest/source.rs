@@ -1,8 +1,8 @@
 //! The bytes of a list, decompressed where need be and counted.
 
-use std::cell::Cell;
 use std::io::{self, BufReader, Cursor, Read};
-use std::rc::Rc;
+use std::sync::Arc;
+use std::sync::atomic::{AtomicU64, Ordering};
 
 use flate2::bufread::MultiGzDecoder;
 
@@ -20,22 +20,22 @@ const SPARED: u64 = 64 << 20;
 
 /// A list's bytes.
 pub struct Source<'r> {
-    input: Box<dyn Read + 'r>,
-    bytes: Rc<Cell<u64>>,
+    input: Box<dyn Read + Send + 'r>,
+    bytes: Arc<AtomicU64>,
     compressed: bool,
     expanded: u64,
 }
 
 impl<'r> Source<'r> {
     /// Looks whether `input` is compressed.
-    pub fn open(input: impl Read + 'r) -> io::Result<Self> {
-        let bytes = Rc::new(Cell::new(0));
+    pub fn open(input: impl Read + Send + 'r) -> io::Result<Self> {
+        let bytes = Arc::new(AtomicU64::new(0));
         let mut input = Counted { input, bytes: bytes.clone() };
         let mut start = Vec::new();
         input.by_ref().take(GZIP.len() as u64).read_to_end(&mut start)?;
         let compressed = start == GZIP;
         let whole = Cursor::new(start).chain(input);
-        let input: Box<dyn Read + 'r> = match compressed {
+        let input: Box<dyn Read + Send + 'r> = match compressed {
             true => Box::new(MultiGzDecoder::new(BufReader::with_capacity(BLOCK, whole))),
             false => Box::new(whole),
         };
@@ -44,7 +44,7 @@ impl<'r> Source<'r> {
 
     /// Bytes read so far, as they came.
     pub fn bytes(&self) -> u64 {
-        self.bytes.get()
+        self.bytes.load(Ordering::Relaxed)
     }
 
     /// Whether it goes on and on out of next to nothing.
@@ -52,8 +52,9 @@ impl<'r> Source<'r> {
         self.compressed && self.expanded > SPARED && self.expanded / MOST_EXPANSION > self.bytes()
     }
 
-    /// A failure to read on after `line`, in the words that fit.
-    pub fn fault(&self, line: u64, error: io::Error) -> IngestError {
+    /// A failure to read on, in the words that fit; after which line is not known here.
+    pub fn fault(&self, error: io::Error) -> IngestError {
+        let line = 0;
         match self.compressed {
             true if self.is_bomb() => IngestError::Expanding { line },
             true => IngestError::Gzip { line, error },
@@ -72,13 +73,13 @@ impl Read for Source<'_> {
 
 struct Counted<R> {
     input: R,
-    bytes: Rc<Cell<u64>>,
+    bytes: Arc<AtomicU64>,
 }
 
 impl<R: Read> Read for Counted<R> {
     fn read(&mut self, buffer: &mut [u8]) -> io::Result<usize> {
         let read = self.input.read(buffer)?;
-        self.bytes.set(self.bytes.get() + read as u64);
+        self.bytes.fetch_add(read as u64, Ordering::Relaxed);
         Ok(read)
     }
 }

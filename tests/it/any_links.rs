@@ -59,7 +59,7 @@ fn bytes() -> impl Strategy<Value = Vec<u8>> {
 fn check(bytes: &[u8]) -> Result<(), TestCaseError> {
     for kind in [DegreeKind::Received, DegreeKind::Total] {
         let counted = |faults, every| {
-            let plan = LinkListPlan { kind, every, faults };
+            let plan = LinkListPlan { kind, every, faults, link_events: true };
             count_links(bytes, &plan, &mut |_| std::ops::ControlFlow::Continue(()))
         };
         let skipped = counted(FaultPolicy::Skip, None);

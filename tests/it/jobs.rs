@@ -93,8 +93,12 @@ async fn a_short_list_is_answered_when_what_it_tells_is_stored() {
     let list = link_list(3_000);
     let job = send(&service, &format!("{LINKS}?every=P1M"), list.clone(), &[]).await.expect(200).json();
     assert_eq!((&job["state"], &job["progress"], &job["problem"]), (&json!("succeeded"), &json!(1.0), &Value::Null));
-    let plan =
-        LinkListPlan { kind: DegreeKind::Received, every: Some("P1M".parse().unwrap()), faults: FaultPolicy::Refuse };
+    let plan = LinkListPlan {
+        kind: DegreeKind::Received,
+        every: Some("P1M".parse().unwrap()),
+        faults: FaultPolicy::Refuse,
+        link_events: true,
+    };
     let (tally, report) = count_links(list.as_bytes(), &plan, &mut |_| ControlFlow::Continue(())).unwrap();
     let result = &job["result"];
     let newest = tally.snapshots.last().unwrap();
@@ -271,7 +275,8 @@ async fn what_is_no_link_list_is_refused() {
     assert!(announced.text.contains("link_list_bytes"), "{}", announced.text);
     let mut chunked = std::net::TcpStream::connect(service.address()).unwrap();
     let head = "HTTP/1.1\r\nHost: localhost\r\nContent-Type: text/csv\r\nTransfer-Encoding: chunked\r\n\r\n";
-    write!(chunked, "PUT {LINKS} {head}{:x}\r\n{large}\r\n", large.len()).unwrap();
+    // In one piece: the service closes as soon as it has seen enough.
+    chunked.write_all(format!("PUT {LINKS} {head}{:x}\r\n{large}\r\n", large.len()).as_bytes()).unwrap();
     let mut answer = [0; 4096];
     let read = chunked.read(&mut answer).unwrap();
     assert!(String::from_utf8_lossy(&answer[..read]).starts_with("HTTP/1.1 413"), "the length was not announced");

@@ -1,5 +1,6 @@
 //! Link lists: what the reader takes and refuses, and the `tally` command.
 
+use std::collections::{BTreeMap, HashMap, HashSet};
 use std::fmt::Write as _;
 use std::io::{Read, Write};
 use std::ops::ControlFlow;
@@ -23,8 +24,8 @@ const LIST: &str = "time,source,target\n\
     2026-02-10T00:00:00Z,dot,ana\n\
     2026-03-05T12:00:00Z,ana,cai\n";
 
-pub fn count(input: impl Read, faults: FaultPolicy) -> Result<(Tally, LinkReport), IngestError> {
-    let plan = LinkListPlan { kind: DegreeKind::Received, every: None, faults };
+pub fn count(input: impl Read + Send, faults: FaultPolicy) -> Result<(Tally, LinkReport), IngestError> {
+    let plan = LinkListPlan { kind: DegreeKind::Received, every: None, faults, link_events: true };
     count_links(input, &plan, &mut |_| ControlFlow::Continue(()))
 }
 
@@ -314,10 +315,79 @@ fn a_bomb_is_refused_long_before_it_has_gone_off() {
     assert_eq!(count(list.as_slice(), FaultPolicy::Skip).unwrap().1.links, 1);
 }
 
+/// Many blocks, read by several threads at once, against one loop over the lines.
+#[test]
+fn a_list_of_many_blocks_is_counted_line_by_line() {
+    let mut state = 1u64;
+    let mut draw = |below: u64| {
+        state = state.wrapping_mul(6_364_136_223_846_793_005).wrapping_add(1_442_695_040_888_963_407);
+        (state >> 33) % below
+    };
+    let mut list = String::from("time,source,target\n");
+    let (mut degrees, mut pairs) = (HashMap::new(), HashSet::new());
+    let (mut now, mut clock, mut links) = (0, 0, 0);
+    let mut faults: [(u64, Option<u64>); 4] = Default::default();
+    let mut line = 1;
+    while list.len() < 5 << 20 {
+        clock += draw(3) / 2;
+        let time = if draw(500) == 0 { clock / 2 } else { clock };
+        let (source, target) = (draw(3 + line / 20), draw(1 + line / 40));
+        line += 1;
+        let fault = if draw(400) == 0 {
+            writeln!(list, "{time},n{source}").unwrap();
+            Some(3)
+        } else {
+            // A quote now and then: such blocks are cut where they are read.
+            let quote = if line / 20_000 % 3 == 1 && draw(1_000) == 0 { "\"" } else { "" };
+            writeln!(list, "{time},{quote}n{source}{quote},n{target}").unwrap();
+            if links > 0 && time < now {
+                Some(0)
+            } else if source == target {
+                Some(2)
+            } else {
+                if time != now {
+                    pairs.clear();
+                }
+                now = time;
+                (!pairs.insert((source, target))).then_some(1)
+            }
+        };
+        match fault {
+            Some(kind) => {
+                faults[kind].0 += 1;
+                faults[kind].1.get_or_insert(line);
+            }
+            None => {
+                degrees.entry(source).or_insert(0u64);
+                *degrees.entry(target).or_insert(0) += 1;
+                links += 1;
+            }
+        }
+    }
+    let mut counts = BTreeMap::new();
+    for degree in degrees.into_values() {
+        *counts.entry(degree).or_insert(0u64) += 1;
+    }
+    for link_events in [true, false] {
+        let plan = LinkListPlan { kind: DegreeKind::Received, every: None, faults: FaultPolicy::Skip, link_events };
+        let (tally, report) = count_links(list.as_bytes(), &plan, &mut |_| ControlFlow::Continue(())).unwrap();
+        assert_eq!(report.links, links);
+        let found = [&report.out_of_order, &report.repeated, &report.self_links, &report.malformed];
+        assert_eq!(found.map(|lines| (lines.count, lines.first.first().map(|(line, _)| *line))), faults);
+        assert_eq!(
+            tally.snapshots[0].counts.iter().collect::<Vec<_>>(),
+            counts.clone().into_iter().collect::<Vec<_>>()
+        );
+        assert_eq!(tally.link_events.is_some(), link_events);
+    }
+    let first = faults.iter().filter_map(|&(_, line)| line).min().unwrap();
+    assert!(refused(list.as_bytes()).starts_with(&format!("line {first}: ")));
+}
+
 #[test]
 fn the_watcher_sees_every_byte_and_can_stop() {
     let list = format!("{LIST}{}", "\n".repeat(1 << 20));
-    let plan = LinkListPlan { kind: DegreeKind::Received, every: None, faults: FaultPolicy::Refuse };
+    let plan = LinkListPlan { kind: DegreeKind::Received, every: None, faults: FaultPolicy::Refuse, link_events: true };
     let mut seen = Vec::new();
     count_links(list.as_bytes(), &plan, &mut |progress| {
         seen.push(progress.bytes);

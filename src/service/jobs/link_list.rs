@@ -1,6 +1,5 @@
 //! Counting a kept link list: what is to be done, and what the list tells.
 
-use std::cell::Cell;
 use std::fs::File;
 use std::io::ErrorKind;
 use std::ops::ControlFlow;
@@ -89,24 +88,25 @@ pub fn count(path: &Path, task: &str, most_nodes: u64, progress: &Progress) -> R
         kind: if task.degree_kind == kind_name(DegreeKind::Total) { DegreeKind::Total } else { DegreeKind::Received },
         every: every.map_err(|error: jiff::Error| broken(&error))?,
         faults: if task.skip_faults { FaultPolicy::Skip } else { FaultPolicy::Refuse },
+        link_events: true,
     };
     let file = File::open(path).map_err(|error| match error.kind() {
         ErrorKind::NotFound => Stopped::Failed(JobProblem::list_missing()),
         _ => broken(&format!("{}: {error}", path.display())),
     })?;
-    let stop = Cell::new(None);
+    let mut stop = None;
     let counted = count_links(file, &plan, &mut |read| {
         if read.nodes > most_nodes {
-            stop.set(Some(Stopped::Failed(JobProblem::too_many_nodes(most_nodes))));
+            stop = Some(Stopped::Failed(JobProblem::too_many_nodes(most_nodes)));
             return ControlFlow::Break(());
         }
         match progress.note(READ_SHARE * read.bytes as f64 / task.bytes.max(1) as f64) {
             Ok(()) => ControlFlow::Continue(()),
             Err(why) => {
-                stop.set(Some(match why {
+                stop = Some(match why {
                     Stop::CalledOff => Stopped::CalledOff,
                     Stop::Process => Stopped::Process,
-                }));
+                });
                 ControlFlow::Break(())
             }
         }
