@@ -143,7 +143,7 @@ impl Census {
         }
     }
 
-    /// The same without attachment statistics, which take about as long as the counts.
+    /// The same without attachment statistics.
     pub fn without_link_events(self) -> Self {
         Self { attachment: None, ..self }
     }

@@ -149,7 +149,7 @@ impl IngestError {
     }
 }
 
-/// Most threads that read and look up lines: so many keep one busy that counts.
+/// Most threads that read and look up lines, since one alone counts; more than two were not measured.
 const MOST_READERS: usize = 4;
 
 /// Reads and counts a list. `watch` is called after each block of bytes, and stops the counting if it says so.
@@ -180,6 +180,7 @@ pub fn count_links(
     let source = Source::open(input).map_err(|error| IngestError::Read { line: 0, error })?;
     let (names, counts) = (Names::default(), Counts::default());
     let hasher = names.hasher();
+    // Shortens how long it is borrowed to that of the crew.
     let mut watch = watch;
     let crew = Crew {
         reading: Mutex::new(Reading::new(source, &mut watch, &counts)),
