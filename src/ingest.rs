@@ -214,7 +214,7 @@ impl Crew<'_> {
             let Some(place) = place else { return };
             reader.read_block();
             let mut batch = std::mem::take(&mut reader.intake.batch);
-            batch.look_up(&self.names.read().unwrap_or_else(PoisonError::into_inner));
+            batch.look_up(&self.names);
             match self.order.take(place, batch, &self.names) {
                 Some(spare) => reader.intake.batch = spare,
                 None => return,

@@ -3,6 +3,8 @@
 //! Nearly all the time of counting is spent waiting for memory, where each identifier is looked up. The look-ups of a
 //! batch do not depend on each other, so the processor waits for many of them at once.
 
+use std::sync::{PoisonError, RwLock};
+
 use foldhash::fast::RandomState;
 use jiff::Timestamp;
 
@@ -112,10 +114,12 @@ impl Batch {
         self.malformed.push(Malformed { after: self.links.len(), line: self.lines, reason });
     }
 
-    /// Looks up the identifiers that have a number. Each pass waits for one kind of memory only.
-    pub fn look_up(&mut self, names: &Names) {
+    /// Looks up the identifiers that have a number. Each pass waits for one kind of memory only; between passes, others
+    /// may add names.
+    pub fn look_up(&mut self, names: &RwLock<Names>) {
         let mut start = 0;
         for links in self.links.chunks_mut(LINKS) {
+            let names = names.read().unwrap_or_else(PoisonError::into_inner);
             for found in links.iter_mut().flat_map(|line| &mut line.ends) {
                 found.known = names.candidate(found.hash);
             }

@@ -68,23 +68,35 @@ impl Counter {
     /// Gives newcomers their numbers. A link that will not be counted must not number its nodes, so that numbers stay in
     /// order of arrival; a repeated one has none that are new.
     fn number(&mut self, batch: &Batch, names: &RwLock<Names>) -> Result<(), IngestError> {
-        let mut names = names.write().unwrap_or_else(PoisonError::into_inner);
         let mut now = self.census.now();
         self.ends.clear();
-        for Link { line, time, source, target } in batch.links() {
-            let ends = if now.is_some_and(|now| time < now) {
+        let mut newcomers = Vec::new();
+        for (place, link) in batch.links().enumerate() {
+            let Link { time, source, target, .. } = link;
+            self.ends.push(if now.is_some_and(|now| time < now) {
                 Err(LinkFault::OutOfOrder)
             } else if source.is(&target) {
                 Err(LinkFault::SelfLink)
             } else {
                 now = Some(time);
-                let mut number = |name: Name<'_>| name.number.or_else(|| names.number(name.text, name.hash));
-                Ok(number(source).zip(number(target)).ok_or(IngestError::Census {
-                    line: self.lines + u64::from(line),
-                    error: CensusError::TooMany("nodes or bytes of identifiers"),
-                })?)
-            };
-            self.ends.push(ends);
+                let numbers = source.number.zip(target.number);
+                if numbers.is_none() {
+                    newcomers.push((place, link));
+                }
+                Ok(numbers.unwrap_or_default())
+            });
+        }
+        // Others look up until here.
+        let mut names = names.write().unwrap_or_else(PoisonError::into_inner);
+        for (place, Link { line, source, target, .. }) in newcomers {
+            let mut number = |name: Name<'_>| name.number.or_else(|| names.number(name.text, name.hash));
+            let numbers = number(source).zip(number(target)).ok_or(IngestError::Census {
+                line: self.lines + u64::from(line),
+                error: CensusError::TooMany("nodes or bytes of identifiers"),
+            })?;
+            if let Some(ends) = self.ends.get_mut(place) {
+                *ends = Ok(numbers);
+            }
         }
         Ok(())
     }

@@ -34,9 +34,9 @@ pub struct Header {
 
 /// Where a record ends.
 enum End {
-    /// Its text without the end of the line, and with it; no quotes are in it.
-    Plain(usize, usize),
-    /// The same, with quotes to take off.
+    /// With the list; no quotes are in it.
+    Plain,
+    /// Its text without the end of the line, and with it; it has quotes to take off.
     Quoted(usize, usize),
     /// A quote is not closed.
     Open,
@@ -49,12 +49,17 @@ impl Columns {
     pub fn read(&mut self, block: &[u8], last: bool, intake: &mut Intake) -> Result<usize, IngestError> {
         let mut at = 0;
         while let Some(rest) = block.get(at..).filter(|rest| !rest.is_empty()) {
+            let plain = self.plain_lines(rest, intake)?;
+            at += plain;
+            let Some(rest) = rest.get(plain..).filter(|rest| !rest.is_empty()) else { break };
             let full = at == 0 && block.len() >= MAX_LINE_BYTES;
-            at += match self.end(rest, last, full) {
-                End::Plain(text, line) => {
+            at += match end(rest, last, full) {
+                End::Plain => {
+                    self.commas.clear();
+                    self.commas.extend(memchr_iter(b',', rest));
                     intake.pass(1);
-                    self.plain(rest.get(..text).unwrap_or_default(), intake)?;
-                    line
+                    self.plain(rest, intake)?;
+                    rest.len()
                 }
                 End::Quoted(text, line) => self.quoted(rest, text, line, intake)?,
                 End::Open => {
@@ -68,18 +73,23 @@ impl Columns {
         Ok(at)
     }
 
-    /// Finds the end of the first record, and the commas of a plain one. `full`: no more bytes can follow.
-    #[inline]
-    fn end(&mut self, text: &[u8], last: bool, full: bool) -> End {
+    /// Takes the lines up to the first that has a quote or no end, in one pass; returns how many bytes they are.
+    fn plain_lines(&mut self, text: &[u8], intake: &mut Intake) -> Result<usize, IngestError> {
+        let mut start = 0;
         self.commas.clear();
         for place in memchr3_iter(b',', b'\n', b'"', text) {
             match text.get(place) {
-                Some(b',') => self.commas.push(place),
-                Some(b'\n') => return End::Plain(place, place + 1),
-                _ => return quoted_end(text, last, full),
+                Some(b',') => self.commas.push(place - start),
+                Some(b'\n') => {
+                    intake.pass(1);
+                    self.plain(text.get(start..place).unwrap_or_default(), intake)?;
+                    self.commas.clear();
+                    start = place + 1;
+                }
+                _ => break,
             }
         }
-        if last { End::Plain(text.len(), text.len()) } else { End::Beyond }
+        Ok(start)
     }
 
     #[inline]
@@ -130,8 +140,9 @@ impl Columns {
     }
 }
 
-/// The end of a record in which a quote was found: the first end of a line outside of quotes.
-fn quoted_end(text: &[u8], last: bool, full: bool) -> End {
+/// The end of a record that has a quote or no end of a line: the first end of a line outside of quotes.
+/// `full`: no more bytes can follow.
+fn end(text: &[u8], last: bool, full: bool) -> End {
     let mut quotes = 0u64;
     for place in memchr::memchr2_iter(b'\n', b'"', text) {
         match text.get(place) {
@@ -141,6 +152,7 @@ fn quoted_end(text: &[u8], last: bool, full: bool) -> End {
         }
     }
     match (last, full) {
+        (true, _) if quotes == 0 => End::Plain,
         (true, _) if quotes.is_multiple_of(2) => End::Quoted(text.len(), text.len()),
         (true, _) => End::Open,
         (false, true) if memchr(b'\n', text).is_some() => End::Open,

@@ -9,7 +9,7 @@ use super::counter::{Counter, Counts};
 use super::names::Names;
 
 /// Batches that may wait to be counted.
-const WAITING: usize = 8;
+const WAITING: usize = 3;
 
 /// The counter, and the batches in front of it.
 pub struct Order<'c> {
@@ -68,8 +68,9 @@ impl<'c> Order<'c> {
 
     fn next(&self) -> Option<Batch> {
         let mut queue = self.queue();
+        let was_full = queue.is_full();
         let batch = if queue.over.is_some() { None } else { queue.take_next() };
-        if !queue.is_full() {
+        if was_full && !queue.is_full() {
             self.room.notify_all();
         }
         batch

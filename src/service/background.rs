@@ -1,7 +1,10 @@
 //! Work that takes processor time, off the async runtime: on threads of lower priority, so that whatever answers at once goes before it.
 
 use std::cell::Cell;
-use std::sync::{LazyLock, Once};
+use std::io;
+use std::panic::{AssertUnwindSafe, catch_unwind};
+use std::sync::mpsc::{SendError, Sender, channel};
+use std::sync::{LazyLock, Mutex, MutexGuard, Once, PoisonError};
 use std::thread::{Builder, available_parallelism, yield_now};
 use std::time::{Duration, Instant};
 
@@ -20,9 +23,10 @@ thread_local! {
     static GAVE_WAY: Cell<Option<Instant>> = const { Cell::new(None) };
 }
 
+static CORES: LazyLock<usize> = LazyLock::new(|| available_parallelism().map_or(1, usize::from));
+
 /// Conversions at the same time, in the whole process: more than there are cores only takes more memory.
-static CONVERSIONS: LazyLock<Semaphore> =
-    LazyLock::new(|| Semaphore::new(available_parallelism().map_or(1, usize::from)));
+static CONVERSIONS: LazyLock<Semaphore> = LazyLock::new(|| Semaphore::new(*CORES));
 
 /// Work that came to no end.
 #[derive(Debug, thiserror::Error)]
@@ -35,21 +39,64 @@ pub enum Unfinished {
     Panicked,
 }
 
-/// Runs `work` on a thread of its own. It goes on to its end when the caller goes away.
+/// Threads that have stepped back and wait for work, the one that worked last at the end: what it needs is still near.
+static WAITING: Mutex<Vec<Sender<Work>>> = Mutex::new(Vec::new());
+
+type Work = Box<dyn FnOnce() + Send>;
+
+/// Runs `work` on a thread that does nothing else meanwhile. It goes on to its end when the caller goes away.
 ///
 /// # Errors
 /// When there is no thread, or `work` panics.
 pub async fn in_background<T: Send + 'static>(work: impl FnOnce() -> T + Send + 'static) -> Result<T, Unfinished> {
     let (tell, told) = oneshot::channel();
-    // A thread that stepped back may not step forward again, so none is lent by a pool that others share. Starting one takes tens of
-    // microseconds.
-    let thread = Builder::new().name("compute".to_owned()).spawn(move || {
-        step_back();
-        // Nobody listens when the caller went away.
-        let _ = tell.send(work());
-    });
-    thread.map_err(Unfinished::NoThread)?;
+    hand_over(Box::new(move || {
+        // A panic drops `tell`. Nobody listens when the caller went away.
+        if let Ok(outcome) = catch_unwind(AssertUnwindSafe(work)) {
+            let _ = tell.send(outcome);
+        }
+    }))
+    .map_err(Unfinished::NoThread)?;
     told.await.map_err(|_| Unfinished::Panicked)
+}
+
+/// To a thread that waits, or else to a new one. A thread that stepped back may not step forward again, so none is
+/// borrowed from the runtime; and a new one begins with an empty heap and far caches, which costs a fifth of a
+/// millisecond.
+fn hand_over(mut work: Work) -> io::Result<()> {
+    while let Some(thread) = waiting().pop() {
+        match thread.send(work) {
+            Ok(()) => return Ok(()),
+            Err(SendError(unsent)) => work = unsent,
+        }
+    }
+    let (thread, inbox) = channel();
+    let first = move || {
+        step_back();
+        work();
+        // As many wait as can work at the same time.
+        while wait_with(&thread) {
+            match inbox.recv() {
+                Ok(work) => work(),
+                Err(_) => return,
+            }
+        }
+    };
+    Builder::new().name("compute".to_owned()).spawn(first).map(drop)
+}
+
+fn waiting() -> MutexGuard<'static, Vec<Sender<Work>>> {
+    WAITING.lock().unwrap_or_else(PoisonError::into_inner)
+}
+
+/// Puts a thread among those that wait, if there is need of it.
+fn wait_with(thread: &Sender<Work>) -> bool {
+    let mut waiting = waiting();
+    let wanted = waiting.len() < *CORES;
+    if wanted {
+        waiting.push(thread.clone());
+    }
+    wanted
 }
 
 /// The same for what takes milliseconds and is asked for by many at once (bodies read, documents drawn): as many at a time as there

@@ -2,6 +2,7 @@
 
 use jiff::Timestamp;
 use serde::Serialize;
+use tokio::try_join;
 use uuid::Uuid;
 
 use super::compute::{Question, inputs_digest};
@@ -35,18 +36,19 @@ impl Service {
         origin: Option<RunOrigin>,
         claim: Option<KeyClaim>,
     ) -> Result<StoredRun, ServiceError> {
-        // Before anything is computed that could not be kept.
-        self.check_tables().await?;
-        if let Some(claim) = &claim
-            && let Some(earlier) = self.store.find_claim(Q::KIND, claim).await?
-        {
-            return replayed(earlier);
+        if let Some(claim) = &claim {
+            self.check_tables().await?;
+            if let Some(earlier) = self.store.find_claim(Q::KIND, claim).await? {
+                return replayed(earlier);
+            }
         }
         if let Some(refusal) = question.refusal() {
             return Err(ServiceError::from_core(refusal, self.cpu.budget()));
         }
         let budget = self.cpu.budget();
-        let run = self.cpu.run(move |cancelled| compute(&question, origin, cancelled)).await?;
+        let computed = self.cpu.run(move |cancelled| compute(&question, origin, cancelled));
+        // Nothing is computed on that could not be kept.
+        let (run, ()) = try_join!(computed, self.check_tables())?;
         let run = run.map_err(|failure| failure.into_service_error(budget))?;
         let store = self.store.clone();
         in_own_task(async move {
