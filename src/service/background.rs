@@ -33,7 +33,7 @@ static CONVERSIONS: LazyLock<Semaphore> = LazyLock::new(|| Semaphore::new(*CORES
 pub enum Unfinished {
     /// The system has no thread to give.
     #[error("no thread could be started: {0}")]
-    NoThread(std::io::Error),
+    NoThread(io::Error),
     /// It panicked.
     #[error("it panicked")]
     Panicked,
@@ -61,7 +61,7 @@ pub async fn in_background<T: Send + 'static>(work: impl FnOnce() -> T + Send + 
 }
 
 /// To a thread that waits, or else to a new one. A thread that stepped back may not step forward again, so none is
-/// borrowed from the runtime; and a new one begins with an empty heap and far caches, which costs a fifth of a
+/// borrowed from the runtime; and a new one begins with an empty heap and far caches, which costs an eighth of a
 /// millisecond.
 fn hand_over(mut work: Work) -> io::Result<()> {
     while let Some(thread) = waiting().pop() {
