@@ -58,6 +58,7 @@ impl<'c> Order<'c> {
                 queue.spare.push(batch);
                 if let Err(error) = counted {
                     queue.over.get_or_insert(Some(error));
+                    self.room.notify_all();
                 }
             }
         }
@@ -105,5 +106,39 @@ impl Queue {
         let batch = self.waiting.remove(&self.next)?;
         self.next += 1;
         Some(batch)
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use std::thread;
+
+    use super::*;
+    use crate::ingest::{FaultPolicy, LinkListPlan};
+    use crate::model::DegreeKind;
+
+    #[test]
+    fn a_fault_sends_away_all_who_wait() {
+        let plan =
+            LinkListPlan { kind: DegreeKind::Received, every: None, faults: FaultPolicy::Refuse, link_events: true };
+        let (names, counts) = (RwLock::new(Names::default()), Counts::default());
+        let order = Order::new(Counter::new(&plan), &counts);
+        let (order, names) = (&order, &names);
+        thread::scope(|scope| {
+            let waiting: Vec<_> = (1..=2 * WAITING as u64)
+                .map(|place| scope.spawn(move || order.take(place, Batch::default(), names).is_none()))
+                .collect();
+            while order.queue().waiting.len() < waiting.len() {
+                thread::yield_now();
+            }
+            let faulty = |mut batch: Batch| {
+                batch.end = Some(IngestError::Cancelled);
+                batch
+            };
+            assert!(order.take(0, faulty(Batch::default()), names).is_none());
+            // Those for whom there was room have gone on.
+            let sent_away = waiting.into_iter().map(|thread| thread.join().unwrap()).filter(|&away| away).count();
+            assert!(sent_away >= WAITING);
+        });
     }
 }
