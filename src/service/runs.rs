@@ -47,7 +47,7 @@ impl Service {
         }
         let budget = self.cpu.budget();
         let computed = self.cpu.run(move |cancelled| compute(&question, origin, cancelled));
-        // Nothing is computed on that could not be kept.
+        // What could not be kept is not computed to its end.
         let (run, ()) = try_join!(computed, self.check_tables())?;
         let run = run.map_err(|failure| failure.into_service_error(budget))?;
         let store = self.store.clone();
